@@ -1,0 +1,1 @@
+"""Predicted against observed on a department's own records."""

@@ -1,0 +1,330 @@
+"""The command line. Results on stdout, errors on stderr; exit status 0 done, 1 a stop, 2 input not readable."""
+
+from __future__ import annotations
+
+import os
+import sys
+from pathlib import Path
+from typing import TYPE_CHECKING, Any
+
+import click
+
+from pkcalc import __version__
+
+if TYPE_CHECKING:
+    from pkcalc.case import Case
+    from pkcalc.errors import CannotEstimate, CaseError, DrugFileError
+
+FORMATS = ("text", "json")
+
+
+def main() -> None:
+    """Entry point: keeps tracebacks, and with them patient data, off the screen."""
+    os.environ.setdefault("OPENBLAS_NUM_THREADS", "1")
+    try:
+        cli.main(standalone_mode=False)
+    except click.exceptions.Exit as stop:
+        sys.exit(stop.exit_code)
+    except click.ClickException as error:
+        _usage_error(error)
+    except click.exceptions.Abort:
+        click.echo("Interrupted.", err=True)
+        sys.exit(2)
+    except BrokenPipeError:
+        os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
+        sys.exit(0)
+    except Exception as error:  # the last door: any fault ends here, without numbers
+        _crash(error)
+
+
+def _asked_for_json() -> bool:
+    words = sys.argv[1:]
+    return "--format=json" in words or any(a == "--format" and b == "json" for a, b in zip(words, words[1:], strict=False))
+
+
+def _usage_error(error: click.ClickException) -> None:
+    if _asked_for_json():
+        problem = {"where": "Command line", "given": error.format_message(), "allowed": "", "fix": "See pkcalc --help"}
+        _print_json({"pkcalc_note": 1, "outcome": "input error", "problems": [problem], "version": __version__})
+    else:
+        error.show()
+    sys.exit(2)
+
+
+def _crash(error: Exception) -> None:
+    from pkcalc.errors import CannotEstimate, CaseError, DrugFileError
+
+    if isinstance(error, (CaseError, CannotEstimate, DrugFileError)):
+        fail(error, _asked_for_json())
+    message = f"The calculation stopped ({type(error).__name__}). No number was given. Please report this fault."
+    if _asked_for_json():
+        _print_json({"pkcalc_note": 1, "outcome": "fault", "message": message, "version": __version__})
+    click.echo(message, err=True)
+    sys.exit(1)
+
+
+def _print_json(data: dict[str, Any]) -> None:
+    from pkcalc.note.data import dumps
+
+    click.echo(dumps(data), nl=False)
+
+
+def fail(error: CaseError | CannotEstimate | DrugFileError, as_json: bool) -> None:
+    """Print an input error (status 2) or a refusal (status 1) and leave."""
+    from pkcalc.errors import CaseError, DrugFileError
+
+    if isinstance(error, DrugFileError):
+        if as_json:
+            problem = {"where": "Drug or site file", "given": str(error), "allowed": "", "fix": "Correct the file"}
+            _print_json({"pkcalc_note": 1, "outcome": "input error", "problems": [problem], "version": __version__})
+        else:
+            click.echo(str(error), err=True)
+        sys.exit(2)
+    if as_json:
+        from pkcalc.note.data import failure_data
+
+        _print_json(failure_data(error))
+    elif isinstance(error, CaseError):
+        click.echo("The input must be mended first:", err=True)
+        for problem in error.problems:
+            click.echo(f"- {problem.text}", err=True)
+    else:
+        click.echo(f"No answer: {error}", err=True)
+    sys.exit(2 if isinstance(error, CaseError) else 1)
+
+
+@click.group(context_settings={"help_option_names": ["-h", "--help"], "max_content_width": 100})
+@click.version_option(__version__, prog_name="pkcalc")
+def cli() -> None:
+    """Dosing of drugs with saturable elimination, for clinical pharmacists.
+
+    Supports, and never replaces, the local protocol and licensed pharmacists and physicians. Active status
+    epilepticus is treated by protocol now; acute overdose belongs to the poison centre.
+    """
+
+
+def _write(case: Case, output_format: str, out: Path | None, site: Path | None) -> None:
+    from pkcalc.consult import run_consult
+    from pkcalc.note.data import dumps, note_data
+    from pkcalc.note.document import compose
+    from pkcalc.note.text import render
+
+    consult = run_consult(case, site)
+    text = dumps(note_data(consult)) if output_format == "json" else render(compose(consult))
+    if out is None:
+        click.echo(text, nl=False)
+    else:
+        out.write_text(text, encoding="utf-8")
+        click.echo(f"Written: {out}", err=True)
+    if consult.stopped:
+        if output_format != "json" or out is not None:
+            click.echo("Stopped: see the stops at the top of the note for the reason.", err=True)
+        sys.exit(1)
+
+
+_format = click.option("--format", "output_format", type=click.Choice(FORMATS), default="text", show_default=True)
+_out = click.option("--out", type=click.Path(path_type=Path, dir_okay=False), help="Write to this file.")
+_site = click.option(
+    "--site", type=click.Path(path_type=Path, exists=True, dir_okay=False), help="The hospital's own settings."
+)
+
+
+@cli.command()
+@click.argument("case_file", metavar="CASE", type=click.Path(path_type=Path, exists=True, dir_okay=False))
+@_format
+@_out
+@_site
+def note(case_file: Path, output_format: str, out: Path | None, site: Path | None) -> None:
+    """A case file in, a consult note out."""
+    from pkcalc.case import load_case
+
+    _write(load_case(case_file), output_format, out, site)
+
+
+@cli.command()
+@click.option("--drug", default="phenytoin", show_default=True, help="A drug of `pkcalc drugs`.")
+@click.option("--form", "forms", multiple=True, required=True, help="Salt or product: once, or once per dose.")
+@click.option("--dose", "doses", multiple=True, required=True, help='For example "300 mg/day"; repeat per pair.')
+@click.option("--level", "levels", multiple=True, required=True, help='For example "8 mg/L"; in the same order.')
+@click.option("--kind", type=click.Choice(["total", "free", "normalised"]), default="total", show_default=True)
+@click.option("--weight", default="", help='For example "70 kg".')
+@click.option("--age", default="", help='For example "45 years".')
+@click.option("--albumin", default="", help='For example "29 g/L".')
+@click.option("--aim", default="", help='Level aimed at, for example "15 mg/L".')
+@click.option("--propose", "proposed", multiple=True, help='A dose to preview, for example "330 mg/day".')
+@_format
+@_out
+@_site
+def pair(
+    drug: str,
+    forms: tuple[str, ...],
+    doses: tuple[str, ...],
+    levels: tuple[str, ...],
+    kind: str,
+    weight: str,
+    age: str,
+    albumin: str,
+    aim: str,
+    proposed: tuple[str, ...],
+    output_format: str,
+    out: Path | None,
+    site: Path | None,
+) -> None:
+    """Vmax and Km from steady dose/level pairs typed on the command line."""
+    case = case_of_pairs(
+        drug=drug,
+        forms=forms,
+        doses=doses,
+        levels=levels,
+        kind=kind,
+        weight=weight,
+        age=age,
+        albumin=albumin,
+        aim=aim,
+        proposed=proposed,
+    )
+    if output_format == "text" and out is None:
+        click.echo(f"Drug: {drug}. Levels read as {kind}. Each dose and level pair up in the order given.\n")
+    _write(case, output_format, out, site)
+
+
+def case_of_pairs(
+    *,
+    drug: str,
+    forms: tuple[str, ...],
+    doses: tuple[str, ...],
+    levels: tuple[str, ...],
+    kind: str,
+    weight: str = "",
+    age: str = "",
+    albumin: str = "",
+    aim: str = "",
+    proposed: tuple[str, ...] = (),
+) -> Case:
+    """Pairs as typed -> checked case, every problem at once."""
+    from pkcalc.case import AlbuminFile, CaseFile, DoseFile, LevelFile, PatientFile, ProposedFile, check_case
+    from pkcalc.errors import CaseError, Problem
+
+    problems: list[Problem] = []
+    if len(doses) != len(levels):
+        problems.append(
+            Problem(
+                "Doses and levels",
+                f"{len(doses)} doses and {len(levels)} levels were given",
+                "as many levels as doses",
+                "Give one --level for every --dose",
+            )
+        )
+    if len(forms) not in (1, len(doses)):
+        problems.append(
+            Problem("Form", f"{len(forms)} forms were given", f"1 or {len(doses)}", "Give one form, or one per dose")
+        )
+    if problems:
+        raise CaseError(problems)
+    per_dose = forms * len(doses) if len(forms) == 1 else forms
+    rows = []
+    for i, (dose, form) in enumerate(zip(doses, per_dose, strict=True)):
+        amount = _amount_of_rate(dose, f"Dose {i + 1}", problems)
+        rows.append(DoseFile(form=form, amount=amount, every="24 h"))
+    wanted = tuple(
+        ProposedFile(form=per_dose[-1], amount=_amount_of_rate(p, f"Proposed dose {i + 1}", problems), every="24 h")
+        for i, p in enumerate(proposed)
+    )
+    if problems:
+        raise CaseError(problems)
+    return check_case(
+        CaseFile(
+            pkcalc_case=1,
+            drug=drug,
+            patient=PatientFile(weight=weight, age=age),
+            albumin=AlbuminFile(value=albumin) if albumin else None,
+            doses=tuple(rows),
+            levels=tuple(LevelFile(value=v, kind=kind, on_dose=i + 1) for i, v in enumerate(levels)),  # type: ignore[arg-type]
+            aim=aim,
+            proposed=wanted,
+        )
+    )
+
+
+def _amount_of_rate(text: str, where: str, problems: list[Any]) -> str:
+    """'300 mg/day' -> '300 mg', the amount of one daily dose, exactly as typed."""
+    from pkcalc import units
+    from pkcalc.errors import CaseError
+
+    try:
+        typed = units.read(text, "dose rate", where, only=("mg/day", "g/day", "mg PE/day"))
+    except CaseError as error:
+        problems.extend(error.problems)
+        return ""
+    number, label = units.split_label(text)
+    return f"{number} {label.removesuffix('/day')}" if typed else ""
+
+
+@cli.command()
+@click.argument("name", required=False)
+@_format
+@_out
+def demo(name: str | None, output_format: str, out: Path | None) -> None:
+    """List the demonstration cases, or write the note of one."""
+    from pkcalc.demos import demonstration, demonstrations
+
+    if name is None:
+        if output_format == "json":
+            _print_json({"demonstrations": [{"name": d.name, "title": d.title} for d in demonstrations()]})
+            return
+        for entry in demonstrations():
+            click.echo(f"{entry.name:<24} {entry.title}")
+        click.echo("\nAll are invented and not for clinical use. Write the note of one: pkcalc demo NAME")
+        return
+    _write(demonstration(name), output_format, out, None)
+    if output_format == "text" and out is None:
+        click.echo("To open the form on this machine: pkcalc form", err=True)
+
+
+@cli.command()
+@click.argument("name", required=False)
+@click.option("--format", "output_format", type=click.Choice(FORMATS), default="text")
+def drugs(name: str | None, output_format: str) -> None:
+    """What is known about a drug, and where each number comes from."""
+    from pkcalc.drugs.profile import describe, drug_names, load_profile
+    from pkcalc.errors import CaseError, Problem
+
+    if name is None:
+        known = [(n, load_profile(n)) for n in drug_names()]
+        if output_format == "json":
+            _print_json({"drugs": [{"name": n, "scope": p.scope} for n, p in known]})
+            return
+        for n, profile in known:
+            click.echo(f"{n:<16} {profile.scope}")
+        return
+    if name not in drug_names():
+        raise CaseError(Problem("Drug", f'"{name[:40]}" was given', ", ".join(drug_names()), "Choose one of these"))
+    lines = describe(load_profile(name))
+    if output_format == "json":
+        _print_json({"drug": name, "lines": list(lines)})
+    else:
+        click.echo("\n".join(lines))
+
+
+@cli.command()
+def schema() -> None:
+    """The JSON Schema of the case file."""
+    from pkcalc.case import case_schema
+
+    _print_json(case_schema())
+
+
+@cli.command()
+@click.option("--port", default=8501, show_default=True, help="Port on this machine.")
+def form(port: int) -> None:
+    """Start the form on this machine only."""
+    from importlib.util import find_spec
+
+    spec = find_spec("pkcalc_form")
+    if spec is None or spec.origin is None:
+        raise click.ClickException("The form is not installed.")
+    folder = Path(spec.origin).parent
+    click.echo(f"The form opens at http://127.0.0.1:{port} on this machine only. Stop it with Ctrl+C.", err=True)
+    command = [sys.executable, "-m", "streamlit", "run", str(folder / "page.py"), "--server.port", str(port)]
+    os.chdir(folder)
+    os.execv(sys.executable, command)

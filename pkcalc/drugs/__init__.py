@@ -1,0 +1,1 @@
+"""Drug profiles: one TOML file per drug, and their loader."""

@@ -1,0 +1,1 @@
+"""Published checks, shipped so that they can be re-run anywhere."""

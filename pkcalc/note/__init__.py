@@ -1,0 +1,1 @@
+"""The consult note: document, text, JSON, HTML, PDF and charts."""

@@ -1,0 +1,159 @@
+"""The note as one JSON document: every number with its unit in the key, no NaN, no infinity."""
+
+from __future__ import annotations
+
+import json
+import math
+from typing import Any
+
+from pkcalc import __version__
+from pkcalc.consult import Consult, Shown
+from pkcalc.dosing import Regimen
+from pkcalc.errors import CannotEstimate, CaseError
+from pkcalc.estimate.result import Band, Estimate
+from pkcalc.forecast import Forecast
+from pkcalc.note.document import DEFERS, DEMONSTRATION, compose
+
+NOTE_VERSION = 1
+
+
+def number(value: float) -> Any:
+    """A finite number, or the object that says there is no steady state."""
+    return float(f"{value:.6g}") if math.isfinite(value) else {"no_steady_state": True}
+
+
+def band_data(band: Band) -> dict[str, Any]:
+    return {"median": number(band.median), "low_5_percent": number(band.low), "high_95_percent": number(band.high)}
+
+
+def regimen_data(regimen: Regimen) -> dict[str, Any]:
+    return {
+        "cycle_h": regimen.cycle_h,
+        "doses": [{"form": x.form, "hour": x.hour, "labelled_mg": x.labelled_mg} for x in regimen.intakes],
+    }
+
+
+def forecast_data(forecast: Forecast) -> dict[str, Any]:
+    return {
+        "active_mg_per_day": number(forecast.rate_mg_per_day),
+        "steady_level_normal_binding_mg_per_L": band_data(forecast.steady),
+        "steady_level_as_reported_total_mg_per_L": band_data(forecast.total),
+        "steady_level_free_mg_per_L": band_data(forecast.free),
+        "chance_below": number(forecast.below),
+        "chance_within": number(forecast.within),
+        "chance_above": number(forecast.above),
+        "chance_above_critical": number(forecast.above_critical),
+        "chance_no_steady_state": number(forecast.no_steady_state),
+        "days_to_90_percent": band_data(forecast.settle_days) if forecast.settle_days else None,
+        "level_percent_per_dose_percent": number(forecast.percent_per_percent),
+        "level_at_point_mg_per_L": number(forecast.point_mg_per_L),
+    }
+
+
+def shown_data(shown: Shown) -> dict[str, Any]:
+    return {
+        "words": shown.words,
+        "regimen": regimen_data(shown.regimen),
+        "present": shown.present,
+        "offered": shown.offered,
+        "forecast": forecast_data(shown.forecast),
+    }
+
+
+def estimate_data(estimate: Estimate) -> dict[str, Any]:
+    return {
+        "method": estimate.method,
+        "point": {
+            "kind": estimate.point.kind,
+            "vmax_mg_per_day": number(estimate.point.vmax_mg_per_day),
+            "km_mg_per_L": number(estimate.point.km_mg_per_L),
+            "volume_L": number(estimate.point.volume_L) if estimate.point.volume_L is not None else None,
+        },
+        "summary": {name: band_data(b) for name, b in estimate.summary.items()},
+        "correlation": number(estimate.correlation),
+        "volume_from": estimate.volume_from,
+        "rejected_share": number(estimate.rejected),
+        "trusted": estimate.trusted,
+        "distrust": estimate.distrust,
+        "diagnostics": {k: v for k, v in estimate.diagnostics.items() if isinstance(v, (int, float, str, list))},
+    }
+
+
+def note_data(consult: Consult) -> dict[str, Any]:
+    """Consult -> plain data for JSON."""
+    case = consult.case
+    return {
+        "pkcalc_note": NOTE_VERSION,
+        "outcome": "stop" if consult.stopped else "done",
+        "demonstration": DEMONSTRATION if case.demonstration is not None else "",
+        "drug": case.drug,
+        "cautions": [c.as_dict() for c in consult.cautions],
+        "blocked": sorted(consult.blocked),
+        "goal": {
+            "low_mg_per_L": consult.goal.low_mg_per_L,
+            "high_mg_per_L": consult.goal.high_mg_per_L,
+            "aim_mg_per_L": number(consult.goal.aim_mg_per_L),
+            "critical_mg_per_L": consult.goal.critical_mg_per_L,
+            "origin": consult.goal.origin,
+        },
+        "inputs": case.file.model_dump(mode="json", by_alias=True, exclude_defaults=True),
+        "levels": [
+            {
+                "level": o.level.index + 1,
+                "as_typed": o.level.typed.text,
+                "kind": o.level.kind,
+                "reported_mg_per_L": number(o.level.reported_mg_per_L),
+                "normal_binding_mg_per_L": number(o.working_mg_per_L) if o.usable else None,
+                "normal_binding_low_mg_per_L": number(o.low_mg_per_L),
+                "normal_binding_high_mg_per_L": number(o.high_mg_per_L),
+                "steps": list(o.steps),
+            }
+            for o in consult.observations
+        ],
+        "settling": [
+            {
+                "level": s.level + 1,
+                "settled": s.settled,
+                "fraction": band_data(s.fraction) if s.fraction else None,
+                "sentence": s.sentence,
+            }
+            for s in consult.settling
+        ],
+        "estimates": {name: estimate_data(e) for name, e in consult.estimates.items()},
+        "refusals": dict(consult.refusals),
+        "chosen": {"method": consult.chosen.method, "why": consult.chosen_why} if consult.chosen else None,
+        "proposed": [shown_data(s) for s in consult.proposed],
+        "table": [shown_data(s) for s in consult.table],
+        "dose_rate_for_aim_active_mg_per_day": band_data(consult.aim_rate) if consult.aim_rate else None,
+        "workings": [line for s in compose(consult).sections if s.title == "Workings" for line in s.lines],
+        "version": __version__,
+        "results_date": consult.results_date,
+        "case_hash": case.hash,
+        "drug_file_hash": consult.profile.hash,
+        "site_file_hash": consult.site.hash,
+        "defers": DEFERS,
+    }
+
+
+def dumps(data: dict[str, Any]) -> str:
+    """One JSON document; refuses NaN and infinity."""
+    return json.dumps(data, indent=2, ensure_ascii=False, allow_nan=False) + "\n"
+
+
+def failure_data(error: CaseError | CannotEstimate) -> dict[str, Any]:
+    """The JSON document of an input error or a refusal."""
+    if isinstance(error, CaseError):
+        return {
+            "pkcalc_note": NOTE_VERSION,
+            "outcome": "input error",
+            "problems": [p.as_dict() for p in error.problems],
+            "version": __version__,
+        }
+    return {
+        "pkcalc_note": NOTE_VERSION,
+        "outcome": "stop",
+        "found": error.found,
+        "why": error.why,
+        "helps": error.helps,
+        "version": __version__,
+    }

@@ -1,0 +1,61 @@
+"""The note as plain text."""
+
+from __future__ import annotations
+
+import textwrap
+
+from pkcalc.errors import Caution
+from pkcalc.note.document import Document, Table
+
+WIDTH = 100
+_NAMES = {"stop": "STOP", "warn": "WARNING", "note": "NOTE"}
+
+
+def render(document: Document) -> str:
+    """Document -> text of at most WIDTH columns (tables may be wider)."""
+    out: list[str] = []
+    if document.demonstration:
+        out += ["*" * WIDTH, document.demonstration.center(WIDTH).rstrip(), "*" * WIDTH, ""]
+    out += [document.title, "=" * len(document.title), ""]
+    for caution in document.cautions:
+        out += caution_lines(caution)
+    if document.cautions:
+        out.append("")
+    for section in document.sections:
+        out += [section.title, "-" * len(section.title)]
+        for line in section.lines:
+            indent = "      " if line.startswith("   ") else "   "
+            out += textwrap.wrap(line, WIDTH, subsequent_indent=indent, drop_whitespace=True) or [""]
+        if section.table is not None:
+            out += table_lines(section.table)
+        out.append("")
+    for line in document.footer:
+        out += textwrap.wrap(line, WIDTH)
+    if document.demonstration:
+        out += ["", "*" * WIDTH, document.demonstration.center(WIDTH).rstrip(), "*" * WIDTH]
+    return "\n".join(out) + "\n"
+
+
+def caution_lines(caution: Caution) -> list[str]:
+    """One caution: severity, text, what it blocks, what lifts it."""
+    text = f"{_NAMES[caution.severity]}: {caution.text}"
+    if caution.blocks:
+        text += f" No result for: {', '.join(caution.blocks)}."
+    if caution.lifted_by:
+        text += f" Lifted by: {caution.lifted_by}."
+    return textwrap.wrap(text, WIDTH, subsequent_indent="   ")
+
+
+def table_lines(table: Table) -> list[str]:
+    """Columns as wide as their widest cell, heads wrapped above them."""
+    columns = range(len(table.heads))
+    widths = [max([len(r[i]) for r in table.rows] + [max((len(w) for w in table.heads[i].split()), default=1)]) for i in columns]
+    heads = [textwrap.wrap(table.heads[i], widths[i]) or [""] for i in columns]
+    depth = max(len(h) for h in heads)
+    lines = []
+    for k in range(depth):
+        cells = [([""] * (depth - len(h)) + h)[k].ljust(w) for h, w in zip(heads, widths, strict=True)]
+        lines.append("  ".join(cells).rstrip())
+    lines.append("  ".join("-" * w for w in widths))
+    lines += ["  ".join(c.ljust(w) for c, w in zip(row, widths, strict=True)).rstrip() for row in table.rows]
+    return lines

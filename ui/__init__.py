@@ -1,0 +1,1 @@
+"""The form: asks and shows, knows nothing."""
