@@ -1,0 +1,419 @@
+"""The step in time: classical Runge-Kutta on the exactly integrated input, and the plan of steps for a
+record.
+
+    f(x) = h [ x / (K + x) + k x ]
+    k1 = f(w)   k2 = f(w + Jh - k1/2)   k3 = f(w + Jh - k2/2)   k4 = f(w + Jf - k3)
+    w' = w + Jf - (k1 + 2 k2 + 2 k3 + k4) / 6
+
+Jh and Jf are the amounts that reach the blood in the first half and in the whole of the step, exactly; so
+mass is conserved exactly whatever the step. For h (1/K + k) <= 1 the step is positive, keeps the order of
+two courses and brings them no further apart. Inside, amounts are counted in days of elimination at the full
+rate: w = X / Vmax and K = kappa / Vmax, so that a step's length is a plain number shared by all draws.
+"""
+
+from __future__ import annotations
+
+import math
+from collections import defaultdict
+from collections.abc import Iterator, Mapping, Sequence
+from dataclasses import dataclass
+from typing import Literal, NamedTuple
+
+import numpy as np
+from numpy.typing import NDArray
+
+from pkcalc import formulas
+from pkcalc.record import Dose, FirstOrder
+
+Floats = NDArray[np.float64]
+Accuracy = Literal["everyday", "fine", "finest"]
+
+#: Times closer than this are one moment (0.1 millisecond): clock arithmetic must not split a dose from its
+#: level.
+SAME_MOMENT_DAY = 1e-9
+
+#: Draws per block: every array of a block then stays in the processor's second-level cache.
+BLOCK = 2048
+
+
+class Step(NamedTuple):
+    """One step, the same for all draws: length [day]; amounts [mg] pushed at its start, and reaching the
+    blood in its first half and in all of it; constant rate [mg/day] where the piece is exact, else None;
+    which first-order paths are open; and the same three amounts for each window that has any."""
+
+    h: float
+    push: float
+    half: float
+    full: float
+    rate: float | None
+    paths: tuple[int, ...]
+    windows: tuple[tuple[int, float, float, float], ...]
+
+
+@dataclass(frozen=True)
+class Plan:
+    """The steps of a record, and after how many of them each asked-for time is reached."""
+
+    start_day: float
+    steps: tuple[Step, ...]
+    reached: Mapping[int, tuple[int, ...]]
+    ends_day: tuple[float, ...]
+
+
+class _Stream:
+    """Drug on its way by one route into one set of windows: an infusion (ka None), or a gut amount."""
+
+    __slots__ = ("gut", "ka", "rate", "running", "since", "windows")
+
+    def __init__(self, ka: float | None, windows: tuple[int, ...]) -> None:
+        self.ka, self.windows = ka, windows
+        self.running, self.rate, self.gut, self.since = 0, 0.0, 0.0, -math.inf
+
+    def change(self, rate: float, count: int) -> None:
+        self.running += count
+        # the last one to stop leaves exactly nothing behind, whatever the rounding of the sum
+        self.rate = self.rate + rate if self.running else 0.0
+
+    def deliver(self, h: float) -> tuple[float, float]:
+        """Amounts reaching the blood in the first half and the whole of the next h days; moves the gut on."""
+        if self.ka is None:
+            return 0.5 * self.rate * h, self.rate * h
+        z = self.ka * h
+        half = -self.gut * math.expm1(-0.5 * z)
+        full = -self.gut * math.expm1(-z)
+        gut = self.gut - full
+        if self.running:
+            half += 0.5 * self.rate * h * _held_back(0.5 * z)
+            released = self.rate * h * _held_back(z)
+            full += released
+            gut += self.rate * h - released
+        self.gut = gut
+        return half, full
+
+
+def _held_back(z: float) -> float:
+    """1 - (1 - e^-z)/z: share of what was released at a constant rate that is already absorbed."""
+    if z < 0.1:
+        return z * (
+            1 / 2 - z * (1 / 6 - z * (1 / 24 - z * (1 / 120 - z * (1 / 720 - z * (1 / 5040 - z / 40320)))))
+        )
+    return 1.0 + math.expm1(-z) / z
+
+
+def plan_steps(
+    doses: Sequence[Dose],
+    *,
+    start_day: float,
+    times_day: Sequence[float],
+    end_day: float | None = None,
+    fastest_per_day: float,
+    fineness: float,
+    first_order: Sequence[FirstOrder] = (),
+    windows: Sequence[tuple[float, float]] = (),
+    exact: bool = True,
+) -> Plan:
+    """Cut a record into steps, the same for all draws.
+
+    A step is at most 0.25 / fastest_per_day and (0.5 / ka) e^(0.2 ka (time since the last dose)), both
+    divided by fineness, and ends at every change of input and every asked-for time. Where the input rate is
+    constant and `exact` is allowed, the whole piece is one step. Of doses before the start only the rest
+    counts.
+    """
+    last = max([start_day, *times_day]) if end_day is None else end_day
+    events: dict[float, list[tuple[str, _Stream, float]]] = defaultdict(list)
+    streams: dict[tuple[float | None, tuple[int, ...]], _Stream] = {}
+    pushes: dict[float, list[tuple[float, tuple[int, ...]]]] = defaultdict(list)
+    marks = {start_day, last, *times_day}
+    for path in first_order:
+        marks.update(t for t in (path.start_day, path.end_day) if start_day < t < last)
+
+    def stream_for(ka: float | None, members: tuple[int, ...]) -> _Stream:
+        return streams.setdefault((ka, members), _Stream(ka, members))
+
+    for dose in doses:
+        members = tuple(i for i, (a, b) in enumerate(windows) if a <= dose.time_day < b)
+        form = dose.absorption
+        begin = dose.time_day + (form.lag_day if form else 0.0)
+        if begin >= last:
+            continue
+        if form is None and dose.duration_day == 0:
+            if begin >= start_day:
+                pushes[begin].append((dose.amount_mg, members))
+                marks.add(begin)
+            continue
+        stream = stream_for(form.ka_per_day if form else None, members)
+        spread = form.release_day if form else dose.duration_day
+        if spread == 0:
+            amount = dose.amount_mg
+            if begin < start_day:
+                amount *= math.exp(-stream.ka * (start_day - begin)) if stream.ka else 1.0
+            events[max(begin, start_day)].append(("gut", stream, amount))
+        else:
+            rate, end = dose.amount_mg / spread, begin + spread
+            if begin < start_day and stream.ka:
+                shown = min(start_day - begin, spread)
+                rest = -rate * math.expm1(-stream.ka * shown) / stream.ka
+                rest *= math.exp(-stream.ka * max(start_day - end, 0.0))
+                events[start_day].append(("gut", stream, rest))
+            if end > start_day:
+                events[max(begin, start_day)].append(("begin", stream, rate))
+                if end < last:
+                    events[end].append(("end", stream, -rate))
+    marks.update(events)
+
+    moments = sorted(t for t in marks if start_day <= t <= last)
+    same: dict[float, float] = {}
+    points: list[float] = []
+    for moment in moments:
+        if not points or moment - points[-1] > SAME_MOMENT_DAY:
+            points.append(moment)
+        same[moment] = points[-1]
+    at: dict[float, list[tuple[str, _Stream, float]]] = defaultdict(list)
+    for moment, listed in events.items():
+        at[same[moment]] += listed
+    pushed: dict[float, list[tuple[float, tuple[int, ...]]]] = defaultdict(list)
+    for moment, some in pushes.items():
+        pushed[same[moment]] += some
+
+    asked: dict[float, list[int]] = defaultdict(list)
+    for position, moment in enumerate(times_day):
+        asked[same[moment]].append(position)
+
+    longest = 0.25 / (fastest_per_day * fineness)
+    steps: list[Step] = []
+    ends: list[float] = []
+    reached: dict[int, tuple[int, ...]] = {}
+    active: list[_Stream] = []
+    for index, begin in enumerate(points):
+        if begin in asked:
+            reached[len(steps)] = tuple(asked[begin])
+        for what, stream, amount in at.get(begin, ()):
+            stream.since = begin
+            if what == "gut":
+                stream.gut += amount
+            else:
+                stream.change(amount, 1 if what == "begin" else -1)
+        if index + 1 == len(points):
+            break
+        finish = points[index + 1]
+        paths = tuple(
+            i
+            for i, p in enumerate(first_order)
+            if p.start_day <= begin + SAME_MOMENT_DAY and p.end_day > begin + SAME_MOMENT_DAY
+        )
+        push = pushed.get(begin, ())
+        for stream in streams.values():
+            # less than 1 part in 1e16 of what was swallowed is left
+            if stream.ka and not stream.running and stream.ka * (begin - stream.since) > 37.0:
+                stream.gut = 0.0
+        active = [s for s in streams.values() if s.running or s.gut > 0.0]
+        absorbing = [s for s in active if s.ka is not None]
+        moment = begin
+        while moment < finish:
+            left = finish - moment
+            if exact and not absorbing:
+                h = left
+            else:
+                limit = longest
+                for s in absorbing:
+                    assert s.ka is not None
+                    growth = math.exp(min(0.2 * s.ka * (moment - s.since), 30.0))
+                    limit = min(limit, 0.5 / (s.ka * fineness) * growth)
+                pieces = math.ceil(left / limit * (1 - 1e-9))
+                h = left / pieces if pieces <= 2 or limit == longest else limit
+            moment = finish if h >= left else moment + h
+            half = full = 0.0
+            shares: dict[int, list[float]] = {}
+            for amount, members in push:
+                for w in members:
+                    shares.setdefault(w, [0.0, 0.0, 0.0])[0] += amount
+            for s in active:
+                first, whole = s.deliver(h)
+                half += first
+                full += whole
+                for w in s.windows:
+                    share = shares.setdefault(w, [0.0, 0.0, 0.0])
+                    share[1] += first
+                    share[2] += whole
+            constant = sum((s.rate for s in active), 0.0) if exact and not absorbing else None
+            steps.append(
+                Step(
+                    h,
+                    math.fsum(amount for amount, _ in push),
+                    half,
+                    full,
+                    constant,
+                    paths,
+                    tuple((w, a, b, c) for w, (a, b, c) in shares.items()),
+                )
+            )
+            ends.append(moment)
+            push = ()
+    return Plan(start_day, tuple(steps), reached, tuple(ends))
+
+
+#: How much finer than the everyday steps: largest error about 3e-3, 4e-5 and 2e-7 of the level.
+FINENESS: Mapping[Accuracy, float] = {"everyday": 1.0, "fine": 4.0, "finest": 16.0}
+
+
+class Speed(NamedTuple):
+    """Draws that share a plan: their positions, and the rate per day that sets their steps."""
+
+    positions: NDArray[np.intp]
+    fastest_per_day: float
+
+
+def speeds(fastest_per_day: Floats) -> tuple[Speed, ...]:
+    """Sort draws by their fastest relative rate, Vmax/kappa (+ k), into classes that share their steps.
+
+    The first class steps at a quarter of the time constant of the 99 % point; a draw that would step
+    further than its own time constant goes to a class with steps four (sixteen, ...) times shorter.
+    """
+    typical = float(np.quantile(fastest_per_day, 0.99))
+    level = np.ceil(np.log(fastest_per_day / (4.0 * typical)) / np.log(4.0) - 1e-9).clip(0).astype(int)
+    return tuple(Speed(np.flatnonzero(level == n), typical * 4.0 ** int(n)) for n in np.unique(level))
+
+
+class Block:
+    """One block of draws on its way: the state w and the stage values of the step just taken."""
+
+    def __init__(self, vmax_mg_per_day: Floats, kappa_mg: Floats, start_mg: Floats) -> None:
+        self.inverse = 1.0 / vmax_mg_per_day
+        self.big_k = kappa_mg * self.inverse
+        self.w = start_mg * self.inverse
+        self.start = np.empty_like(self.w)
+        n = len(self.w)
+        self.x2, self.x3, self.x4 = np.empty(n), np.empty(n), np.empty(n)
+        self.u1, self.u2, self.u3, self.u4 = np.empty(n), np.empty(n), np.empty(n), np.empty(n)
+        self.full = np.empty(n)
+        self.spare = np.empty(n)
+        self.k: Floats | float | None = None
+
+    def _eliminated(self, x: Floats, out: Floats) -> None:
+        np.add(self.big_k, x, out=out)
+        np.divide(x, out, out=out)
+        if self.k is not None:
+            np.multiply(self.k, x, out=self.spare)
+            out += self.spare
+
+    def take(self, step: Step) -> None:
+        """Move every draw of the block on by one step."""
+        w, h = self.w, step.h
+        if step.push:
+            np.multiply(self.inverse, step.push, out=self.spare)
+            w += self.spare
+        self.start[...] = w
+        if step.rate is not None:
+            w[...] = formulas.constant_rate_step(
+                time=h,
+                start=w,
+                input_rate=step.rate * self.inverse,
+                vmax=1.0,
+                km=self.big_k,
+                first_order=0.0 if self.k is None else self.k,
+            )
+            return
+        x2, x3, x4 = self.x2, self.x3, self.x4
+        u1, u2, u3, u4 = self.u1, self.u2, self.u3, self.u4
+        self._eliminated(w, u1)
+        if step.full:
+            np.multiply(self.inverse, step.half, out=x4)
+            x4 += w
+            np.multiply(self.inverse, step.full, out=self.full)
+            self.full += w
+            whole = self.full
+        else:
+            x4[...] = w
+            whole = w
+        np.multiply(u1, 0.5 * h, out=x2)
+        np.subtract(x4, x2, out=x2)
+        self._eliminated(x2, u2)
+        np.multiply(u2, 0.5 * h, out=x3)
+        np.subtract(x4, x3, out=x3)
+        self._eliminated(x3, u3)
+        np.multiply(u3, h, out=x4)
+        np.subtract(whole, x4, out=x4)
+        self._eliminated(x4, u4)
+        total = self.spare
+        np.add(u2, u3, out=total)
+        total += total
+        total += u1
+        total += u4
+        total *= h / 6.0
+        np.subtract(whole, total, out=w)
+
+    def middle(self, step: Step) -> Floats:
+        """The state in the middle of the Runge-Kutta step just taken (third order)."""
+        h = step.h
+        out: Floats = self.start + self.inverse * step.half
+        out -= (5 * h / 24) * self.u1
+        out -= (h / 6) * (self.u2 + self.u3)
+        out += (h / 24) * self.u4
+        return out
+
+    def slopes(self, step: Step) -> Floats:
+        """h times the mean slope of the elimination over the Runge-Kutta step just taken (Simpson)."""
+        total: Floats = self._slope(self.start) + self._slope(self.x4)
+        total += 2.0 * (self._slope(self.x2) + self._slope(self.x3))
+        total *= step.h / 6.0
+        return total
+
+    def _slope(self, x: Floats) -> Floats:
+        s = self.big_k + x
+        s *= s
+        np.divide(self.big_k, s, out=s)
+        if self.k is not None:
+            s += self.k
+        return s
+
+    def tangent(self, step: Step) -> Floats:
+        """Derivative of the state after the Runge-Kutta step just taken with respect to the state before
+        it."""
+        h = step.h
+        d1 = self._slope(self.start)
+        d2 = self._slope(self.x2) * (1.0 - 0.5 * h * d1)
+        d3 = self._slope(self.x3) * (1.0 - 0.5 * h * d2)
+        d4 = self._slope(self.x4) * (1.0 - h * d3)
+        out: Floats = 1.0 - (h / 6.0) * (d1 + 2.0 * (d2 + d3) + d4)
+        return out
+
+
+def march(
+    plan: Plan,
+    vmax_mg_per_day: Floats,
+    kappa_mg: Floats,
+    start_mg: Floats,
+    path_rates: Sequence[Floats | float] = (),
+) -> Iterator[tuple[int, Step | None, Block]]:
+    """Walk one block of draws along a plan; yields (steps taken, the step just taken, the block).
+
+    The first yield stands at the start, before any step. path_rates: 1/day for each first-order path of the
+    plan.
+    """
+    block = Block(vmax_mg_per_day, kappa_mg, start_mg)
+    yield 0, None, block
+    paths: tuple[int, ...] = ()
+    for number, step in enumerate(plan.steps, 1):
+        if step.paths != paths:
+            paths = step.paths
+            block.k = None if not paths else sum((path_rates[i] for i in paths[1:]), path_rates[paths[0]])
+        block.take(step)
+        yield number, step, block
+
+
+def run(
+    plan: Plan,
+    vmax_mg_per_day: Floats,
+    kappa_mg: Floats,
+    start_mg: Floats,
+    path_rates: Sequence[Floats | float] = (),
+) -> Floats:
+    """Amounts [mg], shape (draws, asked-for times), of one block of draws."""
+    count = sum(len(positions) for positions in plan.reached.values())
+    out = np.empty((len(vmax_mg_per_day), count))
+    for number, _, block in march(plan, vmax_mg_per_day, kappa_mg, start_mg, path_rates):
+        if number in plan.reached:
+            amounts = block.w * vmax_mg_per_day
+            for position in plan.reached[number]:
+                out[:, position] = amounts
+    return out
