@@ -1,4 +1,4 @@
-"""Vmax and Km from three or more steady levels: weighted regression, direct linear plot, three straight lines.
+"""Vmax and Km from three or more steady levels: regression, direct linear plot, three straight lines.
 
 All five answer in the same shape, side by side, so that a resident can see where they part company. A line
 that reads off an impossible number is reported as a failure with its reason; the number goes no further.
@@ -218,7 +218,7 @@ class Crossings:
 
 
 def crossings(*, level: Floats, rate: Floats, error_in: Literal["level", "rate"]) -> Crossings:
-    """All pairwise crossings of the direct linear plot, with the rule for those outside the positive quadrant.
+    """All pairwise crossings of the direct linear plot, and how those outside the positive quadrant count.
 
     A crossing that error has carried off the positive quadrant keeps the place in the order that it had on
     the way out. Error in the rate (Eisenthal & Cornish-Bowden 1974, rule from memory): Vmax and Km both

@@ -140,7 +140,7 @@ def rate_profile_limits(
 
 
 def level_on_rate(*, rate_mg_per_day: Floats, level_mg_per_L: Floats, level_log_sd: Floats) -> CurveFit:
-    """Weighted least squares on the level: level = Km R / (Vmax - R), each level with its own proportional spread.
+    """Weighted least squares on the level, C = Km R / (Vmax - R), each level with its own share of spread.
 
     The residual is ln(level seen / level predicted) divided by the level's log-sd: to first order the level's
     difference weighted by 1/(spread x level)^2, and exactly the likelihood of a lognormal spread. Vmax is

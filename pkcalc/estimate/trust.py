@@ -132,8 +132,8 @@ def verdict(results: tuple[Result, ...], pairs: SteadyPairs) -> Verdict:
         "do: "
         "they let the levels count by their place on the axis, not by their certainty."
         if failed
-        else " The straight lines give numbers here, but let the levels count by their place on the axis, not by "
-        "their certainty: for teaching only."
+        else " The straight lines give numbers here, but let the levels count by their place on the axis, "
+        "not by their certainty: for teaching only."
     )
     if isinstance(regression, LineFailure):
         return Verdict(
