@@ -1,0 +1,1360 @@
+"""Drug knowledge as data: reads one TOML file per drug and refuses any number without a source.
+
+Every number of a drug file is `{ value, unit, source, where, status }`; a number of our own adds `derivation`.
+The loader turns them into plain floats in canonical units, named with their unit, and keeps each original as a
+`Fact` under its path ("binding.free_fraction"), so that notes and `pkcalc drugs` can say where it came from.
+"""
+
+from __future__ import annotations
+
+import difflib
+import hashlib
+import math
+import tomllib
+from collections.abc import Callable, Mapping
+from dataclasses import dataclass, field
+from functools import cache
+from importlib import resources
+from typing import Any, Literal, TypeVar, cast
+
+from pkcalc.errors import CaseError, DrugFileError, Problem
+from pkcalc.sources import STATUSES, Source, Status, all_sources
+from pkcalc.units import FACTORS, show_number
+
+Scope = Literal["dosing", "dosing with expert sign-off", "projection only", "teaching only"]
+SCOPES: tuple[Scope, ...] = ("dosing", "dosing with expert sign-off", "projection only", "teaching only")
+Sex = Literal["female", "male", "unknown"]
+
+#: Units that stand in drug and site files only, beside the closed list of `units`: kind -> label -> factor.
+FILE_UNITS: dict[str, dict[str, float]] = {
+    **FACTORS,
+    "share": {"fraction": 1.0, "%": 0.01},
+    "factor": {"times": 1.0, "exponent": 1.0},
+    "molar mass": {"g/mol": 1.0},
+    "strength": {"mg": 1.0, "mg PE": 1.0, "mg/mL": 1.0, "mg PE/mL": 1.0, "mg/5 mL": 0.2, "g/L": 1.0},
+    "per albumin": {"per g/dL": 1.0, "per g/L": 10.0},
+    "per level": {"per mg/L": 1.0},
+    "fluid volume": {"mL": 1.0},
+    "interval": {"h": 1.0},
+    "ratio": {"times": 1.0},
+    "vmax": {**FACTORS["dose rate"], **FACTORS["dose rate per weight"]},
+    "volume": {**FACTORS["volume"], **FACTORS["volume per weight"]},
+}
+
+#: Values that people type to mean "unknown".
+_SENTINELS = {-1.0, -9.0, -99.0, -999.0, -9999.0, 999.0, 9999.0, 99999.0, 999999.0}
+
+
+@dataclass(frozen=True)
+class Fact:
+    """One number (or several) or one statement of a drug file, with where it came from.
+
+    value: as printed in the file, in `unit`. sources: keys of sources.toml. where: the place in the source.
+    status: read, memory, or own synthesis with its derivation.
+    """
+
+    path: str
+    value: float | tuple[float, ...] | str | tuple[str, ...]
+    unit: str
+    sources: tuple[str, ...]
+    where: str
+    status: Status
+    derivation: str = ""
+
+    @property
+    def shown(self) -> str:
+        """The value with its unit, as printed."""
+        if isinstance(self.value, str):
+            return self.value
+        if isinstance(self.value, float):
+            text = show_number(self.value, 6)
+        elif all(isinstance(v, str) for v in self.value):
+            return ", ".join(cast(tuple[str, ...], self.value))
+        else:
+            numbers = [show_number(v, 6) for v in cast(tuple[float, ...], self.value)]
+            text = f"{numbers[0]} to {numbers[1]}" if len(numbers) == 2 else " / ".join(numbers)
+        if self.unit in ("fraction", "exponent", ""):
+            return text
+        return f"{text} {self.unit}"
+
+
+@dataclass(frozen=True)
+class Absorption:
+    """After the lag, release at a constant rate, then first-order uptake. peak_h: published peak times."""
+
+    ka_per_day: float
+    lag_day: float
+    release_day: float
+    peak_h: tuple[float, float]
+
+
+@dataclass(frozen=True)
+class Form:
+    """A product form, or a salt given as a plain rate (generic). Amounts are labelled amounts in amount_unit.
+
+    Active drug = amount x salt_factor x bioavailability. absorption: None for a dose into a vein, or for a rate.
+    intervals_h: dosing intervals allowed. largest_dose_mg: more in one dose is taken for a slip.
+    refused_routes: route -> why it is refused. conversion_half_life_h: of a prodrug, None for the drug itself.
+    """
+
+    id: str
+    words: str
+    salt: str
+    amount_unit: str
+    salt_factor: float
+    bioavailability: float
+    bioavailability_range: tuple[float, float]
+    routes: tuple[str, ...]
+    absorption: Absorption | None
+    release: Literal["prompt", "extended", "intravenous", "none"]
+    generic: bool
+    intervals_h: tuple[float, ...]
+    largest_dose_mg: float
+    refused_routes: Mapping[str, str]
+    conversion_half_life_h: float | None
+
+    @property
+    def route(self) -> str:
+        return self.routes[0]
+
+    @property
+    def active_fraction(self) -> float:
+        """Active drug reaching the body per labelled mg."""
+        return self.salt_factor * self.bioavailability
+
+
+@dataclass(frozen=True)
+class Product:
+    """One thing on a shelf: a capsule, a tablet, or a liquid counted in mL.
+
+    mg_per_unit: labelled mg (or mg PE) per capsule, tablet or mL. divisible_into: 2 where halves are allowed.
+    smallest_step: of a unit (0.5 tablet, 0.5 mL). containers_mL: vial or bottle sizes of liquids.
+    """
+
+    id: str
+    words: str
+    form: str
+    unit: str
+    mg_per_unit: float
+    smallest_step: float
+    containers_mL: tuple[float, ...]
+    strength_words: str
+    exclusive_group: str
+
+
+@dataclass(frozen=True)
+class Shelf:
+    """A generic country shelf: product ids. Of an exclusive group only one strength may be active at a time."""
+
+    id: str
+    words: str
+    products: tuple[str, ...]
+
+
+@dataclass(frozen=True)
+class Target:
+    """The target range and the critical level, on the working basis; free_* where a free level is used."""
+
+    basis: str
+    low_mg_per_L: float
+    high_mg_per_L: float
+    aim_mg_per_L: float
+    critical_mg_per_L: float
+    free_low_mg_per_L: float | None
+    free_high_mg_per_L: float | None
+    free_critical_mg_per_L: float | None
+
+
+@dataclass(frozen=True)
+class Spread:
+    """Spread of a level. total_cv and intake_share by who gives the doses: observed, outpatient, doubtful.
+
+    intake_share: share of doses that differ from the record. wrong_level_chance: chance that a level is simply
+    wrong (its spread is then multiplied by wrong_level_factor).
+    """
+
+    assay_cv: float
+    assay_cv_range: tuple[float, float]
+    total_cv: Mapping[str, float]
+    intake_share: Mapping[str, float]
+    wrong_level_chance: float
+    wrong_level_factor: float
+
+
+@dataclass(frozen=True)
+class Alternative:
+    """A revised albumin coefficient, shown beside the one in use and labelled unvalidated."""
+
+    id: str
+    words: str
+    coefficient_dL_per_g: float
+    status: Status
+
+
+@dataclass(frozen=True)
+class Binding:
+    """How a total level is read at abnormal binding.
+
+    normalised total = total / (albumin_coefficient x albumin + constant), albumin in g/dL, only below the albumin
+    at which the denominator is 1. correction_log_sd: what the correction itself adds to the spread.
+    renal_failure_coefficients: their results are shown as a range, never used silently.
+    """
+
+    free_fraction: float
+    free_fraction_range: tuple[float, float]
+    albumin_coefficient: float
+    constant: float
+    correction_log_sd: float
+    alternatives: tuple[Alternative, ...]
+    renal_failure_coefficients: tuple[float, float]
+    renal_failure_mL_per_min: float
+    renal_grey_mL_per_min: float
+    albumin_gate_g_per_L: tuple[float, float]
+    albumin_oldest_h: float
+    albumin_bcg_minus_bcp_g_per_L: float
+    valproate_fraction: tuple[float, float]
+    valproate_free: tuple[float, float]
+
+    @property
+    def break_point_g_per_L(self) -> float:
+        """The albumin at which the denominator is 1; at or above it no correction is made."""
+        return 10.0 * (1.0 - self.constant) / self.albumin_coefficient
+
+
+@dataclass(frozen=True)
+class RateCap:
+    """The fastest infusion of a form for a group of patients; the slower of the two limits counts."""
+
+    form: str
+    group: str
+    words: str
+    mg_per_min: float
+    mg_per_kg_min: float | None
+
+
+@dataclass(frozen=True)
+class OralLoad:
+    """A load by mouth: split parts, hours apart, and who must not have it."""
+
+    total_mg: float
+    parts_mg: tuple[float, ...]
+    hours_apart: float
+    largest_part_mg: float
+    excluded: tuple[str, ...]
+    setting: str
+    maintenance_after_h: float
+
+
+@dataclass(frozen=True)
+class IvLine:
+    """What a complete order into a vein must say, for one form."""
+
+    form: str
+    diluent: str
+    concentration_mg_per_mL: tuple[float, float]
+    filter: str
+    monitoring: str
+    contraindications: tuple[str, ...]
+    watch: str
+
+
+@dataclass(frozen=True)
+class Loading:
+    """Loads and top-ups: per kg, ceiling on a single load, caps, oral loads, IV order lines."""
+
+    mg_per_kg: tuple[float, float]
+    status_mg_per_kg: tuple[float, float] | None
+    largest_single_mg: float
+    rate_caps: tuple[RateCap, ...]
+    oral: OralLoad | None
+    iv_lines: Mapping[str, IvLine]
+
+
+@dataclass(frozen=True)
+class StepBand:
+    """Below this level (None: no upper bound) at most this step of the daily dose."""
+
+    below_mg_per_L: float | None
+    largest_step_mg_per_day: float
+
+
+@dataclass(frozen=True)
+class Limits:
+    """Upper bounds of maintenance: steps by present level, and the largest daily dose."""
+
+    steps: tuple[StepBand, ...]
+    largest_mg_per_day: float
+    largest_child_mg_per_day: float | None
+    step_form: str
+    warn_too_high: float
+    stop_too_high: float
+
+    def largest_step(self, level_mg_per_L: float) -> float:
+        """The largest step [labelled mg/day of step_form] at a present steady level."""
+        for step in self.steps:
+            if step.below_mg_per_L is None or level_mg_per_L < step.below_mg_per_L:
+                return step.largest_step_mg_per_day
+        raise AssertionError("the last step band has no upper bound")
+
+
+@dataclass(frozen=True)
+class Sampling:
+    """How long after a dose a level may be drawn, and how long before a change shows."""
+
+    after_iv_h: float
+    after_im_h: float
+    after_oral_load_h: float
+    steady_wait_days: tuple[float, float]
+
+
+@dataclass(frozen=True)
+class Plausible:
+    """Published ranges; an estimate outside them is warned about."""
+
+    ages_years: tuple[float, float]
+    vmax_mg_per_kg_day: tuple[float, float]
+    km_mg_per_L: tuple[float, float]
+
+
+@dataclass(frozen=True)
+class Interactions:
+    """Drugs that raise, lower, or move the level either way when started or stopped, and the wait in days."""
+
+    raising: tuple[str, ...]
+    lowering: tuple[str, ...]
+    either: tuple[str, ...]
+    wait_days: float
+
+
+@dataclass(frozen=True)
+class Code:
+    """One laboratory code with its expected display name: what it measures and on which basis."""
+
+    code: str
+    display: str
+    measures: str
+    unit_kind: Literal["mass", "moles", "share"]
+
+
+@dataclass(frozen=True)
+class Modifier:
+    """A named change to a population's typical values for patients it describes poorly.
+
+    ages_years: applied without asking inside these ages. question: the context question whose "yes" suggests it.
+    vmax_mg_per_kg_day: replaces the population's own (at its reference weight).
+    """
+
+    id: str
+    words: str
+    ages_years: tuple[float, float] | None
+    question: str
+    vmax_factor: float
+    km_factor: float
+    vmax_mg_per_kg_day: float | None
+    vmax_cv: float | None
+    km_cv: float | None
+    volume_cv: float | None
+
+
+@dataclass(frozen=True)
+class WeightRule:
+    """Which weight is used in obesity (adults with a height), and the cap where no height is known."""
+
+    obese_from: float
+    vmax_excess_share: float
+    volume_excess_factor: float
+    cap_without_height_kg: float
+
+
+@dataclass(frozen=True)
+class Prior:
+    """A population at one patient: log-normal medians and log-scale spreads, absolute units.
+
+    correlation: between log Vmax and log Km. first_order_per_day: parallel first-order path (0 where none).
+    used: sentences saying which weight and which modifiers were used. sources: keys.
+    """
+
+    population: str
+    words: str
+    vmax_mg_per_day: float
+    km_mg_per_L: float
+    volume_L: float
+    vmax_log_sd: float
+    km_log_sd: float
+    volume_log_sd: float
+    correlation: float
+    first_order_per_day: float
+    used: tuple[str, ...]
+    sources: tuple[str, ...]
+
+
+@dataclass(frozen=True)
+class Population:
+    """A named set of typical values with its spreads, who it describes, and how it scales with weight."""
+
+    id: str
+    words: str
+    describes: str
+    default: bool
+    ages_years: tuple[float, float]
+    vmax_at_reference_mg_per_day: float
+    reference_weight_kg: float
+    exponent_below: float
+    exponent_above: float
+    km_mg_per_L: float
+    volume_L_per_kg: float
+    vmax_cv: float
+    km_cv: float
+    volume_cv: float
+    correlation: float
+    first_order_per_day: float
+    modifiers: Mapping[str, Modifier]
+    weight_rule: WeightRule | None
+    sources: tuple[str, ...]
+
+    def at(
+        self,
+        weight_kg: float,
+        age_years: float | None = None,
+        *,
+        height_cm: float | None = None,
+        sex: Sex = "unknown",
+        modifiers: tuple[str, ...] = (),
+        without: tuple[str, ...] = (),
+    ) -> Prior:
+        """The population at this patient.
+
+        modifiers: ids switched on by the caller; those with an age range join by themselves unless named in
+        `without`. Refuses an age outside the population's own and a modifier it does not know.
+        """
+        self._refuse(weight_kg, age_years, modifiers, without)
+        chosen = [
+            m
+            for m in self.modifiers.values()
+            if m.id not in without
+            and (
+                m.id in modifiers
+                or (age_years is not None and m.ages_years and _inside(age_years, m.ages_years))
+            )
+        ]
+        used: list[str] = []
+        vmax_weight, volume_weight = self._weights(weight_kg, age_years, height_cm, sex, used)
+        vmax_reference = self.vmax_at_reference_mg_per_day
+        km, vmax_cv, km_cv, volume_cv = self.km_mg_per_L, self.vmax_cv, self.km_cv, self.volume_cv
+        for m in chosen:
+            if m.vmax_mg_per_kg_day is not None:
+                vmax_reference = m.vmax_mg_per_kg_day * self.reference_weight_kg
+            used.append(m.words)
+        for m in chosen:
+            vmax_reference *= m.vmax_factor
+            km *= m.km_factor
+            vmax_cv = max(vmax_cv, m.vmax_cv or 0.0)
+            km_cv = max(km_cv, m.km_cv or 0.0)
+            volume_cv = max(volume_cv, m.volume_cv or 0.0)
+        ratio = vmax_weight / self.reference_weight_kg
+        exponent = self.exponent_below if ratio < 1 else self.exponent_above
+        if age_years is None:
+            used.append("The age is not stated: no adjustment for age was made.")
+        return Prior(
+            population=self.id,
+            words=self.words,
+            vmax_mg_per_day=vmax_reference * ratio**exponent,
+            km_mg_per_L=km,
+            volume_L=self.volume_L_per_kg * volume_weight,
+            vmax_log_sd=log_sd(vmax_cv),
+            km_log_sd=log_sd(km_cv),
+            volume_log_sd=log_sd(volume_cv),
+            correlation=self.correlation,
+            first_order_per_day=self.first_order_per_day,
+            used=tuple(used),
+            sources=self.sources,
+        )
+
+    def _refuse(
+        self, weight_kg: float, age_years: float | None, modifiers: tuple[str, ...], without: tuple[str, ...]
+    ) -> None:
+        problems = []
+        if not (math.isfinite(weight_kg) and 0 < weight_kg <= 500):
+            given = show_number(weight_kg) if math.isfinite(weight_kg) else "no usable number"
+            problems.append(
+                Problem(
+                    "Weight",
+                    f"{given} kg was given",
+                    "above 0 and up to 500 kg",
+                    "Check the weight and its unit",
+                )
+            )
+        if age_years is not None and not _inside(age_years, self.ages_years):
+            low, high = self.ages_years
+            problems.append(
+                Problem(
+                    "Age",
+                    f"{show_number(age_years)} years was given for the population {self.id}",
+                    f"from {show_number(low)} to under {show_number(high)} years",
+                    "Choose a population that describes this age",
+                )
+            )
+        for name in (*modifiers, *without):
+            if name not in self.modifiers:
+                problems.append(
+                    Problem(
+                        "Population",
+                        f'the adjustment "{name}" was given for the population {self.id}',
+                        ", ".join(self.modifiers) or "none for this population",
+                        "Leave it out or choose another population",
+                    )
+                )
+        if problems:
+            raise CaseError(problems)
+
+    def _weights(
+        self, weight_kg: float, age_years: float | None, height_cm: float | None, sex: Sex, used: list[str]
+    ) -> tuple[float, float]:
+        """Weights used for Vmax and for the volume, and a sentence saying which."""
+        rule, shown = self.weight_rule, show_number(weight_kg)
+        if rule is None or (age_years is not None and age_years < 18):
+            used.append(f"Weight used: {shown} kg, as given.")
+            return weight_kg, weight_kg
+        if height_cm is None or sex == "unknown":
+            capped = min(weight_kg, rule.cap_without_height_kg)
+            if capped < weight_kg:
+                used.append(
+                    f"Weight used: {show_number(capped)} kg of {shown} kg, because height or sex is not stated."
+                )
+            else:
+                used.append(f"Weight used: {shown} kg, as given.")
+            return capped, capped
+        ideal = ideal_weight_kg(height_cm, sex)
+        if weight_kg <= rule.obese_from * ideal:
+            used.append(f"Weight used: {shown} kg, as given.")
+            return weight_kg, weight_kg
+        vmax_weight = rule.obese_from * ideal + rule.vmax_excess_share * (weight_kg - rule.obese_from * ideal)
+        volume_weight = ideal + rule.volume_excess_factor * (weight_kg - ideal)
+        used.append(
+            f"Obesity: of {shown} kg (ideal {show_number(ideal)} kg), {show_number(vmax_weight)} kg was used for Vmax "
+            f"and {show_number(volume_weight)} kg for the volume."
+        )
+        return vmax_weight, volume_weight
+
+
+def log_sd(cv: float) -> float:
+    """Log-scale standard deviation of a log-normal spread with this coefficient of variation."""
+    return math.sqrt(math.log1p(cv * cv))
+
+
+def ideal_weight_kg(height_cm: float, sex: Sex) -> float:
+    """Ideal body weight: 50 (men) or 45.5 (women) + 2.3 kg per inch over 60 inches (Devine 1974, from memory)."""
+    base = 50.0 if sex == "male" else 45.5
+    return base + 2.3 * (height_cm / 2.54 - 60.0)
+
+
+@dataclass(frozen=True)
+class Profile:
+    """One drug: everything the calculations need, each number traceable through `facts`."""
+
+    id: str
+    name: str
+    names: tuple[str, ...]
+    scope: Scope
+    scope_reason: str
+    authority: str
+    time_unit: Literal["day", "h"]
+    level_units: tuple[str, ...]
+    molar_mass_g_per_mol: float
+    forms: Mapping[str, Form]
+    products: Mapping[str, Product]
+    shelves: Mapping[str, Shelf]
+    target: Target
+    level_gates_mg_per_L: Mapping[str, tuple[float, float]]
+    spread: Spread
+    binding: Binding | None
+    populations: Mapping[str, Population]
+    modifiers: Mapping[str, Modifier]
+    weight_rule: WeightRule | None
+    youngest_years: float
+    loading: Loading | None
+    limits: Limits | None
+    sampling: Sampling
+    plausible: tuple[Plausible, ...]
+    interactions: Interactions
+    codes: tuple[Code, ...]
+    dialysis_L_per_day: tuple[float, float, float] | None
+    cautions: Mapping[str, Any]
+    facts: Mapping[str, Fact]
+    file: str
+    sha256: str
+
+    @property
+    def display(self) -> str:
+        return self.name
+
+    def fact(self, path: str) -> Fact:
+        """Where one number came from: `fact("binding.free_fraction")`."""
+        return self.facts[path]
+
+    def level_gate_mg_per_L(self, kind: str) -> tuple[float, float]:
+        """The levels that can be real, for "total", "free" or "normalised"; outside them the entry is a slip."""
+        return self.level_gates_mg_per_L.get(kind, self.level_gates_mg_per_L["total"])
+
+    def plausible_at(self, age_years: float | None) -> Plausible:
+        """The published ranges for this age (adults where the age is not stated)."""
+        age = 40.0 if age_years is None else age_years
+        return next((p for p in self.plausible if _inside(age, p.ages_years)), self.plausible[-1])
+
+    def default_population(self, age_years: float | None) -> Population:
+        """The population used unless another is chosen. Refuses ages for which none is defensible."""
+        if age_years is not None and age_years < self.youngest_years:
+            raise CaseError(
+                Problem(
+                    "Age",
+                    f"{show_number(age_years)} years was given",
+                    f"{show_number(self.youngest_years)} years or older for {self.name}",
+                    "Elimination changes too fast at this age: ask a specialist and go by measured levels",
+                )
+            )
+        age = 40.0 if age_years is None else age_years
+        for population in self.populations.values():
+            if population.default and _inside(age, population.ages_years):
+                return population
+        raise CaseError(
+            Problem(
+                "Age",
+                f"{show_number(age)} years was given",
+                "an age that a population of this drug describes",
+                "Check the age, or choose a population by name",
+            )
+        )
+
+    def sources_used(self) -> tuple[Source, ...]:
+        """Every source the drug file cites, in the order of its first use."""
+        keys = dict.fromkeys(key for fact in self.facts.values() for key in fact.sources)
+        return tuple(all_sources()[key] for key in keys)
+
+
+def _inside(age: float, ages: tuple[float, float]) -> bool:
+    return ages[0] <= age < ages[1]
+
+
+# Reading -----------------------------------------------------------------------------------------------------
+
+T = TypeVar("T")
+
+
+@dataclass
+class Table:
+    """One table of a drug or site file while it is read: every key must be asked for, nothing may be left."""
+
+    file: str
+    path: str
+    data: dict[str, Any]
+    facts: dict[str, Fact]
+    known: set[str] = field(default_factory=set)
+    provenance: bool = True
+
+    def at(self, key: str) -> str:
+        return f"{self.path}.{key}" if self.path else key
+
+    def fail(self, key: str, found: str, fix: str) -> DrugFileError:
+        return DrugFileError(f"{self.file}, {self.at(key)}: {found}. {fix}.")
+
+    def has(self, key: str) -> bool:
+        self.known.add(key)
+        return key in self.data
+
+    def _take(self, key: str) -> Any:
+        self.known.add(key)
+        if key not in self.data:
+            raise self.fail(key, "missing", "Add it with its source")
+        return self.data[key]
+
+    # plain entries without provenance: names, ids, switches
+
+    def text(self, key: str, default: str | None = None) -> str:
+        self.known.add(key)
+        if default is not None and key not in self.data:
+            return default
+        value = self._take(key)
+        if not isinstance(value, str) or not value.strip():
+            raise self.fail(key, "missing or empty", "Write it as text")
+        return value
+
+    def choice(self, key: str, allowed: tuple[str, ...]) -> str:
+        value = self.text(key)
+        if value not in allowed:
+            raise self.fail(key, f'"{value}" was found', "Write one of: " + ", ".join(allowed))
+        return value
+
+    def switch(self, key: str, default: bool = False) -> bool:
+        self.known.add(key)
+        value = self.data.get(key, default)
+        if not isinstance(value, bool):
+            raise self.fail(key, "neither true nor false", "Write true or false")
+        return value
+
+    def texts(self, key: str, default: tuple[str, ...] | None = None) -> tuple[str, ...]:
+        self.known.add(key)
+        if default is not None and key not in self.data:
+            return default
+        value = self._take(key)
+        if not isinstance(value, list) or not all(isinstance(v, str) and v.strip() for v in value):
+            raise self.fail(key, "not a list of texts", 'Write ["...", "..."]')
+        return tuple(value)
+
+    # sourced entries
+
+    def fact(self, key: str) -> dict[str, Any]:
+        entry = self._take(key)
+        if not isinstance(entry, dict):
+            raise self.fail(
+                key,
+                "a bare value",
+                "Write { value = ..., unit = ..., source = ..., where = ..., status = ... }",
+            )
+        return entry
+
+    def _record(self, key: str, entry: dict[str, Any], value: Any, unit: str) -> Fact:
+        names = {"value", "unit", "source", "where", "status", "derivation"}
+        for name in entry:
+            if name not in names:
+                raise self.fail(f"{key}.{name}", "unknown entry", "Known are: " + ", ".join(sorted(names)))
+        raw = entry.get("source")
+        sources = tuple(raw) if isinstance(raw, list) else (raw,)
+        if not sources or not all(isinstance(s, str) and s for s in sources):
+            raise self.fail(f"{key}.source", "missing", "Add the key of a source in sources.toml")
+        for name in sources:
+            if name not in all_sources():
+                raise self.fail(
+                    f"{key}.source",
+                    f'there is no source "{name}" in sources.toml',
+                    "Add it there or mend the key",
+                )
+        where = entry.get("where")
+        if not isinstance(where, str) or not where.strip():
+            raise self.fail(f"{key}.where", "missing", "Say where in the source it stands")
+        status = entry.get("status")
+        if status not in STATUSES:
+            raise self.fail(f"{key}.status", "missing or unknown", "Write one of: " + ", ".join(STATUSES))
+        derivation = entry.get("derivation", "")
+        if status == "own synthesis" and not (isinstance(derivation, str) and derivation.strip()):
+            raise self.fail(f"{key}.derivation", "missing", "A value of our own needs its derivation")
+        if status == "read" and any(all_sources()[s].status != "read" for s in sources):
+            raise self.fail(
+                f"{key}.status",
+                'it says "read", but its source is not one that was read',
+                'Write "memory" or "own synthesis"',
+            )
+        fact = Fact(self.at(key), value, unit, sources, where, cast(Status, status), derivation)
+        self.facts[fact.path] = fact
+        return fact
+
+    def _numbers(self, key: str, kind: str, count: int | None, zero: bool) -> tuple[float, ...]:
+        entry = self.fact(key)
+        if "value" not in entry:
+            raise self.fail(f"{key}.value", "missing", "Add the number")
+        raw = entry["value"]
+        many = isinstance(raw, list)
+        values = list(raw) if many else [raw]
+        for v in values:
+            if isinstance(v, bool) or not isinstance(v, int | float):
+                raise self.fail(f"{key}.value", "not a number", "Write a plain number")
+            if not math.isfinite(v) or float(v) in _SENTINELS:
+                raise self.fail(
+                    f"{key}.value", f"{v} stands for no value", "Leave the entry out, or give the real number"
+                )
+            if v < 0 and kind != "correlation":
+                raise self.fail(f"{key}.value", f"{v} is negative", "Check the number")
+            if v == 0 and not zero:
+                raise self.fail(
+                    f"{key}.value", "0 was found", "Give a number above 0, or leave the entry out"
+                )
+        if count is not None and (len(values) != count or many != (count != 1)):
+            shape = "one number" if count == 1 else f"a list of {count} numbers"
+            raise self.fail(f"{key}.value", f"{len(values)} found where {shape} is needed", f"Write {shape}")
+        unit = entry.get("unit")
+        labels = {"fraction": 1.0} if kind == "correlation" else FILE_UNITS[kind]
+        if not isinstance(unit, str) or unit not in labels:
+            found = f'the unit "{unit}" was found' if unit is not None else "no unit was found"
+            raise self.fail(f"{key}.unit", found, "Write one of: " + ", ".join(labels))
+        printed = tuple(float(v) for v in values)
+        self._record(key, entry, printed if many else printed[0], unit)
+        return tuple(v * labels[unit] for v in printed)
+
+    def number(
+        self,
+        key: str,
+        kind: str,
+        *,
+        low: float | None = None,
+        high: float | None = None,
+        zero: bool = False,
+    ) -> float:
+        """One number in the canonical unit of `kind`, within low to high (both included)."""
+        value = self._numbers(key, kind, 1, zero)[0]
+        if (low is not None and value < low) or (high is not None and value > high):
+            allowed = (
+                f"from {show_number(low or 0.0)} to {show_number(high)}" if high is not None else "larger"
+            )
+            raise self.fail(f"{key}.value", "outside what is possible", f"It must be {allowed}")
+        return value
+
+    def maybe(self, key: str, kind: str, *, zero: bool = False) -> float | None:
+        return self.number(key, kind, zero=zero) if self.has(key) else None
+
+    def share(self, key: str, *, zero: bool = False) -> float:
+        return self.number(key, "share", low=0.0, high=1.0, zero=zero)
+
+    def span(self, key: str, kind: str, *, zero: bool = False) -> tuple[float, float]:
+        """A range, low before high."""
+        low, high = self._numbers(key, kind, 2, zero)
+        if low > high:
+            raise self.fail(
+                f"{key}.value", "the first is larger than the second", "Write the lower end first"
+            )
+        return low, high
+
+    def pair(self, key: str, kind: str) -> tuple[float, float]:
+        first, second = self._numbers(key, kind, 2, False)
+        return first, second
+
+    def several(self, key: str, kind: str) -> tuple[float, ...]:
+        return self._numbers(key, kind, None, False)
+
+    def statement(self, key: str) -> str:
+        """A sourced sentence."""
+        entry = self.fact(key)
+        value = entry.get("value")
+        if not isinstance(value, str) or not value.strip():
+            raise self.fail(f"{key}.value", "missing or empty", "Write the sentence")
+        self._record(key, entry, value, "")
+        return value
+
+    def statements(self, key: str) -> tuple[str, ...]:
+        """A sourced list of words."""
+        entry = self.fact(key)
+        value = entry.get("value")
+        if (
+            not isinstance(value, list)
+            or not value
+            or not all(isinstance(v, str) and v.strip() for v in value)
+        ):
+            raise self.fail(f"{key}.value", "not a list of texts", 'Write ["...", "..."]')
+        self._record(key, entry, tuple(value), "")
+        return tuple(value)
+
+    # structure
+
+    def table(self, key: str) -> Table:
+        value = self._take(key)
+        if not isinstance(value, dict):
+            raise self.fail(key, "not a table", f"Write it under [{self.at(key)}]")
+        return Table(self.file, self.at(key), value, self.facts)
+
+    def each(self, key: str, read: Callable[[str, Table], T]) -> dict[str, T]:
+        """Every table below `key`, in the order of the file."""
+        if not self.has(key):
+            return {}
+        outer = self.table(key)
+        found = {}
+        for name in outer.data:
+            inner = outer.table(name)
+            found[name] = read(name, inner)
+            inner.done()
+        return found
+
+    def done(self) -> None:
+        """Refuses whatever was not asked for."""
+        for key in self.data:
+            if key not in self.known:
+                near = difflib.get_close_matches(key, self.known, n=1)
+                fix = f'Did you mean "{near[0]}"' if near else "Take it out"
+                raise DrugFileError(
+                    f"{self.file}, {self.at(key)}: unknown entry. {fix}{'?' if near else '.'}"
+                )
+
+
+def drug_names() -> tuple[str, ...]:
+    """The drugs there is a file for."""
+    folder = resources.files("pkcalc.drugs")
+    return tuple(sorted(p.name[:-5] for p in folder.iterdir() if p.name.endswith(".toml")))
+
+
+@cache
+def load_profile(name: str) -> Profile:
+    """The profile of one drug, checked. An unknown name is the user's slip; a bad file is a maintainer's."""
+    if name not in drug_names():
+        near = difflib.get_close_matches(name, drug_names(), n=1, cutoff=0.5)
+        fix = f'Did you mean "{near[0]}"?' if near else "Choose one of these"
+        raise CaseError(Problem("Drug", f'"{name[:40]}" was given', ", ".join(drug_names()), fix))
+    text = resources.files("pkcalc.drugs").joinpath(f"{name}.toml").read_text(encoding="utf-8")
+    return parse_profile(text, f"{name}.toml")
+
+
+def parse_profile(text: str, file: str) -> Profile:
+    """One drug file. Refuses missing, unsourced, unknown and impossible entries, naming file, key and fix."""
+    try:
+        data = tomllib.loads(text)
+    except tomllib.TOMLDecodeError as error:
+        raise DrugFileError(f"{file}: the file is not valid TOML ({error}). Mend it there.") from None
+    facts: dict[str, Fact] = {}
+    top = Table(file, "", data, facts)
+    forms = top.each("form", _form)
+    if not forms:
+        raise top.fail("form", "missing", "Add at least one form")
+    products = top.each("product", lambda name, t: _product(name, t, forms))
+    shelves = top.each("shelf", lambda name, t: _shelf(name, t, products))
+    modifiers = top.each("modifier", _modifier)
+    weight_rule = _weight_rule(top.table("weight_rule")) if top.has("weight_rule") else None
+    populations = top.each("population", lambda name, t: _population(name, t, modifiers, weight_rule))
+    if not any(p.default for p in populations.values()):
+        raise top.fail("population", "none is the default", "Mark one with default = true")
+    drug = top.table("drug")
+    scope = cast(Scope, drug.choice("scope", SCOPES))
+    profile = Profile(
+        id=drug.text("id"),
+        name=drug.text("name"),
+        names=drug.texts("names"),
+        scope=scope,
+        scope_reason=drug.text("scope_reason"),
+        authority=drug.text("authority"),
+        time_unit=cast(Literal["day", "h"], drug.choice("time_unit", ("day", "h"))),
+        level_units=drug.texts("level_units"),
+        molar_mass_g_per_mol=drug.number("molar_mass", "molar mass"),
+        youngest_years=drug.number("youngest", "age", zero=True),
+        forms=forms,
+        products=products,
+        shelves=shelves,
+        target=_target(top.table("target")),
+        level_gates_mg_per_L=_gates(top.table("level_gate")),
+        spread=_spread(top.table("spread")),
+        binding=_binding(top.table("binding")) if top.has("binding") else None,
+        populations=populations,
+        modifiers=modifiers,
+        weight_rule=weight_rule,
+        loading=_loading(top.table("loading"), forms) if top.has("loading") else None,
+        limits=_limits(top.table("limits"), forms) if top.has("limits") else None,
+        sampling=_sampling(top.table("sampling")),
+        plausible=tuple(top.each("plausible", _plausible).values()),
+        interactions=_interactions(top.table("interactions")),
+        codes=tuple(top.each("code", _code).values()),
+        dialysis_L_per_day=_dialysis(top.table("dialysis")) if top.has("dialysis") else None,
+        cautions=cast(Mapping[str, Any], top.data.get("caution", {}) if top.has("caution") else {}),
+        facts=facts,
+        file=file,
+        sha256=hashlib.sha256(text.encode()).hexdigest(),
+    )
+    drug.done()
+    top.done()
+    _consistent(profile, top)
+    return profile
+
+
+def _consistent(profile: Profile, top: Table) -> None:
+    """What one entry alone cannot show."""
+    if profile.id != profile.file.removesuffix(".toml"):
+        raise top.fail("drug.id", f'"{profile.id}" was found', "It must be the name of the file")
+    for label in profile.level_units:
+        if label not in FACTORS["level"]:
+            raise top.fail("drug.level_units", f'"{label}" was found', "Use units of a level only")
+    if not profile.plausible:
+        raise top.fail("plausible", "missing", "Add the published ranges of Vmax per kg and Km")
+    spans = sorted(p.ages_years for p in profile.populations.values() if p.default)
+    for (_, end), (start, _) in zip(spans, spans[1:], strict=False):
+        if end != start:
+            raise top.fail(
+                "population",
+                f"the default populations leave a gap or overlap at {end} years",
+                "Make their ages meet",
+            )
+    if spans[0][0] > profile.youngest_years:
+        raise top.fail("drug.youngest", "younger than any default population", "Make them meet")
+
+
+def _form(name: str, t: Table) -> Form:
+    generic = t.switch("generic")
+    release = cast(
+        Literal["prompt", "extended", "intravenous", "none"],
+        t.choice("release", ("prompt", "extended", "intravenous", "none")),
+    )
+    absorbed = release in ("prompt", "extended")
+    refused = t.table("refused_route") if t.has("refused_route") else None
+    routes_refused = {key: refused.statement(key) for key in refused.data} if refused else {}
+    bioavailability = t.share("bioavailability")
+    span = t.span("bioavailability_range", "share")
+    if not span[0] <= bioavailability <= span[1]:
+        raise t.fail("bioavailability", "outside its own range", "Mend one of the two")
+    return Form(
+        id=name,
+        words=t.text("words"),
+        salt=t.text("salt"),
+        amount_unit=t.choice("amount_unit", ("mg", "mg PE", "g", "mL")),
+        salt_factor=t.share("salt_factor"),
+        bioavailability=bioavailability,
+        bioavailability_range=span,
+        routes=t.texts("routes"),
+        absorption=_absorption(t.table("absorption")) if absorbed else None,
+        release=release,
+        generic=generic,
+        intervals_h=() if generic else t.several("intervals", "interval"),
+        largest_dose_mg=t.number("largest_dose", "amount"),
+        refused_routes=routes_refused,
+        conversion_half_life_h=None if (half := t.maybe("conversion_half_life", "duration")) is None else half * 24,
+    )
+
+
+def _absorption(t: Table) -> Absorption:
+    found = Absorption(
+        ka_per_day=t.number("ka", "rate constant"),
+        lag_day=t.number("lag", "duration", zero=True),
+        release_day=t.number("release", "duration", zero=True),
+        peak_h=t.span("peak", "interval"),
+    )
+    t.done()
+    return found
+
+
+def _product(name: str, t: Table, forms: Mapping[str, Form]) -> Product:
+    form = t.text("form")
+    if form not in forms or forms[form].generic:
+        raise t.fail("form", f'"{form}" is not a product form', "Name one of the forms above")
+    return Product(
+        id=name,
+        words=t.text("words"),
+        form=form,
+        unit=t.choice("unit", ("capsule", "tablet", "mL")),
+        mg_per_unit=t.number("strength", "strength"),
+        smallest_step=t.number("smallest_step", "ratio"),
+        containers_mL=t.several("containers", "fluid volume") if t.has("containers") else (),
+        strength_words=t.text("strength_words"),
+        exclusive_group=t.text("exclusive_group", ""),
+    )
+
+
+def _shelf(name: str, t: Table, products: Mapping[str, Product]) -> Shelf:
+    listed = t.statements("products")
+    for item in listed:
+        if item not in products:
+            raise t.fail(
+                "products", f'"{item}" is not a product of this file', "Add the product or mend its name"
+            )
+    groups = [products[i].exclusive_group for i in listed if products[i].exclusive_group]
+    if len(groups) != len(set(groups)):
+        raise t.fail(
+            "products",
+            "two strengths that must not be active together stand on one shelf",
+            "Take one of them out",
+        )
+    return Shelf(id=name, words=t.text("words"), products=listed)
+
+
+def _modifier(name: str, t: Table) -> Modifier:
+    found = Modifier(
+        id=name,
+        words=t.text("words"),
+        ages_years=t.span("ages", "age") if t.has("ages") else None,
+        question=t.text("question", ""),
+        vmax_factor=t.maybe("vmax_factor", "factor") or 1.0,
+        km_factor=t.maybe("km_factor", "factor") or 1.0,
+        vmax_mg_per_kg_day=t.maybe("vmax", "dose rate per weight"),
+        vmax_cv=t.maybe("vmax_cv", "share"),
+        km_cv=t.maybe("km_cv", "share"),
+        volume_cv=t.maybe("volume_cv", "share"),
+    )
+    t.has("describes") and t.statement("describes")
+    return found
+
+
+def _weight_rule(t: Table) -> WeightRule:
+    found = WeightRule(
+        obese_from=t.number("obese_from", "ratio", low=1.0),
+        vmax_excess_share=t.share("vmax_excess_share"),
+        volume_excess_factor=t.number("volume_excess_factor", "ratio"),
+        cap_without_height_kg=t.number("cap_without_height", "weight"),
+    )
+    t.done()
+    return found
+
+
+def _population(
+    name: str, t: Table, modifiers: Mapping[str, Modifier], weight_rule: WeightRule | None
+) -> Population:
+    wanted = t.texts("modifiers", ())
+    for item in wanted:
+        if item not in modifiers:
+            raise t.fail("modifiers", f'"{item}" is not a modifier of this file', "Add it or mend its name")
+    before = set(t.facts)
+    reference = t.number("reference_weight", "weight")
+    vmax = t.number("vmax", "vmax")
+    if t.data["vmax"]["unit"] in FACTORS["dose rate per weight"]:
+        vmax *= reference
+    if t.data.get("volume", {}).get("unit") != "L/kg" and t.has("volume"):
+        raise t.fail("volume.unit", "not per weight", "Write the volume in L/kg")
+    exponent = t.number("weight_exponent", "factor", high=1.0)
+    above = (
+        t.number("weight_exponent_above", "factor", high=1.0) if t.has("weight_exponent_above") else exponent
+    )
+    correlation = t._numbers("correlation", "correlation", 1, True)[0]
+    if not -1 < correlation < 1:
+        raise t.fail(
+            "correlation.value", "outside what is possible", "It must be between -1 and 1, ends excluded"
+        )
+    values = {
+        "ages_years": t.span("ages", "age", zero=True),
+        "km_mg_per_L": t.number("km", "level"),
+        "volume_L_per_kg": t.number("volume", "volume per weight"),
+        "vmax_cv": t.number("vmax_cv", "share", high=2.0),
+        "km_cv": t.number("km_cv", "share", high=2.0),
+        "volume_cv": t.number("volume_cv", "share", high=2.0),
+        "first_order_per_day": t.maybe("first_order", "rate constant", zero=True) or 0.0,
+    }
+    describes = t.statement("describes")
+    cited = dict.fromkeys(s for path, fact in t.facts.items() if path not in before for s in fact.sources)
+    return Population(
+        id=name,
+        words=t.text("words"),
+        describes=describes,
+        default=t.switch("default"),
+        vmax_at_reference_mg_per_day=vmax,
+        reference_weight_kg=reference,
+        exponent_below=exponent,
+        exponent_above=above,
+        correlation=correlation,
+        modifiers={m: modifiers[m] for m in wanted},
+        weight_rule=weight_rule,
+        sources=tuple(cited),
+        **cast(dict[str, Any], values),
+    )
+
+
+def _target(t: Table) -> Target:
+    low, high = t.span("range", "level")
+    aim, critical = t.number("aim", "level"), t.number("critical", "level")
+    if not low <= aim <= high <= critical:
+        raise t.fail(
+            "aim",
+            "aim, range and critical level are out of order",
+            "They must rise: low, aim, high, critical",
+        )
+    free = t.span("free_range", "level") if t.has("free_range") else None
+    found = Target(
+        basis=t.text("basis"),
+        low_mg_per_L=low,
+        high_mg_per_L=high,
+        aim_mg_per_L=aim,
+        critical_mg_per_L=critical,
+        free_low_mg_per_L=free[0] if free else None,
+        free_high_mg_per_L=free[1] if free else None,
+        free_critical_mg_per_L=t.maybe("free_critical", "level"),
+    )
+    t.each("note", lambda name, inner: inner.statement("text"))
+    t.done()
+    return found
+
+
+def _gates(t: Table) -> dict[str, tuple[float, float]]:
+    found = {"total": t.span("total", "level")}
+    if t.has("free"):
+        found["free"] = t.span("free", "level")
+    t.done()
+    return found
+
+
+_GIVERS = ("observed", "outpatient", "doubtful")
+
+
+def _spread(t: Table) -> Spread:
+    total, intake = t.table("total_cv"), t.table("intake_share")
+    found = Spread(
+        assay_cv=t.share("assay_cv"),
+        assay_cv_range=t.span("assay_cv_range", "share"),
+        total_cv={key: total.share(key) for key in _GIVERS},
+        intake_share={key: intake.share(key, zero=True) for key in _GIVERS},
+        wrong_level_chance=t.share("wrong_level_chance"),
+        wrong_level_factor=t.number("wrong_level_factor", "ratio", low=1.0),
+    )
+    total.done()
+    intake.done()
+    t.done()
+    return found
+
+
+def _binding(t: Table) -> Binding:
+    def alternative(name: str, inner: Table) -> Alternative:
+        value = inner.number("coefficient", "per albumin")
+        return Alternative(name, inner.text("words"), value, inner.facts[inner.at("coefficient")].status)
+
+    low, high = t.pair("renal_failure_coefficients", "per albumin")
+    found = Binding(
+        free_fraction=t.share("free_fraction"),
+        free_fraction_range=t.span("free_fraction_range", "share"),
+        albumin_coefficient=t.number("albumin_coefficient", "per albumin"),
+        constant=t.share("constant"),
+        correction_log_sd=log_sd(t.share("correction_cv")),
+        alternatives=tuple(t.each("alternative", alternative).values()),
+        renal_failure_coefficients=(low, high),
+        renal_failure_mL_per_min=t.number("renal_failure_below", "clearance") / 1.44,
+        renal_grey_mL_per_min=t.number("renal_grey_below", "clearance") / 1.44,
+        albumin_gate_g_per_L=t.span("albumin_gate", "albumin"),
+        albumin_oldest_h=t.number("albumin_oldest", "interval"),
+        albumin_bcg_minus_bcp_g_per_L=t.number("albumin_bcg_minus_bcp", "albumin"),
+        valproate_fraction=_line(t.table("valproate_fraction")),
+        valproate_free=_line(t.table("valproate_free")),
+    )
+    t.done()
+    return found
+
+
+def _line(t: Table) -> tuple[float, float]:
+    """A straight line: intercept (free fraction without the other drug) and slope per mg/L of it."""
+    found = t.share("intercept"), t.number("slope", "per level")
+    t.done()
+    return found
+
+
+def _loading(t: Table, forms: Mapping[str, Form]) -> Loading:
+    def named(inner: Table) -> str:
+        form = inner.text("form")
+        if form not in forms:
+            raise inner.fail("form", f'"{form}" is not a form of this file', "Name one of the forms above")
+        return form
+
+    def cap(name: str, inner: Table) -> RateCap:
+        return RateCap(
+            form=named(inner),
+            group=inner.choice("group", ("adult", "child", "risk")),
+            words=inner.text("words"),
+            mg_per_min=inner.number("rate", "dose rate") / 1440,
+            mg_per_kg_min=None
+            if (x := inner.maybe("rate_per_weight", "dose rate per weight")) is None
+            else x / 1440,
+        )
+
+    def line(name: str, inner: Table) -> IvLine:
+        return IvLine(
+            form=named(inner),
+            diluent=inner.statement("diluent"),
+            concentration_mg_per_mL=inner.span("concentration", "strength"),
+            filter=inner.statement("filter"),
+            monitoring=inner.statement("monitoring"),
+            contraindications=inner.statements("contraindications"),
+            watch=inner.statement("watch"),
+        )
+
+    oral = None
+    if t.has("oral"):
+        o = t.table("oral")
+        oral = OralLoad(
+            total_mg=o.number("total", "amount"),
+            parts_mg=o.several("parts", "amount"),
+            hours_apart=o.number("apart", "interval"),
+            largest_part_mg=o.number("largest_part", "amount"),
+            excluded=o.statements("excluded"),
+            setting=o.statement("setting"),
+            maintenance_after_h=o.number("maintenance_after", "interval"),
+        )
+        o.done()
+        if sum(oral.parts_mg) != oral.total_mg or max(oral.parts_mg) > oral.largest_part_mg:
+            raise o.fail("parts", "the parts do not fit the total or the largest part", "Mend the parts")
+    found = Loading(
+        mg_per_kg=t.span("per_weight", "amount per weight"),
+        status_mg_per_kg=t.span("status_per_weight", "amount per weight")
+        if t.has("status_per_weight")
+        else None,
+        largest_single_mg=t.number("largest_single", "amount"),
+        rate_caps=tuple(t.each("rate_cap", cap).values()),
+        oral=oral,
+        iv_lines={x.form: x for x in t.each("iv_line", line).values()},
+    )
+    t.done()
+    return found
+
+
+def _limits(t: Table, forms: Mapping[str, Form]) -> Limits:
+    edges, sizes = t.several("step_edges", "level"), t.several("step_sizes", "dose rate")
+    if len(sizes) != len(edges) + 1 or list(edges) != sorted(edges):
+        raise t.fail("step_sizes", "one more step than edges is needed, edges rising", "Mend the two lists")
+    step_form = t.text("step_form")
+    if step_form not in forms:
+        raise t.fail("step_form", f'"{step_form}" is not a form of this file', "Name one of the forms above")
+    found = Limits(
+        steps=tuple(StepBand(edge, size) for edge, size in zip((*edges, None), sizes, strict=True)),
+        largest_mg_per_day=t.number("largest_daily", "dose rate"),
+        largest_child_mg_per_day=t.maybe("largest_daily_child", "dose rate"),
+        step_form=step_form,
+        warn_too_high=t.share("warn_too_high"),
+        stop_too_high=t.share("stop_too_high"),
+    )
+    t.done()
+    return found
+
+
+def _sampling(t: Table) -> Sampling:
+    found = Sampling(
+        after_iv_h=t.number("after_iv", "interval"),
+        after_im_h=t.number("after_im", "interval"),
+        after_oral_load_h=t.number("after_oral_load", "interval"),
+        steady_wait_days=t.span("steady_wait", "duration"),
+    )
+    t.done()
+    return found
+
+
+def _plausible(name: str, t: Table) -> Plausible:
+    return Plausible(
+        ages_years=t.span("ages", "age", zero=True),
+        vmax_mg_per_kg_day=t.span("vmax", "dose rate per weight"),
+        km_mg_per_L=t.span("km", "level"),
+    )
+
+
+def _interactions(t: Table) -> Interactions:
+    found = Interactions(
+        raising=t.statements("raising") if t.has("raising") else (),
+        lowering=t.statements("lowering") if t.has("lowering") else (),
+        either=t.statements("either") if t.has("either") else (),
+        wait_days=t.number("wait", "duration"),
+    )
+    t.done()
+    return found
+
+
+def _code(name: str, t: Table) -> Code:
+    return Code(
+        code=t.statement("code"),
+        display=t.text("display"),
+        measures=t.text("measures"),
+        unit_kind=cast(Literal["mass", "moles", "share"], t.choice("unit_kind", ("mass", "moles", "share"))),
+    )
+
+
+def _dialysis(t: Table) -> tuple[float, float, float]:
+    low, high = t.span("range", "clearance")
+    middle = t.number("clearance", "clearance", low=low, high=high)
+    t.done()
+    return low, middle, high
+
+
+# Printing ----------------------------------------------------------------------------------------------------
+
+
+def describe(profile: Profile) -> str:
+    """Everything we know about a drug and where each number comes from, as text."""
+    lines = [
+        f"{profile.name}: {profile.scope}",
+        profile.scope_reason,
+        f"Authority: {profile.authority}",
+        f"File {profile.file}, SHA-256 {profile.sha256[:16]}",
+        "",
+    ]
+    last = ""
+    for path, fact in profile.facts.items():
+        head, _, rest = path.partition(".")
+        if head != last:
+            lines += ([""] if last else []) + [head.replace("_", " ")]
+            last = head
+        cited = ", ".join(fact.sources)
+        lines.append(f"  {rest.replace('_', ' ')}: {fact.shown}  [{fact.status}: {cited}; {fact.where}]")
+        if fact.derivation:
+            lines.append(f"      derivation: {fact.derivation}")
+    lines += ["", "Sources"]
+    lines += [f"  {s.key}: {s.citation}" for s in profile.sources_used()]
+    return "\n".join(lines) + "\n"
