@@ -1,0 +1,454 @@
+"""The estimate from the whole record: what the population says, and every level, at steady state or not.
+
+The course of the amount depends on (Vmax, kappa = Km V) alone, so a two-dimensional grid carries it; the volume
+shifts every log level and is integrated out analytically (`error_model`, `grid`). A second, shifted grid of other
+size certifies the first: where they disagree the grid grows, and where they still disagree the estimate says that
+it cannot be trusted.
+
+Vmax is the patient's Vmax relative to the record: where a share of the doses is missed all along, it is the Vmax
+that explains the levels with the doses as recorded.
+"""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass, replace
+
+import numpy as np
+from numpy.typing import NDArray
+
+from pkcalc import flow, formulas
+from pkcalc.drugs.profile import Prior
+from pkcalc.errors import CannotEstimate, CaseError, Problem
+from pkcalc.estimate.error_model import (
+    Components,
+    LevelData,
+    RecordSpread,
+    censored_parts,
+    covariance,
+    gaussian_parts,
+    intake_windows,
+)
+from pkcalc.estimate.grid import (
+    EDGE_MASS,
+    EFFECTIVE_NODES,
+    Frame,
+    Marginal,
+    Quadrature,
+    draw,
+    lay,
+    mixture_quantiles,
+    scout,
+    settle,
+    sobol,
+    vmax_marginal,
+)
+from pkcalc.estimate.result import Band, Estimate, LevelFit, Point, band, log_correlation
+from pkcalc.record import Before, Dose, FirstOrder, Record
+from pkcalc.units import show, show_number
+
+Floats = NDArray[np.float64]
+
+WHOLE_RECORD = "whole record"
+BEFORE_ANY_LEVEL = "before any level"
+
+#: Grids tried in turn: nodes per axis of the answer, and of its certificate.
+SIZES = ((48, 38), (72, 57), (108, 86), (160, 128))
+CERTIFICATE_REACH = 5.3
+
+#: The certificate: largest relative difference of a 5, 50 or 95 % point, and absolute one of the chance of no
+#: steady state.
+QUANTILE_TOLERANCE = 0.005
+CHANCE_TOLERANCE = 0.002
+
+#: Outside what the smallest grid was certified for: the next one is used from the start.
+WIDEST_LOG_SD = {"vmax": 0.56, "km": 0.90, "volume": 0.48}
+SMALLEST_LEVEL_SD = 0.02
+
+#: How much of an earlier regimen is written out dose by dose, so that its last weeks may differ from the record.
+WRITTEN_OUT_DAY = 40.0
+
+#: A standardised residual beyond this is reported as a level that does not fit.
+MISFIT = 2.0
+
+_PROBABILITIES = (0.05, 0.5, 0.95)
+
+
+# ------------------------------------------------------------------------------------------------ the population
+
+
+def prior_moments(prior: Prior) -> tuple[Floats, Floats]:
+    """Mean and covariance of (log Vmax, log Km, log V)."""
+    mean = np.log([prior.vmax_mg_per_day, prior.km_mg_per_L, prior.volume_L])
+    sd = np.array([prior.vmax_log_sd, prior.km_log_sd, prior.volume_log_sd])
+    cov = np.diag(sd**2)
+    cov[0, 1] = cov[1, 0] = prior.correlation * sd[0] * sd[1]
+    return mean, cov
+
+
+def prior_only(prior: Prior, n: int = 2048) -> Estimate:
+    """What the population alone says about this patient: equal-weight draws of (Vmax, Km, V).
+
+    The draws lie along a Sobol sequence, so the same population gives the same bits. n: number of draws.
+    """
+    from scipy.special import ndtri
+
+    mean, cov = prior_moments(prior)
+    draws = np.exp(mean + ndtri(sobol(n)) @ np.linalg.cholesky(cov).T)
+    vmax, km, volume = draws.T
+    weights = np.full(n, 1.0 / n)
+    z = ndtri(0.95)
+    sd = np.sqrt(np.diag(cov))
+    bands = [
+        Band(*(float(np.exp(m + x * s)) for x in (0.0, -z, z))) for m, s in zip(mean, sd, strict=True)
+    ]
+    return Estimate(
+        method=BEFORE_ANY_LEVEL,
+        vmax_mg_per_day=vmax,
+        km_mg_per_L=km,
+        volume_L=volume,
+        weights=weights,
+        point=Point(bands[0].median, bands[1].median, bands[2].median, "posterior median"),
+        summary=dict(zip(("vmax_mg_per_day", "km_mg_per_L", "volume_L"), bands, strict=True)),
+        correlation=prior.correlation,
+        volume_from="population",
+        diagnostics={"population": prior.population, "levels": 0},
+    )
+
+
+@dataclass(frozen=True)
+class _Volume:
+    """The prior as (log Vmax, log kappa), and log V given them: mean = at + slope . (point - centre), variance."""
+
+    centre: Floats
+    cov: Floats
+    at: float
+    slope: Floats
+    variance: float
+
+    @staticmethod
+    def of(prior: Prior) -> _Volume:
+        mean, cov = prior_moments(prior)
+        turn = np.array([[1.0, 0.0, 0.0], [0.0, 1.0, 1.0], [0.0, 0.0, 1.0]])
+        m, c = turn @ mean, turn @ cov @ turn.T
+        slope = np.linalg.solve(c[:2, :2], c[:2, 2])
+        return _Volume(m[:2], c[:2, :2], float(m[2]), slope, float(c[2, 2] - c[:2, 2] @ slope))
+
+    def log_volume(self, a: Floats, k: Floats) -> Floats:
+        """l0: mean of log V given log Vmax and log kappa."""
+        found: Floats = self.at + self.slope[0] * (a - self.centre[0]) + self.slope[1] * (k - self.centre[1])
+        return found
+
+    def log_density(self, a: Floats, k: Floats) -> Floats:
+        """Log prior density of (log Vmax, log kappa)."""
+        off = np.stack([a - self.centre[0], k - self.centre[1]])
+        square = np.sum(off * np.linalg.solve(self.cov, off), axis=0)
+        found: Floats = -0.5 * (square + math.log(np.linalg.det(self.cov)) + 2 * math.log(2 * math.pi))
+        return found
+
+
+# ------------------------------------------------------------------------------------------------ the model
+
+
+@dataclass(frozen=True)
+class _Model:
+    """Everything a node needs: record with its earlier regimen written out, levels, windows, prior."""
+
+    record: Record
+    levels: tuple[LevelData, ...]
+    spread: RecordSpread
+    windows: tuple[tuple[float, float], ...]
+    window_variance: Floats
+    volume: _Volume
+    fastest_per_day: float
+
+    def courses(self, a: Floats, k: Floats) -> tuple[Floats, Floats]:
+        """log amounts (nodes, m) and sensitivities to the intake (nodes, m, windows)."""
+        times = [x.time_day for x in self.levels]
+        vmax, kappa = np.exp(a), np.exp(k)
+        volume = np.exp(self.volume.log_volume(a, k))
+        amount = flow.amounts(self.record, times, vmax, kappa, volume_L=volume)
+        if not np.all(amount > 0):
+            late = [x for x, ok in zip(self.levels, np.all(amount > 0, axis=0), strict=True) if not ok][0]
+            raise CaseError(
+                Problem(
+                    f"Level {late.index + 1}",
+                    f"{show(late.level_mg_per_L, 'mg/L')} was measured when, by the record, nothing had been "
+                    "absorbed yet",
+                    "a level after the first recorded dose",
+                    "Add the earlier doses (a load, another hospital), or check the time of the draw",
+                )
+            )
+        if self.windows:
+            gain = flow.sensitivity(self.record, times, self.windows, vmax, kappa, volume_L=volume)
+        else:
+            gain = np.zeros((len(a), len(times), 0))
+        return np.log(amount), gain
+
+    def parts(self, log_amount: Floats, gain: Floats, log_volume: Floats) -> Components:
+        """The log volume as a mixture at every node, with the likelihood in its weights."""
+        own = np.array([x.own_variance for x in self.levels])
+        observed = np.log([x.level_mg_per_L for x in self.levels])
+        residual = log_amount - observed - log_volume[:, None]
+        cov = covariance(own, gain, self.window_variance)
+        censored = [x.censored for x in self.levels]
+        if any(censored):
+            return censored_parts(residual, cov, self.volume.variance, self.spread, censored)
+        return gaussian_parts(residual, cov, self.volume.variance, self.spread)
+
+    def density(self, a: Floats, k: Floats) -> tuple[Floats, Components]:
+        """Log posterior density of the nodes (not normalised) and their mixtures."""
+        log_amount, gain = self.courses(a, k)
+        parts = self.parts(log_amount, gain, self.volume.log_volume(a, k))
+        return self.volume.log_density(a, k) + parts.log_total, parts
+
+    def scouting(self, a: Floats, k: Floats) -> tuple[Floats, Components]:
+        """As `density`, with the fastest corner of the prior slowed down: it only has to be found empty."""
+        return self.density(a, np.maximum(k, a - math.log(4 * self.fastest_per_day)))
+
+
+def written_out(record: Record) -> Record:
+    """The record with the last weeks of an earlier regimen as single doses, so that their intake may differ."""
+    if record.before is None or record.start_mg is not None:
+        return record
+    regimen = record.before.regimen
+    whole = max(1, round(record.before.for_day / regimen.cycle_day))
+    cycles = min(whole, math.ceil(WRITTEN_OUT_DAY / regimen.cycle_day))
+    left = (whole - cycles) * regimen.cycle_day
+    return replace(
+        record,
+        doses=regimen.cycles(-cycles, 0, record.start_day) + record.doses,
+        start_day=record.start_day - cycles * regimen.cycle_day,
+        before=Before(regimen, left) if left > 0 else None,
+    )
+
+
+def _model(record: Record, levels: Sequence[LevelData], prior: Prior, spread: RecordSpread) -> _Model:
+    _check(record, levels)
+    full = written_out(record)
+    if prior.first_order_per_day > 0 and not any(p.start_day == -math.inf for p in full.first_order):
+        full = replace(full, first_order=(*full.first_order, FirstOrder(rate_per_day=prior.first_order_per_day)))
+    windows, variance = intake_windows(full.doses, [x.time_day for x in levels], spread)
+    volume = _Volume.of(prior)
+    drift = np.array([1.0, -1.0])
+    sd = math.sqrt(float(drift @ volume.cov @ drift))
+    fastest = math.exp(float(drift @ volume.centre) + 2.326 * sd)
+    return _Model(full, tuple(levels), spread, windows, variance, volume, fastest)
+
+
+def _check(record: Record, levels: Sequence[LevelData]) -> None:
+    if not record.doses and record.before is None and not record.start_mg:
+        raise CaseError(
+            Problem(
+                "Dosing record",
+                "no dose was given",
+                "at least one dose, or the regimen taken until now",
+                "Add what was given before the levels",
+            )
+        )
+    found = [
+        Problem(
+            f"Level {x.index + 1}, time",
+            f"drawn {show(record.start_day - x.time_day, 'days', 3)} before the record begins",
+            "a draw after the record begins",
+            "Begin the record earlier, or check the date of the draw",
+        )
+        for x in levels
+        if x.time_day < record.start_day
+    ]
+    if found:
+        raise CaseError(found)
+
+
+# ------------------------------------------------------------------------------------------------ the estimate
+
+
+def from_record(
+    record: Record,
+    levels: Sequence[LevelData],
+    prior: Prior,
+    spread: RecordSpread,
+    *,
+    n: int = 2048,
+    rates_mg_per_day: Sequence[float] = (),
+) -> Estimate:
+    """Vmax, Km and V of this patient from the population and every level of the record.
+
+        p(Vmax, Km, V | levels) ~ p(Vmax, Km, V) x p(levels | record, Vmax, Km, V)
+
+    record: what was given. levels: on the working basis. prior: the population at this patient. spread: how far
+    the record and the levels are believed. n: number of equal-weight draws. rates_mg_per_day: dose rates of active
+    drug whose chance of no steady state is to be certified and reported (the regimens in question).
+
+    Returns an Estimate (method "whole record"; "before any level" where there are none). Its diagnostics hold
+    "no_steady_state" (rate -> chance), "effective_nodes", "grid", "certificate" (largest relative quantile
+    difference), "wrong_level" (level index -> chance that it is wrong), "assumes" (words for the note).
+    Raises CaseError for a level that the record cannot explain (before its beginning, before any dose).
+    """
+    if not levels:
+        estimate = prior_only(prior, n)
+        chances = {r: _normal_chance(prior, r) for r in rates_mg_per_day}
+        return replace(estimate, diagnostics={**estimate.diagnostics, "no_steady_state": chances})
+    model = _model(record, levels, prior, spread)
+    answer, marginal, report = _certified(model, prior, rates_mg_per_day)
+    a, k, u = draw(answer, n)
+    log_volume = model.volume.log_volume(a, k) + u
+    vmax, km, volume = np.exp(a), np.exp(k - log_volume), np.exp(log_volume)
+    weights = np.full(n, 1.0 / n)
+    bands = {key: Band(v[1], v[0], v[2]) for key, v in report.quantiles.items()}
+    before = prior_moments(prior)[1][2, 2]
+    learned = float(np.var(log_volume)) < 0.81 * before
+    return Estimate(
+        method=WHOLE_RECORD,
+        vmax_mg_per_day=vmax,
+        km_mg_per_L=km,
+        volume_L=volume,
+        weights=weights,
+        point=Point(*(bands[key].median for key in bands), kind="posterior median"),
+        summary=bands,
+        correlation=log_correlation(vmax, km, weights),
+        volume_from="record" if learned else "population",
+        fit=_fit(model, answer),
+        diagnostics={
+            "population": prior.population,
+            "levels": len(levels),
+            "assumes": spread.words,
+            "grid": report.nodes,
+            "effective_nodes": answer.effective_nodes,
+            "certificate": report.difference,
+            "no_steady_state": report.chances,
+            "wrong_level": _wrong_level(model, answer),
+            "log_evidence": _log_evidence(answer),
+        },
+        trusted=not report.distrust,
+        distrust=report.distrust,
+    )
+
+
+@dataclass(frozen=True)
+class _Report:
+    """What one grid says: 5, 50, 95 % points by quantity, chances of no steady state by rate; and the certificate."""
+
+    quantiles: Mapping[str, tuple[float, float, float]]
+    chances: Mapping[float, float]
+    nodes: int = 0
+    difference: float = math.nan
+    distrust: str = ""
+
+
+def _certified(
+    model: _Model, prior: Prior, rates: Sequence[float]
+) -> tuple[Quadrature, Marginal, _Report]:
+    """The smallest grid whose answer a second, shifted grid repeats; the largest one, distrusted, if none does."""
+    frame = scout(Frame.of(model.volume.centre, model.volume.cov), model.scouting)
+    wide = (
+        prior.vmax_log_sd > WIDEST_LOG_SD["vmax"]
+        or prior.km_log_sd > WIDEST_LOG_SD["km"]
+        or prior.volume_log_sd > WIDEST_LOG_SD["volume"]
+        or min(x.own_variance for x in model.levels) < SMALLEST_LEVEL_SD**2
+    )
+    for n, check in SIZES[1:] if wide else SIZES:
+        q = settle(frame, model.density, n=n)
+        report, marginal = _report(model, q, rates)
+        second = lay(q.frame, reach=CERTIFICATE_REACH * q.axis[-1] / 6.0, n=check, density=model.density)
+        other, _ = _report(model, second, rates)
+        difference = max(
+            abs(x / y - 1)
+            for key, values in report.quantiles.items()
+            for x, y in zip(values, other.quantiles[key], strict=True)
+        )
+        chance = max((abs(report.chances[r] - other.chances[r]) for r in rates), default=0.0)
+        reasons = []
+        if not difference <= QUANTILE_TOLERANCE or not chance <= CHANCE_TOLERANCE:
+            reasons.append("two independent calculations of it differ by more than 0.5 %")
+        if q.edge_mass > 100 * EDGE_MASS or q.effective_nodes <= EFFECTIVE_NODES:
+            reasons.append("the calculation does not resolve the values that remain possible")
+        distrust = "This estimate cannot be trusted: " + " and ".join(reasons) + "." if reasons else ""
+        report = replace(report, nodes=n, difference=difference, distrust=distrust)
+        if not reasons:
+            break
+        frame = Frame.of(*q.moments()) if q.effective_nodes > EFFECTIVE_NODES else q.frame
+    return q, marginal, report
+
+
+def _report(model: _Model, q: Quadrature, rates: Sequence[float]) -> tuple[_Report, Marginal]:
+    marginal = vmax_marginal(q)
+    a, k = q.log_vmax.ravel()[:, None], q.log_kappa.ravel()[:, None]
+    weights = q.part_weights.ravel()
+    log_volume = model.volume.log_volume(a, k) + q.parts.mean
+    variance = q.parts.variance.ravel()
+    vmax = np.exp(marginal.quantiles(np.array(_PROBABILITIES)))
+    km = np.exp(mixture_quantiles(weights, (k - log_volume).ravel(), variance, _PROBABILITIES))
+    volume = np.exp(mixture_quantiles(weights, log_volume.ravel(), variance, _PROBABILITIES))
+    found = {
+        key: (float(v[0]), float(v[1]), float(v[2]))
+        for key, v in (("vmax_mg_per_day", vmax), ("km_mg_per_L", km), ("volume_L", volume))
+    }
+    chances = {float(r): marginal.chance_up_to(math.log(r)) for r in rates}
+    return _Report(found, chances), marginal
+
+
+def _fit(model: _Model, q: Quadrature) -> tuple[LevelFit, ...]:
+    """Every level against the estimate, and how many of its spreads it lies from what the others predict.
+
+    The residual is of the level left out: the nodes are reweighted by what they say without it.
+    """
+    a, k = q.log_vmax.ravel(), q.log_kappa.ravel()
+    log_amount, gain = model.courses(a, k)
+    l0 = model.volume.log_volume(a, k)
+    weights = q.part_weights
+    own = np.array([x.own_variance for x in model.levels])
+    cov = covariance(own, gain, model.window_variance)
+    prior = model.volume.log_density(a, k)
+    found = []
+    for j, level in enumerate(model.levels):
+        centre = log_amount[:, j][:, None] - l0[:, None] - q.parts.mean
+        at = np.exp(mixture_quantiles(weights.ravel(), centre.ravel(), q.parts.variance.ravel(), _PROBABILITIES))
+        residual = _left_out(model, j, log_amount, gain, l0, cov[:, j, j], prior)
+        found.append(LevelFit(level.index, level.level_mg_per_L, Band(at[1], at[0], at[2]), residual))
+    return tuple(found)
+
+
+def _left_out(
+    model: _Model, j: int, log_amount: Floats, gain: Floats, l0: Floats, variance: Floats, prior: Floats
+) -> float:
+    """(log level - its mean from the population and the other levels) / its spread from them, over the nodes."""
+    others = [i for i in range(len(model.levels)) if i != j]
+    if others:
+        rest = replace(model, levels=tuple(model.levels[i] for i in others))
+        parts = rest.parts(log_amount[:, others], gain[:, others], l0)
+    else:
+        nodes = len(l0)
+        parts = Components(np.zeros((nodes, 1)), np.zeros((nodes, 1)), np.full((nodes, 1), model.volume.variance))
+    log_w = prior[:, None] + parts.log_weight
+    w = np.exp(log_w - np.max(log_w))
+    w /= np.sum(w)
+    centre = log_amount[:, j][:, None] - l0[:, None] - parts.mean
+    mean = float(np.sum(w * centre))
+    spread = math.sqrt(float(np.sum(w * ((centre - mean) ** 2 + parts.variance + variance[:, None]))))
+    return (math.log(model.levels[j].level_mg_per_L) - mean) / spread
+
+
+def _wrong_level(model: _Model, q: Quadrature) -> dict[int, float]:
+    """Chance, by level, that it is the wrong one."""
+    weights = q.part_weights
+    m = len(model.levels)
+    per = weights.shape[1] // (m + 1) if model.spread.wrong_level_chance > 0 else weights.shape[1]
+    by_part = weights.sum(axis=0).reshape(-1, per).sum(axis=1)
+    return {x.index: float(by_part[j + 1]) if len(by_part) > 1 else 0.0 for j, x in enumerate(model.levels)}
+
+
+def _log_evidence(q: Quadrature) -> float:
+    """Log of the chance density of the levels under the population, up to nothing: comparable between records."""
+    step = q.axis[1] - q.axis[0]
+    top = float(np.max(q.log_density))
+    area = step**2 * q.frame.root[0, 0] * q.frame.root[1, 1]
+    return top + math.log(float(np.sum(np.exp(q.log_density - top))) * area)
+
+
+def _normal_chance(prior: Prior, rate_mg_per_day: float) -> float:
+    """Chance under the prior that Vmax is at most a rate."""
+    from scipy.special import ndtr
+
+    return float(ndtr((math.log(rate_mg_per_day) - math.log(prior.vmax_mg_per_day)) / prior.vmax_log_sd))
