@@ -67,7 +67,8 @@ def amounts(
     times_day: at or after the record's start. vmax_mg_per_day, kappa_mg (Km V): shape (n,) or single
     numbers, > 0. volume_L: needed only where a first-order path is given as a clearance. start_mg: amount
     at the record's start, in place of what the record says. accuracy: largest relative error about 3e-3
-    (everyday), 4e-5 (fine), 2e-7 (finest). Raises CaseError for times before the start and parameters that are not positive.
+    (everyday), 4e-5 (fine), 2e-7 (finest). Raises CaseError for times before the start, or parameters that are
+    not positive.
     """
     times = _times(record, times_day)
     vmax, kappa = _parameters(vmax_mg_per_day, kappa_mg)

@@ -78,20 +78,33 @@ def dose_rate_for_level(
     return rate[()]
 
 
-def sensitivity_at(
+def sensitivity_at(*, dose_rate_mg_per_day: ArrayLike, vmax_mg_per_day: ArrayLike) -> Floats:
+    """By how many per cent the steady level changes when the dose changes by 1 per cent.
+
+        d ln Css / d ln R = Vmax / (Vmax - R)
+
+    Returns a plain number: 1 for a drug without saturation, rising without end towards Vmax; +inf where there
+    is no steady state. Example: at R = Vmax/2, 1 % more dose is 2 % more level. Derived from the rate law.
+    """
+    r, vmax = _arrays(dose_rate_mg_per_day, vmax_mg_per_day)
+    with np.errstate(divide="ignore"):
+        value: Floats = np.where(r < vmax, vmax / np.where(r < vmax, vmax - r, 1.0), np.inf)
+    return value[()]
+
+
+def sensitivity_with_linear_path(
     *,
     dose_rate_mg_per_day: ArrayLike,
     vmax_mg_per_day: ArrayLike,
     km_mg_per_L: ArrayLike,
-    linear_clearance_L_per_day: ArrayLike = 0.0,
+    linear_clearance_L_per_day: ArrayLike,
 ) -> Floats:
-    """By how many per cent the steady level changes when the dose changes by 1 per cent.
+    """`sensitivity_at` with a parallel first-order path that is always open.
 
-        d ln Css / d ln R = Vmax / (Vmax - R)        with CL = 0; in general R / (Css dR/dC)
+        d ln Css / d ln R = (Vmax/(Km + C) + CL) / (Vmax Km/(Km + C)^2 + CL)    at C = Css
 
-    Returns a plain number: 1 for a drug without saturation, rising without end towards Vmax; +inf where
-    there is no steady state. Example: at R = Vmax/2, 1 % more dose is 2 % more level. Derived from the rate
-    law.
+    Returns a plain number, never below 1. Example: 1 for Vmax so small that only the linear path counts.
+    Derived from the rate law.
     """
     r, vmax, km, cl = _arrays(dose_rate_mg_per_day, vmax_mg_per_day, km_mg_per_L, linear_clearance_L_per_day)
     c = np.asarray(
@@ -99,11 +112,9 @@ def sensitivity_at(
             dose_rate_mg_per_day=r, vmax_mg_per_day=vmax, km_mg_per_L=km, linear_clearance_L_per_day=cl
         )
     )
-    with np.errstate(divide="ignore", invalid="ignore"):
-        saturable = vmax / (vmax - r)
-        # per unit of level: rate/level over slope
-        general = (vmax / (km + c) + cl) / (vmax * km / (km + c) ** 2 + cl)
-    value: Floats = np.where(cl > 0, general, np.where(r < vmax, saturable, np.inf))
+    exists = np.isfinite(c)
+    c = np.where(exists, c, 0.0)
+    value: Floats = np.where(exists, (vmax / (km + c) + cl) / (vmax * km / (km + c) ** 2 + cl), np.inf)
     return value[()]
 
 
@@ -582,3 +593,180 @@ def time_to_fall(
         km_mg_per_L=km_mg_per_L,
         volume_L=volume_L,
     )
+
+
+# ------------------------------------------------------------------------------------------------ binding
+
+
+def binding_denominator(
+    *, albumin_g_per_L: ArrayLike, coefficient_dL_per_g: ArrayLike, intercept: float = 0.1
+) -> Floats:
+    """What a total level at normal binding is multiplied by at this albumin, before any cap.
+
+        coefficient x albumin [g/dL] + 0.1
+
+    coefficient_dL_per_g: 0.2 in the published equation. Example: 1 at 45 g/L. Sheiner & Tozer 1978.
+    """
+    albumin, coefficient = _arrays(albumin_g_per_L, coefficient_dL_per_g)
+    value: Floats = coefficient * albumin / 10.0 + intercept
+    return value[()]
+
+
+def albumin_break_point(*, coefficient_dL_per_g: float, intercept: float = 0.1) -> float:
+    """Albumin [g/L] above which the binding equation corrects nothing: its denominator is 1 (45 for 0.2)."""
+    return 10.0 * (1.0 - intercept) / coefficient_dL_per_g
+
+
+def normalised_total(
+    *,
+    total_mg_per_L: ArrayLike,
+    albumin_g_per_L: ArrayLike,
+    coefficient_dL_per_g: ArrayLike,
+    intercept: float = 0.1,
+) -> Floats:
+    """The total level this patient would show at normal binding (a total level, never a free one).
+
+        C_norm = C / (coefficient x albumin [g/dL] + 0.1)   where the denominator is below 1, else C
+
+    Returns mg/L, never below the measured level. Not for end-stage renal failure or a displacing drug.
+    Example: 7 mg/L at 20 g/L becomes 14 mg/L. Sheiner & Tozer 1978.
+    """
+    total, denominator = _arrays(
+        total_mg_per_L,
+        binding_denominator(
+            albumin_g_per_L=albumin_g_per_L,
+            coefficient_dL_per_g=coefficient_dL_per_g,
+            intercept=intercept,
+        ),
+    )
+    value: Floats = total / np.minimum(denominator, 1.0)
+    return value[()]
+
+
+def normalised_from_free(*, free_mg_per_L: ArrayLike, free_fraction: ArrayLike) -> Floats:
+    """Total level at normal binding from a measured free level: free / (normal free fraction) [mg/L]."""
+    free, fraction = _arrays(free_mg_per_L, free_fraction)
+    value: Floats = free / fraction
+    return value[()]
+
+
+def free_with_valproate(*, total_mg_per_L: ArrayLike, valproate_mg_per_L: ArrayLike) -> dict[str, Floats]:
+    """Free level under valproate by the two published equations; they differ by about a quarter: show both.
+
+        Haidukewych 1989: free = (0.095 + 0.001 VPA) x total
+        May 1991:         free = 0.0792 x total + 0.000636 x total x VPA
+
+    Returns {"Haidukewych 1989": mg/L, "May 1991": mg/L}. Example: total 10 and valproate 80 mg/L give 1.75
+    and 1.30 mg/L.
+    """
+    total, displacer = _arrays(total_mg_per_L, valproate_mg_per_L)
+    first: Floats = (0.095 + 0.001 * displacer) * total
+    second: Floats = 0.0792 * total + 0.000636 * total * displacer
+    return {"Haidukewych 1989": first[()], "May 1991": second[()]}
+
+
+# ------------------------------------------------------------------------------------- weights and kidneys
+
+
+def ideal_body_weight(*, height_cm: ArrayLike, sex: Literal["female", "male"]) -> Floats:
+    """Ideal body weight: 50 kg (men) or 45.5 kg (women) and 2.3 kg for every inch over 60 [kg].
+
+    Below 60 inches (152.4 cm) the rule says nothing; the weight at 60 inches is returned.
+    Example: a man of 70 inches, 73 kg. Devine 1974 (from memory).
+    """
+    (height,) = _arrays(height_cm)
+    base = {"male": 50.0, "female": 45.5}[sex]
+    value: Floats = base + 2.3 * np.maximum(height / 2.54 - 60.0, 0.0)
+    return value[()]
+
+
+def weight_with_excess(
+    *, weight_kg: ArrayLike, ideal_weight_kg: ArrayLike, excess_factor: ArrayLike
+) -> Floats:
+    """Weight to which a volume per kg is applied in obesity: IBW + factor x (weight - IBW) [kg].
+
+    excess_factor: from the drug file (1.33 for a drug that spreads into fat). Below the ideal weight, the
+    weight itself. Example: 70 kg ideal, 100 kg actual, factor 1.33: 109.9 kg.
+    Abernethy & Greenblatt 1985 (from memory).
+    """
+    weight, ideal, factor = _arrays(weight_kg, ideal_weight_kg, excess_factor)
+    value: Floats = np.where(weight > ideal, ideal + factor * (weight - ideal), weight)
+    return value[()]
+
+
+def creatinine_clearance(
+    *,
+    age_years: ArrayLike,
+    weight_kg: ArrayLike,
+    creatinine_mg_per_dL: ArrayLike,
+    sex: Literal["female", "male"],
+) -> Floats:
+    """Creatinine clearance of an adult: (140 - age) x weight / (72 x creatinine), x 0.85 in women [mL/min].
+
+    age_years below 140; creatinine_mg_per_dL > 0. Example: a man of 40, 72 kg, 1 mg/dL: 100 mL/min.
+    Cockcroft & Gault 1976.
+    """
+    age, weight, creatinine = _arrays(age_years, weight_kg, creatinine_mg_per_dL)
+    value: Floats = (140.0 - age) * weight / (72.0 * creatinine) * (0.85 if sex == "female" else 1.0)
+    return value[()]
+
+
+# ------------------------------------------------------------------------------------- salts, loads, moles
+
+
+def active_amount(
+    *, amount_mg: ArrayLike, salt_factor: ArrayLike, bioavailability: ArrayLike = 1.0
+) -> Floats:
+    """Active drug that reaches the body from an amount of a product: amount x S x F [mg].
+
+    Example: 400 mg of a salt with S = 0.92 is 368 mg.
+    """
+    amount, s, f = _arrays(amount_mg, salt_factor, bioavailability)
+    value: Floats = amount * s * f
+    return value[()]
+
+
+def product_amount(
+    *, active_mg: ArrayLike, salt_factor: ArrayLike, bioavailability: ArrayLike = 1.0
+) -> Floats:
+    """Amount of a product that brings an amount of active drug into the body: active / (S F) [mg]."""
+    active, s, f = _arrays(active_mg, salt_factor, bioavailability)
+    value: Floats = active / (s * f)
+    return value[()]
+
+
+def level_rise(
+    *, amount_mg: ArrayLike, volume_L: ArrayLike, salt_factor: ArrayLike, bioavailability: ArrayLike = 1.0
+) -> Floats:
+    """By how much a rapid dose raises the level: amount x S x F / V [mg/L].
+
+    Example: 1,000 mg with S = 1 into 50 L, 20 mg/L. Elimination while it is given is neglected.
+    """
+    amount, volume, s, f = _arrays(amount_mg, volume_L, salt_factor, bioavailability)
+    value: Floats = amount * s * f / volume
+    return value[()]
+
+
+def top_up_amount(
+    *,
+    present_mg_per_L: ArrayLike,
+    aim_mg_per_L: ArrayLike,
+    volume_L: ArrayLike,
+    salt_factor: ArrayLike,
+    bioavailability: ArrayLike = 1.0,
+) -> Floats:
+    """Product amount that lifts the level from the present one to the aim: V (C_aim - C_now) / (S F) [mg].
+
+    A load is a top-up from 0. Returns 0 where the present level is at or above the aim.
+    Example: 70 kg at 0.7 L/kg from 8 to 15 mg/L with S = 1: 343 mg.
+    """
+    now, aim, volume, s, f = _arrays(present_mg_per_L, aim_mg_per_L, volume_L, salt_factor, bioavailability)
+    value: Floats = volume * np.maximum(aim - now, 0.0) / (s * f)
+    return value[()]
+
+
+def molar_level(*, level_mg_per_L: ArrayLike, molar_mass_g_per_mol: ArrayLike) -> Floats:
+    """A level in molar units: mg/L x 1000 / molar mass [umol/L]. Example: 1 mg/L at 250 g/mol is 4 umol/L."""
+    level, mass = _arrays(level_mg_per_L, molar_mass_g_per_mol)
+    value: Floats = level * 1000.0 / mass
+    return value[()]

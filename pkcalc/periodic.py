@@ -1,8 +1,8 @@
 """The periodic steady state of a repeated regimen, found directly: Newton's method on the map of one cycle.
 
 For any shape of input with D per cycle tau, the amount X(s) at every time of the cycle lies between x_b and
-x_b + D, where x_b = D / (e^((Vmax tau - D)/kappa) - 1) is the trough of one intravenous push per cycle. The map
-of one cycle is increasing and convex, so Newton's method from x_b rises to the answer without overshooting.
+x_b + D, where x_b = D / (e^((Vmax tau - D)/kappa) - 1) is the trough of one intravenous push per cycle. The
+map of one cycle is increasing and convex, so Newton's method from x_b rises to the answer without overshooting.
 """
 
 from __future__ import annotations

@@ -107,21 +107,36 @@ def settling(
         days = days_on_dose(case, o)
         if pair is None:
             found.append(
-                Settling(o.level.index, days, None, None, None, f"{name}: no single dose in force is stated for it.")
+                Settling(
+                    o.level.index,
+                    days,
+                    None,
+                    None,
+                    None,
+                    f"{name}: no single dose in force is stated for it.",
+                )
             )
             continue
         if days is None:
-            sentence = f"{name}: the start of its dose or the time of the draw is not stated, so nobody can tell."
+            sentence = (
+                f"{name}: the start of its dose or the time of the draw is not stated, so nobody can tell."
+            )
             found.append(Settling(o.level.index, None, None, None, None, sentence))
             continue
         if estimate is None or estimate.volume_L is None:
-            sentence = f"{name}: drawn {_days(days)} into its dose; without a weight no time to plateau follows."
+            sentence = (
+                f"{name}: drawn {_days(days)} into its dose; without a weight no time to plateau follows."
+            )
             found.append(Settling(o.level.index, days, None, None, None, sentence))
             continue
         start = _start_level(case, o, pairs, observations)
         fraction, needed = fraction_of_way(estimate, pair.rate_mg_per_day, days, start)
         settled = fraction.median >= SETTLED
-        need = _days(needed.median) if np.isfinite(needed.median) else "no time at all, as there is no steady state,"
+        need = (
+            _days(needed.median)
+            if np.isfinite(needed.median)
+            else "no time at all, as there is no steady state,"
+        )
         sentence = (
             f"{name}: drawn {_days(days)} into its dose, {show_number(100 * fraction.median, 2)} % of the way to the "
             f"plateau (90 % interval {show_number(100 * fraction.low, 2)} to {show_number(100 * fraction.high, 2)} %); "
@@ -165,7 +180,7 @@ def fraction_of_way(
         dose_rate_mg_per_day=rate_mg_per_day, vmax_mg_per_day=vmax, km_mg_per_L=km
     )
     level = formulas.level_after(
-        time_days=days,
+        time_day=days,
         start_mg_per_L=start_mg_per_L,
         dose_rate_mg_per_day=rate_mg_per_day,
         vmax_mg_per_day=vmax,
@@ -187,4 +202,3 @@ def fraction_of_way(
         start_mg_per_L=start_mg_per_L,
     )
     return band(fraction, estimate.weights), band(np.asarray(needed, dtype=np.float64), estimate.weights)
-
