@@ -20,7 +20,7 @@ _OPTIONAL = ("note",)
 
 @dataclass(frozen=True)
 class Source:
-    """One source. `where`: journal, volume and pages, or the kind of document. `status`: read, or from memory."""
+    """One source. `where`: journal, volume, pages, or kind of document. `status`: read, or from memory."""
 
     key: str
     authors: str

@@ -1,14 +1,15 @@
 """Drug knowledge as data: reads one TOML file per drug and refuses any number without a source.
 
-Every number of a drug file is `{ value, unit, source, where, status }`; a number of our own adds `derivation`.
-The loader turns them into plain floats in canonical units, named with their unit, and keeps each original as a
-`Fact` under its path ("binding.free_fraction"), so that notes and `pkcalc drugs` can say where it came from.
+Every number of a drug file is `{ value, unit, source, where, status }`; a number of our own adds
+`derivation`. The loader turns them into plain floats in canonical units, named with their unit, and keeps
+each original as a `Fact` under its path ("binding.free_fraction"), so that notes can say where it came from.
 """
 
 from __future__ import annotations
 
 import difflib
 import hashlib
+import itertools
 import math
 import tomllib
 from collections.abc import Callable, Mapping
@@ -92,9 +93,9 @@ class Absorption:
 class Form:
     """A product form, or a salt given as a plain rate (generic). Amounts are labelled amounts in amount_unit.
 
-    Active drug = amount x salt_factor x bioavailability. absorption: None for a dose into a vein, or for a rate.
+    Active drug = amount x salt_factor x bioavailability. absorption: None for a dose into a vein, or a rate.
     intervals_h: dosing intervals allowed. largest_dose_mg: more in one dose is taken for a slip.
-    refused_routes: route -> why it is refused. conversion_half_life_h: of a prodrug, None for the drug itself.
+    refused_routes: route -> why it is refused. conversion_half_life_h: of a prodrug, else None.
     """
 
     id: str
@@ -144,7 +145,7 @@ class Product:
 
 @dataclass(frozen=True)
 class Shelf:
-    """A generic country shelf: product ids. Of an exclusive group only one strength may be active at a time."""
+    """A generic country shelf: product ids. Of an exclusive group only one strength is active at a time."""
 
     id: str
     words: str
@@ -169,8 +170,8 @@ class Target:
 class Spread:
     """Spread of a level. total_cv and intake_share by who gives the doses: observed, outpatient, doubtful.
 
-    intake_share: share of doses that differ from the record. wrong_level_chance: chance that a level is simply
-    wrong (its spread is then multiplied by wrong_level_factor).
+    intake_share: share of doses that differ from the record. wrong_level_chance: chance that a level is
+    simply wrong (its spread is then multiplied by wrong_level_factor).
     """
 
     assay_cv: float
@@ -195,8 +196,8 @@ class Alternative:
 class Binding:
     """How a total level is read at abnormal binding.
 
-    normalised total = total / (albumin_coefficient x albumin + constant), albumin in g/dL, only below the albumin
-    at which the denominator is 1. correction_log_sd: what the correction itself adds to the spread.
+    normalised total = total / (albumin_coefficient x albumin + constant), albumin in g/dL, only below the
+    albumin at which the denominator is 1. correction_log_sd: what the correction itself adds to the spread.
     renal_failure_coefficients: their results are shown as a range, never used silently.
     """
 
@@ -216,20 +217,25 @@ class Binding:
     valproate_free: tuple[float, float]
 
     @property
-    def break_point_g_per_L(self) -> float:
+    def break_point_g_per_L(self) -> float:  # noqa: N802 - the unit
         """The albumin at which the denominator is 1; at or above it no correction is made."""
         return 10.0 * (1.0 - self.constant) / self.albumin_coefficient
 
 
 @dataclass(frozen=True)
 class RateCap:
-    """The fastest infusion of a form for a group of patients; the slower of the two limits counts."""
+    """The fastest infusion of a form for a group of patients; the slower of the two limits counts.
+
+    highest_*: the published maximum, up to which a site may go.
+    """
 
     form: str
     group: str
     words: str
     mg_per_min: float
     mg_per_kg_min: float | None
+    highest_mg_per_min: float
+    highest_mg_per_kg_min: float | None
 
 
 @dataclass(frozen=True)
@@ -286,8 +292,6 @@ class Limits:
     largest_mg_per_day: float
     largest_child_mg_per_day: float | None
     step_form: str
-    warn_too_high: float
-    stop_too_high: float
 
     def largest_step(self, level_mg_per_L: float) -> float:
         """The largest step [labelled mg/day of step_form] at a present steady level."""
@@ -340,7 +344,7 @@ class Code:
 class Modifier:
     """A named change to a population's typical values for patients it describes poorly.
 
-    ages_years: applied without asking inside these ages. question: the context question whose "yes" suggests it.
+    ages_years: applied without asking inside these ages. question: the context question whose "yes" calls it.
     vmax_mg_per_kg_day: replaces the population's own (at its reference weight).
     """
 
@@ -519,7 +523,7 @@ class Population:
             capped = min(weight_kg, rule.cap_without_height_kg)
             if capped < weight_kg:
                 used.append(
-                    f"Weight used: {show_number(capped)} kg of {shown} kg, because height or sex is not stated."
+                    f"Weight used: {show_number(capped)} kg of {shown} kg; height or sex is not stated."
                 )
             else:
                 used.append(f"Weight used: {shown} kg, as given.")
@@ -531,8 +535,8 @@ class Population:
         vmax_weight = rule.obese_from * ideal + rule.vmax_excess_share * (weight_kg - rule.obese_from * ideal)
         volume_weight = ideal + rule.volume_excess_factor * (weight_kg - ideal)
         used.append(
-            f"Obesity: of {shown} kg (ideal {show_number(ideal)} kg), {show_number(vmax_weight)} kg was used for Vmax "
-            f"and {show_number(volume_weight)} kg for the volume."
+            f"Obesity: of {shown} kg (ideal {show_number(ideal)} kg), {show_number(vmax_weight)} kg was used "
+            f"for Vmax and {show_number(volume_weight)} kg for the volume."
         )
         return vmax_weight, volume_weight
 
@@ -543,7 +547,7 @@ def log_sd(cv: float) -> float:
 
 
 def ideal_weight_kg(height_cm: float, sex: Sex) -> float:
-    """Ideal body weight: 50 (men) or 45.5 (women) + 2.3 kg per inch over 60 inches (Devine 1974, from memory)."""
+    """Ideal body weight: 50 (men) or 45.5 (women) + 2.3 kg per inch over 60 (Devine 1974, from memory)."""
     base = 50.0 if sex == "male" else 45.5
     return base + 2.3 * (height_cm / 2.54 - 60.0)
 
@@ -592,8 +596,8 @@ class Profile:
         """Where one number came from: `fact("binding.free_fraction")`."""
         return self.facts[path]
 
-    def level_gate_mg_per_L(self, kind: str) -> tuple[float, float]:
-        """The levels that can be real, for "total", "free" or "normalised"; outside them the entry is a slip."""
+    def level_gate_mg_per_L(self, kind: str) -> tuple[float, float]:  # noqa: N802 - the unit
+        """The levels that can be real, for "total", "free" or "normalised"; others are slips."""
         return self.level_gates_mg_per_L.get(kind, self.level_gates_mg_per_L["total"])
 
     def plausible_at(self, age_years: float | None) -> Plausible:
@@ -635,7 +639,7 @@ def _inside(age: float, ages: tuple[float, float]) -> bool:
     return ages[0] <= age < ages[1]
 
 
-# Reading -----------------------------------------------------------------------------------------------------
+# Reading
 
 T = TypeVar("T")
 
@@ -958,7 +962,7 @@ def _consistent(profile: Profile, top: Table) -> None:
     if not profile.plausible:
         raise top.fail("plausible", "missing", "Add the published ranges of Vmax per kg and Km")
     spans = sorted(p.ages_years for p in profile.populations.values() if p.default)
-    for (_, end), (start, _) in zip(spans, spans[1:], strict=False):
+    for (_, end), (start, _) in itertools.pairwise(spans):
         if end != start:
             raise top.fail(
                 "population",
@@ -997,7 +1001,9 @@ def _form(name: str, t: Table) -> Form:
         intervals_h=() if generic else t.several("intervals", "interval"),
         largest_dose_mg=t.number("largest_dose", "amount"),
         refused_routes=routes_refused,
-        conversion_half_life_h=None if (half := t.maybe("conversion_half_life", "duration")) is None else half * 24,
+        conversion_half_life_h=None
+        if (half := t.maybe("conversion_half_life", "duration")) is None
+        else half * 24,
     )
 
 
@@ -1218,14 +1224,22 @@ def _loading(t: Table, forms: Mapping[str, Form]) -> Loading:
         return form
 
     def cap(name: str, inner: Table) -> RateCap:
+        def rate(key: str, kind: str) -> float | None:
+            value = inner.maybe(key, kind)
+            return None if value is None else value / 1440
+
+        flat, scaled = (
+            inner.number("rate", "dose rate") / 1440,
+            rate("rate_per_weight", "dose rate per weight"),
+        )
         return RateCap(
             form=named(inner),
             group=inner.choice("group", ("adult", "child", "risk")),
             words=inner.text("words"),
-            mg_per_min=inner.number("rate", "dose rate") / 1440,
-            mg_per_kg_min=None
-            if (x := inner.maybe("rate_per_weight", "dose rate per weight")) is None
-            else x / 1440,
+            mg_per_min=flat,
+            mg_per_kg_min=scaled,
+            highest_mg_per_min=rate("highest", "dose rate") or flat,
+            highest_mg_per_kg_min=rate("highest_per_weight", "dose rate per weight") or scaled,
         )
 
     def line(name: str, inner: Table) -> IvLine:
@@ -1280,8 +1294,6 @@ def _limits(t: Table, forms: Mapping[str, Form]) -> Limits:
         largest_mg_per_day=t.number("largest_daily", "dose rate"),
         largest_child_mg_per_day=t.maybe("largest_daily_child", "dose rate"),
         step_form=step_form,
-        warn_too_high=t.share("warn_too_high"),
-        stop_too_high=t.share("stop_too_high"),
     )
     t.done()
     return found
@@ -1333,11 +1345,11 @@ def _dialysis(t: Table) -> tuple[float, float, float]:
     return low, middle, high
 
 
-# Printing ----------------------------------------------------------------------------------------------------
+# Printing
 
 
-def describe(profile: Profile) -> str:
-    """Everything we know about a drug and where each number comes from, as text."""
+def describe(profile: Profile) -> tuple[str, ...]:
+    """Everything we know about a drug and where each number comes from, line by line."""
     lines = [
         f"{profile.name}: {profile.scope}",
         profile.scope_reason,
@@ -1357,4 +1369,4 @@ def describe(profile: Profile) -> str:
             lines.append(f"      derivation: {fact.derivation}")
     lines += ["", "Sources"]
     lines += [f"  {s.key}: {s.citation}" for s in profile.sources_used()]
-    return "\n".join(lines) + "\n"
+    return tuple(lines)
