@@ -50,6 +50,7 @@ class State:
     pairs: Sequence[SteadyPair] = ()
     settling: Sequence[Settling] = ()
     pair_estimate: Estimate | None = None
+    pair_refusal: str = ""
     estimate: Estimate | None = None
     goal: Goal | None = None
     regimens: Sequence[ShownRegimen] = ()
@@ -145,6 +146,10 @@ def _settling_unknown(s: State, p: Mapping[str, Any]) -> list[Words]:
     return [{"sentence": x.sentence} for x in s.settling if x.settled is None and x.level in paired]
 
 
+def _pair_refused(s: State, p: Mapping[str, Any]) -> list[Words]:
+    return [{"why": s.pair_refusal}] if s.pair_refusal else []
+
+
 def _chance_of_negative_km_above(s: State, p: Mapping[str, Any]) -> list[Words]:
     if s.pair_estimate is None:
         return []
@@ -157,22 +162,24 @@ def _vmax_outside(s: State, p: Mapping[str, Any]) -> list[Words]:
     weight = s.case.patient.weight_kg
     if s.estimate is None or weight is None:
         return []
-    low, high, where = s.profile.published_vmax_per_kg
+    low, high = s.profile.plausible_at(s.case.patient.age_years).vmax_mg_per_kg_day
     value = s.estimate.point.vmax_mg_per_day / weight
     if low <= value <= high:
         return []
     unit = "mg/kg/day"
-    return [{"value": show(value, unit), "low": show_number(low), "high": show(high, unit), "where": where}]
+    return [{"value": show(value, unit), "low": show_number(low), "high": show(high, unit)}]
 
 
 def _km_outside(s: State, p: Mapping[str, Any]) -> list[Words]:
     if s.estimate is None:
         return []
-    low, high, where = s.profile.published_km
+    low, high = s.profile.plausible_at(s.case.patient.age_years).km_mg_per_L
     value = s.estimate.point.km_mg_per_L
     if low <= value <= high:
         return []
-    return [{"value": show(value, "mg/L"), "low": show_number(low), "high": show(high, "mg/L"), "where": where}]
+    return [
+        {"value": show(value, "mg/L"), "low": show_number(low), "high": show(high, "mg/L")}
+    ]
 
 
 def danger(forecast: Forecast) -> float:
@@ -231,6 +238,7 @@ PREDICATES: dict[str, Predicate] = {
     "kinds_mixed": _kinds_mixed,
     "not_settled": _not_settled,
     "settling_unknown": _settling_unknown,
+    "pair_refused": _pair_refused,
     "chance_of_negative_km_above": _chance_of_negative_km_above,
     "vmax_outside": _vmax_outside,
     "km_outside": _km_outside,

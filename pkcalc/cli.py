@@ -39,13 +39,22 @@ def main() -> None:
 
 def _asked_for_json() -> bool:
     words = sys.argv[1:]
-    return "--format=json" in words or any(a == "--format" and b == "json" for a, b in zip(words, words[1:], strict=False))
+    return "--format=json" in words or any(
+        a == "--format" and b == "json" for a, b in zip(words, words[1:], strict=False)
+    )
 
 
 def _usage_error(error: click.ClickException) -> None:
     if _asked_for_json():
-        problem = {"where": "Command line", "given": error.format_message(), "allowed": "", "fix": "See pkcalc --help"}
-        _print_json({"pkcalc_note": 1, "outcome": "input error", "problems": [problem], "version": __version__})
+        problem = {
+            "where": "Command line",
+            "given": error.format_message(),
+            "allowed": "",
+            "fix": "See pkcalc --help",
+        }
+        _print_json(
+            {"pkcalc_note": 1, "outcome": "input error", "problems": [problem], "version": __version__}
+        )
     else:
         error.show()
     sys.exit(2)
@@ -56,7 +65,9 @@ def _crash(error: Exception) -> None:
 
     if isinstance(error, (CaseError, CannotEstimate, DrugFileError)):
         fail(error, _asked_for_json())
-    message = f"The calculation stopped ({type(error).__name__}). No number was given. Please report this fault."
+    message = (
+        f"The calculation stopped ({type(error).__name__}). No number was given. Please report this fault."
+    )
     if _asked_for_json():
         _print_json({"pkcalc_note": 1, "outcome": "fault", "message": message, "version": __version__})
     click.echo(message, err=True)
@@ -75,8 +86,15 @@ def fail(error: CaseError | CannotEstimate | DrugFileError, as_json: bool) -> No
 
     if isinstance(error, DrugFileError):
         if as_json:
-            problem = {"where": "Drug or site file", "given": str(error), "allowed": "", "fix": "Correct the file"}
-            _print_json({"pkcalc_note": 1, "outcome": "input error", "problems": [problem], "version": __version__})
+            problem = {
+                "where": "Drug or site file",
+                "given": str(error),
+                "allowed": "",
+                "fix": "Correct the file",
+            }
+            _print_json(
+                {"pkcalc_note": 1, "outcome": "input error", "problems": [problem], "version": __version__}
+            )
         else:
             click.echo(str(error), err=True)
         sys.exit(2)
@@ -122,10 +140,14 @@ def _write(case: Case, output_format: str, out: Path | None, site: Path | None) 
         sys.exit(1)
 
 
-_format = click.option("--format", "output_format", type=click.Choice(FORMATS), default="text", show_default=True)
+_format = click.option(
+    "--format", "output_format", type=click.Choice(FORMATS), default="text", show_default=True
+)
 _out = click.option("--out", type=click.Path(path_type=Path, dir_okay=False), help="Write to this file.")
 _site = click.option(
-    "--site", type=click.Path(path_type=Path, exists=True, dir_okay=False), help="The hospital's own settings."
+    "--site",
+    type=click.Path(path_type=Path, exists=True, dir_okay=False),
+    help="The hospital's own settings.",
 )
 
 
@@ -143,10 +165,18 @@ def note(case_file: Path, output_format: str, out: Path | None, site: Path | Non
 
 @cli.command()
 @click.option("--drug", default="phenytoin", show_default=True, help="A drug of `pkcalc drugs`.")
-@click.option("--form", "forms", multiple=True, required=True, help="Salt or product: once, or once per dose.")
-@click.option("--dose", "doses", multiple=True, required=True, help='For example "300 mg/day"; repeat per pair.')
-@click.option("--level", "levels", multiple=True, required=True, help='For example "8 mg/L"; in the same order.')
-@click.option("--kind", type=click.Choice(["total", "free", "normalised"]), default="total", show_default=True)
+@click.option(
+    "--form", "forms", multiple=True, required=True, help="Salt or product: once, or once per dose."
+)
+@click.option(
+    "--dose", "doses", multiple=True, required=True, help='For example "300 mg/day"; repeat per pair.'
+)
+@click.option(
+    "--level", "levels", multiple=True, required=True, help='For example "8 mg/L"; in the same order.'
+)
+@click.option(
+    "--kind", type=click.Choice(["total", "free", "normalised"]), default="total", show_default=True
+)
 @click.option("--weight", default="", help='For example "70 kg".')
 @click.option("--age", default="", help='For example "45 years".')
 @click.option("--albumin", default="", help='For example "29 g/L".')
@@ -217,7 +247,12 @@ def case_of_pairs(
         )
     if len(forms) not in (1, len(doses)):
         problems.append(
-            Problem("Form", f"{len(forms)} forms were given", f"1 or {len(doses)}", "Give one form, or one per dose")
+            Problem(
+                "Form",
+                f"{len(forms)} forms were given",
+                f"1 or {len(doses)}",
+                "Give one form, or one per dose",
+            )
         )
     if problems:
         raise CaseError(problems)
@@ -227,7 +262,9 @@ def case_of_pairs(
         amount = _amount_of_rate(dose, f"Dose {i + 1}", problems)
         rows.append(DoseFile(form=form, amount=amount, every="24 h"))
     wanted = tuple(
-        ProposedFile(form=per_dose[-1], amount=_amount_of_rate(p, f"Proposed dose {i + 1}", problems), every="24 h")
+        ProposedFile(
+            form=per_dose[-1], amount=_amount_of_rate(p, f"Proposed dose {i + 1}", problems), every="24 h"
+        )
         for i, p in enumerate(proposed)
     )
     if problems:
@@ -298,7 +335,9 @@ def drugs(name: str | None, output_format: str) -> None:
             click.echo(f"{n:<16} {profile.scope}")
         return
     if name not in drug_names():
-        raise CaseError(Problem("Drug", f'"{name[:40]}" was given', ", ".join(drug_names()), "Choose one of these"))
+        raise CaseError(
+            Problem("Drug", f'"{name[:40]}" was given', ", ".join(drug_names()), "Choose one of these")
+        )
     lines = describe(load_profile(name))
     if output_format == "json":
         _print_json({"drug": name, "lines": list(lines)})
@@ -324,7 +363,9 @@ def form(port: int) -> None:
     if spec is None or spec.origin is None:
         raise click.ClickException("The form is not installed.")
     folder = Path(spec.origin).parent
-    click.echo(f"The form opens at http://127.0.0.1:{port} on this machine only. Stop it with Ctrl+C.", err=True)
+    click.echo(
+        f"The form opens at http://127.0.0.1:{port} on this machine only. Stop it with Ctrl+C.", err=True
+    )
     command = [sys.executable, "-m", "streamlit", "run", str(folder / "page.py"), "--server.port", str(port)]
     os.chdir(folder)
     os.execv(sys.executable, command)

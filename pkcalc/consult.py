@@ -83,7 +83,9 @@ def run_consult(case: Case, site: Site | str | Path | None = None) -> Consult:
 
     observations = observe(case, profile, chosen_site)
     pairs = steadiness.steady_pairs(case, profile, observations)
-    state = State(case=case, profile=profile, site=chosen_site, goal=goal, observations=observations, pairs=pairs)
+    state = State(
+        case=case, profile=profile, site=chosen_site, goal=goal, observations=observations, pairs=pairs
+    )
     said += caution_engine.after_levels(state)
 
     estimates: dict[str, Estimate] = {}
@@ -183,9 +185,13 @@ def _prior(case: Case, profile: Profile, site: Site) -> Prior | None:
     weight, age = case.patient.weight_kg, case.patient.age_years
     if weight is None or (age is not None and age < profile.youngest_years):
         return None
-    name = case.population or site.population or profile.default_population
-    return profile.populations[name].at(
-        weight_kg=weight, age_years=age, height_cm=case.patient.height_cm, sex=case.patient.sex
+    name = case.population or site.population
+    population = profile.populations[name] if name else profile.default_population(age)
+    switched_on = tuple(
+        m.id for m in population.modifiers.values() if m.question and case.answer(m.question) == "yes"
+    )
+    return population.at(
+        weight, age, height_cm=case.patient.height_cm, sex=case.patient.sex, modifiers=switched_on
     )
 
 

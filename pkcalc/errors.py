@@ -18,8 +18,9 @@ from typing import Literal
 
 Severity = Literal["stop", "warn", "note"]
 
-#: What a stop can take away. Nothing else can be blocked.
-BLOCKABLE = ("two-level", "estimate", "projection", "regimens", "loading", "next level")
+#: What a stop can take away. Nothing else can be blocked. "this regimen" takes away the offer of the one
+#: regimen the caution names; its danger numbers stay visible, marked "not offered".
+BLOCKABLE = ("two-level", "estimate", "projection", "regimens", "this regimen", "loading", "next level")
 
 
 @dataclass(frozen=True)

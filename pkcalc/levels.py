@@ -112,7 +112,16 @@ def _observe(level: Level, case: Case, profile: Profile, spread: Spread) -> Obse
     if level.kind == "normalised":
         caveat = f"{name} was already normalised by {level.normalised_by}: check which equation was used."
         return Observation(
-            level, reported, reported, reported, spread, binding.correction_log_sd, True, tuple(steps), (caveat,), scale
+            level,
+            reported,
+            reported,
+            reported,
+            spread,
+            binding.correction_log_sd,
+            True,
+            tuple(steps),
+            (caveat,),
+            scale,
         )
     if level.kind == "free":
         working = reported / binding.free_fraction
@@ -129,7 +138,9 @@ def _observe(level: Level, case: Case, profile: Profile, spread: Spread) -> Obse
         return Observation(level, reported, reported, reported, spread, 0.0, True, tuple(steps), (), scale)
     working = float(
         formulas.normalised_total(
-            total_mg_per_L=reported, albumin_g_per_L=albumin.g_per_L, coefficient_dL_per_g=binding.albumin_coefficient
+            total_mg_per_L=reported,
+            albumin_g_per_L=albumin.g_per_L,
+            coefficient_dL_per_g=binding.albumin_coefficient,
         )
     )
     corrected = working != reported
@@ -157,7 +168,9 @@ def _readings(
             if albumin is not None:
                 value = float(
                     formulas.normalised_total(
-                        total_mg_per_L=total, albumin_g_per_L=albumin.g_per_L, coefficient_dL_per_g=coefficient
+                        total_mg_per_L=total,
+                        albumin_g_per_L=albumin.g_per_L,
+                        coefficient_dL_per_g=coefficient,
                     )
                 )
                 readings.append((value, f"coefficient {show_number(coefficient)}: {show(value, 'mg/L')}"))
@@ -166,9 +179,14 @@ def _readings(
             total_mg_per_L=total, valproate_mg_per_L=level.valproate_mg_per_L
         ).items():
             value = float(free) / binding.free_fraction
-            readings.append((value, f"{name}: free {show(float(free), 'mg/L')}, normalised {show(value, 'mg/L')}"))
+            readings.append(
+                (value, f"{name}: free {show(float(free), 'mg/L')}, normalised {show(value, 'mg/L')}")
+            )
     if not readings:
-        readings = [(total, f"as measured: {show(total, 'mg/L')}"), (total * 2, f"free fraction doubled: {show(total * 2, 'mg/L')}")]
+        readings = [
+            (total, f"as measured: {show(total, 'mg/L')}"),
+            (total * 2, f"free fraction doubled: {show(total * 2, 'mg/L')}"),
+        ]
     values = [v for v, _ in readings]
     return min(values), max(values), ["possible readings: " + "; ".join(w for _, w in readings)]
 
@@ -181,7 +199,9 @@ def lab_scale(case: Case, profile: Profile, albumin: Albumin | None) -> LabScale
     if albumin is None:
         return LabScale(1.0, binding.free_fraction, "total as the laboratory reports it if albumin is normal")
     factor = float(
-        formulas.binding_denominator(albumin_g_per_L=albumin.g_per_L, coefficient_dL_per_g=binding.albumin_coefficient)
+        formulas.binding_denominator(
+            albumin_g_per_L=albumin.g_per_L, coefficient_dL_per_g=binding.albumin_coefficient
+        )
     )
     factor = min(factor, 1.0)
     words = f"total as the laboratory reports it at albumin {show(albumin.g_per_L, 'g/L')}"

@@ -93,7 +93,12 @@ def from_steady_levels(
         volume_from="none" if volume is None else "population",
         rejected=rejected,
         fit=tuple(
-            LevelFit(level=p.level, observed_mg_per_L=p.level_mg_per_L, predicted=_spread_of(p), standardised_residual=0.0)
+            LevelFit(
+                level=p.level,
+                observed_mg_per_L=p.level_mg_per_L,
+                predicted=_spread_of(p),
+                standardised_residual=0.0,
+            )
             for p in (first, second)
         ),
         diagnostics={
@@ -111,16 +116,15 @@ def _spread_of(pair: SteadyPair) -> Band:
 
 
 def chance_of_negative_km(first: SteadyPair, second: SteadyPair) -> float:
-    """Exact chance that the spread of the levels turns Km negative.
-
-    Phi( -[ln(C2/C1) - ln(R2/R1)] / sqrt(s1^2 + s2^2) ) for log-normal levels (own derivation).
-    """
-    from scipy.special import ndtr
-
-    low, high = sorted((first, second), key=lambda p: p.rate_mg_per_day)
-    gap = math.log(high.level_mg_per_L / low.level_mg_per_L) - math.log(high.rate_mg_per_day / low.rate_mg_per_day)
-    spread = math.hypot(low.log_sd, high.log_sd)
-    return float(ndtr(-gap / spread)) if spread > 0 else 0.0
+    """Exact chance that the spread of the levels turns Km negative."""
+    return formulas.chance_of_inadmissible_pair(
+        rate1_mg_per_day=first.rate_mg_per_day,
+        level1_mg_per_L=first.level_mg_per_L,
+        rate2_mg_per_day=second.rate_mg_per_day,
+        level2_mg_per_L=second.level_mg_per_L,
+        log_sd1=first.log_sd,
+        log_sd2=second.log_sd,
+    )
 
 
 def refuse_impossible(low: SteadyPair, high: SteadyPair) -> None:
@@ -141,7 +145,7 @@ def refuse_impossible(low: SteadyPair, high: SteadyPair) -> None:
             why="Two levels on one dose rate give one point of the curve, so Vmax and Km cannot be told apart.",
             helps="Add a level on a different dose, or use the whole record with population knowledge.",
         )
-    if reason == "level not higher":
+    if reason == "higher rate, level not higher":
         raise CannotEstimate(
             found=f"The higher dose rate ({r2} of active drug) has the level {c2}, the lower one ({r1}) {c1}.",
             why="A higher dose cannot lead to an equal or lower steady level in the same patient.",

@@ -23,7 +23,11 @@ def number(value: float) -> Any:
 
 
 def band_data(band: Band) -> dict[str, Any]:
-    return {"median": number(band.median), "low_5_percent": number(band.low), "high_95_percent": number(band.high)}
+    return {
+        "median": number(band.median),
+        "low_5_percent": number(band.low),
+        "high_95_percent": number(band.high),
+    }
 
 
 def regimen_data(regimen: Regimen) -> dict[str, Any]:
@@ -75,7 +79,9 @@ def estimate_data(estimate: Estimate) -> dict[str, Any]:
         "rejected_share": number(estimate.rejected),
         "trusted": estimate.trusted,
         "distrust": estimate.distrust,
-        "diagnostics": {k: v for k, v in estimate.diagnostics.items() if isinstance(v, (int, float, str, list))},
+        "diagnostics": {
+            k: v for k, v in estimate.diagnostics.items() if isinstance(v, (int, float, str, list))
+        },
     }
 
 
@@ -129,8 +135,8 @@ def note_data(consult: Consult) -> dict[str, Any]:
         "version": __version__,
         "results_date": consult.results_date,
         "case_hash": case.hash,
-        "drug_file_hash": consult.profile.hash,
-        "site_file_hash": consult.site.hash,
+        "drug_file_hash": consult.profile.sha256,
+        "site_file_hash": consult.site.sha256,
         "defers": DEFERS,
     }
 

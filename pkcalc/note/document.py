@@ -67,14 +67,15 @@ def compose(consult: Consult) -> Document:
         _sources(consult),
     ]
     return Document(
-        title=f"Consult note: {consult.profile.words}",
+        title=f"Consult note: {consult.profile.name}",
         demonstration=DEMONSTRATION if case.demonstration is not None else "",
         cautions=consult.cautions,
         sections=tuple(s for s in sections if s.lines or s.table),
         footer=(
             DEFERS,
             f"pkcalc {__version__}, results of {consult.results_date}, case {case.hash}, "
-            f"drug file {consult.profile.hash}" + (f", site file {consult.site.hash}" if consult.site.hash else ""),
+            f"drug file {consult.profile.sha256[:12]}"
+            + (f", site file {consult.site.sha256[:12]}" if consult.site.sha256 else ""),
             "Prepared by: ______________________    Time: ______________",
             "Independently checked by: _________________    Time: ______________",
         ),
@@ -124,7 +125,11 @@ def _patient(consult: Consult) -> Section:
         f"age {patient.typed.get('age', 'not stated')}",
         f"sex {patient.sex if patient.sex != 'unknown' else 'not stated'}",
         f"weight {patient.typed.get('weight', 'not stated')}"
-        + (f" ({patient.weight_basis})" if patient.weight_kg is not None and patient.weight_basis != "unknown" else ""),
+        + (
+            f" ({patient.weight_basis})"
+            if patient.weight_kg is not None and patient.weight_basis != "unknown"
+            else ""
+        ),
         f"height {patient.typed.get('height', 'not stated')}",
     ]
     albumin = case.albumin
@@ -157,7 +162,9 @@ def _doses(consult: Consult) -> Section:
             when = (
                 f"for about {course.typed.for_about}"
                 if course.for_about_days is not None
-                else f"since {show_time(course.start)}" if course.start else "start not stated"
+                else f"since {show_time(course.start)}"
+                if course.start
+                else "start not stated"
             )
             if course.end is not None:
                 when += f" until {show_time(course.end)}"
@@ -291,7 +298,9 @@ def _forecasts(consult: Consult) -> list[Section]:
             f"90 % of the way from the present level: {days_words(f.settle_days)}.",
         ]
         if np.isfinite(f.percent_per_percent):
-            lines.append(f"At this point 1 % more dose is {show_number(f.percent_per_percent, 2)} % more level.")
+            lines.append(
+                f"At this point 1 % more dose is {show_number(f.percent_per_percent, 2)} % more level."
+            )
         if not shown.offered:
             lines.append("NOT OFFERED: the chance of too high is above the limit.")
         sections.append(Section("Proposed regimen", tuple(lines)))
@@ -373,10 +382,10 @@ def _sources(consult: Consult) -> Section:
 
 
 def sources_used(cautions: Sequence[Caution], consult: Consult) -> list[str]:
-    from pkcalc.sources import cite
+    from pkcalc.sources import source
 
     keys = ["michaelis1913", "ludden1977"]
     if consult.prior is not None:
-        keys.append(consult.prior.source)
+        keys += consult.prior.sources
     keys += [c.source for c in cautions]
-    return [cite(key) for key in dict.fromkeys(keys)]
+    return [source(key).citation for key in dict.fromkeys(keys)]

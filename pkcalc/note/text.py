@@ -49,7 +49,10 @@ def caution_lines(caution: Caution) -> list[str]:
 def table_lines(table: Table) -> list[str]:
     """Columns as wide as their widest cell, heads wrapped above them."""
     columns = range(len(table.heads))
-    widths = [max([len(r[i]) for r in table.rows] + [max((len(w) for w in table.heads[i].split()), default=1)]) for i in columns]
+    widths = [
+        max([len(r[i]) for r in table.rows] + [max((len(w) for w in table.heads[i].split()), default=1)])
+        for i in columns
+    ]
     heads = [textwrap.wrap(table.heads[i], widths[i]) or [""] for i in columns]
     depth = max(len(h) for h in heads)
     lines = []
