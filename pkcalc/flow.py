@@ -24,7 +24,7 @@ from pkcalc import formulas
 from pkcalc.errors import CaseError, Problem
 from pkcalc.periodic import PeriodicState, parabola, periodic
 from pkcalc.record import Absorption, Before, Dose, FirstOrder, Record, Repeated, duplicates
-from pkcalc.stepping import BLOCK, FINENESS, Accuracy, Block, Floats, Step, march, plan_steps, run, speeds
+from pkcalc.stepping import BLOCK, Accuracy, Block, Floats, Plan, Speed, Step, march, plan_steps, run, speeds
 
 __all__ = [
     "Absorption",
@@ -61,20 +61,22 @@ def amounts(
     volume_L: ArrayLike | None = None,
     accuracy: Accuracy = "everyday",
     start_mg: ArrayLike | None = None,
+    typical_per_day: float | None = None,
 ) -> Floats:
     """Amount in the body [mg] at each time, for every draw; shape (draws, times).
 
     times_day: at or after the record's start. vmax_mg_per_day, kappa_mg (Km V): shape (n,) or single
     numbers, > 0. volume_L: needed only where a first-order path is given as a clearance. start_mg: amount
     at the record's start, in place of what the record says. accuracy: largest relative error about 3e-3
-    (everyday), 4e-5 (fine), 2e-7 (finest). Raises CaseError for times before the start, or parameters that are
-    not positive.
+    (everyday), 4e-5 (fine), 2e-7 (finest). typical_per_day: 99 % point of Vmax/kappa, which sets the steps; of
+    the draws themselves unless given (nodes of a grid are not equally likely). Raises CaseError for times
+    before the start and parameters that are not positive.
     """
     times = _times(record, times_day)
     vmax, kappa = _parameters(vmax_mg_per_day, kappa_mg)
     rates = _path_rates(record, volume_L, vmax)
-    start = _start(record, vmax, kappa, rates, accuracy, start_mg)
-    return _walk(record, times, vmax, kappa, rates, start, FINENESS[accuracy])
+    start = _start(record, vmax, kappa, rates, accuracy, start_mg, typical_per_day)
+    return _walk(record, times, vmax, kappa, rates, start, accuracy, typical_per_day)
 
 
 def levels(
@@ -86,6 +88,7 @@ def levels(
     *,
     start_mg_per_L: ArrayLike | None = None,
     accuracy: Accuracy = "everyday",
+    typical_per_day: float | None = None,
 ) -> Floats:
     """Level [mg/L] at each time, for every draw; shape (draws, times). As `amounts`, divided by the
     volume."""
@@ -99,6 +102,7 @@ def levels(
         volume_L=volume,
         accuracy=accuracy,
         start_mg=start,
+        typical_per_day=typical_per_day,
     )
     return amount / (volume[:, None] if len(volume) == len(amount) else volume)
 
@@ -113,6 +117,7 @@ def sensitivity(
     volume_L: ArrayLike | None = None,
     accuracy: Accuracy = "everyday",
     start_mg: ArrayLike | None = None,
+    typical_per_day: float | None = None,
 ) -> Floats:
     """By what fraction each level changes when the intake in a window changes by a small fraction.
 
@@ -124,28 +129,19 @@ def sensitivity(
     times = _times(record, times_day)
     vmax, kappa = _parameters(vmax_mg_per_day, kappa_mg)
     rates = _path_rates(record, volume_L, vmax)
-    start = _start(record, vmax, kappa, rates, accuracy, start_mg)
+    start = _start(record, vmax, kappa, rates, accuracy, start_mg, typical_per_day)
     earlier = [i for i, (a, _) in enumerate(windows) if a < record.start_day]
     start_change = np.zeros_like(vmax)
     if earlier and record.before is not None and start_mg is None and record.start_mg is None:
         # a central difference of the start itself, one rule (plateau or build-up) for both sides
         up, down = (
-            _start(record, vmax, kappa, rates, accuracy, None, scale=1.0 + sign * 1e-4)
+            _start(record, vmax, kappa, rates, accuracy, None, typical_per_day, 1.0 + sign * 1e-4)
             for sign in (1.0, -1.0)
         )
         start_change = (up - down) / 2e-4
     out = np.zeros((len(vmax), len(times), len(windows)))
-    for speed in speeds(_fastest(vmax, kappa, rates)):
-        plan = plan_steps(
-            _all_doses(record),
-            start_day=record.start_day,
-            times_day=times,
-            fastest_per_day=speed.fastest_per_day,
-            fineness=FINENESS[accuracy],
-            first_order=record.first_order,
-            windows=windows,
-            exact=False,
-        )
+    for speed in speeds(_fastest(vmax, kappa, rates), typical_per_day):
+        plan = _plan(record, speed, speed.fineness(accuracy), times, windows=windows, exact=False)
         for begin in range(0, len(speed.positions), BLOCK):
             some = speed.positions[begin : begin + BLOCK]
             inverse = 1.0 / vmax[some]
@@ -154,7 +150,7 @@ def sensitivity(
             moved = {w: np.zeros(len(some)) for w in earlier}
             total = np.zeros(len(some))
             for number, step, block in march(
-                plan, vmax[some], kappa[some], start[some], [_part(r, some) for r in rates]
+                plan, vmax[some], kappa[some], start[some], [r[some] for r in rates]
             ):
                 if step is not None:
                     slope = block.slopes(step)
@@ -209,22 +205,13 @@ def first_crossing(
     sign = -1.0 if falling else 1.0
     out = np.full(vmax.shape, np.inf)
     for speed in speeds(_fastest(vmax, kappa, rates)):
-        plan = plan_steps(
-            _all_doses(record),
-            start_day=record.start_day,
-            times_day=(),
-            end_day=until_day,
-            fastest_per_day=speed.fastest_per_day,
-            fineness=FINENESS[accuracy],
-            first_order=record.first_order,
-            exact=False,
-        )
+        plan = _plan(record, speed, speed.fineness(accuracy), (), end_day=until_day, exact=False)
         for begin in range(0, len(speed.positions), BLOCK):
             some = speed.positions[begin : begin + BLOCK]
             aim = threshold[some] / vmax[some]
             when = np.full(len(some), np.inf)
             for number, step, block in march(
-                plan, vmax[some], kappa[some], start[some], [_part(r, some) for r in rates]
+                plan, vmax[some], kappa[some], start[some], [r[some] for r in rates]
             ):
                 if step is None:
                     when[sign * (block.w - aim) >= 0] = record.start_day
@@ -318,12 +305,12 @@ def step_error(
         mine = np.intersect1d(speed.positions, some)
         if not mine.size:
             continue
-        both = [
-            _run_class(record, times, vmax, kappa, rates, start, mine, speed.fastest_per_day, fineness)
-            for fineness in (FINENESS[accuracy], 2.0 * FINENESS[accuracy])
-        ]
-        with np.errstate(divide="ignore", invalid="ignore"):
-            change = np.where(both[1] > 0, np.abs(both[0] / both[1] - 1.0), 0.0)
+        fineness = speed.fineness(accuracy)
+        one, two = (
+            _run_class(record, times, vmax, kappa, rates, start, mine, speed, f)
+            for f in (fineness, 2.0 * fineness)
+        )
+        change = np.abs(one - two) / np.where(two > 0, two, 1.0)
         worst = max(worst, float(change.max(initial=0.0)))
     return worst
 
@@ -338,12 +325,13 @@ def _walk(
     kappa: Floats,
     rates: Sequence[Floats],
     start: Floats,
-    fineness: float,
+    accuracy: Accuracy,
+    typical_per_day: float | None,
 ) -> Floats:
     out = np.empty((len(vmax), len(times)))
-    for speed in speeds(_fastest(vmax, kappa, rates)):
+    for speed in speeds(_fastest(vmax, kappa, rates), typical_per_day):
         out[speed.positions] = _run_class(
-            record, times, vmax, kappa, rates, start, speed.positions, speed.fastest_per_day, fineness
+            record, times, vmax, kappa, rates, start, speed.positions, speed, speed.fineness(accuracy)
         )
     return out
 
@@ -356,26 +344,40 @@ def _run_class(
     rates: Sequence[Floats],
     start: Floats,
     positions: Positions,
-    fastest_per_day: float,
+    speed: Speed,
     fineness: float,
 ) -> Floats:
-    """Amounts of the draws that share one plan, block by block so that memory does not grow with the
-    draws."""
-    plan = plan_steps(
-        _all_doses(record),
-        start_day=record.start_day,
-        times_day=times,
-        fastest_per_day=fastest_per_day,
-        fineness=fineness,
-        first_order=record.first_order,
-    )
+    """Amounts of draws that share one plan, block by block so that memory does not grow with the draws."""
+    plan = _plan(record, speed, fineness, times)
     out = np.empty((len(positions), len(times)))
     for begin in range(0, len(positions), BLOCK):
         some = positions[begin : begin + BLOCK]
-        out[begin : begin + BLOCK] = run(
-            plan, vmax[some], kappa[some], start[some], [_part(r, some) for r in rates]
-        )
+        out[begin : begin + BLOCK] = run(plan, vmax[some], kappa[some], start[some], [r[some] for r in rates])
     return out
+
+
+def _plan(
+    record: Record,
+    speed: Speed,
+    fineness: float,
+    times: Sequence[float],
+    *,
+    end_day: float | None = None,
+    windows: Sequence[tuple[float, float]] = (),
+    exact: bool = True,
+) -> Plan:
+    return plan_steps(
+        _all_doses(record),
+        start_day=record.start_day,
+        times_day=times,
+        end_day=end_day,
+        fastest_per_day=speed.fastest_per_day,
+        fineness=fineness,
+        first_order=record.first_order,
+        windows=windows,
+        exact=exact,
+        stiff=speed.stiff,
+    )
 
 
 def _all_doses(record: Record) -> tuple[Dose, ...]:
@@ -398,6 +400,7 @@ def _start(
     rates: Sequence[Floats],
     accuracy: Accuracy,
     start_mg: ArrayLike | None,
+    typical_per_day: float | None = None,
     scale: float = 1.0,
 ) -> Floats:
     """Amount at the record's start [mg] for every draw; `scale` multiplies the earlier regimen's doses."""
@@ -426,7 +429,12 @@ def _start(
     start = np.empty_like(vmax)
     if settled.any():
         start[settled] = periodic(
-            regimen, vmax[settled], kappa[settled], first_order_per_day=always[settled], accuracy=accuracy
+            regimen,
+            vmax[settled],
+            kappa[settled],
+            first_order_per_day=always[settled],
+            accuracy=accuracy,
+            typical_per_day=typical_per_day,
         ).start_mg
     if not settled.all():
         rest = ~settled
@@ -443,7 +451,8 @@ def _start(
             kappa[rest],
             (always[rest],),
             np.zeros(int(rest.sum())),
-            FINENESS[accuracy],
+            accuracy,
+            typical_per_day,
         )[:, 0]
     return start
 
@@ -503,10 +512,6 @@ def _fastest(vmax: Floats, kappa: Floats, rates: Sequence[Floats]) -> Floats:
     for rate in rates:
         fastest = fastest + rate
     return fastest
-
-
-def _part(rate: Floats, some: Positions) -> Floats:
-    return rate[some]
 
 
 def _times(record: Record, times_day: ArrayLike) -> tuple[float, ...]:

@@ -398,8 +398,7 @@ def constant_rate_step(
     km: ArrayLike,
     first_order: ArrayLike = 0.0,
 ) -> Floats:
-    """`level_after` in any consistent units (levels or amounts), for the engine: dC/dt = r - v C/(Km + C) -
-    k C."""
+    """`level_after` in any consistent units (levels or amounts), for the engine."""
     t, c0, r, v, km_, k = _arrays(time, start, input_rate, vmax, km, first_order)
     if not k.any():
         return _linear_course(_clock(t, c0, r, v, km_), c0, r, v, km_).level
@@ -409,6 +408,30 @@ def constant_rate_step(
     if linear.any():
         curved = np.where(linear, _linear_course(_clock(t, c0, r, v, km_), c0, r, v, km_).level, curved)
     return curved
+
+
+def constant_rate_tangent(
+    *,
+    start: ArrayLike,
+    end: ArrayLike,
+    time: ArrayLike,
+    input_rate: ArrayLike,
+    vmax: ArrayLike,
+    km: ArrayLike,
+    first_order: ArrayLike = 0.0,
+) -> Floats:
+    """Derivative of the end of a `constant_rate_step` with respect to its start: g(end)/g(start), g = dC/dt.
+
+    Where the course hardly moves (both near the steady level) it is e^(-slope x time) instead.
+    """
+    c0, c1, t, r, v, km_, k = _arrays(start, end, time, input_rate, vmax, km, first_order)
+    first, last = (r - c * (v / (km_ + c) + k) for c in (c0, c1))
+    middle = 0.5 * (c0 + c1)
+    with np.errstate(divide="ignore", invalid="ignore", under="ignore"):
+        still = np.exp(-(v * km_ / (km_ + middle) ** 2 + k) * t)
+        moving = np.abs(c1 - c0) > 1e-5 * (km_ + c0)
+        value: Floats = np.where(moving, last / np.where(moving, first, 1.0), still)
+    return np.clip(value, 0.0, 1.0)
 
 
 def level_after(

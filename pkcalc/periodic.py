@@ -2,7 +2,7 @@
 
 For any shape of input with D per cycle tau, the amount X(s) at every time of the cycle lies between x_b and
 x_b + D, where x_b = D / (e^((Vmax tau - D)/kappa) - 1) is the trough of one intravenous push per cycle. The
-map of one cycle is increasing and convex, so Newton's method from x_b rises to the answer without overshooting.
+map of one cycle is increasing and convex, so Newton's method from x_b rises to the answer and never past it.
 """
 
 from __future__ import annotations
@@ -13,7 +13,7 @@ import numpy as np
 from numpy.typing import ArrayLike
 
 from pkcalc.record import FirstOrder, Repeated
-from pkcalc.stepping import BLOCK, FINENESS, Accuracy, Block, Floats, Plan, Step, march, plan_steps, speeds
+from pkcalc.stepping import BLOCK, Accuracy, Block, Floats, Plan, Speed, Step, march, plan_steps, speeds
 
 #: Newton's steps allowed; at most 7 are needed for R/Vmax < 0.99 (more with a first-order path, from a
 #: lower start).
@@ -64,15 +64,16 @@ def lower_bound(per_cycle_mg: float, cycle_day: float, vmax_mg_per_day: Floats, 
     return bound
 
 
-def cycle_plan(regimen: Repeated, *, fastest_per_day: float, fineness: float) -> Plan:
+def cycle_plan(regimen: Repeated, speed: Speed, accuracy: Accuracy) -> Plan:
     """The steps of one cycle at the plateau: the gut holds what all the cycles before have left in it."""
     return plan_steps(
         regimen.cycles(-regimen.cycles_still_absorbed(), 1, 0.0),
         start_day=0.0,
         times_day=(),
         end_day=regimen.cycle_day,
-        fastest_per_day=fastest_per_day,
-        fineness=fineness,
+        fastest_per_day=speed.fastest_per_day,
+        fineness=speed.fineness(accuracy),
+        stiff=speed.stiff,
         first_order=(FirstOrder(rate_per_day=0.0),),
         exact=False,
     )
@@ -85,6 +86,7 @@ def periodic(
     *,
     first_order_per_day: ArrayLike = 0.0,
     accuracy: Accuracy = "everyday",
+    typical_per_day: float | None = None,
 ) -> PeriodicState:
     """Trough, peak and average of a regimen at its plateau, for every draw, without simulating months.
 
@@ -101,8 +103,8 @@ def periodic(
     most = 0
     there = np.flatnonzero((regimen.rate_mg_per_day < vmax) | (k > 0))
     if there.size:
-        for speed in speeds(vmax[there] / kappa[there] + k[there]):
-            plan = cycle_plan(regimen, fastest_per_day=speed.fastest_per_day, fineness=FINENESS[accuracy])
+        for speed in speeds(vmax[there] / kappa[there] + k[there], typical_per_day):
+            plan = cycle_plan(regimen, speed, accuracy)
             chosen = there[speed.positions]
             for begin in range(0, len(chosen), BLOCK):
                 some = chosen[begin : begin + BLOCK]

@@ -111,13 +111,16 @@ def plan_steps(
     first_order: Sequence[FirstOrder] = (),
     windows: Sequence[tuple[float, float]] = (),
     exact: bool = True,
+    stiff: bool = False,
 ) -> Plan:
     """Cut a record into steps, the same for all draws.
 
     A step is at most 0.25 / fastest_per_day and (0.5 / ka) e^(0.2 ka (time since the last dose)), both
     divided by fineness, and ends at every change of input and every asked-for time. Where the input rate is
     constant and `exact` is allowed, the whole piece is one step. Of doses before the start only the rest
-    counts.
+    counts. stiff: every step is taken by the closed form at its mean input rate, whatever the draw's speed. A
+    fast draw follows the input of the moment, so the steps shrink towards the end of every piece; earlier
+    ones are forgotten.
     """
     last = max([start_day, *times_day]) if end_day is None else end_day
     events: dict[float, list[tuple[str, _Stream, float]]] = defaultdict(list)
@@ -211,14 +214,16 @@ def plan_steps(
         moment = begin
         while moment < finish:
             left = finish - moment
-            if exact and not absorbing:
+            if (exact or stiff) and not absorbing:
                 h = left
             else:
-                limit = longest
+                limit = math.inf if stiff else longest
                 for s in absorbing:
                     assert s.ka is not None
                     growth = math.exp(min(0.2 * s.ka * (moment - s.since), 30.0))
                     limit = min(limit, 0.5 / (s.ka * fineness) * growth)
+                    if stiff and left > 2e-4 / s.ka:
+                        limit = min(limit, 0.5 * left)
                 pieces = math.ceil(left / limit * (1 - 1e-9))
                 h = left / pieces if pieces <= 2 or limit == longest else limit
             moment = finish if h >= left else moment + h
@@ -235,7 +240,7 @@ def plan_steps(
                     share = shares.setdefault(w, [0.0, 0.0, 0.0])
                     share[1] += first
                     share[2] += whole
-            constant = sum((s.rate for s in active), 0.0) if exact and not absorbing else None
+            constant = full / h if stiff or (exact and not absorbing) else None
             steps.append(
                 Step(
                     h,
@@ -256,20 +261,38 @@ def plan_steps(
 FINENESS: Mapping[Accuracy, float] = {"everyday": 1.0, "fine": 4.0, "finest": 16.0}
 
 
+#: Above this rate per day (a time constant under 4 minutes) the explicit step would need more work than
+#: constant pieces: draws whose Km is next to nothing, whose levels collapse to it between doses.
+STIFF_PER_DAY = 400.0
+
+
 class Speed(NamedTuple):
     """Draws that share a plan: their positions, and the rate per day that sets their steps."""
 
     positions: NDArray[np.intp]
     fastest_per_day: float
 
+    @property
+    def stiff(self) -> bool:
+        return self.fastest_per_day > STIFF_PER_DAY
 
-def speeds(fastest_per_day: Floats) -> tuple[Speed, ...]:
+    def fineness(self, accuracy: Accuracy) -> float:
+        """By what the everyday steps are divided; constant pieces are of second order and need more of
+        them."""
+        fine = FINENESS[accuracy]
+        return 4.0 * fine**1.5 if self.stiff else fine
+
+
+def speeds(fastest_per_day: Floats, typical_per_day: float | None = None) -> tuple[Speed, ...]:
     """Sort draws by their fastest relative rate, Vmax/kappa (+ k), into classes that share their steps.
 
     The first class steps at a quarter of the time constant of the 99 % point; a draw that would step
     further than its own time constant goes to a class with steps four (sixteen, ...) times shorter.
+    typical_per_day takes the place of the 99 % point, for nodes of a grid that are not equally likely.
     """
-    typical = float(np.quantile(fastest_per_day, 0.99))
+    if not fastest_per_day.size:
+        return ()
+    typical = float(np.quantile(fastest_per_day, 0.99)) if typical_per_day is None else typical_per_day
     level = np.ceil(np.log(fastest_per_day / (4.0 * typical)) / np.log(4.0) - 1e-9).clip(0).astype(int)
     return tuple(Speed(np.flatnonzero(level == n), typical * 4.0 ** int(n)) for n in np.unique(level))
 
@@ -286,6 +309,7 @@ class Block:
         self.x2, self.x3, self.x4 = np.empty(n), np.empty(n), np.empty(n)
         self.u1, self.u2, self.u3, self.u4 = np.empty(n), np.empty(n), np.empty(n), np.empty(n)
         self.full = np.empty(n)
+        self.rate = np.empty(n)
         self.spare = np.empty(n)
         self.k: Floats | float | None = None
 
@@ -304,10 +328,11 @@ class Block:
             w += self.spare
         self.start[...] = w
         if step.rate is not None:
+            np.multiply(self.inverse, step.rate, out=self.rate)
             w[...] = formulas.constant_rate_step(
                 time=h,
                 start=w,
-                input_rate=step.rate * self.inverse,
+                input_rate=self.rate,
                 vmax=1.0,
                 km=self.big_k,
                 first_order=0.0 if self.k is None else self.k,
@@ -343,8 +368,10 @@ class Block:
         np.subtract(whole, total, out=w)
 
     def middle(self, step: Step) -> Floats:
-        """The state in the middle of the Runge-Kutta step just taken (third order)."""
+        """The state in the middle of the step just taken (third order; half-way along a constant piece)."""
         h = step.h
+        if step.rate is not None:
+            return 0.5 * (self.start + self.w)
         out: Floats = self.start + self.inverse * step.half
         out -= (5 * h / 24) * self.u1
         out -= (h / 6) * (self.u2 + self.u3)
@@ -352,7 +379,11 @@ class Block:
         return out
 
     def slopes(self, step: Step) -> Floats:
-        """h times the mean slope of the elimination over the Runge-Kutta step just taken (Simpson)."""
+        """Integral of the slope of the elimination over the step just taken (Simpson)."""
+        if step.rate is not None:
+            with np.errstate(divide="ignore"):
+                exact: Floats = np.minimum(-np.log(self.tangent(step)), 700.0)
+            return exact
         total: Floats = self._slope(self.start) + self._slope(self.x4)
         total += 2.0 * (self._slope(self.x2) + self._slope(self.x3))
         total *= step.h / 6.0
@@ -367,9 +398,18 @@ class Block:
         return s
 
     def tangent(self, step: Step) -> Floats:
-        """Derivative of the state after the Runge-Kutta step just taken with respect to the state before
-        it."""
+        """Derivative of the state after the step just taken with respect to the state before it."""
         h = step.h
+        if step.rate is not None:
+            return formulas.constant_rate_tangent(
+                start=self.start,
+                end=self.w,
+                time=h,
+                input_rate=self.rate,
+                vmax=1.0,
+                km=self.big_k,
+                first_order=0.0 if self.k is None else self.k,
+            )
         d1 = self._slope(self.start)
         d2 = self._slope(self.x2) * (1.0 - 0.5 * h * d1)
         d3 = self._slope(self.x3) * (1.0 - 0.5 * h * d2)
