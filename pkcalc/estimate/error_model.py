@@ -2,12 +2,11 @@
 
 On the log scale, for levels j and k and one choice of (Vmax, kappa):
 
-    S_jk = [j = k] (assay_j^2 + day_j^2 + extra_j^2) + sum over windows w of G_jw G_kw s_w^2
+    S_jk = [j = k] (assay_j^2 + day_j^2 + extra_j^2) + sum over doses i of G_ji G_ki p_i (1 - p_i)
 
-G_jw is the rise of ln level j per fractional rise of the intake in window w, so the same missed dose moves a
-level little where elimination is far from saturated and much where it is near; levels that share doses share the
-error. s_w^2 = sum a_i^2 p_i (1 - p_i) / (sum a_i)^2 is the spread of the intake of a window in which each dose a_i
-differs from the record with chance p_i.
+G_ji is the rise of ln level j per fractional rise of dose i, and p_i the chance that the dose differs from the
+record: so the same missed dose moves a level little where elimination is far from saturated and much where it is
+near, and levels that share doses share the error (`intake`).
 
 One level may be wrong altogether: a mixture over "none" and "this one's spread is `wrong_level_factor` times as
 wide", which keeps every term Gaussian.
@@ -24,17 +23,9 @@ import numpy as np
 from numpy.typing import NDArray
 
 from pkcalc.errors import CaseError, Problem
-from pkcalc.record import Dose
 from pkcalc.units import show_number
 
 Floats = NDArray[np.float64]
-
-#: Days before a level at which its windows of intake are cut: doses further back count less and are lumped.
-WINDOW_CUTS_DAY = (1.0, 2.0, 4.0, 8.0, 16.0, 32.0)
-
-#: Cuts nearer to one another than this are one cut, so that many levels do not make many empty windows.
-SHORTEST_WINDOW_DAY = 0.75
-
 
 @dataclass(frozen=True)
 class LevelData:
@@ -185,46 +176,6 @@ class RecordSpread:
         )
 
 
-def intake_windows(
-    doses: Sequence[Dose], level_days: Sequence[float], spread: RecordSpread
-) -> tuple[tuple[tuple[float, float], ...], Floats]:
-    """Windows of the record that matter for the levels, and the variance of the fractional intake in each.
-
-    Doses by vein are taken as given as recorded. Windows without variance are left out. Returns the windows
-    (start, end) [day] and their variances.
-    """
-    if not doses or not level_days:
-        return (), np.empty(0)
-    begin, last = min(d.time_day for d in doses), max(level_days)
-    wanted = {begin, *(t for t in level_days if t > begin)}
-    wanted |= {t - back for t in level_days for back in WINDOW_CUTS_DAY if t - back > begin}
-    levels = set(level_days)
-    cuts: list[float] = []
-    for cut in sorted(wanted):
-        if not cuts or cut - cuts[-1] >= SHORTEST_WINDOW_DAY:
-            cuts.append(cut)
-        elif cut in levels:
-            # a level's own draw always ends a window: doses after it cannot have touched it
-            cuts[-1] = cut if cuts[-1] not in levels and len(cuts) > 1 else cuts[-1]
-    if last > cuts[-1]:
-        cuts.append(last)
-    found: list[tuple[float, float]] = []
-    variances: list[float] = []
-    for start, end in zip(cuts, cuts[1:], strict=False):
-        inside = [d for d in doses if start <= d.time_day < end]
-        total = math.fsum(d.amount_mg for d in inside)
-        unseen = math.fsum(
-            d.amount_mg**2 * p * (1 - p)
-            for d in inside
-            if d.absorption is not None
-            for p in (spread.share_at(d.time_day),)
-        )
-        if unseen > 0:
-            found.append((start, end))
-            variances.append(unseen / total**2)
-    return tuple(found), np.array(variances)
-
-
 @dataclass(frozen=True)
 class Components:
     """The log level of the volume given (Vmax, kappa) as a mixture of normals, at every node.
@@ -251,9 +202,9 @@ def logsumexp(values: Floats) -> Floats:
     return summed
 
 
-def covariance(own: Floats, intake: Floats, window_variance: Floats) -> Floats:
-    """S at every node: shape (nodes, m, m). own: (m,); intake: (nodes, m, windows)."""
-    scaled = intake * np.sqrt(window_variance)
+def covariance(own: Floats, gain: Floats, intake_variance: Floats) -> Floats:
+    """S at every node: shape (nodes, m, m). own: (m,); gain: (nodes, m, groups of doses)."""
+    scaled = gain * np.sqrt(intake_variance)
     shared: Floats = scaled @ scaled.transpose(0, 2, 1)
     m = len(own)
     shared[:, np.arange(m), np.arange(m)] += own

@@ -24,6 +24,12 @@ EFFECTIVE_NODES = 25.0
 #: Mass allowed on the outermost ring of the final grid.
 EDGE_MASS = 3e-6
 
+#: Nodes further out than this many times the reach are left out.
+CORNER = 1.05
+
+#: Log density, relative to the best, of a node that was left out.
+NOWHERE = -1e5
+
 #: A spline of a log density is clamped this far under its top: beyond, it only oscillates.
 _CLAMP = 30.0
 
@@ -44,20 +50,37 @@ class Frame:
         return self.mean[0] + self.root[0, 0] * z1, self.mean[1] + self.root[1, 0] * z1 + self.root[1, 1] * z2
 
 
-Density = Callable[[Floats, Floats], tuple[Floats, Components]]
+@dataclass(frozen=True)
+class Nodes:
+    """What is known at every node: log density (not normalised) and the log volume's mixture there, shape (N,) and
+    (N, parts); the course behind them: log amounts at the levels (N, m) and their covariance (N, m, m)."""
+
+    log_density: Floats
+    parts: Components
+    log_amount: Floats
+    cov: Floats
+
+
+#: Evaluates nodes given (log Vmax, log kappa) and a mask of those worth it; the others get no density.
+Density = Callable[[Floats, Floats, NDArray[np.bool_]], Nodes]
 
 
 @dataclass(frozen=True)
 class Quadrature:
     """Nodes of one grid. axis: z along both axes (n,); log_vmax, log_kappa, log_density: (n, n), z1 along rows;
-    parts: of the log volume, with nodes in the same order, flattened."""
+    nodes: in the same order, flattened."""
 
     frame: Frame
     axis: Floats
     log_vmax: Floats
     log_kappa: Floats
     log_density: Floats
-    parts: Components
+    radius: Floats
+    nodes: Nodes
+
+    @property
+    def parts(self) -> Components:
+        return self.nodes.parts
 
     @property
     def weights(self) -> Floats:
@@ -78,8 +101,7 @@ class Quadrature:
 
     @property
     def edge_mass(self) -> float:
-        w = self.weights
-        return float(np.sum(w) - np.sum(w[1:-1, 1:-1]))
+        return float(np.sum(self.weights[self.radius > 0.93 * self.axis[-1]]))
 
     def moments(self) -> tuple[Floats, Floats]:
         """Mean and covariance of (log Vmax, log kappa)."""
@@ -92,12 +114,13 @@ class Quadrature:
 
 
 def lay(frame: Frame, *, reach: float, n: int, density: Density) -> Quadrature:
-    """A grid of n x n nodes on +-reach in a frame."""
+    """A grid of n x n nodes on +-reach in a frame; its corners, a disc's worth away, are left out."""
     axis = np.linspace(-reach, reach, n)
     z1, z2 = np.meshgrid(axis, axis, indexing="ij")
     a, k = frame.points(z1, z2)
-    log_density, parts = density(a.ravel(), k.ravel())
-    return Quadrature(frame, axis, a, k, log_density.reshape(n, n), parts)
+    radius = np.hypot(z1, z2)
+    nodes = density(a.ravel(), k.ravel(), (radius <= CORNER * reach).ravel())
+    return Quadrature(frame, axis, a, k, nodes.log_density.reshape(n, n), radius, nodes)
 
 
 def scout(frame: Frame, density: Density, *, reach: float = 4.5, n: int = 20, tries: int = 8) -> Frame:

@@ -22,19 +22,21 @@ from pkcalc import flow, formulas
 from pkcalc.drugs.profile import Prior
 from pkcalc.errors import CannotEstimate, CaseError, Problem
 from pkcalc.estimate.error_model import (
+    CENSORED_POINTS,
     Components,
     LevelData,
     RecordSpread,
     censored_parts,
     covariance,
     gaussian_parts,
-    intake_windows,
 )
 from pkcalc.estimate.grid import (
     EDGE_MASS,
     EFFECTIVE_NODES,
     Frame,
+    NOWHERE,
     Marginal,
+    Nodes,
     Quadrature,
     draw,
     lay,
@@ -44,6 +46,7 @@ from pkcalc.estimate.grid import (
     sobol,
     vmax_marginal,
 )
+from pkcalc.estimate.intake import IntakePlan, intake_gain, plan_intake
 from pkcalc.estimate.result import Band, Estimate, LevelFit, Point, band, log_correlation
 from pkcalc.record import Before, Dose, FirstOrder, Record
 from pkcalc.units import show, show_number
@@ -151,24 +154,39 @@ class _Volume:
 # ------------------------------------------------------------------------------------------------ the model
 
 
+#: A node whose prior cannot be made up for by any levels, this far under the best one, is left out.
+_HOPELESS = 25.0
+
+
 @dataclass(frozen=True)
 class _Model:
-    """Everything a node needs: record with its earlier regimen written out, levels, windows, prior."""
+    """Everything a node needs: record with its earlier regimen written out, levels, doubtful doses, prior."""
 
     record: Record
     levels: tuple[LevelData, ...]
     spread: RecordSpread
-    windows: tuple[tuple[float, float], ...]
-    window_variance: Floats
+    intake: IntakePlan
     volume: _Volume
-    fastest_per_day: float
+    typical_per_day: float
+
+    @property
+    def own(self) -> Floats:
+        """Variance of each log level that it shares with no other."""
+        return np.array([x.own_variance for x in self.levels])
 
     def courses(self, a: Floats, k: Floats) -> tuple[Floats, Floats]:
-        """log amounts (nodes, m) and sensitivities to the intake (nodes, m, windows)."""
-        times = [x.time_day for x in self.levels]
+        """log amounts at the levels (nodes, m) and their sensitivities to the doubtful doses (nodes, m, groups)."""
         vmax, kappa = np.exp(a), np.exp(k)
         volume = np.exp(self.volume.log_volume(a, k))
-        amount = flow.amounts(self.record, times, vmax, kappa, volume_L=volume)
+        course = flow.amounts(
+            self.record,
+            self.intake.sample_days,
+            vmax,
+            kappa,
+            volume_L=volume,
+            typical_per_day=self.typical_per_day,
+        )
+        amount = course[:, self.intake.level_at]
         if not np.all(amount > 0):
             late = [x for x, ok in zip(self.levels, np.all(amount > 0, axis=0), strict=True) if not ok][0]
             raise CaseError(
@@ -180,32 +198,68 @@ class _Model:
                     "Add the earlier doses (a load, another hospital), or check the time of the draw",
                 )
             )
-        if self.windows:
-            gain = flow.sensitivity(self.record, times, self.windows, vmax, kappa, volume_L=volume)
-        else:
-            gain = np.zeros((len(a), len(times), 0))
-        return np.log(amount), gain
+        return np.log(amount), intake_gain(self.intake, self.record, course, vmax, kappa)
 
-    def parts(self, log_amount: Floats, gain: Floats, log_volume: Floats) -> Components:
-        """The log volume as a mixture at every node, with the likelihood in its weights."""
-        own = np.array([x.own_variance for x in self.levels])
-        observed = np.log([x.level_mg_per_L for x in self.levels])
-        residual = log_amount - observed - log_volume[:, None]
-        cov = covariance(own, gain, self.window_variance)
-        censored = [x.censored for x in self.levels]
+    def parts(self, residual: Floats, cov: Floats, which: Sequence[int]) -> Components:
+        """The log volume as a mixture at every node, given some of the levels, with the likelihood in its weights."""
+        if not which:
+            nodes = len(residual)
+            one = np.zeros((nodes, 1))
+            return Components(one, one, np.full((nodes, 1), self.volume.variance))
+        residual, cov = residual[:, which], cov[:, which][:, :, which]
+        censored = [self.levels[j].censored for j in which]
         if any(censored):
             return censored_parts(residual, cov, self.volume.variance, self.spread, censored)
         return gaussian_parts(residual, cov, self.volume.variance, self.spread)
 
-    def density(self, a: Floats, k: Floats) -> tuple[Floats, Components]:
-        """Log posterior density of the nodes (not normalised) and their mixtures."""
-        log_amount, gain = self.courses(a, k)
-        parts = self.parts(log_amount, gain, self.volume.log_volume(a, k))
-        return self.volume.log_density(a, k) + parts.log_total, parts
+    def residual(self, log_amount: Floats, log_volume: Floats) -> Floats:
+        """log X_j - log y_j - l0."""
+        observed = np.log([x.level_mg_per_L for x in self.levels])
+        found: Floats = log_amount - observed - log_volume[:, None]
+        return found
 
-    def scouting(self, a: Floats, k: Floats) -> tuple[Floats, Components]:
+    def density(self, a: Floats, k: Floats, worth: NDArray[np.bool_]) -> Nodes:
+        """Log posterior density of the nodes (not normalised), their mixtures and courses.
+
+        The slow nodes come first; of the fast ones, which cost many steps, only those are followed whose prior
+        times the largest likelihood any node can have comes near the best slow one.
+        """
+        m = len(self.levels)
+        prior = self.volume.log_density(a, k)
+        log_amount, cov = np.zeros((len(a), m)), np.broadcast_to(np.eye(m), (len(a), m, m)).copy()
+        log_density = np.full(len(a), NOWHERE)
+        count = (m + 1 if self.spread.wrong_level_chance > 0 else 1) * (
+            CENSORED_POINTS if any(x.censored for x in self.levels) else 1
+        )
+        parts = Components(
+            np.full((len(a), count), NOWHERE), np.zeros((len(a), count)), np.full((len(a), count), self.volume.variance)
+        )
+        measured = [v for v, x in zip(self.own, self.levels, strict=True) if x.censored is None]
+        most = -0.5 * sum(math.log(2 * math.pi * v) for v in measured)
+        slow = a - k <= math.log(4 * self.typical_per_day)
+
+        def follow(some: NDArray[np.bool_]) -> None:
+            if not some.any():
+                return
+            x, gain = self.courses(a[some], k[some])
+            s = covariance(self.own, gain, self.intake.variance)
+            found = self.parts(self.residual(x, self.volume.log_volume(a[some], k[some])), s, range(m))
+            log_amount[some], cov[some] = x, s
+            parts.log_weight[some], parts.mean[some], parts.variance[some] = (
+                np.maximum(found.log_weight, NOWHERE),
+                found.mean,
+                found.variance,
+            )
+            log_density[some] = np.maximum(prior[some] + found.log_total, NOWHERE)
+
+        follow(worth & slow)
+        best = float(np.max(log_density))
+        follow(worth & ~slow & (prior + most > best - _HOPELESS))
+        return Nodes(log_density, parts, log_amount, cov)
+
+    def scouting(self, a: Floats, k: Floats, worth: NDArray[np.bool_]) -> Nodes:
         """As `density`, with the fastest corner of the prior slowed down: it only has to be found empty."""
-        return self.density(a, np.maximum(k, a - math.log(4 * self.fastest_per_day)))
+        return self.density(a, np.maximum(k, a - math.log(4 * self.typical_per_day)), worth)
 
 
 def written_out(record: Record) -> Record:
@@ -229,12 +283,16 @@ def _model(record: Record, levels: Sequence[LevelData], prior: Prior, spread: Re
     full = written_out(record)
     if prior.first_order_per_day > 0 and not any(p.start_day == -math.inf for p in full.first_order):
         full = replace(full, first_order=(*full.first_order, FirstOrder(rate_per_day=prior.first_order_per_day)))
-    windows, variance = intake_windows(full.doses, [x.time_day for x in levels], spread)
+    intake = plan_intake(full, [x.time_day for x in levels], spread)
     volume = _Volume.of(prior)
+    typical = _typical_per_day(volume.centre, volume.cov)
+    return _Model(full, tuple(levels), spread, intake, volume, typical)
+
+
+def _typical_per_day(mean: Floats, cov: Floats) -> float:
+    """99 % point of Vmax / kappa, the fastest relative rate of elimination, from moments of the logs."""
     drift = np.array([1.0, -1.0])
-    sd = math.sqrt(float(drift @ volume.cov @ drift))
-    fastest = math.exp(float(drift @ volume.centre) + 2.326 * sd)
-    return _Model(full, tuple(levels), spread, windows, variance, volume, fastest)
+    return math.exp(float(drift @ mean) + 2.326 * math.sqrt(float(drift @ cov @ drift)))
 
 
 def _check(record: Record, levels: Sequence[LevelData]) -> None:
@@ -342,6 +400,7 @@ def _certified(
 ) -> tuple[Quadrature, Marginal, _Report]:
     """The smallest grid whose answer a second, shifted grid repeats; the largest one, distrusted, if none does."""
     frame = scout(Frame.of(model.volume.centre, model.volume.cov), model.scouting)
+    model = replace(model, typical_per_day=_typical_per_day(frame.mean, frame.root @ frame.root.T))
     wide = (
         prior.vmax_log_sd > WIDEST_LOG_SD["vmax"]
         or prior.km_log_sd > WIDEST_LOG_SD["km"]
@@ -390,43 +449,35 @@ def _report(model: _Model, q: Quadrature, rates: Sequence[float]) -> tuple[_Repo
 
 
 def _fit(model: _Model, q: Quadrature) -> tuple[LevelFit, ...]:
-    """Every level against the estimate, and how many of its spreads it lies from what the others predict.
+    """Every level against the estimate, and how many spreads it lies from what the others predict.
 
     The residual is of the level left out: the nodes are reweighted by what they say without it.
     """
     a, k = q.log_vmax.ravel(), q.log_kappa.ravel()
-    log_amount, gain = model.courses(a, k)
     l0 = model.volume.log_volume(a, k)
-    weights = q.part_weights
-    own = np.array([x.own_variance for x in model.levels])
-    cov = covariance(own, gain, model.window_variance)
-    prior = model.volume.log_density(a, k)
+    weights = q.part_weights.ravel()
     found = []
     for j, level in enumerate(model.levels):
-        centre = log_amount[:, j][:, None] - l0[:, None] - q.parts.mean
-        at = np.exp(mixture_quantiles(weights.ravel(), centre.ravel(), q.parts.variance.ravel(), _PROBABILITIES))
-        residual = _left_out(model, j, log_amount, gain, l0, cov[:, j, j], prior)
-        found.append(LevelFit(level.index, level.level_mg_per_L, Band(at[1], at[0], at[2]), residual))
+        centre = q.nodes.log_amount[:, j][:, None] - l0[:, None] - q.parts.mean
+        at = np.exp(mixture_quantiles(weights, centre.ravel(), q.parts.variance.ravel(), _PROBABILITIES))
+        predicted = Band(float(at[1]), float(at[0]), float(at[2]))
+        found.append(LevelFit(level.index, level.level_mg_per_L, predicted, _left_out(model, q, j, l0)))
     return tuple(found)
 
 
-def _left_out(
-    model: _Model, j: int, log_amount: Floats, gain: Floats, l0: Floats, variance: Floats, prior: Floats
-) -> float:
+def _left_out(model: _Model, q: Quadrature, j: int, l0: Floats) -> float:
     """(log level - its mean from the population and the other levels) / its spread from them, over the nodes."""
+    a, k = q.log_vmax.ravel(), q.log_kappa.ravel()
     others = [i for i in range(len(model.levels)) if i != j]
-    if others:
-        rest = replace(model, levels=tuple(model.levels[i] for i in others))
-        parts = rest.parts(log_amount[:, others], gain[:, others], l0)
-    else:
-        nodes = len(l0)
-        parts = Components(np.zeros((nodes, 1)), np.zeros((nodes, 1)), np.full((nodes, 1), model.volume.variance))
-    log_w = prior[:, None] + parts.log_weight
+    followed = q.nodes.log_density > 0.5 * NOWHERE
+    parts = model.parts(model.residual(q.nodes.log_amount, l0)[followed], q.nodes.cov[followed], others)
+    log_w = model.volume.log_density(a, k)[followed, None] + parts.log_weight
     w = np.exp(log_w - np.max(log_w))
     w /= np.sum(w)
-    centre = log_amount[:, j][:, None] - l0[:, None] - parts.mean
+    centre = (q.nodes.log_amount[followed, j] - l0[followed])[:, None] - parts.mean
     mean = float(np.sum(w * centre))
-    spread = math.sqrt(float(np.sum(w * ((centre - mean) ** 2 + parts.variance + variance[:, None]))))
+    own = q.nodes.cov[followed, j, j][:, None]
+    spread = math.sqrt(float(np.sum(w * ((centre - mean) ** 2 + parts.variance + own))))
     return (math.log(model.levels[j].level_mg_per_L) - mean) / spread
 
 
