@@ -138,7 +138,9 @@ class LineFailure:
 
     @property
     def text(self) -> str:
-        return f"{self.method}: this line fails on these data, because {self.because}."
+        kind = "curve" if self.method == REGRESSION else "plot" if self.method == DIRECT_LINEAR else "line"
+        name = self.method[0].upper() + self.method[1:]
+        return f"{name}: this {kind} fails on these data, because {self.because}."
 
 
 Result = Estimate | LineFailure
@@ -254,18 +256,29 @@ def crossings(*, level: Floats, rate: Floats, error_in: Literal["level", "rate"]
     )
 
 
-def _medians(found: Crossings) -> tuple[Floats, Floats]:
+def medians(found: Crossings) -> tuple[Floats, Floats]:
+    """Vmax and Km of the direct linear plot; infinite where half of the crossings or more lie outside."""
+    if len(found.first) == 0:
+        nowhere = np.full(found.km.shape[:-1], np.inf)
+        return nowhere, nowhere
     return np.median(found.vmax_counted, axis=-1), np.median(found.km_counted, axis=-1)
 
 
 # --- why a reading is refused -------------------------------------------------------------------------------
 
 
-def _admissible(vmax: Floats, km: Floats, largest: float) -> NDArray[np.bool_]:
+def admissible(vmax: Floats, km: Floats, pairs: SteadyPairs) -> NDArray[np.bool_]:
+    """Which readings a patient could have: positive, above every dose that gave a steady level, not "
+    "absurd."""
+    largest = float(pairs.rate_mg_per_day.max())
     with np.errstate(invalid="ignore"):
-        return (
-            np.isfinite(vmax) & np.isfinite(km) & (km > 0) & (vmax > largest) & (vmax < ABSURD_VMAX * largest)
-        )
+        settles = vmax > largest * (1.0 + 1e-9)  # nearer than that is rounding, not headroom
+        return np.isfinite(vmax) & np.isfinite(km) & (km > 0) & settles & (vmax < ABSURD_VMAX * largest)
+
+
+def _below_zero(name: str, value: float, unit: str) -> str:
+    """The number refused, for the resident to see; without digits where they mean nothing."""
+    return f"{name} {show(value, unit)}" if abs(value) < 1e5 else f"a {name} far below 0"
 
 
 def _why_not(vmax: float, km: float, pairs: SteadyPairs) -> str:
@@ -274,18 +287,20 @@ def _why_not(vmax: float, km: float, pairs: SteadyPairs) -> str:
     if not (np.isfinite(vmax) and np.isfinite(km)):
         return "no saturation shows in the way it weighs them"
     if vmax <= 0 or km <= 0:
-        bad = [f"Vmax {show(vmax, 'mg/day')}"] * (vmax <= 0) + [f"Km {show(km, 'mg/L')}"] * (km <= 0)
+        bad = [_below_zero("Vmax", vmax, "mg/day")] * (vmax <= 0) + [_below_zero("Km", km, "mg/L")] * (
+            km <= 0
+        )
         return f"it would read {' and '.join(bad)}, which is impossible"
-    if vmax <= largest:
+    if vmax <= largest * (1.0 + 1e-9):
         return (
             f"it would read Vmax {show(vmax, 'mg/day', 4)}, not above the {show(largest, 'mg/day', 4)} "
             "that gave a steady level"
         )
     if vmax >= ABSURD_VMAX * largest:
         return (
-            f"it would read Vmax {show(vmax, 'mg/day')}, more than {show_number(ABSURD_VMAX)} times the "
-            "highest "
-            "dose, so no saturation shows in the way it weighs them"
+            f"it would read a Vmax more than {show_number(ABSURD_VMAX)} times the highest dose, so no "
+            "saturation shows "
+            "in the way it weighs them"
         )
     return ""
 
@@ -323,6 +338,7 @@ def _finish(
     rejected: float,
     diagnostics: dict[str, object],
     distrust: list[str],
+    rejected_words: str,
     volume: VolumeSpread | None,
 ) -> Estimate:
     n = len(vmax)
@@ -346,11 +362,7 @@ def _finish(
         for at, rate in enumerate(pairs.rate_mg_per_day)
     )
     if rejected > MOST_REJECTED:
-        distrust.append(
-            f"with the levels drawn again within their spread, {show_number(100 * rejected, 2)} % of the "
-            "sets give "
-            "no possible answer"
-        )
+        distrust.append(f"{_per_cent(rejected)} {rejected_words}")
     return Estimate(
         method=method,
         vmax_mg_per_day=vmax,
@@ -385,7 +397,7 @@ def _resampled(
     diagnostics: dict[str, object],
     volume: VolumeSpread | None,
 ) -> Estimate | None:
-    kept = _admissible(drawn[0], drawn[1], float(pairs.rate_mg_per_day.max()))
+    kept = admissible(drawn[0], drawn[1], pairs)
     if not kept.any():
         return None
     return _finish(
@@ -397,8 +409,13 @@ def _resampled(
         rejected=float(1.0 - kept.mean()),
         diagnostics={"interval": "levels drawn again within their own spread", **diagnostics},
         distrust=[],
+        rejected_words="of the sets redrawn within the spread of the levels give no possible answer",
         volume=volume,
     )
+
+
+_ONE_DOSE = "all levels were taken on one daily dose"
+_NO_REDRAW = "with the levels drawn again within their spread it never gives a possible answer"
 
 
 # --- the five methods ---------------------------------------------------------------------------------------
@@ -406,6 +423,8 @@ def _resampled(
 
 def _by_regression(pairs: SteadyPairs, draws: int, volume: VolumeSpread | None) -> Result:
     rate, level, spread = pairs.rate_mg_per_day, pairs.level_mg_per_L, pairs.level_log_sd
+    if len(np.unique(rate)) < 2:
+        return LineFailure(REGRESSION, _ONE_DOSE)
     try:
         fit = level_on_rate(rate_mg_per_day=rate, level_mg_per_L=level, level_log_sd=spread)
     except CannotEstimate as error:
@@ -436,7 +455,7 @@ def _by_regression(pairs: SteadyPairs, draws: int, volume: VolumeSpread | None) 
     if widened_by > 1.0:
         distrust.append(
             f"the levels scatter {show_number(fit.sigma, 2)} times more than their stated spread explains "
-            f"(chance {show_number(100 * chance, 2)} %); the interval was widened by that factor"
+            f"(chance {_per_cent(chance)}); the interval was widened by that factor"
         )
     diagnostics: dict[str, object] = {
         "interval": "profile likelihood",
@@ -455,8 +474,13 @@ def _by_regression(pairs: SteadyPairs, draws: int, volume: VolumeSpread | None) 
         rejected=rejected,
         diagnostics=diagnostics,
         distrust=distrust,
+        rejected_words="is the chance, by these levels alone, that no saturation shows at all",
         volume=volume,
     )
+
+
+def _per_cent(share: float) -> str:
+    return f"{show_number(100 * share, 2)} %" if share >= 0.001 else "less than 0.1 %"
 
 
 def _chance_of_scatter(fit: CurveFit) -> float:
@@ -485,11 +509,9 @@ def _by_crossings(pairs: SteadyPairs, draws: int, volume: VolumeSpread | None) -
     rate = pairs.rate_mg_per_day
     found = crossings(level=pairs.level_mg_per_L, rate=rate, error_in="level")
     if len(found.first) == 0:
-        return LineFailure(
-            DIRECT_LINEAR, "all levels were taken on one daily dose, where the lines tell nothing about Km"
-        )
+        return LineFailure(DIRECT_LINEAR, _ONE_DOSE)
     outside = int(np.isinf(found.km_counted).sum())
-    vmax, km = (float(value) for value in _medians(found))
+    vmax, km = (float(value) for value in medians(found))
     if not np.isfinite(vmax):
         return LineFailure(
             DIRECT_LINEAR,
@@ -499,7 +521,7 @@ def _by_crossings(pairs: SteadyPairs, draws: int, volume: VolumeSpread | None) -
     why = _why_not(vmax, km, pairs)
     if why:
         return LineFailure(DIRECT_LINEAR, why)
-    drawn = _medians(crossings(level=redrawn_levels(pairs, draws), rate=rate, error_in="level"))
+    drawn = medians(crossings(level=redrawn_levels(pairs, draws), rate=rate, error_in="level"))
     result = _resampled(
         method=DIRECT_LINEAR,
         pairs=pairs,
@@ -517,15 +539,12 @@ def _by_crossings(pairs: SteadyPairs, draws: int, volume: VolumeSpread | None) -
     return result or LineFailure(DIRECT_LINEAR, _NO_REDRAW)
 
 
-_NO_REDRAW = "with the levels drawn again within their spread it never gives a possible answer"
-
-
 def _by_straight_line(
     kind: StraightLine, pairs: SteadyPairs, draws: int, volume: VolumeSpread | None
 ) -> Result:
     rate = pairs.rate_mg_per_day
     if len(np.unique(rate)) < 2:
-        return LineFailure(kind, "all levels were taken on one daily dose")
+        return LineFailure(kind, _ONE_DOSE)
     x, _ = line_axes(kind, level=pairs.level_mg_per_L, rate=rate)
     if np.ptp(x) <= 1e-12 * float(np.max(x)):
         return LineFailure(kind, "its points stand above one another, so no line can be laid through them")

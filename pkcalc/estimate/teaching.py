@@ -14,7 +14,6 @@ import numpy as np
 from pkcalc import formulas
 from pkcalc.errors import CannotEstimate
 from pkcalc.estimate.lines import (
-    ABSURD_VMAX,
     DIRECT_LINEAR,
     REGRESSION,
     STRAIGHT_LINES,
@@ -22,9 +21,11 @@ from pkcalc.estimate.lines import (
     Result,
     SteadyPairs,
     StraightLine,
+    admissible,
     compare,
     crossings,
     line_axes,
+    medians,
     redrawn_levels,
     straight_line,
 )
@@ -135,7 +136,10 @@ def pictures(pairs: SteadyPairs, *, repeats: int = 24, log_sd: Floats | None = N
     than the pairs' own for these repeats, shape (n,), to show what one part of it (the assay) does alone.
     """
     results = {result.method: result for result in compare(pairs, draws=512)}
-    redrawn = redrawn_levels(pairs, repeats, log_sd) if repeats else None
+    two_doses = (
+        len(np.unique(pairs.rate_mg_per_day)) > 1
+    )  # on one dose nothing is read, however often redrawn
+    redrawn = redrawn_levels(pairs, repeats, log_sd) if repeats and two_doses else None
     return (
         _direct_linear(pairs, results[DIRECT_LINEAR], redrawn),
         *(_straight(kind, pairs, results[kind], redrawn) for kind in STRAIGHT_LINES),
@@ -169,8 +173,8 @@ def _direct_linear(pairs: SteadyPairs, result: Result, redrawn: Floats | None) -
     traces, repeat_words = [], ""
     if redrawn is not None:
         found = crossings(level=redrawn, rate=rate, error_in="level")
-        vmax, km = np.median(found.vmax_counted, axis=-1), np.median(found.km_counted, axis=-1)
-        good = _usable(vmax, km, pairs)
+        vmax, km = medians(found)
+        good = admissible(vmax, km, pairs)
         traces += [
             Trace(f"repeat {at + 1}", "repeat", (float(km[at]),), (float(vmax[at]),))
             for at in np.flatnonzero(good)
@@ -202,7 +206,7 @@ def _straight(kind: StraightLine, pairs: SteadyPairs, result: Result, redrawn: F
     traces, repeat_words = [], ""
     if redrawn is not None:
         read = straight_line(kind, level=redrawn, rate=rate)
-        good = _usable(read.vmax, read.km, pairs)
+        good = admissible(read.vmax, read.km, pairs)
         ends = np.array([0.0, far])
         traces += [
             _joined(f"repeat {at + 1}", "repeat", ends, read.intercept[at] + read.slope[at] * ends)
@@ -242,7 +246,7 @@ def _curve(pairs: SteadyPairs, result: Result, redrawn: Floats | None) -> Pictur
             except CannotEstimate:
                 continue  # counted among the sets that give no possible answer
             fitted[at] = fit.vmax, fit.km
-        good = _usable(fitted[:, 0], fitted[:, 1], pairs)
+        good = admissible(fitted[:, 0], fitted[:, 1], pairs)
         traces += [
             _level_curve(f"repeat {at + 1}", "repeat", float(fitted[at, 0]), float(fitted[at, 1]), roof)
             for at in np.flatnonzero(good)
@@ -267,12 +271,6 @@ def _level_curve(name: str, layer: str, vmax: float, km: float, roof: float) -> 
     level = np.linspace(0.0, roof, _CURVE_POINTS)
     rate = formulas.dose_rate_for_level(level_mg_per_L=level, vmax_mg_per_day=vmax, km_mg_per_L=km)
     return _joined(name, layer, np.asarray(rate), level)
-
-
-def _usable(vmax: Floats, km: Floats, pairs: SteadyPairs) -> np.ndarray[tuple[int, ...], np.dtype[np.bool_]]:
-    largest = float(pairs.rate_mg_per_day.max())
-    with np.errstate(invalid="ignore"):
-        return np.isfinite(km) & (km > 0) & (vmax > largest) & (vmax < ABSURD_VMAX * largest)
 
 
 def _repeat_words(vmax: Floats, km: Floats, good: np.ndarray[tuple[int, ...], np.dtype[np.bool_]]) -> str:

@@ -85,7 +85,7 @@ def check_pairs(pairs: SteadyPairs) -> tuple[PairCheck, ...]:
         else:
             side = "above" if residual >= 0 else "below"
             text += f" lies {show_number(abs(residual), 2)} spreads {side} the curve"
-        text += f"; crossings outside the positive quadrant: {outside} of {len(km)}."
+        text += f"; crossings outside the positive quadrant: {outside} of {len(km)}." if len(km) else "."
         checks.append(
             PairCheck(
                 level=int(pairs.index[at]),
@@ -145,7 +145,12 @@ def verdict(results: tuple[Result, ...], pairs: SteadyPairs) -> Verdict:
         )
     if not regression.trusted:
         text = f"Trust none of these yet: {regression.distrust}."
-        text += f" {odd} Check it first." if odd else " No single pair can be blamed: check them all."
+        if regression.diagnostics["widened by"] != 1.0:
+            text += f" {odd} Check it first." if odd else " No single pair can be blamed: check them all."
+        else:
+            text += (
+                " The levels do not contradict one another; they lie too nearly in proportion to the dose."
+            )
         if isinstance(direct, Estimate):
             text += f" One wrong level moves the direct linear plot least: {_numbers(direct)}."
         return Verdict(None, text + tail, suspects)
