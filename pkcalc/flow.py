@@ -22,9 +22,9 @@ from numpy.typing import ArrayLike, NDArray
 
 from pkcalc import formulas
 from pkcalc.errors import CaseError, Problem
-from pkcalc.periodic import PeriodicState, parabola, periodic
+from pkcalc.periodic import PeriodicState, periodic
 from pkcalc.record import Absorption, Before, Dose, FirstOrder, Record, Repeated, duplicates
-from pkcalc.stepping import BLOCK, Accuracy, Block, Floats, Plan, Speed, Step, march, plan_steps, run, speeds
+from pkcalc.stepping import BLOCK, Accuracy, Floats, Plan, Speed, march, plan_steps, run, speeds
 
 __all__ = [
     "Absorption",
@@ -68,8 +68,8 @@ def amounts(
     times_day: at or after the record's start. vmax_mg_per_day, kappa_mg (Km V): shape (n,) or single
     numbers, > 0. volume_L: needed only where a first-order path is given as a clearance. start_mg: amount
     at the record's start, in place of what the record says. accuracy: largest relative error about 3e-3
-    (everyday), 4e-5 (fine), 2e-7 (finest). typical_per_day: 99 % point of Vmax/kappa, which sets the steps; of
-    the draws themselves unless given (nodes of a grid are not equally likely). Raises CaseError for times
+    (everyday), 4e-5 (fine), 2e-7 (finest). typical_per_day: 99 % point of Vmax/kappa, which sets the steps;
+    of the draws themselves unless given (nodes of a grid are not equally likely). Raises CaseError for times
     before the start and parameters that are not positive.
     """
     times = _times(record, times_day)
@@ -205,7 +205,7 @@ def first_crossing(
     sign = -1.0 if falling else 1.0
     out = np.full(vmax.shape, np.inf)
     for speed in speeds(_fastest(vmax, kappa, rates)):
-        plan = _plan(record, speed, speed.fineness(accuracy), (), end_day=until_day, exact=False)
+        plan = _plan(record, speed, speed.fineness(accuracy), (), end_day=until_day)
         for begin in range(0, len(speed.positions), BLOCK):
             some = speed.positions[begin : begin + BLOCK]
             aim = threshold[some] / vmax[some]
@@ -216,28 +216,13 @@ def first_crossing(
                 if step is None:
                     when[sign * (block.w - aim) >= 0] = record.start_day
                     continue
-                at = _first_root(block, step, aim, sign)
+                at = block.first_reach(step, aim, falling)
                 begins = plan.ends_day[number - 2] if number > 1 else record.start_day
                 np.fmin(when, begins + at * step.h, out=when)
                 if np.isfinite(when).all():
                     break
             out[some] = when
     return out
-
-
-def _first_root(block: Block, step: Step, aim: Floats, sign: float) -> Floats:
-    """Where in the step just taken (0 to 1) the state first is at or beyond the aim; +inf where it is not."""
-    a, b, c = parabola(block, step)
-    a, b, c = sign * (a - aim), sign * b, sign * c
-    with np.errstate(divide="ignore", invalid="ignore", over="ignore"):
-        spread = b * b - 4.0 * a * c
-        h = -0.5 * (b + np.copysign(np.sqrt(spread), b))
-        roots = np.stack([h / c, a / h])
-        roots = np.where((roots >= 0) & (roots <= 1), roots, np.inf)
-    first = np.min(np.where(np.isnan(roots), np.inf, roots), axis=0)
-    first = np.where((first == np.inf) & (a + b + c >= 0), 1.0, first)
-    result: Floats = np.where(a >= 0, 0.0, first)
-    return result
 
 
 def days_to_fraction(

@@ -75,7 +75,6 @@ def cycle_plan(regimen: Repeated, speed: Speed, accuracy: Accuracy) -> Plan:
         fineness=speed.fineness(accuracy),
         stiff=speed.stiff,
         first_order=(FirstOrder(rate_per_day=0.0),),
-        exact=False,
     )
 
 
@@ -184,30 +183,20 @@ def _follow(
         if step is None:
             continue
         begin = plan.ends_day[number - 2] if number > 1 else plan.start_day
-        # the state just before a push, then the parabola through the step's start, middle and end
+        # the state just before a push, then the step's own course
         _keep(low, low_time, before, begin, np.less)
         for value, at in _turning_points(block, step):
             _keep(low, low_time, value, begin + at * step.h, np.less)
             _keep(high, high_time, value, begin + at * step.h, np.greater)
-        area += (step.h / 6.0) * (block.start + 4.0 * block.middle(step) + block.w)
+        area += block.area(step)
         before = block.w.copy()
     found["trough"][some], found["trough_time"][some] = low * vmax, low_time
     found["peak"][some], found["peak_time"][some] = high * vmax, high_time
     found["average"][some] = area * vmax / cycle_day
 
 
-def parabola(block: Block, step: Step) -> tuple[Floats, Floats, Floats]:
-    """a, b, c of the state a + b x + c x^2 over the step just taken, x from 0 to 1."""
-    middle = block.middle(step)
-    return (
-        block.start,
-        4.0 * middle - 3.0 * block.start - block.w,
-        2.0 * (block.start + block.w) - 4.0 * middle,
-    )
-
-
 def _turning_points(block: Block, step: Step) -> tuple[tuple[Floats, Floats], ...]:
-    a, b, c = parabola(block, step)
+    a, b, c = block.parabola(step)
     with np.errstate(divide="ignore", invalid="ignore", over="ignore"):
         at = np.where(c != 0, -b / (2.0 * c), 0.0)
     at = np.where((at > 0) & (at < 1), at, 0.0)

@@ -222,7 +222,7 @@ def plan_steps(
                     assert s.ka is not None
                     growth = math.exp(min(0.2 * s.ka * (moment - s.since), 30.0))
                     limit = min(limit, 0.5 / (s.ka * fineness) * growth)
-                    if stiff and left > 2e-4 / s.ka:
+                    if stiff and left > 1e-3 / (s.ka * fineness):
                         limit = min(limit, 0.5 * left)
                 pieces = math.ceil(left / limit * (1 - 1e-9))
                 h = left / pieces if pieces <= 2 or limit == longest else limit
@@ -261,9 +261,9 @@ def plan_steps(
 FINENESS: Mapping[Accuracy, float] = {"everyday": 1.0, "fine": 4.0, "finest": 16.0}
 
 
-#: Above this rate per day (a time constant under 4 minutes) the explicit step would need more work than
+#: Above this rate per day (a time constant under 2 minutes) the explicit step would need more work than
 #: constant pieces: draws whose Km is next to nothing, whose levels collapse to it between doses.
-STIFF_PER_DAY = 400.0
+STIFF_PER_DAY = 1000.0
 
 
 class Speed(NamedTuple):
@@ -280,7 +280,7 @@ class Speed(NamedTuple):
         """By what the everyday steps are divided; constant pieces are of second order and need more of
         them."""
         fine = FINENESS[accuracy]
-        return 4.0 * fine**1.5 if self.stiff else fine
+        return 8.0 * fine**1.5 if self.stiff else fine
 
 
 def speeds(fastest_per_day: Floats, typical_per_day: float | None = None) -> tuple[Speed, ...]:
@@ -368,15 +368,71 @@ class Block:
         np.subtract(whole, total, out=w)
 
     def middle(self, step: Step) -> Floats:
-        """The state in the middle of the step just taken (third order; half-way along a constant piece)."""
+        """The state in the middle of the Runge-Kutta step just taken (third order)."""
         h = step.h
-        if step.rate is not None:
-            return 0.5 * (self.start + self.w)
         out: Floats = self.start + self.inverse * step.half
         out -= (5 * h / 24) * self.u1
         out -= (h / 6) * (self.u2 + self.u3)
         out += (h / 24) * self.u4
         return out
+
+    def area(self, step: Step) -> Floats:
+        """Integral of the state over the step just taken: exact for a constant piece, else Simpson's rule."""
+        if step.rate is not None:
+            return formulas.auc(
+                time_day=step.h,
+                start_mg_per_L=self.start,
+                dose_rate_mg_per_day=self.rate,
+                vmax_mg_per_day=1.0,
+                km_mg_per_L=self.big_k,
+                volume_L=1.0,
+                linear_clearance_L_per_day=0.0 if self.k is None else self.k,
+            )
+        total: Floats = 4.0 * self.middle(step)
+        total += self.start
+        total += self.w
+        total *= step.h / 6.0
+        return total
+
+    def first_reach(self, step: Step, aim: Floats, falling: bool) -> Floats:
+        """Where in the step just taken (0 to 1) the state first is at or beyond the aim; +inf where it is
+        not."""
+        sign = -1.0 if falling else 1.0
+        a, b, c = (sign * part for part in self.parabola(step))
+        a = a - sign * aim
+        there = a >= 0
+        end = sign * (self.w - aim) >= 0
+        if step.rate is not None:
+            time = formulas.time_to_level(
+                start_mg_per_L=self.start,
+                end_mg_per_L=aim,
+                dose_rate_mg_per_day=self.rate,
+                vmax_mg_per_day=1.0,
+                km_mg_per_L=self.big_k,
+                volume_L=1.0,
+                linear_clearance_L_per_day=0.0 if self.k is None else self.k,
+            )
+            within = np.where(end, np.minimum(time / step.h, 1.0), np.inf)
+            return np.where(there, 0.0, within)
+        with np.errstate(divide="ignore", invalid="ignore", over="ignore"):
+            h = -0.5 * (b + np.copysign(np.sqrt(b * b - 4.0 * a * c), b))
+            roots = np.stack([h / c, a / h])
+            roots = np.where((roots >= 0) & (roots <= 1), roots, np.inf)
+        first = np.min(roots, axis=0)
+        first = np.where((first == np.inf) & end, 1.0, first)
+        return np.where(there, 0.0, first)
+
+    def parabola(self, step: Step) -> tuple[Floats, Floats, Floats]:
+        """a, b, c of the state a + b x + c x^2 over the step just taken, x from 0 to 1 (c = 0: its two
+        ends)."""
+        if step.rate is not None:
+            return self.start, self.w - self.start, np.zeros_like(self.w)
+        middle = self.middle(step)
+        return (
+            self.start,
+            4.0 * middle - 3.0 * self.start - self.w,
+            2.0 * (self.start + self.w) - 4.0 * middle,
+        )
 
     def slopes(self, step: Step) -> Floats:
         """Integral of the slope of the elimination over the step just taken (Simpson)."""
