@@ -44,9 +44,8 @@ MOVEMENTS: Mapping[Movement, Mapping[str, str]] = {
     "Vmax up": {
         DIRECT_LINEAR: "The crossing moves straight up: same Km, higher Vmax.",
         "double reciprocal": (
-            "The line turns down about its x-intercept, minus one divided by Km: it is "
-            "less steep and "
-            "meets the vertical axis lower."
+            "The line turns down about its x-intercept, minus one divided by Km: it is less steep and meets "
+            "the vertical axis lower."
         ),
         "C/R against C": "The line turns down about its x-intercept, minus Km: less steep.",
         "R against R/C": "The line moves up, parallel to itself: same slope, since Km is the same.",
@@ -57,16 +56,14 @@ MOVEMENTS: Mapping[Movement, Mapping[str, str]] = {
     "Vmax down": {
         DIRECT_LINEAR: "The crossing moves straight down: same Km, lower Vmax.",
         "double reciprocal": (
-            "The line turns up about its x-intercept, minus one divided by Km: it is "
-            "steeper and meets "
-            "the vertical axis higher. It does not simply shift."
+            "The line turns up about its x-intercept, minus one divided by Km: it is steeper and meets the "
+            "vertical axis higher. It does not simply shift."
         ),
         "C/R against C": "The line turns up about its x-intercept, minus Km: steeper.",
         "R against R/C": "The line moves down, parallel to itself: same slope, since Km is the same.",
         LEVEL_AGAINST_DOSE: (
-            "The curve is squeezed to the left: every level needs less drug per day, in "
-            "proportion to "
-            "Vmax, and the dose rate that can never settle comes nearer."
+            "The curve is squeezed to the left: every level needs less drug per day, in proportion to Vmax, "
+            "and the dose rate that can never settle comes nearer."
         ),
     },
     "Km up": {
@@ -87,20 +84,17 @@ MOVEMENTS: Mapping[Movement, Mapping[str, str]] = {
     },
     "false point": {
         DIRECT_LINEAR: (
-            "The patient's crossing stays. Taken for steady, the low level draws a line through "
-            "the same dose "
-            "rate but too steep, and its crossings are false."
+            "The patient's crossing stays. Taken for steady, the low level draws a line through the same "
+            "dose rate but too steep, and its crossings are false."
         ),
         "double reciprocal": (
-            "The patient's line stays. Taken for steady, the low level stands too far to "
-            "the right at "
-            "the height of its dose, where it pulls hardest on the line."
+            "The patient's line stays. Taken for steady, the low level stands too far to the right at the "
+            "height of its dose, where it pulls hardest on the line."
         ),
         "C/R against C": "The patient's line stays. Taken for steady, the low level stands too far down and "
         "to the left.",
         "R against R/C": "The patient's line stays. Taken for steady, the low level stands too far to the "
-        "right at the "
-        "height of its dose.",
+        "right at the height of its dose.",
         LEVEL_AGAINST_DOSE: (
             "The patient's curve stays. Taken for steady, the low level stands straight below it."
         ),
@@ -207,9 +201,8 @@ def _effect_words(patient: Patient, before: float | None, after: float | None, d
     dose_before = _holds(patient.aim_mg_per_L, patient.vmax_mg_per_day, patient.km_mg_per_L)
     return (
         f"On {show(patient.dose_rate_mg_per_day, 'mg/day')} the steady level goes from "
-        f"{_level_words(before)} to "
-        f"{_level_words(after)}. To hold {show(patient.aim_mg_per_L, 'mg/L')} it now takes "
-        f"{show(dose_after, 'mg/day')} instead of {show(dose_before, 'mg/day')}."
+        f"{_level_words(before)} to {_level_words(after)}. To hold {show(patient.aim_mg_per_L, 'mg/L')} it "
+        f"now takes {show(dose_after, 'mg/day')} instead of {show(dose_before, 'mg/day')}."
     )
 
 
@@ -329,8 +322,7 @@ def _missed(patient: Patient, missed_days: float, restarted_days: float, volume_
         name="missed week" if missed_days == 7 else "missed doses",
         story=f"No dose was taken for {show(missed_days, 'days')}, then the old dose again for "
         f"{show(restarted_days, 'days')}, then the level was drawn. Vmax and Km stay; the level is not a "
-        "steady one and "
-        "has no place in these pictures.",
+        "steady one and has no place in these pictures.",
         vmax_mg_per_day=vmax,
         km_mg_per_L=km,
         level_before_mg_per_L=steady,

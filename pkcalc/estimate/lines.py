@@ -293,14 +293,13 @@ def _why_not(vmax: float, km: float, pairs: SteadyPairs) -> str:
         return f"it would read {' and '.join(bad)}, which is impossible"
     if vmax <= largest * (1.0 + 1e-9):
         return (
-            f"it would read Vmax {show(vmax, 'mg/day', 4)}, not above the {show(largest, 'mg/day', 4)} "
-            "that gave a steady level"
+            f"it would read Vmax {show(vmax, 'mg/day', 4)}, not above the {show(largest, 'mg/day', 4)} that "
+            "gave a steady level"
         )
     if vmax >= ABSURD_VMAX * largest:
         return (
             f"it would read a Vmax more than {show_number(ABSURD_VMAX)} times the highest dose, so no "
-            "saturation shows "
-            "in the way it weighs them"
+            "saturation shows in the way it weighs them"
         )
     return ""
 

@@ -105,15 +105,12 @@ AXES: Mapping[str, tuple[Axis, Axis]] = {
 HOW_READ: Mapping[str, str] = {
     DIRECT_LINEAR: (
         "Each level is one line, from minus the level on the Km axis through its dose rate on the Vmax "
-        "axis. Where "
-        "two lines cross, one Vmax and one Km explain both levels; the medians of all crossings are the "
-        "answer. "
-        "Crossings outside the positive quadrant count as larger than any number."
+        "axis. Where two lines cross, one Vmax and one Km explain both levels; the medians of all crossings "
+        "are the answer. Crossings outside the positive quadrant count as larger than any number."
     ),
     "double reciprocal": (
         "Vmax is one divided by the height at which the line meets the vertical axis; Km is minus one "
-        "divided by "
-        "the place at which it meets the horizontal axis."
+        "divided by the place at which it meets the horizontal axis."
     ),
     "C/R against C": (
         "Vmax is one divided by the slope; Km is minus the place at which the line meets the horizontal axis."
@@ -279,9 +276,8 @@ def _repeat_words(vmax: Floats, km: Floats, good: np.ndarray[tuple[int, ...], np
         return f"None of {total} redrawn sets gives a possible answer."
     text = (
         f"In {total - failed} of {total} redrawn sets Vmax is read from "
-        f"{show_number(float(vmax[good].min()))} to "
-        f"{show(float(vmax[good].max()), 'mg/day')} and Km from {show_number(float(km[good].min()))} to "
-        f"{show(float(km[good].max()), 'mg/L')}"
+        f"{show_number(float(vmax[good].min()))} to {show(float(vmax[good].max()), 'mg/day')} and Km from "
+        f"{show_number(float(km[good].min()))} to {show(float(km[good].max()), 'mg/L')}"
     )
     return text + (
         "." if not failed else f"; {failed} {'gives' if failed == 1 else 'give'} no possible answer."

@@ -129,8 +129,7 @@ def verdict(results: tuple[Result, ...], pairs: SteadyPairs) -> Verdict:
     ]
     tail = (
         f" {_listed(failed)} {'fails' if len(failed) == 1 else 'fail'} here, which is what straight lines "
-        "do: "
-        "they let the levels count by their place on the axis, not by their certainty."
+        "do: they let the levels count by their place on the axis, not by their certainty."
         if failed
         else " The straight lines give numbers here, but let the levels count by their place on the axis, "
         "not by their certainty: for teaching only."
@@ -139,8 +138,7 @@ def verdict(results: tuple[Result, ...], pairs: SteadyPairs) -> Verdict:
         return Verdict(
             None,
             f"Trust none of these. {regression.text} What no weighting of the levels shows, no line can: "
-            "check doses "
-            "taken, sampling times and units, or add a steady level on another dose.",
+            "check doses taken, sampling times and units, or add a steady level on another dose.",
             suspects,
         )
     if not regression.trusted:
@@ -156,8 +154,7 @@ def verdict(results: tuple[Result, ...], pairs: SteadyPairs) -> Verdict:
         return Verdict(None, text + tail, suspects)
     text = (
         f"Trust the {REGRESSION}: each level counts by its own spread, and Vmax stays above every dose that "
-        "gave a "
-        f"steady level ({_numbers(regression)})."
+        f"gave a steady level ({_numbers(regression)})."
     )
     if isinstance(direct, LineFailure):
         text += f" The direct linear plot gives no answer: {direct.because}."
