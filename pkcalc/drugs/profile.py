@@ -18,6 +18,7 @@ from functools import cache
 from importlib import resources
 from typing import Any, Literal, TypeVar, cast
 
+from pkcalc import formulas
 from pkcalc.errors import CaseError, DrugFileError, Problem
 from pkcalc.sources import STATUSES, Source, Status, all_sources
 from pkcalc.units import FACTORS, show_number
@@ -528,12 +529,16 @@ class Population:
             else:
                 used.append(f"Weight used: {shown} kg, as given.")
             return capped, capped
-        ideal = ideal_weight_kg(height_cm, sex)
+        ideal = float(formulas.ideal_body_weight(height_cm=height_cm, sex=sex))
         if weight_kg <= rule.obese_from * ideal:
             used.append(f"Weight used: {shown} kg, as given.")
             return weight_kg, weight_kg
         vmax_weight = rule.obese_from * ideal + rule.vmax_excess_share * (weight_kg - rule.obese_from * ideal)
-        volume_weight = ideal + rule.volume_excess_factor * (weight_kg - ideal)
+        volume_weight = float(
+            formulas.weight_with_excess(
+                weight_kg=weight_kg, ideal_weight_kg=ideal, excess_factor=rule.volume_excess_factor
+            )
+        )
         used.append(
             f"Obesity: of {shown} kg (ideal {show_number(ideal)} kg), {show_number(vmax_weight)} kg was used "
             f"for Vmax and {show_number(volume_weight)} kg for the volume."
@@ -544,12 +549,6 @@ class Population:
 def log_sd(cv: float) -> float:
     """Log-scale standard deviation of a log-normal spread with this coefficient of variation."""
     return math.sqrt(math.log1p(cv * cv))
-
-
-def ideal_weight_kg(height_cm: float, sex: Sex) -> float:
-    """Ideal body weight: 50 (men) or 45.5 (women) + 2.3 kg per inch over 60 (Devine 1974, from memory)."""
-    base = 50.0 if sex == "male" else 45.5
-    return base + 2.3 * (height_cm / 2.54 - 60.0)
 
 
 @dataclass(frozen=True)

@@ -1,0 +1,722 @@
+"""Re-runs published examples through the public functions, on any machine, for local acceptance before use.
+
+The examples are `evidence/*.toml`, typed from their sources, never from our own output. The printed digits of
+an expected value set its tolerance: half of the last digit, unless a wider one is given with its reason. Each
+example is also run with each input moved by 20 % up and down: an input whose change goes unnoticed makes the
+example worthless for it, so it fails unless the reason is written down.
+"""
+
+from __future__ import annotations
+
+import csv
+import re
+import tomllib
+from collections.abc import Callable, Mapping
+from dataclasses import dataclass
+from functools import cache
+from importlib import resources
+from typing import Any, Literal
+
+import numpy as np
+
+from pkcalc import formulas, units
+from pkcalc.drugs.profile import load_profile
+from pkcalc.errors import CannotEstimate, CaseError, DrugFileError, PkcalcError
+from pkcalc.sources import source
+
+Kind = Literal[
+    "worked example",
+    "label",
+    "guideline",
+    "dataset",
+    "independent calculation",
+    "definition",
+    "common practice",
+]
+KINDS: tuple[Kind, ...] = (
+    "worked example",
+    "label",
+    "guideline",
+    "dataset",
+    "independent calculation",
+    "definition",
+    "common practice",
+)
+STATUSES = ("read", "memory")
+
+#: Written instead of expected values where the right answer is to refuse.
+REFUSALS = ("no steady state", "refused")
+
+Values = Mapping[str, Any]
+
+
+@dataclass(frozen=True)
+class Call:
+    """One public function as the evidence files call it.
+
+    inputs: name -> kind of unit ("number" and "word" carry none; a list of texts becomes an array of its
+    kind). results: name -> kind. run: canonical values in, canonical values out.
+    """
+
+    inputs: Mapping[str, str]
+    results: Mapping[str, str]
+    run: Callable[[Values], Values]
+
+
+@dataclass(frozen=True)
+class Row:
+    """One line of the table: what was expected, what we got, whether they agree, and what is odd about it."""
+
+    id: str
+    source: str
+    where: str
+    kind: str
+    status: str
+    quantity: str
+    expected: str
+    ours: str
+    agrees: bool
+    note: str = ""
+
+    def as_dict(self) -> dict[str, object]:
+        return dict(self.__dict__)
+
+
+@dataclass(frozen=True)
+class Expected:
+    """An expected value: text, value and tolerance in the printed unit, that unit, and its kind."""
+
+    name: str
+    text: str
+    value: float
+    tolerance: float
+    label: str
+    kind: str
+
+
+@dataclass(frozen=True)
+class Example:
+    """One published example, read from an evidence file."""
+
+    id: str
+    call: str
+    source: str
+    where: str
+    kind: Kind
+    status: str
+    inputs: Mapping[str, Any]
+    kinds: Mapping[str, str]
+    expected: tuple[Expected, ...]
+    refused: str
+    unnoticed: Mapping[str, str]
+    note: str
+
+
+def _steady(v: Values) -> Values:
+    level = formulas.steady_state_level(
+        dose_rate_mg_per_day=v["dose_rate"], vmax_mg_per_day=v["vmax"], km_mg_per_L=v["km"]
+    )
+    return {"level": _finite(level)}
+
+
+def _finite(value: Any) -> float:
+    """Infinity stands for "no such level" inside the formulas; at the door it is a refusal."""
+    number = float(value)
+    if not np.isfinite(number):
+        raise CannotEstimate("No finite answer was found.", "There is no steady state or no solution.", "")
+    return number
+
+
+def _two_level(v: Values) -> Values:
+    found = formulas.two_level(
+        rate1_mg_per_day=v["rate1"],
+        level1_mg_per_L=v["level1"],
+        rate2_mg_per_day=v["rate2"],
+        level2_mg_per_L=v["level2"],
+    )
+    return {"vmax": _finite(found.vmax_mg_per_day), "km": _finite(found.km_mg_per_L)}
+
+
+def _two_level_of_form(v: Values) -> Values:
+    form = load_profile(v["drug"]).forms[v["form"]]
+    rates = [
+        float(
+            formulas.active_amount(
+                amount_mg=v[name], salt_factor=form.salt_factor, bioavailability=form.bioavailability
+            )
+        )
+        for name in ("dose1", "dose2")
+    ]
+    found = _two_level({**v, "rate1": rates[0], "rate2": rates[1]})
+    return {**found, "rate1": rates[0], "rate2": rates[1]}
+
+
+def _ratio(v: Values) -> Values:
+    before = _steady(v)["level"]
+    after = _steady({"dose_rate": v["dose_rate2"], "vmax": v["vmax2"], "km": v["km2"]})["level"]
+    return {"ratio": after / before, "change": after / before - 1.0}
+
+
+def _one_level(v: Values) -> Values:
+    vmax = float(
+        formulas.vmax_from_level(
+            dose_rate_mg_per_day=v["dose_rate"], level_mg_per_L=v["level"], km_mg_per_L=v["km"]
+        )
+    )
+    return {"vmax": vmax}
+
+
+def _one_level_of_form(v: Values) -> Values:
+    form = load_profile(v["drug"]).forms[v["form"]]
+    active = float(formulas.active_amount(amount_mg=v["dose"], salt_factor=form.salt_factor))
+    vmax = _one_level({"dose_rate": active, "level": v["level"], "km": v["km"]})["vmax"]
+    rate = _rate({"level": v["aim"], "vmax": vmax, "km": v["km"]})["dose_rate"]
+    product = float(formulas.product_amount(active_mg=rate, salt_factor=form.salt_factor))
+    return {"vmax": vmax, "active_rate": rate, "product_rate": product}
+
+
+def _rate(v: Values) -> Values:
+    rate = formulas.dose_rate_for_level(
+        level_mg_per_L=v["level"], vmax_mg_per_day=v["vmax"], km_mg_per_L=v["km"]
+    )
+    return {"dose_rate": float(rate)}
+
+
+def _population(v: Values) -> Values:
+    population = load_profile(v["drug"]).populations[v["population"]]
+    prior = population.at(v["weight"], v["age"])
+    return {"vmax": prior.vmax_mg_per_day, "km": prior.km_mg_per_L, "volume": prior.volume_L}
+
+
+def _population_dose(v: Values) -> Values:
+    form = load_profile(v["drug"]).forms[v["form"]]
+    prior = _population(v)
+    rate = _rate({"level": v["aim"], "vmax": prior["vmax"], "km": prior["km"]})["dose_rate"]
+    product = float(formulas.product_amount(active_mg=rate, salt_factor=form.salt_factor))
+    return {"active_rate": rate, "product_rate": product}
+
+
+def _per_kg_ratio(v: Values) -> Values:
+    populations = load_profile(v["drug"]).populations
+    per_kg = []
+    for name in ("population", "population2"):
+        p = populations[v[name]]
+        vmax = p.vmax_at_reference_mg_per_day / p.reference_weight_kg
+        per_kg.append(_rate({"level": v["level"], "vmax": vmax, "km": p.km_mg_per_L})["dose_rate"])
+    return {"more": per_kg[0] / per_kg[1] - 1.0}
+
+
+def _time_to_fraction(v: Values) -> Values:
+    time = formulas.time_to_fraction(
+        fraction=v["fraction"],
+        dose_rate_mg_per_day=v["dose_rate"],
+        vmax_mg_per_day=v["vmax"],
+        km_mg_per_L=v["km"],
+        volume_L=v["volume"],
+    )
+    return {"time": _finite(time)}
+
+
+def _level_after(v: Values) -> Values:
+    level = formulas.level_after(
+        time_day=v["time"],
+        start_mg_per_L=v["start"],
+        dose_rate_mg_per_day=v.get("dose_rate", 0.0),
+        vmax_mg_per_day=v["vmax"],
+        km_mg_per_L=v["km"],
+        volume_L=v["volume"],
+    )
+    return {"level": float(level)}
+
+
+def _time_to_fall(v: Values) -> Values:
+    time = formulas.time_to_fall(
+        start_mg_per_L=v["start"],
+        end_mg_per_L=v["end"],
+        vmax_mg_per_day=v["vmax"],
+        km_mg_per_L=v["km"],
+        volume_L=v["volume"],
+    )
+    return {"time": _finite(time)}
+
+
+def _normalised(v: Values) -> Values:
+    total = formulas.normalised_total(
+        total_mg_per_L=v["total"], albumin_g_per_L=v["albumin"], coefficient_dL_per_g=v["coefficient"]
+    )
+    return {"normalised": float(total)}
+
+
+def _break_point(v: Values) -> Values:
+    return {"albumin": formulas.albumin_break_point(coefficient_dL_per_g=v["coefficient"])}
+
+
+def _displaced(v: Values) -> Values:
+    found = formulas.free_with_valproate(total_mg_per_L=v["total"], valproate_mg_per_L=v["displacer"])
+    return {name: float(value) for name, value in zip(("first", "second"), found.values(), strict=True)}
+
+
+def _active_of_form(v: Values) -> Values:
+    form = load_profile(v["drug"]).forms[v["form"]]
+    return {"active": float(formulas.active_amount(amount_mg=v["amount"], salt_factor=form.salt_factor))}
+
+
+def _product_volume(v: Values) -> Values:
+    product = load_profile(v["drug"]).products[v["product"]]
+    return {"volume": v["amount"] / product.mg_per_unit / 1000}
+
+
+def _rate_cap(v: Values) -> Values:
+    loading = load_profile(v["drug"]).loading
+    assert loading is not None
+    for cap in loading.rate_caps:
+        if cap.form == v["form"] and cap.group == v["group"]:
+            scaled = cap.highest_mg_per_kg_min
+            flat = cap.mg_per_min
+            return {
+                "rate": 1440
+                * (flat if scaled is None or "weight" not in v else min(flat, scaled * v["weight"]))
+            }
+    raise CaseError(())
+
+
+def _load(v: Values) -> Values:
+    amount = formulas.top_up_amount(
+        present_mg_per_L=v.get("present", 0.0),
+        aim_mg_per_L=v["aim"],
+        volume_L=v["weight"] * v["volume_per_weight"],
+        salt_factor=v["salt_factor"],
+    )
+    return {"amount": float(amount)}
+
+
+def _ideal_weight(v: Values) -> Values:
+    return {"weight": float(formulas.ideal_body_weight(height_cm=v["height"], sex=v["sex"]))}
+
+
+def _excess_weight(v: Values) -> Values:
+    weight = formulas.weight_with_excess(
+        weight_kg=v["weight"], ideal_weight_kg=v["ideal"], excess_factor=v["factor"]
+    )
+    return {"weight": float(weight)}
+
+
+def _molar(v: Values) -> Values:
+    mass = load_profile(v["drug"]).molar_mass_g_per_mol
+    return {
+        "molar": float(formulas.molar_level(level_mg_per_L=v["level"], molar_mass_g_per_mol=mass)),
+    }
+
+
+_PAIR = {"rate1": "dose rate", "level1": "level", "rate2": "dose rate", "level2": "level"}
+_MM = {"vmax": "dose rate", "km": "level"}
+
+#: Every function an evidence file may call, by the name it is called there.
+CALLS: dict[str, Call] = {
+    "steady_state_level": Call({"dose_rate": "dose rate", **_MM}, {"level": "level"}, _steady),
+    "dose_rate_for_level": Call({"level": "level", **_MM}, {"dose_rate": "dose rate"}, _rate),
+    "two_level": Call(_PAIR, {"vmax": "dose rate", "km": "level"}, _two_level),
+    "two_level_of_form": Call(
+        {
+            "drug": "word",
+            "form": "word",
+            "dose1": "dose rate",
+            "level1": "level",
+            "dose2": "dose rate",
+            "level2": "level",
+        },
+        {"vmax": "dose rate", "km": "level", "rate1": "dose rate", "rate2": "dose rate"},
+        _two_level_of_form,
+    ),
+    "steady_level_ratio": Call(
+        {"dose_rate": "dose rate", **_MM, "dose_rate2": "dose rate", "vmax2": "dose rate", "km2": "level"},
+        {"ratio": "number", "change": "share"},
+        _ratio,
+    ),
+    "vmax_from_level": Call(
+        {"dose_rate": "dose rate", "level": "level", "km": "level"}, {"vmax": "dose rate"}, _one_level
+    ),
+    "one_level_of_form": Call(
+        {
+            "drug": "word",
+            "form": "word",
+            "dose": "dose rate",
+            "level": "level",
+            "km": "level",
+            "aim": "level",
+        },
+        {"vmax": "dose rate", "active_rate": "dose rate", "product_rate": "dose rate"},
+        _one_level_of_form,
+    ),
+    "population_at": Call(
+        {"drug": "word", "population": "word", "weight": "weight", "age": "age"},
+        {"vmax": "dose rate", "km": "level", "volume": "volume"},
+        _population,
+    ),
+    "population_dose": Call(
+        {
+            "drug": "word",
+            "population": "word",
+            "form": "word",
+            "weight": "weight",
+            "age": "age",
+            "aim": "level",
+        },
+        {"active_rate": "dose rate", "product_rate": "dose rate"},
+        _population_dose,
+    ),
+    "dose_per_kg_ratio": Call(
+        {"drug": "word", "population": "word", "population2": "word", "level": "level"},
+        {"more": "share"},
+        _per_kg_ratio,
+    ),
+    "time_to_fraction": Call(
+        {"fraction": "share", "dose_rate": "dose rate", **_MM, "volume": "volume"},
+        {"time": "duration"},
+        _time_to_fraction,
+    ),
+    "level_after": Call(
+        {"time": "duration", "start": "level", **_MM, "volume": "volume"}, {"level": "level"}, _level_after
+    ),
+    "time_to_fall": Call(
+        {"start": "level", "end": "level", **_MM, "volume": "volume"}, {"time": "duration"}, _time_to_fall
+    ),
+    "normalised_total": Call(
+        {"total": "level", "albumin": "albumin", "coefficient": "number"},
+        {"normalised": "level"},
+        _normalised,
+    ),
+    "albumin_break_point": Call({"coefficient": "number"}, {"albumin": "albumin"}, _break_point),
+    "free_with_displacer": Call(
+        {"total": "level", "displacer": "level"}, {"first": "level", "second": "level"}, _displaced
+    ),
+    "active_amount_of_form": Call(
+        {"drug": "word", "form": "word", "amount": "amount"}, {"active": "amount"}, _active_of_form
+    ),
+    "product_volume": Call(
+        {"drug": "word", "product": "word", "amount": "amount"}, {"volume": "volume"}, _product_volume
+    ),
+    "rate_cap": Call({"drug": "word", "form": "word", "group": "word"}, {"rate": "dose rate"}, _rate_cap),
+    "load": Call(
+        {
+            "present": "level",
+            "aim": "level",
+            "weight": "weight",
+            "volume_per_weight": "volume per weight",
+            "salt_factor": "number",
+        },
+        {"amount": "amount"},
+        _load,
+    ),
+    "ideal_body_weight": Call({"height": "height", "sex": "word"}, {"weight": "weight"}, _ideal_weight),
+    "weight_with_excess": Call(
+        {"weight": "weight", "ideal": "weight", "factor": "number"}, {"weight": "weight"}, _excess_weight
+    ),
+    "molar_level": Call({"drug": "word", "level": "level"}, {"molar": "molar"}, _molar),
+}
+
+_KEYS = {
+    "id",
+    "call",
+    "source",
+    "where",
+    "kind",
+    "status",
+    "inputs",
+    "expected",
+    "tolerance",
+    "why",
+    "unnoticed",
+    "note",
+}
+_FACTORS = {**units.FACTORS, "number": {"": 1.0}, "molar": {"umol/L": 1.0}}
+_NUMBER = re.compile(r"-?[0-9][0-9,]*(?:\.[0-9]+)?")
+
+
+def evidence_files() -> tuple[str, ...]:
+    """The evidence files, by name."""
+    folder = resources.files("pkcalc.evidence")
+    return tuple(sorted(p.name for p in folder.iterdir() if p.name.endswith(".toml")))
+
+
+@cache
+def load_examples() -> tuple[Example, ...]:
+    """Every example of every evidence file."""
+    found: list[Example] = []
+    for name in evidence_files():
+        text = resources.files("pkcalc.evidence").joinpath(name).read_text(encoding="utf-8")
+        found.extend(parse_examples(text, name))
+    ids = [x.id for x in found]
+    doubled = sorted({i for i in ids if ids.count(i) > 1})
+    if doubled:
+        raise DrugFileError(f"Evidence: the id {doubled[0]} stands more than once. Give each its own.")
+    return tuple(found)
+
+
+def parse_examples(text: str, file: str) -> tuple[Example, ...]:
+    """The examples of one TOML text; refuses anything incomplete."""
+    data = tomllib.loads(text)
+    if set(data) != {"example"}:
+        raise DrugFileError(f"{file}: only [[example]] tables may stand here.")
+    return tuple(_example(entry, file) for entry in data["example"])
+
+
+def _example(entry: dict[str, Any], file: str) -> Example:
+    name = entry.get("id", "(no id)")
+
+    def fail(key: str, found: str, fix: str) -> DrugFileError:
+        return DrugFileError(f"{file}, {name}, {key}: {found}. {fix}.")
+
+    for key in entry:
+        if key not in _KEYS:
+            raise fail(key, "unknown entry", "Known are: " + ", ".join(sorted(_KEYS)))
+    for key in ("id", "call", "source", "where", "kind", "status"):
+        if not isinstance(entry.get(key), str) or not entry[key].strip():
+            raise fail(key, "missing", "Add it as text")
+    if entry["call"] not in CALLS:
+        raise fail(
+            "call", f'"{entry["call"]}" is not a known function', "Known are: " + ", ".join(sorted(CALLS))
+        )
+    if entry["kind"] not in KINDS:
+        raise fail("kind", f'"{entry["kind"]}" was found', "Write one of: " + ", ".join(KINDS))
+    if entry["status"] not in STATUSES:
+        raise fail("status", f'"{entry["status"]}" was found', "Write one of: " + ", ".join(STATUSES))
+    cited = source(entry["source"])
+    if entry["status"] == "read" and cited.status == "memory":
+        raise fail("status", 'it says "read", but its source is from memory', 'Write "memory"')
+    call = CALLS[entry["call"]]
+    inputs = {}
+    for key, raw in entry.get("inputs", {}).items():
+        if key not in call.inputs:
+            raise fail(f"inputs.{key}", "unknown input", "Known are: " + ", ".join(call.inputs))
+        inputs[key] = _read(raw, call.inputs[key], f"{file}, {name}, {key}")
+    tolerances = entry.get("tolerance", {})
+    if tolerances and not entry.get("why"):
+        raise fail("why", "missing", "A tolerance wider than the printed digits needs its reason")
+    expected_text = entry.get("expected")
+    refused = expected_text in REFUSALS
+    wanted: dict[str, str] = expected_text if isinstance(expected_text, dict) else {}
+    if not refused and not wanted:
+        raise fail("expected", "missing", "Add the expected values, or one of: " + ", ".join(REFUSALS))
+    expected = tuple(_expected(key, value, call, tolerances.get(key), fail) for key, value in wanted.items())
+    for key in tolerances:
+        if key not in wanted:
+            raise fail(f"tolerance.{key}", "no such expected value", "Take it out or mend its name")
+    unnoticed = entry.get("unnoticed", {})
+    for key in unnoticed:
+        if key not in inputs:
+            raise fail(f"unnoticed.{key}", "no such input", "Take it out or mend its name")
+    note = " ".join(x for x in (entry.get("note", ""), entry.get("why", "")) if x)
+    if entry["status"] == "memory":
+        note = f"Value from memory. {note}".strip()
+    return Example(
+        id=entry["id"],
+        call=entry["call"],
+        source=entry["source"],
+        where=entry["where"],
+        kind=entry["kind"],
+        status=entry["status"],
+        inputs=inputs,
+        kinds={key: call.inputs[key] for key in inputs},
+        expected=expected,
+        refused=str(expected_text) if refused else "",
+        unnoticed=unnoticed,
+        note=note,
+    )
+
+
+def _read(raw: Any, kind: str, where: str) -> Any:
+    """An input as the function takes it: canonical value, array, or word."""
+    if isinstance(raw, list):
+        return np.array([_read(x, kind.removesuffix(" list"), where) for x in raw])
+    if not isinstance(raw, str):
+        raise DrugFileError(f"{where}: not a text. Write numbers in quotation marks, with their unit.")
+    if kind == "word":
+        return raw
+    if kind == "number":
+        return units.read_number(raw, where)
+    return units.read(raw, kind, where, zero_allowed=True).value
+
+
+def _expected(
+    key: str, text: Any, call: Call, wider: Any, fail: Callable[[str, str, str], DrugFileError]
+) -> Expected:
+    if key not in call.results:
+        raise fail(f"expected.{key}", "unknown result", "Known are: " + ", ".join(call.results))
+    match = _NUMBER.match(text) if isinstance(text, str) else None
+    if match is None:
+        raise fail(f"expected.{key}", "not a number with its unit in quotation marks", "Write it as printed")
+    number, label = match.group(0), text[match.end() :].strip()
+    kind = call.results[key]
+    if label not in _FACTORS[kind]:
+        raise fail(
+            f"expected.{key}", f'the unit "{label}" was found', "Write one of: " + ", ".join(_FACTORS[kind])
+        )
+    digits = number.replace(",", "")
+    decimals = len(digits.partition(".")[2])
+    tolerance = 0.5 * 10.0**-decimals
+    if wider is not None:
+        tolerance = float(wider)
+    return Expected(key, text, float(digits), tolerance, label, kind)
+
+
+def _ours(example: Example, values: Values) -> dict[str, float]:
+    """Our results in the printed units."""
+    found = CALLS[example.call].run(values)
+    return {x.name: found[x.name] / _FACTORS[x.kind][x.label] for x in example.expected}
+
+
+def _within(example: Example, found: Mapping[str, float]) -> bool:
+    return all(_agrees(x, found[x.name]) for x in example.expected)
+
+
+def _agrees(expected: Expected, value: float) -> bool:
+    return abs(value - expected.value) <= expected.tolerance * (1 + 1e-9)
+
+
+def unnoticed_inputs(example: Example) -> tuple[str, ...]:
+    """Inputs that could be 20 % off, up or down, without the example noticing."""
+    silent = []
+    for key, kind in example.kinds.items():
+        if kind == "word":
+            continue
+        same = [
+            _same(example, {**example.inputs, key: example.inputs[key] * factor}) for factor in (1.2, 0.8)
+        ]
+        # a refusal may rightly stand in one direction; a number must change in both
+        if all(same) if example.refused else any(same):
+            silent.append(key)
+    return tuple(silent)
+
+
+def _same(example: Example, values: Values) -> bool:
+    if example.refused:
+        return _refuses(example, values)
+    try:
+        return _within(example, _ours(example, values))
+    except PkcalcError:
+        return False
+
+
+def _refuses(example: Example, values: Values) -> bool:
+    try:
+        CALLS[example.call].run(values)
+    except CannotEstimate:
+        return True
+    return False
+
+
+def check(example: Example) -> tuple[Row, ...]:
+    """The example's rows: one for each expected value, agreeing only if every input would be noticed too."""
+    silent = set(unnoticed_inputs(example)) ^ set(example.unnoticed)
+    note = example.note
+    if silent:
+        note = f"{note} Not sensitive as declared: {', '.join(sorted(silent))}.".strip()
+
+    def row(quantity: str, expected: str, ours: str, agrees: bool) -> Row:
+        return Row(
+            id=example.id,
+            source=example.source,
+            where=example.where,
+            kind=example.kind,
+            status=example.status,
+            quantity=quantity,
+            expected=expected,
+            ours=ours,
+            agrees=agrees and not silent,
+            note=note,
+        )
+
+    if example.refused:
+        refused = _refuses(example, example.inputs)
+        return (row(example.call, example.refused, example.refused if refused else "a number", refused),)
+    try:
+        found = _ours(example, example.inputs)
+    except PkcalcError as error:
+        return tuple(row(x.name, x.text, f"refused: {error}", False) for x in example.expected)
+    return tuple(
+        row(
+            x.name,
+            x.text,
+            f"{units.show_number(found[x.name], 6)} {x.label}".strip(),
+            _agrees(x, found[x.name]),
+        )
+        for x in example.expected
+    )
+
+
+def run() -> tuple[Row, ...]:
+    """Every example of every evidence file, and the reference curves."""
+    return tuple(row for example in load_examples() for row in check(example)) + reference_curves()
+
+
+#: Reference files: name, column of the level, largest relative difference (ten times it below 1e-6 mg/L).
+_CURVES = (
+    ("mm_reference_curves.csv", "C_mg_per_L_25digits", 1e-13),
+    ("mm_edge_cases.csv", "C_ref_22digits", 1e-13),
+)
+_COLUMNS = {"C0_mg_per_L": "C0", "r_mg_per_L_per_d": "r", "v_mg_per_L_per_d": "v", "Km_mg_per_L": "Km"}
+
+
+def reference_curves() -> tuple[Row, ...]:
+    """Level over time at a constant rate against values of 22 to 25 digits: the worst relative difference."""
+    rows = []
+    for name, column, allowed in _CURVES:
+        text = resources.files("pkcalc.evidence").joinpath(name).read_text(encoding="utf-8")
+        table = list(csv.DictReader(text.splitlines()))
+        values = {
+            _COLUMNS.get(key, key): np.array([float(line[key]) for line in table])
+            for key in table[0]
+            if key not in ("case", "tag")
+        }
+        ours = formulas.level_after(
+            time_day=values["t_d"],
+            start_mg_per_L=values["C0"],
+            dose_rate_mg_per_day=values["r"],
+            vmax_mg_per_day=values["v"],
+            km_mg_per_L=values["Km"],
+            volume_L=1.0,
+        )
+        expected = values[column]
+        difference = np.abs(ours / expected - 1.0) / np.where(expected < 1e-6, 10.0, 1.0)
+        worst = float(np.max(difference))
+        rows.append(
+            Row(
+                id=name.removesuffix(".csv"),
+                source="reference-times",
+                where=f"{len(table)} levels in 80- to 120-digit arithmetic",
+                kind="independent calculation",
+                status="read",
+                quantity="largest relative difference",
+                expected=f"at most {allowed:.0e}",
+                ours=f"{worst:.1e}",
+                agrees=worst <= allowed,
+            )
+        )
+    return tuple(rows)
+
+
+def as_text(rows: tuple[Row, ...]) -> str:
+    """The table: case, source, expected, ours, agrees."""
+    head = ("case", "source", "quantity", "expected", "ours", "agrees")
+    cells = [head] + [
+        (r.id, r.source, r.quantity.replace("_", " "), r.expected, r.ours, "yes" if r.agrees else "NO")
+        for r in rows
+    ]
+    widths = [max(len(line[i]) for line in cells) for i in range(len(head))]
+    lines = ["  ".join(c.ljust(w) for c, w in zip(line, widths, strict=True)).rstrip() for line in cells]
+    lines.insert(1, "  ".join("-" * w for w in widths))
+    missed = [r for r in rows if not r.agrees]
+    lines += ["", f"{len(rows) - len(missed)} of {len(rows)} agree."]
+    lines += [f"{r.id}: {r.note}" for r in missed if r.note]
+    return "\n".join(lines) + "\n"
+
+
+def as_data(rows: tuple[Row, ...]) -> dict[str, object]:
+    """The same as plain data for JSON."""
+    return {
+        "rows": [r.as_dict() for r in rows],
+        "agree": sum(r.agrees for r in rows),
+        "of": len(rows),
+        "all_agree": all(r.agrees for r in rows),
+    }
