@@ -17,7 +17,7 @@ from pathlib import Path
 from typing import Any
 
 from pkcalc import units
-from pkcalc.drugs.profile import Binding, Fact, Population, Profile, RateCap, Table, load_profile
+from pkcalc.drugs.profile import Binding, Fact, Population, Profile, RateCap, Table, drug_names, load_profile
 from pkcalc.errors import CaseError, Problem
 from pkcalc.units import show, show_number
 
@@ -384,10 +384,7 @@ def parse_site(text: str, file: str) -> Site:
     if not isinstance(drug, str):
         raise CaseError(
             Problem(
-                f"{file}, site.drug",
-                "missing",
-                'the drug the settings are for, such as "phenytoin"',
-                "Add it",
+                f"{file}, site.drug", "missing", ", ".join(drug_names()), "Name the drug the settings are for"
             )
         )
     profile = load_profile(drug)

@@ -129,8 +129,9 @@ class Form:
 class Product:
     """One thing on a shelf: a capsule, a tablet, or a liquid counted in mL.
 
-    mg_per_unit: labelled mg (or mg PE) per capsule, tablet or mL. divisible_into: 2 where halves are allowed.
+    mg_per_unit: labelled mg (or mg PE) per capsule, tablet or mL.
     smallest_step: of a unit (0.5 tablet, 0.5 mL). containers_mL: vial or bottle sizes of liquids.
+    strength_basis: "v/v" or "w/v" where a strength in per cent could mean either.
     """
 
     id: str
@@ -141,6 +142,7 @@ class Product:
     smallest_step: float
     containers_mL: tuple[float, ...]
     strength_words: str
+    strength_basis: str
     exclusive_group: str
 
 
@@ -218,7 +220,7 @@ class Binding:
     valproate_free: tuple[float, float]
 
     @property
-    def break_point_g_per_L(self) -> float:  # noqa: N802 - the unit
+    def break_point_g_per_L(self) -> float:
         """The albumin at which the denominator is 1; at or above it no correction is made."""
         return 10.0 * (1.0 - self.constant) / self.albumin_coefficient
 
@@ -304,12 +306,16 @@ class Limits:
 
 @dataclass(frozen=True)
 class Sampling:
-    """How long after a dose a level may be drawn, and how long before a change shows."""
+    """How long after a dose a level may be drawn, how long before a change shows, how often under infusion.
 
-    after_iv_h: float
-    after_im_h: float
-    after_oral_load_h: float
+    None where the route does not apply to the drug.
+    """
+
+    after_iv_h: float | None
+    after_im_h: float | None
+    after_oral_load_h: float | None
     steady_wait_days: tuple[float, float]
+    repeat_h: tuple[float, float] | None
 
 
 @dataclass(frozen=True)
@@ -389,6 +395,7 @@ class Prior:
     volume_log_sd: float
     correlation: float
     first_order_per_day: float
+    first_order_log_sd: float
     used: tuple[str, ...]
     sources: tuple[str, ...]
 
@@ -413,6 +420,7 @@ class Population:
     volume_cv: float
     correlation: float
     first_order_per_day: float
+    first_order_cv: float
     modifiers: Mapping[str, Modifier]
     weight_rule: WeightRule | None
     sources: tuple[str, ...]
@@ -471,6 +479,7 @@ class Population:
             volume_log_sd=log_sd(volume_cv),
             correlation=self.correlation,
             first_order_per_day=self.first_order_per_day,
+            first_order_log_sd=log_sd(self.first_order_cv),
             used=tuple(used),
             sources=self.sources,
         )
@@ -575,6 +584,7 @@ class Profile:
     modifiers: Mapping[str, Modifier]
     weight_rule: WeightRule | None
     youngest_years: float
+    choose_population: bool
     loading: Loading | None
     limits: Limits | None
     sampling: Sampling
@@ -595,7 +605,7 @@ class Profile:
         """Where one number came from: `fact("binding.free_fraction")`."""
         return self.facts[path]
 
-    def level_gate_mg_per_L(self, kind: str) -> tuple[float, float]:  # noqa: N802 - the unit
+    def level_gate_mg_per_L(self, kind: str) -> tuple[float, float]:
         """The levels that can be real, for "total", "free" or "normalised"; others are slips."""
         return self.level_gates_mg_per_L.get(kind, self.level_gates_mg_per_L["total"])
 
@@ -613,6 +623,12 @@ class Profile:
                     f"{show_number(age_years)} years was given",
                     f"{show_number(self.youngest_years)} years or older for {self.name}",
                     "Elimination changes too fast at this age: ask a specialist and go by measured levels",
+                )
+            )
+        if self.choose_population:
+            raise CaseError(
+                Problem(
+                    "Population", "none was chosen", ", ".join(self.populations), "Choose the one that fits"
                 )
             )
         age = 40.0 if age_years is None else age_years
@@ -878,7 +894,8 @@ class Table:
 def drug_names() -> tuple[str, ...]:
     """The drugs there is a file for."""
     folder = resources.files("pkcalc.drugs")
-    return tuple(sorted(p.name[:-5] for p in folder.iterdir() if p.name.endswith(".toml")))
+    names = (p.name for p in folder.iterdir())
+    return tuple(sorted(n[:-5] for n in names if n.endswith(".toml") and not n.startswith("_")))
 
 
 @cache
@@ -908,8 +925,8 @@ def parse_profile(text: str, file: str) -> Profile:
     modifiers = top.each("modifier", _modifier)
     weight_rule = _weight_rule(top.table("weight_rule")) if top.has("weight_rule") else None
     populations = top.each("population", lambda name, t: _population(name, t, modifiers, weight_rule))
-    if not any(p.default for p in populations.values()):
-        raise top.fail("population", "none is the default", "Mark one with default = true")
+    if not populations:
+        raise top.fail("population", "missing", "Add at least one population")
     drug = top.table("drug")
     scope = cast(Scope, drug.choice("scope", SCOPES))
     profile = Profile(
@@ -923,6 +940,7 @@ def parse_profile(text: str, file: str) -> Profile:
         level_units=drug.texts("level_units"),
         molar_mass_g_per_mol=drug.number("molar_mass", "molar mass"),
         youngest_years=drug.number("youngest", "age", zero=True),
+        choose_population=drug.switch("choose_population"),
         forms=forms,
         products=products,
         shelves=shelves,
@@ -961,6 +979,14 @@ def _consistent(profile: Profile, top: Table) -> None:
     if not profile.plausible:
         raise top.fail("plausible", "missing", "Add the published ranges of Vmax per kg and Km")
     spans = sorted(p.ages_years for p in profile.populations.values() if p.default)
+    if profile.choose_population:
+        if spans:
+            raise top.fail(
+                "drug.choose_population", "a default population is marked too", "Take one of the two out"
+            )
+        return
+    if not spans:
+        raise top.fail("population", "none is the default", "Mark one with default = true")
     for (_, end), (start, _) in itertools.pairwise(spans):
         if end != start:
             raise top.fail(
@@ -989,7 +1015,7 @@ def _form(name: str, t: Table) -> Form:
         id=name,
         words=t.text("words"),
         salt=t.text("salt"),
-        amount_unit=t.choice("amount_unit", ("mg", "mg PE", "g", "mL")),
+        amount_unit=t.choice("amount_unit", ("mg", "mg PE")),
         salt_factor=t.share("salt_factor"),
         bioavailability=bioavailability,
         bioavailability_range=span,
@@ -1030,6 +1056,7 @@ def _product(name: str, t: Table, forms: Mapping[str, Form]) -> Product:
         smallest_step=t.number("smallest_step", "ratio"),
         containers_mL=t.several("containers", "fluid volume") if t.has("containers") else (),
         strength_words=t.text("strength_words"),
+        strength_basis=t.choice("strength_basis", ("v/v", "w/v")) if t.has("strength_basis") else "",
         exclusive_group=t.text("exclusive_group", ""),
     )
 
@@ -1109,7 +1136,8 @@ def _population(
         "vmax_cv": t.number("vmax_cv", "share", high=2.0),
         "km_cv": t.number("km_cv", "share", high=2.0),
         "volume_cv": t.number("volume_cv", "share", high=2.0),
-        "first_order_per_day": t.maybe("first_order", "rate constant", zero=True) or 0.0,
+        "first_order_per_day": t.maybe("first_order", "rate constant") or 0.0,
+        "first_order_cv": t.maybe("first_order_cv", "share") or 0.0,
     }
     describes = t.statement("describes")
     cited = dict.fromkeys(s for path, fact in t.facts.items() if path not in before for s in fact.sources)
@@ -1300,10 +1328,11 @@ def _limits(t: Table, forms: Mapping[str, Form]) -> Limits:
 
 def _sampling(t: Table) -> Sampling:
     found = Sampling(
-        after_iv_h=t.number("after_iv", "interval"),
-        after_im_h=t.number("after_im", "interval"),
-        after_oral_load_h=t.number("after_oral_load", "interval"),
+        after_iv_h=t.maybe("after_iv", "interval"),
+        after_im_h=t.maybe("after_im", "interval"),
+        after_oral_load_h=t.maybe("after_oral_load", "interval"),
         steady_wait_days=t.span("steady_wait", "duration"),
+        repeat_h=t.span("repeat", "interval") if t.has("repeat") else None,
     )
     t.done()
     return found
