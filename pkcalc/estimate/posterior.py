@@ -278,11 +278,16 @@ def written_out(record: Record) -> Record:
     )
 
 
+def with_population_path(record: Record, first_order_per_day: float) -> Record:
+    """The record with the population's parallel first-order path, unless it already has one that is always open."""
+    if first_order_per_day <= 0 or any(p.start_day == -math.inf for p in record.first_order):
+        return record
+    return replace(record, first_order=(*record.first_order, FirstOrder(rate_per_day=first_order_per_day)))
+
+
 def _model(record: Record, levels: Sequence[LevelData], prior: Prior, spread: RecordSpread) -> _Model:
     _check(record, levels)
-    full = written_out(record)
-    if prior.first_order_per_day > 0 and not any(p.start_day == -math.inf for p in full.first_order):
-        full = replace(full, first_order=(*full.first_order, FirstOrder(rate_per_day=prior.first_order_per_day)))
+    full = with_population_path(written_out(record), prior.first_order_per_day)
     intake = plan_intake(full, [x.time_day for x in levels], spread)
     volume = _Volume.of(prior)
     typical = _typical_per_day(volume.centre, volume.cov)
