@@ -19,6 +19,7 @@ from pkcalc.estimate.lines import (
     crossings,
     from_steady_pairs,
     gather,
+    redrawn_levels,
 )
 from pkcalc.estimate.pair import SteadyPair, VolumeSpread
 from pkcalc.estimate.regression import (
@@ -361,6 +362,38 @@ def test_the_profile_limits_are_where_the_sum_of_squares_has_risen_by_the_right_
         assert best.fun - fit.sum_of_squares == pytest.approx(2.7055, abs=2e-4)
 
 
+def test_draws_without_visible_saturation_are_set_aside_and_the_rest_keep_their_shape():
+    """WEAK leaves 46 % beyond the cap: a Vmax that 52.5 % of all would lie below has 52.5/54 % of the rest."""
+    result = from_steady_pairs(WEAK)
+    inside = limits(WEAK, fitted(WEAK), confidence=0.05).vmax_high
+    assert 0.4 < result.rejected < 0.474
+    share = np.mean(result.vmax_mg_per_day < inside)
+    assert share == pytest.approx(0.525 / (1 - result.rejected), abs=2e-3)
+
+
+def test_redrawn_levels_have_the_stated_spread_and_keep_the_level_in_the_middle():
+    drawn = np.log(redrawn_levels(GOOD, 2048) / GOOD.level_mg_per_L)
+    assert drawn.std(axis=0) == pytest.approx([0.15] * 4, rel=0.01)
+    assert np.median(drawn, axis=0) == pytest.approx([0] * 4, abs=1e-3)
+    assert np.abs(np.corrcoef(drawn.T) - np.eye(4)).max() < 0.06
+
+
+def test_on_two_pairs_the_share_set_aside_is_the_exact_chance():
+    """By the normal distribution: ln(C2/C1) - ln(R2/R1) = 0.47 in a spread of 0.3 sqrt(2), and the cap at 20."""
+    data = pairs([300, 350], [8, 15.0], spread=0.3)
+    exact = formulas.chance_of_inadmissible_pair(
+        rate1_mg_per_day=300,
+        level1_mg_per_L=8,
+        rate2_mg_per_day=350,
+        level2_mg_per_L=15,
+        log_sd1=0.3,
+        log_sd2=0.3,
+    )
+    for result in compare(data)[1:]:
+        assert isinstance(result, Estimate)
+        assert result.rejected == pytest.approx(exact, abs=0.015)
+
+
 def test_an_open_upper_limit_is_said_in_words_and_never_infinity():
     result = from_steady_pairs(WEAK)
     assert result.diagnostics["Vmax at most (mg/day)"] == "no upper limit"
@@ -421,8 +454,13 @@ def test_more_scatter_than_stated_widens_the_interval_and_withdraws_trust():
     plain = limits(OUTLIER, fit)
     assert result.diagnostics["Vmax at most (mg/day)"] > plain.vmax_high
     assert result.diagnostics["Vmax at least (mg/day)"] < plain.vmax_low
-    band = result.summary["vmax_mg_per_day"]
-    assert band.high > plain.vmax_high
+    blurred = SteadyPairs(
+        OUTLIER.rate_mg_per_day, OUTLIER.level_mg_per_L, OUTLIER.level_log_sd * fit.sigma, OUTLIER.index
+    )
+    wide = limits(blurred, fitted(blurred))
+    assert result.diagnostics["Vmax at most (mg/day)"] == pytest.approx(wide.vmax_high)
+    # the upper end is conditional on visible saturation, which 3 % of the draws do not show
+    assert result.summary["km_mg_per_L"].low == pytest.approx(wide.km_low, rel=0.01)
 
 
 def test_each_level_counts_by_its_own_spread():
