@@ -33,7 +33,7 @@ class Source:
     @property
     def citation(self) -> str:
         """As printed in notes: authors, title, where, year; and whether it was read."""
-        parts = [self.authors, self.title, self.where, self.year]
+        parts = [self.authors, self.title, self.where, "No date" if self.year == "n.d." else self.year]
         text = ". ".join(p.rstrip(".") for p in parts if p)
         how = {"read": "read", "memory": "from memory", "own synthesis": "own synthesis"}[self.status]
         return f"{text} ({how})."
@@ -66,6 +66,8 @@ def parse_sources(text: str, file: str) -> Mapping[str, Source]:
                 raise DrugFileError(
                     f"{file}, {key}.{name}: unknown entry. Known are: {', '.join(_NEEDED + _OPTIONAL)}."
                 )
+        if not isinstance(entry.get("note", ""), str):
+            raise DrugFileError(f"{file}, {key}.note: not a text. Write it in quotation marks.")
         if entry["status"] not in STATUSES:
             raise DrugFileError(
                 f'{file}, {key}.status: "{entry["status"]}" was found. Write one of: {", ".join(STATUSES)}.'

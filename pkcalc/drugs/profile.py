@@ -489,11 +489,11 @@ class Population:
     ) -> None:
         problems = []
         if not (math.isfinite(weight_kg) and 0 < weight_kg <= 500):
-            given = show_number(weight_kg) if math.isfinite(weight_kg) else "no usable number"
+            given = f"{show_number(weight_kg)} kg" if math.isfinite(weight_kg) else "no number"
             problems.append(
                 Problem(
                     "Weight",
-                    f"{given} kg was given",
+                    f"{given} was given",
                     "above 0 and up to 500 kg",
                     "Check the weight and its unit",
                 )
@@ -991,7 +991,7 @@ def _consistent(profile: Profile, top: Table) -> None:
         if end != start:
             raise top.fail(
                 "population",
-                f"the default populations leave a gap or overlap at {end} years",
+                f"the default populations leave a gap or overlap at {show_number(end)} years",
                 "Make their ages meet",
             )
     if spans[0][0] > profile.youngest_years:
