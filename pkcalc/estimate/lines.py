@@ -18,8 +18,10 @@ from pkcalc import formulas
 from pkcalc.errors import CannotEstimate, CaseError, Problem
 from pkcalc.estimate.pair import SteadyPair, VolumeSpread
 from pkcalc.estimate.regression import (
+    SAME,
     CurveFit,
     Limits,
+    all_one,
     confidence_draws,
     level_on_rate,
     level_profile_limits,
@@ -234,11 +236,9 @@ def crossings(*, level: Floats, rate: Floats, error_in: Literal["level", "rate"]
     """
     level, rate = np.broadcast_arrays(level, rate)
     i, j = np.triu_indices(level.shape[-1], 1)
-    same = (rate if error_in == "level" else level)[..., i] == (rate if error_in == "level" else level)[
-        ..., j
-    ]
-    if same.ndim > 1:
-        same = same.reshape(-1, same.shape[-1]).all(axis=0)
+    known = rate if error_in == "level" else level
+    close = np.isclose(known[..., i], known[..., j], rtol=SAME, atol=0.0)
+    same: NDArray[np.bool_] = np.asarray(close).reshape(-1, len(i)).all(axis=0)
     i, j = i[~same], j[~same]
     with np.errstate(divide="ignore", invalid="ignore"):
         bend = rate[..., i] / level[..., i] - rate[..., j] / level[..., j]
@@ -422,7 +422,7 @@ _NO_REDRAW = "with the levels drawn again within their spread it never gives a p
 
 def _by_regression(pairs: SteadyPairs, draws: int, volume: VolumeSpread | None) -> Result:
     rate, level, spread = pairs.rate_mg_per_day, pairs.level_mg_per_L, pairs.level_log_sd
-    if len(np.unique(rate)) < 2:
+    if all_one(rate):
         return LineFailure(REGRESSION, _ONE_DOSE)
     try:
         fit = level_on_rate(rate_mg_per_day=rate, level_mg_per_L=level, level_log_sd=spread)
@@ -542,10 +542,10 @@ def _by_straight_line(
     kind: StraightLine, pairs: SteadyPairs, draws: int, volume: VolumeSpread | None
 ) -> Result:
     rate = pairs.rate_mg_per_day
-    if len(np.unique(rate)) < 2:
+    if all_one(rate):
         return LineFailure(kind, _ONE_DOSE)
     x, _ = line_axes(kind, level=pairs.level_mg_per_L, rate=rate)
-    if np.ptp(x) <= 1e-12 * float(np.max(x)):
+    if all_one(x):
         return LineFailure(kind, "its points stand above one another, so no line can be laid through them")
     read = straight_line(kind, level=pairs.level_mg_per_L, rate=rate)
     vmax, km = float(read.vmax), float(read.km)

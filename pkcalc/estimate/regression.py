@@ -25,6 +25,8 @@ _Search = Callable[[Floats], tuple[Floats, Floats, Floats]]
 #: How far from the optimum, in natural logarithms, a limit is looked for before it counts as open.
 _FARTHEST = 30.0
 _CELLS = 32
+#: Relative difference below which two doses, or two levels, are one.
+SAME = 1e-9
 
 
 @dataclass(frozen=True)
@@ -72,7 +74,7 @@ def rate_on_level(*, level: Floats, rate: Floats, weights: Floats | None = None)
     Source: Wilkinson 1961; Bates & Watts 1988 (Gauss-Newton with the analytic Jacobian).
     """
     w = np.ones_like(rate) if weights is None else weights
-    _needs(len(rate) >= 3 and len(np.unique(level)) >= 2, "fewer than three points, or all at one level")
+    _needs(len(rate) >= 3 and not all_one(level), "fewer than three points, or all at one level")
     search = _rate_search(level, rate, w)
     start = _best_on_grid(search, float(np.log(level.min())) - 8.0, float(np.log(level.max())) + 10.0)
     if start is None:
@@ -152,7 +154,7 @@ def level_on_rate(*, rate_mg_per_day: Floats, level_mg_per_L: Floats, level_log_
     Source: formulas at steady state, Michaelis & Menten 1913; weighting by the error model is common
     practice.
     """
-    _needs(len(np.unique(rate_mg_per_day)) >= 2, "all levels were taken on one daily dose")
+    _needs(not all_one(rate_mg_per_day), "all levels were taken on one daily dose")
     search = _level_search(rate_mg_per_day, level_mg_per_L, level_log_sd)
     start = _best_on_grid(search, -_FARTHEST, 16.0)
     if start is None:
@@ -280,6 +282,11 @@ def _golden_lattice(count: int) -> tuple[Floats, Floats]:
 
 
 # --- common to both -----------------------------------------------------------------------------------------
+
+
+def all_one(values: Floats) -> bool:
+    """Whether all values are the same but for rounding (salt factors leave a last digit behind)."""
+    return bool(np.ptp(values) <= SAME * float(np.max(np.abs(values))))
 
 
 def _needs(condition: bool, found: str) -> None:

@@ -29,7 +29,7 @@ from pkcalc.estimate.lines import (
     redrawn_levels,
     straight_line,
 )
-from pkcalc.estimate.regression import level_on_rate
+from pkcalc.estimate.regression import all_one, level_on_rate
 from pkcalc.estimate.result import Estimate, Floats
 from pkcalc.units import show, show_number
 
@@ -133,9 +133,7 @@ def pictures(pairs: SteadyPairs, *, repeats: int = 24, log_sd: Floats | None = N
     than the pairs' own for these repeats, shape (n,), to show what one part of it (the assay) does alone.
     """
     results = {result.method: result for result in compare(pairs, draws=512)}
-    two_doses = (
-        len(np.unique(pairs.rate_mg_per_day)) > 1
-    )  # on one dose nothing is read, however often redrawn
+    two_doses = not all_one(pairs.rate_mg_per_day)  # on one dose nothing is read, however often redrawn
     redrawn = redrawn_levels(pairs, repeats, log_sd) if repeats and two_doses else None
     return (
         _direct_linear(pairs, results[DIRECT_LINEAR], redrawn),

@@ -463,6 +463,17 @@ def test_more_scatter_than_stated_widens_the_interval_and_withdraws_trust():
     assert result.summary["km_mg_per_L"].low == pytest.approx(wide.km_low, rel=0.01)
 
 
+@pytest.mark.parametrize("short_of_vmax", [1e-2, 1e-5, 1e-9])
+def test_the_regression_keeps_its_digits_next_to_saturation(short_of_vmax):
+    """The top dose a hair below Vmax: the headroom itself is found, not the difference of two large numbers."""
+    rate = np.array([200.0, 300, 400])
+    vmax = 400 * (1 + short_of_vmax)
+    level = 5 * rate / np.array([200 + 400 * short_of_vmax, 100 + 400 * short_of_vmax, 400 * short_of_vmax])
+    fit = fitted(pairs(rate, level))
+    assert fit.vmax - 400 == pytest.approx(vmax - 400, rel=1e-6)
+    assert fit.km == pytest.approx(5, rel=1e-9)
+
+
 def test_each_level_counts_by_its_own_spread():
     """A level said to be uncertain lets go of the curve: halving its number moves the answer far less."""
     rate = np.array([200.0, 250, 300, 350])
@@ -502,6 +513,16 @@ def test_repeated_doses_are_left_out_of_the_crossings():
     result = from_steady_pairs(pairs(rate, level), method=DIRECT_LINEAR)
     assert result.diagnostics["crossings"] == 4
     assert result.diagnostics["crossings left out"] == 2
+
+
+def test_a_last_digit_of_rounding_does_not_make_two_doses_of_one():
+    same_dose = 0.92 * 300
+    rounded = 276.0 * (1 + 4e-16)
+    found = crossings(level=np.array([8.0, 9.0]), rate=np.array([same_dose, rounded]), error_in="level")
+    assert len(found.first) == 0
+    for result in compare(pairs([same_dose, rounded, 276.0], [8, 9, 10.0])):
+        assert isinstance(result, LineFailure)
+        assert result.because == "all levels were taken on one daily dose"
 
 
 def test_one_wrong_level_moves_the_direct_linear_plot_least():
