@@ -243,6 +243,15 @@ def load_site(path: str | Path) -> Site:
     return parse_site(text, file.name)
 
 
+def _written(value: Any) -> str:
+    """A value as it stands in the file, for a message."""
+    if isinstance(value, bool):
+        return "true" if value else "false"
+    if isinstance(value, int | float):
+        return f"{value:g}"
+    return f'"{value[:40]}"' if isinstance(value, str) else "a list or section"
+
+
 @dataclass
 class _Reader:
     """Reads the settings of one file, collecting problems instead of stopping at the first."""
@@ -310,7 +319,7 @@ class _Reader:
             self.say(
                 section,
                 key,
-                f"{value!r} was given",
+                f"{_written(value)} was given",
                 f"a number from {show_number(low)} to {show_number(high)}",
                 "Mend it",
             )
@@ -350,7 +359,7 @@ class _Reader:
         if value is None:
             return default
         if not isinstance(value, bool):
-            self.say(section, key, f"{value!r} was given", "true or false", "Write one of the two")
+            self.say(section, key, f"{_written(value)} was given", "true or false", "Write one of the two")
             return default
         self._keep(section, key, "yes" if value else "no", "yes" if default else "no")
         return value
@@ -438,9 +447,7 @@ def _settings(r: _Reader, name: str, protocol: str, sha256: str) -> Site:
     products = r.several("products", "only", on_shelf, "the whole shelf")
     groups = [profile.products[p].exclusive_group for p in products if profile.products[p].exclusive_group]
     if len(groups) != len(set(groups)):
-        r.say(
-            "products", "only", "two strengths of the oral suspension", "one of them", "Take one of them out"
-        )
+        r.say("products", "only", "two strengths of the same liquid", "one of them", "Take one of them out")
     warn = r.quantity("chance", "warn", "share", (0.001, 0.5), show(base.warn_chance * 100, "%"))
     stop = r.quantity("chance", "stop", "share", (0.001, 0.5), show(base.stop_chance * 100, "%"))
     warn, stop = warn or base.warn_chance, stop or base.stop_chance
@@ -525,7 +532,7 @@ def _rates(r: _Reader) -> tuple[dict[tuple[str, str], float], dict[tuple[str, st
             "rates",
             key,
             "dose rate",
-            (1.0, cap.highest_mg_per_min * 1440),
+            (144.0, cap.highest_mg_per_min * 1440),
             show(cap.mg_per_min, unit),
         )
         if value is not None:
@@ -535,7 +542,7 @@ def _rates(r: _Reader) -> tuple[dict[tuple[str, str], float], dict[tuple[str, st
                 "rates",
                 f"{key}-per-kg",
                 "dose rate per weight",
-                (1.0, cap.highest_mg_per_kg_min * 1440),
+                (14.4, cap.highest_mg_per_kg_min * 1440),
                 show(cap.mg_per_kg_min, unit.replace("/min", "/kg/min")),
             )
             if per_kg is not None:
