@@ -237,9 +237,8 @@ def crossings(*, level: Floats, rate: Floats, error_in: Literal["level", "rate"]
     level, rate = np.broadcast_arrays(level, rate)
     i, j = np.triu_indices(level.shape[-1], 1)
     known = rate if error_in == "level" else level
-    close = np.isclose(known[..., i], known[..., j], rtol=SAME, atol=0.0)
-    same: NDArray[np.bool_] = np.asarray(close).reshape(-1, len(i)).all(axis=0)
-    i, j = i[~same], j[~same]
+    apart = np.abs(known[..., i] - known[..., j]) > SAME * known[..., i]
+    i, j = (ends[np.any(apart.reshape(-1, len(i)), axis=0)] for ends in (i, j))
     with np.errstate(divide="ignore", invalid="ignore"):
         bend = rate[..., i] / level[..., i] - rate[..., j] / level[..., j]
         km = (rate[..., j] - rate[..., i]) / bend
