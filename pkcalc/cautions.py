@@ -49,8 +49,10 @@ class State:
     observations: Sequence[Observation] = ()
     pairs: Sequence[SteadyPair] = ()
     settling: Sequence[Settling] = ()
+    own_settling: Sequence[Settling] = ()
     pair_estimate: Estimate | None = None
     pair_refusal: str = ""
+    distrusted: str = ""
     estimate: Estimate | None = None
     goal: Goal | None = None
     regimens: Sequence[ShownRegimen] = ()
@@ -138,12 +140,16 @@ def _kinds_mixed(s: State, p: Mapping[str, Any]) -> list[Words]:
 
 def _not_settled(s: State, p: Mapping[str, Any]) -> list[Words]:
     paired = {x.level for x in s.pairs}
-    return [{"sentence": x.sentence} for x in s.settling if x.settled is False and x.level in paired]
+    found = {x.level: x for x in s.settling if x.settled is False and x.level in paired}
+    found |= {x.level: x for x in s.own_settling if x.settled is False}
+    return [{"sentence": x.sentence} for x in found.values()]
 
 
 def _settling_unknown(s: State, p: Mapping[str, Any]) -> list[Words]:
     paired = {x.level for x in s.pairs}
-    return [{"sentence": x.sentence} for x in s.settling if x.settled is None and x.level in paired]
+    if len(s.pairs) != 2 or s.pair_estimate is None:
+        return []
+    return [{"sentence": x.sentence} for x in s.own_settling if x.settled is None and x.level in paired]
 
 
 def _pair_refused(s: State, p: Mapping[str, Any]) -> list[Words]:
@@ -156,6 +162,10 @@ def _chance_of_negative_km_above(s: State, p: Mapping[str, Any]) -> list[Words]:
     chance = float(str(s.pair_estimate.diagnostics["chance of negative Km"]))
     upper = p.get("upper", 1.0)
     return [{"chance": percent(chance)}] if p["limit"] < chance <= upper else []
+
+
+def _not_trusted(s: State, p: Mapping[str, Any]) -> list[Words]:
+    return [{"why": s.distrusted}] if s.distrusted else []
 
 
 def _vmax_outside(s: State, p: Mapping[str, Any]) -> list[Words]:
@@ -240,6 +250,7 @@ PREDICATES: dict[str, Predicate] = {
     "settling_unknown": _settling_unknown,
     "pair_refused": _pair_refused,
     "chance_of_negative_km_above": _chance_of_negative_km_above,
+    "not_trusted": _not_trusted,
     "vmax_outside": _vmax_outside,
     "km_outside": _km_outside,
     "danger_above_stop": _danger_above_stop,

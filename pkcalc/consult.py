@@ -3,8 +3,9 @@
 from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from pathlib import Path
+from typing import cast
 
 from pkcalc import cautions as caution_engine
 from pkcalc import plan as planning
@@ -12,13 +13,17 @@ from pkcalc import steadiness
 from pkcalc.case import Case, Target
 from pkcalc.cautions import ShownRegimen, State
 from pkcalc.dosing import Regimen
-from pkcalc.drugs.profile import Prior, Profile, load_profile
-from pkcalc.errors import CannotEstimate, Caution
+from pkcalc.drugs.profile import Prior, Profile, Sex, load_profile
+from pkcalc.errors import CannotEstimate, CaseError, Caution
+from pkcalc.estimate import lines, posterior, trust
 from pkcalc.estimate import pair as two_level
+from pkcalc.estimate.error_model import LevelData, RecordSpread
 from pkcalc.estimate.pair import SteadyPair, VolumeSpread
 from pkcalc.estimate.result import Band, Estimate
 from pkcalc.forecast import Forecast, Goal, forecast_rate, rate_for_level
-from pkcalc.levels import LabScale, Observation, lab_scale, observe
+from pkcalc.given import given_record
+from pkcalc.levels import LabScale, Observation, adherence, everyday_cv, lab_scale, observe
+from pkcalc.record import Record
 from pkcalc.site import Site, load_site, no_site
 from pkcalc.steadiness import Settling
 
@@ -41,8 +46,11 @@ class Shown:
 class Consult:
     """Everything one consult found, each part with the record it came from.
 
-    estimates: by method. refusals: method -> why it gave no answer. chosen: the estimate that the forecasts
-    use, with the reason in words; None where a stop or a refusal leaves none. blocked: what stops take away;
+    population: what the population alone says (None without a weight). estimates: by method. refusals: method ->
+    why it gave no answer. chosen: the estimate that the forecasts use, with the reason in words; None where a
+    stop or a refusal leaves none. settling: by the whole record's draws where there is one, else by the
+    population's, else by the chosen estimate's own. line_results and verdict: three or more steady levels side
+    by side. difference: why the methods differ, in a sentence, where they do. blocked: what stops take away;
     results so named are absent (None or empty).
     """
 
@@ -50,6 +58,8 @@ class Consult:
     profile: Profile
     site: Site
     prior: Prior | None
+    population: Estimate | None
+    record: Record | None
     goal: Goal
     scale: LabScale
     observations: tuple[Observation, ...]
@@ -57,8 +67,11 @@ class Consult:
     settling: tuple[Settling, ...]
     estimates: Mapping[str, Estimate]
     refusals: Mapping[str, str]
+    line_results: tuple[lines.Result, ...]
+    verdict: trust.Verdict | None
     chosen: Estimate | None
     chosen_why: str
+    difference: str
     proposed: tuple[Shown, ...]
     table: tuple[Shown, ...]
     aim_rate: Band | None
@@ -72,111 +85,211 @@ class Consult:
         return self.chosen is None or "projection" in self.blocked
 
 
+@dataclass(frozen=True)
+class _Estimates:
+    """What the methods gave, before the choice."""
+
+    by_method: dict[str, Estimate]
+    refusals: dict[str, str]
+    record: Record | None
+    settling: tuple[Settling, ...]
+    own_settling: tuple[Settling, ...]
+    line_results: tuple[lines.Result, ...]
+    verdict: trust.Verdict | None
+
+
 def run_consult(case: Case, site: Site | str | Path | None = None) -> Consult:
     """A checked case in, a consult out. Refusals of a method and stops are part of the result, not exceptions."""
-    chosen_site = no_site() if site is None else site if isinstance(site, Site) else load_site(site)
+    local = no_site() if site is None else site if isinstance(site, Site) else load_site(site)
     profile = load_profile(case.drug)
-    prior = _prior(case, profile, chosen_site)
-    goal = _goal(case, profile, chosen_site)
-    state = State(case=case, profile=profile, site=chosen_site, goal=goal)
+    prior = _prior(case, profile, local)
+    population = posterior.prior_only(prior) if prior is not None else None
+    state = State(case=case, profile=profile, site=local, goal=_goal(case, profile, local))
     said = list(caution_engine.after_case(state))
 
-    observations = observe(case, profile, chosen_site)
+    observations = observe(case, profile, local)
     pairs = steadiness.steady_pairs(case, profile, observations)
-    state = State(
-        case=case, profile=profile, site=chosen_site, goal=goal, observations=observations, pairs=pairs
-    )
+    state = replace(state, observations=observations, pairs=pairs)
     said += caution_engine.after_levels(state)
 
-    estimates: dict[str, Estimate] = {}
-    refusals: dict[str, str] = {}
-    stops = caution_engine.blocked(said)
-    pair_estimate = None
-    if "two-level" not in stops and len(pairs) == 2:
-        try:
-            pair_estimate = two_level.from_steady_levels(*pairs, volume=_volume(prior))
-            estimates[pair_estimate.method] = pair_estimate
-        except CannotEstimate as refusal:
-            refusals["two levels"] = str(refusal)
-    elif "two-level" not in stops:
-        refusals["two levels"] = _why_no_pair(pairs, observations)
-
-    chosen, why = _choose(estimates, case)
-    settling = steadiness.settling(case, profile, observations, chosen, pairs)
-    state = State(
-        case=case,
-        profile=profile,
-        site=chosen_site,
-        goal=goal,
-        observations=observations,
-        pairs=pairs,
-        settling=settling if chosen is not None else (),
+    found = _estimate(state, prior, population, caution_engine.blocked(said))
+    pair_estimate = found.by_method.get(two_level.METHOD)
+    chosen, why = _choose(found.by_method, case)
+    state = replace(
+        state,
+        settling=found.settling,
+        own_settling=found.own_settling,
         pair_estimate=pair_estimate,
+        pair_refusal=found.refusals.get(two_level.METHOD, "") if len(pairs) == 2 else "",
+        distrusted=" ".join(e.distrust for e in found.by_method.values() if not e.trusted),
         estimate=chosen,
     )
     said += caution_engine.after_estimate(state)
     stops = caution_engine.blocked(said)
-    if "two-level" in stops:
-        for name in ("two levels",):
-            if estimates.pop(name, None) is not None and chosen is not None and chosen.method == name:
-                chosen, why = _choose(estimates, case)
+    if "two-level" in stops and found.by_method.pop(two_level.METHOD, None) is not None:
+        chosen, why = _choose(found.by_method, case)
+    if "estimate" in stops:
+        chosen, why = None, ""
+    state = replace(state, estimate=chosen)
 
-    scale = lab_scale(case, profile, case.albumin)
+    scale = lab_scale(case, profile, local, case.albumin)
     proposed: tuple[Shown, ...] = ()
     table: tuple[Shown, ...] = ()
     aim_rate: Band | None = None
+    assert state.goal is not None
     if chosen is not None and "projection" not in stops:
-        present = _present_level(observations)
-        regimens = planning.dose_table(case, profile, chosen_site)
-
-        def show_one(regimen: Regimen, *, is_proposed: bool) -> Shown:
-            assert chosen is not None
-            forecast = forecast_rate(
-                chosen, regimen.active_mg_per_day(profile), goal, scale, present_mg_per_L=present
-            )
-            return Shown(
-                regimen=regimen,
-                words=regimen.words(profile),
-                forecast=forecast,
-                present=planning.is_present(regimen, case, profile),
-                proposed=is_proposed,
-                offered=caution_engine.danger(forecast) <= chosen_site.stop_chance,
-            )
-
-        proposed = tuple(show_one(r, is_proposed=True) for r in case.proposed)
-        table = tuple(show_one(r, is_proposed=False) for r in regimens)
-        aim_rate = rate_for_level(chosen, goal.aim_mg_per_L)
+        present = present_level(observations)
+        regimens = planning.dose_table(case, profile, local)
+        proposed = tuple(_show(r, state, chosen, scale, present, is_proposed=True) for r in case.proposed)
+        table = tuple(_show(r, state, chosen, scale, present, is_proposed=False) for r in regimens)
+        aim_rate = rate_for_level(chosen, state.goal.aim_mg_per_L)
         spoken = [ShownRegimen(s.words, s.forecast, s.present) for s in proposed]
-        present_rows = [ShownRegimen("The present dose", s.forecast, True) for s in table if s.present]
-        state = State(
-            case=case,
-            profile=profile,
-            site=chosen_site,
-            goal=goal,
-            observations=observations,
-            estimate=chosen,
-            regimens=(*present_rows, *spoken),
-        )
-        said += caution_engine.after_plan(state)
+        now = [ShownRegimen("The present dose", s.forecast, True) for s in table if s.present]
+        said += caution_engine.after_plan(replace(state, regimens=(*now, *spoken)))
     return Consult(
         case=case,
         profile=profile,
-        site=chosen_site,
+        site=local,
         prior=prior,
-        goal=goal,
+        population=population,
+        record=found.record,
+        goal=state.goal,
         scale=scale,
         observations=observations,
         pairs=pairs,
-        settling=settling,
-        estimates=estimates,
-        refusals=refusals,
+        settling=found.settling,
+        estimates=found.by_method,
+        refusals=found.refusals,
+        line_results=found.line_results,
+        verdict=found.verdict,
         chosen=chosen,
         chosen_why=why,
+        difference=_difference(found),
         proposed=proposed,
         table=table,
         aim_rate=aim_rate,
         cautions=caution_engine.in_order(said),
         blocked=caution_engine.blocked(said),
+    )
+
+
+def _show(
+    regimen: Regimen, state: State, chosen: Estimate, scale: LabScale, present: float, *, is_proposed: bool
+) -> Shown:
+    assert state.goal is not None
+    forecast = forecast_rate(
+        chosen, regimen.active_mg_per_day(state.profile), state.goal, scale, present_mg_per_L=present
+    )
+    return Shown(
+        regimen=regimen,
+        words=regimen.words(state.profile),
+        forecast=forecast,
+        present=planning.is_present(regimen, state.case, state.profile),
+        proposed=is_proposed,
+        offered=caution_engine.danger(forecast) <= state.site.stop_chance,
+    )
+
+
+def _estimate(
+    state: State, prior: Prior | None, population: Estimate | None, stops: frozenset[str]
+) -> _Estimates:
+    """Every method that may and can answer, with the reason where one cannot."""
+    case, profile, observations, pairs = state.case, state.profile, state.observations, state.pairs
+    by_method: dict[str, Estimate] = {}
+    refusals: dict[str, str] = {}
+    record: Record | None = None
+    whole: Estimate | None = None
+    if "estimate" not in stops:
+        try:
+            record, whole = _whole_record(state, prior)
+            by_method[whole.method] = whole
+        except CannotEstimate as refusal:
+            refusals[posterior.WHOLE_RECORD] = str(refusal)
+        except CaseError as refusal:
+            refusals[posterior.WHOLE_RECORD] = " ".join(p.text for p in refusal.problems)
+    settling = steadiness.settling(case, profile, observations, whole or population, pairs)
+
+    line_results: tuple[lines.Result, ...] = ()
+    verdict: trust.Verdict | None = None
+    own: tuple[Settling, ...] = ()
+    volume = None if prior is None else VolumeSpread(prior.volume_L, prior.volume_log_sd)
+    if "two-level" not in stops:
+        settled = {s.level for s in settling if s.settled is not False}
+        steady = tuple(p for p in pairs if p.level in settled)
+        try:
+            if len(pairs) == 2:
+                # An unsettled pair is refused by its stop, which names the level; so it is solved here all the same.
+                by_method[two_level.METHOD] = two_level.from_steady_levels(*pairs, volume=volume)
+                own = steadiness.settling(case, profile, observations, by_method[two_level.METHOD], pairs)
+            elif len(steady) >= lines.FEWEST:
+                gathered = lines.gather(steady)
+                line_results = lines.compare(gathered, volume=volume)
+                verdict = trust.verdict(line_results, gathered)
+                by_method[lines.REGRESSION] = lines.from_steady_pairs(gathered, volume=volume)
+            else:
+                refusals[two_level.METHOD] = _why_no_pair(pairs, steady, observations)
+        except CannotEstimate as refusal:
+            refusals[two_level.METHOD if len(pairs) == 2 else lines.REGRESSION] = str(refusal)
+    if whole is None and population is None and own:
+        settling = own
+    return _Estimates(by_method, refusals, record, settling, own, line_results, verdict)
+
+
+def _whole_record(state: State, prior: Prior | None) -> tuple[Record, Estimate]:
+    """The estimate from population and record; CannotEstimate where the case does not carry one."""
+    if prior is None:
+        raise CannotEstimate(
+            found="No weight is given." if state.case.patient.weight_kg is None else "The age is not covered.",
+            why="The population cannot be scaled to this patient, so a record cannot be weighed against it.",
+            helps="Give a weight.",
+        )
+    if not state.observations:
+        raise CannotEstimate("No level is given.", "There is nothing to learn from yet.", "Add a level.")
+    undated = [o.name for o in state.observations if o.level.drawn is None]
+    if undated:
+        raise CannotEstimate(
+            found=f"{', '.join(undated)}: the time of the draw is not stated.",
+            why="A level without its time cannot be placed on the course of the record.",
+            helps="Give date and time of the draw.",
+        )
+    unusable = [o.name for o in state.observations if not o.usable]
+    if unusable:
+        raise CannotEstimate(
+            found=f"{', '.join(unusable)}: no single reading can be trusted.",
+            why="The binding in this patient is unknown, so the level could stand for a range of levels.",
+            helps="Ask for a free level.",
+        )
+    record = given_record(state.case, state.profile)
+    return record, posterior.from_record(record, level_data(state), prior, record_spread(state.case, state.profile))
+
+
+def level_data(state: State) -> tuple[LevelData, ...]:
+    """Every dated level as the whole-record estimate takes it: its own spread in parts, intake apart."""
+    found = []
+    for o in state.observations:
+        if o.level.drawn is not None:
+            assay = o.spread.assay_cv
+            found.append(
+                LevelData(
+                    time_day=state.case.day(o.level.drawn),
+                    level_mg_per_L=o.working_mg_per_L,
+                    assay_cv=assay,
+                    day_cv=everyday_cv(state.profile, state.site, assay),
+                    extra_log_sd=o.binding_log_sd,
+                    censored=o.level.censored,
+                    index=o.level.index,
+                )
+            )
+    return tuple(found)
+
+
+def record_spread(case: Case, profile: Profile) -> RecordSpread:
+    """How far the record of doses is believed, by who gave them."""
+    key, _ = adherence(case)
+    return RecordSpread(
+        doses_differing=profile.spread.intake_share[key],
+        wrong_level_chance=profile.spread.wrong_level_chance,
+        wrong_level_factor=profile.spread.wrong_level_factor,
     )
 
 
@@ -191,51 +304,74 @@ def _prior(case: Case, profile: Profile, site: Site) -> Prior | None:
         m.id for m in population.modifiers.values() if m.question and case.answer(m.question) == "yes"
     )
     return population.at(
-        weight, age, height_cm=case.patient.height_cm, sex=case.patient.sex, modifiers=switched_on
+        weight, age, height_cm=case.patient.height_cm, sex=cast(Sex, case.patient.sex), modifiers=switched_on
     )
-
-
-def _volume(prior: Prior | None) -> VolumeSpread | None:
-    return None if prior is None else VolumeSpread(prior.volume_L, prior.volume_log_sd)
 
 
 def _goal(case: Case, profile: Profile, site: Site) -> Goal:
     target: Target | None = case.target
-    origin = "this case"
     if target is None:
         low, high, origin = site.target(profile)
-    elif target.kind == "free":
-        fraction = profile.binding.free_fraction if profile.binding else 1.0
-        low, high = target.low_mg_per_L / fraction, target.high_mg_per_L / fraction
+        aim = site.aim_mg_per_L or profile.target.aim_mg_per_L
     else:
-        low, high = target.low_mg_per_L, target.high_mg_per_L
-    aim = case.aim_mg_per_L or site.aim_mg_per_L or (low * high) ** 0.5
-    if case.aim_mg_per_L is None and site.aim_mg_per_L is None:
+        fraction = profile.binding.free_fraction if target.kind == "free" and profile.binding else 1.0
+        low, high, origin = target.low_mg_per_L / fraction, target.high_mg_per_L / fraction, target.origin
         aim = (low + high) / 2
-    return Goal(low, high, site.critical(profile), aim, origin)
+    return Goal(low, high, site.critical(profile), case.aim_mg_per_L or aim, origin)
 
 
 def _choose(estimates: Mapping[str, Estimate], case: Case) -> tuple[Estimate | None, str]:
     """The estimate the forecasts use: the one asked for, else the best available, always with the reason."""
-    if case.method and case.method in estimates:
-        return estimates[case.method], f"{case.method}: asked for in the case"
-    for name, why in (("two levels", "two steady levels on two doses"),):
-        if name in estimates:
+    asked = {"lines": lines.REGRESSION}.get(case.method, case.method)
+    if asked:
+        if asked in estimates:
+            return estimates[asked], f"{asked}, as asked for in the case"
+        return None, ""
+    for name, why in (
+        (posterior.WHOLE_RECORD, "it uses every dose and level with population knowledge, settled or not"),
+        (lines.REGRESSION, "three or more steady levels, each weighed by its own spread"),
+        (two_level.METHOD, "two steady levels on two doses"),
+    ):
+        if name in estimates and estimates[name].trusted:
             return estimates[name], f"{name}: {why}"
     return None, ""
 
 
-def _why_no_pair(pairs: Sequence[SteadyPair], observations: Sequence[Observation]) -> str:
+def _why_no_pair(
+    pairs: Sequence[SteadyPair], steady: Sequence[SteadyPair], observations: Sequence[Observation]
+) -> str:
     if len(pairs) > 2:
-        return "More than two dose/level pairs are given; the two-level method uses exactly two."
+        return (
+            f"Of {len(pairs)} levels with a dose in force {len(steady)} had settled when drawn; lines through steady "
+            f"levels need {lines.FEWEST} or more."
+        )
     return (
         f"{len(pairs)} of {len(observations)} levels can be matched with a single dose in force; "
         "the two-level method needs two levels on two different doses."
     )
 
 
-def _present_level(observations: Sequence[Observation]) -> float:
-    """The latest level on the working basis; where no draw is dated, the last one given."""
+def _difference(found: _Estimates) -> str:
+    """Why the two-level answer and the whole record differ, where they differ materially."""
+    pair, whole = found.by_method.get(two_level.METHOD), found.by_method.get(posterior.WHOLE_RECORD)
+    if pair is None or whole is None:
+        return ""
+    ratio = pair.point.vmax_mg_per_day / whole.point.vmax_mg_per_day
+    if 0.9 <= ratio <= 1.1:
+        return ""
+    way = "higher" if ratio > 1 else "lower"
+    early = [s for s in found.settling if s.fraction is not None and s.fraction.median < 0.97]
+    percent = f"{100 * abs(ratio - 1):.0f}"
+    if early:
+        share = f"{100 * early[-1].fraction.median:.0f}" if early[-1].fraction else ""
+        reason = f"level {early[-1].level + 1} was drawn at about {share} % of the way to its plateau"
+    else:
+        reason = "two levels with this spread leave a wide range, and the whole record also weighs the population"
+    return f"The two-level method reads Vmax {percent} % {way} than the whole record: {reason}."
+
+
+def present_level(observations: Sequence[Observation]) -> float:
+    """The latest level on the working basis; where no draw is dated, the last one given; 0 without a level."""
     if not observations:
         return 0.0
     dated = [o for o in observations if o.level.drawn is not None]

@@ -79,26 +79,31 @@ class Observation:
 def observe(case: Case, profile: Profile, site: Site) -> tuple[Observation, ...]:
     """Every level of the case on the working basis, in the order of the case."""
     spread = total_spread(case, profile, site)
-    return tuple(_observe(level, case, profile, spread) for level in case.levels)
+    return tuple(_observe(level, case, profile, site, spread) for level in case.levels)
 
 
 def total_spread(case: Case, profile: Profile, site: Site) -> Spread:
     """The total spread of a level for this patient: observed dosing, outpatient, or doubtful adherence."""
-    givers = {c.given_by for c in case.courses}
+    key, words = adherence(case)
     assay = site.assay_cv if site.assay_cv is not None else profile.spread.assay_cv
-    if case.answer("adherence_doubtful") == "yes":
-        key, words = "doubtful", "doubtful adherence"
-    elif givers == {"nurse"} and case.answer("adherence_doubtful") == "no":
-        key, words = "observed", "observed dosing"
-    else:
-        key, words = "outpatient", "doses taken unobserved, or not stated who gives them"
     cv = site.level_total_cv(key) or profile.spread.total_cv[key]
     return Spread(total_cv=max(cv, assay), assay_cv=assay, basis=words)
 
 
-def _observe(level: Level, case: Case, profile: Profile, spread: Spread) -> Observation:
+def adherence(case: Case) -> tuple[str, str]:
+    """How the doses were taken: key of the profile's spreads, and the words for it."""
+    givers = {c.given_by for c in case.courses}
+    if case.answer("adherence_doubtful") == "yes":
+        return "doubtful", "doubtful adherence"
+    if givers == {"nurse"} and case.answer("adherence_doubtful") == "no":
+        return "observed", "observed dosing"
+    return "outpatient", "doses taken unobserved, or not stated who gives them"
+
+
+def _observe(level: Level, case: Case, profile: Profile, site: Site, spread: Spread) -> Observation:
     reported = level.reported_mg_per_L
     name = f"Level {level.index + 1}"
+    coefficient = site.albumin_coefficient(profile.binding) if profile.binding else 0.0
     shown = show(reported, "mg/L", 4)
     steps: list[str] = []
     if level.typed.label not in ("mg/L",):
@@ -108,7 +113,7 @@ def _observe(level: Level, case: Case, profile: Profile, spread: Spread) -> Obse
         scale = LabScale(1.0, 1.0, "reported as measured")
         return Observation(level, reported, reported, reported, spread, 0.0, True, tuple(steps), (), scale)
     albumin = level.albumin or case.albumin
-    scale = lab_scale(case, profile, albumin)
+    scale = lab_scale(case, profile, site, albumin)
     if level.kind == "normalised":
         caveat = f"{name} was already normalised by {level.normalised_by}: check which equation was used."
         return Observation(
@@ -147,8 +152,8 @@ def _observe(level: Level, case: Case, profile: Profile, spread: Spread) -> Obse
     if corrected:
         g_dl = albumin.g_per_L / 10
         steps.append(
-            f"normalised total = total / ({show_number(binding.albumin_coefficient)} x albumin + 0.1) = {shown} / "
-            f"({show_number(binding.albumin_coefficient)} x {show_number(g_dl)} g/dL + 0.1) = {show(working, 'mg/L', 4)}"
+            f"normalised total = total / ({show_number(coefficient)} x albumin + 0.1) = {shown} / "
+            f"({show_number(coefficient)} x {show_number(g_dl)} g/dL + 0.1) = {show(working, 'mg/L', 4)}"
         )
     else:
         steps.append(f"albumin {show(albumin.g_per_L, 'g/L')}: no correction needed")
@@ -191,7 +196,13 @@ def _readings(
     return min(values), max(values), ["possible readings: " + "; ".join(w for _, w in readings)]
 
 
-def lab_scale(case: Case, profile: Profile, albumin: Albumin | None) -> LabScale:
+def everyday_cv(profile: Profile, site: Site, assay_cv: float) -> float:
+    """What is left of the total spread under observed dosing once the assay is taken out of it."""
+    total = site.level_total_cv("observed") or profile.spread.total_cv["observed"]
+    return math.sqrt(max(total**2 - assay_cv**2, 0.0))
+
+
+def lab_scale(case: Case, profile: Profile, site: Site, albumin: Albumin | None) -> LabScale:
     """The scale on which the laboratory will report this patient's next level."""
     binding = profile.binding
     if binding is None:

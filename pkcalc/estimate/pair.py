@@ -12,6 +12,7 @@ from pkcalc.errors import CannotEstimate
 from pkcalc.estimate.result import Band, Estimate, Floats, LevelFit, Point, band, log_correlation
 from pkcalc.units import show, show_number
 
+METHOD = "two levels"
 DRAWS = 4096
 
 
@@ -77,7 +78,7 @@ def from_steady_levels(
     if volumes is not None:
         summary["volume_L"] = band(volumes, weights)
     return Estimate(
-        method="two levels",
+        method=METHOD,
         vmax_mg_per_day=vmax_all,
         km_mg_per_L=km_all,
         volume_L=volumes,
