@@ -115,7 +115,16 @@ class SteadyPairs:
 
 
 def gather(steady: Sequence[SteadyPair]) -> SteadyPairs:
-    """The pairs of a case as one record. Raises CannotEstimate where free and total levels are mixed."""
+    """The pairs of a case as one record.
+
+    Raises CannotEstimate where free and total levels are mixed, or where there are more than 20.
+    """
+    if len(steady) > MOST:
+        raise CannotEstimate(
+            f"{len(steady)} levels count as steady.",
+            f"No more than {MOST} are taken together: over so many the patient has rarely stayed the same.",
+            "Leave out the levels that no longer describe the patient.",
+        )
     if {"free", "total"} <= {pair.kind for pair in steady}:
         raise CannotEstimate(
             "Some of these levels are free and others total.",
@@ -141,11 +150,15 @@ class LineFailure:
     @property
     def text(self) -> str:
         kind = "curve" if self.method == REGRESSION else "plot" if self.method == DIRECT_LINEAR else "line"
-        name = self.method[0].upper() + self.method[1:]
-        return f"{name}: this {kind} fails on these data, because {self.because}."
+        return f"{_named(self.method)}: this {kind} fails on these data, because {self.because}."
 
 
 Result = Estimate | LineFailure
+
+
+def _named(method: str) -> str:
+    """A method's name at the head of a sentence."""
+    return method[0].upper() + method[1:]
 
 
 # --- the straight lines -------------------------------------------------------------------------------------
@@ -360,7 +373,8 @@ def _finish(
         for at, rate in enumerate(pairs.rate_mg_per_day)
     )
     if rejected > MOST_REJECTED:
-        distrust.append(f"{_per_cent(rejected)} {rejected_words}")
+        distrust.append(rejected_words.format(_per_cent(rejected)))
+    why = "; ".join(distrust)
     return Estimate(
         method=method,
         vmax_mg_per_day=vmax,
@@ -373,9 +387,9 @@ def _finish(
         volume_from="none" if volume is None else "population",
         rejected=rejected,
         fit=fit,
-        diagnostics=diagnostics,
-        trusted=not distrust,
-        distrust="; ".join(distrust),
+        diagnostics=diagnostics | ({"not trusted because": why} if why else {}),
+        trusted=not why,
+        distrust=f"{_named(method)} cannot be trusted here: {why}." if why else "",
     )
 
 
@@ -407,7 +421,7 @@ def _resampled(
         rejected=float(1.0 - kept.mean()),
         diagnostics={"interval": "levels drawn again within their own spread", **diagnostics},
         distrust=[],
-        rejected_words="of the sets redrawn within the spread of the levels give no possible answer",
+        rejected_words="{} of the sets redrawn within the spread of the levels give no possible answer",
         volume=volume,
     )
 
@@ -472,7 +486,7 @@ def _by_regression(pairs: SteadyPairs, draws: int, volume: VolumeSpread | None) 
         rejected=rejected,
         diagnostics=diagnostics,
         distrust=distrust,
-        rejected_words="is the chance, by these levels alone, that no saturation shows at all",
+        rejected_words="by these levels alone, the chance that no saturation shows at all is {}",
         volume=volume,
     )
 
@@ -609,7 +623,7 @@ def from_steady_pairs(
         result = _by_straight_line(kind, pairs, draws, volume)
     if isinstance(result, LineFailure):
         raise CannotEstimate(
-            f"The {method} fails on these {len(pairs)} levels, because {result.because}.",
+            f"{_named(method)} fails on these {len(pairs)} levels, because {result.because}.",
             "No Vmax and no Km follow from it.",
             "Check doses taken, sampling times and units, or add a steady level on another dose.",
         )

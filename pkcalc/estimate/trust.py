@@ -142,7 +142,7 @@ def verdict(results: tuple[Result, ...], pairs: SteadyPairs) -> Verdict:
             suspects,
         )
     if not regression.trusted:
-        text = f"Trust none of these yet: {regression.distrust}."
+        text = f"Trust none of these yet: {regression.diagnostics['not trusted because']}."
         if regression.diagnostics["widened by"] != 1.0:
             text += f" {odd} Check it first." if odd else " No single pair can be blamed: check them all."
         else:

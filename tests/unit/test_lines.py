@@ -200,6 +200,26 @@ def test_free_and_total_levels_are_not_mixed():
     )
 
 
+def test_too_many_steady_levels_are_refused_in_words():
+    with pytest.raises(CannotEstimate) as caught:
+        gather([SteadyPair(at, 200 + at, 4 + at, 0.15) for at in range(21)])
+    assert str(caught.value) == (
+        "21 levels count as steady. No more than 20 are taken together: over so many the patient has rarely "
+        "stayed the same. Leave out the levels that no longer describe the patient."
+    )
+
+
+def test_a_straight_line_that_often_fails_when_redrawn_says_so():
+    steep = pairs([200, 225, 250, 300, 325, 350], [4, 5, 6.25, 5, 13, 17.5])
+    result = from_steady_pairs(steep, method="R against R/C")
+    assert not result.trusted
+    share = f"{100 * result.rejected:.0f}"
+    assert result.distrust == (
+        f"R against R/C cannot be trusted here: {share} % of the sets redrawn within the spread of the "
+        "levels give no possible answer."
+    )
+
+
 def test_gather_keeps_order_and_place_in_the_case():
     steady = [SteadyPair(4, 300, 10, 0.15), SteadyPair(1, 200, 4, 0.2), SteadyPair(2, 250, 6, 0.1)]
     found = gather(steady)
@@ -225,8 +245,8 @@ def test_levels_in_proportion_to_the_dose_fail_by_every_method_with_its_own_reas
     with pytest.raises(CannotEstimate) as caught:
         from_steady_pairs(PROPORTIONAL)
     assert str(caught.value) == (
-        "The weighted regression on the level fails on these 3 levels, because the levels rise no more than "
-        "in proportion to the dose. No Vmax and no Km follow from it. Check doses taken, sampling times and "
+        "Weighted regression on the level fails on these 3 levels, because the levels rise no more than in "
+        "proportion to the dose. No Vmax and no Km follow from it. Check doses taken, sampling times and "
         "units, or add a steady level on another dose."
     )
 
@@ -276,8 +296,8 @@ def test_an_absurd_vmax_is_refused():
     barely = pairs([200, 250, 300], [4, 5.02, 6.03], spread=0.1)
     assert words(compare(barely), "C/R against C") == (
         "C/R against C: this line fails on these data, because it would read a Vmax more than 20 times the "
-        "highest dose, so no saturation shows in the way it weighs them; level 1 (200 mg/day, 4 mg/L) "
-        "alone has 50 % of the pull on this line."
+        "highest dose, so no saturation shows in the way it weighs them; level 1 (200 mg/day, 4 mg/L) alone "
+        "has 50 % of the pull on this line."
     )
 
 
@@ -400,7 +420,10 @@ def test_an_open_upper_limit_is_said_in_words_and_never_infinity():
     assert result.diagnostics["Km at most (mg/L)"] == "no upper limit"
     assert result.diagnostics["interval"] == "profile likelihood"
     assert not result.trusted
-    assert result.distrust == "46 % is the chance, by these levels alone, that no saturation shows at all"
+    assert result.distrust == (
+        "Weighted regression on the level cannot be trusted here: by these levels alone, the chance that no "
+        "saturation shows at all is 46 %."
+    )
 
 
 def test_open_limits_of_the_laboratory_direction():
@@ -447,8 +470,8 @@ def test_more_scatter_than_stated_widens_the_interval_and_withdraws_trust():
     result = from_steady_pairs(OUTLIER)
     assert not result.trusted
     assert result.distrust == (
-        "the levels scatter 3.6 times more than their stated spread explains (chance less than 0.1 %); the "
-        "interval was widened by that factor"
+        "Weighted regression on the level cannot be trusted here: the levels scatter 3.6 times more than "
+        "their stated spread explains (chance less than 0.1 %); the interval was widened by that factor."
     )
     fit = fitted(OUTLIER)
     plain = limits(OUTLIER, fit)
@@ -600,8 +623,8 @@ def test_verdict_on_levels_nearly_in_proportion():
     found = verdict(compare(WEAK), WEAK)
     assert found.method is None
     assert found.text.startswith(
-        "Trust none of these yet: 46 % is the chance, by these levels alone, that no saturation shows at "
-        "all. The levels do not contradict one another; they lie too nearly in proportion to the dose. "
+        "Trust none of these yet: by these levels alone, the chance that no saturation shows at all is 46 "
+        "%. The levels do not contradict one another; they lie too nearly in proportion to the dose. "
     )
 
 
