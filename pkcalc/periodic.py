@@ -129,7 +129,8 @@ def _plateau_start(
     dose, tau = regimen.rate_mg_per_day * regimen.cycle_day, regimen.cycle_day
     drift = (vmax * tau - dose) / kappa
     linear = k == 0
-    x = np.where(linear, lower_bound(dose, tau, vmax, np.where(linear, kappa, np.inf)), 0.0)
+    x = np.zeros_like(vmax)
+    x[linear] = lower_bound(dose, tau, vmax[linear], kappa[linear])
     near = linear & (drift < NEAR_VMAX)
     x = np.where(near, dose / np.where(near, drift, 1.0) - _mean_excess(plan, regimen), x)
     left = np.flatnonzero(~near)

@@ -183,7 +183,7 @@ class Repeated:
 
     def cycles_still_absorbed(self) -> int:
         """Number of past cycles of which anything still reaches the blood."""
-        return max(1, math.ceil(max(d.settled_after_day - d.time_day for d in self.doses) / self.cycle_day))
+        return max(1, math.ceil(max(d.time_day + d.settled_after_day for d in self.doses) / self.cycle_day))
 
 
 @dataclass(frozen=True)

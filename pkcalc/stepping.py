@@ -286,15 +286,23 @@ class Speed(NamedTuple):
 def speeds(fastest_per_day: Floats, typical_per_day: float | None = None) -> tuple[Speed, ...]:
     """Sort draws by their fastest relative rate, Vmax/kappa (+ k), into classes that share their steps.
 
-    The first class steps at a quarter of the time constant of the 99 % point; a draw that would step
-    further than its own time constant goes to a class with steps four (sixteen, ...) times shorter.
-    typical_per_day takes the place of the 99 % point, for nodes of a grid that are not equally likely.
+    The first class steps at a quarter of the time constant of its fastest_per_day: the 99 % point, raised
+    (by at most 2.2) where that spares the last draws a class of their own. No draw steps further than a
+    third of its own time constant; faster ones go to classes with steps four (sixteen, ...) times shorter.
+
+    typical_per_day takes the place of the 99 % point where the draws are not equally likely (nodes of a
+    grid); draws beyond it may then step as far as their own time constant, the bound of positivity.
     """
     if not fastest_per_day.size:
         return ()
-    typical = float(np.quantile(fastest_per_day, 0.99)) if typical_per_day is None else typical_per_day
-    level = np.ceil(np.log(fastest_per_day / (4.0 * typical)) / np.log(4.0) - 1e-9).clip(0).astype(int)
-    return tuple(Speed(np.flatnonzero(level == n), typical * 4.0 ** int(n)) for n in np.unique(level))
+    if typical_per_day is None:
+        reach = 4.0 / 3.0
+        point = float(np.quantile(fastest_per_day, 0.99))
+        first = float(np.clip(fastest_per_day.max() / reach, point, 2.2 * point))
+    else:
+        reach, first = 4.0, typical_per_day
+    level = np.ceil(np.log(fastest_per_day / (reach * first)) / np.log(4.0) - 1e-9).clip(0).astype(int)
+    return tuple(Speed(np.flatnonzero(level == n), first * 4.0 ** int(n)) for n in np.unique(level))
 
 
 class Block:
