@@ -506,7 +506,9 @@ def _times(record: Record, times_day: ArrayLike) -> tuple[float, ...]:
         raise CaseError(
             Problem(
                 "Time of a level",
-                f"day {bad[0]:.10g} was asked for; the record begins on day {record.start_day:.10g}",
+                f"day {bad[0]:.10g} was asked for; the record begins on day {record.start_day:.10g}"
+                if np.isfinite(bad[0])
+                else "this is not a time",
                 "times at or after the beginning of the record",
                 "Begin the record earlier, or check the date of the level",
             )
@@ -530,7 +532,9 @@ def _parameters(
             found.append(
                 Problem(
                     name,
-                    f"{bad.size} of {values.size} values are not positive numbers ({bad[0]:.10g} first)",
+                    f"{bad.size} of {values.size} values "
+                    + ("is not a positive number" if bad.size == 1 else "are not positive numbers")
+                    + (f" ({bad[0]:.10g} first)" if np.isfinite(bad[0]) else ""),
                     "more than 0",
                     "Check where the values come from",
                 )

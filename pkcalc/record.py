@@ -16,7 +16,7 @@ from pkcalc.errors import CaseError, Problem
 
 
 def _plain(value: float) -> str:
-    return f"{value:.10g}"
+    return f"{value:.10g}" if math.isfinite(value) else "no finite number"
 
 
 def _positive(where: str, value: float, unit: str, fix: str) -> Iterator[Problem]:
@@ -31,7 +31,7 @@ def _not_negative(where: str, value: float, unit: str, fix: str) -> Iterator[Pro
 
 def _finite(where: str, value: float, fix: str) -> Iterator[Problem]:
     if not math.isfinite(value):
-        yield Problem(where, f"{_plain(value)} was given", "a time in days", fix)
+        yield Problem(where, "this is not a time", "a time in days", fix)
 
 
 @dataclass(frozen=True)
