@@ -252,8 +252,10 @@ def _break_point(v: Values) -> Values:
 
 
 def _displaced(v: Values) -> Values:
-    found = formulas.free_with_valproate(total_mg_per_L=v["total"], valproate_mg_per_L=v["displacer"])
-    return {name: float(value) for name, value in zip(("first", "second"), found.values(), strict=True)}
+    binding = load_profile(v["drug"]).binding
+    assert binding is not None
+    (line,) = (d for d in binding.displacements if d.id == v["displacement"])
+    return {"free": line.free_mg_per_L(v["total"], v["displacer"])}
 
 
 def _active_of_form(v: Values) -> Values:
@@ -388,7 +390,9 @@ CALLS: dict[str, Call] = {
     ),
     "albumin_break_point": Call({"coefficient": "number"}, {"albumin": "albumin"}, _break_point),
     "free_with_displacer": Call(
-        {"total": "level", "displacer": "level"}, {"first": "level", "second": "level"}, _displaced
+        {"drug": "word", "displacement": "word", "total": "level", "displacer": "level"},
+        {"free": "level"},
+        _displaced,
     ),
     "active_amount_of_form": Call(
         {"drug": "word", "form": "word", "amount": "amount"}, {"active": "amount"}, _active_of_form

@@ -196,6 +196,21 @@ class Alternative:
 
 
 @dataclass(frozen=True)
+class Displacement:
+    """A published free fraction under a displacing drug: intercept + slope x its level [mg/L]."""
+
+    id: str
+    words: str
+    drug: str
+    intercept: float
+    slope_per_mg_per_L: float
+
+    def free_mg_per_L(self, total_mg_per_L: float, displacer_mg_per_L: float) -> float:
+        """The free level at a total level and a level of the displacing drug."""
+        return total_mg_per_L * (self.intercept + self.slope_per_mg_per_L * displacer_mg_per_L)
+
+
+@dataclass(frozen=True)
 class Binding:
     """How a total level is read at abnormal binding.
 
@@ -216,8 +231,7 @@ class Binding:
     albumin_gate_g_per_L: tuple[float, float]
     albumin_oldest_h: float
     albumin_bcg_minus_bcp_g_per_L: float
-    valproate_fraction: tuple[float, float]
-    valproate_free: tuple[float, float]
+    displacements: tuple[Displacement, ...]
 
     @property
     def break_point_g_per_L(self) -> float:
@@ -917,6 +931,8 @@ def parse_profile(text: str, file: str) -> Profile:
         raise DrugFileError(f"{file}: the file is not valid TOML ({error}). Mend it there.") from None
     facts: dict[str, Fact] = {}
     top = Table(file, "", data, facts)
+    drug = top.table("drug")
+    molar_mass, youngest = drug.number("molar_mass", "molar mass"), drug.number("youngest", "age", zero=True)
     forms = top.each("form", _form)
     if not forms:
         raise top.fail("form", "missing", "Add at least one form")
@@ -927,7 +943,6 @@ def parse_profile(text: str, file: str) -> Profile:
     populations = top.each("population", lambda name, t: _population(name, t, modifiers, weight_rule))
     if not populations:
         raise top.fail("population", "missing", "Add at least one population")
-    drug = top.table("drug")
     scope = cast(Scope, drug.choice("scope", SCOPES))
     profile = Profile(
         id=drug.text("id"),
@@ -938,8 +953,8 @@ def parse_profile(text: str, file: str) -> Profile:
         authority=drug.text("authority"),
         time_unit=cast(Literal["day", "h"], drug.choice("time_unit", ("day", "h"))),
         level_units=drug.texts("level_units"),
-        molar_mass_g_per_mol=drug.number("molar_mass", "molar mass"),
-        youngest_years=drug.number("youngest", "age", zero=True),
+        molar_mass_g_per_mol=molar_mass,
+        youngest_years=youngest,
         choose_population=drug.switch("choose_population"),
         forms=forms,
         products=products,
@@ -1229,18 +1244,20 @@ def _binding(t: Table) -> Binding:
         albumin_gate_g_per_L=t.span("albumin_gate", "albumin"),
         albumin_oldest_h=t.number("albumin_oldest", "interval"),
         albumin_bcg_minus_bcp_g_per_L=t.number("albumin_bcg_minus_bcp", "albumin"),
-        valproate_fraction=_line(t.table("valproate_fraction")),
-        valproate_free=_line(t.table("valproate_free")),
+        displacements=tuple(t.each("displacement", _displacement).values()),
     )
     t.done()
     return found
 
 
-def _line(t: Table) -> tuple[float, float]:
-    """A straight line: intercept (free fraction without the other drug) and slope per mg/L of it."""
-    found = t.share("intercept"), t.number("slope", "per level")
-    t.done()
-    return found
+def _displacement(name: str, t: Table) -> Displacement:
+    return Displacement(
+        id=name,
+        words=t.text("words"),
+        drug=t.text("drug"),
+        intercept=t.share("intercept"),
+        slope_per_mg_per_L=t.number("slope", "per level"),
+    )
 
 
 def _loading(t: Table, forms: Mapping[str, Form]) -> Loading:

@@ -487,10 +487,10 @@ def test_displacement_equations_are_those_of_the_formulas() -> None:
     """One total and one level of the displacing drug through both places the equations stand."""
     binding = drug().binding
     assert binding is not None
-    lines = (binding.valproate_fraction, binding.valproate_free)
     theirs = formulas.free_with_valproate(total_mg_per_L=10.0, valproate_mg_per_L=80.0)
-    ours = [(intercept + slope * 80.0) * 10.0 for intercept, slope in lines]
-    assert ours == pytest.approx([float(x) for x in theirs.values()])
+    ours = {d.words: d.free_mg_per_L(10.0, 80.0) for d in binding.displacements}
+    assert ours == pytest.approx({name: float(x) for name, x in theirs.items()})
+    assert {d.drug for d in binding.displacements} == {"valproate"}
 
 
 @pytest.mark.parametrize(
