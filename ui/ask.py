@@ -1,0 +1,452 @@
+"""The questions of the page: what a person enters, each problem beside its field. Nothing is calculated."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass
+from typing import Any
+
+import streamlit as st
+from pkcalc_form import entry as fields
+from pkcalc_form import look
+from pkcalc_form.entry import Entry, text
+
+from pkcalc.case import QUESTIONS, Case
+from pkcalc.clock import show_time
+from pkcalc.drugs.profile import Profile, drug_names
+from pkcalc.errors import Problem
+from pkcalc.units import show
+
+ANSWERS = ("yes", "no", "unknown")
+FIRST = ("seizing_now", "overdose", "seizures_since_change", "toxic_signs", "recent_load")
+GROUPS: tuple[tuple[str, tuple[str, ...]], ...] = (
+    (
+        "What can make a total level mislead",
+        (
+            "renal_failure",
+            "valproate",
+            "pregnancy",
+            "renal_reduced",
+            "hepatic_failure",
+            "critical_illness",
+            "delivery",
+        ),
+    ),
+    (
+        "What changes how the drug gets in or out",
+        (
+            "adherence_doubtful",
+            "interacting_change",
+            "tube_feed",
+            "tube_feed_change",
+            "form_change",
+            "im_route",
+            "extracorporeal",
+            "temperature_management",
+        ),
+    ),
+    ("Before a start or a load", ("new_start", "heart_block", "cyp2c9_reduced", "hla_b1502")),
+)
+WITH_DETAIL = ("interacting_change", "tube_feed_change", "form_change", "recent_load", "delivery")
+SOURCES = {
+    "given": "given (seen in the administration record)",
+    "ordered": "ordered only",
+    "stated": "stated by patient or carer",
+}
+DATES = "Dates as 2026-03-04 21:00 or 4 Mar 2026 21:00"
+
+
+@dataclass(frozen=True)
+class Asked:
+    """What the questions need to know: the fields, what they make, what is wrong with them."""
+
+    values: Mapping[str, Any]
+    entry: Entry
+    problems: Mapping[str, tuple[Problem, ...]]
+    homeless: tuple[Problem, ...]
+    case: Case | None
+    profile: Profile | None
+
+
+def _beside(asked: Asked, key: str) -> None:
+    for problem in asked.problems.get(key, ()):
+        look.beside(problem.text, needed=not text(asked.values, key))
+
+
+def field(asked: Asked, label: str, key: str, *, most: int = 120, **more: Any) -> None:
+    """A plain text field with what is wrong with it below."""
+    st.text_input(label, key=key, max_chars=most, autocomplete="off", **more)
+    _beside(asked, key)
+
+
+def choice(
+    asked: Asked, label: str, key: str, options: Sequence[str], words: Mapping[str, str] | None = None
+) -> None:
+    """A choice with nothing chosen beforehand."""
+    current = text(asked.values, key)
+    offered = [*options, current] if current and current not in options else list(options)
+    st.selectbox(
+        label,
+        offered,
+        index=None,
+        key=key,
+        placeholder="not stated",
+        format_func=lambda x: (words or {}).get(x, x),
+    )
+    _beside(asked, key)
+
+
+def number(
+    asked: Asked, label: str, key: str, units: Sequence[str], *, unit_key: str = "", unit_label: str = ""
+) -> None:
+    """A number as text with its unit chosen beside it; the unit may also be typed with the number."""
+    left, right = st.columns([3, 2], vertical_alignment="top", wrap=False)
+    with left:
+        st.text_input(label, key=key, max_chars=40, autocomplete="off")
+    with right:
+        st.selectbox(
+            unit_label or f"Unit of {label[0].lower()}{label[1:]}",
+            list(units),
+            index=None,
+            key=unit_key or f"{key}_unit",
+            placeholder="unit",
+        )
+    _beside(asked, key)
+
+
+def question(asked: Asked, key: str) -> None:
+    """One context question; silence stays 'not stated'."""
+    st.radio(QUESTIONS[key], ANSWERS, index=None, horizontal=True, key=f"ctx.{key}")
+    _beside(asked, f"ctx.{key}")
+    if key in WITH_DETAIL and text(asked.values, f"ctx.{key}") == "yes":
+        left, right = st.columns(2)
+        with left:
+            field(asked, "Since when (date)", f"ctx.{key}.since")
+        with right:
+            field(asked, "What exactly", f"ctx.{key}.detail")
+
+
+# --- 1 How is the patient? -------------------------------------------------------------------------------
+
+
+def patient(asked: Asked) -> None:
+    field(asked, "Why was the level drawn, and what is asked?", "question", most=200)
+    for key in FIRST:
+        question(asked, key)
+    one, two = st.columns(2, gap="medium")
+    with one:
+        number(asked, "Age", "age", fields.AGE_UNITS)
+        number(asked, "Weight", "weight", fields.WEIGHT_UNITS)
+        choice(asked, "How was the weight found?", "weight_basis", ("measured", "estimated"))
+        number(asked, "Height", "height", fields.HEIGHT_UNITS)
+        choice(asked, "Sex", "sex", ("female", "male"))
+    with two:
+        number(asked, "Albumin", "albumin", fields.ALBUMIN_UNITS)
+        field(asked, "Albumin taken (date and time)", "albumin_taken", help=DATES)
+        choice(asked, "Albumin method", "albumin_method", ("BCG", "BCP", "other"))
+        choice(asked, "Albumin after an albumin infusion?", "albumin_after_infusion", ANSWERS)
+        field(asked, "Time of this consult", "now", help=DATES)
+    _group(asked, 0, expanded=True)
+    for place in range(1, len(GROUPS)):
+        _group(asked, place, expanded=False)
+    grouped = {*FIRST, *(q for _, group in GROUPS for q in group)}
+    for key in QUESTIONS:
+        if key not in grouped:
+            question(asked, key)
+
+
+def _group(asked: Asked, place: int, *, expanded: bool) -> None:
+    title, group = GROUPS[place]
+    known = [q for q in group if q in QUESTIONS]
+    silent = sum(not text(asked.values, f"ctx.{q}") for q in known)
+    said = [f"{_SHORT.get(q, q.replace('_', ' '))}" for q in known if text(asked.values, f"ctx.{q}") == "yes"]
+    label = f"**{title}**: {', '.join(said) + '; ' if said else ''}"
+    label += f"{silent} of {len(known)} not stated" if silent else "all answered"
+    with st.expander(label, expanded=expanded, key=f"group-{place}"):
+        for key in known:
+            question(asked, key)
+
+
+def patient_sentence(asked: Asked) -> str:
+    v = asked.values
+    p = asked.entry.file.patient
+    parts = [x for x in (p.age, p.sex if p.sex != "unknown" else "", p.weight) if x]
+    if asked.entry.file.albumin:
+        parts.append(f"albumin {asked.entry.file.albumin.value}")
+    for key, yes, no in (
+        ("seizing_now", "SEIZING NOW", ""),
+        ("overdose", "OVERDOSE SUSPECTED", ""),
+        ("seizures_since_change", "seizures since the last change", "no seizures since the last change"),
+        ("toxic_signs", "signs of toxicity", "no signs of toxicity"),
+    ):
+        answer = text(v, f"ctx.{key}")
+        parts += [x for x in ({"yes": yes, "no": no}.get(answer, ""),) if x]
+    parts += [_SHORT[q] for q in _SHORT if text(v, f"ctx.{q}") == "yes"]
+    if not parts:
+        return ""
+    open_questions = sum(not text(v, f"ctx.{q}") for q in QUESTIONS)
+    if open_questions:
+        parts.append(f"{open_questions} questions not stated")
+    return "; ".join(parts)
+
+
+_SHORT = {
+    "renal_failure": "renal failure",
+    "valproate": "valproate",
+    "pregnancy": "pregnant",
+    "hepatic_failure": "hepatic failure",
+    "critical_illness": "critically ill",
+    "tube_feed": "tube fed",
+    "interacting_change": "an interacting drug changed",
+    "adherence_doubtful": "doses doubtful",
+    "recent_load": "a load within 72 h",
+}
+
+
+# --- 2 What was given? -----------------------------------------------------------------------------------
+
+
+def _add_row(kind: str) -> None:
+    rows = list(st.session_state.get(f"{kind}_rows", ()))
+    st.session_state[f"{kind}_rows"] = [*rows, max(rows, default=0) + 1]
+
+
+def _remove_row(kind: str, row: int) -> None:
+    st.session_state[f"{kind}_rows"] = [r for r in st.session_state[f"{kind}_rows"] if r != row]
+    for key in [k for k in st.session_state if str(k).startswith(f"{kind}.{row}.")]:
+        del st.session_state[key]
+
+
+def _row_head(kind: str, row: int, title: str, alone: bool) -> None:
+    left, right = st.columns([4, 1], vertical_alignment="center")
+    left.html(f'<h3 class="pk-group">{title}</h3>')
+    if not alone:
+        right.button(
+            "Remove",
+            key=f"{kind}.{row}.remove",
+            help=f"Remove {title}",
+            on_click=_remove_row,
+            args=(kind, row),
+        )
+
+
+def form_words(profile: Profile | None) -> tuple[list[str], dict[str, str]]:
+    """Product forms to choose from: products first, plain salts after."""
+    if profile is None:
+        return [], {}
+    ordered = sorted(profile.forms.values(), key=lambda f: f.generic)
+    return [f.id for f in ordered], {f.id: f.words for f in ordered}
+
+
+def doses(asked: Asked, echoes: Mapping[int, str]) -> None:
+    names = drug_names()
+    if len(names) > 1:
+        choice(asked, "Drug", "drug", names)
+    forms, words = form_words(asked.profile)
+    look.say(
+        "Each dose as said aloud: 300 mg daily · 150 mg every 12 h · 300 mg at 21:00 · "
+        "200 mg at 08:00 + 100 mg at 21:00 · 1,000 mg once over 30 min. Only what was given counts, not what "
+        "was ordered.",
+        "hint",
+    )
+    rows = asked.values.get("dose_rows", ())
+    for place, row in enumerate(rows, 1):
+        with st.container(border=True, key=f"dose-{row}"):
+            _row_head("dose", row, f"Dose line {place}", len(rows) == 1)
+            left, right = st.columns(2, gap="medium")
+            with left:
+                field(asked, "Dose, with its unit and how often", f"dose.{row}.said", most=200)
+            with right:
+                choice(asked, "Product form and salt", f"dose.{row}.form", forms, words)
+            one, two, three = st.columns(3, gap="medium")
+            with one:
+                field(asked, "First dose (date and time)", f"dose.{row}.from", help=DATES)
+            with two:
+                field(asked, "Last dose; empty if it goes on", f"dose.{row}.until", help=DATES)
+            with three:
+                choice(asked, "Who gives the doses?", f"dose.{row}.given_by", ("nurse", "carer", "self"))
+            if row in echoes:
+                look.say(echoes[row], "echo")
+            with st.expander("More about this line", expanded=False, key=f"dose-more-{row}"):
+                one, two = st.columns(2, gap="medium")
+                with one:
+                    choice(asked, "How is it known?", f"dose.{row}.source", tuple(SOURCES), SOURCES)
+                    choice(
+                        asked,
+                        "If ordered or stated: did a person confirm it was given?",
+                        f"dose.{row}.confirmed",
+                        ANSWERS,
+                    )
+                with two:
+                    field(
+                        asked,
+                        "Start not known: given for about",
+                        f"dose.{row}.for_about",
+                        help="Such as 3 months",
+                    )
+                    field(
+                        asked,
+                        "Missed, held or refused doses (dates and times; parted by ;)",
+                        f"dose.{row}.missed",
+                        most=2000,
+                    )
+            for key in ("source", "confirmed", "for_about", "missed"):
+                if asked.problems.get(f"dose.{row}.{key}"):
+                    look.say("Something under 'More about this line' needs mending.", "wrong")
+                    break
+    st.button("Add a dose line", key="add-dose", on_click=_add_row, args=("dose",))
+    with st.expander("Paste single doses from a spreadsheet", expanded=False, key="paste"):
+        look.say(
+            "Columns: time, amount with unit, and the form unless one is chosen for all. "
+            "One row for each dose given.",
+            "hint",
+        )
+        choice(asked, "Form of all pasted doses", "pasted_form", forms, words)
+        st.text_area("Pasted rows", key="pasted", max_chars=60_000, height=160)
+        problems = asked.problems.get("pasted", ())
+        for problem in problems[:6]:
+            look.beside(problem.text, needed=False)
+        if len(problems) > 6:
+            look.beside(f"and {len(problems) - 6} more like these.", needed=False)
+        if asked.entry.pasted and not problems:
+            look.say(f"{asked.entry.pasted} single doses read.", "echo")
+
+
+def doses_sentence(asked: Asked, echoes: Mapping[int, str]) -> str:
+    rows = asked.entry.rows["dose"]
+    said = [text(asked.values, f"dose.{row}.said") for row in rows]
+    parts = [s for s in said if s]
+    out = ", then ".join(parts) if len(parts) <= 3 else f"{len(parts)} dose lines"
+    if asked.entry.pasted:
+        out += f"{'; ' if out else ''}{asked.entry.pasted} pasted single doses"
+    return out
+
+
+# --- 3 What was measured? --------------------------------------------------------------------------------
+
+
+def levels(asked: Asked, worth: Mapping[int, Sequence[str]]) -> None:
+    rows = asked.values.get("level_rows", ())
+    units = asked.profile.level_units if asked.profile else fields.LEVEL_UNITS
+    lines = [str(n) for n in range(1, len(asked.entry.file.doses) - asked.entry.pasted + 1)]
+    for place, row in enumerate(rows, 1):
+        with st.container(border=True, key=f"level-{row}"):
+            _row_head("level", row, f"Level {place}", len(rows) == 1)
+            left, middle, right = st.columns([2, 1, 2], gap="medium")
+            with left:
+                st.text_input("Level as reported", key=f"level.{row}.value", max_chars=40, autocomplete="off")
+            with middle:
+                st.selectbox(
+                    "Unit of the level", list(units), index=None, key=f"level.{row}.unit", placeholder="unit"
+                )
+            with right:
+                choice(asked, "What was measured?", f"level.{row}.kind", fields.KINDS, KIND_WORDS)
+            _beside(asked, f"level.{row}.value")
+            left, right = st.columns(2, gap="medium")
+            with left:
+                field(asked, "Drawn (date and time)", f"level.{row}.drawn", help=DATES)
+            with right:
+                choice(
+                    asked,
+                    "Dose line in force, where there are no dates",
+                    f"level.{row}.on_dose",
+                    lines,
+                    {n: f"dose line {n}" for n in lines},
+                )
+            for sentence in worth.get(row, ()):
+                look.say(sentence, "echo")
+            with st.expander("More about this level", expanded=False, key=f"level-more-{row}"):
+                one, two = st.columns(2, gap="medium")
+                with one:
+                    number(
+                        asked,
+                        "Albumin of this sample",
+                        f"level.{row}.albumin",
+                        fields.ALBUMIN_UNITS,
+                        unit_key=f"level.{row}.albumin_unit",
+                    )
+                    field(asked, "Valproate level, with its unit", f"level.{row}.valproate")
+                with two:
+                    choice(asked, "Tube", f"level.{row}.sample", ("serum", "plasma", "gel tube"))
+                    field(asked, "If normalised: by whom", f"level.{row}.normalised_by")
+            for key in ("albumin", "valproate", "normalised_by"):
+                if asked.problems.get(f"level.{row}.{key}"):
+                    look.say("Something under 'More about this level' needs mending.", "wrong")
+                    break
+    st.button("Add a level", key="add-level", on_click=_add_row, args=("level",))
+
+
+KIND_WORDS = {"total": "total", "free": "free (unbound)", "normalised": "already normalised for albumin"}
+
+
+def levels_sentence(asked: Asked) -> str:
+    parts = []
+    for level in asked.entry.file.levels:
+        if level.value:
+            parts.append(f"{level.value} {level.kind}" + (f", {level.drawn}" if level.drawn else ""))
+    return " and ".join(parts) if len(parts) <= 3 else f"{len(parts)} levels"
+
+
+# --- 5 What could be given next? -------------------------------------------------------------------------
+
+
+def goal(asked: Asked) -> None:
+    one, two, three, four = st.columns([2, 2, 2, 2], gap="small")
+    units = asked.profile.level_units if asked.profile else fields.LEVEL_UNITS
+    with one:
+        field(asked, "Target from", "target_low", most=40)
+    with two:
+        field(asked, "Target to", "target_high", most=40)
+    with three:
+        field(asked, "Level aimed at", "aim", most=40)
+    with four:
+        st.selectbox("Unit of target and aim", list(units), index=None, key="target_unit", placeholder="unit")
+    look.say("Left empty, the service's own range is used, else the usual one; it is named below.", "hint")
+
+
+def own(asked: Asked, echoes: Mapping[int, str]) -> None:
+    forms, words = form_words(asked.profile)
+    for place, row in enumerate(asked.values.get("own_rows", ()), 1):
+        left, right = st.columns(2, gap="medium")
+        with left:
+            field(
+                asked,
+                f"Your own regimen {place}, such as 200 mg + 100 mg, or 300 mg daily",
+                f"own.{row}.said",
+                most=200,
+            )
+        with right:
+            choice(asked, f"Product form and salt of regimen {place}", f"own.{row}.form", forms, words)
+        if row in asked.entry.assumed:
+            look.say(f"{asked.entry.assumed[row]} Write other times if they differ.", "hint")
+        if row in echoes:
+            look.say(echoes[row], "echo")
+    st.button("Add another regimen of your own", key="add-own", on_click=_add_row, args=("own",))
+
+
+def course_echo(case: Case, profile: Profile) -> str:
+    """A dose line said back in words."""
+    course = case.courses[0]
+    known = {"given": "taken as given", "ordered": "ordered only", "stated": "stated only"}[course.source]
+    if not course.counts_as_given:
+        known += ", not confirmed as given: left out of the calculation"
+    when = f", since {show_time(course.start)}" if course.start else ""
+    if course.regimen is not None:
+        said = course.regimen.words(profile)
+        rate = f" = {show(course.regimen.active_mg_per_day(profile), 'mg/day', 4)} of active drug"
+    elif course.single is not None:
+        form = profile.forms[course.single.form]
+        said, rate = f"{show(course.single.labelled_mg, form.amount_unit, 6)} {form.words} once", ""
+        when = f", at {show_time(course.start)}" if course.start else ""
+    else:
+        said, rate = f"{course.typed.rate} {profile.forms[course.rate_form].words}", ""
+    until = f" until {show_time(course.end)}" if course.end else ""
+    missed = f", {len(course.missed)} missed" if course.missed else ""
+    return f"Read as {said}{rate}{when}{until}{missed}; {known}."
+
+
+def own_echo(case: Case, profile: Profile) -> str:
+    """A regimen of one's own said back in words."""
+    regimen = case.proposed[0]
+    rate = show(regimen.active_mg_per_day(profile), "mg/day", 4)
+    return f"Read as {regimen.words(profile)} = {rate} of active drug."

@@ -1,0 +1,501 @@
+"""What stands in the fields of the page <-> a case file. Pure functions of a mapping of field values.
+
+Every field has a key. Texts stay as typed: number and unit are put together here and read by the core. What
+an opened case holds beyond the fields of the page is kept as it was.
+"""
+
+from __future__ import annotations
+
+import re
+from collections.abc import Mapping
+from dataclasses import dataclass, field
+from typing import Any
+
+from pkcalc_form.spoken import EXAMPLES, Said, say, take_apart
+
+from pkcalc.case import (
+    QUESTIONS,
+    AlbuminFile,
+    AnswerFile,
+    CaseFile,
+    DoseFile,
+    LevelFile,
+    PatientFile,
+    ProposedFile,
+    TargetFile,
+)
+from pkcalc.errors import Problem
+
+LEVEL_UNITS = ("mg/L", "mcg/mL", "umol/L", "mg/dL")
+ALBUMIN_UNITS = ("g/L", "g/dL")
+WEIGHT_UNITS = ("kg", "lb")
+HEIGHT_UNITS = ("cm", "in")
+AGE_UNITS = ("years", "months", "weeks")
+KINDS = ("total", "free", "normalised")
+MAX_PASTED = 1000
+
+DOSE_FIELDS = ("said", "form", "from", "until", "for_about", "missed", "source", "confirmed", "given_by")
+LEVEL_FIELDS = (
+    "value", "unit", "kind", "drawn", "on_dose", "sample", "normalised_by",
+    "albumin", "albumin_unit", "valproate",
+)  # fmt: skip
+OWN_FIELDS = ("said", "form")
+
+_NUMBER_UNIT = re.compile(r"^\s*([<>]?\s*[0-9][0-9.,]*)\s*(.*?)\s*$")
+
+
+@dataclass(frozen=True)
+class Entry:
+    """The case file that the fields make.
+
+    rows: by kind, the row of fields behind each line of the file. problems: wording that could not be taken
+    apart. assumed: what was taken for granted about an own regimen, by its row. pasted: lines pasted.
+    """
+
+    file: CaseFile
+    rows: Mapping[str, tuple[int, ...]]
+    problems: tuple[Problem, ...] = ()
+    assumed: Mapping[int, str] = field(default_factory=dict)
+    pasted: int = 0
+
+
+def text(values: Mapping[str, Any], key: str) -> str:
+    """A field as typed, without blanks around it; an empty or missing field is ''."""
+    found = values.get(key)
+    return str(found).strip() if found is not None else ""
+
+
+def joined(number: str, unit: str) -> str:
+    """'8' and 'mg/L' -> '8 mg/L'. A unit typed with the number stands; a unit alone is nothing yet."""
+    if not number:
+        return ""
+    typed = _NUMBER_UNIT.match(number)
+    if unit and typed and typed.group(2) == unit:
+        return number
+    return f"{number} {unit}".strip()
+
+
+def parted(value: str, units: tuple[str, ...]) -> tuple[str, str | None]:
+    """'8 mg/L' -> ('8', 'mg/L') where the unit is one of the choice, else the whole text and no unit."""
+    found = _NUMBER_UNIT.match(value)
+    if found and found.group(2) in units:
+        return found.group(1), found.group(2)
+    return value, None
+
+
+# --- fields -> case file ---------------------------------------------------------------------------------
+
+
+def case_of(values: Mapping[str, Any]) -> Entry:
+    """Fields -> case file, with the wording problems the core cannot see."""
+    base: CaseFile | None = values.get("base")
+    problems: list[Problem] = []
+    doses, dose_rows = _doses(values, base, problems)
+    pasted = _pasted(values, problems)
+    levels, level_rows = _levels(values, problems)
+    own, own_rows, assumed = _own(values, base, problems)
+    unit = text(values, "target_unit")
+    low, high = (joined(text(values, key), unit) for key in ("target_low", "target_high"))
+    target = None
+    if low or high:
+        old = base.target if base else None
+        kind = text(values, "target_kind") or (old.kind if old else "total")
+        target = TargetFile(low=low, high=high, kind=kind, reason=old.reason if old else "")  # type: ignore[arg-type]
+    fields: dict[str, Any] = {
+        "pkcalc_case": 1,
+        "drug": text(values, "drug"),
+        "demonstration": values.get("demonstration"),
+        "question": text(values, "question"),
+        "now": text(values, "now"),
+        "patient": _patient(values),
+        "albumin": _albumin(values, base.albumin if base else None),
+        "context": _context(values, base),
+        "doses": (*doses, *pasted),
+        "levels": tuple(levels),
+        "target": target,
+        "aim": joined(text(values, "aim"), unit),
+        "proposed": tuple(own),
+        "population": text(values, "population"),
+        "method": text(values, "method"),
+    }
+    if base is not None:
+        kept = {"comment": base.comment, "label": base.label, "plan": base.plan, "chosen": base.chosen}
+        fields |= kept | {"forecast_then": base.forecast_then}
+    return Entry(
+        file=CaseFile(**fields),
+        rows={"dose": tuple(dose_rows), "level": tuple(level_rows), "own": tuple(own_rows)},
+        problems=tuple(problems),
+        assumed=assumed,
+        pasted=len(pasted),
+    )
+
+
+def is_blank(values: Mapping[str, Any], kind: str, row: int, fields: tuple[str, ...]) -> bool:
+    """True where nothing was entered in a row yet."""
+    return not any(text(values, f"{kind}.{row}.{name}") for name in fields)
+
+
+def _doses(
+    values: Mapping[str, Any], base: CaseFile | None, problems: list[Problem]
+) -> tuple[list[DoseFile], list[int]]:
+    lines: list[DoseFile] = []
+    rows: list[int] = []
+    for row in values.get("dose_rows", ()):
+        if is_blank(values, "dose", row, DOSE_FIELDS):
+            continue
+
+        def get(name: str, row: int = row) -> str:
+            return text(values, f"dose.{row}.{name}")
+
+        old: DoseFile | None = values.get(f"dose.{row}.base")
+        where = f"Dose line {len(lines) + 1}"
+        wording = get("said")
+        kept = {"comment": old.comment} if old else {}
+        common: dict[str, Any] = {
+            **kept,
+            "form": get("form"),
+            "source": get("source") or "given",
+            "given_by": get("given_by") or "unknown",
+            "confirmed": get("confirmed") or "unknown",
+        }
+        missed = tuple(x.strip() for x in re.split(r"[;\n]", get("missed")) if x.strip())
+        dates: dict[str, Any] = {
+            "from": get("from"),
+            "until": get("until"),
+            "for_about": get("for_about"),
+            "missed": missed,
+        }
+        if old is not None and wording == say(old):
+            shape = {name: getattr(old, name) for name in ("amount", "every", "daily", "over", "rate")}
+            if old.at:
+                line = DoseFile(**common, **shape, at=get("from"), missed=missed, until=dates["until"])
+            else:
+                line = DoseFile(**common, **shape, **dates)
+        else:
+            line = _line(take_apart(wording), common, dates, wording, where, problems)
+        lines.append(line)
+        rows.append(row)
+    return lines, rows
+
+
+def _line(
+    said: Said,
+    common: dict[str, Any],
+    dates: dict[str, Any],
+    wording: str,
+    where: str,
+    problems: list[Problem],
+) -> DoseFile:
+    if not wording:
+        problems.append(Problem(where, "no dose was given", EXAMPLES, "Enter the dose as said aloud"))
+        return DoseFile(**common, every="24 h", **dates)
+    if said.unclear:
+        problems.append(Problem(where, said.unclear, EXAMPLES, said.fix))
+        return DoseFile(**common, every="24 h", **dates)
+    if said.rate:
+        return DoseFile(**common, **dates, rate=said.rate)
+    if said.once:
+        if not dates["from"]:
+            problems.append(
+                Problem(f"{where}, from", "no time was given", "the time of the single dose", "Enter it")
+            )
+        return DoseFile(
+            **common, amount=said.amount, over=said.over, at=dates["from"] or "?", until=dates["until"]
+        )
+    return DoseFile(**common, **dates, amount=said.amount, every=said.every, daily=said.daily, over=said.over)
+
+
+def _levels(values: Mapping[str, Any], problems: list[Problem]) -> tuple[list[LevelFile], list[int]]:
+    levels: list[LevelFile] = []
+    rows: list[int] = []
+    for row in values.get("level_rows", ()):
+        if is_blank(values, "level", row, LEVEL_FIELDS):
+            continue
+
+        def get(name: str, row: int = row) -> str:
+            return text(values, f"level.{row}.{name}")
+
+        old: LevelFile | None = values.get(f"level.{row}.base")
+        albumin = joined(get("albumin"), get("albumin_unit"))
+        kept: dict[str, Any] = {"comment": old.comment} if old else {}
+        same = old.albumin if old and old.albumin else None
+        line = get("on_dose")
+        kind = get("kind")
+        if kind not in KINDS:
+            where = f"Level {len(levels) + 1}, kind"
+            given = "it was not said what was measured" if not kind else f'"{kind}" was given'
+            problems.append(Problem(where, given, ", ".join(KINDS), "Choose what the laboratory measured"))
+            kind = KINDS[0]  # never used: a problem takes every result away
+        levels.append(
+            LevelFile(
+                **{
+                    "value": joined(get("value"), get("unit")),
+                    "kind": kind,
+                    "drawn": get("drawn"),
+                    "normalised_by": get("normalised_by"),
+                    "on_dose": int(line) if line.isdigit() else None,
+                    "albumin": same.model_copy(update={"value": albumin})
+                    if same and albumin
+                    else AlbuminFile(value=albumin)
+                    if albumin
+                    else None,
+                    "valproate_level": get("valproate"),
+                    "sample": get("sample") or "unknown",
+                    "comment": "",
+                    **kept,
+                }
+            )
+        )
+        rows.append(row)
+    return levels, rows
+
+
+def _own(
+    values: Mapping[str, Any], base: CaseFile | None, problems: list[Problem]
+) -> tuple[list[ProposedFile], list[int], dict[int, str]]:
+    own: list[ProposedFile] = []
+    rows: list[int] = []
+    assumed: dict[int, str] = {}
+    for row in values.get("own_rows", ()):
+        wording, form = text(values, f"own.{row}.said"), text(values, f"own.{row}.form")
+        if not wording and not form:
+            continue
+        old: ProposedFile | None = values.get(f"own.{row}.base")
+        where = f"Proposed regimen {len(own) + 1}"
+        if old is not None and wording == say(old):
+            own.append(old.model_copy(update={"form": form}))
+        else:
+            said = take_apart(wording, assume_times=True)
+            if not wording or said.unclear or said.once or said.rate or said.over:
+                found = said.unclear if said.unclear else "no repeated dose was given"
+                problems.append(Problem(where, found, EXAMPLES, said.fix or "Enter a repeated dose"))
+            if said.assumed:
+                assumed[row] = f"Taken as {' and '.join(f'{d.amount} at {d.time}' for d in said.daily)}."
+            own.append(ProposedFile(form=form, amount=said.amount, every=said.every, daily=said.daily))
+        rows.append(row)
+    return own, rows, assumed
+
+
+def _patient(values: Mapping[str, Any]) -> PatientFile:
+    return PatientFile(
+        age=joined(text(values, "age"), text(values, "age_unit")),
+        sex=text(values, "sex") or "unknown",  # type: ignore[arg-type]
+        weight=joined(text(values, "weight"), text(values, "weight_unit")),
+        weight_basis=text(values, "weight_basis") or "unknown",  # type: ignore[arg-type]
+        height=joined(text(values, "height"), text(values, "height_unit")),
+    )
+
+
+def _albumin(values: Mapping[str, Any], old: AlbuminFile | None) -> AlbuminFile | None:
+    value = joined(text(values, "albumin"), text(values, "albumin_unit"))
+    if not value:
+        return None
+    return AlbuminFile(
+        value=value,
+        taken=text(values, "albumin_taken"),
+        method=text(values, "albumin_method") or "unknown",  # type: ignore[arg-type]
+        after_infusion=text(values, "albumin_after_infusion") or "unknown",  # type: ignore[arg-type]
+    )
+
+
+def _context(values: Mapping[str, Any], base: CaseFile | None) -> dict[str, Any]:
+    found: dict[str, Any] = {}
+    for question in QUESTIONS:
+        answer = text(values, f"ctx.{question}")
+        if not answer:
+            continue
+        since, detail = text(values, f"ctx.{question}.since"), text(values, f"ctx.{question}.detail")
+        found[question] = (
+            AnswerFile(answer=answer, since=since, detail=detail)  # type: ignore[arg-type]
+            if answer == "yes" and (since or detail)
+            else answer
+        )
+    if base is not None:  # questions that the page does not ask
+        found |= {k: v for k, v in base.context.items() if k not in QUESTIONS}
+    return found
+
+
+def _pasted(values: Mapping[str, Any], problems: list[Problem]) -> list[DoseFile]:
+    """Rows pasted from a spreadsheet: time, amount with unit, form; parted by tabs or semicolons."""
+    lines: list[DoseFile] = []
+    rows = [x for x in str(values.get("pasted") or "").splitlines() if x.strip()]
+    if len(rows) > MAX_PASTED:
+        problems.append(
+            Problem(
+                "Pasted doses",
+                f"{len(rows):,} rows were given",
+                f"at most {MAX_PASTED:,}",
+                "Paste fewer rows",
+            )
+        )
+        return []
+    form_for_all = text(values, "pasted_form")
+    for number, row in enumerate(rows, 1):
+        cells = [c.strip() for c in re.split(r"\t|;", row)]
+        if number == 1 and not any(c.isdigit() for c in row):
+            continue  # a row of column heads
+        if len(cells) not in (2, 3):
+            problems.append(
+                Problem(
+                    f"Pasted row {number}",
+                    f"{len(cells)} columns were found",
+                    "2 or 3: time, amount with unit, and the form unless one is chosen for all",
+                    "Copy just these columns from the spreadsheet",
+                )
+            )
+            continue
+        form = cells[2] if len(cells) == 3 and cells[2] else form_for_all
+        lines.append(DoseFile(form=form, amount=cells[1], at=cells[0] or "?", source="given"))
+    return lines
+
+
+# --- case file -> fields ---------------------------------------------------------------------------------
+
+
+def fields_of(file: CaseFile) -> dict[str, Any]:
+    """Case file -> fields. Nothing is lost: case_of() of the result gives the same file."""
+    p = file.patient
+    values: dict[str, Any] = {
+        "base": file,
+        "demonstration": file.demonstration,
+        "drug": file.drug,
+        "question": file.question,
+        "now": file.now,
+        "sex": None if p.sex == "unknown" else p.sex,
+        "weight_basis": None if p.weight_basis == "unknown" else p.weight_basis,
+        "population": file.population or None,
+        "method": file.method or None,
+    }
+    _part(values, "age", p.age, AGE_UNITS)
+    _part(values, "weight", p.weight, WEIGHT_UNITS)
+    _part(values, "height", p.height, HEIGHT_UNITS)
+    if file.albumin is not None:
+        _part(values, "albumin", file.albumin.value, ALBUMIN_UNITS)
+        values["albumin_taken"] = file.albumin.taken
+        values["albumin_method"] = None if file.albumin.method == "unknown" else file.albumin.method
+        values["albumin_after_infusion"] = _unless_unknown(file.albumin.after_infusion)
+    for key, given in file.context.items():
+        values[f"ctx.{key}"] = given if isinstance(given, str) else given.answer
+        if not isinstance(given, str):
+            values[f"ctx.{key}.since"], values[f"ctx.{key}.detail"] = given.since, given.detail
+    values["dose_rows"] = list(range(1, len(file.doses) + 1))
+    for row, dose in enumerate(file.doses, 1):
+        at = f"dose.{row}."
+        values |= {
+            at + "base": dose,
+            at + "said": say(dose),
+            at + "form": dose.form or None,
+            at + "from": dose.at or dose.from_,
+            at + "until": dose.until,
+            at + "for_about": dose.for_about,
+            at + "missed": "; ".join(dose.missed),
+            at + "source": dose.source,
+            at + "confirmed": _unless_unknown(dose.confirmed),
+            at + "given_by": _unless_unknown(dose.given_by),
+        }
+    values["level_rows"] = list(range(1, len(file.levels) + 1))
+    for row, level in enumerate(file.levels, 1):
+        at = f"level.{row}."
+        _part(values, at + "value", level.value, LEVEL_UNITS, unit_key=at + "unit")
+        values |= {
+            at + "base": level,
+            at + "kind": level.kind,
+            at + "drawn": level.drawn,
+            at + "normalised_by": level.normalised_by,
+            at + "on_dose": str(level.on_dose) if level.on_dose is not None else None,
+            at + "sample": _unless_unknown(level.sample),
+            at + "valproate": level.valproate_level,
+        }
+        if level.albumin is not None:
+            _part(values, at + "albumin", level.albumin.value, ALBUMIN_UNITS)
+    target_unit: str | None = None
+    ends = [(key, parted(value, LEVEL_UNITS)) for key, value in _target_texts(file) if value]
+    if len({unit for _, (_, unit) in ends}) == 1:
+        target_unit = ends[0][1][1]
+        values |= {key: number for key, (number, _) in ends}
+    else:
+        values |= {key: value for key, value in _target_texts(file) if value}
+    values["target_unit"] = target_unit
+    values["target_kind"] = file.target.kind if file.target else None
+    values["own_rows"] = list(range(1, len(file.proposed) + 1))
+    for row, own in enumerate(file.proposed, 1):
+        values |= {f"own.{row}.base": own, f"own.{row}.said": say(own), f"own.{row}.form": own.form or None}
+    return values
+
+
+def _target_texts(file: CaseFile) -> list[tuple[str, str]]:
+    ends = [("target_low", file.target.low), ("target_high", file.target.high)] if file.target else []
+    return [*ends, ("aim", file.aim)]
+
+
+def _unless_unknown(answer: str) -> str | None:
+    return None if answer == "unknown" else answer
+
+
+def _part(
+    values: dict[str, Any], key: str, value: str, units: tuple[str, ...], *, unit_key: str | None = None
+) -> None:
+    number, unit = parted(value, units)
+    values[key] = number
+    values[unit_key or f"{key}_unit"] = unit
+
+
+# --- problems -> fields ----------------------------------------------------------------------------------
+
+_ROW = re.compile(r"^(Dose line|Level|Proposed regimen) (\d+)(?:, (.*))?$", re.I)
+_DOSE_PLACES = {"from": "from", "at": "from", "until": "until", "for about": "for_about", "missed": "missed"}
+_LEVEL_PLACES = {
+    "drawn": "drawn",
+    "kind": "kind",
+    "valproate level": "valproate",
+    "normalised by": "normalised_by",
+    "on dose": "on_dose",
+    "albumin": "albumin",
+    "albumin, taken": "albumin",
+}
+_PLACES = {
+    "drug": "drug",
+    "time of the consult": "now",
+    "age": "age",
+    "weight": "weight",
+    "height": "height",
+    "albumin": "albumin",
+    "albumin, taken": "albumin_taken",
+    "aim": "aim",
+    "target": "target_high",
+    "target, low": "target_low",
+    "target, high": "target_high",
+    "population": "population",
+    "pasted doses": "pasted",
+}
+
+
+def field_of(where: str, entry: Entry) -> str | None:
+    """The key of the field a problem belongs beside; None where the page has no such field."""
+    place = where.strip()
+    if place.lower() in _PLACES:
+        return _PLACES[place.lower()]
+    if place.lower().startswith("context, "):
+        key = place[9:].split(",")[0].strip().replace(" ", "_")
+        return f"ctx.{key}" if key in QUESTIONS else None
+    if place.lower().startswith("pasted row"):
+        return "pasted"
+    found = _ROW.match(place)
+    if found is None:
+        return None
+    name, number, rest = found.group(1).lower(), int(found.group(2)), (found.group(3) or "").lower()
+    kind = {"dose line": "dose", "level": "level", "proposed regimen": "own"}[name]
+    rows = entry.rows[kind]
+    if kind == "dose" and len(rows) < number <= len(rows) + entry.pasted:
+        return "pasted"
+    if not 1 <= number <= len(rows):
+        return None
+    row = rows[number - 1]
+    if kind == "level":
+        return f"level.{row}.{_LEVEL_PLACES.get(rest, 'value')}"
+    if rest == "form" or rest.endswith(", form"):
+        return f"{kind}.{row}.form"
+    if kind == "dose":
+        head = rest.split(" dose ")[0] if rest.startswith("missed dose") else rest
+        return f"dose.{row}.{_DOSE_PLACES.get(head, 'said')}"
+    return f"own.{row}.said"
