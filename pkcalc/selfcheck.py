@@ -378,7 +378,9 @@ CALLS: dict[str, Call] = {
         _time_to_fraction,
     ),
     "level_after": Call(
-        {"time": "duration", "start": "level", **_MM, "volume": "volume"}, {"level": "level"}, _level_after
+        {"time": "duration", "start": "level", "dose_rate": "dose rate", **_MM, "volume": "volume"},
+        {"level": "level"},
+        _level_after,
     ),
     "time_to_fall": Call(
         {"start": "level", "end": "level", **_MM, "volume": "volume"}, {"time": "duration"}, _time_to_fall

@@ -10,6 +10,8 @@ from typing import Any
 
 import numpy as np
 import pytest
+from hypothesis import given
+from hypothesis import strategies as st
 from scipy.integrate import solve_ivp
 
 from pkcalc import formulas
@@ -378,6 +380,33 @@ def test_all_problems_of_a_patient_are_reported_at_once() -> None:
     with pytest.raises(CaseError) as caught:
         drug().populations["default"].at(-5, 3, modifiers=("tall",))
     assert [p.where for p in caught.value.problems] == ["Weight", "Age", "Population"]
+
+
+@pytest.mark.parametrize("name", DRUGS)
+@given(data=st.data())
+def test_any_patient_gets_a_possible_prior_or_a_refusal(name: str, data: st.DataObject) -> None:
+    """Over ages, weights, heights and adjustments: positive, finite, never more Vmax for less weight."""
+    profile = load_profile(name)
+    population = data.draw(st.sampled_from(sorted(profile.populations.values(), key=lambda p: p.id)))
+    low, high = population.ages_years
+    age = data.draw(st.floats(max(low, profile.youngest_years), high, exclude_max=True))
+    weight = data.draw(st.floats(2.0, 300.0))
+    height = data.draw(st.none() | st.floats(50.0, 220.0))
+    sex = data.draw(st.sampled_from(["female", "male", "unknown"]))
+    chosen = (
+        tuple(data.draw(st.sets(st.sampled_from(sorted(population.modifiers) or ["-"]))))
+        if population.modifiers
+        else ()
+    )
+    prior = population.at(weight, age, height_cm=height, sex=sex, modifiers=chosen)
+    lighter = population.at(0.99 * weight, age, height_cm=height, sex=sex, modifiers=chosen)
+    for value in (prior.vmax_mg_per_day, prior.km_mg_per_L, prior.volume_L):
+        assert math.isfinite(value)
+        assert value > 0
+    assert prior.vmax_mg_per_day >= lighter.vmax_mg_per_day
+    assert prior.vmax_log_sd >= log_sd(population.vmax_cv)
+    assert prior.used
+    assert not re.search(r"\bnan\b|\binf\b|\{", " ".join(prior.used))
 
 
 # forms, products, binding, limits ------------------------------------------------------------------------------
