@@ -30,12 +30,16 @@ def test_overdose_takes_every_number_away() -> None:
 
 
 def test_under_six_months_is_refused() -> None:
+    sips = [{"form": "suspension", "amount": "15 mg", "every": "12 h", "from": "2026-11-10 09:00"}]
+    low = [{"value": "8 mg/L", "kind": "total", "drawn": "2026-12-01 07:00"}]
     young = {"age": "5 months", "weight": "6 kg"}
-    consult = run_consult(plain(patient=young))
+    consult = run_consult(plain(patient=young, doses=sips, levels=low))
     assert "too-young" in said(consult)
     assert consult.chosen is None
     assert not consult.estimates
-    assert "too-young" not in said(run_consult(plain(patient={"age": "6 months", "weight": "6 kg"})))
+    assert "too-young" not in said(
+        run_consult(plain(patient={"age": "6 months", "weight": "6 kg"}, doses=sips, levels=low))
+    )
 
 
 def test_a_total_level_in_renal_failure_is_stopped() -> None:

@@ -138,3 +138,51 @@ def test_the_spread_is_named_and_never_the_assay_alone() -> None:
     assert unsaid.total_cv == 0.20
     assert unsaid.assay_cv < unsaid.total_cv
     assert run_consult(plain(context={"adherence_doubtful": "yes"})).observations[0].spread.total_cv == 0.30
+
+
+def test_an_estimate_without_its_certificate_is_stopped(monkeypatch: pytest.MonkeyPatch) -> None:
+    from dataclasses import replace
+
+    from pkcalc.estimate import posterior
+
+    honest = posterior.from_record
+
+    def doubtful(*args: object, **kwargs: object) -> object:
+        return replace(honest(*args, **kwargs), trusted=False, distrust="two grids differ by 3 %.")  # type: ignore[arg-type]
+
+    monkeypatch.setattr(posterior, "from_record", doubtful)
+    consult = run_consult(plain())
+    assert consult.chosen is None
+    assert consult.table == ()
+    assert consult.stopped
+    stop = next(c for c in consult.cautions if c.id == "estimate-not-trusted")
+    assert stop.text == "The whole-record estimate cannot be trusted here: two grids differ by 3 %."
+
+
+def test_the_methods_stand_side_by_side() -> None:
+    consult = run_consult(plain())
+    assert set(consult.estimates) == {"whole record", "two levels"}
+    assert consult.chosen is consult.estimates["whole record"]
+    assert consult.chosen_why.startswith("whole record: it uses every dose and level")
+    asked = run_consult(plain(method="two levels"))
+    assert asked.chosen is asked.estimates["two levels"]
+
+
+def test_one_level_is_enough_for_the_whole_record() -> None:
+    consult = run_consult(plain(levels=[PLAIN["levels"][1]]))
+    assert set(consult.estimates) == {"whole record"}
+    assert "needs two levels on two different doses" in consult.refusals["two levels"]
+    assert not consult.stopped
+
+
+def test_a_single_open_ended_line_is_a_record() -> None:
+    case = plain(
+        doses=[{"form": "extended-capsule", "daily": [{"time": "21:00", "amount": "300 mg"}], "for_about": "3 months"}],
+        levels=[{"value": "8 mg/L", "kind": "total", "drawn": "2026-12-01 07:00"}],
+    )
+    consult = run_consult(case)
+    assert consult.chosen is not None
+    assert consult.record is not None
+    assert consult.record.before is not None
+    present = next(s for s in consult.table if s.present)
+    assert 6 < present.forecast.steady.median < 12
