@@ -1,14 +1,25 @@
-"""What a dose rate would lead to: steady level, chances against the target, time to settle, sensitivity."""
+"""What a dose rate would lead to: steady level, chances against the target, time to settle, level on named days.
+
+Many dose rates are taken at once: rates along one axis, draws along the other.
+"""
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from collections.abc import Sequence
+from dataclasses import dataclass, replace
 
 import numpy as np
+from numpy.typing import ArrayLike, NDArray
 
 from pkcalc import formulas
 from pkcalc.estimate.result import Band, Estimate, band
 from pkcalc.levels import LabScale
+
+Floats = NDArray[np.float64]
+
+#: Draws used for times and courses. Quantiles of the steady level use all of them; a time needs less precision.
+TIME_DRAWS = 1024
+_SEED = 20_260_301
 
 
 @dataclass(frozen=True)
@@ -52,55 +63,196 @@ def forecast_rate(
     goal: Goal,
     scale: LabScale,
     *,
-    present_mg_per_L: float = 0.0,
+    present_mg_per_L: ArrayLike = 0.0,
 ) -> Forecast:
     """Distribution of the steady level of a constant rate of active drug under the estimate's draws."""
+    return forecast_rates(estimate, (rate_mg_per_day,), goal, scale, present_mg_per_L=present_mg_per_L)[0]
+
+
+def forecast_rates(
+    estimate: Estimate,
+    rates_mg_per_day: Sequence[float],
+    goal: Goal,
+    scale: LabScale,
+    *,
+    present_mg_per_L: ArrayLike = 0.0,
+) -> tuple[Forecast, ...]:
+    """`forecast_rate` for many dose rates at once.
+
+    present_mg_per_L: today's level, one for all or one per draw; the way to the steady level begins there.
+    """
+    rates = np.asarray(rates_mg_per_day, dtype=np.float64)
     vmax, km, weights = estimate.vmax_mg_per_day, estimate.km_mg_per_L, estimate.weights
     steady = formulas.steady_state_level(
-        dose_rate_mg_per_day=rate_mg_per_day, vmax_mg_per_day=vmax, km_mg_per_L=km
+        dose_rate_mg_per_day=rates[:, None], vmax_mg_per_day=vmax, km_mg_per_L=km
     )
-    none = ~np.isfinite(steady)
-    p_none = float(np.sum(weights[none]))
-    below = float(np.sum(weights[steady < goal.low_mg_per_L]))
-    above = float(np.sum(weights[steady > goal.high_mg_per_L]))
-    settle = None
+    chances = {
+        "below": (steady < goal.low_mg_per_L) @ weights,
+        "above": (steady > goal.high_mg_per_L) @ weights,
+        "critical": (steady > goal.critical_mg_per_L) @ weights,
+        "none": np.isinf(steady) @ weights,
+    }
+    levels = bands(steady, weights)
+    settle: Sequence[Band | None] = [None] * len(rates)
     if estimate.volume_L is not None:
+        few = fewer_draws(estimate, TIME_DRAWS)
+        present = draws_of(present_mg_per_L, estimate, few)
         days = formulas.time_to_fraction(
             fraction=0.9,
-            dose_rate_mg_per_day=rate_mg_per_day,
-            vmax_mg_per_day=vmax,
-            km_mg_per_L=km,
-            volume_L=estimate.volume_L,
-            start_mg_per_L=present_mg_per_L,
+            dose_rate_mg_per_day=rates[:, None],
+            vmax_mg_per_day=few.estimate.vmax_mg_per_day,
+            km_mg_per_L=few.estimate.km_mg_per_L,
+            volume_L=_volume(few.estimate),
+            start_mg_per_L=present,
         )
-        settle = band(np.asarray(days, dtype=np.float64), weights)
-    levels = band(steady, weights)
-    point = float(
-        formulas.steady_state_level(
-            dose_rate_mg_per_day=rate_mg_per_day,
-            vmax_mg_per_day=estimate.point.vmax_mg_per_day,
-            km_mg_per_L=estimate.point.km_mg_per_L,
+        settle = bands(days, few.estimate.weights)
+    points = formulas.steady_state_level(
+        dose_rate_mg_per_day=rates,
+        vmax_mg_per_day=estimate.point.vmax_mg_per_day,
+        km_mg_per_L=estimate.point.km_mg_per_L,
+    )
+    rises = formulas.sensitivity_at(
+        dose_rate_mg_per_day=rates, vmax_mg_per_day=estimate.point.vmax_mg_per_day
+    )
+    return tuple(
+        Forecast(
+            rate_mg_per_day=float(rates[i]),
+            steady=levels[i],
+            total=scaled(levels[i], scale.total_factor),
+            free=scaled(levels[i], scale.free_fraction),
+            below=_chance(chances["below"][i]),
+            within=_chance(1.0 - _chance(chances["below"][i]) - _chance(chances["above"][i])),
+            above=_chance(chances["above"][i]),
+            above_critical=_chance(chances["critical"][i]),
+            no_steady_state=_chance(chances["none"][i]),
+            settle_days=settle[i],
+            percent_per_percent=float(rises[i]),
+            point_mg_per_L=float(points[i]),
         )
+        for i in range(len(rates))
     )
-    rise = float(
-        formulas.sensitivity_at(
-            dose_rate_mg_per_day=rate_mg_per_day, vmax_mg_per_day=estimate.point.vmax_mg_per_day
+
+
+def _chance(value: float) -> float:
+    # sums of weights miss 0 and 1 by a few parts in 1e16
+    return float(min(max(round(float(value), 12), 0.0), 1.0))
+
+
+def bands(values: Floats, weights: Floats) -> tuple[Band, ...]:
+    """Median and 90 % interval of every row of draws; a bound among draws without a steady state is +inf."""
+    if np.ptp(weights) > 1e-12:
+        return tuple(band(row, weights) for row in values)
+    ordered = np.sort(values, axis=1)
+    n = values.shape[1]
+    finite = np.isfinite(ordered).sum(axis=1)
+    found = []
+    for p in (0.5, 0.05, 0.95):
+        place = np.clip(p * n - 0.5, 0, n - 1)
+        low = int(place)
+        high = min(low + 1, n - 1)
+        # as `weighted_quantile`: between the mid-points of neighbours, and no steady state past the last finite
+        last = np.maximum(finite - 1, 0)
+        rows = np.arange(len(values))
+        a, b = ordered[rows, np.minimum(low, last)], ordered[rows, np.minimum(high, last)]
+        value = (
+            a + (b - a) * (place - low if high > low else 0.0)
+            if finite.all()
+            else _between(a, b, place - low)
         )
+        found.append(np.where((p * n > finite) & (finite < n) | (finite == 0), np.inf, value))
+    return tuple(Band(float(m), float(a), float(b)) for m, a, b in zip(*found, strict=True))
+
+
+def _between(a: Floats, b: Floats, part: float) -> Floats:
+    with np.errstate(invalid="ignore"):
+        return np.where(np.isfinite(a) & np.isfinite(b), a + (b - a) * part, np.inf)
+
+
+@dataclass(frozen=True)
+class Fewer:
+    """An estimate with fewer draws, of equal weight, and which of the whole they are."""
+
+    estimate: Estimate
+    chosen: NDArray[np.intp]
+
+
+def fewer_draws(estimate: Estimate, most: int) -> Fewer:
+    """At most so many draws of an estimate, always the same ones; resampled where the weights differ.
+
+    They are picked in random order: every n-th point of a Sobol sequence would not be a fair sample.
+    """
+    n = len(estimate.weights)
+    if n <= most:
+        return Fewer(estimate, np.arange(n))
+    random = np.random.default_rng(_SEED)
+    if np.ptp(estimate.weights) <= 1e-12:
+        chosen = np.sort(random.permutation(n)[:most])
+    else:
+        edges = (np.arange(most) + random.random()) / most
+        chosen = np.minimum(np.searchsorted(np.cumsum(estimate.weights), edges), n - 1)
+    volume = estimate.volume_L
+    return Fewer(
+        replace(
+            estimate,
+            vmax_mg_per_day=estimate.vmax_mg_per_day[chosen],
+            km_mg_per_L=estimate.km_mg_per_L[chosen],
+            volume_L=None if volume is None else volume[chosen],
+            weights=np.full(most, 1.0 / most),
+        ),
+        chosen,
     )
-    return Forecast(
-        rate_mg_per_day=rate_mg_per_day,
-        steady=levels,
-        total=scaled(levels, scale.total_factor),
-        free=scaled(levels, scale.free_fraction),
-        below=below,
-        within=max(0.0, 1.0 - below - above),
-        above=above,
-        above_critical=float(np.sum(weights[steady > goal.critical_mg_per_L])),
-        no_steady_state=p_none,
-        settle_days=settle,
-        percent_per_percent=rise,
-        point_mg_per_L=point,
+
+
+def draws_of(values: ArrayLike, estimate: Estimate, few: Fewer) -> Floats:
+    """A value per draw of the whole estimate (or one for all) at the fewer draws."""
+    whole = np.broadcast_to(np.asarray(values, dtype=np.float64), estimate.weights.shape)
+    return whole[few.chosen]
+
+
+def fully_taken(estimate: Estimate, doses_missed: float) -> Estimate:
+    """The estimate for doses that are all taken, where a share of the past ones was not.
+
+        Vmax of the record = true Vmax / (1 - share),  so  true Vmax = Vmax x (1 - share);  Km as it is
+
+    A level on a dose that was partly taken makes elimination look faster than it is. doses_missed: share of the
+    recorded doses that differ from the record, 0 to under 1. The volume is left as it is: it comes from the
+    weight, hardly from the doses. Derived from the rate law.
+    """
+    if doses_missed == 0:
+        return estimate
+    taken = 1.0 - doses_missed
+    return replace(
+        estimate,
+        vmax_mg_per_day=estimate.vmax_mg_per_day * taken,
+        point=replace(estimate.point, vmax_mg_per_day=estimate.point.vmax_mg_per_day * taken),
+        summary={**estimate.summary, "vmax_mg_per_day": scaled(estimate.summary["vmax_mg_per_day"], taken)},
     )
+
+
+def levels_on_days(
+    estimate: Estimate, rates_mg_per_day: Sequence[float], days: Sequence[float], present_mg_per_L: ArrayLike
+) -> tuple[tuple[Band, ...], ...]:
+    """Level (average rate) on each of some days from now, for each dose rate; from today's level.
+
+    Needs a volume. One tuple of bands per rate, one band per day.
+    """
+    few = fewer_draws(estimate, TIME_DRAWS)
+    present = draws_of(present_mg_per_L, estimate, few)
+    rates, when = np.asarray(rates_mg_per_day, dtype=np.float64), np.asarray(days, dtype=np.float64)
+    course = formulas.level_after(
+        time_day=when[None, :, None],
+        start_mg_per_L=present,
+        dose_rate_mg_per_day=rates[:, None, None],
+        vmax_mg_per_day=few.estimate.vmax_mg_per_day,
+        km_mg_per_L=few.estimate.km_mg_per_L,
+        volume_L=_volume(few.estimate),
+    )
+    return tuple(bands(course[i], few.estimate.weights) for i in range(len(rates)))
+
+
+def _volume(estimate: Estimate) -> Floats:
+    assert estimate.volume_L is not None, "times need a volume"
+    return estimate.volume_L
 
 
 def scaled(levels: Band, factor: float) -> Band:
@@ -111,6 +263,8 @@ def scaled(levels: Band, factor: float) -> Band:
 def rate_for_level(estimate: Estimate, level_mg_per_L: float) -> Band:
     """Dose rate of active drug (mg/day) that holds a level, with its 90 % interval: R = Vmax C / (Km + C)."""
     rates = formulas.dose_rate_for_level(
-        level_mg_per_L=level_mg_per_L, vmax_mg_per_day=estimate.vmax_mg_per_day, km_mg_per_L=estimate.km_mg_per_L
+        level_mg_per_L=level_mg_per_L,
+        vmax_mg_per_day=estimate.vmax_mg_per_day,
+        km_mg_per_L=estimate.km_mg_per_L,
     )
     return band(np.asarray(rates, dtype=np.float64), estimate.weights)
