@@ -10,7 +10,7 @@ from dataclasses import replace
 
 import pytest
 
-from pkcalc import selfcheck
+from pkcalc import formulas, selfcheck
 from pkcalc.errors import CaseError, DrugFileError
 from pkcalc.selfcheck import Example, check, load_examples, parse_examples, unnoticed_inputs
 from pkcalc.sources import all_sources
@@ -28,6 +28,12 @@ def test_reference_curves_agree() -> None:
     rows = selfcheck.reference_curves()
     assert [r.id for r in rows] == ["mm_reference_curves", "mm_edge_cases"]
     assert all(r.agrees for r in rows)
+
+
+def test_a_curve_off_by_a_trillionth_is_found(monkeypatch: pytest.MonkeyPatch) -> None:
+    exact = formulas.level_after
+    monkeypatch.setattr(formulas, "level_after", lambda **inputs: exact(**inputs) * (1 + 1e-12))
+    assert not any(r.agrees for r in selfcheck.reference_curves())
 
 
 def test_enough_examples_of_enough_kinds() -> None:

@@ -304,6 +304,14 @@ def test_modifiers_multiply_whatever_their_order() -> None:
     assert one.volume_log_sd == pytest.approx(log_sd(0.25))
 
 
+def test_no_modifier_narrows_a_wider_population() -> None:
+    """CV 30 % of the intermediate group does not undo the 40 % of critical illness, in either order of the file."""
+    both = drug().populations["default"].at(70, 40, modifiers=("cyp2c9-intermediate", "critical-illness"))
+    assert both.vmax_log_sd == pytest.approx(log_sd(0.40))
+    wide = dataclasses.replace(drug().populations["default"], vmax_cv=0.6)
+    assert wide.at(70, 40, modifiers=("cyp2c9-poor",)).vmax_log_sd == pytest.approx(log_sd(0.6))
+
+
 def test_every_question_of_a_modifier_is_one_the_case_asks() -> None:
     from pkcalc.case import QUESTIONS
 

@@ -172,6 +172,12 @@ def test_a_target_may_be_given_in_molar_units() -> None:
     assert (low, high) == pytest.approx((40 * 0.25227, 80 * 0.25227))
 
 
+def test_the_ends_of_what_is_allowed_are_allowed() -> None:
+    text = HEAD + '[rates]\ninjection-adult = "50 mg/min"\n[chance]\nwarn = "50 %"\nstop = "50 %"\n'
+    site = parse_site(text, "site.toml")
+    assert (site.warn_chance, site.stop_chance) == (0.5, 0.5)
+
+
 def test_half_a_target_keeps_the_other_half() -> None:
     site = parse_site(HEAD + '[target]\nhigh = "18 mg/L"\n', "site.toml")
     assert site.target(drug()) == (10, 18, "local setting, site.toml")
