@@ -111,7 +111,11 @@ def test_a_number_expected_and_refused_fails() -> None:
     (wrong,) = parse_examples(text, "x.toml")
     row = check(wrong)[0]
     assert not row.agrees
-    assert row.ours == "refused: No finite answer was found. There is no steady state or no solution."
+    assert row.ours == (
+        "refused: The dose rate, 600 mg/day, is at or above Vmax, 500 mg/day. There is no steady state: more is "
+        "given than the body can remove, and the level rises without end. Give a dose rate below Vmax, or check "
+        "Vmax and the salt factor."
+    )
 
 
 def test_a_broken_function_is_found(monkeypatch: pytest.MonkeyPatch) -> None:
