@@ -24,7 +24,7 @@ from pkcalc import formulas
 from pkcalc.errors import CaseError, Problem
 from pkcalc.periodic import PeriodicState, periodic
 from pkcalc.record import Absorption, Before, Dose, FirstOrder, Record, Repeated, duplicates
-from pkcalc.stepping import BLOCK, Accuracy, Floats, Plan, Speed, march, plan_steps, run, speeds
+from pkcalc.stepping import BLOCK, Accuracy, Floats, Plan, Speed, Step, march, plan_steps, run, speeds
 
 __all__ = [
     "Absorption",
@@ -145,37 +145,58 @@ def sensitivity(
         for begin in range(0, len(speed.positions), BLOCK):
             some = speed.positions[begin : begin + BLOCK]
             inverse = 1.0 / vmax[some]
-            # per window: its share of the state when last moved, and the summed slope at that moment
+            # per window its share of the state; for one that receives nothing now, as it was when the summed
+            # slope stood at `left`, to be brought up to date when it is needed
             share = dict.fromkeys(earlier, start_change[some] * inverse)
-            moved = {w: np.zeros(len(some)) for w in earlier}
+            left = {w: np.zeros(len(some)) for w in earlier}
             total = np.zeros(len(some))
             for number, step, block in march(
                 plan, vmax[some], kappa[some], start[some], [r[some] for r in rates]
             ):
                 if step is not None:
                     slope = block.slopes(step)
-                    quarter = np.exp(-0.25 * slope) if step.windows else slope
-                    for w, push, half, full in step.windows:
-                        # what enters during a step decays over the rest of it: 3/4 of the step for the
-                        # first half
-                        old = share.get(w)
-                        new = np.full(len(some), push) if old is None else old * np.exp(moved[w] - total)
-                        if old is not None:
-                            new += push * inverse
-                        else:
-                            new *= inverse
-                        new *= quarter**4
-                        new += (half * quarter**3 + (full - half) * quarter) * inverse
-                        share[w] = new
-                    total = total + slope
-                    for w, _, _, _ in step.windows:
-                        moved[w] = total
+                    receiving = {w for w, *_ in step.windows}
+                    for w in [w for w in share if w not in receiving and w not in left]:
+                        left[w] = total.copy()
+                    if receiving:
+                        _receive(step, slope, inverse, total, share, left)
+                    total += slope
                 for position in plan.reached.get(number, ()):
                     for w, value in share.items():
-                        with np.errstate(divide="ignore", invalid="ignore"):
-                            part = value * np.exp(moved[w] - total) / block.w
-                        out[some, position, w] = np.where(block.w > 0, part, 0.0)
+                        now = value * np.exp(left[w] - total) if w in left else value
+                        out[some, position, w] = np.where(
+                            block.w > 0, now / np.where(block.w > 0, block.w, 1.0), 0.0
+                        )
     return out
+
+
+def _receive(
+    step: Step,
+    slope: Floats,
+    inverse: Floats,
+    total: Floats,
+    share: dict[int, Floats],
+    left: dict[int, Floats],
+) -> None:
+    """Move the windows' shares over a step in which they receive drug: what was there decays, what enters
+    decays over the rest of the step (3/4 of it for the first half of the step's input, 1/4 for the
+    second)."""
+    quarter = np.exp(-0.25 * slope)
+    half = quarter * quarter
+    three = half * quarter
+    whole = half * half
+    for w, push, first, both in step.windows:
+        value = share.get(w)
+        if value is None:
+            value = np.zeros_like(slope)
+        elif w in left:
+            value *= np.exp(left.pop(w) - total)
+        if push:
+            value += push * inverse
+        value *= whole
+        if both:
+            value += (first * three + (both - first) * quarter) * inverse
+        share[w] = value
 
 
 def first_crossing(

@@ -2,7 +2,7 @@
 
 For any shape of input with D per cycle tau, the amount X(s) at every time of the cycle lies between x_b and
 x_b + D, where x_b = D / (e^((Vmax tau - D)/kappa) - 1) is the trough of one intravenous push per cycle. The
-map of one cycle is increasing and convex, so Newton's method from x_b rises to the answer and never past it.
+map of one cycle is increasing and convex, so Newton's method from below rises to the answer, never past it.
 """
 
 from __future__ import annotations
@@ -129,18 +129,22 @@ def _plateau_start(
     dose, tau = regimen.rate_mg_per_day * regimen.cycle_day, regimen.cycle_day
     drift = (vmax * tau - dose) / kappa
     linear = k == 0
-    x = np.zeros_like(vmax)
-    x[linear] = lower_bound(dose, tau, vmax[linear], kappa[linear])
+    floor = np.zeros_like(vmax)
+    floor[linear] = lower_bound(dose, tau, vmax[linear], kappa[linear])
+    # the limit formula, exact towards Vmax, is the better start above the bound; one step from too high lands
+    # too low, and from there Newton's method rises
+    limit = dose / np.where(linear, drift, np.inf) - _mean_excess(plan, regimen)
     near = linear & (drift < NEAR_VMAX)
-    x = np.where(near, dose / np.where(near, drift, 1.0) - _mean_excess(plan, regimen), x)
+    x = np.where(near, limit, np.maximum(floor, np.where(linear, limit, 0.0)))
     left = np.flatnonzero(~near)
     steps = 0
     while left.size and steps < NEWTON_LIMIT:
         end, slope = _cycle_map(plan, vmax[left], kappa[left], k[left], x[left])
         change = (end - x[left]) / (1.0 - slope)
-        x[left] += np.maximum(change, -x[left])
+        x[left] = np.maximum(x[left] + change, floor[left])
         steps += 1
-        left = left[np.abs(change) > 1e-9 * x[left]]
+        # the step's error is of the order of its square: what is left after it is below 1e-10
+        left = left[np.abs(change) > 1e-5 * x[left]]
     return x, steps
 
 
