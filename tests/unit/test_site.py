@@ -4,6 +4,8 @@ from __future__ import annotations
 
 import dataclasses
 import hashlib
+import tomllib
+from importlib import resources
 from pathlib import Path
 
 import pytest
@@ -401,6 +403,22 @@ def test_every_problem_is_reported_at_once() -> None:
         "site.toml, population.name",
         "site.toml, wibble",
     ]
+
+
+def test_the_example_shows_every_setting_and_can_be_read() -> None:
+    text = resources.files("pkcalc").joinpath("site_example.toml").read_text(encoding="utf-8")
+    site = parse_site(text, "site_example.toml")
+    shown = tomllib.loads(text)
+    for section, keys in shown.items():
+        for key in keys:
+            if section != "site":
+                assert f"{section} {key}".replace("_", " ") in {x.path for x in site.settings}, key
+    # and nothing that could be set is missing: a slip in a name lists what is known
+    for section in shown:
+        broken = text.replace(f"[{section}]", f"[{section}]\nwibble = 1", 1)
+        (message,) = problems(broken)
+        known = message.split("Allowed: ")[1].split(". Take")[0].split(", ")
+        assert set(known) == set(shown[section]), section
 
 
 def test_reading_from_disk(tmp_path: Path) -> None:

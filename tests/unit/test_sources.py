@@ -67,6 +67,13 @@ def test_every_source_is_used() -> None:
     assert set(all_sources()) - used == set()
 
 
+def test_every_source_a_caution_names_exists() -> None:
+    text = (PACKAGE / "cautions.toml").read_text(encoding="utf-8")
+    named = set(re.findall(r'^source = "([^"]+)"', text, re.M))
+    assert named, "the pattern itself must find something"
+    assert named <= set(all_sources())
+
+
 def test_one_source_by_its_key() -> None:
     assert source("grasela1983").authors == "Grasela TH et al"
 
