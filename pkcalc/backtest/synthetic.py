@@ -1,9 +1,9 @@
-"""Synthetic departments with known truth, for calibration, tests and demonstrations. Seeded; never real patients.
+"""Synthetic departments with known truth, for calibration, tests and demonstrations. Seeded; never real
+patients.
 
-Each patient is drawn from a population, takes doses by the clock with some missed unseen and all of them taken a
-little off time, has levels drawn and measured, and has the dose changed after each level by a plain step rule; the
-true level at the end of the last period is what a forecast is held against.
-"""
+Each patient is drawn from a population, takes doses by the clock with some missed unseen and all of them
+taken a little off time, has levels drawn and measured, and has the dose changed after each level by a plain
+step rule; the true level at the end of the last period is what a forecast is held against."""
 
 from __future__ import annotations
 
@@ -17,14 +17,18 @@ from pkcalc.drugs.profile import Prior
 from pkcalc.record import Absorption, Dose, Record
 
 
+#: An extended-release form: five hours of release, then quick absorption.
+EXTENDED = Absorption(ka_per_day=24.0, release_day=5 / 24)
+
+
 @dataclass(frozen=True)
 class Ward:
     """How a synthetic department works.
 
-    levels: number of levels, one per dose. days_per_dose: days on each dose before its level (low, high: drawn
-    between the two, both included). missed: share of doses not taken, unseen. jitter_h: standard deviation of the
-    time a dose is taken. assay_cv, day_cv: of a measured level. vmax_factor, km_factor: the truth against the
-    population. doses_per_day: drawn from these. first_mg_per_day: the dose it begins with.
+    levels: number of levels, one per dose. days_per_dose: days on each dose before its level (low, high:
+    drawn between the two, both included). missed: share of doses not taken, unseen. jitter_h: standard
+    deviation of the time a dose is taken. assay_cv, day_cv: of a measured level. vmax_factor, km_factor: the
+    truth against the population. doses_per_day: drawn from these. first_mg_per_day: the dose it begins with.
     """
 
     levels: int = 2
@@ -37,17 +41,17 @@ class Ward:
     km_factor: float = 1.0
     doses_per_day: tuple[int, ...] = (1, 2, 3)
     first_mg_per_day: float = 300.0
-    absorption: Absorption = Absorption(ka_per_day=24.0, release_day=5 / 24)
+    absorption: Absorption = EXTENDED
 
 
 @dataclass(frozen=True)
 class SyntheticPatient:
     """One patient: the record as written, the levels as measured, and the truth.
 
-    record: doses as recorded, of all periods but the last. level_days, level_mg_per_L: as measured; true_mg_per_L: what
-    they were. following: doses as planned for the last period. target_day: its end; target_mg_per_L: the true level
-    then, with doses missed as before. rates_mg_per_day: of every period, the last one included.
-    """
+    record: doses as recorded, of all periods but the last. level_days, level_mg_per_L: as measured;
+    true_mg_per_L: what they were. following: doses as planned for the last period. target_day: its end;
+    target_mg_per_L: the true level then, with doses missed as before. rates_mg_per_day: of every period, the
+    last one included."""
 
     number: int
     vmax_mg_per_day: float
@@ -74,8 +78,11 @@ def next_rate(rate_mg_per_day: float, level_mg_per_L: float) -> float:
     return max(rate_mg_per_day + change, _LEAST_MG_PER_DAY)
 
 
-def patients(ward: Ward, prior: Prior, *, count: int, seed: int, first: int = 0) -> Iterator[SyntheticPatient]:
-    """Patients first .. first + count - 1 of a department; each depends on the seed and its own number only."""
+def patients(
+    ward: Ward, prior: Prior, *, count: int, seed: int, first: int = 0
+) -> Iterator[SyntheticPatient]:
+    """Patients first .. first + count - 1 of a department; each depends on the seed and its own number
+    only."""
     for number in range(first, first + count):
         yield _patient(ward, prior, number, np.random.default_rng((seed, number)))
 

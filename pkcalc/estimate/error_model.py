@@ -4,19 +4,19 @@ On the log scale, for levels j and k and one choice of (Vmax, kappa):
 
     S_jk = [j = k] (assay_j^2 + day_j^2 + extra_j^2) + sum over doses i of G_ji G_ki p_i (1 - p_i)
 
-G_ji is the rise of ln level j per fractional rise of dose i, and p_i the chance that the dose differs from the
-record: so the same missed dose moves a level little where elimination is far from saturated and much where it is
-near, and levels that share doses share the error (`intake`).
+G_ji is the rise of ln level j per fractional rise of dose i, and p_i the chance that the dose differs from
+the record: so the same missed dose moves a level little where elimination is far from saturated and much
+where it is near, and levels that share doses share the error (`intake`).
 
-One level may be wrong altogether: a mixture over "none" and "this one's spread is `wrong_level_factor` times as
-wide", which keeps every term Gaussian.
-"""
+One level may be wrong altogether: a mixture over "none" and "this one's spread is `wrong_level_factor` times
+as wide", which keeps every term Gaussian."""
 
 from __future__ import annotations
 
 import math
 from collections.abc import Sequence
 from dataclasses import dataclass
+from itertools import pairwise
 from typing import Literal
 
 import numpy as np
@@ -26,6 +26,7 @@ from pkcalc.errors import CaseError, Problem
 from pkcalc.units import show_number
 
 Floats = NDArray[np.float64]
+
 
 @dataclass(frozen=True)
 class LevelData:
@@ -51,7 +52,12 @@ class LevelData:
         found = []
         if not math.isfinite(self.time_day):
             found.append(
-                Problem(f"{name}, time", f"{self.time_day} was given", "a time in days", "Give the time of the draw")
+                Problem(
+                    f"{name}, time",
+                    f"{self.time_day} was given",
+                    "a time in days",
+                    "Give the time of the draw",
+                )
             )
         if not (math.isfinite(self.level_mg_per_L) and self.level_mg_per_L > 0):
             found.append(
@@ -70,7 +76,9 @@ class LevelData:
         ):
             if not (math.isfinite(value) and value >= 0):
                 found.append(
-                    Problem(f"{name}, {what}", f"{value:g} was given", "0 or more", "Check the assay's settings")
+                    Problem(
+                        f"{name}, {what}", f"{value:g} was given", "0 or more", "Check the assay's settings"
+                    )
                 )
         if not found and self.own_variance <= 0:
             found.append(
@@ -99,11 +107,10 @@ class LevelData:
 class RecordSpread:
     """How far the record is believed, and how often a level is wrong altogether.
 
-    doses_differing: share of doses that differ from the record unseen (0: every dose was observed), either one
-    figure or pairs (from day, share) in order, each holding until the next (a day before the first pair takes the
-    first). wrong_level_chance: chance that a given level is wrong (mixed up, mistimed, contaminated).
-    wrong_level_factor: how many times wider the spread of a wrong level is.
-    """
+    doses_differing: share of doses that differ from the record unseen (0: every dose was observed), either
+    one figure or pairs (from day, share) in order, each holding until the next (a day before the first pair
+    takes the first). wrong_level_chance: chance that a given level is wrong (mixed up, mistimed,
+    contaminated). wrong_level_factor: how many times wider the spread of a wrong level is."""
 
     doses_differing: float | tuple[tuple[float, float], ...]
     wrong_level_chance: float = 0.02
@@ -122,7 +129,7 @@ class RecordSpread:
                     "A record that is wrong more often than that says nothing: observe dosing first",
                 )
             )
-        if any(b[0] <= a[0] for a, b in zip(shares, shares[1:], strict=False)):
+        if any(b[0] <= a[0] for a, b in pairwise(shares)):
             found.append(
                 Problem(
                     "Doses that differ from the record",
@@ -170,9 +177,10 @@ class RecordSpread:
             return "takes every dose as recorded (observed dosing)"
         if len(shares) == 1:
             return f"assumes that about {show_number(100 * shares[0], 2)} % of doses differ from the record"
+        least, most = show_number(100 * shares[0], 2), show_number(100 * shares[-1], 2)
         return (
-            f"assumes that between {show_number(100 * shares[0], 2)} and {show_number(100 * shares[-1], 2)} % of doses "
-            "differ from the record, depending on who gave them"
+            f"assumes that between {least} and {most} % of doses differ from the record, depending on who gave "
+            "them"
         )
 
 
@@ -212,7 +220,8 @@ def covariance(own: Floats, gain: Floats, intake_variance: Floats) -> Floats:
 
 
 def part_weights(m: int, spread: RecordSpread) -> tuple[Floats, Floats]:
-    """Log prior weights of the parts (none wrong, each wrong alone) and the factor on the variance of a wrong one."""
+    """Log prior weights of the parts (none wrong, each wrong alone) and the factor on the variance of a wrong
+    one."""
     p = spread.wrong_level_chance
     if m == 0 or p == 0.0:
         return np.zeros(1), np.zeros(0)
@@ -228,8 +237,8 @@ def gaussian_parts(residual: Floats, cov: Floats, volume_variance: float, spread
 
         P = 1/s2 + 1'S^-1 1     mu = 1'S^-1 r / P     -2 log L = r'S^-1 r - P mu^2 + log|S| + log(P s2)
 
-    A wrong level adds (f^2 - 1) S_jj to its own variance: a change of rank one, so S is inverted once per node.
-    """
+    A wrong level adds (f^2 - 1) S_jj to its own variance: a change of rank one, so S is inverted once per
+    node."""
     nodes, m = residual.shape
     log_prior, extra = part_weights(m, spread)
     if m == 0:
@@ -255,10 +264,10 @@ def gaussian_parts(residual: Floats, cov: Floats, volume_variance: float, spread
     return Components(log_prior + log_like - 0.5 * m * math.log(2 * math.pi), mean, 1.0 / precision)
 
 
-#: Points over the log volume on which the chance of the censored levels is taken, and the width of each as a share
-#: of the spread they cover (narrow kernels on a fine grid stand for the smooth density between them).
+#: Points over the log volume on which the chance of the censored levels is taken, and the width of each as a
+#: share of the spread they cover (narrow kernels on a fine grid stand for the smooth density between them).
 CENSORED_POINTS = 49
-_REACH, _KERNEL = 5.5, 0.25
+_REACH, _KERNEL = 5.5, 0.12
 
 
 def censored_parts(
@@ -270,10 +279,9 @@ def censored_parts(
 ) -> Components:
     """As `gaussian_parts`, with the conditional chance of the censored levels given the measured ones.
 
-    For every part the measured levels give u a normal density; on points over it the chance of the censored ones,
-    given u and the measured levels, is a normal probability (several at once: one after the other, on fixed
-    points). Each point is returned as a part of its own with a narrow normal round it.
-    """
+    For every part the measured levels give u a normal density; on points over it the chance of the censored
+    ones, given u and the measured levels, is a normal probability (several at once: one after the other, on
+    fixed points). Each point is returned as a part of its own with a narrow normal round it."""
     from scipy.special import log_ndtr
 
     nodes, m = residual.shape

@@ -3,11 +3,12 @@
 The sensitivity of a level to the intake of a window follows from the course already calculated. With
 lambda(t) = Vmax kappa / (kappa + X)^2 + k, the rate at which a small difference in the amount dies away,
 
-    d ln X(t) / d (fraction of dose i) = a_i share_i(t) exp(-integral of lambda from its absorption to t) / X(t)
+    d ln X(t) / d (fraction of dose i) = a_i share_i(t) exp(-integral of lambda from its absorption to t) /
+    X(t)
 
-share_i: part of the dose absorbed by t. A dose is taken as absorbed at its mean absorption time, which costs a few
-per cent of the sensitivity (tested against `flow.sensitivity`) and spares a second pass through the record.
-"""
+share_i: part of the dose absorbed by t. A dose is taken as absorbed at its mean absorption time, which costs
+a few per cent of the sensitivity (tested against `flow.sensitivity`) and spares a second pass through the
+record."""
 
 from __future__ import annotations
 
@@ -23,22 +24,24 @@ from pkcalc.record import Dose, Record
 
 Floats = NDArray[np.float64]
 
-#: Doses are followed one by one up to this many; beyond, neighbours are taken together so that memory stays bounded.
+#: Doses are followed one by one up to this many; beyond, neighbours are taken together so that memory stays
+#: bounded.
 MOST_DOSES = 256
 
-#: Spacing of the course on which the dying away of a difference is summed (not a divisor of a day, so that a daily
-#: dose is seen at all its phases).
+#: Spacing of the course on which the dying away of a difference is summed (not a divisor of a day, so that a
+#: daily dose is seen at all its phases).
 SAMPLE_DAY = 0.3
 
 
 @dataclass(frozen=True)
 class IntakePlan:
-    """What is the same for every node: when to look at the course, and which doses may differ from the record.
+    """What is the same for every node: when to look at the course, and which doses may differ from the
+    record.
 
-    sample_days (S,): times of the course; level_at (m,): the levels' places among them. doses_mg (D,): the doubtful
-    doses; absorbed (m, D): share of each absorbed by each level; entry_day (m, D): when, on average. member (D, W):
-    1 where a dose belongs to a group (normally each its own). variance (W,): of the fractional intake of a group.
-    """
+    sample_days (S,): times of the course; level_at (m,): the levels' places among them. doses_mg (D,): the
+    doubtful doses; absorbed (m, D): share of each absorbed by each level; entry_day (m, D): when, on average.
+    member (D, W): 1 where a dose belongs to a group (normally each its own). variance (W,): of the fractional
+    intake of a group."""
 
     sample_days: Floats
     level_at: NDArray[np.intp]
@@ -61,7 +64,11 @@ def plan_intake(record: Record, level_days: Sequence[float], spread: RecordSprea
     times = np.array(level_days, dtype=np.float64)
     last = float(times.max())
     doubtful = sorted(
-        (d for d in record.doses if d.absorption is not None and d.time_day < last and spread.share_at(d.time_day) > 0),
+        (
+            d
+            for d in record.doses
+            if d.absorption is not None and d.time_day < last and spread.share_at(d.time_day) > 0
+        ),
         key=lambda d: d.time_day,
     )
     if doubtful:

@@ -1,13 +1,12 @@
 """The estimate from the whole record: what the population says, and every level, at steady state or not.
 
-The course of the amount depends on (Vmax, kappa = Km V) alone, so a two-dimensional grid carries it; the volume
-shifts every log level and is integrated out analytically (`error_model`, `grid`). A second, shifted grid of other
-size certifies the first: where they disagree the grid grows, and where they still disagree the estimate says that
-it cannot be trusted.
+The course of the amount depends on (Vmax, kappa = Km V) alone, so a two-dimensional grid carries it; the
+volume shifts every log level and is integrated out analytically (`error_model`, `grid`). A second, shifted
+grid of other size certifies the first: where they disagree the grid grows, and where they still disagree the
+estimate says that it cannot be trusted.
 
-Vmax is the patient's Vmax relative to the record: where a share of the doses is missed all along, it is the Vmax
-that explains the levels with the doses as recorded.
-"""
+Vmax is the patient's Vmax relative to the record: where a share of the doses is missed all along, it is the
+Vmax that explains the levels with the doses as recorded."""
 
 from __future__ import annotations
 
@@ -18,7 +17,7 @@ from dataclasses import dataclass, replace
 import numpy as np
 from numpy.typing import NDArray
 
-from pkcalc import flow, formulas
+from pkcalc import flow
 from pkcalc.drugs.profile import Prior
 from pkcalc.errors import CannotEstimate, CaseError, Problem
 from pkcalc.estimate.error_model import (
@@ -33,9 +32,8 @@ from pkcalc.estimate.error_model import (
 from pkcalc.estimate.grid import (
     EDGE_MASS,
     EFFECTIVE_NODES,
-    Frame,
     NOWHERE,
-    Marginal,
+    Frame,
     Nodes,
     Quadrature,
     draw,
@@ -47,9 +45,9 @@ from pkcalc.estimate.grid import (
     vmax_marginal,
 )
 from pkcalc.estimate.intake import IntakePlan, intake_gain, plan_intake
-from pkcalc.estimate.result import Band, Estimate, LevelFit, Point, band, log_correlation
-from pkcalc.record import Before, Dose, FirstOrder, Record
-from pkcalc.units import show, show_number
+from pkcalc.estimate.result import Band, Estimate, LevelFit, Point, log_correlation
+from pkcalc.record import Before, FirstOrder, Record
+from pkcalc.units import show
 
 Floats = NDArray[np.float64]
 
@@ -58,7 +56,7 @@ BEFORE_ANY_LEVEL = "before any level"
 
 #: Grids tried in turn: nodes per axis of the answer, and of its certificate.
 SIZES = ((48, 38), (72, 57), (108, 86), (160, 128))
-CERTIFICATE_REACH = 5.3
+CERTIFICATE_REACH = 6.3
 
 #: The certificate: largest relative difference of a 5, 50 or 95 % point, and absolute one of the chance of no
 #: steady state.
@@ -69,16 +67,24 @@ CHANCE_TOLERANCE = 0.002
 WIDEST_LOG_SD = {"vmax": 0.56, "km": 0.90, "volume": 0.48}
 SMALLEST_LEVEL_SD = 0.02
 
-#: How much of an earlier regimen is written out dose by dose, so that its last weeks may differ from the record.
+#: The engine's own error: levels taken as more exact than this cannot be followed.
+EXACTEST_LEVEL_SD = 0.003
+
+#: How much of an earlier regimen is written out dose by dose, so that its last weeks may differ from the
+#: record.
 WRITTEN_OUT_DAY = 40.0
 
 #: A standardised residual beyond this is reported as a level that does not fit.
 MISFIT = 2.0
 
+#: With fewer effective nodes than this on the largest grid there is nothing to report.
+FEWEST_NODES = 8.0
+
 _PROBABILITIES = (0.05, 0.5, 0.95)
 
 
-# ------------------------------------------------------------------------------------------------ the population
+# ------------------------------------------------------------------------------------------------ the
+# population
 
 
 def prior_moments(prior: Prior) -> tuple[Floats, Floats]:
@@ -103,9 +109,7 @@ def prior_only(prior: Prior, n: int = 2048) -> Estimate:
     weights = np.full(n, 1.0 / n)
     z = ndtri(0.95)
     sd = np.sqrt(np.diag(cov))
-    bands = [
-        Band(*(float(np.exp(m + x * s)) for x in (0.0, -z, z))) for m, s in zip(mean, sd, strict=True)
-    ]
+    bands = [Band(*(float(np.exp(m + x * s)) for x in (0.0, -z, z))) for m, s in zip(mean, sd, strict=True)]
     return Estimate(
         method=BEFORE_ANY_LEVEL,
         vmax_mg_per_day=vmax,
@@ -122,7 +126,8 @@ def prior_only(prior: Prior, n: int = 2048) -> Estimate:
 
 @dataclass(frozen=True)
 class _Volume:
-    """The prior as (log Vmax, log kappa), and log V given them: mean = at + slope . (point - centre), variance."""
+    """The prior as (log Vmax, log kappa), and log V given them: mean = at + slope . (point - centre),
+    variance."""
 
     centre: Floats
     cov: Floats
@@ -155,7 +160,7 @@ class _Volume:
 
 
 #: A node whose prior cannot be made up for by any levels, this far under the best one, is left out.
-_HOPELESS = 25.0
+_HOPELESS = 16.0
 
 
 @dataclass(frozen=True)
@@ -175,7 +180,8 @@ class _Model:
         return np.array([x.own_variance for x in self.levels])
 
     def courses(self, a: Floats, k: Floats) -> tuple[Floats, Floats]:
-        """log amounts at the levels (nodes, m) and their sensitivities to the doubtful doses (nodes, m, groups)."""
+        """log amounts at the levels (nodes, m) and their sensitivities to the doubtful doses (nodes, m,
+        groups)."""
         vmax, kappa = np.exp(a), np.exp(k)
         volume = np.exp(self.volume.log_volume(a, k))
         course = flow.amounts(
@@ -188,7 +194,7 @@ class _Model:
         )
         amount = course[:, self.intake.level_at]
         if not np.all(amount > 0):
-            late = [x for x, ok in zip(self.levels, np.all(amount > 0, axis=0), strict=True) if not ok][0]
+            late = self.levels[int(np.argmin(np.all(amount > 0, axis=0)))]
             raise CaseError(
                 Problem(
                     f"Level {late.index + 1}",
@@ -201,7 +207,8 @@ class _Model:
         return np.log(amount), intake_gain(self.intake, self.record, course, vmax, kappa)
 
     def parts(self, residual: Floats, cov: Floats, which: Sequence[int]) -> Components:
-        """The log volume as a mixture at every node, given some of the levels, with the likelihood in its weights."""
+        """The log volume as a mixture at every node, given some of the levels, with the likelihood in its
+        weights."""
         if not which:
             nodes = len(residual)
             one = np.zeros((nodes, 1))
@@ -221,9 +228,8 @@ class _Model:
     def density(self, a: Floats, k: Floats, worth: NDArray[np.bool_]) -> Nodes:
         """Log posterior density of the nodes (not normalised), their mixtures and courses.
 
-        The slow nodes come first; of the fast ones, which cost many steps, only those are followed whose prior
-        times the largest likelihood any node can have comes near the best slow one.
-        """
+        The slow nodes come first; of the fast ones, which cost many steps, only those are followed whose
+        prior times the largest likelihood any node can have comes near the best slow one."""
         m = len(self.levels)
         prior = self.volume.log_density(a, k)
         log_amount, cov = np.zeros((len(a), m)), np.broadcast_to(np.eye(m), (len(a), m, m)).copy()
@@ -232,7 +238,9 @@ class _Model:
             CENSORED_POINTS if any(x.censored for x in self.levels) else 1
         )
         parts = Components(
-            np.full((len(a), count), NOWHERE), np.zeros((len(a), count)), np.full((len(a), count), self.volume.variance)
+            np.full((len(a), count), NOWHERE),
+            np.zeros((len(a), count)),
+            np.full((len(a), count), self.volume.variance),
         )
         measured = [v for v, x in zip(self.own, self.levels, strict=True) if x.censored is None]
         most = -0.5 * sum(math.log(2 * math.pi * v) for v in measured)
@@ -252,6 +260,8 @@ class _Model:
             )
             log_density[some] = np.maximum(prior[some] + found.log_total, NOWHERE)
 
+        # ten standard deviations off in the population: nothing a level says can lead there
+        worth = worth & (prior > self.volume.log_density(*self.volume.centre[:, None])[0] - 50.0)
         follow(worth & slow)
         best = float(np.max(log_density))
         follow(worth & ~slow & (prior + most > best - _HOPELESS))
@@ -263,7 +273,8 @@ class _Model:
 
 
 def written_out(record: Record) -> Record:
-    """The record with the last weeks of an earlier regimen as single doses, so that their intake may differ."""
+    """The record with the last weeks of an earlier regimen as single doses, so that their intake may
+    differ."""
     if record.before is None or record.start_mg is not None:
         return record
     regimen = record.before.regimen
@@ -279,7 +290,8 @@ def written_out(record: Record) -> Record:
 
 
 def with_population_path(record: Record, first_order_per_day: float) -> Record:
-    """The record with the population's parallel first-order path, unless it already has one that is always open."""
+    """The record with the population's parallel first-order path, unless it already has one that is always
+    open."""
     if first_order_per_day <= 0 or any(p.start_day == -math.inf for p in record.first_order):
         return record
     return replace(record, first_order=(*record.first_order, FirstOrder(rate_per_day=first_order_per_day)))
@@ -324,7 +336,8 @@ def _check(record: Record, levels: Sequence[LevelData]) -> None:
         raise CaseError(found)
 
 
-# ------------------------------------------------------------------------------------------------ the estimate
+# ------------------------------------------------------------------------------------------------ the
+# estimate
 
 
 def from_record(
@@ -340,9 +353,9 @@ def from_record(
 
         p(Vmax, Km, V | levels) ~ p(Vmax, Km, V) x p(levels | record, Vmax, Km, V)
 
-    record: what was given. levels: on the working basis. prior: the population at this patient. spread: how far
-    the record and the levels are believed. n: number of equal-weight draws. rates_mg_per_day: dose rates of active
-    drug whose chance of no steady state is to be certified and reported (the regimens in question).
+    record: what was given. levels: on the working basis. prior: the population at this patient. spread: how
+    far the record and the levels are believed. n: number of equal-weight draws. rates_mg_per_day: dose rates
+    of active drug whose chance of no steady state is to be certified and reported (the regimens in question).
 
     Returns an Estimate (method "whole record"; "before any level" where there are none). Its diagnostics hold
     "no_steady_state" (rate -> chance), "effective_nodes", "grid", "certificate" (largest relative quantile
@@ -354,7 +367,7 @@ def from_record(
         chances = {r: _normal_chance(prior, r) for r in rates_mg_per_day}
         return replace(estimate, diagnostics={**estimate.diagnostics, "no_steady_state": chances})
     model = _model(record, levels, prior, spread)
-    answer, marginal, report = _certified(model, prior, rates_mg_per_day)
+    answer, report = _certified(model, prior, rates_mg_per_day)
     a, k, u = draw(answer, n)
     log_volume = model.volume.log_volume(a, k) + u
     vmax, km, volume = np.exp(a), np.exp(k - log_volume), np.exp(log_volume)
@@ -368,7 +381,12 @@ def from_record(
         km_mg_per_L=km,
         volume_L=volume,
         weights=weights,
-        point=Point(*(bands[key].median for key in bands), kind="posterior median"),
+        point=Point(
+            bands["vmax_mg_per_day"].median,
+            bands["km_mg_per_L"].median,
+            bands["volume_L"].median,
+            "posterior median",
+        ),
         summary=bands,
         correlation=log_correlation(vmax, km, weights),
         volume_from="record" if learned else "population",
@@ -391,7 +409,8 @@ def from_record(
 
 @dataclass(frozen=True)
 class _Report:
-    """What one grid says: 5, 50, 95 % points by quantity, chances of no steady state by rate; and the certificate."""
+    """What one grid says: 5, 50, 95 % points by quantity, chances of no steady state by rate; and the
+    certificate."""
 
     quantiles: Mapping[str, tuple[float, float, float]]
     chances: Mapping[float, float]
@@ -400,23 +419,28 @@ class _Report:
     distrust: str = ""
 
 
-def _certified(
-    model: _Model, prior: Prior, rates: Sequence[float]
-) -> tuple[Quadrature, Marginal, _Report]:
-    """The smallest grid whose answer a second, shifted grid repeats; the largest one, distrusted, if none does."""
+def _certified(model: _Model, prior: Prior, rates: Sequence[float]) -> tuple[Quadrature, _Report]:
+    """The smallest grid whose answer a second, shifted grid repeats; the largest one, distrusted, if none
+    does."""
     frame = scout(Frame.of(model.volume.centre, model.volume.cov), model.scouting)
     model = replace(model, typical_per_day=_typical_per_day(frame.mean, frame.root @ frame.root.T))
+    smallest = math.sqrt(min(x.own_variance for x in model.levels))
     wide = (
         prior.vmax_log_sd > WIDEST_LOG_SD["vmax"]
         or prior.km_log_sd > WIDEST_LOG_SD["km"]
         or prior.volume_log_sd > WIDEST_LOG_SD["volume"]
-        or min(x.own_variance for x in model.levels) < SMALLEST_LEVEL_SD**2
+        or smallest < SMALLEST_LEVEL_SD
     )
     for n, check in SIZES[1:] if wide else SIZES:
         q = settle(frame, model.density, n=n)
-        report, marginal = _report(model, q, rates)
-        second = lay(q.frame, reach=CERTIFICATE_REACH * q.axis[-1] / 6.0, n=check, density=model.density)
-        other, _ = _report(model, second, rates)
+        if np.max(q.log_density) <= 0.5 * NOWHERE or q.effective_nodes < FEWEST_NODES:
+            contradiction = True
+            frame = q.frame
+            continue
+        contradiction = False
+        report = _report(model, q, rates)
+        second = lay(q.frame, reach=CERTIFICATE_REACH * q.axis[-1] / 7.2, n=check, density=model.density)
+        other = _report(model, second, rates)
         difference = max(
             abs(x / y - 1)
             for key, values in report.quantiles.items()
@@ -426,17 +450,25 @@ def _certified(
         reasons = []
         if not difference <= QUANTILE_TOLERANCE or not chance <= CHANCE_TOLERANCE:
             reasons.append("two independent calculations of it differ by more than 0.5 %")
-        if q.edge_mass > 100 * EDGE_MASS or q.effective_nodes <= EFFECTIVE_NODES:
+        if q.edge_mass > 10 * EDGE_MASS or q.effective_nodes <= EFFECTIVE_NODES:
             reasons.append("the calculation does not resolve the values that remain possible")
+        if smallest < EXACTEST_LEVEL_SD:
+            reasons.append("a level is taken as more exact than any calculation of its course")
         distrust = "This estimate cannot be trusted: " + " and ".join(reasons) + "." if reasons else ""
         report = replace(report, nodes=n, difference=difference, distrust=distrust)
         if not reasons:
             break
         frame = Frame.of(*q.moments()) if q.effective_nodes > EFFECTIVE_NODES else q.frame
-    return q, marginal, report
+    if contradiction:
+        raise CannotEstimate(
+            "The levels and the record contradict each other within the spread that is assumed for them.",
+            "No values of Vmax, Km and V could be found that explain all of them.",
+            "Check the doses, the times and the units; a wider spread of the levels may be right.",
+        )
+    return q, report
 
 
-def _report(model: _Model, q: Quadrature, rates: Sequence[float]) -> tuple[_Report, Marginal]:
+def _report(model: _Model, q: Quadrature, rates: Sequence[float]) -> _Report:
     marginal = vmax_marginal(q)
     a, k = q.log_vmax.ravel()[:, None], q.log_kappa.ravel()[:, None]
     weights = q.part_weights.ravel()
@@ -450,7 +482,7 @@ def _report(model: _Model, q: Quadrature, rates: Sequence[float]) -> tuple[_Repo
         for key, v in (("vmax_mg_per_day", vmax), ("km_mg_per_L", km), ("volume_L", volume))
     }
     chances = {float(r): marginal.chance_up_to(math.log(r)) for r in rates}
-    return _Report(found, chances), marginal
+    return _Report(found, chances)
 
 
 def _fit(model: _Model, q: Quadrature) -> tuple[LevelFit, ...]:
@@ -471,7 +503,8 @@ def _fit(model: _Model, q: Quadrature) -> tuple[LevelFit, ...]:
 
 
 def _left_out(model: _Model, q: Quadrature, j: int, l0: Floats) -> float:
-    """(log level - its mean from the population and the other levels) / its spread from them, over the nodes."""
+    """(log level - its mean from the population and the other levels) / its spread from them, over the
+    nodes."""
     a, k = q.log_vmax.ravel(), q.log_kappa.ravel()
     others = [i for i in range(len(model.levels)) if i != j]
     followed = q.nodes.log_density > 0.5 * NOWHERE
@@ -492,11 +525,12 @@ def _wrong_level(model: _Model, q: Quadrature) -> dict[int, float]:
     m = len(model.levels)
     per = weights.shape[1] // (m + 1) if model.spread.wrong_level_chance > 0 else weights.shape[1]
     by_part = weights.sum(axis=0).reshape(-1, per).sum(axis=1)
-    return {x.index: float(by_part[j + 1]) if len(by_part) > 1 else 0.0 for j, x in enumerate(model.levels)}
+    return {x.index: min(1.0, float(by_part[j + 1])) if len(by_part) > 1 else 0.0 for j, x in enumerate(model.levels)}
 
 
 def _log_evidence(q: Quadrature) -> float:
-    """Log of the chance density of the levels under the population, up to nothing: comparable between records."""
+    """Log of the chance density of the levels under the population, up to nothing: comparable between
+    records."""
     step = q.axis[1] - q.axis[0]
     top = float(np.max(q.log_density))
     area = step**2 * q.frame.root[0, 0] * q.frame.root[1, 1]

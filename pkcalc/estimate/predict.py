@@ -1,9 +1,8 @@
 """The level to come on the record's own clock: from the draws of an estimate, and from what was really taken.
 
-A level that lay off the record's course because of missed doses says something about the drug still in the body.
-So for every draw the doubtful doses are first learned from the levels (they are normal given the draw), then
-carried to the times asked for, together with the doubt about the doses still to come.
-"""
+A level that lay off the record's course because of missed doses says something about the drug still in the
+body. So for every draw the doubtful doses are first learned from the levels (they are normal given the draw),
+then carried to the times asked for, together with the doubt about the doses still to come."""
 
 from __future__ import annotations
 
@@ -39,10 +38,10 @@ def predicted_levels(
 ) -> Floats:
     """True level [mg/L, working basis] at each time for every draw of the estimate; shape (draws, times).
 
-    record, levels, spread: as given to `from_record`. following: doses planned after the record. The doses that
-    follow are doubted as much as `spread` says for their days (give it as periods where dosing will be observed).
-    times_day: at or after the record's start. first_order_per_day: the population's parallel path, if any.
-    """
+    record, levels, spread: as given to `from_record`. following: doses planned after the record. The doses
+    that follow are doubted as much as `spread` says for their days (give it as periods where dosing will be
+    observed). times_day: at or after the record's start. first_order_per_day: the population's parallel path,
+    if any."""
     assert estimate.volume_L is not None, "a whole-record estimate carries a volume"
     whole = replace(record, doses=(*record.doses, *following))
     full = with_population_path(written_out(whole), first_order_per_day)
@@ -96,7 +95,8 @@ def _widened(s: Floats, error: Floats, spread: RecordSpread, toss: Floats) -> Fl
 def _hidden_levels(
     s: Floats, error: Floats, censored: Sequence[str | None], noise: np.random.Generator
 ) -> Floats:
-    """The error of every censored level, drawn beyond its limit given the measured ones and the earlier of them."""
+    """The error of every censored level, drawn beyond its limit given the measured ones and the earlier of
+    them."""
     if not any(censored):
         return error
     from scipy.special import ndtr, ndtri
