@@ -22,6 +22,7 @@ import numpy as np
 from pkcalc import formulas, kinetics, units
 from pkcalc.drugs.profile import load_profile
 from pkcalc.errors import CannotEstimate, CaseError, DrugFileError, PkcalcError
+from pkcalc.site import no_site
 from pkcalc.sources import source
 from pkcalc.units import Q
 
@@ -253,17 +254,9 @@ def _product_volume(v: Values) -> Values:
 
 
 def _rate_cap(v: Values) -> Values:
-    loading = load_profile(v["drug"]).loading
-    assert loading is not None
-    for cap in loading.rate_caps:
-        if cap.form == v["form"] and cap.group == v["group"]:
-            scaled = cap.highest_mg_per_kg_min
-            flat = cap.mg_per_min
-            return {
-                "rate": 1440
-                * (flat if scaled is None or "weight" not in v else min(flat, scaled * v["weight"]))
-            }
-    raise CaseError(())
+    cap = no_site().rate_cap(load_profile(v["drug"]), v["form"], v["group"])
+    assert cap is not None
+    return {"rate": 1440 * cap.mg_per_min, "rate_per_weight": 1440 * (cap.mg_per_kg_min or 0.0)}
 
 
 def _load(v: Values) -> Values:
@@ -391,7 +384,11 @@ CALLS: dict[str, Call] = {
     "product_volume": Call(
         {"drug": "word", "product": "word", "amount": "amount"}, {"volume": "volume"}, _product_volume
     ),
-    "rate_cap": Call({"drug": "word", "form": "word", "group": "word"}, {"rate": "dose rate"}, _rate_cap),
+    "rate_cap": Call(
+        {"drug": "word", "form": "word", "group": "word"},
+        {"rate": "dose rate", "rate_per_weight": "dose rate per weight"},
+        _rate_cap,
+    ),
     "load": Call(
         {
             "present": "level",
