@@ -69,8 +69,18 @@ class Asked:
 
 
 def _beside(asked: Asked, key: str) -> None:
-    for problem in asked.problems.get(key, ()):
-        look.beside(problem.text, needed=not text(asked.values, key))
+    """The place below a field, always there: were it to come and go, the fields after it would be drawn anew
+    and the one in use would lose the keyboard."""
+    with st.container():
+        for problem in asked.problems.get(key, ()):
+            look.beside(problem.text, needed=not text(asked.values, key))
+
+
+def _echo(text: str | None, kind: str = "echo") -> None:
+    """The place where a line is said back, always there for the same reason."""
+    with st.container():
+        if text:
+            look.say(text, kind)
 
 
 def field(asked: Asked, label: str, key: str, *, most: int = 120, **more: Any) -> None:
@@ -118,12 +128,15 @@ def question(asked: Asked, key: str) -> None:
     """One context question; silence stays 'not stated'."""
     st.radio(QUESTIONS[key], ANSWERS, index=None, horizontal=True, key=f"ctx.{key}")
     _beside(asked, f"ctx.{key}")
-    if key in WITH_DETAIL and text(asked.values, f"ctx.{key}") == "yes":
-        left, right = st.columns(2)
-        with left:
-            field(asked, "Since when (date)", f"ctx.{key}.since")
-        with right:
-            field(asked, "What exactly", f"ctx.{key}.detail")
+    if key not in WITH_DETAIL:
+        return
+    with st.container():
+        if text(asked.values, f"ctx.{key}") == "yes":
+            left, right = st.columns(2)
+            with left:
+                field(asked, "Since when (date)", f"ctx.{key}.since")
+            with right:
+                field(asked, "What exactly", f"ctx.{key}.detail")
 
 
 # --- 1 How is the patient? -------------------------------------------------------------------------------
@@ -219,7 +232,7 @@ def _remove_row(kind: str, row: int) -> None:
 
 def _row_head(kind: str, row: int, title: str, alone: bool) -> None:
     left, right = st.columns([4, 1], vertical_alignment="center")
-    left.html(f'<h3 class="pk-group">{title}</h3>')
+    left.html(f'<h2 class="pk-group">{title}</h2>')
     if not alone:
         right.button(
             "Remove",
@@ -265,8 +278,7 @@ def doses(asked: Asked, echoes: Mapping[int, str]) -> None:
                 field(asked, "Last dose; empty if it goes on", f"dose.{row}.until", help=DATES)
             with three:
                 choice(asked, "Who gives the doses?", f"dose.{row}.given_by", ("nurse", "carer", "self"))
-            if row in echoes:
-                look.say(echoes[row], "echo")
+            _echo(echoes.get(row))
             with st.expander("More about this line", expanded=False, key=f"dose-more-{row}"):
                 one, two = st.columns(2, gap="medium")
                 with one:
@@ -290,10 +302,9 @@ def doses(asked: Asked, echoes: Mapping[int, str]) -> None:
                         f"dose.{row}.missed",
                         most=2000,
                     )
-            for key in ("source", "confirmed", "for_about", "missed"):
-                if asked.problems.get(f"dose.{row}.{key}"):
-                    look.say("Something under 'More about this line' needs mending.", "wrong")
-                    break
+            hidden = ("source", "confirmed", "for_about", "missed")
+            wrong = any(asked.problems.get(f"dose.{row}.{name}") for name in hidden)
+            _echo("Something under 'More about this line' needs mending." if wrong else None, "wrong")
     st.button("Add a dose line", key="add-dose", on_click=_add_row, args=("dose",))
     with st.expander("Paste single doses from a spreadsheet", expanded=False, key="paste"):
         look.say(
@@ -303,13 +314,14 @@ def doses(asked: Asked, echoes: Mapping[int, str]) -> None:
         )
         choice(asked, "Form of all pasted doses", "pasted_form", forms, words)
         st.text_area("Pasted rows", key="pasted", max_chars=60_000, height=160)
-        problems = asked.problems.get("pasted", ())
-        for problem in problems[:6]:
-            look.beside(problem.text, needed=False)
-        if len(problems) > 6:
-            look.beside(f"and {len(problems) - 6} more like these.", needed=False)
-        if asked.entry.pasted and not problems:
-            look.say(f"{asked.entry.pasted} single doses read.", "echo")
+        with st.container():
+            problems = asked.problems.get("pasted", ())
+            for problem in problems[:6]:
+                look.beside(problem.text, needed=False)
+            if len(problems) > 6:
+                look.beside(f"and {len(problems) - 6} more like these.", needed=False)
+            if asked.entry.pasted and not problems:
+                look.say(f"{asked.entry.pasted} single doses read.", "echo")
 
 
 def doses_sentence(asked: Asked, echoes: Mapping[int, str]) -> str:
@@ -353,8 +365,9 @@ def levels(asked: Asked, worth: Mapping[int, Sequence[str]]) -> None:
                     lines,
                     {n: f"dose line {n}" for n in lines},
                 )
-            for sentence in worth.get(row, ()):
-                look.say(sentence, "echo")
+            with st.container():
+                for sentence in worth.get(row, ()):
+                    look.say(sentence, "echo")
             with st.expander("More about this level", expanded=False, key=f"level-more-{row}"):
                 one, two = st.columns(2, gap="medium")
                 with one:
@@ -369,10 +382,11 @@ def levels(asked: Asked, worth: Mapping[int, Sequence[str]]) -> None:
                 with two:
                     choice(asked, "Tube", f"level.{row}.sample", ("serum", "plasma", "gel tube"))
                     field(asked, "If normalised: by whom", f"level.{row}.normalised_by")
-            for key in ("albumin", "valproate", "normalised_by"):
-                if asked.problems.get(f"level.{row}.{key}"):
-                    look.say("Something under 'More about this level' needs mending.", "wrong")
-                    break
+            wrong = any(
+                asked.problems.get(f"level.{row}.{name}")
+                for name in ("albumin", "valproate", "normalised_by")
+            )
+            _echo("Something under 'More about this level' needs mending." if wrong else None, "wrong")
     st.button("Add a level", key="add-level", on_click=_add_row, args=("level",))
 
 
@@ -417,10 +431,9 @@ def own(asked: Asked, echoes: Mapping[int, str]) -> None:
             )
         with right:
             choice(asked, f"Product form and salt of regimen {place}", f"own.{row}.form", forms, words)
-        if row in asked.entry.assumed:
-            look.say(f"{asked.entry.assumed[row]} Write other times if they differ.", "hint")
-        if row in echoes:
-            look.say(echoes[row], "echo")
+        assumed = asked.entry.assumed.get(row)
+        _echo(f"{assumed} Write other times if they differ." if assumed else None, "hint")
+        _echo(echoes.get(row))
     st.button("Add another regimen of your own", key="add-own", on_click=_add_row, args=("own",))
 
 

@@ -71,8 +71,11 @@ def site() -> Site:
 def page() -> None:
     st.set_page_config(page_title="pkcalc", layout="centered")
     st.html(look.ASSETS / "look.css")
-    if st.context.theme.type == "dark":
-        st.html(look.ASSETS / "dark.css")
+    script = (look.ASSETS / "page.js").read_text(encoding="utf-8")
+    st.html(f"<script>{script}</script>", unsafe_allow_javascript=True)
+    with st.container():
+        if st.context.theme.type == "dark":
+            st.html(look.ASSETS / "dark.css")
     try:
         _page()
     except Exception as error:
@@ -94,8 +97,9 @@ def _page() -> None:
     asked = _asked(values, entry, outcome)
     demonstration = entry.file.demonstration is not None
 
-    if demonstration:
-        tell.watermark()
+    with st.container():
+        if demonstration:
+            tell.watermark()
     with st.container(key="opening"):
         _opening(demonstration)
     with st.container(key="pinned"):
@@ -141,7 +145,8 @@ def _result(outcome: Outcome, asked: Asked, show: Callable[[Consult], None]) -> 
             look.say(outcome.refused, "wrong")
         elif outcome.consult is not None:
             with _guarded():
-                look.say(tell.inputs_line(outcome.consult), "hint")
+                if show in (tell.estimate, tell.candidates):
+                    look.say(tell.inputs_line(outcome.consult), "hint")
                 show(outcome.consult)
         else:
             tell.not_yet([p.text for p in outcome.problems])

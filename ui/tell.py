@@ -126,7 +126,7 @@ def worth(consult: Consult) -> list[str]:
     found = []
     for o in consult.observations:
         said = f"{o.name}: {o.level.typed.text} {o.level.kind}"
-        if not o.usable:
+        if not o.readable:
             low, high = show_number(o.low_mg_per_L), show(o.high_mg_per_L, "mg/L")
             said += f", no single reading: {low} to {high} possible"
         elif o.working_mg_per_L != o.level.reported_mg_per_L:
@@ -255,7 +255,7 @@ def next_look(consult: Consult) -> None:
 
 def note(consult: Consult) -> None:
     text = render(compose(consult))
-    st.code(text, language=None, wrap_lines=False)
+    st.html(f'<pre class="pk-note" role="region" aria-label="Note" tabindex="0">{escape(text)}</pre>')
     name = "demonstration" if consult.case.demonstration else "consult"
     left, middle, right = st.columns(3)
     left.download_button(

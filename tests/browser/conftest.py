@@ -7,7 +7,7 @@ import subprocess
 import sys
 import time
 import urllib.request
-from collections.abc import Iterator
+from collections.abc import Callable, Iterator
 from importlib.util import find_spec
 from pathlib import Path
 
@@ -15,7 +15,7 @@ import pytest
 
 playwright_api = pytest.importorskip("playwright.sync_api")
 
-from playwright.sync_api import Browser, Page, Route, sync_playwright  # noqa: E402
+from playwright.sync_api import Browser, Route, sync_playwright  # noqa: E402
 
 CHROMIUM = "/usr/bin/chromium"
 FLAGS = [
@@ -90,45 +90,103 @@ def browser() -> Iterator[Browser]:
         found.close()
 
 
-@pytest.fixture(scope="session")
-def strangers() -> list[str]:
-    """Every address outside this machine that a page asked for."""
-    return []
+class Visit:
+    """One person at one browser: what they type, choose and see."""
 
+    def __init__(self, browser: Browser, address: str, width: int, height: int, dark: bool) -> None:
+        self.strangers: list[str] = []
+        self.context = browser.new_context(
+            viewport={"width": width, "height": height},
+            color_scheme="dark" if dark else "light",
+            accept_downloads=True,
+        )
+        self.context.route("**/*", self._only_here)
+        self.address = address
+        self.page = self.context.new_page()
+        self.page.goto(address)
+        self.ready()
 
-def open_page(
-    browser: Browser,
-    address: str,
-    strangers: list[str],
-    *,
-    width: int = 1440,
-    height: int = 1000,
-    dark: bool = False,
-) -> Page:
-    """A new browser session on the page, with everything outside this machine cut off."""
-    context = browser.new_context(
-        viewport={"width": width, "height": height},
-        color_scheme="dark" if dark else "light",
-        accept_downloads=True,
-    )
-    page = context.new_page()
-
-    def only_here(route: Route) -> None:
-        url = route.request.url
-        if url.startswith((address, "data:", "blob:")):
+    def _only_here(self, route: Route) -> None:
+        """No network: whatever is asked from elsewhere is cut off and remembered."""
+        if route.request.url.startswith((self.address, "data:", "blob:")):
             route.continue_()
         else:
-            strangers.append(url)
+            self.strangers.append(route.request.url)
             route.abort()
 
-    context.route("**/*", only_here)
-    page.goto(address)
-    page.get_by_label("Why was the level drawn").wait_for(timeout=20_000)
-    return page
+    def ready(self) -> None:
+        self.page.get_by_label("Why was the level drawn").wait_for(timeout=20_000)
+
+    def settle(self) -> None:
+        """Wait until the server has answered and the page stands still."""
+        self.page.wait_for_function(
+            """() => { const a = document.querySelector('[data-testid="stApp"]');
+                return a && a.getAttribute('data-test-script-state') === 'notRunning'
+                    && !document.body.classList.contains('pk-typing'); }"""
+        )
+
+    def type(self, label: str, value: str, place: int = 0) -> None:
+        field = self.page.get_by_label(label, exact=True).nth(place)
+        field.fill(value)
+        field.press("Tab")
+
+    def choose(self, label: str, option: str, place: int = 0) -> None:
+        self.page.get_by_role("combobox", name=label).nth(place).click()
+        self.page.get_by_role("option", name=option, exact=True).click()
+
+    def press(self, name: str, place: int = 0) -> None:
+        self.page.get_by_role("button", name=name).nth(place).click()
+
+    def text(self) -> str:
+        self.settle()
+        return " ".join(self.page.locator("[data-testid=stMain]").inner_text().split())
+
+    def open_demonstration(self, title: str) -> None:
+        self.page.get_by_text("Open a demonstration or a case file").click()
+        self.choose("Demonstration", title)
+        self.press("Open it")
+        self.page.get_by_text("DEMONSTRATION - invented").first.wait_for()
+        self.settle()
+
+    def enter_pair(
+        self, first: str, second: str, *, unit: str = "mg/L", form: str = "phenytoin sodium"
+    ) -> None:
+        """300 and 350 mg daily with two steady levels, no dates."""
+        self.press("Add a dose line")
+        self.press("Add a level")
+        self.page.get_by_text("Level 2", exact=True).wait_for()
+        for place, (dose, level) in enumerate((("300 mg daily", first), ("350 mg daily", second))):
+            self.type("Dose, with its unit and how often", dose, place)
+            self.choose("Product form and salt", form, place)
+            self.type("Level as reported", level, place)
+            self.choose("Unit of the level", unit, place)
+            self.choose("What was measured?", "total", place)
+            self.choose("Dose line in force", f"dose line {place + 1}", place)
+        self.settle()
+
+    def shoot(self, name: str, height: int = 4500) -> Path:
+        """A picture of the whole page: the page scrolls inside its own box, so the window is made tall."""
+        SHOTS.mkdir(exist_ok=True)
+        size = self.page.viewport_size
+        assert size is not None
+        self.page.set_viewport_size({"width": size["width"], "height": height})
+        self.settle()
+        path = SHOTS / f"{name}.png"
+        self.page.screenshot(path=path)
+        self.page.set_viewport_size(size)
+        return path
 
 
 @pytest.fixture
-def page(browser: Browser, address: str, strangers: list[str]) -> Iterator[Page]:
-    found = open_page(browser, address, strangers)
-    yield found
-    found.context.close()
+def visit(browser: Browser, address: str) -> Iterator[Callable[..., Visit]]:
+    """Opens a new session of the page; all are closed afterwards and none may have asked another machine."""
+    opened: list[Visit] = []
+
+    def start(*, width: int = 1440, height: int = 1000, dark: bool = False) -> Visit:
+        opened.append(Visit(browser, address, width, height, dark))
+        return opened[-1]
+
+    yield start
+    for one in opened:
+        one.context.close()
+    assert [url for one in opened for url in one.strangers] == []
