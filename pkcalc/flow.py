@@ -23,7 +23,7 @@ from numpy.typing import ArrayLike, NDArray
 from pkcalc import formulas
 from pkcalc.errors import CaseError, Problem
 from pkcalc.periodic import PeriodicState, periodic
-from pkcalc.record import Absorption, Before, Dose, FirstOrder, Record, Repeated, duplicates
+from pkcalc.record import Absorption, Before, Dose, FirstOrder, Record, Repeated, duplicates, with_absorption
 from pkcalc.stepping import BLOCK, Accuracy, Floats, Plan, Speed, Step, march, plan_steps, run, speeds
 
 __all__ = [
@@ -43,6 +43,7 @@ __all__ = [
     "periodic",
     "sensitivity",
     "step_error",
+    "with_absorption",
 ]
 
 Positions = NDArray[np.intp]
@@ -62,6 +63,7 @@ def amounts(
     accuracy: Accuracy = "everyday",
     start_mg: ArrayLike | None = None,
     typical_per_day: float | None = None,
+    absorption_factor: ArrayLike = 1.0,
 ) -> Floats:
     """Amount in the body [mg] at each time, for every draw; shape (draws, times).
 
@@ -69,14 +71,30 @@ def amounts(
     numbers, > 0. volume_L: needed only where a first-order path is given as a clearance. start_mg: amount
     at the record's start, in place of what the record says. accuracy: largest relative error about 3e-3
     (everyday), 4e-5 (fine), 2e-7 (finest). typical_per_day: 99 % point of Vmax/kappa, which sets the steps;
-    of the draws themselves unless given (nodes of a grid are not equally likely). Raises CaseError for times
-    before the start and parameters that are not positive.
+    of the draws themselves unless given (nodes of a grid are not equally likely). absorption_factor: per
+    draw, by what the absorption rates of all forms are multiplied; draws with the same factor share a pass,
+    so give a few distinct values. Raises CaseError for times before the start and parameters that are not
+    positive.
     """
     times = _times(record, times_day)
     vmax, kappa = _parameters(vmax_mg_per_day, kappa_mg)
+    factor = np.broadcast_to(
+        _parameters(absorption_factor, 1.0, names=("Absorption factor", ""))[0], vmax.shape
+    )
     rates = _path_rates(record, volume_L, vmax)
-    start = _start(record, vmax, kappa, rates, accuracy, start_mg, typical_per_day)
-    return _walk(record, times, vmax, kappa, rates, start, accuracy, typical_per_day)
+    out = np.empty((len(vmax), len(times)))
+    for one in np.unique(factor):
+        some = np.flatnonzero(factor == one)
+        scaled = with_absorption(record, float(one))
+        part = [rate[some] for rate in rates]
+        given = (
+            None
+            if start_mg is None
+            else np.broadcast_to(np.asarray(start_mg, dtype=np.float64), vmax.shape)[some]
+        )
+        start = _start(scaled, vmax[some], kappa[some], part, accuracy, given, typical_per_day)
+        out[some] = _walk(scaled, times, vmax[some], kappa[some], part, start, accuracy, typical_per_day)
+    return out
 
 
 def levels(
@@ -89,6 +107,7 @@ def levels(
     start_mg_per_L: ArrayLike | None = None,
     accuracy: Accuracy = "everyday",
     typical_per_day: float | None = None,
+    absorption_factor: ArrayLike = 1.0,
 ) -> Floats:
     """Level [mg/L] at each time, for every draw; shape (draws, times). As `amounts`, divided by the
     volume."""
@@ -103,6 +122,7 @@ def levels(
         accuracy=accuracy,
         start_mg=start,
         typical_per_day=typical_per_day,
+        absorption_factor=absorption_factor,
     )
     return amount / (volume[:, None] if len(volume) == len(amount) else volume)
 

@@ -10,7 +10,7 @@ from __future__ import annotations
 import math
 from collections import defaultdict
 from collections.abc import Iterator
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 from pkcalc.errors import CaseError, Problem
 
@@ -239,6 +239,25 @@ class Record:
                     )
                 )
         _raise(found)
+
+
+def with_absorption(record: Record, factor: float) -> Record:
+    """The record with the absorption rates of all its forms (also before it starts) times a factor."""
+    if factor == 1.0:
+        return record
+
+    def changed(doses: tuple[Dose, ...]) -> tuple[Dose, ...]:
+        return tuple(
+            replace(d, absorption=replace(d.absorption, ka_per_day=d.absorption.ka_per_day * factor))
+            if d.absorption
+            else d
+            for d in doses
+        )
+
+    before = record.before
+    if before is not None:
+        before = replace(before, regimen=replace(before.regimen, doses=changed(before.regimen.doses)))
+    return replace(record, doses=changed(record.doses), before=before)
 
 
 def duplicates(record: Record) -> tuple[tuple[int, ...], ...]:

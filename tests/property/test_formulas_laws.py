@@ -7,7 +7,7 @@ import math
 import mpmath as mp
 import numpy as np
 import pytest
-from hypothesis import given
+from hypothesis import given, settings
 from hypothesis import strategies as st
 from scipy.integrate import quad
 
@@ -80,6 +80,7 @@ def test_level_after_against_120_digits(t: float, c0: float, share: float, v: fl
     assert error <= 8 * EPS * (1 + condition), (ours, exact, condition)
 
 
+@settings(max_examples=40)
 @given(times, levels, shares, vmaxes, kms, clearances)
 def test_mass_balance(t: float, c0: float, share: float, v: float, km: float, k: float) -> None:
     """What came in is what is there plus what went: by quadrature of the elimination along the course."""
@@ -224,6 +225,26 @@ def test_area_against_the_textbook_form(t: float, c0: float, share: float, v: fl
         else:
             exact = ((c0_**2 - c**2) / 2 + km_ * (c0_ + r_ * t_ - c)) / (v_ - r_)
     assert math.isclose(ours, float(exact), rel_tol=1e-12)
+
+
+@settings(max_examples=40)
+@given(log_uniform(1e-2, 30), levels, shares, vmaxes, kms, log_uniform(1e-3, 30))
+def test_area_with_a_linear_path_by_quadrature(
+    t: float, c0: float, share: float, v: float, km: float, k: float
+) -> None:
+    one = way(c0, share * v, v, km)
+    if (v / km + k) * t > 50 or c0 == share == 0:
+        return
+    ours = f.auc(time_day=t, linear_clearance_L_per_day=k, **one)
+    area, _ = quad(
+        lambda s: float(f.level_after(time_day=s, linear_clearance_L_per_day=k, **one)),
+        0,
+        t,
+        epsabs=0,
+        epsrel=1e-9,
+        limit=200,
+    )
+    assert math.isclose(float(ours), area, rel_tol=1e-7)
 
 
 @given(st.floats(0, 0.9999), vmaxes, kms)

@@ -261,6 +261,23 @@ def test_self_check_reports_the_step_error() -> None:
     assert flow.step_error(Record((Dose(0.0, 500.0),)), times, vmax, kappa) <= 1e-13
 
 
+def test_absorption_may_differ_between_draws() -> None:
+    regimen = Repeated(1.0, (Dose(0.0, 300.0, absorption=PROMPT),))
+    record = Record((Dose(0.2, 300.0, absorption=PROMPT),), before=Before(regimen, 90.0))
+    vmax = np.array([500.0, 600.0, 500.0, 700.0])
+    factors = np.array([1.0, 0.5, 2.0, 0.5])
+    found = flow.levels(record, [0.3, 1.0], vmax, KM, V, absorption_factor=factors, typical_per_day=4.0)
+    for draw, factor in enumerate(factors):
+        form = Absorption(11.0 * factor)
+        own = Record(
+            (Dose(0.2, 300.0, absorption=form),),
+            before=Before(Repeated(1.0, (Dose(0.0, 300.0, absorption=form),)), 90.0),
+        )
+        alone = flow.levels(own, [0.3, 1.0], vmax[draw], KM, V, typical_per_day=4.0)[0]
+        assert np.allclose(found[draw], alone, rtol=1e-12)
+    assert not np.allclose(found[0], found[2], rtol=1e-2)
+
+
 def test_one_draw_many_draws_and_blocks_agree() -> None:
     doses = tuple(Dose(i / 3, 100.0, absorption=PROMPT) for i in range(6))
     vmax = np.linspace(300, 900, 5000)

@@ -244,3 +244,81 @@ def test_formulas_broadcast_and_keep_single_numbers_single() -> None:
     level = f.steady_state_level(dose_rate_mg_per_day=rates, vmax_mg_per_day=[400.0, 500.0], km_mg_per_L=4.0)
     assert level.shape == (3, 2)
     assert np.ndim(f.steady_state_level(dose_rate_mg_per_day=200.0, **PATIENT)) == 0
+
+
+#: Powers of (mass, volume, time) that the endings of names stand for.
+DIMENSIONS = {
+    "_mg_per_day": (1, 0, -1),
+    "_mg_per_L": (1, -1, 0),
+    "_L_per_day": (0, 1, -1),
+    "_mg": (1, 0, 0),
+    "_L": (0, 1, 0),
+    "_day": (0, 0, 1),
+}
+#: What each formula returns, in the same powers, and its arguments without a dimension.
+RESULTS: dict[str, tuple[tuple[int, int, int], dict[str, float]]] = {
+    "steady_state_level": ((1, -1, 0), {}),
+    "dose_rate_for_level": ((1, 0, -1), {}),
+    "sensitivity_at": ((0, 0, 0), {}),
+    "sensitivity_with_linear_path": ((0, 0, 0), {}),
+    "clearance_at_level": ((0, 1, -1), {}),
+    "vmax_from_level": ((1, 0, -1), {}),
+    "level_after": ((1, -1, 0), {}),
+    "auc": ((1, -1, 1), {}),
+    "time_to_level": ((0, 0, 1), {}),
+    "time_to_fraction": ((0, 0, 1), {"fraction": 0.9}),
+    "time_to_fall": ((0, 0, 1), {}),
+    "active_amount": ((1, 0, 0), {"salt_factor": 0.92, "bioavailability": 0.8}),
+    "level_rise": ((1, -1, 0), {"salt_factor": 0.92, "bioavailability": 0.8}),
+    "top_up_amount": ((1, 0, 0), {"salt_factor": 0.92, "bioavailability": 0.8}),
+    "chance_of_inadmissible_pair": ((0, 0, 0), {"log_sd1": 0.2, "log_sd2": 0.1}),
+}
+VALUES = {
+    "dose_rate_mg_per_day": 300.0,
+    "vmax_mg_per_day": 400.0,
+    "km_mg_per_L": 4.0,
+    "linear_clearance_L_per_day": 3.0,
+    "level_mg_per_L": 9.0,
+    "start_mg_per_L": 9.0,
+    "end_mg_per_L": 5.0,
+    "present_mg_per_L": 5.0,
+    "aim_mg_per_L": 15.0,
+    "volume_L": 50.0,
+    "time_day": 2.5,
+    "amount_mg": 700.0,
+    "rate1_mg_per_day": 250.0,
+    "level1_mg_per_L": 8.0,
+    "rate2_mg_per_day": 300.0,
+    "level2_mg_per_L": 12.0,
+}
+
+
+def dimension_of(name: str) -> tuple[int, int, int]:
+    return next(powers for ending, powers in DIMENSIONS.items() if name.endswith(ending))
+
+
+@pytest.mark.parametrize("name", sorted(RESULTS))
+def test_dimensions(name: str) -> None:
+    """In other units of mass, volume and time the same thing comes out: every term of a formula has its dimension."""
+    result, plain = RESULTS[name]
+    formula = getattr(f, name)
+    arguments = {n: VALUES[n] for n in inspect.signature(formula).parameters if n not in plain}
+    if name == "time_to_level":
+        arguments["dose_rate_mg_per_day"] = 100.0
+    base = formula(**arguments, **plain)
+    assert np.isfinite(base)
+    units = (3.7, 0.29, 11.3)
+
+    def factor(powers: tuple[int, int, int]) -> float:
+        return math.prod(u**p for u, p in zip(units, powers, strict=True))
+
+    changed = {n: v * factor(dimension_of(n)) for n, v in arguments.items()}
+    assert math.isclose(formula(**changed, **plain), base * factor(result), rel_tol=1e-12)
+
+
+def test_dimensions_of_the_two_levels() -> None:
+    pair = {n: VALUES[n] for n in inspect.signature(f.two_level).parameters}
+    base = f.two_level(**pair)
+    changed = f.two_level(**{n: v * (7.0 if n.startswith("rate") else 0.3) for n, v in pair.items()})
+    assert changed.vmax_mg_per_day == pytest.approx(7.0 * base.vmax_mg_per_day, rel=1e-12)
+    assert changed.km_mg_per_L == pytest.approx(0.3 * base.km_mg_per_L, rel=1e-12)
