@@ -322,12 +322,12 @@ class Limits:
 class Sampling:
     """How long after a dose a level may be drawn, how long before a change shows, how often under infusion.
 
-    None where the route does not apply to the drug.
+    0 where the drug file states no wait for the route.
     """
 
-    after_iv_h: float | None
-    after_im_h: float | None
-    after_oral_load_h: float | None
+    after_iv_h: float
+    after_im_h: float
+    after_oral_load_h: float
     steady_wait_days: tuple[float, float]
     repeat_h: tuple[float, float] | None
 
@@ -1345,9 +1345,9 @@ def _limits(t: Table, forms: Mapping[str, Form]) -> Limits:
 
 def _sampling(t: Table) -> Sampling:
     found = Sampling(
-        after_iv_h=t.maybe("after_iv", "interval"),
-        after_im_h=t.maybe("after_im", "interval"),
-        after_oral_load_h=t.maybe("after_oral_load", "interval"),
+        after_iv_h=t.maybe("after_iv", "interval") or 0.0,
+        after_im_h=t.maybe("after_im", "interval") or 0.0,
+        after_oral_load_h=t.maybe("after_oral_load", "interval") or 0.0,
         steady_wait_days=t.span("steady_wait", "duration"),
         repeat_h=t.span("repeat", "interval") if t.has("repeat") else None,
     )

@@ -585,6 +585,8 @@ def test_the_template_can_be_read() -> None:
     assert prior.first_order_log_sd == pytest.approx(log_sd(0.3))
     assert found.dialysis_L_per_day == pytest.approx((144, 172.8, 345.6))
     assert found.time_unit == "h"
+    assert (found.sampling.after_iv_h, found.sampling.after_im_h) == (1, 0)
+    assert found.sampling.repeat_h == (1, 2)
 
 
 def test_the_template_is_no_drug() -> None:
