@@ -23,7 +23,17 @@ from numpy.typing import ArrayLike, NDArray
 from pkcalc import formulas
 from pkcalc.errors import CaseError, Problem
 from pkcalc.periodic import PeriodicState, periodic
-from pkcalc.record import Absorption, Before, Dose, FirstOrder, Record, Repeated, duplicates, with_absorption
+from pkcalc.record import (
+    SAME_MOMENT_DAY,
+    Absorption,
+    Before,
+    Dose,
+    FirstOrder,
+    Record,
+    Repeated,
+    duplicates,
+    with_absorption,
+)
 from pkcalc.stepping import BLOCK, Accuracy, Floats, Plan, Speed, Step, march, plan_steps, run, speeds
 
 __all__ = [
@@ -542,6 +552,7 @@ def _fastest(vmax: Floats, kappa: Floats, rates: Sequence[Floats]) -> Floats:
 
 def _times(record: Record, times_day: ArrayLike) -> tuple[float, ...]:
     times = np.atleast_1d(np.asarray(times_day, dtype=np.float64)).ravel()
+    times = np.where(np.abs(times - record.start_day) <= SAME_MOMENT_DAY, record.start_day, times)
     bad = times[~(np.isfinite(times) & (times >= record.start_day))]
     if bad.size:
         raise CaseError(

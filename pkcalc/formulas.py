@@ -450,7 +450,7 @@ def level_after(
         C = C0 e^-z + r Km q (1 - e^-z)/z        t = Km q + C0 q (1 - e^-z)/z + r Km q^2 (z - 1 + e^-z)/z^2
 
     time_day >= 0, start_mg_per_L >= 0. Holds below, at and above Vmax. Returns the level [mg/L].
-    Example: without dosing from C0 = 1.01 Km down it follows C0 - C + Km ln(C0/C) = Vmax t/V.
+    Example: without dosing it follows C0 - C + Km ln(C0/C) = Vmax t/V.
     Derived for this project (equivalent to the Lambert-W solution, without its loss of digits).
     """
     t, c0, rate, vmax, km, volume, cl = _arrays(

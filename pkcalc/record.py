@@ -14,6 +14,9 @@ from dataclasses import dataclass, replace
 
 from pkcalc.errors import CaseError, Problem
 
+#: Times closer than this (0.1 millisecond) are one moment: rounding must not split a dose from its level.
+SAME_MOMENT_DAY = 1e-9
+
 
 def _plain(value: float) -> str:
     return f"{value:.10g}" if math.isfinite(value) else "no finite number"
@@ -229,7 +232,9 @@ class Record:
             )
         for number, dose in enumerate(self.doses, 1):
             found += dose.problems(f"Dose {number}")
-            if dose.time_day < self.start_day and (self.start_mg is None or self.before is not None):
+            if dose.time_day < self.start_day - SAME_MOMENT_DAY and (
+                self.start_mg is None or self.before is not None
+            ):
                 found.append(
                     Problem(
                         f"Dose {number}, time",

@@ -23,14 +23,13 @@ import numpy as np
 from numpy.typing import NDArray
 
 from pkcalc import formulas
-from pkcalc.record import Dose, FirstOrder
+from pkcalc.record import SAME_MOMENT_DAY, Dose, FirstOrder
 
 Floats = NDArray[np.float64]
 Accuracy = Literal["everyday", "fine", "finest"]
 
-#: Times closer than this are one moment (0.1 millisecond): clock arithmetic must not split a dose from its
-#: level.
-SAME_MOMENT_DAY = 1e-9
+#: An infusion or a release shorter than this (0.1 second) is taken up at once.
+AT_ONCE_DAY = 1e-6
 
 #: Draws per block: every array of a block then stays in the processor's second-level cache.
 BLOCK = 2048
@@ -137,16 +136,18 @@ def plan_steps(
         members = tuple(i for i, (a, b) in enumerate(windows) if a <= dose.time_day < b)
         form = dose.absorption
         begin = dose.time_day + (form.lag_day if form else 0.0)
+        if abs(begin - start_day) <= SAME_MOMENT_DAY:
+            begin = start_day
         if begin >= last:
             continue
-        if form is None and dose.duration_day == 0:
+        if form is None and dose.duration_day < AT_ONCE_DAY:
             if begin >= start_day:
                 pushes[begin].append((dose.amount_mg, members))
                 marks.add(begin)
             continue
         stream = stream_for(form.ka_per_day if form else None, members)
         spread = form.release_day if form else dose.duration_day
-        if spread == 0:
+        if spread < AT_ONCE_DAY:
             amount = dose.amount_mg
             if begin < start_day:
                 amount *= math.exp(-stream.ka * (start_day - begin)) if stream.ka else 1.0
