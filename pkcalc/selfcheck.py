@@ -287,6 +287,36 @@ def _molar(v: Values) -> Values:
     }
 
 
+def _straight_line(v: Values) -> Values:
+    from pkcalc.estimate.lines import straight_line
+
+    found = straight_line(v["line"], level=v["levels"], rate=v["rates"])
+    return {"vmax": float(found.vmax), "km": float(found.km)}
+
+
+def _direct_linear(v: Values) -> Values:
+    """Every crossing at its face value, as the published examples take them."""
+    from pkcalc.estimate.lines import crossings
+
+    found = crossings(level=v["levels"], rate=v["rates"], error_in="rate")
+    return {"vmax": float(np.median(found.vmax)), "km": float(np.median(found.km))}
+
+
+def _regression(v: Values) -> Values:
+    from pkcalc.estimate.regression import rate_on_level
+
+    fit = rate_on_level(level=v["levels"], rate=v["rates"])
+    return {
+        "vmax": fit.vmax,
+        "km": fit.km,
+        "km_inverse": 1.0 / fit.km,
+        "se_vmax": fit.se_vmax,
+        "se_km": fit.se_km,
+        "sigma": fit.sigma,
+    }
+
+
+_POINTS = {"levels": "number", "rates": "number"}
 _PAIR = {"rate1": "dose rate", "level1": "level", "rate2": "dose rate", "level2": "level"}
 _MM = {"vmax": "dose rate", "km": "level"}
 
@@ -404,6 +434,13 @@ CALLS: dict[str, Call] = {
     "weight_with_excess": Call(
         {"weight": "weight", "ideal": "weight", "factor": "number"}, {"weight": "weight"}, _excess_weight
     ),
+    "straight_line": Call({"line": "word", **_POINTS}, {"vmax": "number", "km": "number"}, _straight_line),
+    "direct_linear_plot": Call(_POINTS, {"vmax": "number", "km": "number"}, _direct_linear),
+    "regression": Call(
+        _POINTS,
+        dict.fromkeys(("vmax", "km", "km_inverse", "se_vmax", "se_km", "sigma"), "number"),
+        _regression,
+    ),
     "molar_level": Call({"drug": "word", "level": "level"}, {"molar": "molar"}, _molar),
 }
 
@@ -520,7 +557,7 @@ def _example(entry: dict[str, Any], file: str) -> Example:
 def _read(raw: Any, kind: str, where: str) -> Any:
     """An input as the function takes it: canonical value, array, or word."""
     if isinstance(raw, list):
-        return np.array([_read(x, kind.removesuffix(" list"), where) for x in raw])
+        return np.array([_read(x, kind, where) for x in raw])
     if not isinstance(raw, str):
         raise DrugFileError(f"{where}: not a text. Write numbers in quotation marks, with their unit.")
     if kind == "word":
