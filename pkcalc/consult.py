@@ -12,7 +12,6 @@ from pkcalc import plan as planning
 from pkcalc import steadiness
 from pkcalc.case import Case, Target
 from pkcalc.cautions import ShownRegimen, State
-from pkcalc.dosing import Regimen
 from pkcalc.drugs.profile import Prior, Profile, Sex, load_profile
 from pkcalc.errors import CannotEstimate, CaseError, Caution
 from pkcalc.estimate import lines, posterior, trust
@@ -20,7 +19,7 @@ from pkcalc.estimate import pair as two_level
 from pkcalc.estimate.error_model import LevelData, RecordSpread
 from pkcalc.estimate.pair import SteadyPair, VolumeSpread
 from pkcalc.estimate.result import Band, Estimate
-from pkcalc.forecast import Forecast, Goal, forecast_rate, rate_for_level
+from pkcalc.forecast import Goal, rate_for_level
 from pkcalc.given import given_record
 from pkcalc.levels import LabScale, Observation, adherence, everyday_cv, lab_scale, observe
 from pkcalc.record import Record
@@ -30,16 +29,7 @@ from pkcalc.steadiness import Settling
 RESULTS_DATE = "2026-12-01"  # the day from which notes print these results; see "Results changed"
 
 
-@dataclass(frozen=True)
-class Shown:
-    """A regimen with its words and forecast."""
-
-    regimen: Regimen
-    words: str
-    forecast: Forecast
-    present: bool
-    proposed: bool
-    offered: bool
+Shown = planning.Candidate  # a regimen with its words and forecasts
 
 
 @dataclass(frozen=True)
@@ -74,6 +64,7 @@ class Consult:
     difference: str
     proposed: tuple[Shown, ...]
     table: tuple[Shown, ...]
+    plan: planning.Plan | None
     aim_rate: Band | None
     cautions: tuple[Caution, ...]
     blocked: frozenset[str]
@@ -123,6 +114,7 @@ def run_consult(case: Case, site: Site | str | Path | None = None) -> Consult:
         pair_refusal=found.refusals.get(two_level.METHOD, "") if len(pairs) == 2 else "",
         distrusted=" ".join(e.distrust for e in found.by_method.values() if not e.trusted),
         estimate=chosen,
+        steady_levels_used=chosen is not None and chosen.method in (two_level.METHOD, lines.REGRESSION),
     )
     said += caution_engine.after_estimate(state)
     stops = caution_engine.blocked(said)
@@ -132,19 +124,29 @@ def run_consult(case: Case, site: Site | str | Path | None = None) -> Consult:
         chosen, why = None, ""
     state = replace(state, estimate=chosen)
 
-    scale = lab_scale(case, profile, local, case.albumin)
+    scale = lab_scale(case, profile, local, case.albumin, observations)
     proposed: tuple[Shown, ...] = ()
     table: tuple[Shown, ...] = ()
     aim_rate: Band | None = None
     assert state.goal is not None
+    plan: planning.Plan | None = None
     if chosen is not None and "projection" not in stops:
-        present = present_level(observations)
-        regimens = planning.dose_table(case, profile, local)
-        proposed = tuple(_show(r, state, chosen, scale, present, is_proposed=True) for r in case.proposed)
-        table = tuple(_show(r, state, chosen, scale, present, is_proposed=False) for r in regimens)
+        plan = planning.make(
+            case,
+            profile,
+            local,
+            estimate=chosen,
+            goal=state.goal,
+            scale=scale,
+            observations=observations,
+            record=found.record if chosen.method == posterior.WHOLE_RECORD else None,
+            stops=stops,
+        )
+        proposed, table = plan.own, plan.table
         aim_rate = rate_for_level(chosen, state.goal.aim_mg_per_L)
-        spoken = [ShownRegimen(s.words, s.forecast, s.present) for s in proposed]
-        now = [ShownRegimen("The present dose", s.forecast, True) for s in table if s.present]
+        # stops look at the safety line: every dose taken
+        spoken = [ShownRegimen(s.words, s.taken, s.present) for s in proposed]
+        now = [ShownRegimen("The present dose", s.taken, True) for s in table if s.present]
         said += caution_engine.after_plan(replace(state, regimens=(*now, *spoken)))
     return Consult(
         case=case,
@@ -167,26 +169,10 @@ def run_consult(case: Case, site: Site | str | Path | None = None) -> Consult:
         difference=_difference(found),
         proposed=proposed,
         table=table,
+        plan=plan,
         aim_rate=aim_rate,
         cautions=caution_engine.in_order(said),
         blocked=caution_engine.blocked(said),
-    )
-
-
-def _show(
-    regimen: Regimen, state: State, chosen: Estimate, scale: LabScale, present: float, *, is_proposed: bool
-) -> Shown:
-    assert state.goal is not None
-    forecast = forecast_rate(
-        chosen, regimen.active_mg_per_day(state.profile), state.goal, scale, present_mg_per_L=present
-    )
-    return Shown(
-        regimen=regimen,
-        words=regimen.words(state.profile),
-        forecast=forecast,
-        present=planning.is_present(regimen, state.case, state.profile),
-        proposed=is_proposed,
-        offered=caution_engine.danger(forecast) <= state.site.stop_chance,
     )
 
 
@@ -239,20 +225,29 @@ def _whole_record(state: State, prior: Prior | None) -> tuple[Record, Estimate]:
     """The estimate from population and record; CannotEstimate where the case does not carry one."""
     if prior is None:
         raise CannotEstimate(
-            found="No weight is given." if state.case.patient.weight_kg is None else "The age is not covered.",
+            found="No weight is given."
+            if state.case.patient.weight_kg is None
+            else "The age is not covered.",
             why="The population cannot be scaled to this patient, so a record cannot be weighed against it.",
             helps="Give a weight.",
         )
     if not state.observations:
         raise CannotEstimate("No level is given.", "There is nothing to learn from yet.", "Add a level.")
-    undated = [o.name for o in state.observations if o.level.drawn is None]
+    used = [o for o in state.observations if not o.set_aside]
+    if not used:
+        raise CannotEstimate(
+            found=" ".join(f"{o.name} is set aside: {o.set_aside}." for o in state.observations),
+            why="No level is left to learn from.",
+            helps="Add a level drawn at the right time.",
+        )
+    undated = [o.name for o in used if o.level.drawn is None]
     if undated:
         raise CannotEstimate(
             found=f"{', '.join(undated)}: the time of the draw is not stated.",
             why="A level without its time cannot be placed on the course of the record.",
             helps="Give date and time of the draw.",
         )
-    unusable = [o.name for o in state.observations if not o.usable]
+    unusable = [o.name for o in used if not o.readable]
     if unusable:
         raise CannotEstimate(
             found=f"{', '.join(unusable)}: no single reading can be trusted.",
@@ -260,14 +255,16 @@ def _whole_record(state: State, prior: Prior | None) -> tuple[Record, Estimate]:
             helps="Ask for a free level.",
         )
     record = given_record(state.case, state.profile)
-    return record, posterior.from_record(record, level_data(state), prior, record_spread(state.case, state.profile))
+    return record, posterior.from_record(
+        record, level_data(state), prior, record_spread(state.case, state.profile)
+    )
 
 
 def level_data(state: State) -> tuple[LevelData, ...]:
     """Every dated level as the whole-record estimate takes it: its own spread in parts, intake apart."""
     found = []
     for o in state.observations:
-        if o.level.drawn is not None:
+        if o.level.drawn is not None and o.usable:
             assay = o.spread.assay_cv
             found.append(
                 LevelData(
@@ -276,7 +273,7 @@ def level_data(state: State) -> tuple[LevelData, ...]:
                     assay_cv=assay,
                     day_cv=everyday_cv(state.profile, state.site, assay),
                     extra_log_sd=o.binding_log_sd,
-                    censored=o.level.censored,
+                    censored=o.censored,
                     index=o.level.index,
                 )
             )
@@ -366,15 +363,7 @@ def _difference(found: _Estimates) -> str:
         share = f"{100 * early[-1].fraction.median:.0f}" if early[-1].fraction else ""
         reason = f"level {early[-1].level + 1} was drawn at about {share} % of the way to its plateau"
     else:
-        reason = "two levels with this spread leave a wide range, and the whole record also weighs the population"
+        reason = (
+            "two levels with this spread leave a wide range, and the whole record also weighs the population"
+        )
     return f"The two-level method reads Vmax {percent} % {way} than the whole record: {reason}."
-
-
-def present_level(observations: Sequence[Observation]) -> float:
-    """The latest level on the working basis; where no draw is dated, the last one given; 0 without a level."""
-    if not observations:
-        return 0.0
-    dated = [o for o in observations if o.level.drawn is not None]
-    if dated:
-        return max(dated, key=lambda o: o.level.drawn.timestamp() if o.level.drawn else 0.0).working_mg_per_L
-    return observations[-1].working_mg_per_L

@@ -18,7 +18,7 @@ from pkcalc.levels import LabScale
 Floats = NDArray[np.float64]
 
 #: Draws used for times and courses. Quantiles of the steady level use all of them; a time needs less precision.
-TIME_DRAWS = 1024
+TIME_DRAWS = 512
 _SEED = 20_260_301
 
 
@@ -79,7 +79,7 @@ def forecast_rates(
 ) -> tuple[Forecast, ...]:
     """`forecast_rate` for many dose rates at once.
 
-    present_mg_per_L: today's level, one for all or one per draw; the way to the steady level begins there.
+    present_mg_per_L: today's level, one for all, or one per draw (of all, or of `fewer_draws`); the way to the steady level begins there.
     """
     rates = np.asarray(rates_mg_per_day, dtype=np.float64)
     vmax, km, weights = estimate.vmax_mg_per_day, estimate.km_mg_per_L, estimate.weights
@@ -96,7 +96,7 @@ def forecast_rates(
     settle: Sequence[Band | None] = [None] * len(rates)
     if estimate.volume_L is not None:
         few = fewer_draws(estimate, TIME_DRAWS)
-        present = draws_of(present_mg_per_L, estimate, few)
+        present = draws_of(present_mg_per_L, few)
         days = formulas.time_to_fraction(
             fraction=0.9,
             dose_rate_mg_per_day=rates[:, None],
@@ -203,10 +203,13 @@ def fewer_draws(estimate: Estimate, most: int) -> Fewer:
     )
 
 
-def draws_of(values: ArrayLike, estimate: Estimate, few: Fewer) -> Floats:
-    """A value per draw of the whole estimate (or one for all) at the fewer draws."""
-    whole = np.broadcast_to(np.asarray(values, dtype=np.float64), estimate.weights.shape)
-    return whole[few.chosen]
+def draws_of(values: ArrayLike, few: Fewer) -> Floats:
+    """A level per draw of the whole estimate, or per fewer draw, or one for all, at the fewer draws."""
+    given = np.asarray(values, dtype=np.float64)
+    size = len(few.estimate.weights)
+    if given.ndim == 0 or given.shape == (size,):
+        return np.array(np.broadcast_to(given, (size,)))
+    return given[few.chosen]
 
 
 def fully_taken(estimate: Estimate, doses_missed: float) -> Estimate:
@@ -237,7 +240,7 @@ def levels_on_days(
     Needs a volume. One tuple of bands per rate, one band per day.
     """
     few = fewer_draws(estimate, TIME_DRAWS)
-    present = draws_of(present_mg_per_L, estimate, few)
+    present = draws_of(present_mg_per_L, few)
     rates, when = np.asarray(rates_mg_per_day, dtype=np.float64), np.asarray(days, dtype=np.float64)
     course = formulas.level_after(
         time_day=when[None, :, None],

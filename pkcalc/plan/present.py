@@ -1,0 +1,133 @@
+"""What is given now: the regimen in force, the level today (per draw), and how the doses of the past were taken."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass
+from datetime import datetime, timedelta
+
+import numpy as np
+from numpy.typing import NDArray
+
+from pkcalc import flow
+from pkcalc.case import Case, Course
+from pkcalc.dosing import Regimen
+from pkcalc.drugs.profile import Profile
+from pkcalc.estimate.result import Band, Estimate
+from pkcalc.forecast import TIME_DRAWS, bands, fewer_draws
+from pkcalc.levels import Observation, adherence
+from pkcalc.record import Dose, Record
+
+Floats = NDArray[np.float64]
+
+
+def present_course(case: Case) -> Course | None:
+    """The line of the record in force now: the last repeated one that has not ended."""
+    going = [c for c in case.courses if c.regimen is not None and c.counts_as_given and c.end is None]
+    dated = [c for c in going if c.start is not None]
+    if dated:
+        return max(dated, key=lambda c: c.start.timestamp() if c.start else 0.0)
+    return going[-1] if going else None
+
+
+def present_rate(case: Case, profile: Profile) -> float | None:
+    """Active drug per day on the present regimen [mg/day]; None where nothing repeated is given now."""
+    course = present_course(case)
+    return None if course is None or course.regimen is None else course.regimen.active_mg_per_day(profile)
+
+
+def is_present(regimen: Regimen, case: Case, profile: Profile) -> bool:
+    """True where a regimen delivers the same active amount per day as the present one."""
+    now = present_rate(case, profile)
+    return now is not None and abs(regimen.active_mg_per_day(profile) - now) <= 1e-6 * now
+
+
+@dataclass(frozen=True)
+class Today:
+    """Where the patient stands when the plan begins.
+
+    moment: clock time, None in a case without one. level_mg_per_L: per draw of `fewer_draws`, working
+    basis; None without any level. words: how it was found. still_absorbed: oral doses of which something may still reach the blood, with
+    times in days from now (0 or before). measured_mg_per_L: the latest level on the working basis.
+    """
+
+    moment: datetime | None
+    level_mg_per_L: Floats | None
+    words: str
+    still_absorbed: tuple[Dose, ...]
+    measured_mg_per_L: float | None
+
+    @property
+    def start_mg_per_L(self) -> Floats | float:
+        return 0.0 if self.level_mg_per_L is None else self.level_mg_per_L
+
+    @property
+    def level(self) -> Band | None:
+        if self.level_mg_per_L is None:
+            return None
+        return bands(self.level_mg_per_L[None, :], np.full(len(self.level_mg_per_L), 1.0))[0]
+
+
+def today(
+    case: Case,
+    estimate: Estimate,
+    observations: Sequence[Observation],
+    record: Record | None,
+) -> Today:
+    """Today's level by the record's own course where the estimate comes from the record, else the latest level."""
+    moment = case.plan_start or case.now
+    latest = _latest(observations)
+    measured = latest.working_mg_per_L if latest is not None else None
+    few = fewer_draws(estimate, TIME_DRAWS).estimate
+    n = len(few.weights)
+    if record is None or estimate.volume_L is None or moment is None or case.origin is None:
+        words = "no level" if latest is None else f"{latest.name}, taken to hold now"
+        level = None if measured is None else np.full(n, measured)
+        return Today(moment, level, words, (), measured)
+    day = max(case.day(moment), record.start_day)
+    assert few.volume_L is not None
+    course = flow.levels(record, (day,), few.vmax_mg_per_day, few.km_mg_per_L, few.volume_L)
+    unabsorbed = tuple(
+        Dose(d.time_day - day, d.amount_mg, 0.0, d.absorption)
+        for d in record.doses
+        if d.absorption is not None and day - d.settled_after_day < d.time_day <= day
+    )
+    return Today(moment, course[:, 0], "by the course of the record", unabsorbed, measured)
+
+
+def _latest(observations: Sequence[Observation]) -> Observation | None:
+    dated = [o for o in observations if o.level.drawn is not None]
+    if dated:
+        return max(dated, key=lambda o: o.level.drawn.timestamp() if o.level.drawn else 0.0)
+    return observations[-1] if observations else None
+
+
+def doses_missed(case: Case, profile: Profile) -> tuple[float, str]:
+    """Share of past doses taken to differ from the record, and in which words."""
+    key, words = adherence(case)
+    return profile.spread.intake_share[key], words
+
+
+def adherence_in_doubt(case: Case) -> bool:
+    """True unless somebody says that the doses were taken, or a nurse gave them all."""
+    if case.answer("adherence_doubtful") == "no":
+        return False
+    course = present_course(case)
+    by_nurse = course is not None and course.given_by == "nurse"
+    return case.answer("adherence_doubtful") == "yes" or not by_nurse
+
+
+def first_dose_hour(case: Case) -> float | None:
+    """Time of day of the last dose of the day on the present regimen; None where it is not stated."""
+    course = present_course(case)
+    if course is None or course.regimen is None:
+        return None
+    if course.regimen.by_clock:
+        return course.regimen.intakes[-1].hour
+    if course.regimen.cycle_h == 24.0 and course.start is not None:
+        return course.start.hour + course.start.minute / 60
+    return None
+
+
+def draw_moment(start: datetime, days: float) -> datetime:
+    return start + timedelta(days=days)
