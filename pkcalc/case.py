@@ -1179,6 +1179,14 @@ def _check_order(case: Case, check: _Check) -> None:
                     )
 
 
+def label_looks_like_identifier(text: str) -> bool:
+    """True where a label holds a long number, a date, or two capitalised words in a row (as a name has)."""
+    return bool(
+        re.search(r"\d{5,}|\d{1,4}[-/. ]\d{1,2}[-/. ]\d{1,4}", text)
+        or re.search(r"\b[A-Z][a-z]+,? [A-Z][a-z]+\b", text)
+    )
+
+
 # --- writing ---------------------------------------------------------------------------------------------
 
 

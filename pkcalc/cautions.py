@@ -6,22 +6,25 @@ filled into its text; an empty list keeps it silent. Only consult.py asks.
 
 from __future__ import annotations
 
+import re
 import tomllib
 from collections.abc import Callable, Iterable, Mapping, Sequence
 from dataclasses import dataclass
+from datetime import timedelta
 from functools import cache
 from importlib import resources
 from typing import Any
 
 import numpy as np
 
-from pkcalc.case import Case
-from pkcalc.drugs.profile import Profile
+from pkcalc.case import Albumin, Case, label_looks_like_identifier
+from pkcalc.clock import show_date
+from pkcalc.drugs.profile import Profile, load_profile
 from pkcalc.errors import BLOCKABLE, Caution, DrugFileError
 from pkcalc.estimate.pair import SteadyPair
 from pkcalc.estimate.result import Estimate
 from pkcalc.forecast import Forecast, Goal
-from pkcalc.levels import Observation
+from pkcalc.levels import Observation, adherence, measured_free_fraction, present_level, timing
 from pkcalc.site import Site
 from pkcalc.steadiness import Settling
 from pkcalc.units import show, show_number
@@ -52,6 +55,7 @@ class State:
     own_settling: Sequence[Settling] = ()
     pair_estimate: Estimate | None = None
     pair_refusal: str = ""
+    steady_levels_used: bool = False
     distrusted: str = ""
     estimate: Estimate | None = None
     goal: Goal | None = None
@@ -94,6 +98,94 @@ def _unconfirmed_lines(s: State, p: Mapping[str, Any]) -> list[Words]:
     return [{"lines": ", ".join(lines).capitalize()}] if lines else []
 
 
+def _answered_both(s: State, p: Mapping[str, Any]) -> list[Words]:
+    return [{}] if s.case.answer(p["question"]) == s.case.answer(p["other"]) == "yes" else []
+
+
+def _start_without_hla(s: State, p: Mapping[str, Any]) -> list[Words]:
+    unknown = s.case.answer("hla_b1502") in ("unknown", "not stated")
+    return [{}] if unknown and s.case.answer("new_start") == "yes" else []
+
+
+def _levels_before_change(s: State, p: Mapping[str, Any]) -> list[Words]:
+    """Speaks unless a level was drawn after the change, which is dated."""
+    given = s.case.context.get(p["question"])
+    if given is None or given.answer != "yes" or not s.observations:
+        return []
+    since = given.since
+    if since is not None:
+        start = since.date()
+        if any(o.level.drawn is not None and o.level.drawn.date() > start for o in s.observations):
+            return []
+    interactions = s.profile.interactions
+    words = [w for w in re.split(r"[^a-z]+", given.detail.lower()) if len(w) >= 5]
+    raises = []
+    for names, effect in ((s.profile.interactions.raising, "raise"), (s.profile.interactions.lowering, "lower")):
+        hits = [name for name in names if any(word in name.lower() for word in words)]
+        if hits:
+            raises.append(f"{', '.join(hits)}: known to {effect} the level while taken.")
+    return [
+        {
+            "when": f" on {show_date(since)}" if since is not None else " at a time not stated",
+            "wait": show(s.profile.interactions.wait_days, "days"),
+            "raises": " ".join(raises),
+        }
+    ]
+
+
+def _overlapping(s: State, p: Mapping[str, Any]) -> list[Words]:
+    """Repeated lines in force at the same time."""
+    lines = [c for c in s.case.courses if c.regimen is not None and c.counts_as_given]
+    hits: set[int] = set()
+    for i, a in enumerate(lines):
+        for b in lines[i + 1 :]:
+            if a.start is None or b.start is None:
+                # Without starts only open-ended lines by length can be said to run together.
+                if a.for_about_days is not None and b.for_about_days is not None:
+                    hits |= {a.index, b.index}
+                continue
+            if (a.end is None or b.start < a.end) and (b.end is None or a.start < b.end):
+                hits |= {a.index, b.index}
+    names = [f"dose line {i + 1}" for i in sorted(hits)]
+    return [{"lines": ", ".join(names).capitalize()}] if names else []
+
+
+def _load_not_in_record(s: State, p: Mapping[str, Any]) -> list[Words]:
+    answer = s.case.answer("recent_load")
+    if answer == "no" or not s.observations:
+        return []
+    times = [o.level.drawn for o in s.observations if o.level.drawn is not None]
+    if not times:
+        return []
+    last = max(times)
+    recorded = [
+        c
+        for c in s.case.courses
+        if (c.single is not None or c.rate_mg_per_day is not None)
+        and c.start is not None
+        and timedelta(0) <= last - c.start <= timedelta(hours=72)
+    ]
+    words = {"yes": "stated", "unknown": "not ruled out (unknown)"}.get(answer, "not ruled out (not stated)")
+    return [] if recorded else [{"answer": words}]
+
+
+def _weight_estimated(s: State, p: Mapping[str, Any]) -> list[Words]:
+    return [{}] if s.case.patient.weight_kg is not None and s.case.patient.weight_basis == "estimated" else []
+
+
+def _label_identifies(s: State, p: Mapping[str, Any]) -> list[Words]:
+    return [{}] if label_looks_like_identifier(s.case.file.label) else []
+
+
+def _missed_doses(s: State, p: Mapping[str, Any]) -> list[Words]:
+    count = sum(len(c.missed) for c in s.case.courses)
+    return [{"count": f"{count}"}] if count else []
+
+
+def _no_age(s: State, p: Mapping[str, Any]) -> list[Words]:
+    return [{}] if s.case.patient.age_years is None else []
+
+
 def _no_weight(s: State, p: Mapping[str, Any]) -> list[Words]:
     return [{}] if s.case.patient.weight_kg is None else []
 
@@ -129,6 +221,94 @@ def _albumin_corrected(s: State, p: Mapping[str, Any]) -> list[Words]:
     return [{"levels": _names(hits), "albumin": show(albumin.g_per_L, "g/L") if albumin else ""}]
 
 
+def _albumin_of(s: State, o: Observation) -> Albumin | None:
+    return o.level.albumin or s.case.albumin
+
+
+def _albumin_old(s: State, p: Mapping[str, Any]) -> list[Words]:
+    if s.profile.binding is None:
+        return []
+    limit = s.profile.binding.albumin_oldest_h
+    worst, names = 0.0, []
+    for o in _totals(s):
+        albumin = _albumin_of(s, o)
+        if albumin is None or albumin.taken is None or o.level.drawn is None:
+            continue
+        hours = abs((o.level.drawn - albumin.taken) / timedelta(hours=1))
+        if hours > limit:
+            worst = max(worst, hours)
+            names.append(o)
+    if not names:
+        return []
+    far = show(worst, "h", 2) if worst < 96 else show(worst / 24, "days", 2)
+    return [{"levels": _names(names), "hours": far, "limit": show(limit, "h")}]
+
+
+def _albumin_after_infusion(s: State, p: Mapping[str, Any]) -> list[Words]:
+    used = [a for o in _totals(s) if (a := _albumin_of(s, o)) is not None]
+    return [{}] if any(a.after_infusion == "yes" for a in used) else []
+
+
+def _albumin_by_bcg(s: State, p: Mapping[str, Any]) -> list[Words]:
+    binding = s.profile.binding
+    if binding is None:
+        return []
+    hits = [
+        o
+        for o in _totals(s)
+        if (a := _albumin_of(s, o)) is not None and a.method == "BCG" and a.g_per_L < binding.break_point_g_per_L
+    ]
+    return [{"difference": show(binding.albumin_bcg_minus_bcp_g_per_L, "g/L")}] if hits else []
+
+
+def _normalised_elsewhere(s: State, p: Mapping[str, Any]) -> list[Words]:
+    hits = [o for o in s.observations if o.level.kind == "normalised"]
+    return [{"levels": _names(hits)}] if hits else []
+
+
+def _timing_is(s: State, p: Mapping[str, Any]) -> list[Words]:
+    hits = [(o, t) for o in s.observations if (t := timing(o.level, s.case, s.profile)) in p["timings"]]
+    if not hits:
+        return []
+    sampling = s.profile.sampling
+    return [
+        {
+            "levels": _names(o for o, _ in hits),
+            "how": hits[0][1],
+            "vein": show(sampling.after_iv_h, "h"),
+            "muscle": show(sampling.after_im_h, "h"),
+        }
+    ]
+
+
+def _set_aside_for(s: State, p: Mapping[str, Any]) -> list[Words]:
+    hits = [o for o in s.observations if p["words"] in o.set_aside]
+    return [{"levels": _names(hits)}] if hits else []
+
+
+def _same_time_other_value(s: State, p: Mapping[str, Any]) -> list[Words]:
+    hits = []
+    for i, o in enumerate(s.observations):
+        for other in s.observations[:i]:
+            same = o.level.drawn is not None and o.level.drawn == other.level.drawn
+            if same and o.level.kind == other.level.kind and o.level.typed.value != other.level.typed.value:
+                hits += [other, o]
+    return [{"levels": _names(dict.fromkeys(hits))}] if hits else []
+
+
+def _free_fraction_measured(s: State, p: Mapping[str, Any]) -> list[Words]:
+    fraction = measured_free_fraction(s.observations)
+    if fraction is None or s.profile.binding is None:
+        return []
+    low, high = s.profile.binding.free_fraction_range
+    return [
+        {
+            "percent": f"{show_number(100 * fraction)} %",
+            "usual": f"{show_number(100 * low)} to {show_number(100 * high)} %",
+        }
+    ]
+
+
 def _gel_tube(s: State, p: Mapping[str, Any]) -> list[Words]:
     hits = [o for o in s.observations if o.level.sample == "gel tube"]
     return [{"levels": _names(hits)}] if hits else []
@@ -146,10 +326,25 @@ def _not_settled(s: State, p: Mapping[str, Any]) -> list[Words]:
 
 
 def _settling_unknown(s: State, p: Mapping[str, Any]) -> list[Words]:
-    paired = {x.level for x in s.pairs}
-    if len(s.pairs) != 2 or s.pair_estimate is None:
+    if s.estimate is None or not s.steady_levels_used:
         return []
-    return [{"sentence": x.sentence} for x in s.own_settling if x.settled is None and x.level in paired]
+    paired = {x.level for x in s.pairs}
+    hits = [x.level for x in (s.own_settling or s.settling) if x.settled is None and x.level in paired]
+    return [{"levels": ", ".join(f"Level {i + 1}" for i in hits)}] if hits else []
+
+
+def _misfit(s: State, p: Mapping[str, Any]) -> list[Words]:
+    if s.estimate is None:
+        return []
+    return [
+        {
+            "level": f"Level {x.level + 1}",
+            "observed": show(x.observed_mg_per_L, "mg/L"),
+            "expected": f"{show_number(x.predicted.low)} to {show(x.predicted.high, 'mg/L')}",
+        }
+        for x in s.estimate.fit
+        if abs(x.standardised_residual) > p["limit"]
+    ]
 
 
 def _pair_refused(s: State, p: Mapping[str, Any]) -> list[Words]:
@@ -187,9 +382,7 @@ def _km_outside(s: State, p: Mapping[str, Any]) -> list[Words]:
     value = s.estimate.point.km_mg_per_L
     if low <= value <= high:
         return []
-    return [
-        {"value": show(value, "mg/L"), "low": show_number(low), "high": show(high, "mg/L")}
-    ]
+    return [{"value": show(value, "mg/L"), "low": show_number(low), "high": show(high, "mg/L")}]
 
 
 def danger(forecast: Forecast) -> float:
@@ -211,6 +404,23 @@ def _danger(s: State, low: float, high: float) -> list[Words]:
                 }
             )
     return found
+
+
+def _increase_on_doubt(s: State, p: Mapping[str, Any]) -> list[Words]:
+    """An increase from a level below the target while nobody vouches for the doses taken."""
+    if s.goal is None or not s.observations or adherence(s.case)[0] == "observed":
+        return []
+    if s.case.answer("adherence_doubtful") == "no":
+        return []
+    level = present_level(s.observations)
+    now = next((r.forecast.rate_mg_per_day for r in s.regimens if r.present), None)
+    if now is None or level >= s.goal.low_mg_per_L:
+        return []
+    return [
+        {"regimen": r.words, "level": show(level, "mg/L")}
+        for r in s.regimens
+        if r.forecast.rate_mg_per_day > now * (1 + 1e-9)
+    ]
 
 
 def _danger_above_stop(s: State, p: Mapping[str, Any]) -> list[Words]:
@@ -236,26 +446,45 @@ def _at_or_above_vmax(s: State, p: Mapping[str, Any]) -> list[Words]:
 
 
 PREDICATES: dict[str, Predicate] = {
+    "albumin_after_infusion": _albumin_after_infusion,
+    "albumin_by_bcg": _albumin_by_bcg,
+    "albumin_corrected": _albumin_corrected,
+    "albumin_old": _albumin_old,
     "answered": _answered,
-    "younger_than": _younger_than,
-    "unconfirmed_lines": _unconfirmed_lines,
+    "answered_both": _answered_both,
+    "at_or_above_vmax": _at_or_above_vmax,
+    "chance_of_negative_km_above": _chance_of_negative_km_above,
+    "danger_above_stop": _danger_above_stop,
+    "danger_above_warn": _danger_above_warn,
+    "free_fraction_measured": _free_fraction_measured,
+    "gel_tube": _gel_tube,
+    "increase_on_doubt": _increase_on_doubt,
+    "kinds_mixed": _kinds_mixed,
+    "km_outside": _km_outside,
+    "label_identifies": _label_identifies,
+    "levels_before_change": _levels_before_change,
+    "load_not_in_record": _load_not_in_record,
+    "misfit": _misfit,
+    "missed_doses": _missed_doses,
+    "no_age": _no_age,
     "no_weight": _no_weight,
+    "normalised_elsewhere": _normalised_elsewhere,
+    "not_settled": _not_settled,
+    "not_trusted": _not_trusted,
+    "overlapping": _overlapping,
+    "pair_refused": _pair_refused,
+    "same_time_other_value": _same_time_other_value,
+    "set_aside_for": _set_aside_for,
+    "settling_unknown": _settling_unknown,
+    "start_without_hla": _start_without_hla,
+    "timing_is": _timing_is,
     "total_under": _total_under,
     "total_with_unknown": _total_with_unknown,
     "total_without_albumin": _total_without_albumin,
-    "albumin_corrected": _albumin_corrected,
-    "gel_tube": _gel_tube,
-    "kinds_mixed": _kinds_mixed,
-    "not_settled": _not_settled,
-    "settling_unknown": _settling_unknown,
-    "pair_refused": _pair_refused,
-    "chance_of_negative_km_above": _chance_of_negative_km_above,
-    "not_trusted": _not_trusted,
+    "unconfirmed_lines": _unconfirmed_lines,
     "vmax_outside": _vmax_outside,
-    "km_outside": _km_outside,
-    "danger_above_stop": _danger_above_stop,
-    "danger_above_warn": _danger_above_warn,
-    "at_or_above_vmax": _at_or_above_vmax,
+    "weight_estimated": _weight_estimated,
+    "younger_than": _younger_than,
 }
 
 _KNOWN = {"stage", "severity", "when", "text", "source", "blocks", "lifted_by"}
@@ -313,10 +542,21 @@ def common_rules() -> tuple[Rule, ...]:
     return parse_rules(tomllib.loads(text), "cautions.toml")
 
 
+@cache
+def rules_of(profile_id: str) -> tuple[Rule, ...]:
+    """The rules of every drug, then those of one drug."""
+    profile = load_profile(profile_id)
+    own = parse_rules(profile.cautions, profile.file)
+    twice = {r.id for r in common_rules()} & {r.id for r in own}
+    if twice:
+        raise DrugFileError(f"{profile.file}, caution {min(twice)}: it stands in cautions.toml too.")
+    return (*common_rules(), *own)
+
+
 def ask(stage: str, state: State) -> tuple[Caution, ...]:
     """The cautions of one stage that speak, in the order of their file."""
     found: list[Caution] = []
-    for rule in common_rules():
+    for rule in rules_of(state.profile.id):
         if rule.stage != stage:
             continue
         for words in PREDICATES[rule.when](state, rule.settings):
@@ -324,7 +564,7 @@ def ask(stage: str, state: State) -> tuple[Caution, ...]:
                 Caution(
                     id=rule.id,
                     severity=rule.severity,  # type: ignore[arg-type]
-                    text=rule.text.format(**words),
+                    text=rule.text.format(**words).strip(),
                     source=rule.source,
                     blocks=rule.blocks,
                     lifted_by=rule.lifted_by,

@@ -176,9 +176,7 @@ def run_consult(case: Case, site: Site | str | Path | None = None) -> Consult:
     )
 
 
-def _estimate(
-    state: State, prior: Prior | None, population: Estimate | None, stops: frozenset[str]
-) -> _Estimates:
+def _estimate(state: State, prior: Prior | None, population: Estimate | None, stops: frozenset[str]) -> _Estimates:
     """Every method that may and can answer, with the reason where one cannot."""
     case, profile, observations, pairs = state.case, state.profile, state.observations, state.pairs
     by_method: dict[str, Estimate] = {}
@@ -225,9 +223,7 @@ def _whole_record(state: State, prior: Prior | None) -> tuple[Record, Estimate]:
     """The estimate from population and record; CannotEstimate where the case does not carry one."""
     if prior is None:
         raise CannotEstimate(
-            found="No weight is given."
-            if state.case.patient.weight_kg is None
-            else "The age is not covered.",
+            found="No weight is given." if state.case.patient.weight_kg is None else "The age is not covered.",
             why="The population cannot be scaled to this patient, so a record cannot be weighed against it.",
             helps="Give a weight.",
         )
@@ -255,9 +251,7 @@ def _whole_record(state: State, prior: Prior | None) -> tuple[Record, Estimate]:
             helps="Ask for a free level.",
         )
     record = given_record(state.case, state.profile)
-    return record, posterior.from_record(
-        record, level_data(state), prior, record_spread(state.case, state.profile)
-    )
+    return record, posterior.from_record(record, level_data(state), prior, record_spread(state.case, state.profile))
 
 
 def level_data(state: State) -> tuple[LevelData, ...]:
@@ -297,9 +291,7 @@ def _prior(case: Case, profile: Profile, site: Site) -> Prior | None:
         return None
     name = case.population or site.population
     population = profile.populations[name] if name else profile.default_population(age)
-    switched_on = tuple(
-        m.id for m in population.modifiers.values() if m.question and case.answer(m.question) == "yes"
-    )
+    switched_on = tuple(m.id for m in population.modifiers.values() if m.question and case.answer(m.question) == "yes")
     return population.at(
         weight, age, height_cm=case.patient.height_cm, sex=cast(Sex, case.patient.sex), modifiers=switched_on
     )
@@ -334,9 +326,7 @@ def _choose(estimates: Mapping[str, Estimate], case: Case) -> tuple[Estimate | N
     return None, ""
 
 
-def _why_no_pair(
-    pairs: Sequence[SteadyPair], steady: Sequence[SteadyPair], observations: Sequence[Observation]
-) -> str:
+def _why_no_pair(pairs: Sequence[SteadyPair], steady: Sequence[SteadyPair], observations: Sequence[Observation]) -> str:
     if len(pairs) > 2:
         return (
             f"Of {len(pairs)} levels with a dose in force {len(steady)} had settled when drawn; lines through steady "
@@ -363,7 +353,5 @@ def _difference(found: _Estimates) -> str:
         share = f"{100 * early[-1].fraction.median:.0f}" if early[-1].fraction else ""
         reason = f"level {early[-1].level + 1} was drawn at about {share} % of the way to its plateau"
     else:
-        reason = (
-            "two levels with this spread leave a wide range, and the whole record also weighs the population"
-        )
+        reason = "two levels with this spread leave a wide range, and the whole record also weighs the population"
     return f"The two-level method reads Vmax {percent} % {way} than the whole record: {reason}."

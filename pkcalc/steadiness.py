@@ -61,7 +61,7 @@ def steady_pairs(case: Case, profile: Profile, observations: Sequence[Observatio
     pairs = []
     for o in observations:
         course = course_of(case, o)
-        if course is None or course.regimen is None or not o.usable or o.level.censored is not None:
+        if course is None or course.regimen is None or not o.usable or o.censored is not None:
             continue
         pairs.append(
             SteadyPair(

@@ -5,7 +5,8 @@ from __future__ import annotations
 import re
 from pathlib import Path
 
-from pkcalc.cautions import common_rules
+from pkcalc.cautions import rules_of
+from pkcalc.drugs.profile import drug_names
 
 ROOT = Path(__file__).parents[2]
 
@@ -33,6 +34,6 @@ def test_every_guarding_test_exists() -> None:
 
 def test_every_stop_stands_in_the_table() -> None:
     listed = {name.strip() for row in rows() for name in row[3].split(",") if name.strip()}
-    stops = {rule.id for rule in common_rules() if rule.severity == "stop"}
+    stops = {r.id for name in drug_names() for r in rules_of(name) if r.severity == "stop"}
     assert stops - listed == set(), "stops without a row"
     assert listed - stops == set(), "rows naming no stop"

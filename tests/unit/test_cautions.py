@@ -46,9 +46,7 @@ def test_a_total_level_in_renal_failure_is_stopped() -> None:
     consult = run_consult(plain(context={"renal_failure": "yes"}))
     assert "renal-failure-total" in said(consult)
     assert consult.chosen is None
-    free = run_consult(
-        plain(context={"renal_failure": "yes"}, levels=levels("0.8 mg/L", "2 mg/L", kind="free"))
-    )
+    free = run_consult(plain(context={"renal_failure": "yes"}, levels=levels("0.8 mg/L", "2 mg/L", kind="free")))
     assert "renal-failure-total" not in said(free)
     assert free.chosen is not None
 
@@ -98,8 +96,8 @@ def test_a_missing_weight_is_warned_about() -> None:
 
 
 def test_doubtful_adherence_is_warned_about() -> None:
-    assert "adherence-unknown" in said(run_consult(plain(context={"adherence_doubtful": "yes"})))
-    assert "adherence-unknown" not in said(run_consult(plain()))
+    assert "adherence-doubtful" in said(run_consult(plain(context={"adherence_doubtful": "yes"})))
+    assert "adherence-doubtful" not in said(run_consult(plain()))
 
 
 def test_an_unconfirmed_order_is_left_out_and_said() -> None:
@@ -124,3 +122,161 @@ def test_cautions_come_in_order_and_once() -> None:
     ranks = [["stop", "warn", "note"].index(c.severity) for c in consult.cautions]
     assert ranks == sorted(ranks)
     assert len({(c.id, c.text) for c in consult.cautions}) == len(consult.cautions)
+
+
+def test_hla_positive_first_start_is_stopped() -> None:
+    consult = run_consult(plain(context={"hla_b1502": "yes", "new_start": "yes"}))
+    assert "hla-b1502" in said(consult)
+    assert {"regimens", "loading"} <= consult.blocked
+    assert "hla-b1502" not in said(run_consult(plain(context={"hla_b1502": "yes", "new_start": "no"})))
+    assert "hla-unknown" in said(run_consult(plain(context={"new_start": "yes"})))
+
+
+def test_levels_from_before_an_interacting_change_are_not_projected() -> None:
+    stopped = run_consult(
+        plain(context={"interacting_change": {"answer": "yes", "since": "2026-12-01", "detail": "fluconazole, azole"}})
+    )
+    stop = next(c for c in stopped.cautions if c.id == "interacting-change")
+    assert "on 1 Dec 2026" in stop.text
+    assert "azole antifungals: known to raise the level while taken." in stop.text
+    assert stopped.table == ()
+    later = run_consult(plain(context={"interacting_change": {"answer": "yes", "since": "2026-11-01"}}))
+    assert "interacting-change" not in said(later)
+    undated = run_consult(plain(context={"interacting_change": "yes"}))
+    assert "interacting-change" in said(undated)
+
+
+def test_levels_from_before_a_feed_change_are_not_projected() -> None:
+    changed = {"tube_feed": "yes", "tube_feed_change": {"answer": "yes", "since": "2026-12-01"}}
+    stopped = run_consult(plain(context=changed))
+    assert "tube-feed-change" in said(stopped)
+    assert stopped.table == ()
+    changed["tube_feed_change"] = {"answer": "yes", "since": "2026-10-01"}
+    later = run_consult(plain(context=changed))
+    assert "tube-feed-change" not in said(later)
+    assert "tube-feed" in said(later)
+
+
+def test_no_increase_from_a_low_level_on_doubt() -> None:
+    low = levels("4 mg/L", "7 mg/L")
+    more = [{"form": "extended-capsule", "amount": "380 mg", "every": "24 h"}]
+    doubtful = run_consult(plain(levels=low, proposed=more, context={"adherence_doubtful": "yes"}))
+    assert "increase-on-doubt" in said(doubtful)
+    assert "increase-on-doubt" in said(
+        run_consult(plain(levels=low, proposed=more, context={"adherence_doubtful": "unknown"}))
+    )
+    observed = run_consult(plain(levels=low, proposed=more))
+    assert "increase-on-doubt" not in said(observed)
+    less = [{"form": "extended-capsule", "amount": "330 mg", "every": "24 h"}]
+    assert "increase-on-doubt" not in said(
+        run_consult(plain(levels=low, proposed=less, context={"adherence_doubtful": "yes"}))
+    )
+
+
+def test_overlapping_lines_are_warned_about() -> None:
+    lines = plain().file.model_dump(mode="json", by_alias=True, exclude_defaults=True)["doses"]
+    open_ended = [{k: v for k, v in lines[0].items() if k != "until"}, lines[1]]
+    consult = run_consult(plain(doses=open_ended))
+    caution = next(c for c in consult.cautions if c.id == "active-twice")
+    assert caution.text.startswith("Dose line 1, dose line 2 run at the same time")
+    assert "active-twice" not in said(run_consult(plain()))
+
+
+def test_an_unrecorded_load_is_warned_about() -> None:
+    for answer in ("yes", "unknown"):
+        assert "recent-load" in said(run_consult(plain(context={"recent_load": answer})))
+    assert "recent-load" not in said(run_consult(plain()))
+    lines = plain().file.model_dump(mode="json", by_alias=True, exclude_defaults=True)["doses"]
+    load = {"form": "injection", "amount": "500 mg", "over": "20 min", "at": "2026-11-29 22:00"}
+    recorded = run_consult(plain(doses=[*lines, load], context={"recent_load": "yes"}))
+    assert "recent-load" not in said(recorded)
+
+
+ASKED = {
+    "toxic_signs": "toxic-signs",
+    "im_route": "im-route",
+    "form_change": "form-change",
+    "extracorporeal": "extracorporeal",
+    "temperature_management": "temperature-management",
+    "delivery": "delivery",
+    "hepatic_failure": "hepatic-failure",
+    "heart_block": "heart-block",
+    "renal_reduced": "renal-reduced-total",
+    "critical_illness": "critical-illness-total",
+}
+
+
+def test_every_yes_has_its_warning_and_no_stays_silent() -> None:
+    yes = said(run_consult(plain(context=dict.fromkeys(ASKED, "yes"))))
+    no = said(run_consult(plain(context=dict.fromkeys(ASKED, "no"))))
+    assert set(ASKED.values()) <= yes
+    assert not set(ASKED.values()) & no
+
+
+def test_every_caution_fires_somewhere_in_the_tests() -> None:
+    """Each id of the caution files is named in this file or in its neighbours."""
+    from pathlib import Path
+
+    from pkcalc.cautions import rules_of
+
+    here = Path(__file__).parent
+    texts = "".join(p.read_text(encoding="utf-8") for p in here.glob("test_*.py"))
+    assert [r.id for r in rules_of("phenytoin") if f'"{r.id}"' not in texts] == []
+
+
+def test_weight_age_label_and_missed_doses_are_noted() -> None:
+    lines = plain().file.model_dump(mode="json", by_alias=True, exclude_defaults=True)["doses"]
+    lines[1]["missed"] = ["2026-11-20 21:00", "2026-11-21 21:00"]
+    noted = run_consult(
+        plain(label="Bed 3, 1970-02-03", doses=lines, patient={"weight": "60 kg", "weight_basis": "estimated"})
+    )
+    assert {"weight-estimated", "age-not-stated", "label-identifier", "missed-doses"} <= said(noted)
+    silent = said(run_consult(plain(label="blue folder")))
+    assert not {"weight-estimated", "age-not-stated", "label-identifier", "missed-doses"} & silent
+
+
+def test_stops_together_give_one_clear_outcome() -> None:
+    """Every pair of stopping answers: all stops said, no number left that any of them blocks."""
+    stopping = {
+        "seizing_now": "yes",
+        "overdose": "yes",
+        "renal_failure": "yes",
+        "valproate": "yes",
+        "pregnancy": "yes",
+        "interacting_change": "yes",
+    }
+    keys = list(stopping)
+    for i, one in enumerate(keys):
+        for other in keys[i + 1 :]:
+            consult = run_consult(plain(context={one: "yes", other: "yes"}))
+            assert len([c for c in consult.cautions if c.severity == "stop"]) >= 2, (one, other)
+            assert consult.stopped
+            assert consult.proposed == consult.table == ()
+            assert consult.aim_rate is None
+
+
+def test_a_level_in_the_wrong_unit_does_not_fit() -> None:
+    """32 umol/L typed as 32 mg/L: four times too high for the record."""
+    wrong = [
+        {"value": "8 mg/L", "kind": "total", "drawn": "2026-09-15 07:00"},
+        {"value": "8.2 mg/L", "kind": "total", "drawn": "2026-09-14 07:00"},
+        {"value": "32 mg/L", "kind": "total", "drawn": "2026-09-13 07:00"},
+    ]
+    consult = run_consult(plain(levels=wrong))
+    assert "level-does-not-fit" in said(consult)
+    assert "level-does-not-fit" not in said(run_consult(plain()))
+
+
+def test_pregnancy_on_a_free_level_is_still_said() -> None:
+    consult = run_consult(plain(context={"pregnancy": "yes"}, levels=levels("0.8 mg/L", "2 mg/L", kind="free")))
+    assert "pregnancy-population" in said(consult)
+    assert "pregnancy-population" not in said(run_consult(plain()))
+
+
+def test_implausible_parameters_are_warned_about() -> None:
+    consult = run_consult(plain(method="two levels", patient={"age": "45 years", "weight": "120 kg"}))
+    assert "vmax-out-of-range" in said(consult)
+    steep = run_consult(plain(method="two levels", levels=levels("2 mg/L", "20 mg/L")))
+    assert "km-out-of-range" in said(steep)
+    usual = said(run_consult(plain(method="two levels", patient={"age": "45 years", "weight": "60 kg"})))
+    assert not {"vmax-out-of-range", "km-out-of-range"} & usual

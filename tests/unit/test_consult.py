@@ -58,6 +58,9 @@ def test_a_risky_regimen_is_not_offered() -> None:
     assert not risky.offered
     assert safe.forecast.above_critical < 0.05
     assert safe.offered
+    middling = run_consult(plain(method="two levels", levels=levels("8 mg/L", "17 mg/L"), proposed=proposing("340 mg")))
+    assert 0.05 < middling.proposed[0].forecast.above_critical <= 0.10
+    assert "regimen-risky" in {c.id for c in middling.cautions}
     texts = [c.text for c in consult.cautions if c.id == "regimen-too-risky"]
     assert any(t.startswith("360 mg") for t in texts)
     assert not any(t.startswith("300 mg") for t in texts)
@@ -156,7 +159,7 @@ def test_an_estimate_without_its_certificate_is_stopped(monkeypatch: pytest.Monk
     assert consult.table == ()
     assert consult.stopped
     stop = next(c for c in consult.cautions if c.id == "estimate-not-trusted")
-    assert stop.text == "The whole-record estimate cannot be trusted here: two grids differ by 3 %."
+    assert stop.text == "The estimate cannot be trusted here: two grids differ by 3 %."
 
 
 def test_the_methods_stand_side_by_side() -> None:
@@ -177,7 +180,13 @@ def test_one_level_is_enough_for_the_whole_record() -> None:
 
 def test_a_single_open_ended_line_is_a_record() -> None:
     case = plain(
-        doses=[{"form": "extended-capsule", "daily": [{"time": "21:00", "amount": "300 mg"}], "for_about": "3 months"}],
+        doses=[
+            {
+                "form": "extended-capsule",
+                "daily": [{"time": "21:00", "amount": "300 mg"}],
+                "for_about": "3 months",
+            }
+        ],
         levels=[{"value": "8 mg/L", "kind": "total", "drawn": "2026-12-01 07:00"}],
     )
     consult = run_consult(case)
