@@ -17,7 +17,8 @@ from pathlib import Path
 from typing import Any
 
 from pkcalc import units
-from pkcalc.drugs.profile import Binding, Fact, Population, Profile, RateCap, Table, drug_names, load_profile
+from pkcalc.drugs.profile import Binding, Population, Profile, RateCap, drug_names, load_profile
+from pkcalc.drugs.table import Fact, Table
 from pkcalc.errors import CaseError, Problem
 from pkcalc.units import show, show_number
 

@@ -15,10 +15,8 @@ from hypothesis import strategies as st
 from scipy.integrate import solve_ivp
 
 from pkcalc import formulas
-from pkcalc.drugs import profile as module
 from pkcalc.drugs.profile import (
     SCOPES,
-    Fact,
     Population,
     Profile,
     describe,
@@ -27,6 +25,7 @@ from pkcalc.drugs.profile import (
     log_sd,
     parse_profile,
 )
+from pkcalc.drugs.table import FILE_UNITS, Fact
 from pkcalc.errors import CaseError, DrugFileError
 from pkcalc.sources import STATUSES, all_sources
 
@@ -813,7 +812,7 @@ def test_a_drug_whose_population_must_be_chosen() -> None:
 
 
 def test_no_kind_of_unit_is_missing_from_the_list() -> None:
-    for kind, labels in module.FILE_UNITS.items():
+    for kind, labels in FILE_UNITS.items():
         assert labels, kind
         assert all(factor > 0 for factor in labels.values()), kind
 
