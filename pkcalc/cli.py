@@ -369,3 +369,99 @@ def form(port: int) -> None:
     command = [sys.executable, "-m", "streamlit", "run", str(folder / "page.py"), "--server.port", str(port)]
     os.chdir(folder)
     os.execv(sys.executable, command)
+
+
+# --- cases from elsewhere, and a second person's entry ---------------------------------------------------
+
+
+@cli.command("from-fhir")
+@click.argument("bundle", metavar="BUNDLE", type=click.Path(path_type=Path, exists=True, dir_okay=False))
+@click.option("--drug", default="phenytoin", show_default=True, help="A drug of `pkcalc drugs`.")
+@click.option(
+    "--product",
+    "products",
+    multiple=True,
+    metavar="PRODUCT=FORM",
+    help="Your answer to which form a product is, by its code or text in the bundle; repeat per product.",
+)
+@_format
+@_out
+def from_fhir(bundle: Path, drug: str, products: tuple[str, ...], output_format: str, out: Path | None) -> None:
+    """A FHIR R4 bundle in, a case file out, with a list of what was not understood."""
+    from pkcalc.case import dump_case_file
+    from pkcalc.errors import CaseError, Problem
+    from pkcalc.fhir import load_bundle
+
+    named: dict[str, str] = {}
+    for given in products:
+        product, mark, form_name = given.rpartition("=")
+        if not mark or not product:
+            raise CaseError(
+                Problem("--product", f'"{given[:40]}" was given', "PRODUCT=FORM", "Put = between the two")
+            )
+        named[product] = form_name
+    found = load_bundle(bundle, drug=drug, products=named)
+    text = dump_case_file(found.file)
+    if out is not None:
+        out.write_text(text, encoding="utf-8")
+    if output_format == "json":
+        case = found.file.model_dump(mode="json", by_alias=True, exclude_defaults=True)
+        _print_json({"pkcalc_import": 1, "version": __version__, **found.as_dict(), "case": case})
+        return
+    click.echo(found.report(), err=True, nl=False)
+    if out is None:
+        click.echo(text, nl=False)
+    else:
+        click.echo(f"Written: {out}", err=True)
+
+
+@cli.command("from-csv")
+@click.argument("doses", metavar="DOSES", type=click.Path(path_type=Path, exists=True, dir_okay=False))
+@click.argument("levels", metavar="LEVELS", type=click.Path(path_type=Path, exists=True, dir_okay=False))
+@click.option("--drug", default="phenytoin", show_default=True, help="A drug of `pkcalc drugs`.")
+@click.option("--weight", default="", help='For example "70 kg".')
+@click.option("--age", default="", help='For example "45 years".')
+@_format
+@_out
+def from_csv(
+    doses: Path, levels: Path, drug: str, weight: str, age: str, output_format: str, out: Path | None
+) -> None:
+    """Two CSV files in, doses and levels, a case file out."""
+    from pkcalc.case import dump_case_file
+    from pkcalc.spreadsheet import load_pair
+
+    file = load_pair(doses, levels, drug=drug, patient={"weight": weight, "age": age})
+    if out is not None:
+        out.write_text(dump_case_file(file), encoding="utf-8")
+        click.echo(f"Written: {out}", err=True)
+    if output_format == "json":
+        case = file.model_dump(mode="json", by_alias=True, exclude_defaults=True)
+        _print_json({"pkcalc_import": 1, "version": __version__, "ready": True, "case": case})
+    elif out is None:
+        click.echo(dump_case_file(file), nl=False)
+
+
+@cli.command()
+@click.argument("first", metavar="CASE", type=click.Path(path_type=Path, exists=True, dir_okay=False))
+@click.argument("second", metavar="CASE", type=click.Path(path_type=Path, exists=True, dir_okay=False))
+@_format
+@_out
+@_site
+def compare(first: Path, second: Path, output_format: str, out: Path | None, site: Path | None) -> None:
+    """Every difference between two entries of the same case (blind re-entry by the second pharmacist).
+
+    Exit status 0 where the entries agree, 1 where they differ, 2 where one cannot be read.
+    """
+    from pkcalc.case import load_case
+    from pkcalc.note.data import dumps
+    from pkcalc.reentry import compare as compare_cases
+
+    found = compare_cases(load_case(first), load_case(second), site)
+    text = dumps(found.as_dict()) if output_format == "json" else found.text()
+    if out is None:
+        click.echo(text, nl=False)
+    else:
+        out.write_text(text, encoding="utf-8")
+        click.echo(f"Written: {out}", err=True)
+    if not found.equal:
+        sys.exit(1)
