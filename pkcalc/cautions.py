@@ -117,11 +117,10 @@ def _levels_before_change(s: State, p: Mapping[str, Any]) -> list[Words]:
         start = since.date()
         if any(o.level.drawn is not None and o.level.drawn.date() > start for o in s.observations):
             return []
-    interactions = s.profile.interactions
     words = [w for w in re.split(r"[^a-z]+", given.detail.lower()) if len(w) >= 5]
     raises = []
     for names, effect in ((s.profile.interactions.raising, "raise"), (s.profile.interactions.lowering, "lower")):
-        hits = [name for name in names if any(word in name.lower() for word in words)]
+        hits = [name for name in names if set(words) & set(name.lower().split())]
         if hits:
             raises.append(f"{', '.join(hits)}: known to {effect} the level while taken.")
     return [

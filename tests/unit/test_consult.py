@@ -58,7 +58,7 @@ def test_a_risky_regimen_is_not_offered() -> None:
     assert not risky.offered
     assert safe.forecast.above_critical < 0.05
     assert safe.offered
-    middling = run_consult(plain(method="two levels", levels=levels("8 mg/L", "17 mg/L"), proposed=proposing("340 mg")))
+    middling = run_consult(plain(method="two levels", levels=levels("8 mg/L", "17 mg/L"), proposed=proposing("360 mg")))
     assert 0.05 < middling.proposed[0].forecast.above_critical <= 0.10
     assert "regimen-risky" in {c.id for c in middling.cautions}
     texts = [c.text for c in consult.cautions if c.id == "regimen-too-risky"]
