@@ -659,9 +659,9 @@ def check_case(file: CaseFile) -> Case:
             "Doses", f"{len(file.doses):,} lines were given", f"at most {MAX_LINES_OF_RECORD:,}", "Use repeated regimens"
         )
     levels = tuple(
-        x
+        read
         for i, level in enumerate(file.levels)
-        if (x := _level(i, level, check, profile, len(file.doses))) is not None
+        if (read := _level(i, level, check, profile, len(file.doses))) is not None
     )
     albumin = _albumin(file.albumin, "Albumin", check)
     context = _context(file, check)
@@ -676,9 +676,9 @@ def check_case(file: CaseFile) -> Case:
                 "Change the aim or the target range",
             )
     proposed = tuple(
-        x
+        regimen
         for i, p in enumerate(file.proposed)
-        if (x := _regimen(p, f"Proposed regimen {i + 1}", check, profile)) is not None
+        if (regimen := _regimen(p, f"Proposed regimen {i + 1}", check, profile)) is not None
     )
     chosen = None
     if file.chosen is not None and file.chosen.regimen is not None:
@@ -695,7 +695,7 @@ def check_case(file: CaseFile) -> Case:
             "Plan, shelf", f'"{file.plan.shelf}" was given', ", ".join(profile.shelves), "Choose one of these shelves"
         )
     earlier = tuple(
-        x for i, e in enumerate(file.forecast_then) if (x := _earlier(i, e, check, profile)) is not None
+        then for i, e in enumerate(file.forecast_then) if (then := _earlier(i, e, check, profile)) is not None
     )
     step = None
     if file.plan.largest_step:

@@ -104,8 +104,8 @@ def fail(error: CaseError | CannotEstimate | DrugFileError, as_json: bool) -> No
         _print_json(failure_data(error))
     elif isinstance(error, CaseError):
         click.echo("The input must be mended first:", err=True)
-        for problem in error.problems:
-            click.echo(f"- {problem.text}", err=True)
+        for found in error.problems:
+            click.echo(f"- {found.text}", err=True)
     else:
         click.echo(f"No answer: {error}", err=True)
     sys.exit(2 if isinstance(error, CaseError) else 1)
@@ -276,7 +276,7 @@ def case_of_pairs(
             patient=PatientFile(weight=weight, age=age),
             albumin=AlbuminFile(value=albumin) if albumin else None,
             doses=tuple(rows),
-            levels=tuple(LevelFile(value=v, kind=kind, on_dose=i + 1) for i, v in enumerate(levels)),  # type: ignore[arg-type]
+            levels=tuple(LevelFile(value=v, kind=kind, on_dose=i + 1) for i, v in enumerate(levels)),
             aim=aim,
             proposed=wanted,
         )
