@@ -13,8 +13,9 @@ from pkcalc.dosing import Regimen
 from pkcalc.drugs.profile import Profile
 from pkcalc.estimate.result import Estimate
 from pkcalc.forecast import Goal, fully_taken
-from pkcalc.levels import LabScale, Observation
-from pkcalc.plan import limits
+from pkcalc.levels import LabScale, Observation, total_spread
+from pkcalc.plan import limits, loading, nextlevel, pausing, switching
+from pkcalc.plan import overlay as overlaying
 from pkcalc.plan.candidates import (
     HOURS,
     Candidate,
@@ -73,7 +74,8 @@ class Plan:
 
     today: where the patient stands. every: all regimens of the shelf with the present and the pharmacist's own, by
     daily dose. table: those worth printing, with trough, peak and named days. present, own: of them. ranked: offered
-    regimens by expected loss, only where asked for. lines: what must be said beside the table.
+    regimens by expected loss, only where asked for. lines: what must be said beside the table. no_load, no_next_level:
+    why there is none. overlay: the present and the chosen regimen (or the pharmacist's first) laid over each other.
     """
 
     shelf: ShelfInUse
@@ -85,6 +87,13 @@ class Plan:
     ranked: tuple[Candidate, ...]
     step: StepLimit | None
     lines: tuple[str, ...]
+    loads: tuple[loading.Load, ...]
+    no_load: tuple[str, ...]
+    pause: pausing.Pause | None
+    switches: tuple[switching.Switch, ...]
+    next_level: nextlevel.NextLevel | None
+    no_next_level: str
+    overlay: overlaying.Overlay | None
     setting: Setting
 
 
@@ -149,20 +158,95 @@ def make(
     every = candidates(made, given, setting)
     forms = course.forms if course is not None else ()
     table = with_courses(shown(every, setting, forms=forms), setting)
-    chosen = {id(c.regimen): c for c in table}
-    every = tuple(chosen.get(id(c.regimen), c) for c in every)
+    worked_out = {id(c.regimen): c for c in table}
+    every = tuple(worked_out.get(id(c.regimen), c) for c in every)
+    present = next((c for c in every if c.present and not c.proposed), None)
+    own = tuple(next(c for c in every if c.regimen is r and c.proposed) for r in case.proposed)
+    next_on = own[0] if own else present
+    given_loads, no_load = _loads(case, setting, now, shelf, next_on, stops)
+    asked = _asked(case, setting, now, observations, next_on)
+    level = None if asked is None or "next level" in stops else nextlevel.next_level(asked)
     return Plan(
         shelf=shelf,
         today=now,
         every=every,
         table=tuple(c for c in table if not c.proposed),
-        present=next((c for c in every if c.present and not c.proposed), None),
-        own=tuple(next(c for c in every if c.regimen is r and c.proposed) for r in case.proposed),
+        present=present,
+        own=own,
         ranked=by_loss(every, setting) if case.file.plan.order_by_loss else (),
         step=step,
         lines=_lines(setting, shelf, share, taken_words),
+        loads=given_loads,
+        no_load=no_load,
+        pause=pausing.pause(case, now, setting, every),
+        switches=() if setting.refused else switching.switches(case, setting, shelf.products),
+        next_level=level,
+        no_next_level="" if level is not None else _why_no_next_level(setting, asked, stops),
+        overlay=overlaying.overlay([c for c in (present, next_on) if c is not None][: 2 if own else 1], setting),
         setting=setting,
     )
+
+
+def _loads(
+    case: Case,
+    setting: Setting,
+    now: Today,
+    shelf: ShelfInUse,
+    follows: Candidate | None,
+    stops: frozenset[str],
+) -> tuple[tuple[loading.Load, ...], tuple[str, ...]]:
+    if "loading" in stops:
+        return (), ("A stop on the data blocks loads.",) if case.file.plan.load else ()
+    ward = loading.Ward(
+        case=case,
+        profile=setting.profile,
+        site=setting.site,
+        estimate=setting.central,
+        goal=setting.goal,
+        now=now,
+        products=shelf.products,
+        maintenance_mg_per_day=follows.rate_mg_per_day if follows is not None else 0.0,
+        maintenance_words=follows.words if follows is not None else "no maintenance dose",
+    )
+    return loading.loads(ward)
+
+
+def _asked(
+    case: Case,
+    setting: Setting,
+    now: Today,
+    observations: tuple[Observation, ...],
+    next_on: Candidate | None,
+) -> nextlevel.Asked | None:
+    """The regimen whose next level is planned: the chosen one, else the pharmacist's first, else the present."""
+    regimen = case.chosen or (next_on.regimen if next_on is not None else None)
+    if regimen is None:
+        return None
+    latest = observations[-1] if observations else None
+    noise = latest.log_sd if latest is not None else total_spread(case, setting.profile, setting.site).log_sd
+    return nextlevel.Asked(
+        regimen=regimen,
+        words=regimen.words(setting.profile),
+        estimate=setting.central,
+        taken=setting.taken,
+        now=now,
+        goal=setting.goal,
+        scale=setting.scale,
+        profile=setting.profile,
+        site=setting.site,
+        noise_log_sd=noise,
+        free=latest is not None and latest.level.kind == "free",
+    )
+
+
+def _why_no_next_level(setting: Setting, asked: nextlevel.Asked | None, stops: frozenset[str]) -> str:
+    if "next level" in stops:
+        return "A stop blocks the next level."
+    if setting.central.volume_L is None:
+        return "No day can be named for the next level without a weight: there is no volume."
+    if asked is None:
+        return "No regimen is given, chosen or proposed, so no next level can be planned."
+    return "No draw day of the laboratory falls within the next two weeks."
 
 
 #: A change of dose shows little before this; the first draw after it is the next feasible one.
@@ -193,9 +277,7 @@ def _words(regimen: Regimen, profile: Profile, shelf: ShelfInUse) -> tuple[str, 
         parts.append(" and ".join(part_words(p, profile) for p in made))
     same = len(set(parts)) == 1
     times = regimen.interval_words() if same and not regimen.by_clock else "daily"
-    return regimen.words(
-        profile
-    ), f"{parts[0] if same and len(parts) == 1 else ', then '.join(parts)} {times}"
+    return regimen.words(profile), f"{parts[0] if same and len(parts) == 1 else ', then '.join(parts)} {times}"
 
 
 def _hours(case: Case) -> dict[int, tuple[float, ...]]:

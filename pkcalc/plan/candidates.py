@@ -114,9 +114,7 @@ class Setting:
     hours: Mapping[int, tuple[float, ...]] = field(default_factory=lambda: HOURS)
 
 
-def as_regimen(
-    made: Dispensable, profile: Profile, hours: Mapping[int, tuple[float, ...]] = HOURS
-) -> Regimen:
+def as_regimen(made: Dispensable, profile: Profile, hours: Mapping[int, tuple[float, ...]] = HOURS) -> Regimen:
     """A dispensable regimen with clock times, for the engine. Alternate days repeat every 48 h."""
     times = hours[made.times_a_day]
     intakes = []
@@ -163,9 +161,7 @@ def candidates(
     full = (
         central
         if setting.taken is setting.central
-        else forecast_rates(
-            setting.taken, rates, setting.goal, setting.scale, present_mg_per_L=setting.start_mg_per_L
-        )
+        else forecast_rates(setting.taken, rates, setting.goal, setting.scale, present_mg_per_L=setting.start_mg_per_L)
     )
     dangers = danger(setting, rates)
     found = [
@@ -217,9 +213,7 @@ def danger(setting: Setting, rates_mg_per_day: Sequence[float]) -> Floats:
         )
         either = high[:, few.chosen]
         either[:, over] |= then > critical
-        return np.clip(
-            np.round(np.maximum(either @ few.estimate.weights, high @ estimate.weights), 12), 0.0, 1.0
-        )
+        return np.clip(np.round(np.maximum(either @ few.estimate.weights, high @ estimate.weights), 12), 0.0, 1.0)
     chance: Floats = np.clip(np.round(high @ estimate.weights, 12), 0.0, 1.0)
     return chance
 
@@ -291,9 +285,7 @@ def shown(
         edges = np.linspace(low, high, room + 1)
         kept = []
         for a, b in zip(edges, edges[1:], strict=False):
-            near = [
-                c for c in rest if a <= c.rate_mg_per_day < b or (b == edges[-1] and c.rate_mg_per_day == b)
-            ]
+            near = [c for c in rest if a <= c.rate_mg_per_day < b or (b == edges[-1] and c.rate_mg_per_day == b)]
             if near:
                 kept.append(min(near, key=_plainness))
         rest = kept
@@ -320,9 +312,7 @@ def with_courses(some: Sequence[Candidate], setting: Setting) -> tuple[Candidate
     """The same regimens with trough and peak at plateau and the level on named days; unchanged without a volume."""
     if setting.central.volume_L is None or not some:
         return tuple(some)
-    days = levels_on_days(
-        setting.central, [c.rate_mg_per_day for c in some], NAMED_DAYS, setting.start_mg_per_L
-    )
+    days = levels_on_days(setting.central, [c.rate_mg_per_day for c in some], NAMED_DAYS, setting.start_mg_per_L)
     swings = swing(setting.central, [c.regimen for c in some], setting.profile)
     return tuple(
         replace(c, on_days=tuple(zip(NAMED_DAYS, d, strict=True)), trough=low, peak=high)
@@ -347,9 +337,7 @@ def swing(estimate: Estimate, regimens: Sequence[Regimen], profile: Profile) -> 
         unit = flow.Repeated(
             repeated.cycle_day,
             tuple(
-                flow.Dose(
-                    round(d.time_day - start, 9), round(d.amount_mg / size, 9), d.duration_day, d.absorption
-                )
+                flow.Dose(round(d.time_day - start, 9), round(d.amount_mg / size, 9), d.duration_day, d.absorption)
                 for d in repeated.doses
             ),
         )

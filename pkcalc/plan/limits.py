@@ -67,9 +67,7 @@ def step_limit(
         step = case.largest_step_mg_per_day
         words = f"asked for in the case: {show(step, form.amount_unit + '/day')} of {form.words}"
     active = step * form.active_fraction
-    forecast = forecast_rate(
-        taken, present_mg_per_day + active, goal, scale, present_mg_per_L=now.start_mg_per_L
-    )
+    forecast = forecast_rate(taken, present_mg_per_day + active, goal, scale, present_mg_per_L=now.start_mg_per_L)
     return StepLimit(active, judged, words, forecast)
 
 

@@ -190,11 +190,7 @@ def _dispensable(
     for row in table[order[first]]:
         options, combos, days = made[int(row[-2])]
         doses = tuple(
-            tuple(
-                Part(p.id, float(u))
-                for p, u in zip(options.products, options.units[place], strict=True)
-                if u > 0
-            )
+            tuple(Part(p.id, float(u)) for p, u in zip(options.products, options.units[place], strict=True) if u > 0)
             for place in combos[int(row[-1])]
         )
         active = float(options.active_mg[combos[int(row[-1])]].sum()) / days
@@ -233,9 +229,7 @@ def _with_replacement(n: int, times: int) -> NDArray[np.intp]:
     return np.array(list(combinations_with_replacement(range(n), times)), dtype=np.intp).reshape(-1, times)
 
 
-def _combos(
-    options: _Options, forms: Mapping[str, Form], times: int, days: int, largest: float
-) -> NDArray[np.intp]:
+def _combos(options: _Options, forms: Mapping[str, Form], times: int, days: int, largest: float) -> NDArray[np.intp]:
     """Which options at which dose times: amounts rising through the day, forms at times allowed for them."""
     n = len(options.active_mg)
     if any(p.unit == "mL" for p in options.products):
@@ -258,9 +252,7 @@ def _combos(
     return kept
 
 
-def _keys(
-    options: _Options, combos: NDArray[np.intp], times: int, days: int, number: int
-) -> NDArray[np.float64]:
+def _keys(options: _Options, combos: NDArray[np.intp], times: int, days: int, number: int) -> NDArray[np.float64]:
     """One row per regimen, sorted by columns: active amount, then how simple it is, then where it is kept."""
     amounts = options.active_mg[combos]
     units = options.units[combos]
@@ -303,9 +295,7 @@ def part_words(part: Part, profile: Profile) -> str:
 
 def dispense_words(regimen: Dispensable, profile: Profile) -> str:
     """What is dispensed and when: '1 capsule of 300 mg and 2 capsules of 30 mg once daily'."""
-    return _timed(
-        [" and ".join(part_words(p, profile) for p in dose) for dose in regimen.doses], regimen.days
-    )
+    return _timed([" and ".join(part_words(p, profile) for p in dose) for dose in regimen.doses], regimen.days)
 
 
 def regimen_words(regimen: Dispensable, profile: Profile) -> str:
@@ -318,8 +308,7 @@ def regimen_words(regimen: Dispensable, profile: Profile) -> str:
             amounts[product.form] = amounts.get(product.form, 0.0) + part.units * product.mg_per_unit
         named.append(
             " and ".join(
-                f"{show(mg, profile.forms[f].amount_unit, 6)} {profile.forms[f].words}"
-                for f, mg in amounts.items()
+                f"{show(mg, profile.forms[f].amount_unit, 6)} {profile.forms[f].words}" for f, mg in amounts.items()
             )
         )
     return _timed(named, regimen.days)
@@ -338,9 +327,7 @@ def _timed(doses: Sequence[str], days: int) -> str:
     return ", ".join(words[:-1]) + " and " + words[-1]
 
 
-def made_from(
-    labelled_mg: float, form: str, products: Iterable[str], profile: Profile
-) -> tuple[Part, ...] | None:
+def made_from(labelled_mg: float, form: str, products: Iterable[str], profile: Profile) -> tuple[Part, ...] | None:
     """One dose of a form from the shelf with the fewest units of at most two products; None where it cannot be."""
     mine = [profile.products[p] for p in products if profile.products[p].form == form]
     best: tuple[tuple[int, float], tuple[Part, ...]] | None = None

@@ -1,0 +1,526 @@
+"""Loads and top-ups: the amount from the present level to an aim, as it is ordered, and what it would do."""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass
+from itertools import product as every_pair
+
+import numpy as np
+
+from pkcalc import flow, formulas
+from pkcalc.case import QUESTIONS, Case
+from pkcalc.clock import show_time
+from pkcalc.dosing import Intake, absorption_of, active_mg
+from pkcalc.drugs.profile import IvLine, OralLoad, Product, Profile, RateCap
+from pkcalc.estimate.result import Band, Estimate
+from pkcalc.forecast import TIME_DRAWS, Goal, bands, draws_of, fewer_draws
+from pkcalc.plan.candidates import percent
+from pkcalc.plan.limits import is_child
+from pkcalc.plan.present import Floats, Today
+from pkcalc.record import Dose, Record
+from pkcalc.site import Site
+from pkcalc.units import show, show_number
+
+#: From this age an infusion runs at the slower rate (as the drug file's group "elderly or heart disease").
+ELDERLY_YEARS = 65.0
+#: Whole vials are taken where that changes the amount by no more than this; else a measured volume.
+VIAL_ROUNDING = 0.05
+#: Days after a load for which the level with the maintenance dose is named.
+FOLLOWED_DAYS = (1.0, 3.0, 7.0, 14.0)
+#: Which answers mean that an exclusion of the drug file holds.
+_EXCLUSIONS: Mapping[str, tuple[str, ...]] = {
+    "renal disease": ("renal_failure", "renal_reduced"),
+    "hepatic disease": ("hepatic_failure",),
+}
+
+
+@dataclass(frozen=True)
+class Load:
+    """One load or top-up.
+
+    wanted_mg: labelled amount by the formula; amount_mg: as ordered, after rounding, ceilings and splitting. parts:
+    (hours from the first, labelled mg). minutes: shortest infusion time, None by mouth. rise: what the ordered amount
+    adds; after: level at the end (by mouth: when drawn); at_draw: level draw_after_h hours after the end or, by mouth,
+    after the first part; followed: days from the load and the level with the maintenance dose. above_high,
+    above_critical: chances for `after`. order: the complete line.
+    """
+
+    form: str
+    product: str
+    route: str
+    aim_mg_per_L: float
+    wanted_mg: float
+    amount_mg: float
+    active_mg: float
+    parts: tuple[tuple[float, float], ...]
+    minutes: float | None
+    volume_L: Band
+    rise: Band
+    after: Band
+    at_draw: Band
+    draw_after_h: float
+    followed: tuple[tuple[float, Band], ...]
+    maintenance: str
+    above_high: float
+    above_critical: float
+    order: tuple[str, ...]
+    notes: tuple[str, ...]
+    offered: bool
+    why_not: tuple[str, ...]
+
+    @property
+    def unit_words(self) -> str:
+        return f"{show_number(self.amount_mg, 6)}"
+
+
+@dataclass(frozen=True)
+class Ward:
+    """What every load of one plan is worked out from. maintenance: active mg/day that follows, with its words."""
+
+    case: Case
+    profile: Profile
+    site: Site
+    estimate: Estimate
+    goal: Goal
+    now: Today
+    products: tuple[str, ...]
+    maintenance_mg_per_day: float
+    maintenance_words: str
+
+
+def loads(ward: Ward) -> tuple[tuple[Load, ...], tuple[str, ...]]:
+    """The loads for the form asked for, or for every form of the shelf where the level is below the range.
+
+    Returns them with what must be said where there are none.
+    """
+    profile, case = ward.profile, ward.case
+    asked = case.file.plan.load
+    if profile.loading is None:
+        return (), (f"No loads are described for {profile.name}.",) if asked else ()
+    measured = ward.now.measured_mg_per_L
+    if asked is None and (measured is None or measured >= ward.goal.low_mg_per_L):
+        return (), ()
+    if ward.estimate.volume_L is None:
+        return (), ("No load can be worked out without a weight: there is no volume.",)
+    forms = list(dict.fromkeys(profile.products[p].form for p in ward.products))
+    if asked is not None:
+        if asked.form not in forms:
+            return (), (f"No load of {profile.forms[asked.form].words}: there is no such product on the shelf in use.",)
+        forms = [asked.form]
+    level = ward.now.level
+    aim = case.load_aim_mg_per_L or ward.goal.aim_mg_per_L
+    if level is not None and level.median >= aim:
+        return (), (
+            f"No load: the level today ({show(level.median, 'mg/L')}) is not below the aim of {show(aim, 'mg/L')}.",
+        )
+    found = []
+    for form in forms:
+        mine = [profile.products[p] for p in ward.products if profile.products[p].form == form]
+        if form in profile.loading.iv_lines:
+            found.append(into_vein(ward, mine[0], aim))
+        elif profile.loading.oral is not None and profile.forms[form].route == "oral":
+            made = by_mouth(ward, mine, aim)
+            if made is not None:
+                found.append(made)
+    return tuple(found), ()
+
+
+def wanted_active(ward: Ward, aim_mg_per_L: float) -> float:
+    """Active drug that lifts the median level to the aim: median V x (aim - now) [mg]."""
+    assert ward.estimate.volume_L is not None
+    volume = ward.estimate.summary["volume_L"].median
+    now = ward.now.level.median if ward.now.level is not None else 0.0
+    return float(
+        formulas.top_up_amount(present_mg_per_L=now, aim_mg_per_L=aim_mg_per_L, volume_L=volume, salt_factor=1.0)
+    )
+
+
+def into_vein(ward: Ward, product: Product, aim_mg_per_L: float) -> Load:
+    """A load into a vein: ceilings, whole vials, infusion time at the rate cap, the complete order line."""
+    profile, case = ward.profile, ward.case
+    form = profile.forms[product.form]
+    assert profile.loading is not None
+    line = profile.loading.iv_lines[product.form]
+    wanted = float(
+        formulas.product_amount(
+            active_mg=wanted_active(ward, aim_mg_per_L),
+            salt_factor=form.salt_factor,
+            bioavailability=form.bioavailability,
+        )
+    )
+    most, notes = ceiling(ward, wanted, form.amount_unit)
+    amount = round_to_vials(min(wanted, most), product, most)
+    caps, cap_notes = rate_caps(case, profile, ward.site, product.form)
+    notes += cap_notes
+    minutes = infusion_minutes(amount, caps, case.patient.weight_kg) if caps else None
+    active = active_mg(Intake(form.id, 0.0, amount), profile)
+    few = fewer_draws(ward.estimate, TIME_DRAWS)
+    start = draws_of(ward.now.start_mg_per_L, few)
+    days = (minutes or 0.0) / 1440
+    volume = few.estimate.volume_L
+    assert volume is not None
+    end = _after(few.estimate, days, start, active / days) if days else start + active / volume
+    draw_h = profile.sampling.after_iv_h or 0.0
+    drawn = _after(few.estimate, draw_h / 24, end, ward.maintenance_mg_per_day)
+    why = []
+    if case.answer("heart_block") == "yes":
+        why.append(
+            "Heart block, bradycardia or serious heart disease is answered yes. Contraindicated in "
+            + ", ".join(line.contraindications)
+            + ": these must be excluded first."
+        )
+    return _load(
+        ward,
+        product=product,
+        route="into a vein",
+        aim=aim_mg_per_L,
+        wanted=wanted,
+        amount=amount,
+        parts=((0.0, amount),),
+        minutes=minutes,
+        start=start,
+        end=end,
+        drawn=drawn,
+        draw_after_h=draw_h,
+        order=iv_order(product, amount, minutes, caps, line, profile),
+        notes=notes,
+        why=why,
+    )
+
+
+def by_mouth(ward: Ward, products: Sequence[Product], aim_mg_per_L: float) -> Load | None:
+    """A load by mouth in parts hours apart: largest part and total as published, its exclusions, level a day later."""
+    profile, case = ward.profile, ward.case
+    assert profile.loading is not None
+    oral = profile.loading.oral
+    assert oral is not None
+    unit = _load_unit(products, oral)
+    if unit is None:
+        return None
+    form = profile.forms[unit.form]
+    wanted = float(
+        formulas.product_amount(
+            active_mg=wanted_active(ward, aim_mg_per_L),
+            salt_factor=form.salt_factor,
+            bioavailability=form.bioavailability,
+        )
+    )
+    most, notes = ceiling(ward, wanted, form.amount_unit)
+    if min(wanted, most) > oral.total_mg:
+        notes.append(f"Cut to {show(oral.total_mg, form.amount_unit, 6)}, the largest load by mouth.")
+    parts = split(min(wanted, most, oral.total_mg), unit.mg_per_unit, oral)
+    if not parts:
+        return None
+    amount = sum(mg for _, mg in parts)
+    few = fewer_draws(ward.estimate, TIME_DRAWS)
+    start = draws_of(ward.now.start_mg_per_L, few)
+    draw_h = profile.sampling.after_oral_load_h or oral.maintenance_after_h
+    doses = tuple(Dose(h / 24, mg * form.active_fraction, absorption=absorption_of(form)) for h, mg in parts)
+    volume = few.estimate.volume_L
+    assert volume is not None
+    record = Record(doses=(*ward.now.still_absorbed, *doses), start_day=0.0, start_mg=0.0)
+    end = flow.levels(
+        record,
+        (draw_h / 24,),
+        few.estimate.vmax_mg_per_day,
+        few.estimate.km_mg_per_L,
+        volume,
+        start_mg_per_L=start,
+    )[:, 0]
+    why: list[str] = []
+    for excluded in oral.excluded:
+        answers = {q: case.answer(q) for q in _EXCLUSIONS.get(excluded, ())}
+        if "yes" in answers.values():
+            why.append(f"No load by mouth in {excluded}.")
+        elif any(a != "no" for a in answers.values()) or not answers:
+            asked = " ".join(QUESTIONS[q] for q, a in answers.items() if a != "no")
+            why.append(f"No load by mouth before {excluded} is excluded. {asked}".strip())
+    pieces = ", then ".join(
+        f"{show_number(mg / unit.mg_per_unit, 6)} x {show(unit.mg_per_unit, form.amount_unit, 6)}"
+        f" ({show(mg, form.amount_unit, 6)})" + (f" after {show_number(h)} h" if h else " at once")
+        for h, mg in parts
+    )
+    order = (
+        f"{show(amount, form.amount_unit, 6)} {form.words} by mouth in {len(parts)} parts: {pieces}.",
+        oral.setting,
+        f"Maintenance begins {show_number(oral.maintenance_after_h)} h after the first part.",
+    )
+    low, high = form.absorption.peak_h if form.absorption else (0.0, 0.0)
+    notes.append(
+        f"A single usual dose peaks at {show_number(low)} to {show_number(high)} h; larger amounts later, so the level "
+        "may still be rising when it is drawn."
+    )
+    return _load(
+        ward,
+        product=unit,
+        route="by mouth",
+        aim=aim_mg_per_L,
+        wanted=wanted,
+        amount=amount,
+        parts=parts,
+        minutes=None,
+        start=start,
+        end=end,
+        drawn=end,
+        draw_after_h=draw_h,
+        order=order,
+        notes=notes,
+        why=why,
+    )
+
+
+def _load(
+    ward: Ward,
+    *,
+    product: Product,
+    route: str,
+    aim: float,
+    wanted: float,
+    amount: float,
+    parts: tuple[tuple[float, float], ...],
+    minutes: float | None,
+    start: Floats,
+    end: Floats,
+    drawn: Floats,
+    draw_after_h: float,
+    order: tuple[str, ...],
+    notes: list[str],
+    why: list[str],
+) -> Load:
+    profile, goal = ward.profile, ward.goal
+    form = profile.forms[product.form]
+    active = amount * form.active_fraction
+    few = fewer_draws(ward.estimate, TIME_DRAWS).estimate
+    assert few.volume_L is not None
+    weights = few.weights
+    critical = float(np.round((end > goal.critical_mg_per_L) @ weights, 12))
+    if critical > ward.site.stop_chance:
+        why.append(
+            f"The chance of a level above {show(goal.critical_mg_per_L, 'mg/L')} after it is {percent(critical)}, "
+            f"above the limit of {percent(ward.site.stop_chance)}."
+        )
+    answer = ward.case.answer("recent_load")
+    if answer == "yes":
+        why.append("A load or a dose into a vein was given in the last 72 h: measure before giving more.")
+    elif answer != "no":
+        notes.append(
+            "Not stated whether a load or a dose into a vein was given in the last 72 h (emergency department, "
+            "ambulance, other hospital): ask first."
+        )
+    follow_from = np.asarray(drawn, dtype=np.float64)
+    days = [d for d in FOLLOWED_DAYS if d * 24 > draw_after_h]
+    followed = [
+        bands(_after(few, d - draw_after_h / 24, follow_from, ward.maintenance_mg_per_day)[None, :], weights)[0]
+        for d in days
+    ]
+    moment = ward.case.load_at or ward.now.moment
+    when = (
+        f"{show_number(draw_after_h)} h after the end"
+        if minutes is not None
+        else (f"{show_number(draw_after_h)} h after the first part")
+    )
+    draw = f"Draw a level {when}, not earlier"
+    if moment is not None:
+        after_min = (minutes or 0.0) + draw_after_h * 60
+        from datetime import timedelta
+
+        draw += f" (begun at {show_time(moment)}: from {show_time(moment + timedelta(minutes=after_min))})"
+    return Load(
+        form=product.form,
+        product=product.id,
+        route=route,
+        aim_mg_per_L=aim,
+        wanted_mg=wanted,
+        amount_mg=amount,
+        active_mg=active,
+        parts=parts,
+        minutes=minutes,
+        volume_L=ward.estimate.summary["volume_L"],
+        rise=bands((active / few.volume_L)[None, :], weights)[0],
+        after=bands(end[None, :], weights)[0],
+        at_draw=bands(drawn[None, :], weights)[0],
+        draw_after_h=draw_after_h,
+        followed=tuple(zip(days, followed, strict=True)),
+        maintenance=ward.maintenance_words,
+        above_high=float(np.round((end > goal.high_mg_per_L) @ weights, 12)),
+        above_critical=critical,
+        order=(*order, draw + "."),
+        notes=tuple(notes),
+        offered=not why,
+        why_not=tuple(why),
+    )
+
+
+def _after(estimate: Estimate, days: float, start: Floats, rate_mg_per_day: float) -> Floats:
+    assert estimate.volume_L is not None
+    return np.asarray(
+        formulas.level_after(
+            time_day=days,
+            start_mg_per_L=start,
+            dose_rate_mg_per_day=rate_mg_per_day,
+            vmax_mg_per_day=estimate.vmax_mg_per_day,
+            km_mg_per_L=estimate.km_mg_per_L,
+            volume_L=estimate.volume_L,
+        )
+    )
+
+
+def ceiling(ward: Ward, wanted_mg: float, unit: str) -> tuple[float, list[str]]:
+    """The largest single load [labelled mg], and what must be said where the wanted amount is above it.
+
+    The site's ceiling, else the published one; and never above the published amount per kg.
+    """
+    loading = ward.profile.loading
+    assert loading is not None
+    most = ward.site.largest_single_load_mg or loading.largest_single_mg
+    words = "local setting" if ward.site.largest_single_load_mg else "needs a local setting to exceed"
+    notes: list[str] = []
+    weight = ward.case.patient.weight_kg
+    highest = max(loading.mg_per_kg[1], (loading.status_mg_per_kg or loading.mg_per_kg)[1])
+    if weight is not None:
+        low, high = loading.mg_per_kg
+        notes.append(
+            f"That is {show(wanted_mg / weight, f'{unit}/kg')} by the formula; published loads are {show_number(low)} to "
+            f"{show(high, f'{unit}/kg')}, up to {show_number(highest)} in status epilepticus."
+        )
+        if highest * weight < min(most, wanted_mg):
+            most = highest * weight
+            words = f"{show(highest, f'{unit}/kg')}, the largest published"
+    if wanted_mg > most:
+        notes.append(
+            f"Cut from {show(wanted_mg, unit, 4)} to the ceiling of {show(most, unit, 4)} for one load ({words})."
+        )
+    return most, notes
+
+
+def round_to_vials(amount_mg: float, product: Product, most_mg: float) -> float:
+    """Whole vials where that changes the amount by at most 5 %, else the nearest measured volume; never above the
+    ceiling."""
+    step = product.smallest_step * product.mg_per_unit
+    best = _nearest(amount_mg, [v for v in _vial_sums(product, amount_mg * 1.5) if v <= most_mg + 1e-9])
+    if best is not None and abs(best - amount_mg) <= VIAL_ROUNDING * amount_mg:
+        return best
+    rounded = round(amount_mg / step) * step
+    if rounded > most_mg + 1e-9:
+        rounded = math.floor(most_mg / step + 1e-9) * step
+    return max(rounded, step)
+
+
+def _nearest(value: float, choices: Sequence[float]) -> float | None:
+    return min(choices, key=lambda x: (abs(x - value), x), default=None)
+
+
+def _vial_sums(product: Product, most_mg: float) -> list[float]:
+    sizes = [c * product.mg_per_unit for c in product.containers_mL]
+    if not sizes:
+        return []
+    counts = [range(int(most_mg / s) + 2) for s in sizes]
+    return sorted({sum(n * s for n, s in zip(c, sizes, strict=True)) for c in every_pair(*counts)} - {0.0})
+
+
+def vial_words(amount_mg: float, product: Product) -> str:
+    """'1 vial of 5 mL and 2 vials of 2 mL': the fewest that hold the amount, with the least left over."""
+    sizes = sorted(product.containers_mL, reverse=True)
+    if not sizes:
+        return ""
+    needed = amount_mg / product.mg_per_unit
+    counts = [range(int(needed / s) + 2) for s in sizes]
+    fitting = [c for c in every_pair(*counts) if sum(n * s for n, s in zip(c, sizes, strict=True)) >= needed - 1e-9]
+    best = min(fitting, key=lambda c: (sum(n * s for n, s in zip(c, sizes, strict=True)), sum(c)))
+    return " and ".join(
+        f"{n} vial{'' if n == 1 else 's'} of {show_number(s)} mL" for n, s in zip(best, sizes, strict=True) if n
+    )
+
+
+def rate_caps(case: Case, profile: Profile, site: Site, form: str) -> tuple[tuple[RateCap, ...], list[str]]:
+    """The infusion caps that hold for this patient (the slowest counts), and what must be said about them."""
+    age = case.patient.age_years
+    notes: list[str] = []
+    groups = ["child"] if is_child(case, profile) else ["adult"]
+    if age is None:
+        groups.append("risk")
+        notes.append("The age is not stated: the slower rate is used.")
+    elif age >= ELDERLY_YEARS or case.answer("heart_block") == "yes":
+        groups.append("risk")
+    elif case.answer("heart_block") != "no":
+        slower = site.rate_cap(profile, form, "risk")
+        if slower is not None:
+            notes.append(f"Heart disease is not stated. With it, the slower rate holds ({slower.words}).")
+    caps = [site.rate_cap(profile, form, g) for g in groups]
+    return tuple(c for c in caps if c is not None), notes
+
+
+def rate_mg_per_min(caps: Sequence[RateCap], weight_kg: float | None) -> float:
+    """The slowest of the caps [labelled mg/min]: flat, and per kg where one is given."""
+    flat = [c.mg_per_min for c in caps]
+    scaled = [c.mg_per_kg_min * weight_kg for c in caps if c.mg_per_kg_min is not None and weight_kg is not None]
+    return min(flat + scaled)
+
+
+def infusion_minutes(amount_mg: float, caps: Sequence[RateCap], weight_kg: float | None) -> float:
+    """The shortest infusion time at the cap, rounded up to whole minutes."""
+    return float(math.ceil(amount_mg / rate_mg_per_min(caps, weight_kg) - 1e-9))
+
+
+def iv_order(
+    product: Product,
+    amount_mg: float,
+    minutes: float | None,
+    caps: Sequence[RateCap],
+    line: IvLine,
+    profile: Profile,
+) -> tuple[str, ...]:
+    """The complete line of an order into a vein."""
+    form = profile.forms[product.form]
+    unit = form.amount_unit
+    low, high = line.concentration_mg_per_mL
+    millilitres = amount_mg / product.mg_per_unit
+    vials = vial_words(amount_mg, product)
+    caps_words = "; ".join(c.words for c in caps)
+    text = (
+        f"{show(amount_mg, unit, 6)} {form.words}: {show(millilitres, 'mL', 6)} of {product.words}"
+        + (f" ({vials})" if vials else "")
+        + f", in {line.diluent}, to a final volume of {show_number(amount_mg / high)} to "
+        f"{show(amount_mg / low, 'mL')} ({show_number(low)} to {show(high, f'{unit}/mL')})"
+        + (f", over at least {show_number(minutes, 4)} min" if minutes is not None else "")
+        + (f" ({caps_words})" if caps_words else "")
+        + "."
+    )
+    return (
+        text,
+        f"{_sentence(line.filter)} {_sentence(line.monitoring)}",
+        f"Not in: {', '.join(line.contraindications)}.",
+        f"Watch for {line.watch}.",
+    )
+
+
+def _sentence(text: str) -> str:
+    return text[0].upper() + text[1:] + ("" if text.endswith(".") else ".")
+
+
+def _load_unit(products: Sequence[Product], oral: OralLoad) -> Product | None:
+    """The largest solid size that divides every published part; None where there is none."""
+    fits = [
+        p
+        for p in products
+        if p.unit != "mL" and all(abs(mg / p.mg_per_unit - round(mg / p.mg_per_unit)) < 1e-9 for mg in oral.parts_mg)
+    ]
+    return max(fits, key=lambda p: p.mg_per_unit, default=None)
+
+
+def split(amount_mg: float, unit_mg: float, oral: OralLoad) -> tuple[tuple[float, float], ...]:
+    """Parts of an oral load as (hours from the first, mg): whole units, none above the largest part, the larger first.
+
+    The amount is rounded to the nearest whole unit; empty where that is none.
+    """
+    units = round(amount_mg / unit_mg)
+    while units * unit_mg > oral.total_mg + 1e-9:
+        units -= 1
+    per_part = int(oral.largest_part_mg / unit_mg + 1e-9)
+    if units <= 0 or per_part <= 0:
+        return ()
+    count = math.ceil(units / per_part)
+    even, extra = divmod(units, count)
+    return tuple((k * oral.hours_apart, (even + (1 if k < extra else 0)) * unit_mg) for k in range(count))
