@@ -289,8 +289,7 @@ def _prior(case: Case, profile: Profile, site: Site) -> Prior | None:
     weight, age = case.patient.weight_kg, case.patient.age_years
     if weight is None or (age is not None and age < profile.youngest_years):
         return None
-    name = case.population or site.population
-    population = profile.populations[name] if name else profile.default_population(age)
+    population = profile.populations[case.population] if case.population else site.population_for(profile, age)
     switched_on = tuple(m.id for m in population.modifiers.values() if m.question and case.answer(m.question) == "yes")
     return population.at(
         weight, age, height_cm=case.patient.height_cm, sex=cast(Sex, case.patient.sex), modifiers=switched_on
