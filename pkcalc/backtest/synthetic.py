@@ -16,9 +16,8 @@ from pkcalc import flow
 from pkcalc.drugs.profile import Prior
 from pkcalc.record import Absorption, Dose, Record
 
-
-#: An extended-release form: five hours of release, then quick absorption.
-EXTENDED = Absorption(ka_per_day=24.0, release_day=5 / 24)
+#: A form absorbed over some hours.
+CAPSULE = Absorption(ka_per_day=8.0)
 
 
 @dataclass(frozen=True)
@@ -41,7 +40,7 @@ class Ward:
     km_factor: float = 1.0
     doses_per_day: tuple[int, ...] = (1, 2, 3)
     first_mg_per_day: float = 300.0
-    absorption: Absorption = EXTENDED
+    absorption: Absorption = CAPSULE
 
 
 @dataclass(frozen=True)
@@ -78,9 +77,7 @@ def next_rate(rate_mg_per_day: float, level_mg_per_L: float) -> float:
     return max(rate_mg_per_day + change, _LEAST_MG_PER_DAY)
 
 
-def patients(
-    ward: Ward, prior: Prior, *, count: int, seed: int, first: int = 0
-) -> Iterator[SyntheticPatient]:
+def patients(ward: Ward, prior: Prior, *, count: int, seed: int, first: int = 0) -> Iterator[SyntheticPatient]:
     """Patients first .. first + count - 1 of a department; each depends on the seed and its own number
     only."""
     for number in range(first, first + count):
@@ -119,9 +116,7 @@ def _patient(ward: Ward, prior: Prior, number: int, chance: np.random.Generator)
             if yes
         ]
         level = float(flow.amounts(Record(doses=tuple(taken)), [end], vmax, km * volume)[0, 0]) / volume
-        noise = np.exp(
-            np.sqrt(np.log1p(ward.assay_cv**2) + np.log1p(ward.day_cv**2)) * chance.standard_normal()
-        )
+        noise = np.exp(np.sqrt(np.log1p(ward.assay_cv**2) + np.log1p(ward.day_cv**2)) * chance.standard_normal())
         if period == ward.levels:
             following = planned
             break

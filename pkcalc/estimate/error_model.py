@@ -2,11 +2,12 @@
 
 On the log scale, for levels j and k and one choice of (Vmax, kappa):
 
-    S_jk = [j = k] (assay_j^2 + day_j^2 + extra_j^2) + sum over doses i of G_ji G_ki p_i (1 - p_i)
+    S_jk = [j = k] (assay_j^2 + day_j^2 + extra_j^2) + sum over doses i of G_ji G_ki v_i + H_j H_k
 
-G_ji is the rise of ln level j per fractional rise of dose i, and p_i the chance that the dose differs from
-the record: so the same missed dose moves a level little where elimination is far from saturated and much
-where it is near, and levels that share doses share the error (`intake`).
+G_ji is the rise of ln level j per fractional rise of dose i, v_i the variance of that fraction where a share
+of the doses is missed unseen, and H_j what a better or worse habit does to level j (`intake`): so the same
+missed dose moves a level little where elimination is far from saturated and much where it is near, and levels
+that share doses share the error.
 
 One level may be wrong altogether: a mixture over "none" and "this one's spread is `wrong_level_factor` times
 as wide", which keeps every term Gaussian."""
@@ -76,9 +77,7 @@ class LevelData:
         ):
             if not (math.isfinite(value) and value >= 0):
                 found.append(
-                    Problem(
-                        f"{name}, {what}", f"{value:g} was given", "0 or more", "Check the assay's settings"
-                    )
+                    Problem(f"{name}, {what}", f"{value:g} was given", "0 or more", "Check the assay's settings")
                 )
         if not found and self.own_variance <= 0:
             found.append(
@@ -123,7 +122,7 @@ class RecordSpread:
             worst = max((share for _, share in shares), default=math.nan)
             found.append(
                 Problem(
-                    "Doses that differ from the record",
+                    "Doses missed unseen",
                     f"{100 * worst:g} % was given" if shares else "nothing was given",
                     "0 to 50 %, both included",
                     "A record that is wrong more often than that says nothing: observe dosing first",
@@ -132,7 +131,7 @@ class RecordSpread:
         if any(b[0] <= a[0] for a, b in pairwise(shares)):
             found.append(
                 Problem(
-                    "Doses that differ from the record",
+                    "Doses missed unseen",
                     "the periods are not in order",
                     "each period begins after the one before",
                     "Sort the periods by their first day",
@@ -176,12 +175,9 @@ class RecordSpread:
         if shares == [0.0]:
             return "takes every dose as recorded (observed dosing)"
         if len(shares) == 1:
-            return f"assumes that about {show_number(100 * shares[0], 2)} % of doses differ from the record"
+            return f"assumes that about {show_number(100 * shares[0], 2)} % of doses were missed unseen"
         least, most = show_number(100 * shares[0], 2), show_number(100 * shares[-1], 2)
-        return (
-            f"assumes that between {least} and {most} % of doses differ from the record, depending on who gave "
-            "them"
-        )
+        return f"assumes that between {least} and {most} % of doses were missed unseen, depending on who gave them"
 
 
 @dataclass(frozen=True)

@@ -44,7 +44,7 @@ from pkcalc.estimate.grid import (
     sobol,
     vmax_marginal,
 )
-from pkcalc.estimate.intake import IntakePlan, intake_gain, plan_intake
+from pkcalc.estimate.intake import IntakePlan, intake_gain, plan_intake, taken_on_average
 from pkcalc.estimate.result import Band, Estimate, LevelFit, Point, log_correlation
 from pkcalc.record import Before, FirstOrder, Record
 from pkcalc.units import show
@@ -299,7 +299,7 @@ def with_population_path(record: Record, first_order_per_day: float) -> Record:
 
 def _model(record: Record, levels: Sequence[LevelData], prior: Prior, spread: RecordSpread) -> _Model:
     _check(record, levels)
-    full = with_population_path(written_out(record), prior.first_order_per_day)
+    full = with_population_path(taken_on_average(written_out(record), spread), prior.first_order_per_day)
     intake = plan_intake(full, [x.time_day for x in levels], spread)
     volume = _Volume.of(prior)
     typical = _typical_per_day(volume.centre, volume.cov)
@@ -525,7 +525,10 @@ def _wrong_level(model: _Model, q: Quadrature) -> dict[int, float]:
     m = len(model.levels)
     per = weights.shape[1] // (m + 1) if model.spread.wrong_level_chance > 0 else weights.shape[1]
     by_part = weights.sum(axis=0).reshape(-1, per).sum(axis=1)
-    return {x.index: min(1.0, float(by_part[j + 1])) if len(by_part) > 1 else 0.0 for j, x in enumerate(model.levels)}
+    return {
+        x.index: min(1.0, float(by_part[j + 1])) if len(by_part) > 1 else 0.0
+        for j, x in enumerate(model.levels)
+    }
 
 
 def _log_evidence(q: Quadrature) -> float:

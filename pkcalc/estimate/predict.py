@@ -15,7 +15,7 @@ from numpy.typing import NDArray
 
 from pkcalc import flow
 from pkcalc.estimate.error_model import LevelData, RecordSpread, covariance
-from pkcalc.estimate.intake import intake_gain, plan_intake
+from pkcalc.estimate.intake import intake_gain, plan_intake, taken_on_average
 from pkcalc.estimate.posterior import with_population_path, written_out
 from pkcalc.estimate.result import Estimate
 from pkcalc.record import Dose, Record
@@ -44,7 +44,7 @@ def predicted_levels(
     if any."""
     assert estimate.volume_L is not None, "a whole-record estimate carries a volume"
     whole = replace(record, doses=(*record.doses, *following))
-    full = with_population_path(written_out(whole), first_order_per_day)
+    full = with_population_path(taken_on_average(written_out(whole), spread), first_order_per_day)
     days = [*(x.time_day for x in levels), *times_day]
     plan = plan_intake(full, days, spread)
     vmax, volume = estimate.vmax_mg_per_day, estimate.volume_L
