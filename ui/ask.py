@@ -89,9 +89,7 @@ def field(asked: Asked, label: str, key: str, *, most: int = 120, **more: Any) -
     _beside(asked, key)
 
 
-def choice(
-    asked: Asked, label: str, key: str, options: Sequence[str], words: Mapping[str, str] | None = None
-) -> None:
+def choice(asked: Asked, label: str, key: str, options: Sequence[str], words: Mapping[str, str] | None = None) -> None:
     """A choice with nothing chosen beforehand."""
     current = text(asked.values, key)
     offered = [*options, current] if current and current not in options else list(options)
@@ -308,8 +306,7 @@ def doses(asked: Asked, echoes: Mapping[int, str]) -> None:
     st.button("Add a dose line", key="add-dose", on_click=_add_row, args=("dose",))
     with st.expander("Paste single doses from a spreadsheet", expanded=False, key="paste"):
         look.say(
-            "Columns: time, amount with unit, and the form unless one is chosen for all. "
-            "One row for each dose given.",
+            "Columns: time, amount with unit, and the form unless one is chosen for all. One row for each dose given.",
             "hint",
         )
         choice(asked, "Form of all pasted doses", "pasted_form", forms, words)
@@ -348,9 +345,7 @@ def levels(asked: Asked, worth: Mapping[int, Sequence[str]]) -> None:
             with left:
                 st.text_input("Level as reported", key=f"level.{row}.value", max_chars=40, autocomplete="off")
             with middle:
-                st.selectbox(
-                    "Unit of the level", list(units), index=None, key=f"level.{row}.unit", placeholder="unit"
-                )
+                st.selectbox("Unit of the level", list(units), index=None, key=f"level.{row}.unit", placeholder="unit")
             with right:
                 choice(asked, "What was measured?", f"level.{row}.kind", fields.KINDS, KIND_WORDS)
             _beside(asked, f"level.{row}.value")
@@ -382,10 +377,7 @@ def levels(asked: Asked, worth: Mapping[int, Sequence[str]]) -> None:
                 with two:
                     choice(asked, "Tube", f"level.{row}.sample", ("serum", "plasma", "gel tube"))
                     field(asked, "If normalised: by whom", f"level.{row}.normalised_by")
-            wrong = any(
-                asked.problems.get(f"level.{row}.{name}")
-                for name in ("albumin", "valproate", "normalised_by")
-            )
+            wrong = any(asked.problems.get(f"level.{row}.{name}") for name in ("albumin", "valproate", "normalised_by"))
             _echo("Something under 'More about this level' needs mending." if wrong else None, "wrong")
     st.button("Add a level", key="add-level", on_click=_add_row, args=("level",))
 

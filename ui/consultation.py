@@ -43,9 +43,7 @@ class Outcome:
 
 def _report(error: Exception) -> None:
     """The kind of fault and where it happened, never what a person typed."""
-    frames = [
-        f for f in traceback.extract_tb(error.__traceback__) if "pkcalc" in f.filename or "/ui/" in f.filename
-    ]
+    frames = [f for f in traceback.extract_tb(error.__traceback__) if "pkcalc" in f.filename or "/ui/" in f.filename]
     place = f"{Path(frames[-1].filename).name}:{frames[-1].lineno}" if frames else "unknown place"
     log.error("The calculation stopped: %s at %s", type(error).__name__, place)
 
@@ -172,13 +170,9 @@ def evaluate(entry: Entry, settings: Site) -> Outcome:
     if problems:
         return Outcome(problems=tuple(problems))
     if not case.levels:
-        return Outcome(
-            case=case, problems=(Problem("Levels", "no level was entered", "one or more", "Enter a level"),)
-        )
+        return Outcome(case=case, problems=(Problem("Levels", "no level was entered", "one or more", "Enter a level"),))
     if not case.courses:
-        return Outcome(
-            case=case, problems=(Problem("Doses", "no dose was entered", "one or more", "Enter a dose"),)
-        )
+        return Outcome(case=case, problems=(Problem("Doses", "no dose was entered", "one or more", "Enter a dose"),))
     try:
         return Outcome(case=case, consult=_consult(case, settings))
     except PkcalcError as refusal:
@@ -235,15 +229,11 @@ def _echoes(asked: Asked) -> dict[str, dict[int, str]]:
                 continue
             try:
                 alone = check_case(
-                    CaseFile(
-                        pkcalc_case=1, drug=profile.id, **{"doses" if kind == "dose" else "proposed": (line,)}
-                    )
+                    CaseFile(pkcalc_case=1, drug=profile.id, **{"doses" if kind == "dose" else "proposed": (line,)})
                 )
             except CaseError:
                 continue
-            found[kind][row] = (
-                ask.course_echo(alone, profile) if kind == "dose" else ask.own_echo(alone, profile)
-            )
+            found[kind][row] = ask.course_echo(alone, profile) if kind == "dose" else ask.own_echo(alone, profile)
     return found
 
 
@@ -251,8 +241,12 @@ def _echoes(asked: Asked) -> dict[str, dict[int, str]]:
 
 
 def _forget() -> None:
+    """Everything typed, opened and found. The place for files gets a new name: a file still lying in the old one
+    would be read again with the next change, over what was edited since."""
+    turn = st.session_state.get("turn", 0)
     for key in list(st.session_state):
         del st.session_state[key]
+    st.session_state["turn"] = turn + 1
 
 
 def _open(file: CaseFile) -> None:
@@ -273,8 +267,12 @@ def _open_demonstration() -> None:
             _open(parse_case_text(demo.text))
 
 
+def _upload_key() -> str:
+    return f"upload-{st.session_state.get('turn', 0)}"
+
+
 def _open_upload() -> None:
-    upload = st.session_state.get("upload")
+    upload = st.session_state.get(_upload_key())
     if upload is None:
         return
     try:
@@ -309,7 +307,7 @@ def _opening(demonstration: bool) -> None:
             format_func=lambda n: names[n].title if n in names else n,
         )
         right.button("Open it", key="open-demo", on_click=_open_demonstration)
-        st.file_uploader("Case file", type=["json"], key="upload", max_upload_size=2, on_change=_open_upload)
+        st.file_uploader("Case file", type=["json"], key=_upload_key(), max_upload_size=2, on_change=_open_upload)
         for text in st.session_state.get("upload_problems", ()):
             look.beside(text, needed=False)
         st.button("Start afresh: forget everything on this page", key="forget", on_click=_forget)

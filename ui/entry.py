@@ -196,12 +196,8 @@ def _line(
         return DoseFile(**common, **dates, rate=said.rate)
     if said.once:
         if not dates["from"]:
-            problems.append(
-                Problem(f"{where}, from", "no time was given", "the time of the single dose", "Enter it")
-            )
-        return DoseFile(
-            **common, amount=said.amount, over=said.over, at=dates["from"] or "?", until=dates["until"]
-        )
+            problems.append(Problem(f"{where}, from", "no time was given", "the time of the single dose", "Enter it"))
+        return DoseFile(**common, amount=said.amount, over=said.over, at=dates["from"] or "?", until=dates["until"])
     return DoseFile(**common, **dates, amount=said.amount, every=said.every, daily=said.daily, over=said.over)
 
 
@@ -432,9 +428,7 @@ def _unless_unknown(answer: str) -> str | None:
     return None if answer == "unknown" else answer
 
 
-def _part(
-    values: dict[str, Any], key: str, value: str, units: tuple[str, ...], *, unit_key: str | None = None
-) -> None:
+def _part(values: dict[str, Any], key: str, value: str, units: tuple[str, ...], *, unit_key: str | None = None) -> None:
     number, unit = parted(value, units)
     values[key] = number
     values[unit_key or f"{key}_unit"] = unit

@@ -42,15 +42,12 @@ def lines(items: Sequence[str], kind: str = "lines") -> None:
     if not items:
         return
     out = "".join(
-        f'<li class="{"pk-sub" if item.startswith("   ") else "pk-top"}">{html(item.strip())}</li>'
-        for item in items
+        f'<li class="{"pk-sub" if item.startswith("   ") else "pk-top"}">{html(item.strip())}</li>' for item in items
     )
     st.html(f'<ul class="pk-{kind}">{out}</ul>')
 
 
-def table(
-    heads: Sequence[str], rows: Sequence[Sequence[str]], *, label: str, marks: Sequence[str] = ()
-) -> None:
+def table(heads: Sequence[str], rows: Sequence[Sequence[str]], *, label: str, marks: Sequence[str] = ()) -> None:
     """A table that becomes a stack of cards on a narrow screen. marks: a word per row that sets its look."""
     head = "".join(f'<th scope="col">{escape(h)}</th>' for h in heads)
     body = []

@@ -28,9 +28,7 @@ _ENDINGS: tuple[tuple[re.Pattern[str], str], ...] = (
     (re.compile(r"^(.*?)\s+(?:three times\s+(?:daily|a day))$", re.I), "8 h"),
     (re.compile(r"^(.*?)\s+(?:four times\s+(?:daily|a day))$", re.I), "6 h"),
     (
-        re.compile(
-            r"^(.*?)\s+(?:once daily|once a day|daily|every day|a day|per day|nightly|at night)$", re.I
-        ),
+        re.compile(r"^(.*?)\s+(?:once daily|once a day|daily|every day|a day|per day|nightly|at night)$", re.I),
         "24 h",
     ),
     (re.compile(r"^(.*?m?c?g(?: PE)?)/day$", re.I), "24 h"),
@@ -93,9 +91,7 @@ def take_apart(text: str, *, assume_times: bool = False) -> Said:
         )
     if len(timed) > 1:
         if every not in ("", "24 h"):
-            return Said(
-                unclear="several amounts and an interval were both given", fix="Give the amount of one dose"
-            )
+            return Said(unclear="several amounts and an interval were both given", fix="Give the amount of one dose")
         if assume_times and len(timed) in ASSUMED_TIMES:
             clocks = ASSUMED_TIMES[len(timed)]
             return Said(
@@ -103,9 +99,7 @@ def take_apart(text: str, *, assume_times: bool = False) -> Said:
                 over=over,
                 assumed=" and ".join(clocks),
             )
-        return Said(
-            unclear="the doses have no times", fix='Give each its time: "200 mg at 08:00 + 100 mg at 21:00"'
-        )
+        return Said(unclear="the doses have no times", fix='Give each its time: "200 mg at 08:00 + 100 mg at 21:00"')
     if not every:
         return Said(
             unclear=f'it is not clear how often "{said[:40]}" is given',

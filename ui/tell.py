@@ -27,9 +27,7 @@ from pkcalc.note.document import (
 from pkcalc.note.text import render
 from pkcalc.units import show, show_number
 
-STOPPED = (
-    "The calculation stopped. No number is shown. Please report this fault to the maintainers of this page."
-)
+STOPPED = "The calculation stopped. No number is shown. Please report this fault to the maintainers of this page."
 URGENT = (
     "Seizing now? Active status epilepticus is treated by your protocol at once; do not wait for this page. "
     "Acute overdose is outside what it covers: call the poison centre."
@@ -46,9 +44,7 @@ def pinned(cautions: Sequence[Caution], demonstration: bool) -> None:
         for c in shown:
             more = f" No result for: {', '.join(c.blocks)}." if c.blocks else ""
             more += f" Lifted by: {c.lifted_by}." if c.lifted_by else ""
-            items.append(
-                f'<li class="pk-{c.severity}"><b>{_NAMES[c.severity]}</b> {look.html(c.text + more)}</li>'
-            )
+            items.append(f'<li class="pk-{c.severity}"><b>{_NAMES[c.severity]}</b> {look.html(c.text + more)}</li>')
         html += (
             '<div class="pk-cautions" role="region" aria-label="Stops and warnings" tabindex="0">'
             f'<ul aria-live="polite">{"".join(items)}</ul></div>'
@@ -58,7 +54,7 @@ def pinned(cautions: Sequence[Caution], demonstration: bool) -> None:
 
 
 def watermark() -> None:
-    st.html('<div class="pk-mark" aria-hidden="true"><span>DEMONSTRATION</span></div>')
+    st.html('<div class="pk-mark" aria-hidden="true"></div>')
 
 
 def not_yet(reasons: Sequence[str]) -> None:
@@ -102,9 +98,7 @@ def estimates_table(estimates: Sequence[Estimate]) -> None:
                 _interval(vmax),
                 f"{show_number(e.point.km_mg_per_L)} ({e.point.kind})",
                 _interval(km),
-                f"{show_number(volume.median)} ({_interval(volume)}), from the {e.volume_from}"
-                if volume
-                else "",
+                f"{show_number(volume.median)} ({_interval(volume)}), from the {e.volume_from}" if volume else "",
             )
         )
     look.table(

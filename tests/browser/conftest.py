@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import re
 import socket
 import subprocess
 import sys
@@ -12,10 +13,8 @@ from importlib.util import find_spec
 from pathlib import Path
 
 import pytest
-
-playwright_api = pytest.importorskip("playwright.sync_api")
-
-from playwright.sync_api import Browser, Route, sync_playwright  # noqa: E402
+from playwright.sync_api import Browser, Route, sync_playwright
+from playwright.sync_api import TimeoutError as PlaywrightTimeout
 
 CHROMIUM = "/usr/bin/chromium"
 FLAGS = [
@@ -37,9 +36,7 @@ def free_port() -> int:
         return int(s.getsockname()[1])
 
 
-def start_server(
-    log: Path, *more: str, env: dict[str, str] | None = None
-) -> tuple[subprocess.Popen[bytes], str]:
+def start_server(log: Path, *more: str, env: dict[str, str] | None = None) -> tuple[subprocess.Popen[bytes], str]:
     """The form as `pkcalc form` starts it, with its settings file found from its own folder."""
     import os
 
@@ -100,6 +97,7 @@ class Visit:
             color_scheme="dark" if dark else "light",
             accept_downloads=True,
         )
+        self.context.set_default_timeout(8_000)
         self.context.route("**/*", self._only_here)
         self.address = address
         self.page = self.context.new_page()
@@ -119,6 +117,7 @@ class Visit:
 
     def settle(self) -> None:
         """Wait until the server has answered and the page stands still."""
+        self.page.wait_for_timeout(120)
         self.page.wait_for_function(
             """() => { const a = document.querySelector('[data-testid="stApp"]');
                 return a && a.getAttribute('data-test-script-state') === 'notRunning'
@@ -131,11 +130,38 @@ class Visit:
         field.press("Tab")
 
     def choose(self, label: str, option: str, place: int = 0) -> None:
-        self.page.get_by_role("combobox", name=label).nth(place).click()
-        self.page.get_by_role("option", name=option, exact=True).click()
+        """Choose from a list; where an answer of the server closes the list, open it again, as a person would."""
+        field, wanted = (
+            self.page.get_by_role("combobox", name=label).nth(place),
+            self.page.get_by_role("option", name=option, exact=True),
+        )
+        for _ in range(4):
+            self.settle()
+            field.click()
+            try:
+                wanted.click(timeout=1_500)
+                return
+            except PlaywrightTimeout:
+                field.press("Escape")
+        raise AssertionError(f"{option} cannot be chosen for {label}")
 
     def press(self, name: str, place: int = 0) -> None:
         self.page.get_by_role("button", name=name).nth(place).click()
+
+    def open_case(self, text: str) -> None:
+        """Open a case file from the page."""
+        self.page.get_by_text("Open a demonstration or a case file").click()
+        file = {"name": "case.json", "mimeType": "application/json", "buffer": text.encode()}
+        self.page.locator("input[type=file]").set_input_files(file)
+        self.page.get_by_text(re.compile(r"Case [0-9a-f]{12}")).first.wait_for()
+        self.settle()
+
+    def unfold(self, title: str) -> None:
+        """Open a folded question."""
+        fold = self.page.locator("details").filter(has=self.page.locator("summary").filter(has_text=title)).first
+        if fold.get_attribute("open") is None:
+            fold.locator("summary").first.click()
+        self.settle()
 
     def text(self) -> str:
         self.settle()
@@ -148,9 +174,7 @@ class Visit:
         self.page.get_by_text("DEMONSTRATION - invented").first.wait_for()
         self.settle()
 
-    def enter_pair(
-        self, first: str, second: str, *, unit: str = "mg/L", form: str = "phenytoin sodium"
-    ) -> None:
+    def enter_pair(self, first: str, second: str, *, unit: str = "mg/L", form: str = "phenytoin sodium") -> None:
         """300 and 350 mg daily with two steady levels, no dates."""
         self.press("Add a dose line")
         self.press("Add a level")
