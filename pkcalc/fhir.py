@@ -10,6 +10,7 @@ from __future__ import annotations
 
 import json
 import re
+from bisect import bisect_left
 from collections import Counter
 from collections.abc import Iterable, Mapping, Sequence
 from dataclasses import dataclass, field
@@ -30,6 +31,7 @@ from pkcalc.errors import CaseError, Problem
 MAX_BYTES = 5_000_000
 MAX_ENTRIES = 5_000
 MAX_DEPTH = 40
+MAX_REFERENCE = 300
 
 UCUM = "http://unitsofmeasure.org"
 LOINC = "http://loinc.org"
@@ -531,8 +533,11 @@ class _Reading:
     moments: list[datetime] = field(default_factory=list)
     medications: dict[str, Concept] = field(default_factory=dict)
     into_muscle: bool = False
+    line_of: dict[int, int] = field(default_factory=dict)
+    albumin_times: list[float] = field(default_factory=list)
 
     def say(self, entry: _Entry, outcome: Outcome, said: str, fix: str = "") -> None:
+        self.line_of[entry.number] = len(self.lines)
         self.lines.append(Line(entry.number, entry.kind, outcome, said, fix))
 
     # the bundle as a whole
@@ -689,7 +694,7 @@ class _Reading:
             self.say(
                 entry,
                 "not understood",
-                f'"{found.code.words}" is not among the laboratory codes that the drug file vouches for.',
+                f"{_coded(found.code)} is not among the laboratory codes that the drug file vouches for.",
                 self._hint(found),
             )
             return
@@ -845,7 +850,7 @@ class _Reading:
                         return None
         if name in self.medications:
             return self.medications[name]
-        match = _RESTFUL.fullmatch(name)
+        match = _named(name)
         if match and not match.group(1):
             base = _base(entry.url)
             return self.medications.get(f"{base}Medication/{match.group(3)}")
@@ -1107,7 +1112,7 @@ class _Reading:
             entry,
             "check",
             said,
-            'Ask what was really taken; only then complete the line and set "confirmed" to yes.',
+            'Ask what was really taken; then complete the line and set "confirmed" to yes, or remove it.',
         )
         name = entry.url or f"{entry.kind}/{entry.resource.get('id')}"
         dose = _Dose(
@@ -1287,7 +1292,7 @@ class _Reading:
     def _with_sample(self, row: dict[str, Any], level: _Level) -> None:
         assert level.moment is not None
         if self.profile.binding is not None and self.albumins:
-            near = min(self.albumins, key=lambda a: abs(days_between(level.moment or a.moment, a.moment)))
+            near = self._nearest_albumin(level.moment)
             hours = abs(days_between(level.moment, near.moment)) * 24
             if hours <= self.profile.binding.albumin_oldest_h:
                 row["albumin"] = _albumin_data(near)
@@ -1298,21 +1303,31 @@ class _Reading:
                     f"No albumin within {self.profile.binding.albumin_oldest_h:.0f} h of it: "
                     "the latest one of the case would be used for it.",
                 )
-        same = [x for x in self.companions if x.moment == level.moment]
+        same = [x for x in self.companions if x.moment == level.moment and x.kind == "valproate"]
         if len(same) == 1:
             row["valproate_level"] = same[0].value
 
+    def _nearest_albumin(self, moment: datetime) -> _Albumin:
+        if not self.albumin_times:
+            self.albumins.sort(key=lambda a: a.moment.timestamp())
+            self.albumin_times = [a.moment.timestamp() for a in self.albumins]
+        at = bisect_left(self.albumin_times, moment.timestamp())
+        around = self.albumins[max(at - 1, 0) : at + 1]
+        return min(around, key=lambda a: abs(a.moment - moment))
+
     def _mark(self, number: int, outcome: Outcome, said: str) -> None:
         """Changes the outcome of an entry's line, adding why."""
-        at = next(i for i, line in enumerate(self.lines) if line.entry == number)
+        at = self.line_of[number]
         line = self.lines[at]
         fix = "Check it against the laboratory report." if outcome == "check" else ""
-        self.lines[at] = Line(number, line.resource, outcome, f"{line.said} {said}", line.fix or fix)
+        kept = (line.fix or fix) if outcome == "check" else ""
+        self.lines[at] = Line(number, line.resource, outcome, f"{line.said} {said}", kept)
 
     def _given_lines(self) -> list[dict[str, Any]]:
         doses = self._reconciled()
         clear = [d for d in doses if d.clear and "at" in d.data and d.start is not None]
-        rest = [d for d in doses if d not in clear]
+        taken = {d.entry for d in clear}
+        rest = [d for d in doses if d.entry not in taken]
         found: list[tuple[float, dict[str, Any]]] = []
         streams: dict[tuple[str, str, str, str], list[_Dose]] = {}
         for dose in clear:
@@ -1362,9 +1377,16 @@ class _Reading:
 
     def _ordered_lines(self, orders: list[tuple[_Entry, _Dose]]) -> list[dict[str, Any]]:
         kept: list[tuple[_Entry, _Dose]] = []
+        by_name: dict[str, list[_Dose]] = {}
+        for dose in self.doses:
+            for name in {f"key {dose.key}", f"form {dose.form}", f"order {_plain_name(dose.request)}"}:
+                by_name.setdefault(name, []).append(dose)
         for entry, order in orders:
-            given = [d for d in self.doses if _same_product(d, order) and _within(d, order)]
-            given += [d for d in self.doses if d.request and _names(d.request, order.request)]
+            same = by_name.get(f"key {order.key}", [])
+            if order.form:
+                same = same + by_name.get(f"form {order.form}", [])
+            given = any(_within(d, order) for d in same)
+            given = given or f"order {_plain_name(order.request)}" in by_name
             if given:
                 self._mark(
                     entry.number,
@@ -1414,14 +1436,19 @@ def _same_words(a: str, b: str) -> bool:
     return a.casefold().split() == b.casefold().split()
 
 
+def _named(reference: str) -> re.Match[str] | None:
+    """A reference by base, kind and id; None where it has another shape."""
+    return _RESTFUL.fullmatch(reference) if len(reference) <= MAX_REFERENCE else None
+
+
 def _base(url: str) -> str:
-    match = _RESTFUL.fullmatch(url)
+    match = _named(url)
     return match.group(1) or "" if match else ""
 
 
 def _absolute(reference: str, url: str, people: Mapping[str, str]) -> str:
     """A reference as the one name of its patient."""
-    match = _RESTFUL.fullmatch(reference)
+    match = _named(reference)
     if match is None:
         return reference
     base, name = match.group(1) or "", f"{match.group(2)}/{match.group(3)}"
@@ -1436,6 +1463,12 @@ def _absolute(reference: str, url: str, people: Mapping[str, str]) -> str:
 def _key(concept: Concept) -> str:
     codes = sorted(f"{c.system}|{c.code}" for c in concept.coding if c.code)
     return codes[0] if codes else " ".join(concept.words.casefold().split())
+
+
+def _coded(concept: Concept) -> str:
+    """A concept by its words and its codes."""
+    codes = ", ".join(c.code for c in concept.coding if c.code)
+    return f'"{concept.words}"' + (f" (code {_clip(codes, 40)})" if codes else "")
 
 
 def _name(concept: Concept) -> str:
@@ -1565,11 +1598,10 @@ def _within(given: _Dose, order: _Dose) -> bool:
     return order.start - day <= given.start and (order.end is None or given.start <= order.end + day)
 
 
-def _names(reference: str, own: str) -> bool:
-    a, b = _RESTFUL.fullmatch(reference), _RESTFUL.fullmatch(own)
-    if a and b:
-        return a.group(2, 3) == b.group(2, 3)
-    return reference == own
+def _plain_name(reference: str) -> str:
+    """Kind and id of a reference, whatever stands before them."""
+    match = _named(reference)
+    return f"{match.group(2)}/{match.group(3)}" if match else reference
 
 
 def _runs(

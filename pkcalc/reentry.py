@@ -177,7 +177,7 @@ def compare(first: Case, second: Case, site: Site | str | Path | None = None) ->
         if 1 < len(different) <= MOST_TRIED and first.drug == second.drug:
             alone = {i: _alone(a, x, before, site) for i, x in enumerate(different)}
         elif len(different) == 1:
-            alone = {0: " ".join(_effects(before, after, "first", "second"))}
+            alone = {0: _change(before, after)}
     return Comparison(
         differences=tuple(Difference(x.where, x.first, x.second, alone.get(i, "")) for i, x in enumerate(different)),
         same_value=tuple(Difference(x.where, x.first, x.second) for x in found if x.same),
@@ -472,7 +472,38 @@ def _alone(data: dict[str, Any], found: _Found, before: Consult, site: Site | st
         case = check_case(CaseFile.model_validate_json(json.dumps(tried)))
     except CaseError as error:
         return f"it cannot stand alone in the first entry ({error.problems[0].text})"
-    return " ".join(_effects(before, _run(case, site), "first", "with this change"))
+    return _change(before, _run(case, site))
+
+
+def _change(before: Consult, after: Consult) -> str:
+    """What a change does to the forecasts, in one line."""
+    if before.stopped or after.stopped:
+        return " ".join(_effects(before, after, "first", "with this change"))
+    mine, theirs = _headlines(before), _headlines(after)
+    out = []
+    for (words, a), (others, b) in zip(mine, theirs, strict=False):
+        name = words if words == others else f"{words} becomes {others}"
+        out.append(
+            f"{name}: {_becomes(_bound(a.total.median), _bound(b.total.median))}, chance above the critical level "
+            f"or of no steady state {_becomes(_percent(a.above_critical), _percent(b.above_critical))}."
+        )
+    if len(mine) != len(theirs):
+        out.append(f"Regimens with a forecast: {_becomes(str(len(mine)), str(len(theirs)))}.")
+    if not out and before.aim_rate is not None and after.aim_rate is not None:
+        rates = [show(x.median, "mg/day") for x in (before.aim_rate, after.aim_rate)]
+        out.append(f"Active drug per day for the aim: {_becomes(*rates)}.")
+    return " ".join([*out, *_stops_apart(before, after, "first", "with this change")]) or "no forecast changes."
+
+
+def _becomes(a: str, b: str) -> str:
+    return f"{a} as before" if a == b else f"{a} becomes {b}"
+
+
+def _stops_apart(before: Consult, after: Consult, one: str, two: str) -> list[str]:
+    """Stops that only one of two consults has."""
+    a, b = ({c.id: c.text for c in x.cautions if c.severity == "stop"} for x in (before, after))
+    out = [f"Stop ({one} only): {text}" for key, text in a.items() if key not in b]
+    return out + [f"Stop ({two} only): {text}" for key, text in b.items() if key not in a]
 
 
 def _effects(before: Consult, after: Consult, one: str, two: str) -> tuple[str, ...]:
@@ -501,9 +532,7 @@ def _effects(before: Consult, after: Consult, one: str, two: str) -> tuple[str, 
         told = f"{rates[0]} in both" if rates[0] == rates[1] else f"{rates[0]} ({one}), {rates[1]} ({two})"
         aim = goals[0] if goals[0] == goals[1] else f"{goals[0]} ({one}) and {goals[1]} ({two})"
         out.append(f"Active drug for a level of {aim} at normal binding: {told}.")
-    stops = [{c.id: c.text for c in x.cautions if c.severity == "stop"} for x in (before, after)]
-    for mine_only, name in ((stops[0].items() - stops[1].items(), one), (stops[1].items() - stops[0].items(), two)):
-        out += [f"Stop ({name} only): {text}" for _, text in sorted(mine_only)]
+    out += _stops_apart(before, after, one, two)
     return tuple(out) or ("no forecast of a regimen in either entry.",)
 
 
@@ -534,7 +563,7 @@ def _bound(value: float) -> str:
 
 def _percent(chance: float) -> str:
     percent = 100 * chance
-    if 0 < percent < 1:
+    if percent < 1:
         return "below 1 %"
     return f"{percent:.0f} %"
 
