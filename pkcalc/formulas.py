@@ -108,9 +108,7 @@ def sensitivity_with_linear_path(
     """
     r, vmax, km, cl = _arrays(dose_rate_mg_per_day, vmax_mg_per_day, km_mg_per_L, linear_clearance_L_per_day)
     c = np.asarray(
-        steady_state_level(
-            dose_rate_mg_per_day=r, vmax_mg_per_day=vmax, km_mg_per_L=km, linear_clearance_L_per_day=cl
-        )
+        steady_state_level(dose_rate_mg_per_day=r, vmax_mg_per_day=vmax, km_mg_per_L=km, linear_clearance_L_per_day=cl)
     )
     exists = np.isfinite(c)
     c = np.where(exists, c, 0.0)
@@ -213,9 +211,7 @@ def chance_of_inadmissible_pair(
     return 0.5 * math.erfc(margin / (spread * math.sqrt(2.0)))
 
 
-def vmax_from_level(
-    *, dose_rate_mg_per_day: ArrayLike, level_mg_per_L: ArrayLike, km_mg_per_L: ArrayLike
-) -> Floats:
+def vmax_from_level(*, dose_rate_mg_per_day: ArrayLike, level_mg_per_L: ArrayLike, km_mg_per_L: ArrayLike) -> Floats:
     """Vmax from one steady level when Km is taken as known: Vmax = R + Km R / C [mg/day]. All > 0."""
     r, c, km = _arrays(dose_rate_mg_per_day, level_mg_per_L, km_mg_per_L)
     value: Floats = r + km * r / c
@@ -302,11 +298,10 @@ HALLEY_LIMIT = 12
 
 
 class _Course(NamedTuple):
-    """At the clock q: level, integral of C dq, integral of C^2 dq (k = 0 only), dC/dq."""
+    """At the clock q: the level, and the integral of C dq."""
 
     level: Floats
     area: Floats
-    slope: Floats
 
 
 def _linear_course(q: Floats, c0: Floats, r: Floats, v: Floats, km: Floats) -> _Course:
@@ -316,8 +311,7 @@ def _linear_course(q: Floats, c0: Floats, r: Floats, v: Floats, km: Floats) -> _
         decay = np.exp(-z)
         level = c0 * decay + r * km * q * ez
         area = q * (c0 * ez + r * km * q * _psi(z))
-        slope = (r * km - (v - r) * c0) * decay
-    return _Course(level, area, slope)
+    return _Course(level, area)
 
 
 def _roots(r: Floats, v: Floats, km: Floats, k: Floats) -> tuple[Floats, Floats, Floats]:
@@ -353,9 +347,7 @@ def _curved_course(q: Floats, c0: Floats, r: Floats, v: Floats, km: Floats, k: F
         y = decay + gain
         level = (c0 * y1_slope + r * km * y1) / y
         area = np.where(p < 600.0, np.log1p(gain / decay), p + np.log(y)) / k
-    b = r - v - k * km
-    slope = r * km + b * level - k * level * level
-    return _Course(level, area, slope)
+    return _Course(level, area)
 
 
 def _curved_clock(t: Floats, c0: Floats, r: Floats, v: Floats, km: Floats, k: Floats) -> Floats:
@@ -376,7 +368,8 @@ def _curved_clock(t: Floats, c0: Floats, r: Floats, v: Floats, km: Floats, k: Fl
         slope = km + course.level
         s = excess / slope
         with np.errstate(all="ignore"):
-            s = s / (1.0 - 0.5 * s * course.slope / slope)
+            bend = r * km + (r - v - k * km) * course.level - k * course.level**2
+            s = s / (1.0 - 0.5 * s * bend / slope)
         moved = q - s
         inside = (moved >= low) & (moved <= high)
         moved = np.where(inside, moved, 0.5 * (low + high))
@@ -703,9 +696,7 @@ def ideal_body_weight(*, height_cm: ArrayLike, sex: Literal["female", "male"]) -
     return value[()]
 
 
-def weight_with_excess(
-    *, weight_kg: ArrayLike, ideal_weight_kg: ArrayLike, excess_factor: ArrayLike
-) -> Floats:
+def weight_with_excess(*, weight_kg: ArrayLike, ideal_weight_kg: ArrayLike, excess_factor: ArrayLike) -> Floats:
     """Weight to which a volume per kg is applied in obesity: IBW + factor x (weight - IBW) [kg].
 
     excess_factor: from the drug file (1.33 for a drug that spreads into fat). Below the ideal weight, the
@@ -737,9 +728,7 @@ def creatinine_clearance(
 # ------------------------------------------------------------------------------------- salts, loads, moles
 
 
-def active_amount(
-    *, amount_mg: ArrayLike, salt_factor: ArrayLike, bioavailability: ArrayLike = 1.0
-) -> Floats:
+def active_amount(*, amount_mg: ArrayLike, salt_factor: ArrayLike, bioavailability: ArrayLike = 1.0) -> Floats:
     """Active drug that reaches the body from an amount of a product: amount x S x F [mg].
 
     Example: 400 mg of a salt with S = 0.92 is 368 mg.
@@ -749,9 +738,7 @@ def active_amount(
     return value[()]
 
 
-def product_amount(
-    *, active_mg: ArrayLike, salt_factor: ArrayLike, bioavailability: ArrayLike = 1.0
-) -> Floats:
+def product_amount(*, active_mg: ArrayLike, salt_factor: ArrayLike, bioavailability: ArrayLike = 1.0) -> Floats:
     """Amount of a product that brings an amount of active drug into the body: active / (S F) [mg]."""
     active, s, f = _arrays(active_mg, salt_factor, bioavailability)
     value: Floats = active / (s * f)

@@ -42,21 +42,13 @@ def random_record(rng: np.random.Generator, days: int, *, oral: bool = True) -> 
         if rng.random() < 0.15 or not oral:
             doses.append(Dose(day + rng.uniform(0, 1), float(rng.uniform(50, 800))))
         if rng.random() < 0.15 or not oral:
-            doses.append(
-                Dose(day + rng.uniform(0, 1), float(rng.uniform(50, 800)), duration_day=rng.uniform(0.02, 2))
-            )
+            doses.append(Dose(day + rng.uniform(0, 1), float(rng.uniform(50, 800)), duration_day=rng.uniform(0.02, 2)))
     session = rng.uniform(0, days - 0.3)
-    paths = (
-        (FirstOrder(rate_per_day=4.0, start_day=session, end_day=session + 0.2),)
-        if rng.random() < 0.4
-        else ()
-    )
+    paths = (FirstOrder(rate_per_day=4.0, start_day=session, end_day=session + 0.2),) if rng.random() < 0.4 else ()
     return Record(tuple(doses), first_order=paths)
 
 
-def errors(
-    rng: np.random.Generator, records: int, accuracy: flow.Accuracy, *, oral: bool = True
-) -> np.ndarray:
+def errors(rng: np.random.Generator, records: int, accuracy: flow.Accuracy, *, oral: bool = True) -> np.ndarray:
     found = []
     for _ in range(records):
         days = int(rng.integers(1, 8))
@@ -86,9 +78,7 @@ def test_everyday_accuracy_of_all_draws() -> None:
         record = random_record(rng, 10)
         times = np.sort(rng.uniform(0.2, 10, 6))
         vmax, kappa = random_draws(rng, 1024)
-        everyday, finest = (
-            flow.amounts(record, times, vmax, kappa, accuracy=a) for a in ("everyday", "finest")
-        )
+        everyday, finest = (flow.amounts(record, times, vmax, kappa, accuracy=a) for a in ("everyday", "finest"))
         found.append(np.abs(everyday / finest - 1))
     assert np.quantile(found, 0.99) <= 1.1e-3
     assert np.max(found) <= 3e-3
@@ -349,10 +339,10 @@ def test_plateau_near_vmax_joins_the_limit_formula_smoothly() -> None:
         assert math.isclose(values[0], values[1], rel_tol=3e-6)
     # and single doses agree with the limit of the closed form: Xss - D [1/(1 - e^(-ka tau)) - 1/(ka tau) - 1/2]
     one = Repeated(1.0, (Dose(0.0, 300.0, absorption=Absorption(10.0)),))
-    close = flow.periodic(one, 300.0 * (1 + 1e-5), kappa, accuracy="finest")
+    close = flow.periodic(one, 300.0 * (1 + 1e-5), kappa)
     steady = 300.0 * kappa / (300.0 * 1e-5)
-    expected = steady - 300.0 * (1 / -math.expm1(-10.0) - 1 / 10.0 - 0.5)
-    assert math.isclose(close.start_mg[0], expected, rel_tol=1e-7)
+    below = 300.0 * (1 / -math.expm1(-10.0) - 1 / 10.0 - 0.5)
+    assert steady - close.start_mg[0] == pytest.approx(below, rel=1e-4)
 
 
 def test_a_linear_path_gives_a_plateau_at_any_rate() -> None:
@@ -386,8 +376,7 @@ def test_sensitivity_is_the_derivative(before: float | None) -> None:
             changed = replace(
                 record,
                 doses=tuple(
-                    replace(d, amount_mg=d.amount_mg * (scale if a <= d.time_day < b else 1.0))
-                    for d in record.doses
+                    replace(d, amount_mg=d.amount_mg * (scale if a <= d.time_day < b else 1.0)) for d in record.doses
                 ),
             )
             if earlier is not None and a < 0:
@@ -398,7 +387,7 @@ def test_sensitivity_is_the_derivative(before: float | None) -> None:
         # where the start changes rule (plateau or build-up) between the two sides, a difference means nothing
         usable = np.abs(difference) < 50
         assert usable.mean() > 0.95
-        assert np.all(np.abs(found[..., w] - difference)[usable] <= 0.01 * np.abs(difference[usable]) + 2e-3)
+        assert np.all(np.abs(found[..., w] - difference)[usable] <= 1e-3 * np.abs(difference[usable]) + 2e-4)
 
 
 def test_stiff_draws_are_bounded_in_work_and_right() -> None:
