@@ -10,31 +10,44 @@ import difflib
 import hashlib
 import json
 import re
-from collections.abc import Callable, Iterable, Mapping
+from collections.abc import Callable, Iterable, Iterator, Mapping
 from dataclasses import dataclass, field
 from datetime import datetime, timedelta
+from functools import cached_property
 from pathlib import Path
-from typing import Annotated, Any, Literal, TypeVar
+from typing import Annotated, Any, Literal, ParamSpec, TypeVar
 
-from pydantic import BaseModel, ConfigDict, Field, StringConstraints, ValidationError
+from pydantic import AfterValidator, BaseModel, ConfigDict, Field, StringConstraints, ValidationError
+from pydantic_core import PydanticCustomError
 
 from pkcalc import units
 from pkcalc.clock import days_between, read_time, read_time_of_day, show_time
 from pkcalc.dosing import Intake, Regimen, intake_problem
 from pkcalc.drugs.profile import Profile, drug_names, load_profile
-from pkcalc.errors import CaseError, DrugFileError, Problem
+from pkcalc.errors import CaseError, DrugFileError, Problem, as_typed
 from pkcalc.units import Typed
 
 FORMAT_VERSION = 1
 MAX_BYTES = 2_000_000
 MAX_DEPTH = 24
-MAX_LINES_OF_RECORD = 5_000
+MAX_LINES_OF_RECORD = 20_000
+MAX_DOSES = 100_000
+MAX_PROBLEMS = 100
 
 Answer = Literal["yes", "no", "unknown"]
 Kind = Literal["total", "free", "normalised"]
 
-Text = Annotated[str, StringConstraints(max_length=200, strip_whitespace=True)]
-LongText = Annotated[str, StringConstraints(max_length=4000)]
+_UNSEEN = re.compile("[\x00-\x08\x0b\x0c\x0e-\x1f\x7f-\x9f\u200e\u200f\u202a-\u202e\u2066-\u2069]")
+
+
+def _readable(text: str) -> str:
+    if _UNSEEN.search(text):
+        raise PydanticCustomError("unseen", "characters that cannot be seen")
+    return text
+
+
+Text = Annotated[str, StringConstraints(max_length=200, strip_whitespace=True), AfterValidator(_readable)]
+LongText = Annotated[str, StringConstraints(max_length=4000), AfterValidator(_readable)]
 
 #: The context questions, in the order they are asked. Each is yes, no or unknown; silence stands on the note
 #: as "not stated".
@@ -114,14 +127,18 @@ class DoseFile(BaseModel):
     form: Text = Field("", description="A form of the drug profile; there is no default.")
     amount: Text = Field("", description='Amount of each dose, for example "300 mg".')
     every: Text = Field("", description='For example "24 h", "12 h" or "48 h"; with amount.')
-    daily: tuple[ClockDoseFile, ...] = Field((), description="Doses by time of day, instead of amount and every.")
+    daily: tuple[ClockDoseFile, ...] = Field(
+        (), max_length=24, description="Doses by time of day, instead of amount and every."
+    )
     at: Text = Field("", description="Clock time of a single dose; with amount.")
     over: Text = Field("", description='Infusion time, for example "30 min".')
     rate: Text = Field("", description='A continuous infusion, for example "7 g/h"; with from and until.')
     from_: Text = Field("", alias="from", description="Clock time of the first dose.")
     until: Text = Field("", description="Clock time after which no dose was given; empty: still going on.")
     for_about: Text = Field("", description='Instead of from, where only the length is known: "3 months".')
-    missed: tuple[Text, ...] = Field((), description="Clock times of doses known to be missed, held or refused.")
+    missed: tuple[Text, ...] = Field(
+        (), max_length=5000, description="Clock times of doses known to be missed, held or refused."
+    )
     source: Literal["given", "ordered", "stated"] = "given"
     given_by: Literal["nurse", "carer", "self", "unknown"] = "unknown"
     confirmed: Answer = Field("unknown", description="For ordered or stated lines: did a person confirm it?")
@@ -160,7 +177,7 @@ class ProposedFile(BaseModel):
     form: Text = ""
     amount: Text = ""
     every: Text = ""
-    daily: tuple[ClockDoseFile, ...] = ()
+    daily: tuple[ClockDoseFile, ...] = Field((), max_length=24)
 
 
 class LoadFile(BaseModel):
@@ -177,7 +194,7 @@ class PlanFile(BaseModel):
 
     model_config = _FILE
     shelf: Text = Field("", description="A generic country shelf of the drug profile.")
-    products: tuple[Text, ...] = Field((), description="Restricts the shelf to these products.")
+    products: tuple[Text, ...] = Field((), max_length=100, description="Restricts the shelf to these products.")
     largest_step: Text = ""
     order_by_loss: bool = False
     load: LoadFile | None = None
@@ -228,17 +245,19 @@ class CaseFile(BaseModel):
     now: Text = Field("", description="Clock time of the consult; forecasts start here.")
     patient: PatientFile = PatientFile()
     albumin: AlbuminFile | None = None
-    context: dict[str, Answer | AnswerFile] = Field(default_factory=dict)
-    doses: tuple[DoseFile, ...] = ()
-    levels: tuple[LevelFile, ...] = ()
+    context: dict[str, Answer | AnswerFile] = Field(
+        default_factory=dict, max_length=100, json_schema_extra={"propertyNames": {"enum": [*QUESTIONS]}}
+    )
+    doses: tuple[DoseFile, ...] = Field((), max_length=MAX_LINES_OF_RECORD)
+    levels: tuple[LevelFile, ...] = Field((), max_length=500)
     target: TargetFile | None = None
     aim: Text = Field("", description='The level aimed at, for example "15 mg/L".')
-    proposed: tuple[ProposedFile, ...] = ()
+    proposed: tuple[ProposedFile, ...] = Field((), max_length=20)
     population: Text = Field("", description="A named population of the drug profile.")
     method: Literal["", "two levels", "whole record", "lines"] = ""
     plan: PlanFile = PlanFile()
     chosen: ChosenFile | None = None
-    forecast_then: tuple[EarlierForecastFile, ...] = ()
+    forecast_then: tuple[EarlierForecastFile, ...] = Field((), max_length=500)
 
 
 @dataclass(frozen=True)
@@ -334,6 +353,10 @@ class Target:
     kind: str
     origin: str
 
+    def holds(self, level_mg_per_L: float) -> bool:
+        """True where a level of the same kind lies within the range (both ends count)."""
+        return self.low_mg_per_L <= level_mg_per_L <= self.high_mg_per_L
+
 
 @dataclass(frozen=True)
 class EarlierForecast:
@@ -380,7 +403,7 @@ class Case:
         found = self.context.get(question)
         return found.answer if found else "not stated"
 
-    @property
+    @cached_property
     def origin(self) -> datetime | None:
         """The earliest clock time of the case; times inside are days since then."""
         moments = [
@@ -411,6 +434,7 @@ class Case:
 
 
 T = TypeVar("T")
+P = ParamSpec("P")
 
 
 class _Check:
@@ -419,9 +443,10 @@ class _Check:
     def __init__(self) -> None:
         self.problems: list[Problem] = []
 
-    def attempt(self, make: Callable[[], T]) -> T | None:
+    def attempt(self, read: Callable[P, T], *args: P.args, **kwargs: P.kwargs) -> T | None:
+        """What the reader gives; None where it refused, and its problems are kept."""
         try:
-            return make()
+            return read(*args, **kwargs)
         except CaseError as error:
             self.problems.extend(error.problems)
             return None
@@ -435,43 +460,137 @@ class _Check:
 
 def read_case_text(text: str | bytes, *, name: str = "Case file") -> Case:
     """JSON text -> checked Case; CaseError with every problem (and its line where the text allows)."""
-    return check_case(parse_case_text(text, name=name))
+    file = parse_case_text(text, name=name)
+    try:
+        return check_case(file)
+    except CaseError as error:
+        raise CaseError(_with_lines(error.problems, _decoded(text, name))) from None
 
 
 def load_case(path: str | Path) -> Case:
     """A case file -> checked Case."""
     file = Path(path)
+    name = f"Case file {as_typed(file.name, 80)}"
     try:
-        size = file.stat().st_size
-        if size > MAX_BYTES:
-            raise CaseError(_too_large(str(file), size))
-        data = file.read_bytes()
-    except OSError as error:
-        reason = (error.strerror or "it cannot be read").lower()
+        with file.open("rb") as stream:
+            data = stream.read(MAX_BYTES + 1)
+    except (OSError, ValueError) as error:
+        reason = (getattr(error, "strerror", None) or "it cannot be read").lower()
         raise CaseError(
-            Problem(f"Case file {file.name}", f"the file could not be opened ({reason})", "", "Check name and folder")
+            Problem(name, f"the file could not be opened ({reason})", "", "Check name and folder")
         ) from None
-    return read_case_text(data, name=f"Case file {file.name}")
+    return read_case_text(data, name=name)
 
 
-def _too_large(name: str, size: int) -> Problem:
-    return Problem(
-        name,
-        f"{size / 1e6:,.0f} MB were given",
-        f"at most {MAX_BYTES / 1e6:.0f} MB",
-        "Give the case of one patient only",
-    )
-
-
-def _no_duplicates(pairs: list[tuple[str, Any]]) -> dict[str, Any]:
-    seen: dict[str, Any] = {}
-    for key, value in pairs:
-        if key in seen:
-            raise CaseError(
-                Problem(f'Key "{key[:40]}"', "it stands twice in the same place", "each key once", "Remove one of the two")
+def _decoded(text: str | bytes, name: str) -> str:
+    """The text within the size limit, as UTF-8."""
+    if len(text) > MAX_BYTES:
+        raise CaseError(
+            Problem(
+                name,
+                f"more than {MAX_BYTES / 1e6:.0f} MB were given",
+                f"at most {MAX_BYTES / 1e6:.0f} MB",
+                "Give the case of one patient only",
             )
-        seen[key] = value
-    return seen
+        )
+    if isinstance(text, str):
+        return text.removeprefix("\ufeff")
+    try:
+        return text.decode("utf-8-sig")
+    except UnicodeDecodeError as error:
+        raise CaseError(
+            Problem(name, f"byte {error.start + 1} is not UTF-8 text", "UTF-8 text", "Save the file as UTF-8")
+        ) from None
+
+
+# A string that never ends is taken to the end of the text: looking for its end again and again would take hours.
+_MARK = re.compile(r'"(?:[^"\\]++|\\.)*+(?:"|\\?\Z)|[\[\]{},:]', re.DOTALL)
+
+
+def _places(text: str, name: str) -> Iterator[tuple[tuple[int | str, ...], int]]:
+    """Every place of a JSON text, in order: its path and where its key (or list item) begins.
+
+    Refuses deep nesting as it goes, so it is safe before the text is parsed. A text that is not JSON gives places of
+    no use, never an error: the parser says what is wrong.
+    """
+    path: list[int | str] = []
+    lists: list[bool] = []
+    last = ""
+    last_at = 0
+    for mark in _MARK.finditer(text):
+        sign = mark.group()
+        if sign in ("[", "{"):
+            lists.append(sign == "[")
+            path.append(0 if sign == "[" else "")
+            if len(lists) > MAX_DEPTH:
+                raise CaseError(
+                    Problem(name, "the text is nested too deeply", f"at most {MAX_DEPTH} levels", "Check the brackets")
+                )
+            if sign == "[":
+                yield tuple(path), mark.end()
+        elif sign in ("]", "}"):
+            if lists:
+                lists.pop()
+                path.pop()
+        elif sign == ":":
+            if lists and not lists[-1] and last:
+                path[-1] = last
+                yield tuple(path), last_at
+        elif sign == ",":
+            step = path[-1] if path else None
+            if lists and lists[-1] and isinstance(step, int):
+                path[-1] = step + 1
+                yield tuple(path), mark.end()
+        else:
+            last_at = mark.start()
+            try:
+                last = json.loads(sign, strict=False) if len(sign) < 300 else ""
+            except ValueError:
+                last = ""
+
+
+def _line(text: str, at: int) -> int:
+    """The line of a position; of a list item, where the item itself begins."""
+    while at < len(text) and text[at].isspace():
+        at += 1
+    return text.count("\n", 0, at) + 1
+
+
+def _refuse_structure(text: str, name: str) -> None:
+    """Deep nesting and keys that stand twice, every one with its line, before anything is parsed."""
+    seen: set[tuple[int | str, ...]] = set()
+    twice: list[Problem] = []
+    for path, at in _places(text, name):
+        if isinstance(path[-1], int):
+            continue
+        if path in seen and len(twice) < MAX_PROBLEMS:
+            where = f"{place_in_words(path)} (line {_line(text, at)})"
+            twice.append(Problem(where, "it stands twice in the same place", "each key once", "Remove one of the two"))
+        seen.add(path)
+    if twice:
+        raise CaseError(twice)
+
+
+#: Places that the form and the note call by a shorter name.
+_SHORT = {"Patient, age": "Age", "Patient, weight": "Weight", "Patient, height": "Height", "Now": "Time of the consult"}
+
+
+def _with_lines(problems: Iterable[Problem], text: str) -> list[Problem]:
+    """The problems, each with the line of the place it names, where the text holds that place."""
+    known: dict[str, int] = {}
+    wanted = {p.where for p in problems}
+    wanted |= {x.rsplit(", ", 1)[0] for x in wanted}
+    for path, at in _places(text, "Case file"):
+        words = place_in_words(path)
+        words = _SHORT.get(words, words)
+        if words in wanted:
+            known.setdefault(words, at)
+    placed = []
+    for problem in problems:
+        at = known.get(problem.where, known.get(problem.where.rsplit(", ", 1)[0], -1))
+        where = f"{problem.where} (line {_line(text, at)})" if at >= 0 else problem.where
+        placed.append(Problem(where, problem.given, problem.allowed, problem.fix))
+    return placed
 
 
 def _no_constant(word: str) -> Any:
@@ -480,28 +599,10 @@ def _no_constant(word: str) -> Any:
 
 def parse_case_text(text: str | bytes, *, name: str = "Case file") -> CaseFile:
     """JSON text -> CaseFile, structure checked only."""
-    if isinstance(text, bytes):
-        if len(text) > MAX_BYTES:
-            raise CaseError(_too_large(name, len(text)))
-        try:
-            text = text.decode("utf-8-sig")
-        except UnicodeDecodeError as error:
-            raise CaseError(
-                Problem(name, f"byte {error.start + 1} is not UTF-8 text", "UTF-8 text", "Save the file as UTF-8")
-            ) from None
-    if len(text) > MAX_BYTES:
-        raise CaseError(_too_large(name, len(text)))
-    depth = deepest = 0
-    for mark in re.finditer(r'"(?:[^"\\]|\\.)*"|[\[{]|[\]}]', text):
-        first = mark.group()[0]
-        depth += (first in "[{") - (first in "]}")
-        deepest = max(deepest, depth)
-        if deepest > MAX_DEPTH:
-            raise CaseError(
-                Problem(name, "the text is nested too deeply", f"at most {MAX_DEPTH} levels", "Check the brackets")
-            )
+    text = _decoded(text, name)
+    _refuse_structure(text, name)
     try:
-        raw = json.loads(text, object_pairs_hook=_no_duplicates, parse_constant=_no_constant)
+        raw = json.loads(text, parse_constant=_no_constant)
     except json.JSONDecodeError as error:
         raise CaseError(
             Problem(
@@ -514,13 +615,16 @@ def parse_case_text(text: str | bytes, *, name: str = "Case file") -> CaseFile:
     except ValueError:
         raise CaseError(Problem(name, "a number has too many digits", "text with its unit", "Correct it")) from None
     if not isinstance(raw, dict):
-        raise CaseError(Problem(name, "the text is not a case", "a JSON object", "Start from pkcalc schema"))
+        raise CaseError(
+            Problem(name, "the text is not a case", "a JSON object in { }", "Compare it with pkcalc schema")
+        )
     version = raw.get("pkcalc_case")
     if isinstance(version, int) and not isinstance(version, bool) and version > FORMAT_VERSION:
+        shown = str(version) if version < 10**9 else "far above 1"
         raise CaseError(
             Problem(
                 name,
-                f"the case was written in format version {version}",
+                f"the case was written in format version {shown}",
                 f"up to {FORMAT_VERSION}",
                 "It was made by a newer version of this program: update, or enter the case again",
             )
@@ -583,59 +687,75 @@ def _model_at(path: tuple[int | str, ...]) -> type[BaseModel]:
     return CaseFile
 
 
-def _line_of(text: str, path: tuple[int | str, ...]) -> str:
-    """The line of the last key of the path, where that key occurs once in the text."""
-    keys = [step for step in path if isinstance(step, str)]
-    if not keys:
-        return ""
-    hits = [m.start() for m in re.finditer(re.escape(json.dumps(keys[-1])) + r"\s*:", text)]
-    return f" (line {text.count(chr(10), 0, hits[0]) + 1})" if len(hits) == 1 else ""
-
-
 def _explain(error: ValidationError, text: str) -> list[Problem]:
-    problems: list[Problem] = []
-    seen: set[tuple[int | str, ...]] = set()
-    for item in error.errors(include_url=False, include_context=True):
-        path = tuple(item["loc"])
-        if path and path[0] == "context" and len(path) > 2 and path[2] != "AnswerFile":
-            path = path[:2]
-        elif path and path[0] == "context" and len(path) == 3:
-            path = path[:2]
-        if path in seen:
-            continue
-        seen.add(path)
-        where = place_in_words(path) + _line_of(text, path)
-        kind = item["type"]
-        if kind == "extra_forbidden":
-            known = [f.alias or n for n, f in _model_at(path[:-1]).model_fields.items()]
-            near = difflib.get_close_matches(str(path[-1]), known, n=1, cutoff=0.5)
-            fix = f'Did you mean "{near[0]}"?' if near else "Remove it"
-            problems.append(Problem(where, "this key is not known", ", ".join(sorted(known)), fix))
-        elif kind == "missing":
-            problems.append(Problem(where, "it is missing", "a value", "Add it"))
-        elif kind in ("literal_error", "model_type", "union_tag_invalid") and path and path[0] == "context":
-            problems.append(Problem(where, "the answer is not understood", "yes, no or unknown", "Choose one of them"))
-        elif kind == "literal_error":
-            allowed = str(item.get("ctx", {}).get("expected", "")).replace("'", "")
-            problems.append(Problem(where, "the word is not understood", allowed, "Choose one of them"))
-        elif kind == "string_too_long":
-            most = item.get("ctx", {}).get("max_length", 200)
-            problems.append(Problem(where, "the text is too long", f"at most {most} characters", "Shorten it"))
-        elif kind == "string_type":
-            problems.append(
-                Problem(where, "something other than text was given", 'text such as "300 mg"', "Put number and unit in quotes")
-            )
-        else:
-            expected = {"tuple_type": "a list in [ ]", "model_type": "an object in { }", "dict_type": "an object in { }"}
-            problems.append(
-                Problem(
-                    where,
-                    "the value is not of the expected kind",
-                    expected.get(kind, "see pkcalc schema"),
-                    "Compare with pkcalc schema",
-                )
-            )
+    found: dict[tuple[int | str, ...], Problem] = {}
+    items = [(tuple(x["loc"]), x) for x in error.errors(include_url=False, include_context=True)]
+    # An answer is a word or an object; where an object was given, only what is wrong inside it is said.
+    objects = {path[:2] for path, _ in items if path[:1] == ("context",) and len(path) > 3}
+    left = 0
+    for path, item in items:
+        if path[:1] == ("context",) and len(path) > 2:
+            if path[:2] in objects and len(path) == 3:
+                continue
+            path = (*path[:2], *path[3:])
+        if path not in found:
+            if len(found) == MAX_PROBLEMS:
+                left += 1
+                continue
+            found[path] = _one_problem(path, item["type"], item.get("ctx", {}))
+    wanted = {*found, *(path[:-1] for path in found)}
+    lines = {path: _line(text, at) for path, at in _places(text, "Case file") if path in wanted}
+    problems = []
+    for path, p in found.items():
+        # What is missing has no line of its own: the line of what it is missing from.
+        line = lines.get(path) or lines.get(path[:-1])
+        where = f"{p.where} (line {line})" if line else p.where
+        problems.append(Problem(where, p.given, p.allowed, p.fix))
+    if left:
+        problems.append(Problem("Case file", f"{left:,} more problems were found", "", "Mend these first"))
     return problems
+
+
+_EXPECTED = {
+    "tuple_type": "a list in [ ]",
+    "model_type": "an object in { }",
+    "dict_type": "an object in { }",
+    "int_type": "a whole number such as 1",
+    "int_from_float": "a whole number such as 1",
+    "bool_type": "true or false",
+}
+
+
+def _one_problem(path: tuple[int | str, ...], kind: str, detail: Mapping[str, Any]) -> Problem:
+    where = place_in_words(path)
+    if kind == "extra_forbidden":
+        known = sorted(f.alias or n for n, f in _model_at(path[:-1]).model_fields.items())
+        return Problem(where, "this key is not known", ", ".join(known), _nearest(str(path[-1]), known))
+    if kind == "missing":
+        return Problem(where, "it is missing", "a value", "Add it")
+    if path[:1] == ("context",) and kind in ("literal_error", "model_type"):
+        return Problem(where, "the answer is not understood", "yes, no or unknown", "Choose one of them")
+    if kind == "literal_error":
+        allowed = str(detail.get("expected", "")).replace("''", "nothing").replace("'", "")
+        return Problem(where, "the word is not understood", allowed, "Choose one of them")
+    if kind == "string_too_long":
+        return Problem(where, "the text is too long", f"at most {detail['max_length']:,} characters", "Shorten it")
+    if kind == "too_long":
+        return Problem(where, "the list is too long", f"at most {detail['max_length']:,} entries", "Shorten it")
+    if kind == "unseen":
+        return Problem(where, "the text holds characters that cannot be seen", "readable text", "Type it again")
+    if kind == "string_type":
+        fix = "Put number and unit in quotes"
+        return Problem(where, "something other than text was given", 'text such as "300 mg"', fix)
+    if kind == "json_invalid":
+        return Problem(where, "a text holds half a character", "whole characters", "Type the text again")
+    allowed = _EXPECTED.get(kind, "what pkcalc schema says")
+    return Problem(where, "the value is not of the expected kind", allowed, "Compare it with pkcalc schema")
+
+
+def _nearest(word: str, known: Iterable[str], otherwise: str = "Remove it", cutoff: float = 0.5) -> str:
+    near = difflib.get_close_matches(word[:60], list(known), n=1, cutoff=cutoff)
+    return f'Did you mean "{near[0]}"?' if near else otherwise
 
 
 # --- checking --------------------------------------------------------------------------------------------
@@ -646,39 +766,28 @@ def check_case(file: CaseFile) -> Case:
     check = _Check()
     if file.pkcalc_case != FORMAT_VERSION:
         check.say("Pkcalc case", f"format version {file.pkcalc_case}", f"{FORMAT_VERSION}", "Correct the version")
-    profile = check.attempt(lambda: _profile(file.drug))
+    profile = check.attempt(_profile, file.drug)
     if profile is None:
         raise CaseError(check.problems)
     patient = _patient(file, check, profile)
-    now = check.attempt(lambda: read_time(file.now, "Time of the consult")) if file.now else None
-    courses = tuple(
-        x for i, line in enumerate(file.doses) if (x := _course(i, line, check, profile)) is not None
-    )
-    if len(file.doses) > MAX_LINES_OF_RECORD:
-        check.say(
-            "Doses", f"{len(file.doses):,} lines were given", f"at most {MAX_LINES_OF_RECORD:,}", "Use repeated regimens"
-        )
+    now = _optional_time(file.now, "Time of the consult", check)
+    courses = tuple(c for i, x in enumerate(file.doses) if (c := _course(i, x, check, profile)) is not None)
     levels = tuple(
-        read
-        for i, level in enumerate(file.levels)
-        if (read := _level(i, level, check, profile, len(file.doses))) is not None
+        level for i, x in enumerate(file.levels) if (level := _level(i, x, check, profile, len(file.doses))) is not None
     )
     albumin = _albumin(file.albumin, "Albumin", check)
     context = _context(file, check)
     target = _target(file.target, check, profile)
     aim = _level_value(file.aim, "Aim", check, profile)
-    if aim is not None and target is not None and target.kind == "total":
-        if not target.low_mg_per_L <= aim <= target.high_mg_per_L:
-            check.say(
-                "Aim",
-                f"{file.aim} lies outside the target range {_range_words(target)}",
-                _range_words(target),
-                "Change the aim or the target range",
-            )
+    if aim is not None and target is not None and target.kind == "total" and not target.holds(aim):
+        words = _range_words(target)
+        check.say(
+            "Aim", f"{file.aim} lies outside the target range {words}", words, "Change the aim or the target range"
+        )
     proposed = tuple(
-        regimen
-        for i, p in enumerate(file.proposed)
-        if (regimen := _regimen(p, f"Proposed regimen {i + 1}", check, profile)) is not None
+        r
+        for i, x in enumerate(file.proposed)
+        if (r := _regimen(x, f"Proposed regimen {i + 1}", check, profile)) is not None
     )
     chosen = None
     if file.chosen is not None and file.chosen.regimen is not None:
@@ -694,13 +803,13 @@ def check_case(file: CaseFile) -> Case:
         check.say(
             "Plan, shelf", f'"{file.plan.shelf}" was given', ", ".join(profile.shelves), "Choose one of these shelves"
         )
-    earlier = tuple(
-        then for i, e in enumerate(file.forecast_then) if (then := _earlier(i, e, check, profile)) is not None
-    )
+    earlier = tuple(e for i, x in enumerate(file.forecast_then) if (e := _earlier(i, x, check, profile)) is not None)
     step = None
     if file.plan.largest_step:
-        typed = check.attempt(lambda: units.read(file.plan.largest_step, "dose rate", "Plan, largest step"))
-        step = typed.value if typed else None
+        typed = check.attempt(units.read, file.plan.largest_step, "dose rate", "Plan, largest step")
+        if typed is not None:
+            step = typed.value
+            _gate(step, 1, 3000, "Plan, largest step", file.plan.largest_step, "mg/day", "Check number and unit", check)
     case = Case(
         file=file,
         drug=file.drug,
@@ -720,7 +829,9 @@ def check_case(file: CaseFile) -> Case:
         method=file.method,
         earlier=earlier,
         largest_step_mg_per_day=step,
-        load_aim_mg_per_L=_level_value(file.plan.load.aim, "Plan, load, aim", check, profile) if file.plan.load else None,
+        load_aim_mg_per_L=_level_value(file.plan.load.aim, "Plan, load, aim", check, profile)
+        if file.plan.load
+        else None,
         load_at=_optional_time(file.plan.load.at, "Plan, load, at", check) if file.plan.load else None,
         restart_level_mg_per_L=_level_value(file.plan.restart_level, "Plan, restart level", check, profile),
         plan_start=_optional_time(file.plan.start, "Plan, start", check),
@@ -738,7 +849,9 @@ def check_case(file: CaseFile) -> Case:
 
 def _profile(name: str) -> Profile:
     if name not in drug_names():
-        raise CaseError(Problem("Drug", f'"{name[:40]}" was given', ", ".join(drug_names()), "Choose one of these"))
+        raise CaseError(
+            Problem("Drug", f'"{as_typed(name)}" was given', ", ".join(drug_names()), "Choose one of these")
+        )
     try:
         return load_profile(name)
     except DrugFileError as error:
@@ -746,7 +859,7 @@ def _profile(name: str) -> Profile:
 
 
 def _optional_time(text: str, where: str, check: _Check) -> datetime | None:
-    return check.attempt(lambda: read_time(text, where)) if text else None
+    return check.attempt(read_time, text, where) if text else None
 
 
 def _gate(value: float, low: float, high: float, where: str, typed: str, unit: str, fix: str, check: _Check) -> None:
@@ -764,23 +877,26 @@ def _patient(file: CaseFile, check: _Check, profile: Profile) -> Patient:
     typed = {k: v for k, v in (("age", p.age), ("weight", p.weight), ("height", p.height)) if v}
     age = weight = height = None
     if p.age:
-        read = check.attempt(lambda: units.read(p.age, "age", "Age", zero_allowed=True))
+        read = check.attempt(units.read, p.age, "age", "Age", zero_allowed=True)
         if read:
             age = read.value
             _gate(age, 0, 120, "Age", p.age, "years", "Check the age and its unit", check)
     if p.weight:
-        read = check.attempt(lambda: units.read(p.weight, "weight", "Weight"))
+        read = check.attempt(units.read, p.weight, "weight", "Weight")
         if read:
             weight = read.value
             _gate(weight, 0.4, 400, "Weight", p.weight, "kg", "Check the weight and its unit", check)
             if age is not None and age >= 17 and weight < 25:
                 check.say(
-                    "Weight", f"{p.weight} at {p.age}", "25 kg or more from 17 years", "Check the weight, its unit and the age"
+                    "Weight",
+                    f"{p.weight} at {p.age}",
+                    "25 kg or more from 17 years",
+                    "Check the weight, its unit and the age",
                 )
             if age is not None and age < 6 and weight > 60:
                 check.say("Weight", f"{p.weight} at {p.age}", "60 kg or less under 6 years", "Check weight and age")
     if p.height:
-        read = check.attempt(lambda: units.read(p.height, "height", "Height"))
+        read = check.attempt(units.read, p.height, "height", "Height")
         if read:
             height = read.value
             _gate(height, 25, 250, "Height", p.height, "cm", "Check the height and its unit", check)
@@ -792,18 +908,24 @@ def _patient(file: CaseFile, check: _Check, profile: Profile) -> Patient:
 def _albumin(file: AlbuminFile | None, where: str, check: _Check) -> Albumin | None:
     if file is None:
         return None
-    typed = check.attempt(lambda: units.read(file.value, "albumin", where))
+    typed = check.attempt(units.read, file.value, "albumin", where)
     taken = _optional_time(file.taken, f"{where}, taken", check)
     if typed is None:
         return None
     number = units.split_label(file.value)[0]
     if typed.label == "g/dL" and typed.value > 60:
         check.say(
-            where, f"{file.value} was given", "1 to 6 g/dL (both ends count)", f"Did you mean {number} g/L? Check the unit"
+            where,
+            f"{file.value} was given",
+            "1 to 6 g/dL (both ends count)",
+            f"Did you mean {number} g/L? Check the unit",
         )
     elif typed.label == "g/L" and typed.value < 10:
         check.say(
-            where, f"{file.value} was given", "10 to 60 g/L (both ends count)", f"Did you mean {number} g/dL? Check the unit"
+            where,
+            f"{file.value} was given",
+            "10 to 60 g/L (both ends count)",
+            f"Did you mean {number} g/dL? Check the unit",
         )
     elif not 10 <= typed.value <= 60:
         check.say(
@@ -819,18 +941,18 @@ def _context(file: CaseFile, check: _Check) -> dict[str, Context]:
     found: dict[str, Context] = {}
     for key, given in file.context.items():
         if key not in QUESTIONS:
-            near = difflib.get_close_matches(key, QUESTIONS, n=1, cutoff=0.5)
-            fix = f'Did you mean "{near[0]}"?' if near else "Remove it"
-            check.say(f"Context, {key[:40]}", "this question is not known", ", ".join(QUESTIONS), fix)
+            where = place_in_words(("context", key))
+            check.say(where, "this question is not known", ", ".join(QUESTIONS), _nearest(key, QUESTIONS))
         elif isinstance(given, str):
             found[key] = Context(answer=given)
         else:
-            since = _optional_time_or_date(given.since, f"Context, {key}, since", check)
+            since = _optional_date(given.since, place_in_words(("context", key, "since")), check)
             found[key] = Context(answer=given.answer, since=since, detail=given.detail)
-    if _says(found, "renal_failure") and _says(found, "renal_reduced", "no"):
-        pass
-    if _says(found, "pregnancy") and file.patient.sex == "male":
-        check.say("Context, pregnancy", "yes was answered for a male patient", "no, or sex female", "Correct one of them")
+    for key in ("pregnancy", "delivery"):
+        if _says(found, key) and file.patient.sex == "male":
+            check.say(
+                f"Context, {key}", "yes was answered for a male patient", "no, or sex female", "Correct one of them"
+            )
     if _says(found, "tube_feed_change") and _says(found, "tube_feed", "unknown"):
         check.say(
             "Context, tube feed",
@@ -845,20 +967,18 @@ def _says(found: Mapping[str, Context], question: str, answer: str = "yes") -> b
     return question in found and found[question].answer == answer
 
 
-def _optional_time_or_date(text: str, where: str, check: _Check) -> datetime | None:
-    return check.attempt(lambda: read_time(text, where, time_needed=False)) if text else None
+def _optional_date(text: str, where: str, check: _Check) -> datetime | None:
+    return check.attempt(read_time, text, where, time_needed=False) if text else None
 
 
 def _read_level(text: str, where: str, profile: Profile) -> Typed:
-    return units.read(
-        text, "level", where, molar_mass_g_per_mol=profile.molar_mass_g_per_mol, only=profile.level_units
-    )
+    return units.read(text, "level", where, molar_mass_g_per_mol=profile.molar_mass_g_per_mol, only=profile.level_units)
 
 
 def _level_value(text: str, where: str, check: _Check, profile: Profile) -> float | None:
     if not text:
         return None
-    typed = check.attempt(lambda: _read_level(text, where, profile))
+    typed = check.attempt(_read_level, text, where, profile)
     if typed is None:
         return None
     low, high = profile.level_gate_mg_per_L("total")
@@ -877,17 +997,26 @@ def _level(i: int, file: LevelFile, check: _Check, profile: Profile, n_lines: in
     if text[:1] in ("<", ">"):
         censored = "below" if text[0] == "<" else "above"
         text = text[1:].strip()
-    typed = check.attempt(lambda: _read_level(text, where, profile))
+    typed = check.attempt(_read_level, text, where, profile)
     drawn = _optional_time(file.drawn, f"{where}, drawn", check)
     albumin = _albumin(file.albumin, f"{where}, albumin", check)
     valproate = None
     if file.valproate_level:
         read = check.attempt(
-            lambda: units.read(file.valproate_level, "level", f"{where}, valproate level", only=("mg/L", "mcg/mL"))
+            units.read, file.valproate_level, "level", f"{where}, valproate level", only=("mg/L", "mcg/mL")
         )
         if read:
             valproate = read.value
-            _gate(valproate, 1, 300, f"{where}, valproate level", file.valproate_level, "mg/L", "Check it", check)
+            _gate(
+                valproate,
+                1,
+                300,
+                f"{where}, valproate level",
+                file.valproate_level,
+                "mg/L",
+                "Check the number and its unit",
+                check,
+            )
     if file.kind == "normalised" and not file.normalised_by:
         check.say(
             f"{where}, normalised by",
@@ -928,16 +1057,17 @@ def _level(i: int, file: LevelFile, check: _Check, profile: Profile, n_lines: in
 def _target(file: TargetFile | None, check: _Check, profile: Profile) -> Target | None:
     if file is None:
         return None
-    low = check.attempt(lambda: _read_level(file.low, "Target, low", profile))
-    high = check.attempt(lambda: _read_level(file.high, "Target, high", profile))
+    low = check.attempt(_read_level, file.low, "Target, low", profile)
+    high = check.attempt(_read_level, file.high, "Target, high", profile)
     if low is None or high is None:
         return None
     if low.value >= high.value:
         check.say(
             "Target", f"{file.low} to {file.high} was given", "a low end below the high end", "Swap or correct the two"
         )
-    gate_low, gate_high = profile.level_gate_mg_per_L(file.kind)
-    _gate(high.value, gate_low, gate_high, "Target, high", file.high, "mg/L", "Check number and unit", check)
+    gate = profile.level_gate_mg_per_L(file.kind)
+    for name, value, typed in (("low", low.value, file.low), ("high", high.value, file.high)):
+        _gate(value, *gate, f"Target, {name}", typed, "mg/L", "Check the number and its unit", check)
     return Target(low.value, high.value, file.kind, "this case")
 
 
@@ -951,8 +1081,7 @@ def _form(text: str, where: str, check: _Check, profile: Profile) -> str | None:
         )
         return None
     if text not in profile.forms:
-        near = difflib.get_close_matches(text, profile.forms, n=1, cutoff=0.4)
-        fix = f'Did you mean "{near[0]}"?' if near else "Choose one of these"
+        fix = _nearest(text, profile.forms, "Choose one of these", 0.4)
         check.say(where, f'"{text}" was given', ", ".join(profile.forms), fix)
         return None
     return text
@@ -960,8 +1089,8 @@ def _form(text: str, where: str, check: _Check, profile: Profile) -> str | None:
 
 def _amount(text: str, form: str, where: str, check: _Check, profile: Profile) -> float | None:
     unit = profile.forms[form].amount_unit
-    only = ("mg PE",) if unit == "mg PE" else tuple(x for x in ("mg", "g"))
-    typed = check.attempt(lambda: units.read(text, "amount", where, only=only))
+    only = ("mg PE",) if unit == "mg PE" else ("mg", "g")
+    typed = check.attempt(units.read, text, "amount", where, only=only)
     if typed is None:
         return None
     problem = intake_problem(typed.value, profile.forms[form], where, text)
@@ -972,7 +1101,7 @@ def _amount(text: str, form: str, where: str, check: _Check, profile: Profile) -
 
 
 def _duration(text: str, where: str, check: _Check, only: tuple[str, ...] | None = None) -> float | None:
-    typed = check.attempt(lambda: units.read(text, "duration", where, only=only))
+    typed = check.attempt(units.read, text, "duration", where, only=only)
     return typed.value if typed else None
 
 
@@ -987,12 +1116,6 @@ def _intakes(
     check: _Check,
     profile: Profile,
 ) -> Regimen | None:
-    infusion_h = 0.0
-    if over:
-        days = _duration(over, f"{where}, over", check, ("min", "h"))
-        if days is None:
-            return None
-        infusion_h = days * 24
     if daily:
         if amount or every:
             check.say(
@@ -1005,33 +1128,70 @@ def _intakes(
         intakes = []
         for j, dose in enumerate(daily):
             spot = f"{where}, dose {j + 1}"
-            hour = check.attempt(lambda d=dose, s=spot: read_time_of_day(d.time, f"{s}, time"))  # type: ignore[misc]
+            hour = check.attempt(read_time_of_day, dose.time, f"{spot}, time")
             form = _form(dose.form or form_text, f"{spot}, form", check, profile)
             value = _amount(dose.amount, form, f"{spot}, amount", check, profile) if form else None
-            if hour is not None and form is not None and value is not None:
-                intakes.append(Intake(form=form, hour=hour, labelled_mg=value, over_h=infusion_h))
+            over_h = _over_h(over, form, where, check, profile) if form else None
+            if hour is not None and form is not None and value is not None and over_h is not None:
+                intakes.append(Intake(form=form, hour=hour, labelled_mg=value, over_h=over_h))
         if len(intakes) != len(daily):
             return None
         keys = [(x.hour, x.form) for x in intakes]
         if len(set(keys)) != len(keys):
             check.say(where, "the same form stands twice at the same time", "each time once", "Add the two amounts up")
             return None
-        return Regimen(intakes=tuple(sorted(intakes, key=lambda x: x.hour)), cycle_h=24.0)
+        return Regimen(intakes=tuple(sorted(intakes, key=lambda x: x.hour)), cycle_h=24.0, timed=True)
     form = _form(form_text, f"{where}, form", check, profile)
     if form is None:
         return None
     value = _amount(amount, form, f"{where}, amount", check, profile)
     interval = _duration(every, f"{where}, every", check, ("h", "day", "days"))
-    if value is None or interval is None:
+    over_h = _over_h(over, form, where, check, profile)
+    if value is None or interval is None or over_h is None:
         return None
-    hours = interval * 24
+    hours = round(interval * 24, 9)
     if not 1 <= hours <= 168:
         check.say(f"{where}, every", f"{every} was given", "1 to 168 h (both ends count)", "Check the interval")
         return None
+    only = Intake(form=form, hour=0.0, labelled_mg=value, over_h=over_h)
     first = (start.hour + start.minute / 60) if start is not None else None
-    return Regimen(
-        intakes=(Intake(form=form, hour=0.0, labelled_mg=value, over_h=infusion_h),), cycle_h=hours, anchor_h=first
-    )
+    return Regimen(intakes=(only,), cycle_h=hours, anchor_h=first)
+
+
+def _over_h(text: str, form: str, where: str, check: _Check, profile: Profile) -> float | None:
+    """Infusion time in hours, 0 where none was given; only for what goes into a vein."""
+    if not text:
+        return 0.0
+    days = _duration(text, f"{where}, over", check, ("min", "h"))
+    if days is None:
+        return None
+    if profile.forms[form].absorption is not None:
+        check.say(
+            f"{where}, over", f"{text} was given for {profile.forms[form].words}", "no infusion time", "Remove it"
+        )
+        return None
+    hours = round(days * 24, 9)
+    if not round(hours, 6) + 1e-6 >= 1 / 60 or hours > 24:
+        check.say(f"{where}, over", f"{text} was given", "1 min to 24 h (both ends count)", "Check the infusion time")
+        return None
+    return hours
+
+
+def _rate(file: DoseFile, form: str, where: str, hours: float, check: _Check, profile: Profile) -> float | None:
+    """A continuous infusion in labelled mg/day."""
+    known = profile.forms[form]
+    only = ("mg PE/min", "mg PE/day") if known.amount_unit == "mg PE" else ("mg/h", "g/h", "mg/min", "mg/day", "g/day")
+    typed = check.attempt(units.read, file.rate, "dose rate", f"{where}, rate", only=only)
+    if typed is None:
+        return None
+    if known.absorption is not None:
+        check.say(f"{where}, rate", f"{file.rate} was given for {known.words}", "a form for a vein", "Check the form")
+        return None
+    if typed.value / 24 * min(hours, 1.0) > known.largest_dose_mg:
+        most = f"up to {units.show_number(known.largest_dose_mg)} {known.amount_unit} in an hour of {known.words}"
+        check.say(f"{where}, rate", f"{file.rate} was given", most, "Check the number and its unit")
+        return None
+    return typed.value
 
 
 def _regimen(file: ProposedFile, where: str, check: _Check, profile: Profile) -> Regimen | None:
@@ -1047,11 +1207,12 @@ def _course(i: int, file: DoseFile, check: _Check, profile: Profile) -> Course |
     regimen: Regimen | None = None
     single: Intake | None = None
     rate: float | None = None
-    shapes = [name for name, given in (("at", file.at), ("rate", file.rate), ("every or daily", file.every or file.daily)) if given]
+    given = {"at": file.at, "rate": file.rate, "every or daily": file.every or file.daily}
+    shapes = [name for name, value in given.items() if value]
     if len(shapes) != 1:
         check.say(
             where,
-            "it is not clear what kind of line this is" if not shapes else f"{' and '.join(shapes)} were both given",
+            f"{' and '.join(shapes)} were both given" if shapes else "it is not clear what kind of line this is",
             "amount with every, or daily, or at, or rate",
             "Give exactly one of them",
         )
@@ -1060,35 +1221,38 @@ def _course(i: int, file: DoseFile, check: _Check, profile: Profile) -> Course |
         at = _optional_time(file.at, f"{where}, at", check)
         form = _form(file.form, f"{where}, form", check, profile)
         value = _amount(file.amount, form, f"{where}, amount", check, profile) if form else None
-        over = _duration(file.over, f"{where}, over", check, ("min", "h")) if file.over else None
+        over_h = _over_h(file.over, form, where, check, profile) if form else None
         if file.from_ or file.until or file.for_about or file.missed:
-            check.say(where, "a single dose cannot have from, until, for about or missed", "", "Remove them")
-        if at is not None and form is not None and value is not None:
-            single = Intake(form=form, hour=0.0, labelled_mg=value, over_h=(over or 0.0) * 24)
+            given_too = "from, until, for about or missed was given for a single dose"
+            check.say(where, given_too, "at alone", "Remove them, or give every instead of at")
+        if at is not None and form is not None and value is not None and over_h is not None:
+            single = Intake(form=form, hour=0.0, labelled_mg=value, over_h=over_h)
             start = at
     elif file.rate:
         form = _form(file.form, f"{where}, form", check, profile)
-        typed = check.attempt(
-            lambda: units.read(file.rate, "dose rate", f"{where}, rate", only=("mg/h", "g/h", "mg/min", "mg/day", "g/day"))
-        )
-        if start is None or end is None:
+        if file.amount or file.over or file.for_about or file.missed:
+            given_too = "amount, over, for about or missed was given for a continuous infusion"
+            check.say(where, given_too, "rate with from and until", "Remove them")
+        if not (file.from_ and file.until):
             check.say(where, "an infusion was given without both ends", "from and until", "Add both clock times")
-        if form is not None and typed is not None:
-            rate = typed.value
+        elif form is not None and start is not None and end is not None:
+            hours = 24 * days_between(start, end) if _comparable(start, end) else 1.0
+            rate = _rate(file, form, where, hours, check, profile)
     else:
-        regimen = _intakes(
-            file.form, file.amount, file.every, file.daily, file.over, where, start, check, profile
-        )
-        if start is not None and about is not None:
+        regimen = _intakes(file.form, file.amount, file.every, file.daily, file.over, where, start, check, profile)
+        if file.from_ and file.for_about:
             check.say(where, "from and for about were both given", "one of the two", "Remove one of them")
-    if start is not None and end is not None and end <= start:
+        elif file.for_about and file.missed:
+            given_too = "missed doses were listed for a line without a start"
+            check.say(where, given_too, "missed with from", "Give from instead of for about")
+    if start is not None and end is not None and _comparable(start, end) and end <= start:
         check.say(
             where,
             f"it ends ({show_time(end)}) before or when it starts ({show_time(start)})",
             "an end after the start",
             "Check both times",
         )
-    if about is not None and not 0 < about <= 36525:
+    if about is not None and about > 36525:
         check.say(f"{where}, for about", f"{file.for_about} was given", "up to 100 years", "Check the length")
     missed = tuple(
         x
@@ -1114,10 +1278,17 @@ def _course(i: int, file: DoseFile, check: _Check, profile: Profile) -> Course |
     )
 
 
+def _comparable(a: datetime, b: datetime) -> bool:
+    """Both with an offset or both without; a mixture is reported for the whole case."""
+    return (a.tzinfo is None) == (b.tzinfo is None)
+
+
 def _earlier(i: int, file: EarlierForecastFile, check: _Check, profile: Profile) -> EarlierForecast | None:
     where = f"Earlier forecast {i + 1}"
     drawn = _optional_time(file.drawn, f"{where}, drawn", check)
-    values = [_level_value(getattr(file, name), f"{where}, {name}", check, profile) for name in ("median", "low", "high")]
+    values = [
+        _level_value(getattr(file, name), f"{where}, {name}", check, profile) for name in ("median", "low", "high")
+    ]
     if drawn is None or any(v is None for v in values):
         return None
     median, low, high = (float(v) for v in values if v is not None)
@@ -1145,46 +1316,89 @@ def _check_zones(case: Case, check: _Check) -> None:
 
 
 def _check_order(case: Case, check: _Check) -> None:
+    def not_after_consult(moment: datetime | None, where: str, what: str, fix: str) -> None:
+        if case.now is not None and moment is not None and moment > case.now:
+            given = f"{what} at {show_time(moment)}, after the consult ({show_time(case.now)})"
+            check.say(where, given, "a time before the consult", fix)
+
     for level in case.levels:
-        if case.now is not None and level.drawn is not None and level.drawn > case.now:
-            check.say(
-                f"Level {level.index + 1}, drawn",
-                f"it was drawn at {show_time(level.drawn)}, after the consult ({show_time(case.now)})",
-                "a time before the consult",
-                "Check the dates",
-            )
+        where = f"Level {level.index + 1}"
+        not_after_consult(level.drawn, f"{where}, drawn", "it was drawn", "Check the dates")
+        if level.albumin is not None:
+            not_after_consult(level.albumin.taken, f"{where}, albumin, taken", "it was taken", "Check the dates")
+    if case.albumin is not None:
+        not_after_consult(case.albumin.taken, "Albumin, taken", "it was taken", "Check the dates")
+    ends = [m for m in (case.now, *(x.drawn for x in case.levels)) if m is not None]
+    doses = 0.0
     for course in case.courses:
-        if case.now is not None and course.start is not None and course.start > case.now:
-            check.say(
-                f"Dose line {course.index + 1}, from",
-                f"it starts at {show_time(course.start)}, after the consult ({show_time(case.now)})",
-                "a time before the consult",
-                "The record holds what was given; put what is planned under proposed",
-            )
-        for moment in course.missed:
-            if course.start is not None and not course.start <= moment <= (course.end or moment):
-                check.say(
-                    f"Dose line {course.index + 1}, missed",
-                    f"{show_time(moment)} lies outside the line's own time",
-                    "a time within the line",
-                    "Check the date",
-                )
-            elif course.regimen is not None and course.start is not None:
-                if not course.regimen.has_dose_at(moment, course.start):
-                    check.say(
-                        f"Dose line {course.index + 1}, missed",
-                        f"no dose was due at {show_time(moment)}",
-                        "the clock time of a dose of this line",
-                        "Give the time the dose was due",
-                    )
+        key = "at" if course.single is not None else "from"
+        not_after_consult(
+            course.start,
+            f"Dose line {course.index + 1}, {key}",
+            "it starts",
+            "The record holds what was given; put what is planned under proposed",
+        )
+        _check_missed(course, check)
+        if course.regimen is not None and course.start is not None and (course.end or ends):
+            doses += course.regimen.number_of_doses(course.start, course.end or max(ends))
+    if doses > MAX_DOSES:
+        check.say(
+            "Doses",
+            f"the lines make about {doses:,.0f} doses",
+            f"at most {MAX_DOSES:,} doses",
+            "Begin the record later, or say for about how long the first dose was taken",
+        )
+
+
+def _check_missed(course: Course, check: _Check) -> None:
+    where = f"Dose line {course.index + 1}, missed"
+    if course.regimen is None or course.start is None:
+        return
+    for j, moment in enumerate(course.missed):
+        if moment < course.start or (course.end is not None and moment > course.end):
+            given = f"{show_time(moment)} lies outside the line's own time"
+            check.say(f"{where} dose {j + 1}", given, "a time within the line", "Check the date")
+        elif not course.regimen.has_dose_at(moment, course.start):
+            given = f"no dose was due at {show_time(moment)}"
+            fix = "Give the time the dose was due"
+            check.say(f"{where} dose {j + 1}", given, "the clock time of a dose of this line", fix)
+
+
+# --- looking over a checked case -----------------------------------------------------------------------
+
+
+def overlapping_lines(case: Case) -> tuple[tuple[int, int], ...]:
+    """Pairs of dose lines (0 for the first) that repeat the same form at the same time: perhaps one line entered twice.
+
+    Only lines that count as given and have a start. The same line may be in several pairs.
+    """
+    lines = sorted(
+        (c for c in case.courses if c.regimen is not None and c.start is not None and c.counts_as_given),
+        key=lambda c: (c.start, c.index),
+    )
+    pairs: list[tuple[int, int]] = []
+    running: list[Course] = []
+    for course in lines:
+        assert course.start is not None
+        running = [c for c in running if c.end is None or c.end > course.start]
+        pairs += [(c.index, course.index) for c in running if set(c.forms) & set(course.forms)]
+        running.append(course)
+    return tuple(sorted((min(p), max(p)) for p in pairs))
+
+
+_MONTH = "jan|feb|mar|apr|may|jun|jul|aug|sep|oct|nov|dec"
+_IDENTIFIER = re.compile(
+    r"(?:\d[ \-./]?){5,}\d"  # a long number, also in groups
+    r"|\d{5,}"
+    r"|\d{1,4}[-/. ]\d{1,2}[-/. ]\d{1,4}"  # a date in figures
+    rf"|\d{{1,2}}(?:st|nd|rd|th)?[-. ]?(?i:{_MONTH})[a-z]*[-., ]*\d{{2,4}}"  # a date with its month in words
+    r"|\b[A-Z][a-z]+,? [A-Z][a-z]+\b"  # two capitalised words in a row
+)
 
 
 def label_looks_like_identifier(text: str) -> bool:
     """True where a label holds a long number, a date, or two capitalised words in a row (as a name has)."""
-    return bool(
-        re.search(r"\d{5,}|\d{1,4}[-/. ]\d{1,2}[-/. ]\d{1,4}", text)
-        or re.search(r"\b[A-Z][a-z]+,? [A-Z][a-z]+\b", text)
-    )
+    return bool(_IDENTIFIER.search(text))
 
 
 # --- writing ---------------------------------------------------------------------------------------------

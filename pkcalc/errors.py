@@ -45,6 +45,12 @@ class Problem:
         return {"where": self.where, "given": self.given, "allowed": self.allowed, "fix": self.fix}
 
 
+def as_typed(text: str, most: int = 40) -> str:
+    """What was typed, safe to show in a message: shortened, and without characters that cannot be seen."""
+    clean = "".join(c if c.isprintable() else "?" for c in text[: most + 1])
+    return clean if len(clean) <= most else clean[:most] + "..."
+
+
 @dataclass(frozen=True)
 class Caution:
     """Something a person must see beside a result, with what it blocks and what would lift it."""
@@ -80,7 +86,7 @@ class CaseError(PkcalcError):
         super().__init__("\n".join(p.text for p in self.problems))
 
 
-class CannotEstimate(PkcalcError):
+class CannotEstimate(PkcalcError):  # noqa: N818 - it tells what cannot be done, not what went wrong
     """The input is readable, but the method cannot answer: what was found, why it stops, what would help."""
 
     def __init__(self, found: str, why: str, helps: str) -> None:

@@ -2,11 +2,11 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterable
+import bisect
 from datetime import datetime, timedelta
 
 from pkcalc.case import Case, Course
-from pkcalc.dosing import Intake, active_mg, flow_dose, flow_repeated
+from pkcalc.dosing import NEAR, Intake, Regimen, active_mg, flow_dose, flow_repeated
 from pkcalc.drugs.profile import Profile
 from pkcalc.errors import CannotEstimate
 from pkcalc.record import Before, Dose, Record
@@ -16,8 +16,9 @@ def given_record(case: Case, profile: Profile, until: datetime | None = None) ->
     """Every line that counts as given, dose by dose, in days since the origin of the case.
 
     until: the last moment needed; the consult (or the last level) where not given. A line that says only how long
-    it went on ("for about 3 months") becomes the regimen before the record begins, and goes on in it. Raises
-    CannotEstimate where a line has neither a start nor a length.
+    it went on ("for about 3 months") becomes the regimen before the record begins, and goes on in it. Times without
+    an offset are taken as they stand, also across a change to summer time; with offsets true elapsed time counts.
+    Raises CannotEstimate where a line has neither a start nor a length.
     """
     lines = [c for c in case.courses if c.counts_as_given]
     undated = [c for c in lines if c.start is None and c.for_about_days is None]
@@ -50,21 +51,22 @@ def given_record(case: Case, profile: Profile, until: datetime | None = None) ->
             continue
         if course.regimen is not None:
             doses += _repeated(case, course, profile, course.start, min(end, course.end or end))
+        elif course.start >= end:
+            continue
         elif course.single is not None:
             doses.append(flow_dose(course.single, case.day(course.start), profile))
         elif course.rate_mg_per_day is not None and course.end is not None:
-            days = case.day(course.end) - case.day(course.start)
-            form = profile.forms[course.rate_form]
+            # An infusion that still runs has given no more than its rate so far.
+            days = case.day(min(course.end, end)) - case.day(course.start)
             whole = Intake(course.rate_form, 0.0, course.rate_mg_per_day * days, over_h=24 * days)
             doses.append(Dose(case.day(course.start), active_mg(whole, profile), duration_day=days))
-            assert form.absorption is None or form.generic
     doses.sort(key=lambda d: d.time_day)
     first = min([d.time_day for d in doses], default=0.0)
     return Record(doses=tuple(doses), start_day=start_day if before is not None else min(first, 0.0), before=before)
 
 
 def _end(case: Case) -> datetime:
-    moments: Iterable[datetime] = [x.drawn for x in case.levels if x.drawn is not None]
+    moments = [x.drawn for x in case.levels if x.drawn is not None]
     last = max(moments, default=case.origin)
     end = case.now if case.now is not None else last
     assert end is not None
@@ -84,9 +86,19 @@ def _begin(case: Case, course: Course) -> datetime:
 
 def _repeated(case: Case, course: Course, profile: Profile, start: datetime, end: datetime) -> list[Dose]:
     assert course.regimen is not None
-    near = timedelta(minutes=1)
-    found = []
-    for moment, intake in course.regimen.doses_from(start, end):
-        if not any(abs(moment - missed) <= near for missed in course.missed):
-            found.append(flow_dose(intake, case.day(moment), profile))
-    return found
+    missed = sorted(_read_off(m, course.regimen) for m in course.missed)
+    return [
+        flow_dose(intake, case.day(moment), profile)
+        for moment, intake in course.regimen.doses_from(start, end)
+        if not _listed(_read_off(moment, course.regimen), missed)
+    ]
+
+
+def _read_off(moment: datetime, regimen: Regimen) -> datetime:
+    """A dose by the clock is known by the reading of the clock on the wall, whatever the offset beside it."""
+    return moment.replace(tzinfo=None) if regimen.by_clock else moment
+
+
+def _listed(moment: datetime, missed: list[datetime]) -> bool:
+    at = bisect.bisect_left(missed, moment - NEAR)
+    return at < len(missed) and missed[at] <= moment + NEAR

@@ -13,7 +13,7 @@ from typing import Any
 
 import pint
 
-from pkcalc.errors import CaseError, Problem
+from pkcalc.errors import CaseError, Problem, as_typed
 
 ureg: Any = pint.UnitRegistry(None, cache_folder=None)
 for _line in (
@@ -133,7 +133,7 @@ class Typed:
     label: str = ""
 
 
-def Q(value: Any, unit: str) -> Any:  # noqa: N802 - the public name is one letter on purpose
+def Q(value: Any, unit: str) -> Any:
     """A quantity: `Q(300, "mg/day")`. The unit must be one of the closed list of labels."""
     return ureg.Quantity(value, unit_of(unit))
 
@@ -151,13 +151,12 @@ def unit_of(label: str) -> Any:
 def _unknown_label(where: str, label: str, allowed: list[str]) -> Problem:
     near = [known for known in allowed if known.lower() == label.lower()]
     fix = f'Write "{near[0]}": capital and small letters matter' if near else "Give one of these units"
-    given = f'the unit "{_shorten(label)}" was given' if label else "no unit was given"
+    micro = label.replace("\u00b5", "u").replace("\u03bc", "u")
+    if micro != label:
+        plain = {"umol/L": "umol/L", "ug/mL": "mcg/mL"}.get(micro)
+        fix = f'Write "{plain}": the Greek letter is misread' if plain in allowed else fix
+    given = f'the unit "{as_typed(label)}" was given' if label else "no unit was given"
     return Problem(where, given, " or ".join(allowed), fix)
-
-
-def _shorten(text: str, most: int = 40) -> str:
-    clean = "".join(c if c.isprintable() else "?" for c in text)
-    return clean if len(clean) <= most else clean[:most] + "..."
 
 
 def read_number(text: str, where: str = "Number") -> float:
@@ -166,7 +165,7 @@ def read_number(text: str, where: str = "Number") -> float:
     Refuses signs, exponents, underscores, "nan", "inf", and a comma that may be a decimal comma.
     """
     stripped = text.strip()
-    given = f'"{_shorten(text)}" was given'
+    given = f'"{as_typed(text)}" was given'
     allowed = "a plain number such as 12.5 or 1250"
     if not stripped:
         raise CaseError(Problem(where, "nothing was given", allowed, "Enter the number"))
@@ -220,27 +219,41 @@ def read(
         )
     if len(text) > 200:
         raise CaseError(
-            Problem(where, f'"{_shorten(text)}" was given', "a number with " + " or ".join(allowed), "Shorten it")
+            Problem(where, f'"{as_typed(text)}" was given', "a number with " + " or ".join(allowed), "Shorten it")
         )
     number, label = split_label(text)
-    value = read_number(number if number else text, where)
+    if not number[:1].isdigit() and text.strip() in FACTORS[kind]:
+        raise CaseError(
+            Problem(
+                where,
+                f'"{as_typed(text)}" was given without a number',
+                "a number with " + " or ".join(allowed),
+                "Enter the number",
+            )
+        )
+    value = read_number(number, where)
     if label not in allowed:
-        if label in MOLAR and kind == "level":
+        if label in MOLAR and kind == "level" and molar_mass_g_per_mol is None:
             problem = Problem(
                 where,
-                f'"{_shorten(text)}" was given, but no molar mass is known here',
+                f'"{as_typed(text)}" was given, but no molar mass is known here',
                 " or ".join(allowed),
                 "Convert the level to mg/L first",
             )
             raise CaseError(problem)
         raise CaseError(_unknown_label(where, label, allowed))
     if value == 0 and not zero_allowed:
-        raise CaseError(Problem(where, f'"{_shorten(text)}" was given', "a number above 0", "Check the number"))
+        raise CaseError(Problem(where, f'"{as_typed(text)}" was given', "a number above 0", "Check the number"))
     factor = FACTORS[kind][label]
     if label in MOLAR:
         assert molar_mass_g_per_mol is not None
         factor *= molar_mass_g_per_mol
-    return Typed(text=text.strip(), value=value * factor, label=label)
+    return Typed(text=text.strip(), value=_decimal(value * factor), label=label)
+
+
+def _decimal(value: float) -> float:
+    """A typed decimal stays the decimal it was: 1.005 g is 1005 mg, not 1004.9999999999999."""
+    return float(f"{value:.15g}")
 
 
 def in_label(value: float, kind: str, label: str, *, molar_mass_g_per_mol: float | None = None) -> float:
@@ -263,7 +276,7 @@ def to_canonical(quantity: Any, kind: str, name: str) -> Any:
         example = {"dose rate": "300 mg/day", "level": "8 mg/L", "duration": "10 days", "volume": "49 L"}.get(
             kind, f"1 {canonical}"
         )
-        given = "nothing" if quantity is None else f'the bare value "{_shorten(str(quantity))}"'
+        given = "nothing" if quantity is None else f'the bare value "{as_typed(str(quantity))}"'
         raise CaseError(Problem(name, f"{given} was given", f"a quantity in {canonical}", f"Attach a unit: {example}"))
     unit = unit_of("day" if kind == "duration" else canonical)
     if not quantity.check(unit.dimensionality):
@@ -291,11 +304,16 @@ def show_number(value: float, digits: int = 3) -> str:
 
 
 def _decimals_below_one(value: float, digits: int) -> int:
-    mantissa, exponent = f"{abs(value):.{digits - 1}e}".split("e")
+    _, exponent = f"{abs(value):.{digits - 1}e}".split("e")
     return digits - 1 - int(exponent)
+
+
+def show_dose(value: float) -> str:
+    """The amount of a dose, every digit that was typed: '1,234.5'. A dose is never rounded on screen."""
+    return show_number(value, 12)
 
 
 def show(value: float, label: str, digits: int = 3) -> str:
     """Number and unit for screen and paper: '0.5 mg/L', '1,250 mg'."""
     text = show_number(value, digits)
-    return f"{text} {label}" if label and label != "%" else f"{text} %" if label == "%" else text
+    return f"{text} {label}" if label else text
