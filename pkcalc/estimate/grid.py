@@ -196,9 +196,7 @@ def vmax_marginal(q: Quadrature) -> Marginal:
     return Marginal(q.frame.mean[0] + q.frame.root[0, 0] * fine, _cumulated(values))
 
 
-def mixture_quantiles(
-    weights: Floats, means: Floats, variances: Floats, probabilities: Sequence[float]
-) -> Floats:
+def mixture_quantiles(weights: Floats, means: Floats, variances: Floats, probabilities: Sequence[float]) -> Floats:
     """Quantiles of a mixture of normals: Newton steps kept inside a shrinking bracket."""
     from scipy.special import ndtr
 

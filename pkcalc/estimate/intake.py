@@ -42,7 +42,7 @@ MOST_DOSES = 256
 
 #: Spacing of the course on which the dying away of a difference is summed: finer while the level first builds
 #: up.
-BUILD_UP_DAY, BUILD_UP_SAMPLE_DAY, SAMPLE_DAY = 10.0, 0.1, 0.2
+BUILD_UP_DAY, BUILD_UP_SAMPLE_DAY, SAMPLE_DAY = 8.0, 0.1, 0.3
 
 
 @dataclass(frozen=True)
@@ -95,11 +95,7 @@ def plan_intake(record: Record, level_days: Sequence[float], spread: RecordSprea
     times = np.array(level_days, dtype=np.float64)
     last = float(times.max())
     doubtful = sorted(
-        (
-            d
-            for d in record.doses
-            if d.absorption is not None and d.time_day < last and spread.share_at(d.time_day) > 0
-        ),
+        (d for d in record.doses if d.absorption is not None and d.time_day < last and spread.share_at(d.time_day) > 0),
         key=lambda d: d.time_day,
     )
     if doubtful:
@@ -118,9 +114,7 @@ def plan_intake(record: Record, level_days: Sequence[float], spread: RecordSprea
     total = np.bincount(group, weights=amount, minlength=count)
     odds = chance / (1 - chance)
     unseen = np.bincount(group, weights=amount**2 * odds, minlength=count)
-    member = np.concatenate(
-        [np.eye(count)[group].reshape(len(doubtful), count), HABIT * odds[:, None]], axis=1
-    )
+    member = np.concatenate([np.eye(count)[group].reshape(len(doubtful), count), HABIT * odds[:, None]], axis=1)
     shares = [[_absorbed(d, t) for d in doubtful] for t in level_days]
     shape = (len(times), len(doubtful))
     return IntakePlan(

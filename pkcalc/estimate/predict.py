@@ -92,9 +92,7 @@ def _widened(s: Floats, error: Floats, spread: RecordSpread, toss: Floats) -> Fl
     return picked
 
 
-def _hidden_levels(
-    s: Floats, error: Floats, censored: Sequence[str | None], noise: np.random.Generator
-) -> Floats:
+def _hidden_levels(s: Floats, error: Floats, censored: Sequence[str | None], noise: np.random.Generator) -> Floats:
     """The error of every censored level, drawn beyond its limit given the measured ones and the earlier of
     them."""
     if not any(censored):
