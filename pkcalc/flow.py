@@ -34,7 +34,7 @@ from pkcalc.record import (
     duplicates,
     with_absorption,
 )
-from pkcalc.stepping import BLOCK, Accuracy, Floats, Plan, Speed, Step, march, plan_steps, run, speeds
+from pkcalc.stepping import BLOCK, Accuracy, Floats, Plan, Speed, march, plan_steps, run, speeds
 
 __all__ = [
     "Absorption",
@@ -88,20 +88,14 @@ def amounts(
     """
     times = _times(record, times_day)
     vmax, kappa = _parameters(vmax_mg_per_day, kappa_mg)
-    factor = np.broadcast_to(
-        _parameters(absorption_factor, 1.0, names=("Absorption factor", ""))[0], vmax.shape
-    )
+    factor = np.broadcast_to(_parameters(absorption_factor, 1.0, names=("Absorption factor", ""))[0], vmax.shape)
     rates = _path_rates(record, volume_L, vmax)
     out = np.empty((len(vmax), len(times)))
     for one in np.unique(factor):
         some = np.flatnonzero(factor == one)
         scaled = with_absorption(record, float(one))
         part = [rate[some] for rate in rates]
-        given = (
-            None
-            if start_mg is None
-            else np.broadcast_to(np.asarray(start_mg, dtype=np.float64), vmax.shape)[some]
-        )
+        given = None if start_mg is None else np.broadcast_to(np.asarray(start_mg, dtype=np.float64), vmax.shape)[some]
         start = _start(scaled, vmax[some], kappa[some], part, accuracy, given, typical_per_day)
         out[some] = _walk(scaled, times, vmax[some], kappa[some], part, start, accuracy, typical_per_day)
     return out
@@ -180,53 +174,25 @@ def sensitivity(
             share = dict.fromkeys(earlier, start_change[some] * inverse)
             left = {w: np.zeros(len(some)) for w in earlier}
             total = np.zeros(len(some))
-            for number, step, block in march(
-                plan, vmax[some], kappa[some], start[some], [r[some] for r in rates]
-            ):
+            for number, step, block in march(plan, vmax[some], kappa[some], start[some], [r[some] for r in rates]):
                 if step is not None:
-                    slope = block.slopes(step)
                     receiving = {w for w, *_ in step.windows}
                     for w in [w for w in share if w not in receiving and w not in left]:
                         left[w] = total.copy()
-                    if receiving:
-                        _receive(step, slope, inverse, total, share, left)
-                    total += slope
+                    for w, push, half, full in step.windows:
+                        value = share.get(w)
+                        if value is None:
+                            value = np.zeros(len(some))
+                        elif w in left:
+                            value *= np.exp(left.pop(w) - total)
+                        share[w] = block.carry(value, step, push, half, full)
+                    if left:
+                        total += block.total_slope(step)
                 for position in plan.reached.get(number, ()):
                     for w, value in share.items():
                         now = value * np.exp(left[w] - total) if w in left else value
-                        out[some, position, w] = np.where(
-                            block.w > 0, now / np.where(block.w > 0, block.w, 1.0), 0.0
-                        )
+                        out[some, position, w] = np.where(block.w > 0, now / np.where(block.w > 0, block.w, 1.0), 0.0)
     return out
-
-
-def _receive(
-    step: Step,
-    slope: Floats,
-    inverse: Floats,
-    total: Floats,
-    share: dict[int, Floats],
-    left: dict[int, Floats],
-) -> None:
-    """Move the windows' shares over a step in which they receive drug: what was there decays, what enters
-    decays over the rest of the step (3/4 of it for the first half of the step's input, 1/4 for the
-    second)."""
-    quarter = np.exp(-0.25 * slope)
-    half = quarter * quarter
-    three = half * quarter
-    whole = half * half
-    for w, push, first, both in step.windows:
-        value = share.get(w)
-        if value is None:
-            value = np.zeros_like(slope)
-        elif w in left:
-            value *= np.exp(left.pop(w) - total)
-        if push:
-            value += push * inverse
-        value *= whole
-        if both:
-            value += (first * three + (both - first) * quarter) * inverse
-        share[w] = value
 
 
 def first_crossing(
@@ -261,9 +227,7 @@ def first_crossing(
             some = speed.positions[begin : begin + BLOCK]
             aim = threshold[some] / vmax[some]
             when = np.full(len(some), np.inf)
-            for number, step, block in march(
-                plan, vmax[some], kappa[some], start[some], [r[some] for r in rates]
-            ):
+            for number, step, block in march(plan, vmax[some], kappa[some], start[some], [r[some] for r in rates]):
                 if step is None:
                     when[sign * (block.w - aim) >= 0] = record.start_day
                     continue
@@ -343,8 +307,7 @@ def step_error(
             continue
         fineness = speed.fineness(accuracy)
         one, two = (
-            _run_class(record, times, vmax, kappa, rates, start, mine, speed, f)
-            for f in (fineness, 2.0 * fineness)
+            _run_class(record, times, vmax, kappa, rates, start, mine, speed, f) for f in (fineness, 2.0 * fineness)
         )
         change = np.abs(one - two) / np.where(two > 0, two, 1.0)
         worst = max(worst, float(change.max(initial=0.0)))
@@ -573,9 +536,7 @@ def _parameters(
 ) -> tuple[Floats, Floats]:
     one, two = (
         np.array(np.atleast_1d(a), dtype=np.float64)
-        for a in np.broadcast_arrays(
-            np.asarray(first, dtype=np.float64), np.asarray(second, dtype=np.float64)
-        )
+        for a in np.broadcast_arrays(np.asarray(first, dtype=np.float64), np.asarray(second, dtype=np.float64))
     )
     found = []
     for name, values in zip(names, (one, two), strict=True):

@@ -93,9 +93,7 @@ class _Stream:
 def _held_back(z: float) -> float:
     """1 - (1 - e^-z)/z: share of what was released at a constant rate that is already absorbed."""
     if z < 0.1:
-        return z * (
-            1 / 2 - z * (1 / 6 - z * (1 / 24 - z * (1 / 120 - z * (1 / 720 - z * (1 / 5040 - z / 40320)))))
-        )
+        return z * (1 / 2 - z * (1 / 6 - z * (1 / 24 - z * (1 / 120 - z * (1 / 720 - z * (1 / 5040 - z / 40320))))))
     return 1.0 + math.expm1(-z) / z
 
 
@@ -323,6 +321,8 @@ class Block:
         self.rate = np.empty(n)
         self.spare = np.empty(n)
         self.k: Floats | float | None = None
+        self.slopes = (np.empty(n), np.empty(n), np.empty(n), np.empty(n))
+        self.slopes_of: Step | None = None
 
     def _eliminated(self, x: Floats, out: Floats) -> None:
         np.add(self.big_k, x, out=out)
@@ -445,30 +445,71 @@ class Block:
             2.0 * (self.start + self.w) - 4.0 * middle,
         )
 
-    def slopes(self, step: Step) -> Floats:
+    def stage_slopes(self, step: Step) -> tuple[Floats, Floats, Floats, Floats]:
+        """h times the slope of the elimination at the four stages of the Runge-Kutta step just taken."""
+        if self.slopes_of is step:
+            return self.slopes
+        h = step.h
+        if self.k is not None:
+            for out, x in zip(self.slopes, (self.start, self.x2, self.x3, self.x4), strict=True):
+                np.multiply(self._slope(x), h, out=out)
+        else:
+            # the slope of x/(K + x) is (1 - x/(K + x))^2 / K, and the quotients are there already
+            np.divide(h, self.big_k, out=self.spare)
+            for out, u in zip(self.slopes, (self.u1, self.u2, self.u3, self.u4), strict=True):
+                np.subtract(1.0, u, out=out)
+                out *= out
+                out *= self.spare
+        self.slopes_of = step
+        return self.slopes
+
+    def total_slope(self, step: Step) -> Floats:
         """Integral of the slope of the elimination over the step just taken (Simpson)."""
         if step.rate is not None:
             with np.errstate(divide="ignore"):
                 exact: Floats = np.minimum(-np.log(self.tangent(step)), 700.0)
             return exact
-        if self.k is None:
-            # the slope of x/(K + x) is (1 - x/(K + x))^2 / K, and the quotients are there already
-            total: Floats = 1.0 - self.u2
-            total *= total
-            np.subtract(1.0, self.u3, out=self.spare)
-            self.spare *= self.spare
-            total += self.spare
-            total += total
-            for u in (self.u1, self.u4):
-                np.subtract(1.0, u, out=self.spare)
-                self.spare *= self.spare
-                total += self.spare
-            total /= self.big_k
-        else:
-            total = self._slope(self.start) + self._slope(self.x4)
-            total += 2.0 * (self._slope(self.x2) + self._slope(self.x3))
-        total *= step.h / 6.0
+        d1, d2, d3, d4 = self.stage_slopes(step)
+        total: Floats = d2 + d3
+        total += total
+        total += d1
+        total += d4
+        total *= 1.0 / 6.0
         return total
+
+    def carry(self, change: Floats, step: Step, push: float, half: float, full: float) -> Floats:
+        """Derivative of the state after the step just taken along a change of the state before it and of input.
+
+        change: of the state [days at the full rate], before a push; push, half, full: of the three inputs [mg].
+        The exact derivative of a Runge-Kutta step. In a constant piece, what enters decays over the rest of it
+        (3/4 of it for the first half of the input, 1/4 for the second).
+        """
+        first = change + push * self.inverse if push else change
+        if step.rate is not None:
+            quarter = np.sqrt(np.sqrt(self.tangent(step)))
+            late = half * quarter**3 + (full - half) * quarter
+            moved: Floats = first * quarter**4 + late * self.inverse
+            return moved
+        d1, d2, d3, d4 = self.stage_slopes(step)
+        middle = first + half * self.inverse if full else first
+        whole = first + full * self.inverse if full else first
+        spare = self.spare
+        e1 = d1 * first
+        np.multiply(e1, -0.5, out=spare)
+        spare += middle
+        e2 = d2 * spare
+        np.multiply(e2, -0.5, out=spare)
+        spare += middle
+        spare *= d3
+        e2 += spare
+        e2 += e2
+        e1 += e2
+        np.subtract(whole, spare, out=spare)
+        spare *= d4
+        e1 += spare
+        e1 *= -1.0 / 6.0
+        e1 += whole
+        return e1
 
     def _slope(self, x: Floats) -> Floats:
         s = self.big_k + x
@@ -491,24 +532,7 @@ class Block:
                 km=self.big_k,
                 first_order=0.0 if self.k is None else self.k,
             )
-        if self.k is None:
-            g = h / self.big_k
-            d1, d2, d3, d4 = ((1.0 - u) for u in (self.u1, self.u2, self.u3, self.u4))
-            for d in (d1, d2, d3, d4):
-                d *= d
-                d *= g
-        else:
-            d1, d2, d3, d4 = (h * self._slope(x) for x in (self.start, self.x2, self.x3, self.x4))
-        d2 *= 1.0 - 0.5 * d1
-        d3 *= 1.0 - 0.5 * d2
-        d4 *= 1.0 - d3
-        d2 += d3
-        d2 += d2
-        d1 += d2
-        d1 += d4
-        d1 *= -1.0 / 6.0
-        d1 += 1.0
-        return d1
+        return self.carry(np.ones_like(self.w), step, 0.0, 0.0, 0.0)
 
 
 def march(

@@ -390,6 +390,18 @@ def test_sensitivity_is_the_derivative(before: float | None) -> None:
         assert np.all(np.abs(found[..., w] - difference)[usable] <= 1e-3 * np.abs(difference[usable]) + 2e-4)
 
 
+def test_sensitivity_soon_after_a_dose_at_everyday_steps() -> None:
+    """Where one step still matters: within hours of one dose, fast elimination."""
+    times = [0.03, 0.08, 0.2, 0.5]
+    sides = [
+        np.log(flow.amounts(Record((Dose(0.0, a, absorption=Absorption(8.0)),)), times, 600.0, 40.0, accuracy="finest"))
+        for a in (300.3, 299.7)
+    ]
+    record = Record((Dose(0.0, 300.0, absorption=Absorption(8.0)),))
+    found = flow.sensitivity(record, times, [(0.0, 1.0)], 600.0, 40.0)[..., 0]
+    assert np.allclose(found, (sides[0] - sides[1]) / 0.002, rtol=2e-3)
+
+
 def test_stiff_draws_are_bounded_in_work_and_right() -> None:
     """Km next to nothing: the answer follows the closed form's limit, and mass is kept."""
     record = Record(tuple(Dose(i / 3, 100.0, absorption=Absorption(11.0)) for i in range(3)))
