@@ -1171,7 +1171,7 @@ def _over_h(text: str, form: str, where: str, check: _Check, profile: Profile) -
         )
         return None
     hours = round(days * 24, 9)
-    if not round(hours, 6) + 1e-6 >= 1 / 60 or hours > 24:
+    if not 1 / 60 - 1e-9 <= hours <= 24:
         check.say(f"{where}, over", f"{text} was given", "1 min to 24 h (both ends count)", "Check the infusion time")
         return None
     return hours
