@@ -139,7 +139,7 @@ def run_consult(case: Case, site: Site | str | Path | None = None) -> Consult:
             goal=state.goal,
             scale=scale,
             observations=observations,
-            record=found.record if chosen.method == posterior.WHOLE_RECORD else None,
+            history=_history(found.record, prior, state) if chosen.method == posterior.WHOLE_RECORD else None,
             stops=stops,
         )
         proposed, table = plan.own, plan.table
@@ -282,6 +282,14 @@ def record_spread(case: Case, profile: Profile) -> RecordSpread:
         wrong_level_chance=profile.spread.wrong_level_chance,
         wrong_level_factor=profile.spread.wrong_level_factor,
     )
+
+
+def _history(record: Record | None, prior: Prior | None, state: State) -> planning.History | None:
+    """What the whole-record estimate was learned from, for today's level."""
+    if record is None or prior is None:
+        return None
+    spread = record_spread(state.case, state.profile)
+    return planning.History(record, level_data(state), spread, prior.first_order_per_day)
 
 
 def _prior(case: Case, profile: Profile, site: Site) -> Prior | None:

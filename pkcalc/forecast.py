@@ -83,9 +83,7 @@ def forecast_rates(
     """
     rates = np.asarray(rates_mg_per_day, dtype=np.float64)
     vmax, km, weights = estimate.vmax_mg_per_day, estimate.km_mg_per_L, estimate.weights
-    steady = formulas.steady_state_level(
-        dose_rate_mg_per_day=rates[:, None], vmax_mg_per_day=vmax, km_mg_per_L=km
-    )
+    steady = formulas.steady_state_level(dose_rate_mg_per_day=rates[:, None], vmax_mg_per_day=vmax, km_mg_per_L=km)
     chances = {
         "below": (steady < goal.low_mg_per_L) @ weights,
         "above": (steady > goal.high_mg_per_L) @ weights,
@@ -111,9 +109,7 @@ def forecast_rates(
         vmax_mg_per_day=estimate.point.vmax_mg_per_day,
         km_mg_per_L=estimate.point.km_mg_per_L,
     )
-    rises = formulas.sensitivity_at(
-        dose_rate_mg_per_day=rates, vmax_mg_per_day=estimate.point.vmax_mg_per_day
-    )
+    rises = formulas.sensitivity_at(dose_rate_mg_per_day=rates, vmax_mg_per_day=estimate.point.vmax_mg_per_day)
     return tuple(
         Forecast(
             rate_mg_per_day=float(rates[i]),
@@ -154,11 +150,7 @@ def bands(values: Floats, weights: Floats) -> tuple[Band, ...]:
         last = np.maximum(finite - 1, 0)
         rows = np.arange(len(values))
         a, b = ordered[rows, np.minimum(low, last)], ordered[rows, np.minimum(high, last)]
-        value = (
-            a + (b - a) * (place - low if high > low else 0.0)
-            if finite.all()
-            else _between(a, b, place - low)
-        )
+        value = a + (b - a) * (place - low if high > low else 0.0) if finite.all() else _between(a, b, place - low)
         found.append(np.where((p * n > finite) & (finite < n) | (finite == 0), np.inf, value))
     return tuple(Band(float(m), float(a), float(b)) for m, a, b in zip(*found, strict=True))
 
@@ -212,23 +204,46 @@ def draws_of(values: ArrayLike, few: Fewer) -> Floats:
     return given[few.chosen]
 
 
-def fully_taken(estimate: Estimate, doses_missed: float) -> Estimate:
-    """The estimate for doses that are all taken, where a share of the past ones was not.
+@dataclass(frozen=True)
+class TwoLines:
+    """One estimate twice: for the past intake carried on (central) and for every dose taken (taken)."""
 
-        Vmax of the record = true Vmax / (1 - share),  so  true Vmax = Vmax x (1 - share);  Km as it is
+    central: Estimate
+    taken: Estimate
 
-    A level on a dose that was partly taken makes elimination look faster than it is. doses_missed: share of the
-    recorded doses that differ from the record, 0 to under 1. The volume is left as it is: it comes from the
-    weight, hardly from the doses. Derived from the rate law.
+
+def two_lines(estimate: Estimate, doses_missed: float, *, counted: bool) -> TwoLines:
+    """The estimate for doses partly taken, as in the past, and for doses all taken.
+
+        taking a share f of the doses:  Css = Km f R / (Vmax - f R) = Km R / (Vmax/f - R)
+
+    A level on a dose that was partly taken makes elimination look faster than it is. doses_missed: 1 - f, share of the
+    recorded doses taken to be missed, 0 to under 1. counted: True where the estimate already reckons with it (its Vmax
+    is the true one, and Vmax and volume are divided by f for the central line); False where it takes every recorded
+    dose as given (its Vmax is the apparent one, and is multiplied by f for the safety line; the volume then comes from
+    the weight and stays). Derived from the rate law.
     """
     if doses_missed == 0:
-        return estimate
-    taken = 1.0 - doses_missed
+        return TwoLines(estimate, estimate)
+    f = 1.0 - doses_missed
+    if counted:
+        return TwoLines(_scaled_elimination(estimate, 1.0 / f, volume=1.0 / f), estimate)
+    return TwoLines(estimate, _scaled_elimination(estimate, f, volume=1.0))
+
+
+def _scaled_elimination(estimate: Estimate, vmax: float, *, volume: float) -> Estimate:
+    summary = {**estimate.summary, "vmax_mg_per_day": scaled(estimate.summary["vmax_mg_per_day"], vmax)}
+    point = replace(estimate.point, vmax_mg_per_day=estimate.point.vmax_mg_per_day * vmax)
+    if estimate.volume_L is not None and volume != 1.0:
+        summary["volume_L"] = scaled(summary["volume_L"], volume)
+        if point.volume_L is not None:
+            point = replace(point, volume_L=point.volume_L * volume)
     return replace(
         estimate,
-        vmax_mg_per_day=estimate.vmax_mg_per_day * taken,
-        point=replace(estimate.point, vmax_mg_per_day=estimate.point.vmax_mg_per_day * taken),
-        summary={**estimate.summary, "vmax_mg_per_day": scaled(estimate.summary["vmax_mg_per_day"], taken)},
+        vmax_mg_per_day=estimate.vmax_mg_per_day * vmax,
+        volume_L=None if estimate.volume_L is None else estimate.volume_L * volume,
+        point=point,
+        summary=summary,
     )
 
 

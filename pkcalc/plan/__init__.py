@@ -11,8 +11,9 @@ from dataclasses import dataclass
 from pkcalc.case import Case
 from pkcalc.dosing import Regimen
 from pkcalc.drugs.profile import Profile
+from pkcalc.estimate.posterior import WHOLE_RECORD
 from pkcalc.estimate.result import Estimate
-from pkcalc.forecast import Goal, fully_taken
+from pkcalc.forecast import Goal, two_lines
 from pkcalc.levels import LabScale, Observation, total_spread
 from pkcalc.plan import limits, loading, nextlevel, pausing, switching
 from pkcalc.plan import overlay as overlaying
@@ -29,7 +30,9 @@ from pkcalc.plan.candidates import (
     with_courses,
 )
 from pkcalc.plan.present import (
+    History,
     Today,
+    clocked,
     doses_missed,
     first_dose_hour,
     is_present,
@@ -46,12 +49,12 @@ from pkcalc.plan.shelf import (
     part_words,
     shelf_in_use,
 )
-from pkcalc.record import Record
 from pkcalc.site import Site
 from pkcalc.units import show
 
 __all__ = [
     "Candidate",
+    "History",
     "Plan",
     "Setting",
     "ShelfInUse",
@@ -106,17 +109,18 @@ def make(
     goal: Goal,
     scale: LabScale,
     observations: tuple[Observation, ...],
-    record: Record | None = None,
+    history: History | None = None,
     stops: frozenset[str] = frozenset(),
 ) -> Plan:
     """The plan from an estimate.
 
-    record: what was given, where the estimate comes from it (today's level then follows its course). stops: what the
-    cautions take away; with "regimens" among them nothing is offered, and the danger numbers still stand.
+    history: the record with its levels, where the estimate comes from them (today's level then follows its course).
+    stops: what the cautions take away; with "regimens" among them nothing is offered, and the danger numbers stand.
     """
     share, taken_words = doses_missed(case, profile)
-    taken = fully_taken(estimate, share)
-    now = today(case, estimate, observations, record)
+    lines = two_lines(estimate, share, counted=estimate.method == WHOLE_RECORD)
+    central, taken = lines.central, lines.taken
+    now = today(case, taken, observations, history)
     shelf = shelf_in_use(case, profile, site)
     rate = present_rate(case, profile)
     most = limits.largest_daily(case, profile, site)
@@ -128,7 +132,7 @@ def make(
         site,
         now=now,
         present_mg_per_day=rate,
-        central=estimate,
+        central=central,
         taken=taken,
         goal=goal,
         scale=scale,
@@ -138,7 +142,7 @@ def make(
         site=site,
         goal=goal,
         scale=scale,
-        central=estimate,
+        central=central,
         taken=taken,
         start_mg_per_L=now.start_mg_per_L,
         draw_days=FIRST_LOOK_DAYS,
@@ -201,7 +205,7 @@ def _loads(
         case=case,
         profile=setting.profile,
         site=setting.site,
-        estimate=setting.central,
+        estimate=setting.taken,
         goal=setting.goal,
         now=now,
         products=shelf.products,
@@ -224,8 +228,10 @@ def _asked(
         return None
     latest = observations[-1] if observations else None
     noise = latest.log_sd if latest is not None else total_spread(case, setting.profile, setting.site).log_sd
+    timed, known = clocked(regimen, case)
     return nextlevel.Asked(
-        regimen=regimen,
+        regimen=timed,
+        clock_known=known,
         words=regimen.words(setting.profile),
         estimate=setting.central,
         taken=setting.taken,

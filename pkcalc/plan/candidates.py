@@ -229,10 +229,17 @@ def _judge(c: Candidate, s: Setting) -> Candidate:
         why.append(s.refused)
     limit, warn = s.site.stop_chance, s.site.warn_chance
     if c.danger > limit:
-        why.append(
-            f"Taken in full, the chance of a level above {show(s.goal.critical_mg_per_L, 'mg/L')} or of no steady state "
-            f"is {percent(c.danger)}, above the limit of {percent(limit)}."
-        )
+        above = f"above {show(s.goal.critical_mg_per_L, 'mg/L')}"
+        if c.taken.above_critical > limit:
+            why.append(
+                f"Taken in full, the chance of a level {above} or of no steady state is {percent(c.danger)}, above the "
+                f"limit of {percent(limit)}."
+            )
+        else:
+            why.append(
+                f"The level is high today: at the next feasible draw, in {show(s.draw_days, 'days')}, the chance of a level "
+                f"{above} is still {percent(c.danger)}, above the limit of {percent(limit)}."
+            )
     if c.rate_mg_per_day > s.largest_mg_per_day * (1 + 1e-9):
         why.append(
             f"{show(c.rate_mg_per_day, 'mg/day', 4)} of active drug is above the largest daily dose of "
@@ -278,6 +285,9 @@ def shown(
     aim = _aim_rate(setting)
     centre = aim if centre is None else centre
     low, high = 0.7 * min(centre, aim), 1.25 * max(centre, aim)
+    offered = [c.rate_mg_per_day for c in rest if c.offered and low <= c.rate_mg_per_day <= high]
+    # beyond the largest offered dose a few more, so that the limit is seen, not a long list of refusals
+    high = min(high, 1.12 * max(*offered, centre)) if offered else high
     rest = [c for c in rest if low <= c.rate_mg_per_day <= high]
     room = max(most - len(must), 0)
     if len(rest) > room and room:
@@ -294,7 +304,7 @@ def shown(
 
 def _plainness(c: Candidate) -> tuple[float, ...]:
     doses = len({x.hour for x in c.regimen.intakes})
-    return (len(c.products), doses, len({x.labelled_mg for x in c.regimen.intakes}), len(c.dispense))
+    return (doses, len(c.products), len({x.labelled_mg for x in c.regimen.intakes}), len(c.dispense))
 
 
 def _aim_rate(s: Setting) -> float:

@@ -5,6 +5,7 @@ from __future__ import annotations
 import math
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
+from datetime import timedelta
 from itertools import product as every_pair
 
 import numpy as np
@@ -239,11 +240,14 @@ def by_mouth(ward: Ward, products: Sequence[Product], aim_mg_per_L: float) -> Lo
             why.append(f"No load by mouth before {excluded} is excluded. {asked}".strip())
     pieces = ", then ".join(
         f"{show_number(mg / unit.mg_per_unit, 6)} x {show(unit.mg_per_unit, form.amount_unit, 6)}"
-        f" ({show(mg, form.amount_unit, 6)})" + (f" after {show_number(h)} h" if h else " at once")
+        f" ({show(mg, form.amount_unit, 6)})"
+        + (f" after {show_number(h)} h" if h else "" if len(parts) == 1 else " at once")
         for h, mg in parts
     )
     order = (
-        f"{show(amount, form.amount_unit, 6)} {form.words} by mouth in {len(parts)} parts: {pieces}.",
+        f"{show(amount, form.amount_unit, 6)} {form.words} by mouth"
+        + (f" in {len(parts)} parts" if len(parts) > 1 else "")
+        + f": {pieces}.",
         oral.setting,
         f"Maintenance begins {show_number(oral.maintenance_after_h)} h after the first part.",
     )
@@ -324,8 +328,6 @@ def _load(
     draw = f"Draw a level {when}, not earlier"
     if moment is not None:
         after_min = (minutes or 0.0) + draw_after_h * 60
-        from datetime import timedelta
-
         draw += f" (begun at {show_time(moment)}: from {show_time(moment + timedelta(minutes=after_min))})"
     return Load(
         form=product.form,

@@ -35,6 +35,8 @@ HORIZON_DAYS = 14
 WITHIN = 0.10
 #: An early safety level is looked for from this day on, and not after the other.
 SAFETY_FROM_DAY, SAFETY_UNTIL_DAY = 2.0, 7.0
+#: A chance of no steady state above this calls for a safety level whatever the rest says.
+NO_PLATEAU_MATERIAL = 0.01
 BINS = 128
 #: A steady level is counted up to this multiple of the critical one; no steady state counts as that.
 MOST_OF_CRITICAL = 4.0
@@ -122,10 +124,12 @@ def log_steady(estimate: Estimate, rate_mg_per_day: float, goal: Goal) -> Floats
 
 @dataclass(frozen=True)
 class Asked:
-    """One regimen for which the next level is planned. words: as on the note. free: the laboratory reports free levels.
+    """One regimen for which the next level is planned. words: as on the note. clock_known: False where the times of the
+    doses are not stated, so that none is named. free: the laboratory reports free levels.
     material: the chance above the range or of no steady state, every dose taken, from which a safety level is due."""
 
     regimen: Regimen
+    clock_known: bool
     words: str
     estimate: Estimate
     taken: Estimate
@@ -178,6 +182,7 @@ def next_level(asked: Asked) -> NextLevel | None:
         start_mg_per_L=start,
     )
     settled_days = bands(np.asarray(settled)[None, :], estimate.weights)[0]
+    rising = bool(np.median(target) >= np.median(np.log(np.maximum(start, 1e-6))))
     safety, why_safety = _safety(asked, draws, chosen, rate)
     why = [
         f"A level on day {show_number(chosen.day, 2)} is expected to narrow the forecast of the steady level from a spread "
@@ -185,7 +190,7 @@ def next_level(asked: Asked) -> NextLevel | None:
         f"{show_number(draws[-1].day, 2)} would give {_times(draws[-1].spread)}. It is the first draw within "
         f"{show_number(100 * WITHIN)} % of the best in {HORIZON_DAYS} days.",
         *why_safety,
-        _meaning(settled_days, rising=bool(np.median(target) >= np.median(np.log(np.maximum(start, 1e-6))))),
+        _meaning(settled_days, rising=rising),
     ]
     return NextLevel(
         regimen_words=asked.words,
@@ -195,8 +200,8 @@ def next_level(asked: Asked) -> NextLevel | None:
         safety=safety,
         settled_days=settled_days,
         meaningful_day=settled_days.high,
-        action=action_line(chosen, asked),
-        safety_action=action_line(safety, asked) if safety is not None else "",
+        action=action_line(chosen, asked, rising=rising),
+        safety_action=action_line(safety, asked, rising=rising) if safety is not None else "",
         why=tuple(why),
     )
 
@@ -265,7 +270,7 @@ def _safety(asked: Asked, draws: Sequence[Draw], chosen: Draw, rate: float) -> t
     )
     high = float((steady > asked.goal.high_mg_per_L) @ taken.weights)
     none = float(np.isinf(steady) @ taken.weights)
-    if high <= asked.site.warn_chance and none == 0:
+    if high <= asked.site.warn_chance and none <= NO_PLATEAU_MATERIAL:
         return None, []
     early = [d for d in draws if SAFETY_FROM_DAY <= d.day <= SAFETY_UNTIL_DAY and d.day < chosen.day]
     if not early:
@@ -295,12 +300,16 @@ def _meaning(settled: Band, *, rising: bool) -> str:
     )
 
 
-def action_line(draw: Draw, asked: Asked) -> str:
+def action_line(draw: Draw, asked: Asked, *, rising: bool = True) -> str:
     """'On 12 Apr before the 21:00 dose; above 14 mg/L as reported means rising faster than forecast: call.'"""
     kind = "free level" if asked.free else "total level"
-    limit = f"above {show(draw.reported.high, 'mg/L')} as reported ({kind}) means rising faster than forecast: call."
+    way = "rising faster" if rising else "falling slower"
+    limit = f"above {show(draw.reported.high, 'mg/L')} as reported ({kind}) means {way} than forecast: call."
     if draw.moment is None:
         return f"On day {show_number(draw.day, 2)} before the dose; {limit}"
     moment = draw.moment
+    date = f"On {moment.day} {MONTHS[moment.month - 1]}"
+    if not asked.clock_known:
+        return f"{date} before the dose; {limit}"
     hour = moment.hour + moment.minute / 60
-    return f"On {moment.day} {MONTHS[moment.month - 1]} before the {show_time_of_day(hour)} dose; {limit}"
+    return f"{date} before the {show_time_of_day(hour)} dose; {limit}"

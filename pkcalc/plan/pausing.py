@@ -10,7 +10,7 @@ import numpy as np
 from pkcalc import flow, formulas
 from pkcalc.case import Case
 from pkcalc.estimate.result import Band, Estimate
-from pkcalc.forecast import TIME_DRAWS, Goal, bands, draws_of, fewer_draws
+from pkcalc.forecast import TIME_DRAWS, bands, draws_of, fewer_draws
 from pkcalc.plan.candidates import Candidate, Setting
 from pkcalc.plan.present import Floats, Today
 from pkcalc.record import Record
@@ -82,15 +82,17 @@ def pause(case: Case, now: Today, setting: Setting, every: Sequence[Candidate]) 
 
     None too without a volume: then no time can be told.
     """
-    goal, central = setting.goal, setting.central
+    goal, estimate = setting.goal, setting.taken
     level = now.level
-    if level is None or central.volume_L is None:
+    if level is None or estimate.volume_L is None:
         return None
     to = case.restart_level_mg_per_L or goal.high_mg_per_L
     if level.median <= goal.high_mg_per_L and case.restart_level_mg_per_L is None:
         return None
-    few = fewer_draws(central, TIME_DRAWS).estimate
-    start = draws_of(now.start_mg_per_L, fewer_draws(central, TIME_DRAWS))
+    forms = {f for c in case.courses for f in c.forms}
+    every = [c for c in every if all(x.form in forms for x in c.regimen.intakes)] or list(every)
+    few = fewer_draws(estimate, TIME_DRAWS).estimate
+    start = draws_of(now.start_mg_per_L, fewer_draws(estimate, TIME_DRAWS))
     days = time_to_fall(few, start, to)
     lines = [
         "Levels daily during a pause or after a reduction; restart by the level, not by the calendar.",
@@ -135,7 +137,7 @@ def pause(case: Case, now: Today, setting: Setting, every: Sequence[Candidate]) 
         days=band,
         with_absorption=late,
         reductions=_reductions(every, setting, few, start, to),
-        restarts=_restarts(every, goal, few, start, late or band),
+        restarts=_restarts(every, setting, few, start, late or band),
         lines=tuple(lines),
     )
 
@@ -231,13 +233,21 @@ def _spread_out(fits: Sequence[Candidate]) -> list[Candidate]:
 
 
 def _restarts(
-    every: Sequence[Candidate], goal: Goal, few: Estimate, start: Floats, pause_days: Band
+    every: Sequence[Candidate], setting: Setting, few: Estimate, start: Floats, pause_days: Band
 ) -> tuple[Restart, ...]:
-    """Offered regimens whose plateau lies in the range on both lines, with an early, a timely and a late restart."""
+    """Regimens to go on with, each with an early, a timely and a late restart.
+
+    Their plateau lies in the range on both lines and its chance of too high below the stop; today's level, which keeps
+    them from being offered now, has come down by then.
+    """
+    goal, limit = setting.goal, setting.site.stop_chance
+    if setting.refused:
+        return ()
     fits = [
         c
         for c in every
-        if c.offered
+        if c.taken.above_critical <= limit
+        and c.rate_mg_per_day <= min(setting.largest_mg_per_day, setting.present_mg_per_day or np.inf)
         and not c.proposed
         and c.forecast.steady.median >= goal.low_mg_per_L
         and c.taken.steady.median <= goal.high_mg_per_L

@@ -3,16 +3,17 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
-from dataclasses import dataclass
-from datetime import datetime, timedelta
+from dataclasses import dataclass, replace
+from datetime import datetime
 
 import numpy as np
 from numpy.typing import NDArray
 
-from pkcalc import flow
 from pkcalc.case import Case, Course
 from pkcalc.dosing import Regimen
 from pkcalc.drugs.profile import Profile
+from pkcalc.estimate.error_model import LevelData, RecordSpread
+from pkcalc.estimate.predict import predicted_levels
 from pkcalc.estimate.result import Band, Estimate
 from pkcalc.forecast import TIME_DRAWS, bands, fewer_draws
 from pkcalc.levels import Observation, adherence
@@ -68,25 +69,45 @@ class Today:
         return bands(self.level_mg_per_L[None, :], np.full(len(self.level_mg_per_L), 1.0))[0]
 
 
+@dataclass(frozen=True)
+class History:
+    """The record that an estimate was learned from, with its levels and how far both are believed."""
+
+    record: Record
+    levels: tuple[LevelData, ...]
+    spread: RecordSpread
+    first_order_per_day: float = 0.0
+
+
 def today(
     case: Case,
     estimate: Estimate,
     observations: Sequence[Observation],
-    record: Record | None,
+    history: History | None,
 ) -> Today:
-    """Today's level by the record's own course where the estimate comes from the record, else the latest level."""
+    """Today's level, from what the record and its levels say, where the estimate comes from them; else the latest level.
+
+    estimate: its true elimination (every dose taken).
+    """
     moment = case.plan_start or case.now
     latest = _latest(observations)
     measured = latest.working_mg_per_L if latest is not None else None
     few = fewer_draws(estimate, TIME_DRAWS).estimate
     n = len(few.weights)
-    if record is None or estimate.volume_L is None or moment is None or case.origin is None:
+    if history is None or estimate.volume_L is None or moment is None or case.origin is None:
         words = "no level" if latest is None else f"{latest.name}, taken to hold now"
         level = None if measured is None else np.full(n, measured)
         return Today(moment, level, words, (), measured)
-    day = max(case.day(moment), record.start_day)
-    assert few.volume_L is not None
-    course = flow.levels(record, (day,), few.vmax_mg_per_day, few.km_mg_per_L, few.volume_L)
+    record = history.record
+    day = max(case.day(moment), record.start_day, *(x.time_day for x in history.levels))
+    course = predicted_levels(
+        record,
+        history.levels,
+        history.spread,
+        few,
+        (day,),
+        first_order_per_day=history.first_order_per_day,
+    )
     unabsorbed = tuple(
         Dose(d.time_day - day, d.amount_mg, 0.0, d.absorption)
         for d in record.doses
@@ -124,10 +145,28 @@ def first_dose_hour(case: Case) -> float | None:
         return None
     if course.regimen.by_clock:
         return course.regimen.intakes[-1].hour
-    if course.regimen.cycle_h == 24.0 and course.start is not None:
+    if course.start is not None:
         return course.start.hour + course.start.minute / 60
     return None
 
 
-def draw_moment(start: datetime, days: float) -> datetime:
-    return start + timedelta(days=days)
+def clocked(regimen: Regimen, case: Case) -> tuple[Regimen, bool]:
+    """A regimen by the clock, and whether its times are known.
+
+    Where only the interval is stated, the doses are counted from the time of day of the present one, if that is known;
+    else from midnight, and no clock time may be named.
+    """
+    if regimen.by_clock:
+        return regimen, True
+    anchor = regimen.anchor_h if regimen.anchor_h is not None else first_dose_hour(case)
+    first = anchor or 0.0
+    cycle = regimen.cycle_h
+    days = max(1, round(cycle / 24))
+    if abs(24.0 * days / cycle - round(24.0 * days / cycle)) > 1e-9:
+        return regimen, False
+    intakes = []
+    for n in range(round(24.0 * days / cycle)):
+        for x in regimen.intakes:
+            intakes.append(replace(x, hour=(first + n * cycle + x.hour) % (24.0 * days)))
+    intakes.sort(key=lambda x: x.hour)
+    return Regimen(tuple(intakes), cycle_h=24.0 * days), anchor is not None
