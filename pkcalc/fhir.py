@@ -1319,7 +1319,8 @@ class _Reading:
         """Changes the outcome of an entry's line, adding why."""
         at = self.line_of[number]
         line = self.lines[at]
-        fix = "Check it against the laboratory report." if outcome == "check" else ""
+        source = "laboratory report" if line.resource == "Observation" else "chart"
+        fix = f"Check it against the {source}."
         kept = (line.fix or fix) if outcome == "check" else ""
         self.lines[at] = Line(number, line.resource, outcome, f"{line.said} {said}", kept)
 

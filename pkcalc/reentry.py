@@ -159,11 +159,11 @@ class Comparison:
         }
 
 
-def compare(first: Case, second: Case, site: Site | str | Path | None = None) -> Comparison:
+def compare(first: Case, second: Case, site: Site | str | Path | None = None, *, forecasts: bool = True) -> Comparison:
     """Two checked entries of one case -> every difference with both values and its effect on the forecast.
 
-    Where the entries agree no forecast is run. Each of up to MOST_TRIED differences is also tried alone: the first
-    entry with this one field of the second.
+    Where the entries agree, or forecasts is False, no forecast is run. Each of up to MOST_TRIED differences is
+    also tried alone: the first entry with this one field of the second.
     """
     a, b = _data(first.file), _data(second.file)
     profile = load_profile(first.drug)
@@ -171,7 +171,7 @@ def compare(first: Case, second: Case, site: Site | str | Path | None = None) ->
     different = [x for x in found if not x.same]
     effects: tuple[str, ...] = ()
     alone: dict[int, str] = {}
-    if different:
+    if different and forecasts:
         before, after = _run(first, site), _run(second, site)
         effects = _effects(before, after, "first", "second")
         if 1 < len(different) <= MOST_TRIED and first.drug == second.drug:
