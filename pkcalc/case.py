@@ -572,7 +572,13 @@ def _refuse_structure(text: str, name: str) -> None:
 
 
 #: Places that the form and the note call by a shorter name.
-_SHORT = {"Patient, age": "Age", "Patient, weight": "Weight", "Patient, height": "Height", "Now": "Time of the consult"}
+_SHORT = {
+    "Patient, age": "Age",
+    "Patient, weight": "Weight",
+    "Patient, height": "Height",
+    "Now": "Time of the consult",
+    "Chosen, regimen": "Chosen regimen",
+}
 
 
 def _with_lines(problems: Iterable[Problem], text: str) -> list[Problem]:
@@ -1025,7 +1031,12 @@ def _level(i: int, file: LevelFile, check: _Check, profile: Profile, n_lines: in
             "Say who normalised it, or give the measured total and the albumin",
         )
     if file.on_dose is not None and not 1 <= file.on_dose <= n_lines:
-        check.say(f"{where}, on dose", f"line {file.on_dose} was named", f"1 to {n_lines}", "Name a line of the record")
+        check.say(
+            f"{where}, on dose",
+            f"line {file.on_dose} was named",
+            f"1 to {n_lines}" if n_lines else "none: there is no dose line",
+            "Name a line of the record",
+        )
     if typed is None:
         return None
     low, high = profile.level_gate_mg_per_L(file.kind)

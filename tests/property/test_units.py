@@ -21,7 +21,9 @@ def test_a_value_goes_into_a_unit_and_back(value: float, place: tuple[str, str])
     kind, label = place
     text = f"{value:.12f}".rstrip("0").rstrip(".")
     typed = units.read(f"{text} {label}", kind, "Place", molar_mass_g_per_mol=252.27)
-    assert units.in_label(typed.value, kind, label, molar_mass_g_per_mol=252.27) == pytest.approx(float(text), rel=1e-12)
+    assert units.in_label(typed.value, kind, label, molar_mass_g_per_mol=252.27) == pytest.approx(
+        float(text), rel=1e-12
+    )
 
 
 @given(st.floats(-1e12, 1e12, allow_nan=False), st.integers(1, 12))

@@ -47,7 +47,10 @@ def test_numbers_that_are_read(text: str, value: float) -> None:
         ("\u0661\u0662", f'Dose: "\u0661\u0662" was given. {DIGITS}'),
         ("\u00bd", f'Dose: "\u00bd" was given. {DIGITS}'),
         ("-3", 'Dose: "-3" was given. Allowed: a number of 0 or more. Check the number: it cannot be negative.'),
-        ("\u22123", 'Dose: "\u22123" was given. Allowed: a number of 0 or more. Check the number: it cannot be negative.'),
+        (
+            "\u22123",
+            'Dose: "\u22123" was given. Allowed: a number of 0 or more. Check the number: it cannot be negative.',
+        ),
         ("+3", f'Dose: "+3" was given. {PLAIN} Leave out the plus sign.'),
         (
             "12,5",
@@ -113,16 +116,28 @@ LEVELS = "mg/L or mcg/mL or mg/dL or g/L or umol/L or mmol/L"
     ("text", "message"),
     [
         ("8", f"Level 1: no unit was given. Allowed: {LEVELS}. Give one of these units."),
-        ("8 MG/L", f'Level 1: the unit "MG/L" was given. Allowed: {LEVELS}. Write "mg/L": capital and small letters matter.'),
+        (
+            "8 MG/L",
+            f'Level 1: the unit "MG/L" was given. Allowed: {LEVELS}. Write "mg/L": capital and small letters matter.',
+        ),
         ("8 mg", f'Level 1: the unit "mg" was given. Allowed: {LEVELS}. Give one of these units.'),
         ("8 kg", f'Level 1: the unit "kg" was given. Allowed: {LEVELS}. Give one of these units.'),
         ("8 mg/L/day", f'Level 1: the unit "mg/L/day" was given. Allowed: {LEVELS}. Give one of these units.'),
-        ("8 \u00b5mol/L", f'Level 1: the unit "\u00b5mol/L" was given. Allowed: {LEVELS}. Write "umol/L": the Greek letter is misread.'),
-        ("8 \u03bcg/mL", f'Level 1: the unit "\u03bcg/mL" was given. Allowed: {LEVELS}. Write "mcg/mL": the Greek letter is misread.'),
+        (
+            "8 \u00b5mol/L",
+            f'Level 1: the unit "\u00b5mol/L" was given. Allowed: {LEVELS}. Write "umol/L": the Greek letter is misread.',
+        ),
+        (
+            "8 \u03bcg/mL",
+            f'Level 1: the unit "\u03bcg/mL" was given. Allowed: {LEVELS}. Write "mcg/mL": the Greek letter is misread.',
+        ),
         ("0 mg/L", 'Level 1: "0 mg/L" was given. Allowed: a number above 0. Check the number.'),
         ("mg/L", f'Level 1: "mg/L" was given without a number. Allowed: a number with {LEVELS}. Enter the number.'),
         ("", f"Level 1: nothing was given. Allowed: a number with {LEVELS}. Enter number and unit."),
-        ("-3 mg/L", 'Level 1: "-3" was given. Allowed: a number of 0 or more. Check the number: it cannot be negative.'),
+        (
+            "-3 mg/L",
+            'Level 1: "-3" was given. Allowed: a number of 0 or more. Check the number: it cannot be negative.',
+        ),
         ("nan mg/L", f'Level 1: "nan" was given. {DIGITS}'),
         ("inf mg/L", f'Level 1: "inf" was given. {DIGITS}'),
         ("1_000 mg/L", f'Level 1: "1_000" was given. {DIGITS}'),
@@ -209,7 +224,13 @@ def test_numbers_as_shown(value: float, digits: int, text: str) -> None:
 
 
 def test_doses_keep_every_digit() -> None:
-    assert [show_dose(x) for x in (1234.5, 112.5, 0.125, 1005.0, 12345.25)] == ["1,234.5", "112.5", "0.125", "1,005", "12,345.25"]
+    assert [show_dose(x) for x in (1234.5, 112.5, 0.125, 1005.0, 12345.25)] == [
+        "1,234.5",
+        "112.5",
+        "0.125",
+        "1,005",
+        "12,345.25",
+    ]
 
 
 def test_numbers_with_units_as_shown() -> None:
