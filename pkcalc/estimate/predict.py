@@ -53,9 +53,18 @@ def predicted_levels(
     gain = intake_gain(plan, full, course, vmax, kappa)
     log_level = np.log(course[:, plan.level_at]) - np.log(volume)[:, None]
     m, n = len(levels), len(vmax)
-    shared = covariance(np.zeros(len(days)), gain, plan.variance)
     noise = np.random.default_rng(_SEED)
-    mean, cov = log_level[:, m:], shared[:, m:, m:]
+    # doses after the last level: taken or not, drawn one by one; the levels say nothing of them but the habit
+    told = np.any(plan.absorbed[:m] > 0, axis=0)
+    to_come = np.zeros(plan.groups, dtype=bool)
+    if plan.groups == len(told) + 1:
+        to_come[:-1] = ~told
+    odds = plan.variance[to_come]
+    taken = noise.random((n, len(odds))) >= odds / (1 + odds)
+    change = taken * (1 + odds) - 1
+    later = np.einsum("ntd,nd->nt", gain[:, m:, to_come], change)
+    shared = covariance(np.zeros(len(days)), gain[:, :, ~to_come], plan.variance[~to_come])
+    mean, cov = log_level[:, m:] + later, shared[:, m:, m:]
     if m:
         own = np.array([x.own_variance for x in levels])
         error = np.log([x.level_mg_per_L for x in levels]) - log_level[:, :m]

@@ -21,6 +21,8 @@ from pkcalc.drugs.profile import load_profile
 from pkcalc.estimate.error_model import LevelData, RecordSpread
 from pkcalc.estimate.posterior import from_record
 from pkcalc.estimate.predict import predicted_levels
+from pkcalc.levels import everyday_cv
+from pkcalc.site import no_site
 
 TABLE_SEED = 2026
 
@@ -46,10 +48,12 @@ def run(ward: Ward, *, count: int, seed: int) -> dict[str, float]:
         profile.spread.wrong_level_chance,
         profile.spread.wrong_level_factor,
     )
+    assay = profile.spread.assay_cv
+    everyday = everyday_cv(profile, no_site(), assay)
     inside, low_side, high_side, widths, misses, distrusted = 0, 0, 0, [], [], 0
     for patient in patients(ward, prior, count=count, seed=seed):
         levels = [
-            LevelData(day, level, profile.spread.assay_cv, index=i)
+            LevelData(day, level, assay, day_cv=everyday, index=i)
             for i, (day, level) in enumerate(zip(patient.level_days, patient.level_mg_per_L, strict=True))
         ]
         estimate = from_record(patient.record, levels, prior, spread, n=1024)
