@@ -22,7 +22,7 @@ from pydantic_core import PydanticCustomError
 
 from pkcalc import units
 from pkcalc.clock import days_between, read_time, read_time_of_day, show_time
-from pkcalc.dosing import Intake, Regimen, intake_problem
+from pkcalc.dosing import Intake, Regimen, continuous, intake_problem
 from pkcalc.drugs.profile import Profile, drug_names, load_profile
 from pkcalc.errors import CaseError, DrugFileError, Problem, as_typed
 from pkcalc.units import Typed
@@ -33,6 +33,7 @@ MAX_DEPTH = 24
 MAX_LINES_OF_RECORD = 20_000
 MAX_DOSES = 100_000
 MAX_PROBLEMS = 100
+MAX_ENTRIES = 300_000
 
 Answer = Literal["yes", "no", "unknown"]
 Kind = Literal["total", "free", "normalised"]
@@ -125,6 +126,7 @@ class DoseFile(BaseModel):
 
     model_config = _FILE
     form: Text = Field("", description="A form of the drug profile; there is no default.")
+    product: Text = Field("", description="A liquid product of the drug profile, where amount or rate is in mL.")
     amount: Text = Field("", description='Amount of each dose, for example "300 mg".')
     every: Text = Field("", description='For example "24 h", "12 h" or "48 h"; with amount.')
     daily: tuple[ClockDoseFile, ...] = Field(
@@ -132,7 +134,7 @@ class DoseFile(BaseModel):
     )
     at: Text = Field("", description="Clock time of a single dose; with amount.")
     over: Text = Field("", description='Infusion time, for example "30 min".')
-    rate: Text = Field("", description='A continuous infusion, for example "7 g/h"; with from and until.')
+    rate: Text = Field("", description='A continuous infusion, for example "7 g/h" or, with product, "88 mL/h".')
     from_: Text = Field("", alias="from", description="Clock time of the first dose.")
     until: Text = Field("", description="Clock time after which no dose was given; empty: still going on.")
     for_about: Text = Field("", description='Instead of from, where only the length is known: "3 months".')
@@ -142,6 +144,16 @@ class DoseFile(BaseModel):
     source: Literal["given", "ordered", "stated"] = "given"
     given_by: Literal["nurse", "carer", "self", "unknown"] = "unknown"
     confirmed: Answer = Field("unknown", description="For ordered or stated lines: did a person confirm it?")
+    comment: LongText = ""
+
+
+class DialysisFile(BaseModel):
+    """One session that removes the drug at a first-order rate while it runs."""
+
+    model_config = _FILE
+    from_: Text = Field(alias="from", description="Clock time at which it starts; it may lie ahead.")
+    until: Text = Field("", description="Clock time at which it ends; empty: still going on.")
+    clearance: Text = Field("", description='Of the drug, for example "150 mL/min"; empty: the drug file\'s value.')
     comment: LongText = ""
 
 
@@ -175,9 +187,11 @@ class ProposedFile(BaseModel):
 
     model_config = _FILE
     form: Text = ""
+    product: Text = Field("", description="A liquid product of the drug profile, where amount or rate is in mL.")
     amount: Text = ""
     every: Text = ""
     daily: tuple[ClockDoseFile, ...] = Field((), max_length=24)
+    rate: Text = Field("", description='A continuous infusion, for example "7 g/h".')
 
 
 class LoadFile(BaseModel):
@@ -249,6 +263,7 @@ class CaseFile(BaseModel):
         default_factory=dict, max_length=100, json_schema_extra={"propertyNames": {"enum": [*QUESTIONS]}}
     )
     doses: tuple[DoseFile, ...] = Field((), max_length=MAX_LINES_OF_RECORD)
+    dialysis: tuple[DialysisFile, ...] = Field((), max_length=100)
     levels: tuple[LevelFile, ...] = Field((), max_length=500)
     target: TargetFile | None = None
     aim: Text = Field("", description='The level aimed at, for example "15 mg/L".')
@@ -325,6 +340,18 @@ class Course:
 
 
 @dataclass(frozen=True)
+class Session:
+    """One checked dialysis session. end: None while it is still going on. assumed: no clearance was given."""
+
+    index: int
+    start: datetime
+    end: datetime | None
+    clearance_L_per_day: float
+    assumed: bool
+    typed: DialysisFile
+
+
+@dataclass(frozen=True)
 class Level:
     """One checked level: the reported value in mg/L of its own kind."""
 
@@ -397,6 +424,7 @@ class Case:
     restart_level_mg_per_L: float | None = None
     plan_start: datetime | None = None
     next_draw: datetime | None = None
+    dialysis: tuple[Session, ...] = ()
 
     def answer(self, question: str) -> str:
         """'yes', 'no', 'unknown' or 'not stated'."""
@@ -411,6 +439,7 @@ class Case:
             for x in (
                 *(c.start for c in self.courses),
                 *(level.drawn for level in self.levels),
+                *(s.start for s in self.dialysis),
                 self.now,
             )
             if x is not None
@@ -560,7 +589,10 @@ def _refuse_structure(text: str, name: str) -> None:
     """Deep nesting and keys that stand twice, every one with its line, before anything is parsed."""
     seen: set[tuple[int | str, ...]] = set()
     twice: list[Problem] = []
-    for path, at in _places(text, name):
+    for number, (path, at) in enumerate(_places(text, name)):
+        if number >= MAX_ENTRIES:
+            most = f"at most {MAX_ENTRIES:,} entries"
+            raise CaseError(Problem(name, "the text has too many entries", most, "Give the case of one patient only"))
         if isinstance(path[-1], int):
             continue
         if path in seen and len(twice) < MAX_PROBLEMS:
@@ -644,6 +676,7 @@ def parse_case_text(text: str | bytes, *, name: str = "Case file") -> CaseFile:
 _PLAIN = {
     "doses": "Dose line",
     "levels": "Level",
+    "dialysis": "Dialysis session",
     "proposed": "Proposed regimen",
     "daily": "dose",
     "missed": "missed dose",
@@ -675,6 +708,7 @@ def _model_at(path: tuple[int | str, ...]) -> type[BaseModel]:
         "doses": DoseFile,
         "daily": ClockDoseFile,
         "levels": LevelFile,
+        "dialysis": DialysisFile,
         "patient": PatientFile,
         "albumin": AlbuminFile,
         "target": TargetFile,
@@ -781,6 +815,7 @@ def check_case(file: CaseFile) -> Case:
     levels = tuple(
         level for i, x in enumerate(file.levels) if (level := _level(i, x, check, profile, len(file.doses))) is not None
     )
+    dialysis = tuple(s for i, x in enumerate(file.dialysis) if (s := _session(i, x, check, profile)) is not None)
     albumin = _albumin(file.albumin, "Albumin", check)
     context = _context(file, check)
     target = _target(file.target, check, profile)
@@ -842,6 +877,7 @@ def check_case(file: CaseFile) -> Case:
         restart_level_mg_per_L=_level_value(file.plan.restart_level, "Plan, restart level", check, profile),
         plan_start=_optional_time(file.plan.start, "Plan, start", check),
         next_draw=_optional_time(file.chosen.next_draw, "Chosen, next draw", check) if file.chosen else None,
+        dialysis=dialysis,
     )
     if file.plan.load and file.plan.load.form not in profile.forms:
         check.say("Plan, load, form", f'"{file.plan.load.form}" was given', ", ".join(profile.forms), "Choose a form")
@@ -1098,8 +1134,36 @@ def _form(text: str, where: str, check: _Check, profile: Profile) -> str | None:
     return text
 
 
-def _amount(text: str, form: str, where: str, check: _Check, profile: Profile) -> float | None:
+def _in_mL(text: str, product: str, form: str, where: str, check: _Check, profile: Profile) -> float | None:
+    """Labelled mg in mL (or mg/h in mL/h) of a named product: a strength in per cent alone can mean two things."""
+    liquids = {p.id: p for p in profile.products.values() if p.form == form and p.unit == "mL"}
+    if product not in liquids:
+        given = f'of the product "{product[:40]}"' if product else "without the product"
+        check.say(
+            where,
+            f"{text} was given {given}",
+            "; ".join(f"{p.id} ({p.strength_words})" for p in liquids.values()) or "amounts in mg only for this form",
+            "Name the product as its label reads" if liquids else "Give the amount in mg",
+        )
+        return None
+    typed = check.attempt(units.read, text.removesuffix("/h"), "volume", where, only=("mL",))
+    return None if typed is None else 1000 * typed.value * liquids[product].mg_per_unit
+
+
+def _is_in(text: str, label: str) -> bool:
+    return units.split_label(text)[1] == label
+
+
+def _amount(text: str, form: str, where: str, check: _Check, profile: Profile, product: str = "") -> float | None:
     unit = profile.forms[form].amount_unit
+    if _is_in(text, "mL"):
+        labelled_mg = _in_mL(text, product, form, where, check, profile)
+        if labelled_mg is None:
+            return None
+        problem = intake_problem(labelled_mg, profile.forms[form], where, text)
+        if problem:
+            check.problems.append(problem)
+        return None if problem else labelled_mg
     only = ("mg PE",) if unit == "mg PE" else ("mg", "g")
     typed = check.attempt(units.read, text, "amount", where, only=only)
     if typed is None:
@@ -1126,6 +1190,7 @@ def _intakes(
     start: datetime | None,
     check: _Check,
     profile: Profile,
+    product: str = "",
 ) -> Regimen | None:
     if daily:
         if amount or every:
@@ -1141,7 +1206,7 @@ def _intakes(
             spot = f"{where}, dose {j + 1}"
             hour = check.attempt(read_time_of_day, dose.time, f"{spot}, time")
             form = _form(dose.form or form_text, f"{spot}, form", check, profile)
-            value = _amount(dose.amount, form, f"{spot}, amount", check, profile) if form else None
+            value = _amount(dose.amount, form, f"{spot}, amount", check, profile, product) if form else None
             over_h = _over_h(over, form, where, check, profile) if form else None
             if hour is not None and form is not None and value is not None and over_h is not None:
                 intakes.append(Intake(form=form, hour=hour, labelled_mg=value, over_h=over_h))
@@ -1155,7 +1220,7 @@ def _intakes(
     form = _form(form_text, f"{where}, form", check, profile)
     if form is None:
         return None
-    value = _amount(amount, form, f"{where}, amount", check, profile)
+    value = _amount(amount, form, f"{where}, amount", check, profile, product)
     interval = _duration(every, f"{where}, every", check, ("h", "day", "days"))
     over_h = _over_h(over, form, where, check, profile)
     if value is None or interval is None or over_h is None:
@@ -1188,11 +1253,17 @@ def _over_h(text: str, form: str, where: str, check: _Check, profile: Profile) -
     return hours
 
 
-def _rate(file: DoseFile, form: str, where: str, hours: float, check: _Check, profile: Profile) -> float | None:
+def _rate(
+    file: DoseFile | ProposedFile, form: str, where: str, hours: float, check: _Check, profile: Profile
+) -> float | None:
     """A continuous infusion in labelled mg/day."""
     known = profile.forms[form]
     only = ("mg PE/min", "mg PE/day") if known.amount_unit == "mg PE" else ("mg/h", "g/h", "mg/min", "mg/day", "g/day")
-    typed = check.attempt(units.read, file.rate, "dose rate", f"{where}, rate", only=only)
+    if _is_in(file.rate, "mL/h"):
+        hourly = _in_mL(file.rate, file.product, form, f"{where}, rate", check, profile)
+        typed = None if hourly is None else Typed(file.rate, 24 * hourly, "mL/h")
+    else:
+        typed = check.attempt(units.read, file.rate, "dose rate", f"{where}, rate", only=only)
     if typed is None:
         return None
     if known.absorption is not None:
@@ -1206,7 +1277,13 @@ def _rate(file: DoseFile, form: str, where: str, hours: float, check: _Check, pr
 
 
 def _regimen(file: ProposedFile, where: str, check: _Check, profile: Profile) -> Regimen | None:
-    return _intakes(file.form, file.amount, file.every, file.daily, "", where, None, check, profile)
+    if file.rate:
+        if file.amount or file.every or file.daily:
+            check.say(where, "a rate and doses were both given", "one of the two", "Remove one of them")
+        form = _form(file.form, f"{where}, form", check, profile)
+        rate = _rate(file, form, where, 1.0, check, profile) if form else None
+        return None if form is None or rate is None else continuous(form, rate)
+    return _intakes(file.form, file.amount, file.every, file.daily, "", where, None, check, profile, file.product)
 
 
 def _course(i: int, file: DoseFile, check: _Check, profile: Profile) -> Course | None:
@@ -1231,7 +1308,7 @@ def _course(i: int, file: DoseFile, check: _Check, profile: Profile) -> Course |
     if file.at:
         at = _optional_time(file.at, f"{where}, at", check)
         form = _form(file.form, f"{where}, form", check, profile)
-        value = _amount(file.amount, form, f"{where}, amount", check, profile) if form else None
+        value = _amount(file.amount, form, f"{where}, amount", check, profile, file.product) if form else None
         over_h = _over_h(file.over, form, where, check, profile) if form else None
         if file.from_ or file.until or file.for_about or file.missed:
             given_too = "from, until, for about or missed was given for a single dose"
@@ -1244,13 +1321,20 @@ def _course(i: int, file: DoseFile, check: _Check, profile: Profile) -> Course |
         if file.amount or file.over or file.for_about or file.missed:
             given_too = "amount, over, for about or missed was given for a continuous infusion"
             check.say(where, given_too, "rate with from and until", "Remove them")
-        if not (file.from_ and file.until):
-            check.say(where, "an infusion was given without both ends", "from and until", "Add both clock times")
-        elif form is not None and start is not None and end is not None:
-            hours = 24 * days_between(start, end) if _comparable(start, end) else 1.0
+        if not file.from_:
+            check.say(
+                where,
+                "an infusion was given without its start",
+                "from, and until once it has ended",
+                "Add the clock time",
+            )
+        elif form is not None and start is not None and (end is not None or not file.until):
+            hours = 24 * days_between(start, end) if end is not None and _comparable(start, end) else 1.0
             rate = _rate(file, form, where, hours, check, profile)
     else:
-        regimen = _intakes(file.form, file.amount, file.every, file.daily, file.over, where, start, check, profile)
+        regimen = _intakes(
+            file.form, file.amount, file.every, file.daily, file.over, where, start, check, profile, file.product
+        )
         if file.from_ and file.for_about:
             check.say(where, "from and for about were both given", "one of the two", "Remove one of them")
         elif file.for_about and file.missed:
@@ -1289,6 +1373,40 @@ def _course(i: int, file: DoseFile, check: _Check, profile: Profile) -> Course |
     )
 
 
+def _session(i: int, file: DialysisFile, check: _Check, profile: Profile) -> Session | None:
+    where = f"Dialysis session {i + 1}"
+    known = profile.dialysis
+    if known is None:
+        check.say(
+            where,
+            f"a session was given for {profile.name}",
+            "no session: the drug file holds no clearance by dialysis",
+            "Remove it and go by measured levels",
+        )
+        return None
+    before = len(check.problems)
+    start = check.attempt(read_time, file.from_, f"{where}, from")
+    end = _optional_time(file.until, f"{where}, until", check)
+    clearance = known.clearance_L_per_day
+    if file.clearance:
+        typed = check.attempt(units.read, file.clearance, "clearance", f"{where}, clearance", only=("mL/min", "L/h"))
+        if typed is not None:
+            clearance = typed.value
+            low, high = (x / 1.44 for x in known.gate_L_per_day)
+            fix = "Give the clearance of this drug, not the blood flow"
+            _gate(clearance / 1.44, low, high, f"{where}, clearance", file.clearance, "mL/min", fix, check)
+    if start is not None and end is not None and _comparable(start, end) and end <= start:
+        check.say(
+            where,
+            f"it ends ({show_time(end)}) before or when it starts ({show_time(start)})",
+            "an end after the start",
+            "Check both times",
+        )
+    if start is None or len(check.problems) > before:
+        return None
+    return Session(i, start, end, clearance, not file.clearance, file)
+
+
 def _comparable(a: datetime, b: datetime) -> bool:
     """Both with an offset or both without; a mixture is reported for the whole case."""
     return (a.tzinfo is None) == (b.tzinfo is None)
@@ -1314,6 +1432,7 @@ def _check_zones(case: Case, check: _Check) -> None:
     moments += [x.drawn for x in case.levels if x.drawn is not None]
     moments += [m for m in (case.now, case.plan_start, case.load_at, case.next_draw) if m is not None]
     moments += [e.drawn for e in case.earlier]
+    moments += [m for s in case.dialysis for m in (s.start, s.end) if m is not None]
     moments += [a.taken for a in (case.albumin, *(x.albumin for x in case.levels)) if a is not None and a.taken]
     moments += [c.since for c in case.context.values() if c.since is not None and c.since.tzinfo is not None]
     aware = [m.tzinfo is not None for m in moments]
