@@ -299,7 +299,7 @@ def dispense_words(regimen: Dispensable, profile: Profile) -> str:
 
 
 def regimen_words(regimen: Dispensable, profile: Profile) -> str:
-    """The regimen by labelled amounts: '360 mg extended capsules (phenytoin sodium) once daily'."""
+    """The regimen by labelled amounts: '360 mg extended capsules once daily'."""
     named = []
     for dose in regimen.doses:
         amounts: dict[str, float] = {}
