@@ -393,8 +393,7 @@ def _value(given: Any, kind: str, profile: Profile) -> Any:
         typed = units.read(text, kind, "Value", molar_mass_g_per_mol=profile.molar_mass_g_per_mol, zero_allowed=True)
     except CaseError:
         return given
-    equivalents = " PE" in typed.label
-    return mark, equivalents, float(f"{typed.value:.9g}")
+    return mark, float(f"{typed.value:.9g}")
 
 
 def _hour(text: str) -> float:

@@ -11,8 +11,12 @@ from typing import Any
 
 import jsonschema
 import pytest
+from hypothesis import given as sampled
+from hypothesis import settings
+from hypothesis import strategies as st
 
-from pkcalc.case import check_case, dump_case_file, read_case_text
+from pkcalc.case import check_case, dump_case_file, parse_case_text, read_case_text
+from pkcalc.consult import run_consult
 from pkcalc.drugs.profile import load_profile
 from pkcalc.errors import CaseError
 from pkcalc.fhir import Imported, from_bundle, load_bundle
@@ -255,6 +259,12 @@ def test_codes_from_memory_and_circulating_wrong_ones_are_not_accepted(code: str
     assert len(found.file.levels) == 1
 
 
+def test_a_code_counts_in_its_own_system_only() -> None:
+    local = {"coding": [{"system": "urn:local", "code": "3968-5"}]}
+    found = of(given(), {**level(), "code": local})
+    assert found.file.levels == ()
+
+
 def test_two_patients_are_refused() -> None:
     with pytest.raises(CaseError) as refusal:
         read("two_patients")
@@ -285,6 +295,61 @@ def test_one_patient_by_full_address_and_by_id() -> None:
     found = from_bundle(json.dumps({"resourceType": "Bundle", "entry": entries}), drug="phenytoin", products=FORMS)
     assert found.ready
     assert found.file.patient.age == "45 years"  # the birthday comes a day after the latest time
+
+
+def test_a_bundle_becomes_a_consult_once_a_person_has_added_the_weight() -> None:
+    data = json.loads(dump_case_file(read("month").file))
+    data["patient"]["weight"] = "60 kg"
+    data["now"] = "2026-11-30 22:00+01:00"
+    consult = run_consult(read_case_text(json.dumps(data)))
+    assert not consult.stopped
+    assert consult.chosen is not None
+    assert consult.record is not None
+    assert len(consult.record.doses) == 29
+
+
+def _places(data: Any, path: tuple[Any, ...] = ()) -> list[tuple[Any, ...]]:
+    inside = data.items() if isinstance(data, dict) else enumerate(data) if isinstance(data, list) else ()
+    return [path, *(p for k, v in inside for p in _places(v, (*path, k)))]
+
+
+WORN = [bundle(name) for name in ("infusions", "orders")]
+PLACES = [[p for p in _places(b) if p] for b in WORN]
+JUNK = st.one_of(
+    st.none(),
+    st.booleans(),
+    st.integers(),
+    st.floats(),
+    st.text(max_size=30),
+    st.sampled_from(["", "mg", "{PE}", "2026-02-30T10:00:00Z", "2026-11-01T10:00:00+14:00", "<", "Patient/p2", "#m1"]),
+    st.lists(st.text(max_size=5), max_size=3),
+    st.dictionaries(st.sampled_from(["value", "code", "text", "start", "coding"]), st.text(max_size=5), max_size=3),
+)
+
+
+@settings(max_examples=400)
+@sampled(which=st.integers(0, 1), data=st.data())
+def test_any_damage_ends_in_a_case_file_with_its_list_or_in_words(which: int, data: st.DataObject) -> None:
+    worn = copy.deepcopy(WORN[which])
+    for _ in range(data.draw(st.integers(1, 3))):
+        here: Any = worn
+        path = data.draw(st.sampled_from(PLACES[which]))
+        try:
+            for step in path[:-1]:
+                here = here[step]
+            here[path[-1]] = data.draw(JUNK)
+        except (KeyError, IndexError, TypeError):
+            continue
+    try:
+        found = from_bundle(json.dumps(worn), drug="phenytoin", products=FORMS)
+    except CaseError:
+        return
+    assert parse_case_text(dump_case_file(found.file)) == found.file
+    assert {x.entry for x in found.lines if x.entry} == set(range(1, len(worn["entry"]) + 1))
+    if found.ready:
+        check_case(found.file)
+    for word in ("None", "nan", "Decimal", "Error("):
+        assert word not in found.report()
 
 
 # levels --------------------------------------------------------------------------------------------------
