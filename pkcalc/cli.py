@@ -13,9 +13,11 @@ from pkcalc import __version__
 
 if TYPE_CHECKING:
     from pkcalc.case import Case
+    from pkcalc.consult import Consult
     from pkcalc.errors import CannotEstimate, CaseError, DrugFileError
 
 FORMATS = ("text", "json")
+NOTE_FORMATS = (*FORMATS, "html", "pdf")
 
 
 def main() -> None:
@@ -123,16 +125,18 @@ def cli() -> None:
 
 def _write(case: Case, output_format: str, out: Path | None, site: Path | None) -> None:
     from pkcalc.consult import run_consult
-    from pkcalc.note.data import dumps, note_data
-    from pkcalc.note.document import compose
-    from pkcalc.note.text import render
 
+    if output_format == "pdf" and out is None:
+        raise click.UsageError("A PDF is written to a file: add --out FILE")
     consult = run_consult(case, site)
-    text = dumps(note_data(consult)) if output_format == "json" else render(compose(consult))
+    note = _printed(consult, output_format)
     if out is None:
-        click.echo(text, nl=False)
+        click.echo(note, nl=False)
     else:
-        out.write_text(text, encoding="utf-8")
+        if isinstance(note, bytes):
+            out.write_bytes(note)
+        else:
+            out.write_text(note, encoding="utf-8")
         click.echo(f"Written: {out}", err=True)
     if consult.stopped:
         if output_format != "json" or out is not None:
@@ -140,8 +144,30 @@ def _write(case: Case, output_format: str, out: Path | None, site: Path | None) 
         sys.exit(1)
 
 
+def _printed(consult: Consult, output_format: str) -> str | bytes:
+    if output_format == "json":
+        from pkcalc.note.data import dumps, note_data
+
+        return dumps(note_data(consult))
+    if output_format == "html":
+        from pkcalc.note.html import render_html
+
+        return render_html(consult)
+    if output_format == "pdf":
+        from pkcalc.note.pdf import render_pdf
+
+        return render_pdf(consult)
+    from pkcalc.note.document import compose
+    from pkcalc.note.text import render
+
+    return render(compose(consult))
+
+
 _format = click.option(
     "--format", "output_format", type=click.Choice(FORMATS), default="text", show_default=True
+)
+_note_format = click.option(
+    "--format", "output_format", type=click.Choice(NOTE_FORMATS), default="text", show_default=True
 )
 _out = click.option("--out", type=click.Path(path_type=Path, dir_okay=False), help="Write to this file.")
 _site = click.option(
@@ -153,7 +179,7 @@ _site = click.option(
 
 @cli.command()
 @click.argument("case_file", metavar="CASE", type=click.Path(path_type=Path, exists=True, dir_okay=False))
-@_format
+@_note_format
 @_out
 @_site
 def note(case_file: Path, output_format: str, out: Path | None, site: Path | None) -> None:
@@ -299,7 +325,7 @@ def _amount_of_rate(text: str, where: str, problems: list[Any]) -> str:
 
 @cli.command()
 @click.argument("name", required=False)
-@_format
+@_note_format
 @_out
 def demo(name: str | None, output_format: str, out: Path | None) -> None:
     """List the demonstration cases, or write the note of one."""
@@ -464,4 +490,28 @@ def compare(first: Path, second: Path, output_format: str, out: Path | None, sit
         out.write_text(text, encoding="utf-8")
         click.echo(f"Written: {out}", err=True)
     if not found.equal:
+        sys.exit(1)
+
+
+@cli.command()
+@click.option("--format", "output_format", type=click.Choice(FORMATS), default="text", show_default=True)
+@click.option(
+    "--save", type=click.Path(path_type=Path, dir_okay=False), help="Write the record as PDF to this file."
+)
+def selfcheck(output_format: str, save: Path | None) -> None:
+    """Re-run the published examples on this machine and print the table, for local acceptance.
+
+    Exit status 0 where every row agrees, 1 on any miss.
+    """
+    from pkcalc.acceptance import accept, record_data, record_pdf, record_text
+
+    record = accept()
+    if output_format == "json":
+        _print_json(record_data(record))
+    else:
+        click.echo(record_text(record), nl=False)
+    if save is not None:
+        save.write_bytes(record_pdf(record))
+        click.echo(f"Written: {save}", err=True)
+    if not record.all_agree:
         sys.exit(1)

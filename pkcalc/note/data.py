@@ -79,9 +79,7 @@ def estimate_data(estimate: Estimate) -> dict[str, Any]:
         "rejected_share": number(estimate.rejected),
         "trusted": estimate.trusted,
         "distrust": estimate.distrust,
-        "diagnostics": {
-            k: v for k, v in estimate.diagnostics.items() if isinstance(v, (int, float, str, list))
-        },
+        "diagnostics": {k: v for k, v in estimate.diagnostics.items() if isinstance(v, (int, float, str, list))},
     }
 
 
@@ -109,9 +107,11 @@ def note_data(consult: Consult) -> dict[str, Any]:
                 "as_typed": o.level.typed.text,
                 "kind": o.level.kind,
                 "reported_mg_per_L": number(o.level.reported_mg_per_L),
-                "normal_binding_mg_per_L": number(o.working_mg_per_L) if o.usable else None,
+                "normal_binding_mg_per_L": number(o.working_mg_per_L) if o.readable else None,
                 "normal_binding_low_mg_per_L": number(o.low_mg_per_L),
                 "normal_binding_high_mg_per_L": number(o.high_mg_per_L),
+                "censored": o.censored,
+                "set_aside": o.set_aside,
                 "steps": list(o.steps),
             }
             for o in consult.observations

@@ -5,7 +5,7 @@ from __future__ import annotations
 import textwrap
 
 from pkcalc.errors import Caution
-from pkcalc.note.document import Document, Table
+from pkcalc.note.document import Document, Section, Table
 
 WIDTH = 100
 _NAMES = {"stop": "STOP", "warn": "WARNING", "note": "NOTE"}
@@ -17,23 +17,38 @@ def render(document: Document) -> str:
     if document.demonstration:
         out += ["*" * WIDTH, document.demonstration.center(WIDTH).rstrip(), "*" * WIDTH, ""]
     out += [document.title, "=" * len(document.title), ""]
+    out += [*textwrap.wrap(document.urgent, WIDTH), ""]
     for caution in document.cautions:
         out += caution_lines(caution)
     if document.cautions:
         out.append("")
+    for section in document.front:
+        out += _section(section)
+    out += ["Annex", "=====", ""]
     for section in document.sections:
-        out += [section.title, "-" * len(section.title)]
-        for line in section.lines:
-            indent = "      " if line.startswith("   ") else "   "
-            out += textwrap.wrap(line, WIDTH, subsequent_indent=indent, drop_whitespace=True) or [""]
-        if section.table is not None:
-            out += table_lines(section.table)
-        out.append("")
+        out += _section(section)
+    out += ["To paste into a record", "----------------------", *document.paste, ""]
     for line in document.footer:
         out += textwrap.wrap(line, WIDTH)
     if document.demonstration:
         out += ["", "*" * WIDTH, document.demonstration.center(WIDTH).rstrip(), "*" * WIDTH]
     return "\n".join(out) + "\n"
+
+
+def _section(section: Section) -> list[str]:
+    out = [section.title, "-" * len(section.title)]
+    for line in section.lines:
+        inside = line.startswith("   ")
+        out += textwrap.wrap(
+            line.strip(),
+            WIDTH,
+            initial_indent="   " if inside else "",
+            subsequent_indent="      " if inside else "   ",
+        )
+    if section.table is not None:
+        out += table_lines(section.table)
+    out.append("")
+    return out
 
 
 def caution_lines(caution: Caution) -> list[str]:

@@ -1,0 +1,682 @@
+"""The annex of the note: everything behind page one, part by part."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+
+import numpy as np
+
+from pkcalc import formulas
+from pkcalc.case import QUESTIONS
+from pkcalc.cautions import State, percent
+from pkcalc.clock import show_time
+from pkcalc.consult import Consult, Shown, level_data, record_spread
+from pkcalc.dosing import active_mg
+from pkcalc.drugs.profile import Prior
+from pkcalc.errors import CannotEstimate, CaseError
+from pkcalc.estimate import posterior
+from pkcalc.estimate.lines import LineFailure
+from pkcalc.estimate.result import Band, Estimate
+from pkcalc.forecast import bands
+from pkcalc.note.front import chosen_candidate, forecast_lines, spoken_for
+from pkcalc.note.words import (
+    FORECAST_HEADS,
+    Section,
+    Table,
+    chances_words,
+    days_words,
+    edge,
+    forecast_row,
+    level_words,
+    mark_of,
+    regimen_words,
+    sentence,
+    short_band,
+    signed_percent,
+)
+from pkcalc.note.workings import machine_only, workings
+from pkcalc.plan.loading import Load
+from pkcalc.sources import source
+from pkcalc.units import show, show_number
+
+
+def annex(consult: Consult) -> tuple[Section, ...]:
+    """Every part of the annex that has something to say."""
+    parts = [
+        _patient(consult),
+        _doses(consult),
+        _levels(consult),
+        *_then_and_now(consult),
+        *_estimate(consult),
+        *_regimens(consult),
+        *_acute(consult),
+        *_next(consult),
+        *_populations(consult),
+        *_workings(consult),
+        *_second_way(consult),
+        _settings(consult),
+        _checked(consult),
+        _sources(consult),
+    ]
+    return tuple(p for p in parts if p.lines or p.table)
+
+
+def _patient(consult: Consult) -> Section:
+    case, patient = consult.case, consult.case.patient
+    albumin = case.albumin
+    parts = [f"height {patient.typed.get('height', 'not stated')}"]
+    if albumin is not None:
+        parts.append(
+            f"albumin {albumin.typed.text}"
+            + (f" taken {show_time(albumin.taken)}" if albumin.taken else ", time not stated")
+            + (f" (method {albumin.method})" if albumin.method not in ("unknown", "other") else "")
+        )
+    lines = [sentence("; ".join(parts))]
+    for key, words in QUESTIONS.items():
+        answer = case.context.get(key)
+        if answer is None or answer.answer == "unknown":
+            continue
+        more = [answer.detail] if answer.detail else []
+        if answer.since is not None:
+            more.append(f"since {show_time(answer.since)}")
+        lines.append(f"{words} {answer.answer}" + (f" ({'; '.join(more)})" if more else ""))
+    unknown = [w for k, w in QUESTIONS.items() if case.answer(k) in ("unknown", "not stated")]
+    if unknown:
+        lines.append("Not stated or unknown: " + " ".join(unknown))
+    if consult.prior is not None:
+        lines.append(f"Population used: {consult.prior.words}.")
+        lines += [sentence(u) for u in consult.prior.used]
+    return Section("Patient", tuple(lines))
+
+
+def _doses(consult: Consult) -> Section:
+    case, profile = consult.case, consult.profile
+    lines = []
+    for course in case.courses:
+        head = f"Dose line {course.index + 1}: "
+        if course.regimen is not None:
+            rate = course.regimen.active_mg_per_day(profile)
+            when = (
+                f"for about {course.typed.for_about}"
+                if course.for_about_days is not None
+                else f"since {show_time(course.start)}"
+                if course.start
+                else "start not stated"
+            )
+            if course.end is not None:
+                when += f" until {show_time(course.end)}"
+            text = f"{course.regimen.words(profile)}, {when} = {show(rate, 'mg/day', 4)} as active drug"
+            if course.missed:
+                text += "; missed " + ", ".join(show_time(m) for m in course.missed)
+        elif course.single is not None and course.start is not None:
+            form = profile.forms[course.single.form]
+            over = f" over {show(course.single.over_h, 'h')}" if course.single.over_h else ""
+            text = (
+                f"{show_number(course.single.labelled_mg, 6)} {form.amount_unit} {form.words} once at "
+                f"{show_time(course.start)}{over} = {show(active_mg(course.single, profile), 'mg', 4)} as active drug"
+            )
+        else:
+            text = f"infusion {course.typed.rate} {profile.forms[course.rate_form].words}"
+            if course.start is not None and course.end is not None:
+                text += f" from {show_time(course.start)} to {show_time(course.end)}"
+        given = f"; given by {course.given_by}" if course.given_by != "unknown" else ""
+        lines.append(
+            head + text + given + ("" if course.counts_as_given else " (not confirmed as given; left out)") + "."
+        )
+    return Section("What was given", tuple(lines))
+
+
+def _levels(consult: Consult) -> Section:
+    lines = []
+    settling = {s.level: s for s in consult.settling}
+    for o in consult.observations:
+        level = o.level
+        when = f"drawn {show_time(level.drawn)}" if level.drawn else "draw time not stated"
+        text = f"{o.name}: {level.typed.text} {level.kind}, {when}"
+        if o.censored:
+            text += f"; {o.censored} the limit {show(level.reported_mg_per_L, 'mg/L')}"
+        if not o.readable:
+            text += f"; no single reading: {show_number(o.low_mg_per_L)} to {show(o.high_mg_per_L, 'mg/L')} possible"
+        elif o.working_mg_per_L != level.reported_mg_per_L:
+            text += f"; at normal binding {show(o.working_mg_per_L, 'mg/L')}"
+        lines.append(text + ".")
+        lines += [f"   {step}" for step in o.steps]
+        lines += [f"   {caveat}" for caveat in o.caveats]
+        if o.set_aside:
+            lines.append(f"   Not used for the estimate: {o.set_aside}.")
+        if level.index in settling:
+            lines.append(f"   {settling[level.index].sentence}")
+    if consult.observations:
+        spread = consult.observations[0].spread
+        lines.append(
+            f"Spread of a level taken as {show_number(100 * spread.total_cv)} % in all ({spread.basis}), of which the "
+            f"assay is {show_number(100 * spread.assay_cv)} %."
+        )
+    return Section("What was measured", tuple(lines))
+
+
+def _then_and_now(consult: Consult) -> list[Section]:
+    """What an earlier note forecast, beside what came."""
+    rows = []
+    for then in consult.case.earlier:
+        came = next(
+            (
+                o
+                for o in consult.observations
+                if o.level.drawn == then.drawn and (then.kind == o.level.kind or then.kind == "normalised")
+            ),
+            None,
+        )
+        if came is None:
+            rows.append((show_time(then.drawn), then.kind, _then(then), "no such level in this case", ""))
+            continue
+        value = came.working_mg_per_L if then.kind == "normalised" else came.level.reported_mg_per_L
+        inside = then.low_mg_per_L <= value <= then.high_mg_per_L
+        verdict = "inside" if inside else "above" if value > then.high_mg_per_L else "below"
+        rows.append((show_time(then.drawn), then.kind, _then(then), show_number(value), verdict))
+    if not rows:
+        return []
+    heads = ("Drawn", "Kind", "Forecast then (mg/L)", "Came (mg/L)", "Inside its 90 % interval")
+    return [Section("What was forecast then, and what came", (), Table(heads, tuple(rows)))]
+
+
+def _then(then: object) -> str:
+    band = Band(
+        getattr(then, "median_mg_per_L"),
+        getattr(then, "low_mg_per_L"),
+        getattr(then, "high_mg_per_L"),  # noqa: B009
+    )
+    return short_band(band)
+
+
+def estimate_lines(estimate: Estimate) -> list[str]:
+    """Vmax and Km with their intervals, in words."""
+    vmax, km = estimate.summary["vmax_mg_per_day"], estimate.summary["km_mg_per_L"]
+    point = estimate.point
+    lines = [
+        f"Method: {estimate.method}.",
+        f"Vmax {show(point.vmax_mg_per_day, 'mg/day', 4)} of active drug, Km {show(point.km_mg_per_L, 'mg/L')} "
+        f"({point.kind}).",
+        f"Vmax median {show(vmax.median, 'mg/day')}, 90 % interval {show_number(vmax.low)} to {show_number(vmax.high)}; "
+        f"Km median {show(km.median, 'mg/L')}, 90 % interval {show_number(km.low)} to {show_number(km.high)}; "
+        f"correlation {_signed(estimate.correlation)}.",
+    ]
+    if estimate.volume_L is not None:
+        volume = estimate.summary["volume_L"]
+        lines.append(
+            f"Volume {show(volume.median, 'L')} (90 % interval {show_number(volume.low)} to {show_number(volume.high)}), "
+            f"from the {estimate.volume_from}."
+        )
+    if "assumes" in estimate.diagnostics:
+        lines.append(f"This estimate {estimate.diagnostics['assumes']}.")
+    if "certificate" in estimate.diagnostics:
+        difference = float(str(estimate.diagnostics["certificate"]))
+        if np.isfinite(difference):
+            lines.append(
+                f"Certificate: a second, shifted grid gives the same quantiles within {show_number(100 * difference, 2)} %."
+            )
+    if "chance of negative Km" in estimate.diagnostics:
+        chance = float(str(estimate.diagnostics["chance of negative Km"]))
+        lines.append(
+            f"Chance that the spread of these levels alone makes the pair impossible: {percent(chance)}; "
+            f"{percent(estimate.rejected)} of the draws were left out for that reason, and the intervals are "
+            "conditional on the rest."
+        )
+    return lines
+
+
+def _signed(value: float) -> str:
+    return ("minus " if value < 0 else "") + show_number(abs(value), 2)
+
+
+def _estimate(consult: Consult) -> list[Section]:
+    lines: list[str] = []
+    if consult.chosen is not None:
+        lines += estimate_lines(consult.chosen)
+        lines.append(f"Chosen: {consult.chosen_why}.")
+        for other in consult.estimates.values():
+            if other is not consult.chosen:
+                p = other.point
+                lines.append(
+                    f"Beside it, {other.method}: Vmax {show(p.vmax_mg_per_day, 'mg/day', 4)}, Km "
+                    f"{show(p.km_mg_per_L, 'mg/L')} ({p.kind})."
+                )
+        if consult.difference:
+            lines.append(consult.difference)
+    for method, why in consult.refusals.items():
+        lines.append(f"{method[0].upper()}{method[1:]}: no estimate. {why}")
+    if consult.verdict is not None:
+        lines.append(consult.verdict.text)
+    if consult.stopped and not lines:
+        lines.append("No estimate is given because of the stops above.")
+    sections = [Section("What it says about this patient", tuple(lines))]
+    if consult.chosen is not None and consult.chosen.fit:
+        names = {o.level.index: o.name for o in consult.observations}
+        rows = tuple(
+            (
+                names.get(f.level, f"Level {f.level + 1}"),
+                show_number(f.observed_mg_per_L),
+                short_band(f.predicted),
+                _signed(f.standardised_residual),
+            )
+            for f in consult.chosen.fit
+        )
+        heads = ("Level", "Measured, normal binding (mg/L)", "By the estimate (mg/L)", "Off in spreads")
+        sections.append(Section("How the levels fit", (), Table(heads, rows)))
+    if consult.line_results:
+        rows_ = []
+        said = []
+        for r in consult.line_results:
+            if isinstance(r, LineFailure):
+                said.append(r.text)
+            else:
+                p = r.point
+                rows_.append((r.method, show_number(p.vmax_mg_per_day, 4), show_number(p.km_mg_per_L)))
+        table = Table(("Method", "Vmax (mg/day)", "Km (mg/L)"), tuple(rows_)) if rows_ else None
+        sections.append(Section("The steady levels by several methods", tuple(said), table))
+    return sections
+
+
+DANGER_HEADS = (
+    "Regimen",
+    "Every dose taken: steady level (mg/L)",
+    "Above critical or no steady state",
+    "No steady state",
+    "Trough to peak (mg/L)",
+    "Level on named days, central (mg/L)",
+    "Change of dose",
+)
+
+
+def danger_row(shown: Shown) -> tuple[str, ...]:
+    swing = (
+        f"{edge(shown.trough.median)} to {edge(shown.peak.median)}"
+        if shown.trough is not None and shown.peak is not None
+        else "not worked out"
+    )
+    days = (
+        "; ".join(f"day {show_number(d)}: {edge(b.median)}" for d, b in shown.on_days)
+        if shown.on_days
+        else "not worked out"
+    )
+    return (
+        shown.words,
+        short_band(shown.taken.steady),
+        percent(shown.danger),
+        percent(shown.taken.no_steady_state),
+        swing,
+        days,
+        signed_percent(shown.change_percent),
+    )
+
+
+def _regimens(consult: Consult) -> list[Section]:
+    sections: list[Section] = []
+    plan = consult.plan
+    chosen = chosen_candidate(consult)
+    for shown in consult.proposed:
+        if chosen is not None and shown.regimen == chosen.regimen:
+            continue
+        f = shown.forecast
+        lines = [
+            f"{regimen_words(shown)} = {show(f.rate_mg_per_day, 'mg/day', 4)} as active drug.",
+            *forecast_lines(shown, consult),
+            f"Central chances: {chances_words(f)}.",
+        ]
+        if np.isfinite(f.percent_per_percent):
+            lines.append(f"At this point 1 % more dose is {show_number(f.percent_per_percent, 2)} % more level.")
+        if not shown.offered:
+            lines.append("NOT OFFERED.")
+            lines += [sentence(w) for w in shown.why_not]
+        sections.append(Section("Proposed regimen", tuple(lines)))
+    if consult.table:
+        both = (*consult.table, *(s for s in consult.proposed if s not in consult.table))
+        ordered = sorted(both, key=lambda s: s.forecast.rate_mg_per_day)
+        sections.append(
+            Section(
+                "Doses around the present one",
+                (
+                    "By daily dose; the order is no advice. Steady level: median (90 % interval), past intake carried on. "
+                    "Chances hold against the target range. No change in other drugs, feeds or albumin.",
+                ),
+                Table(FORECAST_HEADS, tuple(forecast_row(s) for s in ordered)),
+            )
+        )
+        sections.append(
+            Section(
+                "Danger of each, every dose taken",
+                ("The chance of too high and every stop are computed for the regimen fully taken.",),
+                Table(DANGER_HEADS, tuple(danger_row(s) for s in ordered)),
+            )
+        )
+    if plan is not None:
+        notes = list(plan.lines)
+        notes += [
+            f"{s.words}: {mark_of(s)}. {' '.join(sentence(w) for w in s.why_not)}" for s in consult.table if s.why_not
+        ]
+        counted, on_paper = len(plan.every), len(plan.table) + len(plan.own)
+        offered = sum(c.offered for c in plan.every)
+        if counted > on_paper:
+            notes.append(
+                f"{counted} regimens were worked out, {offered} of them may be offered; {on_paper} are printed here and "
+                "the JSON form of this note holds all."
+            )
+        if plan.ranked:
+            notes.append(
+                "By expected loss, as asked for (too high weighs "
+                f"{show_number(consult.site.loss_too_high)}, too low {show_number(consult.site.loss_too_low)}): "
+                + "; ".join(c.words for c in plan.ranked[:5])
+                + "."
+            )
+        sections.append(Section("About the regimens", tuple(notes)))
+        if plan.overlay is not None and len(plan.overlay.courses) > 1:
+            heads = ("Day", *(f"{words} (mg/L)" for words, _ in plan.overlay.courses))
+            rows = tuple(
+                (show_number(d), *(short_band(course[i]) for _, course in plan.overlay.courses))
+                for i, d in enumerate(plan.overlay.days)
+            )
+            sections.append(
+                Section(
+                    "Level day by day, average over the day", ("Central line, at normal binding.",), Table(heads, rows)
+                )
+            )
+        for switch in plan.switches:
+            sections.append(
+                Section(
+                    f"Another form: {switch.words}",
+                    (
+                        f"Equal would be {show(switch.exact_labelled_mg, 'mg/day')} as labelled; as dispensed "
+                        f"{show(switch.active_mg_per_day, 'mg/day', 4)} of active drug "
+                        f"({signed_percent(switch.change_percent)} of the present).",
+                        f"Steady level {level_words(switch.steady)}; at the two ends of how much reaches the body "
+                        f"{edge(switch.steady_low_mg_per_L)} to {edge(switch.steady_high_mg_per_L)} mg/L.",
+                        *switch.lines,
+                    ),
+                )
+            )
+    if consult.aim_rate is not None:
+        rate = consult.aim_rate
+        lines = [
+            f"To hold {show(consult.goal.aim_mg_per_L, 'mg/L')} (normal binding) with every dose taken: {show(rate.median, 'mg/day')} of "
+            f"active drug (90 % interval {show_number(rate.low)} to {show_number(rate.high)})."
+        ]
+        for form_id in dict.fromkeys(f for c in consult.case.courses for f in c.forms):
+            form = consult.profile.forms[form_id]
+            factor = form.salt_factor * form.bioavailability
+            lines.append(
+                f"As {form.words}: {show(rate.median / factor, form.amount_unit + '/day')} "
+                f"(salt factor {show_number(form.salt_factor)})."
+            )
+        sections.append(Section("Dose rate for the aim", tuple(lines)))
+    return sections
+
+
+def _acute(consult: Consult) -> list[Section]:
+    plan = consult.plan
+    if plan is None:
+        return []
+    sections = [_load(load, consult) for load in plan.loads]
+    if plan.no_load:
+        sections.append(Section("Load or top-up", tuple(plan.no_load)))
+    if plan.pause is not None:
+        p = plan.pause
+        lines = [
+            p.seizure_risk,
+            f"Level today {level_words(p.now)}; give again at {show(p.to_mg_per_L, 'mg/L')}.",
+            f"Without any dose that takes {days_words(p.days)}"
+            + (
+                f"; with what is still being absorbed {days_words(p.with_absorption)}."
+                if p.with_absorption is not None
+                else "."
+            ),
+            *p.lines,
+        ]
+        for r in p.reductions:
+            lines.append(
+                f"Partial reduction to {r.words} ({show_number(r.percent, 2)} % of the present dose): down to "
+                f"{show(p.to_mg_per_L, 'mg/L')} in {days_words(r.days)}; steady level {level_words(r.steady)}."
+            )
+        table = None
+        if p.restarts:
+            heads = (
+                "Restart with",
+                "Steady level (mg/L)",
+                "On day",
+                "Restarted early (mg/L)",
+                "On time (mg/L)",
+                "Late (mg/L)",
+                "Lowest if late (mg/L)",
+            )
+            table = Table(
+                heads,
+                tuple(
+                    (
+                        r.words,
+                        short_band(r.steady),
+                        show_number(r.day, 2),
+                        short_band(r.early),
+                        short_band(r.on_time),
+                        short_band(r.late),
+                        short_band(r.lowest_late),
+                    )
+                    for r in p.restarts
+                ),
+            )
+        sections.append(Section("The level is too high: reduce or pause", tuple(lines), table))
+    return sections
+
+
+def _load(load: Load, consult: Consult) -> Section:
+    form = consult.profile.forms[load.form]
+    parts = "; ".join(
+        f"{show(mg, form.amount_unit, 6)} after {show_number(h)} h" if h else f"{show(mg, form.amount_unit, 6)} at once"
+        for h, mg in load.parts
+    )
+    lines = [
+        *load.order,
+        f"By the formula {show(load.wanted_mg, form.amount_unit)}; as ordered {show(load.amount_mg, form.amount_unit, 6)} "
+        f"({show(load.active_mg, 'mg', 4)} of active drug): {parts}.",
+        f"It adds {level_words(load.rise)}; level after it {level_words(load.after)}; when drawn "
+        f"{show(load.draw_after_h, 'h')} later {level_words(load.at_draw)}.",
+        f"Chance of a level above the range {percent(load.above_high)}, above the critical level "
+        f"{percent(load.above_critical)}.",
+    ]
+    if load.minutes is not None:
+        lines.append(f"Give over at least {show(load.minutes, 'min')}.")
+    if load.followed:
+        lines.append(
+            f"With {load.maintenance} after it: "
+            + "; ".join(f"day {show_number(d)} {level_words(b)}" for d, b in load.followed)
+            + "."
+        )
+    lines += list(load.notes)
+    if not load.offered:
+        lines += ["NOT OFFERED.", *(sentence(w) for w in load.why_not)]
+    return Section(f"Load or top-up: {form.words}", tuple(sentence(x) for x in lines))
+
+
+def _next(consult: Consult) -> list[Section]:
+    found = consult.plan.next_level if consult.plan is not None else None
+    if found is None:
+        return []
+    rows = tuple(
+        (
+            show_number(d.day, 3),
+            show_time(d.moment) if d.moment is not None else "",
+            f"{show_number(100 * d.spread, 2)} %",
+            short_band(d.expected),
+            short_band(d.reported),
+            "proposed" if d is found.chosen else "early safety level" if d is found.safety else "",
+        )
+        for d in found.draws
+    )
+    heads = (
+        "Day",
+        "Drawn",
+        "Spread left",
+        "Expected, normal binding (mg/L)",
+        "As reported (mg/L)",
+        "",
+    )
+    lines = [
+        f"For {found.regimen_words}. Spread of the forecast now (standard deviation of the log steady level) "
+        f"{show_number(100 * found.before, 2)} %; what each draw would leave of it:",
+        *found.why,
+        f"90 % of the way to the steady level takes {days_words(found.settled_days)}.",
+    ]
+    return [Section("When to look again", tuple(lines), Table(heads, rows))]
+
+
+def populations_compared(consult: Consult) -> tuple[tuple[str, str, Estimate], ...]:
+    """The estimate under every population of the drug file that describes this patient: (id, words, estimate)."""
+    case, profile, prior = consult.case, consult.profile, consult.prior
+    weight, age = case.patient.weight_kg, case.patient.age_years
+    if consult.record is None or prior is None or weight is None or consult.chosen is None:
+        return ()
+    if consult.chosen.method != posterior.WHOLE_RECORD:
+        return ()
+    state = State(case=case, profile=profile, site=consult.site, observations=consult.observations)
+    data, spread = level_data(state), record_spread(case, profile)
+    found = []
+    for population in profile.populations.values():
+        low, high = population.ages_years
+        if age is not None and not low <= age < high:
+            continue
+        if population.id == prior.population:
+            found.append((population.id, population.words, consult.chosen))
+            continue
+        try:
+            other: Prior = population.at(
+                weight,
+                age,
+                height_cm=case.patient.height_cm,
+                sex=case.patient.sex,  # type: ignore[arg-type]
+            )
+            found.append(
+                (population.id, population.words, posterior.from_record(consult.record, data, other, spread, n=512))
+            )
+        except (CannotEstimate, CaseError):
+            continue
+    return tuple(found)
+
+
+def _populations(consult: Consult) -> list[Section]:
+    shown = spoken_for(consult)
+    if consult.stopped or shown is None:
+        return []
+    rows = []
+    plan = consult.plan
+    # both lines are set off from the estimate by the share of doses missed, whatever the population
+    central = taken = 1.0
+    if plan is not None and consult.chosen is not None:
+        own = consult.chosen.point.vmax_mg_per_day
+        central = plan.setting.central.point.vmax_mg_per_day / own
+        taken = plan.setting.taken.point.vmax_mg_per_day / own
+    for name, words, estimate in populations_compared(consult):
+        vmax, km = estimate.summary["vmax_mg_per_day"], estimate.summary["km_mg_per_L"]
+        steady, full = (
+            np.asarray(
+                formulas.steady_state_level(
+                    dose_rate_mg_per_day=shown.rate_mg_per_day,
+                    vmax_mg_per_day=estimate.vmax_mg_per_day * share,
+                    km_mg_per_L=estimate.km_mg_per_L,
+                )
+            )
+            for share in (central, taken)
+        )
+        band = bands(steady[None, :], estimate.weights)[0]
+        none = float((full > consult.goal.critical_mg_per_L) @ estimate.weights)
+        used = " (used)" if consult.prior is not None and name == consult.prior.population else ""
+        rows.append((words + used, short_band(vmax), short_band(km), short_band(band), percent(none)))
+    if len(rows) < 2:
+        return []
+    heads = (
+        "Population",
+        "Vmax (mg/day)",
+        "Km (mg/L)",
+        "Steady level, central (mg/L)",
+        "Every dose taken: above critical or no steady state",
+    )
+    return [
+        Section(
+            "Populations compared",
+            (
+                f"What the same record and levels say under other published populations, for {shown.words}, "
+                "at normal binding. Where these rows differ much, the population matters more than the levels.",
+            ),
+            Table(heads, tuple(rows)),
+        )
+    ]
+
+
+def _workings(consult: Consult) -> list[Section]:
+    found = workings(consult)
+    sections = []
+    lines: list[str] = []
+    for name, steps in found.groups:
+        lines.append(f"{name}.")
+        if name == "With the representative pair":
+            lines += list(found.said)
+        lines += [f"   {s.line}" for s in steps]
+    if found.representative is None:
+        lines += list(found.said)
+    lines += machine_only(consult)
+    if lines:
+        sections.append(Section("Workings", tuple(lines)))
+    return sections
+
+
+def _second_way(consult: Consult) -> list[Section]:
+    rows = getattr(consult, "second_way", ())
+    if not rows:
+        return []
+    cells = tuple(
+        (r.quantity, r.first_text, r.second_text, r.tolerance_text, "agrees" if r.agrees else "DISAGREES") for r in rows
+    )
+    heads = ("Quantity", "First way", "Second way", "Tolerance", "")
+    return [
+        Section(
+            "The two-way check",
+            (
+                "Key numbers calculated a second, independent way (adaptive integration, explicit sums, re-reading of the "
+                "text as typed). It catches arithmetic, never transcription: for that the second pharmacist types the case "
+                "again from the chart.",
+            ),
+            Table(heads, cells),
+        )
+    ]
+
+
+def _settings(consult: Consult) -> Section:
+    site = consult.site
+    lines = [s.text for s in site.settings]
+    if not site.file:
+        lines.append("No site file: every limit, target and spread is the drug file's own.")
+    elif not lines:
+        lines.append(f"{site.file} changes no setting.")
+    if site.protocol:
+        lines.insert(0, f"Local protocol: {site.protocol}.")
+    return Section("Local settings used", tuple(sentence(x) for x in lines))
+
+
+def _checked(consult: Consult) -> Section:
+    del consult
+    return Section(
+        "Blind re-entry",
+        (
+            "Not recorded in this note. Weight, doses, levels and dates typed again from the chart by the second pharmacist: "
+            "[ ] done, no difference   [ ] done, differences mended   [ ] not done",
+        ),
+    )
+
+
+def _sources(consult: Consult) -> Section:
+    keys = ["michaelis1913", "ludden1977"]
+    if consult.prior is not None:
+        keys += consult.prior.sources
+    keys += [c.source for c in consult.cautions]
+    return Section("Sources used", tuple(citations(keys)))
+
+
+def citations(keys: Sequence[str]) -> list[str]:
+    return [source(key).citation for key in dict.fromkeys(keys)]

@@ -1,0 +1,62 @@
+"""The note as PDF: compiled in memory, fonts from the compiler itself, tagged for screen readers (PDF/UA-1)."""
+
+from __future__ import annotations
+
+import json
+from datetime import datetime, timezone
+from importlib import resources
+from typing import Any
+
+import typst
+
+from pkcalc.consult import RESULTS_DATE, Consult
+from pkcalc.errors import PkcalcError
+from pkcalc.note.charts import Chart, charts
+from pkcalc.note.document import compose
+from pkcalc.note.layout import document_data, section_data, with_first_cautions
+from pkcalc.note.lessons import lesson
+
+#: Sizes of page one tried in turn, so that it is one page (points).
+SIZES = ("10", "9.5", "9", "8.5", "8", "7.5", "7")
+FONT = "Libertinus Serif"
+
+
+def render_pdf(consult: Consult) -> bytes:
+    """Consult -> PDF with page one on one page and everything else behind it. The same consult gives the same bytes."""
+    document = compose(consult)
+    data: dict[str, Any] = with_first_cautions(document_data(document), document)
+    inputs: dict[str, str] = {}
+    data["charts"] = _charts(charts(consult), inputs, 92)
+    teaching = lesson(consult)
+    data["teaching"] = None
+    if teaching is not None:
+        data["teaching"] = {
+            "banner": teaching.banner,
+            "charts": _charts(teaching.charts, inputs, 72),
+            "events": [section_data(s) for s in teaching.events],
+        }
+    inputs["note"] = json.dumps(data, ensure_ascii=False)
+    return compile_pdf("note.typ", inputs, SIZES)
+
+
+def _charts(found: tuple[Chart, ...], inputs: dict[str, str], width: int) -> list[dict[str, Any]]:
+    rows = []
+    for chart in found:
+        key = f"chart{len(inputs)}"
+        inputs[key] = chart.svg(FONT)
+        rows.append({"key": key, "title": chart.title, "alt": chart.alt, "width": width})
+    return rows
+
+
+def compile_pdf(template: str, inputs: dict[str, str], sizes: tuple[str, ...]) -> bytes:
+    """Template and data -> PDF bytes, at the largest size at which page one is one page."""
+    source = resources.files("pkcalc.note.templates").joinpath(template).read_bytes()
+    fonts = typst.Fonts(include_system_fonts=False, include_embedded_fonts=True)
+    moment = datetime.fromisoformat(RESULTS_DATE).replace(tzinfo=timezone.utc)
+    for size in sizes:
+        compiler = typst.Compiler(source, font_paths=fonts, sys_inputs={**inputs, "size": size})
+        if json.loads(compiler.query("<annex-page>", field="value")) in ([2], []):
+            found = compiler.compile(source, format="pdf", pdf_standards=["ua-1"], timestamp=moment)
+            assert isinstance(found, bytes)
+            return found
+    raise PkcalcError("The first page of the note does not fit on one page; nothing was printed.")

@@ -1,0 +1,173 @@
+"""The parts a note is made of, and how results are said in words."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass
+
+import numpy as np
+
+from pkcalc.cautions import percent
+from pkcalc.consult import Consult, Shown
+from pkcalc.estimate.result import Band
+from pkcalc.forecast import Forecast
+from pkcalc.units import show, show_number
+
+URGENT = (
+    "Active status epilepticus is treated by the local protocol now and never waits for this note. An acute overdose "
+    "belongs to the poison centre."
+)
+DEFERS = (
+    "This note supports, and never replaces, the local protocol and the judgement of licensed pharmacists and "
+    "physicians. Every number must be checked before it is used."
+)
+DEMONSTRATION = "DEMONSTRATION - invented, not a patient, not for clinical use"
+NO_STEADY_STATE = "no steady state"
+VALID_UNTIL = (
+    "Valid until the next level, or until any change of dose, form, tube feed, other drug, albumin or kidney or liver "
+    "function, whichever comes first."
+)
+
+
+@dataclass(frozen=True)
+class Table:
+    """Column heads with their units, and rows of text."""
+
+    heads: tuple[str, ...]
+    rows: tuple[tuple[str, ...], ...]
+
+
+@dataclass(frozen=True)
+class Section:
+    """A titled part of the note."""
+
+    title: str
+    lines: tuple[str, ...] = ()
+    table: Table | None = None
+
+
+def level_words(band: Band, unit: str = "mg/L") -> str:
+    """'15 mg/L (90 % interval 11 to 24)'; a bound without a steady state is said in words."""
+    if not np.isfinite(band.median):
+        return NO_STEADY_STATE if not np.isfinite(band.low) else f"{NO_STEADY_STATE} (from {edge(band.low)} up)"
+    return f"{show(band.median, unit)} (90 % interval {edge(band.low)} to {edge(band.high)})"
+
+
+def edge(value: float) -> str:
+    return show_number(value) if np.isfinite(value) else NO_STEADY_STATE
+
+
+def short_band(band: Band) -> str:
+    """The same for a table cell whose head has the unit."""
+    if not np.isfinite(band.median):
+        return level_words(band)
+    return f"{show_number(band.median)} ({edge(band.low)} to {edge(band.high)})"
+
+
+def days_words(band: Band | None) -> str:
+    """Days with their interval, or why there are none."""
+    if band is None:
+        return "not known without a weight"
+    if not np.isfinite(band.median):
+        return "never settles"
+    high = show_number(band.high, 2) if np.isfinite(band.high) else "never"
+    return f"{show_number(band.median, 2)} days ({show_number(band.low, 2)} to {high})"
+
+
+def reports_free(consult: Consult) -> bool:
+    return any(o.level.kind == "free" for o in consult.observations)
+
+
+def as_reported(forecast: Forecast, consult: Consult) -> str:
+    """A forecast as the laboratory will report it: total, and free where free levels are used."""
+    text = f"total {level_words(forecast.total)}"
+    if reports_free(consult):
+        text += f"; free {level_words(forecast.free)}"
+    return text
+
+
+def same_lines(shown: Shown) -> bool:
+    """True where every dose counts as taken in both lines."""
+    return shown.taken is shown.forecast or shown.taken.steady == shown.forecast.steady
+
+
+def chances_words(f: Forecast) -> str:
+    return (
+        f"below the target {percent(f.below)}, within {percent(f.within)}, above {percent(f.above)} (of which no steady "
+        f"state {percent(f.no_steady_state)}); above the critical level {percent(f.above_critical)}"
+    )
+
+
+def signed_percent(value: float | None) -> str:
+    if value is None:
+        return ""
+    if abs(value) < 0.05:
+        return "0 %"
+    return f"{'+' if value > 0 else '-'}{show_number(abs(value), 2)} %"
+
+
+def regimen_words(shown: Shown) -> str:
+    """By labelled amounts, with what is dispensed where the shelf can make it."""
+    return shown.words + (f" (dispense {shown.dispense})" if shown.dispense else "")
+
+
+def short_words(words: str) -> str:
+    """Regimen words without what stands in brackets (the salt), which the note states beside."""
+    while " (" in words and ")" in words[words.index(" (") :]:
+        start = words.index(" (")
+        words = words[:start] + words[words.index(")", start) + 1 :]
+    return words
+
+
+def mark_of(shown: Shown) -> str:
+    marks = [m for m, yes in (("present", shown.present), ("proposed", shown.proposed)) if yes]
+    if not shown.offered:
+        marks.append("not offered")
+    return ", ".join(marks)
+
+
+FORECAST_HEADS = (
+    "Regimen",
+    "Active drug (mg/day)",
+    "Steady level, normal binding (mg/L)",
+    "As the laboratory reports total (mg/L)",
+    "Below",
+    "Within",
+    "Above",
+    "Above critical",
+    "No steady state",
+    "90 % of the way",
+    "",
+)
+
+
+def forecast_row(shown: Shown) -> tuple[str, ...]:
+    f = shown.forecast
+    return (
+        shown.words,
+        show_number(f.rate_mg_per_day, 4),
+        short_band(f.steady),
+        short_band(f.total),
+        percent(f.below),
+        percent(f.within),
+        percent(f.above),
+        percent(f.above_critical),
+        percent(f.no_steady_state),
+        days_words(f.settle_days),
+        mark_of(shown),
+    )
+
+
+def listed(words: Sequence[str]) -> str:
+    """'a, b and c'."""
+    if len(words) < 2:
+        return "".join(words)
+    return f"{', '.join(words[:-1])} and {words[-1]}"
+
+
+def sentence(text: str) -> str:
+    """With a capital and a full stop."""
+    text = text.strip()
+    if not text:
+        return ""
+    return text[0].upper() + text[1:] + ("" if text.endswith((".", "?", "!", ":")) else ".")
