@@ -43,6 +43,11 @@ class Regimen:
             return False
         return self.timed or len(self.intakes) > 1 or self.intakes[0].hour > 0
 
+    @property
+    def continuous(self) -> bool:
+        """True where one infusion follows the other without a gap."""
+        return len(self.intakes) == 1 and self.intakes[0].over_h == self.cycle_h
+
     def labelled_mg_per_day(self) -> float:
         """Labelled amount per day [mg or mg PE per day], salts not converted."""
         return sum(x.labelled_mg for x in self.intakes) * 24.0 / self.cycle_h
@@ -94,6 +99,9 @@ class Regimen:
 
     def words(self, profile: Profile) -> str:
         """As said aloud: '300 mg extended capsules daily at 21:00', '100 mg suspension every 8 h'."""
+        if self.continuous:
+            form = profile.forms[self.intakes[0].form]
+            return f"{show_number(self.labelled_mg_per_day() / 24, 4)} {form.amount_unit}/h {form.words}, continuously"
         said = [
             f"{show_dose(x.labelled_mg)} {profile.forms[x.form].amount_unit}"
             + (f" over {_minutes(x.over_h)}" if x.over_h else "")
@@ -126,6 +134,11 @@ class Regimen:
         if self.cycle_h == 48.0:
             return "every other day"
         return f"every {show_number(self.cycle_h, 6)} h"
+
+
+def continuous(form: str, labelled_mg_per_day: float) -> Regimen:
+    """An infusion that runs on at one rate: an hour's amount over an hour, every hour."""
+    return Regimen((Intake(form, 0.0, labelled_mg_per_day / 24, over_h=1.0),), cycle_h=1.0)
 
 
 #: Clock times this close are one dose: charts and pumps round to the minute.

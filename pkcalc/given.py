@@ -3,13 +3,14 @@
 from __future__ import annotations
 
 import bisect
+import math
 from datetime import datetime, timedelta
 
-from pkcalc.case import Case, Course
+from pkcalc.case import Case, Course, Session
 from pkcalc.dosing import NEAR, Intake, Regimen, active_mg, flow_dose, flow_repeated
 from pkcalc.drugs.profile import Profile
 from pkcalc.errors import CannotEstimate
-from pkcalc.record import Before, Dose, Record
+from pkcalc.record import Before, Dose, FirstOrder, Record
 
 
 def given_record(case: Case, profile: Profile, until: datetime | None = None) -> Record:
@@ -55,14 +56,27 @@ def given_record(case: Case, profile: Profile, until: datetime | None = None) ->
             continue
         elif course.single is not None:
             doses.append(flow_dose(course.single, case.day(course.start), profile))
-        elif course.rate_mg_per_day is not None and course.end is not None:
+        elif course.rate_mg_per_day is not None:
             # An infusion that still runs has given no more than its rate so far.
-            days = case.day(min(course.end, end)) - case.day(course.start)
+            days = case.day(min(course.end or end, end)) - case.day(course.start)
             whole = Intake(course.rate_form, 0.0, course.rate_mg_per_day * days, over_h=24 * days)
             doses.append(Dose(case.day(course.start), active_mg(whole, profile), duration_day=days))
     doses.sort(key=lambda d: d.time_day)
     first = min([d.time_day for d in doses], default=0.0)
-    return Record(doses=tuple(doses), start_day=start_day if before is not None else min(first, 0.0), before=before)
+    return Record(
+        doses=tuple(doses),
+        start_day=start_day if before is not None else min(first, 0.0),
+        before=before,
+        first_order=tuple(_path(case, s) for s in case.dialysis),
+    )
+
+
+def _path(case: Case, session: Session) -> FirstOrder:
+    """A dialysis session as a first-order path of the engine; one that still runs stays open."""
+    end_day = math.inf if session.end is None else case.day(session.end)
+    return FirstOrder(
+        clearance_L_per_day=session.clearance_L_per_day, start_day=case.day(session.start), end_day=end_day
+    )
 
 
 def _end(case: Case) -> datetime:

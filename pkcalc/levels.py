@@ -197,8 +197,9 @@ def timing(level: Level, case: Case, profile: Profile) -> Timing:
                 return "too early after a dose into a muscle"
             if form.route not in ("intravenous", "intramuscular") and hours < sampling.after_oral_load_h:
                 return "soon after a single dose by mouth"
-        elif course.rate_mg_per_day is not None and course.end is not None and level.drawn < course.end:
-            return "during an infusion"
+        elif course.rate_mg_per_day is not None and (course.end is None or level.drawn < course.end):
+            if sampling.repeat_h is None:  # else the drug is followed by levels while its infusion runs
+                return "during an infusion"
         elif course.regimen is not None and (course.end is None or level.drawn <= course.end):
             since = _hours_since_dose(level.drawn, course)
             if since is None:

@@ -80,7 +80,7 @@ class Product:
 
     mg_per_unit: labelled mg (or mg PE) per capsule, tablet or mL.
     smallest_step: of a unit (0.5 tablet, 0.5 mL). containers_mL: vial or bottle sizes of liquids.
-    strength_basis: "v/v" or "w/v" where a strength in per cent could mean either.
+    strength_basis: "v/v" or "w/v" where a strength in per cent could mean either; percent is then that strength.
     """
 
     id: str
@@ -92,6 +92,7 @@ class Product:
     containers_mL: tuple[float, ...]
     strength_words: str
     strength_basis: str
+    percent: float | None
     exclusive_group: str
 
 
@@ -321,6 +322,15 @@ class MedicationCode:
 
 
 @dataclass(frozen=True)
+class Dialysis:
+    """Clearance of the drug by dialysis [L/day]: what is taken where none is given, published range, entry check."""
+
+    clearance_L_per_day: float
+    range_L_per_day: tuple[float, float]
+    gate_L_per_day: tuple[float, float]
+
+
+@dataclass(frozen=True)
 class Modifier:
     """A named change to a population's typical values for patients it describes poorly.
 
@@ -418,10 +428,7 @@ class Population:
             m
             for m in self.modifiers.values()
             if m.id not in without
-            and (
-                m.id in modifiers
-                or (age_years is not None and m.ages_years and _inside(age_years, m.ages_years))
-            )
+            and (m.id in modifiers or (age_years is not None and m.ages_years and _inside(age_years, m.ages_years)))
         ]
         used: list[str] = []
         vmax_weight, volume_weight = self._weights(weight_kg, age_years, height_cm, sex, used)
@@ -505,9 +512,7 @@ class Population:
         if height_cm is None or sex == "unknown":
             capped = min(weight_kg, rule.cap_without_height_kg)
             if capped < weight_kg:
-                used.append(
-                    f"Weight used: {show_number(capped)} kg of {shown} kg; height or sex is not stated."
-                )
+                used.append(f"Weight used: {show_number(capped)} kg of {shown} kg; height or sex is not stated.")
             else:
                 used.append(f"Weight used: {shown} kg, as given.")
             return capped, capped
@@ -535,7 +540,11 @@ def log_sd(cv: float) -> float:
 
 @dataclass(frozen=True)
 class Profile:
-    """One drug: everything the calculations need, each number traceable through `facts`."""
+    """One drug: everything the calculations need, each number traceable through `facts`.
+
+    questions: the context questions that matter for this drug; empty where all do. density_g_per_mL: of a liquid
+    drug whose strengths are labelled in per cent.
+    """
 
     id: str
     name: str
@@ -545,6 +554,8 @@ class Profile:
     authority: str
     time_unit: Literal["day", "h"]
     level_units: tuple[str, ...]
+    questions: tuple[str, ...]
+    density_g_per_mL: float | None
     molar_mass_g_per_mol: float
     forms: Mapping[str, Form]
     products: Mapping[str, Product]
@@ -565,7 +576,7 @@ class Profile:
     interactions: Interactions
     codes: tuple[Code, ...]
     medications: tuple[MedicationCode, ...]
-    dialysis_L_per_day: tuple[float, float, float] | None
+    dialysis: Dialysis | None
     cautions: Mapping[str, Any]
     facts: Mapping[str, Fact]
     file: str
@@ -601,9 +612,7 @@ class Profile:
             )
         if self.choose_population:
             raise CaseError(
-                Problem(
-                    "Population", "none was chosen", ", ".join(self.populations), "Choose the one that fits"
-                )
+                Problem("Population", "none was chosen", ", ".join(self.populations), "Choose the one that fits")
             )
         age = 40.0 if age_years is None else age_years
         for population in self.populations.values():
@@ -659,10 +668,11 @@ def parse_profile(text: str, file: str) -> Profile:
     top = Table(file, "", data, facts)
     drug = top.table("drug")
     molar_mass, youngest = drug.number("molar_mass", "molar mass"), drug.number("youngest", "age", zero=True)
+    density = drug.maybe("density", "density")
     forms = top.each("form", _form)
     if not forms:
         raise top.fail("form", "missing", "Add at least one form")
-    products = top.each("product", lambda name, t: _product(name, t, forms))
+    products = top.each("product", lambda name, t: _product(name, t, forms, density))
     shelves = top.each("shelf", lambda name, t: _shelf(name, t, products))
     modifiers = top.each("modifier", _modifier)
     weight_rule = _weight_rule(top.table("weight_rule")) if top.has("weight_rule") else None
@@ -679,6 +689,8 @@ def parse_profile(text: str, file: str) -> Profile:
         authority=drug.text("authority"),
         time_unit=cast(Literal["day", "h"], drug.choice("time_unit", ("day", "h"))),
         level_units=drug.texts("level_units"),
+        questions=drug.texts("questions", ()),
+        density_g_per_mL=density,
         molar_mass_g_per_mol=molar_mass,
         youngest_years=youngest,
         choose_population=drug.switch("choose_population"),
@@ -699,7 +711,7 @@ def parse_profile(text: str, file: str) -> Profile:
         interactions=_interactions(top.table("interactions")),
         codes=tuple(top.each("code", _code).values()),
         medications=tuple(top.each("medication", lambda name, t: _medication(t, forms)).values()),
-        dialysis_L_per_day=_dialysis(top.table("dialysis")) if top.has("dialysis") else None,
+        dialysis=_dialysis(top.table("dialysis")) if top.has("dialysis") else None,
         cautions=cast(Mapping[str, Any], top.data.get("caution", {}) if top.has("caution") else {}),
         facts=facts,
         file=file,
@@ -723,9 +735,7 @@ def _consistent(profile: Profile, top: Table) -> None:
     spans = sorted(p.ages_years for p in profile.populations.values() if p.default)
     if profile.choose_population:
         if spans:
-            raise top.fail(
-                "drug.choose_population", "a default population is marked too", "Take one of the two out"
-            )
+            raise top.fail("drug.choose_population", "a default population is marked too", "Take one of the two out")
         return
     if not spans:
         raise top.fail("population", "none is the default", "Mark one with default = true")
@@ -768,9 +778,7 @@ def _form(name: str, t: Table) -> Form:
         intervals_h=() if generic else t.several("intervals", "interval"),
         largest_dose_mg=t.number("largest_dose", "amount"),
         refused_routes=routes_refused,
-        conversion_half_life_h=None
-        if (half := t.maybe("conversion_half_life", "duration")) is None
-        else half * 24,
+        conversion_half_life_h=None if (half := t.maybe("conversion_half_life", "duration")) is None else half * 24,
     )
 
 
@@ -785,31 +793,50 @@ def _absorption(t: Table) -> Absorption:
     return found
 
 
-def _product(name: str, t: Table, forms: Mapping[str, Form]) -> Product:
+def _product(name: str, t: Table, forms: Mapping[str, Form], density_g_per_mL: float | None) -> Product:
     form = t.text("form")
     if form not in forms or forms[form].generic:
         raise t.fail("form", f'"{form}" is not a product form', "Name one of the forms above")
+    strength, percent = t.number("strength", "strength"), t.maybe("percent", "share")
+    basis = t.choice("strength_basis", ("v/v", "w/v")) if t.has("strength_basis") else ""
+    if percent is not None:
+        _strength_fits(t, percent, basis, strength, density_g_per_mL)
     return Product(
         id=name,
         words=t.text("words"),
         form=form,
         unit=t.choice("unit", ("capsule", "tablet", "mL")),
-        mg_per_unit=t.number("strength", "strength"),
+        mg_per_unit=strength,
         smallest_step=t.number("smallest_step", "ratio"),
         containers_mL=t.several("containers", "fluid volume") if t.has("containers") else (),
         strength_words=t.text("strength_words"),
-        strength_basis=t.choice("strength_basis", ("v/v", "w/v")) if t.has("strength_basis") else "",
+        strength_basis=basis,
+        percent=percent,
         exclusive_group=t.text("exclusive_group", ""),
     )
+
+
+def _strength_fits(t: Table, percent: float, basis: str, mg_per_mL: float, density_g_per_mL: float | None) -> None:
+    """A strength in per cent holds 10 mg/mL for each per cent w/v, density times that for each per cent v/v."""
+    if not basis:
+        raise t.fail("strength_basis", "missing beside a strength in per cent", "Write v/v or w/v")
+    if basis == "v/v" and density_g_per_mL is None:
+        raise t.fail("percent", "% v/v without the density of the drug", "Add drug.density")
+    expected = 1000 * percent * (density_g_per_mL if basis == "v/v" and density_g_per_mL else 1.0)
+    if not math.isclose(mg_per_mL, expected, rel_tol=1e-3):
+        raise t.fail(
+            "strength",
+            f"{show_number(mg_per_mL, 6)} mg/mL, but {show_number(100 * percent)} % {basis} holds "
+            f"{show_number(expected, 6)} mg/mL",
+            "Mend the strength, the per cent, or its basis",
+        )
 
 
 def _shelf(name: str, t: Table, products: Mapping[str, Product]) -> Shelf:
     listed = t.statements("products")
     for item in listed:
         if item not in products:
-            raise t.fail(
-                "products", f'"{item}" is not a product of this file', "Add the product or mend its name"
-            )
+            raise t.fail("products", f'"{item}" is not a product of this file', "Add the product or mend its name")
     groups = [products[i].exclusive_group for i in listed if products[i].exclusive_group]
     if len(groups) != len(set(groups)):
         raise t.fail(
@@ -848,9 +875,7 @@ def _weight_rule(t: Table) -> WeightRule:
     return found
 
 
-def _population(
-    name: str, t: Table, modifiers: Mapping[str, Modifier], weight_rule: WeightRule | None
-) -> Population:
+def _population(name: str, t: Table, modifiers: Mapping[str, Modifier], weight_rule: WeightRule | None) -> Population:
     wanted = t.texts("modifiers", ())
     for item in wanted:
         if item not in modifiers:
@@ -863,14 +888,10 @@ def _population(
     if t.data.get("volume", {}).get("unit") != "L/kg" and t.has("volume"):
         raise t.fail("volume.unit", "not per weight", "Write the volume in L/kg")
     exponent = t.number("weight_exponent", "factor", high=1.0)
-    above = (
-        t.number("weight_exponent_above", "factor", high=1.0) if t.has("weight_exponent_above") else exponent
-    )
+    above = t.number("weight_exponent_above", "factor", high=1.0) if t.has("weight_exponent_above") else exponent
     correlation = t._numbers("correlation", "correlation", 1, True)[0]
     if not -1 < correlation < 1:
-        raise t.fail(
-            "correlation.value", "outside what is possible", "It must be between -1 and 1, ends excluded"
-        )
+        raise t.fail("correlation.value", "outside what is possible", "It must be between -1 and 1, ends excluded")
     values = {
         "ages_years": t.span("ages", "age", zero=True),
         "km_mg_per_L": t.number("km", "level"),
@@ -1041,9 +1062,7 @@ def _loading(t: Table, forms: Mapping[str, Form]) -> Loading:
             raise o.fail("parts", "the parts do not fit the total or the largest part", "Mend the parts")
     found = Loading(
         mg_per_kg=t.span("per_weight", "amount per weight"),
-        status_mg_per_kg=t.span("status_per_weight", "amount per weight")
-        if t.has("status_per_weight")
-        else None,
+        status_mg_per_kg=t.span("status_per_weight", "amount per weight") if t.has("status_per_weight") else None,
         largest_single_mg=t.number("largest_single", "amount"),
         rate_caps=tuple(t.each("rate_cap", cap).values()),
         oral=oral,
@@ -1117,11 +1136,14 @@ def _medication(t: Table, forms: Mapping[str, Form]) -> MedicationCode:
     return MedicationCode(t.text("system"), t.statement("code"), t.text("display"), form)
 
 
-def _dialysis(t: Table) -> tuple[float, float, float]:
+def _dialysis(t: Table) -> Dialysis:
     low, high = t.span("range", "clearance")
-    middle = t.number("clearance", "clearance", low=low, high=high)
+    gate = t.span("gate", "clearance")
+    if not gate[0] <= low <= high <= gate[1]:
+        raise t.fail("gate", "narrower than the published range", "Mend one of the two")
+    found = Dialysis(t.number("clearance", "clearance", low=low, high=high), (low, high), gate)
     t.done()
-    return low, middle, high
+    return found
 
 
 # Printing

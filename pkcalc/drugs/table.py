@@ -27,6 +27,7 @@ FILE_UNITS: dict[str, dict[str, float]] = {
     "per albumin": {"per g/dL": 1.0, "per g/L": 10.0},
     "per level": {"per mg/L": 1.0},
     "fluid volume": {"mL": 1.0},
+    "density": {"g/mL": 1.0},
     "interval": {"h": 1.0},
     "ratio": {"times": 1.0},
     "vmax": {**FACTORS["dose rate"], **FACTORS["dose rate per weight"]},

@@ -104,7 +104,7 @@ def test_every_profile_is_physically_possible(name: str) -> None:
         assert 0 < p.vmax_cv <= 1, p.id
         assert 0 < p.km_cv <= 2, p.id
         assert 0 < p.volume_cv <= 1, p.id
-        assert 0.3 <= p.volume_L_per_kg <= 5, p.id
+        assert 0.1 <= p.volume_L_per_kg <= 5, p.id
         assert p.describes, p.id
         assert p.sources, p.id
 
@@ -582,7 +582,9 @@ def test_the_template_can_be_read() -> None:
     assert prior.vmax_mg_per_day == pytest.approx(1 * 24 * 70)
     assert prior.first_order_per_day == pytest.approx(0.24)
     assert prior.first_order_log_sd == pytest.approx(log_sd(0.3))
-    assert found.dialysis_L_per_day == pytest.approx((144, 172.8, 345.6))
+    assert found.dialysis is not None
+    assert found.dialysis.clearance_L_per_day == pytest.approx(172.8)
+    assert found.dialysis.range_L_per_day == pytest.approx((144, 345.6))
     assert found.time_unit == "h"
     assert (found.sampling.after_iv_h, found.sampling.after_im_h) == (1, 0)
     assert found.sampling.repeat_h == (1, 2)

@@ -63,6 +63,7 @@ def test_every_source_is_used() -> None:
     used |= {example.source for example in load_examples()}
     elsewhere = "".join(p.read_text(encoding="utf-8") for p in PACKAGE.glob("cautions.toml"))
     elsewhere += "".join(p.read_text(encoding="utf-8") for p in PACKAGE.rglob("*.py"))
+    elsewhere += "".join(p.read_text(encoding="utf-8") for p in PACKAGE.glob("drugs/*.toml"))  # cautions
     used |= {key for key in all_sources() if f'"{key}"' in elsewhere}
     assert set(all_sources()) - used == set()
 
