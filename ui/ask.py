@@ -13,7 +13,7 @@ from pkcalc_form.entry import Entry, text
 
 from pkcalc.case import QUESTIONS, Case
 from pkcalc.clock import show_time
-from pkcalc.drugs.profile import Profile, drug_names
+from pkcalc.drugs.profile import Profile, drug_names, load_profile
 from pkcalc.errors import Problem
 from pkcalc.units import show
 
@@ -249,10 +249,19 @@ def form_words(profile: Profile | None) -> tuple[list[str], dict[str, str]]:
     return [f.id for f in ordered], {f.id: f.words for f in ordered}
 
 
+def drug_words() -> dict[str, str]:
+    """Each drug with what this program may be used for."""
+    found = {}
+    for name in drug_names():
+        profile = load_profile(name)
+        found[name] = profile.name if profile.scope == "dosing" else f"{profile.name} ({profile.scope})"
+    return found
+
+
 def doses(asked: Asked, echoes: Mapping[int, str]) -> None:
     names = drug_names()
     if len(names) > 1:
-        choice(asked, "Drug", "drug", names)
+        choice(asked, "Drug", "drug", names, drug_words())
     forms, words = form_words(asked.profile)
     look.say(
         "Each dose as said aloud: 300 mg daily · 150 mg every 12 h · 300 mg at 21:00 · "

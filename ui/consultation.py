@@ -121,15 +121,17 @@ def _page() -> None:
     with _step(7, "Note", ""):
         _result(outcome, asked, tell.note)
     look.say(DEFERS, "defer")
+    look.read_mark({k: v for k, v in values.items() if isinstance(v, str) and v})
 
 
 @contextmanager
 def _step(number: int, title: str, sentence: str) -> Iterator[None]:
     """One question; folded, it stands as one sentence."""
     label = f"**{number} · {title}**" + (f" {look.plain(sentence)}" if sentence else "")
+    expanded = number > 3 or not st.session_state.get("opened")
     with (
         st.container(key=f"step-{number}"),
-        st.expander(label, expanded=True, key=f"fold-{number}", on_change="rerun"),
+        st.expander(label, expanded=expanded, key=f"fold-{number}"),
     ):
         yield
 
@@ -253,8 +255,7 @@ def _open(file: CaseFile) -> None:
     _forget()
     for key, value in fields.fields_of(file).items():
         st.session_state[key] = value
-    for number in (1, 2, 3):
-        st.session_state[f"fold-{number}"] = False
+    st.session_state["opened"] = True
     for kind in ("dose_rows", "level_rows", "own_rows"):
         if not st.session_state.get(kind):
             st.session_state[kind] = [1]

@@ -25,8 +25,9 @@ from pkcalc.case import (
     TargetFile,
 )
 from pkcalc.errors import Problem
+from pkcalc.units import LABELS
 
-LEVEL_UNITS = ("mg/L", "mcg/mL", "umol/L", "mg/dL")
+LEVEL_UNITS = tuple(label for label, (kind, _, _) in LABELS.items() if kind == "level")
 ALBUMIN_UNITS = ("g/L", "g/dL")
 WEIGHT_UNITS = ("kg", "lb")
 HEIGHT_UNITS = ("cm", "in")

@@ -2,8 +2,9 @@
 
 from __future__ import annotations
 
+import json
 import re
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
 from html import escape
 from pathlib import Path
 
@@ -28,6 +29,12 @@ def plain(text: str) -> str:
 def say(text: str, kind: str = "line") -> None:
     """One paragraph."""
     st.html(f'<p class="pk-{kind}">{html(text)}</p>')
+
+
+def read_mark(values: Mapping[str, str]) -> None:
+    """What the server has read, for the browser to compare with what stands in the fields (page.js)."""
+    read = {re.sub(r"[^a-zA-Z0-9_-]", "-", key): value for key, value in values.items()}
+    st.html(f'<span class="pk-read" hidden data-read="{escape(json.dumps(read))}"></span>')
 
 
 def beside(text: str, *, needed: bool) -> None:

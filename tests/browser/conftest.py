@@ -176,6 +176,7 @@ class Visit:
 
     def enter_pair(self, first: str, second: str, *, unit: str = "mg/L", form: str = "phenytoin sodium") -> None:
         """300 and 350 mg daily with two steady levels, no dates."""
+        self.choose("Drug", "phenytoin")
         self.press("Add a dose line")
         self.press("Add a level")
         self.page.get_by_text("Level 2", exact=True).wait_for()

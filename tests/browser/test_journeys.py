@@ -151,7 +151,7 @@ def test_a_whole_consult_by_keyboard_alone(visit: Visitor) -> None:
             here = v.page.evaluate(
                 """() => { const e = document.activeElement; if (!e) return '';
                     const label = e.labels && e.labels.length ? e.labels[0].innerText : '';
-                    return [e.getAttribute('aria-label') || '', label, e.innerText || ''].join('|'); }"""
+                    return [e.getAttribute('aria-label') || '', label, e.tagName === 'BUTTON' ? e.innerText : ''].join('|'); }"""
             )
             if name in here:
                 return
@@ -168,6 +168,7 @@ def test_a_whole_consult_by_keyboard_alone(visit: Visitor) -> None:
         keys.press("Enter")
         v.settle()
 
+    choose("Drug", "phenytoin")
     tab_to("Dose, with its unit")
     keys.type("300 mg daily")
     choose("Product form and salt", "phenytoin sodium")

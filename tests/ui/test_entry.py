@@ -156,9 +156,7 @@ def test_every_problem_of_a_field_finds_its_field() -> None:
 
 
 def test_blank_rows_are_not_part_of_the_case() -> None:
-    entry = case_of(
-        {"drug": "phenytoin", "dose_rows": [1, 2, 3], "dose.2.said": "300 mg daily", "dose.2.form": "acid"}
-    )
+    entry = case_of({"drug": "phenytoin", "dose_rows": [1, 2, 3], "dose.2.said": "300 mg daily", "dose.2.form": "acid"})
     assert entry.rows["dose"] == (2,)
     assert field_of("Dose line 1, amount", entry) == "dose.2.said"
 
