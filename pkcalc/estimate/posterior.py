@@ -78,9 +78,6 @@ STEPS = 0.5
 #: record.
 WRITTEN_OUT_DAY = 40.0
 
-#: A standardised residual beyond this is reported as a level that does not fit.
-MISFIT = 2.0
-
 #: With fewer effective nodes than this on the largest grid there is nothing to report.
 FEWEST_NODES = 8.0
 
@@ -534,6 +531,16 @@ def _wrong_level(model: _Model, q: Quadrature) -> dict[int, float]:
     per = weights.shape[1] // (m + 1) if model.spread.wrong_level_chance > 0 else weights.shape[1]
     by_part = weights.sum(axis=0).reshape(-1, per).sum(axis=1)
     return {x.index: min(1.0, float(by_part[j + 1])) if len(by_part) > 1 else 0.0 for j, x in enumerate(model.levels)}
+
+
+def log_evidence(record: Record, levels: Sequence[LevelData], prior: Prior, spread: RecordSpread) -> float:
+    """Log of the probability density of the levels under a population and a belief in the record."""
+    model = _model(record, levels, prior, spread)
+    frame = Frame.of(model.volume.centre, model.volume.cov)
+    q = lay(frame, reach=5.0, n=36, density=model.scouting)
+    if q.effective_nodes < EFFECTIVE_NODES:
+        q = settle(scout(frame, model.scouting), model.scouting, n=36)
+    return _log_evidence(q)
 
 
 def _log_evidence(q: Quadrature) -> float:
