@@ -23,7 +23,7 @@ from typing import Any, Literal, TypeVar
 from pydantic import BaseModel, ConfigDict, ValidationError
 
 from pkcalc import units
-from pkcalc.case import CaseFile, check_case, place_in_words
+from pkcalc.case import CaseFile, check_case, parse_case_text, place_in_words
 from pkcalc.clock import days_between, read_time, show_time
 from pkcalc.drugs.profile import Code, Profile, drug_names, load_profile
 from pkcalc.errors import CaseError, Problem
@@ -1235,7 +1235,7 @@ class _Reading:
             data["doses"] = lines
         if levels:
             data["levels"] = levels
-        file = CaseFile.model_validate_json(json.dumps(data))
+        file = parse_case_text(json.dumps(data))
         problems: tuple[Problem, ...] = ()
         try:
             check_case(file)
@@ -1499,7 +1499,10 @@ def _measured(quantity: Quantity | None, table: Mapping[str, str]) -> tuple[str,
     if not unit:
         unit, note = quantity.unit, "Its unit stands in words only."
     if unit not in table:
-        raise _UnclearError(f'the unit "{_clip(unit, 20)}" is not read' if unit else "no unit is given")
+        given = f"{_clip(format(quantity.value, 'f'), 30)} {_clip(unit, 20)}".strip()
+        raise _UnclearError(
+            f'{given}: the unit "{_clip(unit, 20)}" is not read' if unit else f"{given}: no unit is given"
+        )
     if quantity.code and quantity.unit in table and table[quantity.unit] != table[unit]:
         label = table[unit]
         same = {table[quantity.unit], label} == {"mg/L", "mcg/mL"}

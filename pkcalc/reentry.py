@@ -11,13 +11,14 @@ import json
 from collections.abc import Callable, Iterator, Mapping, Sequence
 from copy import deepcopy
 from dataclasses import dataclass
+from itertools import zip_longest
 from pathlib import Path
 from typing import Any
 
 from pkcalc import units
-from pkcalc.case import QUESTIONS, Case, CaseFile, check_case, dump_case_file
+from pkcalc.case import QUESTIONS, Case, CaseFile, check_case, dump_case_file, parse_case_text
 from pkcalc.clock import read_time, read_time_of_day
-from pkcalc.consult import Consult, run_consult
+from pkcalc.consult import Consult, Shown, run_consult
 from pkcalc.drugs.profile import Profile, load_profile
 from pkcalc.errors import CaseError
 from pkcalc.forecast import Forecast
@@ -33,6 +34,7 @@ _PATIENT = {"age": "age", "sex": "word", "weight": "weight", "weight_basis": "wo
 _ALBUMIN = {"value": "albumin", "taken": "time", "method": "word", "after_infusion": "word"}
 _DOSE = {
     "form": "word",
+    "product": "word",
     "amount": "amount",
     "every": "duration",
     "daily": "daily",
@@ -56,8 +58,16 @@ _LEVEL = {
     "valproate_level": "level",
     "sample": "word",
 }
+_DIALYSIS = {"from": "time", "until": "time", "clearance": "clearance"}
 _TARGET = {"low": "level", "high": "level", "kind": "word"}
-_REGIMEN = {"form": "word", "amount": "amount", "every": "duration", "daily": "daily"}
+_REGIMEN = {
+    "form": "word",
+    "product": "word",
+    "amount": "amount",
+    "every": "duration",
+    "daily": "daily",
+    "rate": "dose rate",
+}
 _PLAN = {
     "shelf": "word",
     "products": "words",
@@ -216,6 +226,7 @@ def _walk(a: dict[str, Any], b: dict[str, Any], profile: Profile) -> Iterator[_F
     yield from _context(a, b)
     yield from _rows(a, b, "doses", _DOSE, "Dose line", profile, _dose_key)
     yield from _rows(a, b, "levels", _LEVEL, "Level", profile, _level_key)
+    yield from _rows(a, b, "dialysis", _DIALYSIS, "Dialysis session", profile, _session_key)
     yield from _part(a, b, "target", _TARGET, "Target", profile)
     yield from _rows(a, b, "proposed", _REGIMEN, "Proposed regimen", profile, None)
     yield from _part(a, b, "plan", _PLAN, "Plan", profile)
@@ -356,6 +367,10 @@ def _dose_key(row: Mapping[str, Any]) -> Any:
     return (moment, row.get("form", "")) if moment is not None else None
 
 
+def _session_key(row: Mapping[str, Any]) -> Any:
+    return _moment(row.get("from", ""))
+
+
 def _level_key(row: Mapping[str, Any]) -> Any:
     moment = _moment(row.get("drawn", ""))
     return (moment, row.get("kind")) if moment is not None else None
@@ -468,7 +483,7 @@ def _alone(data: dict[str, Any], found: _Found, before: Consult, site: Site | st
     tried = deepcopy(data)
     found.patch(tried)
     try:
-        case = check_case(CaseFile.model_validate_json(json.dumps(tried)))
+        case = check_case(parse_case_text(json.dumps(tried)))
     except CaseError as error:
         return f"it cannot stand alone in the first entry ({error.problems[0].text})"
     return _change(before, _run(case, site))
@@ -478,16 +493,15 @@ def _change(before: Consult, after: Consult) -> str:
     """What a change does to the forecasts, in one line."""
     if before.stopped or after.stopped:
         return " ".join(_effects(before, after, "first", "with this change"))
-    mine, theirs = _headlines(before), _headlines(after)
     out = []
-    for (words, a), (others, b) in zip(mine, theirs, strict=False):
-        name = words if words == others else f"{words} becomes {others}"
-        out.append(
-            f"{name}: {_becomes(_bound(a.total.median), _bound(b.total.median))}, chance above the critical level "
-            f"or of no steady state {_becomes(_percent(a.above_critical), _percent(b.above_critical))}."
-        )
-    if len(mine) != len(theirs):
-        out.append(f"Regimens with a forecast: {_becomes(str(len(mine)), str(len(theirs)))}.")
+    for name, a, b in _side_by_side(before, after):
+        if a is None or b is None:
+            out.append(f"{name}: a forecast in one of the two only.")
+            continue
+        words = a.words if a.words == b.words else f"{a.words} becomes {b.words}"
+        levels = _becomes(*(_bound(x.forecast.total.median) for x in (a, b)))
+        chances = _becomes(*(_percent(x.forecast.above_critical) for x in (a, b)))
+        out.append(f"{name}, {words}: {levels}, chance above the critical level or of no steady state {chances}.")
     if not out and before.aim_rate is not None and after.aim_rate is not None:
         rates = [show(x.median, "mg/day") for x in (before.aim_rate, after.aim_rate)]
         out.append(f"Active drug per day for the aim: {_becomes(*rates)}.")
@@ -513,18 +527,25 @@ def _effects(before: Consult, after: Consult, one: str, two: str) -> tuple[str, 
             out.append(f"No forecast ({name}): {_why_stopped(consult)}")
     if before.stopped or after.stopped:
         if not (before.stopped and after.stopped):
-            going, name = (before, one) if after.stopped else (after, two)
-            out += [f"{words}: {_level(f)} ({name})." for words, f in _headlines(going)]
+            going, who = (before, one) if after.stopped else (after, two)
+            out += [
+                f"{name}, {x.words}: {_level(x.forecast)} ({who})."
+                for name, x, _ in _side_by_side(going, going)
+                if x is not None
+            ]
         return tuple(out)
-    mine, theirs = dict(_headlines(before)), dict(_headlines(after))
-    for words in dict.fromkeys((*mine, *theirs)):
-        a, b = mine.get(words), theirs.get(words)
-        if a is not None and b is not None:
-            same = _level(a) == _level(b)
-            told = f"{_level(a)} in both" if same else f"{_level(a)} ({one}), {_level(b)} ({two})"
-            out.append(f"{words}: {told}.")
-        elif a is not None or b is not None:
-            out.append(f"{words}: {_level(a or b)} ({one if b is None else two} only).")
+    for name, a, b in _side_by_side(before, after):
+        if a is not None and b is not None and a.words == b.words:
+            same = _level(a.forecast) == _level(b.forecast)
+            told = (
+                f"{_level(a.forecast)} in both"
+                if same
+                else (f"{_level(a.forecast)} ({one}), {_level(b.forecast)} ({two})")
+            )
+            out.append(f"{name}, {a.words}: {told}.")
+        else:
+            parts = [f"{x.words}: {_level(x.forecast)} ({who})" for x, who in ((a, one), (b, two)) if x is not None]
+            out.append(f"{name}: {'; '.join(parts)}{' only' if len(parts) == 1 else ''}.")
     if before.aim_rate is not None and after.aim_rate is not None:
         rates = [show(x.aim_rate.median, "mg/day") for x in (before, after) if x.aim_rate is not None]
         goals = [show(x.goal.aim_mg_per_L, "mg/L") for x in (before, after)]
@@ -540,15 +561,17 @@ def _why_stopped(consult: Consult) -> str:
     return (stops or list(consult.refusals.values()) or ["no method answers."])[0]
 
 
-def _headlines(consult: Consult) -> list[tuple[str, Forecast]]:
-    """The present dose and each proposed regimen by its words."""
-    now = [("Present dose, " + s.words, s.forecast) for s in consult.table if s.present]
-    return now + [("Proposed, " + s.words, s.forecast) for s in consult.proposed]
+def _side_by_side(before: Consult, after: Consult) -> list[tuple[str, Shown | None, Shown | None]]:
+    """The present dose and each proposed regimen of two consults, by their place."""
+    now = [next((s for s in x.table if s.present), None) for x in (before, after)]
+    found = [("Present dose", now[0], now[1])] if any(now) else []
+    for i, (a, b) in enumerate(zip_longest(before.proposed, after.proposed), 1):
+        found.append((f"Proposed regimen {i}", a, b))
+    return found
 
 
-def _level(forecast: Forecast | None) -> str:
-    """'12.3 mg/L total as reported (90 % 8 to 20), above the critical level 4 %'."""
-    assert forecast is not None
+def _level(forecast: Forecast) -> str:
+    """Median, 90 % interval and danger of a forecast, as the laboratory will report the level."""
     low, middle, high = (_bound(x) for x in (forecast.total.low, forecast.total.median, forecast.total.high))
     return (
         f"{middle} as the laboratory reports it (90 % interval {low} to {high}; "

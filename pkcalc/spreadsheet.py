@@ -5,7 +5,8 @@ Both files have a first row of column names, in any order; names not listed belo
 Doses. Each row is one dose (`at`), a repeated dose (`every`, `from`, `until`) or an infusion (`rate`, `from`,
 `until`), exactly one of the three:
   form      a form of the drug (pkcalc drugs NAME); required, there is no default
-  amount    the number; unit: mg, g or mg PE; or both in amount ("300 mg") with the column unit left out
+  product   a liquid product of the drug, where amount or rate is in mL
+  amount    the number; unit: mg, g, mg PE or mL; or both in amount ("300 mg") with the column unit left out
   at        date and time of a single dose, 2026-03-04 21:00 or 4 Mar 2026 21:00
   over      infusion time of a single dose, "30 min"
   every     interval of a repeated dose, "24 h"
@@ -41,7 +42,7 @@ from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
 
-from pkcalc.case import CaseFile, check_case
+from pkcalc.case import CaseFile, check_case, parse_case_text
 from pkcalc.errors import CaseError, Problem
 
 MAX_BYTES = 2_000_000
@@ -50,6 +51,7 @@ MAX_CELL = 200
 
 DOSE_COLUMNS = (
     "form",
+    "product",
     "amount",
     "unit",
     "at",
@@ -112,8 +114,8 @@ def from_pair(doses: bytes, levels: bytes, *, drug: str, patient: Mapping[str, s
     }
     if patient:
         data["patient"] = {k: v for k, v in patient.items() if v}
-    file = CaseFile.model_validate_json(json.dumps(data))
     try:
+        file = parse_case_text(json.dumps(data))
         check_case(file)
     except CaseError as error:
         raise CaseError(_with_row(p, dose_rows, level_rows) for p in error.problems) from None

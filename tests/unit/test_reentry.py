@@ -12,6 +12,7 @@ import pytest
 from pkcalc import reentry
 from pkcalc.case import QUESTIONS, Case, CaseFile, read_case_text
 from pkcalc.consult import run_consult
+from pkcalc.drugs.profile import load_profile
 from pkcalc.reentry import Comparison, compare
 from tests.unit.cases import PLAIN, doses, levels, plain
 
@@ -124,6 +125,20 @@ def test_rows_are_matched_by_their_time_not_by_their_place() -> None:
     ]
 
 
+def test_dialysis_sessions_are_compared() -> None:
+    one = {"from": "2026-11-30 08:00", "until": "2026-11-30 12:00", "clearance": "100 mL/min"}
+    data = [
+        CaseFile.model_validate_json(json.dumps({**PLAIN, "dialysis": [x]}))
+        for x in (one, {**one, "clearance": "6 L/h"}, {**one, "clearance": "90 mL/min"})
+    ]
+    dumped = [reentry._data(x) for x in data]
+    profile = load_profile("phenytoin")
+    (same,) = reentry._walk(dumped[0], dumped[1], profile)
+    assert same.same
+    (other,) = reentry._walk(dumped[0], dumped[2], profile)
+    assert (other.where, other.same) == ("Dialysis session 1, clearance", False)
+
+
 def test_what_is_free_text_is_not_compared() -> None:
     assert differences(plain(), plain(comment="x", label="bed 4", question="why")) == []
 
@@ -131,13 +146,14 @@ def test_what_is_free_text_is_not_compared() -> None:
 def test_every_field_of_the_case_file_is_compared_or_named_as_not() -> None:
     """A field added to the format later must be added here too."""
     left_out = {"pkcalc_case", "comment", "label", "question", "demonstration", "forecast_then"}
-    parts = {"patient", "albumin", "context", "doses", "levels", "target", "proposed", "plan", "chosen"}
+    parts = {"patient", "albumin", "context", "doses", "levels", "dialysis", "target", "proposed", "plan", "chosen"}
     assert {f.alias or n for n, f in CaseFile.model_fields.items()} == left_out | parts | set(reentry._TOP)
     for model, known, extra in (
         ("patient", reentry._PATIENT, set()),
         ("albumin", reentry._ALBUMIN, set()),
         ("doses", reentry._DOSE, {"comment"}),
         ("levels", reentry._LEVEL, {"albumin", "comment"}),
+        ("dialysis", reentry._DIALYSIS, {"comment"}),
         ("target", reentry._TARGET, {"reason"}),
         ("proposed", reentry._REGIMEN, set()),
         ("plan", reentry._PLAN, {"load"}),
@@ -148,6 +164,7 @@ def test_every_field_of_the_case_file_is_compared_or_named_as_not() -> None:
             "albumin": "AlbuminFile",
             "doses": "DoseFile",
             "levels": "LevelFile",
+            "dialysis": "DialysisFile",
             "target": "TargetFile",
             "proposed": "ProposedFile",
             "plan": "PlanFile",
@@ -176,7 +193,7 @@ def test_the_effect_is_that_of_the_consults_themselves(two_slips: Comparison) ->
     assert a != b
     (difference,) = two_slips.differences
     assert f"daily: {a} becomes {b}, chance above the critical level" in difference.effect
-    (whole,) = [e for e in two_slips.effects if e.startswith("Proposed")]
+    (whole,) = [e for e in two_slips.effects if e.startswith("Proposed regimen 1, ")]
     assert f": {a} as the laboratory reports it (90 % interval " in whole
     assert f"(first), {b} as the laboratory reports it" in whole
 
