@@ -7,12 +7,16 @@ from typing import Any
 
 import numpy as np
 
+from pkcalc import plan as planning
 from pkcalc.drugs.profile import Profile, load_profile
+from pkcalc.estimate.pair import VolumeSpread, from_steady_levels
 from pkcalc.estimate.result import Estimate, Point, band, log_correlation
 from pkcalc.forecast import Goal
-from pkcalc.levels import LabScale
+from pkcalc.levels import LabScale, observe
 from pkcalc.plan.candidates import Setting
-from pkcalc.site import no_site
+from pkcalc.site import Site, no_site
+from pkcalc.steadiness import steady_pairs
+from tests.unit.cases import plain
 
 GOAL = Goal(10.0, 20.0, 30.0, 15.0, "usual range")
 SCALE = LabScale(1.0, 0.1, "as measured")
@@ -72,3 +76,21 @@ def setting(est: Estimate | None = None, **changes: Any) -> Setting:
         largest_mg_per_day=552.0,
     )
     return replace(plain, **changes)
+
+
+def plan(
+    site: Site | None = None, est: Estimate | None = None, stops: frozenset[str] = frozenset(), **changes: Any
+) -> planning.Plan:
+    """The plan of the plain case with parts replaced, straight from an estimate (no record is fitted): the two-level
+    one where the case has two steady levels, else a made-up one."""
+    case = plain(**{"plan": {"shelf": "united-states"}, **changes})
+    site = site or no_site()
+    observations = observe(case, profile(), site)
+    pairs = steady_pairs(case, profile(), observations)
+    weight = case.patient.weight_kg
+    volume = None if weight is None else VolumeSpread(0.7 * weight, 0.2)
+    if est is None:
+        est = from_steady_levels(*pairs, volume=volume) if len(pairs) == 2 else estimate()
+    return planning.make(
+        case, profile(), site, estimate=est, goal=GOAL, scale=SCALE, observations=observations, stops=stops
+    )

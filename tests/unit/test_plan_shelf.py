@@ -123,7 +123,9 @@ def test_alternate_days_only_where_the_site_allows_them() -> None:
             "6 mL of oral suspension, 125 mg in 5 mL (150 mg) every 12 h",
         ),
         (
-            Dispensable(((Part("chewable-50", 0.5),), (Part("chewable-50", 1.5),), (Part("chewable-50", 1.5),)), 1, 175),
+            Dispensable(
+                ((Part("chewable-50", 0.5),), (Part("chewable-50", 1.5),), (Part("chewable-50", 1.5),)), 1, 175
+            ),
             "25 mg chewable tablets (phenytoin acid) in the morning, 75 mg chewable tablets (phenytoin acid) in the "
             "afternoon and 75 mg chewable tablets (phenytoin acid) at night",
             "half a tablet of 50 mg in the morning, 1 and a half tablets of 50 mg in the afternoon and 1 and a half "

@@ -1,0 +1,284 @@
+"""Loads and top-ups: amount, ceilings, vials, infusion time, order line, exclusions, what follows."""
+
+from __future__ import annotations
+
+from dataclasses import replace
+from typing import Any
+
+import numpy as np
+import pytest
+
+from pkcalc import formulas
+from pkcalc.plan import loading
+from pkcalc.plan.loading import Load
+from pkcalc.site import no_site
+from tests.unit.cases import PLAIN
+from tests.unit.planning import estimate, exact, plan, profile
+
+P = profile()
+LOW: dict[str, Any] = {
+    "patient": {"age": "45 years", "sex": "female", "weight": "70 kg", "height": "168 cm"},
+    "doses": [{**PLAIN["doses"][0], "until": ""}],
+    "levels": [{"value": "8 mg/L", "kind": "total", "drawn": "2026-12-01 07:00"}],
+    "context": {"recent_load": "no", "heart_block": "no"},
+}
+
+
+def loads(site: Any = None, **changes: Any) -> dict[str, Load]:
+    changes = {**LOW, **changes, "context": {**LOW["context"], **changes.get("context", {})}}
+    found = plan(site, changes.pop("est", exact(volume=49.0)), **changes)
+    return {load.form: load for load in found.loads}
+
+
+def asked(form: str, **more: str) -> dict[str, Any]:
+    return {"shelf": "united-states", "load": {"form": form, **more}}
+
+
+def test_a_top_up_from_the_present_level() -> None:
+    """70 kg, 0.7 L/kg, from 8 to 15 mg/L: 343 mg active, 372.8 mg of sodium salt (the published page: about 400)."""
+    load = loads()["injection"]
+    assert load.wanted_mg == pytest.approx(343 / 0.92)
+    assert load.amount_mg == 375  # whole vials would be 350 or 400 mg, more than 5 % off: a measured volume
+    assert load.active_mg == pytest.approx(375 * 0.92)
+
+
+def test_salt_and_pe_are_told_apart() -> None:
+    found = loads()
+    assert (
+        found["injection"].order[0].startswith("375 mg injection into a vein (phenytoin sodium): 7.5 mL of injection")
+    )
+    assert (
+        found["fosphenytoin-injection"]
+        .order[0]
+        .startswith(
+            "375 mg PE fosphenytoin injection into a vein (mg PE): 7.5 mL of fosphenytoin injection, 50 mg PE in 1 mL"
+        )
+    )
+    assert " PE" not in found["injection"].order[0]
+
+
+def test_a_load_from_nothing_to_the_aim() -> None:
+    load = loads(levels=[], doses=[], plan=asked("injection", aim="20 mg/L"))["injection"]
+    assert load.wanted_mg == pytest.approx(49 * 20 / 0.92)  # 1,065 mg
+    assert load.amount_mg == 1050
+    assert load.rise.median == pytest.approx(1050 * 0.92 / 49)
+    # elimination while it runs is counted: a little below the rise
+    assert 19 < load.after.median < load.rise.median
+
+
+def test_the_complete_order_line() -> None:
+    load = loads(levels=[], doses=[], plan=asked("injection", aim="20 mg/L", at="2026-12-01 12:00"))["injection"]
+    assert load.order == (
+        "1,050 mg injection into a vein (phenytoin sodium): 21 mL of injection, 50 mg in 1 mL (3 vials of 5 mL and 3 "
+        "vials of 2 mL), in sodium chloride 0.9 % only, to a final volume of 105 to 210 mL (5 to 10 mg/mL), over at "
+        "least 21 min (adults: at most 50 mg/min).",
+        "In-line filter, 0.2 to 0.5 micron. Continuous ECG, blood pressure and breathing during the infusion and for "
+        "an hour after it.",
+        "Not in: sinus bradycardia, sino-atrial block, second- or third-degree heart block, Adams-Stokes syndrome.",
+        "Watch for extravasation and purple glove syndrome: a large vein, flush before and after.",
+        "Draw a level 2 h after the end, not earlier (begun at 1 Dec 2026 12:00: from 1 Dec 2026 14:21).",
+    )
+    assert load.offered
+
+
+def test_the_ceiling_of_one_load() -> None:
+    heavy = {"age": "45 years", "sex": "male", "weight": "120 kg", "height": "180 cm"}
+    load = loads(levels=[], doses=[], patient=heavy, est=exact(volume=100.0), plan=asked("injection", aim="20 mg/L"))[
+        "injection"
+    ]
+    assert load.wanted_mg == pytest.approx(100 * 20 / 0.92)
+    assert load.amount_mg == 1500
+    assert "Cut from 2,174 mg to the ceiling of 1,500 mg for one load (needs a local setting to exceed)." in load.notes
+    site = replace(no_site(), largest_single_load_mg=1800.0)
+    higher = loads(
+        site, levels=[], doses=[], patient=heavy, est=exact(volume=100.0), plan=asked("injection", aim="20 mg/L")
+    )["injection"]
+    assert higher.amount_mg == 1800
+
+
+def test_never_above_the_published_amount_per_kg() -> None:
+    small = {"age": "45 years", "sex": "female", "weight": "40 kg", "height": "150 cm"}
+    load = loads(levels=[], doses=[], patient=small, est=exact(volume=60.0), plan=asked("injection", aim="20 mg/L"))[
+        "injection"
+    ]
+    assert load.amount_mg == 800  # 20 mg/kg; the formula wants 1,304 mg
+    assert any(n.startswith("Cut from 1,304 mg to the ceiling of 800 mg") for n in load.notes)
+
+
+@pytest.mark.parametrize(
+    ("patient", "heart", "form", "minutes", "words"),
+    [
+        ({"age": "45 years"}, "no", "injection", 21, "adults: at most 50 mg/min"),
+        ({"age": "70 years"}, "no", "injection", 42, "elderly or heart disease: at most 25 mg/min"),
+        ({"age": "45 years"}, "yes", "injection", 42, "elderly or heart disease: at most 25 mg/min"),
+        ({}, "no", "injection", 42, "elderly or heart disease: at most 25 mg/min"),
+        ({"age": "45 years"}, "no", "fosphenytoin-injection", 8, "adults: at most 150 mg PE/min"),
+        ({"age": "70 years"}, "no", "fosphenytoin-injection", 15, "elderly or heart disease: at most 75 mg PE/min"),
+    ],
+)
+def test_the_infusion_time_by_age_and_risk(
+    patient: dict[str, str], heart: str, form: str, minutes: float, words: str
+) -> None:
+    load = loads(
+        levels=[],
+        doses=[],
+        patient={"sex": "female", "weight": "70 kg", "height": "168 cm", **patient},
+        context={"heart_block": heart},
+        plan=asked(form, aim="20 mg/L"),
+    )[form]
+    assert load.minutes == minutes
+    assert words in load.order[0]
+
+
+def test_a_child_has_the_slower_of_the_two_limits() -> None:
+    """20 kg: 1 mg/kg/min is 20 mg/min, below the flat 50; fosphenytoin 2 mg PE/kg/min is 40 mg PE/min."""
+    child = {"age": "6 years", "weight": "20 kg", "sex": "male"}
+    case = {"levels": [], "doses": [], "patient": child, "est": exact(volume=14.0)}
+    phenytoin = loads(**case, plan=asked("injection", aim="20 mg/L"))["injection"]
+    assert phenytoin.amount_mg == 300
+    assert phenytoin.minutes == 15
+    fos = loads(**case, plan=asked("fosphenytoin-injection", aim="20 mg/L"))["fosphenytoin-injection"]
+    assert fos.minutes == 8
+
+
+def test_heart_block_takes_the_offer_away_and_leaves_the_numbers() -> None:
+    load = loads(context={"heart_block": "yes"})["injection"]
+    assert not load.offered
+    assert load.why_not == (
+        "Heart block, bradycardia or serious heart disease is answered yes. Contraindicated in sinus bradycardia, "
+        "sino-atrial block, second- or third-degree heart block, Adams-Stokes syndrome: these must be excluded first.",
+    )
+    assert load.amount_mg > 0
+
+
+def test_heart_disease_not_stated_is_said() -> None:
+    load = loads(context={"heart_block": "unknown"})["injection"]
+    assert load.offered
+    assert (
+        "Heart disease is not stated. With it, the slower rate holds (elderly or heart disease: at most 25 mg/min)."
+        in load.notes
+    )
+
+
+@pytest.mark.parametrize(
+    ("answers", "why"),
+    [
+        ({"renal_reduced": "yes"}, ("No load by mouth in renal disease.",)),
+        ({"hepatic_failure": "yes"}, ("No load by mouth in hepatic disease.",)),
+        (
+            {"hepatic_failure": "unknown"},
+            ("No load by mouth before hepatic disease is excluded. Does the patient have hepatic failure?",),
+        ),
+        ({}, ()),
+    ],
+)
+def test_no_load_by_mouth_in_renal_or_hepatic_disease(answers: dict[str, str], why: tuple[str, ...]) -> None:
+    load = loads(context=answers)["extended-capsule"]
+    assert load.why_not == why
+    assert load.offered == (not why)
+
+
+def test_a_load_by_mouth_is_split() -> None:
+    load = loads(levels=[], doses=[], plan=asked("extended-capsule", aim="20 mg/L"))["extended-capsule"]
+    assert load.amount_mg == 1000  # the formula wants 1,065 mg; the published total is the most
+    assert load.parts == ((0.0, 400.0), (2.0, 300.0), (4.0, 300.0))
+    assert load.order[0] == (
+        "1,000 mg extended capsules (phenytoin sodium) by mouth in 3 parts: 4 x 100 mg (400 mg) at once, then 3 x 100 "
+        "mg (300 mg) after 2 h, then 3 x 100 mg (300 mg) after 4 h."
+    )
+    assert load.minutes is None
+    assert load.draw_after_h == 24
+    assert load.at_draw.median < load.rise.median  # a day of elimination
+
+
+@pytest.mark.parametrize(
+    ("amount", "parts"),
+    [(100, (100,)), (400, (400,)), (500, (300, 200)), (870, (300, 300, 300)), (1000, (400, 300, 300)), (40, ())],
+)
+def test_parts_of_an_oral_load(amount: float, parts: tuple[float, ...]) -> None:
+    assert P.loading is not None
+    assert P.loading.oral is not None
+    found = loading.split(amount, 100.0, P.loading.oral)
+    assert tuple(mg for _, mg in found) == parts
+    assert [h for h, _ in found] == [2.0 * k for k in range(len(parts))]
+
+
+@pytest.mark.parametrize(
+    ("amount", "ordered", "vials"),
+    [
+        (989, 1000, "4 vials of 5 mL"),
+        (373, 375, "4 vials of 2 mL"),
+        (212.7, 225, "1 vial of 5 mL"),
+        (1260, 1250, "5 vials of 5 mL"),
+        (60, 50, "1 vial of 2 mL"),
+    ],
+)
+def test_rounding_to_vials(amount: float, ordered: float, vials: str) -> None:
+    product = P.products["injection-50"]
+    assert loading.round_to_vials(amount, product, 1500) == ordered
+    assert loading.vial_words(ordered, product) == vials
+
+
+def test_rounding_never_crosses_the_ceiling() -> None:
+    product = P.products["injection-50"]
+    for most in (500.0, 730.0, 1490.0):
+        assert loading.round_to_vials(most, product, most) <= most
+
+
+def test_a_load_in_the_last_three_days_comes_first() -> None:
+    load = loads(context={"recent_load": "yes"})["injection"]
+    assert load.why_not == ("A load or a dose into a vein was given in the last 72 h: measure before giving more.",)
+    unsaid = loads(context={"recent_load": "unknown"})["injection"]
+    assert unsaid.offered
+    assert any(n.startswith("Not stated whether a load") for n in unsaid.notes)
+
+
+def test_an_aim_far_too_high_is_not_offered() -> None:
+    load = loads(est=estimate(), levels=[], doses=[], plan=asked("injection", aim="28 mg/L"))["injection"]
+    assert not load.offered
+    assert load.why_not[0].startswith("The chance of a level above 30 mg/L after it is ")
+
+
+def test_what_follows_with_the_maintenance_dose() -> None:
+    load = loads()["injection"]
+    assert [d for d, _ in load.followed] == [1.0, 3.0, 7.0, 14.0]
+    assert load.maintenance == "300 mg extended capsules (phenytoin sodium) daily"
+    # from the level after the load down to the plateau of 300 mg: 5 x 276 / (450 - 276) = 7.93 mg/L
+    levels = [load.at_draw.median, *(b.median for _, b in load.followed)]
+    assert levels == sorted(levels, reverse=True)
+    assert levels[-1] > 5 * 276 / (450 - 276)
+    exactly = formulas.level_after(
+        time_day=1 - 2 / 24,
+        start_mg_per_L=load.at_draw.median,
+        dose_rate_mg_per_day=276.0,
+        vmax_mg_per_day=450.0,
+        km_mg_per_L=5.0,
+        volume_L=49.0,
+    )
+    assert load.followed[0][1].median == pytest.approx(float(exactly))
+
+
+def test_the_rise_has_an_interval() -> None:
+    load = loads(est=estimate())["injection"]
+    assert load.rise.low < load.rise.median < load.rise.high
+    draws = estimate().volume_L
+    assert draws is not None
+    assert load.rise.median == pytest.approx(float(np.median(load.active_mg / draws)), rel=0.03)
+
+
+def test_loads_that_are_not_given_say_why() -> None:
+    enough = plan(
+        None, exact(), **{**LOW, "levels": [{**LOW["levels"][0], "value": "18 mg/L"}], "plan": asked("injection")}
+    )
+    assert enough.no_load == ("No load: the level today (18 mg/L) is not below the aim of 15 mg/L.",)
+    nothing = plan(None, exact(), **{**LOW, "plan": asked("prompt-capsule")})
+    assert nothing.no_load == (
+        "No load of prompt-release capsules (phenytoin sodium): there is no such product on the shelf in use.",
+    )
+    weightless = plan(
+        None, exact(volume=None), **{**LOW, "patient": {"age": "45 years", "sex": "female"}, "plan": asked("injection")}
+    )
+    assert weightless.no_load == ("No load can be worked out without a weight: there is no volume.",)
+    in_range = plan(None, exact(), **{**LOW, "levels": [{**LOW["levels"][0], "value": "12 mg/L"}]})
+    assert in_range.loads == ()
+    assert in_range.no_load == ()

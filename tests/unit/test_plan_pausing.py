@@ -1,0 +1,191 @@
+"""A level that is too high, and a change of form."""
+
+from __future__ import annotations
+
+from dataclasses import replace
+from typing import Any
+
+import numpy as np
+import pytest
+from scipy.integrate import solve_ivp
+
+from pkcalc import formulas
+from pkcalc.plan import Today, pausing, switching
+from pkcalc.plan.pausing import Pause, still_absorbing, time_to_fall
+from pkcalc.plan.switching import Switch
+from pkcalc.record import Absorption, Dose
+from tests.unit.cases import PLAIN, plain
+from tests.unit.planning import estimate, exact, plan, profile, setting
+
+HIGH: dict[str, Any] = {
+    "doses": [{**PLAIN["doses"][0], "amount": "400 mg", "until": ""}],
+    "levels": [{"value": "34 mg/L", "kind": "total", "drawn": "2026-12-01 07:00"}],
+}
+
+
+def pause(est: Any = None, **changes: Any) -> Pause:
+    found = plan(None, est or exact(vmax=405.0), **{**HIGH, **changes}).pause
+    assert found is not None
+    return found
+
+
+def test_the_seizure_risk_is_named_first() -> None:
+    assert pause().seizure_risk == (
+        "Stopping or pausing an antiseizure drug can bring on seizures, status epilepticus among them. Weigh that "
+        "first; a partial reduction is the default, and a pause goes to a stated level in the upper range, never to "
+        "zero."
+    )
+
+
+def test_the_pause_is_the_closed_form() -> None:
+    """V [(C0 - C) + Km ln(C0/C)] / Vmax, and the same by solve_ivp."""
+    found = pause()
+    closed = 49.0 * ((34 - 20) + 5 * np.log(34 / 20)) / 405.0
+    assert found.to_mg_per_L == 20.0
+    assert found.days.median == pytest.approx(closed, rel=1e-12)
+
+    def fall(_t: float, c: Any) -> Any:
+        return -405.0 / 49.0 * c / (5.0 + c)
+
+    def down(_t: float, c: Any) -> float:
+        return float(c[0] - 20.0)
+
+    down.terminal = True  # type: ignore[attr-defined]
+    solved = solve_ivp(fall, (0, 30), [34.0], method="DOP853", rtol=1e-12, atol=1e-12, events=down)
+    assert found.days.median == pytest.approx(float(solved.t_events[0][0]), rel=1e-9)
+
+
+def test_a_restart_level_may_be_asked_for() -> None:
+    found = pause(plan={"shelf": "united-states", "restart_level": "18 mg/L"})
+    assert found.to_mg_per_L == 18.0
+    assert found.days.median > pause().days.median
+
+
+def test_the_pause_has_an_interval() -> None:
+    days = pause(estimate(vmax=405.0)).days
+    assert 0 < days.low < days.median < days.high
+
+
+def test_a_smaller_dose_comes_down_later_than_a_pause() -> None:
+    found = pause()
+    assert found.reductions
+    percents = [r.percent for r in found.reductions]
+    assert percents == sorted(percents, reverse=True)
+    days = [r.days.median for r in found.reductions]
+    assert days == sorted(days, reverse=True)
+    assert min(days) > found.days.median
+    assert all(r.steady.median < 20.0 for r in found.reductions)
+
+
+def test_restart_too_early_is_high_and_too_late_is_low() -> None:
+    found = pause()
+    assert found.restarts
+    for r in found.restarts:
+        assert r.early.median > r.on_time.median > r.late.median
+        assert r.lowest_late.median < found.to_mg_per_L
+        assert 10.0 <= r.steady.median <= 20.0
+
+
+def test_a_restart_is_never_more_than_the_present_dose() -> None:
+    names = [r.words for r in pause().restarts]
+    assert len(names) == len(set(names))
+    assert not any("400 mg" in n for n in names)
+
+
+def test_a_small_reduction_near_the_ceiling_is_said() -> None:
+    (line,) = [x for x in pause().lines if x.startswith("Near the ceiling")]
+    # 368 of 405 mg/day: 405 / 37 = 10.9
+    assert line == (
+        "Near the ceiling a small reduction can drop the level far: at the present dose 1 % less is about 11 % less "
+        "level in the end."
+    )
+
+
+def test_the_drug_still_in_the_gut_is_counted() -> None:
+    """1,200 mg by mouth an hour ago: what is still to be absorbed keeps the level up for longer."""
+    slow = Absorption(ka_per_day=2.0, lag_day=0.0, release_day=0.5)
+    now = Today(None, np.full(8, 34.0), "", (Dose(-1 / 24, 1104.0, absorption=slow),), 34.0)
+    one = exact(vmax=405.0)
+    start = np.full(8, 34.0)
+    without = time_to_fall(one, start, 20.0)
+    with_gut = still_absorbing(one, start, 20.0, now)
+    assert (with_gut > without + 1.0).all()
+    nothing = still_absorbing(one, start, 20.0, replace(now, still_absorbed=()))
+    assert nothing == pytest.approx(without, abs=0.02)
+
+
+def test_a_level_low_now_may_still_rise_from_the_gut() -> None:
+    slow = Absorption(ka_per_day=6.0)
+    now = Today(None, np.full(8, 15.0), "", (Dose(0.0, 1104.0, absorption=slow),), 15.0)
+    one = exact(vmax=405.0)
+    assert (time_to_fall(one, np.full(8, 15.0), 20.0) == 0).all()
+    assert (still_absorbing(one, np.full(8, 15.0), 20.0, now) > 1.0).all()
+
+
+def test_the_pause_counts_what_is_absorbed_late() -> None:
+    s = setting(exact(vmax=405.0), present_mg_per_day=368.0)
+    dose = Dose(-0.05, 368.0, absorption=Absorption(ka_per_day=24.0, release_day=0.2))
+    now = Today(None, np.full(8, 34.0), "", (dose,), 34.0)
+    found = pausing.pause(plain(**HIGH), now, s, ())
+    assert found is not None
+    assert found.with_absorption is not None
+    assert found.with_absorption.median > found.days.median
+    assert (
+        "368 mg of active drug was taken so lately that part of it is still to be absorbed; the pause counts it in."
+        in found.lines
+    )
+
+
+def test_no_pause_where_the_level_is_not_high() -> None:
+    low = {**HIGH, "levels": [{**HIGH["levels"][0], "value": "15 mg/L"}]}
+    assert plan(None, exact(vmax=405.0), **low).pause is None
+    assert plan(None, exact(vmax=405.0, volume=None), **HIGH, patient={"age": "45 years"}).pause is None
+
+
+# Switching
+
+
+def switches(**changes: Any) -> dict[str, Switch]:
+    lines = {"doses": [{**PLAIN["doses"][0], "amount": "400 mg", "until": ""}], "levels": [PLAIN["levels"][0]]}
+    return {s.form: s for s in plan(None, exact(vmax=500.0), **{**lines, **changes}).switches}
+
+
+def test_the_same_active_amount_in_another_form() -> None:
+    """400 mg of the sodium salt is 368 mg of acid: 375 mg of suspension, 7.5 mL twice a day."""
+    found = switches()
+    suspension = found["suspension"]
+    assert suspension.exact_labelled_mg == pytest.approx(368.0)
+    assert suspension.words == "7.5 mL of oral suspension, 125 mg in 5 mL (187.5 mg) every 12 h"
+    assert suspension.active_mg_per_day == pytest.approx(375.0)
+    assert suspension.change_percent == pytest.approx(100 * (375 / 368 - 1))
+    assert "extended-capsule" not in found
+    vein = found["injection"]
+    assert vein.words == "4 mL of injection, 50 mg in 1 mL (200 mg) every 12 h"
+    assert vein.change_percent == pytest.approx(0, abs=1e-9)
+
+
+def test_what_is_said_of_a_change_of_form() -> None:
+    found = switches()
+    assert found["suspension"].lines == (
+        "Oral suspension, 125 mg in 5 mL: 125 mg of phenytoin (acid) in 5 mL, that is 25 mg in 1 mL.",
+        "The same labelled amount of oral suspension (phenytoin acid) holds 8.7 % more active drug than of extended "
+        "capsules (phenytoin sodium) (salt factors 1 and 0.92).",
+        "How much reaches the body is uncertain (85 % to 100 %): measure again after the change.",
+        "Down a feeding tube with running feeds much less may be absorbed: hold feeds around the dose, the same way "
+        "every day, and measure again after any change of feeds.",
+    )
+    assert found["fosphenytoin-injection"].lines[-1] == "Amounts change from mg to mg PE: write the unit out."
+
+
+def test_uncertain_bioavailability_has_two_ends() -> None:
+    suspension = switches()["suspension"]
+    assert suspension.steady_low_mg_per_L < suspension.steady_high_mg_per_L == suspension.steady.median
+    low = formulas.steady_state_level(dose_rate_mg_per_day=0.85 * 375.0, vmax_mg_per_day=500.0, km_mg_per_L=5.0)
+    assert suspension.steady_low_mg_per_L == pytest.approx(float(low))
+    vein = switches()["injection"]
+    assert vein.steady_low_mg_per_L == vein.steady_high_mg_per_L
+
+
+def test_nothing_to_switch_from() -> None:
+    assert switching.switches(plain(doses=[], levels=[]), setting(), ()) == ()
+    assert profile().forms["suspension"].routes == ("oral", "feeding tube")
