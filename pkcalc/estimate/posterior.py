@@ -543,6 +543,27 @@ def log_evidence(record: Record, levels: Sequence[LevelData], prior: Prior, spre
     return _log_evidence(q)
 
 
+def at_points(
+    record: Record,
+    levels: Sequence[LevelData],
+    prior: Prior,
+    spread: RecordSpread,
+    *,
+    vmax_mg_per_day: Floats,
+    km_mg_per_L: Floats,
+    volume_L: Floats,
+) -> tuple[Floats, Floats]:
+    """What the estimate reckons with at a few points, for the second way to check.
+
+    Returns the levels [mg/L] at each point, shape (points, levels), and the log posterior density of each
+    point's (log Vmax, log Km V), up to a constant.
+    """
+    model = _model(record, levels, prior, spread)
+    a, k = np.log(vmax_mg_per_day), np.log(km_mg_per_L) + np.log(volume_L)
+    found = model.density(a, k, np.ones(len(a), dtype=np.bool_))
+    return np.exp(found.log_amount) / volume_L[:, None], found.log_density
+
+
 def _log_evidence(q: Quadrature) -> float:
     """Log of the chance density of the levels under the population, up to nothing: comparable between
     records."""
