@@ -9,9 +9,10 @@ from typing import cast
 
 from pkcalc import cautions as caution_engine
 from pkcalc import plan as planning
-from pkcalc import steadiness
+from pkcalc import steadiness, twoways
 from pkcalc.case import Case, Target
 from pkcalc.cautions import ShownRegimen, State
+from pkcalc.crosscheck import Row
 from pkcalc.drugs.profile import Prior, Profile, Sex, load_profile
 from pkcalc.errors import CannotEstimate, CaseError, Caution
 from pkcalc.estimate import lines, posterior, trust
@@ -22,6 +23,8 @@ from pkcalc.estimate.result import Band, Estimate
 from pkcalc.forecast import Goal, rate_for_level
 from pkcalc.given import given_record
 from pkcalc.levels import LabScale, Observation, adherence, everyday_cv, lab_scale, observe
+from pkcalc.plan import projection as projecting
+from pkcalc.plan.projection import Projection
 from pkcalc.record import Record
 from pkcalc.site import Site, load_site, no_site
 from pkcalc.steadiness import Settling
@@ -41,7 +44,7 @@ class Consult:
     stop or a refusal leaves none. settling: by the whole record's draws where there is one, else by the
     population's, else by the chosen estimate's own. line_results and verdict: three or more steady levels side
     by side. difference: why the methods differ, in a sentence, where they do. blocked: what stops take away;
-    results so named are absent (None or empty).
+    results so named are absent (None or empty). second_way: key numbers calculated a second, independent way.
     """
 
     case: Case
@@ -65,9 +68,11 @@ class Consult:
     proposed: tuple[Shown, ...]
     table: tuple[Shown, ...]
     plan: planning.Plan | None
+    projection: Projection | None
     aim_rate: Band | None
     cautions: tuple[Caution, ...]
     blocked: frozenset[str]
+    second_way: tuple[Row, ...] = ()
     results_date: str = RESULTS_DATE
 
     @property
@@ -93,13 +98,14 @@ def run_consult(case: Case, site: Site | str | Path | None = None) -> Consult:
     """A checked case in, a consult out. Refusals of a method and stops are part of the result, not exceptions."""
     local = no_site() if site is None else site if isinstance(site, Site) else load_site(site)
     profile = load_profile(case.drug)
-    prior = _prior(case, profile, local)
+    prior = patient_prior(case, profile, local)
     population = posterior.prior_only(prior) if prior is not None else None
     state = State(case=case, profile=profile, site=local, goal=_goal(case, profile, local))
     said = list(caution_engine.after_case(state))
 
     observations = observe(case, profile, local)
-    pairs = steadiness.steady_pairs(case, profile, observations)
+    # the two-level method knows neither a parallel path nor dialysis: it stays with drugs in full scope
+    pairs = steadiness.steady_pairs(case, profile, observations) if profile.scope == "dosing" else ()
     state = replace(state, observations=observations, pairs=pairs)
     said += caution_engine.after_levels(state)
 
@@ -130,7 +136,11 @@ def run_consult(case: Case, site: Site | str | Path | None = None) -> Consult:
     aim_rate: Band | None = None
     assert state.goal is not None
     plan: planning.Plan | None = None
-    if chosen is not None and "projection" not in stops:
+    projection: Projection | None = None
+    if profile.scope != "dosing":
+        chosen, why, projection = _projected(state, chosen, why, population, prior, found.refusals, stops)
+        said += caution_engine.after_plan(replace(state, estimate=chosen, projection=projection))
+    elif chosen is not None and "projection" not in stops:
         plan = planning.make(
             case,
             profile,
@@ -148,7 +158,7 @@ def run_consult(case: Case, site: Site | str | Path | None = None) -> Consult:
         spoken = [ShownRegimen(s.words, s.taken, s.present) for s in proposed]
         now = [ShownRegimen("The present dose", s.taken, True) for s in table if s.present]
         said += caution_engine.after_plan(replace(state, regimens=(*now, *spoken)))
-    return Consult(
+    consult = Consult(
         case=case,
         profile=profile,
         site=local,
@@ -170,10 +180,88 @@ def run_consult(case: Case, site: Site | str | Path | None = None) -> Consult:
         proposed=proposed,
         table=table,
         plan=plan,
+        projection=projection,
         aim_rate=aim_rate,
         cautions=caution_engine.in_order(said),
         blocked=caution_engine.blocked(said),
     )
+
+    return _checked_twice(consult, state)
+
+
+def _checked_twice(consult: Consult, state: State) -> Consult:
+    """The consult with its second way; without any number where the two disagree."""
+    rows = twoways.compare(
+        consult.case,
+        consult.profile,
+        estimate=consult.chosen,
+        pair=consult.estimates.get(two_level.METHOD),
+        pairs=consult.pairs,
+        record=consult.record,
+        levels=level_data(state),
+        prior=consult.prior,
+        spread=record_spread(consult.case, consult.profile),
+        plan=consult.plan,
+    )
+    wrong = tuple(r.words for r in rows if not r.agrees)
+    if not wrong:
+        return replace(consult, second_way=rows)
+    said = (*consult.cautions, *caution_engine.after_plan(replace(state, estimate=None, disagreements=wrong)))
+    return replace(
+        consult,
+        settling=(),
+        estimates={},
+        line_results=(),
+        verdict=None,
+        chosen=None,
+        chosen_why="",
+        difference="",
+        proposed=(),
+        table=(),
+        plan=None,
+        projection=None,
+        aim_rate=None,
+        cautions=caution_engine.in_order(said),
+        blocked=caution_engine.blocked(said),
+        second_way=rows,
+    )
+
+
+def _projected(
+    state: State,
+    chosen: Estimate | None,
+    why: str,
+    population: Estimate | None,
+    prior: Prior | None,
+    refusals: dict[str, str],
+    stops: frozenset[str],
+) -> tuple[Estimate | None, str, Projection | None]:
+    """What comes next for a drug outside full dosing; before any level the population alone stands for the patient."""
+    if "estimate" in stops or "projection" in stops:
+        return chosen, why, None
+    if chosen is None and population is not None:
+        chosen, why = population, "the population alone: no level could be learned from yet"
+    if chosen is None or state.goal is None:
+        return chosen, why, None
+    try:
+        return (
+            chosen,
+            why,
+            projecting.project(
+                state.case,
+                state.profile,
+                state.site,
+                estimate=chosen,
+                learned=chosen.method == posterior.WHOLE_RECORD,
+                goal=state.goal,
+                observations=state.observations,
+                first_order_per_day=prior.first_order_per_day if prior is not None else 0.0,
+                stops=stops,
+            ),
+        )
+    except CannotEstimate as refusal:
+        refusals["projection"] = str(refusal)
+        return None, "", None
 
 
 def _estimate(state: State, prior: Prior | None, population: Estimate | None, stops: frozenset[str]) -> _Estimates:
@@ -191,6 +279,8 @@ def _estimate(state: State, prior: Prior | None, population: Estimate | None, st
             refusals[posterior.WHOLE_RECORD] = str(refusal)
         except CaseError as refusal:
             refusals[posterior.WHOLE_RECORD] = " ".join(p.text for p in refusal.problems)
+    if profile.scope != "dosing":
+        return _Estimates(by_method, refusals, record, (), (), (), None)
     settling = steadiness.settling(case, profile, observations, whole or population, pairs)
 
     line_results: tuple[lines.Result, ...] = ()
@@ -292,7 +382,7 @@ def _history(record: Record | None, prior: Prior | None, state: State) -> planni
     return planning.History(record, level_data(state), spread, prior.first_order_per_day)
 
 
-def _prior(case: Case, profile: Profile, site: Site) -> Prior | None:
+def patient_prior(case: Case, profile: Profile, site: Site) -> Prior | None:
     """The population for this patient; None where it cannot be scaled (no weight) or does not cover the age."""
     weight, age = case.patient.weight_kg, case.patient.age_years
     if weight is None or (age is not None and age < profile.youngest_years):
