@@ -539,8 +539,9 @@ def days_on_the_way(rate_mg_per_day: float, start_mg_per_L: float, node: Node, f
 
     there.terminal = True  # type: ignore[attr-defined]
     found = solve_ivp(change, (0.0, 1e7), [start_mg_per_L], method="LSODA", events=there, rtol=1e-8, atol=1e-9)
-    moments = found.t_events[0] if found.t_events else []
-    return float(moments[0]) if len(moments) else math.nan
+    if not found.t_events or not len(found.t_events[0]):
+        return math.nan
+    return float(found.t_events[0][0])
 
 
 def pair_rows(

@@ -162,7 +162,7 @@ def record_chart(consult: Consult) -> Chart | None:
         return None
     last = max([o.level.drawn for o in drawn if o.level.drawn is not None] + ([case.now] if case.now else []))
     fitted = course(consult)
-    points = []
+    points: list[dict[str, Any]] = []
     for o in drawn:
         assert o.level.drawn is not None
         wide = np.exp(_SURE * o.log_sd)
@@ -177,7 +177,8 @@ def record_chart(consult: Consult) -> Chart | None:
                 "kind": kind,
             }
         )
-    ticks, missed = [], []
+    ticks: list[dict[str, Any]] = []
+    missed: list[dict[str, Any]] = []
     for c in given:
         assert c.start is not None
         if c.regimen is not None:
@@ -408,7 +409,7 @@ def plane_chart(consult: Consult) -> Chart | None:
     for i, p in enumerate(consult.pairs):
         # the line is cut where it leaves the picture, so that its name stays in sight
         slope = p.rate_mg_per_day / p.level_mg_per_L
-        ends = [k for k in ((low - p.rate_mg_per_day) / slope, (high - p.rate_mg_per_day) / slope)]
+        ends = ((low - p.rate_mg_per_day) / slope, (high - p.rate_mg_per_day) / slope)
         first, last = max(0.0, ends[0]), min(right, ends[1])
         if last > first:
             for order, k in enumerate((first, last)):
@@ -441,7 +442,7 @@ def plane_chart(consult: Consult) -> Chart | None:
             .mark_text(align="right", dx=-4, dy=12, fontSize=11)
             .encode(x=x, y=y, text="name:N")
         )
-    said_rates = []
+    said_rates: list[str] = []
     seen: set[float] = set()
     for s in (*[t for t in consult.table if t.present], *consult.proposed):
         rate = s.forecast.rate_mg_per_day
@@ -449,8 +450,8 @@ def plane_chart(consult: Consult) -> Chart | None:
             continue
         seen.add(round(rate, 3))
         word = "present dose" if s.present else "proposed dose"
-        row = {"km": right, "vmax": rate, "name": f"{word}, {show(rate, 'mg/day', 4)}: no steady state below"}
-        said_rates.append(row["name"])
+        said_rates.append(f"{word}, {show(rate, 'mg/day', 4)}: no steady state below")
+        row = {"km": right, "vmax": rate, "name": said_rates[-1]}
         base = alt.Chart(_data([row]))
         layers.append(base.mark_rule(color=RED, strokeDash=[5, 3] if s.present else [1, 2]).encode(y=y))
         layers.append(base.mark_text(align="right", dx=-4, dy=-6, fontSize=10).encode(x=x, y=y, text="name:N"))
@@ -492,7 +493,9 @@ def regimens_chart(consult: Consult, shown: Sequence[Shown]) -> Chart | None:
     same = all(
         abs(s.taken.steady.high - s.forecast.steady.high) < 1e-9 or s.taken is s.forecast for s in unique.values()
     )
-    rows, order, said = [], [], []
+    rows: list[dict[str, Any]] = []
+    order: list[str] = []
+    said: list[str] = []
     for s in unique.values():
         mark = "present" if s.present else "not offered" if not s.offered else "proposed" if s.proposed else ""
         name = f"{mark + ': ' if mark else ''}{short_words(s.words)}"
@@ -597,7 +600,7 @@ def narrowing_chart(consult: Consult) -> Chart | None:
     found = consult.plan.next_level if consult.plan is not None else None
     if found is None or not found.draws:
         return None
-    rows = []
+    rows: list[dict[str, Any]] = []
     for d in found.draws:
         kind = "proposed" if d is found.chosen else "early safety level" if d is found.safety else "possible"
         name = ""

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import json
-from datetime import datetime, timezone
+from datetime import UTC, datetime
 from importlib import resources
 from typing import Any
 
@@ -48,15 +48,20 @@ def _charts(found: tuple[Chart, ...], inputs: dict[str, str], width: int) -> lis
     return rows
 
 
-def compile_pdf(template: str, inputs: dict[str, str], sizes: tuple[str, ...]) -> bytes:
-    """Template and data -> PDF bytes, at the largest size at which page one is one page."""
+def compile_pdf(
+    template: str, inputs: dict[str, str], sizes: tuple[str, ...], moment: datetime | None = None
+) -> bytes:
+    """Template and data -> PDF bytes, at the largest size at which page one is one page.
+
+    moment: stamped into the file; the date of the results where not given, so that the bytes repeat.
+    """
     source = resources.files("pkcalc.note.templates").joinpath(template).read_bytes()
     fonts = typst.Fonts(include_system_fonts=False, include_embedded_fonts=True)
-    moment = datetime.fromisoformat(RESULTS_DATE).replace(tzinfo=timezone.utc)
+    stamp = (moment or datetime.fromisoformat(RESULTS_DATE)).replace(tzinfo=UTC)
     for size in sizes:
         compiler = typst.Compiler(source, font_paths=fonts, sys_inputs={**inputs, "size": size})
         if json.loads(compiler.query("<annex-page>", field="value")) in ([2], []):
-            found = compiler.compile(source, format="pdf", pdf_standards=["ua-1"], timestamp=moment)
+            found = compiler.compile(source, format="pdf", pdf_standards=["ua-1"], timestamp=stamp)
             assert isinstance(found, bytes)
             return found
     raise PkcalcError("The first page of the note does not fit on one page; nothing was printed.")
