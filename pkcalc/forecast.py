@@ -79,7 +79,8 @@ def forecast_rates(
 ) -> tuple[Forecast, ...]:
     """`forecast_rate` for many dose rates at once.
 
-    present_mg_per_L: today's level, one for all, or one per draw (of all, or of `fewer_draws`); the way to the steady level begins there.
+    present_mg_per_L: today's level, one for all, or one per draw (of all, or of `fewer_draws`); the
+    way to the steady level begins there.
     """
     rates = np.asarray(rates_mg_per_day, dtype=np.float64)
     vmax, km, weights = estimate.vmax_mg_per_day, estimate.km_mg_per_L, estimate.weights
@@ -146,18 +147,14 @@ def bands(values: Floats, weights: Floats) -> tuple[Band, ...]:
         place = np.clip(p * n - 0.5, 0, n - 1)
         low = int(place)
         high = min(low + 1, n - 1)
-        # as `weighted_quantile`: between the mid-points of neighbours, and no steady state past the last finite
+        # as `weighted_quantile`: between the mid-points of neighbours, no steady state past the last finite one
         last = np.maximum(finite - 1, 0)
         rows = np.arange(len(values))
         a, b = ordered[rows, np.minimum(low, last)], ordered[rows, np.minimum(high, last)]
-        value = a + (b - a) * (place - low if high > low else 0.0) if finite.all() else _between(a, b, place - low)
-        found.append(np.where((p * n > finite) & (finite < n) | (finite == 0), np.inf, value))
+        never = ((place > last) & (finite < n)) | (finite == 0)
+        a, b = np.where(never, 0.0, a), np.where(never, 0.0, b)
+        found.append(np.where(never, np.inf, a + (b - a) * (place - low)))
     return tuple(Band(float(m), float(a), float(b)) for m, a, b in zip(*found, strict=True))
-
-
-def _between(a: Floats, b: Floats, part: float) -> Floats:
-    with np.errstate(invalid="ignore"):
-        return np.where(np.isfinite(a) & np.isfinite(b), a + (b - a) * part, np.inf)
 
 
 @dataclass(frozen=True)

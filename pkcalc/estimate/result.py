@@ -80,7 +80,7 @@ def weighted_quantile(values: Floats, weights: Floats, probabilities: Floats) ->
     finite = np.isfinite(sorted_values)
     if not finite.any():
         return np.full(len(probabilities), np.inf)
-    last = mid[finite][-1] + 0.5 * sorted_weights[finite][-1]
+    last = mid[finite][-1]  # past it a quantile lies between a level and no steady state: no level is named
     result = np.interp(probabilities, mid[finite], sorted_values[finite])
     return np.where((probabilities > last) & ~finite.all(), np.inf, result)
 

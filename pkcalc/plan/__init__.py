@@ -314,8 +314,8 @@ def _lines(setting: Setting, shelf: ShelfInUse, share: float, taken_words: str) 
         level = s.forecast.steady.median
         to = f"{show(level, 'mg/L')}" if level != float("inf") else "no steady state"
         lines.append(
-            f"Largest step: {show(s.step_mg_per_day, 'mg/day')} of active drug ({s.words}), an upper bound, not advice. "
-            f"In this patient it would lead to {to} (median, every dose taken), with a chance of "
+            f"Largest step: {show(s.step_mg_per_day, 'mg/day')} of active drug ({s.words}), an upper bound, not "
+            f"advice. In this patient it would lead to {to} (median, every dose taken), with a chance of "
             f"{percent(s.forecast.above_critical)} above {show(setting.goal.critical_mg_per_L, 'mg/L')} or of no "
             "steady state."
         )

@@ -8,6 +8,7 @@ from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, field, replace
+from itertools import pairwise
 
 import numpy as np
 from numpy.typing import NDArray
@@ -237,8 +238,8 @@ def _judge(c: Candidate, s: Setting) -> Candidate:
             )
         else:
             why.append(
-                f"The level is high today: at the next feasible draw, in {show(s.draw_days, 'days')}, the chance of a level "
-                f"{above} is still {percent(c.danger)}, above the limit of {percent(limit)}."
+                f"The level is high today: at the next feasible draw, in {show(s.draw_days, 'days')}, the chance of a "
+                f"level {above} is still {percent(c.danger)}, above the limit of {percent(limit)}."
             )
     if c.rate_mg_per_day > s.largest_mg_per_day * (1 + 1e-9):
         why.append(
@@ -294,7 +295,7 @@ def shown(
         # one regimen, the simplest, for each of as many neighbourhoods as there is room; nearer steps near the centre
         edges = np.linspace(low, high, room + 1)
         kept = []
-        for a, b in zip(edges, edges[1:], strict=False):
+        for a, b in pairwise(edges):
             near = [c for c in rest if a <= c.rate_mg_per_day < b or (b == edges[-1] and c.rate_mg_per_day == b)]
             if near:
                 kept.append(min(near, key=_plainness))

@@ -185,8 +185,8 @@ def next_level(asked: Asked) -> NextLevel | None:
     rising = bool(np.median(target) >= np.median(np.log(np.maximum(start, 1e-6))))
     safety, why_safety = _safety(asked, draws, chosen, rate)
     why = [
-        f"A level on day {show_number(chosen.day, 2)} is expected to narrow the forecast of the steady level from a spread "
-        f"of {_times(before)} to {_times(chosen.spread)} (one standard deviation); waiting until day "
+        f"A level on day {show_number(chosen.day, 2)} is expected to narrow the forecast of the steady level from a "
+        f"spread of {_times(before)} to {_times(chosen.spread)} (one standard deviation); waiting until day "
         f"{show_number(draws[-1].day, 2)} would give {_times(draws[-1].spread)}. It is the first draw within "
         f"{show_number(100 * WITHIN)} % of the best in {HORIZON_DAYS} days.",
         *why_safety,
@@ -291,12 +291,13 @@ def _meaning(settled: Band, *, rising: bool) -> str:
         return "No level on this regimen can be read as a steady one: it would go on rising."
     if not np.isfinite(settled.high):
         return (
-            f"A level means what it seems to mean from about day {show_number(settled.median, 2)} (90 % of the way, median); "
-            "in part of the forecasts it never settles, so an early level must not be read as the plateau."
+            f"A level means what it seems to mean from about day {show_number(settled.median, 2)} (90 % of the way, "
+            "median); in part of the forecasts it never settles, so an early level must not be read as the plateau."
         )
     return (
-        f"A level means what it seems to mean (90 % of the way) from about day {show_number(settled.median, 2)}, surely "
-        f"only from day {show_number(settled.high, 2)}; earlier it reads {'lower' if rising else 'higher'} than the plateau will be."
+        f"A level means what it seems to mean (90 % of the way) from about day {show_number(settled.median, 2)}, "
+        f"surely only from day {show_number(settled.high, 2)}; earlier it reads {'lower' if rising else 'higher'} than "
+        "the plateau will be."
     )
 
 

@@ -103,8 +103,8 @@ def pause(case: Case, now: Today, setting: Setting, every: Sequence[Candidate]) 
         late = bands(still_absorbing(few, start, to, now)[None, :], few.weights)[0]
         total = sum(d.amount_mg for d in now.still_absorbed)
         lines.append(
-            f"{show(total, 'mg')} of active drug was taken so lately that part of it is still to be absorbed; the pause "
-            "counts it in."
+            f"{show(total, 'mg')} of active drug was taken so lately that part of it is still to be absorbed; the "
+            "pause counts it in."
         )
     largest = (
         setting.profile.loading.oral.largest_part_mg

@@ -48,7 +48,8 @@ class Today:
     """Where the patient stands when the plan begins.
 
     moment: clock time, None in a case without one. level_mg_per_L: per draw of `fewer_draws`, working
-    basis; None without any level. words: how it was found. still_absorbed: oral doses of which something may still reach the blood, with
+    basis; None without any level. words: how it was found. still_absorbed: oral doses of which something may
+    still reach the blood, with
     times in days from now (0 or before). measured_mg_per_L: the latest level on the working basis.
     """
 
@@ -85,7 +86,7 @@ def today(
     observations: Sequence[Observation],
     history: History | None,
 ) -> Today:
-    """Today's level, from what the record and its levels say, where the estimate comes from them; else the latest level.
+    """Today's level, from the record and its levels where the estimate comes from them; else the latest level.
 
     estimate: its true elimination (every dose taken).
     """

@@ -22,8 +22,8 @@ NEAR = 0.10
 class Switch:
     """The nearest regimen of another form.
 
-    exact_labelled_mg: labelled mg/day that would be equal. change_percent: of the active amount as dispensed. steady: on
-    the central line; steady_low, steady_high: median at the two ends of how much of the form reaches the body. lines:
+    exact_labelled_mg: labelled mg/day that would be equal. change_percent: of the active amount as dispensed.
+    steady: on the central line; steady_low, steady_high: median at the two ends of how much of the form reaches the body. lines:
     concentration, salt and tube in words.
     """
 
@@ -89,17 +89,16 @@ def _lines(made: Dispensable, form_id: str, from_forms: Sequence[str], profile: 
     form = profile.forms[form_id]
     lines = []
     for p in made.products:
-        lines.append(
-            f"{profile.products[p].words[0].upper()}{profile.products[p].words[1:]}: {profile.products[p].strength_words}."
-        )
+        product = profile.products[p]
+        lines.append(f"{product.words[0].upper()}{product.words[1:]}: {product.strength_words}.")
     for other in from_forms:
         before = profile.forms[other]
         if before.salt_factor != form.salt_factor:
             ratio = form.salt_factor / before.salt_factor - 1.0
             more = "more" if ratio > 0 else "less"
             lines.append(
-                f"The same labelled amount of {form.words} holds {show_number(100 * abs(ratio), 2)} % {more} active drug "
-                f"than of {before.words} (salt factors {show_number(form.salt_factor)} and "
+                f"The same labelled amount of {form.words} holds {show_number(100 * abs(ratio), 2)} % {more} active "
+                f"drug than of {before.words} (salt factors {show_number(form.salt_factor)} and "
                 f"{show_number(before.salt_factor)})."
             )
         if before.amount_unit != form.amount_unit:
@@ -107,12 +106,12 @@ def _lines(made: Dispensable, form_id: str, from_forms: Sequence[str], profile: 
     low, high = form.bioavailability_range
     if low != high:
         lines.append(
-            f"How much reaches the body is uncertain ({show(100 * low, '%')} to {show(100 * high, '%')}): measure again "
-            "after the change."
+            f"How much reaches the body is uncertain ({show(100 * low, '%')} to {show(100 * high, '%')}): measure "
+            "again after the change."
         )
     if TUBE in form.routes:
         lines.append(
-            "Down a feeding tube with running feeds much less may be absorbed: hold feeds around the dose, the same way "
-            "every day, and measure again after any change of feeds."
+            "Down a feeding tube with running feeds much less may be absorbed: hold feeds around the dose, the same "
+            "way every day, and measure again after any change of feeds."
         )
     return tuple(lines)
