@@ -18,13 +18,14 @@ from typing import Any
 import numpy as np
 
 from pkcalc.case import Albumin, Case, label_looks_like_identifier
-from pkcalc.clock import show_date
+from pkcalc.clock import show_date, show_time
 from pkcalc.drugs.profile import Profile, load_profile
 from pkcalc.errors import BLOCKABLE, Caution, DrugFileError
 from pkcalc.estimate.pair import SteadyPair
 from pkcalc.estimate.result import Estimate
 from pkcalc.forecast import Forecast, Goal
 from pkcalc.levels import Observation, adherence, measured_free_fraction, present_level, timing
+from pkcalc.plan.projection import Projection
 from pkcalc.site import Site
 from pkcalc.steadiness import Settling
 from pkcalc.units import show, show_number
@@ -60,6 +61,8 @@ class State:
     estimate: Estimate | None = None
     goal: Goal | None = None
     regimens: Sequence[ShownRegimen] = ()
+    disagreements: Sequence[str] = ()
+    projection: Projection | None = None
 
 
 Words = dict[str, str]
@@ -81,6 +84,79 @@ def percent(share: float) -> str:
     return f"{show_number(100 * share, 2)} %"
 
 
+def _always(s: State, p: Mapping[str, Any]) -> list[Words]:
+    return [{}]
+
+
+def _scope_is(s: State, p: Mapping[str, Any]) -> list[Words]:
+    """Speaks for drugs of one scope; marked: only for demonstrations (true), or only for all other cases (false)."""
+    profile = s.profile
+    if profile.scope != p["scope"] or p.get("marked") not in (None, s.case.demonstration is not None):
+        return []
+    return [{"drug": profile.name, "reason": profile.scope_reason, "authority": profile.authority}]
+
+
+def _dialysis_given(s: State, p: Mapping[str, Any]) -> list[Words]:
+    said = [
+        f"{show(x.clearance_L_per_day / 1.44, 'mL/min')} from {show_time(x.start)} "
+        + (f"to {show_time(x.end)}" if x.end is not None else "on")
+        for x in s.case.dialysis
+    ]
+    return [{"sessions": "; ".join(said)}] if said else []
+
+
+def _dialysis_clearance_assumed(s: State, p: Mapping[str, Any]) -> list[Words]:
+    known = s.profile.dialysis
+    if known is None or not any(x.assumed for x in s.case.dialysis):
+        return []
+    low, high = (show_number(x / 1.44) for x in known.range_L_per_day)
+    taken = show(known.clearance_L_per_day / 1.44, "mL/min")
+    return [{"clearance": taken, "low": low, "high": f"{high} mL/min"}]
+
+
+def _climbs(s: State, p: Mapping[str, Any]) -> list[Words]:
+    """A rate above Vmax: the level climbs for as long as it runs."""
+    if s.projection is None or s.estimate is None:
+        return []
+    vmax = show(s.estimate.point.vmax_mg_per_day / 24, "mg/h")
+    when = " once dialysis has stopped" if s.case.dialysis else ""
+    return [
+        {
+            "regimen": path.words[:1].upper() + path.words[1:],
+            "rate": show(path.rate_mg_per_day / 24, "mg/h"),
+            "vmax": vmax,
+            "when": when,
+            "climb": show(path.climb_mg_per_L_per_h, "mg/L in each hour", 2),
+        }
+        for path in s.projection.paths
+        if path.climb_mg_per_L_per_h is not None
+    ]
+
+
+def _projected_too_high(s: State, p: Mapping[str, Any]) -> list[Words]:
+    """The chance of a critical level is above the site's limit: by the time of the next level (the later one), or
+    later, if the rate ran on unchanged (by: "next level" or "later")."""
+    if s.projection is None or s.goal is None:
+        return []
+    found = []
+    for path in s.projection.paths:
+        late = (s.profile.sampling.repeat_h or (24.0, 24.0))[1]
+        over = [m for m in path.moments if m.above_critical > s.site.stop_chance]
+        if not over or (over[0].hours <= late) != (p["by"] == "next level"):
+            continue
+        worst = over[0]
+        found.append(
+            {
+                "regimen": path.words[:1].upper() + path.words[1:],
+                "chance": percent(worst.above_critical),
+                "hours": show(worst.hours, "h"),
+                "critical": show(s.goal.critical_mg_per_L, "mg/L"),
+                "limit": percent(s.site.stop_chance),
+            }
+        )
+    return found
+
+
 def _answered(s: State, p: Mapping[str, Any]) -> list[Words]:
     return [{}] if s.case.answer(p["question"]) == p["answer"] else []
 
@@ -96,6 +172,11 @@ def _younger_than(s: State, p: Mapping[str, Any]) -> list[Words]:
 def _unconfirmed_lines(s: State, p: Mapping[str, Any]) -> list[Words]:
     lines = [f"dose line {c.index + 1}" for c in s.case.courses if not c.counts_as_given]
     return [{"lines": ", ".join(lines).capitalize()}] if lines else []
+
+
+def _extracorporeal(s: State, p: Mapping[str, Any]) -> list[Words]:
+    """Silent where the sessions stand in the record and their clearance is known."""
+    return [{}] if s.case.answer("extracorporeal") == "yes" and not s.case.dialysis else []
 
 
 def _answered_both(s: State, p: Mapping[str, Any]) -> list[Words]:
@@ -213,7 +294,11 @@ def _total_without_albumin(s: State, p: Mapping[str, Any]) -> list[Words]:
 
 
 def _albumin_corrected(s: State, p: Mapping[str, Any]) -> list[Words]:
-    hits = [o for o in s.observations if o.binding_log_sd > 0 and o.level.kind == "total"]
+    hits = [
+        o
+        for o in s.observations
+        if o.level.kind == "total" and o.working_mg_per_L > p["limit"] * o.level.reported_mg_per_L and o.readable
+    ]
     if not hits:
         return []
     albumin = hits[0].level.albumin or s.case.albumin
@@ -370,8 +455,9 @@ def _vmax_outside(s: State, p: Mapping[str, Any]) -> list[Words]:
     value = s.estimate.point.vmax_mg_per_day / weight
     if low <= value <= high:
         return []
-    unit = "mg/kg/day"
-    return [{"value": show(value, unit), "low": show_number(low), "high": show(high, unit)}]
+    per = 24 if s.profile.time_unit == "h" else 1
+    unit = "mg/kg/h" if per == 24 else "mg/kg/day"
+    return [{"value": show(value / per, unit), "low": show_number(low / per), "high": show(high / per, unit)}]
 
 
 def _km_outside(s: State, p: Mapping[str, Any]) -> list[Words]:
@@ -444,17 +530,26 @@ def _at_or_above_vmax(s: State, p: Mapping[str, Any]) -> list[Words]:
     ]
 
 
+def _second_way_disagrees(s: State, p: Mapping[str, Any]) -> list[Words]:
+    return [{"rows": "; ".join(s.disagreements)}] if s.disagreements else []
+
+
 PREDICATES: dict[str, Predicate] = {
     "albumin_after_infusion": _albumin_after_infusion,
     "albumin_by_bcg": _albumin_by_bcg,
     "albumin_corrected": _albumin_corrected,
     "albumin_old": _albumin_old,
+    "always": _always,
     "answered": _answered,
     "answered_both": _answered_both,
     "at_or_above_vmax": _at_or_above_vmax,
     "chance_of_negative_km_above": _chance_of_negative_km_above,
+    "climbs": _climbs,
     "danger_above_stop": _danger_above_stop,
     "danger_above_warn": _danger_above_warn,
+    "dialysis_clearance_assumed": _dialysis_clearance_assumed,
+    "dialysis_given": _dialysis_given,
+    "extracorporeal": _extracorporeal,
     "free_fraction_measured": _free_fraction_measured,
     "gel_tube": _gel_tube,
     "increase_on_doubt": _increase_on_doubt,
@@ -472,7 +567,10 @@ PREDICATES: dict[str, Predicate] = {
     "not_trusted": _not_trusted,
     "overlapping": _overlapping,
     "pair_refused": _pair_refused,
+    "projected_too_high": _projected_too_high,
     "same_time_other_value": _same_time_other_value,
+    "scope_is": _scope_is,
+    "second_way_disagrees": _second_way_disagrees,
     "set_aside_for": _set_aside_for,
     "settling_unknown": _settling_unknown,
     "start_without_hla": _start_without_hla,

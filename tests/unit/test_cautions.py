@@ -76,8 +76,8 @@ def test_a_missing_albumin_is_warned_about() -> None:
 
 
 def test_a_corrected_level_is_warned_about() -> None:
-    assert "albumin-corrected" in said(run_consult(plain(albumin={"value": "44 g/L"})))
-    assert "albumin-corrected" not in said(run_consult(plain(albumin={"value": "45 g/L"})))
+    assert "albumin-corrected" in said(run_consult(plain(albumin={"value": "40 g/L"})))
+    assert "albumin-corrected" not in said(run_consult(plain(albumin={"value": "41 g/L"})))
 
 
 def test_a_gel_tube_is_warned_about() -> None:
