@@ -128,6 +128,8 @@ def run_consult(case: Case, site: Site | str | Path | None = None) -> Consult:
         chosen, why = _choose(found.by_method, case)
     if "estimate" in stops:
         chosen, why = None, ""
+    if chosen is None and _first_doses(case, population, stops):
+        chosen, why = population, "the population alone: no level could be learned from yet"
     state = replace(state, estimate=chosen)
 
     scale = lab_scale(case, profile, local, case.albumin, observations)
@@ -194,6 +196,8 @@ def _checked_twice(consult: Consult, state: State) -> Consult:
     rows = twoways.compare(
         consult.case,
         consult.profile,
+        consult.site,
+        observations=consult.observations,
         estimate=consult.chosen,
         pair=consult.estimates.get(two_level.METHOD),
         pairs=consult.pairs,
@@ -225,6 +229,12 @@ def _checked_twice(consult: Consult, state: State) -> Consult:
         blocked=caution_engine.blocked(said),
         second_way=rows,
     )
+
+
+def _first_doses(case: Case, population: Estimate | None, stops: frozenset[str]) -> bool:
+    """True before any level, where first doses or a load are asked for: then only the population can speak."""
+    asked = bool(case.proposed or case.file.plan.load)
+    return asked and not case.levels and population is not None and not {"estimate", "projection"} & stops
 
 
 def _projected(

@@ -7,7 +7,7 @@ from collections.abc import Sequence
 import numpy as np
 
 from pkcalc import formulas
-from pkcalc.case import QUESTIONS
+from pkcalc.case import QUESTIONS, EarlierForecast
 from pkcalc.cautions import State, percent
 from pkcalc.clock import show_time
 from pkcalc.consult import Consult, Shown, level_data, record_spread
@@ -18,6 +18,7 @@ from pkcalc.estimate import posterior
 from pkcalc.estimate.lines import LineFailure
 from pkcalc.estimate.result import Band, Estimate
 from pkcalc.forecast import bands
+from pkcalc.note import hours
 from pkcalc.note.front import chosen_candidate, forecast_lines, spoken_for
 from pkcalc.note.words import (
     FORECAST_HEADS,
@@ -34,7 +35,7 @@ from pkcalc.note.words import (
     short_band,
     signed_percent,
 )
-from pkcalc.note.workings import machine_only, workings
+from pkcalc.note.workings import REPRESENTATIVE, machine_only, workings
 from pkcalc.plan.loading import Load
 from pkcalc.sources import source
 from pkcalc.units import show, show_number
@@ -49,6 +50,7 @@ def annex(consult: Consult) -> tuple[Section, ...]:
         *_then_and_now(consult),
         *_estimate(consult),
         *_regimens(consult),
+        *hours.sections(consult),
         *_acute(consult),
         *_next(consult),
         *_populations(consult),
@@ -72,6 +74,7 @@ def _patient(consult: Consult) -> Section:
             + (f" (method {albumin.method})" if albumin.method not in ("unknown", "other") else "")
         )
     lines = [sentence("; ".join(parts))]
+    asked = consult.profile.questions or tuple(QUESTIONS)
     for key, words in QUESTIONS.items():
         answer = case.context.get(key)
         if answer is None or answer.answer == "unknown":
@@ -80,7 +83,7 @@ def _patient(consult: Consult) -> Section:
         if answer.since is not None:
             more.append(f"since {show_time(answer.since)}")
         lines.append(f"{words} {answer.answer}" + (f" ({'; '.join(more)})" if more else ""))
-    unknown = [w for k, w in QUESTIONS.items() if case.answer(k) in ("unknown", "not stated")]
+    unknown = [w for k, w in QUESTIONS.items() if k in asked and case.answer(k) in ("unknown", "not stated")]
     if unknown:
         lines.append("Not stated or unknown: " + " ".join(unknown))
     if consult.prior is not None:
@@ -117,12 +120,16 @@ def _doses(consult: Consult) -> Section:
             )
         else:
             text = f"infusion {course.typed.rate} {profile.forms[course.rate_form].words}"
-            if course.start is not None and course.end is not None:
-                text += f" from {show_time(course.start)} to {show_time(course.end)}"
+            if course.start is not None:
+                text += f" from {show_time(course.start)} " + (f"to {show_time(course.end)}" if course.end else "on")
         given = f"; given by {course.given_by}" if course.given_by != "unknown" else ""
         lines.append(
             head + text + given + ("" if course.counts_as_given else " (not confirmed as given; left out)") + "."
         )
+    for session in case.dialysis:
+        until = f"to {show_time(session.end)}" if session.end is not None else "on"
+        said = f"{show(session.clearance_L_per_day / 1.44, 'mL/min')}" + (", assumed" if session.assumed else "")
+        lines.append(f"Dialysis session {session.index + 1}: from {show_time(session.start)} {until}, clearance {said}.")
     return Section("What was given", tuple(lines))
 
 
@@ -180,24 +187,22 @@ def _then_and_now(consult: Consult) -> list[Section]:
     return [Section("What was forecast then, and what came", (), Table(heads, tuple(rows)))]
 
 
-def _then(then: object) -> str:
-    band = Band(
-        getattr(then, "median_mg_per_L"),
-        getattr(then, "low_mg_per_L"),
-        getattr(then, "high_mg_per_L"),  # noqa: B009
-    )
+def _then(then: EarlierForecast) -> str:
+    band = Band(then.median_mg_per_L, then.low_mg_per_L, then.high_mg_per_L)
     return short_band(band)
 
 
-def estimate_lines(estimate: Estimate) -> list[str]:
-    """Vmax and Km with their intervals, in words."""
+def estimate_lines(estimate: Estimate, time_unit: str = "day") -> list[str]:
+    """Vmax and Km with their intervals, in words. time_unit: "h" where Vmax is told per hour."""
     vmax, km = estimate.summary["vmax_mg_per_day"], estimate.summary["km_mg_per_L"]
     point = estimate.point
+    per, rate = (24.0, "mg/h") if time_unit == "h" else (1.0, "mg/day")
     lines = [
         f"Method: {estimate.method}.",
-        f"Vmax {show(point.vmax_mg_per_day, 'mg/day', 4)} of active drug, Km {show(point.km_mg_per_L, 'mg/L')} "
+        f"Vmax {show(point.vmax_mg_per_day / per, rate, 4)} of active drug, Km {show(point.km_mg_per_L, 'mg/L')} "
         f"({point.kind}).",
-        f"Vmax median {show(vmax.median, 'mg/day')}, 90 % interval {show_number(vmax.low)} to {show_number(vmax.high)}; "
+        f"Vmax median {show(vmax.median / per, rate)}, 90 % interval {show_number(vmax.low / per)} to "
+        f"{show_number(vmax.high / per)}; "
         f"Km median {show(km.median, 'mg/L')}, 90 % interval {show_number(km.low)} to {show_number(km.high)}; "
         f"correlation {_signed(estimate.correlation)}.",
     ]
@@ -232,7 +237,7 @@ def _signed(value: float) -> str:
 def _estimate(consult: Consult) -> list[Section]:
     lines: list[str] = []
     if consult.chosen is not None:
-        lines += estimate_lines(consult.chosen)
+        lines += estimate_lines(consult.chosen, consult.profile.time_unit)
         lines.append(f"Chosen: {consult.chosen_why}.")
         for other in consult.estimates.values():
             if other is not consult.chosen:
@@ -615,11 +620,11 @@ def _workings(consult: Consult) -> list[Section]:
     lines: list[str] = []
     for name, steps in found.groups:
         lines.append(f"{name}.")
-        if name == "With the representative pair":
-            lines += list(found.said)
+        if name == REPRESENTATIVE:
+            lines += [x for x in found.said if x]
         lines += [f"   {s.line}" for s in steps]
     if found.representative is None:
-        lines += list(found.said)
+        lines += [x for x in found.said if x]
     lines += machine_only(consult)
     if lines:
         sections.append(Section("Workings", tuple(lines)))

@@ -12,7 +12,10 @@ from pkcalc.dosing import Regimen
 from pkcalc.errors import CannotEstimate, CaseError
 from pkcalc.estimate.result import Band, Estimate
 from pkcalc.forecast import Forecast
-from pkcalc.note.document import DEFERS, DEMONSTRATION, compose
+from pkcalc.note import hours
+from pkcalc.note.document import DEFERS, compose
+from pkcalc.note.offers import plan_data
+from pkcalc.note.words import demonstration_words
 
 NOTE_VERSION = 1
 
@@ -89,7 +92,7 @@ def note_data(consult: Consult) -> dict[str, Any]:
     return {
         "pkcalc_note": NOTE_VERSION,
         "outcome": "stop" if consult.stopped else "done",
-        "demonstration": DEMONSTRATION if case.demonstration is not None else "",
+        "demonstration": demonstration_words(consult),
         "drug": case.drug,
         "cautions": [c.as_dict() for c in consult.cautions],
         "blocked": sorted(consult.blocked),
@@ -128,8 +131,10 @@ def note_data(consult: Consult) -> dict[str, Any]:
         "estimates": {name: estimate_data(e) for name, e in consult.estimates.items()},
         "refusals": dict(consult.refusals),
         "chosen": {"method": consult.chosen.method, "why": consult.chosen_why} if consult.chosen else None,
+        "projection": hours.data(consult),
         "proposed": [shown_data(s) for s in consult.proposed],
         "table": [shown_data(s) for s in consult.table],
+        "plan": plan_data(consult.plan) if consult.plan is not None else None,
         "dose_rate_for_aim_active_mg_per_day": band_data(consult.aim_rate) if consult.aim_rate else None,
         "workings": [line for s in compose(consult).sections if s.title == "Workings" for line in s.lines],
         "version": __version__,

@@ -18,6 +18,7 @@ from pkcalc.note.words import (
     Section,
     Table,
     days_words,
+    demonstration_words,
     forecast_row,
     level_words,
 )
@@ -64,7 +65,7 @@ def compose(consult: Consult) -> Document:
     case = consult.case
     return Document(
         title=f"Consult note: {consult.profile.name}",
-        demonstration=DEMONSTRATION if case.demonstration is not None else "",
+        demonstration=demonstration_words(consult),
         urgent=URGENT,
         cautions=consult.cautions,
         front=page_one(consult),

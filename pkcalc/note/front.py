@@ -11,12 +11,13 @@ from pkcalc.cautions import percent
 from pkcalc.clock import show_time
 from pkcalc.consult import Consult, Shown
 from pkcalc.levels import Observation
+from pkcalc.note import hours
 from pkcalc.note.words import (
-    DEMONSTRATION,
     VALID_UNTIL,
     Section,
     as_reported,
     days_words,
+    demonstration_words,
     edge,
     level_words,
     regimen_words,
@@ -52,10 +53,14 @@ def _question(consult: Consult) -> tuple[str, ...]:
         lines.append(sentence(case.question))
     lines.append(
         f"Target {show_number(goal.low_mg_per_L)} to {show_number(goal.high_mg_per_L)} mg/L, aim "
-        f"{show(goal.aim_mg_per_L, 'mg/L')} (total at normal binding; {goal.origin}); critical from "
+        f"{show(goal.aim_mg_per_L, 'mg/L')} ({_basis(consult)}; {goal.origin}); critical from "
         f"{show(goal.critical_mg_per_L, 'mg/L')}."
     )
     return tuple(lines)
+
+
+def _basis(consult: Consult) -> str:
+    return "total at normal binding" if consult.profile.binding is not None else consult.profile.target.basis
 
 
 _TOLD = (
@@ -78,17 +83,17 @@ def _state(consult: Consult) -> tuple[str, ...]:
         f"sex {patient.sex if patient.sex != 'unknown' else 'not stated'}",
         f"weight {patient.typed.get('weight', 'not stated')}"
         + (f" ({patient.weight_basis})" if patient.weight_kg and patient.weight_basis != "unknown" else ""),
-        f"albumin {case.albumin.typed.text}" if case.albumin else "albumin not stated",
     ]
+    if case.albumin is not None or consult.profile.binding is not None:
+        parts.append(f"albumin {case.albumin.typed.text}" if case.albumin else "albumin not stated")
     told = [f"{words} {case.answer(key)}" for key, words in _TOLD if case.answer(key) in ("yes", "no")]
-    missing = sum(case.answer(key) in ("unknown", "not stated") for key in QUESTIONS)
+    asked = consult.profile.questions or tuple(QUESTIONS)
+    missing = sum(case.answer(key) in ("unknown", "not stated") for key in asked)
     lines = [sentence("; ".join(parts))]
     if told:
         lines.append(sentence("; ".join(told)))
     if missing:
-        lines.append(
-            f"{missing} of {len(QUESTIONS)} context questions are not stated or unknown (listed in the annex)."
-        )
+        lines.append(f"{missing} of {len(asked)} context questions are not stated or unknown (listed in the annex).")
     return tuple(lines)
 
 
@@ -123,7 +128,13 @@ def verdict(consult: Consult) -> tuple[str, ...]:
         if value >= goal.critical_mg_per_L:
             place = "at or above the critical level"
         basis = (
-            f"{show(value, 'mg/L')} at normal binding, " if value != o.level.reported_mg_per_L else "at normal binding "
+            f"{show(value, 'mg/L')} at normal binding, "
+            if value != o.level.reported_mg_per_L
+            else "at normal binding "
+            if consult.profile.binding is not None
+            else f"{show(value, 'mg/L')}, "
+            if o.level.typed.label != "mg/L"
+            else ""
         )
         limit = {"below": " (below the limit stated)", "above": " (above the limit stated)", None: ""}[o.censored]
         lines = [f"{head}: {basis}{place}{limit}."]
@@ -140,7 +151,7 @@ def verdict(consult: Consult) -> tuple[str, ...]:
     if consult.chosen is not None and not consult.stopped:
         vmax, km = consult.chosen.summary["vmax_mg_per_day"], consult.chosen.summary["km_mg_per_L"]
         lines.append(
-            f"By {consult.chosen.method}: Vmax {level_words(vmax, 'mg/day')} of active drug, Km {level_words(km)}."
+            f"By {consult.chosen.method}: Vmax {hours.vmax_words(consult, vmax)} of active drug, Km {level_words(km)}."
         )
     return tuple(lines)
 
@@ -208,7 +219,9 @@ def _chosen(consult: Consult) -> tuple[str, ...]:
     case = consult.case
     words = case.file.chosen.words.strip() if case.file.chosen is not None else ""
     lines: list[str] = []
-    if consult.stopped or consult.plan is None:
+    if consult.projection is not None:
+        lines += hours.front_lines(consult, consult.projection)
+    elif consult.stopped or consult.plan is None:
         lines.append("No regimen can be forecast: see the stops.")
         if case.chosen is not None:
             lines.append(
@@ -238,6 +251,8 @@ def _chosen(consult: Consult) -> tuple[str, ...]:
 
 def _next_level(consult: Consult) -> tuple[str, ...]:
     plan, case = consult.plan, consult.case
+    if consult.projection is not None:
+        return hours.next_lines(consult, consult.projection)
     if plan is None:
         return ("No next level is planned by this note: see the stops.",)
     found = plan.next_level
@@ -260,8 +275,8 @@ def _next_level(consult: Consult) -> tuple[str, ...]:
 def paste_block(consult: Consult) -> tuple[str, ...]:
     """Plain ASCII, at most 25 lines, to paste into a record. Stops first; what does not fit is said to be missing."""
     lines: list[str] = []
-    if consult.case.demonstration is not None:
-        lines.append(DEMONSTRATION)
+    if demonstration_words(consult):
+        lines.append(demonstration_words(consult))
     lines.append(f"{consult.profile.name} level consult, pkcalc {__version__}, case {consult.case.hash}")
     stops = [c for c in consult.cautions if c.severity == "stop"]
     warnings = sum(c.severity == "warn" for c in consult.cautions)
@@ -272,7 +287,9 @@ def paste_block(consult: Consult) -> tuple[str, ...]:
     if o is not None:
         body.append(verdict(consult)[0])
     shown = spoken_for(consult)
-    if consult.stopped or shown is None:
+    if consult.projection is not None:
+        body += hours.paste_lines(consult, consult.projection)
+    elif consult.stopped or shown is None:
         body.append("No forecast was given." if consult.stopped else "No regimen to forecast.")
     else:
         label = (

@@ -46,6 +46,12 @@ class Section:
     table: Table | None = None
 
 
+def demonstration_words(consult: Consult) -> str:
+    """The banner of an invented case, and of every case of a drug that is here for teaching only."""
+    teaching = consult.profile.scope == "teaching only"
+    return DEMONSTRATION if teaching or consult.case.demonstration is not None else ""
+
+
 def level_words(band: Band, unit: str = "mg/L") -> str:
     """'15 mg/L (90 % interval 11 to 24)'; a bound without a steady state is said in words."""
     if not np.isfinite(band.median):
