@@ -287,6 +287,40 @@ def _molar(v: Values) -> Values:
     }
 
 
+def _typed_level(v: Values) -> Values:
+    mass = load_profile(v["drug"]).molar_mass_g_per_mol
+    return {"level": units.read(v["typed"], "level", "Level", molar_mass_g_per_mol=mass).value}
+
+
+def _strength(v: Values) -> Values:
+    return {"strength": load_profile(v["drug"]).products[v["product"]].mg_per_unit}
+
+
+def _load_volume(v: Values) -> Values:
+    product = load_profile(v["drug"]).products[v["product"]]
+    return {"volume": v["load"] * v["weight"] / product.mg_per_unit / 1000}
+
+
+def _rate_of_volume(v: Values) -> Values:
+    product = load_profile(v["drug"]).products[v["product"]]
+    return {"rate_per_weight": 24 * v["mL_per_kg_h"] * product.mg_per_unit}
+
+
+def _population_hold(v: Values) -> Values:
+    """The rate per kg that holds a level in a named population, with dialysis or without; and its volume."""
+    profile = load_profile(v["drug"])
+    prior = profile.populations[v["population"]].at(v["weight"], 40)
+    rate = formulas.dose_rate_for_level(
+        level_mg_per_L=v["level"],
+        vmax_mg_per_day=prior.vmax_mg_per_day,
+        km_mg_per_L=prior.km_mg_per_L,
+        linear_clearance_L_per_day=v.get("clearance", 0.0),
+    )
+    per_weight = float(rate) / v["weight"]
+    product = profile.products[v["product"]]
+    return {"rate_per_weight": per_weight, "mL_per_kg_h": per_weight / 24 / product.mg_per_unit}
+
+
 def _straight_line(v: Values) -> Values:
     from pkcalc.estimate.lines import straight_line
 
@@ -441,6 +475,30 @@ CALLS: dict[str, Call] = {
         dict.fromkeys(("vmax", "km", "km_inverse", "se_vmax", "se_km", "sigma"), "number"),
         _regression,
     ),
+    "typed_level": Call({"drug": "word", "typed": "word"}, {"level": "level"}, _typed_level),
+    "product_strength": Call({"drug": "word", "product": "word"}, {"strength": "strength"}, _strength),
+    "load_volume": Call(
+        {"drug": "word", "product": "word", "load": "amount per weight", "weight": "weight"},
+        {"volume": "volume"},
+        _load_volume,
+    ),
+    "rate_of_volume": Call(
+        {"drug": "word", "product": "word", "mL_per_kg_h": "number"},
+        {"rate_per_weight": "dose rate per weight"},
+        _rate_of_volume,
+    ),
+    "population_hold": Call(
+        {
+            "drug": "word",
+            "population": "word",
+            "product": "word",
+            "level": "level",
+            "weight": "weight",
+            "clearance": "clearance",
+        },
+        {"rate_per_weight": "dose rate per weight", "mL_per_kg_h": "number"},
+        _population_hold,
+    ),
     "molar_level": Call({"drug": "word", "level": "level"}, {"molar": "molar"}, _molar),
 }
 
@@ -458,7 +516,7 @@ _KEYS = {
     "unnoticed",
     "note",
 }
-_FACTORS = {**units.FACTORS, "number": {"": 1.0}, "molar": {"umol/L": 1.0}}
+_FACTORS = {**units.FACTORS, "number": {"": 1.0}, "molar": {"umol/L": 1.0, "mmol/L": 1000.0}, "strength": {"mg/mL": 1.0, "g/dL": 10.0}}
 _NUMBER = re.compile(r"-?[0-9][0-9,]*(?:\.[0-9]+)?")
 
 
