@@ -516,7 +516,12 @@ _KEYS = {
     "unnoticed",
     "note",
 }
-_FACTORS = {**units.FACTORS, "number": {"": 1.0}, "molar": {"umol/L": 1.0, "mmol/L": 1000.0}, "strength": {"mg/mL": 1.0, "g/dL": 10.0}}
+_FACTORS = {
+    **units.FACTORS,
+    "number": {"": 1.0},
+    "molar": {"umol/L": 1.0, "mmol/L": 1000.0},
+    "strength": {"mg/mL": 1.0, "g/dL": 10.0},
+}
 _NUMBER = re.compile(r"-?[0-9][0-9,]*(?:\.[0-9]+)?")
 
 
