@@ -13,6 +13,7 @@ import re
 from bisect import bisect_right
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
+from itertools import pairwise
 from typing import Literal, Protocol
 
 import numpy as np
@@ -20,7 +21,9 @@ from numpy.typing import NDArray
 
 from pkcalc.case import Case
 from pkcalc.drugs.profile import Profile
+from pkcalc.levels import Observation
 from pkcalc.record import Dose, Record
+from pkcalc.site import Site
 from pkcalc.units import show, show_number
 
 Floats = NDArray[np.float64]
@@ -279,7 +282,12 @@ def integrate(
     if record.start_mg is not None and record.before is None:
         state[:size] = record.start_mg
     amount, gone = np.zeros((size, len(grid))), np.zeros((size, len(grid)))
-    for a, b in zip(jumps[:-1], jumps[1:], strict=True):
+    # no step may pass over the whole of a quickly absorbed dose
+    widest = min(
+        [_STEP_DAY]
+        + [1.5 / d.absorption.ka_per_day + 0.5 * d.absorption.release_day for d in flow_in.doses if d.absorption]
+    )
+    for a, b in pairwise(jumps):
         for d in flow_in.pushes:
             if d.time_day == a:
                 state[:size] += d.amount_mg
@@ -292,7 +300,7 @@ def integrate(
             t_eval=np.append(grid[inside], b) if b not in grid[inside] else grid[inside],
             rtol=1e-4,
             atol=1e-2,
-            max_step=_STEP_DAY,
+            max_step=widest,
         )
         amount[:, inside], gone[:, inside] = found.y[:size, : len(inside)], found.y[size:, : len(inside)]
         state = found.y[:, -1].copy()
@@ -590,6 +598,27 @@ def again(text: str, kind: str, molar_mass_g_per_mol: float) -> float | None:
 def _add(rows: list[Row], what: str, first: float, second: float | None, unit: str) -> None:
     if second is not None:
         rows.append(Row(f"{what}, read again from the text", first, second, unit, EXACT_TOLERANCE))
+
+
+def binding_rows(observations: Sequence[Observation], case: Case, profile: Profile, site: Site) -> tuple[Row, ...]:
+    """Each corrected level at normal binding, by plain arithmetic on what was reported."""
+    binding = profile.binding
+    rows: list[Row] = []
+    if binding is None:
+        return ()
+    for o in observations:
+        level = o.level
+        if not o.readable or o.censored is not None or level.kind == "normalised":
+            continue
+        second = level.reported_mg_per_L
+        albumin = level.albumin or case.albumin
+        if level.kind == "free":
+            second = level.reported_mg_per_L / binding.free_fraction
+        elif albumin is not None:
+            bound = site.albumin_coefficient(binding) * (albumin.g_per_L / 10.0) + binding.constant
+            second = level.reported_mg_per_L / bound if bound < 1.0 else level.reported_mg_per_L
+        rows.append(Row(f"{o.name} at normal binding", o.working_mg_per_L, second, "mg/L", EXACT_TOLERANCE))
+    return tuple(rows)
 
 
 def text_rows(case: Case, profile: Profile) -> tuple[Row, ...]:

@@ -1,4 +1,4 @@
-"""What the first way found, laid before the second: gathers the numbers of a consult that `crosscheck` calculates again."""
+"""What the first way found, laid before the second: the numbers of a consult that `crosscheck` calculates again."""
 
 from __future__ import annotations
 
@@ -16,13 +16,17 @@ from pkcalc.estimate import pair as two_level
 from pkcalc.estimate.error_model import LevelData, RecordSpread
 from pkcalc.estimate.pair import SteadyPair
 from pkcalc.estimate.result import Estimate
+from pkcalc.levels import Observation
 from pkcalc.record import Record
+from pkcalc.site import Site
 
 
 def compare(
     case: Case,
     profile: Profile,
+    site: Site,
     *,
+    observations: Sequence[Observation],
     estimate: Estimate | None,
     pair: Estimate | None,
     pairs: Sequence[SteadyPair],
@@ -33,7 +37,7 @@ def compare(
     plan: planning.Plan | None,
 ) -> tuple[Row, ...]:
     """Every number of the consult that can be calculated a second way, both ways."""
-    rows = list(crosscheck.text_rows(case, profile))
+    rows = [*crosscheck.text_rows(case, profile), *crosscheck.binding_rows(observations, case, profile, site)]
     if pair is not None and pair.method == two_level.METHOD and len(pairs) == 2:
         rows += crosscheck.pair_rows(
             [p.rate_mg_per_day for p in pairs],
