@@ -844,6 +844,8 @@ def check_case(file: CaseFile) -> Case:
         check.say(
             "Plan, shelf", f'"{file.plan.shelf}" was given', ", ".join(profile.shelves), "Choose one of these shelves"
         )
+    elif file.plan.products:
+        _check_products(file.plan, profile, check)
     earlier = tuple(e for i, x in enumerate(file.forecast_then) if (e := _earlier(i, x, check, profile)) is not None)
     step = None
     if file.plan.largest_step:
@@ -887,6 +889,19 @@ def check_case(file: CaseFile) -> Case:
     if check.problems:
         raise CaseError(check.problems)
     return case
+
+
+def _check_products(plan: PlanFile, profile: Profile, check: _Check) -> None:
+    """Products named in the case stand on its shelf, each once, and only one strength of a kind that can be mixed up."""
+    on_shelf = profile.shelves[plan.shelf].products if plan.shelf else tuple(profile.products)
+    unknown = [p for p in plan.products if p not in on_shelf]
+    if unknown:
+        check.say("Plan, products", f'"{unknown[0]}" was given', ", ".join(on_shelf), "Choose from these products")
+    elif not plan.shelf:
+        check.say("Plan, products", "products without a shelf were given", "a shelf first", "Name the shelf in the plan")
+    groups = [g for p in plan.products if p in profile.products and (g := profile.products[p].exclusive_group)]
+    if len(groups) != len(set(groups)):
+        check.say("Plan, products", f"two strengths of the {groups[0]} were given", "one of them", "Take one out")
 
 
 def _profile(name: str) -> Profile:

@@ -11,7 +11,7 @@ from dataclasses import dataclass
 from pkcalc.case import Case
 from pkcalc.dosing import Regimen
 from pkcalc.drugs.profile import Profile
-from pkcalc.estimate.posterior import WHOLE_RECORD
+from pkcalc.estimate.posterior import BEFORE_ANY_LEVEL, WHOLE_RECORD
 from pkcalc.estimate.result import Estimate
 from pkcalc.forecast import Goal, two_lines
 from pkcalc.levels import LabScale, Observation, total_spread
@@ -118,7 +118,7 @@ def make(
     stops: what the cautions take away; with "regimens" among them nothing is offered, and the danger numbers stand.
     """
     share, taken_words = doses_missed(case, profile)
-    lines = two_lines(estimate, share, counted=estimate.method == WHOLE_RECORD)
+    lines = two_lines(estimate, share, counted=estimate.method in (WHOLE_RECORD, BEFORE_ANY_LEVEL))
     central, taken = lines.central, lines.taken
     now = today(case, taken, observations, history)
     shelf = shelf_in_use(case, profile, site)
@@ -302,6 +302,11 @@ def _hours(case: Case) -> dict[int, tuple[float, ...]]:
 
 def _lines(setting: Setting, shelf: ShelfInUse, share: float, taken_words: str) -> tuple[str, ...]:
     lines = list(shelf.sentences)
+    if setting.central.method == BEFORE_ANY_LEVEL:
+        lines.append(
+            "No level yet: every number here comes from the population alone and may be far off in one patient. "
+            "Take it as a start, and measure early."
+        )
     if share:
         lines.append(
             f"Two lines: the central forecast carries the past intake on ({taken_words}; {percent(share)} of doses "

@@ -23,8 +23,8 @@ class Switch:
     """The nearest regimen of another form.
 
     exact_labelled_mg: labelled mg/day that would be equal. change_percent: of the active amount as dispensed.
-    steady: on the central line; steady_low, steady_high: median at the two ends of how much of the form reaches the body. lines:
-    concentration, salt and tube in words.
+    steady: on the central line; steady_low, steady_high: median at the two ends of how much of the form reaches the
+    body. lines: concentration, salt and tube in words.
     """
 
     form: str

@@ -1,0 +1,224 @@
+"""The plan in JSON: every regimen of the shelf, loads, pause, switches, the next level; units in the keys."""
+
+from __future__ import annotations
+
+import math
+from typing import Any
+
+from pkcalc.dosing import Regimen
+from pkcalc.estimate.result import Band
+from pkcalc.forecast import Forecast
+from pkcalc.plan import Candidate, Plan
+from pkcalc.plan.loading import Load
+from pkcalc.plan.nextlevel import Draw, NextLevel
+from pkcalc.plan.pausing import Pause
+from pkcalc.plan.switching import Switch
+
+
+def _number(value: float) -> Any:
+    return float(f"{value:.6g}") if math.isfinite(value) else {"no_steady_state": True}
+
+
+def _days(value: float) -> Any:
+    return float(f"{value:.4g}") if math.isfinite(value) else {"never": True}
+
+
+def _band(band: Band | None) -> dict[str, Any] | None:
+    if band is None:
+        return None
+    return {
+        "median": _number(band.median),
+        "low_5_percent": _number(band.low),
+        "high_95_percent": _number(band.high),
+    }
+
+
+def _days_band(band: Band | None) -> dict[str, Any] | None:
+    if band is None:
+        return None
+    return {"median": _days(band.median), "low_5_percent": _days(band.low), "high_95_percent": _days(band.high)}
+
+
+def _line(f: Forecast) -> dict[str, Any]:
+    return {
+        "steady_level_normal_binding_mg_per_L": _band(f.steady),
+        "steady_level_as_reported_total_mg_per_L": _band(f.total),
+        "steady_level_free_mg_per_L": _band(f.free),
+        "chance_below": _number(f.below),
+        "chance_within": _number(f.within),
+        "chance_above": _number(f.above),
+        "chance_above_critical": _number(f.above_critical),
+        "chance_no_steady_state": _number(f.no_steady_state),
+        "days_to_90_percent": _days_band(f.settle_days),
+    }
+
+
+def _regimen(regimen: Regimen) -> dict[str, Any]:
+    return {
+        "cycle_h": regimen.cycle_h,
+        "doses": [{"form": x.form, "hour": x.hour, "labelled_mg": x.labelled_mg} for x in regimen.intakes],
+    }
+
+
+def candidate_data(c: Candidate) -> dict[str, Any]:
+    """One regimen with both lines. trough, peak and named days: null where only printed rows have them."""
+    return {
+        "words": c.words,
+        "dispense": c.dispense,
+        "regimen": _regimen(c.regimen),
+        "active_mg_per_day": _number(c.rate_mg_per_day),
+        "change_percent": None if c.change_percent is None else _number(c.change_percent),
+        "present": c.present,
+        "own": c.proposed,
+        "offered": c.offered,
+        "why_not": list(c.why_not),
+        "danger": _number(c.danger),
+        "past_intake_carried_on": _line(c.forecast),
+        "every_dose_taken": _line(c.taken),
+        "trough_mg_per_L": _band(c.trough),
+        "peak_mg_per_L": _band(c.peak),
+        "level_on_days": None
+        if c.on_days is None
+        else [{"day": day, "level_mg_per_L": _band(b)} for day, b in c.on_days],
+        "expected_loss": None if c.loss is None else _number(c.loss),
+    }
+
+
+def _load(load: Load) -> dict[str, Any]:
+    return {
+        "form": load.form,
+        "product": load.product,
+        "route": load.route,
+        "aim_mg_per_L": _number(load.aim_mg_per_L),
+        "labelled_by_formula_mg": _number(load.wanted_mg),
+        "labelled_ordered_mg": _number(load.amount_mg),
+        "active_mg": _number(load.active_mg),
+        "parts": [{"after_h": h, "labelled_mg": mg} for h, mg in load.parts],
+        "infusion_at_least_min": load.minutes,
+        "rise_mg_per_L": _band(load.rise),
+        "level_after_mg_per_L": _band(load.after),
+        "level_at_draw_mg_per_L": _band(load.at_draw),
+        "draw_after_h": load.draw_after_h,
+        "chance_above_range": _number(load.above_high),
+        "chance_above_critical": _number(load.above_critical),
+        "maintenance": load.maintenance,
+        "level_on_days": [{"day": day, "level_mg_per_L": _band(b)} for day, b in load.followed],
+        "order": list(load.order),
+        "notes": list(load.notes),
+        "offered": load.offered,
+        "why_not": list(load.why_not),
+    }
+
+
+def _pause(p: Pause) -> dict[str, Any]:
+    return {
+        "seizure_risk": p.seizure_risk,
+        "level_today_mg_per_L": _band(p.now),
+        "until_level_mg_per_L": _number(p.to_mg_per_L),
+        "days": _days_band(p.days),
+        "days_with_late_absorption": _days_band(p.with_absorption),
+        "reductions": [
+            {
+                "words": r.words,
+                "percent_of_present": _number(r.percent),
+                "days_until_level": _days_band(r.days),
+                "steady_level_normal_binding_mg_per_L": _band(r.steady),
+            }
+            for r in p.reductions
+        ],
+        "restarts": [
+            {
+                "words": r.words,
+                "steady_level_normal_binding_mg_per_L": _band(r.steady),
+                "day": _days(r.day),
+                "level_restarted_early_mg_per_L": _band(r.early),
+                "level_restarted_on_time_mg_per_L": _band(r.on_time),
+                "level_restarted_late_mg_per_L": _band(r.late),
+                "lowest_level_restarted_late_mg_per_L": _band(r.lowest_late),
+            }
+            for r in p.restarts
+        ],
+        "lines": list(p.lines),
+    }
+
+
+def _switch(s: Switch) -> dict[str, Any]:
+    return {
+        "form": s.form,
+        "words": s.words,
+        "labelled_exactly_equal_mg_per_day": _number(s.exact_labelled_mg),
+        "active_mg_per_day": _number(s.active_mg_per_day),
+        "change_percent": _number(s.change_percent),
+        "steady_level_normal_binding_mg_per_L": _band(s.steady),
+        "median_at_least_absorbed_mg_per_L": _number(s.steady_low_mg_per_L),
+        "median_at_most_absorbed_mg_per_L": _number(s.steady_high_mg_per_L),
+        "lines": list(s.lines),
+    }
+
+
+def _draw(d: Draw | None) -> dict[str, Any] | None:
+    if d is None:
+        return None
+    return {
+        "day": _days(d.day),
+        "time": d.moment.isoformat(timespec="minutes") if d.moment is not None else None,
+        "expected_spread_log": _number(d.spread),
+        "expected_level_normal_binding_mg_per_L": _band(d.expected),
+        "expected_level_as_reported_mg_per_L": _band(d.reported),
+    }
+
+
+def _next(n: NextLevel) -> dict[str, Any]:
+    return {
+        "regimen": n.regimen_words,
+        "spread_log_now": _number(n.before),
+        "chosen": _draw(n.chosen),
+        "safety": _draw(n.safety),
+        "curve": [_draw(d) for d in n.draws],
+        "settled_days": _days_band(n.settled_days),
+        "action": n.action,
+        "safety_action": n.safety_action,
+        "why": list(n.why),
+    }
+
+
+def plan_data(plan: Plan) -> dict[str, Any]:
+    """The whole plan."""
+    level = plan.today.level
+    return {
+        "shelf": plan.shelf.words,
+        "lines": list(plan.lines),
+        "level_today_mg_per_L": _band(level),
+        "level_today_from": plan.today.words,
+        "largest_step": None
+        if plan.step is None
+        else {
+            "active_mg_per_day": _number(plan.step.step_mg_per_day),
+            "rule": plan.step.words,
+            "every_dose_taken": _line(plan.step.forecast),
+        },
+        "largest_active_mg_per_day": _number(plan.setting.largest_mg_per_day),
+        "limits": {"warn_chance": plan.setting.site.warn_chance, "stop_chance": plan.setting.site.stop_chance},
+        "candidates": [candidate_data(c) for c in plan.every],
+        "by_expected_loss": {
+            "weight_too_high": plan.setting.site.loss_too_high,
+            "weight_too_low": plan.setting.site.loss_too_low,
+            "order": [{"words": c.words, "expected_loss": _number(c.loss or 0.0)} for c in plan.ranked],
+        }
+        if plan.ranked
+        else None,
+        "loads": [_load(x) for x in plan.loads],
+        "no_load": list(plan.no_load),
+        "pause": None if plan.pause is None else _pause(plan.pause),
+        "switches": [_switch(s) for s in plan.switches],
+        "next_level": None if plan.next_level is None else _next(plan.next_level),
+        "no_next_level": plan.no_next_level,
+        "overlay": None
+        if plan.overlay is None
+        else {
+            "days": list(plan.overlay.days),
+            "level_mg_per_L": [
+                {"words": words, "bands": [_band(b) for b in bands]} for words, bands in plan.overlay.courses
+            ],
+        },
+    }
