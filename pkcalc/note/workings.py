@@ -9,15 +9,21 @@ from __future__ import annotations
 import math
 from collections.abc import Callable
 from dataclasses import dataclass
+from typing import Literal
 
 import numpy as np
 
 from pkcalc.consult import Consult, Shown
 from pkcalc.dosing import Intake
 from pkcalc.estimate.pair import METHOD as TWO_LEVELS
+from pkcalc.forecast import Forecast
 from pkcalc.note.front import spoken_for
+from pkcalc.note.words import same_lines
 from pkcalc.units import show, show_number
 
+Line = Literal["central", "every dose taken"]
+REPRESENTATIVE = "With the representative pair"
+FULLY_TAKEN = "With the representative pair, every dose taken"
 #: Digits to which a representative pair may be printed so that it still gives the printed forecast.
 _MOST_DIGITS = 9
 
@@ -81,10 +87,16 @@ def workings(consult: Consult) -> Workings:
             ("Population at this patient", tuple(_population(consult))),
             ("Two levels", tuple(_two_levels(consult))),
         ]
-        pair, about = representative(consult)
-        said += about
+        pair, about = representative(consult, "central")
+        said.append(about)
         if pair is not None:
-            groups.append(("With the representative pair", tuple(_representative(consult, *pair))))
+            groups.append((REPRESENTATIVE, tuple(_representative(consult, "central", *pair))))
+        shown = spoken_for(consult)
+        if shown is not None and not same_lines(shown):
+            full, about = representative(consult, "every dose taken")
+            said.append(about)
+            if full is not None:
+                groups.append((FULLY_TAKEN, tuple(_representative(consult, "every dose taken", *full))))
         groups.append(("One-level check, Km fixed", tuple(_one_level(consult))))
         groups.append(("Load", tuple(_loads(consult))))
     else:
@@ -272,25 +284,29 @@ def _two_levels(consult: Consult) -> list[Step]:
     return steps
 
 
-def representative(consult: Consult) -> tuple[tuple[Number, Number] | None, list[str]]:
-    """One (Vmax, Km) pair, as printed, that gives the printed median levels of the regimens in question.
+def _line(shown: Shown, line: Line) -> Forecast:
+    return shown.forecast if line == "central" else shown.taken
+
+
+def representative(consult: Consult, line: Line) -> tuple[tuple[Number, Number] | None, str]:
+    """One (Vmax, Km) pair, as printed, that gives the printed median levels of the regimens in question on one line.
 
     With two regimens (the present and the one in question) it solves both medians; with one it holds Km at its median.
     """
     estimate, shown = consult.chosen, spoken_for(consult)
     if estimate is None or shown is None:
-        return None, []
-    target = shown.forecast
+        return None, ""
+    target = _line(shown, line)
     if not np.isfinite(target.steady.median):
-        return None, [
-            "No representative pair: the central forecast of the regimen in question is no steady state, because its "
-            f"R = {show(target.rate_mg_per_day, 'mg/day', 5)} is at or above Vmax in at least half of the forecasts."
-        ]
+        return None, (
+            f"No representative pair ({line}): the median forecast of the regimen in question is no steady state, because "
+            f"its R = {show(target.rate_mg_per_day, 'mg/day', 5)} is at or above Vmax in at least half of the forecasts."
+        )
     goals = [(target.rate_mg_per_day, target.steady.median)]
     present = consult.plan.present if consult.plan is not None else None
     both = False
-    if present is not None and np.isfinite(present.forecast.steady.median) and not shown.present:
-        r, c = present.forecast.rate_mg_per_day, present.forecast.steady.median
+    if present is not None and np.isfinite(_line(present, line).steady.median) and not shown.present:
+        r, c = present.rate_mg_per_day, _line(present, line).steady.median
         (r1, c1), (r2, c2) = sorted([(r, c), goals[0]])
         below = r1 / c1 - r2 / c2
         if r2 > r1 and below > 0:
@@ -305,15 +321,17 @@ def representative(consult: Consult) -> tuple[tuple[Number, Number] | None, list
         v, k = printed(vmax, "mg/day", digits), printed(km, "mg/L", digits)
         if all(v.value > r and show_number(k.value * r / (v.value - r)) == show_number(c) for r, c in goals):
             words = (
-                "the printed central (median) forecasts of the present regimen and of the one in question"
+                "medians of the present regimen and of the one in question"
                 if both
-                else "the printed central (median) forecast of the regimen in question, with Km at its median"
+                else "median of the regimen in question, with Km at its median"
             )
-            return (v, k), [f"Representative pair: Vmax {v} of active drug, Km {k}. It reproduces {words}."]
-    return None, ["No representative pair reproduces the central forecast to the digits printed."]
+            return (v, k), (
+                f"Representative pair, {line}: Vmax {v} of active drug, Km {k}. It reproduces the printed {words}."
+            )
+    return None, f"No representative pair ({line}) reproduces the forecast to the digits printed."
 
 
-def _representative(consult: Consult, vmax: Number, km: Number) -> list[Step]:
+def _representative(consult: Consult, line: Line, vmax: Number, km: Number) -> list[Step]:
     steps: list[Step] = []
     shown, goal = spoken_for(consult), consult.goal
     assert shown is not None
@@ -323,18 +341,19 @@ def _representative(consult: Consult, vmax: Number, km: Number) -> list[Step]:
         regimens.append(("Present regimen", present))
     regimens.append(("Present regimen" if shown.present else "Regimen in question", shown))
     for name, s in regimens:
-        r = printed(s.forecast.rate_mg_per_day, "mg/day", 6)
+        r = printed(s.rate_mg_per_day, "mg/day", 6)
         if r.value >= vmax.value:
             continue
         level = printed(km.value * r.value / (vmax.value - r.value), "mg/L", 3)
-        central = show(s.forecast.steady.median, "mg/L") if np.isfinite(s.forecast.steady.median) else "no steady state"
+        f = _line(s, line)
+        median = show(f.steady.median, "mg/L") if np.isfinite(f.steady.median) else "no steady state"
         steps.append(
             Step(
                 name,
                 "Css = Km x R / (Vmax - R)",
                 f"{km} x {r} / ({vmax} - {r})",
                 level,
-                f"central forecast printed: {central}",
+                f"median printed: {median}",
             )
         )
         if consult.scale.total_factor != 1.0:
@@ -355,7 +374,10 @@ def _representative(consult: Consult, vmax: Number, km: Number) -> list[Step]:
                 printed(vmax.value / (vmax.value - r.value), "%", 2),
             )
         )
-    steps += _settling(consult, shown, vmax, km)
+    if line == "central":
+        steps += _settling(consult, shown, vmax, km)
+    if line == "central" and not same_lines(shown):
+        return steps  # a dose rate is worked out only for doses that are all taken
     aim = printed(goal.aim_mg_per_L, "mg/L", 6)
     rate = printed(vmax.value * aim.value / (km.value + aim.value), "mg/day", 4)
     steps.append(Step("Dose rate for the aim", "R = Vmax x C / (Km + C)", f"{vmax} x {aim} / ({km} + {aim})", rate))

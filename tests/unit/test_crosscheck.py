@@ -30,10 +30,50 @@ def plain(**changes: Any) -> dict[str, Any]:
     return {**json.loads(json.dumps(PLAIN)), **changes}
 
 
+#: Some weeks instead of months, where the length of the record does not matter.
+SHORT: dict[str, Any] = {
+    **PLAIN,
+    "doses": [
+        {**PLAIN["doses"][0], "from": "2026-11-10 21:00", "until": "2026-11-20 12:00"},
+        {**PLAIN["doses"][1], "from": "2026-11-20 21:00"},
+    ],
+    "levels": [
+        {"value": "6 mg/L", "kind": "total", "drawn": "2026-11-20 07:00"},
+        {"value": "13 mg/L", "kind": "total", "drawn": "2026-12-01 07:00"},
+    ],
+}
+
+
+def short(**changes: Any) -> dict[str, Any]:
+    return {**json.loads(json.dumps(SHORT)), **changes}
+
+
 PROPOSED = [{"form": "extended-capsule", "amount": "360 mg", "every": "24 h"}]
+SHORT_CARER = [{**d, "given_by": "carer"} for d in SHORT["doses"]]
 CARER = [{**d, "given_by": "carer"} for d in PLAIN["doses"]]
 
 
+@pytest.mark.parametrize("name", ["load-and-top-up", "early-level", "ethanol-dialysis", "change-of-salt"])
+def test_both_ways_agree_on_a_demonstration(name: str) -> None:
+    consult = run_consult(demonstration(name))
+    assert consult.second_way
+    assert [r.words for r in consult.second_way if not r.agrees] == []
+
+
+@pytest.mark.parametrize(
+    "change",
+    [
+        {"patient": {**PLAIN["patient"], "weight": "154 lb"}},
+        {"albumin": {**PLAIN["albumin"], "value": "3.1 g/dL"}},
+        {"levels": [{**x, "value": x["value"].replace("mg/L", "mcg/mL")} for x in SHORT["levels"]]},
+        {"doses": [{**x, "amount": "0.3 g"} if i == 0 else x for i, x in enumerate(SHORT["doses"])]},
+    ],
+)
+def test_both_ways_agree_in_other_units(change: dict[str, Any]) -> None:
+    assert disagreeing(consult_of(short(**change))) == []
+
+
+@pytest.mark.slow
 @pytest.mark.parametrize("name", [d.name for d in demonstrations()])
 def test_both_ways_agree_on_every_demonstration(name: str) -> None:
     consult = run_consult(demonstration(name))
@@ -90,7 +130,7 @@ def assert_no_number(consult: Consult) -> None:
 
 def test_a_broken_engine_stops_the_consult(monkeypatch: pytest.MonkeyPatch) -> None:
     monkeypatch.setattr(flow, "amounts", scaled(flow.amounts, 1.03))
-    consult = consult_of(plain(proposed=PROPOSED))
+    consult = consult_of(short(proposed=PROPOSED))
     assert len([q for q in disagreeing(consult) if "by the record at" in q]) == 3
     assert_no_number(consult)
     caution = next(c for c in consult.cautions if c.id == "second-way-disagrees")
@@ -102,7 +142,7 @@ def test_a_broken_engine_stops_the_consult(monkeypatch: pytest.MonkeyPatch) -> N
 
 
 def test_a_good_engine_does_not() -> None:
-    assert "second-way-disagrees" not in [c.id for c in consult_of(plain(proposed=PROPOSED)).cautions]
+    assert "second-way-disagrees" not in [c.id for c in consult_of(short(proposed=PROPOSED)).cautions]
 
 
 def test_wrong_weights_are_noticed(monkeypatch: pytest.MonkeyPatch) -> None:
@@ -113,9 +153,9 @@ def test_wrong_weights_are_noticed(monkeypatch: pytest.MonkeyPatch) -> None:
 
     monkeypatch.setattr(posterior, "gaussian_parts", narrower)
     consult = consult_of(
-        plain(
+        short(
             proposed=PROPOSED,
-            levels=[{**x, "value": v} for x, v in zip(PLAIN["levels"], ("6 mg/L", "16 mg/L"), strict=True)],
+            levels=[{**x, "value": v} for x, v in zip(SHORT["levels"], ("6 mg/L", "16 mg/L"), strict=True)],
         )
     )
     assert any("weight at" in q for q in disagreeing(consult))
@@ -126,13 +166,13 @@ def test_wrong_influence_of_missed_doses_is_noticed(monkeypatch: pytest.MonkeyPa
     right = posterior.intake_gain
     monkeypatch.setattr(posterior, "intake_gain", lambda *given: 2.0 * right(*given))
     doubtful = {**PLAIN["context"], "adherence_doubtful": "yes"}
-    consult = consult_of(plain(doses=CARER, context=doubtful))
+    consult = consult_of(short(doses=SHORT_CARER, context=doubtful))
     assert any("weight at" in q for q in disagreeing(consult))
 
 
 def test_a_wrong_steady_level_is_noticed(monkeypatch: pytest.MonkeyPatch) -> None:
     monkeypatch.setattr(formulas, "steady_state_level", scaled(formulas.steady_state_level, 1.02))
-    consult = consult_of(plain(proposed=PROPOSED))
+    consult = consult_of(short(proposed=PROPOSED))
     assert "Steady level on the regimen in question, every dose taken at the point" in disagreeing(consult)
     assert any(q.startswith("And back") for q in disagreeing(consult))
     assert_no_number(consult)
@@ -145,21 +185,21 @@ def test_a_wrong_median_is_noticed(monkeypatch: pytest.MonkeyPatch) -> None:
         return tuple(replace(b, median=1.03 * b.median) for b in right(values, weights))
 
     monkeypatch.setattr(forecast, "bands", higher)
-    consult = consult_of(plain(proposed=PROPOSED))
+    consult = consult_of(short(proposed=PROPOSED))
     assert "Median steady level on the regimen in question, every dose taken" in disagreeing(consult)
     assert_no_number(consult)
 
 
 def test_a_wrong_chance_is_noticed(monkeypatch: pytest.MonkeyPatch) -> None:
     monkeypatch.setattr(forecast, "_chance", lambda value: 0.8 * value)
-    consult = consult_of(plain(proposed=PROPOSED))
+    consult = consult_of(short(proposed=PROPOSED))
     assert any(q.startswith("Chance above 30 mg/L") for q in disagreeing(consult))
     assert_no_number(consult)
 
 
 def test_a_wrong_time_is_noticed(monkeypatch: pytest.MonkeyPatch) -> None:
     monkeypatch.setattr(formulas, "time_to_fraction", scaled(formulas.time_to_fraction, 1.05))
-    consult = consult_of(plain(proposed=PROPOSED))
+    consult = consult_of(short(proposed=PROPOSED))
     assert "Days from nothing to 90 % of the way at the point, central" in disagreeing(consult)
     assert_no_number(consult)
 
@@ -189,19 +229,19 @@ def test_a_wrong_two_level_solution_is_noticed(field: str, name: str, monkeypatc
         (
             "level",
             "mcg/mL",
-            {"levels": [{**x, "value": x["value"].replace("mg/L", "mcg/mL")} for x in PLAIN["levels"]]},
+            {"levels": [{**x, "value": x["value"].replace("mg/L", "mcg/mL")} for x in SHORT["levels"]]},
             "Level 1",
         ),
         (
             "level",
             "umol/L",
-            {"levels": [{**x, "value": v} for x, v in zip(PLAIN["levels"], ("30 umol/L", "79 umol/L"), strict=True)]},
+            {"levels": [{**x, "value": v} for x, v in zip(SHORT["levels"], ("24 umol/L", "52 umol/L"), strict=True)]},
             "Level 1",
         ),
         (
             "amount",
             "g",
-            {"doses": [{**x, "amount": "0.3 g"} if i == 0 else x for i, x in enumerate(PLAIN["doses"])]},
+            {"doses": [{**x, "amount": "0.3 g"} if i == 0 else x for i, x in enumerate(SHORT["doses"])]},
             "Active drug of dose line 1",
         ),
     ],
@@ -209,16 +249,15 @@ def test_a_wrong_two_level_solution_is_noticed(field: str, name: str, monkeypatc
 def test_a_wrong_unit_is_noticed(
     kind: str, label: str, change: dict[str, Any], quantity: str, monkeypatch: pytest.MonkeyPatch
 ) -> None:
-    assert disagreeing(consult_of(plain(**change))) == []
     monkeypatch.setitem(units.FACTORS[kind], label, units.FACTORS[kind][label] * 1.02)
-    consult = consult_of(plain(**change))
+    consult = consult_of(short(**change))
     assert f"{quantity}, read again from the text" in disagreeing(consult)
     assert_no_number(consult)
 
 
 def test_a_wrong_salt_factor_is_noticed(monkeypatch: pytest.MonkeyPatch) -> None:
     monkeypatch.setattr(dosing, "active_mg", scaled(dosing.active_mg, 1 / 0.92))
-    consult = consult_of(plain())
+    consult = consult_of(short())
     assert "Active drug of dose line 1, read again from the text" in disagreeing(consult)
     assert_no_number(consult)
 
@@ -232,7 +271,7 @@ def test_a_wrong_salt_factor_is_noticed(monkeypatch: pytest.MonkeyPatch) -> None
             {
                 "levels": [
                     {**x, "kind": "free", "value": v}
-                    for x, v in zip(PLAIN["levels"], ("0.8 mg/L", "2 mg/L"), strict=True)
+                    for x, v in zip(SHORT["levels"], ("0.8 mg/L", "2 mg/L"), strict=True)
                 ]
             },
         ),
@@ -242,7 +281,7 @@ def test_a_wrong_correction_for_binding_is_noticed(
     name: str, change: dict[str, Any], monkeypatch: pytest.MonkeyPatch
 ) -> None:
     monkeypatch.setattr(formulas, name, scaled(getattr(formulas, name), 1.01))
-    consult = consult_of(plain(**change))
+    consult = consult_of(short(**change))
     assert "Level 1 at normal binding" in disagreeing(consult)
     assert_no_number(consult)
 
@@ -406,7 +445,7 @@ def check_many(count: int, seed: int) -> None:
 
 
 def test_a_few_random_good_cases_are_not_stopped() -> None:
-    check_many(8, 1)
+    check_many(4, 1)
 
 
 @pytest.mark.slow
