@@ -179,14 +179,26 @@ _site = click.option(
 
 @cli.command()
 @click.argument("case_file", metavar="CASE", type=click.Path(path_type=Path, exists=True, dir_okay=False))
+@click.option(
+    "--plan",
+    "plan_settings",
+    multiple=True,
+    metavar="KEY=VALUE",
+    help="In place of the case's own: shelf, products, aim, largest-step, order-by-loss, load, load-aim, load-at, "
+    'restart-level, start. For example --plan shelf=united-states --plan "aim=15 mg/L".',
+)
 @_note_format
 @_out
 @_site
-def note(case_file: Path, output_format: str, out: Path | None, site: Path | None) -> None:
+def note(
+    case_file: Path, plan_settings: tuple[str, ...], output_format: str, out: Path | None, site: Path | None
+) -> None:
     """A case file in, a consult note out."""
     from pkcalc.case import load_case
+    from pkcalc.plan.asked import with_settings
 
-    _write(load_case(case_file), output_format, out, site)
+    case = load_case(case_file)
+    _write(with_settings(case, plan_settings) if plan_settings else case, output_format, out, site)
 
 
 @cli.command()
@@ -515,3 +527,59 @@ def selfcheck(output_format: str, save: Path | None) -> None:
         click.echo(f"Written: {save}", err=True)
     if not record.all_agree:
         sys.exit(1)
+
+
+# --- a department's own records --------------------------------------------------------------------------
+
+
+@cli.command()
+@click.argument("folder", metavar="FOLDER", type=click.Path(path_type=Path, file_okay=False))
+@click.option("--drug", default="phenytoin", show_default=True, help="A drug of `pkcalc drugs`.")
+@_site
+@click.option(
+    "--out",
+    type=click.Path(path_type=Path, file_okay=False),
+    help="Folder of results; a run that was stopped goes on in it. Default: pkcalc-backtest within FOLDER.",
+)
+@click.option(
+    "--workers",
+    type=click.IntRange(0, 1024),
+    default=0,
+    show_default=True,
+    help="Processes on this machine, by Dask; 0: this process alone.",
+)
+@click.option("--cluster", default="", metavar="ADDRESS", help="A Dask scheduler, such as tcp://host:8786.")
+@click.option(
+    "--synthetic",
+    type=click.IntRange(1, 1_000_000),
+    help="First fill FOLDER, new or empty, with so many invented patients.",
+)
+@click.option("--seed", type=click.IntRange(0), default=1, show_default=True, help="For --synthetic.")
+def backtest(
+    folder: Path,
+    drug: str,
+    site: Path | None,
+    out: Path | None,
+    workers: int,
+    cluster: str,
+    synthetic: int | None,
+    seed: int,
+) -> None:
+    """Predicted against observed on a department's own records.
+
+    FOLDER holds patients.csv, doses.csv and levels.csv with a column `patient`, or one case file per patient.
+    Each level is forecast from what was known before it. Exit status 0 done, 1 interrupted or not whole.
+    """
+    if workers and cluster:
+        raise click.UsageError("Give --workers or --cluster, not both")
+    from pkcalc.backtest.command import backtest as run_backtest
+
+    if synthetic is not None:
+        from pkcalc.backtest.department import write_department
+
+        write_department(folder, drug=drug, count=synthetic, seed=seed)
+        click.echo(f"Written: {synthetic:,} invented patients in {folder}", err=True)
+    status, text = run_backtest(folder, drug=drug, site=site, out=out, workers=workers, cluster=cluster)
+    click.echo(text, nl=False)
+    if status:
+        sys.exit(status)

@@ -7,6 +7,7 @@ step rule; the true level at the end of the last period is what a forecast is he
 
 from __future__ import annotations
 
+import math
 from collections.abc import Iterator
 from dataclasses import dataclass
 
@@ -28,6 +29,7 @@ class Ward:
     drawn between the two, both included). missed: share of doses not taken, unseen. jitter_h: standard
     deviation of the time a dose is taken. assay_cv, day_cv: of a measured level. vmax_factor, km_factor: the
     truth against the population. doses_per_day: drawn from these. first_mg_per_day: the dose it begins with.
+    early_h: a level is drawn up to this long before the end of its period (irregular draws).
     """
 
     levels: int = 2
@@ -41,6 +43,7 @@ class Ward:
     doses_per_day: tuple[int, ...] = (1, 2, 3)
     first_mg_per_day: float = 300.0
     absorption: Absorption = CAPSULE
+    early_h: float = 0.0
 
 
 @dataclass(frozen=True)
@@ -115,13 +118,16 @@ def _patient(ward: Ward, prior: Prior, number: int, chance: np.random.Generator)
             for d, shift, yes in zip(planned, late, kept, strict=True)
             if yes
         ]
-        level = float(flow.amounts(Record(doses=tuple(taken)), [end], vmax, km * volume)[0, 0]) / volume
+        drawn = end
+        if ward.early_h > 0 and period < ward.levels:
+            drawn -= math.floor(60 * ward.early_h * chance.random()) / 1440
+        level = float(flow.amounts(Record(doses=tuple(taken)), [drawn], vmax, km * volume)[0, 0]) / volume
         noise = np.exp(np.sqrt(np.log1p(ward.assay_cv**2) + np.log1p(ward.day_cv**2)) * chance.standard_normal())
         if period == ward.levels:
             following = planned
             break
         written += planned
-        days.append(end)
+        days.append(drawn)
         true.append(level)
         measured.append(level * float(noise))
         rate, begin = next_rate(rate, measured[-1]), end
