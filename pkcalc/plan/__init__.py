@@ -7,6 +7,7 @@ whatever is not offered says why.
 from __future__ import annotations
 
 from dataclasses import dataclass
+from datetime import timedelta
 
 from pkcalc.case import Case
 from pkcalc.dosing import Regimen
@@ -49,7 +50,7 @@ from pkcalc.plan.shelf import (
     part_words,
     shelf_in_use,
 )
-from pkcalc.site import Site
+from pkcalc.site import DAYS, Site
 from pkcalc.units import show
 
 __all__ = [
@@ -145,12 +146,13 @@ def make(
         central=central,
         taken=taken,
         start_mg_per_L=now.start_mg_per_L,
-        draw_days=FIRST_LOOK_DAYS,
+        draw_days=_first_look(now, site),
         present_mg_per_day=rate,
         largest_mg_per_day=most,
         step=step,
         raising_refused=limits.why_no_increase(case, goal, now),
         refused="A stop on the data blocks regimens." if "regimens" in stops else "",
+        made_here=bool(shelf.products),
         hours=_hours(case),
     )
     products = oral(shelf.products, profile)
@@ -257,6 +259,14 @@ def _why_no_next_level(setting: Setting, asked: nextlevel.Asked | None, stops: f
 
 #: A change of dose shows little before this; the first draw after it is the next feasible one.
 FIRST_LOOK_DAYS = 3.0
+
+
+def _first_look(now: Today, site: Site) -> float:
+    """Days until the next feasible draw: the laboratory's first draw day from the third day on."""
+    if now.moment is None or not site.draw_days:
+        return FIRST_LOOK_DAYS
+    ahead = (FIRST_LOOK_DAYS + k for k in range(7))
+    return next(d for d in ahead if DAYS[(now.moment + timedelta(days=d)).weekday()] in site.draw_days)
 
 
 def _is_iv(regimen: Regimen, profile: Profile) -> bool:

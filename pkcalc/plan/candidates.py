@@ -96,7 +96,8 @@ class Setting:
 
     central, taken: the two lines. start_mg_per_L: today's level (per draw or one for all). draw_days: days until the
     next feasible draw. present_mg_per_day: active drug of the present regimen. raising_refused: why no increase may be
-    offered, "" where it may. refused: why nothing may be offered.
+    offered, "" where it may. refused: why nothing may be offered. made_here: True where a shelf is in use, so that an
+    own regimen must be made from it.
     """
 
     profile: Profile
@@ -112,6 +113,7 @@ class Setting:
     step: StepLimit | None = None
     raising_refused: str = ""
     refused: str = ""
+    made_here: bool = False
     hours: Mapping[int, tuple[float, ...]] = field(default_factory=lambda: HOURS)
 
 
@@ -228,6 +230,8 @@ def _judge(c: Candidate, s: Setting) -> Candidate:
     why: list[str] = []
     if s.refused:
         why.append(s.refused)
+    if s.made_here and c.proposed and not c.present and not c.dispense:
+        why.append("It cannot be made from the shelf in use.")
     limit, warn = s.site.stop_chance, s.site.warn_chance
     if c.danger > limit:
         above = f"above {show(s.goal.critical_mg_per_L, 'mg/L')}"

@@ -296,6 +296,20 @@ def test_own_regimens_show_their_danger_where_they_are_not_offered() -> None:
     assert own.taken.no_steady_state > 0.5
 
 
+def test_an_own_regimen_that_cannot_be_dispensed_is_not_offered() -> None:
+    own = [{"form": "extended-capsule", "amount": "245 mg", "every": "24 h"}]
+    (from_shelf,) = plan(proposed=own).own
+    assert from_shelf.why_not == ("It cannot be made from the shelf in use.",)
+    (no_shelf,) = plan(proposed=own, plan={}).own
+    assert no_shelf.offered
+
+
+def test_the_next_feasible_draw_keeps_to_the_laboratorys_days() -> None:
+    """The plain case is on Tuesday 1 Dec 2026: three days on is Friday; with Mondays only, six days on."""
+    assert plan().setting.draw_days == 3.0
+    assert plan(replace(no_site(), draw_days=("Mon",))).setting.draw_days == 6.0
+
+
 # Order and choice of rows
 
 
