@@ -13,7 +13,7 @@ from pkcalc_form.entry import Entry, text
 
 from pkcalc.case import QUESTIONS, Case
 from pkcalc.clock import show_time
-from pkcalc.drugs.profile import Profile, drug_names, load_profile
+from pkcalc.drugs.profile import Product, Profile, drug_names, load_profile
 from pkcalc.errors import Problem
 from pkcalc.units import show
 
@@ -63,7 +63,6 @@ class Asked:
     values: Mapping[str, Any]
     entry: Entry
     problems: Mapping[str, tuple[Problem, ...]]
-    homeless: tuple[Problem, ...]
     case: Case | None
     profile: Profile | None
 
@@ -89,7 +88,15 @@ def field(asked: Asked, label: str, key: str, *, most: int = 120, **more: Any) -
     _beside(asked, key)
 
 
-def choice(asked: Asked, label: str, key: str, options: Sequence[str], words: Mapping[str, str] | None = None) -> None:
+def choice(
+    asked: Asked,
+    label: str,
+    key: str,
+    options: Sequence[str],
+    words: Mapping[str, str] | None = None,
+    *,
+    empty: str = "not stated",
+) -> None:
     """A choice with nothing chosen beforehand."""
     current = text(asked.values, key)
     offered = [*options, current] if current and current not in options else list(options)
@@ -98,7 +105,7 @@ def choice(asked: Asked, label: str, key: str, options: Sequence[str], words: Ma
         offered,
         index=None,
         key=key,
-        placeholder="not stated",
+        placeholder=empty,
         format_func=lambda x: (words or {}).get(x, x),
     )
     _beside(asked, key)
@@ -297,6 +304,9 @@ def doses(asked: Asked, echoes: Mapping[int, str]) -> None:
                         ANSWERS,
                     )
                 with two:
+                    liquids = [p.id for p in _products(asked) if p.unit == "mL"]
+                    if liquids:
+                        choice(asked, "Liquid product, where the dose is in mL", f"dose.{row}.product", liquids)
                     field(
                         asked,
                         "Start not known: given for about",
@@ -417,6 +427,56 @@ def goal(asked: Asked) -> None:
     with four:
         st.selectbox("Unit of target and aim", list(units), index=None, key="target_unit", placeholder="unit")
     look.say("Left empty, the service's own range is used, else the usual one; it is named below.", "hint")
+    shelves = {s.id: s.words for s in asked.profile.shelves.values()} if asked.profile else {}
+    if shelves:
+        choice(asked, "Shelf the regimens are made from", "shelf", tuple(shelves), shelves, empty="choose one")
+
+
+def more_plan(asked: Asked) -> None:
+    """What not every consult needs: a start time, a load, a restart level, the order of the rows."""
+    forms, words = form_words(asked.profile)
+    with st.expander("Load or top-up, pause, start of a new regimen", expanded=False, key="plan-more"):
+        one, two = st.columns(2, gap="medium")
+        with one:
+            choice(asked, "Load or top-up with", "load_form", forms, words)
+            field(asked, "Load up to this level, with its unit", "load_aim", most=40)
+            field(asked, "Time of the load", "load_at", help=DATES)
+        with two:
+            field(asked, "Give again at this level, with its unit", "restart_level", most=40)
+            field(asked, "First dose of a new regimen (date and time)", "plan_start", help=DATES)
+            st.checkbox("Also list by expected loss (it is no advice)", key="order_by_loss")
+
+
+def chosen(asked: Asked) -> None:
+    """The pharmacist's own choice; nothing is chosen beforehand."""
+    own_rows = asked.entry.rows["own"]
+    words = {f"own {row}": text(asked.values, f"own.{row}.said") for row in own_rows}
+    offered = [fields.STAY, *words]
+    words[fields.STAY] = "stay on the present dose"
+    words[fields.AS_OPENED] = "as chosen in the opened case"
+    choice(asked, "Which regimen do you choose?", "chosen", offered, words, empty="none yet")
+
+
+def own_words(asked: Asked) -> None:
+    st.text_area("Your own words on the note", key="own_words", max_chars=4000, height=90)
+    field(asked, "Next level, if you decide otherwise (date and time)", "next_draw", help=DATES)
+
+
+def method(asked: Asked) -> None:
+    """Method and population: chosen by name, never switched unseen."""
+    one, two = st.columns(2, gap="medium")
+    known = {k: p.words for k, p in asked.profile.populations.items()} if asked.profile else {}
+    with one:
+        choice(asked, "Method", "method", METHODS, empty="as suggested below")
+    with two:
+        choice(asked, "Population", "population", tuple(known), known, empty="the usual one for this patient")
+
+
+METHODS = ("whole record", "two levels", "lines")
+
+
+def _products(asked: Asked) -> list[Product]:
+    return list(asked.profile.products.values()) if asked.profile else []
 
 
 def own(asked: Asked, echoes: Mapping[int, str]) -> None:

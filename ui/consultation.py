@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import logging
-import os
 import traceback
 from collections.abc import Callable, Iterator, Mapping
 from contextlib import contextmanager
@@ -12,21 +11,21 @@ from pathlib import Path
 from typing import Any
 
 import streamlit as st
-from pkcalc_form import ask, look, tell
+from pkcalc_form import ask, look, opening, tell
 from pkcalc_form import entry as fields
 from pkcalc_form.ask import Asked
 from pkcalc_form.entry import Entry
 
-from pkcalc.case import Case, CaseFile, check_case, dump_case_file, parse_case_text
+from pkcalc.case import Case, CaseFile, check_case, dump_case_file
 from pkcalc.consult import Consult, run_consult
-from pkcalc.demos import demonstrations
 from pkcalc.drugs.profile import Profile, drug_names, load_profile
 from pkcalc.errors import CaseError, DrugFileError, PkcalcError, Problem
+from pkcalc.levels import observe
+from pkcalc.note import charts
 from pkcalc.note.document import DEFERS
-from pkcalc.site import Site, load_site, no_site
+from pkcalc.site import Site
 
-SITE = "PKCALC_SITE"
-KEPT = 12  # consults kept in one session, so that going back is quick
+KEPT = 12  # consults and charts kept in one session, so that going back is quick
 log = logging.getLogger("pkcalc_form")
 
 
@@ -43,7 +42,7 @@ class Outcome:
 
 def _report(error: Exception) -> None:
     """The kind of fault and where it happened, never what a person typed."""
-    frames = [f for f in traceback.extract_tb(error.__traceback__) if "pkcalc" in f.filename or "/ui/" in f.filename]
+    frames = traceback.extract_tb(error.__traceback__)
     place = f"{Path(frames[-1].filename).name}:{frames[-1].lineno}" if frames else "unknown place"
     log.error("The calculation stopped: %s at %s", type(error).__name__, place)
 
@@ -60,12 +59,6 @@ def _guarded() -> Iterator[None]:
         place.html(f'<p class="pk-stopped" role="alert">{tell.STOPPED}</p>')
 
 
-def site() -> Site:
-    """The service's own settings, named when the form was started."""
-    path = os.environ.get(SITE, "")
-    return load_site(path) if path else no_site()
-
-
 def page() -> None:
     st.set_page_config(page_title="pkcalc", layout="centered")
     st.html(look.ASSETS / "look.css")
@@ -75,33 +68,33 @@ def page() -> None:
         if st.context.theme.type == "dark":
             st.html(look.ASSETS / "dark.css")
     try:
-        _page()
+        if opening.may_be_seen():
+            _page()
     except Exception as error:
         _report(error)
         st.html(f'<p class="pk-stopped" role="alert">{tell.STOPPED}</p>')
 
 
 def _page() -> None:
-    settings = site()
+    settings = opening.site()
+    opening.forget_when_left_alone(settings.session_timeout_min)
     state = st.session_state
-    state.setdefault("dose_rows", [1])
-    state.setdefault("level_rows", [1])
-    state.setdefault("own_rows", [1])
+    for kind in ("dose_rows", "level_rows", "own_rows"):
+        state.setdefault(kind, [1])
     if "drug" not in state and len(drug_names()) == 1:
         state["drug"] = drug_names()[0]
     values: Mapping[str, Any] = {str(k): v for k, v in state.items()}
     entry = fields.case_of(values)
-    outcome = evaluate(entry, settings)
-    asked = _asked(values, entry, outcome)
+    checked = check(entry)
+    asked = _asked(values, entry, checked)
     demonstration = entry.file.demonstration is not None
 
     with st.container():
         if demonstration:
             tell.watermark()
     with st.container(key="opening"):
-        _opening(demonstration)
-    with st.container(key="pinned"):
-        tell.pinned(outcome.consult.cautions if outcome.consult else (), demonstration)
+        opening.opening()
+    pinned = st.container(key="pinned")
 
     echoes = _echoes(asked)
     with _step(1, "How is the patient?", ask.patient_sentence(asked)):
@@ -109,19 +102,48 @@ def _page() -> None:
     with _step(2, "What was given?", ask.doses_sentence(asked, echoes["dose"])):
         ask.doses(asked, echoes["dose"])
     with _step(3, "What was measured?", ask.levels_sentence(asked)):
-        ask.levels(asked, {})
-    with _step(4, "What does it say?", tell.estimate_sentence(outcome.consult)):
-        _result(outcome, asked, tell.estimate)
-    with _step(5, "What could be given next?", tell.candidates_sentence(outcome.consult)):
+        ask.levels(asked, _worth(asked, settings))
+
+    outcome = answer(checked, settings)
+    consult = outcome.consult
+    hidden = opening.committing(demonstration)
+    with pinned:
+        tell.pinned(consult.cautions if consult and not hidden else (), demonstration)
+    spoken = None if hidden else consult
+    slots: list[tuple[Any, str]] = []
+
+    with _step(4, "What does it say?", tell.estimate_sentence(spoken)):
+        ask.method(asked)
+        _result(outcome, hidden, tell.estimate)
+        slots += [(st.empty(), "record"), (st.empty(), "plane")]
+        _on_request(outcome, hidden, "How this was found", tell.how)
+        _on_request(outcome, hidden, "Compare with other published populations", tell.populations)
+    with _step(5, "What could be given next?", tell.candidates_sentence(spoken)):
         ask.goal(asked)
         ask.own(asked, echoes["own"])
-        _result(outcome, asked, tell.candidates)
-    with _step(6, "When do we look again?", ""):
-        _result(outcome, asked, tell.next_look)
+        ask.more_plan(asked)
+        _result(outcome, hidden, tell.candidates)
+        slots += [(st.empty(), "regimens")]
+        _result(outcome, hidden, tell.acute, quiet=True)
+        ask.chosen(asked)
+    with _step(6, "When do we look again?", tell.next_sentence(spoken)):
+        _result(outcome, hidden, tell.next_look)
+        slots += [(st.empty(), "narrowing")]
     with _step(7, "Note", ""):
-        _result(outcome, asked, tell.note)
+        ask.own_words(asked)
+        _result(outcome, hidden, tell.note)
+        _on_request(outcome, hidden, "Show the whole note with its annex", tell.whole_note)
+        opening.second_entry(outcome.case if not outcome.problems else None, settings)
     look.say(DEFERS, "defer")
-    look.read_mark({k: v for k, v in values.items() if isinstance(v, str) and v})
+    # from here on the browser may show the results: they belong to what was read
+    state["runs"] = state.get("runs", 0) + 1
+    look.read_mark(
+        {k: v for k, v in values.items() if isinstance(v, str) and v},
+        run=state["runs"],
+        minutes=settings.session_timeout_min,
+    )
+    if consult is not None and not hidden:
+        _charts(consult, slots)
 
 
 @contextmanager
@@ -131,32 +153,72 @@ def _step(number: int, title: str, sentence: str) -> Iterator[None]:
     expanded = number > 3 or not st.session_state.get("opened")
     with (
         st.container(key=f"step-{number}"),
-        st.expander(label, expanded=expanded, key=f"fold-{number}"),
+        st.expander(label, expanded=expanded, key=f"fold-{number}-{st.session_state.get('turn', 0)}"),
     ):
         yield
 
 
-def _result(outcome: Outcome, asked: Asked, show: Callable[[Consult], None]) -> None:
+def _result(outcome: Outcome, hidden: str, show: Callable[[Consult], None], *, quiet: bool = False) -> None:
     """A result, or in its place why there is none. Never both, never an older one."""
     with st.container(key=f"result-{show.__name__}"):
-        if outcome.crashed:
-            st.html(f'<p class="pk-stopped" role="alert">{tell.STOPPED}</p>')
+        if hidden:
+            if not quiet:
+                look.say(hidden, "empty-state")
+        elif outcome.crashed:
+            if not quiet:
+                st.html(f'<p class="pk-stopped" role="alert">{tell.STOPPED}</p>')
         elif outcome.refused:
-            look.say(outcome.refused, "wrong")
+            if not quiet:
+                look.say(outcome.refused, "wrong")
         elif outcome.consult is not None:
             with _guarded():
                 if show in (tell.estimate, tell.candidates):
                     look.say(tell.inputs_line(outcome.consult), "hint")
                 show(outcome.consult)
-        else:
+        elif not quiet:
             tell.not_yet([p.text for p in outcome.problems])
+
+
+def _on_request(outcome: Outcome, hidden: str, label: str, show: Callable[[Consult], None]) -> None:
+    """Something that takes a moment to work out, only where a person asks for it."""
+    with st.container(key=f"result-{show.__name__}"):
+        if outcome.consult is not None and not hidden and st.toggle(label, key=f"ask-{show.__name__}"):
+            with _guarded():
+                show(outcome.consult)
+
+
+def _charts(consult: Consult, slots: list[tuple[Any, str]]) -> None:
+    """The charts of the note, drawn last so that the numbers do not wait for them."""
+    made: dict[str, Any] = st.session_state.setdefault("charts", {})
+    key = dump_case_file(consult.case.file)
+    makers = {
+        "record": charts.record_chart,
+        "plane": charts.plane_chart,
+        "regimens": charts.regimen_chart,
+        "narrowing": charts.narrowing_chart,
+    }
+    if key not in made:
+        while len(made) >= KEPT:
+            made.pop(next(iter(made)))
+        made[key] = {}
+    for slot, name in slots:
+        try:
+            if name not in made[key]:
+                found = makers[name](consult)
+                made[key][name] = None if found is None else tell.picture(found)
+            if made[key][name] is not None:
+                with slot.container(key=f"result-chart-{name}"):
+                    st.html(made[key][name])
+        except Exception as error:
+            _report(error)
+            slot.html(f'<p class="pk-stopped" role="alert">{tell.STOPPED}</p>')
 
 
 # --- reading the fields ----------------------------------------------------------------------------------
 
 
-def evaluate(entry: Entry, settings: Site) -> Outcome:
-    """The fields checked and, where nothing is missing or contradictory, the consult."""
+def check(entry: Entry) -> Outcome:
+    """The fields read by the core: a checked case, or everything that is missing or contradictory."""
     if not entry.file.doses and not entry.file.levels:
         return Outcome(problems=entry.problems)
     problems = list(entry.problems)
@@ -169,12 +231,18 @@ def evaluate(entry: Entry, settings: Site) -> Outcome:
     except Exception as error:
         _report(error)
         return Outcome(crashed=True)
-    if problems:
-        return Outcome(problems=tuple(problems))
     if not case.levels:
-        return Outcome(case=case, problems=(Problem("Levels", "no level was entered", "one or more", "Enter a level"),))
+        problems.append(Problem("Levels", "no level was entered", "one or more", "Enter a level"))
     if not case.courses:
-        return Outcome(case=case, problems=(Problem("Doses", "no dose was entered", "one or more", "Enter a dose"),))
+        problems.append(Problem("Doses", "no dose was entered", "one or more", "Enter a dose"))
+    return Outcome(case=case, problems=tuple(problems))
+
+
+def answer(checked: Outcome, settings: Site) -> Outcome:
+    """The consult of a checked case, where nothing stands in its way."""
+    case = checked.case
+    if case is None or checked.problems:
+        return checked
     try:
         return Outcome(case=case, consult=_consult(case, settings))
     except PkcalcError as refusal:
@@ -197,12 +265,9 @@ def _consult(case: Case, settings: Site) -> Consult:
 
 def _asked(values: Mapping[str, Any], entry: Entry, outcome: Outcome) -> Asked:
     beside: dict[str, list[Problem]] = {}
-    homeless: list[Problem] = []
     for problem in outcome.problems:
         key = fields.field_of(problem.where, entry)
-        if key is None:
-            homeless.append(problem)
-        else:
+        if key is not None:
             beside.setdefault(key, []).append(problem)
     profile: Profile | None
     try:
@@ -213,7 +278,6 @@ def _asked(values: Mapping[str, Any], entry: Entry, outcome: Outcome) -> Asked:
         values=values,
         entry=entry,
         problems={k: tuple(v) for k, v in beside.items()},
-        homeless=tuple(homeless),
         case=outcome.case,
         profile=profile,
     )
@@ -229,92 +293,35 @@ def _echoes(asked: Asked) -> dict[str, dict[int, str]]:
         for row, line in zip(asked.entry.rows[kind], lines, strict=False):
             if any(k.startswith(f"{kind}.{row}.") for k in asked.problems):
                 continue
+            part = {"doses" if kind == "dose" else "proposed": (line,)}
             try:
-                alone = check_case(
-                    CaseFile(pkcalc_case=1, drug=profile.id, **{"doses" if kind == "dose" else "proposed": (line,)})
-                )
+                alone = check_case(CaseFile(pkcalc_case=1, drug=profile.id, **part))
             except CaseError:
                 continue
             found[kind][row] = ask.course_echo(alone, profile) if kind == "dose" else ask.own_echo(alone, profile)
     return found
 
 
-# --- opening, keeping and forgetting ---------------------------------------------------------------------
-
-
-def _forget() -> None:
-    """Everything typed, opened and found. The place for files gets a new name: a file still lying in the old one
-    would be read again with the next change, over what was edited since."""
-    turn = st.session_state.get("turn", 0)
-    for key in list(st.session_state):
-        del st.session_state[key]
-    st.session_state["turn"] = turn + 1
-
-
-def _open(file: CaseFile) -> None:
-    _forget()
-    for key, value in fields.fields_of(file).items():
-        st.session_state[key] = value
-    st.session_state["opened"] = True
-    for kind in ("dose_rows", "level_rows", "own_rows"):
-        if not st.session_state.get(kind):
-            st.session_state[kind] = [1]
-
-
-def _open_demonstration() -> None:
-    name = st.session_state.get("demo_name")
-    for demo in demonstrations():
-        if demo.name == name:
-            _open(parse_case_text(demo.text))
-
-
-def _upload_key() -> str:
-    return f"upload-{st.session_state.get('turn', 0)}"
-
-
-def _open_upload() -> None:
-    upload = st.session_state.get(_upload_key())
-    if upload is None:
-        return
-    try:
-        file = parse_case_text(upload.getvalue())
-    except CaseError as error:
-        st.session_state["upload_problems"] = [p.text for p in error.problems]
-        return
-    _open(file)
-
-
-def _opening(demonstration: bool) -> None:
-    st.html("<h1>pkcalc: from levels to the next dose, where elimination saturates</h1>")
-    st.html(f'<p class="pk-first" role="note"><b>First:</b> {tell.URGENT}</p>')
-    look.say(
-        "Your local protocol comes first. This page supports licensed pharmacists and physicians and "
-        "replaces neither. Nothing typed here is kept after the tab is closed, and no name or number of a "
-        "patient belongs here.",
-        "defer",
-    )
-    with (
-        st.container(key="tools"),
-        st.expander("Open a demonstration or a case file, or start afresh", key="tools-fold"),
-    ):
-        names = {d.name: d for d in demonstrations()}
-        left, right = st.columns([3, 1], vertical_alignment="bottom")
-        left.selectbox(
-            "Demonstration (invented, not a patient)",
-            list(names),
-            index=None,
-            key="demo_name",
-            placeholder="choose one",
-            format_func=lambda n: names[n].title if n in names else n,
+def _worth(asked: Asked, settings: Site) -> dict[int, list[str]]:
+    """What each level is worth, said as soon as it can be read, whatever is still missing elsewhere."""
+    found: dict[int, list[str]] = {}
+    profile, file = asked.profile, asked.entry.file
+    if profile is None:
+        return found
+    for row, level in zip(asked.entry.rows["level"], file.levels, strict=False):
+        if any(k.startswith(f"level.{row}.") for k in asked.problems):
+            continue
+        alone = CaseFile(pkcalc_case=1, drug=profile.id).model_copy(
+            update={
+                "patient": file.patient,
+                "albumin": file.albumin,
+                "context": file.context,
+                "levels": (level.model_copy(update={"on_dose": None}),),
+            }
         )
-        right.button("Open it", key="open-demo", on_click=_open_demonstration)
-        st.file_uploader("Case file", type=["json"], key=_upload_key(), max_upload_size=2, on_change=_open_upload)
-        for text in st.session_state.get("upload_problems", ()):
-            look.beside(text, needed=False)
-        st.button("Start afresh: forget everything on this page", key="forget", on_click=_forget)
-    mark = st.session_state.get("demonstration")
-    if mark is not None:
-        look.say(
-            f"Demonstration: {mark.title}. What this shows: {mark.shows} It stays one when edited.",
-            "line",
-        )
+        try:
+            for o in observe(check_case(alone), profile, settings):
+                found[row] = tell.read_level(o)
+        except PkcalcError:
+            continue
+    return found

@@ -18,9 +18,12 @@ from pkcalc.case import (
     AlbuminFile,
     AnswerFile,
     CaseFile,
+    ChosenFile,
     DoseFile,
     LevelFile,
+    LoadFile,
     PatientFile,
+    PlanFile,
     ProposedFile,
     TargetFile,
 )
@@ -35,7 +38,7 @@ AGE_UNITS = ("years", "months", "weeks")
 KINDS = ("total", "free", "normalised")
 MAX_PASTED = 1000
 
-DOSE_FIELDS = ("said", "form", "from", "until", "for_about", "missed", "source", "confirmed", "given_by")
+DOSE_FIELDS = ("said", "form", "product", "from", "until", "for_about", "missed", "source", "confirmed", "given_by")
 LEVEL_FIELDS = (
     "value", "unit", "kind", "drawn", "on_dose", "sample", "normalised_by",
     "albumin", "albumin_unit", "valproate",
@@ -99,16 +102,15 @@ def case_of(values: Mapping[str, Any]) -> Entry:
     low, high = (joined(text(values, key), unit) for key in ("target_low", "target_high"))
     target = None
     if low or high:
-        old = base.target if base else None
-        kind = text(values, "target_kind") or (old.kind if old else "total")
-        target = TargetFile(low=low, high=high, kind=kind, reason=old.reason if old else "")  # type: ignore[arg-type]
+        old = base.target if base and base.target else TargetFile(low="", high="")
+        kind = text(values, "target_kind") or old.kind
+        target = old.model_copy(update={"low": low, "high": high, "kind": kind})
     fields: dict[str, Any] = {
-        "pkcalc_case": 1,
         "drug": text(values, "drug"),
         "demonstration": values.get("demonstration"),
         "question": text(values, "question"),
         "now": text(values, "now"),
-        "patient": _patient(values),
+        "patient": _patient(values, base),
         "albumin": _albumin(values, base.albumin if base else None),
         "context": _context(values, base),
         "doses": (*doses, *pasted),
@@ -118,12 +120,11 @@ def case_of(values: Mapping[str, Any]) -> Entry:
         "proposed": tuple(own),
         "population": text(values, "population"),
         "method": text(values, "method"),
+        "plan": _plan(values, base),
+        "chosen": _chosen(values, base, own, own_rows, doses),
     }
-    if base is not None:
-        kept = {"comment": base.comment, "label": base.label, "plan": base.plan, "chosen": base.chosen}
-        fields |= kept | {"forecast_then": base.forecast_then}
     return Entry(
-        file=CaseFile(**fields),
+        file=(base or CaseFile(pkcalc_case=1, drug="")).model_copy(update=fields),
         rows={"dose": tuple(dose_rows), "level": tuple(level_rows), "own": tuple(own_rows)},
         problems=tuple(problems),
         assumed=assumed,
@@ -151,55 +152,43 @@ def _doses(
         old: DoseFile | None = values.get(f"dose.{row}.base")
         where = f"Dose line {len(lines) + 1}"
         wording = get("said")
-        kept = {"comment": old.comment} if old else {}
-        common: dict[str, Any] = {
-            **kept,
+        filled: dict[str, Any] = {
             "form": get("form"),
+            "product": get("product"),
             "source": get("source") or "given",
             "given_by": get("given_by") or "unknown",
             "confirmed": get("confirmed") or "unknown",
-        }
-        missed = tuple(x.strip() for x in re.split(r"[;\n]", get("missed")) if x.strip())
-        dates: dict[str, Any] = {
-            "from": get("from"),
+            "from_": get("from"),
             "until": get("until"),
             "for_about": get("for_about"),
-            "missed": missed,
+            "missed": tuple(x.strip() for x in re.split(r"[;\n]", get("missed")) if x.strip()),
         }
         if old is not None and wording == say(old):
-            shape = {name: getattr(old, name) for name in ("amount", "every", "daily", "over", "rate")}
             if old.at:
-                line = DoseFile(**common, **shape, at=get("from"), missed=missed, until=dates["until"])
-            else:
-                line = DoseFile(**common, **shape, **dates)
+                filled |= {"at": filled["from_"], "from_": ""}
         else:
-            line = _line(take_apart(wording), common, dates, wording, where, problems)
-        lines.append(line)
+            filled |= _shape(take_apart(wording), wording, filled["from_"], where, problems)
+        lines.append((old or DoseFile()).model_copy(update=filled))
         rows.append(row)
     return lines, rows
 
 
-def _line(
-    said: Said,
-    common: dict[str, Any],
-    dates: dict[str, Any],
-    wording: str,
-    where: str,
-    problems: list[Problem],
-) -> DoseFile:
+def _shape(said: Said, wording: str, start: str, where: str, problems: list[Problem]) -> dict[str, Any]:
+    """The fields that say what kind of line it is, all of them, so that nothing of an older wording stays."""
+    shape: dict[str, Any] = {"amount": "", "every": "", "daily": (), "at": "", "over": "", "rate": ""}
     if not wording:
         problems.append(Problem(where, "no dose was given", EXAMPLES, "Enter the dose as said aloud"))
-        return DoseFile(**common, every="24 h", **dates)
+        return shape | {"every": "24 h"}
     if said.unclear:
         problems.append(Problem(where, said.unclear, EXAMPLES, said.fix))
-        return DoseFile(**common, every="24 h", **dates)
+        return shape | {"every": "24 h"}
     if said.rate:
-        return DoseFile(**common, **dates, rate=said.rate)
+        return shape | {"rate": said.rate}
     if said.once:
-        if not dates["from"]:
+        if not start:
             problems.append(Problem(f"{where}, from", "no time was given", "the time of the single dose", "Enter it"))
-        return DoseFile(**common, amount=said.amount, over=said.over, at=dates["from"] or "?", until=dates["until"])
-    return DoseFile(**common, **dates, amount=said.amount, every=said.every, daily=said.daily, over=said.over)
+        return shape | {"amount": said.amount, "over": said.over, "at": start or "?", "from_": ""}
+    return shape | {"amount": said.amount, "every": said.every, "daily": said.daily, "over": said.over}
 
 
 def _levels(values: Mapping[str, Any], problems: list[Problem]) -> tuple[list[LevelFile], list[int]]:
@@ -214,8 +203,7 @@ def _levels(values: Mapping[str, Any], problems: list[Problem]) -> tuple[list[Le
 
         old: LevelFile | None = values.get(f"level.{row}.base")
         albumin = joined(get("albumin"), get("albumin_unit"))
-        kept: dict[str, Any] = {"comment": old.comment} if old else {}
-        same = old.albumin if old and old.albumin else None
+        sample = old.albumin if old and old.albumin else AlbuminFile(value="")
         line = get("on_dose")
         kind = get("kind")
         if kind not in KINDS:
@@ -224,22 +212,16 @@ def _levels(values: Mapping[str, Any], problems: list[Problem]) -> tuple[list[Le
             problems.append(Problem(where, given, ", ".join(KINDS), "Choose what the laboratory measured"))
             kind = KINDS[0]  # never used: a problem takes every result away
         levels.append(
-            LevelFile(
-                **{
+            (old or LevelFile(value="", kind="total")).model_copy(
+                update={
                     "value": joined(get("value"), get("unit")),
                     "kind": kind,
                     "drawn": get("drawn"),
                     "normalised_by": get("normalised_by"),
                     "on_dose": int(line) if line.isdigit() else None,
-                    "albumin": same.model_copy(update={"value": albumin})
-                    if same and albumin
-                    else AlbuminFile(value=albumin)
-                    if albumin
-                    else None,
+                    "albumin": sample.model_copy(update={"value": albumin}) if albumin else None,
                     "valproate_level": get("valproate"),
                     "sample": get("sample") or "unknown",
-                    "comment": "",
-                    **kept,
                 }
             )
         )
@@ -263,23 +245,26 @@ def _own(
             own.append(old.model_copy(update={"form": form}))
         else:
             said = take_apart(wording, assume_times=True)
-            if not wording or said.unclear or said.once or said.rate or said.over:
+            if not wording or said.unclear or said.once or said.over:
                 found = said.unclear if said.unclear else "no repeated dose was given"
                 problems.append(Problem(where, found, EXAMPLES, said.fix or "Enter a repeated dose"))
             if said.assumed:
                 assumed[row] = f"Taken as {' and '.join(f'{d.amount} at {d.time}' for d in said.daily)}."
-            own.append(ProposedFile(form=form, amount=said.amount, every=said.every, daily=said.daily))
+            shape = {"amount": said.amount, "every": said.every, "daily": said.daily, "rate": said.rate}
+            own.append((old or ProposedFile()).model_copy(update={"form": form, **shape}))
         rows.append(row)
     return own, rows, assumed
 
 
-def _patient(values: Mapping[str, Any]) -> PatientFile:
-    return PatientFile(
-        age=joined(text(values, "age"), text(values, "age_unit")),
-        sex=text(values, "sex") or "unknown",  # type: ignore[arg-type]
-        weight=joined(text(values, "weight"), text(values, "weight_unit")),
-        weight_basis=text(values, "weight_basis") or "unknown",  # type: ignore[arg-type]
-        height=joined(text(values, "height"), text(values, "height_unit")),
+def _patient(values: Mapping[str, Any], base: CaseFile | None) -> PatientFile:
+    return (base.patient if base else PatientFile()).model_copy(
+        update={
+            "age": joined(text(values, "age"), text(values, "age_unit")),
+            "sex": text(values, "sex") or "unknown",
+            "weight": joined(text(values, "weight"), text(values, "weight_unit")),
+            "weight_basis": text(values, "weight_basis") or "unknown",
+            "height": joined(text(values, "height"), text(values, "height_unit")),
+        }
     )
 
 
@@ -287,17 +272,67 @@ def _albumin(values: Mapping[str, Any], old: AlbuminFile | None) -> AlbuminFile 
     value = joined(text(values, "albumin"), text(values, "albumin_unit"))
     if not value:
         return None
-    return AlbuminFile(
-        value=value,
-        taken=text(values, "albumin_taken"),
-        method=text(values, "albumin_method") or "unknown",  # type: ignore[arg-type]
-        after_infusion=text(values, "albumin_after_infusion") or "unknown",  # type: ignore[arg-type]
+    return (old or AlbuminFile(value="")).model_copy(
+        update={
+            "value": value,
+            "taken": text(values, "albumin_taken"),
+            "method": text(values, "albumin_method") or "unknown",
+            "after_infusion": text(values, "albumin_after_infusion") or "unknown",
+        }
     )
+
+
+def _plan(values: Mapping[str, Any], base: CaseFile | None) -> PlanFile:
+    old = base.plan if base else PlanFile()
+    load = None
+    form, aim, at = (text(values, k) for k in ("load_form", "load_aim", "load_at"))
+    if form or aim or at:
+        load = (old.load or LoadFile(form="")).model_copy(update={"form": form, "aim": aim, "at": at})
+    return old.model_copy(
+        update={
+            "shelf": text(values, "shelf"),
+            "order_by_loss": bool(values.get("order_by_loss")),
+            "load": load,
+            "restart_level": text(values, "restart_level"),
+            "start": text(values, "plan_start"),
+        }
+    )
+
+
+#: Keys of the choice "which regimen is chosen": the present one, one of the pharmacist's own, or as in the file.
+STAY, AS_OPENED = "stay", "as opened"
+
+
+def _chosen(
+    values: Mapping[str, Any],
+    base: CaseFile | None,
+    own: list[ProposedFile],
+    own_rows: list[int],
+    doses: list[DoseFile],
+) -> ChosenFile | None:
+    old = base.chosen if base else None
+    choice, words, draw = (text(values, k) for k in ("chosen", "own_words", "next_draw"))
+    regimen = None
+    if choice == AS_OPENED and old is not None:
+        regimen = old.regimen
+    elif choice == STAY:
+        going = [d for d in doses if not d.until and not d.at and not d.rate]
+        if going:
+            last = going[-1]
+            regimen = ProposedFile(
+                form=last.form, product=last.product, amount=last.amount, every=last.every
+            ).model_copy(update={"daily": last.daily})
+    elif choice.startswith("own ") and int(choice[4:]) in own_rows:
+        regimen = own[own_rows.index(int(choice[4:]))]
+    if regimen is None and not words and not draw:
+        return None
+    return (old or ChosenFile()).model_copy(update={"regimen": regimen, "words": words, "next_draw": draw})
 
 
 def _context(values: Mapping[str, Any], base: CaseFile | None) -> dict[str, Any]:
     found: dict[str, Any] = {}
-    for question in QUESTIONS:
+    order = [*(q for q in (base.context if base else ()) if q in QUESTIONS), *QUESTIONS]
+    for question in dict.fromkeys(order):
         answer = text(values, f"ctx.{question}")
         if not answer:
             continue
@@ -331,7 +366,7 @@ def _pasted(values: Mapping[str, Any], problems: list[Problem]) -> list[DoseFile
         cells = [c.strip() for c in re.split(r"\t|;", row)]
         if number == 1 and not any(c.isdigit() for c in row):
             continue  # a row of column heads
-        if len(cells) not in (2, 3):
+        if len(cells) not in (2, 3) or len(row) > 200:
             problems.append(
                 Problem(
                     f"Pasted row {number}",
@@ -382,6 +417,7 @@ def fields_of(file: CaseFile) -> dict[str, Any]:
             at + "base": dose,
             at + "said": say(dose),
             at + "form": dose.form or None,
+            at + "product": dose.product or None,
             at + "from": dose.at or dose.from_,
             at + "until": dose.until,
             at + "for_about": dose.for_about,
@@ -412,6 +448,19 @@ def fields_of(file: CaseFile) -> dict[str, Any]:
         values |= {key: number for key, (number, _) in ends}
     else:
         values |= {key: value for key, value in _target_texts(file) if value}
+    plan, chosen = file.plan, file.chosen
+    values |= {
+        "shelf": plan.shelf or None,
+        "order_by_loss": plan.order_by_loss,
+        "load_form": plan.load.form if plan.load else None,
+        "load_aim": plan.load.aim if plan.load else "",
+        "load_at": plan.load.at if plan.load else "",
+        "restart_level": plan.restart_level,
+        "plan_start": plan.start,
+        "chosen": AS_OPENED if chosen and chosen.regimen else None,
+        "own_words": chosen.words if chosen else "",
+        "next_draw": chosen.next_draw if chosen else "",
+    }
     values["target_unit"] = target_unit
     values["target_kind"] = file.target.kind if file.target else None
     values["own_rows"] = list(range(1, len(file.proposed) + 1))
@@ -438,7 +487,14 @@ def _part(values: dict[str, Any], key: str, value: str, units: tuple[str, ...], 
 # --- problems -> fields ----------------------------------------------------------------------------------
 
 _ROW = re.compile(r"^(Dose line|Level|Proposed regimen) (\d+)(?:, (.*))?$", re.I)
-_DOSE_PLACES = {"from": "from", "at": "from", "until": "until", "for about": "for_about", "missed": "missed"}
+_DOSE_PLACES = {
+    "product": "product",
+    "from": "from",
+    "at": "from",
+    "until": "until",
+    "for about": "for_about",
+    "missed": "missed",
+}
 _LEVEL_PLACES = {
     "drawn": "drawn",
     "kind": "kind",
@@ -461,6 +517,14 @@ _PLACES = {
     "target, low": "target_low",
     "target, high": "target_high",
     "population": "population",
+    "method": "method",
+    "plan, shelf": "shelf",
+    "plan, load, form": "load_form",
+    "plan, load, aim": "load_aim",
+    "plan, load, at": "load_at",
+    "plan, restart level": "restart_level",
+    "plan, start": "plan_start",
+    "chosen, next draw": "next_draw",
     "pasted doses": "pasted",
 }
 
@@ -473,6 +537,8 @@ def field_of(where: str, entry: Entry) -> str | None:
     if place.lower().startswith("context, "):
         key = place[9:].split(",")[0].strip().replace(" ", "_")
         return f"ctx.{key}" if key in QUESTIONS else None
+    if place.lower().startswith("chosen regimen"):
+        return "chosen"
     if place.lower().startswith("pasted row"):
         return "pasted"
     found = _ROW.match(place)

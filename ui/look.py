@@ -31,10 +31,13 @@ def say(text: str, kind: str = "line") -> None:
     st.html(f'<p class="pk-{kind}">{html(text)}</p>')
 
 
-def read_mark(values: Mapping[str, str]) -> None:
+def read_mark(values: Mapping[str, str], *, run: int, minutes: float) -> None:
     """What the server has read, for the browser to compare with what stands in the fields (page.js)."""
     read = {re.sub(r"[^a-zA-Z0-9_-]", "-", key): value for key, value in values.items()}
-    st.html(f'<span class="pk-read" hidden data-read="{escape(json.dumps(read))}"></span>')
+    st.html(
+        f'<span class="pk-read" hidden data-run="{run}" data-minutes="{minutes}" '
+        f'data-read="{escape(json.dumps(read))}"></span>'
+    )
 
 
 def beside(text: str, *, needed: bool) -> None:
@@ -54,15 +57,20 @@ def lines(items: Sequence[str], kind: str = "lines") -> None:
     st.html(f'<ul class="pk-{kind}">{out}</ul>')
 
 
+def preformatted(text: str, label: str) -> None:
+    """Text in its own layout, to be scrolled with the keyboard too."""
+    st.html(f'<pre class="pk-note" role="region" aria-label="{escape(label)}" tabindex="0">{escape(text)}</pre>')
+
+
 def table(heads: Sequence[str], rows: Sequence[Sequence[str]], *, label: str, marks: Sequence[str] = ()) -> None:
     """A table that becomes a stack of cards on a narrow screen. marks: a word per row that sets its look."""
     head = "".join(f'<th scope="col">{escape(h)}</th>' for h in heads)
     body = []
     for i, row in enumerate(rows):
         kind = escape(marks[i].replace(" ", "-")) if i < len(marks) and marks[i] else "plain"
-        cells = [f'<th scope="row">{html(row[0])}</th>']
+        cells = [f'<th scope="row"><span>{html(row[0])}</span></th>']
         cells += [
-            f'<td data-head="{escape(h)}"{"" if c else " class=pk-empty"}>{html(c)}</td>'
+            f'<td data-head="{escape(h)}"{"" if c else " class=pk-empty"}><span>{html(c)}</span></td>'
             for h, c in zip(heads[1:], row[1:], strict=True)
         ]
         body.append(f'<tr class="pk-row-{kind}">{"".join(cells)}</tr>')

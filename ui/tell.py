@@ -2,8 +2,10 @@
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+import base64
+from collections.abc import Callable, Sequence
 from html import escape
+from math import isfinite
 
 import streamlit as st
 from pkcalc_form import look
@@ -13,18 +15,23 @@ from pkcalc.cautions import percent
 from pkcalc.consult import Consult, Shown
 from pkcalc.errors import Caution
 from pkcalc.estimate.result import Band, Estimate
+from pkcalc.levels import Observation
+from pkcalc.note.annex import DANGER_HEADS, danger_row, estimate_lines, populations_compared
+from pkcalc.note.charts import Chart
 from pkcalc.note.data import dumps, note_data
-from pkcalc.note.document import (
-    DEFERS,
-    DEMONSTRATION,
+from pkcalc.note.document import DEFERS, DEMONSTRATION, compose
+from pkcalc.note.front import forecast_lines, page_one, paste_block
+from pkcalc.note.text import render
+from pkcalc.note.words import (
     FORECAST_HEADS,
-    compose,
     days_words,
-    estimate_lines,
     forecast_row,
     level_words,
+    mark_of,
+    regimen_words,
+    short_band,
 )
-from pkcalc.note.text import render
+from pkcalc.note.workings import workings
 from pkcalc.units import show, show_number
 
 STOPPED = "The calculation stopped. No number is shown. Please report this fault to the maintainers of this page."
@@ -115,18 +122,26 @@ def estimates_table(estimates: Sequence[Estimate]) -> None:
     )
 
 
+def read_level(o: Observation) -> list[str]:
+    """One level said back: what it is worth at normal binding, and the step that led there."""
+    said = f"Read as {o.level.typed.text} {o.level.kind}"
+    if not o.readable:
+        low, high = show_number(o.low_mg_per_L), show(o.high_mg_per_L, "mg/L")
+        said += f": no single reading, {low} to {high} possible"
+    elif o.working_mg_per_L != o.level.reported_mg_per_L:
+        said += f": worth {show(o.working_mg_per_L, 'mg/L')} total at normal binding"
+    return [f"{said}.", *o.caveats]
+
+
 def worth(consult: Consult) -> list[str]:
     """Each level: as typed, what it is worth, how settled it was."""
     found = []
     for o in consult.observations:
-        said = f"{o.name}: {o.level.typed.text} {o.level.kind}"
-        if not o.readable:
-            low, high = show_number(o.low_mg_per_L), show(o.high_mg_per_L, "mg/L")
-            said += f", no single reading: {low} to {high} possible"
-        elif o.working_mg_per_L != o.level.reported_mg_per_L:
-            said += f", worth {show(o.working_mg_per_L, 'mg/L')} total at normal binding"
-        found.append(f"{said}.")
-        found += [f"   {c}" for c in o.caveats]
+        first, *more = read_level(o)
+        found.append(f"{o.name}: {first.removeprefix('Read as ')}")
+        found += [f"   {x}" for x in (*o.steps, *more)]
+        if o.set_aside:
+            found.append(f"   Not used for the estimate: {o.set_aside}.")
         found += [f"   {s.sentence}" for s in consult.settling if s.level == o.level.index]
     return found
 
@@ -141,8 +156,16 @@ def estimate(consult: Consult) -> None:
         return
     look.say(f"{estimate_sentence(consult)} ({chosen.point.kind}; method: {chosen.method}).", "answer")
     estimates_table(list(consult.estimates.values()))
-    if consult.difference:
-        look.say(consult.difference)
+    look.lines([x for x in (f"Chosen: {consult.chosen_why}.", consult.difference) if x])
+    if consult.verdict is not None:
+        look.say(consult.verdict.text)
+    if chosen.fit:
+        names = {o.level.index: o.name for o in consult.observations}
+        look.table(
+            ("Level", "Measured, normal binding (mg/L)", "By the estimate (mg/L)"),
+            [(names.get(f.level, ""), show_number(f.observed_mg_per_L), short_band(f.predicted)) for f in chosen.fit],
+            label="How the levels fit: median (90 % interval)",
+        )
     if consult.observations:
         spread = consult.observations[0].spread
         look.say(
@@ -150,11 +173,34 @@ def estimate(consult: Consult) -> None:
             f"which the assay is {show_number(100 * spread.assay_cv)} %.",
             "hint",
         )
-    with st.expander("How this was found", expanded=False, key="workings"):
-        look.lines([*estimate_lines(chosen), f"Chosen: {consult.chosen_why}."])
-        for section in compose(consult).sections:
-            if section.title == "Workings":
-                look.lines(section.lines)
+
+
+def how(consult: Consult) -> None:
+    """The numbers behind the estimate, and the equations with the numbers in them."""
+    if consult.chosen is None:
+        return
+    look.lines(estimate_lines(consult.chosen))
+    found = workings(consult)
+    for name, steps in found.groups:
+        look.lines([f"{name}.", *(f"   {s.line}" for s in steps)])
+    look.lines(list(found.said))
+
+
+def populations(consult: Consult) -> None:
+    """What the same record says under the other published populations; worked out only when asked for."""
+    rows = []
+    for name, words, e in populations_compared(consult):
+        vmax, km = e.summary["vmax_mg_per_day"], e.summary["km_mg_per_L"]
+        used = " (used)" if consult.prior is not None and name == consult.prior.population else ""
+        rows.append((words + used, short_band(vmax), short_band(km)))
+    if len(rows) < 2:
+        look.say("There is nothing to compare: this needs a weight and the whole record.")
+        return
+    look.table(
+        ("Population", "Vmax (mg/day of active drug)", "Km (mg/L)"),
+        rows,
+        label="The same record and levels under each published population: median (90 % interval)",
+    )
 
 
 def estimate_sentence(consult: Consult | None) -> str:
@@ -182,47 +228,124 @@ def goal_line(consult: Consult) -> str:
 def regimen(shown: Shown, consult: Consult) -> None:
     """One regimen in sentences."""
     f = shown.forecast
-    look.say(
-        f"{shown.words}{'' if shown.offered else ': NOT OFFERED, the chance of too high is above the limit'}",
-        "answer",
-    )
-    lines = [
-        f"{show(f.rate_mg_per_day, 'mg/day', 4)} of active drug.",
-        f"{consult.scale.words[0].upper()}{consult.scale.words[1:]}: {level_words(f.total)}.",
-        f"At normal binding: {level_words(f.steady)}.",
-        f"Chance below the target {percent(f.below)}, within {percent(f.within)}, above {percent(f.above)} "
-        f"(of which no steady state {percent(f.no_steady_state)}); above the critical level "
-        f"{percent(f.above_critical)}.",
-        f"90 % of the way from the present level: {days_words(f.settle_days)}.",
-    ]
-    look.lines(lines)
+    mark = mark_of(shown)
+    look.say(f"{regimen_words(shown)}{f' ({mark})' if mark else ''}", "answer")
+    said = [f"{show(f.rate_mg_per_day, 'mg/day', 4)} of active drug.", *forecast_lines(shown, consult)]
+    if isfinite(f.percent_per_percent):
+        said.append(f"At this point 1 % more dose is {show_number(f.percent_per_percent, 2)} % more level.")
+    said += [f"Not offered: {why}" for why in shown.why_not]
+    look.lines(said)
+
+
+ORDERS = {
+    "daily dose": lambda s: s.forecast.rate_mg_per_day,
+    "chance within the target, highest first": lambda s: -s.forecast.within,
+    "chance of too high (every dose taken), lowest first": lambda s: s.danger,
+}
 
 
 def candidates(consult: Consult) -> None:
     look.say(goal_line(consult))
     if consult.aim_rate is not None:
         rate = consult.aim_rate
-        look.say(
+        said = [
             f"To hold {show(consult.goal.aim_mg_per_L, 'mg/L')} at normal binding: "
-            f"{show(rate.median, 'mg/day')} of active drug "
-            f"(90 % interval {_interval(rate)})."
-        )
+            f"{show(rate.median, 'mg/day')} of active drug (90 % interval {_interval(rate)})."
+        ]
         for form in dict.fromkeys(f for c in consult.case.courses for f in c.forms):
             known = consult.profile.forms[form]
-            look.say(
-                f"As {known.words}: {show(rate.median / known.active_fraction, known.amount_unit + '/day')} "
+            said.append(
+                f"   As {known.words}: {show(rate.median / known.active_fraction, known.amount_unit + '/day')} "
                 f"(salt factor {show_number(known.salt_factor)})."
             )
+        look.lines(said)
     for shown in consult.proposed:
         regimen(shown, consult)
-    if consult.table:
-        rows = [forecast_row(s) for s in consult.table]
+    rows = listed(consult)
+    if rows:
+        order = st.selectbox("Order of the rows (it is no advice)", list(ORDERS), index=0, key="order")
+        rows.sort(key=ORDERS.get(order, ORDERS["daily dose"]))
+        marks = ["not offered" if not s.offered else "present" if s.present else "" for s in rows]
         look.table(
             (*FORECAST_HEADS[:-1], "Remark"),
-            rows,
-            label="Doses around the present one, by daily dose. Median (90 % interval), fully taken, nothing "
-            "else changed.",
-            marks=["present" if s.present else "" if s.offered else "not offered" for s in consult.table],
+            [forecast_row(s) for s in rows],
+            label="Doses around the present one. Median (90 % interval); nothing else changed.",
+            marks=marks,
+        )
+        with st.expander("Danger of each, every dose taken", expanded=False, key="danger"):
+            look.table(DANGER_HEADS, [danger_row(s) for s in rows], label="Every dose taken", marks=marks)
+        _compare(rows)
+    plan = consult.plan
+    if plan is not None:
+        look.lines([*plan.lines, *(f"{s.words}: {mark_of(s)}. {' '.join(s.why_not)}" for s in rows if s.why_not)])
+        if plan.ranked:
+            look.say("By expected loss, as asked for: " + "; ".join(c.words for c in plan.ranked[:5]) + ".")
+
+
+def listed(consult: Consult) -> list[Shown]:
+    """The rows of the table: around the present dose, with the pharmacist's own among them."""
+    rows = [*consult.table, *(s for s in consult.proposed if s not in consult.table)]
+    return sorted(rows, key=lambda s: s.forecast.rate_mg_per_day)
+
+
+def _compare(rows: Sequence[Shown]) -> None:
+    words = [s.words for s in rows]
+    with st.expander("Compare two regimens", expanded=False, key="compare-two"):
+        two = st.multiselect("Two regimens", words, key="two", max_selections=2, placeholder="choose two")
+        if len(two) == 2 and set(two) <= set(words):
+            first, second = (rows[words.index(w)] for w in two)
+            heads = (*FORECAST_HEADS[1:-1], *DANGER_HEADS[1:])
+            columns = [(*forecast_row(s)[1:-1], *danger_row(s)[1:]) for s in (first, second)]
+            look.table(
+                ("", first.words, second.words),
+                list(zip(heads, *columns, strict=True)),
+                label="Two regimens side by side",
+            )
+
+
+def acute(consult: Consult) -> None:
+    """Loads, pausing and other forms, as the plan gives them; the whole of each stands in the note."""
+    plan = consult.plan
+    if plan is None:
+        return
+    for load in plan.loads:
+        form = consult.profile.forms[load.form]
+        offered = "" if load.offered else ": NOT OFFERED"
+        look.say(f"Load or top-up with {form.words}{offered}", "answer")
+        look.lines(
+            [
+                *load.order,
+                f"Level after it {level_words(load.after)}; {show(load.draw_after_h, 'h')} later "
+                f"{level_words(load.at_draw)}. Chance above the range {percent(load.above_high)}, above the critical "
+                f"level {percent(load.above_critical)}.",
+                *load.notes,
+                *load.why_not,
+            ]
+        )
+    look.lines(list(plan.no_load))
+    if plan.pause is not None:
+        pause = plan.pause
+        look.say("The level is too high: reduce in part, or pause", "answer")
+        look.lines(
+            [
+                pause.seizure_risk,
+                f"Level today {level_words(pause.now)}; give again at {show(pause.to_mg_per_L, 'mg/L')}. Without any "
+                f"dose that takes {days_words(pause.days)}.",
+                *pause.lines,
+                *(
+                    f"Partial reduction to {r.words}: down to {show(r.to_mg_per_L, 'mg/L')} in {days_words(r.days)}."
+                    for r in pause.reductions
+                ),
+            ]
+        )
+    for switch in plan.switches:
+        look.say(f"Another form: {switch.words}", "answer")
+        look.lines(
+            [
+                f"Equal would be {show(switch.exact_labelled_mg, 'mg/day')} as labelled; steady level "
+                f"{level_words(switch.steady)}.",
+                *switch.lines,
+            ]
         )
 
 
@@ -230,50 +353,90 @@ def candidates_sentence(consult: Consult | None) -> str:
     if consult is None or not consult.proposed:
         return ""
     first = consult.proposed[0]
-    return f"{first.words}: {level_words(first.forecast.total)}"
+    offered = "" if first.offered else " (not offered)"
+    return f"{first.words}{offered}: total {level_words(first.forecast.total)}"
 
 
 # --- 6 and 7 ---------------------------------------------------------------------------------------------
 
 
 def next_look(consult: Consult) -> None:
-    rows = [*consult.proposed, *(s for s in consult.table if s.present)]
-    if not rows:
-        look.say("Enter a regimen of your own above to see how long it takes to settle.")
-    for shown in rows:
-        name = "The present dose" if shown.present and not shown.proposed else shown.words
-        look.say(f"{name}: 90 % of the way to its level takes {days_words(shown.forecast.settle_days)}.")
-    if rows:
-        look.say("A level drawn earlier than this reads too low after an increase.", "hint")
+    plan = consult.plan
+    if plan is None or plan.next_level is None:
+        look.say(plan.no_next_level if plan is not None and plan.no_next_level else NO_NEXT)
+        return
+    found = plan.next_level
+    look.say(found.action, "answer")
+    if found.safety_action:
+        look.say(f"Early safety level: {found.safety_action}", "answer")
+    look.lines(
+        [
+            f"For {found.regimen_words}.",
+            f"90 % of the way to the steady level takes {days_words(found.settled_days)}.",
+            *found.why,
+        ]
+    )
+
+
+NO_NEXT = "There is no estimate from which to tell when a level would say something."
+
+
+def next_sentence(consult: Consult | None) -> str:
+    if consult is None or consult.plan is None or consult.plan.next_level is None:
+        return ""
+    return consult.plan.next_level.action
+
+
+def picture(found: Chart) -> str:
+    """A chart as the note prints it, as a picture with its text alternative."""
+    data = base64.b64encode(found.svg().encode()).decode()
+    return (
+        '<div class="pk-chart" role="region" tabindex="0" aria-label="Chart">'
+        f'<img src="data:image/svg+xml;base64,{data}" alt="{escape(found.alt)}"></div>'
+    )
 
 
 def note(consult: Consult) -> None:
-    text = render(compose(consult))
-    st.html(f'<pre class="pk-note" role="region" aria-label="Note" tabindex="0">{escape(text)}</pre>')
+    for section in page_one(consult):
+        st.html(f'<h2 class="pk-group">{escape(section.title)}</h2>')
+        look.lines(section.lines)
+    with st.expander("Block to paste into the record", expanded=False, key="paste-block"):
+        st.code("\n".join(paste_block(consult)), language=None, wrap_lines=True)
     name = "demonstration" if consult.case.demonstration else "consult"
-    left, middle, right = st.columns(3)
-    left.download_button(
-        "Note as text",
-        data=lambda: text,
-        file_name=f"{name}-note.txt",
-        mime="text/plain",
-        on_click="ignore",
-        key="get-text",
+    kinds: tuple[tuple[str, str, str, Callable[[], str | bytes]], ...] = (
+        ("Note as text", "txt", "text/plain", lambda: render(compose(consult))),
+        ("Note as HTML", "html", "text/html", lambda: _html(consult)),
+        ("Note as PDF", "pdf", "application/pdf", lambda: _pdf(consult)),
+        ("Note as JSON", "json", "application/json", lambda: dumps(note_data(consult))),
     )
-    middle.download_button(
-        "Note as JSON",
-        data=lambda: dumps(note_data(consult)),
-        file_name=f"{name}-note.json",
-        mime="application/json",
-        on_click="ignore",
-        key="get-json",
-    )
-    right.download_button(
-        "Case file",
-        data=lambda: dump_case(consult.case),
-        file_name=f"{name}-case.json",
-        mime="application/json",
-        on_click="ignore",
-        key="get-case",
-    )
+    with st.container(horizontal=True):
+        for label, ending, mime, make in kinds:
+            st.download_button(
+                label, data=make, file_name=f"{name}-note.{ending}", mime=mime, on_click="ignore", key=f"get-{ending}"
+            )
+        st.download_button(
+            "Case file",
+            data=lambda: dump_case(consult.case),
+            file_name=f"{name}-case.json",
+            mime="application/json",
+            on_click="ignore",
+            key="get-case",
+        )
     look.say(DEFERS, "hint")
+
+
+def _html(consult: Consult) -> str:
+    from pkcalc.note.html import render_html
+
+    return render_html(consult)
+
+
+def _pdf(consult: Consult) -> bytes:
+    from pkcalc.note.pdf import render_pdf
+
+    return render_pdf(consult)
+
+
+def whole_note(consult: Consult) -> None:
+    """The note with its annex, as text; made only when asked for."""
+    look.preformatted(render(compose(consult)), "Note")

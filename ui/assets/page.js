@@ -6,6 +6,8 @@
   window.pkcalcReady = true;
   let unsaved = false;
   let asked = false;
+  let newerThan = -1; // a choice was made: wait for the run that has read it
+  let touched = Date.now();
   const inForm = (e) => e instanceof Element && e.closest('[class*="st-key-step"]') !== null;
   const fields = () => document.querySelectorAll(
     '[class*="st-key-step"] input[type="text"]:not([role="combobox"]), [class*="st-key-step"] textarea');
@@ -19,6 +21,7 @@
     const mark = document.querySelector(".pk-read");
     let same = mark !== null;
     if (mark !== null) {
+      if (Number(mark.getAttribute("data-run")) <= newerThan) same = false;
       const read = JSON.parse(mark.getAttribute("data-read") || "{}");
       for (const field of fields()) {
         if ((read[keyOf(field)] || "") !== field.value) { same = false; break; }
@@ -27,8 +30,39 @@
     document.body.classList.toggle("pk-typing", !same);
   };
   const later = () => { if (!asked) { asked = true; requestAnimationFrame(compare); } };
+  const release = () => {
+    const app = document.querySelector('[data-testid="stApp"]');
+    if (app && app.getAttribute("data-test-script-state") === "running") { setTimeout(release, 500); return; }
+    newerThan = -1;
+    compare();
+  };
+  const chose = () => {
+    unsaved = true;
+    const mark = document.querySelector(".pk-read");
+    newerThan = mark === null ? -1 : Number(mark.getAttribute("data-run"));
+    compare();
+    setTimeout(release, 2000); // the same choice again is no change: nothing new will come
+  };
   document.addEventListener("input", (event) => { if (inForm(event.target)) { unsaved = true; compare(); } }, true);
-  document.addEventListener("change", (event) => { if (inForm(event.target)) unsaved = true; }, true);
+  document.addEventListener("change", (event) => {
+    if (!inForm(event.target)) return;
+    unsaved = true;
+    if (event.target.matches('input[type="radio"], input[type="checkbox"]')) chose();
+  }, true);
+  document.addEventListener("click", (event) => {
+    if (event.target instanceof Element && event.target.closest('[role="option"]')) chose();
+  }, true);
+  document.addEventListener("keydown", (event) => {
+    const field = event.target;
+    if (event.key === "Enter" && field instanceof Element && field.matches('[role="combobox"][aria-expanded="true"]')) chose();
+  }, true);
+  for (const kind of ["keydown", "pointerdown"]) document.addEventListener(kind, () => { touched = Date.now(); }, true);
+  // A page left alone forgets: it loads anew, which begins a new and empty session.
+  setInterval(() => {
+    const mark = document.querySelector(".pk-read");
+    const minutes = mark === null ? 0 : Number(mark.getAttribute("data-minutes"));
+    if (minutes > 0 && Date.now() - touched > minutes * 60000) { unsaved = false; window.location.reload(); }
+  }, 5000);
   new MutationObserver(later).observe(document.body, {
     childList: true, subtree: true, attributes: true, attributeFilter: ["data-read", "value"] });
   document.addEventListener("click", (event) => {

@@ -1,0 +1,231 @@
+"""Before and around a consult: who may see the page, opening and forgetting a case, the second entry."""
+
+from __future__ import annotations
+
+import os
+import time
+
+import streamlit as st
+from pkcalc_form import entry as fields
+from pkcalc_form import look, tell
+
+from pkcalc.case import Case, CaseFile, check_case, dump_case_file, parse_case_text
+from pkcalc.demos import demonstrations
+from pkcalc.errors import CaseError
+from pkcalc.reentry import compare
+from pkcalc.site import Site, load_site, no_site
+
+SITE = "PKCALC_SITE"
+NO_SIGN_IN = "PKCALC_WITHOUT_SIGN_IN"
+TOLD_TWICE = "yes, and told twice"
+LOOPBACK = ("127.0.0.1", "localhost", "::1")
+
+
+def clock() -> float:
+    """Seconds that only go forward."""
+    return time.monotonic()
+
+
+def site() -> Site:
+    """The service's own settings, named when the form was started."""
+    path = os.environ.get(SITE, "")
+    return load_site(path) if path else no_site()
+
+
+# --- who may see the page --------------------------------------------------------------------------------
+
+
+def sign_in_is_set_up() -> bool:
+    """True where the hospital's own sign-in is named in the secrets file beside the page."""
+    return bool(st.secrets.load_if_toml_exists()) and "auth" in st.secrets
+
+
+def may_be_seen() -> bool:
+    """On this machine: yes. Elsewhere: only after sign-in, or where whoever started it said so twice."""
+    if sign_in_is_set_up():
+        if st.user.is_logged_in:
+            return True
+        look.say("Sign in with your hospital account to use this page.")
+        st.button("Sign in", on_click=st.login, key="sign-in")
+        return False
+    if str(st.get_option("server.address")) in LOOPBACK or os.environ.get(NO_SIGN_IN) == TOLD_TWICE:
+        return True
+    look.say(
+        "This page refuses to be shown to other machines without sign-in. Start it with pkcalc form, which binds "
+        "it to this machine, or set up the hospital's sign-in first.",
+        "stopped",
+    )
+    return False
+
+
+# --- opening, keeping and forgetting ---------------------------------------------------------------------
+
+
+def forget(*keep: str) -> None:
+    """Everything typed, opened and found, but for what is named.
+
+    The place for files gets a new name: a file still lying in the old one would be read again with the next
+    change, over what was edited since.
+    """
+    kept = {key: st.session_state[key] for key in keep if key in st.session_state}
+    turn = st.session_state.get("turn", 0)
+    for key in list(st.session_state):
+        del st.session_state[key]
+    st.session_state["turn"] = turn + 1
+    for key, value in kept.items():
+        st.session_state[key] = value
+
+
+def forget_when_left_alone(minutes: float) -> None:
+    """A session left alone forgets its case. The browser reloads the page by itself after the same time."""
+    state = st.session_state
+    now = clock()
+    if now - state.get("touched", now) > minutes * 60:
+        forget()
+        state["left_alone"] = minutes
+    state["touched"] = now
+
+
+def open_file(file: CaseFile, *keep: str) -> None:
+    forget(*keep)
+    for key, value in fields.fields_of(file).items():
+        st.session_state[key] = value
+    st.session_state["opened"] = True
+    for kind in ("dose_rows", "level_rows", "own_rows"):
+        if not st.session_state.get(kind):
+            st.session_state[kind] = [1]
+
+
+def _open_demonstration() -> None:
+    name, commit = st.session_state.get("demo_name"), bool(st.session_state.get("commit_first"))
+    for demo in demonstrations():
+        if demo.name == name:
+            open_file(parse_case_text(demo.text))
+            st.session_state["committing"] = commit
+
+
+def _upload_key() -> str:
+    return f"upload-{st.session_state.get('turn', 0)}"
+
+
+def _open_upload() -> None:
+    upload = st.session_state.get(_upload_key())
+    if upload is None:
+        return
+    try:
+        file = parse_case_text(upload.getvalue())
+    except CaseError as error:
+        st.session_state["upload_problems"] = [p.text for p in error.problems]
+        return
+    open_file(file, "first_entry")
+
+
+def opening() -> None:
+    """Title, what comes first, and the ways to begin."""
+    st.html("<h1>pkcalc: from levels to the next dose, where elimination saturates</h1>")
+    st.html(f'<p class="pk-first" role="note"><b>First:</b> {tell.URGENT}</p>')
+    look.say(
+        "Your local protocol comes first. This page supports licensed pharmacists and physicians and "
+        "replaces neither. Nothing typed here is kept after the tab is closed, and no name or number of a "
+        "patient belongs here.",
+        "defer",
+    )
+    with (
+        st.container(key="tools"),
+        st.expander("Open a demonstration or a case file, or start afresh", key="tools-fold"),
+    ):
+        names = {d.name: d for d in demonstrations()}
+        left, right = st.columns([3, 1], vertical_alignment="bottom")
+        left.selectbox(
+            "Demonstration (invented, not a patient)",
+            list(names),
+            index=None,
+            key="demo_name",
+            placeholder="choose one",
+            format_func=lambda n: names[n].title if n in names else n,
+        )
+        right.button("Open it", key="open-demo", on_click=_open_demonstration)
+        st.checkbox("Commit first: hide the answers of the demonstration until I have written mine", key="commit_first")
+        st.file_uploader("Case file", type=["json"], key=_upload_key(), max_upload_size=2, on_change=_open_upload)
+        for text in st.session_state.get("upload_problems", ()):
+            look.beside(text, needed=False)
+        st.button("Start afresh: forget everything on this page", key="forget", on_click=forget)
+    with st.container():
+        minutes = st.session_state.pop("left_alone", None)
+        if minutes is not None:
+            look.say(f"This page was left alone for more than {minutes:g} min, so it forgot the case.", "empty-state")
+        mark = st.session_state.get("demonstration")
+        if mark is not None:
+            look.say(f"Demonstration: {mark.title}. What this shows: {mark.shows} It stays one when edited.")
+        if st.session_state.get("first_entry"):
+            look.say(
+                "Second entry: type the case again from the chart, without the first entry. Both are compared in "
+                "section 7.",
+                "empty-state",
+            )
+
+
+def _reveal() -> None:
+    dose, level = (str(st.session_state.get(k) or "").strip() for k in ("my_dose", "my_level"))
+    if dose and level:
+        st.session_state["committed"] = (dose, level)
+        st.session_state["committing"] = False
+    else:
+        st.session_state["commit_asked"] = True
+
+
+def committing(demonstration: bool) -> str:
+    """For residents: what stands in place of the results until an own answer is written; "" where nothing does."""
+    with st.container(key="commit"):
+        state = st.session_state
+        if demonstration and state.get("committing"):
+            st.html('<h2 class="pk-group">Your answer first</h2>')
+            st.text_input("The dose you would give next", key="my_dose", max_chars=120)
+            st.text_input("The level you expect from it, and when", key="my_level", max_chars=120)
+            st.button("Reveal", key="reveal", on_click=_reveal)
+            if state.get("commit_asked"):
+                look.beside("write both before the answers are revealed.", needed=True)
+            return "Hidden until you have written your own dose and expected level above."
+        if demonstration and state.get("committed"):
+            dose, level = state["committed"]
+            look.say(f"You wrote: dose {dose}; expected level {level}. Compare below.", "echo")
+    return ""
+
+
+# --- the second pharmacist -------------------------------------------------------------------------------
+
+
+def _start_second(text: str) -> None:
+    demonstration = st.session_state.get("demonstration")
+    forget()
+    st.session_state["first_entry"] = text
+    if demonstration is not None:
+        st.session_state["demonstration"] = demonstration
+
+
+def second_entry(case: Case | None, settings: Site) -> None:
+    """Blind re-entry: the first entry is put aside unseen, the case typed again, and both compared."""
+    with st.expander("Blind re-entry by the second pharmacist", expanded=False, key="second"):
+        first = st.session_state.get("first_entry")
+        if not first:
+            look.say(
+                "The second pharmacist types weight, doses, levels and dates again from the chart, without seeing this "
+                "entry. Every difference is then listed.",
+                "hint",
+            )
+            if case is not None:
+                st.button(
+                    "Put this entry aside and begin the second",
+                    key="begin-second",
+                    on_click=_start_second,
+                    args=(dump_case_file(case.file),),
+                )
+            return
+        if case is None:
+            look.say("The second entry is not complete yet.")
+            return
+        comparison = compare(check_case(parse_case_text(first)), case, settings, forecasts=False)
+        look.say(comparison.verdict, "answer")
+        look.lines([d.text for d in comparison.differences])
+        if comparison.same_value:
+            look.lines(["Written differently, the same value:", *(f"   {d.text}" for d in comparison.same_value)])
