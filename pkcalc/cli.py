@@ -54,9 +54,7 @@ def _usage_error(error: click.ClickException) -> None:
             "allowed": "",
             "fix": "See pkcalc --help",
         }
-        _print_json(
-            {"pkcalc_note": 1, "outcome": "input error", "problems": [problem], "version": __version__}
-        )
+        _print_json({"pkcalc_note": 1, "outcome": "input error", "problems": [problem], "version": __version__})
     else:
         error.show()
     sys.exit(2)
@@ -67,9 +65,7 @@ def _crash(error: Exception) -> None:
 
     if isinstance(error, (CaseError, CannotEstimate, DrugFileError)):
         fail(error, _asked_for_json())
-    message = (
-        f"The calculation stopped ({type(error).__name__}). No number was given. Please report this fault."
-    )
+    message = f"The calculation stopped ({type(error).__name__}). No number was given. Please report this fault."
     if _asked_for_json():
         _print_json({"pkcalc_note": 1, "outcome": "fault", "message": message, "version": __version__})
     click.echo(message, err=True)
@@ -94,9 +90,7 @@ def fail(error: CaseError | CannotEstimate | DrugFileError, as_json: bool) -> No
                 "allowed": "",
                 "fix": "Correct the file",
             }
-            _print_json(
-                {"pkcalc_note": 1, "outcome": "input error", "problems": [problem], "version": __version__}
-            )
+            _print_json({"pkcalc_note": 1, "outcome": "input error", "problems": [problem], "version": __version__})
         else:
             click.echo(str(error), err=True)
         sys.exit(2)
@@ -163,9 +157,7 @@ def _printed(consult: Consult, output_format: str) -> str | bytes:
     return render(compose(consult))
 
 
-_format = click.option(
-    "--format", "output_format", type=click.Choice(FORMATS), default="text", show_default=True
-)
+_format = click.option("--format", "output_format", type=click.Choice(FORMATS), default="text", show_default=True)
 _note_format = click.option(
     "--format", "output_format", type=click.Choice(NOTE_FORMATS), default="text", show_default=True
 )
@@ -203,18 +195,10 @@ def note(
 
 @cli.command()
 @click.option("--drug", default="phenytoin", show_default=True, help="A drug of `pkcalc drugs`.")
-@click.option(
-    "--form", "forms", multiple=True, required=True, help="Salt or product: once, or once per dose."
-)
-@click.option(
-    "--dose", "doses", multiple=True, required=True, help='For example "300 mg/day"; repeat per pair.'
-)
-@click.option(
-    "--level", "levels", multiple=True, required=True, help='For example "8 mg/L"; in the same order.'
-)
-@click.option(
-    "--kind", type=click.Choice(["total", "free", "normalised"]), default="total", show_default=True
-)
+@click.option("--form", "forms", multiple=True, required=True, help="Salt or product: once, or once per dose.")
+@click.option("--dose", "doses", multiple=True, required=True, help='For example "300 mg/day"; repeat per pair.')
+@click.option("--level", "levels", multiple=True, required=True, help='For example "8 mg/L"; in the same order.')
+@click.option("--kind", type=click.Choice(["total", "free", "normalised"]), default="total", show_default=True)
 @click.option("--weight", default="", help='For example "70 kg".')
 @click.option("--age", default="", help='For example "45 years".')
 @click.option("--albumin", default="", help='For example "29 g/L".')
@@ -300,9 +284,7 @@ def case_of_pairs(
         amount = _amount_of_rate(dose, f"Dose {i + 1}", problems)
         rows.append(DoseFile(form=form, amount=amount, every="24 h"))
     wanted = tuple(
-        ProposedFile(
-            form=per_dose[-1], amount=_amount_of_rate(p, f"Proposed dose {i + 1}", problems), every="24 h"
-        )
+        ProposedFile(form=per_dose[-1], amount=_amount_of_rate(p, f"Proposed dose {i + 1}", problems), every="24 h")
         for i, p in enumerate(proposed)
     )
     if problems:
@@ -373,9 +355,7 @@ def drugs(name: str | None, output_format: str) -> None:
             click.echo(f"{n:<16} {profile.scope}")
         return
     if name not in drug_names():
-        raise CaseError(
-            Problem("Drug", f'"{name[:40]}" was given', ", ".join(drug_names()), "Choose one of these")
-        )
+        raise CaseError(Problem("Drug", f'"{name[:40]}" was given', ", ".join(drug_names()), "Choose one of these"))
     lines = describe(load_profile(name))
     if output_format == "json":
         _print_json({"drug": name, "lines": list(lines)})
@@ -392,8 +372,15 @@ def schema() -> None:
 
 
 @cli.command()
-@click.option("--port", default=8501, show_default=True, help="Port on this machine.")
-def form(port: int) -> None:
+@click.option("--port", type=click.IntRange(1, 65535), default=8501, show_default=True, help="Port on this machine.")
+@_site
+@click.option("--address", default="127.0.0.1", show_default=True, help="Another address needs sign-in.")
+@click.option(
+    "--without-sign-in",
+    count=True,
+    help="Show the form to other machines without sign-in; counts only when given twice.",
+)
+def form(port: int, site: Path | None, address: str, without_sign_in: int) -> None:
     """Start the form on this machine only."""
     from importlib.util import find_spec
 
@@ -401,12 +388,39 @@ def form(port: int) -> None:
     if spec is None or spec.origin is None:
         raise click.ClickException("The form is not installed.")
     folder = Path(spec.origin).parent
-    click.echo(
-        f"The form opens at http://127.0.0.1:{port} on this machine only. Stop it with Ctrl+C.", err=True
-    )
-    command = [sys.executable, "-m", "streamlit", "run", str(folder / "page.py"), "--server.port", str(port)]
+    if site is not None:
+        from pkcalc.site import load_site
+
+        load_site(site)  # a fault in it is told here, not on the page
+        os.environ["PKCALC_SITE"] = str(site.resolve())
+    here = address in ("127.0.0.1", "localhost", "::1")
+    if not here and not _sign_in_is_set_up(folder):
+        if without_sign_in < 2:
+            raise click.UsageError(
+                f"The form is not shown at {address} without sign-in: set up the hospital's own sign-in first, or leave "
+                "--address out. To show it all the same, give --without-sign-in twice."
+            )
+        os.environ["PKCALC_WITHOUT_SIGN_IN"] = "yes, and told twice"
+    where = "on this machine only" if here else "to every machine that reaches this address"
+    click.echo(f"The form opens at http://{address}:{port} {where}. Stop it with Ctrl+C.", err=True)
+    command = [sys.executable, "-m", "streamlit", "run", str(folder / "page.py")]
+    command += ["--server.port", str(port), "--server.address", address]
     os.chdir(folder)
     os.execv(sys.executable, command)
+
+
+def _sign_in_is_set_up(folder: Path) -> bool:
+    """True where a secrets file with an [auth] part lies beside the page or in the home folder."""
+    import tomllib
+
+    for place in (folder / ".streamlit" / "secrets.toml", Path.home() / ".streamlit" / "secrets.toml"):
+        try:
+            found = tomllib.loads(place.read_text(encoding="utf-8"))
+        except (OSError, ValueError):
+            continue
+        if found.get("auth", {}).get("client_id"):
+            return True
+    return False
 
 
 # --- cases from elsewhere, and a second person's entry ---------------------------------------------------
@@ -434,9 +448,7 @@ def from_fhir(bundle: Path, drug: str, products: tuple[str, ...], output_format:
     for given in products:
         product, mark, form_name = given.rpartition("=")
         if not mark or not product:
-            raise CaseError(
-                Problem("--product", f'"{given[:40]}" was given', "PRODUCT=FORM", "Put = between the two")
-            )
+            raise CaseError(Problem("--product", f'"{given[:40]}" was given', "PRODUCT=FORM", "Put = between the two"))
         named[product] = form_name
     found = load_bundle(bundle, drug=drug, products=named)
     text = dump_case_file(found.file)
@@ -461,9 +473,7 @@ def from_fhir(bundle: Path, drug: str, products: tuple[str, ...], output_format:
 @click.option("--age", default="", help='For example "45 years".')
 @_format
 @_out
-def from_csv(
-    doses: Path, levels: Path, drug: str, weight: str, age: str, output_format: str, out: Path | None
-) -> None:
+def from_csv(doses: Path, levels: Path, drug: str, weight: str, age: str, output_format: str, out: Path | None) -> None:
     """Two CSV files in, doses and levels, a case file out."""
     from pkcalc.case import dump_case_file
     from pkcalc.spreadsheet import load_pair
@@ -507,9 +517,7 @@ def compare(first: Path, second: Path, output_format: str, out: Path | None, sit
 
 @cli.command()
 @click.option("--format", "output_format", type=click.Choice(FORMATS), default="text", show_default=True)
-@click.option(
-    "--save", type=click.Path(path_type=Path, dir_okay=False), help="Write the record as PDF to this file."
-)
+@click.option("--save", type=click.Path(path_type=Path, dir_okay=False), help="Write the record as PDF to this file.")
 def selfcheck(output_format: str, save: Path | None) -> None:
     """Re-run the published examples on this machine and print the table, for local acceptance.
 
