@@ -28,7 +28,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from pkcalc.estimate.error_model import RecordSpread
-from pkcalc.record import Dose, Record
+from pkcalc.record import Dose, Record, Repeated
 
 Floats = NDArray[np.float64]
 
@@ -78,13 +78,18 @@ def taken_on_average(record: Record, spread: RecordSpread) -> Record:
 
     before = record.before
     if before is not None:
-        missed = spread.share_at(record.start_day)
-        doses = tuple(
-            replace(d, amount_mg=d.amount_mg * (1 - missed)) if d.absorption is not None else d
-            for d in before.regimen.doses
-        )
-        before = replace(before, regimen=replace(before.regimen, doses=doses))
+        before = replace(before, regimen=regimen_on_average(before.regimen, spread.share_at(record.start_day)))
     return replace(record, doses=tuple(taken(d) for d in record.doses), before=before)
+
+
+def regimen_on_average(regimen: Repeated, missed: float) -> Repeated:
+    """A regimen with every dose but those into a vein reduced by the share expected to be missed."""
+    return replace(
+        regimen,
+        doses=tuple(
+            replace(d, amount_mg=d.amount_mg * (1 - missed)) if d.absorption is not None else d for d in regimen.doses
+        ),
+    )
 
 
 def plan_intake(record: Record, level_days: Sequence[float], spread: RecordSpread) -> IntakePlan:
@@ -155,10 +160,13 @@ def _absorbed(dose: Dose, day: float) -> tuple[float, float]:
     return absorbed, begin + min(max(mean_now, 0.0), since)
 
 
-def intake_gain(plan: IntakePlan, record: Record, course_mg: Floats, vmax: Floats, kappa: Floats) -> Floats:
+def intake_gain(
+    plan: IntakePlan, record: Record, course_mg: Floats, vmax: Floats, kappa: Floats, *, volume_L: Floats | None = None
+) -> Floats:
     """d ln level / d fractional intake of each group of doses, shape (nodes, m, W).
 
     course_mg: amounts at the plan's sample days, shape (nodes, S). vmax [mg/day], kappa [mg]: shape (nodes,).
+    volume_L: shape (nodes,), needed only where a first-order path is given as a clearance.
     """
     nodes, m = len(vmax), len(plan.level_at)
     out = np.zeros((nodes, m, plan.groups))
@@ -169,9 +177,12 @@ def intake_gain(plan: IntakePlan, record: Record, course_mg: Floats, vmax: Float
     gone = np.zeros_like(rate)
     np.cumsum(0.5 * (rate[:, 1:] + rate[:, :-1]) * np.diff(days), axis=1, out=gone[:, 1:])
     for path in record.first_order:
-        if path.rate_per_day:
-            begin, end = max(path.start_day, days[0]), min(path.end_day, days[-1])
-            gone += path.rate_per_day * (np.clip(days, begin, max(begin, end)) - begin)
+        begin, end = max(path.start_day, days[0]), min(path.end_day, days[-1])
+        open_for = np.clip(days, begin, max(begin, end)) - begin
+        if path.rate_per_day is not None:
+            gone += path.rate_per_day * open_for
+        elif path.clearance_L_per_day is not None and volume_L is not None:
+            gone += (path.clearance_L_per_day / volume_L)[:, None] * open_for
     single = plan.groups == len(plan.doses_mg) + 1
     for j in range(m):
         used = np.flatnonzero(plan.absorbed[j] > 0)

@@ -205,7 +205,7 @@ class _Model:
                     "Add the earlier doses (a load, another hospital), or check the time of the draw",
                 )
             )
-        return np.log(amount), intake_gain(self.intake, self.record, course, vmax, kappa)
+        return np.log(amount), intake_gain(self.intake, self.record, course, vmax, kappa, volume_L=volume)
 
     def parts(self, residual: Floats, cov: Floats, which: Sequence[int]) -> Components:
         """The log volume as a mixture at every node, given some of the levels, with the likelihood in its

@@ -14,6 +14,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from pkcalc import flow
+from pkcalc.errors import CannotEstimate
 from pkcalc.estimate.error_model import LevelData, RecordSpread, covariance
 from pkcalc.estimate.intake import intake_gain, plan_intake, taken_on_average
 from pkcalc.estimate.posterior import with_population_path, written_out
@@ -24,6 +25,17 @@ Floats = NDArray[np.float64]
 
 #: The seed of the normal deviates of the intake: the same input gives the same bits.
 _SEED = 20_240_229
+
+
+def volume_of(estimate: Estimate) -> Floats:
+    """The draws of the volume; refused where the estimate has none."""
+    if estimate.volume_L is None:
+        raise CannotEstimate(
+            "This estimate has no volume of distribution.",
+            "Without one nobody can say how fast a level moves.",
+            "Give the weight, or use the whole record.",
+        )
+    return estimate.volume_L
 
 
 def predicted_levels(
@@ -42,15 +54,14 @@ def predicted_levels(
     that follow are doubted as much as `spread` says for their days (give it as periods where dosing will be
     observed). times_day: at or after the record's start. first_order_per_day: the population's parallel path,
     if any."""
-    assert estimate.volume_L is not None, "a whole-record estimate carries a volume"
     whole = replace(record, doses=(*record.doses, *following))
     full = with_population_path(taken_on_average(written_out(whole), spread), first_order_per_day)
     days = [*(x.time_day for x in levels), *times_day]
     plan = plan_intake(full, days, spread)
-    vmax, volume = estimate.vmax_mg_per_day, estimate.volume_L
+    vmax, volume = estimate.vmax_mg_per_day, volume_of(estimate)
     kappa = estimate.km_mg_per_L * volume
     course = flow.amounts(full, plan.sample_days, vmax, kappa, volume_L=volume)
-    gain = intake_gain(plan, full, course, vmax, kappa)
+    gain = intake_gain(plan, full, course, vmax, kappa, volume_L=volume)
     log_level = np.log(course[:, plan.level_at]) - np.log(volume)[:, None]
     m, n = len(levels), len(vmax)
     noise = np.random.default_rng(_SEED)

@@ -18,8 +18,8 @@ from pkcalc import flow, formulas
 from pkcalc.drugs.profile import Prior
 from pkcalc.estimate import posterior
 from pkcalc.estimate.error_model import LevelData, RecordSpread
-from pkcalc.estimate.intake import taken_on_average
-from pkcalc.estimate.predict import predicted_levels
+from pkcalc.estimate.intake import regimen_on_average, taken_on_average
+from pkcalc.estimate.predict import predicted_levels, volume_of
 from pkcalc.estimate.result import Band, Estimate, band
 from pkcalc.record import Before, Record, Repeated
 from pkcalc.units import show, show_number
@@ -114,18 +114,16 @@ def fraction_settled(
     plateau is that of the regimen taken as the record is (`taken_on_average`), at the level's time in the cycle.
     Draws without a plateau count as 0.
     """
-    assert estimate.volume_L is not None, "a whole-record estimate carries a volume"
-    vmax, kappa = estimate.vmax_mg_per_day, estimate.km_mg_per_L * estimate.volume_L
+    volume = volume_of(estimate)
+    vmax, kappa = estimate.vmax_mg_per_day, estimate.km_mg_per_L * volume
     full = taken_on_average(posterior.written_out(record), spread)
-    course = flow.amounts(full, [x.time_day for x in levels], vmax, kappa, volume_L=estimate.volume_L)
+    course = flow.amounts(full, [x.time_day for x in levels], vmax, kappa, volume_L=volume)
     found = []
     for j, (level, now) in enumerate(zip(levels, in_force, strict=True)):
         if now is None:
             continue
-        share = RecordSpread(spread.share_at(level.time_day))
-        regimen = taken_on_average(Record(before=Before(now.regimen, 1.0)), share).before
-        assert regimen is not None
-        plateau = _plateau(regimen.regimen, (level.time_day - now.cycle_begins_day), vmax, kappa)
+        regimen = regimen_on_average(now.regimen, spread.share_at(level.time_day))
+        plateau = _plateau(regimen, level.time_day - now.cycle_begins_day, vmax, kappa)
         ratio = np.where(np.isfinite(plateau), course[:, j] / plateau, 0.0)
         values = band(ratio, estimate.weights)
         chance = float(estimate.weights[(ratio >= SETTLED) & (ratio <= 1 / SETTLED)].sum())
@@ -193,8 +191,8 @@ def misfits(
     Looked at are levels whose residual in the estimate is beyond 2 or that are more likely wrong than not.
     other_units: name of a unit -> how many of it make 1 mg/L; a level that would fit in one of them is named so.
     """
-    chance_wrong = estimate.diagnostics.get("wrong_level", {})
-    assert isinstance(chance_wrong, dict)
+    told = estimate.diagnostics.get("wrong_level")
+    chance_wrong = told if isinstance(told, dict) else {}
     found = []
     for j, (level, fit) in enumerate(zip(levels, estimate.fit, strict=True)):
         wrong = float(chance_wrong.get(level.index, 0.0))

@@ -168,6 +168,21 @@ def test_sensitivity_to_each_dose_agrees_with_the_engine(absorption: Absorption,
     assert habit == pytest.approx(single.sum(axis=2) * 0.5 * 0.05 / 0.95)
 
 
+def test_a_session_given_as_a_clearance_is_the_same_as_its_rate() -> None:
+    doses = _record(CAPSULE, 6).doses
+    gains = []
+    for path in (
+        FirstOrder(rate_per_day=0.5, start_day=2.0, end_day=3.0),
+        FirstOrder(clearance_L_per_day=24.5, start_day=2.0, end_day=3.0),
+    ):
+        record = Record(doses=doses, first_order=(path,))
+        plan = plan_intake(record, [5.5], SPREAD)
+        vmax, kappa, volume = np.array([455.0]), np.array([245.0]), np.array([49.0])
+        course = flow.amounts(record, plan.sample_days, vmax, kappa, volume_L=volume)
+        gains.append(intake_gain(plan, record, course, vmax, kappa, volume_L=volume))
+    assert gains[1] == pytest.approx(gains[0])
+
+
 def test_doses_into_a_vein_and_observed_doses_are_not_doubted() -> None:
     record = _record(CAPSULE, 10, (Dose(0.0, 1000.0, duration_day=0.02),))
     assert plan_intake(record, [9.5], SPREAD).groups == 9 + 1

@@ -9,6 +9,7 @@ from dataclasses import replace
 import pytest
 
 from pkcalc.drugs.profile import Prior
+from pkcalc.errors import CannotEstimate
 from pkcalc.estimate.error_model import LevelData, RecordSpread
 from pkcalc.estimate.pair import SteadyPair, from_steady_levels
 from pkcalc.estimate.posterior import from_record, prior_only
@@ -161,6 +162,16 @@ def test_the_question_about_the_doses_in_full(monkeypatch: pytest.MonkeyPatch) -
         "The levels would fit best if about 53 % of the doses had been taken (90 % interval 50 to 58 %). Fast "
         "elimination would look alike. Could doses have been missed, held, vomited or bound by feeds? Ask, before the "
         "dose is raised."
+    )
+
+
+def test_an_estimate_without_a_volume_is_refused() -> None:
+    pair = from_steady_levels(SteadyPair(0, 250.0, 6.0, 0.1), SteadyPair(1, 300.0, 8.0, 0.1))
+    with pytest.raises(CannotEstimate) as caught:
+        fraction_settled(on(300.0, 5), [LevelData(4.9, 6.0, 0.1)], pair, [None], USUAL)
+    assert str(caught.value) == (
+        "This estimate has no volume of distribution. Without one nobody can say how fast a level moves. Give the "
+        "weight, or use the whole record."
     )
 
 
