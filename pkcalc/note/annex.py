@@ -6,20 +6,16 @@ from collections.abc import Sequence
 
 import numpy as np
 
-from pkcalc import formulas
 from pkcalc.case import QUESTIONS, EarlierForecast
-from pkcalc.cautions import State, percent
+from pkcalc.cautions import percent
 from pkcalc.clock import show_time
-from pkcalc.consult import Consult, Shown, level_data, record_spread
+from pkcalc.consult import Consult, Shown
 from pkcalc.dosing import active_mg
-from pkcalc.drugs.profile import Prior
-from pkcalc.errors import CannotEstimate, CaseError
-from pkcalc.estimate import posterior
 from pkcalc.estimate.lines import LineFailure
 from pkcalc.estimate.result import Band, Estimate
-from pkcalc.forecast import bands
-from pkcalc.note import hours
+from pkcalc.note import hours, populations
 from pkcalc.note.front import chosen_candidate, forecast_lines, spoken_for
+from pkcalc.note.populations import populations_compared
 from pkcalc.note.words import (
     FORECAST_HEADS,
     Section,
@@ -39,6 +35,8 @@ from pkcalc.note.workings import REPRESENTATIVE, machine_only, workings
 from pkcalc.plan.loading import Load
 from pkcalc.sources import source
 from pkcalc.units import show, show_number
+
+__all__ = ["DANGER_HEADS", "annex", "danger_row", "estimate_lines", "populations_compared"]
 
 
 def annex(consult: Consult) -> tuple[Section, ...]:
@@ -129,7 +127,9 @@ def _doses(consult: Consult) -> Section:
     for session in case.dialysis:
         until = f"to {show_time(session.end)}" if session.end is not None else "on"
         said = f"{show(session.clearance_L_per_day / 1.44, 'mL/min')}" + (", assumed" if session.assumed else "")
-        lines.append(f"Dialysis session {session.index + 1}: from {show_time(session.start)} {until}, clearance {said}.")
+        lines.append(
+            f"Dialysis session {session.index + 1}: from {show_time(session.start)} {until}, clearance {said}."
+        )
     return Section("What was given", tuple(lines))
 
 
@@ -532,69 +532,21 @@ def _next(consult: Consult) -> list[Section]:
     return [Section("When to look again", tuple(lines), Table(heads, rows))]
 
 
-def populations_compared(consult: Consult) -> tuple[tuple[str, str, Estimate], ...]:
-    """The estimate under every population of the drug file that describes this patient: (id, words, estimate)."""
-    case, profile, prior = consult.case, consult.profile, consult.prior
-    weight, age = case.patient.weight_kg, case.patient.age_years
-    if consult.record is None or prior is None or weight is None or consult.chosen is None:
-        return ()
-    if consult.chosen.method != posterior.WHOLE_RECORD:
-        return ()
-    state = State(case=case, profile=profile, site=consult.site, observations=consult.observations)
-    data, spread = level_data(state), record_spread(case, profile)
-    found = []
-    for population in profile.populations.values():
-        low, high = population.ages_years
-        if age is not None and not low <= age < high:
-            continue
-        if population.id == prior.population:
-            found.append((population.id, population.words, consult.chosen))
-            continue
-        try:
-            other: Prior = population.at(
-                weight,
-                age,
-                height_cm=case.patient.height_cm,
-                sex=case.patient.sex,  # type: ignore[arg-type]
-            )
-            found.append(
-                (population.id, population.words, posterior.from_record(consult.record, data, other, spread, n=512))
-            )
-        except (CannotEstimate, CaseError):
-            continue
-    return tuple(found)
-
-
 def _populations(consult: Consult) -> list[Section]:
     shown = spoken_for(consult)
-    if consult.stopped or shown is None:
+    found = populations.compare(consult, shown) if shown is not None and not consult.stopped else ()
+    if not found:
         return []
-    rows = []
-    plan = consult.plan
-    # both lines are set off from the estimate by the share of doses missed, whatever the population
-    central = taken = 1.0
-    if plan is not None and consult.chosen is not None:
-        own = consult.chosen.point.vmax_mg_per_day
-        central = plan.setting.central.point.vmax_mg_per_day / own
-        taken = plan.setting.taken.point.vmax_mg_per_day / own
-    for name, words, estimate in populations_compared(consult):
-        vmax, km = estimate.summary["vmax_mg_per_day"], estimate.summary["km_mg_per_L"]
-        steady, full = (
-            np.asarray(
-                formulas.steady_state_level(
-                    dose_rate_mg_per_day=shown.rate_mg_per_day,
-                    vmax_mg_per_day=estimate.vmax_mg_per_day * share,
-                    km_mg_per_L=estimate.km_mg_per_L,
-                )
-            )
-            for share in (central, taken)
+    rows = tuple(
+        (
+            c.words + (" (used)" if c.used else ""),
+            short_band(c.vmax),
+            short_band(c.km),
+            short_band(c.steady),
+            percent(c.danger),
         )
-        band = bands(steady[None, :], estimate.weights)[0]
-        none = float((full > consult.goal.critical_mg_per_L) @ estimate.weights)
-        used = " (used)" if consult.prior is not None and name == consult.prior.population else ""
-        rows.append((words + used, short_band(vmax), short_band(km), short_band(band), percent(none)))
-    if len(rows) < 2:
-        return []
+        for c in found
+    )
     heads = (
         "Population",
         "Vmax (mg/day)",
@@ -602,16 +554,11 @@ def _populations(consult: Consult) -> list[Section]:
         "Steady level, central (mg/L)",
         "Every dose taken: above critical or no steady state",
     )
-    return [
-        Section(
-            "Populations compared",
-            (
-                f"What the same record and levels say under other published populations, for {shown.words}, "
-                "at normal binding. Where these rows differ much, the population matters more than the levels.",
-            ),
-            Table(heads, tuple(rows)),
-        )
-    ]
+    said = (
+        f"What the same record and levels say under other published populations, for {shown.words if shown else ''}, at "
+        "normal binding. Where these rows differ much, the population matters more than the levels.",
+    )
+    return [Section("Populations compared", said, Table(heads, rows))]
 
 
 def _workings(consult: Consult) -> list[Section]:
