@@ -397,8 +397,8 @@ def form(port: int, site: Path | None, address: str, without_sign_in: int) -> No
     if not here and not _sign_in_is_set_up(folder):
         if without_sign_in < 2:
             raise click.UsageError(
-                f"The form is not shown at {address} without sign-in: set up the hospital's own sign-in first, or leave "
-                "--address out. To show it all the same, give --without-sign-in twice."
+                f"The form is not shown at {address} without sign-in: set up the hospital's own sign-in first, or "
+                "leave --address out. To show it all the same, give --without-sign-in twice."
             )
         os.environ["PKCALC_WITHOUT_SIGN_IN"] = "yes, and told twice"
     where = "on this machine only" if here else "to every machine that reaches this address"
