@@ -295,7 +295,7 @@ def show_number(value: float, digits: int = 3) -> str:
         return "0"
     text = f"{value:.{digits}g}"
     rounded = float(text)
-    exponent = len(f"{abs(rounded):.0f}") if abs(rounded) >= 1 else 0
+    exponent = len(str(int(abs(rounded)))) if abs(rounded) >= 1 else 0
     decimals = max(0, digits - exponent) if exponent else _decimals_below_one(rounded, digits)
     out = f"{rounded:,.{decimals}f}"
     if "." in out:
