@@ -432,7 +432,16 @@ def _shared_covariance(
         return np.zeros((m, m))
     times, gone = course.times_day, course.gone[i]
     start = np.searchsorted(times, [d.time_day for d in doses])
-    kept = [d for d, k in zip(doses, start, strict=True) if gone[at].max() - gone[min(k, len(gone) - 1)] < 40.0]
+    # a dose counts for the first level after it, if for any: by then a difference has died away least
+    ends = np.sort(gone[at])
+    kept = [
+        d
+        for d, k in zip(doses, start, strict=True)
+        if (after := ends[np.searchsorted(ends, gone[min(k, len(gone) - 1)]) :]).size
+        and after[0] - gone[min(k, len(gone) - 1)] < 40.0
+    ]
+    if not kept:
+        return np.zeros((m, m))
     absorbed = np.stack([_absorbed(d, times) for d in kept])
     pieces = np.diff(absorbed, axis=1)
     middle = 0.5 * (gone[1:] + gone[:-1])
