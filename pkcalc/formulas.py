@@ -666,21 +666,6 @@ def normalised_from_free(*, free_mg_per_L: ArrayLike, free_fraction: ArrayLike) 
     return value[()]
 
 
-def free_with_valproate(*, total_mg_per_L: ArrayLike, valproate_mg_per_L: ArrayLike) -> dict[str, Floats]:
-    """Free level under valproate by the two published equations; they differ by about a quarter: show both.
-
-        Haidukewych 1989: free = (0.095 + 0.001 VPA) x total
-        May 1991:         free = 0.0792 x total + 0.000636 x total x VPA
-
-    Returns {"Haidukewych 1989": mg/L, "May 1991": mg/L}. Example: total 10 and valproate 80 mg/L give 1.75
-    and 1.30 mg/L.
-    """
-    total, displacer = _arrays(total_mg_per_L, valproate_mg_per_L)
-    first: Floats = (0.095 + 0.001 * displacer) * total
-    second: Floats = 0.0792 * total + 0.000636 * total * displacer
-    return {"Haidukewych 1989": first[()], "May 1991": second[()]}
-
-
 # ------------------------------------------------------------------------------------- weights and kidneys
 
 

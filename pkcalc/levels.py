@@ -293,7 +293,8 @@ def _read(level: Level, reported: float, case: Case, profile: Profile, site: Sit
         working = float(formulas.normalised_from_free(free_mg_per_L=reported, free_fraction=fraction))
         step = f"normalised total = free / {show_number(fraction)} = {shown} / {show_number(fraction)} = "
         return _Reading(working, working, working, steps=(step + show(working, "mg/L", 4),))
-    if case.answer("renal_failure") == "yes" or case.answer("valproate") == "yes":
+    displaced = any(case.answer(d.drug) == "yes" for d in binding.displacements)
+    if case.answer("renal_failure") == "yes" or displaced:
         low, high, step = _possible(reported, level, case, profile, albumin)
         return _Reading(math.sqrt(low * high), low, high, readable=False, steps=(step,))
     if albumin is None:
@@ -340,13 +341,11 @@ def _possible(
         for coefficient in binding.renal_failure_coefficients:
             value = _normalised(total, albumin, coefficient)
             readings.append((value, f"coefficient {show_number(coefficient)}: {show(value, 'mg/L')}"))
-    if case.answer("valproate") == "yes" and level.valproate_mg_per_L is not None:
-        free = formulas.free_with_valproate(total_mg_per_L=total, valproate_mg_per_L=level.valproate_mg_per_L)
-        for name, free_level in free.items():
-            value = float(free_level) / binding.free_fraction
-            readings.append(
-                (value, f"{name}: free {show(float(free_level), 'mg/L')}, normalised {show(value, 'mg/L')}")
-            )
+    for d in binding.displacements:
+        if case.answer(d.drug) == "yes" and level.valproate_mg_per_L is not None:
+            free = d.free_mg_per_L(total, level.valproate_mg_per_L)
+            value = free / binding.free_fraction
+            readings.append((value, f"{d.words}: free {show(free, 'mg/L')}, normalised {show(value, 'mg/L')}"))
     if not readings:
         readings = [
             (total, f"as measured: {show(total, 'mg/L')}"),

@@ -147,7 +147,10 @@ class Alternative:
 
 @dataclass(frozen=True)
 class Displacement:
-    """A published free fraction under a displacing drug: intercept + slope x its level [mg/L]."""
+    """A published free fraction under a displacing drug: intercept + slope x its level [mg/L].
+
+    drug: the displacing drug, which is also the context question that asks about it.
+    """
 
     id: str
     words: str

@@ -195,9 +195,6 @@ def test_binding() -> None:
     assert above == 30.0
     assert f.binding_denominator(albumin_g_per_L=45.0, coefficient_dL_per_g=0.2) == pytest.approx(1.0)
     assert f.normalised_from_free(free_mg_per_L=1.5, free_fraction=0.1) == pytest.approx(15.0)
-    both = f.free_with_valproate(total_mg_per_L=10.0, valproate_mg_per_L=80.0)
-    assert both["Haidukewych 1989"] == pytest.approx(1.75)
-    assert both["May 1991"] == pytest.approx(1.3008)
 
 
 def test_weights_and_kidneys() -> None:

@@ -15,6 +15,7 @@ from hypothesis import strategies as st
 from scipy.integrate import solve_ivp
 
 from pkcalc import formulas
+from pkcalc.case import QUESTIONS
 from pkcalc.drugs.profile import (
     SCOPES,
     Population,
@@ -519,14 +520,13 @@ def test_binding_rules() -> None:
     assert {a.coefficient_dL_per_g for a in binding.alternatives} == {0.25, 0.275, 0.29}
 
 
-def test_displacement_equations_are_those_of_the_formulas() -> None:
-    """One total and one level of the displacing drug through both places the equations stand."""
+def test_displacement_equations() -> None:
+    """Haidukewych 1989: (0.095 + 0.001 x 80) x 10; May 1991: 0.0792 x 10 + 0.000636 x 10 x 80; by hand."""
     binding = drug().binding
     assert binding is not None
-    theirs = formulas.free_with_valproate(total_mg_per_L=10.0, valproate_mg_per_L=80.0)
-    ours = {d.words: d.free_mg_per_L(10.0, 80.0) for d in binding.displacements}
-    assert ours == pytest.approx({name: float(x) for name, x in theirs.items()})
-    assert {d.drug for d in binding.displacements} == {"valproate"}
+    found = {d.words: d.free_mg_per_L(10.0, 80.0) for d in binding.displacements}
+    assert found == pytest.approx({"Haidukewych 1989": 1.75, "May 1991": 1.3008})
+    assert {d.drug for d in binding.displacements} <= set(QUESTIONS)
 
 
 @pytest.mark.parametrize(
