@@ -633,6 +633,7 @@ class Profile:
     def sources_used(self) -> tuple[Source, ...]:
         """Every source the drug file cites, in the order of its first use."""
         keys = dict.fromkeys(key for fact in self.facts.values() for key in fact.sources)
+        keys |= dict.fromkeys(str(rule["source"]) for rule in self.cautions.values())
         return tuple(all_sources()[key] for key in keys)
 
 
@@ -1159,6 +1160,18 @@ def describe(profile: Profile) -> tuple[str, ...]:
         profile.scope_reason,
         f"Authority: {profile.authority}",
         f"File {profile.file}, SHA-256 {profile.sha256[:16]}",
+        f"Also named: {', '.join(profile.names)}",
+        f"Levels in {', '.join(profile.level_units)}; {profile.target.basis}; times in "
+        + ("hours" if profile.time_unit == "h" else "days"),
+        "Context questions: " + (", ".join(q.replace("_", " ") for q in profile.questions) or "all"),
+        "",
+        "Forms",
+        *(f"  {f.id}: {f.words}; {f.salt}, by {' or '.join(f.routes)}" for f in profile.forms.values()),
+        *(("", "Products") if profile.products else ()),
+        *(f"  {p.id}: {p.words}; {p.strength_words}" for p in profile.products.values()),
+        "",
+        "Populations" + (" (one must be chosen)" if profile.choose_population else ""),
+        *(f"  {p.id}: {p.words}{' (default for its ages)' if p.default else ''}" for p in profile.populations.values()),
         "",
     ]
     last = ""
@@ -1171,6 +1184,10 @@ def describe(profile: Profile) -> tuple[str, ...]:
         lines.append(f"  {rest.replace('_', ' ')}: {fact.shown}  [{fact.status}: {cited}; {fact.where}]")
         if fact.derivation:
             lines.append(f"      derivation: {fact.derivation}")
+    if profile.cautions:
+        lines += ["", "Cautions of this drug alone"]
+        for key, rule in profile.cautions.items():
+            lines.append(f"  {key} ({rule['severity']}): {rule['text']}  [{rule['source']}]")
     lines += ["", "Sources"]
     lines += [f"  {s.key}: {s.citation}" for s in profile.sources_used()]
     return tuple(lines)

@@ -133,7 +133,18 @@ def test_everything_can_be_printed(name: str) -> None:
         for word in fact.sources:
             assert word in text
         assert fact.where in text
-    assert not re.search(r"\bnan\b|\binf\b|None|\{|\}", text)
+    # a caution's text holds the names of what is filled in; nothing else may show a bracket
+    told = "\n".join(line for line in lines if not any(rule["text"] in line for rule in profile.cautions.values()))
+    assert not re.search(r"\bnan\b|\binf\b|None|\{|\}", told)
+    for words in (
+        *profile.names,
+        *profile.level_units,
+        *(p.strength_words for p in profile.products.values()),
+        *(f.words for f in profile.forms.values()),
+        *(p.words for p in profile.populations.values()),
+        *(str(rule["text"]) for rule in profile.cautions.values()),
+    ):
+        assert words in text, words
     for key in {s for f in facts(profile) for s in f.sources}:
         assert any(line.startswith(f"  {key}: ") for line in lines), key
 
