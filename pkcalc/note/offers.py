@@ -89,6 +89,7 @@ def _load(load: Load) -> dict[str, Any]:
         "form": load.form,
         "product": load.product,
         "route": load.route,
+        "from_level_mg_per_L": _number(load.from_mg_per_L),
         "aim_mg_per_L": _number(load.aim_mg_per_L),
         "labelled_by_formula_mg": _number(load.wanted_mg),
         "labelled_ordered_mg": _number(load.amount_mg),

@@ -481,7 +481,7 @@ def _loads(consult: Consult) -> list[Step]:
         form = consult.profile.forms[load.form]
         volume = printed(load.volume_L.median, "L", 4)
         aim = printed(load.aim_mg_per_L, "mg/L", 4)
-        now = printed(plan.today.level.median if plan.today.level is not None else 0.0, "mg/L", 4)
+        now = printed(load.from_mg_per_L, "mg/L", 4)
         share = form.salt_factor * form.bioavailability
         factor = printed(share, "", 5)
         steps.append(

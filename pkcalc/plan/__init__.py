@@ -162,7 +162,7 @@ def make(
     made = dispensable(profile, products, largest_active_mg_per_day=most, alternate_days=site.alternate_days)
     given = _given(case, profile, shelf)
     every = candidates(made, given, setting)
-    forms = course.forms if course is not None else ()
+    forms = course.forms if course is not None else tuple({x.form for r in case.proposed for x in r.intakes})
     table = with_courses(shown(every, setting, forms=forms), setting)
     worked_out = {id(c.regimen): c for c in table}
     every = tuple(worked_out.get(id(c.regimen), c) for c in every)

@@ -140,14 +140,14 @@ def candidates(
     """Every regimen with its forecast, by daily dose.
 
     made: what the shelf gives. given: further regimens as (regimen, words, dispense, present, proposed); the present
-    one takes the place of a made one with the same active amount.
+    one, or an own one that can be dispensed, takes the place of a made one with the same active amount.
     """
     profile = setting.profile
     rows: list[tuple[Regimen, str, str, bool, bool, float, tuple[str, ...]]] = [
         (r, words, dispense, present, proposed, r.active_mg_per_day(profile), ())
         for r, words, dispense, present, proposed in given
     ]
-    taken_up = [row[5] for row in rows if row[3]]
+    taken_up = [row[5] for row in rows if row[3] or (row[4] and row[2])]
     for m in made:
         rate = m.active_mg_per_day
         if any(abs(rate - p) <= 1e-6 * p for p in taken_up):
@@ -283,9 +283,9 @@ def shown(
     """
     must = [c for c in every if c.present or c.proposed]
     rest = [c for c in every if not (c.present or c.proposed)]
-    if forms:
-        same = [c for c in rest if all(x.form in forms for x in c.regimen.intakes)]
-        rest = same or rest
+    same = [c for c in rest if all(x.form in forms for x in c.regimen.intakes)]
+    single = [c for c in rest if len({x.form for x in c.regimen.intakes}) == 1]
+    rest = same or single or rest
     centre = setting.present_mg_per_day
     aim = _aim_rate(setting)
     centre = aim if centre is None else centre

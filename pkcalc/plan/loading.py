@@ -41,8 +41,8 @@ _EXCLUSIONS: Mapping[str, tuple[str, ...]] = {
 class Load:
     """One load or top-up.
 
-    wanted_mg: labelled amount by the formula; amount_mg: as ordered, after rounding, ceilings and splitting. parts:
-    (hours from the first, labelled mg). minutes: shortest infusion time, None by mouth. rise: what the ordered amount
+    from_mg_per_L: level the formula begins at. wanted_mg: labelled amount by the formula; amount_mg: as ordered, after
+    rounding, ceilings and splitting. parts: (hours from the first, labelled mg). minutes: shortest infusion time, None by mouth. rise: what the ordered amount
     adds; after: level at the end (by mouth: when drawn); at_draw: level draw_after_h hours after the end or, by mouth,
     after the first part; followed: days from the load and the level with the maintenance dose. above_high,
     above_critical: chances for `after`. order: the complete line.
@@ -51,6 +51,7 @@ class Load:
     form: str
     product: str
     route: str
+    from_mg_per_L: float
     aim_mg_per_L: float
     wanted_mg: float
     amount_mg: float
@@ -110,12 +111,10 @@ def loads(ward: Ward) -> tuple[tuple[Load, ...], tuple[str, ...]]:
         if asked.form not in forms:
             return (), (f"No load of {profile.forms[asked.form].words}: there is no such product on the shelf in use.",)
         forms = [asked.form]
-    level = ward.now.level
+    level = start_level(ward)
     aim = case.load_aim_mg_per_L or ward.goal.aim_mg_per_L
-    if level is not None and level.median >= aim:
-        return (), (
-            f"No load: the level today ({show(level.median, 'mg/L')}) is not below the aim of {show(aim, 'mg/L')}.",
-        )
+    if level >= aim:
+        return (), (f"No load: the level today ({show(level, 'mg/L')}) is not below the aim of {show(aim, 'mg/L')}.",)
     found = []
     for form in forms:
         mine = [profile.products[p] for p in ward.products if profile.products[p].form == form]
@@ -128,13 +127,58 @@ def loads(ward: Ward) -> tuple[tuple[Load, ...], tuple[str, ...]]:
     return tuple(found), ()
 
 
+#: A level at most so old stands against the course of the record: the higher of the two is topped up.
+FRESH = timedelta(hours=24)
+
+
+def start_level(ward: Ward) -> float:
+    """The level a load begins at [mg/L]: the median by the record, or a level drawn within a day where that is higher.
+
+    A load worked out from too low a level ends too high, so the higher one counts. 0 without any level.
+    """
+    now = ward.now
+    course = now.level.median if now.level is not None else 0.0
+    if now.measured_mg_per_L is None or now.measured_at is None or now.moment is None:
+        return course
+    fresh = timedelta(0) <= now.moment - now.measured_at <= FRESH
+    return max(course, now.measured_mg_per_L) if fresh else course
+
+
+def start_draws(ward: Ward) -> Floats:
+    """The draws of today's level, moved up as a whole where the level a load begins at is above their median."""
+    draws = draws_of(ward.now.start_mg_per_L, fewer_draws(ward.estimate, TIME_DRAWS))
+    level = ward.now.level
+    if level is None or level.median <= 0:
+        return draws
+    return np.asarray(draws * (start_level(ward) / level.median))
+
+
+def loads_before(ward: Ward) -> str:
+    """Why a load or dose into a vein of the last 72 h forbids another one; "" where it does not.
+
+    It does not where the dose stands in the record and a level was drawn long enough after it.
+    """
+    case, sampling, now = ward.case, ward.profile.sampling, ward.now
+    if case.answer("recent_load") != "yes":
+        return ""
+    refusal = "A load or a dose into a vein was given in the last 72 h: measure before giving more."
+    singles = [c.start for c in case.courses if c.single is not None and c.counts_as_given and c.start is not None]
+    recent = [s for s in singles if now.moment is not None and now.moment - s <= timedelta(hours=72)]
+    if not recent or now.measured_at is None:
+        return refusal
+    wait = timedelta(hours=sampling.after_iv_h or 0.0)
+    return "" if now.measured_at >= max(recent) + wait else refusal
+
+
 def wanted_active(ward: Ward, aim_mg_per_L: float) -> float:
-    """Active drug that lifts the median level to the aim: median V x (aim - now) [mg]."""
-    assert ward.estimate.volume_L is not None
-    volume = ward.estimate.summary["volume_L"].median
-    now = ward.now.level.median if ward.now.level is not None else 0.0
+    """Active drug that lifts the level a load begins at to the aim: median V x (aim - level) [mg]."""
     return float(
-        formulas.top_up_amount(present_mg_per_L=now, aim_mg_per_L=aim_mg_per_L, volume_L=volume, salt_factor=1.0)
+        formulas.top_up_amount(
+            present_mg_per_L=start_level(ward),
+            aim_mg_per_L=aim_mg_per_L,
+            volume_L=ward.estimate.summary["volume_L"].median,
+            salt_factor=1.0,
+        )
     )
 
 
@@ -158,7 +202,7 @@ def into_vein(ward: Ward, product: Product, aim_mg_per_L: float) -> Load:
     minutes = infusion_minutes(amount, caps, case.patient.weight_kg) if caps else None
     active = active_mg(Intake(form.id, 0.0, amount), profile)
     few = fewer_draws(ward.estimate, TIME_DRAWS)
-    start = draws_of(ward.now.start_mg_per_L, few)
+    start = start_draws(ward)
     days = (minutes or 0.0) / 1440
     volume = few.estimate.volume_L
     assert volume is not None
@@ -216,7 +260,7 @@ def by_mouth(ward: Ward, products: Sequence[Product], aim_mg_per_L: float) -> Lo
         return None
     amount = sum(mg for _, mg in parts)
     few = fewer_draws(ward.estimate, TIME_DRAWS)
-    start = draws_of(ward.now.start_mg_per_L, few)
+    start = start_draws(ward)
     draw_h = profile.sampling.after_oral_load_h or oral.maintenance_after_h
     doses = tuple(Dose(h / 24, mg * form.active_fraction, absorption=absorption_of(form)) for h, mg in parts)
     volume = few.estimate.volume_L
@@ -306,12 +350,20 @@ def _load(
             f"above the limit of {percent(ward.site.stop_chance)}."
         )
     answer = ward.case.answer("recent_load")
-    if answer == "yes":
-        why.append("A load or a dose into a vein was given in the last 72 h: measure before giving more.")
+    if refusal := loads_before(ward):
+        why.append(refusal)
+    elif answer == "yes":
+        notes.append("The load of the last 72 h stands in the record, and a level was drawn long enough after it.")
     elif answer != "no":
         notes.append(
             "Not stated whether a load or a dose into a vein was given in the last 72 h (emergency department, "
             "ambulance, other hospital): ask first."
+        )
+    course = ward.now.level
+    if course is not None and start_level(ward) > course.median:
+        notes.append(
+            f"Worked out from the measured {show(start_level(ward), 'mg/L')}, which is above the course of the record "
+            f"({show(course.median, 'mg/L')})."
         )
     follow_from = np.asarray(drawn, dtype=np.float64)
     days = [d for d in FOLLOWED_DAYS if d * 24 > draw_after_h]
@@ -333,6 +385,7 @@ def _load(
         form=product.form,
         product=product.id,
         route=route,
+        from_mg_per_L=start_level(ward),
         aim_mg_per_L=aim,
         wanted_mg=wanted,
         amount_mg=amount,

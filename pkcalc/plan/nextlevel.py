@@ -186,8 +186,8 @@ def next_level(asked: Asked) -> NextLevel | None:
     safety, why_safety = _safety(asked, draws, chosen, rate)
     why = [
         f"A level on day {show_number(chosen.day, 2)} is expected to narrow the forecast of the steady level from a "
-        f"spread of {_times(before)} to {_times(chosen.spread)} (one standard deviation); waiting until day "
-        f"{show_number(draws[-1].day, 2)} would give {_times(draws[-1].spread)}. It is the first draw within "
+        f"spread of {_times(before)} to {_times(chosen.spread)} (standard deviation of its logarithm); waiting until "
+        f"day {show_number(draws[-1].day, 2)} would give {_times(draws[-1].spread)}. It is the first draw within "
         f"{show_number(100 * WITHIN)} % of the best in {HORIZON_DAYS} days.",
         *why_safety,
         _meaning(settled_days, rising=rising),
@@ -283,7 +283,7 @@ def _safety(asked: Asked, draws: Sequence[Draw], chosen: Draw, rate: float) -> t
 
 
 def _times(log_sd: float) -> str:
-    return f"{show_number(100 * math.expm1(log_sd), 2)} %"
+    return f"{show_number(100 * log_sd, 2)} %"
 
 
 def _meaning(settled: Band, *, rising: bool) -> str:

@@ -50,7 +50,8 @@ class Today:
     moment: clock time, None in a case without one. level_mg_per_L: per draw of `fewer_draws`, working
     basis; None without any level. words: how it was found. still_absorbed: oral doses of which something may
     still reach the blood, with
-    times in days from now (0 or before). measured_mg_per_L: the latest level on the working basis.
+    times in days from now (0 or before). measured_mg_per_L, measured_at: the latest level on
+    the working basis, and when it was drawn (None: not stated).
     """
 
     moment: datetime | None
@@ -58,6 +59,7 @@ class Today:
     words: str
     still_absorbed: tuple[Dose, ...]
     measured_mg_per_L: float | None
+    measured_at: datetime | None = None
 
     @property
     def start_mg_per_L(self) -> Floats | float:
@@ -93,12 +95,13 @@ def today(
     moment = case.plan_start or case.now
     latest = _latest(observations)
     measured = latest.working_mg_per_L if latest is not None else None
+    drawn = latest.level.drawn if latest is not None else None
     few = fewer_draws(estimate, TIME_DRAWS).estimate
     n = len(few.weights)
     if history is None or estimate.volume_L is None or moment is None or case.origin is None:
         words = "no level" if latest is None else f"{latest.name}, taken to hold now"
         level = None if measured is None else np.full(n, measured)
-        return Today(moment, level, words, (), measured)
+        return Today(moment, level, words, (), measured, drawn)
     record = history.record
     day = max(case.day(moment), record.start_day, *(x.time_day for x in history.levels))
     course = predicted_levels(
@@ -114,7 +117,7 @@ def today(
         for d in record.doses
         if d.absorption is not None and day - d.settled_after_day < d.time_day <= day
     )
-    return Today(moment, course[:, 0], "by the course of the record", unabsorbed, measured)
+    return Today(moment, course[:, 0], "by the course of the record", unabsorbed, measured, drawn)
 
 
 def _latest(observations: Sequence[Observation]) -> Observation | None:

@@ -282,3 +282,50 @@ def test_loads_that_are_not_given_say_why() -> None:
     in_range = plan(None, exact(), **{**LOW, "levels": [{**LOW["levels"][0], "value": "12 mg/L"}]})
     assert in_range.loads == ()
     assert in_range.no_load == ()
+
+
+def ward(level: float, measured: float, hours_ago: float = 3.0, **changes: Any) -> loading.Ward:
+    """A ward whose record says one level and whose last measurement says another."""
+    from datetime import datetime, timedelta
+
+    from pkcalc.plan import Today
+    from tests.unit.cases import plain
+    from tests.unit.planning import GOAL
+
+    moment = datetime(2026, 12, 1, 10, 0)
+    case = plain(**{**LOW, **changes, "context": {**LOW["context"], **changes.get("context", {})}})
+    now = Today(moment, np.full(8, level), "", (), measured, moment - timedelta(hours=hours_ago))
+    shelf = P.shelves["united-states"].products
+    return loading.Ward(case, P, no_site(), exact(), GOAL, now, shelf, 276.0, "300 mg daily")
+
+
+def test_the_higher_of_record_and_fresh_measurement_is_topped_up() -> None:
+    """A load from too low a level ends too high: 6 mg/L by the record, 9 mg/L measured three hours ago."""
+    product = P.products["injection-50"]
+    fresh = loading.into_vein(ward(6.0, 9.0), product, 15.0)
+    assert fresh.from_mg_per_L == 9.0
+    assert fresh.wanted_mg == pytest.approx(49 * 6 / 0.92)
+    assert fresh.after.median == pytest.approx(9.0 + fresh.rise.median, rel=0.02)
+    assert "Worked out from the measured 9 mg/L, which is above the course of the record (6 mg/L)." in fresh.notes
+    lower = loading.into_vein(ward(9.0, 6.0), product, 15.0)
+    assert lower.from_mg_per_L == 9.0
+    old = loading.into_vein(ward(6.0, 9.0, hours_ago=30.0), product, 15.0)
+    assert old.from_mg_per_L == 6.0
+
+
+@pytest.mark.parametrize(("given_h_ago", "accounted"), [(12.0, True), (4.0, False), (100.0, False)])
+def test_a_recent_load_in_the_record_with_a_level_after_it_is_accounted_for(
+    given_h_ago: float, accounted: bool
+) -> None:
+    """The level was drawn three hours ago; the drug file asks for two hours after a dose into a vein."""
+    from datetime import datetime, timedelta
+
+    given = datetime(2026, 12, 1, 10, 0) - timedelta(hours=given_h_ago)
+    dose = {"form": "injection", "amount": "1000 mg", "at": given.strftime("%Y-%m-%d %H:%M"), "over": "30 min"}
+    one = ward(6.0, 6.0, doses=[dose], context={"recent_load": "yes"})
+    load = loading.into_vein(one, P.products["injection-50"], 15.0)
+    assert load.offered == accounted
+    refusal = "A load or a dose into a vein was given in the last 72 h: measure before giving more."
+    assert load.why_not == (() if accounted else (refusal,))
+    said = "The load of the last 72 h stands in the record, and a level was drawn long enough after it."
+    assert (said in load.notes) == accounted
