@@ -89,12 +89,11 @@ def met(found: Findings) -> Chart | None:
     axis = alt.Axis(format=",~r")
     x = alt.X("said:Q", title="Level forecast (mg/L)", scale=scale, axis=axis)
     y = alt.Y("came:Q", title="Level that came (mg/L)", scale=scale, axis=axis)
-    layers: list[Any] = [
-        alt.Chart(alt.InlineData([{"said": low, "came": low * f}, {"said": high, "came": high * f}]))
-        .mark_line(color=BLACK, strokeWidth=0.8, strokeDash=dash, clip=True)
-        .encode(x=x, y=y)
-        for f, dash in ((1.0, [1, 0]), (1.3, [4, 3]), (1 / 1.3, [4, 3]))
-    ]
+    layers: list[Any] = []
+    for f, dash in ((1.0, [1, 0]), (1.3, [4, 3]), (1 / 1.3, [4, 3])):
+        ends = [max(low, low / f), min(high, high / f)]
+        base = alt.Chart(alt.InlineData([{"said": v, "came": v * f} for v in ends]))
+        layers.append(base.mark_line(color=BLACK, strokeWidth=0.8, strokeDash=dash).encode(x=x, y=y))
     layers.append(
         alt.Chart(alt.InlineData(rows)).mark_point(filled=True, size=26, color=BLUE, opacity=0.6).encode(x=x, y=y)
     )

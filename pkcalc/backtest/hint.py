@@ -2,7 +2,8 @@
 
 Each patient's mean and covariance of (log Vmax, log Km), with what the population said taken out, is taken as
 a measurement of where that patient lies; the mean shift and the spreads are those that make all of them
-together most likely (maximum likelihood of a normal population; intervals from the curvature at the top)."""
+together most likely (maximum likelihood of a normal population; intervals from the curvature at the top). The
+correlation of the two stays the population's own: few levels per patient say next to nothing about it."""
 
 from __future__ import annotations
 
@@ -33,7 +34,6 @@ class Hint:
     km_ratio: Share
     vmax_log_sd: Share
     km_log_sd: Share
-    correlation: float
     prior_vmax_log_sd: float
     prior_km_log_sd: float
 
@@ -67,16 +67,16 @@ def refit(population: str, rows: Sequence[Row]) -> Hint | None:
     from scipy.optimize import minimize
 
     def loss(x: Floats) -> float:
-        return -_log_likelihood(x, told, gained)
+        return -_log_likelihood(x, rho, told, gained)
 
-    start = np.array([0.0, 0.0, math.log(sd_v), math.log(sd_k), math.atanh(rho)])
-    found = minimize(loss, start, method="L-BFGS-B", bounds=[(-2, 2), (-2, 2), (-5, 1), (-5, 1), (-3, 3)])
+    start = np.array([0.0, 0.0, math.log(sd_v), math.log(sd_k)])
+    found = minimize(loss, start, method="L-BFGS-B", bounds=[(-2, 2), (-2, 2), (-5, 1), (-5, 1)])
     curvature = _curvature(loss, found.x)
     try:
         variance = np.diag(np.linalg.inv(curvature))
     except np.linalg.LinAlgError:
         return None
-    if not found.success or np.any(variance[:4] <= 0):
+    if not found.success or np.any(variance <= 0):
         return None
 
     def ratio(i: int) -> Share:
@@ -90,7 +90,6 @@ def refit(population: str, rows: Sequence[Row]) -> Hint | None:
         ratio(1),
         ratio(2),
         ratio(3),
-        math.tanh(float(found.x[4])),
         sd_v,
         sd_k,
     )
@@ -107,9 +106,9 @@ def _at_least_nothing(gained: Floats) -> Floats:
     return kept
 
 
-def _log_likelihood(x: Floats, told: Floats, gained: Floats) -> float:
+def _log_likelihood(x: Floats, rho: float, told: Floats, gained: Floats) -> float:
     """Sum over patients of log of the integral of N(z; m, W) exp(-z'Gz/2 + b'z), up to a constant."""
-    w = _matrix(math.exp(x[2]), math.exp(x[3]), math.tanh(x[4]))
+    w = _matrix(math.exp(x[2]), math.exp(x[3]), rho)
     inverse = np.linalg.inv(w)
     m = x[:2]
     total = gained + inverse

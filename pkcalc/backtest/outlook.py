@@ -202,9 +202,6 @@ def _left_out(known: _Known, o: Observation) -> str:
         return "binding leaves no single reading"
     if o.censored is not None:
         return "reported only as below or above a limit; used to learn from"
-    day = known.case.day(o.level.drawn)
-    if known.record.before is None and not any(d.time_day < day for d in known.record.doses):
-        return "no dose was recorded before it"
     return ""
 
 

@@ -186,7 +186,6 @@ def _hint(h: Hint) -> dict[str, object]:
         "km_ratio": _share(h.km_ratio),
         "vmax_log_sd": _share(h.vmax_log_sd),
         "km_log_sd": _share(h.km_log_sd),
-        "correlation": h.correlation,
         "population_vmax_log_sd": h.prior_vmax_log_sd,
         "population_km_log_sd": h.prior_km_log_sd,
         "off": list(h.off),

@@ -115,7 +115,7 @@ def _spread(client: Any, folder: Folder, store: Store, drug: str, site: Site, to
 
     parts: dict[str, int] = {}
     ahead = max(1, _AHEAD * len(client.scheduler_info(n_workers=-1)["workers"]))
-    on_their_way = as_completed([send(p) for p in islice(waiting, ahead)])
+    on_their_way = as_completed([send(p) for p in islice(waiting, ahead)], loop=client.loop)
     for future in on_their_way:
         part = parts.pop(future.key)
         if future.status == "finished":
