@@ -40,9 +40,9 @@ HABIT = 0.5
 #: bounded.
 MOST_DOSES = 256
 
-#: Spacing of the course on which the dying away of a difference is summed: finer while the level first builds
-#: up.
-BUILD_UP_DAY, BUILD_UP_SAMPLE_DAY, SAMPLE_DAY = 8.0, 0.1, 0.3
+#: Spacing of the course on which the dying away of a difference is summed: finer while the level first builds up and
+#: shortly before each level.
+BUILD_UP_DAY, SHORTLY_DAY, FINE_SAMPLE_DAY, SAMPLE_DAY = 8.0, 2.0, 0.1, 0.3
 
 
 @dataclass(frozen=True)
@@ -105,10 +105,12 @@ def plan_intake(record: Record, level_days: Sequence[float], spread: RecordSprea
     )
     if doubtful:
         begin = max(doubtful[0].time_day, record.start_day)
-        built_up = min(begin + BUILD_UP_DAY, last)
-        early = np.arange(begin, built_up, BUILD_UP_SAMPLE_DAY)
-        late = np.arange(built_up, last, SAMPLE_DAY)
-        days = np.unique(np.concatenate([early, late, times]))
+        fine = [np.arange(begin, min(begin + BUILD_UP_DAY, last), FINE_SAMPLE_DAY)]
+        fine += [np.arange(max(t - SHORTLY_DAY, begin), t, FINE_SAMPLE_DAY) for t in level_days]
+        days = np.unique(np.concatenate([*fine, np.arange(begin, last, SAMPLE_DAY), times]))
+        # two samplings may fall on nearly the same moment; the levels' own times stay
+        kept = np.concatenate([np.diff(days) > 0.4 * FINE_SAMPLE_DAY, [True]]) | np.isin(days, times)
+        days = days[kept]
     else:
         days = np.unique(times)
     size = math.ceil(len(doubtful) / MOST_DOSES) if doubtful else 1
