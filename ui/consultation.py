@@ -76,7 +76,11 @@ def page() -> None:
 
 
 def _page() -> None:
-    settings = opening.site()
+    try:
+        settings = opening.site()
+    except CaseError as error:
+        opening.bad_site(error)
+        return
     opening.forget_when_left_alone(settings.session_timeout_min)
     state = st.session_state
     for kind in ("dose_rows", "level_rows", "own_rows"):
@@ -94,7 +98,11 @@ def _page() -> None:
             tell.watermark()
     with st.container(key="opening"):
         opening.opening()
-    pinned = st.container(key="pinned")
+    with st.container(key="pinned"):
+        with st.container():
+            if demonstration:
+                tell.banner()
+        pinned = st.empty()
 
     echoes = _echoes(asked)
     with _step(1, "How is the patient?", ask.patient_sentence(asked)):
@@ -107,8 +115,8 @@ def _page() -> None:
     outcome = answer(checked, settings)
     consult = outcome.consult
     hidden = opening.committing(demonstration)
-    with pinned:
-        tell.pinned(consult.cautions if consult and not hidden else (), demonstration)
+    with pinned.container():
+        tell.pinned(consult.cautions if consult and not hidden else ())
     spoken = None if hidden else consult
     slots: list[tuple[Any, str]] = []
 

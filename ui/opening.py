@@ -32,6 +32,12 @@ def site() -> Site:
     return load_site(path) if path else no_site()
 
 
+def bad_site(error: CaseError) -> None:
+    """The settings file has a fault: nothing is calculated with half of a protocol."""
+    look.say("The service's own settings file has to be mended before this page can be used.", "stopped")
+    look.lines([p.text for p in error.problems])
+
+
 # --- who may see the page --------------------------------------------------------------------------------
 
 
@@ -43,7 +49,7 @@ def sign_in_is_set_up() -> bool:
 def may_be_seen() -> bool:
     """On this machine: yes. Elsewhere: only after sign-in, or where whoever started it said so twice."""
     if sign_in_is_set_up():
-        if st.user.is_logged_in:
+        if getattr(st.user, "is_logged_in", False):
             return True
         look.say("Sign in with your hospital account to use this page.")
         st.button("Sign in", on_click=st.login, key="sign-in")

@@ -16,6 +16,7 @@ from pkcalc.consult import Consult, Shown
 from pkcalc.errors import Caution
 from pkcalc.estimate.result import Band, Estimate
 from pkcalc.levels import Observation
+from pkcalc.note import hours
 from pkcalc.note.annex import DANGER_HEADS, danger_row, estimate_lines, populations_compared
 from pkcalc.note.charts import Chart
 from pkcalc.note.data import dumps, note_data
@@ -42,9 +43,13 @@ URGENT = (
 _NAMES = {"stop": "STOP", "warn": "WARNING"}
 
 
-def pinned(cautions: Sequence[Caution], demonstration: bool) -> None:
+def banner() -> None:
+    st.html(f'<div class="pk-banner">{escape(DEMONSTRATION)}</div>')
+
+
+def pinned(cautions: Sequence[Caution]) -> None:
     """Stops and warnings, always in sight; what is only worth a note stands further down."""
-    html = f'<div class="pk-banner">{escape(DEMONSTRATION)}</div>' if demonstration else ""
+    html = ""
     shown = [c for c in cautions if c.severity in _NAMES]
     if shown:
         items = []
@@ -305,6 +310,13 @@ def _compare(rows: Sequence[Shown]) -> None:
 
 def acute(consult: Consult) -> None:
     """Loads, pausing and other forms, as the plan gives them; the whole of each stands in the note."""
+    if consult.projection is not None:
+        look.lines(list(hours.front_lines(consult, consult.projection)))
+        for part in hours.sections(consult):
+            if part.table is None:
+                look.lines(list(part.lines))
+            else:
+                look.table(part.table.heads, list(part.table.rows), label=part.title)
     plan = consult.plan
     if plan is None:
         return
@@ -325,17 +337,15 @@ def acute(consult: Consult) -> None:
     look.lines(list(plan.no_load))
     if plan.pause is not None:
         pause = plan.pause
+        back = show(pause.to_mg_per_L, "mg/L")
         look.say("The level is too high: reduce in part, or pause", "answer")
         look.lines(
             [
                 pause.seizure_risk,
-                f"Level today {level_words(pause.now)}; give again at {show(pause.to_mg_per_L, 'mg/L')}. Without any "
+                f"Level today {level_words(pause.now)}; give again at {back}. Without any "
                 f"dose that takes {days_words(pause.days)}.",
                 *pause.lines,
-                *(
-                    f"Partial reduction to {r.words}: down to {show(r.to_mg_per_L, 'mg/L')} in {days_words(r.days)}."
-                    for r in pause.reductions
-                ),
+                *(f"Partial reduction to {r.words}: down to {back} in {days_words(r.days)}." for r in pause.reductions),
             ]
         )
     for switch in plan.switches:
@@ -361,6 +371,11 @@ def candidates_sentence(consult: Consult | None) -> str:
 
 
 def next_look(consult: Consult) -> None:
+    if consult.projection is not None:
+        first, *rest = hours.next_lines(consult, consult.projection)
+        look.say(first, "answer")
+        look.lines(rest)
+        return
     plan = consult.plan
     if plan is None or plan.next_level is None:
         look.say(plan.no_next_level if plan is not None and plan.no_next_level else NO_NEXT)
@@ -382,6 +397,8 @@ NO_NEXT = "There is no estimate from which to tell when a level would say someth
 
 
 def next_sentence(consult: Consult | None) -> str:
+    if consult is not None and consult.projection is not None:
+        return hours.next_lines(consult, consult.projection)[0]
     if consult is None or consult.plan is None or consult.plan.next_level is None:
         return ""
     return consult.plan.next_level.action

@@ -97,7 +97,7 @@ class Visit:
             color_scheme="dark" if dark else "light",
             accept_downloads=True,
         )
-        self.context.set_default_timeout(8_000)
+        self.context.set_default_timeout(25_000)
         self.context.route("**/*", self._only_here)
         self.address = address
         self.page = self.context.new_page()
@@ -113,7 +113,7 @@ class Visit:
             route.abort()
 
     def ready(self) -> None:
-        self.page.get_by_label("Why was the level drawn").wait_for(timeout=20_000)
+        self.page.get_by_label("Why was the level drawn").wait_for(timeout=40_000)
 
     def settle(self) -> None:
         """Wait until the server has answered and the page stands still."""

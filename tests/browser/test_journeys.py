@@ -2,16 +2,25 @@
 
 from __future__ import annotations
 
+import json
 import re
 from collections.abc import Callable
+from importlib.util import module_from_spec, spec_from_file_location
 from pathlib import Path
 from typing import Any
 
 import pytest
 from axe_playwright_python.sync_playwright import Axe
-from playwright.sync_api import expect
+from playwright.sync_api import Browser, expect
 
 pytestmark = pytest.mark.browser
+
+_spec = spec_from_file_location("browser_tools", Path(__file__).with_name("conftest.py"))
+assert _spec is not None
+assert _spec.loader is not None
+_tools: Any = module_from_spec(_spec)
+_spec.loader.exec_module(_tools)
+start_server = _tools.start_server
 
 Visitor = Callable[..., Any]
 PAIR = """{"pkcalc_case": 1, "drug": "phenytoin",
@@ -211,27 +220,65 @@ def test_widths_and_dark_mode(visit: Visitor, width: int, dark: bool) -> None:
     assert grave(v) == []
 
 
-def test_downloads_open_again_as_the_same_case(visit: Visitor, tmp_path: Path) -> None:
-    v = visit()
-    v.open_demonstration("Two steady levels on two doses")
-    with v.page.expect_download() as got:
-        v.press("Case file")
-    path = tmp_path / "case.json"
-    got.value.save_as(path)
+def test_every_format_is_downloaded_and_the_case_opens_again(visit: Visitor, tmp_path: Path) -> None:
     from pkcalc.case import load_case
     from pkcalc.demos import demonstration
 
-    assert load_case(path).hash == demonstration("clean-pair").hash
+    v = visit()
+    v.open_demonstration("Two steady levels on two doses")
+    got = {}
+    for name in ("Note as text", "Note as HTML", "Note as PDF", "Note as JSON", "Case file"):
+        with v.page.expect_download() as download:
+            v.press(name)
+        path = tmp_path / download.value.suggested_filename
+        download.value.save_as(path)
+        assert path.name.startswith("demonstration-")
+        got[name] = path
+    assert got["Note as PDF"].read_bytes().startswith(b"%PDF-")
+    for name in ("Note as text", "Note as HTML", "Note as JSON"):
+        assert "DEMONSTRATION - invented" in got[name].read_text(encoding="utf-8")
+    assert json.loads(got["Note as JSON"].read_text(encoding="utf-8"))["outcome"] == "done"
+    case = got["Case file"]
+    assert load_case(case).hash == demonstration("clean-pair").hash
     other = visit()
-    other.page.get_by_text("Open a demonstration or a case file").click()
-    other.page.locator("input[type=file]").set_input_files(path)
-    other.page.get_by_text("DEMONSTRATION - invented").first.wait_for()
-    assert load_case(path).hash in other.text()
+    other.open_case(case.read_text(encoding="utf-8"))
+    text = other.text()
+    assert load_case(case).hash in text
+    assert "DEMONSTRATION - invented" in text
+
+
+def test_200_rows_are_pasted_from_a_spreadsheet(visit: Visitor) -> None:
+    rows = "\n".join(
+        f"2026-{1 + n // 50:02d}-{1 + n % 25:02d} {6 + n // 25 % 2 * 12:02d}:00\t100 mg" for n in range(200)
+    )
+    v = visit()
+    v.choose("Drug", "phenytoin")
+    v.page.get_by_text("Paste single doses from a spreadsheet").click()
+    v.choose("Form of all pasted doses", "oral suspension (phenytoin acid)")
+    v.type("Pasted rows", rows)
+    v.page.get_by_text("200 single doses read.").wait_for()
+    assert "200 pasted single doses" in v.text()
+
+
+def test_the_page_is_refused_to_other_machines_without_sign_in(browser: Browser, tmp_path: Path) -> None:
+    """Started by hand on every address, without `pkcalc form`: no field is shown."""
+    server, address = start_server(tmp_path / "log.txt", "--server.address", "0.0.0.0")
+    context = browser.new_context()
+    try:
+        page = context.new_page()
+        page.goto(address)
+        page.get_by_text("This page refuses to be shown to other machines without sign-in.").wait_for(timeout=40_000)
+        assert page.locator("input").count() == 0
+    finally:
+        context.close()
+        server.terminate()
+        server.wait(10)
 
 
 def test_the_log_of_the_server_holds_nothing_of_a_case(visit: Visitor, server_log: Path) -> None:
     v = visit()
-    v.open_case(PAIR)
+    v.open_demonstration("The next capsule tips over Vmax")
+    v.page.locator(".pk-chart").first.wait_for()
     v.unfold("What was measured?")
     v.type("Level as reported", "12,5")
     v.settle()

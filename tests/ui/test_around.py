@@ -1,0 +1,204 @@
+"""Around a consult: who may see the page, forgetting, the second entry, demonstrations for residents, pasting."""
+
+from __future__ import annotations
+
+import os
+from importlib.util import module_from_spec, spec_from_file_location
+from pathlib import Path
+from typing import Any
+
+import pytest
+from click.testing import CliRunner
+from pkcalc_form import opening
+from streamlit import config
+
+from pkcalc.cli import cli
+from pkcalc.demos import demonstrations
+
+_spec = spec_from_file_location("page_tests", Path(__file__).with_name("test_page.py"))
+assert _spec is not None
+assert _spec.loader is not None
+page: Any = module_from_spec(_spec)
+_spec.loader.exec_module(page)
+
+
+def test_the_page_refuses_to_be_shown_to_other_machines_without_sign_in(monkeypatch: pytest.MonkeyPatch) -> None:
+    config.set_option("server.address", "0.0.0.0")
+    at = page.start()
+    assert "This page refuses to be shown to other machines without sign-in." in page.shown(at)
+    assert not at.text_input
+    monkeypatch.setenv(opening.NO_SIGN_IN, "yes")  # told once
+    assert not at.run().text_input
+    monkeypatch.setenv(opening.NO_SIGN_IN, opening.TOLD_TWICE)
+    assert at.run().text_input
+
+
+def test_the_page_asks_for_sign_in_where_it_is_set_up(monkeypatch: pytest.MonkeyPatch) -> None:
+    monkeypatch.setattr(opening, "sign_in_is_set_up", lambda: True)
+    at = page.start()
+    assert [b.label for b in at.button] == ["Sign in"]
+    assert not at.text_input
+
+
+def started(monkeypatch: pytest.MonkeyPatch, *words: str) -> tuple[Any, list[list[str]]]:
+    """What `pkcalc form` would start, without starting it."""
+    calls: list[list[str]] = []
+    here = os.getcwd()
+    monkeypatch.setattr(os, "execv", lambda _, command: calls.append(list(command)))
+    monkeypatch.setattr(Path, "home", lambda: Path("/nonexistent"))
+    try:
+        return CliRunner().invoke(cli, ["form", *words]), calls
+    finally:
+        os.chdir(here)
+
+
+def test_the_form_is_started_on_this_machine_only(monkeypatch: pytest.MonkeyPatch) -> None:
+    result, calls = started(monkeypatch, "--port", "8600")
+    assert result.exit_code == 0
+    assert calls[0][1:4] == ["-m", "streamlit", "run"]
+    assert calls[0][5:] == ["--server.port", "8600", "--server.address", "127.0.0.1"]
+
+
+@pytest.mark.parametrize("told", [[], ["--without-sign-in"]])
+def test_another_address_is_refused_unless_told_twice(monkeypatch: pytest.MonkeyPatch, told: list[str]) -> None:
+    result, calls = started(monkeypatch, "--address", "0.0.0.0", *told)
+    assert result.exit_code == 2
+    assert calls == []
+    assert "not shown at 0.0.0.0 without sign-in" in result.output
+    monkeypatch.setenv(opening.NO_SIGN_IN, "")
+    result, calls = started(monkeypatch, "--address", "0.0.0.0", "--without-sign-in", "--without-sign-in")
+    assert len(calls) == 1
+    assert os.environ[opening.NO_SIGN_IN] == opening.TOLD_TWICE
+
+
+def test_a_session_left_alone_forgets_and_says_so(monkeypatch: pytest.MonkeyPatch) -> None:
+    at = page.enter(page.start(), page.PAIR)
+    now = opening.clock()
+    monkeypatch.setattr(opening, "clock", lambda: now + 19 * 60)
+    at.run()
+    assert at.text_input(key="level.1.value").value == "8"
+    monkeypatch.setattr(opening, "clock", lambda: now + 40 * 60)
+    at.run()
+    assert "This page was left alone for more than 20 min, so it forgot the case." in page.shown(at)
+    assert all(not t.value for t in at.text_input)
+    assert "kept" not in at.session_state
+
+
+def test_the_site_file_sets_the_time_after_which_a_session_forgets(
+    monkeypatch: pytest.MonkeyPatch, tmp_path: Path
+) -> None:
+    file = tmp_path / "site.toml"
+    site = '[site]\nname = "Ours"\nprotocol = "Ours, 1 Jan 2026"\ndrug = "phenytoin"\n'
+    file.write_text(site + '[form]\nsession_timeout = "5 min"\n', encoding="utf-8")
+    monkeypatch.setenv(opening.SITE, str(file))
+    at = page.enter(page.start(), page.PAIR)
+    now = opening.clock()
+    monkeypatch.setattr(opening, "clock", lambda: now + 6 * 60)
+    at.run()
+    assert "left alone for more than 5 min" in page.shown(at)
+
+
+def test_a_faulty_site_file_stops_the_page_and_is_named(monkeypatch: pytest.MonkeyPatch, tmp_path: Path) -> None:
+    file = tmp_path / "site.toml"
+    file.write_text("[form]\nsession_timeout = 5\n", encoding="utf-8")
+    monkeypatch.setenv(opening.SITE, str(file))
+    at = page.start()
+    assert "The service's own settings file has to be mended before this page can be used." in page.shown(at)
+    assert "site.toml" in page.shown(at)
+    assert not at.text_input
+
+
+def test_commit_first_hides_every_answer_until_an_own_one_is_written() -> None:
+    at = page.start()
+    at.selectbox(key="demo_name").select("over-the-ceiling")
+    at.checkbox(key="commit_first").check().run()
+    at.button(key="open-demo").click().run()
+    text = page.shown(at)
+    assert not page.NUMBER_WITH_UNIT.search(text)
+    assert not page.tables(at)
+    assert "chance of a level above" not in text  # not in the cautions either
+    at.button(key="reveal").click().run()
+    assert "write both before the answers are revealed" in page.shown(at)
+    assert not page.tables(at)
+    at.text_input(key="my_dose").input("330 mg daily")
+    at.text_input(key="my_level").input("15 mg/L in three weeks")
+    at.button(key="reveal").click().run()
+    text = page.shown(at)
+    assert "You wrote: dose 330 mg daily; expected level 15 mg/L in three weeks. Compare below." in text
+    assert page.NUMBER_WITH_UNIT.search(text)
+
+
+def test_the_second_entry_is_blind_and_every_difference_is_listed() -> None:
+    at = page.enter(page.start(), page.PAIR)
+    at.button(key="begin-second").click().run()
+    text = page.shown(at)
+    assert all(not t.value for t in at.text_input)
+    assert "Second entry: type the case again from the chart" in text
+    assert "350 mg daily" not in text
+    page.enter(at, page.PAIR | {"dose.2.said": "330 mg daily"})
+    text = page.shown(at)
+    assert "The two entries differ in 1 field" in text
+    assert "350 mg (first), 330 mg (second)" in text
+    page.enter(at, {"dose.2.said": "0.35 g daily"})
+    text = page.shown(at)
+    assert "The two entries agree in every field compared." in text
+    assert "Written differently, the same value:" in text
+
+
+def test_200_pasted_rows_are_read_and_a_bad_one_is_named() -> None:
+    rows = "\n".join(f"2026-0{1 + n // 50}-{1 + n % 25:02d} {6 + n // 25 % 2 * 12:02d}:00\t100 mg" for n in range(200))
+    at = page.start()
+    page.enter(at, {"drug": "phenytoin"})
+    page.enter(at, {"pasted": rows, "pasted_form": "suspension"})
+    assert "200 single doses read." in page.shown(at)
+    page.enter(at, {"pasted": rows.replace("100 mg", "1OO mg", 1)})
+    assert any("Dose line 1, amount" in line for line in page.beside(at))
+    assert "200 single doses read." not in page.shown(at)
+
+
+def test_a_level_says_what_it_is_worth_as_soon_as_it_is_typed() -> None:
+    """Total 8 mg/L at albumin 29 g/L: 8 / (0.2 x 2.9 + 0.1) = 11.8 mg/L (Sheiner and Tozer's equation)."""
+    at = page.enter(
+        page.start(),
+        {
+            "drug": "phenytoin",
+            "albumin": "29",
+            "albumin_unit": "g/L",
+            "level.1.value": "8",
+            "level.1.unit": "mg/L",
+            "level.1.kind": "total",
+        },
+    )
+    assert "Read as 8 mg/L total: worth 11.8 mg/L total at normal binding." in page.shown(at)
+
+
+@pytest.mark.slow
+@pytest.mark.parametrize("name", [d.name for d in demonstrations()])
+def test_every_demonstration_opens_without_a_fault(name: str) -> None:
+    at = page.open_demonstration(name)
+    text = page.shown(at)
+    assert "The calculation stopped" not in text
+    assert page.beside(at) == []
+    assert "DEMONSTRATION - invented" in text
+    for toggle in ("ask-how", "ask-populations", "ask-whole_note"):
+        found = [t for t in at.toggle if t.key == toggle]
+        for t in found:
+            t.set_value(True)
+    at.run()
+    assert "The calculation stopped" not in page.shown(at)
+
+
+def test_a_shelf_brings_regimens_and_two_of_them_side_by_side() -> None:
+    at = page.open_demonstration("over-the-ceiling")
+    words = at.multiselect(key="two").options
+    assert len(words) > 4
+    at.multiselect(key="two").set_value(list(words[:2])).run()
+    assert sum("Two regimens side by side" in t for t in page.tables(at)) == 1
+
+
+def test_a_chosen_regimen_and_own_words_stand_on_the_note() -> None:
+    at = page.open_demonstration("clean-pair")
+    page.enter(at, {"chosen": "stay", "own_words": "Family prefers no change."})
+    text = page.shown(at)
+    assert "Family prefers no change." in text
+    assert "No regimen is chosen yet" not in text
