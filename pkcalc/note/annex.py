@@ -2,8 +2,6 @@
 
 from __future__ import annotations
 
-from collections.abc import Sequence
-
 import numpy as np
 
 from pkcalc.case import QUESTIONS, EarlierForecast
@@ -623,12 +621,13 @@ def _checked(consult: Consult) -> Section:
 
 
 def _sources(consult: Consult) -> Section:
+    return Section("Sources used", sources_used(consult))
+
+
+def sources_used(consult: Consult) -> tuple[str, ...]:
+    """Citations of everything this note rests on."""
     keys = ["michaelis1913", "ludden1977"]
     if consult.prior is not None:
         keys += consult.prior.sources
     keys += [c.source for c in consult.cautions]
-    return Section("Sources used", tuple(citations(keys)))
-
-
-def citations(keys: Sequence[str]) -> list[str]:
-    return [source(key).citation for key in dict.fromkeys(keys)]
+    return tuple(source(key).citation for key in dict.fromkeys(keys))

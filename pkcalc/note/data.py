@@ -12,10 +12,12 @@ from pkcalc.dosing import Regimen
 from pkcalc.errors import CannotEstimate, CaseError
 from pkcalc.estimate.result import Band, Estimate
 from pkcalc.forecast import Forecast
-from pkcalc.note import hours
-from pkcalc.note.document import DEFERS, compose
+from pkcalc.note import hours, populations
+from pkcalc.note.annex import sources_used
+from pkcalc.note.front import page_one, paste_block, spoken_for
 from pkcalc.note.offers import plan_data
-from pkcalc.note.words import demonstration_words
+from pkcalc.note.words import DEFERS, Section, demonstration_words
+from pkcalc.note.workings import machine_only, workings
 
 NOTE_VERSION = 1
 
@@ -136,13 +138,84 @@ def note_data(consult: Consult) -> dict[str, Any]:
         "table": [shown_data(s) for s in consult.table],
         "plan": plan_data(consult.plan) if consult.plan is not None else None,
         "dose_rate_for_aim_active_mg_per_day": band_data(consult.aim_rate) if consult.aim_rate else None,
-        "workings": [line for s in compose(consult).sections if s.title == "Workings" for line in s.lines],
+        "populations": _populations(consult),
+        "workings": _workings(consult),
+        "second_way": [
+            {
+                "quantity": r.quantity,
+                "first": number(r.first),
+                "second": number(r.second),
+                "unit": r.unit,
+                "tolerance": r.tolerance_text,
+                "agrees": r.agrees,
+            }
+            for r in consult.second_way
+        ],
+        "local_settings": [
+            {"path": s.path, "value": s.value, "instead_of": s.instead_of} for s in consult.site.settings
+        ],
+        "page_one": [section_data(s) for s in page_one(consult)],
+        "paste": list(paste_block(consult)),
+        "sources": list(sources_used(consult)),
         "version": __version__,
         "results_date": consult.results_date,
         "case_hash": case.hash,
         "drug_file_hash": consult.profile.sha256,
         "site_file_hash": consult.site.sha256,
         "defers": DEFERS,
+    }
+
+
+def section_data(section: Section) -> dict[str, Any]:
+    table = section.table
+    return {
+        "title": section.title,
+        "lines": [x.strip() for x in section.lines],
+        "table": None if table is None else {"heads": list(table.heads), "rows": [list(r) for r in table.rows]},
+    }
+
+
+def _populations(consult: Consult) -> list[dict[str, Any]]:
+    shown = spoken_for(consult)
+    if shown is None or consult.stopped:
+        return []
+    return [
+        {
+            "words": c.words,
+            "used": c.used,
+            "vmax_mg_per_day": band_data(c.vmax),
+            "km_mg_per_L": band_data(c.km),
+            "steady_level_normal_binding_mg_per_L": band_data(c.steady),
+            "danger": number(c.danger),
+        }
+        for c in populations.compare(consult, shown)
+    ]
+
+
+def _workings(consult: Consult) -> dict[str, Any]:
+    found = workings(consult)
+    pair = found.representative
+    return {
+        "groups": [
+            {
+                "title": title,
+                "steps": [
+                    {
+                        "what": s.what,
+                        "equation": s.equation,
+                        "numbers": s.numbers,
+                        "result": s.result.value,
+                        "unit": s.result.unit,
+                        "remark": s.remark,
+                    }
+                    for s in steps
+                ],
+            }
+            for title, steps in found.groups
+        ],
+        "representative": None if pair is None else {"vmax_mg_per_day": pair[0].value, "km_mg_per_L": pair[1].value},
+        "said": [x for x in found.said if x],
+        "machine_only": list(machine_only(consult)),
     }
 
 
