@@ -1475,6 +1475,13 @@ def _check_order(case: Case, check: _Check) -> None:
         not_after_consult(case.albumin.taken, "Albumin, taken", "it was taken", "Check the dates")
     ends = [m for m in (case.now, *(x.drawn for x in case.levels)) if m is not None]
     doses = 0.0
+    if case.load_at is not None and case.now is not None and case.load_at < case.now:
+        check.say(
+            "Plan, load, at",
+            f"it is planned for {show_time(case.load_at)}, before the consult ({show_time(case.now)})",
+            "a time after the consult",
+            "Check the date; a load already given belongs into the record of doses",
+        )
     for course in case.courses:
         key = "at" if course.single is not None else "from"
         not_after_consult(

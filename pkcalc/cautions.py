@@ -58,6 +58,7 @@ class State:
     pair_refusal: str = ""
     steady_levels_used: bool = False
     distrusted: str = ""
+    why_none: str = ""
     estimate: Estimate | None = None
     goal: Goal | None = None
     regimens: Sequence[ShownRegimen] = ()
@@ -443,6 +444,18 @@ def _chance_of_negative_km_above(s: State, p: Mapping[str, Any]) -> list[Words]:
     return [{"chance": percent(chance)}] if p["limit"] < chance <= upper else []
 
 
+def _no_estimate(s: State, p: Mapping[str, Any]) -> list[Words]:
+    return [{"why": s.why_none}] if s.why_none else []
+
+
+def _levels_old(s: State, p: Mapping[str, Any]) -> list[Words]:
+    drawn = [o.level.drawn for o in s.observations if o.level.drawn is not None]
+    if s.case.now is None or not drawn:
+        return []
+    days = (s.case.now - max(drawn)) / timedelta(days=1)
+    return [{"days": show(days, "days", 2)}] if days > p["limit_days"] else []
+
+
 def _not_trusted(s: State, p: Mapping[str, Any]) -> list[Words]:
     return [{"why": s.distrusted}] if s.distrusted else []
 
@@ -498,11 +511,12 @@ def _increase_on_doubt(s: State, p: Mapping[str, Any]) -> list[Words]:
     if s.case.answer("adherence_doubtful") == "no":
         return []
     level = present_level(s.observations)
+    censored = any(o.censored == "below" and o.working_mg_per_L == level for o in s.observations)
     now = next((r.forecast.rate_mg_per_day for r in s.regimens if r.present), None)
     if now is None or level >= s.goal.low_mg_per_L:
         return []
     return [
-        {"regimen": r.words, "level": show(level, "mg/L")}
+        {"regimen": r.words, "level": ("below " if censored else "") + show(level, "mg/L")}
         for r in s.regimens
         if r.forecast.rate_mg_per_day > now * (1 + 1e-9)
     ]
@@ -563,6 +577,8 @@ PREDICATES: dict[str, Predicate] = {
     "no_age": _no_age,
     "no_weight": _no_weight,
     "normalised_elsewhere": _normalised_elsewhere,
+    "no_estimate": _no_estimate,
+    "levels_old": _levels_old,
     "not_settled": _not_settled,
     "not_trusted": _not_trusted,
     "overlapping": _overlapping,

@@ -127,10 +127,15 @@ def run_consult(case: Case, site: Site | str | Path | None = None) -> Consult:
     if "two-level" in stops and found.by_method.pop(two_level.METHOD, None) is not None:
         chosen, why = _choose(found.by_method, case)
     if "estimate" in stops:
+        found = replace(found, settling=(), own_settling=())
         chosen, why = None, ""
     if chosen is None and _first_doses(case, population, stops):
         chosen, why = population, "the population alone: no level could be learned from yet"
     state = replace(state, estimate=chosen)
+    if chosen is None and not {"estimate", "projection"} & stops:
+        why_none = " ".join(f"{name[0].upper()}{name[1:]}: {reason}" for name, reason in found.refusals.items())
+        said += caution_engine.after_estimate(replace(state, why_none=why_none))
+        stops = caution_engine.blocked(said)
 
     scale = lab_scale(case, profile, local, case.albumin, observations)
     proposed: tuple[Shown, ...] = ()

@@ -234,7 +234,7 @@ def total_spread(case: Case, profile: Profile, site: Site) -> Spread:
 
 def adherence(case: Case) -> tuple[str, str]:
     """How the doses were taken: key of the profile's spreads, and the words for it."""
-    givers = {c.given_by for c in case.courses}
+    givers = {c.given_by for c in case.courses if c.counts_as_given}
     if case.answer("adherence_doubtful") == "yes":
         return "doubtful", "doubtful adherence"
     if givers == {"nurse"} and case.answer("adherence_doubtful") == "no":
@@ -294,7 +294,7 @@ def _read(level: Level, reported: float, case: Case, profile: Profile, site: Sit
         step = f"normalised total = free / {show_number(fraction)} = {shown} / {show_number(fraction)} = "
         return _Reading(working, working, working, steps=(step + show(working, "mg/L", 4),))
     displaced = any(case.answer(d.drug) == "yes" for d in binding.displacements)
-    if case.answer("renal_failure") == "yes" or displaced:
+    if displaced or "yes" in (case.answer("renal_failure"), case.answer("pregnancy")):
         low, high, step = _possible(reported, level, case, profile, albumin)
         return _Reading(math.sqrt(low * high), low, high, readable=False, steps=(step,))
     if albumin is None:

@@ -46,9 +46,7 @@ def course_of(case: Case, observation: Observation) -> Course | None:
     if level.drawn is None:
         return repeated[0] if len(repeated) == 1 else None
     found = [
-        c
-        for c in repeated
-        if (c.start is None or c.start < level.drawn) and (c.end is None or level.drawn <= c.end)
+        c for c in repeated if (c.start is None or c.start < level.drawn) and (c.end is None or level.drawn <= c.end)
     ]
     dated = [c for c in found if c.start is not None]
     if dated:
@@ -106,44 +104,53 @@ def settling(
         pair = by_level.get(o.level.index)
         days = days_on_dose(case, o)
         if pair is None:
-            found.append(
-                Settling(
-                    o.level.index,
-                    days,
-                    None,
-                    None,
-                    None,
-                    f"{name}: no single dose in force is stated for it.",
-                )
-            )
+            found.append(Settling(o.level.index, days, None, None, None, f"{name}: {_why_no_pair(case, o)}."))
             continue
         if days is None:
-            sentence = (
-                f"{name}: the start of its dose or the time of the draw is not stated, so nobody can tell."
-            )
+            sentence = f"{name}: the start of its dose or the time of the draw is not stated, so nobody can tell."
             found.append(Settling(o.level.index, None, None, None, None, sentence))
             continue
         if estimate is None or estimate.volume_L is None:
-            sentence = (
-                f"{name}: drawn {_days(days)} into its dose; without a weight no time to plateau follows."
-            )
+            sentence = f"{name}: drawn {_days(days)} into its dose; without a weight no time to plateau follows."
             found.append(Settling(o.level.index, days, None, None, None, sentence))
             continue
         start = _start_level(case, o, pairs, observations)
         fraction, needed = fraction_of_way(estimate, pair.rate_mg_per_day, days, start)
-        settled = fraction.median >= SETTLED
-        need = (
-            _days(needed.median)
-            if np.isfinite(needed.median)
-            else "no time at all, as there is no steady state,"
-        )
+        missed = _missed_before(case, o, min(days, needed.median))
+        settled = fraction.median >= SETTLED and not missed
+        need = _days(needed.median) if np.isfinite(needed.median) else "no time at all, as there is no steady state,"
         sentence = (
             f"{name}: drawn {_days(days)} into its dose, {show_number(100 * fraction.median, 2)} % of the way to the "
             f"plateau (90 % interval {show_number(100 * fraction.low, 2)} to {show_number(100 * fraction.high, 2)} %); "
             f"90 % of the way takes {need} here."
         )
+        if missed:
+            sentence += f" Not steady: {'1 dose was' if missed == 1 else f'{missed} doses were'} missed within that time before it."
         found.append(Settling(o.level.index, days, fraction, needed, settled, sentence))
     return tuple(found)
+
+
+def _why_no_pair(case: Case, o: Observation) -> str:
+    """Why a level belongs to no steady dose."""
+    if o.set_aside:
+        return f"not used, {o.set_aside}"
+    if not o.readable:
+        return "no single reading of it can be trusted, so its steadiness is not judged"
+    if o.censored is not None:
+        return "only a limit, so it cannot serve as a steady level"
+    singles = [c for c in case.courses if c.regimen is None and c.counts_as_given]
+    if course_of(case, o) is None and singles:
+        return "no repeated dose was in force, so it is a level after a load or single doses, not a steady level"
+    return "no single dose in force is stated for it"
+
+
+def _missed_before(case: Case, o: Observation, days: float) -> int:
+    """Doses recorded as missed within some days before the draw."""
+    course = course_of(case, o)
+    if course is None or o.level.drawn is None:
+        return 0
+    drawn = o.level.drawn
+    return sum(1 for m in course.missed if m <= drawn and days_between(m, drawn) <= days)
 
 
 def _days(days: float) -> str:
@@ -176,9 +183,7 @@ def fraction_of_way(
     """
     assert estimate.volume_L is not None
     vmax, km, volume = estimate.vmax_mg_per_day, estimate.km_mg_per_L, estimate.volume_L
-    steady = formulas.steady_state_level(
-        dose_rate_mg_per_day=rate_mg_per_day, vmax_mg_per_day=vmax, km_mg_per_L=km
-    )
+    steady = formulas.steady_state_level(dose_rate_mg_per_day=rate_mg_per_day, vmax_mg_per_day=vmax, km_mg_per_L=km)
     level = formulas.level_after(
         time_day=days,
         start_mg_per_L=start_mg_per_L,

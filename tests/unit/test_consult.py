@@ -28,7 +28,7 @@ def test_the_form_has_no_default() -> None:
     nameless = [{k: v for k, v in line.items() if k != "form"} for line in PLAIN["doses"]]
     with pytest.raises(CaseError) as refused:
         plain(doses=nameless)
-    assert [p.where for p in refused.value.problems] == ["Dose line 1, form", "Dose line 2, form"]
+    assert [p.where.split(" (")[0] for p in refused.value.problems] == ["Dose line 1, form", "Dose line 2, form"]
     assert "there is no default" in refused.value.problems[0].fix
 
 
@@ -195,3 +195,42 @@ def test_a_single_open_ended_line_is_a_record() -> None:
     assert consult.record.before is not None
     present = next(s for s in consult.table if s.present)
     assert 6 < present.forecast.steady.median < 12
+
+
+def test_missed_doses_make_a_level_unsteady() -> None:
+    lines = [dict(PLAIN["doses"][0]), dict(PLAIN["doses"][1])]
+    lines[1]["missed"] = ["2026-11-29 21:00", "2026-11-30 21:00"]
+    consult = run_consult(plain(doses=lines))
+    second = consult.settling[1]
+    assert second.settled is False
+    assert second.sentence.endswith("Not steady: 2 doses were missed within that time before it.")
+    assert "two levels" not in consult.estimates
+    assert "drawn-too-early" in {c.id for c in consult.cautions}
+    lines[1]["missed"] = ["2026-09-20 21:00"]
+    assert run_consult(plain(doses=lines)).settling[1].settled
+
+
+def test_no_method_is_a_stop_that_says_what_is_missing() -> None:
+    consult = run_consult(plain(patient={"age": "45 years"}, levels=[PLAIN["levels"][1]]))
+    assert consult.stopped
+    stop = next(c for c in consult.cautions if c.id == "no-estimate")
+    assert "No weight is given." in stop.text
+    assert "needs two levels on two different doses" in stop.text
+    assert "no-estimate" not in {c.id for c in run_consult(plain()).cautions}
+
+
+def test_an_old_level_is_warned_about() -> None:
+    assert "levels-old" in {c.id for c in run_consult(plain(now="2026-12-30 10:00")).cautions}
+    assert "levels-old" not in {c.id for c in run_consult(plain()).cautions}
+
+
+def test_an_order_that_is_left_out_does_not_change_the_spread() -> None:
+    ordered = {
+        "form": "extended-capsule",
+        "amount": "100 mg",
+        "every": "24 h",
+        "from": "2026-11-30 21:00",
+        "source": "ordered",
+    }
+    with_order = run_consult(plain(doses=[*PLAIN["doses"], ordered]))
+    assert with_order.observations[0].spread == run_consult(plain()).observations[0].spread

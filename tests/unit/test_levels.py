@@ -217,3 +217,11 @@ def test_below_the_limit_is_censored() -> None:
     assert o.censored == "below"
     assert o.working_mg_per_L == 2.5
     assert "two levels" not in run_consult(plain(levels=levels("<2.5 mg/L", "20 mg/L"))).estimates
+
+
+def test_pregnancy_gives_no_single_reading_of_a_total() -> None:
+    (o,) = seen(levels=one("9.4 mg/L"), context={"pregnancy": "yes"})
+    assert not o.readable
+    assert (o.low_mg_per_L, o.high_mg_per_L) == (9.4, 18.8)
+    (free,) = seen(levels=one("0.94 mg/L", "free"), context={"pregnancy": "yes"})
+    assert free.readable
