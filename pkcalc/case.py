@@ -54,7 +54,7 @@ LongText = Annotated[str, StringConstraints(max_length=4000), AfterValidator(_re
 #: as "not stated".
 QUESTIONS: dict[str, str] = {
     "seizing_now": "Is the patient seizing now (status epilepticus)?",
-    "overdose": "Is an acute overdose suspected?",
+    "overdose": "Is an acute overdose of this drug suspected?",
     "seizures_since_change": "Have there been seizures since the last change of dose?",
     "toxic_signs": "Are there signs of toxicity (nystagmus, ataxia, drowsiness)?",
     "recent_load": "Was any load or IV dose given in the last 72 h (emergency department, ambulance, other hospital)?",
