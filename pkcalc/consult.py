@@ -129,7 +129,7 @@ def run_consult(case: Case, site: Site | str | Path | None = None) -> Consult:
     if "estimate" in stops:
         found = replace(found, settling=(), own_settling=())
         chosen, why = None, ""
-    if chosen is None and _first_doses(case, population, stops):
+    if chosen is None and _population_speaks(case, profile, population, stops):
         chosen, why = population, "the population alone: no level could be learned from yet"
     state = replace(state, estimate=chosen)
     if chosen is None and not {"estimate", "projection"} & stops:
@@ -145,7 +145,7 @@ def run_consult(case: Case, site: Site | str | Path | None = None) -> Consult:
     plan: planning.Plan | None = None
     projection: Projection | None = None
     if profile.scope != "dosing":
-        chosen, why, projection = _projected(state, chosen, why, population, prior, found.refusals, stops)
+        chosen, why, projection = _projected(state, chosen, why, prior, found.refusals, stops)
         said += caution_engine.after_plan(replace(state, estimate=chosen, projection=projection))
     elif chosen is not None and "projection" not in stops:
         plan = planning.make(
@@ -236,8 +236,13 @@ def _checked_twice(consult: Consult, state: State) -> Consult:
     )
 
 
-def _first_doses(case: Case, population: Estimate | None, stops: frozenset[str]) -> bool:
-    """True before any level, where first doses or a load are asked for: then only the population can speak."""
+def _population_speaks(case: Case, profile: Profile, population: Estimate | None, stops: frozenset[str]) -> bool:
+    """True before any level, where first doses or a load are asked for: then only the population can speak.
+
+    For a drug that is only projected, or followed by the hour, also where no level could be learned from yet.
+    """
+    if profile.scope != "dosing":
+        return population is not None and not {"estimate", "projection"} & stops
     asked = bool(case.proposed or case.file.plan.load)
     return asked and not case.levels and population is not None and not {"estimate", "projection"} & stops
 
@@ -246,17 +251,12 @@ def _projected(
     state: State,
     chosen: Estimate | None,
     why: str,
-    population: Estimate | None,
     prior: Prior | None,
     refusals: dict[str, str],
     stops: frozenset[str],
 ) -> tuple[Estimate | None, str, Projection | None]:
-    """What comes next for a drug outside full dosing; before any level the population alone stands for the patient."""
-    if "estimate" in stops or "projection" in stops:
-        return chosen, why, None
-    if chosen is None and population is not None:
-        chosen, why = population, "the population alone: no level could be learned from yet"
-    if chosen is None or state.goal is None:
+    """What comes next for a drug outside full dosing."""
+    if {"estimate", "projection"} & stops or chosen is None or state.goal is None:
         return chosen, why, None
     try:
         return (
