@@ -6,7 +6,7 @@ whatever is not offered says why.
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from datetime import timedelta
 
 from pkcalc.case import Case
@@ -37,6 +37,7 @@ from pkcalc.plan.present import (
     doses_missed,
     first_dose_hour,
     is_present,
+    latest_level,
     present_course,
     present_rate,
     today,
@@ -170,7 +171,7 @@ def make(
     own = tuple(next(c for c in every if c.regimen is r and c.proposed) for r in case.proposed)
     next_on = own[0] if own else present
     given_loads, no_load = _loads(case, setting, now, shelf, next_on, stops)
-    asked = _asked(case, setting, now, observations, next_on)
+    asked = _asked(case, setting, now, observations, next_on, present, given_loads)
     level = None if asked is None or "next level" in stops else nextlevel.next_level(asked)
     return Plan(
         shelf=shelf,
@@ -223,18 +224,37 @@ def _asked(
     now: Today,
     observations: tuple[Observation, ...],
     next_on: Candidate | None,
+    present: Candidate | None,
+    loads: tuple[loading.Load, ...],
 ) -> nextlevel.Asked | None:
-    """The regimen whose next level is planned: the chosen one, else the pharmacist's first, else the present."""
-    regimen = case.chosen or (next_on.regimen if next_on is not None else None)
-    if regimen is None:
+    """The regimen whose next level is planned: the chosen one, else the pharmacist's first, else the present.
+
+    An own one that is only proposed and not offered gives way to the present one where that may go on.
+    """
+    on, notes = next_on, []
+    if case.chosen is not None:
+        is_now = is_present(case.chosen, case, setting.profile)
+        own = (case.chosen, case.chosen.words(setting.profile), "", is_now, True)
+        on = candidates([], [own], replace(setting, made_here=False))[0]
+    elif on is not None and not on.offered and present is not None and present.offered and on is not present:
+        notes.append(f"{on.words} is not offered, so the next level is planned for the present {present.words}.")
+        on = present
+    if on is None:
         return None
-    latest = observations[-1] if observations else None
+    used = [o for o in observations if o.usable]
+    free = [o for o in used if o.level.kind == "free"]
+    latest = latest_level(free or used)
     noise = latest.log_sd if latest is not None else total_spread(case, setting.profile, setting.site).log_sd
-    timed, known = clocked(regimen, case)
+    timed, known = clocked(on.regimen, case)
+    load = next((x for x in loads if x.offered), None)
+    if loads and load is None:
+        notes.append("The load is not offered, so it is not counted in.")
+    at = case.load_at or now.moment
+    begins = (at - now.moment) / timedelta(days=1) if at is not None and now.moment is not None else 0.0
     return nextlevel.Asked(
         regimen=timed,
         clock_known=known,
-        words=regimen.words(setting.profile),
+        words=on.regimen.words(setting.profile),
         estimate=setting.central,
         taken=setting.taken,
         now=now,
@@ -243,7 +263,12 @@ def _asked(
         profile=setting.profile,
         site=setting.site,
         noise_log_sd=noise,
-        free=latest is not None and latest.level.kind == "free",
+        free=bool(free),
+        refused="" if on.offered else " ".join(on.why_not),
+        until_mg_per_L=case.restart_level_mg_per_L,
+        load=loading.given_doses(load, setting.profile, begins) if load is not None else (),
+        load_words=f"Counted with the load: {load.order[0]}" if load is not None else "",
+        notes=tuple(notes),
     )
 
 

@@ -42,10 +42,11 @@ class Load:
     """One load or top-up.
 
     from_mg_per_L: level the formula begins at. wanted_mg: labelled amount by the formula; amount_mg: as ordered, after
-    rounding, ceilings and splitting. parts: (hours from the first, labelled mg). minutes: shortest infusion time, None by mouth. rise: what the ordered amount
-    adds; after: level at the end (by mouth: when drawn); at_draw: level draw_after_h hours after the end or, by mouth,
-    after the first part; followed: days from the load and the level with the maintenance dose. above_high,
-    above_critical: chances for `after`. order: the complete line.
+    rounding, ceilings and splitting. parts: (hours from the first, labelled mg). minutes: shortest infusion time, None
+    by mouth. rise: what the ordered amount adds; after: level at the end (by mouth: when drawn); at_draw: level
+    draw_after_h hours after the end or, by mouth, after the first part; followed: days from the load and the level with
+    the maintenance dose. above_high, above_critical: chances for `after`. order: the complete line. marks: what must
+    stand in any heading above the order.
     """
 
     form: str
@@ -405,6 +406,21 @@ def _load(
         notes=tuple(notes),
         offered=not why,
         why_not=tuple(why),
+    )
+
+
+def given_doses(load: Load, profile: Profile, from_day: float) -> tuple[Dose, ...]:
+    """The doses of a load as active drug, from a day on."""
+    form = profile.forms[load.form]
+    taken = load.minutes is None
+    return tuple(
+        Dose(
+            from_day + h / 24,
+            mg * form.active_fraction,
+            duration_day=(load.minutes or 0.0) / 1440,
+            absorption=absorption_of(form) if taken else None,
+        )
+        for h, mg in load.parts
     )
 
 

@@ -12,8 +12,9 @@ from __future__ import annotations
 
 import math
 from collections.abc import Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from datetime import datetime, timedelta
+from typing import Literal
 
 import numpy as np
 
@@ -24,7 +25,8 @@ from pkcalc.drugs.profile import Profile
 from pkcalc.estimate.result import Band, Estimate
 from pkcalc.forecast import TIME_DRAWS, Goal, bands, draws_of, fewer_draws
 from pkcalc.levels import LabScale
-from pkcalc.plan.present import Floats, Today
+from pkcalc.plan.present import Floats, Today, is_toxic
+from pkcalc.record import Dose
 from pkcalc.site import DAYS, Site
 from pkcalc.units import show, show_number
 
@@ -59,13 +61,32 @@ class Draw:
 
 
 @dataclass(frozen=True)
+class Action:
+    """What to write beside a draw: from which level on to call, as the laboratory reports it.
+
+    scale: which level is meant. high: call above the 95 % bound of the forecast, or from the critical level on where
+    that is lower (high_from says which). low: call below the 5 % bound. draw: None where levels are due daily.
+    """
+
+    draw: Draw | None
+    scale: Literal["total", "free"]
+    high_mg_per_L_reported: float
+    high_from: Literal["forecast", "critical"]
+    low_mg_per_L_reported: float | None
+    words: str
+
+
+@dataclass(frozen=True)
 class NextLevel:
     """The proposal for the next level on one regimen.
 
     before: spread of the log steady level now. draws: every feasible draw (the curve). chosen: first within 10 % of the
     best. safety: an early draw, where accumulation is possible; None elsewhere. settled_days: days until a level stands
     at 90 % of its way; meaningful_day: from then on a level can be read as steady (95 % of the draws); +inf: never.
-    action, safety_action: the lines to write. why: the reasons in words.
+    line, safety_line: the lines to write; action, safety_action: their words. why: the reasons in words.
+    none_because: why there is no draw plan although draws can be told (a level at or above the critical one today, a
+    regimen that is not offered); the line then says what is due instead. with_load: the load that is counted in, ""
+    for none; without_load: the line that holds where it is not given.
     """
 
     regimen_words: str
@@ -78,6 +99,11 @@ class NextLevel:
     action: str
     safety_action: str
     why: tuple[str, ...]
+    line: Action
+    safety_line: Action | None = None
+    none_because: str = ""
+    with_load: str = ""
+    without_load: Action | None = None
 
 
 def expected_spread(
@@ -125,8 +151,9 @@ def log_steady(estimate: Estimate, rate_mg_per_day: float, goal: Goal) -> Floats
 @dataclass(frozen=True)
 class Asked:
     """One regimen for which the next level is planned. words: as on the note. clock_known: False where the times of the
-    doses are not stated, so that none is named. free: the laboratory reports free levels.
-    material: the chance above the range or of no steady state, every dose taken, from which a safety level is due."""
+    doses are not stated, so that none is named. free: free levels are what the estimate uses. refused: why the regimen
+    is not offered, "" where it is. until_mg_per_L: the level down to which a toxic one is followed, None: top of the
+    range. load: doses of a load that is counted in, with its words. notes: what must be said besides."""
 
     regimen: Regimen
     clock_known: bool
@@ -140,6 +167,15 @@ class Asked:
     site: Site
     noise_log_sd: float
     free: bool
+    refused: str = ""
+    until_mg_per_L: float | None = None
+    load: tuple[Dose, ...] = ()
+    load_words: str = ""
+    notes: tuple[str, ...] = ()
+
+    def reported(self, level_mg_per_L: float) -> float:
+        """A level on the working basis as the laboratory reports it, free or total."""
+        return self.scale.free(level_mg_per_L) if self.free else self.scale.total(level_mg_per_L)
 
 
 def next_level(asked: Asked) -> NextLevel | None:
@@ -157,7 +193,7 @@ def next_level(asked: Asked) -> NextLevel | None:
     rate = asked.regimen.active_mg_per_day(asked.profile)
     target = log_steady(estimate, rate, asked.goal)
     before = spread_now(target, estimate.weights)
-    report = asked.scale.free if asked.free else asked.scale.total
+    report = asked.reported
     draws = []
     for k, (day, moment) in enumerate(times):
         log_level = np.log(np.maximum(course[:, k], 1e-6))
@@ -173,6 +209,7 @@ def next_level(asked: Asked) -> NextLevel | None:
         )
     best = min(d.spread for d in draws)
     chosen = next(d for d in draws if d.spread <= best * (1 + WITHIN))
+    start = start + sum(d.amount_mg for d in asked.load) / estimate.volume_L
     settled = formulas.time_to_fraction(
         fraction=0.9,
         dose_rate_mg_per_day=rate,
@@ -182,16 +219,30 @@ def next_level(asked: Asked) -> NextLevel | None:
         start_mg_per_L=start,
     )
     settled_days = bands(np.asarray(settled)[None, :], estimate.weights)[0]
-    rising = bool(np.median(target) >= np.median(np.log(np.maximum(start, 1e-6))))
-    safety, why_safety = _safety(asked, draws, chosen, rate)
+    rises = (_rises(asked.estimate, rate, start), _rises(asked.taken, rate, start))
+    because = no_plan(asked)
     why = [
         f"A level on day {show_number(chosen.day, 2)} is expected to narrow the forecast of the steady level from a "
         f"spread of {_times(before)} to {_times(chosen.spread)} (standard deviation of its logarithm); waiting until "
         f"day {show_number(draws[-1].day, 2)} would give {_times(draws[-1].spread)}. It is the first draw within "
-        f"{show_number(100 * WITHIN)} % of the best in {HORIZON_DAYS} days.",
-        *why_safety,
-        _meaning(settled_days, rising=rising),
+        f"{show_number(100 * WITHIN)} % of the best in {HORIZON_DAYS} days."
     ]
+    safety = None
+    if because:
+        why = [because]
+        chosen = draws[0]
+    else:
+        safety, why_safety = _safety(asked, draws, chosen, rate)
+        why += why_safety
+    without = None
+    if asked.load:
+        other = next_level(replace(asked, load=(), load_words="", notes=()))
+        without = other.line if other is not None else None
+        if without is not None:
+            why.append(f"Where the load is not given: {without.words}")
+    why += [*asked.notes, _meaning(settled_days, rising=rises[0])]
+    line = daily_line(asked) if is_toxic(asked.now, asked.goal) else action_line(chosen, asked, rises=rises)
+    safety_line = action_line(safety, asked, rises=rises) if safety is not None else None
     return NextLevel(
         regimen_words=asked.words,
         before=before,
@@ -200,10 +251,37 @@ def next_level(asked: Asked) -> NextLevel | None:
         safety=safety,
         settled_days=settled_days,
         meaningful_day=settled_days.high,
-        action=action_line(chosen, asked, rising=rising),
-        safety_action=action_line(safety, asked, rising=rising) if safety is not None else "",
+        action=line.words,
+        safety_action=safety_line.words if safety_line is not None else "",
         why=tuple(why),
+        line=line,
+        safety_line=safety_line,
+        none_because=because,
+        with_load=asked.load_words,
+        without_load=without,
     )
+
+
+def no_plan(asked: Asked) -> str:
+    """Why no draws are planned on a regimen; "" where they are."""
+    if is_toxic(asked.now, asked.goal):
+        return (
+            f"No draw plan: the level today is at or above {show(asked.goal.critical_mg_per_L, 'mg/L')}, so levels are "
+            "due daily until it has come down."
+        )
+    if asked.refused:
+        return f"No draw plan: {asked.words} is not offered. {asked.refused} Until the dose is changed, draw early."
+    return ""
+
+
+def _rises(estimate: Estimate, rate_mg_per_day: float, start_mg_per_L: Floats) -> bool:
+    """True where the level on a dose rate ends at or above where it begins (medians)."""
+    steady = formulas.steady_state_level(
+        dose_rate_mg_per_day=rate_mg_per_day,
+        vmax_mg_per_day=estimate.vmax_mg_per_day,
+        km_mg_per_L=estimate.km_mg_per_L,
+    )
+    return bands(np.asarray(steady)[None, :], estimate.weights)[0].median >= float(np.median(start_mg_per_L))
 
 
 def feasible(asked: Asked) -> list[tuple[float, datetime | None]]:
@@ -233,7 +311,7 @@ def _course(asked: Asked, estimate: Estimate, start: Floats, days: Sequence[floa
     if asked.now.moment is not None:
         at = asked.now.moment
         first = -(at.hour + at.minute / 60) / 24
-    doses = list(asked.now.still_absorbed)
+    doses = [*asked.now.still_absorbed, *asked.load]
     for n in range(math.ceil((until - first) / cycle) + 1):
         for intake in regimen.intakes:
             day = first + n * cycle + intake.hour / 24
@@ -301,16 +379,79 @@ def _meaning(settled: Band, *, rising: bool) -> str:
     )
 
 
-def action_line(draw: Draw, asked: Asked, *, rising: bool = True) -> str:
-    """'On 12 Apr before the 21:00 dose; above 14 mg/L as reported means rising faster than forecast: call.'"""
-    kind = "free level" if asked.free else "total level"
-    way = "rising faster" if rising else "falling slower"
-    limit = f"above {show(draw.reported.high, 'mg/L')} as reported ({kind}) means {way} than forecast: call."
+#: How a level outside the forecast is worded, by whether the central line and the fully taken one rise: above, below.
+_WAYS = {
+    (True, True): ("means rising faster than forecast", "rising slower than forecast"),
+    (False, False): ("means falling slower than forecast", "falling faster than forecast"),
+    (False, True): (
+        "is higher than forecast (past intake carried on it falls; every dose taken it rises)",
+        "lower than forecast",
+    ),
+    (True, False): (
+        "is higher than forecast (past intake carried on it rises; every dose taken it falls)",
+        "lower than forecast",
+    ),
+}
+
+
+def action_line(draw: Draw, asked: Asked, *, rises: tuple[bool, bool] = (True, True)) -> Action:
+    """'On 12 Apr before the 21:00 dose; above 14 mg/L as reported means rising faster than forecast: call.'
+
+    Never above the critical level as the laboratory reports it. rises: whether the level rises on the central line and
+    with every dose taken.
+    """
+    scale: Literal["total", "free"] = "free" if asked.free else "total"
+    above, below = _WAYS[rises]
+    critical = asked.reported(asked.goal.critical_mg_per_L)
+    capped = draw.reported.high >= critical
+    if capped:
+        limit = f"at or above {_not_above(critical)} as reported ({scale} level), the critical level: call."
+    else:
+        limit = f"above {show(draw.reported.high, 'mg/L')} as reported ({scale} level) {above}: call."
+    low = draw.reported.low
+    limit += f" Below {show(low, 'mg/L')} ({below}), or seizures at any level: call."
+    target = asked.reported(asked.goal.low_mg_per_L)
+    if low < target and draw.reported.median < target:
+        limit += f" Below {show(target, 'mg/L')} it is below the target: ask about seizures the same day."
+    words = f"{_when(draw, asked)}{', the load counted in' if asked.load else ''}; {limit}"
+    return Action(
+        draw=draw,
+        scale=scale,
+        high_mg_per_L_reported=min(draw.reported.high, critical),
+        high_from="critical" if capped else "forecast",
+        low_mg_per_L_reported=low,
+        words=words,
+    )
+
+
+def daily_line(asked: Asked) -> Action:
+    """What is due while the level is toxic: one every day, until it is down."""
+    scale: Literal["total", "free"] = "free" if asked.free else "total"
+    critical = asked.reported(asked.goal.critical_mg_per_L)
+    until = asked.reported(asked.until_mg_per_L or asked.goal.high_mg_per_L)
+    return Action(
+        draw=None,
+        scale=scale,
+        high_mg_per_L_reported=critical,
+        high_from="critical",
+        low_mg_per_L_reported=until,
+        words=(
+            f"Levels daily, the first within 24 h, until one is at or below {_not_above(until)} as reported ({scale} "
+            f"level). At or above {_not_above(critical)}, or not below the one before, or seizures: call."
+        ),
+    )
+
+
+def _not_above(level_mg_per_L: float) -> str:
+    """A limit in words, rounded down: the line written must not lie above the limit meant."""
+    step = 10.0 ** (math.floor(math.log10(level_mg_per_L)) - 2)
+    return show(math.floor(level_mg_per_L / step + 1e-9) * step, "mg/L")
+
+
+def _when(draw: Draw, asked: Asked) -> str:
     if draw.moment is None:
-        return f"On day {show_number(draw.day, 2)} before the dose; {limit}"
-    moment = draw.moment
-    date = f"On {moment.day} {MONTHS[moment.month - 1]}"
+        return f"On day {show_number(draw.day, 2)} before the dose"
+    date = f"On {draw.moment.day} {MONTHS[draw.moment.month - 1]}"
     if not asked.clock_known:
-        return f"{date} before the dose; {limit}"
-    hour = moment.hour + moment.minute / 60
-    return f"{date} before the {show_time_of_day(hour)} dose; {limit}"
+        return f"{date} before the dose"
+    return f"{date} before the {show_time_of_day(draw.moment.hour + draw.moment.minute / 60)} dose"

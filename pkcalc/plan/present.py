@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 from dataclasses import dataclass, replace
-from datetime import datetime
+from datetime import datetime, timedelta
 
 import numpy as np
 from numpy.typing import NDArray
@@ -15,8 +15,8 @@ from pkcalc.drugs.profile import Profile
 from pkcalc.estimate.error_model import LevelData, RecordSpread
 from pkcalc.estimate.predict import predicted_levels
 from pkcalc.estimate.result import Band, Estimate
-from pkcalc.forecast import TIME_DRAWS, bands, fewer_draws
-from pkcalc.levels import Observation, adherence
+from pkcalc.forecast import TIME_DRAWS, Goal, bands, fewer_draws
+from pkcalc.levels import Observation, adherence, free_partner
 from pkcalc.record import Dose, Record
 
 Floats = NDArray[np.float64]
@@ -93,7 +93,7 @@ def today(
     estimate: its true elimination (every dose taken).
     """
     moment = case.plan_start or case.now
-    latest = _latest(observations)
+    latest = latest_level(observations)
     measured = latest.working_mg_per_L if latest is not None else None
     drawn = latest.level.drawn if latest is not None else None
     few = fewer_draws(estimate, TIME_DRAWS).estimate
@@ -120,11 +120,34 @@ def today(
     return Today(moment, course[:, 0], "by the course of the record", unabsorbed, measured, drawn)
 
 
-def _latest(observations: Sequence[Observation]) -> Observation | None:
+#: A measured level counts as today's for so long.
+FRESH = timedelta(hours=24)
+
+
+def is_toxic(now: Today, goal: Goal) -> bool:
+    """True where today's level is at or above the critical one: by the record, or by a level drawn within a day."""
+    if now.level is not None and now.level.median >= goal.critical_mg_per_L:
+        return True
+    if now.measured_mg_per_L is None or now.measured_at is None or now.moment is None:
+        return False
+    return now.measured_mg_per_L >= goal.critical_mg_per_L and now.moment - now.measured_at <= FRESH
+
+
+def latest_level(observations: Sequence[Observation]) -> Observation | None:
+    """The latest level; of one sample, typed in any order, the one that is used (a free level before its total)."""
     dated = [o for o in observations if o.level.drawn is not None]
-    if dated:
-        return max(dated, key=lambda o: o.level.drawn.timestamp() if o.level.drawn else 0.0)
-    return observations[-1] if observations else None
+    last = max(dated, key=_drawn) if dated else observations[-1] if observations else None
+    if last is None or last.usable:
+        return last
+    partner = free_partner(last, observations)
+    if partner is not None and partner.usable:
+        return partner
+    same = [o for o in dated if o.usable and o.level.drawn == last.level.drawn]
+    return same[0] if same else last
+
+
+def _drawn(o: Observation) -> float:
+    return o.level.drawn.timestamp() if o.level.drawn else 0.0
 
 
 def doses_missed(case: Case, profile: Profile) -> tuple[float, str]:

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import replace
-from datetime import datetime
+from datetime import datetime, timedelta
 from typing import Any
 
 import numpy as np
@@ -14,6 +14,7 @@ from pkcalc.estimate.result import Band
 from pkcalc.plan import Today, nextlevel
 from pkcalc.plan.nextlevel import Asked, Draw, action_line, expected_spread, feasible, next_level, spread_now
 from pkcalc.plan.present import clocked
+from pkcalc.record import Dose
 from pkcalc.site import no_site
 from tests.unit.cases import PLAIN, plain
 from tests.unit.planning import GOAL, SCALE, estimate, exact, plan, profile
@@ -129,18 +130,128 @@ def test_without_a_clock_days_are_counted() -> None:
     assert found.action.startswith(f"On day {found.chosen.day:.2g} before the dose; above ")
 
 
+UP, DOWN, MIXED = (True, True), (False, False), (False, True)
+
+
 @pytest.mark.parametrize(
-    ("changes", "rising", "line"),
+    ("changes", "rises", "line"),
     [
-        ({}, True, "On 12 Apr before the 21:00 dose; above 14.2 mg/L as reported (total level) means rising faster than forecast: call."),
-        ({"free": True}, True, "On 12 Apr before the 21:00 dose; above 14.2 mg/L as reported (free level) means rising faster than forecast: call."),
-        ({"clock_known": False}, True, "On 12 Apr before the dose; above 14.2 mg/L as reported (total level) means rising faster than forecast: call."),
-        ({}, False, "On 12 Apr before the 21:00 dose; above 14.2 mg/L as reported (total level) means falling slower than forecast: call."),
+        ({}, UP, "On 12 Apr before the 21:00 dose; above 14.2 mg/L as reported (total level) means rising faster than forecast: call. Below 7 mg/L (rising slower than forecast), or seizures at any level: call."),
+        ({"free": True, "scale": replace(SCALE, free_fraction=1.0)}, UP, "On 12 Apr before the 21:00 dose; above 14.2 mg/L as reported (free level) means rising faster than forecast: call. Below 7 mg/L (rising slower than forecast), or seizures at any level: call."),
+        ({"clock_known": False}, UP, "On 12 Apr before the dose; above 14.2 mg/L as reported (total level) means rising faster than forecast: call. Below 7 mg/L (rising slower than forecast), or seizures at any level: call."),
+        ({}, DOWN, "On 12 Apr before the 21:00 dose; above 14.2 mg/L as reported (total level) means falling slower than forecast: call. Below 7 mg/L (falling faster than forecast), or seizures at any level: call."),
+        ({}, MIXED, "On 12 Apr before the 21:00 dose; above 14.2 mg/L as reported (total level) is higher than forecast (past intake carried on it falls; every dose taken it rises): call. Below 7 mg/L (lower than forecast), or seizures at any level: call."),
     ],
 )  # fmt: skip
-def test_the_action_line(changes: dict[str, Any], rising: bool, line: str) -> None:
+def test_the_action_line(changes: dict[str, Any], rises: tuple[bool, bool], line: str) -> None:
     draw = Draw(6.5, datetime(2026, 4, 12, 21, 0), 0.2, Band(10, 7, 14.2), Band(10, 7, 14.2))
-    assert action_line(draw, asked(**changes), rising=rising) == line
+    found = action_line(draw, asked(**changes), rises=rises)
+    assert found.words == line
+    assert (found.high_mg_per_L_reported, found.low_mg_per_L_reported, found.high_from) == (14.2, 7, "forecast")
+
+
+@pytest.mark.parametrize(
+    ("scale", "free", "limit", "words"),
+    [
+        (SCALE, False, 30.0, "at or above 30 mg/L as reported (total level), the critical level: call."),
+        (replace(SCALE, total_factor=0.629), False, 18.87, "at or above 18.8 mg/L as reported (total level), the critical level: call."),
+        (SCALE, True, 3.0, "at or above 3 mg/L as reported (free level), the critical level: call."),
+    ],
+)  # fmt: skip
+def test_the_action_line_is_never_above_the_critical_level_as_reported(
+    scale: Any, free: bool, limit: float, words: str
+) -> None:
+    draw = Draw(6.5, datetime(2026, 4, 12, 21, 0), 0.2, Band(38, 20, 66), Band(38, 20, 66))
+    found = action_line(draw, asked(scale=scale, free=free), rises=DOWN)
+    assert found.high_mg_per_L_reported == pytest.approx(limit)
+    assert found.high_from == "critical"
+    assert found.words.startswith(f"On 12 Apr before the 21:00 dose; {words}")
+
+
+def test_a_level_expected_below_the_target_asks_about_seizures() -> None:
+    draw = Draw(6.5, datetime(2026, 4, 12, 21, 0), 0.2, Band(6, 3, 12), Band(6, 3, 12))
+    assert action_line(draw, asked()).words.endswith(
+        "or seizures at any level: call. Below 10 mg/L it is below the target: ask about seizures the same day."
+    )
+
+
+@pytest.mark.parametrize(
+    ("level", "measured", "hours_ago"),
+    [(38.0, 38.0, 3.0), (20.0, 31.0, 3.0)],
+)
+def test_a_toxic_level_is_followed_daily(level: float, measured: float, hours_ago: float) -> None:
+    now = Today(MONDAY, np.full(512, level), "", (), measured, MONDAY - timedelta(hours=hours_ago))
+    found = next_level(asked(now=now))
+    assert found is not None
+    assert found.none_because == (
+        "No draw plan: the level today is at or above 30 mg/L, so levels are due daily until it has come down."
+    )
+    assert found.action == (
+        "Levels daily, the first within 24 h, until one is at or below 20 mg/L as reported (total level). At or above "
+        "30 mg/L, or not below the one before, or seizures: call."
+    )
+    assert found.safety is None
+    old = replace(now, level_mg_per_L=np.full(512, 15.0), measured_at=MONDAY - timedelta(days=3))
+    later = next_level(asked(now=old))
+    assert later is not None
+    assert later.none_because == ""
+
+
+def test_no_draw_plan_for_a_regimen_that_is_not_offered() -> None:
+    found = next_level(asked(refused="It is too much."))
+    assert found is not None
+    assert found.none_because == (
+        "No draw plan: 360 mg is not offered. It is too much. Until the dose is changed, draw early."
+    )
+    assert found.chosen is found.draws[0]
+    assert found.action.startswith("On 7 Apr before the 21:00 dose; ")
+
+
+def test_the_direction_is_worded_by_both_lines() -> None:
+    """From 8 mg/L on 276 mg/day: 450 mg/day of elimination ends at 7.9 mg/L, 400 at 11.1."""
+    low, high = exact(vmax=450.0), exact(vmax=400.0)
+    mixed = next_level(asked(low, mg=300.0, taken=high, now=Today(MONDAY, np.full(8, 8.0), "", (), 8.0)))
+    assert mixed is not None
+    assert "is higher than forecast (past intake carried on it falls; every dose taken it rises): call" in mixed.action
+    up = next_level(asked(high, mg=300.0, now=Today(MONDAY, np.full(8, 8.0), "", (), 8.0)))
+    assert up is not None
+    assert "means rising faster than forecast: call" in up.action
+
+
+def test_a_load_is_counted_in_and_both_branches_are_given() -> None:
+    load = (Dose(0.05, 966.0, duration_day=0.015),)
+    one = asked(exact(), mg=300.0, now=Today(MONDAY, np.full(8, 4.0), "", (), 4.0))
+    with_load = next_level(replace(one, load=load, load_words="Counted with the load: 1,050 mg."))
+    plain_ = next_level(one)
+    assert with_load is not None
+    assert plain_ is not None
+    assert with_load.draws[0].expected.median > plain_.draws[0].expected.median + 5
+    assert ", the load counted in; " in with_load.action
+    assert "falling slower than forecast" in with_load.action
+    assert with_load.without_load == plain_.line
+    assert f"Where the load is not given: {plain_.action}" in with_load.why
+
+
+@pytest.mark.parametrize("free_first", [True, False])
+def test_free_and_total_of_one_sample_in_either_order(free_first: bool) -> None:
+    drawn = {"drawn": "2026-12-01 07:00"}
+    pair = [{"value": "1.2 mg/L", "kind": "free", **drawn}, {"value": "8 mg/L", "kind": "total", **drawn}]
+    found = plan(None, exact(), levels=pair if free_first else pair[::-1])
+    assert found.next_level is not None
+    assert found.next_level.line.scale == "free"
+    assert found.today.measured_mg_per_L == pytest.approx(12.0)
+
+
+def test_a_refused_proposal_gives_way_to_the_present_regimen() -> None:
+    found = plan(None, exact(vmax=450.0), proposed=[{"form": "extended-capsule", "amount": "600 mg", "every": "24 h"}])
+    assert not found.own[0].offered
+    assert found.present is not None
+    assert found.present.offered
+    assert found.next_level is not None
+    assert found.next_level.regimen_words == found.present.words
+    assert any(
+        w.endswith(f"the next level is planned for the present {found.present.words}.") for w in found.next_level.why
+    )
 
 
 def test_the_level_just_before_a_dose_comes_from_the_real_doses() -> None:
