@@ -522,9 +522,10 @@ def regimens_chart(consult: Consult, shown: Sequence[Shown]) -> Chart | None:
             + (show(s.forecast.steady.high, "mg/L") if np.isfinite(s.forecast.steady.high) else "no steady state")
             + f", no steady state {percent(t.no_steady_state)}"
         )
-    height = max(90, 34 * len(order))
     wrapped = {n: "|".join(textwrap.wrap(n, 44)) for n in order}
     rows = [{**r, "name": wrapped[r["name"]]} for r in rows]
+    deepest = max(w.count("|") + 1 for w in wrapped.values())
+    height = max(90, max(34, 13 * deepest + 8) * len(order))
     y = alt.Y(
         "name:N",
         sort=[wrapped[n] for n in order],
