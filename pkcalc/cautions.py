@@ -115,6 +115,13 @@ def _dialysis_clearance_assumed(s: State, p: Mapping[str, Any]) -> list[Words]:
     return [{"clearance": taken, "low": low, "high": f"{high} mL/min"}]
 
 
+def _nothing_measured(s: State, p: Mapping[str, Any]) -> list[Words]:
+    """A projection without any level: what is in the body is known from the record alone."""
+    if s.projection is None or s.observations:
+        return []
+    return [{"now": show(s.projection.now.median, "mg/L")}]
+
+
 def _climbs(s: State, p: Mapping[str, Any]) -> list[Words]:
     """A rate above Vmax: the level climbs for as long as it runs."""
     if s.projection is None or s.estimate is None:
@@ -581,6 +588,7 @@ PREDICATES: dict[str, Predicate] = {
     "levels_old": _levels_old,
     "not_settled": _not_settled,
     "not_trusted": _not_trusted,
+    "nothing_measured": _nothing_measured,
     "overlapping": _overlapping,
     "pair_refused": _pair_refused,
     "projected_too_high": _projected_too_high,

@@ -97,10 +97,11 @@ def next_lines(consult: Consult, found: Projection) -> tuple[str, ...]:
     """When the next level is due, why, and from which level on somebody must call."""
     path = found.paths[-1] if len(found.paths) > 1 else found.paths[0]
     due = next((m for m in path.moments if m.hours >= found.next_level_h), path.moments[-1])
-    lines = [
-        f"At {show_time(found.next_level_at)} ({show(found.next_level_h, 'h')} from now); outside "
-        f"{edge(due.level.low)} to {show(due.level.high, 'mg/L')} means another course than forecast: call."
-    ]
+    when = f"At {show_time(found.next_level_at)} ({show(found.next_level_h, 'h')} from now)"
+    if due.level.high > 0:
+        expected = f"{edge(due.level.low)} to {show(due.level.high, 'mg/L')}"
+        when += f"; outside {expected} means another course than forecast: call"
+    lines = [f"{when}."]
     usual = consult.profile.sampling.repeat_h
     if found.next_why and usual is not None and usual[0] < usual[1]:
         lines.append(sentence(f"The earlier of the two usual times, because {'; '.join(found.next_why)}"))

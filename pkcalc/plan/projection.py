@@ -151,7 +151,7 @@ def project(
     load = None
     if may_dose and "loading" not in stops and now.median < goal.low_mg_per_L:
         need = np.maximum(goal.aim_mg_per_L - now_draws, 0.0) * volume
-        load = _amount("to bring the level to the aim", band(need, few.weights), products)
+        load = _load(case, profile, band(need, few.weights), products)
     weight = case.patient.weight_kg
     guideline = None
     if profile.loading is not None and weight is not None:
@@ -375,6 +375,18 @@ def _products(case: Case, profile: Profile, site: Site) -> tuple[tuple[Product, 
 def _amount(words: str, mg: Band, products: Sequence[Product], *, form: str = "") -> Amount:
     fitting = [p for p in products if not form or p.form == form]
     return Amount(words, mg, tuple((p, mg.median / p.mg_per_unit) for p in fitting))
+
+
+def _load(case: Case, profile: Profile, need: Band, products: Sequence[Product]) -> Amount:
+    """The amount for the aim, never above the published load per kg nor the largest single one of the drug file."""
+    weight, published = case.patient.weight_kg, profile.loading
+    if published is None or weight is None:
+        return _amount("to bring the level to the aim", need, products)
+    most = min(published.mg_per_kg[1] * weight, published.largest_single_mg)
+    if need.median <= most:
+        return _amount("to bring the level to the aim", need, products)
+    held = Band(most, min(need.low, most), most)
+    return _amount(f"held at {show(most / 1000, 'g')}, the most that is published or allowed", held, products)
 
 
 def _holds(

@@ -363,3 +363,23 @@ def test_note_and_json_tell_hours_and_the_authority() -> None:
     assert data["projection"]["next_level"]["in_h"] == 1
     assert {"active_mg_per_h", "moments", "climb_mg_per_L_per_h"} <= set(data["projection"]["paths"][0])
     assert ETHANOL["drug"] == data["drug"]
+
+
+def test_a_first_load_without_a_level_says_that_nothing_was_measured() -> None:
+    (said,) = [c.text for c in run_consult(ethanol(levels=None, doses=None)).cautions if c.id == "not-measured"]
+    assert said == (
+        "No level was measured: 0 mg/L now is only what the record says, and whoever swallowed a toxic alcohol may have "
+        "drunk ethanol too. Measure ethanol before the load, or with it."
+    )
+    assert "not-measured" not in ids(run_consult(ethanol()))
+
+
+@pytest.mark.parametrize(("weight", "most_g"), [("70 kg", 56.0), ("140 kg", 80.0)])
+def test_a_load_is_never_above_what_is_published_or_allowed(weight: str, most_g: float) -> None:
+    """Up to 1,500 mg/L would take 900 mg/kg: held at 800 mg/kg, and at 80 g."""
+    patient = {"age": "44 years", "sex": "male", "weight": weight, "weight_basis": "measured"}
+    found = run_consult(ethanol(levels=None, doses=None, aim="1500 mg/L", patient=patient)).projection
+    assert found is not None
+    assert found.load is not None
+    assert found.load.mg.median == pytest.approx(1000 * most_g)
+    assert found.load.words == f"held at {most_g:g} g, the most that is published or allowed"
