@@ -266,8 +266,7 @@ def _asked(
         free=bool(free),
         refused="" if on.offered else " ".join(on.why_not),
         until_mg_per_L=case.restart_level_mg_per_L,
-        load=loading.given_doses(load, setting.profile, begins) if load is not None else (),
-        load_words=f"Counted with the load: {load.order[0]}" if load is not None else "",
+        load_asked=loading.given_doses(load, setting.profile, begins) if load is not None else (),
         notes=tuple(notes),
     )
 

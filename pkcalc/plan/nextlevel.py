@@ -85,8 +85,8 @@ class NextLevel:
     at 90 % of its way; meaningful_day: from then on a level can be read as steady (95 % of the draws); +inf: never.
     line, safety_line: the lines to write; action, safety_action: their words. why: the reasons in words.
     none_because: why there is no draw plan although draws can be told (a level at or above the critical one today, a
-    regimen that is not offered); the line then says what is due instead. with_load: the load that is counted in, ""
-    for none; without_load: the line that holds where it is not given.
+    regimen that is not offered); the line then says what is due instead. with_load: the line that holds where the load
+    asked for is given (all else here holds without it); None where no load is asked for and offered.
     """
 
     regimen_words: str
@@ -102,8 +102,7 @@ class NextLevel:
     line: Action
     safety_line: Action | None = None
     none_because: str = ""
-    with_load: str = ""
-    without_load: Action | None = None
+    with_load: Action | None = None
 
 
 def expected_spread(
@@ -153,7 +152,8 @@ class Asked:
     """One regimen for which the next level is planned. words: as on the note. clock_known: False where the times of the
     doses are not stated, so that none is named. free: free levels are what the estimate uses. refused: why the regimen
     is not offered, "" where it is. until_mg_per_L: the level down to which a toxic one is followed, None: top of the
-    range. load: doses of a load that is counted in, with its words. notes: what must be said besides."""
+    range. load: doses of a load that is counted in; load_asked: of one that may be given.
+    notes: what must be said besides."""
 
     regimen: Regimen
     clock_known: bool
@@ -170,7 +170,7 @@ class Asked:
     refused: str = ""
     until_mg_per_L: float | None = None
     load: tuple[Dose, ...] = ()
-    load_words: str = ""
+    load_asked: tuple[Dose, ...] = ()
     notes: tuple[str, ...] = ()
 
     def reported(self, level_mg_per_L: float) -> float:
@@ -234,12 +234,12 @@ def next_level(asked: Asked) -> NextLevel | None:
     else:
         safety, why_safety = _safety(asked, draws, chosen, rate)
         why += why_safety
-    without = None
-    if asked.load:
-        other = next_level(replace(asked, load=(), load_words="", notes=()))
-        without = other.line if other is not None else None
-        if without is not None:
-            why.append(f"Where the load is not given: {without.words}")
+    with_load = None
+    if asked.load_asked and not because:
+        other = next_level(replace(asked, load=asked.load_asked, load_asked=(), notes=()))
+        with_load = other.line if other is not None else None
+        if with_load is not None:
+            why.append(f"Where the load is given: {with_load.words}")
     why += [*asked.notes, _meaning(settled_days, rising=rises[0])]
     line = daily_line(asked) if is_toxic(asked.now, asked.goal) else action_line(chosen, asked, rises=rises)
     safety_line = action_line(safety, asked, rises=rises) if safety is not None else None
@@ -257,8 +257,7 @@ def next_level(asked: Asked) -> NextLevel | None:
         line=line,
         safety_line=safety_line,
         none_because=because,
-        with_load=asked.load_words,
-        without_load=without,
+        with_load=with_load,
     )
 
 

@@ -221,15 +221,18 @@ def test_the_direction_is_worded_by_both_lines() -> None:
 def test_a_load_is_counted_in_and_both_branches_are_given() -> None:
     load = (Dose(0.05, 966.0, duration_day=0.015),)
     one = asked(exact(), mg=300.0, now=Today(MONDAY, np.full(8, 4.0), "", (), 4.0))
-    with_load = next_level(replace(one, load=load, load_words="Counted with the load: 1,050 mg."))
-    plain_ = next_level(one)
-    assert with_load is not None
-    assert plain_ is not None
-    assert with_load.draws[0].expected.median > plain_.draws[0].expected.median + 5
-    assert ", the load counted in; " in with_load.action
-    assert "falling slower than forecast" in with_load.action
-    assert with_load.without_load == plain_.line
-    assert f"Where the load is not given: {plain_.action}" in with_load.why
+    both, given, without = (next_level(replace(one, **x)) for x in ({"load_asked": load}, {"load": load}, {}))
+    assert both is not None
+    assert given is not None
+    assert without is not None
+    assert given.draws[0].expected.median > without.draws[0].expected.median + 5
+    assert both.action == without.action
+    assert "rising faster than forecast" in both.action
+    assert both.with_load == given.line
+    assert ", the load counted in; " in given.action
+    assert "falling slower than forecast" in given.action
+    assert f"Where the load is given: {given.action}" in both.why
+    assert without.with_load is None
 
 
 @pytest.mark.parametrize("free_first", [True, False])
