@@ -10,6 +10,7 @@ from pkcalc.consult import run_consult
 from pkcalc.drugs.profile import load_profile
 from pkcalc.levels import Observation, measured_free_fraction, observe, timing
 from pkcalc.site import no_site
+from pkcalc.steadiness import steady_pairs
 from tests.unit.cases import PLAIN, levels, plain
 
 PROFILE = load_profile("phenytoin")
@@ -216,7 +217,8 @@ def test_below_the_limit_is_censored() -> None:
     (o,) = seen(levels=one("<2.5 mg/L"))
     assert o.censored == "below"
     assert o.working_mg_per_L == 2.5
-    assert "two levels" not in run_consult(plain(levels=levels("<2.5 mg/L", "20 mg/L"))).estimates
+    both = plain(levels=levels("<2.5 mg/L", "20 mg/L"))
+    assert [p.level for p in steady_pairs(both, PROFILE, observe(both, PROFILE, no_site()))] == [1]
 
 
 def test_pregnancy_gives_no_single_reading_of_a_total() -> None:
