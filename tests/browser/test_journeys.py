@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import io
 import json
 import re
 from collections.abc import Callable
@@ -11,6 +12,7 @@ from typing import Any
 
 import pytest
 from axe_playwright_python.sync_playwright import Axe
+from PIL import Image
 from playwright.sync_api import Browser, expect
 
 pytestmark = pytest.mark.browser
@@ -206,7 +208,9 @@ def test_a_whole_consult_by_keyboard_alone(visit: Visitor) -> None:
     assert "Km 2.5 mg/L" in v.text()
 
 
-@pytest.mark.parametrize(("width", "dark"), [(390, False), (1440, False), (1440, True)])
+@pytest.mark.parametrize(
+    ("width", "dark"), [(390, False), (1440, False), pytest.param(1440, True, marks=pytest.mark.slow)]
+)
 def test_widths_and_dark_mode(visit: Visitor, width: int, dark: bool) -> None:
     """Pictures for people to look at; nothing wider than the window, nothing axe-core finds grave."""
     v = visit(width=width, height=900, dark=dark)
@@ -220,6 +224,7 @@ def test_widths_and_dark_mode(visit: Visitor, width: int, dark: bool) -> None:
     assert grave(v) == []
 
 
+@pytest.mark.slow
 def test_every_format_is_downloaded_and_the_case_opens_again(visit: Visitor, tmp_path: Path) -> None:
     from pkcalc.case import load_case
     from pkcalc.demos import demonstration
@@ -286,3 +291,23 @@ def test_the_log_of_the_server_holds_nothing_of_a_case(visit: Visitor, server_lo
     assert "mg" not in log
     assert "12,5" not in log
     assert "Traceback" not in log
+
+
+@pytest.mark.slow
+@pytest.mark.parametrize(("width", "height", "name"), [(1440, 1000, "page-wide"), (390, 844, "page-narrow")])
+def test_pictures_of_the_page_for_the_readme(visit: Visitor, width: int, height: int, name: str) -> None:
+    """Made anew in the folder of shots, to be copied beside the form's files when the page has changed."""
+    v = visit(width=width, height=height)
+    v.open_demonstration("The next capsule tips over Vmax")
+    v.page.locator(".pk-chart").first.wait_for()
+    v.page.locator(".st-key-pinned").evaluate("e => e.scrollIntoView()")
+    v.page.wait_for_timeout(500)
+    image = Image.open(io.BytesIO(v.page.screenshot())).convert("RGB")
+    if width > 1000:
+        image = image.crop((200, 0, 1240, height))
+    small = image.quantize(96, dither=Image.Dither.NONE)
+    made = _tools.SHOTS / f"{name}.png"
+    small.save(made, optimize=True)
+    kept = Path(_tools.find_spec("pkcalc_form").origin).with_name("assets") / made.name
+    assert kept.stat().st_size < 120_000
+    assert Image.open(kept).size == small.size

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import ast
 import os
 from importlib.util import module_from_spec, spec_from_file_location
 from pathlib import Path
@@ -202,3 +203,19 @@ def test_a_chosen_regimen_and_own_words_stand_on_the_note() -> None:
     text = page.shown(at)
     assert "Family prefers no change." in text
     assert "No regimen is chosen yet" not in text
+
+
+def test_the_page_imports_public_names_of_the_core_and_no_tool_for_formulas() -> None:
+    folder = page.PAGE.parent
+    found = []
+    for file in sorted(folder.glob("*.py")):
+        for node in ast.walk(ast.parse(file.read_text(encoding="utf-8"))):
+            if isinstance(node, ast.ImportFrom):
+                found += [(file.name, node.module or "", alias.name) for alias in node.names]
+            elif isinstance(node, ast.Import):
+                found += [(file.name, alias.name, "") for alias in node.names]
+    assert len(found) > 50
+    outside = {"numpy", "scipy", "pandas", "pint", "altair", "vl_convert"}
+    assert [x for x in found if x[1].split(".")[0] in outside] == []
+    assert [x for x in found if x[1].startswith("pkcalc") and (x[2].startswith("_") or "._" in x[1])] == []
+    assert [x for x in found if x[1] in ("pkcalc.formulas", "pkcalc.flow", "pkcalc.kinetics")] == []
