@@ -11,7 +11,9 @@ from scipy.integrate import solve_ivp
 
 from pkcalc import formulas
 from pkcalc.plan import Today, pausing, switching
+from pkcalc.plan.candidates import candidates
 from pkcalc.plan.pausing import Pause, still_absorbing, time_to_fall
+from pkcalc.plan.shelf import dispensable
 from pkcalc.plan.switching import Switch
 from pkcalc.record import Absorption, Dose
 from tests.unit.cases import PLAIN, plain
@@ -122,16 +124,21 @@ def test_a_level_low_now_may_still_rise_from_the_gut() -> None:
     assert (still_absorbing(one, np.full(8, 15.0), 20.0, now) > 1.0).all()
 
 
-def test_the_pause_counts_what_is_absorbed_late() -> None:
+def test_the_pause_and_its_restarts_count_what_is_absorbed_late() -> None:
     s = setting(exact(vmax=405.0), present_mg_per_day=368.0)
-    dose = Dose(-0.05, 368.0, absorption=Absorption(ka_per_day=24.0, release_day=0.2))
+    dose = Dose(-0.05, 1104.0, absorption=Absorption(ka_per_day=4.0, release_day=0.2))
     now = Today(None, np.full(8, 34.0), "", (dose,), 34.0)
-    found = pausing.pause(plain(**HIGH), now, s, ())
+    capsules = [p for p in profile().shelves["united-states"].products if "capsule" in p]
+    every = candidates(dispensable(profile(), capsules, largest_active_mg_per_day=552.0), (), s)
+    found = pausing.pause(plain(**HIGH), now, s, every)
     assert found is not None
     assert found.with_absorption is not None
-    assert found.with_absorption.median > found.days.median
+    assert found.with_absorption.median > found.days.median + 1.0
+    assert found.restarts
+    # "too late" is two days after the upper end of the pause, and the levels are told a day after that
+    assert {r.day for r in found.restarts} == {found.with_absorption.high + 3.0}
     assert (
-        "368 mg of active drug was taken so lately that part of it is still to be absorbed; the pause counts it in."
+        "1,100 mg of active drug was taken so lately that part of it is still to be absorbed; the pause counts it in."
         in found.lines
     )
 
