@@ -10,9 +10,10 @@ from pkcalc.case import QUESTIONS
 from pkcalc.cautions import percent
 from pkcalc.clock import show_time
 from pkcalc.consult import Consult, Shown
-from pkcalc.levels import Observation
 from pkcalc.note import hours
+from pkcalc.note.acute import daily_levels, is_offered, limited, marked, now_lines, too_high, used_level
 from pkcalc.note.words import (
+    NOT_OFFERED,
     VALID_UNTIL,
     Section,
     as_reported,
@@ -21,6 +22,7 @@ from pkcalc.note.words import (
     edge,
     level_words,
     regimen_words,
+    reports_free,
     same_lines,
     sentence,
 )
@@ -34,10 +36,12 @@ PASTE_LINES, PASTE_WIDTH = 25, 78
 def page_one(consult: Consult) -> tuple[Section, ...]:
     """The parts of page one, in the order of the day."""
     parts = (
+        Section("What to do now", now_lines(consult)),
         Section("Question", _question(consult)),
         Section("Patient's state", _state(consult)),
         Section("Verdict on the level", verdict(consult)),
         Section("Chosen regimen", _chosen(consult)),
+        Section("Load or top-up", _loads(consult)),
         Section("Next level", _next_level(consult)),
         Section("Valid until", (VALID_UNTIL, "Ordered instead, and why: ________________________________________")),
     )
@@ -97,16 +101,9 @@ def _state(consult: Consult) -> tuple[str, ...]:
     return tuple(lines)
 
 
-def _latest(consult: Consult) -> Observation | None:
-    dated = [o for o in consult.observations if o.level.drawn is not None]
-    if dated:
-        return max(dated, key=lambda o: o.level.drawn.timestamp() if o.level.drawn else 0.0)
-    return consult.observations[-1] if consult.observations else None
-
-
 def verdict(consult: Consult) -> tuple[str, ...]:
     """What the latest level is worth and where it lies; then what it says about the patient."""
-    o, goal = _latest(consult), consult.goal
+    o, goal = used_level(consult), consult.goal
     if o is None:
         return ("No level is given.",)
     when = f", drawn {show_time(o.level.drawn)}" if o.level.drawn else ", draw time not stated"
@@ -128,11 +125,11 @@ def verdict(consult: Consult) -> tuple[str, ...]:
         if value >= goal.critical_mg_per_L:
             place = "at or above the critical level"
         basis = (
-            f"{show(value, 'mg/L')} at normal binding, "
+            f"{limited(o, value)} at normal binding, "
             if value != o.level.reported_mg_per_L
             else "at normal binding "
             if consult.profile.binding is not None
-            else f"{show(value, 'mg/L')}, "
+            else f"{limited(o, value)}, "
             if o.level.typed.label != "mg/L"
             else ""
         )
@@ -140,6 +137,13 @@ def verdict(consult: Consult) -> tuple[str, ...]:
         lines = [f"{head}: {basis}{place}{limit}."]
         if o.set_aside:
             lines.append(f"Not used for the estimate: {o.set_aside}.")
+    lines += [
+        f"{x.name}: {x.level.typed.text} {x.level.kind} is not used for the estimate: {x.set_aside}."
+        for x in consult.observations
+        if x is not o
+        and x.set_aside
+        and (x.level.drawn is None or o.level.drawn is None or x.level.drawn >= o.level.drawn)
+    ]
     settled = next((s for s in consult.settling if s.level == o.level.index), None)
     if settled is not None:
         if settled.settled is True:
@@ -181,7 +185,7 @@ def spoken_for(consult: Consult) -> Shown | None:
 
 def forecast_lines(shown: Shown, consult: Consult) -> list[str]:
     """Both lines, the danger and the time: what must stand beside any regimen."""
-    f, t, limit = shown.forecast, shown.taken, show(consult.goal.critical_mg_per_L, "mg/L")
+    f, t = shown.forecast, shown.taken
     lines = [f"Expected as reported ({consult.scale.words}): {as_reported(f, consult)}."]
     if f.total != f.steady:
         lines.append(f"At normal binding: {level_words(f.steady)}.")
@@ -191,28 +195,56 @@ def forecast_lines(shown: Shown, consult: Consult) -> list[str]:
             + (f"; at normal binding {level_words(t.steady)}." if t.total != t.steady else ".")
         )
     lines.append(
-        f"Every dose taken: chance above {limit} or of no steady state {percent(shown.danger)} (no steady state "
-        f"{percent(t.no_steady_state)}); above the target {percent(t.above)}; below it (central) {percent(f.below)}."
+        f"Every dose taken: {danger_words(shown, consult)}; above the target once settled {percent(t.above)}. Below "
+        f"the target once settled (central line) {percent(f.below)}."
     )
     lines.append(f"90 % of the way from today's level takes {days_words(f.settle_days)}.")
     return lines
 
 
+def danger_words(shown: Shown, consult: Consult) -> str:
+    """The chance of too high, with the time that it belongs to."""
+    limit = show(consult.goal.critical_mg_per_L, "mg/L")
+    settled = percent(shown.taken.above_critical)
+    none = percent(shown.taken.no_steady_state)
+    text = f"chance above {limit} or of no steady state {settled} once settled (no steady state {none})"
+    if percent(shown.danger) != settled and consult.plan is not None:
+        days = show(consult.plan.setting.draw_days, "days")
+        text += f", {percent(shown.danger)} with the next feasible draw (in {days}) counted in"
+    return text
+
+
 def order_sentence(shown: Shown, consult: Consult) -> str:
-    """One sentence that can be ordered from."""
+    """One sentence that can be ordered from; a regimen that is not offered says so first and has nothing to order."""
     name = consult.profile.name
     change = ""
     if shown.change_percent is not None and not shown.present:
         way = "more" if shown.change_percent > 0 else "less"
         change = f", {show_number(abs(shown.change_percent), 2)} % {way} than now"
+    rate = f" = {show(shown.rate_mg_per_day, 'mg/day', 4)} as active drug{change}."
+    if not is_offered(shown, consult):
+        return f"{NOT_OFFERED}: {name}: {shown.words}{rate}"
     start = consult.case.plan_start
     begin = f", from {show_time(start)}" if start is not None and not shown.present else ""
     keep = "Continue " if shown.present else ""
     dispense = f" Dispense {shown.dispense}." if shown.dispense else ""
-    return (
-        f"{keep}{name}: {shown.words}{begin} = {show(shown.rate_mg_per_day, 'mg/day', 4)} as active drug{change}."
-        + dispense
-    )
+    return f"{keep}{name}: {shown.words}{begin}{rate}{dispense}"
+
+
+def _shelf_words(shown: Shown, consult: Consult) -> list[str]:
+    """Where the shelf in use cannot make a regimen, page one says so."""
+    plan = consult.plan
+    said = any("cannot be made" in w for w in shown.why_not)
+    if plan is None or not plan.shelf.products or shown.dispense or said:
+        return []
+    return [f"It cannot be made from the shelf in use ({plan.shelf.words})."]
+
+
+def _regimen_lines(label: str, shown: Shown, consult: Consult) -> list[str]:
+    """A regimen with its mark, why it is not offered, and its forecasts."""
+    lines = [f"{label}{order_sentence(shown, consult)}"]
+    lines += [sentence(f"Not offered: {w}") for w in shown.why_not]
+    return [*lines, *_shelf_words(shown, consult), *forecast_lines(shown, consult)]
 
 
 def _chosen(consult: Consult) -> tuple[str, ...]:
@@ -230,38 +262,97 @@ def _chosen(consult: Consult) -> tuple[str, ...]:
     else:
         chosen = chosen_candidate(consult)
         if chosen is not None:
-            lines.append(order_sentence(chosen, consult))
-            lines += forecast_lines(chosen, consult)
-            lines += [sentence(f"Not offered: {w}") for w in chosen.why_not]
+            label = "" if is_offered(chosen, consult) else "Chosen by the pharmacist, "
+            lines += _regimen_lines(label, chosen, consult)
         else:
             lines.append("No regimen is chosen yet. Chosen: ________________________________________")
             for shown in consult.proposed[:1]:
-                mark = "Proposed, not offered" if not shown.offered else "Proposed, not chosen"
-                lines.append(f"{mark}: {order_sentence(shown, consult)}")
-                lines += forecast_lines(shown, consult)
+                label = "Proposed, not chosen: " if is_offered(shown, consult) else "Proposed, "
+                lines += _regimen_lines(label, shown, consult)
             if len(consult.proposed) > 1:
                 lines.append(f"{len(consult.proposed)} regimens are proposed; all stand in the annex.")
             if not consult.proposed and consult.plan.present is not None:
-                lines.append(f"Present: {order_sentence(consult.plan.present, consult)}")
-                lines += forecast_lines(consult.plan.present, consult)
+                label = "Present: " if is_offered(consult.plan.present, consult) else "Present, to go on unchanged: "
+                lines += _regimen_lines(label, consult.plan.present, consult)
     if words:
-        lines.append(f"In the pharmacist's words: {sentence(words)}")
+        ordered = chosen_candidate(consult) if not consult.stopped else None
+        refused = ordered is not None and not is_offered(ordered, consult)
+        mark = f" (the regimen is {NOT_OFFERED} by this note)" if refused else ""
+        lines.append(f"In the pharmacist's words{mark}: {sentence(words)}")
     return tuple(lines)
+
+
+def _loads(consult: Consult) -> tuple[str, ...]:
+    """A load that was asked for: its order with its mark, and what it would do."""
+    plan = consult.plan
+    if consult.case.file.plan.load is None or consult.projection is not None:
+        return ()
+    if plan is None:
+        return ("No load is worked out by this note: see the stops.",)
+    lines: list[str] = []
+    for load in plan.loads:
+        order = " ".join(sentence(x) for x in load.order)
+        if load.offered:
+            lines.append(order)
+        else:
+            lines.append(f"{NOT_OFFERED}: {' '.join(sentence(w) for w in load.why_not)}")
+            lines.append(f"{NOT_OFFERED}, by calculation only: {order}")
+        lines.append(
+            f"Expected after it {level_words(load.after)}"
+            + (" at normal binding" if consult.profile.binding is not None else "")
+            + f"; chance above the range {percent(load.above_high)}, above the critical level "
+            f"{percent(load.above_critical)}."
+        )
+    return (*lines, *plan.no_load)
+
+
+def _load_draws(consult: Consult) -> list[str]:
+    """The level after each offered load, with its own line to call."""
+    plan = consult.plan
+    if plan is None or consult.case.file.plan.load is None:
+        return []
+    free = reports_free(consult)
+    report, kind = (consult.scale.free, "free level") if free else (consult.scale.total, "total level")
+    critical = report(consult.goal.critical_mg_per_L)
+    lines = []
+    for load in plan.loads:
+        if not load.offered:
+            continue
+        b = load.at_draw
+        since = "the end of the infusion" if load.minutes is not None else "the first part"
+        lines.append(
+            f"If the load is given, first: draw {show(load.draw_after_h, 'h')} after {since}; expected "
+            f"{show(report(b.median), 'mg/L')} (90 % interval {edge(report(b.low))} to {edge(report(b.high))}) as "
+            f"reported ({kind}); above {show(min(report(b.high), critical), 'mg/L')}: call."
+        )
+    return lines
 
 
 def _next_level(consult: Consult) -> tuple[str, ...]:
     plan, case = consult.plan, consult.case
     if consult.projection is not None:
         return hours.next_lines(consult, consult.projection)
+    high = too_high(consult)
+    if high is not None and high.urgent:
+        planned = [f"Planned by the pharmacist: {show_time(case.next_draw)}."] if case.next_draw is not None else []
+        return (daily_levels(consult), "No later draw is planned while the level is too high.", *planned)
     if plan is None:
         return ("No next level is planned by this note: see the stops.",)
     found = plan.next_level
-    lines = []
+    lines = _load_draws(consult)
+    loaded = bool(lines)
+    shown = spoken_for(consult)
+    if found is not None and shown is not None and not is_offered(shown, consult):
+        if case.next_draw is not None:
+            lines.append(f"Planned by the pharmacist: {show_time(case.next_draw)}.")
+        return (*_without_plan(consult, shown), *lines)
     if case.next_draw is not None:
         lines.append(f"Planned by the pharmacist: {show_time(case.next_draw)}.")
     if found is None:
         return (*lines, plan.no_next_level or "No next level is planned.")
-    lines.append(found.action)
+    if found.with_load is not None:
+        lines.append(f"If the load is given: {found.with_load.words}")
+    lines.append(f"If no load is given: {found.action}" if loaded else found.action)
     if found.safety is not None:
         lines.append(f"Early safety level: {found.safety_action}")
     free = " together with a free level" if any(o.level.kind == "free" for o in consult.observations) else ""
@@ -272,6 +363,54 @@ def _next_level(consult: Consult) -> tuple[str, ...]:
     return tuple(lines)
 
 
+def _without_plan(consult: Consult, shown: Shown) -> list[str]:
+    """What to draw where the regimen in question is not offered: nothing is planned on it."""
+    found = consult.plan.next_level if consult.plan is not None else None
+    if not shown.present:
+        first = (
+            "Observe dosing and repeat the level on the present regimen first."
+            if any(c.id == "increase-on-doubt" for c in consult.cautions)
+            else "Plan the next level with a regimen that is offered; draw one on the present one before a change."
+        )
+        return [f"No draw is planned on {shown.words} ({NOT_OFFERED}).", first]
+    lines = [f"No draw is planned for going on unchanged ({NOT_OFFERED}): change the dose first, then plan the level."]
+    if found is not None and not found.none_because:
+        early = found.safety_action if found.safety is not None else found.action
+        lines.append(f"While {shown.words} ({NOT_OFFERED}) is still taken: {early}")
+    return lines
+
+
+def _pasted_regimen(shown: Shown, consult: Consult) -> list[str]:
+    """The regimen with its mark; the forecast fully taken before the central one."""
+    label = (
+        "Chosen" if consult.case.chosen is not None else "Proposed, not chosen" if shown.proposed else "Present regimen"
+    )
+    offered = is_offered(shown, consult)
+    words = regimen_words(shown) if offered else marked(shown, consult)
+    rate = show(shown.rate_mg_per_day, "mg/day", 4)
+    lines = [f"{label}{'' if offered else f', {NOT_OFFERED}'}: {words} = {rate} active drug."]
+    if not same_lines(shown):
+        lines.append(f"Expected as reported, every dose taken: {as_reported(shown.taken, consult)}.")
+        lines.append(f"Expected as reported, past intake carried on: {as_reported(shown.forecast, consult)}.")
+    else:
+        lines.append(f"Expected level as reported: {as_reported(shown.forecast, consult)}.")
+    lines.append(f"Every dose taken: {danger_words(shown, consult)}.")
+    return lines
+
+
+def _pasted_loads(consult: Consult) -> list[str]:
+    """The loads asked for, each with its mark and its level after."""
+    plan = consult.plan
+    if plan is None or consult.case.file.plan.load is None:
+        return []
+    lines = []
+    for load in plan.loads:
+        order = sentence(load.order[0] if load.order else show_number(load.amount_mg))
+        head = "Load" if load.offered else f"Load, {NOT_OFFERED}"
+        lines.append(f"{head}: {order} Level after it {level_words(load.after)}.")
+    return [*lines, *plan.no_load]
+
+
 def paste_block(consult: Consult) -> tuple[str, ...]:
     """Plain ASCII, at most 25 lines, to paste into a record. Stops first; what does not fit is said to be missing."""
     lines: list[str] = []
@@ -280,35 +419,32 @@ def paste_block(consult: Consult) -> tuple[str, ...]:
     lines.append(f"{consult.profile.name} level consult, pkcalc {__version__}, case {consult.case.hash}")
     stops = [c for c in consult.cautions if c.severity == "stop"]
     warnings = sum(c.severity == "warn" for c in consult.cautions)
-    body: list[str] = [f"STOP: {c.text}" for c in stops]
+    high = too_high(consult)
+    acute = now_lines(consult)
+    urgent = high is not None and high.urgent
+    body: list[str] = [acute[0], *acute[2:3]] if urgent else []
+    body += [f"STOP: {c.text}" for c in stops if set(c.blocks) != {"two-level"}]
+    if any(set(c.blocks) == {"two-level"} for c in stops):
+        body.append("STOP: no two-level result (why: see the full note).")
     if warnings:
         body.append(f"{warnings} warning{'s' if warnings > 1 else ''}: see the full note.")
-    o = _latest(consult)
-    if o is not None:
+    if used_level(consult) is not None and not urgent:
         body.append(verdict(consult)[0])
+    planned = _next_level(consult)
+    following = [f"Next level: {next((x for x in planned if not x.startswith('Planned by')), planned[0])}"]
+    if consult.case.next_draw is not None and consult.projection is None:
+        following.append(f"Next level planned by the pharmacist: {show_time(consult.case.next_draw)}.")
+    # whoever reads only the block of a toxic patient must not lose the daily levels to the cut at its end
+    body += following if urgent else []
     shown = spoken_for(consult)
     if consult.projection is not None:
         body += hours.paste_lines(consult, consult.projection)
     elif consult.stopped or shown is None:
         body.append("No forecast was given." if consult.stopped else "No regimen to forecast.")
     else:
-        label = (
-            "Chosen"
-            if consult.case.chosen is not None
-            else "Proposed, not chosen"
-            if shown.proposed
-            else "Present regimen"
-        )
-        body.append(f"{label}: {regimen_words(shown)} = {show(shown.rate_mg_per_day, 'mg/day', 4)} active drug.")
-        body.append(f"Expected level as reported: {as_reported(shown.forecast, consult)}.")
-        body.append(
-            f"Every dose taken: up to {edge(shown.taken.total.high)} mg/L; chance above "
-            f"{show(consult.goal.critical_mg_per_L, 'mg/L')} or of no steady state {percent(shown.danger)}."
-            if edge(shown.taken.total.high)[0].isdigit()
-            else f"Every dose taken: the level may have no steady state; chance above "
-            f"{show(consult.goal.critical_mg_per_L, 'mg/L')} or of no steady state {percent(shown.danger)}."
-        )
-    body += [f"Next level: {_next_level(consult)[0]}"]
+        body += _pasted_regimen(shown, consult)
+    body += _pasted_loads(consult)
+    body += [] if urgent else following
     last = [
         "Valid until the next level or any change of dose, feed, other drug or albumin.",
         "Not a substitute for the full note; check every number.",

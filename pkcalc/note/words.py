@@ -23,6 +23,7 @@ DEFERS = (
 )
 DEMONSTRATION = "DEMONSTRATION - invented, not a patient, not for clinical use"
 NO_STEADY_STATE = "no steady state"
+NOT_OFFERED = "NOT OFFERED"
 VALID_UNTIL = (
     "Valid until the next level, or until any change of dose, form, tube feed, other drug, albumin or kidney or liver "
     "function, whichever comes first."
