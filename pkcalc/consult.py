@@ -158,6 +158,7 @@ def run_consult(case: Case, site: Site | str | Path | None = None) -> Consult:
             observations=observations,
             history=_history(found.record, prior, state) if chosen.method == posterior.WHOLE_RECORD else None,
             stops=stops,
+            prior=prior,
         )
         proposed, table = plan.own, plan.table
         aim_rate = rate_for_level(chosen, state.goal.aim_mg_per_L)

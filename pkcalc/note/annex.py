@@ -477,7 +477,7 @@ def _load(load: Load, consult: Consult) -> Section:
     )
     lines = [
         *load.order,
-        f"By the formula {show(load.wanted_mg, form.amount_unit)}; as ordered {show(load.amount_mg, form.amount_unit, 6)} "
+        f"By the formula {show(load.wanted_mg, form.amount_unit, 4)}; as ordered {show(load.amount_mg, form.amount_unit, 6)} "
         f"({show(load.active_mg, 'mg', 4)} of active drug): {parts}.",
         f"It adds {level_words(load.rise)}; level after it {level_words(load.after)}; when drawn "
         f"{show(load.draw_after_h, 'h')} later {level_words(load.at_draw)}.",

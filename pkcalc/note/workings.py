@@ -479,7 +479,7 @@ def _loads(consult: Consult) -> list[Step]:
     steps = []
     for load in plan.loads:
         form = consult.profile.forms[load.form]
-        volume = printed(load.volume_L.median, "L", 4)
+        volume = printed(load.volume_L.median, "L", 6)
         aim = printed(load.aim_mg_per_L, "mg/L", 4)
         now = printed(load.from_mg_per_L, "mg/L", 4)
         share = form.salt_factor * form.bioavailability
@@ -489,7 +489,7 @@ def _loads(consult: Consult) -> list[Step]:
                 f"Amount of {form.words} by the formula",
                 "amount = V x (aim - level now) / (salt factor x share reaching the body)",
                 f"{volume} x ({aim} - {now}) / {factor}",
-                printed(volume.value * (aim.value - now.value) / factor.value, form.amount_unit, 3),
+                printed(volume.value * (aim.value - now.value) / factor.value, form.amount_unit, 4),
                 f"as ordered after rounding and limits: {show(load.amount_mg, form.amount_unit, 6)}",
             )
         )

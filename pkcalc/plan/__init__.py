@@ -11,7 +11,7 @@ from datetime import timedelta
 
 from pkcalc.case import Case
 from pkcalc.dosing import Regimen
-from pkcalc.drugs.profile import Profile
+from pkcalc.drugs.profile import Prior, Profile
 from pkcalc.estimate.posterior import BEFORE_ANY_LEVEL, WHOLE_RECORD
 from pkcalc.estimate.result import Estimate
 from pkcalc.forecast import Goal, two_lines
@@ -113,6 +113,7 @@ def make(
     observations: tuple[Observation, ...],
     history: History | None = None,
     stops: frozenset[str] = frozenset(),
+    prior: Prior | None = None,
 ) -> Plan:
     """The plan from an estimate.
 
@@ -170,7 +171,7 @@ def make(
     present = next((c for c in every if c.present and not c.proposed), None)
     own = tuple(next(c for c in every if c.regimen is r and c.proposed) for r in case.proposed)
     next_on = own[0] if own else present
-    given_loads, no_load = _loads(case, setting, now, shelf, next_on, stops)
+    given_loads, no_load = _loads(case, setting, now, shelf, next_on, stops, prior)
     asked = _asked(case, setting, now, observations, next_on, present, given_loads)
     level = None if asked is None or "next level" in stops else nextlevel.next_level(asked)
     return Plan(
@@ -201,6 +202,7 @@ def _loads(
     shelf: ShelfInUse,
     follows: Candidate | None,
     stops: frozenset[str],
+    prior: Prior | None,
 ) -> tuple[tuple[loading.Load, ...], tuple[str, ...]]:
     if "loading" in stops:
         return (), ("A stop on the data blocks loads.",) if case.file.plan.load else ()
@@ -214,8 +216,29 @@ def _loads(
         products=shelf.products,
         maintenance_mg_per_day=follows.rate_mg_per_day if follows is not None else 0.0,
         maintenance_words=follows.words if follows is not None else "no maintenance dose",
+        volume_words=_volume_words(case, setting, prior),
     )
     return loading.loads(ward)
+
+
+def _volume_words(case: Case, setting: Setting, prior: Prior | None) -> str:
+    """Which weight the volume counts, where that is not the actual one; "" elsewhere."""
+    weight, volume = case.patient.weight_kg, setting.taken.summary.get("volume_L")
+    if prior is None or weight is None or volume is None:
+        return ""
+    counted = prior.volume_L / setting.profile.populations[prior.population].volume_L_per_kg
+    if abs(counted / weight - 1) < 0.005:
+        return ""
+    why = (
+        "in obesity the drug spreads into the excess weight more than in proportion, so the load per kg of actual "
+        "weight is higher; the ceiling per kg still counts actual weight"
+        if counted > weight
+        else "without height and sex nobody can tell obesity, so the weight is capped"
+    )
+    return (
+        f"The volume ({show(volume.median, 'L')}) counts {show(counted, 'kg')} for an actual weight of "
+        f"{show(weight, 'kg')}: {why}."
+    )
 
 
 def _asked(

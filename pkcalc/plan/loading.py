@@ -19,7 +19,7 @@ from pkcalc.estimate.result import Band, Estimate
 from pkcalc.forecast import TIME_DRAWS, Goal, bands, draws_of, fewer_draws
 from pkcalc.plan.candidates import percent
 from pkcalc.plan.limits import is_child
-from pkcalc.plan.present import Floats, Today
+from pkcalc.plan.present import Floats, Today, present_course
 from pkcalc.record import Dose, Record
 from pkcalc.site import Site
 from pkcalc.units import show, show_number
@@ -72,6 +72,11 @@ class Load:
     notes: tuple[str, ...]
     offered: bool
     why_not: tuple[str, ...]
+    volume_words: str = ""
+
+    @property
+    def marks(self) -> tuple[str, ...]:
+        return () if self.offered else ("NOT OFFERED",)
 
     @property
     def unit_words(self) -> str:
@@ -80,7 +85,8 @@ class Load:
 
 @dataclass(frozen=True)
 class Ward:
-    """What every load of one plan is worked out from. maintenance: active mg/day that follows, with its words."""
+    """What every load of one plan is worked out from. maintenance: active mg/day that follows, with its words.
+    volume_words: from which weight the volume comes, where that is not the actual one."""
 
     case: Case
     profile: Profile
@@ -91,41 +97,59 @@ class Ward:
     products: tuple[str, ...]
     maintenance_mg_per_day: float
     maintenance_words: str
+    volume_words: str = ""
 
 
 def loads(ward: Ward) -> tuple[tuple[Load, ...], tuple[str, ...]]:
-    """The loads for the form asked for, or for every form of the shelf where the level is below the range.
+    """The load for the form asked for; none where none is asked for: maintenance simply goes on.
 
-    Returns them with what must be said where there are none.
+    Returns it with what must be said where there is none.
     """
     profile, case = ward.profile, ward.case
     asked = case.file.plan.load
-    if profile.loading is None:
-        return (), (f"No loads are described for {profile.name}.",) if asked else ()
-    measured = ward.now.measured_mg_per_L
-    if asked is None and (measured is None or measured >= ward.goal.low_mg_per_L):
+    if asked is None:
         return (), ()
+    if profile.loading is None:
+        return (), (f"No loads are described for {profile.name}.",)
     if ward.estimate.volume_L is None:
         return (), ("No load can be worked out without a weight: there is no volume.",)
-    forms = list(dict.fromkeys(profile.products[p].form for p in ward.products))
-    if asked is not None:
-        if asked.form not in forms:
-            return (), (f"No load of {profile.forms[asked.form].words}: there is no such product on the shelf in use.",)
-        forms = [asked.form]
+    form = profile.forms[asked.form]
+    mine = [profile.products[p] for p in ward.products if profile.products[p].form == asked.form]
+    if not mine:
+        return (), (f"No load of {form.words}: there is no such product on the shelf in use.",)
     level = start_level(ward)
     aim = case.load_aim_mg_per_L or ward.goal.aim_mg_per_L
     if level >= aim:
         return (), (f"No load: the level today ({show(level, 'mg/L')}) is not below the aim of {show(aim, 'mg/L')}.",)
-    found = []
-    for form in forms:
-        mine = [profile.products[p] for p in ward.products if profile.products[p].form == form]
-        if form in profile.loading.iv_lines:
-            found.append(into_vein(ward, mine[0], aim))
-        elif profile.loading.oral is not None and profile.forms[form].route == "oral":
-            made = by_mouth(ward, mine, aim)
-            if made is not None:
-                found.append(made)
-    return tuple(found), ()
+    usual = usual_dose(ward)
+    if usual is not None and wanted_active(ward, aim) < usual * (1 - 1e-9):
+        return (), (
+            f"No load: {show(wanted_active(ward, aim), 'mg')} of active drug would do, which is less than one usual "
+            f"dose ({show(usual, 'mg', 4)} of active drug). Maintenance goes on: {ward.maintenance_words}.",
+        )
+    if asked.form in profile.loading.iv_lines:
+        return (into_vein(ward, mine[0], aim),), ()
+    oral = profile.loading.oral
+    if oral is None or form.route != "oral":
+        return (), (f"No load of {form.words}: no load by this route is described for {profile.name}.",)
+    if _load_unit(mine, oral) is None:
+        parts = ", ".join(show_number(mg) for mg in oral.parts_mg)
+        return (), (
+            f"No load of {form.words}: the published load by mouth is in capsules or tablets whose size divides its "
+            f"parts ({parts} {form.amount_unit}); ask for such a form, or for one into a vein.",
+        )
+    made = by_mouth(ward, mine, aim)
+    if made is None:
+        return (), (f"No load of {form.words}: the amount by the formula is less than half of one unit.",)
+    return (made,), ()
+
+
+def usual_dose(ward: Ward) -> float | None:
+    """Active drug of the largest single dose given now [mg]; None where nothing repeated is given."""
+    course = present_course(ward.case)
+    if course is None or course.regimen is None:
+        return None
+    return max(active_mg(x, ward.profile) for x in course.regimen.intakes)
 
 
 #: A level at most so old stands against the course of the record: the higher of the two is topped up.
@@ -294,7 +318,9 @@ def by_mouth(ward: Ward, products: Sequence[Product], aim_mg_per_L: float) -> Lo
         + (f" in {len(parts)} parts" if len(parts) > 1 else "")
         + f": {pieces}.",
         oral.setting,
-        f"Maintenance begins {show_number(oral.maintenance_after_h)} h after the first part.",
+        f"Maintenance goes on as well: {ward.maintenance_words}; the load does not replace it."
+        if usual_dose(ward) is not None
+        else f"Maintenance begins {show_number(oral.maintenance_after_h)} h after the first part.",
     )
     low, high = form.absorption.peak_h if form.absorption else (0.0, 0.0)
     notes.append(
@@ -366,6 +392,8 @@ def _load(
             f"Worked out from the measured {show(start_level(ward), 'mg/L')}, which is above the course of the record "
             f"({show(course.median, 'mg/L')})."
         )
+    if ward.volume_words:
+        notes.append(ward.volume_words)
     follow_from = np.asarray(drawn, dtype=np.float64)
     days = [d for d in FOLLOWED_DAYS if d * 24 > draw_after_h]
     followed = [
@@ -406,6 +434,7 @@ def _load(
         notes=tuple(notes),
         offered=not why,
         why_not=tuple(why),
+        volume_words=ward.volume_words,
     )
 
 
@@ -453,7 +482,7 @@ def ceiling(ward: Ward, wanted_mg: float, unit: str) -> tuple[float, list[str]]:
     if weight is not None:
         low, high = loading.mg_per_kg
         notes.append(
-            f"That is {show(wanted_mg / weight, f'{unit}/kg')} by the formula; published loads are "
+            f"That is {show(wanted_mg / weight, f'{unit}/kg')} of actual weight by the formula; published loads are "
             f"{show_number(low)} to {show(high, f'{unit}/kg')}, up to {show_number(highest)} in status epilepticus."
         )
         if highest * weight < min(most, wanted_mg):
@@ -507,8 +536,9 @@ def vial_words(amount_mg: float, product: Product) -> str:
 
 def rate_caps(case: Case, profile: Profile, site: Site, form: str) -> tuple[tuple[RateCap, ...], list[str]]:
     """The infusion caps that hold for this patient (the slowest counts), and what must be said about them."""
-    age = case.patient.age_years
+    age, weight = case.patient.age_years, case.patient.weight_kg
     notes: list[str] = []
+    slower = None
     groups = ["child"] if is_child(case, profile) else ["adult"]
     if age is None:
         groups.append("risk")
@@ -517,10 +547,10 @@ def rate_caps(case: Case, profile: Profile, site: Site, form: str) -> tuple[tupl
         groups.append("risk")
     elif case.answer("heart_block") != "no":
         slower = site.rate_cap(profile, form, "risk")
-        if slower is not None:
-            notes.append(f"Heart disease is not stated. With it, the slower rate holds ({slower.words}).")
-    caps = [site.rate_cap(profile, form, g) for g in groups]
-    return tuple(c for c in caps if c is not None), notes
+    caps = [c for c in (site.rate_cap(profile, form, g) for g in groups) if c is not None]
+    if slower is not None and (not caps or rate_mg_per_min([slower], weight) < rate_mg_per_min(caps, weight)):
+        notes.append(f"Heart disease is not stated. With it, the slower rate holds ({slower.words}).")
+    return tuple(caps), notes
 
 
 def rate_mg_per_min(caps: Sequence[RateCap], weight_kg: float | None) -> float:

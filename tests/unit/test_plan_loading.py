@@ -24,10 +24,15 @@ LOW: dict[str, Any] = {
 }
 
 
+FORMS = ("injection", "fosphenytoin-injection", "extended-capsule")
+
+
 def loads(site: Any = None, **changes: Any) -> dict[str, Load]:
+    """The loads asked for; where the case asks for none, one with each of a few forms is asked for."""
     changes = {**LOW, **changes, "context": {**LOW["context"], **changes.get("context", {})}}
-    found = plan(site, changes.pop("est", exact(volume=49.0)), **changes)
-    return {load.form: load for load in found.loads}
+    est = changes.pop("est", exact(volume=49.0))
+    wanted = [changes.pop("plan")] if "plan" in changes else [asked(f) for f in FORMS]
+    return {load.form: load for p in wanted for load in plan(site, est, **changes, plan=p).loads}
 
 
 def asked(form: str, **more: str) -> dict[str, Any]:
