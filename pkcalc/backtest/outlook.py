@@ -209,9 +209,12 @@ def _one_level(known: _Known, o: Observation, at: LevelData, earlier: list[int])
     found = [_by_draws(known, PRIOR, o, at, [], len(earlier))]
     if earlier:
         latest = max(earlier, key=lambda i: (known.data[i].time_day, i))
-        found.append(_by_draws(known, ONE, o, at, [latest], len(earlier)))
-        found.append(_by_pair(known, o, at, earlier))
-        found.append(_by_draws(known, WHOLE, o, at, earlier, len(earlier)))
+        one = _by_draws(known, ONE, o, at, [latest], len(earlier))
+        # from a single earlier level the two are the same calculation
+        whole = (
+            replace(one, method=WHOLE) if earlier == [latest] else _by_draws(known, WHOLE, o, at, earlier, len(earlier))
+        )
+        found += [one, _by_pair(known, o, at, earlier), whole]
     return found
 
 

@@ -61,7 +61,7 @@ def test_each_patient_gets_the_rows_of_its_own_key(tmp_path: Path) -> None:
 
 def test_the_order_of_the_rows_does_not_matter(tmp_path: Path) -> None:
     """Rows of all patients mixed give each patient the same rows, in the order of the file."""
-    write_department(tmp_path / "d", drug="phenytoin", count=9, seed=4)
+    write_department(tmp_path / "d", drug="phenytoin", count=5, seed=4)
     whole = raws(tmp_path / "d")
     mixed = tmp_path / "mixed"
     mixed.mkdir()
@@ -234,7 +234,7 @@ def test_two_runs_never_share_a_folder_of_results(tmp_path: Path) -> None:
 
 def test_a_synthetic_department_is_marked_seeded_and_wrong_where_asked(tmp_path: Path) -> None:
     for name in ("a", "b"):
-        write_department(tmp_path / name, drug="phenytoin", count=30, seed=8, errors=Errors(wrong=0.5))
+        write_department(tmp_path / name, drug="phenytoin", count=8, seed=8, errors=Errors(wrong=0.5))
     for table in ("patients.csv", "doses.csv", "levels.csv"):
         assert (tmp_path / "a" / table).read_bytes() == (tmp_path / "b" / table).read_bytes()
     folder = open_folder(tmp_path / "a")
@@ -245,7 +245,7 @@ def test_a_synthetic_department_is_marked_seeded_and_wrong_where_asked(tmp_path:
             case_of(raw, "phenytoin")
         except CaseError:
             bad += 1
-    assert 8 <= bad <= 22
+    assert 1 <= bad <= 7
     units = {line.split(",")[2] for line in (tmp_path / "a" / "levels.csv").read_text().splitlines()[1:]}
     assert units == {"mg/L", "mcg/mL", "umol/L"}
     assert said(write_department, tmp_path / "a", drug="phenytoin", count=1, seed=1) == [
