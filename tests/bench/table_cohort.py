@@ -7,7 +7,7 @@ levels 21 days apart on three doses, 5 % of doses missed unseen, assay 5 %, dose
 rule. Forecast is the true level at the end of the next 21 days. A method that gives no answer, or no plateau,
 for a patient is counted as 60 mg/L. Published (category l of the worked examples): one-level predictions
 erred by -1.0 to -3.1 mg/L (SD 3.6 to 4.2; Vozeh 1980, abstract read); two-pair methods were better than
-one-pair ones (76 patients, abstract read, no figures). """
+one-pair ones (76 patients, abstract read, no figures)."""
 
 from __future__ import annotations
 

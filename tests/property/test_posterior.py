@@ -44,13 +44,9 @@ def wards(draw):
     amounts = draw(st.lists(st.sampled_from([100.0, 200.0, 300.0, 400.0]), min_size=days, max_size=days))
     doses = tuple(Dose(i + 0.4, a, absorption=CAPSULE) for i, a in enumerate(amounts))
     count = draw(st.integers(1, 3))
-    times = draw(
-        st.lists(st.floats(1.1, float(days)), min_size=count, max_size=count, unique=True).map(sorted)
-    )
+    times = draw(st.lists(st.floats(1.1, float(days)), min_size=count, max_size=count, unique=True).map(sorted))
     values = draw(st.lists(st.floats(2.0, 30.0), min_size=count, max_size=count))
-    levels = [
-        LevelData(t, v, assay_cv=0.1, index=i) for i, (t, v) in enumerate(zip(times, values, strict=True))
-    ]
+    levels = [LevelData(t, v, assay_cv=0.1, index=i) for i, (t, v) in enumerate(zip(times, values, strict=True))]
     spread = RecordSpread(draw(st.sampled_from([0.0, 0.05, 0.2])), draw(st.sampled_from([0.0, 0.05])))
     return Record(doses=doses), levels, spread
 
@@ -65,9 +61,7 @@ def _quantiles(estimate) -> np.ndarray:
 @given(wards(), st.floats(-300, 300))
 def test_the_clock_may_be_shifted(ward, shift: float) -> None:
     record, levels, spread = ward
-    moved = Record(
-        doses=tuple(replace(d, time_day=d.time_day + shift) for d in record.doses), start_day=shift
-    )
+    moved = Record(doses=tuple(replace(d, time_day=d.time_day + shift) for d in record.doses), start_day=shift)
     later = [replace(x, time_day=x.time_day + shift) for x in levels]
     one = from_record(record, levels, PRIOR, spread, n=64)
     two = from_record(moved, later, PRIOR, spread, n=64)
@@ -91,9 +85,7 @@ def test_the_order_of_the_levels_does_not_matter(ward) -> None:
 def test_another_unit_of_mass_scales_the_answer(ward, factor: float) -> None:
     record, levels, spread = ward
     scaled = Record(doses=tuple(replace(d, amount_mg=d.amount_mg * factor) for d in record.doses))
-    prior = replace(
-        PRIOR, vmax_mg_per_day=PRIOR.vmax_mg_per_day * factor, km_mg_per_L=PRIOR.km_mg_per_L * factor
-    )
+    prior = replace(PRIOR, vmax_mg_per_day=PRIOR.vmax_mg_per_day * factor, km_mg_per_L=PRIOR.km_mg_per_L * factor)
     one = from_record(record, levels, PRIOR, spread, n=64)
     two = from_record(
         scaled, [replace(x, level_mg_per_L=x.level_mg_per_L * factor) for x in levels], prior, spread, n=64

@@ -77,9 +77,7 @@ def test_a_level_that_says_nothing_gives_the_population_back() -> None:
     estimate = from_record(nightly((300, 5)), [replace(level, extra_log_sd=30.0)], PRIOR, OBSERVED)
     for q in QUANTITIES:
         ours, before = estimate.summary[q], prior_only(PRIOR).summary[q]
-        assert [ours.low, ours.median, ours.high] == pytest.approx(
-            [before.low, before.median, before.high], rel=5e-3
-        )
+        assert [ours.low, ours.median, ours.high] == pytest.approx([before.low, before.median, before.high], rel=5e-3)
     assert estimate.volume_from == "population"
 
 
@@ -190,9 +188,7 @@ def test_a_censored_level_pulls_the_way_it_points() -> None:
 def test_an_earlier_regimen_is_the_same_as_its_doses_written_out() -> None:
     regimen = Repeated(1.0, (Dose(0.875, 300.0, absorption=CAPSULE),))
     short = Record(doses=(Dose(0.875, 300.0, absorption=CAPSULE),), before=Before(regimen, 90.0))
-    long = Record(
-        doses=tuple(Dose(d + 0.875, 300.0, absorption=CAPSULE) for d in range(-90, 1)), start_day=-90.0
-    )
+    long = Record(doses=tuple(Dose(d + 0.875, 300.0, absorption=CAPSULE) for d in range(-90, 1)), start_day=-90.0)
     level = [LevelData(0.9, 11.0, 0.1)]
     one, two = (from_record(r, level, PRIOR, USUAL) for r in (short, long))
     for q in QUANTITIES:
