@@ -1336,7 +1336,10 @@ def _course(i: int, file: DoseFile, check: _Check, profile: Profile) -> Course |
         if file.amount or file.over or file.for_about or file.missed:
             given_too = "amount, over, for about or missed was given for a continuous infusion"
             check.say(where, given_too, "rate with from and until", "Remove them")
-        if not file.from_:
+        # only a drug that is followed by levels while it runs may still be running
+        if profile.sampling.repeat_h is None and not (file.from_ and file.until):
+            check.say(where, "an infusion was given without both ends", "from and until", "Add both clock times")
+        elif not file.from_:
             check.say(
                 where,
                 "an infusion was given without its start",
