@@ -48,9 +48,10 @@ class Candidate:
 
     words: by labelled amounts. dispense: units of products and times, "" where it cannot be made from the shelf.
     forecast: central line; taken: safety line, every dose taken. danger: chance, on the safety line, of a level
-    above the critical one or of no steady state, at plateau or at the next feasible draw. change_percent: of the
-    daily active dose against the present one. trough, peak: extremes of the level at plateau; on_days: days from
-    the first dose and the level then (both None where not worked out: no volume, or not among those shown).
+    above the critical one or of no steady state, at plateau or at the next feasible draw; danger_at_plateau,
+    danger_at_draw: each alone (at the draw: None without a volume). change_percent: of the daily active dose against
+    the present one. trough, peak: extremes of the level at plateau; on_days: days from the first dose and the level
+    then (both None where not worked out: no volume, or not among those shown).
     loss: expected loss, only where the order by loss is asked for.
     """
 
@@ -71,6 +72,11 @@ class Candidate:
     on_days: tuple[tuple[float, Band], ...] | None = None
     loss: float | None = None
     products: tuple[str, ...] = ()
+    danger_at_draw: float | None = None
+
+    @property
+    def danger_at_plateau(self) -> float:
+        return self.taken.above_critical
 
     @property
     def rate_mg_per_day(self) -> float:
@@ -167,6 +173,7 @@ def candidates(
         else forecast_rates(setting.taken, rates, setting.goal, setting.scale, present_mg_per_L=setting.start_mg_per_L)
     )
     dangers = danger(setting, rates)
+    at_draw = danger_at_draw(setting, rates)
     found = [
         _judge(
             Candidate(
@@ -180,6 +187,7 @@ def candidates(
                 present=row[3],
                 proposed=row[4],
                 products=row[6],
+                danger_at_draw=None if at_draw is None else float(at_draw[i]),
             ),
             setting,
         )
@@ -221,6 +229,37 @@ def danger(setting: Setting, rates_mg_per_day: Sequence[float]) -> Floats:
     return chance
 
 
+def danger_at_draw(setting: Setting, rates_mg_per_day: Sequence[float]) -> Floats | None:
+    """Chance, with every dose taken, of a level above the critical one at the next feasible draw; None without a
+    volume."""
+    few = fewer_draws(setting.taken, TIME_DRAWS)
+    if few.estimate.volume_L is None:
+        return None
+    now = np.broadcast_to(draws_of(setting.start_mg_per_L, few), few.estimate.volume_L.shape)
+    # nobody at or below the critical level gets above it on a dose rate whose plateau lies below
+    rates = np.asarray(rates_mg_per_day, dtype=np.float64)[:, None]
+    critical = setting.goal.critical_mg_per_L
+    steady = formulas.steady_state_level(
+        dose_rate_mg_per_day=rates,
+        vmax_mg_per_day=few.estimate.vmax_mg_per_day,
+        km_mg_per_L=few.estimate.km_mg_per_L,
+    )
+    row, column = np.nonzero((steady > critical) | (now > critical))
+    over = np.zeros(steady.shape, dtype=bool)
+    if row.size:
+        then = formulas.level_after(
+            time_day=setting.draw_days,
+            start_mg_per_L=now[column],
+            dose_rate_mg_per_day=rates[row, 0],
+            vmax_mg_per_day=few.estimate.vmax_mg_per_day[column],
+            km_mg_per_L=few.estimate.km_mg_per_L[column],
+            volume_L=few.estimate.volume_L[column],
+        )
+        over[row, column] = then > critical
+    chance: Floats = np.clip(np.round(over @ few.estimate.weights, 12), 0.0, 1.0)
+    return chance
+
+
 def _change(rate: float, present: float | None) -> float | None:
     return None if not present else 100.0 * (rate / present - 1.0)
 
@@ -237,13 +276,13 @@ def _judge(c: Candidate, s: Setting) -> Candidate:
         above = f"above {show(s.goal.critical_mg_per_L, 'mg/L')}"
         if c.taken.above_critical > limit:
             why.append(
-                f"Taken in full, the chance of a level {above} or of no steady state is {percent(c.danger)}, above the "
-                f"limit of {percent(limit)}."
+                f"Taken in full, the chance of a level {above} or of no steady state once settled is "
+                f"{percent_against(c.danger_at_plateau, limit)}, above the limit of {percent(limit)}."
             )
         else:
             why.append(
                 f"The level is high today: at the next feasible draw, in {show(s.draw_days, 'days')}, the chance of a "
-                f"level {above} is still {percent(c.danger)}, above the limit of {percent(limit)}."
+                f"level {above} is still {percent_against(c.danger, limit)}, above the limit of {percent(limit)}."
             )
     if c.rate_mg_per_day > s.largest_mg_per_day * (1 + 1e-9):
         why.append(
@@ -271,6 +310,14 @@ def percent(share: float) -> str:
     if 0.99 < share < 1:
         return "more than 99 %"
     return f"{show_number(100 * share, 2)} %"
+
+
+def percent_against(share: float, limit: float) -> str:
+    """A chance with enough digits to be told from a limit that it is not equal to."""
+    if share == limit or percent(share) != percent(limit):
+        return percent(share)
+    digits = next((d for d in range(3, 13) if show_number(100 * share, d) != show_number(100 * limit, d)), 12)
+    return f"{show_number(100 * share, digits)} %"
 
 
 def shown(

@@ -120,21 +120,24 @@ def test_json_carries_every_candidate_and_no_infinity() -> None:
     assert present["change_percent"] == 0
     assert present["trough_mg_per_L"] is not None
     assert data["pause"]["until_level_mg_per_L"] == 20
-    assert data["next_level"]["action"].startswith("On ")
+    assert data["next_level"]["action"].startswith("Levels daily, ")
     assert len(data["next_level"]["curve"]) == 14
     assert data["largest_step"]["rule"].startswith("published step rule")
 
 
 def test_json_of_loads() -> None:
-    found = plan(
-        None,
-        exact(),
-        doses=[{**PLAIN["doses"][0], "until": ""}],
-        levels=[{"value": "8 mg/L", "kind": "total", "drawn": "2026-12-01 07:00"}],
-    )
-    data = json.loads(json.dumps(plan_data(found), allow_nan=False))
-    by_form = {x["form"]: x for x in data["loads"]}
-    assert set(by_form) == {"extended-capsule", "chewable-tablet", "injection", "fosphenytoin-injection"}
+    by_form = {}
+    for form in ("injection", "extended-capsule"):
+        found = plan(
+            None,
+            exact(),
+            doses=[{**PLAIN["doses"][0], "until": ""}],
+            levels=[{"value": "8 mg/L", "kind": "total", "drawn": "2026-12-01 07:00"}],
+            plan={"shelf": "united-states", "load": {"form": form}},
+        )
+        data = json.loads(json.dumps(plan_data(found), allow_nan=False))
+        by_form |= {x["form"]: x for x in data["loads"]}
+    assert set(by_form) == {"extended-capsule", "injection"}
     assert by_form["injection"]["infusion_at_least_min"] == 8
     assert by_form["injection"]["labelled_ordered_mg"] == 375
     assert [p["labelled_mg"] for p in by_form["extended-capsule"]["parts"]] == [400]

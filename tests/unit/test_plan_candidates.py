@@ -171,7 +171,8 @@ def test_every_reason_why_not_in_full() -> None:
     )
     assert one(490.0, s).why_not == (
         "A stop on the data blocks regimens.",
-        "Taken in full, the chance of a level above 30 mg/L or of no steady state is 100 %, above the limit of 10 %.",
+        "Taken in full, the chance of a level above 30 mg/L or of no steady state once settled is 100 %, above the "
+        "limit of 10 %.",
         "450.8 mg/day of active drug is above the largest daily dose of 400 mg/day.",
         "Observe dosing first.",
         "The step of 175 mg/day of active drug is above the largest step of 46 mg/day (published step rule: 50 "

@@ -4,12 +4,19 @@ from __future__ import annotations
 
 from typing import Any
 
+import numpy as np
+import pytest
+
+from pkcalc import formulas
 from pkcalc.consult import patient_prior
+from pkcalc.dosing import Intake, Regimen
+from pkcalc.forecast import fewer_draws
 from pkcalc.plan import _volume_words
+from pkcalc.plan.candidates import candidates, danger_at_draw, percent_against
 from pkcalc.plan.loading import rate_caps
 from pkcalc.site import no_site
 from tests.unit.cases import plain
-from tests.unit.planning import exact, plan, profile, setting
+from tests.unit.planning import estimate, exact, plan, profile, setting
 from tests.unit.test_plan_loading import LOW, asked
 
 
@@ -72,3 +79,52 @@ def test_the_weight_of_the_volume_is_explained_beside_a_load() -> None:
         "actual weight."
     )
     assert _volume_words(plain(), setting(), patient_prior(plain(), profile(), no_site())) == ""
+
+
+@pytest.mark.parametrize(
+    ("share", "words"),
+    [(0.1, "10 %"), (0.1004, "10.04 %"), (0.10000004, "10.000004 %"), (0.104, "10.4 %"), (0.62, "62 %"), (0.05, "5 %")],
+)
+def test_a_chance_just_above_its_limit_is_told_from_it(share: float, words: str) -> None:
+    assert percent_against(share, 0.1) == words
+
+
+def test_each_chance_of_too_high_has_its_time() -> None:
+    """From 38 mg/L, 276 mg/day of 450: the plateau is 7.9 mg/L, but three days later the level is still high."""
+    regimen = Regimen((Intake("extended-capsule", 21.0, 300.0),))
+    given = [(regimen, "300 mg", "", True, False)]
+    toxic = setting(exact(), start_mg_per_L=np.full(8, 38.0), draw_days=1.0)
+    (c,) = candidates([], given, toxic)
+    assert (c.danger_at_plateau, c.danger_at_draw, c.danger) == (0.0, 1.0, 1.0)
+    assert c.why_not == (
+        "The level is high today: at the next feasible draw, in 1 days, the chance of a level above 30 mg/L is still "
+        "100 %, above the limit of 10 %.",
+    )
+    rising = setting(exact(vmax=270.0), start_mg_per_L=np.full(8, 8.0), draw_days=3.0)
+    (c,) = candidates([], given, rising)
+    assert (c.danger_at_plateau, c.danger_at_draw, c.danger) == (1.0, 0.0, 1.0)
+    assert c.why_not[0] == (
+        "Taken in full, the chance of a level above 30 mg/L or of no steady state once settled is 100 %, above the limit "
+        "of 10 %."
+    )
+    (c,) = candidates([], given, setting(exact(volume=None)))
+    assert c.danger_at_draw is None
+
+
+def test_the_chance_at_the_draw_is_the_share_of_the_courses_above() -> None:
+    many = estimate(vmax=330.0)
+    one = setting(many, start_mg_per_L=25.0, draw_days=6.0)
+    few = fewer_draws(many, 512).estimate
+    then = formulas.level_after(
+        time_day=6.0,
+        start_mg_per_L=25.0,
+        dose_rate_mg_per_day=400.0,
+        vmax_mg_per_day=few.vmax_mg_per_day,
+        km_mg_per_L=few.km_mg_per_L,
+        volume_L=few.volume_L,
+    )
+    share = float((then > 30.0) @ few.weights)
+    found = danger_at_draw(one, [400.0])
+    assert found is not None
+    assert 0.05 < share < 0.95
+    assert found[0] == pytest.approx(share)
