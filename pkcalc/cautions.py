@@ -85,6 +85,18 @@ def percent(share: float) -> str:
     return f"{show_number(100 * share, 2)} %"
 
 
+def percent_beside(share: float, limit: float) -> str:
+    """A chance with as many digits as it takes to tell it from the limit that it is held against."""
+    text, bound = percent(share), percent(limit)
+    if text != bound or share == limit:
+        return text
+    for digits in range(3, 7):
+        text = f"{show_number(100 * share, digits)} %"
+        if text != bound:
+            return text
+    return f"just {'above' if share > limit else 'below'} {bound}"
+
+
 def _always(s: State, p: Mapping[str, Any]) -> list[Words]:
     return [{}]
 
@@ -156,7 +168,7 @@ def _projected_too_high(s: State, p: Mapping[str, Any]) -> list[Words]:
         found.append(
             {
                 "regimen": path.words[:1].upper() + path.words[1:],
-                "chance": percent(worst.above_critical),
+                "chance": percent_beside(worst.above_critical, s.site.stop_chance),
                 "hours": show(worst.hours, "h"),
                 "critical": show(s.goal.critical_mg_per_L, "mg/L"),
                 "limit": percent(s.site.stop_chance),
@@ -503,7 +515,7 @@ def _danger(s: State, low: float, high: float) -> list[Words]:
             found.append(
                 {
                     "regimen": shown.words,
-                    "chance": percent(chance),
+                    "chance": percent_beside(chance, s.site.stop_chance),
                     "critical": show(s.goal.critical_mg_per_L, "mg/L"),
                     "limit": percent(s.site.stop_chance),
                 }
@@ -716,14 +728,14 @@ def after_plan(state: State) -> tuple[Caution, ...]:
 
 
 def in_order(cautions: Iterable[Caution]) -> tuple[Caution, ...]:
-    """Stops first, then warnings, then notes; no text twice."""
+    """Stops first (those of the two-level method alone last), then warnings, then notes; no text twice."""
     seen: set[tuple[str, str]] = set()
     unique = []
     for caution in cautions:
         if (caution.id, caution.text) not in seen:
             seen.add((caution.id, caution.text))
             unique.append(caution)
-    return tuple(sorted(unique, key=lambda c: SEVERITIES.index(c.severity)))
+    return tuple(sorted(unique, key=lambda c: (SEVERITIES.index(c.severity), set(c.blocks) == {"two-level"})))
 
 
 def blocked(cautions: Iterable[Caution]) -> frozenset[str]:

@@ -372,11 +372,13 @@ def _without_plan(consult: Consult, shown: Shown) -> list[str]:
             if any(c.id == "increase-on-doubt" for c in consult.cautions)
             else "Plan the next level with a regimen that is offered; draw one on the present one before a change."
         )
-        return [f"No draw is planned on {shown.words} ({NOT_OFFERED}).", first]
+        lines = [f"No draw is planned on {shown.words} ({NOT_OFFERED}). {first}"]
+        if found is not None and found.regimen_words != shown.words and not found.none_because:
+            lines.append(f"On {found.regimen_words}, as now: {found.action}")
+        return lines
     lines = [f"No draw is planned for going on unchanged ({NOT_OFFERED}): change the dose first, then plan the level."]
-    if found is not None and not found.none_because:
-        early = found.safety_action if found.safety is not None else found.action
-        lines.append(f"While {shown.words} ({NOT_OFFERED}) is still taken: {early}")
+    if found is not None and found.regimen_words == shown.words:
+        lines.append(f"While {shown.words} ({NOT_OFFERED}) is still taken: {found.action}")
     return lines
 
 
