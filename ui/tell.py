@@ -342,18 +342,24 @@ def acute(consult: Consult) -> None:
         look.lines(
             [
                 pause.seizure_risk,
+                pause.restart_line,
                 f"Level today {level_words(pause.now)}; give again at {back}. Without any "
                 f"dose that takes {days_words(pause.days)}.",
                 *pause.lines,
-                *(f"Partial reduction to {r.words}: down to {back} in {days_words(r.days)}." for r in pause.reductions),
+                *(
+                    f"{'' if r.offered else 'NOT OFFERED: '}Partial reduction to {r.words}: down to {back} in "
+                    f"{days_words(r.days)}."
+                    for r in pause.reductions
+                ),
             ]
         )
     for switch in plan.switches:
-        look.say(f"Another form: {switch.words}", "answer")
+        look.say(f"Another form{': NOT OFFERED' if not switch.offered else ''}: {switch.words}", "answer")
         look.lines(
             [
                 f"Equal would be {show(switch.exact_labelled_mg, 'mg/day')} as labelled; steady level "
                 f"{level_words(switch.steady)}.",
+                *switch.why_not,
                 *switch.lines,
             ]
         )

@@ -386,8 +386,9 @@ def _regimens(consult: Consult) -> list[Section]:
         for switch in plan.switches:
             sections.append(
                 Section(
-                    f"Another form: {switch.words}",
+                    f"Another form{': NOT OFFERED' if not switch.offered else ''}: {switch.words}",
                     (
+                        *(sentence(w) for w in switch.why_not),
                         f"Equal would be {show(switch.exact_labelled_mg, 'mg/day')} as labelled; as dispensed "
                         f"{show(switch.active_mg_per_day, 'mg/day', 4)} of active drug "
                         f"({signed_percent(switch.change_percent)} of the present).",
@@ -425,6 +426,7 @@ def _acute(consult: Consult) -> list[Section]:
         p = plan.pause
         lines = [
             p.seizure_risk,
+            p.restart_line,
             f"Level today {level_words(p.now)}; give again at {show(p.to_mg_per_L, 'mg/L')}.",
             f"Without any dose that takes {days_words(p.days)}"
             + (
@@ -436,19 +438,21 @@ def _acute(consult: Consult) -> list[Section]:
         ]
         for r in p.reductions:
             lines.append(
-                f"Partial reduction to {r.words} ({show_number(r.percent, 2)} % of the present dose): down to "
+                f"{'' if r.offered else 'NOT OFFERED: '}Partial reduction to {r.words} "
+                f"({show_number(r.percent, 2)} % of the present dose): down to "
                 f"{show(p.to_mg_per_L, 'mg/L')} in {days_words(r.days)}; steady level {level_words(r.steady)}."
             )
         table = None
         if p.restarts:
+            one = p.restarts[0]
+            read = f"level on day {show_number(one.day, 2)}"
             heads = (
                 "Restart with",
                 "Steady level (mg/L)",
-                "On day",
-                "Restarted early (mg/L)",
-                "On time (mg/L)",
-                "Late (mg/L)",
-                "Lowest if late (mg/L)",
+                f"Restarted on day {show_number(one.on_time_day, 2)}, as planned: {read} (mg/L)",
+                f"Too early, on day {show_number(one.early_day, 2)}: {read} (mg/L)",
+                f"Too late, on day {show_number(one.late_day, 2)}: {read} (mg/L)",
+                "Lowest before the late restart (mg/L)",
             )
             table = Table(
                 heads,
@@ -456,16 +460,19 @@ def _acute(consult: Consult) -> list[Section]:
                     (
                         r.words,
                         short_band(r.steady),
-                        show_number(r.day, 2),
-                        short_band(r.early),
                         short_band(r.on_time),
+                        short_band(r.early),
                         short_band(r.late),
-                        short_band(r.lowest_late),
+                        r.lowest_late_words,
                     )
                     for r in p.restarts
                 ),
             )
-        sections.append(Section("The level is too high: reduce or pause", tuple(lines), table))
+        sections.append(
+            Section(
+                f"The level is too high: {'pause, or reduce' if p.toxic else 'reduce or pause'}", tuple(lines), table
+            )
+        )
     return sections
 
 

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 from dataclasses import dataclass
+from typing import Literal
 
 import numpy as np
 
@@ -12,7 +13,7 @@ from pkcalc.case import Case
 from pkcalc.estimate.result import Band, Estimate
 from pkcalc.forecast import TIME_DRAWS, bands, draws_of, fewer_draws
 from pkcalc.plan.candidates import Candidate, Setting
-from pkcalc.plan.present import Floats, Today
+from pkcalc.plan.present import Floats, Today, is_toxic
 from pkcalc.record import Record
 from pkcalc.units import show, show_number
 
@@ -20,6 +21,14 @@ SEIZURE_RISK = (
     "Stopping or pausing an antiseizure drug can bring on seizures, status epilepticus among them. Weigh that first; "
     "a partial reduction is the default, and a pause goes to a stated level in the upper range, never to zero."
 )
+#: The same where the level is at or above the critical one, or there are toxic signs.
+SEIZURE_RISK_TOXIC = (
+    "Stopping or pausing an antiseizure drug can bring on seizures, status epilepticus among them. Weigh that first. "
+    "Here the level is toxic or there are toxic signs: a pause to a stated level in the upper range comes first, never "
+    "to zero; a smaller dose alone takes longer."
+)
+#: Where the site states no limit of quantification, levels below this share of the target's low end are not told apart.
+LOWEST_SHARE = 0.1
 #: Longest pause that is followed [day].
 LONGEST_DAYS = 60.0
 #: Reductions and restart regimens shown.
@@ -33,20 +42,29 @@ class Reduction:
     """A smaller dose instead of a pause: days until the level has come down, and where it ends.
 
     days: until the level is at the stated one; +inf where it never gets there. percent: of the present dose.
+    offered: False where the table does not offer the same regimen (why_not says why).
     """
 
     words: str
     percent: float
     days: Band
     steady: Band
+    offered: bool = True
+    why_not: tuple[str, ...] = ()
+
+    @property
+    def marks(self) -> tuple[str, ...]:
+        return () if self.offered else ("NOT OFFERED",)
 
 
 @dataclass(frozen=True)
 class Restart:
     """A regimen to go on with after the pause.
 
-    early, on_time, late: level on the day named in `days` after the pause began, if restarted at half the pause, at its
-    median, and later than its upper end. lowest_late: the lowest level of the late restart, at its own beginning.
+    early, on_time, late: level on `day` of the pause (the day it is read, not one of restart), if restarted on
+    early_day (half the pause), on_time_day (its median) and late_day (after its upper end). lowest_late: the lowest
+    level of the late restart, at its own beginning; lowest_late_words: the same, without numbers too low to mean
+    anything.
     """
 
     words: str
@@ -56,6 +74,10 @@ class Restart:
     on_time: Band
     late: Band
     lowest_late: Band
+    early_day: float = 0.0
+    on_time_day: float = 0.0
+    late_day: float = 0.0
+    lowest_late_words: str = ""
 
 
 @dataclass(frozen=True)
@@ -65,6 +87,7 @@ class Pause:
     seizure_risk: named first. now: today's level. to_mg_per_L: the level at which the drug is given again. days: until
     then without any dose, per draw, by the closed form; with_absorption: the same with what is still being absorbed;
     None where nothing is. reductions: partial reductions. restarts: regimens to go on with. lines: the rest in words.
+    toxic: at or above the critical level, or toxic signs; first: what stands first then. restart_line: when to restart.
     """
 
     seizure_risk: str
@@ -75,6 +98,16 @@ class Pause:
     reductions: tuple[Reduction, ...]
     restarts: tuple[Restart, ...]
     lines: tuple[str, ...]
+    toxic: bool = False
+    restart_line: str = ""
+
+    @property
+    def first(self) -> Literal["pause", "reduction"]:
+        return "pause" if self.toxic else "reduction"
+
+    @property
+    def restart_days(self) -> Band:
+        return self.days if self.with_absorption is None else self.with_absorption
 
 
 def pause(case: Case, now: Today, setting: Setting, every: Sequence[Candidate]) -> Pause | None:
@@ -130,16 +163,44 @@ def pause(case: Case, now: Today, setting: Setting, every: Sequence[Candidate]) 
             f"{show_number(present.forecast.percent_per_percent, 2)} % less level in the end."
         )
     band = bands(days[None, :], few.weights)[0]
+    toxic = is_toxic(now, goal) or case.answer("toxic_signs") == "yes"
     return Pause(
-        seizure_risk=SEIZURE_RISK,
+        seizure_risk=SEIZURE_RISK_TOXIC if toxic else SEIZURE_RISK,
         now=level,
         to_mg_per_L=to,
         days=band,
         with_absorption=late,
-        reductions=_reductions(every, setting, few, start, to),
+        reductions=_reductions(every, setting, few, start, to, toxic=toxic),
         restarts=_restarts(every, setting, few, start, late or band),
         lines=tuple(lines),
+        toxic=toxic,
+        restart_line=_restart_line(to, late or band, setting),
     )
+
+
+def _restart_line(to: float, days: Band, setting: Setting) -> str:
+    """'Restart when the level is down to 20 mg/L: about day 2.6 (1.9 to 3.4).'"""
+    total = setting.scale.total(to)
+    reported = f" ({show(total, 'mg/L')} total as reported)" if abs(total / to - 1) > 0.005 else ""
+    level = f"Restart when the level is down to {show(to, 'mg/L')}{reported}"
+    if not np.isfinite(days.median):
+        return f"{level}; no day can be told, go by the levels."
+    high = show_number(days.high, 2) if np.isfinite(days.high) else "never"
+    return f"{level}: about day {show_number(days.median, 2)} ({show_number(days.low, 2)} to {high}) of the pause."
+
+
+def _quantified(level: Band, setting: Setting) -> str:
+    """A low level in words: numbers only as far down as they mean something."""
+    own = setting.site.quantification_limit_mg_per_L
+    limit = LOWEST_SHARE * setting.goal.low_mg_per_L if own is None else own / setting.scale.total(1.0)
+    below = f"below {show_number(limit)}" if own is None else "below quantification"
+
+    def said(value: float) -> str:
+        return below if value < limit else show_number(value)
+
+    if level.high < limit:
+        return below
+    return f"{said(level.median)} ({said(level.low)} to {said(level.high)})"
 
 
 def time_to_fall(estimate: Estimate, start_mg_per_L: Floats, to_mg_per_L: float) -> Floats:
@@ -182,16 +243,23 @@ def still_absorbing(estimate: Estimate, start_mg_per_L: Floats, to_mg_per_L: flo
 
 
 def _reductions(
-    every: Sequence[Candidate], setting: Setting, few: Estimate, start: Floats, to: float
+    every: Sequence[Candidate], setting: Setting, few: Estimate, start: Floats, to: float, *, toxic: bool
 ) -> tuple[Reduction, ...]:
-    """Smaller doses of the shelf, the largest first, whose steady level lies below the stated one."""
+    """Smaller doses of the shelf, the largest first, whose steady level lies below the stated one.
+
+    None that may itself end too high; with a toxic level none that may never get down.
+    """
     now = setting.present_mg_per_day
     if now is None:
         return ()
     fits = [
         c
         for c in every
-        if 0.4 * now <= c.rate_mg_per_day < now * (1 - 1e-9) and c.taken.steady.median < to and not c.proposed
+        if 0.4 * now <= c.rate_mg_per_day < now * (1 - 1e-9)
+        and c.taken.steady.median < to
+        and (c.taken.steady.high < to or not toxic)
+        and c.danger_at_plateau <= setting.site.stop_chance
+        and not c.proposed
     ]
     if not fits:
         return ()
@@ -213,6 +281,8 @@ def _reductions(
                 percent=100.0 * c.rate_mg_per_day / now,
                 days=bands(np.asarray(days)[None, :], few.weights)[0],
                 steady=c.forecast.steady,
+                offered=c.offered,
+                why_not=c.why_not,
             )
         )
     return tuple(found)
@@ -256,6 +326,7 @@ def _restarts(
         return ()
     early, planned, late = 0.5 * pause_days.median, pause_days.median, pause_days.high + LATE_DAYS
     day = late + 1.0
+    lowest = bands(_restarted(few, start, late, late, 0.0)[None, :], few.weights)[0]
     found = []
     for c in _spread_out(fits):
         levels = [_restarted(few, start, at, day, c.rate_mg_per_day) for at in (early, planned, late)]
@@ -267,7 +338,11 @@ def _restarts(
                 early=bands(levels[0][None, :], few.weights)[0],
                 on_time=bands(levels[1][None, :], few.weights)[0],
                 late=bands(levels[2][None, :], few.weights)[0],
-                lowest_late=bands(_restarted(few, start, late, late, 0.0)[None, :], few.weights)[0],
+                lowest_late=lowest,
+                early_day=early,
+                on_time_day=planned,
+                late_day=late,
+                lowest_late_words=_quantified(lowest, setting),
             )
         )
     return tuple(found)

@@ -9,7 +9,7 @@ from pkcalc.case import Case
 from pkcalc.drugs.profile import Profile
 from pkcalc.estimate.result import Band
 from pkcalc.forecast import forecast_rate
-from pkcalc.plan.candidates import Setting
+from pkcalc.plan.candidates import Setting, as_regimen, candidates
 from pkcalc.plan.present import present_course
 from pkcalc.plan.shelf import TUBE, Dispensable, dispensable, dispense_words
 from pkcalc.units import show, show_number
@@ -24,7 +24,8 @@ class Switch:
 
     exact_labelled_mg: labelled mg/day that would be equal. change_percent: of the active amount as dispensed.
     steady: on the central line; steady_low, steady_high: median at the two ends of how much of the form reaches the
-    body. lines: concentration, salt and tube in words.
+    body. lines: concentration, salt and tube in words. offered, why_not: as for every regimen: another form at the
+    amount that is too much now is too much as well.
     """
 
     form: str
@@ -36,6 +37,12 @@ class Switch:
     steady_low_mg_per_L: float
     steady_high_mg_per_L: float
     lines: tuple[str, ...]
+    offered: bool = True
+    why_not: tuple[str, ...] = ()
+
+    @property
+    def marks(self) -> tuple[str, ...]:
+        return () if self.offered else ("NOT OFFERED",)
 
 
 def switches(case: Case, setting: Setting, products: Sequence[str]) -> tuple[Switch, ...]:
@@ -71,10 +78,13 @@ def _switch(made: Dispensable, form_id: str, from_forms: Sequence[str], now: flo
         ).steady.median
         for share in (low, high)
     ]
+    words = dispense_words(made, profile)
+    row = (as_regimen(made, profile, setting.hours), words, words, False, False)
+    judged = candidates([], [row], setting)[0]
     change = 100.0 * (made.active_mg_per_day / now - 1.0)
     return Switch(
         form=form_id,
-        words=dispense_words(made, profile),
+        words=words,
         exact_labelled_mg=now / form.active_fraction,
         active_mg_per_day=made.active_mg_per_day,
         change_percent=change,
@@ -82,6 +92,8 @@ def _switch(made: Dispensable, form_id: str, from_forms: Sequence[str], now: flo
         steady_low_mg_per_L=ends[0],
         steady_high_mg_per_L=ends[1],
         lines=_lines(made, form_id, from_forms, profile),
+        offered=judged.offered,
+        why_not=judged.why_not,
     )
 
 

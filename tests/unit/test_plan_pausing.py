@@ -10,6 +10,7 @@ import pytest
 from scipy.integrate import solve_ivp
 
 from pkcalc import formulas
+from pkcalc.estimate.result import Band
 from pkcalc.plan import Today, pausing, switching
 from pkcalc.plan.candidates import candidates
 from pkcalc.plan.pausing import Pause, still_absorbing, time_to_fall
@@ -32,11 +33,65 @@ def pause(est: Any = None, **changes: Any) -> Pause:
 
 
 def test_the_seizure_risk_is_named_first() -> None:
-    assert pause().seizure_risk == (
+    high = pause(levels=[{**HIGH["levels"][0], "value": "25 mg/L"}])
+    assert high.seizure_risk == (
         "Stopping or pausing an antiseizure drug can bring on seizures, status epilepticus among them. Weigh that "
         "first; a partial reduction is the default, and a pause goes to a stated level in the upper range, never to "
         "zero."
     )
+    assert high.first == "reduction"
+
+
+@pytest.mark.parametrize(("level", "signs"), [("34 mg/L", "no"), ("25 mg/L", "yes")])
+def test_a_pause_comes_first_for_a_toxic_level_or_toxic_signs(level: str, signs: str) -> None:
+    found = pause(levels=[{**HIGH["levels"][0], "value": level}], context={"toxic_signs": signs})
+    assert found.first == "pause"
+    assert found.seizure_risk == (
+        "Stopping or pausing an antiseizure drug can bring on seizures, status epilepticus among them. Weigh that "
+        "first. Here the level is toxic or there are toxic signs: a pause to a stated level in the upper range comes "
+        "first, never to zero; a smaller dose alone takes longer."
+    )
+
+
+def test_when_to_restart_is_one_line_and_the_day_read_is_not_the_day_of_restart() -> None:
+    found = pause()
+    days = found.days
+    assert found.restart_days == days
+    assert found.restart_line == (
+        f"Restart when the level is down to 20 mg/L: about day {days.median:.2g} ({days.low:.2g} to {days.high:.2g}) "
+        "of the pause."
+    )
+    for r in found.restarts:
+        assert r.on_time_day == days.median
+        assert r.early_day < r.on_time_day < r.late_day < r.day
+
+
+def test_levels_too_low_to_mean_anything_have_no_digits() -> None:
+    s = setting()
+    assert pausing._quantified(Band(0.0724, 2.5e-7, 9.11), s) == "below 1 (below 1 to 9.11)"
+    assert pausing._quantified(Band(0.07, 2.5e-7, 0.4), s) == "below 1"
+    measured = replace(s, site=replace(s.site, quantification_limit_mg_per_L=2.5))
+    assert pausing._quantified(Band(0.0724, 2.5e-7, 9.11), measured) == (
+        "below quantification (below quantification to 9.11)"
+    )
+
+
+def test_a_reduction_that_may_never_get_down_is_not_shown_for_a_toxic_level() -> None:
+    wide = estimate(vmax=405.0, spread=(0.2, 0.4, 0.15))
+    found = pause(wide)
+    assert all(np.isfinite(r.days.high) for r in found.reductions)
+    assert all(r.offered or r.why_not for r in found.reductions)
+
+
+def test_another_form_of_a_dose_that_is_too_much_is_not_offered() -> None:
+    toxic = plan(None, exact(vmax=350.0), **HIGH)
+    assert toxic.present is not None
+    assert not toxic.present.offered
+    assert toxic.switches
+    for s in toxic.switches:
+        assert not s.offered
+        assert s.marks == ("NOT OFFERED",)
+        assert s.why_not[0].startswith("Taken in full, the chance of a level above 30 mg/L")
 
 
 def test_the_pause_is_the_closed_form() -> None:
