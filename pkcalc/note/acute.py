@@ -165,10 +165,12 @@ def _restart(consult: Consult) -> list[str]:
     if pause.restarts:
         said = "; ".join(f"{r.words}, steady level {short_band(r.steady)} mg/L" for r in pause.restarts)
         lines.append(f"To choose from for then (none is offered before the level is down): {said}.")
-    quickest = min(pause.reductions, key=lambda r: r.days.median, default=None)
+    offered = [r for r in pause.reductions if r.offered] or list(pause.reductions)
+    quickest = min(offered, key=lambda r: r.days.median, default=None)
     if quickest is not None:
+        mark = "" if quickest.offered else f" ({NOT_OFFERED} while the level is so high)"
         lines.append(
-            f"If only reduced, to {quickest.words} ({show_number(quickest.percent, 2)} % of the present dose): "
+            f"If only reduced{mark}, to {quickest.words} ({show_number(quickest.percent, 2)} % of the present dose): "
             f"{days_words(quickest.days)} to the same level."
         )
     return lines

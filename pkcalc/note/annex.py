@@ -12,10 +12,12 @@ from pkcalc.dosing import active_mg
 from pkcalc.estimate.lines import LineFailure
 from pkcalc.estimate.result import Band, Estimate
 from pkcalc.note import hours, populations
+from pkcalc.note.acute import is_offered, limited, marked, too_high
 from pkcalc.note.front import chosen_candidate, forecast_lines, spoken_for
 from pkcalc.note.populations import populations_compared
 from pkcalc.note.words import (
     FORECAST_HEADS,
+    NOT_OFFERED,
     Section,
     Table,
     chances_words,
@@ -39,15 +41,17 @@ __all__ = ["DANGER_HEADS", "annex", "danger_row", "estimate_lines", "populations
 
 def annex(consult: Consult) -> tuple[Section, ...]:
     """Every part of the annex that has something to say."""
+    pressing = too_high(consult) is not None
     parts = [
         _patient(consult),
         _doses(consult),
         _levels(consult),
         *_then_and_now(consult),
         *_estimate(consult),
+        *(_acute(consult) if pressing else ()),
         *_regimens(consult),
         *hours.sections(consult),
-        *_acute(consult),
+        *(() if pressing else _acute(consult)),
         *_next(consult),
         *_populations(consult),
         *_workings(consult),
@@ -143,7 +147,7 @@ def _levels(consult: Consult) -> Section:
         if not o.readable:
             text += f"; no single reading: {show_number(o.low_mg_per_L)} to {show(o.high_mg_per_L, 'mg/L')} possible"
         elif o.working_mg_per_L != level.reported_mg_per_L:
-            text += f"; at normal binding {show(o.working_mg_per_L, 'mg/L')}"
+            text += f"; at normal binding {limited(o, o.working_mg_per_L)}"
         lines.append(text + ".")
         lines += [f"   {step}" for step in o.steps]
         lines += [f"   {caveat}" for caveat in o.caveats]
@@ -255,10 +259,11 @@ def _estimate(consult: Consult) -> list[Section]:
     sections = [Section("What it says about this patient", tuple(lines))]
     if consult.chosen is not None and consult.chosen.fit:
         names = {o.level.index: o.name for o in consult.observations}
+        limits = {o.level.index: f"{o.censored} " for o in consult.observations if o.censored is not None}
         rows = tuple(
             (
                 names.get(f.level, f"Level {f.level + 1}"),
-                show_number(f.observed_mg_per_L),
+                limits.get(f.level, "") + show_number(f.observed_mg_per_L),
                 short_band(f.predicted),
                 _signed(f.standardised_residual),
             )
@@ -283,8 +288,9 @@ def _estimate(consult: Consult) -> list[Section]:
 DANGER_HEADS = (
     "Regimen",
     "Every dose taken: steady level (mg/L)",
-    "Above critical or no steady state",
-    "No steady state",
+    "Above critical or no steady state, once settled",
+    "With the next feasible draw counted in",
+    "No steady state, once settled",
     "Trough to peak (mg/L)",
     "Level on named days, central (mg/L)",
     "Change of dose",
@@ -303,8 +309,9 @@ def danger_row(shown: Shown) -> tuple[str, ...]:
         else "not worked out"
     )
     return (
-        shown.words,
+        shown.words if shown.offered else f"{shown.words} ({NOT_OFFERED})",
         short_band(shown.taken.steady),
+        percent(shown.taken.above_critical),
         percent(shown.danger),
         percent(shown.taken.no_steady_state),
         swing,
@@ -320,18 +327,17 @@ def _regimens(consult: Consult) -> list[Section]:
     for shown in consult.proposed:
         if chosen is not None and shown.regimen == chosen.regimen:
             continue
-        f = shown.forecast
+        f, may = shown.forecast, is_offered(shown, consult)
         lines = [
-            f"{regimen_words(shown)} = {show(f.rate_mg_per_day, 'mg/day', 4)} as active drug.",
+            f"{regimen_words(shown) if may else f'{NOT_OFFERED}: {shown.words}'} = "
+            f"{show(f.rate_mg_per_day, 'mg/day', 4)} as active drug.",
+            *(sentence(f"Not offered: {w}") for w in shown.why_not),
             *forecast_lines(shown, consult),
             f"Central chances: {chances_words(f)}.",
         ]
         if np.isfinite(f.percent_per_percent):
             lines.append(f"At this point 1 % more dose is {show_number(f.percent_per_percent, 2)} % more level.")
-        if not shown.offered:
-            lines.append("NOT OFFERED.")
-            lines += [sentence(w) for w in shown.why_not]
-        sections.append(Section("Proposed regimen", tuple(lines)))
+        sections.append(Section("Proposed regimen" if may else f"Proposed regimen: {NOT_OFFERED}", tuple(lines)))
     if consult.table:
         both = (*consult.table, *(s for s in consult.proposed if s not in consult.table))
         ordered = sorted(both, key=lambda s: s.forecast.rate_mg_per_day)
@@ -500,9 +506,15 @@ def _load(load: Load, consult: Consult) -> Section:
             + "."
         )
     lines += list(load.notes)
-    if not load.offered:
-        lines += ["NOT OFFERED.", *(sentence(w) for w in load.why_not)]
-    return Section(f"Load or top-up: {form.words}", tuple(sentence(x) for x in lines))
+    if load.offered:
+        return Section(f"Load or top-up: {form.words}", tuple(sentence(x) for x in lines))
+    # whoever copies one line of an order must copy its mark with it
+    refused = [
+        f"{NOT_OFFERED}: {' '.join(sentence(w) for w in load.why_not)}",
+        *(f"{NOT_OFFERED}, by calculation only: {sentence(x)}" for x in load.order),
+        *lines[len(load.order) :],
+    ]
+    return Section(f"Load or top-up, {NOT_OFFERED}: {form.words}", tuple(sentence(x) for x in refused))
 
 
 def _next(consult: Consult) -> list[Section]:
@@ -529,12 +541,18 @@ def _next(consult: Consult) -> list[Section]:
         "",
     )
     lines = [
-        f"For {found.regimen_words}. Spread of the forecast now (standard deviation of the log steady level) "
-        f"{show_number(100 * found.before, 2)} %; what each draw would leave of it:",
+        f"For {_named(found.regimen_words, consult)}. Spread of the forecast now (standard deviation of the log steady "
+        f"level) {show_number(100 * found.before, 2)} %; what each draw would leave of it:",
         *found.why,
         f"90 % of the way to the steady level takes {days_words(found.settled_days)}.",
     ]
     return [Section("When to look again", tuple(lines), Table(heads, rows))]
+
+
+def _named(words: str, consult: Consult) -> str:
+    """A regimen's words with the mark of the regimen so called."""
+    shown = spoken_for(consult)
+    return marked(shown, consult) if shown is not None and shown.words == words else words
 
 
 def _populations(consult: Consult) -> list[Section]:
@@ -557,11 +575,11 @@ def _populations(consult: Consult) -> list[Section]:
         "Vmax (mg/day)",
         "Km (mg/L)",
         "Steady level, central (mg/L)",
-        "Every dose taken: above critical or no steady state",
+        "Every dose taken, once settled: above critical or no steady state",
     )
     said = (
-        f"What the same record and levels say under other published populations, for {shown.words if shown else ''}, at "
-        "normal binding. Where these rows differ much, the population matters more than the levels.",
+        "What the same record and levels say under other published populations, for "
+        f"{marked(shown, consult) if shown else ''}, at normal binding. Where these rows differ much, the population matters more than the levels.",
     )
     return [Section("Populations compared", said, Table(heads, rows))]
 

@@ -27,7 +27,7 @@ from pkcalc.dosing import active_mg
 from pkcalc.estimate.intake import taken_on_average
 from pkcalc.estimate.posterior import WHOLE_RECORD, with_population_path, written_out
 from pkcalc.forecast import fewer_draws
-from pkcalc.note.words import short_words
+from pkcalc.note.words import NOT_OFFERED, mark_of, short_words
 from pkcalc.units import show, show_number
 
 Floats = NDArray[np.float64]
@@ -83,6 +83,10 @@ def finish(name: str, title: str, text: str, layers: Sequence[Any], case: Case, 
     chart = chart.configure_title(fontSize=13, anchor="start").configure_view(stroke="#AAAAAA")
     spec = chart.to_dict()
     spec["background"] = "white"
+    # a plain minus and a comma from 1,000 on every axis
+    spec["config"]["locale"] = {
+        "number": {"decimal": ".", "thousands": ",", "grouping": [3], "currency": ["", ""], "minus": "-"}
+    }
     spec["description"] = text
     return Chart(name, title, text, spec)
 
@@ -497,7 +501,7 @@ def regimens_chart(consult: Consult, shown: Sequence[Shown]) -> Chart | None:
     order: list[str] = []
     said: list[str] = []
     for s in unique.values():
-        mark = "present" if s.present else "not offered" if not s.offered else "proposed" if s.proposed else ""
+        mark = mark_of(s).replace("not offered", NOT_OFFERED)
         name = f"{mark + ': ' if mark else ''}{short_words(s.words)}"
         order.append(name)
         for line, f in (("central", s.forecast), ("every dose taken", s.taken)):

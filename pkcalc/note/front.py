@@ -14,6 +14,7 @@ from pkcalc.note import hours
 from pkcalc.note.acute import daily_levels, is_offered, limited, marked, now_lines, too_high, used_level
 from pkcalc.note.words import (
     NOT_OFFERED,
+    NOW,
     VALID_UNTIL,
     Section,
     as_reported,
@@ -36,7 +37,7 @@ PASTE_LINES, PASTE_WIDTH = 25, 78
 def page_one(consult: Consult) -> tuple[Section, ...]:
     """The parts of page one, in the order of the day."""
     parts = (
-        Section("What to do now", now_lines(consult)),
+        Section(NOW, now_lines(consult)),
         Section("Question", _question(consult)),
         Section("Patient's state", _state(consult)),
         Section("Verdict on the level", verdict(consult)),

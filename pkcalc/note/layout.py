@@ -3,10 +3,13 @@
 from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
-from typing import Any
+from typing import Any, Literal
 
 from pkcalc.errors import Caution
 from pkcalc.note.document import Document, Section
+from pkcalc.note.words import NOW
+
+Detail = Literal["full", "text", "short"]
 
 NAMES = {"stop": "STOP", "warn": "WARNING", "note": "NOTE"}
 
@@ -55,6 +58,20 @@ def section_data(section: Section) -> dict[str, Any]:
     }
 
 
+def first_and_last(text: str) -> str:
+    """The first sentence and the last one, which in our cautions says what to do; and where the rest stands."""
+    first = first_sentence(text)
+    rest = text[len(first) :].strip()
+    if not rest:
+        return text
+    sentences = []
+    while rest:
+        one = first_sentence(rest)
+        sentences.append(one)
+        rest = rest[len(one) :].strip()
+    return f"{first} {sentences[-1]}" + (" (In full in the annex.)" if len(sentences) > 1 else "")
+
+
 def document_data(document: Document) -> dict[str, Any]:
     """Document -> data; charts and teaching are added by the printer."""
     return {
@@ -62,7 +79,8 @@ def document_data(document: Document) -> dict[str, Any]:
         "demonstration": document.demonstration,
         "urgent": document.urgent,
         "cautions": [caution_data(c, caution_text(c)) for c in document.cautions],
-        "front": [section_data(s) for s in document.front],
+        "now": [section_data(s) for s in document.front if s.title == NOW],
+        "front": [section_data(s) for s in document.front if s.title != NOW],
         "sections": [section_data(s) for s in document.sections],
         "paste": "\n".join(document.paste),
         "signatures": list(document.signatures),
@@ -71,12 +89,18 @@ def document_data(document: Document) -> dict[str, Any]:
     }
 
 
-def with_first_cautions(data: Mapping[str, Any], document: Document) -> dict[str, Any]:
-    """For one printed page: stops in full, warnings by their first sentence, all in full in the annex."""
+def _told(caution: Caution, detail: Detail) -> str:
+    if detail == "short":
+        return first_and_last(caution.text)
+    return caution_text(caution) if detail == "full" else caution.text
+
+
+def with_first_cautions(data: Mapping[str, Any], document: Document, *, detail: Detail = "full") -> dict[str, Any]:
+    """For one printed page: stops always in full; warnings in full, by their text, or by what to know and do."""
     stops = [c for c in document.cautions if c.severity == "stop"]
     warnings = [c for c in document.cautions if c.severity == "warn"]
     first = [caution_data(c, caution_text(c)) for c in stops]
-    first += [caution_data(c, first_sentence(c.text)) for c in warnings]
+    first += [caution_data(c, _told(c, detail)) for c in warnings]
     rest = [c for c in document.cautions if c.severity != "stop"]
     return {
         **data,

@@ -13,18 +13,27 @@ from pkcalc.consult import RESULTS_DATE, Consult
 from pkcalc.errors import PkcalcError
 from pkcalc.note.charts import Chart, charts
 from pkcalc.note.document import compose
-from pkcalc.note.layout import document_data, section_data, with_first_cautions
+from pkcalc.note.layout import Detail, document_data, section_data, with_first_cautions
 from pkcalc.note.lessons import lesson
 
-#: Sizes of page one tried in turn, so that it is one page (points).
-SIZES = ("10", "9.5", "9", "8.5", "8", "7.5", "7")
+#: How much of each warning page one tells, and the sizes tried in turn with it (points), so that it is one page:
+#: whole as long as it can be read well.
+DETAILS: tuple[tuple[Detail, tuple[str, ...]], ...] = (
+    ("full", ("10", "9.5", "9", "8.5")),
+    ("text", ("9", "8.5", "8")),
+    ("short", ("8.5", "8", "7.5", "7")),
+)
 FONT = "Libertinus Serif"
+
+
+class PageOneTooLongError(PkcalcError):
+    """Page one does not fit on one page at any of the sizes tried."""
 
 
 def render_pdf(consult: Consult) -> bytes:
     """Consult -> PDF with page one on one page and everything else behind it. The same consult gives the same bytes."""
     document = compose(consult)
-    data: dict[str, Any] = with_first_cautions(document_data(document), document)
+    data: dict[str, Any] = document_data(document)
     inputs: dict[str, str] = {}
     data["charts"] = _charts(charts(consult), inputs, 92)
     teaching = lesson(consult)
@@ -35,8 +44,15 @@ def render_pdf(consult: Consult) -> bytes:
             "charts": _charts(teaching.charts, inputs, 72),
             "events": [section_data(s) for s in teaching.events],
         }
-    inputs["note"] = json.dumps(data, ensure_ascii=False)
-    return compile_pdf("note.typ", inputs, SIZES)
+    for detail, sizes in DETAILS[:-1]:
+        inputs["note"] = json.dumps(with_first_cautions(data, document, detail=detail), ensure_ascii=False)
+        try:
+            return compile_pdf("note.typ", inputs, sizes)
+        except PageOneTooLongError:
+            continue
+    detail, sizes = DETAILS[-1]
+    inputs["note"] = json.dumps(with_first_cautions(data, document, detail=detail), ensure_ascii=False)
+    return compile_pdf("note.typ", inputs, sizes)
 
 
 def _charts(found: tuple[Chart, ...], inputs: dict[str, str], width: int) -> list[dict[str, Any]]:
@@ -48,9 +64,7 @@ def _charts(found: tuple[Chart, ...], inputs: dict[str, str], width: int) -> lis
     return rows
 
 
-def compile_pdf(
-    template: str, inputs: dict[str, str], sizes: tuple[str, ...], moment: datetime | None = None
-) -> bytes:
+def compile_pdf(template: str, inputs: dict[str, str], sizes: tuple[str, ...], moment: datetime | None = None) -> bytes:
     """Template and data -> PDF bytes, at the largest size at which page one is one page.
 
     moment: stamped into the file; the date of the results where not given, so that the bytes repeat.
@@ -64,4 +78,4 @@ def compile_pdf(
             found = compiler.compile(source, format="pdf", pdf_standards=["ua-1"], timestamp=stamp)
             assert isinstance(found, bytes)
             return found
-    raise PkcalcError("The first page of the note does not fit on one page; nothing was printed.")
+    raise PageOneTooLongError("The first page of the note does not fit on one page; nothing was printed.")

@@ -6,6 +6,7 @@ import textwrap
 
 from pkcalc.errors import Caution
 from pkcalc.note.document import Document, Section, Table
+from pkcalc.note.words import NOW
 
 WIDTH = 100
 _NAMES = {"stop": "STOP", "warn": "WARNING", "note": "NOTE"}
@@ -18,12 +19,14 @@ def render(document: Document) -> str:
         out += ["*" * WIDTH, document.demonstration.center(WIDTH).rstrip(), "*" * WIDTH, ""]
     out += [document.title, "=" * len(document.title), ""]
     out += [*textwrap.wrap(document.urgent, WIDTH), ""]
+    for section in document.front:
+        out += _section(section) if section.title == NOW else []
     for caution in document.cautions:
         out += caution_lines(caution)
     if document.cautions:
         out.append("")
     for section in document.front:
-        out += _section(section)
+        out += _section(section) if section.title != NOW else []
     out += ["Annex", "=====", ""]
     for section in document.sections:
         out += _section(section)

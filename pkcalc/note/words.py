@@ -24,6 +24,8 @@ DEFERS = (
 DEMONSTRATION = "DEMONSTRATION - invented, not a patient, not for clinical use"
 NO_STEADY_STATE = "no steady state"
 NOT_OFFERED = "NOT OFFERED"
+#: Title of the part that stands before everything else where a level is too high.
+NOW = "What to do now"
 VALID_UNTIL = (
     "Valid until the next level, or until any change of dose, form, tube feed, other drug, albumin or kidney or liver "
     "function, whichever comes first."
