@@ -818,6 +818,13 @@ def check_case(file: CaseFile) -> Case:
     dialysis = tuple(s for i, x in enumerate(file.dialysis) if (s := _session(i, x, check, profile)) is not None)
     albumin = _albumin(file.albumin, "Albumin", check)
     context = _context(file, check)
+    if dialysis and _says(context, "extracorporeal", "no"):
+        check.say(
+            "Context, extracorporeal",
+            "no was answered although dialysis sessions are given",
+            "yes, or no session",
+            "Correct one of them",
+        )
     target = _target(file.target, check, profile)
     aim = _level_value(file.aim, "Aim", check, profile)
     if aim is not None and target is not None and target.kind == "total" and not target.holds(aim):

@@ -60,6 +60,8 @@ SESSION = {"from": "2026-06-02 13:00", "until": "2026-06-02 17:00", "clearance":
 def text(**changes: Any) -> str:
     """The ethanol case as JSON with top-level parts replaced; None removes one."""
     data = copy.deepcopy(ETHANOL)
+    if changes.get("dialysis"):
+        data["context"] = {**NO, "extracorporeal": "yes"}
     for key, value in changes.items():
         if value is None:
             data.pop(key, None)

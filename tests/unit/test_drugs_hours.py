@@ -159,6 +159,13 @@ def test_a_session_that_cannot_be_is_refused(session: dict[str, str], message: s
     assert refusals(dialysis=[session]) == [message]
 
 
+def test_sessions_and_the_answer_no_contradict_each_other() -> None:
+    assert refusals(dialysis=[SESSION], context=ETHANOL["context"]) == [
+        "Context, extracorporeal: no was answered although dialysis sessions are given. Allowed: yes, or no session. "
+        "Correct one of them."
+    ]
+
+
 def test_a_session_needs_a_start() -> None:
     (problem,) = refusals(dialysis=[{"until": "2026-06-02 17:00"}])
     assert problem.startswith("Dialysis session 1, from")
