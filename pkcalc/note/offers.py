@@ -10,7 +10,7 @@ from pkcalc.estimate.result import Band
 from pkcalc.forecast import Forecast
 from pkcalc.plan import Candidate, Plan
 from pkcalc.plan.loading import Load
-from pkcalc.plan.nextlevel import Draw, NextLevel
+from pkcalc.plan.nextlevel import Action, Draw, NextLevel
 from pkcalc.plan.pausing import Pause
 from pkcalc.plan.switching import Switch
 
@@ -73,6 +73,8 @@ def candidate_data(c: Candidate) -> dict[str, Any]:
         "offered": c.offered,
         "why_not": list(c.why_not),
         "danger": _number(c.danger),
+        "chance_too_high_at_plateau": _number(c.danger_at_plateau),
+        "chance_too_high_at_next_draw": None if c.danger_at_draw is None else _number(c.danger_at_draw),
         "past_intake_carried_on": _line(c.forecast),
         "every_dose_taken": _line(c.taken),
         "trough_mg_per_L": _band(c.trough),
@@ -114,6 +116,8 @@ def _load(load: Load) -> dict[str, Any]:
 def _pause(p: Pause) -> dict[str, Any]:
     return {
         "seizure_risk": p.seizure_risk,
+        "first": p.first,
+        "restart": p.restart_line,
         "level_today_mg_per_L": _band(p.now),
         "until_level_mg_per_L": _number(p.to_mg_per_L),
         "days": _days_band(p.days),
@@ -124,6 +128,8 @@ def _pause(p: Pause) -> dict[str, Any]:
                 "percent_of_present": _number(r.percent),
                 "days_until_level": _days_band(r.days),
                 "steady_level_normal_binding_mg_per_L": _band(r.steady),
+                "offered": r.offered,
+                "why_not": list(r.why_not),
             }
             for r in p.reductions
         ],
@@ -132,6 +138,9 @@ def _pause(p: Pause) -> dict[str, Any]:
                 "words": r.words,
                 "steady_level_normal_binding_mg_per_L": _band(r.steady),
                 "day": _days(r.day),
+                "restarted_early": {"day": _days(r.early_day)},
+                "restarted_on_time": {"day": _days(r.on_time_day)},
+                "restarted_late": {"day": _days(r.late_day)},
                 "level_restarted_early_mg_per_L": _band(r.early),
                 "level_restarted_on_time_mg_per_L": _band(r.on_time),
                 "level_restarted_late_mg_per_L": _band(r.late),
@@ -154,6 +163,8 @@ def _switch(s: Switch) -> dict[str, Any]:
         "median_at_least_absorbed_mg_per_L": _number(s.steady_low_mg_per_L),
         "median_at_most_absorbed_mg_per_L": _number(s.steady_high_mg_per_L),
         "lines": list(s.lines),
+        "offered": s.offered,
+        "why_not": list(s.why_not),
     }
 
 
@@ -169,6 +180,19 @@ def _draw(d: Draw | None) -> dict[str, Any] | None:
     }
 
 
+def _action(a: Action | None) -> dict[str, Any] | None:
+    if a is None:
+        return None
+    low = a.low_mg_per_L_reported
+    return {
+        "level": a.scale,
+        "call_above_as_reported_mg_per_L": _number(a.high_mg_per_L_reported),
+        "above_from": a.high_from,
+        "low_as_reported_mg_per_L": None if low is None else _number(low),
+        "words": a.words,
+    }
+
+
 def _next(n: NextLevel) -> dict[str, Any]:
     return {
         "regimen": n.regimen_words,
@@ -177,6 +201,10 @@ def _next(n: NextLevel) -> dict[str, Any]:
         "safety": _draw(n.safety),
         "curve": [_draw(d) for d in n.draws],
         "settled_days": _days_band(n.settled_days),
+        "no_draw_plan_because": n.none_because,
+        "line": _action(n.line),
+        "safety_line": _action(n.safety_line),
+        "line_with_load": _action(n.with_load),
         "action": n.action,
         "safety_action": n.safety_action,
         "why": list(n.why),

@@ -100,6 +100,8 @@ _DEFINITIONS: dict[str, dict[str, Any]] = {
             "offered": YES_NO,
             "why_not": LINES,
             "danger": SHARE,
+            "chance_too_high_at_plateau": SHARE,
+            "chance_too_high_at_next_draw": _or_null(SHARE),
             "past_intake_carried_on": _ref("line"),
             "every_dose_taken": _ref("line"),
             "trough_mg_per_L": _or_null(BAND),
@@ -138,6 +140,8 @@ _DEFINITIONS: dict[str, dict[str, Any]] = {
     "pause": _object(
         {
             "seizure_risk": TEXT,
+            "first": TEXT,
+            "restart": TEXT,
             "level_today_mg_per_L": BAND,
             "until_level_mg_per_L": NUMBER,
             "days": DAYS_BAND,
@@ -149,6 +153,8 @@ _DEFINITIONS: dict[str, dict[str, Any]] = {
                         "percent_of_present": NUMBER,
                         "days_until_level": DAYS_BAND,
                         "steady_level_normal_binding_mg_per_L": BAND,
+                        "offered": YES_NO,
+                        "why_not": LINES,
                     }
                 )
             ),
@@ -158,6 +164,9 @@ _DEFINITIONS: dict[str, dict[str, Any]] = {
                         "words": TEXT,
                         "steady_level_normal_binding_mg_per_L": BAND,
                         "day": DAYS,
+                        "restarted_early": _object({"day": DAYS}),
+                        "restarted_on_time": _object({"day": DAYS}),
+                        "restarted_late": _object({"day": DAYS}),
                         "level_restarted_early_mg_per_L": BAND,
                         "level_restarted_on_time_mg_per_L": BAND,
                         "level_restarted_late_mg_per_L": BAND,
@@ -179,6 +188,8 @@ _DEFINITIONS: dict[str, dict[str, Any]] = {
             "median_at_least_absorbed_mg_per_L": LEVEL,
             "median_at_most_absorbed_mg_per_L": LEVEL,
             "lines": LINES,
+            "offered": YES_NO,
+            "why_not": LINES,
         }
     ),
     "draw": _object(
@@ -190,6 +201,16 @@ _DEFINITIONS: dict[str, dict[str, Any]] = {
             "expected_level_as_reported_mg_per_L": BAND,
         }
     ),
+    "action": _object(
+        {
+            "level": TEXT,
+            "call_above_as_reported_mg_per_L": NUMBER,
+            "above_from": TEXT,
+            "low_as_reported_mg_per_L": _or_null(NUMBER),
+            "words": TEXT,
+        },
+        words="From which level as reported on to call: above (or at the critical level), and below.",
+    ),
     "next_level": _object(
         {
             "regimen": TEXT,
@@ -198,6 +219,10 @@ _DEFINITIONS: dict[str, dict[str, Any]] = {
             "safety": _or_null(_ref("draw")),
             "curve": _list(_ref("draw")),
             "settled_days": DAYS_BAND,
+            "no_draw_plan_because": TEXT,
+            "line": _ref("action"),
+            "safety_line": _or_null(_ref("action")),
+            "line_with_load": _or_null(_ref("action")),
             "action": TEXT,
             "safety_action": TEXT,
             "why": LINES,

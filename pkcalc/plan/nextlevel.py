@@ -240,8 +240,11 @@ def next_level(asked: Asked) -> NextLevel | None:
         with_load = other.line if other is not None else None
         if with_load is not None:
             why.append(f"Where the load is given: {with_load.words}")
-    why += [*asked.notes, _meaning(settled_days, rising=rises[0])]
-    line = daily_line(asked) if is_toxic(asked.now, asked.goal) else action_line(chosen, asked, rises=rises)
+    why += asked.notes
+    toxic = is_toxic(asked.now, asked.goal)
+    if not toxic:
+        why.append(_meaning(settled_days, rising=rises[0]))
+    line = daily_line(asked) if toxic else action_line(chosen, asked, rises=rises)
     safety_line = action_line(safety, asked, rises=rises) if safety is not None else None
     return NextLevel(
         regimen_words=asked.words,

@@ -164,13 +164,16 @@ def pause(case: Case, now: Today, setting: Setting, every: Sequence[Candidate]) 
         )
     band = bands(days[None, :], few.weights)[0]
     toxic = is_toxic(now, goal) or case.answer("toxic_signs") == "yes"
+    reductions = _reductions(every, setting, few, start, to, toxic=toxic)
+    if refused := next((r for r in reductions if not r.offered), None):
+        lines.append(f"Why a reduction is marked not offered: {' '.join(refused.why_not)}")
     return Pause(
         seizure_risk=SEIZURE_RISK_TOXIC if toxic else SEIZURE_RISK,
         now=level,
         to_mg_per_L=to,
         days=band,
         with_absorption=late,
-        reductions=_reductions(every, setting, few, start, to, toxic=toxic),
+        reductions=reductions,
         restarts=_restarts(every, setting, few, start, late or band),
         lines=tuple(lines),
         toxic=toxic,

@@ -302,3 +302,10 @@ def test_no_draw_day_in_reach() -> None:
     assert never.next_level is None
     assert never.no_next_level == "No draw day of the laboratory falls within the next two weeks."
     assert PLAIN["now"] == "2026-12-01 10:00"
+
+
+def test_one_spread_is_said_in_one_way() -> None:
+    found = next_level(asked())
+    assert found is not None
+    now, then = (f"{100 * x:.2g} %" for x in (found.before, found.chosen.spread))
+    assert f"from a spread of {now} to {then} (standard deviation of its logarithm)" in found.why[0]
