@@ -255,7 +255,7 @@ def _chosen(consult: Consult) -> tuple[str, ...]:
     if consult.projection is not None:
         lines += hours.front_lines(consult, consult.projection)
     elif consult.stopped or consult.plan is None:
-        lines.append("No regimen can be forecast: see the stops.")
+        lines.append(consult.refusals.get("projection") or "No regimen can be forecast: see the stops.")
         if case.chosen is not None:
             lines.append(
                 f"Written by the pharmacist: {case.chosen.words(consult.profile)}. No forecast stands behind it."

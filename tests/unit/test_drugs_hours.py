@@ -390,3 +390,11 @@ def test_a_load_is_never_above_what_is_published_or_allowed(weight: str, most_g:
     assert found.load is not None
     assert found.load.mg.median == pytest.approx(1000 * most_g)
     assert found.load.words == f"held at {most_g:g} g, the most that is published or allowed"
+
+
+def test_why_nothing_is_projected_stands_on_page_one() -> None:
+    said = note_text(run_consult(ethanol(now=None)))
+    assert (
+        "No time of the consult is given. Without it nobody can tell where the level is now or how fast it moves. Give the "
+        "time of the consult."
+    ) in said.split("Annex")[0]
