@@ -198,9 +198,7 @@ class Table:
             if v < 0 and kind != "correlation":
                 raise self.fail(f"{key}.value", f"{v} is negative", "Check the number")
             if v == 0 and not zero:
-                raise self.fail(
-                    f"{key}.value", "0 was found", "Give a number above 0, or leave the entry out"
-                )
+                raise self.fail(f"{key}.value", "0 was found", "Give a number above 0, or leave the entry out")
         if count is not None and (len(values) != count or many != (count != 1)):
             shape = "one number" if count == 1 else f"a list of {count} numbers"
             raise self.fail(f"{key}.value", f"{len(values)} found where {shape} is needed", f"Write {shape}")
@@ -225,9 +223,7 @@ class Table:
         """One number in the canonical unit of `kind`, within low to high (both included)."""
         value = self._numbers(key, kind, 1, zero)[0]
         if (low is not None and value < low) or (high is not None and value > high):
-            allowed = (
-                f"from {show_number(low or 0.0)} to {show_number(high)}" if high is not None else "larger"
-            )
+            allowed = f"from {show_number(low or 0.0)} to {show_number(high)}" if high is not None else "larger"
             raise self.fail(f"{key}.value", "outside what is possible", f"It must be {allowed}")
         return value
 
@@ -241,9 +237,7 @@ class Table:
         """A range, low before high."""
         low, high = self._numbers(key, kind, 2, zero)
         if low > high:
-            raise self.fail(
-                f"{key}.value", "the first is larger than the second", "Write the lower end first"
-            )
+            raise self.fail(f"{key}.value", "the first is larger than the second", "Write the lower end first")
         return low, high
 
     def pair(self, key: str, kind: str) -> tuple[float, float]:
@@ -266,11 +260,7 @@ class Table:
         """A sourced list of words."""
         entry = self.fact(key)
         value = entry.get("value")
-        if (
-            not isinstance(value, list)
-            or not value
-            or not all(isinstance(v, str) and v.strip() for v in value)
-        ):
+        if not isinstance(value, list) or not value or not all(isinstance(v, str) and v.strip() for v in value):
             raise self.fail(f"{key}.value", "not a list of texts", 'Write ["...", "..."]')
         self._record(key, entry, tuple(value), "")
         return tuple(value)
@@ -301,6 +291,4 @@ class Table:
             if key not in self.known:
                 near = difflib.get_close_matches(key, self.known, n=1)
                 fix = f'Did you mean "{near[0]}"' if near else "Take it out"
-                raise DrugFileError(
-                    f"{self.file}, {self.at(key)}: unknown entry. {fix}{'?' if near else '.'}"
-                )
+                raise DrugFileError(f"{self.file}, {self.at(key)}: unknown entry. {fix}{'?' if near else '.'}")
