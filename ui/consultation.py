@@ -6,7 +6,7 @@ import logging
 import traceback
 from collections.abc import Callable, Iterator, Mapping
 from contextlib import contextmanager
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from pathlib import Path
 from typing import Any
 
@@ -198,7 +198,7 @@ def _on_request(outcome: Outcome, hidden: str, label: str, show: Callable[[Consu
 def _charts(consult: Consult, slots: list[tuple[Any, str]]) -> None:
     """The charts of the note, drawn last so that the numbers do not wait for them."""
     made: dict[str, Any] = st.session_state.setdefault("charts", {})
-    key = dump_case_file(consult.case.file)
+    key = _numbers(consult.case.file)
     makers = {
         "record": charts.record_chart,
         "plane": charts.plane_chart,
@@ -261,14 +261,22 @@ def answer(checked: Outcome, settings: Site) -> Outcome:
 
 
 def _consult(case: Case, settings: Site) -> Consult:
-    """The consult of a case, kept for this session only."""
+    """The consult of a case, kept for this session only; a change of words alone works nothing out anew."""
     kept: dict[str, Consult] = st.session_state.setdefault("kept", {})
-    key = f"{dump_case_file(case.file)}{settings.sha256}"
+    key = f"{_numbers(case.file)}{settings.sha256}"
     if key not in kept:
         while len(kept) >= KEPT:
             kept.pop(next(iter(kept)))
         kept[key] = run_consult(case, settings)
-    return kept[key]
+    return replace(kept[key], case=case)
+
+
+def _numbers(file: CaseFile) -> str:
+    """A case without what is only words for people."""
+    chosen = file.chosen.model_copy(update={"words": ""}) if file.chosen else None
+    if chosen is not None and chosen.regimen is None and not chosen.next_draw:
+        chosen = None
+    return dump_case_file(file.model_copy(update={"question": "", "comment": "", "label": "", "chosen": chosen}))
 
 
 def _asked(values: Mapping[str, Any], entry: Entry, outcome: Outcome) -> Asked:

@@ -189,6 +189,7 @@ def test_every_demonstration_opens_without_a_fault(name: str) -> None:
     assert "The calculation stopped" not in page.shown(at)
 
 
+@pytest.mark.slow
 def test_a_shelf_brings_regimens_and_two_of_them_side_by_side() -> None:
     at = page.open_demonstration("over-the-ceiling")
     words = at.multiselect(key="two").options
