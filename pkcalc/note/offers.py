@@ -125,7 +125,7 @@ def _pause(p: Pause) -> dict[str, Any]:
         "reductions": [
             {
                 "words": r.words,
-                "percent_of_present": _number(r.percent),
+                "of_present_percent": _number(r.percent),
                 "days_until_level": _days_band(r.days),
                 "steady_level_normal_binding_mg_per_L": _band(r.steady),
                 "offered": r.offered,

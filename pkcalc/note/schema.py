@@ -150,7 +150,7 @@ _DEFINITIONS: dict[str, dict[str, Any]] = {
                 _object(
                     {
                         "words": TEXT,
-                        "percent_of_present": NUMBER,
+                        "of_present_percent": NUMBER,
                         "days_until_level": DAYS_BAND,
                         "steady_level_normal_binding_mg_per_L": BAND,
                         "offered": YES_NO,
