@@ -7,11 +7,14 @@ import io
 import json
 import re
 from functools import cache
+from pathlib import Path
 
 import numpy as np
 import pytest
+from click.testing import CliRunner, Result
 from pypdf import PdfReader
 
+from pkcalc.cli import cli
 from pkcalc.consult import Consult, run_consult
 from pkcalc.demos import demonstration
 from pkcalc.note.charts import Chart, charts, contours
@@ -307,3 +310,30 @@ def test_teaching_pictures_only_in_demonstrations_with_three_or_more_levels() ->
     text = render_html(demo("several-levels"))
     assert "For teaching only" in text
     assert "For teaching only" not in render_html(demo("clean-pair"))
+
+
+# --- command line --------------------------------------------------------------------------------------------
+
+
+def run(*args: str) -> Result:
+    return CliRunner().invoke(cli, list(args))
+
+
+def test_the_note_is_written_as_pdf_and_html(tmp_path: Path) -> None:
+    for form, start in (("pdf", b"%PDF-"), ("html", b"<!doctype html>")):
+        file = tmp_path / f"note.{form}"
+        done = run("demo", "tube-feed", "--format", form, "--out", str(file))
+        assert f"Written: {file}" in done.stderr
+        assert file.read_bytes().startswith(start)
+
+
+def test_a_pdf_is_never_thrown_at_the_screen() -> None:
+    done = run("demo", "tube-feed", "--format", "pdf")
+    assert done.exit_code == 2
+    assert "A PDF is written to a file: add --out FILE" in done.stderr
+
+
+def test_the_schema_of_the_note_is_published() -> None:
+    done = run("schema", "--note")
+    assert json.loads(done.stdout)["title"] == "pkcalc note"
+    assert json.loads(run("schema").stdout)["title"] != "pkcalc note"

@@ -106,7 +106,7 @@ def test_every_key_with_a_number_carries_its_unit_or_is_a_share() -> None:
             for v in node:
                 walk(v, key)
         elif isinstance(node, (int, float)) and not isinstance(node, bool):
-            assert key in unitless or key.startswith("chance") or key.endswith(units), key
+            assert key in unitless or key.startswith(("chance", "danger")) or key.endswith(units), key
 
     for name in ("clean-pair", "toxic-level", "ethanol-dialysis"):
         walk(data_of(name))
