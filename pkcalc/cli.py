@@ -364,10 +364,16 @@ def drugs(name: str | None, output_format: str) -> None:
 
 
 @cli.command()
-def schema() -> None:
+@click.option("--note", "of_note", is_flag=True, help="Of the JSON note instead.")
+def schema(of_note: bool) -> None:
     """The JSON Schema of the case file."""
     from pkcalc.case import case_schema
 
+    if of_note:
+        from pkcalc.note.schema import note_schema
+
+        _print_json(note_schema())
+        return
     _print_json(case_schema())
 
 
@@ -577,6 +583,16 @@ def backtest(
 
     FOLDER holds patients.csv, doses.csv and levels.csv with a column `patient`, or one case file per patient.
     Each level is forecast from what was known before it. Exit status 0 done, 1 interrupted or not whole.
+
+    \b
+    Columns (UTF-8; the first row names them; commas or semicolons; values with their unit):
+    patients.csv  patient (your own key), weight, age, sex, height, albumin,
+                  population, any question of the case file (yes, no, unknown),
+                  and group_NAME for subgroups of your own
+    doses.csv     patient, form, amount, unit, at or every with from and until,
+                  over, rate, missed (with | between), source, confirmed, given_by
+    levels.csv    patient, value, unit, kind (total, free, normalised), drawn,
+                  normalised_by, albumin, albumin_taken, sample
     """
     if workers and cluster:
         raise click.UsageError("Give --workers or --cluster, not both")

@@ -189,7 +189,7 @@ def open_folder(path: str | Path) -> Folder:
                 "Folder",
                 f"{missing} not found",
                 "patients.csv, doses.csv and levels.csv, or case files (*.json)",
-                "See the columns in the documentation of this command",
+                "The columns stand in pkcalc backtest --help",
             )
         )
     digest = hashlib.sha256()

@@ -116,9 +116,12 @@ def coverage(base: Path, count: int) -> None:
         found = findings(outcome.store, SITE)
         for method, tally in found.by_method.items():
             inner, outer = tally.sums.mean(7), tally.sums.mean(8)
+            reach = "too few patients"
+            if outer.low is not None and outer.high is not None:
+                reach = f"{100 * outer.low:.1f} to {100 * outer.high:.1f}"
             print(
                 f"| {name} | {method} | {tally.sums.rows} | {100 * inner.value:.1f} | "
-                f"{100 * outer.value:.1f} ({100 * (outer.low or 0):.1f} to {100 * (outer.high or 0):.1f}) | "
+                f"{100 * outer.value:.1f} ({reach}) | "
                 f"{tally.median_absolute_error():.2f} |",
                 flush=True,
             )

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import random
+import re
 from pathlib import Path
 
 import pytest
@@ -167,7 +168,7 @@ def test_what_a_folder_must_hold(tmp_path: Path) -> None:
     empty.mkdir()
     assert said(open_folder, empty) == [
         "Folder: patients.csv and doses.csv and levels.csv not found. Allowed: patients.csv, doses.csv and levels.csv, "
-        "or case files (*.json). See the columns in the documentation of this command."
+        "or case files (*.json). The columns stand in pkcalc backtest --help."
     ]
     both = department(tmp_path / "both")
     (both / "a.json").write_text("{}")
@@ -251,3 +252,14 @@ def test_a_synthetic_department_is_marked_seeded_and_wrong_where_asked(tmp_path:
     assert said(write_department, tmp_path / "a", drug="phenytoin", count=1, seed=1) == [
         "Folder a: it is not empty. Allowed: a new or an empty folder for synthetic patients. Choose another folder."
     ]
+
+
+def test_the_help_names_every_column() -> None:
+    from click.testing import CliRunner
+
+    from pkcalc.backtest.folder import PATIENT_COLUMNS
+    from pkcalc.cli import cli
+    from pkcalc.spreadsheet import DOSE_COLUMNS, LEVEL_COLUMNS
+
+    words = set(re.findall(r"[a-z_]+", CliRunner().invoke(cli, ["backtest", "--help"]).output))
+    assert {*PATIENT_COLUMNS, *DOSE_COLUMNS, *LEVEL_COLUMNS} <= words
