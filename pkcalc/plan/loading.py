@@ -482,7 +482,7 @@ def ceiling(ward: Ward, wanted_mg: float, unit: str) -> tuple[float, list[str]]:
     if weight is not None:
         low, high = loading.mg_per_kg
         notes.append(
-            f"That is {show(wanted_mg / weight, f'{unit}/kg')} of actual weight by the formula; published loads are "
+            f"That is {show(wanted_mg / weight, f'{unit}/kg')} by the formula; published loads are "
             f"{show_number(low)} to {show(high, f'{unit}/kg')}, up to {show_number(highest)} in status epilepticus."
         )
         if highest * weight < min(most, wanted_mg):
