@@ -5,7 +5,7 @@ from __future__ import annotations
 import json
 import platform
 from dataclasses import dataclass
-from datetime import datetime, timezone
+from datetime import UTC, datetime
 from importlib.metadata import version as version_of
 from typing import Any
 
@@ -69,7 +69,7 @@ def accept() -> Acceptance:
             *((name, version_of(name)) for name in LIBRARIES),
         ),
         machine=f"{platform.system()} {platform.machine()}",
-        moment=datetime.now(timezone.utc).replace(microsecond=0, tzinfo=None),
+        moment=datetime.now(UTC).replace(microsecond=0, tzinfo=None),
     )
 
 

@@ -158,7 +158,8 @@ def _levels(consult: Consult) -> Section:
     if consult.observations:
         spread = consult.observations[0].spread
         lines.append(
-            f"Spread of a level taken as {show_number(100 * spread.total_cv)} % in all ({spread.basis}), of which the "
+            f"Spread of a level taken as {show_number(100 * spread.total_cv)} % in all "
+            f"({spread.basis}), of which the "
             f"assay is {show_number(100 * spread.assay_cv)} %."
         )
     return Section("What was measured", tuple(lines))
@@ -211,7 +212,8 @@ def estimate_lines(estimate: Estimate, time_unit: str = "day") -> list[str]:
     if estimate.volume_L is not None:
         volume = estimate.summary["volume_L"]
         lines.append(
-            f"Volume {show(volume.median, 'L')} (90 % interval {show_number(volume.low)} to {show_number(volume.high)}), "
+            f"Volume {show(volume.median, 'L')} (90 % interval {show_number(volume.low)} to "
+            f"{show_number(volume.high)}), "
             f"from the {estimate.volume_from}."
         )
     if "assumes" in estimate.diagnostics:
@@ -220,7 +222,8 @@ def estimate_lines(estimate: Estimate, time_unit: str = "day") -> list[str]:
         difference = float(str(estimate.diagnostics["certificate"]))
         if np.isfinite(difference):
             lines.append(
-                f"Certificate: a second, shifted grid gives the same quantiles within {show_number(100 * difference, 2)} %."
+                "Certificate: a second, shifted grid gives the same quantiles within "
+                f"{show_number(100 * difference, 2)} %."
             )
     if "chance of negative Km" in estimate.diagnostics:
         chance = float(str(estimate.diagnostics["chance of negative Km"]))
@@ -345,7 +348,8 @@ def _regimens(consult: Consult) -> list[Section]:
             Section(
                 "Doses around the present one",
                 (
-                    "By daily dose; the order is no advice. Steady level: median (90 % interval), past intake carried on. "
+                    "By daily dose; the order is no advice. Steady level: median (90 % interval), "
+                    "past intake carried on. "
                     "Chances hold against the target range. No change in other drugs, feeds or albumin.",
                 ),
                 Table(FORECAST_HEADS, tuple(forecast_row(s) for s in ordered)),
@@ -367,7 +371,8 @@ def _regimens(consult: Consult) -> list[Section]:
         offered = sum(c.offered for c in plan.every)
         if counted > on_paper:
             notes.append(
-                f"{counted} regimens were worked out, {offered} of them may be offered; {on_paper} are printed here and "
+                f"{counted} regimens were worked out, {offered} of them may be offered; {on_paper} "
+                "are printed here and "
                 "the JSON form of this note holds all."
             )
         if plan.ranked:
@@ -406,9 +411,13 @@ def _regimens(consult: Consult) -> list[Section]:
             )
     if consult.aim_rate is not None:
         rate = consult.aim_rate
+        # the estimate itself is one of the two lines; which one depends on whether it reckons with missed doses
+        same = plan is not None and consult.chosen is not None and plan.setting.taken is plan.setting.central
+        full = plan is not None and plan.setting.taken is consult.chosen
+        line = "" if same else ", every dose taken" if full else ", past intake carried on"
         lines = [
-            f"To hold {show(consult.goal.aim_mg_per_L, 'mg/L')} (normal binding) with every dose taken: {show(rate.median, 'mg/day')} of "
-            f"active drug (90 % interval {show_number(rate.low)} to {show_number(rate.high)})."
+            f"To hold {show(consult.goal.aim_mg_per_L, 'mg/L')} (normal binding{line}): "
+            f"{show(rate.median, 'mg/day')} of active drug (90 % interval {show_number(rate.low)} to {show_number(rate.high)})."
         ]
         for form_id in dict.fromkeys(f for c in consult.case.courses for f in c.forms):
             form = consult.profile.forms[form_id]
@@ -485,12 +494,12 @@ def _acute(consult: Consult) -> list[Section]:
 def _load(load: Load, consult: Consult) -> Section:
     form = consult.profile.forms[load.form]
     parts = "; ".join(
-        f"{show(mg, form.amount_unit, 6)} after {show_number(h)} h" if h else f"{show(mg, form.amount_unit, 6)} at once"
-        for h, mg in load.parts
+        f"{show(mg, form.amount_unit, 6)} " + (f"after {show_number(h)} h" if h else "at once") for h, mg in load.parts
     )
     lines = [
         *load.order,
-        f"By the formula {show(load.wanted_mg, form.amount_unit, 4)}; as ordered {show(load.amount_mg, form.amount_unit, 6)} "
+        f"By the formula {show(load.wanted_mg, form.amount_unit, 4)}; as ordered "
+        f"{show(load.amount_mg, form.amount_unit, 6)} "
         f"({show(load.active_mg, 'mg', 4)} of active drug): {parts}.",
         f"It adds {level_words(load.rise)}; level after it {level_words(load.after)}; when drawn "
         f"{show(load.draw_after_h, 'h')} later {level_words(load.at_draw)}.",
@@ -541,7 +550,8 @@ def _next(consult: Consult) -> list[Section]:
         "",
     )
     lines = [
-        f"For {_named(found.regimen_words, consult)}. Spread of the forecast now (standard deviation of the log steady "
+        f"For {_named(found.regimen_words, consult)}. Spread of the forecast now (standard deviation "
+        "of the log steady "
         f"level) {show_number(100 * found.before, 2)} %; what each draw would leave of it:",
         *found.why,
         f"90 % of the way to the steady level takes {days_words(found.settled_days)}.",
@@ -579,7 +589,8 @@ def _populations(consult: Consult) -> list[Section]:
     )
     said = (
         "What the same record and levels say under other published populations, for "
-        f"{marked(shown, consult) if shown else ''}, at normal binding. Where these rows differ much, the population matters more than the levels.",
+        f"{marked(shown, consult) if shown else ''}, at normal binding. Where these rows differ much, "
+        "the population matters more than the levels.",
     )
     return [Section("Populations compared", said, Table(heads, rows))]
 
@@ -613,8 +624,10 @@ def _second_way(consult: Consult) -> list[Section]:
         Section(
             "The two-way check",
             (
-                "Key numbers calculated a second, independent way (adaptive integration, explicit sums, re-reading of the "
-                "text as typed). It catches arithmetic, never transcription: for that the second pharmacist types the case "
+                "Key numbers calculated a second, independent way (adaptive integration, explicit "
+                "sums, re-reading of the "
+                "text as typed). It catches arithmetic, never transcription: for that the second "
+                "pharmacist types the case "
                 "again from the chart.",
             ),
             Table(heads, cells),
@@ -639,7 +652,8 @@ def _checked(consult: Consult) -> Section:
     return Section(
         "Blind re-entry",
         (
-            "Not recorded in this note. Weight, doses, levels and dates typed again from the chart by the second pharmacist: "
+            "Not recorded in this note. Weight, doses, levels and dates typed again from the chart "
+            "by the second pharmacist: "
             "[ ] done, no difference   [ ] done, differences mended   [ ] not done",
         ),
     )

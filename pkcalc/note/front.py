@@ -3,15 +3,16 @@
 from __future__ import annotations
 
 import textwrap
+from collections.abc import Sequence
 
 from pkcalc import __version__
 from pkcalc import plan as planning
 from pkcalc.case import QUESTIONS
-from pkcalc.cautions import percent
+from pkcalc.cautions import percent, percent_beside
 from pkcalc.clock import show_time
 from pkcalc.consult import Consult, Shown
 from pkcalc.note import hours
-from pkcalc.note.acute import daily_levels, is_offered, limited, marked, now_lines, too_high, used_level
+from pkcalc.note.acute import daily_levels, is_offered, limited, now_lines, too_high, used_level
 from pkcalc.note.words import (
     NOT_OFFERED,
     NOW,
@@ -206,12 +207,13 @@ def forecast_lines(shown: Shown, consult: Consult) -> list[str]:
 def danger_words(shown: Shown, consult: Consult) -> str:
     """The chance of too high, with the time that it belongs to."""
     limit = show(consult.goal.critical_mg_per_L, "mg/L")
-    settled = percent(shown.taken.above_critical)
+    settled = percent_beside(shown.taken.above_critical, consult.site.stop_chance)
     none = percent(shown.taken.no_steady_state)
     text = f"chance above {limit} or of no steady state {settled} once settled (no steady state {none})"
-    if percent(shown.danger) != settled and consult.plan is not None:
+    counted = percent_beside(shown.danger, consult.site.stop_chance)
+    if counted != settled and consult.plan is not None:
         days = show(consult.plan.setting.draw_days, "days")
-        text += f", {percent(shown.danger)} with the next feasible draw (in {days}) counted in"
+        text += f", {counted} with the next feasible draw (in {days}) counted in"
     return text
 
 
@@ -371,7 +373,7 @@ def _without_plan(consult: Consult, shown: Shown) -> list[str]:
         first = (
             "Observe dosing and repeat the level on the present regimen first."
             if any(c.id == "increase-on-doubt" for c in consult.cautions)
-            else "Plan the next level with a regimen that is offered; draw one on the present one before a change."
+            else "Plan the next level with a regimen that is offered; draw one on the present dose before any change."
         )
         lines = [f"No draw is planned on {shown.words} ({NOT_OFFERED}). {first}"]
         if found is not None and found.regimen_words != shown.words and not found.none_because:
@@ -389,12 +391,13 @@ def _pasted_regimen(shown: Shown, consult: Consult) -> list[str]:
         "Chosen" if consult.case.chosen is not None else "Proposed, not chosen" if shown.proposed else "Present regimen"
     )
     offered = is_offered(shown, consult)
-    words = regimen_words(shown) if offered else marked(shown, consult)
+    words = regimen_words(shown) if offered else shown.words
     rate = show(shown.rate_mg_per_day, "mg/day", 4)
     lines = [f"{label}{'' if offered else f', {NOT_OFFERED}'}: {words} = {rate} active drug."]
     if not same_lines(shown):
         lines.append(f"Expected as reported, every dose taken: {as_reported(shown.taken, consult)}.")
-        lines.append(f"Expected as reported, past intake carried on: {as_reported(shown.forecast, consult)}.")
+        if offered:
+            lines.append(f"Expected as reported, past intake carried on: {as_reported(shown.forecast, consult)}.")
     else:
         lines.append(f"Expected level as reported: {as_reported(shown.forecast, consult)}.")
     lines.append(f"Every dose taken: {danger_words(shown, consult)}.")
@@ -412,6 +415,19 @@ def _pasted_loads(consult: Consult) -> list[str]:
         head = "Load" if load.offered else f"Load, {NOT_OFFERED}"
         lines.append(f"{head}: {order} Level after it {level_words(load.after)}.")
     return [*lines, *plan.no_load]
+
+
+def _whole(body: Sequence[str], room: int) -> list[str]:
+    """What fits, cut between statements: half a line to act on would be worse than none."""
+    wrapped = [textwrap.wrap(text, PASTE_WIDTH) for text in body]
+    if sum(map(len, wrapped)) <= room:
+        return [line for text in wrapped for line in text]
+    lines: list[str] = []
+    for text in wrapped:
+        if len(lines) + len(text) > room - 1:
+            break
+        lines += text
+    return [*lines, "[cut here: read the full note]"]
 
 
 def paste_block(consult: Consult) -> tuple[str, ...]:
@@ -434,7 +450,10 @@ def paste_block(consult: Consult) -> tuple[str, ...]:
     if used_level(consult) is not None and not urgent:
         body.append(verdict(consult)[0])
     planned = _next_level(consult)
-    following = [f"Next level: {next((x for x in planned if not x.startswith('Planned by')), planned[0])}"]
+    # the lines to act on, the longest wait last, since the block is cut at its end
+    ours = [x for x in planned if "call" in x] or [x for x in planned if not x.startswith("Planned by")]
+    ours = sorted(ours or planned, key=lambda x: x.startswith("If the load is given:"))
+    following = [f"Next level: {ours[0]}", *ours[1:]]
     if consult.case.next_draw is not None and consult.projection is None:
         following.append(f"Next level planned by the pharmacist: {show_time(consult.case.next_draw)}.")
     # whoever reads only the block of a toxic patient must not lose the daily levels to the cut at its end
@@ -453,8 +472,5 @@ def paste_block(consult: Consult) -> tuple[str, ...]:
         "Not a substitute for the full note; check every number.",
     ]
     room = PASTE_LINES - len(lines) - sum(len(textwrap.wrap(x, PASTE_WIDTH)) for x in last)
-    wrapped = [w for text in body for w in textwrap.wrap(text, PASTE_WIDTH)]
-    if len(wrapped) > room:
-        wrapped = [*wrapped[: room - 1], "[cut here: read the full note]"]
-    lines += wrapped + [w for text in last for w in textwrap.wrap(text, PASTE_WIDTH)]
+    lines += _whole(body, room) + [w for text in last for w in textwrap.wrap(text, PASTE_WIDTH)]
     return tuple(line.encode("ascii", "replace").decode("ascii") for line in lines)

@@ -109,7 +109,7 @@ _DEFINITIONS: dict[str, dict[str, Any]] = {
             "level_on_days": _or_null(_list(_ref("level_on_day"))),
             "expected_loss": _or_null(NUMBER),
         },
-        words="One regimen, both lines; danger: chance above the critical level or of no steady state, every dose taken.",
+        words="One regimen, both lines; danger: chance above critical or of no steady state, every dose taken.",
     ),
     "load": _object(
         {
@@ -500,7 +500,8 @@ def note_schema() -> dict[str, Any]:
         "$schema": "https://json-schema.org/draft/2020-12/schema",
         "title": "pkcalc note",
         "description": (
-            "Units stand in the keys. A number without a steady state is an object that says so; NaN and infinity never "
+            "Units stand in the keys. A number without a steady state is an object that says so; NaN "
+            "and infinity never "
             "occur. Times are clock times as typed."
         ),
         "anyOf": [_NOTE, _REFUSED, _UNREADABLE, _FAULT],

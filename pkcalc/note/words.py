@@ -27,7 +27,8 @@ NOT_OFFERED = "NOT OFFERED"
 #: Title of the part that stands before everything else where a level is too high.
 NOW = "What to do now"
 VALID_UNTIL = (
-    "Valid until the next level, or until any change of dose, form, tube feed, other drug, albumin or kidney or liver "
+    "Valid until the next level, or until any change of dose, form, tube feed, other drug, albumin "
+    "or kidney or liver "
     "function, whichever comes first."
 )
 
@@ -102,7 +103,8 @@ def same_lines(shown: Shown) -> bool:
 
 def chances_words(f: Forecast) -> str:
     return (
-        f"below the target {percent(f.below)}, within {percent(f.within)}, above {percent(f.above)} (of which no steady "
+        f"below the target {percent(f.below)}, within {percent(f.within)}, above {percent(f.above)} "
+        "(of which no steady "
         f"state {percent(f.no_steady_state)}); above the critical level {percent(f.above_critical)}"
     )
 

@@ -110,17 +110,20 @@ def machine_only(consult: Consult) -> tuple[str, ...]:
         return ()
     n = show_number(float(len(consult.chosen.weights)), 6)
     lines = [
-        f"Only the machine can reproduce: every median, 90 % interval and chance (each comes from {n} draws of Vmax, Km "
+        f"Only the machine can reproduce: every median, 90 % interval and chance (each comes from {n} "
+        "draws of Vmax, Km "
         "and volume pushed through the equations above), the course of the level between doses, days with their "
         "intervals, and how much a next level narrows the forecast."
     ]
     if consult.chosen.method == "whole record":
         lines.append(
-            "The estimate from the whole record itself too: it weighs the population and every level along the course of "
+            "The estimate from the whole record itself too: it weighs the population and every level "
+            "along the course of "
             "all recorded doses. The one-level and two-level workings are checks beside it, not its derivation."
         )
     lines.append(
-        "The median level is not the level at the median Vmax and the median Km; the representative pair above is labelled "
+        "The median level is not the level at the median Vmax and the median Km; the representative "
+        "pair above is labelled "
         "so because it reproduces the printed central forecast, not because it is this patient's Vmax and Km."
     )
     return tuple(lines)
@@ -299,8 +302,10 @@ def representative(consult: Consult, line: Line) -> tuple[tuple[Number, Number] 
     target = _line(shown, line)
     if not np.isfinite(target.steady.median):
         return None, (
-            f"No representative pair ({line}): the median forecast of the regimen in question is no steady state, because "
-            f"its R = {show(target.rate_mg_per_day, 'mg/day', 5)} is at or above Vmax in at least half of the forecasts."
+            f"No representative pair ({line}): the median forecast of the regimen in question is no "
+            "steady state, because "
+            f"its R = {show(target.rate_mg_per_day, 'mg/day', 5)} is at or above Vmax in at least "
+            "half of the forecasts."
         )
     goals = [(target.rate_mg_per_day, target.steady.median)]
     present = consult.plan.present if consult.plan is not None else None
