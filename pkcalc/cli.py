@@ -590,7 +590,7 @@ def backtest(
                   population, any question of the case file (yes, no, unknown),
                   and group_NAME for subgroups of your own
     doses.csv     patient, form, amount, unit, at or every with from and until,
-                  over, rate, missed (with | between), source, confirmed, given_by
+                  product, over, rate, missed (with | between), source, confirmed, given_by
     levels.csv    patient, value, unit, kind (total, free, normalised), drawn,
                   normalised_by, albumin, albumin_taken, sample
     """
