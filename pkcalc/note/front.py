@@ -376,8 +376,9 @@ def _without_plan(consult: Consult, shown: Shown) -> list[str]:
             else "Plan the next level with a regimen that is offered; draw one on the present dose before any change."
         )
         lines = [f"No draw is planned on {shown.words} ({NOT_OFFERED}). {first}"]
-        if found is not None and found.regimen_words != shown.words and not found.none_because:
-            lines.append(f"On {found.regimen_words}, as now: {found.action}")
+        if found is not None and found.regimen_words != shown.words:
+            mark = f" ({NOT_OFFERED})" if found.none_because else ""
+            lines.append(f"On {found.regimen_words}{mark}, as now: {found.action}")
         return lines
     lines = [f"No draw is planned for going on unchanged ({NOT_OFFERED}): change the dose first, then plan the level."]
     if found is not None and found.regimen_words == shown.words:
@@ -456,9 +457,10 @@ def paste_block(consult: Consult) -> tuple[str, ...]:
     following = [f"Next level: {ours[0]}", *ours[1:]]
     if consult.case.next_draw is not None and consult.projection is None:
         following.append(f"Next level planned by the pharmacist: {show_time(consult.case.next_draw)}.")
-    # whoever reads only the block of a toxic patient must not lose the daily levels to the cut at its end
-    body += following if urgent else []
+    # whoever reads only the block must not lose to the cut at its end what to do instead of a refused regimen
     shown = spoken_for(consult)
+    before = urgent or (shown is not None and not is_offered(shown, consult))
+    body += following if before else []
     if consult.projection is not None:
         body += hours.paste_lines(consult, consult.projection)
     elif consult.stopped or shown is None:
@@ -466,7 +468,7 @@ def paste_block(consult: Consult) -> tuple[str, ...]:
     else:
         body += _pasted_regimen(shown, consult)
     body += _pasted_loads(consult)
-    body += [] if urgent else following
+    body += [] if before else following
     last = [
         "Valid until the next level or any change of dose, feed, other drug or albumin.",
         "Not a substitute for the full note; check every number.",

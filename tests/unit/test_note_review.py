@@ -15,7 +15,7 @@ from pkcalc.consult import Consult, run_consult
 from pkcalc.errors import Caution
 from pkcalc.note.annex import DANGER_HEADS, annex, danger_row
 from pkcalc.note.document import Document, compose
-from pkcalc.note.front import page_one, paste_block, verdict
+from pkcalc.note.front import PASTE_LINES, page_one, paste_block, verdict
 from pkcalc.note.html import render_html
 from pkcalc.note.layout import caution_text, document_data, first_and_last, with_first_cautions
 from pkcalc.note.text import render
@@ -99,6 +99,7 @@ def chosen_toxic() -> Consult:
 def stopped_proposal() -> Consult:
     """A large step from a low level whose doses nobody vouches for."""
     return run(
+        patient={"age": "28 years", "sex": "male", "weight": "75 kg", "weight_basis": "measured"},
         context={"toxic_signs": "no", "adherence_doubtful": "yes"},
         doses=course("300 mg", "self"),
         levels=[level("5 mg/L")],
@@ -181,9 +182,23 @@ def test_a_stopped_proposal_has_no_draw_plan_of_its_own() -> None:
 
 
 def test_the_block_to_paste_puts_the_fully_taken_forecast_first() -> None:
-    pasted = " ".join(paste_block(stopped_proposal()))
-    full, partial = pasted.index("every dose taken: total"), pasted.index("past intake carried on: total")
-    assert full < partial
+    stopped = " ".join(paste_block(stopped_proposal()))
+    assert "every dose taken: total" in stopped
+    assert "past intake carried on: total" not in stopped
+    assert "Next level: On 300 mg extended capsules (phenytoin sodium) daily at 21:00, as now: On " in stopped
+    offered = run(context={"toxic_signs": "no"}, doses=course("300 mg", "self"), levels=[level("8 mg/L")])
+    pasted = " ".join(paste_block(offered))
+    assert pasted.index("every dose taken: total") < pasted.index("past intake carried on: total")
+
+
+def test_the_block_to_paste_is_never_cut_inside_a_line_to_act_on() -> None:
+    block = paste_block(loaded("no"))
+    assert len(block) <= PASTE_LINES
+    text = " ".join(block)
+    assert "Load: " in text
+    assert "If no load is given: " in text
+    if "[cut here: read the full note]" in block:
+        assert block[block.index("[cut here: read the full note]") - 1].endswith(".")
 
 
 @pytest.mark.parametrize("order", [(0, 1), (1, 0)])
