@@ -130,7 +130,10 @@ def now_lines(consult: Consult) -> tuple[str, ...]:
     present = plan.present.words if plan is not None and plan.present is not None else ""
     if found.urgent:
         unchanged = f"Do not go on with {present} unchanged" if present else "Do not go on unchanged"
-        lines = [f"TOO HIGH: {found.text}. {unchanged}: hold the next dose, or reduce.", SEIZURE_RISK]
+        lines = [
+            f"TOO HIGH: {found.text}. {unchanged}: hold the next dose, or reduce; the risk of seizures comes first.",
+            SEIZURE_RISK,
+        ]
     else:
         lines = [
             f"Above the target: {found.text}. Look for signs of toxicity: with any of them hold the next dose, or "

@@ -452,7 +452,7 @@ def paste_block(consult: Consult) -> tuple[str, ...]:
         body.append(verdict(consult)[0])
     planned = _next_level(consult)
     # the lines to act on, the longest wait last, since the block is cut at its end
-    ours = [x for x in planned if "call" in x] or [x for x in planned if not x.startswith("Planned by")]
+    ours = [x for x in planned if "call" in x.lower()] or [x for x in planned if not x.startswith("Planned by")]
     ours = sorted(ours or planned, key=lambda x: x.startswith("If the load is given:"))
     following = [f"Next level: {ours[0]}", *ours[1:]]
     if consult.case.next_draw is not None and consult.projection is None:

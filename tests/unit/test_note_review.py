@@ -123,7 +123,7 @@ def test_a_level_that_is_too_high_leads_page_one() -> None:
     assert first.lines[0] == (
         "TOO HIGH: Level 1 (38 mg/L total, drawn 3 May 2026 06:00) is 42.2 mg/L at normal binding (critical from 30 mg/L); "
         "signs of toxicity are reported. Do not go on with 400 mg extended capsules (phenytoin sodium) daily at 21:00 "
-        "unchanged: hold the next dose, or reduce."
+        "unchanged: hold the next dose, or reduce; the risk of seizures comes first."
     )
     assert "can bring on seizures" in first.lines[1]
     assert first.lines[2].startswith(
