@@ -417,7 +417,8 @@ def _regimens(consult: Consult) -> list[Section]:
         line = "" if same else ", every dose taken" if full else ", past intake carried on"
         lines = [
             f"To hold {show(consult.goal.aim_mg_per_L, 'mg/L')} (normal binding{line}): "
-            f"{show(rate.median, 'mg/day')} of active drug (90 % interval {show_number(rate.low)} to {show_number(rate.high)})."
+            f"{show(rate.median, 'mg/day')} of active drug (90 % interval {show_number(rate.low)} to "
+            f"{show_number(rate.high)})."
         ]
         for form_id in dict.fromkeys(f for c in consult.case.courses for f in c.forms):
             form = consult.profile.forms[form_id]

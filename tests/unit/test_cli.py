@@ -127,7 +127,7 @@ def test_every_demonstration_is_marked(tmp_path: Path) -> None:
         assert name in listed.stdout
         done = run("demo", name)
         assert done.returncode in (0, 1), done.stderr
-        assert done.stdout.count("DEMONSTRATION - invented, not a patient, not for clinical use") == 2
+        assert done.stdout.count("DEMONSTRATION - invented, not a patient, not for clinical use") == 3
         data = json.loads(run("demo", name, "--format", "json").stdout)
         assert data["demonstration"].startswith("DEMONSTRATION")
 

@@ -164,7 +164,7 @@ def test_wrong_weights_are_noticed(monkeypatch: pytest.MonkeyPatch) -> None:
 
 def test_wrong_influence_of_missed_doses_is_noticed(monkeypatch: pytest.MonkeyPatch) -> None:
     right = posterior.intake_gain
-    monkeypatch.setattr(posterior, "intake_gain", lambda *given: 2.0 * right(*given))
+    monkeypatch.setattr(posterior, "intake_gain", lambda *given, **named: 2.0 * right(*given, **named))
     doubtful = {**PLAIN["context"], "adherence_doubtful": "yes"}
     consult = consult_of(short(doses=SHORT_CARER, context=doubtful))
     assert any("weight at" in q for q in disagreeing(consult))
