@@ -16,7 +16,7 @@ _PUBLIC = {
     "NoPlan": "pkcalc.errors",
 }
 
-__all__ = ["CannotEstimate", "CaseError", "NoPlan", "Q", "load_case", "run_consult"]  # noqa: F822 - lazy
+__all__ = ["CannotEstimate", "CaseError", "NoPlan", "Q", "load_case", "run_consult"]
 
 
 def __getattr__(name: str) -> Any:

@@ -899,13 +899,14 @@ def check_case(file: CaseFile) -> Case:
 
 
 def _check_products(plan: PlanFile, profile: Profile, check: _Check) -> None:
-    """Products named in the case stand on its shelf, each once, and only one strength of a kind that can be mixed up."""
+    """Products named in the case stand on its shelf, each once, one strength only of a kind that can be mixed up."""
     on_shelf = profile.shelves[plan.shelf].products if plan.shelf else tuple(profile.products)
     unknown = [p for p in plan.products if p not in on_shelf]
     if unknown:
         check.say("Plan, products", f'"{unknown[0]}" was given', ", ".join(on_shelf), "Choose from these products")
     elif not plan.shelf:
-        check.say("Plan, products", "products without a shelf were given", "a shelf first", "Name the shelf in the plan")
+        without = "products without a shelf were given"
+        check.say("Plan, products", without, "a shelf first", "Name the shelf in the plan")
     groups = [g for p in plan.products if p in profile.products and (g := profile.products[p].exclusive_group)]
     if len(groups) != len(set(groups)):
         check.say("Plan, products", f"two strengths of the {groups[0]} were given", "one of them", "Take one out")

@@ -28,7 +28,7 @@ from pkcalc.levels import Observation, adherence, measured_free_fraction, presen
 from pkcalc.plan.projection import Projection
 from pkcalc.site import Site
 from pkcalc.steadiness import Settling
-from pkcalc.units import show, show_number
+from pkcalc.units import percent, percent_beside, show, show_number
 
 SEVERITIES = ("stop", "warn", "note")
 STAGES = ("case", "levels", "estimate", "plan")
@@ -72,29 +72,6 @@ Predicate = Callable[[State, Mapping[str, Any]], list[Words]]
 
 def _names(observations: Iterable[Observation]) -> str:
     return ", ".join(o.name for o in observations)
-
-
-def percent(share: float) -> str:
-    """A chance in words that never read as impossible or certain."""
-    if share <= 0:
-        return "0 %"
-    if share < 0.01:
-        return "less than 1 %"
-    if 0.99 < share < 1:
-        return "more than 99 %"
-    return f"{show_number(100 * share, 2)} %"
-
-
-def percent_beside(share: float, limit: float) -> str:
-    """A chance with as many digits as it takes to tell it from the limit that it is held against."""
-    text, bound = percent(share), percent(limit)
-    if text != bound or share == limit:
-        return text
-    for digits in range(3, 7):
-        text = f"{show_number(100 * share, digits)} %"
-        if text != bound:
-            return text
-    return f"just {'above' if share > limit else 'below'} {bound}"
 
 
 def _always(s: State, p: Mapping[str, Any]) -> list[Words]:

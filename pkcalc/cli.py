@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import os
 import sys
+from itertools import pairwise
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
@@ -41,9 +42,7 @@ def main() -> None:
 
 def _asked_for_json() -> bool:
     words = sys.argv[1:]
-    return "--format=json" in words or any(
-        a == "--format" and b == "json" for a, b in zip(words, words[1:], strict=False)
-    )
+    return "--format=json" in words or ("--format", "json") in pairwise(words)
 
 
 def _usage_error(error: click.ClickException) -> None:

@@ -34,6 +34,8 @@ LEVEL_TOLERANCE = 0.01
 EXACT_TOLERANCE = 1e-6
 #: Largest difference of a log ratio of two weights: the first way takes a dose as absorbed at its mean time.
 WEIGHT_TOLERANCE = 0.1
+#: How far from one half the share of draws up to a median may be [%].
+MEDIAN_TOLERANCE = 0.5
 #: Days of a record that are integrated; of a longer one the beginning is taken at the plateau it had by then.
 LONGEST_DAYS = 400.0
 _STEP_DAY = 0.25
@@ -514,15 +516,15 @@ def steady_rows(
         total += weight
         if level > critical_mg_per_L:
             above += weight
-    running, median = 0.0, math.inf
-    for level, weight in sorted(reached):
-        running += weight
-        if running >= 0.5 * total:
-            median = level
-            break
-    none = sum(weight for level, weight in reached if math.isinf(level)) / total
-    if abs(none - 0.5) > 0.005:  # at one half it is a toss-up whether the median is a number
-        rows.append(Row(f"Median steady level on {words}", median_mg_per_L, median, "mg/L", LEVEL_TOLERANCE))
+    none = 100 * sum(weight for level, weight in reached if math.isinf(level)) / total
+    if math.isinf(median_mg_per_L):
+        half = math.inf if none >= 50.0 - MEDIAN_TOLERANCE else none
+        rows.append(Row(f"Median steady level on {words}", median_mg_per_L, half, "%", MEDIAN_TOLERANCE, absolute=True))
+    else:
+        # near Vmax neighbouring draws lie far apart, so the median is judged by the draws on either side of it
+        below = 100 * sum(weight for level, weight in reached if level <= median_mg_per_L) / total
+        name = f"Draws up to the median steady level on {words} ({show(median_mg_per_L, 'mg/L')})"
+        rows.append(Row(name, 50.0, below, "%", MEDIAN_TOLERANCE, absolute=True))
     rows.append(
         Row(
             f"Chance above {show(critical_mg_per_L, 'mg/L')} or of no steady state on {words}",

@@ -179,13 +179,9 @@ def time_to_fall(start: Any, end: Any, vmax: Any, km: Any, volume: Any) -> Any:
         ("Km", km, "level", "above 0"),
         ("Volume", volume, "volume", "above 0"),
     )
-    days = formulas.time_to_fall(
-        start_mg_per_L=c, end_mg_per_L=e, vmax_mg_per_day=v, km_mg_per_L=k, volume_L=vol
-    )
+    days = formulas.time_to_fall(start_mg_per_L=c, end_mg_per_L=e, vmax_mg_per_day=v, km_mg_per_L=k, volume_L=vol)
     if np.ndim(days) == 0 and not np.isfinite(days):
-        found = (
-            f"Without dosing the level never gets from {show(float(c), 'mg/L')} to {show(float(e), 'mg/L')}."
-        )
+        found = f"Without dosing the level never gets from {show(float(c), 'mg/L')} to {show(float(e), 'mg/L')}."
         raise CannotEstimate(found, _DOWN_ONLY, _LOWER_END)
     _refuse_some(~np.isfinite(days), "Levels never reached without dosing", _DOWN_ONLY, _LOWER_END)
     return Q(days, "day")
@@ -202,9 +198,7 @@ def two_level(rate1: Any, level1: Any, rate2: Any, level2: Any) -> PairSolution:
         ("Second dose rate", rate2, "dose rate", "above 0"),
         ("Second level", level2, "level", "above 0"),
     )
-    found = formulas.two_level(
-        rate1_mg_per_day=r1, level1_mg_per_L=c1, rate2_mg_per_day=r2, level2_mg_per_L=c2
-    )
+    found = formulas.two_level(rate1_mg_per_day=r1, level1_mg_per_L=c1, rate2_mg_per_day=r2, level2_mg_per_L=c2)
     if np.ndim(found.admissible) == 0 and not found.admissible:
         _refuse_pair(float(r1), float(c1), float(r2), float(c2))
     _refuse_some(~found.admissible, "Pairs that lie on no saturable curve", _NO_CURVE, _CHECK_PAIR)
@@ -217,9 +211,7 @@ _OTHER_AIM = "Choose a level between the start and where the level settles, or a
 _BETWEEN = "At a constant rate a level only moves from its start towards where it settles."
 _DOWN_ONLY = "Without dosing a level only falls, ever more slowly, and never quite to zero."
 _LOWER_END = "Give an end level above 0 and below the start."
-_NO_CURVE = (
-    "With saturable elimination a higher dose rate gives a level that is higher by more than in proportion."
-)
+_NO_CURVE = "With saturable elimination a higher dose rate gives a level that is higher by more than in proportion."
 _CHECK_PAIR = "Check doses taken, sampling times, units and salt of both, or add a level."
 
 
@@ -248,13 +240,9 @@ def _read(*wanted: tuple[str, Any, Kind, Bound]) -> list[Floats]:
     try:
         np.broadcast_shapes(*(v.shape for v in values))
     except ValueError:
-        lengths = ", ".join(
-            f"{name} {v.size}" for (name, *_), v in zip(wanted, values, strict=True) if v.ndim
-        )
+        lengths = ", ".join(f"{name} {v.size}" for (name, *_), v in zip(wanted, values, strict=True) if v.ndim)
         raise CaseError(
-            Problem(
-                "Lists", f"of different lengths: {lengths}", "lists of one length", "Give as many of each"
-            )
+            Problem("Lists", f"of different lengths: {lengths}", "lists of one length", "Give as many of each")
         ) from None
     return values
 
@@ -306,9 +294,7 @@ def _course(rate: float, vmax: float, km: float, start: float) -> str:
     begin = show(start, "mg/L")
     if rate >= vmax:
         return f"The dose rate is at or above Vmax, {show(vmax, 'mg/day')}: from {begin} it only rises."
-    steady = float(
-        formulas.steady_state_level(dose_rate_mg_per_day=rate, vmax_mg_per_day=vmax, km_mg_per_L=km)
-    )
+    steady = float(formulas.steady_state_level(dose_rate_mg_per_day=rate, vmax_mg_per_day=vmax, km_mg_per_L=km))
     return f"From {begin} it moves towards its steady level, {show(steady, 'mg/L')}, and no further."
 
 

@@ -50,10 +50,7 @@ class PeriodicState:
         """Peak minus trough over the average; 0 where there is no plateau."""
         there = np.isfinite(self.start_mg)
         safe = np.where(there, self.average_mg, 1.0)
-        return (
-            np.where(there, np.where(there, self.peak_mg, 0.0) - np.where(there, self.trough_mg, 0.0), 0.0)
-            / safe
-        )
+        return np.where(there, np.where(there, self.peak_mg, 0.0) - np.where(there, self.trough_mg, 0.0), 0.0) / safe
 
 
 def lower_bound(per_cycle_mg: float, cycle_day: float, vmax_mg_per_day: Floats, kappa_mg: Floats) -> Floats:
@@ -122,9 +119,7 @@ def periodic(
     )
 
 
-def _plateau_start(
-    regimen: Repeated, plan: Plan, vmax: Floats, kappa: Floats, k: Floats
-) -> tuple[Floats, int]:
+def _plateau_start(regimen: Repeated, plan: Plan, vmax: Floats, kappa: Floats, k: Floats) -> tuple[Floats, int]:
     """Amount at the beginning of the cycle [mg], and the Newton steps of the slowest draw."""
     dose, tau = regimen.rate_mg_per_day * regimen.cycle_day, regimen.cycle_day
     drift = (vmax * tau - dose) / kappa

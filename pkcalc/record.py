@@ -125,9 +125,7 @@ class FirstOrder:
                 )
             )
         if self.rate_per_day is not None:
-            found += _not_negative(
-                "First-order rate", self.rate_per_day, "per day", "Check its sign and unit"
-            )
+            found += _not_negative("First-order rate", self.rate_per_day, "per day", "Check its sign and unit")
         if self.clearance_L_per_day is not None:
             found += _not_negative(
                 "First-order clearance", self.clearance_L_per_day, "L/day", "Check its sign and unit"
@@ -152,9 +150,7 @@ class Repeated:
     doses: tuple[Dose, ...]
 
     def __post_init__(self) -> None:
-        found = list(
-            _positive("Cycle", self.cycle_day, "day", "Give the time after which the regimen repeats")
-        )
+        found = list(_positive("Cycle", self.cycle_day, "day", "Give the time after which the regimen repeats"))
         if not self.doses:
             found.append(Problem("Regimen", "no dose was given", "at least one dose per cycle", "Add a dose"))
         for number, dose in enumerate(self.doses, 1):
@@ -198,11 +194,7 @@ class Before:
 
     def __post_init__(self) -> None:
         _raise(
-            list(
-                _positive(
-                    "Time on the earlier regimen", self.for_day, "day", "Say for about how long it was taken"
-                )
-            )
+            list(_positive("Time on the earlier regimen", self.for_day, "day", "Say for about how long it was taken"))
         )
 
 
@@ -223,18 +215,14 @@ class Record:
     first_order: tuple[FirstOrder, ...] = ()
 
     def __post_init__(self) -> None:
-        found = list(
-            _finite("Start of the record", self.start_day, "Give the date on which the record begins")
-        )
+        found = list(_finite("Start of the record", self.start_day, "Give the date on which the record begins"))
         if self.start_mg is not None:
             found += _not_negative(
                 "Amount at the start", self.start_mg, "mg", "Give the amount in the body at the start"
             )
         for number, dose in enumerate(self.doses, 1):
             found += dose.problems(f"Dose {number}")
-            if dose.time_day < self.start_day - SAME_MOMENT_DAY and (
-                self.start_mg is None or self.before is not None
-            ):
+            if dose.time_day < self.start_day - SAME_MOMENT_DAY and (self.start_mg is None or self.before is not None):
                 found.append(
                     Problem(
                         f"Dose {number}, time",

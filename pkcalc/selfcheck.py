@@ -115,9 +115,7 @@ class Example:
 
 
 def _steady(v: Values) -> Values:
-    level = kinetics.steady_state_level(
-        Q(v["dose_rate"], "mg/day"), Q(v["vmax"], "mg/day"), Q(v["km"], "mg/L")
-    )
+    level = kinetics.steady_state_level(Q(v["dose_rate"], "mg/day"), Q(v["vmax"], "mg/day"), Q(v["km"], "mg/L"))
     return {"level": _number(level, "mg/L")}
 
 
@@ -154,9 +152,7 @@ def _ratio(v: Values) -> Values:
 
 def _one_level(v: Values) -> Values:
     vmax = float(
-        formulas.vmax_from_level(
-            dose_rate_mg_per_day=v["dose_rate"], level_mg_per_L=v["level"], km_mg_per_L=v["km"]
-        )
+        formulas.vmax_from_level(dose_rate_mg_per_day=v["dose_rate"], level_mg_per_L=v["level"], km_mg_per_L=v["km"])
     )
     return {"vmax": vmax}
 
@@ -274,9 +270,7 @@ def _ideal_weight(v: Values) -> Values:
 
 
 def _excess_weight(v: Values) -> Values:
-    weight = formulas.weight_with_excess(
-        weight_kg=v["weight"], ideal_weight_kg=v["ideal"], excess_factor=v["factor"]
-    )
+    weight = formulas.weight_with_excess(weight_kg=v["weight"], ideal_weight_kg=v["ideal"], excess_factor=v["factor"])
     return {"weight": float(weight)}
 
 
@@ -566,9 +560,7 @@ def _example(entry: dict[str, Any], file: str) -> Example:
         if not isinstance(entry.get(key), str) or not entry[key].strip():
             raise fail(key, "missing", "Add it as text")
     if entry["call"] not in CALLS:
-        raise fail(
-            "call", f'"{entry["call"]}" is not a known function', "Known are: " + ", ".join(sorted(CALLS))
-        )
+        raise fail("call", f'"{entry["call"]}" is not a known function', "Known are: " + ", ".join(sorted(CALLS)))
     if entry["kind"] not in KINDS:
         raise fail("kind", f'"{entry["kind"]}" was found', "Write one of: " + ", ".join(KINDS))
     if entry["status"] not in STATUSES:
@@ -630,9 +622,7 @@ def _read(raw: Any, kind: str, where: str) -> Any:
     return units.read(raw, kind, where, zero_allowed=True).value
 
 
-def _expected(
-    key: str, text: Any, call: Call, wider: Any, fail: Callable[[str, str, str], DrugFileError]
-) -> Expected:
+def _expected(key: str, text: Any, call: Call, wider: Any, fail: Callable[[str, str, str], DrugFileError]) -> Expected:
     if key not in call.results:
         raise fail(f"expected.{key}", "unknown result", "Known are: " + ", ".join(call.results))
     match = _NUMBER.match(text) if isinstance(text, str) else None
@@ -641,9 +631,7 @@ def _expected(
     number, label = match.group(0), text[match.end() :].strip()
     kind = call.results[key]
     if label not in _FACTORS[kind]:
-        raise fail(
-            f"expected.{key}", f'the unit "{label}" was found', "Write one of: " + ", ".join(_FACTORS[kind])
-        )
+        raise fail(f"expected.{key}", f'the unit "{label}" was found', "Write one of: " + ", ".join(_FACTORS[kind]))
     digits = number.replace(",", "")
     decimals = len(digits.partition(".")[2])
     tolerance = 0.5 * 10.0**-decimals
@@ -672,9 +660,7 @@ def unnoticed_inputs(example: Example) -> tuple[str, ...]:
     for key, kind in example.kinds.items():
         if kind == "word":
             continue
-        same = [
-            _same(example, {**example.inputs, key: example.inputs[key] * factor}) for factor in (1.2, 0.8)
-        ]
+        same = [_same(example, {**example.inputs, key: example.inputs[key] * factor}) for factor in (1.2, 0.8)]
         # a refusal may rightly stand in one direction; a number must change in both
         if all(same) if example.refused else any(same):
             silent.append(key)
@@ -795,8 +781,7 @@ def as_text(rows: tuple[Row, ...]) -> str:
     """The table: case, source, expected, ours, agrees."""
     head = ("case", "source", "quantity", "expected", "ours", "agrees")
     cells = [head] + [
-        (r.id, r.source, r.quantity.replace("_", " "), r.expected, r.ours, "yes" if r.agrees else "NO")
-        for r in rows
+        (r.id, r.source, r.quantity.replace("_", " "), r.expected, r.ours, "yes" if r.agrees else "NO") for r in rows
     ]
     widths = [max(len(line[i]) for line in cells) for i in range(len(head))]
     lines = ["  ".join(c.ljust(w) for c, w in zip(line, widths, strict=True)).rstrip() for line in cells]

@@ -140,9 +140,7 @@ class Site:
                 unit = profile.forms[form].amount_unit
                 words = f"at most {show(flat, f'{unit}/min')}"
                 if scaled is not None:
-                    words = (
-                        f"at most {show(scaled, f'{unit}/kg/min')}, never above {show(flat, f'{unit}/min')}"
-                    )
+                    words = f"at most {show(scaled, f'{unit}/kg/min')}, never above {show(flat, f'{unit}/min')}"
                 return RateCap(
                     form,
                     group,
@@ -231,9 +229,7 @@ def load_site(path: str | Path) -> Site:
         ) from None
     if len(raw) > MAX_BYTES:
         raise CaseError(
-            Problem(
-                "Site file", f"{file.name} has {len(raw):,} bytes", f"up to {MAX_BYTES:,}", "Shorten the file"
-            )
+            Problem("Site file", f"{file.name} has {len(raw):,} bytes", f"up to {MAX_BYTES:,}", "Shorten the file")
         )
     try:
         text = raw.decode("utf-8")
@@ -278,9 +274,7 @@ class _Reader:
         if value is None:
             return None
         if not isinstance(value, str) or not value.strip() or len(value) > 200:
-            self.say(
-                section, key, "not a text", 'a text in quotation marks, such as "10 mg/L"', "Write it so"
-            )
+            self.say(section, key, "not a text", 'a text in quotation marks, such as "10 mg/L"', "Write it so")
             return None
         return value.strip()
 
@@ -368,9 +362,7 @@ class _Reader:
     def leftovers(self) -> None:
         for section, table in self.data.items():
             if section not in self.asked:
-                self.say(
-                    section, "", "an unknown section", ", ".join(self.asked), "Take it out or mend its name"
-                )
+                self.say(section, "", "an unknown section", ", ".join(self.asked), "Take it out or mend its name")
             elif not isinstance(table, dict):
                 self.say(section, "", "not a section", f"[{section}] with settings below it", "Write it so")
             else:
@@ -393,9 +385,7 @@ def parse_site(text: str, file: str) -> Site:
     drug = head.get("drug") if isinstance(head, dict) else None
     if not isinstance(drug, str):
         raise CaseError(
-            Problem(
-                f"{file}, site.drug", "missing", ", ".join(drug_names()), "Name the drug the settings are for"
-            )
+            Problem(f"{file}, site.drug", "missing", ", ".join(drug_names()), "Name the drug the settings are for")
         )
     profile = load_profile(drug)
     r = _Reader(file, data, profile)
@@ -499,10 +489,8 @@ def _settings(r: _Reader, name: str, protocol: str, sha256: str) -> Site:
         population=r.choice("population", "name", tuple(profile.populations), "default"),
         warn_chance=warn,
         stop_chance=stop,
-        loss_too_high=r.number("loss", "too_high", (1.0, 100.0), show_number(base.loss_too_high))
-        or base.loss_too_high,
-        loss_too_low=r.number("loss", "too_low", (0.01, 100.0), show_number(base.loss_too_low))
-        or base.loss_too_low,
+        loss_too_high=r.number("loss", "too_high", (1.0, 100.0), show_number(base.loss_too_high)) or base.loss_too_high,
+        loss_too_low=r.number("loss", "too_low", (0.01, 100.0), show_number(base.loss_too_low)) or base.loss_too_low,
         session_timeout_min=(
             1440 * timeout
             if (

@@ -55,9 +55,7 @@ def parse_sources(text: str, file: str) -> Mapping[str, Source]:
     found: dict[str, Source] = {}
     for key, entry in data.items():
         if not isinstance(entry, dict):
-            raise DrugFileError(
-                f"{file}, {key}: expected a table of source entries. Write [{key}] above them."
-            )
+            raise DrugFileError(f"{file}, {key}: expected a table of source entries. Write [{key}] above them.")
         for name in _NEEDED:
             if not isinstance(entry.get(name), str) or not entry[name].strip():
                 raise DrugFileError(f'{file}, {key}.{name}: missing or empty. Add {name} = "..." as text.')

@@ -125,7 +125,8 @@ def settling(
             f"90 % of the way takes {need} here."
         )
         if missed:
-            sentence += f" Not steady: {'1 dose was' if missed == 1 else f'{missed} doses were'} missed within that time before it."
+            count = "1 dose was" if missed == 1 else f"{missed} doses were"
+            sentence += f" Not steady: {count} missed within that time before it."
         found.append(Settling(o.level.index, days, fraction, needed, settled, sentence))
     return tuple(found)
 

@@ -317,3 +317,26 @@ def show(value: float, label: str, digits: int = 3) -> str:
     """Number and unit for screen and paper: '0.5 mg/L', '1,250 mg'."""
     text = show_number(value, digits)
     return f"{text} {label}" if label else text
+
+
+def percent(share: float) -> str:
+    """A chance in words that never read as impossible or certain."""
+    if share <= 0:
+        return "0 %"
+    if share < 0.01:
+        return "less than 1 %"
+    if 0.99 < share < 1:
+        return "more than 99 %"
+    return f"{show_number(100 * share, 2)} %"
+
+
+def percent_beside(share: float, limit: float) -> str:
+    """A chance with as many digits as it takes to tell it from the limit that it is held against."""
+    text, bound = percent(share), percent(limit)
+    if text != bound or share == limit:
+        return text
+    for digits in range(3, 7):
+        text = f"{show_number(100 * share, digits)} %"
+        if text != bound:
+            return text
+    return f"just {'above' if share > limit else 'below'} {bound}"

@@ -11,7 +11,6 @@ import streamlit as st
 from pkcalc_form import look
 
 from pkcalc.case import dump_case
-from pkcalc.cautions import percent
 from pkcalc.consult import Consult, Shown
 from pkcalc.errors import Caution
 from pkcalc.estimate.result import Band, Estimate
@@ -33,7 +32,7 @@ from pkcalc.note.words import (
     short_band,
 )
 from pkcalc.note.workings import workings
-from pkcalc.units import show, show_number
+from pkcalc.units import percent, show, show_number
 
 STOPPED = "The calculation stopped. No number is shown. Please report this fault to the maintainers of this page."
 URGENT = (

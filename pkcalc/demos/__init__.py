@@ -37,8 +37,6 @@ def demonstration(name: str) -> Case:
     known = {d.name: d for d in demonstrations()}
     if name not in known:
         raise CaseError(
-            Problem(
-                "Demonstration", f'"{name[:40]}" was given', ", ".join(known), "Choose one of these names"
-            )
+            Problem("Demonstration", f'"{name[:40]}" was given', ", ".join(known), "Choose one of these names")
         )
     return check_case(parse_case_text(known[name].text))

@@ -95,9 +95,7 @@ MOVEMENTS: Mapping[Movement, Mapping[str, str]] = {
         "to the left.",
         "R against R/C": "The patient's line stays. Taken for steady, the low level stands too far to the "
         "right at the height of its dose.",
-        LEVEL_AGAINST_DOSE: (
-            "The patient's curve stays. Taken for steady, the low level stands straight below it."
-        ),
+        LEVEL_AGAINST_DOSE: ("The patient's curve stays. Taken for steady, the low level stands straight below it."),
     },
 }
 
@@ -148,24 +146,21 @@ def clinic_events(patient: Patient, sizes: Sizes | None = None) -> tuple[EventEf
         _changed(
             patient,
             "inducer started",
-            f"After some weeks the liver makes more enzyme: Vmax is {_times(size.inducer)} what it was, Km "
-            "the same.",
+            f"After some weeks the liver makes more enzyme: Vmax is {_times(size.inducer)} what it was, Km the same.",
             vmax * size.inducer,
             km,
         ),
         _changed(
             patient,
             "inhibitor started",
-            f"Part of the enzyme is put out of action: Vmax is {_times(size.inhibitor)} what it was, Km the "
-            "same.",
+            f"Part of the enzyme is put out of action: Vmax is {_times(size.inhibitor)} what it was, Km the same.",
             vmax * size.inhibitor,
             km,
         ),
         _changed(
             patient,
             "reversible competitor started",
-            f"Another drug competes for the same enzyme: Km is {_times(size.competitor)} what it was, Vmax "
-            "the same.",
+            f"Another drug competes for the same enzyme: Km is {_times(size.competitor)} what it was, Vmax the same.",
             vmax,
             km * size.competitor,
         ),
@@ -181,9 +176,7 @@ def _times(factor: float) -> str:
 
 
 def _settles_at(rate: float, vmax: float, km: float) -> float | None:
-    level = float(
-        formulas.steady_state_level(dose_rate_mg_per_day=rate, vmax_mg_per_day=vmax, km_mg_per_L=km)
-    )
+    level = float(formulas.steady_state_level(dose_rate_mg_per_day=rate, vmax_mg_per_day=vmax, km_mg_per_L=km))
     return level if np.isfinite(level) else None
 
 
@@ -192,9 +185,7 @@ def _holds(level: float, vmax: float, km: float) -> float:
 
 
 def _level_words(level: float | None) -> str:
-    return (
-        "no steady level: the dose is more than the body can remove" if level is None else show(level, "mg/L")
-    )
+    return "no steady level: the dose is more than the body can remove" if level is None else show(level, "mg/L")
 
 
 def _effect_words(patient: Patient, before: float | None, after: float | None, dose_after: float) -> str:
@@ -215,9 +206,7 @@ def _changed(patient: Patient, name: str, story: str, vmax: float, km: float) ->
     dose_after = _holds(patient.aim_mg_per_L, vmax, km)
     traces = {
         picture: (
-            true_line(
-                picture, vmax=patient.vmax_mg_per_day, km=patient.km_mg_per_L, layer="before", beside_km=km
-            ),
+            true_line(picture, vmax=patient.vmax_mg_per_day, km=patient.km_mg_per_L, layer="before", beside_km=km),
             true_line(picture, vmax=vmax, km=km, layer="after", beside_km=patient.km_mg_per_L),
         )
         for picture in PICTURES
@@ -300,9 +289,7 @@ def _missed(patient: Patient, missed_days: float, restarted_days: float, volume_
     trough = after(missed_days, start, 0.0)
     drawn = after(restarted_days, trough, rate)
     right = _holds(patient.aim_mg_per_L, vmax, km)
-    false_vmax = float(
-        formulas.vmax_from_level(dose_rate_mg_per_day=rate, level_mg_per_L=drawn, km_mg_per_L=km)
-    )
+    false_vmax = float(formulas.vmax_from_level(dose_rate_mg_per_day=rate, level_mg_per_L=drawn, km_mg_per_L=km))
     wrong = _holds(patient.aim_mg_per_L, false_vmax, km)
     traces = {
         picture: (

@@ -76,9 +76,7 @@ class SteadyPairs:
             for at in np.flatnonzero(~(np.isfinite(values) & (values > 0))):
                 given = show(float(values[at]), unit) if np.isfinite(values[at]) else "no finite number"
                 problems.append(
-                    Problem(
-                        f"{words}, pair {at + 1}", f"{given} was given", "a number above 0", "Check the entry"
-                    )
+                    Problem(f"{words}, pair {at + 1}", f"{given} was given", "a number above 0", "Check the entry")
                 )
         index = np.array(self.index, dtype=np.int64).reshape(-1)
         index.setflags(write=False)
@@ -128,8 +126,7 @@ def gather(steady: Sequence[SteadyPair]) -> SteadyPairs:
     if {"free", "total"} <= {pair.kind for pair in steady}:
         raise CannotEstimate(
             "Some of these levels are free and others total.",
-            "Free and total levels cannot stand in one plot, because binding differs between patients and "
-            "days.",
+            "Free and total levels cannot stand in one plot, because binding differs between patients and days.",
             "Use levels of one kind, or give the albumin so that all are brought to one basis.",
         )
     return SteadyPairs(
@@ -183,9 +180,7 @@ def line_axes(kind: StraightLine, *, level: Floats, rate: Floats) -> tuple[Float
     return rate / level, rate
 
 
-def straight_line(
-    kind: StraightLine, *, level: Floats, rate: Floats, weights: Floats | None = None
-) -> ReadOff:
+def straight_line(kind: StraightLine, *, level: Floats, rate: Floats, weights: Floats | None = None) -> ReadOff:
     """Ordinary least squares of one of the three straight lines, and Vmax and Km as they are read off it.
 
     level, rate: shape (..., n), positive. weights: of the squared vertical distances, default 1, as taught.
@@ -299,9 +294,7 @@ def _why_not(vmax: float, km: float, pairs: SteadyPairs) -> str:
     if not (np.isfinite(vmax) and np.isfinite(km)):
         return "no saturation shows in the way it weighs them"
     if vmax <= 0 or km <= 0:
-        bad = [_below_zero("Vmax", vmax, "mg/day")] * (vmax <= 0) + [_below_zero("Km", km, "mg/L")] * (
-            km <= 0
-        )
+        bad = [_below_zero("Vmax", vmax, "mg/day")] * (vmax <= 0) + [_below_zero("Km", km, "mg/L")] * (km <= 0)
         return f"it would read {' and '.join(bad)}, which is impossible"
     if vmax <= largest * (1.0 + 1e-9):
         return (
@@ -527,8 +520,7 @@ def _by_crossings(pairs: SteadyPairs, draws: int, volume: VolumeSpread | None) -
     if not np.isfinite(vmax):
         return LineFailure(
             DIRECT_LINEAR,
-            f"{outside} of its {len(found.first)} crossings lie outside the positive quadrant, so the "
-            "median does too",
+            f"{outside} of its {len(found.first)} crossings lie outside the positive quadrant, so the median does too",
         )
     why = _why_not(vmax, km, pairs)
     if why:
@@ -551,9 +543,7 @@ def _by_crossings(pairs: SteadyPairs, draws: int, volume: VolumeSpread | None) -
     return result or LineFailure(DIRECT_LINEAR, _NO_REDRAW)
 
 
-def _by_straight_line(
-    kind: StraightLine, pairs: SteadyPairs, draws: int, volume: VolumeSpread | None
-) -> Result:
+def _by_straight_line(kind: StraightLine, pairs: SteadyPairs, draws: int, volume: VolumeSpread | None) -> Result:
     rate = pairs.rate_mg_per_day
     if all_one(rate):
         return LineFailure(kind, _ONE_DOSE)
@@ -565,9 +555,7 @@ def _by_straight_line(
     at, share = _pull(kind, pairs)
     why = _why_not(vmax, km, pairs)
     if why:
-        return LineFailure(
-            kind, f"{why}; {pairs.words(at)} alone has {100 * share:.0f} % of the pull on this line"
-        )
+        return LineFailure(kind, f"{why}; {pairs.words(at)} alone has {100 * share:.0f} % of the pull on this line")
     drawn = straight_line(kind, level=redrawn_levels(pairs, draws), rate=rate)
     result = _resampled(
         method=kind,
@@ -582,9 +570,7 @@ def _by_straight_line(
     return result or LineFailure(kind, _NO_REDRAW)
 
 
-def compare(
-    pairs: SteadyPairs, *, draws: int = 2048, volume: VolumeSpread | None = None
-) -> tuple[Result, ...]:
+def compare(pairs: SteadyPairs, *, draws: int = 2048, volume: VolumeSpread | None = None) -> tuple[Result, ...]:
     """All five methods on the same pairs, in the order of `METHODS`: an Estimate each, or the reason why not.
 
     draws: number of draws in each estimate before inadmissible ones are set aside.

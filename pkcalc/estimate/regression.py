@@ -307,9 +307,7 @@ def _best_on_grid(search: _Search, low: float, high: float) -> float | None:
     return None if at_an_end else float(grid[at])
 
 
-def _summarise(
-    vmax: float, km: float, residuals: Floats, jacobian: Floats, *, known_spread: bool
-) -> CurveFit:
+def _summarise(vmax: float, km: float, residuals: Floats, jacobian: Floats, *, known_spread: bool) -> CurveFit:
     """Standard errors from the derivatives by ln Vmax and ln Km (first and second column)."""
     q, r = np.linalg.qr(jacobian)
     inverse = np.linalg.inv(r)
@@ -352,9 +350,7 @@ def _searched_limits(search: _Search, centre: float, target: float) -> tuple[flo
     return float(ends[0]), float(ends[1])
 
 
-def _linear_limits(
-    search: _Search, centre: float, low: float, high: float, target: float
-) -> tuple[float, float]:
+def _linear_limits(search: _Search, centre: float, low: float, high: float, target: float) -> tuple[float, float]:
     """The extremes of the other parameter over all values of the searched one inside its limits."""
     ends = []
     start = (max(low, centre - _FARTHEST), min(high, centre + _FARTHEST))

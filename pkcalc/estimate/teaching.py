@@ -117,8 +117,7 @@ HOW_READ: Mapping[str, str] = {
     ),
     "R against R/C": "Vmax is the height at which the line meets the vertical axis; Km is minus the slope.",
     LEVEL_AGAINST_DOSE: (
-        "Vmax is the dose rate at which the curve goes straight up; Km is the level on half of that dose "
-        "rate."
+        "Vmax is the dose rate at which the curve goes straight up; Km is the level on half of that dose rate."
     ),
 }
 
@@ -171,8 +170,7 @@ def _direct_linear(pairs: SteadyPairs, result: Result, redrawn: Floats | None) -
         vmax, km = medians(found)
         good = admissible(vmax, km, pairs)
         traces += [
-            Trace(f"repeat {at + 1}", "repeat", (float(km[at]),), (float(vmax[at]),))
-            for at in np.flatnonzero(good)
+            Trace(f"repeat {at + 1}", "repeat", (float(km[at]),), (float(vmax[at]),)) for at in np.flatnonzero(good)
         ]
         repeat_words = _repeat_words(vmax, km, good)
     for at, (r, c) in enumerate(zip(rate, level, strict=True)):
@@ -235,9 +233,7 @@ def _curve(pairs: SteadyPairs, result: Result, redrawn: Floats | None) -> Pictur
         fitted = np.full((len(redrawn), 2), np.nan)
         for at, levels in enumerate(redrawn):
             try:
-                fit = level_on_rate(
-                    rate_mg_per_day=rate, level_mg_per_L=levels, level_log_sd=pairs.level_log_sd
-                )
+                fit = level_on_rate(rate_mg_per_day=rate, level_mg_per_L=levels, level_log_sd=pairs.level_log_sd)
             except CannotEstimate:
                 continue  # counted among the sets that give no possible answer
             fitted[at] = fit.vmax, fit.km
@@ -247,9 +243,7 @@ def _curve(pairs: SteadyPairs, result: Result, redrawn: Floats | None) -> Pictur
             for at in np.flatnonzero(good)
         ]
         repeat_words = _repeat_words(fitted[:, 0], fitted[:, 1], good)
-    traces += [
-        Trace(pairs.words(at), "pair", (float(rate[at]),), (float(level[at]),)) for at in range(len(pairs))
-    ]
+    traces += [Trace(pairs.words(at), "pair", (float(rate[at]),), (float(level[at]),)) for at in range(len(pairs))]
     if isinstance(result, Estimate):
         vmax, km = result.point.vmax_mg_per_day, result.point.km_mg_per_L
         roof = max(roof, km)
@@ -277,9 +271,7 @@ def _repeat_words(vmax: Floats, km: Floats, good: np.ndarray[tuple[int, ...], np
         f"{show_number(float(vmax[good].min()))} to {show(float(vmax[good].max()), 'mg/day')} and Km from "
         f"{show_number(float(km[good].min()))} to {show(float(km[good].max()), 'mg/L')}"
     )
-    return text + (
-        "." if not failed else f"; {failed} {'gives' if failed == 1 else 'give'} no possible answer."
-    )
+    return text + ("." if not failed else f"; {failed} {'gives' if failed == 1 else 'give'} no possible answer.")
 
 
 def true_line(picture: str, *, vmax: float, km: float, layer: str, beside_km: float) -> Trace:

@@ -72,12 +72,7 @@ def check_pairs(pairs: SteadyPairs) -> tuple[PairCheck, ...]:
         km, vmax = found.km_counted[own], found.vmax_counted[own]
         outside = int(np.isinf(km).sum())
         residual = residuals[at]
-        odd = (
-            len(pairs) > FEWEST
-            and residual is not None
-            and abs(residual) >= STANDS_OUT
-            and abs(residual) == largest
-        )
+        odd = len(pairs) > FEWEST and residual is not None and abs(residual) >= STANDS_OUT and abs(residual) == largest
         words = pairs.words(at)
         text = words[0].upper() + words[1:]
         if residual is None:
@@ -123,9 +118,7 @@ def verdict(results: tuple[Result, ...], pairs: SteadyPairs) -> Verdict:
     suspects = tuple(check.level for check in checks if check.stands_out)
     odd = " ".join(check.text for check in checks if check.stands_out)
     failed = [
-        result.method
-        for result in results
-        if isinstance(result, LineFailure) and result.method in STRAIGHT_LINES
+        result.method for result in results if isinstance(result, LineFailure) and result.method in STRAIGHT_LINES
     ]
     tail = (
         f" {_listed(failed)} {'fails' if len(failed) == 1 else 'fail'} here, which is what straight lines "
@@ -146,9 +139,7 @@ def verdict(results: tuple[Result, ...], pairs: SteadyPairs) -> Verdict:
         if regression.diagnostics["widened by"] != 1.0:
             text += f" {odd} Check it first." if odd else " No single pair can be blamed: check them all."
         else:
-            text += (
-                " The levels do not contradict one another; they lie too nearly in proportion to the dose."
-            )
+            text += " The levels do not contradict one another; they lie too nearly in proportion to the dose."
         if isinstance(direct, Estimate):
             text += f" One wrong level moves the direct linear plot least: {_numbers(direct)}."
         return Verdict(None, text + tail, suspects)

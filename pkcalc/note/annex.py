@@ -5,7 +5,6 @@ from __future__ import annotations
 import numpy as np
 
 from pkcalc.case import QUESTIONS, EarlierForecast
-from pkcalc.cautions import percent
 from pkcalc.clock import show_time
 from pkcalc.consult import Consult, Shown
 from pkcalc.dosing import active_mg
@@ -34,7 +33,7 @@ from pkcalc.note.words import (
 from pkcalc.note.workings import REPRESENTATIVE, machine_only, workings
 from pkcalc.plan.loading import Load
 from pkcalc.sources import source
-from pkcalc.units import show, show_number
+from pkcalc.units import percent, show, show_number
 
 __all__ = ["DANGER_HEADS", "annex", "danger_row", "estimate_lines", "populations_compared"]
 

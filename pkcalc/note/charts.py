@@ -20,7 +20,6 @@ from numpy.typing import NDArray
 
 from pkcalc import flow
 from pkcalc.case import Case
-from pkcalc.cautions import percent
 from pkcalc.clock import show_date
 from pkcalc.consult import Consult, Shown, record_spread
 from pkcalc.dosing import active_mg
@@ -28,7 +27,7 @@ from pkcalc.estimate.intake import taken_on_average
 from pkcalc.estimate.posterior import WHOLE_RECORD, with_population_path, written_out
 from pkcalc.forecast import fewer_draws
 from pkcalc.note.words import NOT_OFFERED, mark_of, short_words
-from pkcalc.units import show, show_number
+from pkcalc.units import percent, show, show_number
 
 Floats = NDArray[np.float64]
 

@@ -8,7 +8,6 @@ from collections.abc import Sequence
 from pkcalc import __version__
 from pkcalc import plan as planning
 from pkcalc.case import QUESTIONS
-from pkcalc.cautions import percent, percent_beside
 from pkcalc.clock import show_time
 from pkcalc.consult import Consult, Shown
 from pkcalc.note import hours
@@ -29,7 +28,7 @@ from pkcalc.note.words import (
     sentence,
 )
 from pkcalc.plan.candidates import candidates
-from pkcalc.units import show, show_number
+from pkcalc.units import percent, percent_beside, show, show_number
 
 #: Lines and columns of the block to paste into a record.
 PASTE_LINES, PASTE_WIDTH = 25, 78

@@ -5,14 +5,13 @@ from __future__ import annotations
 import math
 from typing import Any
 
-from pkcalc.cautions import percent
 from pkcalc.clock import show_time
 from pkcalc.consult import Consult
 from pkcalc.estimate.result import Band
 from pkcalc.formulas import molar_level
 from pkcalc.note.words import NO_STEADY_STATE, Section, Table, edge, sentence, short_band
 from pkcalc.plan.projection import Amount, Path, Projection
-from pkcalc.units import FACTORS, MOLAR, show, show_number
+from pkcalc.units import FACTORS, MOLAR, percent, show, show_number
 
 #: Levels are told in these steps on page one; all of them stand in the annex.
 FRONT_STEPS = 3

@@ -7,11 +7,10 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from pkcalc.cautions import percent
 from pkcalc.consult import Consult, Shown
 from pkcalc.estimate.result import Band
 from pkcalc.forecast import Forecast
-from pkcalc.units import show, show_number
+from pkcalc.units import percent, show, show_number
 
 URGENT = (
     "Active status epilepticus is treated by the local protocol now and never waits for this note. An acute overdose "

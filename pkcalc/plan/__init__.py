@@ -26,7 +26,6 @@ from pkcalc.plan.candidates import (
     as_regimen,
     by_loss,
     candidates,
-    percent,
     shown,
     with_courses,
 )
@@ -52,7 +51,7 @@ from pkcalc.plan.shelf import (
     shelf_in_use,
 )
 from pkcalc.site import DAYS, Site
-from pkcalc.units import show
+from pkcalc.units import percent, show
 
 __all__ = [
     "Candidate",

@@ -30,7 +30,7 @@ from pkcalc.forecast import (
 from pkcalc.levels import LabScale
 from pkcalc.plan.shelf import Dispensable, dispense_words, regimen_words
 from pkcalc.site import Site
-from pkcalc.units import show, show_number
+from pkcalc.units import percent, percent_beside, show
 
 Floats = NDArray[np.float64]
 
@@ -277,12 +277,12 @@ def _judge(c: Candidate, s: Setting) -> Candidate:
         if c.taken.above_critical > limit:
             why.append(
                 f"Taken in full, the chance of a level {above} or of no steady state once settled is "
-                f"{percent_against(c.danger_at_plateau, limit)}, above the limit of {percent(limit)}."
+                f"{percent_beside(c.danger_at_plateau, limit)}, above the limit of {percent(limit)}."
             )
         else:
             why.append(
                 f"The level is high today: at the next feasible draw, in {show(s.draw_days, 'days')}, the chance of a "
-                f"level {above} is still {percent_against(c.danger, limit)}, above the limit of {percent(limit)}."
+                f"level {above} is still {percent_beside(c.danger, limit)}, above the limit of {percent(limit)}."
             )
     if c.rate_mg_per_day > s.largest_mg_per_day * (1 + 1e-9):
         why.append(
@@ -299,25 +299,6 @@ def _judge(c: Candidate, s: Setting) -> Candidate:
                 f"{show(s.step.step_mg_per_day, 'mg/day')} ({s.step.words})."
             )
     return replace(c, offered=not why, why_not=tuple(why), warned=c.danger > warn)
-
-
-def percent(share: float) -> str:
-    """A chance in words that never read as impossible or certain."""
-    if share <= 0:
-        return "0 %"
-    if share < 0.01:
-        return "less than 1 %"
-    if 0.99 < share < 1:
-        return "more than 99 %"
-    return f"{show_number(100 * share, 2)} %"
-
-
-def percent_against(share: float, limit: float) -> str:
-    """A chance with enough digits to be told from a limit that it is not equal to."""
-    if share == limit or percent(share) != percent(limit):
-        return percent(share)
-    digits = next((d for d in range(3, 13) if show_number(100 * share, d) != show_number(100 * limit, d)), 12)
-    return f"{show_number(100 * share, digits)} %"
 
 
 def shown(

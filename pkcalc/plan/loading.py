@@ -17,12 +17,11 @@ from pkcalc.dosing import Intake, absorption_of, active_mg
 from pkcalc.drugs.profile import IvLine, OralLoad, Product, Profile, RateCap
 from pkcalc.estimate.result import Band, Estimate
 from pkcalc.forecast import TIME_DRAWS, Goal, bands, draws_of, fewer_draws
-from pkcalc.plan.candidates import percent
 from pkcalc.plan.limits import is_child
 from pkcalc.plan.present import Floats, Today, present_course
 from pkcalc.record import Dose, Record
 from pkcalc.site import Site
-from pkcalc.units import show, show_number
+from pkcalc.units import percent, show, show_number
 
 #: From this age an infusion runs at the slower rate (as the drug file's group "elderly or heart disease").
 ELDERLY_YEARS = 65.0

@@ -25,10 +25,9 @@ from pkcalc.estimate.result import Band, Estimate, band
 from pkcalc.forecast import TIME_DRAWS, Goal, bands, fewer_draws
 from pkcalc.given import given_record
 from pkcalc.levels import Observation
-from pkcalc.plan.candidates import percent
 from pkcalc.record import Dose, Record
 from pkcalc.site import Site
-from pkcalc.units import show
+from pkcalc.units import percent, show
 
 Floats = NDArray[np.float64]
 

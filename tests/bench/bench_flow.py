@@ -98,9 +98,7 @@ def against_solve_ivp() -> None:
     for name, call in plans.items():
         seconds[name] = best(call, 2 if name == "finest" else 4)
         error = worst(call()[sample], truth)
-        print(
-            f"  engine, {name}: {1e3 * seconds[name]:.0f} ms, largest error {error:.1e} (fastest draws among 12)"
-        )
+        print(f"  engine, {name}: {1e3 * seconds[name]:.0f} ms, largest error {error:.1e} (fastest draws among 12)")
     engine, error = seconds["everyday"], worst(plans["everyday"]()[sample], truth)
     for method in ("LSODA", "DOP853"):
         for rtol in (1e-3, 1e-4, 1e-5, 1e-6, 1e-7):
@@ -132,9 +130,7 @@ def growth() -> None:
     vmax, kappa = draws(1024)
     for days in (10, 30, 100, 300, 1000, 3400):
         took = best(lambda d=days: flow.amounts(record(d), [float(d)], vmax, kappa, typical_per_day=7.0), 1)
-        print(
-            f"   1,024 draws, {3 * days:>6,} events: {1e3 * took:7.0f} ms, {1e9 * took / 1024 / 3 / days:5.0f}"
-        )
+        print(f"   1,024 draws, {3 * days:>6,} events: {1e3 * took:7.0f} ms, {1e9 * took / 1024 / 3 / days:5.0f}")
 
 
 def memory() -> None:
@@ -181,9 +177,7 @@ def others() -> None:
             lambda _, c: 6.0 - v[0] * c / (k[0] + c), (0, 3.0), [20.0], method="DOP853", rtol=1e-6, atol=1e-9
         )
     )
-    print(
-        f"  closed-form piece: {1e9 * piece:.0f} ns per draw, one solve_ivp call is {single / piece:,.0f} times that"
-    )
+    print(f"  closed-form piece: {1e9 * piece:.0f} ns per draw, one solve_ivp call is {single / piece:,.0f} times that")
 
 
 if __name__ == "__main__":

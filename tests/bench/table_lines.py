@@ -54,11 +54,7 @@ class Tally:
     covered: np.ndarray
 
     def vmax_cell(self) -> str:
-        return (
-            f"{_bias(self.vmax)}, {_rmse(self.vmax)}; {100 * self.covered.mean():.0f} %"
-            if self._enough()
-            else "-"
-        )
+        return f"{_bias(self.vmax)}, {_rmse(self.vmax)}; {100 * self.covered.mean():.0f} %" if self._enough() else "-"
 
     def km_cell(self) -> str:
         failed = f" ({100 * self.failed:.1f} % failed)" if self.failed else ""

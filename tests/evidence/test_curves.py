@@ -142,9 +142,7 @@ def test_published_t90_formula_and_the_table_that_does_not_follow_from_it() -> N
         assert abs(done.y[0, -1] / (0.9 * steady) - 1) < 1e-10
 
 
-@pytest.mark.parametrize(
-    ("share", "days"), [(0.5, "2.50"), (0.7, "8.78"), (0.8, "21.4"), (0.9, "90.7"), (0.95, "371")]
-)
+@pytest.mark.parametrize(("share", "days"), [(0.5, "2.50"), (0.7, "8.78"), (0.8, "21.4"), (0.9, "90.7"), (0.95, "371")])
 def test_t90_by_formula_and_by_engine(share: float, days: str) -> None:
     """Km 4.5 mg/L, V 45 L, 300 mg/day. Source: derived for this project and checked with an independent solver."""
     vmax = 300.0 / share

@@ -252,8 +252,7 @@ def test_level_regression_against_a_general_optimiser():
         return (np.log(level) - np.log(km * rate / (vmax - rate))) / sd
 
     runs = [
-        least_squares(residual, [start, 1.0], xtol=1e-15, ftol=1e-15, gtol=1e-15)
-        for start in (2.0, 3.0, 4.0, 5.0, 6.0)
+        least_squares(residual, [start, 1.0], xtol=1e-15, ftol=1e-15, gtol=1e-15) for start in (2.0, 3.0, 4.0, 5.0, 6.0)
     ]
     best = min(runs, key=lambda run: run.cost)
     fit: CurveFit = level_on_rate(rate_mg_per_day=rate, level_mg_per_L=level, level_log_sd=sd)
@@ -331,9 +330,7 @@ def test_aledo_straight_lines_in_exact_arithmetic(kind, power, km, vmax):
     sxx = sum(a * b * b for a, b in zip(w, x, strict=True))
     slope = (n * sxy - sx * sy) / (n * sxx - sx * sx)
     intercept = (sy - slope * sx) / n
-    exact = (
-        (1 / intercept, slope / intercept) if kind == "double reciprocal" else (1 / slope, intercept / slope)
-    )
+    exact = (1 / intercept, slope / intercept) if kind == "double reciprocal" else (1 / slope, intercept / slope)
     line = straight_line(kind, level=GROUP_2_LEVEL, rate=GROUP_2_RATE, weights=GROUP_2_RATE**power)
     assert float(line.vmax) == pytest.approx(float(exact[0]), rel=1e-11)
     assert float(line.km) == pytest.approx(float(exact[1]), rel=1e-11)

@@ -106,9 +106,7 @@ def test_two_times_in_a_row_are_one(
     one = way(c0, r, v, km)
     once = float(f.level_after(time_day=t1 + t2, linear_clearance_L_per_day=k, **one))
     middle = float(f.level_after(time_day=t1, linear_clearance_L_per_day=k, **one))
-    twice = float(
-        f.level_after(time_day=t2, linear_clearance_L_per_day=k, **dict(one, start_mg_per_L=middle))
-    )
+    twice = float(f.level_after(time_day=t2, linear_clearance_L_per_day=k, **dict(one, start_mg_per_L=middle)))
     if once < 1e-250:
         return
     condition = 1 + ((r + v * once / (km + once) + k * once) * (t1 + t2) + c0) / once
@@ -154,9 +152,7 @@ def test_ordering(t: float, c0: float, share: float, v: float, km: float, k: flo
 def test_the_steady_level_is_a_fixed_point(t: float, share: float, v: float, km: float, k: float) -> None:
     r = share * v
     steady = float(
-        f.steady_state_level(
-            dose_rate_mg_per_day=r, vmax_mg_per_day=v, km_mg_per_L=km, linear_clearance_L_per_day=k
-        )
+        f.steady_state_level(dose_rate_mg_per_day=r, vmax_mg_per_day=v, km_mg_per_L=km, linear_clearance_L_per_day=k)
     )
     after = f.level_after(time_day=t, linear_clearance_L_per_day=k, **way(steady, r, v, km))
     assert math.isclose(float(after), steady, rel_tol=1e-12 / (1 - share))

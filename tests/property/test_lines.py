@@ -83,9 +83,7 @@ def test_on_two_pairs_all_methods_are_the_closed_form(patient):
 @settings(max_examples=60)
 def test_other_units_of_dose_and_level_change_only_the_units(data, of_rate, of_level):
     """Powers of two, so that the scaling itself is exact and a draw at the edge cannot fall to the other side."""
-    scaled = SteadyPairs(
-        data.rate_mg_per_day * of_rate, data.level_mg_per_L * of_level, data.level_log_sd, data.index
-    )
+    scaled = SteadyPairs(data.rate_mg_per_day * of_rate, data.level_mg_per_L * of_level, data.level_log_sd, data.index)
     for one, other in zip(compare(data, draws=64), compare(scaled, draws=64), strict=True):
         assert type(one) is type(other)
         if isinstance(one, LineFailure):

@@ -11,14 +11,10 @@ import pytest
 ROOT = Path(__file__).parents[2]
 # Put together from parts, so that this file does not hold what it looks for.
 HOSTS = re.compile(
-    r"https?://[^ \"']*(?:"
-    + "|".join(["py" + "pi", "python" + "hosted", "npm" + "js", "deb" + r"ian\.org"])
-    + ")",
+    r"https?://[^ \"']*(?:" + "|".join(["py" + "pi", "python" + "hosted", "npm" + "js", "deb" + r"ian\.org"]) + ")",
     re.I,
 )
-PATHS = re.compile(
-    "(?:^|[\\s\"'=(])/" + "(?:" + "|".join(["wo" + "rk", "ro" + "ot", "ho" + "me", "farm"]) + ")/", re.M
-)
+PATHS = re.compile("(?:^|[\\s\"'=(])/" + "(?:" + "|".join(["wo" + "rk", "ro" + "ot", "ho" + "me", "farm"]) + ")/", re.M)
 
 
 def tracked() -> list[Path]:

@@ -156,10 +156,7 @@ def test_a_fault_shows_no_number_and_no_traceback(tmp_path: Path) -> None:
     done = subprocess.run([sys.executable, "-c", code], capture_output=True, text=True, check=False)
     assert done.returncode == 1
     assert done.stdout == ""
-    assert (
-        done.stderr
-        == "The calculation stopped (RuntimeError). No number was given. Please report this fault.\n"
-    )
+    assert done.stderr == "The calculation stopped (RuntimeError). No number was given. Please report this fault.\n"
 
 
 def test_every_command_stands_in_the_readme() -> None:

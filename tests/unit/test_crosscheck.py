@@ -99,11 +99,12 @@ def test_what_is_checked_twice() -> None:
         "Log of the weight at the 95 % draw over that at the point",
         "Steady level on the regimen in question, every dose taken at the point",
         "And back: the dose rate that holds it (the regimen in question, every dose taken)",
-        "Median steady level on the regimen in question, every dose taken",
+        *[r for r in rows if r.startswith("Draws up to the median steady level on the regimen in question")],
         "Chance above 30 mg/L or of no steady state on the regimen in question, every dose taken",
         "Days from nothing to 90 % of the way at the point, central",
     ]
     assert len([r for r in rows if "by the record at" in r]) == 3
+    assert len([r for r in rows if r.startswith("Draws up to the median")]) == 1
 
 
 def scaled(function: Callable[..., Any], factor: float) -> Callable[..., Any]:
@@ -186,7 +187,7 @@ def test_a_wrong_median_is_noticed(monkeypatch: pytest.MonkeyPatch) -> None:
 
     monkeypatch.setattr(forecast, "bands", higher)
     consult = consult_of(short(proposed=PROPOSED))
-    assert "Median steady level on the regimen in question, every dose taken" in disagreeing(consult)
+    assert any(q.startswith("Draws up to the median steady level") for q in disagreeing(consult))
     assert_no_number(consult)
 
 
@@ -363,6 +364,33 @@ def test_an_earlier_regimen_against_the_engine() -> None:
     course = crosscheck.integrate(record, (2.9,), (NODE,))
     first = flow.levels(record, (2.9,), 400.0, 4.0, 45.0)
     assert float(course.amount_mg[0, -1]) / 45.0 == pytest.approx(float(first[0, 0]), rel=5e-3)
+
+
+def median_row(median: float, vmax: list[float]) -> Row:
+    rows = crosscheck.steady_rows(
+        "a dose",
+        300.0,
+        NODE,
+        level_mg_per_L=12.0,
+        median_mg_per_L=median,
+        chance_above_critical=0.0,
+        critical_mg_per_L=30.0,
+        vmax_mg_per_day=np.array(vmax),
+        km_mg_per_L=np.full(len(vmax), 4.0),
+        weights=np.full(len(vmax), 1 / len(vmax)),
+    )
+    return next(r for r in rows if "edian" in r.quantity)
+
+
+def test_a_median_is_judged_by_the_draws_on_either_side_of_it() -> None:
+    near = [*np.linspace(300.01, 300.3, 500), *np.linspace(300.31, 400.0, 500)]
+    levels = sorted(4.0 * 300.0 / (v - 300.0) for v in near)
+    between = 0.5 * (levels[499] + levels[500])
+    assert median_row(between, near).agrees
+    assert not median_row(levels[520], near).agrees
+    assert not median_row(math.inf, near).agrees
+    assert median_row(math.inf, [250.0] * 600 + [400.0] * 400).agrees
+    assert not median_row(12.0, [250.0] * 600 + [400.0] * 400).agrees
 
 
 def test_the_steady_level_is_found_or_said_to_be_missing() -> None:

@@ -112,9 +112,7 @@ def test_a_known_start_level_and_what_is_still_in_the_gut() -> None:
     doses = (Dose(0.0, 300.0, absorption=PROMPT), Dose(1.0, 300.0, absorption=PROMPT))
     whole = flow.amounts(Record(doses), [1.1, 2.0], VMAX, KAPPA, accuracy="finest")[0]
     later = Record(doses, start_day=1.1, start_mg=float(whole[0]))
-    assert flow.amounts(later, [2.0], VMAX, KAPPA, accuracy="finest")[0, 0] == pytest.approx(
-        whole[1], rel=1e-6
-    )
+    assert flow.amounts(later, [2.0], VMAX, KAPPA, accuracy="finest")[0, 0] == pytest.approx(whole[1], rel=1e-6)
     running = (Dose(0.0, 300.0, duration_day=2.0),)
     middle = flow.amounts(Record(running), [1.0, 3.0], VMAX, KAPPA)[0]
     rest = Record(running, start_day=1.0, start_mg=float(middle[0]))
@@ -140,9 +138,7 @@ def test_before_carries_the_unabsorbed_rest_of_the_last_doses_over() -> None:
     slow = Absorption(2.0, lag_day=0.05, release_day=0.3)
     regimen = Repeated(1.0, (Dose(0.8, 300.0, absorption=slow),))
     carried = flow.amounts(Record(before=Before(regimen, 60.0)), [0.5], 600.0, KAPPA, accuracy="finest")[0, 0]
-    simulated = flow.amounts(Record(regimen.cycles(0, 60, 0.0)), [60.5], 600.0, KAPPA, accuracy="finest")[
-        0, 0
-    ]
+    simulated = flow.amounts(Record(regimen.cycles(0, 60, 0.0)), [60.5], 600.0, KAPPA, accuracy="finest")[0, 0]
     assert carried == pytest.approx(simulated, rel=1e-5)
 
 
@@ -252,9 +248,7 @@ def test_self_check_reports_the_step_error() -> None:
     rng = np.random.default_rng(2)
     vmax, kappa = 455 * np.exp(0.25 * rng.standard_normal(500)), 245 * np.exp(0.54 * rng.standard_normal(500))
     times = [1.3, 2.7, 4.0]
-    everyday, finest = (
-        flow.amounts(Record(doses), times, vmax, kappa, accuracy=a) for a in ("everyday", "finest")
-    )
+    everyday, finest = (flow.amounts(Record(doses), times, vmax, kappa, accuracy=a) for a in ("everyday", "finest"))
     error = np.max(np.abs(everyday / finest - 1))
     checked = flow.step_error(Record(doses), times, vmax, kappa)
     assert 0.8 * error <= checked <= 1.2 * error
@@ -326,8 +320,7 @@ ORAL = Dose(0.0, 300.0, absorption=PROMPT)
         ),
         (
             lambda: Record(start_mg=-1.0),
-            "Amount at the start: -1 mg was given. Allowed: 0 mg or more. "
-            "Give the amount in the body at the start.",
+            "Amount at the start: -1 mg was given. Allowed: 0 mg or more. Give the amount in the body at the start.",
         ),
         (
             lambda: Record(start_day=math.nan),
@@ -411,9 +404,7 @@ ORAL = Dose(0.0, 300.0, absorption=PROMPT)
             "Check the level at the start of the record.",
         ),
         (
-            lambda: flow.amounts(
-                Record(first_order=(FirstOrder(clearance_L_per_day=1.0),)), [1.0], VMAX, KAPPA
-            ),
+            lambda: flow.amounts(Record(first_order=(FirstOrder(clearance_L_per_day=1.0),)), [1.0], VMAX, KAPPA),
             "First-order path: a clearance was given, but no volume of distribution. "
             "Allowed: a clearance with a volume, or a rate in 1/day. Give the volume of distribution.",
         ),

@@ -34,9 +34,7 @@ def test_step_rule() -> None:
     """At most 0.25 over the fastest rate, and after a dose (0.5/ka) e^(0.2 ka (time since it))."""
     slow, fast = Absorption(4.0), Absorption(48.0)
     for fineness in (1.0, 4.0):
-        cut = plan(
-            (Dose(0.0, 100.0, absorption=slow), Dose(0.5, 100.0, absorption=fast)), (1.0,), fineness=fineness
-        )
+        cut = plan((Dose(0.0, 100.0, absorption=slow), Dose(0.5, 100.0, absorption=fast)), (1.0,), fineness=fineness)
         for step, end in zip(cut.steps, cut.ends_day, strict=True):
             begin = end - step.h
             allowed = 0.25 / 7.0
@@ -57,9 +55,7 @@ def test_every_milligram_is_in_a_step() -> None:
 
 
 def test_constant_pieces_are_one_step_each() -> None:
-    cut = plan(
-        (Dose(0.0, 100.0), Dose(1.0, 240.0, duration_day=2.0), Dose(1.5, 100.0, duration_day=0.5)), (9.0,)
-    )
+    cut = plan((Dose(0.0, 100.0), Dose(1.0, 240.0, duration_day=2.0), Dose(1.5, 100.0, duration_day=0.5)), (9.0,))
     assert [s.h for s in cut.steps] == [1.0, 0.5, 0.5, 1.0, 6.0]
     assert [s.rate for s in cut.steps] == pytest.approx([0.0, 120.0, 320.0, 120.0, 0.0])
     assert [s.push for s in cut.steps] == [100.0, 0.0, 0.0, 0.0, 0.0]

@@ -36,12 +36,8 @@ def test_at_or_above_vmax_there_is_no_steady_state() -> None:
 def test_a_linear_path_always_gives_a_steady_level() -> None:
     for rate in (1.0, 399.999, 400.0, 400.001, 5000.0):
         for clearance in (1e-9, 0.01, 3.0, 500.0):
-            level = f.steady_state_level(
-                dose_rate_mg_per_day=rate, linear_clearance_L_per_day=clearance, **PATIENT
-            )
-            back = f.dose_rate_for_level(
-                level_mg_per_L=level, linear_clearance_L_per_day=clearance, **PATIENT
-            )
+            level = f.steady_state_level(dose_rate_mg_per_day=rate, linear_clearance_L_per_day=clearance, **PATIENT)
+            back = f.dose_rate_for_level(level_mg_per_L=level, linear_clearance_L_per_day=clearance, **PATIENT)
             assert math.isclose(back, rate, rel_tol=1e-12)
 
 
@@ -49,9 +45,7 @@ def test_sensitivity_with_a_linear_path_is_the_slope_of_the_steady_level() -> No
     one = {"linear_clearance_L_per_day": 2.0, **PATIENT}
     up, down = (f.steady_state_level(dose_rate_mg_per_day=350.0 * s, **one) for s in (1.0001, 0.9999))
     slope = float(np.log(up / down) / np.log(1.0001 / 0.9999))
-    assert math.isclose(
-        f.sensitivity_with_linear_path(dose_rate_mg_per_day=350.0, **one), slope, rel_tol=1e-7
-    )
+    assert math.isclose(f.sensitivity_with_linear_path(dose_rate_mg_per_day=350.0, **one), slope, rel_tol=1e-7)
     none = f.sensitivity_with_linear_path(
         dose_rate_mg_per_day=[350.0, 400.0], linear_clearance_L_per_day=0.0, **PATIENT
     )

@@ -119,9 +119,7 @@ def test_other_units_of_the_same_kind_give_the_same_answer(name: str) -> None:
         for label in OTHER[kind]:
             changed = {**arguments, argument: value.to(Q(1, label).units)}
             for one, other in zip(base, parts(door(**changed)), strict=True):
-                assert np.isclose(
-                    np.asarray(getattr(one, "magnitude", one)), getattr(other, "magnitude", other)
-                )
+                assert np.isclose(np.asarray(getattr(one, "magnitude", one)), getattr(other, "magnitude", other))
             tried += 1
     assert tried >= 2
 
@@ -204,8 +202,7 @@ RATE = Q(300, "mg/day")
     [
         (
             lambda: kinetics.steady_state_level(300, VMAX, KM),
-            'Dose rate: the bare value "300" was given. Allowed: a quantity in mg/day. '
-            "Attach a unit: 300 mg/day.",
+            'Dose rate: the bare value "300" was given. Allowed: a quantity in mg/day. Attach a unit: 300 mg/day.',
         ),
         (
             lambda: kinetics.steady_state_level(Q(-300, "mg/day"), Q(0, "mg/day"), KM),
@@ -222,11 +219,8 @@ RATE = Q(300, "mg/day")
             "Dose rate: no finite number was given. Allowed: 0 or more mg/day. Check the dose rate and its unit.",
         ),
         (
-            lambda: kinetics.steady_state_level(
-                Q([1.0, 2.0], "mg/day"), Q([400.0, 400.0, 400.0], "mg/day"), KM
-            ),
-            "Lists: of different lengths: Dose rate 2, Vmax 3. Allowed: lists of one length. "
-            "Give as many of each.",
+            lambda: kinetics.steady_state_level(Q([1.0, 2.0], "mg/day"), Q([400.0, 400.0, 400.0], "mg/day"), KM),
+            "Lists: of different lengths: Dose rate 2, Vmax 3. Allowed: lists of one length. Give as many of each.",
         ),
         (
             lambda: kinetics.level_after(Q(-1, "days"), Q(5, "mg/L"), RATE, VMAX, KM, Q(0, "L")),

@@ -115,9 +115,7 @@ def test_residuals_and_predicted_levels_belong_to_the_point():
     result = from_steady_pairs(GOOD)
     point = result.point
     for at, fit in enumerate(result.fit):
-        level = (
-            point.km_mg_per_L * GOOD.rate_mg_per_day[at] / (point.vmax_mg_per_day - GOOD.rate_mg_per_day[at])
-        )
+        level = point.km_mg_per_L * GOOD.rate_mg_per_day[at] / (point.vmax_mg_per_day - GOOD.rate_mg_per_day[at])
         assert fit.observed_mg_per_L == GOOD.level_mg_per_L[at]
         assert fit.standardised_residual == pytest.approx(np.log(fit.observed_mg_per_L / level) / 0.15)
         assert fit.predicted.low < level < fit.predicted.high
@@ -137,9 +135,7 @@ def test_results_are_the_same_in_every_run():
 
 def test_unusable_pairs_are_named_one_by_one():
     with pytest.raises(CaseError) as caught:
-        SteadyPairs(
-            np.array([200, -5.0, 300]), np.array([4, np.nan, 9.0]), np.array([0.1, 0.1, 0.0]), np.arange(3)
-        )
+        SteadyPairs(np.array([200, -5.0, 300]), np.array([4, np.nan, 9.0]), np.array([0.1, 0.1, 0.0]), np.arange(3))
     assert str(caught.value) == (
         "Dose rate, pair 2: -5 mg/day was given. Allowed: a number above 0. Check the entry.\n"
         "Level, pair 2: no finite number was given. Allowed: a number above 0. Check the entry.\n"
@@ -579,10 +575,7 @@ def test_pairs_without_a_curve_still_show_their_crossings():
         "Level 1 (200 mg/day, 8 mg/L): no distance from the curve can be given; crossings outside the "
         "positive quadrant: 2 of 2."
     )
-    assert (
-        check_pairs(ONE_DOSE)[0].text
-        == "Level 1 (300 mg/day, 8 mg/L): no distance from the curve can be given."
-    )
+    assert check_pairs(ONE_DOSE)[0].text == "Level 1 (300 mg/day, 8 mg/L): no distance from the curve can be given."
 
 
 def test_verdict_on_good_levels():
@@ -613,10 +606,7 @@ def test_verdict_on_levels_that_contradict_one_another():
 
 
 def test_verdict_where_no_single_pair_can_be_blamed():
-    assert (
-        " No single pair can be blamed: check them all. "
-        in verdict(compare(THREE_AT_ODDS), THREE_AT_ODDS).text
-    )
+    assert " No single pair can be blamed: check them all. " in verdict(compare(THREE_AT_ODDS), THREE_AT_ODDS).text
 
 
 def test_verdict_on_levels_nearly_in_proportion():
@@ -651,9 +641,7 @@ def test_no_message_shows_a_machine_word(data):
 
 def test_two_pairs_give_the_two_level_answer_by_every_method():
     data = pairs([300, 350], [8, 20.0])
-    exact = formulas.two_level(
-        rate1_mg_per_day=300, level1_mg_per_L=8, rate2_mg_per_day=350, level2_mg_per_L=20
-    )
+    exact = formulas.two_level(rate1_mg_per_day=300, level1_mg_per_L=8, rate2_mg_per_day=350, level2_mg_per_L=20)
     for result in compare(data):
         assert isinstance(result, Estimate)
         assert result.point.vmax_mg_per_day == pytest.approx(float(exact.vmax_mg_per_day), rel=1e-9)

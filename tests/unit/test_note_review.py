@@ -10,7 +10,7 @@ from typing import Any
 import pytest
 
 from pkcalc.case import read_case_text
-from pkcalc.cautions import in_order, percent_beside
+from pkcalc.cautions import in_order
 from pkcalc.consult import Consult, run_consult
 from pkcalc.errors import Caution
 from pkcalc.note.annex import DANGER_HEADS, annex, danger_row
@@ -20,6 +20,7 @@ from pkcalc.note.html import render_html
 from pkcalc.note.layout import caution_text, document_data, first_and_last, with_first_cautions
 from pkcalc.note.text import render
 from pkcalc.note.words import NOT_OFFERED, NOW
+from pkcalc.units import percent_beside
 
 NO = dict.fromkeys(
     [

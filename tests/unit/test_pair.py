@@ -13,9 +13,7 @@ from pkcalc.errors import CannotEstimate
 from pkcalc.estimate.pair import SteadyPair, VolumeSpread, from_steady_levels
 
 
-def pair(
-    level: int, rate: float, concentration: float, log_sd: float = 0.2, kind: str = "total"
-) -> SteadyPair:
+def pair(level: int, rate: float, concentration: float, log_sd: float = 0.2, kind: str = "total") -> SteadyPair:
     return SteadyPair(level, rate, concentration, log_sd, kind)
 
 
@@ -63,9 +61,7 @@ def test_the_spread_of_the_levels_is_what_was_asked_for() -> None:
     rise=st.floats(1.05, 6.0),
     sd=st.floats(0.05, 0.4),
 )
-def test_the_rejected_share_is_the_exact_chance_of_a_negative_km(
-    ratio: float, rise: float, sd: float
-) -> None:
+def test_the_rejected_share_is_the_exact_chance_of_a_negative_km(ratio: float, rise: float, sd: float) -> None:
     level2 = 6 * ratio * rise
     estimate = from_steady_levels(pair(0, 200, 6, sd), pair(1, 200 * ratio, level2, sd))
     exact = 0.5 * math.erfc(math.log(rise) / (sd * math.sqrt(2)) / math.sqrt(2))

@@ -12,9 +12,10 @@ from pkcalc.consult import patient_prior
 from pkcalc.dosing import Intake, Regimen
 from pkcalc.forecast import fewer_draws
 from pkcalc.plan import _volume_words
-from pkcalc.plan.candidates import candidates, danger_at_draw, percent_against
+from pkcalc.plan.candidates import candidates, danger_at_draw
 from pkcalc.plan.loading import rate_caps
 from pkcalc.site import no_site
+from pkcalc.units import percent_beside
 from tests.unit.cases import plain
 from tests.unit.planning import estimate, exact, plan, profile, setting
 from tests.unit.test_plan_loading import LOW, asked
@@ -83,10 +84,17 @@ def test_the_weight_of_the_volume_is_explained_beside_a_load() -> None:
 
 @pytest.mark.parametrize(
     ("share", "words"),
-    [(0.1, "10 %"), (0.1004, "10.04 %"), (0.10000004, "10.000004 %"), (0.104, "10.4 %"), (0.62, "62 %"), (0.05, "5 %")],
+    [
+        (0.1, "10 %"),
+        (0.1004, "10.04 %"),
+        (0.10000004, "just above 10 %"),
+        (0.104, "10.4 %"),
+        (0.62, "62 %"),
+        (0.05, "5 %"),
+    ],
 )
 def test_a_chance_just_above_its_limit_is_told_from_it(share: float, words: str) -> None:
-    assert percent_against(share, 0.1) == words
+    assert percent_beside(share, 0.1) == words
 
 
 def test_each_chance_of_too_high_has_its_time() -> None:

@@ -340,9 +340,7 @@ def test_obesity_uses_other_weights_and_says_so() -> None:
     vmax_weight = 87.6 + 0.4 * (140 - 87.6)
     assert obese.vmax_mg_per_day == pytest.approx(455 * (vmax_weight / 70) ** 0.6)
     assert obese.volume_L == pytest.approx(0.7 * (73 + 1.33 * (140 - 73)))
-    assert obese.used == (
-        "Obesity: of 140 kg (ideal 73 kg), 109 kg was used for Vmax and 162 kg for the volume.",
-    )
+    assert obese.used == ("Obesity: of 140 kg (ideal 73 kg), 109 kg was used for Vmax and 162 kg for the volume.",)
 
 
 def test_obesity_never_makes_vmax_jump_or_fall() -> None:
@@ -467,9 +465,7 @@ def test_phenytoin_is_never_given_into_a_muscle() -> None:
     assert drug().forms["injection"].refused_routes == {
         "intramuscular": "Never into a muscle: uptake is erratic and goes on for weeks."
     }
-    assert {f.id for f in drug().forms.values() if "intramuscular" in f.routes} == {
-        "fosphenytoin-intramuscular"
-    }
+    assert {f.id for f in drug().forms.values() if "intramuscular" in f.routes} == {"fosphenytoin-intramuscular"}
 
 
 @pytest.mark.parametrize("form", [f.id for f in load_profile("phenytoin").forms.values() if f.absorption])
@@ -540,9 +536,7 @@ def test_displacement_equations() -> None:
     assert {d.drug for d in binding.displacements} <= set(QUESTIONS)
 
 
-@pytest.mark.parametrize(
-    ("level", "step"), [(0.5, 100), (6.99, 100), (7, 50), (11.99, 50), (12, 30), (40, 30)]
-)
+@pytest.mark.parametrize(("level", "step"), [(0.5, 100), (6.99, 100), (7, 50), (11.99, 50), (12, 30), (40, 30)])
 def test_step_rule(level: float, step: float) -> None:
     limits = drug().limits
     assert limits is not None
@@ -815,9 +809,7 @@ def test_dropping_any_part_of_any_number_is_noticed() -> None:
 
 
 def test_a_drug_whose_population_must_be_chosen() -> None:
-    text = TEMPLATE.replace("default = true\n", "").replace(
-        "time_unit =", "choose_population = true\ntime_unit ="
-    )
+    text = TEMPLATE.replace("default = true\n", "").replace("time_unit =", "choose_population = true\ntime_unit =")
     found = parse_profile(text, "template.toml")
     with pytest.raises(CaseError) as caught:
         found.default_population(40)

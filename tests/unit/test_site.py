@@ -394,9 +394,7 @@ def test_a_wrong_setting_is_refused(text: str, messages: list[str]) -> None:
 
 
 def test_every_problem_is_reported_at_once() -> None:
-    found = problems(
-        HEAD + '[target]\nlow = "x"\n[laboratory]\nunit = "y"\n[wibble]\n[population]\nname = "z"\n'
-    )
+    found = problems(HEAD + '[target]\nlow = "x"\n[laboratory]\nunit = "y"\n[wibble]\n[population]\nname = "z"\n')
     assert [f.split(":")[0] for f in found] == [
         "site.toml, target.low",
         "site.toml, laboratory.unit",

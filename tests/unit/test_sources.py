@@ -56,9 +56,7 @@ def test_no_work_stands_twice() -> None:
 
 def test_every_source_is_used() -> None:
     """By a drug file, the service defaults, an example, a caution, or the program's own citations."""
-    used = {
-        key for name in drug_names() for fact in load_profile(name).facts.values() for key in fact.sources
-    }
+    used = {key for name in drug_names() for fact in load_profile(name).facts.values() for key in fact.sources}
     used |= {key for fact in default_facts().values() for key in fact.sources}
     used |= {example.source for example in load_examples()}
     elsewhere = "".join(p.read_text(encoding="utf-8") for p in PACKAGE.glob("cautions.toml"))
@@ -82,9 +80,7 @@ def test_one_source_by_its_key() -> None:
 def test_unknown_source_is_refused() -> None:
     with pytest.raises(DrugFileError) as caught:
         source("nobody1900")
-    assert (
-        str(caught.value) == 'sources.toml: there is no source "nobody1900". Add it there, or mend the key.'
-    )
+    assert str(caught.value) == 'sources.toml: there is no source "nobody1900". Add it there, or mend the key.'
 
 
 @pytest.mark.parametrize(

@@ -150,9 +150,7 @@ def test_a_changed_vmax_turns_the_reciprocal_line_about_its_x_intercept(name):
     assert slope(first) == pytest.approx(slope(second))
     first, second = before_after(found, DIRECT_LINEAR)
     assert first.x == second.x
-    steeper = slope(before_after(found, "double reciprocal")[1]) > slope(
-        before_after(found, "double reciprocal")[0]
-    )
+    steeper = slope(before_after(found, "double reciprocal")[1]) > slope(before_after(found, "double reciprocal")[0])
     assert steeper == (name == "inhibitor started")
     words = found.movement["double reciprocal"]
     assert "about its x-intercept" in words
@@ -245,9 +243,7 @@ def test_competitor_by_hand():
     found = event("reversible competitor started", competitor=1.5)  # Km 7.5
     assert found.level_after_mg_per_L == pytest.approx(15)
     assert found.dose_after_mg_per_day == pytest.approx(300)  # 450 x 15 / 22.5
-    assert found.story == (
-        "Another drug competes for the same enzyme: Km is 1.5 times what it was, Vmax the same."
-    )
+    assert found.story == ("Another drug competes for the same enzyme: Km is 1.5 times what it was, Vmax the same.")
 
 
 def test_new_salt_by_hand():
@@ -308,9 +304,7 @@ def test_without_a_volume_there_is_no_missed_week():
 
 @pytest.mark.parametrize("dose", [300.0, 449.0, 460.0])
 def test_events_on_any_dose_never_show_a_machine_word(dose):
-    patient = Patient(
-        vmax_mg_per_day=450, km_mg_per_L=5, dose_rate_mg_per_day=dose, aim_mg_per_L=15, volume_L=45
-    )
+    patient = Patient(vmax_mg_per_day=450, km_mg_per_L=5, dose_rate_mg_per_day=dose, aim_mg_per_L=15, volume_L=45)
     for found in clinic_events(patient):
         for text in (found.story, found.text, *found.movement.values()):
             for machine_word in ("nan", "inf ", "{", "}", "None", "e+", "_"):
