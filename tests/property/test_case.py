@@ -245,7 +245,7 @@ def in_range(case: Case) -> None:
     for value, low, high in ((p.age_years, 0, 120), (p.weight_kg, 0.4, 400), (p.height_cm, 25, 250)):
         assert value is None or low <= value <= high
     for level in case.levels:
-        assert 0 < level.reported_mg_per_L <= 100
+        assert 0 < level.reported_mg_per_L <= load_profile(case.drug).level_gate_mg_per_L(level.kind)[1]
     for albumin in (case.albumin, *(x.albumin for x in case.levels)):
         assert albumin is None or 10 <= albumin.g_per_L <= 60
     for course in case.courses:
