@@ -132,7 +132,7 @@ def test_round_trip_is_exact(file: CaseFile) -> None:
 def test_the_record_of_any_case_is_within_its_time(file: CaseFile) -> None:
     case = check_case(file)
     try:
-        record = given_record(case, PROFILE)
+        record = given_record(case, profile)
     except CannotEstimate:
         return
     assert case.now is not None
@@ -241,16 +241,16 @@ def mutated(text: str, chance: random.Random) -> str | bytes:
 
 def in_range(case: Case) -> None:
     """Whatever was read lies within its physical range."""
-    p = case.patient
+    p, profile = case.patient, load_profile(case.drug)
     for value, low, high in ((p.age_years, 0, 120), (p.weight_kg, 0.4, 400), (p.height_cm, 25, 250)):
         assert value is None or low <= value <= high
     for level in case.levels:
-        assert 0 < level.reported_mg_per_L <= load_profile(case.drug).level_gate_mg_per_L(level.kind)[1]
+        assert 0 < level.reported_mg_per_L <= profile.level_gate_mg_per_L(level.kind)[1]
     for albumin in (case.albumin, *(x.albumin for x in case.levels)):
         assert albumin is None or 10 <= albumin.g_per_L <= 60
     for course in case.courses:
         for intake in course.regimen.intakes if course.regimen else (course.single,) if course.single else ():
-            assert 0 < intake.labelled_mg <= 3000
+            assert 0 < intake.labelled_mg <= profile.forms[intake.form].largest_dose_mg
             assert 0 <= intake.hour < 24
     try:
         record = given_record(case, PROFILE)
