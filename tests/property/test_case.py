@@ -132,7 +132,7 @@ def test_round_trip_is_exact(file: CaseFile) -> None:
 def test_the_record_of_any_case_is_within_its_time(file: CaseFile) -> None:
     case = check_case(file)
     try:
-        record = given_record(case, profile)
+        record = given_record(case, PROFILE)
     except CannotEstimate:
         return
     assert case.now is not None
@@ -253,7 +253,7 @@ def in_range(case: Case) -> None:
             assert 0 < intake.labelled_mg <= profile.forms[intake.form].largest_dose_mg
             assert 0 <= intake.hour < 24
     try:
-        record = given_record(case, PROFILE)
+        record = given_record(case, profile)
     except CannotEstimate:
         return
     assert len(record.doses) <= 100_001
