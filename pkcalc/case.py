@@ -920,7 +920,8 @@ def _profile(name: str) -> Profile:
     try:
         return load_profile(name)
     except DrugFileError as error:
-        raise CaseError(Problem("Drug", f"the drug file cannot be used: {error}", "", "Tell the maintainers")) from None
+        given = "the drug file cannot be used: " + str(error).rstrip(".")
+        raise CaseError(Problem("Drug", given, "", "Tell the maintainers")) from None
 
 
 def _optional_time(text: str, where: str, check: _Check) -> datetime | None:

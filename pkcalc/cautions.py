@@ -27,6 +27,7 @@ from pkcalc.forecast import Forecast, Goal
 from pkcalc.levels import Observation, adherence, measured_free_fraction, present_level, timing
 from pkcalc.plan.projection import Projection
 from pkcalc.site import Site
+from pkcalc.sources import source
 from pkcalc.steadiness import Settling
 from pkcalc.units import percent, percent_beside, show, show_number
 
@@ -456,27 +457,38 @@ def _not_trusted(s: State, p: Mapping[str, Any]) -> list[Words]:
     return [{"why": s.distrusted}] if s.distrusted else []
 
 
+def _published_in(s: State, kind: str, span: tuple[float, float]) -> str:
+    """Who published a plausible range, in a few words for the caution."""
+    for path, fact in s.profile.facts.items():
+        if path.startswith("plausible.") and path.endswith(kind) and fact.value == span:
+            known = [source(key) for key in fact.sources]
+            return ", ".join(f"{x.authors} {x.year}" for x in known) + f", {fact.where}"
+    return s.profile.file
+
+
 def _vmax_outside(s: State, p: Mapping[str, Any]) -> list[Words]:
     weight = s.case.patient.weight_kg
     if s.estimate is None or weight is None:
         return []
-    low, high = s.profile.plausible_at(s.case.patient.age_years).vmax_mg_per_kg_day
+    low, high = span = s.profile.plausible_at(s.case.patient.age_years).vmax_mg_per_kg_day
     value = s.estimate.point.vmax_mg_per_day / weight
     if low <= value <= high:
         return []
     per = 24 if s.profile.time_unit == "h" else 1
     unit = "mg/kg/h" if per == 24 else "mg/kg/day"
-    return [{"value": show(value / per, unit), "low": show_number(low / per), "high": show(high / per, unit)}]
+    words = {"value": show(value / per, unit), "low": show_number(low / per), "high": show(high / per, unit)}
+    return [{**words, "where": _published_in(s, "vmax", span)}]
 
 
 def _km_outside(s: State, p: Mapping[str, Any]) -> list[Words]:
     if s.estimate is None:
         return []
-    low, high = s.profile.plausible_at(s.case.patient.age_years).km_mg_per_L
+    low, high = span = s.profile.plausible_at(s.case.patient.age_years).km_mg_per_L
     value = s.estimate.point.km_mg_per_L
     if low <= value <= high:
         return []
-    return [{"value": show(value, "mg/L"), "low": show_number(low), "high": show(high, "mg/L")}]
+    words = {"value": show(value, "mg/L"), "low": show_number(low), "high": show(high, "mg/L")}
+    return [{**words, "where": _published_in(s, "km", span)}]
 
 
 def danger(forecast: Forecast) -> float:

@@ -133,7 +133,9 @@ def run_consult(case: Case, site: Site | str | Path | None = None) -> Consult:
         chosen, why = population, "the population alone: no level could be learned from yet"
     state = replace(state, estimate=chosen)
     if chosen is None and not {"estimate", "projection"} & stops:
-        why_none = " ".join(f"{name[0].upper()}{name[1:]}: {reason}" for name, reason in found.refusals.items())
+        others = {k: v for k, v in found.refusals.items() if not (k == two_level.METHOD and state.pair_refusal)}
+        why_none = " ".join(f"{name[0].upper()}{name[1:]}: {reason}" for name, reason in others.items())
+        why_none = why_none or "The reason stands in the stop on the two levels."
         said += caution_engine.after_estimate(replace(state, why_none=why_none))
         stops = caution_engine.blocked(said)
 

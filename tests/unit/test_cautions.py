@@ -278,5 +278,8 @@ def test_implausible_parameters_are_warned_about() -> None:
     assert "vmax-out-of-range" in said(consult)
     steep = run_consult(plain(method="two levels", levels=levels("2 mg/L", "20 mg/L")))
     assert "km-out-of-range" in said(steep)
+    vmax = next(c for c in consult.cautions if c.id == "vmax-out-of-range")
+    assert "the published range 5.33 to 13.9 mg/kg/day (" in vmax.text
+    assert "range over patients). Check doses taken" in vmax.text
     usual = said(run_consult(plain(method="two levels", patient={"age": "45 years", "weight": "60 kg"})))
     assert not {"vmax-out-of-range", "km-out-of-range"} & usual

@@ -9,9 +9,10 @@ from typing import Any
 
 import pytest
 
+from pkcalc import case as case_module
 from pkcalc.case import QUESTIONS, CaseFile, read_case_text
 from pkcalc.drugs.profile import load_profile
-from pkcalc.errors import CaseError
+from pkcalc.errors import CaseError, DrugFileError
 from tests.unit.cases import plain
 
 
@@ -644,3 +645,23 @@ def test_what_is_said_about_a_text(text: str, messages: list[str]) -> None:
     with pytest.raises(CaseError) as caught:
         read_case_text(text)
     assert [p.text for p in caught.value.problems] == full(messages)
+
+
+def test_a_drug_file_that_cannot_be_loaded_is_said(monkeypatch: pytest.MonkeyPatch) -> None:
+    def broken(name: str) -> object:
+        raise DrugFileError("phenytoin.toml, binding: missing. Add it.")
+
+    monkeypatch.setattr(case_module, "load_profile", broken)
+    with pytest.raises(CaseError) as caught:
+        case_module.read_case_text('{"pkcalc_case": 1, "drug": "phenytoin"}')
+    assert str(caught.value).splitlines()[-1] == (
+        "Drug (line 1): the drug file cannot be used: phenytoin.toml, binding: missing. Add it. Tell the maintainers."
+    )
+
+
+def test_a_text_of_too_many_entries_is_said() -> None:
+    with pytest.raises(CaseError) as caught:
+        case_module.parse_case_text("[" + "1," * 300_001 + "1]")
+    assert str(caught.value) == (
+        "Case file: the text has too many entries. Allowed: at most 300,000 entries. Give the case of one patient only."
+    )
