@@ -12,27 +12,12 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 
 from pkcalc import flow
-from pkcalc.drugs.profile import Prior
 from pkcalc.estimate.error_model import LevelData, RecordSpread, covariance, gaussian_parts
 from pkcalc.estimate.intake import intake_gain, plan_intake
 from pkcalc.estimate.posterior import from_record
 from pkcalc.record import Absorption, Dose, Record
+from tests.unit.adult import PRIOR
 
-PRIOR = Prior(
-    population="test",
-    words="made for this test",
-    vmax_mg_per_day=455.0,
-    km_mg_per_L=5.0,
-    volume_L=49.0,
-    vmax_log_sd=0.246,
-    km_log_sd=0.472,
-    volume_log_sd=0.198,
-    correlation=0.0,
-    first_order_per_day=0.0,
-    first_order_log_sd=0.0,
-    used=(),
-    sources=(),
-)
 CAPSULE = Absorption(ka_per_day=8.0)
 QUANTITIES = ("vmax_mg_per_day", "km_mg_per_L", "volume_L")
 

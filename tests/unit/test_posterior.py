@@ -9,7 +9,6 @@ import numpy as np
 import pytest
 
 from pkcalc import formulas
-from pkcalc.drugs.profile import Prior
 from pkcalc.errors import CannotEstimate, CaseError
 from pkcalc.estimate import posterior
 from pkcalc.estimate.error_model import LevelData, RecordSpread
@@ -18,24 +17,10 @@ from pkcalc.estimate.posterior import from_record, prior_only, written_out
 from pkcalc.estimate.predict import predicted_levels
 from pkcalc.estimate.result import weighted_quantile
 from pkcalc.record import Absorption, Before, Dose, FirstOrder, Record, Repeated
+from tests.unit.adult import PRIOR
 
 OBSERVED = RecordSpread(0.0, 0.0)
 USUAL = RecordSpread(0.05, 0.05)
-PRIOR = Prior(
-    population="test",
-    words="made for this test",
-    vmax_mg_per_day=455.0,
-    km_mg_per_L=5.0,
-    volume_L=49.0,
-    vmax_log_sd=0.246,
-    km_log_sd=0.472,
-    volume_log_sd=0.198,
-    correlation=0.0,
-    first_order_per_day=0.0,
-    first_order_log_sd=0.0,
-    used=(),
-    sources=(),
-)
 CAPSULE = Absorption(ka_per_day=8.0)
 QUANTITIES = ("vmax_mg_per_day", "km_mg_per_L", "volume_L")
 

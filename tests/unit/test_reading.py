@@ -8,7 +8,6 @@ from dataclasses import replace
 
 import pytest
 
-from pkcalc.drugs.profile import Prior
 from pkcalc.errors import CannotEstimate
 from pkcalc.estimate.error_model import LevelData, RecordSpread
 from pkcalc.estimate.pair import SteadyPair, from_steady_levels
@@ -25,25 +24,11 @@ from pkcalc.estimate.reading import (
 )
 from pkcalc.estimate.result import Band
 from pkcalc.record import Absorption, Before, Dose, Record, Repeated
+from tests.unit.adult import PRIOR
 
 OBSERVED = RecordSpread(0.0, 0.0)
 USUAL = RecordSpread(0.05, 0.05)
 CAPSULE = Absorption(ka_per_day=8.0)
-PRIOR = Prior(
-    population="test",
-    words="made for this test",
-    vmax_mg_per_day=455.0,
-    km_mg_per_L=5.0,
-    volume_L=49.0,
-    vmax_log_sd=0.246,
-    km_log_sd=0.472,
-    volume_log_sd=0.198,
-    correlation=0.0,
-    first_order_per_day=0.0,
-    first_order_log_sd=0.0,
-    used=(),
-    sources=(),
-)
 
 
 def daily(amount: float) -> Repeated:
