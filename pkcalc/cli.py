@@ -203,6 +203,7 @@ def note(
 @click.option("--albumin", default="", help='For example "29 g/L".')
 @click.option("--aim", default="", help='Level aimed at, for example "15 mg/L".')
 @click.option("--propose", "proposed", multiple=True, help='A dose to preview, for example "330 mg/day".')
+@click.option("--shelf", default="", help="A generic country shelf of the drug, for a table of doses it can make.")
 @_format
 @_out
 @_site
@@ -217,6 +218,7 @@ def pair(
     albumin: str,
     aim: str,
     proposed: tuple[str, ...],
+    shelf: str,
     output_format: str,
     out: Path | None,
     site: Path | None,
@@ -233,6 +235,7 @@ def pair(
         albumin=albumin,
         aim=aim,
         proposed=proposed,
+        shelf=shelf,
     )
     if output_format == "text" and out is None:
         click.echo(f"Drug: {drug}. Levels read as {kind}. Each dose and level pair up in the order given.\n")
@@ -251,9 +254,10 @@ def case_of_pairs(
     albumin: str = "",
     aim: str = "",
     proposed: tuple[str, ...] = (),
+    shelf: str = "",
 ) -> Case:
     """Pairs as typed -> checked case, every problem at once."""
-    from pkcalc.case import AlbuminFile, CaseFile, DoseFile, LevelFile, PatientFile, ProposedFile, check_case
+    from pkcalc.case import AlbuminFile, CaseFile, DoseFile, LevelFile, PatientFile, PlanFile, ProposedFile, check_case
     from pkcalc.errors import CaseError, Problem
 
     problems: list[Problem] = []
@@ -298,6 +302,7 @@ def case_of_pairs(
             levels=tuple(LevelFile(value=v, kind=kind, on_dose=i + 1) for i, v in enumerate(levels)),
             aim=aim,
             proposed=wanted,
+            plan=PlanFile(shelf=shelf),
         )
     )
 

@@ -96,3 +96,12 @@ def test_a_published_pair_drawn_too_early_is_told_apart() -> None:
     found = consult("acid", ("300 mg/day", "4 mg/L"), ("500 mg/day", "36 mg/L"))
     point = found.estimates["two levels"].point
     assert f"{point.km_mg_per_L:.2f} {point.vmax_mg_per_day:.1f}" == "3.27 545.5"
+
+
+def test_a_table_of_doses_the_shelf_can_make_stands_around_the_present_one() -> None:
+    """The same published pair (Winter, value from memory) with a shelf named: every row is a forecast of its own."""
+    found = consult("sodium", ("300 mg/day", "8 mg/L"), ("350 mg/day", "20 mg/L"), shelf="united-states")
+    rates = [s.forecast.rate_mg_per_day for s in found.table]
+    assert rates == sorted(rates)
+    assert len(rates) > 5
+    assert min(rates) < 276 <= 322 < max(rates)
