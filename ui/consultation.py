@@ -126,6 +126,8 @@ def _page() -> None:
         slots += [(st.empty(), "record"), (st.empty(), "plane")]
         _on_request(outcome, hidden, "How this was found", tell.how)
         _on_request(outcome, hidden, "Compare with other published populations", tell.populations)
+        if outcome.consult is not None and tell.teaches(outcome.consult):
+            _on_request(outcome, hidden, "For residents: the same levels in five pictures", tell.residents)
     with _step(5, "What could be given next?", tell.candidates_sentence(spoken)):
         ask.goal(asked)
         ask.own(asked, echoes["own"])

@@ -21,6 +21,7 @@ from pkcalc.note.charts import Chart
 from pkcalc.note.data import dumps, note_data
 from pkcalc.note.document import DEFERS, DEMONSTRATION, compose
 from pkcalc.note.front import forecast_lines, page_one, paste_block
+from pkcalc.note.lessons import lesson
 from pkcalc.note.text import render
 from pkcalc.note.words import (
     FORECAST_HEADS,
@@ -416,6 +417,26 @@ def picture(found: Chart) -> str:
         '<div class="pk-chart" role="region" tabindex="0" aria-label="Chart">'
         f'<img src="data:image/svg+xml;base64,{data}" alt="{escape(found.alt)}"></div>'
     )
+
+
+def teaches(consult: Consult) -> bool:
+    """True for a demonstration with enough steady levels for the pictures; nothing is drawn for the answer."""
+    return consult.case.demonstration is not None and bool(consult.line_results)
+
+
+def residents(consult: Consult) -> None:
+    """The steady levels of a demonstration in the five classical pictures, and what clinic events do to them."""
+    found = lesson(consult)
+    if found is None:
+        look.say("There are too few steady levels for the pictures.")
+        return
+    look.say(found.banner, "answer")
+    for chart in found.charts:
+        st.html(picture(chart))
+        look.say(chart.alt)
+    for section in found.events:
+        st.html(f'<h3 class="pk-group">{escape(section.title)}</h3>')
+        look.lines(section.lines)
 
 
 def note(consult: Consult) -> None:

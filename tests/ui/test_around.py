@@ -220,3 +220,15 @@ def test_the_page_imports_public_names_of_the_core_and_no_tool_for_formulas() ->
     assert [x for x in found if x[1].split(".")[0] in outside] == []
     assert [x for x in found if x[1].startswith("pkcalc") and (x[2].startswith("_") or "._" in x[1])] == []
     assert [x for x in found if x[1] in ("pkcalc.formulas", "pkcalc.flow", "pkcalc.kinetics")] == []
+
+
+def test_residents_see_the_same_levels_in_five_pictures_in_a_demonstration_only() -> None:
+    at = page.open_demonstration("several-levels")
+    at.toggle(key="ask-residents").set_value(True).run()
+    assert not at.exception
+    text = page.shown(at)
+    assert "not for clinical use" in text
+    drawn = [h.value for h in at.get("html") if 'class="pk-chart"' in str(getattr(h, "value", h.proto.body))]
+    assert len(drawn) >= 5
+    other = page.open_demonstration("clean-pair")
+    assert all(t.key != "ask-residents" for t in other.toggle)
