@@ -235,26 +235,6 @@ def test_weight_age_label_and_missed_doses_are_noted() -> None:
     assert not {"weight-estimated", "age-not-stated", "label-identifier", "missed-doses"} & silent
 
 
-def test_stops_together_give_one_clear_outcome() -> None:
-    """Every pair of stopping answers: all stops said, no number left that any of them blocks."""
-    stopping = {
-        "seizing_now": "yes",
-        "overdose": "yes",
-        "renal_failure": "yes",
-        "valproate": "yes",
-        "pregnancy": "yes",
-        "interacting_change": "yes",
-    }
-    keys = list(stopping)
-    for i, one in enumerate(keys):
-        for other in keys[i + 1 :]:
-            consult = run_consult(plain(context={one: "yes", other: "yes"}))
-            assert len([c for c in consult.cautions if c.severity == "stop"]) >= 2, (one, other)
-            assert consult.stopped
-            assert consult.proposed == consult.table == ()
-            assert consult.aim_rate is None
-
-
 def test_a_level_in_the_wrong_unit_does_not_fit() -> None:
     """32 umol/L typed as 32 mg/L: four times too high for the record."""
     wrong = [
