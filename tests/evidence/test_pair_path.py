@@ -105,3 +105,14 @@ def test_a_table_of_doses_the_shelf_can_make_stands_around_the_present_one() -> 
     assert rates == sorted(rates)
     assert len(rates) > 5
     assert min(rates) < 276 <= 322 < max(rates)
+
+
+def test_three_pairs_are_answered_by_the_regression_which_says_so() -> None:
+    """Three exact steady levels of Vmax 500 and Km 4 (Rowland & Tozer, figure 16-10: 6.0, 9.3 and 16.0 mg/L)."""
+    found = consult("acid", ("300 mg/day", "6.0 mg/L"), ("350 mg/day", "9.3 mg/L"), ("400 mg/day", "16.0 mg/L"))
+    assert found.chosen is not None
+    assert found.chosen.method == "weighted regression on the level"
+    assert found.chosen.point.km_mg_per_L == pytest.approx(4.0, abs=0.05)
+    assert found.chosen.point.vmax_mg_per_day == pytest.approx(500, abs=1)
+    assert len(found.line_results) == 5
+    assert "Method: weighted regression on the level." in render(compose(found))
