@@ -60,7 +60,9 @@ def check(seed: int) -> str:
     text = json.dumps(mutated(source, chance))
     try:
         case = read_case_text(text)
-        consult = run_consult(case)  # refuses too what only the population can tell, such as a group that must be chosen
+        consult = run_consult(
+            case
+        )  # refuses too what only the population can tell, such as a group that must be chosen
     except CaseError as error:
         return "refused" if error.problems else "refused without a reason"
     data = json.loads(dumps(note_data(consult)))
