@@ -3,43 +3,21 @@
 from __future__ import annotations
 
 import json
-import math
 from typing import Any
 
 from pkcalc import __version__
 from pkcalc.consult import Consult, Shown
-from pkcalc.dosing import Regimen
 from pkcalc.errors import CannotEstimate, CaseError
-from pkcalc.estimate.result import Band, Estimate
+from pkcalc.estimate.result import Estimate
 from pkcalc.forecast import Forecast
 from pkcalc.note import hours, populations
 from pkcalc.note.annex import sources_used
 from pkcalc.note.front import page_one, paste_block, spoken_for
-from pkcalc.note.offers import plan_data
+from pkcalc.note.offers import band_data, number, plan_data, regimen_data
 from pkcalc.note.words import DEFERS, Section, demonstration_words
 from pkcalc.note.workings import machine_only, workings
 
 NOTE_VERSION = 1
-
-
-def number(value: float) -> Any:
-    """A finite number, or the object that says there is no steady state."""
-    return float(f"{value:.6g}") if math.isfinite(value) else {"no_steady_state": True}
-
-
-def band_data(band: Band) -> dict[str, Any]:
-    return {
-        "median": number(band.median),
-        "low_5_percent": number(band.low),
-        "high_95_percent": number(band.high),
-    }
-
-
-def regimen_data(regimen: Regimen) -> dict[str, Any]:
-    return {
-        "cycle_h": regimen.cycle_h,
-        "doses": [{"form": x.form, "hour": x.hour, "labelled_mg": x.labelled_mg} for x in regimen.intakes],
-    }
 
 
 def forecast_data(forecast: Forecast) -> dict[str, Any]:

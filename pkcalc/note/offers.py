@@ -15,7 +15,8 @@ from pkcalc.plan.pausing import Pause
 from pkcalc.plan.switching import Switch
 
 
-def _number(value: float) -> Any:
+def number(value: float) -> Any:
+    """A finite number, or the object that says there is no steady state."""
     return float(f"{value:.6g}") if math.isfinite(value) else {"no_steady_state": True}
 
 
@@ -23,13 +24,13 @@ def _days(value: float) -> Any:
     return float(f"{value:.4g}") if math.isfinite(value) else {"never": True}
 
 
-def _band(band: Band | None) -> dict[str, Any] | None:
+def band_data(band: Band | None) -> dict[str, Any] | None:
     if band is None:
         return None
     return {
-        "median": _number(band.median),
-        "low_5_percent": _number(band.low),
-        "high_95_percent": _number(band.high),
+        "median": number(band.median),
+        "low_5_percent": number(band.low),
+        "high_95_percent": number(band.high),
     }
 
 
@@ -41,19 +42,19 @@ def _days_band(band: Band | None) -> dict[str, Any] | None:
 
 def _line(f: Forecast) -> dict[str, Any]:
     return {
-        "steady_level_normal_binding_mg_per_L": _band(f.steady),
-        "steady_level_as_reported_total_mg_per_L": _band(f.total),
-        "steady_level_free_mg_per_L": _band(f.free),
-        "chance_below": _number(f.below),
-        "chance_within": _number(f.within),
-        "chance_above": _number(f.above),
-        "chance_above_critical": _number(f.above_critical),
-        "chance_no_steady_state": _number(f.no_steady_state),
+        "steady_level_normal_binding_mg_per_L": band_data(f.steady),
+        "steady_level_as_reported_total_mg_per_L": band_data(f.total),
+        "steady_level_free_mg_per_L": band_data(f.free),
+        "chance_below": number(f.below),
+        "chance_within": number(f.within),
+        "chance_above": number(f.above),
+        "chance_above_critical": number(f.above_critical),
+        "chance_no_steady_state": number(f.no_steady_state),
         "days_to_90_percent": _days_band(f.settle_days),
     }
 
 
-def _regimen(regimen: Regimen) -> dict[str, Any]:
+def regimen_data(regimen: Regimen) -> dict[str, Any]:
     return {
         "cycle_h": regimen.cycle_h,
         "doses": [{"form": x.form, "hour": x.hour, "labelled_mg": x.labelled_mg} for x in regimen.intakes],
@@ -65,24 +66,24 @@ def candidate_data(c: Candidate) -> dict[str, Any]:
     return {
         "words": c.words,
         "dispense": c.dispense,
-        "regimen": _regimen(c.regimen),
-        "active_mg_per_day": _number(c.rate_mg_per_day),
-        "change_percent": None if c.change_percent is None else _number(c.change_percent),
+        "regimen": regimen_data(c.regimen),
+        "active_mg_per_day": number(c.rate_mg_per_day),
+        "change_percent": None if c.change_percent is None else number(c.change_percent),
         "present": c.present,
         "own": c.proposed,
         "offered": c.offered,
         "why_not": list(c.why_not),
-        "danger": _number(c.danger),
-        "chance_too_high_at_plateau": _number(c.danger_at_plateau),
-        "chance_too_high_at_next_draw": None if c.danger_at_draw is None else _number(c.danger_at_draw),
+        "danger": number(c.danger),
+        "chance_too_high_at_plateau": number(c.danger_at_plateau),
+        "chance_too_high_at_next_draw": None if c.danger_at_draw is None else number(c.danger_at_draw),
         "past_intake_carried_on": _line(c.forecast),
         "every_dose_taken": _line(c.taken),
-        "trough_mg_per_L": _band(c.trough),
-        "peak_mg_per_L": _band(c.peak),
+        "trough_mg_per_L": band_data(c.trough),
+        "peak_mg_per_L": band_data(c.peak),
         "level_on_days": None
         if c.on_days is None
-        else [{"day": day, "level_mg_per_L": _band(b)} for day, b in c.on_days],
-        "expected_loss": None if c.loss is None else _number(c.loss),
+        else [{"day": day, "level_mg_per_L": band_data(b)} for day, b in c.on_days],
+        "expected_loss": None if c.loss is None else number(c.loss),
     }
 
 
@@ -91,21 +92,21 @@ def _load(load: Load) -> dict[str, Any]:
         "form": load.form,
         "product": load.product,
         "route": load.route,
-        "from_level_mg_per_L": _number(load.from_mg_per_L),
-        "aim_mg_per_L": _number(load.aim_mg_per_L),
-        "labelled_by_formula_mg": _number(load.wanted_mg),
-        "labelled_ordered_mg": _number(load.amount_mg),
-        "active_mg": _number(load.active_mg),
+        "from_level_mg_per_L": number(load.from_mg_per_L),
+        "aim_mg_per_L": number(load.aim_mg_per_L),
+        "labelled_by_formula_mg": number(load.wanted_mg),
+        "labelled_ordered_mg": number(load.amount_mg),
+        "active_mg": number(load.active_mg),
         "parts": [{"after_h": h, "labelled_mg": mg} for h, mg in load.parts],
         "infusion_at_least_min": load.minutes,
-        "rise_mg_per_L": _band(load.rise),
-        "level_after_mg_per_L": _band(load.after),
-        "level_at_draw_mg_per_L": _band(load.at_draw),
+        "rise_mg_per_L": band_data(load.rise),
+        "level_after_mg_per_L": band_data(load.after),
+        "level_at_draw_mg_per_L": band_data(load.at_draw),
         "draw_after_h": load.draw_after_h,
-        "chance_above_range": _number(load.above_high),
-        "chance_above_critical": _number(load.above_critical),
+        "chance_above_range": number(load.above_high),
+        "chance_above_critical": number(load.above_critical),
         "maintenance": load.maintenance,
-        "level_on_days": [{"day": day, "level_mg_per_L": _band(b)} for day, b in load.followed],
+        "level_on_days": [{"day": day, "level_mg_per_L": band_data(b)} for day, b in load.followed],
         "order": list(load.order),
         "notes": list(load.notes),
         "offered": load.offered,
@@ -118,16 +119,16 @@ def _pause(p: Pause) -> dict[str, Any]:
         "seizure_risk": p.seizure_risk,
         "first": p.first,
         "restart": p.restart_line,
-        "level_today_mg_per_L": _band(p.now),
-        "until_level_mg_per_L": _number(p.to_mg_per_L),
+        "level_today_mg_per_L": band_data(p.now),
+        "until_level_mg_per_L": number(p.to_mg_per_L),
         "days": _days_band(p.days),
         "days_with_late_absorption": _days_band(p.with_absorption),
         "reductions": [
             {
                 "words": r.words,
-                "of_present_percent": _number(r.percent),
+                "of_present_percent": number(r.percent),
                 "days_until_level": _days_band(r.days),
-                "steady_level_normal_binding_mg_per_L": _band(r.steady),
+                "steady_level_normal_binding_mg_per_L": band_data(r.steady),
                 "offered": r.offered,
                 "why_not": list(r.why_not),
             }
@@ -136,15 +137,15 @@ def _pause(p: Pause) -> dict[str, Any]:
         "restarts": [
             {
                 "words": r.words,
-                "steady_level_normal_binding_mg_per_L": _band(r.steady),
+                "steady_level_normal_binding_mg_per_L": band_data(r.steady),
                 "day": _days(r.day),
                 "restarted_early": {"day": _days(r.early_day)},
                 "restarted_on_time": {"day": _days(r.on_time_day)},
                 "restarted_late": {"day": _days(r.late_day)},
-                "level_restarted_early_mg_per_L": _band(r.early),
-                "level_restarted_on_time_mg_per_L": _band(r.on_time),
-                "level_restarted_late_mg_per_L": _band(r.late),
-                "lowest_level_restarted_late_mg_per_L": _band(r.lowest_late),
+                "level_restarted_early_mg_per_L": band_data(r.early),
+                "level_restarted_on_time_mg_per_L": band_data(r.on_time),
+                "level_restarted_late_mg_per_L": band_data(r.late),
+                "lowest_level_restarted_late_mg_per_L": band_data(r.lowest_late),
             }
             for r in p.restarts
         ],
@@ -156,12 +157,12 @@ def _switch(s: Switch) -> dict[str, Any]:
     return {
         "form": s.form,
         "words": s.words,
-        "labelled_exactly_equal_mg_per_day": _number(s.exact_labelled_mg),
-        "active_mg_per_day": _number(s.active_mg_per_day),
-        "change_percent": _number(s.change_percent),
-        "steady_level_normal_binding_mg_per_L": _band(s.steady),
-        "median_at_least_absorbed_mg_per_L": _number(s.steady_low_mg_per_L),
-        "median_at_most_absorbed_mg_per_L": _number(s.steady_high_mg_per_L),
+        "labelled_exactly_equal_mg_per_day": number(s.exact_labelled_mg),
+        "active_mg_per_day": number(s.active_mg_per_day),
+        "change_percent": number(s.change_percent),
+        "steady_level_normal_binding_mg_per_L": band_data(s.steady),
+        "median_at_least_absorbed_mg_per_L": number(s.steady_low_mg_per_L),
+        "median_at_most_absorbed_mg_per_L": number(s.steady_high_mg_per_L),
         "lines": list(s.lines),
         "offered": s.offered,
         "why_not": list(s.why_not),
@@ -174,9 +175,9 @@ def _draw(d: Draw | None) -> dict[str, Any] | None:
     return {
         "day": _days(d.day),
         "time": d.moment.isoformat(timespec="minutes") if d.moment is not None else None,
-        "expected_spread_log": _number(d.spread),
-        "expected_level_normal_binding_mg_per_L": _band(d.expected),
-        "expected_level_as_reported_mg_per_L": _band(d.reported),
+        "expected_spread_log": number(d.spread),
+        "expected_level_normal_binding_mg_per_L": band_data(d.expected),
+        "expected_level_as_reported_mg_per_L": band_data(d.reported),
     }
 
 
@@ -186,9 +187,9 @@ def _action(a: Action | None) -> dict[str, Any] | None:
     low = a.low_mg_per_L_reported
     return {
         "level": a.scale,
-        "call_above_as_reported_mg_per_L": _number(a.high_mg_per_L_reported),
+        "call_above_as_reported_mg_per_L": number(a.high_mg_per_L_reported),
         "above_from": a.high_from,
-        "low_as_reported_mg_per_L": None if low is None else _number(low),
+        "low_as_reported_mg_per_L": None if low is None else number(low),
         "words": a.words,
     }
 
@@ -196,7 +197,7 @@ def _action(a: Action | None) -> dict[str, Any] | None:
 def _next(n: NextLevel) -> dict[str, Any]:
     return {
         "regimen": n.regimen_words,
-        "spread_log_now": _number(n.before),
+        "spread_log_now": number(n.before),
         "chosen": _draw(n.chosen),
         "safety": _draw(n.safety),
         "curve": [_draw(d) for d in n.draws],
@@ -217,22 +218,22 @@ def plan_data(plan: Plan) -> dict[str, Any]:
     return {
         "shelf": plan.shelf.words,
         "lines": list(plan.lines),
-        "level_today_mg_per_L": _band(level),
+        "level_today_mg_per_L": band_data(level),
         "level_today_from": plan.today.words,
         "largest_step": None
         if plan.step is None
         else {
-            "active_mg_per_day": _number(plan.step.step_mg_per_day),
+            "active_mg_per_day": number(plan.step.step_mg_per_day),
             "rule": plan.step.words,
             "every_dose_taken": _line(plan.step.forecast),
         },
-        "largest_active_mg_per_day": _number(plan.setting.largest_mg_per_day),
+        "largest_active_mg_per_day": number(plan.setting.largest_mg_per_day),
         "limits": {"warn_chance": plan.setting.site.warn_chance, "stop_chance": plan.setting.site.stop_chance},
         "candidates": [candidate_data(c) for c in plan.every],
         "by_expected_loss": {
             "weight_too_high": plan.setting.site.loss_too_high,
             "weight_too_low": plan.setting.site.loss_too_low,
-            "order": [{"words": c.words, "expected_loss": _number(c.loss or 0.0)} for c in plan.ranked],
+            "order": [{"words": c.words, "expected_loss": number(c.loss or 0.0)} for c in plan.ranked],
         }
         if plan.ranked
         else None,
@@ -247,7 +248,7 @@ def plan_data(plan: Plan) -> dict[str, Any]:
         else {
             "days": list(plan.overlay.days),
             "level_mg_per_L": [
-                {"words": words, "bands": [_band(b) for b in bands]} for words, bands in plan.overlay.courses
+                {"words": words, "bands": [band_data(b) for b in bands]} for words, bands in plan.overlay.courses
             ],
         },
     }
