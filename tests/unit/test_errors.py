@@ -665,3 +665,11 @@ def test_a_text_of_too_many_entries_is_said() -> None:
     assert str(caught.value) == (
         "Case file: the text has too many entries. Allowed: at most 300,000 entries. Give the case of one patient only."
     )
+
+
+def test_a_flood_of_problems_is_cut_and_counted() -> None:
+    wrong = ", ".join('{"value": 1, "kind": "total"}' for _ in range(130))
+    with pytest.raises(CaseError) as caught:
+        case_module.parse_case_text('{"pkcalc_case": 1, "drug": "phenytoin", "levels": [' + wrong + "]}")
+    assert len(caught.value.problems) == 101
+    assert caught.value.problems[-1].text == "Case file: 30 more problems were found. Mend these first."
