@@ -15,7 +15,7 @@ from dataclasses import dataclass, field
 from datetime import datetime, timedelta
 from functools import cached_property
 from pathlib import Path
-from typing import Annotated, Any, Literal, ParamSpec, TypeVar
+from typing import Annotated, Any, Literal, ParamSpec, TypeVar, get_args
 
 from pydantic import AfterValidator, BaseModel, ConfigDict, Field, StringConstraints, ValidationError
 from pydantic_core import PydanticCustomError
@@ -237,6 +237,24 @@ class EarlierForecastFile(BaseModel):
     version: Text = ""
 
 
+#: What a second person can type again from the chart. Weight, doses, levels and dates are always among it.
+Part = Literal["drug", "time of the consult", "patient", "albumin", "context", "doses", "levels", "dialysis"]
+COMPARED: tuple[Part, ...] = get_args(Part)
+
+
+class ReentryFile(BaseModel):
+    """That a second person typed this case again from the chart, and what the comparison found. Nobody is named."""
+
+    model_config = _FILE
+    done: Text = Field(description="Clock time of the latest comparison.")
+    compared: tuple[Part, ...] = Field(min_length=1, max_length=len(COMPARED), description="What was typed again.")
+    differences: tuple[Text, ...] = Field(
+        (), max_length=100, description="Every place that differed since this re-entry began."
+    )
+    left: tuple[Text, ...] = Field((), max_length=100, description="Those that differed still at the latest time.")
+    facts: Text = Field(description="Fingerprint of what was compared; once it no longer fits, the re-entry is void.")
+
+
 class DemonstrationFile(BaseModel):
     """Marks an invented, non-clinical scenario. It can be edited but stays a demonstration."""
 
@@ -273,6 +291,7 @@ class CaseFile(BaseModel):
     plan: PlanFile = PlanFile()
     chosen: ChosenFile | None = None
     forecast_then: tuple[EarlierForecastFile, ...] = Field((), max_length=500)
+    reentry: ReentryFile | None = None
 
 
 @dataclass(frozen=True)
@@ -398,6 +417,17 @@ class EarlierForecast:
 
 
 @dataclass(frozen=True)
+class Reentry:
+    """A blind re-entry that was done. differences: places that differed; left: those not resolved yet."""
+
+    done: datetime
+    compared: tuple[Part, ...]
+    differences: tuple[str, ...]
+    left: tuple[str, ...]
+    facts: str
+
+
+@dataclass(frozen=True)
 class Case:
     """A checked case. `file` is what was typed."""
 
@@ -425,6 +455,7 @@ class Case:
     plan_start: datetime | None = None
     next_draw: datetime | None = None
     dialysis: tuple[Session, ...] = ()
+    reentry: Reentry | None = None
 
     def answer(self, question: str) -> str:
         """'yes', 'no', 'unknown' or 'not stated'."""
@@ -719,6 +750,7 @@ def _model_at(path: tuple[int | str, ...]) -> type[BaseModel]:
         "regimen": ProposedFile,
         "demonstration": DemonstrationFile,
         "forecast_then": EarlierForecastFile,
+        "reentry": ReentryFile,
         "context": AnswerFile,
     }
     for step in reversed(path):
@@ -887,6 +919,7 @@ def check_case(file: CaseFile) -> Case:
         plan_start=_optional_time(file.plan.start, "Plan, start", check),
         next_draw=_optional_time(file.chosen.next_draw, "Chosen, next draw", check) if file.chosen else None,
         dialysis=dialysis,
+        reentry=_reentry(file.reentry, check) if file.reentry is not None else None,
     )
     if file.plan.load and file.plan.load.form not in profile.forms:
         check.say("Plan, load, form", f'"{file.plan.load.form}" was given', ", ".join(profile.forms), "Choose a form")
@@ -1452,6 +1485,30 @@ def _earlier(i: int, file: EarlierForecastFile, check: _Check, profile: Profile)
         check.say(where, "low, median and high are not in order", "low to high", "Check the three numbers")
         return None
     return EarlierForecast(drawn, file.kind, median, low, high, file.version)
+
+
+def _reentry(file: ReentryFile, check: _Check) -> Reentry | None:
+    """The record of a re-entry, refused where it contradicts itself; whether it still fits is told in the note."""
+    again = "Compare the two entries again and keep the new record"
+    done = _optional_time(file.done, "Reentry, done", check)
+    if not file.done:
+        check.say("Reentry, done", "nothing was given", "date and time of the comparison", again)
+    missing = [x for x in ("patient", "doses", "levels") if x not in file.compared]
+    if missing:
+        given = f"{' and '.join(missing)} {'is' if len(missing) == 1 else 'are'} not among what was compared"
+        check.say("Reentry, compared", given, "at least patient, doses and levels", again)
+    if len(set(file.compared)) < len(file.compared):
+        check.say("Reentry, compared", "a part stands twice", "each part once", again)
+    for name, places in (("differences", file.differences), ("left", file.left)):
+        if len(set(places)) < len(places) or "" in places:
+            check.say(f"Reentry, {name}", "a place is empty or stands twice", "each place once", again)
+    unknown = [x for x in file.left if x not in file.differences]
+    if unknown:
+        given = f'"{as_typed(unknown[0])}" is left although it is not among the differences'
+        check.say("Reentry, left", given, "places that stand under differences too", again)
+    if not re.fullmatch("[0-9a-f]{12}", file.facts):
+        check.say("Reentry, facts", "it is no fingerprint", "12 signs of 0 to 9 and a to f", again)
+    return None if done is None else Reentry(done, file.compared, file.differences, file.left, file.facts)
 
 
 def _check_zones(case: Case, check: _Check) -> None:

@@ -11,95 +11,51 @@ import json
 from collections.abc import Callable, Iterator, Mapping, Sequence
 from copy import deepcopy
 from dataclasses import dataclass
+from datetime import datetime
 from itertools import zip_longest
 from pathlib import Path
 from typing import Any
 
-from pkcalc import units
-from pkcalc.case import QUESTIONS, Case, CaseFile, check_case, dump_case_file, parse_case_text
-from pkcalc.clock import read_time, read_time_of_day
+from pkcalc import entries
+from pkcalc.case import COMPARED, Case, CaseFile, Part, ReentryFile, check_case, parse_case_text
 from pkcalc.consult import Consult, Shown, run_consult
 from pkcalc.drugs.profile import Profile, load_profile
-from pkcalc.errors import CaseError
+from pkcalc.errors import CaseError, Problem
 from pkcalc.forecast import Forecast
 from pkcalc.site import Site
 from pkcalc.units import show
 
 #: More differences than this are not tried one by one: the entries are then not of one case, or one is careless.
 MOST_TRIED = 6
-NOT_STATED = "not stated"
+#: More differences from the chart than this are not kept: the entries are then not of one case.
+MOST_KEPT = 100
 
-#: Fields of each part, with how a value of it is read: two texts that read as one value are no difference.
-_PATIENT = {"age": "age", "sex": "word", "weight": "weight", "weight_basis": "word", "height": "height"}
-_ALBUMIN = {"value": "albumin", "taken": "time", "method": "word", "after_infusion": "word"}
-_DOSE = {
-    "form": "word",
-    "product": "word",
-    "amount": "amount",
-    "every": "duration",
-    "daily": "daily",
-    "at": "time",
-    "over": "duration",
-    "rate": "dose rate",
-    "from": "time",
-    "until": "time",
-    "for_about": "duration",
-    "missed": "times",
-    "source": "word",
-    "given_by": "word",
-    "confirmed": "word",
-}
-_LEVEL = {
-    "value": "level",
-    "kind": "word",
-    "drawn": "time",
-    "normalised_by": "word",
-    "on_dose": "number",
-    "valproate_level": "level",
-    "sample": "word",
-}
-_DIALYSIS = {"from": "time", "until": "time", "clearance": "clearance"}
-_TARGET = {"low": "level", "high": "level", "kind": "word"}
-_REGIMEN = {
-    "form": "word",
-    "product": "word",
-    "amount": "amount",
-    "every": "duration",
-    "daily": "daily",
-    "rate": "dose rate",
-}
-_PLAN = {
-    "shelf": "word",
-    "products": "words",
-    "largest_step": "dose rate",
-    "order_by_loss": "number",
-    "restart_level": "level",
-    "start": "time",
-}
-_LOAD = {"form": "word", "aim": "level", "at": "time"}
-_TOP = {"drug": "word", "now": "time", "aim": "level", "population": "word", "method": "word"}
-
-#: What a field holds where nothing was written, where that is not "not stated".
-_SILENT = {
-    "sex": "unknown",
-    "weight_basis": "unknown",
-    "method": "unknown",
-    "after_infusion": "unknown",
-    "source": "given",
-    "given_by": "unknown",
-    "confirmed": "unknown",
-    "sample": "unknown",
+#: The part of a re-entry that each key of the case file belongs to. What is asked or decided belongs to none.
+_PART_OF: Mapping[str, Part] = {
+    "drug": "drug",
+    "now": "time of the consult",
+    "patient": "patient",
+    "albumin": "albumin",
+    "context": "context",
+    "doses": "doses",
+    "levels": "levels",
+    "dialysis": "dialysis",
 }
 
 
 @dataclass(frozen=True)
 class Difference:
-    """One field in which the two entries differ. effect: what it alone does to the forecast ("" where not tried)."""
+    """One field in which the two entries differ.
+
+    effect: what it alone does to the forecast ("" where not tried). part: what of the chart it belongs to; None where
+    it is asked or decided, not taken from the chart.
+    """
 
     where: str
     first: str
     second: str
     effect: str = ""
+    part: Part | None = None
 
     @property
     def text(self) -> str:
@@ -109,7 +65,7 @@ class Difference:
 @dataclass(frozen=True)
 class Comparison:
     """Two entries compared. same_value: fields written differently that read as one value. effects: the forecasts
-    of the whole entries side by side."""
+    of the whole entries side by side. compared: the parts of the chart that the second entry holds."""
 
     differences: tuple[Difference, ...]
     same_value: tuple[Difference, ...]
@@ -117,19 +73,30 @@ class Comparison:
     first_hash: str
     second_hash: str
     demonstration: bool
+    compared: tuple[Part, ...] = COMPARED
 
     @property
     def equal(self) -> bool:
         return not self.differences
 
     @property
+    def from_chart(self) -> tuple[Difference, ...]:
+        """The differences that a re-entry counts: of parts that the second person typed from the chart."""
+        return tuple(d for d in self.differences if d.part in self.compared)
+
+    @property
     def verdict(self) -> str:
         if self.equal:
             return "The two entries agree in every field compared."
-        n = len(self.differences)
-        return (
-            f"The two entries differ in {n} field{'s' if n > 1 else ''}: look at the chart before any number is used."
-        )
+        n, counted = len(self.differences), len(self.from_chart)
+        fields = f"{n} field{'s' if n > 1 else ''}"
+        if not counted:
+            return (
+                f"The two entries agree in everything typed again from the chart. They differ in {fields} of what is "
+                "asked, decided or was not typed again."
+            )
+        of_chart = "" if counted == n else f", {counted} of them taken from the chart"
+        return f"The two entries differ in {fields}{of_chart}: look at the chart before any number is used."
 
     def text(self) -> str:
         """For a person."""
@@ -148,6 +115,8 @@ class Comparison:
         if self.effects:
             out.append("Forecasts of the two entries:")
             out += [f"- {e}" for e in self.effects]
+        if missed := [x for x in COMPARED if x not in self.compared]:
+            out.append(f"Not typed again in the second entry: {', '.join(missed)}.")
         out.append("Not compared: labels, comments, the question, the pharmacist's own words.")
         out.append(f"Case fingerprints: {self.first_hash} (first), {self.second_hash} (second).")
         return "\n".join(out) + "\n"
@@ -158,8 +127,10 @@ class Comparison:
             "outcome": "equal" if self.equal else "different",
             "demonstration": self.demonstration,
             "verdict": self.verdict,
+            "typed_again": list(self.compared),
+            "differences_from_chart": len(self.from_chart),
             "differences": [
-                {"where": d.where, "first": d.first, "second": d.second, "effect_alone": d.effect}
+                {"where": d.where, "first": d.first, "second": d.second, "effect_alone": d.effect, "part": d.part}
                 for d in self.differences
             ],
             "written_differently": [{"where": d.where, "first": d.first, "second": d.second} for d in self.same_value],
@@ -175,7 +146,7 @@ def compare(first: Case, second: Case, site: Site | str | Path | None = None, *,
     Where the entries agree, or forecasts is False, no forecast is run. Each of up to MOST_TRIED differences is
     also tried alone: the first entry with this one field of the second.
     """
-    a, b = _data(first.file), _data(second.file)
+    a, b = entries.typed(first.file), entries.typed(second.file)
     profile = load_profile(first.drug)
     found = list(_walk(a, b, profile))
     different = [x for x in found if not x.same]
@@ -189,13 +160,52 @@ def compare(first: Case, second: Case, site: Site | str | Path | None = None, *,
         elif len(different) == 1:
             alone = {0: _change(before, after)}
     return Comparison(
-        differences=tuple(Difference(x.where, x.first, x.second, alone.get(i, "")) for i, x in enumerate(different)),
-        same_value=tuple(Difference(x.where, x.first, x.second) for x in found if x.same),
+        differences=tuple(
+            Difference(x.where, x.first, x.second, alone.get(i, ""), x.part) for i, x in enumerate(different)
+        ),
+        same_value=tuple(Difference(x.where, x.first, x.second, "", x.part) for x in found if x.same),
         effects=effects,
         first_hash=first.hash,
         second_hash=second.hash,
         demonstration=first.demonstration is not None or second.demonstration is not None,
+        compared=tuple(x for x in COMPARED if x != "context" or b.get("context") or not a.get("context")),
     )
+
+
+# --- keeping it with the case ----------------------------------------------------------------------------
+
+
+def keep(first: Case, found: Comparison, at: datetime) -> CaseFile:
+    """The first entry with the record that this comparison was done; nobody is named in it.
+
+    at: when it was done. While differences of an earlier comparison are not resolved, the new one goes on with that
+    re-entry: its differences are kept and count as resolved once the two entries agree there.
+
+    Raises CaseError where the comparison is of another entry, or holds too many differences to be of one case.
+    """
+    if found.first_hash != first.hash:
+        raise CaseError(
+            Problem("Reentry", "the comparison is of another first entry", "its own", "Compare the two entries again")
+        )
+    left = tuple(dict.fromkeys(d.where for d in found.from_chart))
+    if len(left) > MOST_KEPT:
+        raise CaseError(
+            Problem(
+                "Reentry",
+                f"{len(left)} differences from the chart were found",
+                f"at most {MOST_KEPT}",
+                "Check that both entries are of one patient, then compare again",
+            )
+        )
+    before = first.reentry.differences if first.reentry is not None and first.reentry.left else ()
+    record = ReentryFile(
+        done=at.isoformat(" ", "minutes"),
+        compared=found.compared,
+        differences=tuple(dict.fromkeys((*before, *left)))[-MOST_KEPT:],
+        left=left,
+        facts=entries.fingerprint(first.file, found.compared),
+    )
+    return first.file.model_copy(update={"reentry": record})
 
 
 # --- the differences -------------------------------------------------------------------------------------
@@ -205,33 +215,34 @@ Patch = Callable[[dict[str, Any]], None]
 
 @dataclass(frozen=True)
 class _Found:
-    """A field in which the texts differ. same: they read as one value. patch: puts the second's into the first."""
+    """A field in which the texts differ. same: they read as one value. patch: puts the second's into the first.
+    key: the key of the case file under which it stands."""
 
     where: str
     first: str
     second: str
     same: bool
     patch: Patch
+    key: str
 
-
-def _data(file: CaseFile) -> dict[str, Any]:
-    data: dict[str, Any] = json.loads(dump_case_file(file))
-    return data
+    @property
+    def part(self) -> Part | None:
+        return _PART_OF.get(self.key)
 
 
 def _walk(a: dict[str, Any], b: dict[str, Any], profile: Profile) -> Iterator[_Found]:
-    yield from _fields(a, b, _TOP, "", profile, ())
-    yield from _part(a, b, "patient", _PATIENT, "Patient", profile)
-    yield from _part(a, b, "albumin", _ALBUMIN, "Albumin", profile)
-    yield from _context(a, b)
-    yield from _rows(a, b, "doses", _DOSE, "Dose line", profile, _dose_key)
-    yield from _rows(a, b, "levels", _LEVEL, "Level", profile, _level_key)
-    yield from _rows(a, b, "dialysis", _DIALYSIS, "Dialysis session", profile, _session_key)
-    yield from _part(a, b, "target", _TARGET, "Target", profile)
-    yield from _rows(a, b, "proposed", _REGIMEN, "Proposed regimen", profile, None)
-    yield from _part(a, b, "plan", _PLAN, "Plan", profile)
-    yield from _nested(a, b, ("plan", "load"), _LOAD, "Load asked for", profile)
-    yield from _nested(a, b, ("chosen", "regimen"), _REGIMEN, "Chosen regimen", profile)
+    yield from _fields(a, b, entries.TOP, "", profile, ())
+    yield from _part(a, b, "patient", entries.PATIENT, "Patient", profile)
+    yield from _part(a, b, "albumin", entries.ALBUMIN, "Albumin", profile)
+    yield from _context(a, b, profile)
+    yield from _rows(a, b, "doses", entries.DOSE, "Dose line", profile, _dose_key)
+    yield from _rows(a, b, "levels", entries.LEVEL, "Level", profile, _level_key)
+    yield from _rows(a, b, "dialysis", entries.DIALYSIS, "Dialysis session", profile, _session_key)
+    yield from _part(a, b, "target", entries.TARGET, "Target", profile)
+    yield from _rows(a, b, "proposed", entries.REGIMEN, "Proposed regimen", profile, None)
+    yield from _part(a, b, "plan", entries.PLAN, "Plan", profile)
+    yield from _nested(a, b, ("plan", "load"), entries.LOAD, "Load asked for", profile)
+    yield from _nested(a, b, ("chosen", "regimen"), entries.REGIMEN, "Chosen regimen", profile)
 
 
 def _fields(
@@ -243,15 +254,16 @@ def _fields(
     path: tuple[str | int, ...],
 ) -> Iterator[_Found]:
     for name, kind in fields.items():
+        key = str(path[0]) if path else name
         one, two = a.get(name), b.get(name)
-        silent = _SILENT.get(name) if path else None
+        silent = entries.SILENT.get(name) if path else None
         one, two = one or silent, two or silent
         if one == two:
             continue
         label = name.replace("_", " ")
         place = f"{where}, {label}" if where else label[0].upper() + label[1:]
-        same = _value(one, kind, profile) == _value(two, kind, profile)
-        yield _Found(place, _shown(one), _shown(two), same, _setter((*path, name), b.get(name)))
+        same = entries.value(one, kind, profile) == entries.value(two, kind, profile)
+        yield _Found(place, _shown(one), _shown(two), same, _setter((*path, name), b.get(name)), key)
 
 
 def _part(
@@ -274,29 +286,25 @@ def _nested(
     if one is None and two is None:
         return
     if not always and (one is None or two is None):
-        yield _Found(where, _whole(one, fields), _whole(two, fields), False, _setter(path, two))
+        yield _Found(where, _whole(one, fields), _whole(two, fields), False, _setter(path, two), str(path[0]))
         return
     yield from _fields(one or {}, two or {}, fields, where, profile, path)
 
 
-def _context(a: dict[str, Any], b: dict[str, Any]) -> Iterator[_Found]:
+def _context(a: dict[str, Any], b: dict[str, Any], profile: Profile) -> Iterator[_Found]:
     one, two = a.get("context", {}), b.get("context", {})
-    for key in QUESTIONS:
+    for key in dict.fromkeys((*profile.questions, *one, *two)):
         x, y = one.get(key), two.get(key)
-        first, second = _answer(x), _answer(y)
+        first, second = entries.answer(x), entries.answer(y)
         place = f"Context, {key.replace('_', ' ')}"
         if first != second:
-            yield _Found(place, first, second, False, _setter(("context", key), y))
-        since = [v.get("since", "") if isinstance(v, dict) else "" for v in (x, y)]
+            yield _Found(place, first, second, False, _setter(("context", key), y), "context")
+        since = [entries.since(v) for v in (x, y)]
         if since[0] != since[1]:
-            same = _moment(since[0]) == _moment(since[1])
-            yield _Found(f"{place}, since", _shown(since[0]), _shown(since[1]), same, _setter(("context", key), y))
-
-
-def _answer(given: Any) -> str:
-    if given is None:
-        return NOT_STATED
-    return str(given["answer"]) if isinstance(given, dict) else str(given)
+            same = entries.moment(since[0]) == entries.moment(since[1])
+            yield _Found(
+                f"{place}, since", _shown(since[0]), _shown(since[1]), same, _setter(("context", key), y), "context"
+            )
 
 
 Key = Callable[[Mapping[str, Any]], Any]
@@ -320,10 +328,10 @@ def _rows(
             if key == "levels":
                 yield from _albumin_of_level(one[i], two[j], place, profile, (key, i))
         elif i is not None:
-            yield _Found(f"{where} {i + 1}", _whole(one[i], fields), "not entered", False, _remover(key, i))
+            yield _Found(f"{where} {i + 1}", _whole(one[i], fields), "not entered", False, _remover(key, i), key)
         elif j is not None:
             yield _Found(
-                f"{where} {j + 1} of the second", "not entered", _whole(two[j], fields), False, _adder(key, two[j])
+                f"{where} {j + 1} of the second", "not entered", _whole(two[j], fields), False, _adder(key, two[j]), key
             )
 
 
@@ -335,9 +343,16 @@ def _albumin_of_level(
         return
     place = f"{where}, albumin"
     if one is None or two is None:
-        yield _Found(place, _whole(one, _ALBUMIN), _whole(two, _ALBUMIN), False, _setter((*path, "albumin"), two))
+        yield _Found(
+            place,
+            _whole(one, entries.ALBUMIN),
+            _whole(two, entries.ALBUMIN),
+            False,
+            _setter((*path, "albumin"), two),
+            str(path[0]),
+        )
         return
-    yield from _fields(one, two, _ALBUMIN, place, profile, (*path, "albumin"))
+    yield from _fields(one, two, entries.ALBUMIN, place, profile, (*path, "albumin"))
 
 
 def _pairs(
@@ -363,64 +378,25 @@ def _pairs(
 
 
 def _dose_key(row: Mapping[str, Any]) -> Any:
-    moment = _moment(row.get("at") or row.get("from", ""))
+    moment = entries.moment(row.get("at") or row.get("from", ""))
     return (moment, row.get("form", "")) if moment is not None else None
 
 
 def _session_key(row: Mapping[str, Any]) -> Any:
-    return _moment(row.get("from", ""))
+    return entries.moment(row.get("from", ""))
 
 
 def _level_key(row: Mapping[str, Any]) -> Any:
-    moment = _moment(row.get("drawn", ""))
+    moment = entries.moment(row.get("drawn", ""))
     return (moment, row.get("kind")) if moment is not None else None
 
 
-# --- values ----------------------------------------------------------------------------------------------
-
-
-def _moment(text: Any) -> Any:
-    if not text:
-        return None
-    try:
-        moment = read_time(str(text), "Time", time_needed=False)
-    except CaseError:
-        return str(text)
-    return moment.timestamp() if moment.tzinfo is not None else moment
-
-
-def _value(given: Any, kind: str, profile: Profile) -> Any:
-    """What a text says, so that two ways of writing it are one value; the text itself where it cannot be read."""
-    if given in (None, "", [], False):
-        return None
-    if kind in ("word", "number"):
-        return given
-    if kind == "words":
-        return sorted(given)
-    if kind == "time":
-        return _moment(given)
-    if kind == "times":
-        return sorted((_moment(x) for x in given), key=str)
-    if kind == "daily":
-        return sorted((_hour(x["time"]), _value(x["amount"], "amount", profile), x.get("form", "")) for x in given)
-    text, mark = (given[1:], given[0]) if given[0] in "<>" else (given, "")
-    try:
-        typed = units.read(text, kind, "Value", molar_mass_g_per_mol=profile.molar_mass_g_per_mol, zero_allowed=True)
-    except CaseError:
-        return given
-    return mark, float(f"{typed.value:.9g}")
-
-
-def _hour(text: str) -> float:
-    try:
-        return read_time_of_day(text, "Time")
-    except CaseError:
-        return -1.0
+# --- in words ------------------------------------------------------------------------------------------
 
 
 def _shown(given: Any) -> str:
-    if given in (None, "", [], False):
-        return NOT_STATED
+    if given in (None, "", [], {}, False):
+        return entries.NOT_STATED
     if isinstance(given, list):
         return " and ".join(
             f"{x['amount']} at {x['time']}" + (f" {x['form']}" if x.get("form") else "")
@@ -428,6 +404,8 @@ def _shown(given: Any) -> str:
             else str(x)
             for x in given
         )
+    if isinstance(given, dict):
+        return " and ".join(f"{drug.replace('_', ' ')} {text}" for drug, text in given.items())
     return "yes" if given is True else str(given)
 
 
@@ -590,4 +568,4 @@ def _percent(chance: float) -> str:
     return f"{percent:.0f} %"
 
 
-__all__ = ["Comparison", "Difference", "compare"]
+__all__ = ["Comparison", "Difference", "compare", "keep"]

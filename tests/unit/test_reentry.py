@@ -9,8 +9,8 @@ from typing import Any
 
 import pytest
 
-from pkcalc import reentry
-from pkcalc.case import QUESTIONS, Case, CaseFile, read_case_text
+from pkcalc import entries, reentry
+from pkcalc.case import Case, CaseFile, read_case_text
 from pkcalc.consult import run_consult
 from pkcalc.drugs.profile import load_profile
 from pkcalc.reentry import Comparison, compare
@@ -72,7 +72,7 @@ def test_the_same_entry_is_equal_and_runs_no_forecast(monkeypatch: pytest.Monkey
         (("levels", 1, "drawn"), "2026-11-30 07:00", "Level 2, drawn: 2026-12-01 07:00 (first), 2026-11-30 07:00 (second)."),
         (("levels", 1, "albumin"), {"value": "29 g/L"}, "Level 2, albumin: not entered (first), value 29 g/L (second)."),
         (("levels", 1, "sample"), "plasma", "Level 2, sample: unknown (first), plasma (second)."),
-        (("levels", 1, "valproate_level"), "60 mg/L", "Level 2, valproate level: not stated (first), 60 mg/L (second)."),
+        (("levels", 1, "other_levels"), {"valproate": "60 mg/L"}, "Level 2, other levels: not stated (first), valproate 60 mg/L (second)."),
         (("now",), "2026-12-02 10:00", "Now: 2026-12-01 10:00 (first), 2026-12-02 10:00 (second)."),
         (("aim",), "14 mg/L", "Aim: not stated (first), 14 mg/L (second)."),
         (("target",), {"low": "8 mg/L", "high": "15 mg/L"}, "Target: not entered (first), low 8 mg/L, high 15 mg/L (second)."),
@@ -131,7 +131,7 @@ def test_dialysis_sessions_are_compared() -> None:
         CaseFile.model_validate_json(json.dumps({**PLAIN, "dialysis": [x]}))
         for x in (one, {**one, "clearance": "6 L/h"}, {**one, "clearance": "90 mL/min"})
     ]
-    dumped = [reentry._data(x) for x in data]
+    dumped = [entries.typed(x) for x in data]
     profile = load_profile("phenytoin")
     (same,) = reentry._walk(dumped[0], dumped[1], profile)
     assert same.same
@@ -145,18 +145,18 @@ def test_what_is_free_text_is_not_compared() -> None:
 
 def test_every_field_of_the_case_file_is_compared_or_named_as_not() -> None:
     """A field added to the format later must be added here too."""
-    left_out = {"pkcalc_case", "comment", "label", "question", "demonstration", "forecast_then"}
+    left_out = {"pkcalc_case", "comment", "label", "question", "demonstration", "forecast_then", "reentry"}
     parts = {"patient", "albumin", "context", "doses", "levels", "dialysis", "target", "proposed", "plan", "chosen"}
-    assert {f.alias or n for n, f in CaseFile.model_fields.items()} == left_out | parts | set(reentry._TOP)
+    assert {f.alias or n for n, f in CaseFile.model_fields.items()} == left_out | parts | set(entries.TOP)
     for model, known, extra in (
-        ("patient", reentry._PATIENT, set()),
-        ("albumin", reentry._ALBUMIN, set()),
-        ("doses", reentry._DOSE, {"comment"}),
-        ("levels", reentry._LEVEL, {"albumin", "comment"}),
-        ("dialysis", reentry._DIALYSIS, {"comment"}),
-        ("target", reentry._TARGET, {"reason"}),
-        ("proposed", reentry._REGIMEN, set()),
-        ("plan", reentry._PLAN, {"load"}),
+        ("patient", entries.PATIENT, set()),
+        ("albumin", entries.ALBUMIN, set()),
+        ("doses", entries.DOSE, {"comment"}),
+        ("levels", entries.LEVEL, {"albumin", "comment"}),
+        ("dialysis", entries.DIALYSIS, {"comment"}),
+        ("target", entries.TARGET, {"reason"}),
+        ("proposed", entries.REGIMEN, set()),
+        ("plan", entries.PLAN, {"load"}),
     ):
         schema = CaseFile.model_json_schema(by_alias=True)
         name = {
@@ -170,7 +170,7 @@ def test_every_field_of_the_case_file_is_compared_or_named_as_not() -> None:
             "plan": "PlanFile",
         }[model]
         assert set(schema["$defs"][name]["properties"]) == set(known) | extra, name
-    assert set(PLAIN["context"]) <= set(QUESTIONS)
+    assert set(PLAIN["context"]) <= set(load_profile("phenytoin").questions)
 
 
 # the effect on the forecast ------------------------------------------------------------------------------
