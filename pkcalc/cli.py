@@ -13,7 +13,7 @@ import click
 from pkcalc import __version__
 
 if TYPE_CHECKING:
-    from pkcalc.case import Case
+    from pkcalc.case import Case, CaseFile
     from pkcalc.consult import Consult
     from pkcalc.errors import CannotEstimate, CaseError, DrugFileError
 
@@ -502,19 +502,36 @@ def from_csv(doses: Path, levels: Path, drug: str, weight: str, age: str, output
 @cli.command()
 @click.argument("first", metavar="CASE", type=click.Path(path_type=Path, exists=True, dir_okay=False))
 @click.argument("second", metavar="CASE", type=click.Path(path_type=Path, exists=True, dir_okay=False))
+@click.option(
+    "--keep",
+    type=click.Path(path_type=Path, dir_okay=False),
+    metavar="NEW",
+    help="Write the first entry to this new file with the record that it was compared: when, what, which places "
+    "differed. The note then says so. Nobody is named; a file that exists is never overwritten.",
+)
 @_format
 @_out
 @_site
-def compare(first: Path, second: Path, output_format: str, out: Path | None, site: Path | None) -> None:
+def compare(
+    first: Path, second: Path, keep: Path | None, output_format: str, out: Path | None, site: Path | None
+) -> None:
     """Every difference between two entries of the same case (blind re-entry by the second pharmacist).
 
     Exit status 0 where the entries agree, 1 where they differ, 2 where one cannot be read.
     """
+    from datetime import datetime
+
     from pkcalc.case import load_case
     from pkcalc.note.data import dumps
     from pkcalc.reentry import compare as compare_cases
+    from pkcalc.reentry import keep as with_record
 
-    found = compare_cases(load_case(first), load_case(second), site)
+    one, two = load_case(first), load_case(second)
+    if keep is not None:
+        _refuse_to_keep(first, second, keep)
+    found = compare_cases(one, two, site)
+    if keep is not None:
+        _write_new(keep, with_record(one, found, datetime.now()))
     text = dumps(found.as_dict()) if output_format == "json" else found.text()
     if out is None:
         click.echo(text, nl=False)
@@ -523,6 +540,30 @@ def compare(first: Path, second: Path, output_format: str, out: Path | None, sit
         click.echo(f"Written: {out}", err=True)
     if not found.equal:
         sys.exit(1)
+
+
+def _refuse_to_keep(first: Path, second: Path, new: Path) -> None:
+    """One entry twice is no re-entry, and no file is overwritten."""
+    from pkcalc.errors import CaseError, Problem
+
+    if first.samefile(second):
+        raise CaseError(
+            Problem(
+                "--keep", "both entries are the same file", "two entries", "Let a second person type the case again"
+            )
+        )
+    if new.exists():
+        raise CaseError(
+            Problem("--keep", f"{new.name} exists already", "a file that does not exist yet", "Give another name")
+        )
+
+
+def _write_new(new: Path, file: CaseFile) -> None:
+    from pkcalc.case import dump_case_file
+
+    with new.open("x", encoding="utf-8") as stream:
+        stream.write(dump_case_file(file))
+    click.echo(f"Written: {new}", err=True)
 
 
 @cli.command()

@@ -17,8 +17,11 @@ from pkcalc.clock import read_time, read_time_of_day, show_time
 from pkcalc.drugs.profile import Profile, load_profile
 from pkcalc.errors import CaseError
 
-NOT_DONE = "Not done."
 NOT_STATED = "not stated"
+HOW = (
+    "The second pharmacist types weight, doses, levels and dates from the chart without seeing this entry; the form, "
+    "or pkcalc compare, lists every difference and can keep in the case file that it was done."
+)
 
 #: Fields of each part, with how a value of it is read: two texts that read as one value are no difference.
 PATIENT = {"age": "age", "sex": "word", "weight": "weight", "weight_basis": "word", "height": "height"}
@@ -202,30 +205,29 @@ def standing(case: Case) -> Standing:
 
 
 def standing_words(case: Case) -> str:
-    """The same in one sentence for the note; it never says more than what was compared."""
+    """The same in one sentence for the note."""
     kept, now = case.reentry, standing(case)
     if kept is None:
-        return NOT_DONE
+        return "Blind re-entry: not done."
     when = show_time(kept.done)
     if now == "void":
-        return f"Re-entered on {when}, but what was compared has changed since: repeat it."
+        return f"Blind re-entry: re-entered on {when}, but changed since: repeat it."
     n, left = len(kept.differences), len(kept.left)
     if not n:
-        return f"Done on {when}, no difference."
-    found = f"Done on {when}, {n} difference{'s' if n > 1 else ''}"
+        return f"Blind re-entry: done on {when}, no difference."
+    found = f"Blind re-entry: done on {when}, {n} difference{'s' if n > 1 else ''}"
     if left:
-        return (
-            f"{found}, {left if left < n else 'none'} {'not resolved' if left < n else 'resolved'}: look at the chart."
-        )
+        open_ = "none resolved" if left == n > 1 else "not resolved" if left == n else f"{left} of them not resolved"
+        return f"{found}, {open_}: look at the chart."
     return f"{found}, {'all ' if n > 1 else ''}resolved."
 
 
 def standing_lines(case: Case) -> tuple[str, ...]:
-    """The sentence, what was compared, and where the differences were."""
+    """The sentence, what was compared, and where the differences were; where it was not done, how to do it."""
     lines = [standing_words(case)]
     kept = case.reentry
     if kept is None:
-        return tuple(lines)
+        return (*lines, HOW)
     lines.append(f"Typed again by a second person and compared: {', '.join(kept.compared)}.")
     missed = [x for x in COMPARED if x not in kept.compared]
     if missed:

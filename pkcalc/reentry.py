@@ -23,7 +23,7 @@ from pkcalc.drugs.profile import Profile, load_profile
 from pkcalc.errors import CaseError, Problem
 from pkcalc.forecast import Forecast
 from pkcalc.site import Site
-from pkcalc.units import show
+from pkcalc.units import percent, show
 
 #: More differences than this are not tried one by one: the entries are then not of one case, or one is careless.
 MOST_TRIED = 6
@@ -478,7 +478,7 @@ def _change(before: Consult, after: Consult) -> str:
             continue
         words = a.words if a.words == b.words else f"{a.words} becomes {b.words}"
         levels = _becomes(*(_bound(x.forecast.total.median) for x in (a, b)))
-        chances = _becomes(*(_percent(x.forecast.above_critical) for x in (a, b)))
+        chances = _becomes(*(percent(x.forecast.above_critical) for x in (a, b)))
         out.append(f"{name}, {words}: {levels}, chance above the critical level or of no steady state {chances}.")
     if not out and before.aim_rate is not None and after.aim_rate is not None:
         rates = [show(x.median, "mg/day") for x in (before.aim_rate, after.aim_rate)]
@@ -553,19 +553,12 @@ def _level(forecast: Forecast) -> str:
     low, middle, high = (_bound(x) for x in (forecast.total.low, forecast.total.median, forecast.total.high))
     return (
         f"{middle} as the laboratory reports it (90 % interval {low} to {high}; "
-        f"chance above the critical level or of no steady state {_percent(forecast.above_critical)})"
+        f"chance above the critical level or of no steady state {percent(forecast.above_critical)})"
     )
 
 
 def _bound(value: float) -> str:
     return show(value, "mg/L") if value < float("inf") else "no steady state"
-
-
-def _percent(chance: float) -> str:
-    percent = 100 * chance
-    if percent < 1:
-        return "below 1 %"
-    return f"{percent:.0f} %"
 
 
 __all__ = ["Comparison", "Difference", "compare", "keep"]

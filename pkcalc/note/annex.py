@@ -4,7 +4,8 @@ from __future__ import annotations
 
 import numpy as np
 
-from pkcalc.case import QUESTIONS, EarlierForecast
+from pkcalc import entries
+from pkcalc.case import EarlierForecast
 from pkcalc.clock import show_time
 from pkcalc.consult import Consult, Shown
 from pkcalc.dosing import active_mg
@@ -648,15 +649,7 @@ def _settings(consult: Consult) -> Section:
 
 
 def _checked(consult: Consult) -> Section:
-    del consult
-    return Section(
-        "Blind re-entry",
-        (
-            "Not recorded in this note. Weight, doses, levels and dates typed again from the chart "
-            "by the second pharmacist: "
-            "[ ] done, no difference   [ ] done, differences mended   [ ] not done",
-        ),
-    )
+    return Section("Blind re-entry", entries.standing_lines(consult.case))
 
 
 def _sources(consult: Consult) -> Section:

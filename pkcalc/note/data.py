@@ -5,7 +5,9 @@ from __future__ import annotations
 import json
 from typing import Any
 
-from pkcalc import __version__
+from pkcalc import __version__, entries
+from pkcalc.case import Case
+from pkcalc.clock import show_time
 from pkcalc.consult import Consult, Shown
 from pkcalc.errors import CannotEstimate, CaseError
 from pkcalc.estimate.result import Estimate
@@ -129,6 +131,7 @@ def note_data(consult: Consult) -> dict[str, Any]:
             }
             for r in consult.second_way
         ],
+        "blind_reentry": _reentry(case),
         "local_settings": [
             {"path": s.path, "value": s.value, "instead_of": s.instead_of} for s in consult.site.settings
         ],
@@ -141,6 +144,18 @@ def note_data(consult: Consult) -> dict[str, Any]:
         "drug_file_hash": consult.profile.sha256,
         "site_file_hash": consult.site.sha256,
         "defers": DEFERS,
+    }
+
+
+def _reentry(case: Case) -> dict[str, Any]:
+    kept = case.reentry
+    return {
+        "standing": entries.standing(case),
+        "words": entries.standing_words(case),
+        "done": None if kept is None else show_time(kept.done),
+        "compared": [] if kept is None else list(kept.compared),
+        "differences": [] if kept is None else list(kept.differences),
+        "left": [] if kept is None else list(kept.left),
     }
 
 

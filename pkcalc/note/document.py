@@ -6,6 +6,7 @@ from dataclasses import dataclass
 
 from pkcalc import __version__
 from pkcalc.consult import Consult
+from pkcalc.entries import standing_words
 from pkcalc.errors import Caution
 from pkcalc.note.annex import annex, estimate_lines
 from pkcalc.note.front import page_one, paste_block
@@ -51,13 +52,14 @@ class Document:
     front: tuple[Section, ...]
     sections: tuple[Section, ...]
     paste: tuple[str, ...]
+    reentry: str
     signatures: tuple[str, ...]
     defers: str
     versions: str
 
     @property
     def footer(self) -> tuple[str, ...]:
-        return (self.defers, self.versions, *self.signatures)
+        return (self.defers, self.versions, self.reentry, *self.signatures)
 
 
 def compose(consult: Consult) -> Document:
@@ -66,11 +68,12 @@ def compose(consult: Consult) -> Document:
     return Document(
         title=f"Consult note: {consult.profile.name}",
         demonstration=demonstration_words(consult),
-        urgent=URGENT,
+        urgent=f"{consult.profile.urgent} {OVERDOSE}".strip(),
         cautions=consult.cautions,
         front=page_one(consult),
         sections=annex(consult),
         paste=paste_block(consult),
+        reentry=standing_words(case),
         signatures=(
             "Prepared by: ______________________    Time: ______________",
             "Independently checked by: _________________    Time: ______________",

@@ -5,9 +5,8 @@ from __future__ import annotations
 import textwrap
 from collections.abc import Sequence
 
-from pkcalc import __version__
+from pkcalc import __version__, entries
 from pkcalc import plan as planning
-from pkcalc.case import QUESTIONS
 from pkcalc.clock import show_time
 from pkcalc.consult import Consult, Shown
 from pkcalc.note import hours
@@ -470,7 +469,7 @@ def paste_block(consult: Consult) -> tuple[str, ...]:
     body += [] if before else following
     last = [
         "Valid until the next level or any change of dose, feed, other drug or albumin.",
-        "Not a substitute for the full note; check every number.",
+        f"{entries.standing_words(consult.case)} Read the full note; check every number.",
     ]
     room = PASTE_LINES - len(lines) - sum(len(textwrap.wrap(x, PASTE_WIDTH)) for x in last)
     lines += _whole(body, room) + [w for text in last for w in textwrap.wrap(text, PASTE_WIDTH)]

@@ -83,6 +83,7 @@ def document_data(document: Document) -> dict[str, Any]:
         "front": [section_data(s) for s in document.front if s.title != NOW],
         "sections": [section_data(s) for s in document.sections],
         "paste": "\n".join(document.paste),
+        "reentry": document.reentry,
         "signatures": list(document.signatures),
         "defers": document.defers,
         "versions": document.versions,

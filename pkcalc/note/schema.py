@@ -2,9 +2,10 @@
 
 from __future__ import annotations
 
-from typing import Any
+from typing import Any, get_args
 
-from pkcalc.case import case_schema
+from pkcalc.case import COMPARED, case_schema
+from pkcalc.entries import Standing
 from pkcalc.note.data import NOTE_VERSION
 
 TEXT: dict[str, Any] = {"type": "string"}
@@ -445,6 +446,17 @@ _NOTE = _object(
                     "agrees": YES_NO,
                 }
             )
+        ),
+        "blind_reentry": _object(
+            {
+                "standing": {"enum": [*get_args(Standing)]},
+                "words": TEXT,
+                "done": _or_null(TEXT),
+                "compared": _list({"enum": [*COMPARED]}),
+                "differences": LINES,
+                "left": LINES,
+            },
+            words="Whether a second person's own entry was compared; void: what was compared has changed since.",
         ),
         "local_settings": _list(_object({"path": TEXT, "value": TEXT, "instead_of": TEXT})),
         "page_one": _list(_ref("section")),

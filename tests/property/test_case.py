@@ -14,7 +14,7 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 
 from pkcalc.case import (
-    QUESTIONS,
+    COMPARED,
     AlbuminFile,
     AnswerFile,
     Case,
@@ -26,6 +26,7 @@ from pkcalc.case import (
     PatientFile,
     PlanFile,
     ProposedFile,
+    ReentryFile,
     TargetFile,
     check_case,
     dump_case,
@@ -85,6 +86,20 @@ LEVELS = st.builds(
     sample=st.sampled_from(["serum", "plasma", "gel tube", "unknown"]),
     comment=WORDS,
 )
+PLACES = st.lists(WORDS.map(lambda x: f"Level 1, {x}".strip()), max_size=4, unique=True).map(tuple)
+REENTRIES = st.builds(
+    lambda places, count, done, context: ReentryFile(
+        done=done,
+        compared=tuple(x for x in COMPARED if context or x != "context"),
+        differences=places,
+        left=places[:count],
+        facts="0123456789ab",
+    ),
+    PLACES,
+    st.integers(0, 4),
+    before(30),
+    st.booleans(),
+)
 CASES = st.builds(
     CaseFile,
     pkcalc_case=st.just(1),
@@ -102,7 +117,7 @@ CASES = st.builds(
     ),
     albumin=ALBUMINS,
     context=st.dictionaries(
-        st.sampled_from([q for q in QUESTIONS if not q.startswith("tube")]),
+        st.sampled_from([q for q in PROFILE.questions if not q.startswith("tube")]),
         ANSWERS | st.builds(AnswerFile, answer=ANSWERS, since=st.sampled_from(["", "3 Apr 2026"]), detail=WORDS),
         max_size=6,
     ),
@@ -113,6 +128,7 @@ CASES = st.builds(
     proposed=st.lists(st.builds(ProposedFile, form=ORAL, daily=daily()), max_size=2).map(tuple),
     plan=st.builds(PlanFile, shelf=st.sampled_from(["", *PROFILE.shelves]), order_by_loss=st.booleans()),
     chosen=st.none() | st.builds(ChosenFile, words=WORDS),
+    reentry=st.none() | REENTRIES,
 )
 
 

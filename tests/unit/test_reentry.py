@@ -4,15 +4,23 @@ from __future__ import annotations
 
 import copy
 import json
+from datetime import datetime
 from pathlib import Path
 from typing import Any
 
+import jsonschema
 import pytest
 
 from pkcalc import entries, reentry
-from pkcalc.case import Case, CaseFile, read_case_text
-from pkcalc.consult import run_consult
+from pkcalc.case import Case, CaseFile, dump_case, dump_case_file, read_case_text
+from pkcalc.consult import Consult, run_consult
 from pkcalc.drugs.profile import load_profile
+from pkcalc.errors import CaseError
+from pkcalc.note.data import note_data
+from pkcalc.note.document import compose
+from pkcalc.note.html import render_html
+from pkcalc.note.schema import note_schema
+from pkcalc.note.text import render
 from pkcalc.reentry import Comparison, compare
 from tests.unit.cases import PLAIN, doses, levels, plain
 
@@ -242,3 +250,282 @@ def test_the_command_has_status_0_1_and_2(tmp_path: Path) -> None:
     broken = run("compare", str(files[0]), str(files[3]))
     assert (broken.returncode, broken.stdout) == (2, "")
     assert "line 1" in broken.stderr
+
+
+# keeping it with the case --------------------------------------------------------------------------------
+
+FIRST_TIME, SECOND_TIME = datetime(2026, 12, 1, 11, 5), datetime(2026, 12, 1, 11, 40)
+SLIPS = {"patient": {**PLAIN["patient"], "weight": "66 kg"}, "levels": levels("8 mg/L", "<20 mg/L")}
+
+
+def kept(first: Case, second: Case, at: datetime = FIRST_TIME) -> Case:
+    """The first entry with its record, through the text of its file."""
+    file = reentry.keep(first, compare(first, second, forecasts=False), at)
+    text = dump_case_file(file)
+    case = read_case_text(text)
+    assert case.file == file
+    assert dump_case(case) == text
+    assert case.file.model_copy(update={"reentry": None}) == first.file.model_copy(update={"reentry": None})
+    return case
+
+
+def edited(case: Case, **changed: Any) -> Case:
+    return read_case_text(json.dumps({**json.loads(dump_case(case)), **changed}))
+
+
+def test_a_case_without_a_record_says_how_it_is_done() -> None:
+    assert entries.standing(plain()) == "not done"
+    assert entries.standing_lines(plain()) == (
+        "Blind re-entry: not done.",
+        "The second pharmacist types weight, doses, levels and dates from the chart without seeing this entry; the "
+        "form, or pkcalc compare, lists every difference and can keep in the case file that it was done.",
+    )
+
+
+def test_two_entries_that_agree_are_kept_as_done() -> None:
+    case = kept(plain(), plain(doses=doses("0.3 g", "350 mg")))
+    assert entries.standing(case) == "done"
+    assert entries.standing_lines(case) == (
+        "Blind re-entry: done on 1 Dec 2026 11:05, no difference.",
+        "Typed again by a second person and compared: drug, time of the consult, patient, albumin, context, doses, "
+        "levels, dialysis.",
+    )
+
+
+def test_differences_are_kept_until_the_two_entries_agree() -> None:
+    first = kept(plain(), plain(**SLIPS))
+    assert entries.standing(first) == "not resolved"
+    assert entries.standing_words(first) == (
+        "Blind re-entry: done on 1 Dec 2026 11:05, 2 differences, none resolved: look at the chart."
+    )
+    # the second person's level was right, the weight was a slip of the second entry
+    mended = edited(first, levels=SLIPS["levels"])
+    assert entries.standing(mended) == "void"
+    between = kept(mended, plain(**SLIPS), SECOND_TIME)
+    assert entries.standing_lines(between)[0::2] == (
+        "Blind re-entry: done on 1 Dec 2026 11:40, 2 differences, 1 of them not resolved: look at the chart.",
+        "Differences resolved: Level 2, value.",
+    )
+    assert entries.standing_lines(between)[-1] == "Differences not resolved: Patient, weight."
+    done = kept(between, plain(levels=SLIPS["levels"]), SECOND_TIME)
+    assert entries.standing(done) == "done"
+    assert entries.standing_words(done) == ("Blind re-entry: done on 1 Dec 2026 11:40, 2 differences, all resolved.")
+    assert entries.standing_lines(done)[-1] == "Differences resolved: Patient, weight; Level 2, value."
+    # a re-entry that is done is not gone on with: the next one begins anew
+    assert kept(done, plain(levels=SLIPS["levels"])).file.reentry.differences == ()  # type: ignore[union-attr]
+
+
+def test_one_difference_is_told_in_the_singular() -> None:
+    slip = plain(levels=SLIPS["levels"])
+    first = kept(plain(), slip)
+    assert entries.standing_words(first) == (
+        "Blind re-entry: done on 1 Dec 2026 11:05, 1 difference, not resolved: look at the chart."
+    )
+    done = kept(first, plain(), SECOND_TIME)
+    assert entries.standing_words(done) == "Blind re-entry: done on 1 Dec 2026 11:40, 1 difference, resolved."
+
+
+@pytest.mark.parametrize(
+    "changed",
+    [
+        {"drug": "theophylline", "doses": [], "albumin": None, "context": {}},
+        {"now": "2026-12-01 10:01"},
+        {"patient": {**PLAIN["patient"], "weight": "60.1 kg"}},
+        {"patient": {**PLAIN["patient"], "sex": "male"}},
+        {"albumin": {"value": "46 g/L", "taken": "2026-12-01 06:00"}},
+        {"albumin": None},
+        {"context": {**PLAIN["context"], "valproate": "unknown"}},
+        {"context": {**PLAIN["context"], "valproate": {"answer": "no", "since": "3 Apr 2026"}}},
+        {"context": {**PLAIN["context"], "hla_b1502": "no"}},
+        {"doses": doses("300 mg", "360 mg")},
+        {"doses": [{**x, "missed": [f"{x['from'][:8]}{int(x['from'][8:10]) + 1} 21:00"]} for x in PLAIN["doses"]]},
+        {"doses": PLAIN["doses"][::-1]},
+        {"levels": [*PLAIN["levels"], {"value": "9 mg/L", "kind": "total", "drawn": "2026-11-01 07:00"}]},
+        {"levels": [PLAIN["levels"][0], {**PLAIN["levels"][1], "drawn": "2026-12-01 07:01"}]},
+        {"levels": [PLAIN["levels"][0], {**PLAIN["levels"][1], "albumin": {"value": "46 g/L"}}]},
+        {"levels": [PLAIN["levels"][0], {**PLAIN["levels"][1], "sample": "serum"}]},
+    ],
+)
+def test_any_change_of_what_was_compared_makes_it_void(changed: dict[str, Any]) -> None:
+    case = edited(kept(plain(), plain()), **changed)
+    assert entries.standing(case) == "void"
+    assert entries.standing_words(case) == (
+        "Blind re-entry: re-entered on 1 Dec 2026 11:05, but changed since: repeat it."
+    )
+
+
+@pytest.mark.parametrize(
+    "changed",
+    [
+        {"comment": "typed on the ward", "label": "bed 4", "question": "why"},
+        {"aim": "14 mg/L", "target": {"low": "8 mg/L", "high": "15 mg/L"}, "method": "two levels"},
+        {"proposed": ASKED, "chosen": {"regimen": ASKED[0], "words": "as agreed"}, "plan": {"shelf": "united-states"}},
+        {"doses": doses("0.3 g", "350.0 mg")},
+        {"patient": {**PLAIN["patient"], "weight": "60.0 kg"}},
+    ],
+)
+def test_what_is_decided_or_written_otherwise_leaves_it_standing(changed: dict[str, Any]) -> None:
+    assert entries.standing(edited(kept(plain(), plain()), **changed)) == "done"
+
+
+def test_questions_that_were_not_answered_again_are_said_and_not_counted() -> None:
+    second = edited(plain(), context={})
+    found = compare(plain(), second, forecasts=False)
+    assert len(found.differences) == len(PLAIN["context"])
+    assert found.from_chart == ()
+    assert found.verdict == (
+        "The two entries agree in everything typed again from the chart. They differ in 14 fields of what is asked, "
+        "decided or was not typed again."
+    )
+    assert "Not typed again in the second entry: context." in found.text()
+    case = kept(plain(), second)
+    assert entries.standing_lines(case) == (
+        "Blind re-entry: done on 1 Dec 2026 11:05, no difference.",
+        "Typed again by a second person and compared: drug, time of the consult, patient, albumin, doses, levels, "
+        "dialysis.",
+        "Not typed again: context.",
+    )
+    assert entries.standing(edited(case, context={**PLAIN["context"], "valproate": "yes"})) == "done"
+
+
+def test_what_is_asked_or_decided_is_listed_and_not_counted() -> None:
+    found = compare(plain(proposed=ASKED), plain(patient={**PLAIN["patient"], "weight": "66 kg"}), forecasts=False)
+    assert [d.part for d in found.differences] == ["patient", None]
+    assert found.verdict == (
+        "The two entries differ in 2 fields, 1 of them taken from the chart: look at the chart before any number is used."
+    )
+
+
+def test_a_record_of_another_comparison_is_refused() -> None:
+    found = compare(plain(), plain(), forecasts=False)
+    with pytest.raises(CaseError) as error:
+        reentry.keep(plain(aim="14 mg/L"), found, FIRST_TIME)
+    assert str(error.value) == (
+        "Reentry: the comparison is of another first entry. Allowed: its own. Compare the two entries again."
+    )
+
+
+def test_too_many_differences_are_not_kept() -> None:
+    rows = [{"value": f"{i % 30 + 1} mg/L", "kind": "total", "drawn": f"2026-10-{i % 28 + 1:02d} {i // 28:02d}:00"} for i in range(101)]  # fmt: skip
+    first, second = plain(levels=rows), plain(levels=[])
+    with pytest.raises(CaseError) as error:
+        reentry.keep(first, compare(first, second, forecasts=False), FIRST_TIME)
+    assert str(error.value) == (
+        "Reentry: 101 differences from the chart were found. Allowed: at most 100. Check that both entries are of one "
+        "patient, then compare again."
+    )
+
+
+GOOD: dict[str, Any] = {
+    "done": "2026-12-01 11:05",
+    "compared": ["patient", "doses", "levels"],
+    "differences": ["Patient, weight"],
+    "facts": "0123456789ab",
+}
+AGAIN = "Compare the two entries again and keep the new record."
+
+
+@pytest.mark.parametrize(
+    ("changed", "text"),
+    [
+        ({"done": ""}, f"Reentry, done (line 1): nothing was given. Allowed: date and time of the comparison. {AGAIN}"),
+        (
+            {"done": "3/4/2026 10:00"},
+            'Reentry, done (line 1): "3/4/2026 10:00" was given. Allowed: a date such as 2026-03-04 06:10 or 4 Mar 2026 '
+            "06:10. Day and month in figures can be swapped: write the month in words.",
+        ),
+        (
+            {"compared": ["patient"]},
+            "Reentry, compared (line 1): doses and levels are not among what was compared. Allowed: at least patient, "
+            f"doses and levels. {AGAIN}",
+        ),
+        (
+            {"compared": ["patient", "doses", "levels", "levels"]},
+            f"Reentry, compared (line 1): a part stands twice. Allowed: each part once. {AGAIN}",
+        ),
+        (
+            {"left": ["Level 1, value"]},
+            'Reentry, left (line 1): "Level 1, value" is left although it is not among the differences. Allowed: places '
+            f"that stand under differences too. {AGAIN}",
+        ),
+        (
+            {"differences": ["Age", "Age"]},
+            f"Reentry, differences (line 1): a place is empty or stands twice. Allowed: each place once. {AGAIN}",
+        ),
+        (
+            {"facts": "none"},
+            f"Reentry, facts (line 1): it is no fingerprint. Allowed: 12 signs of 0 to 9 and a to f. {AGAIN}",
+        ),
+        (
+            {"compared": ["patient", "doses", "levels", "weight"]},
+            "Reentry, compared, item 4 (line 1): the word is not understood. Allowed: drug, time of the consult, "
+            "patient, albumin, context, doses, levels or dialysis. Choose one of them.",
+        ),
+        (
+            {"checked_by": "x"},
+            "Reentry, checked by (line 1): this key is not known. Allowed: compared, differences, done, facts, left. "
+            "Remove it.",
+        ),
+    ],
+)
+def test_a_record_that_contradicts_itself_is_refused_in_words(changed: dict[str, Any], text: str) -> None:
+    with pytest.raises(CaseError) as error:
+        read_case_text(json.dumps({**PLAIN, "reentry": {**GOOD, **changed}}))
+    assert str(error.value) == text
+
+
+@pytest.fixture(scope="module")
+def noted() -> tuple[Case, Consult]:
+    case = kept(plain(), plain(**SLIPS))
+    return case, run_consult(case)
+
+
+def test_every_form_of_the_note_says_whether_it_was_done(noted: tuple[Case, Consult]) -> None:
+    case, consult = noted
+    words = entries.standing_words(case)
+    document = compose(consult)
+    assert document.reentry == words
+    assert next(s for s in document.sections if s.title == "Blind re-entry").lines == entries.standing_lines(case)
+    text = " ".join(render(document).split())
+    assert text.count(words) == 3  # annex, block to paste, beside the signatures
+    html = " ".join(render_html(consult).split())
+    assert html.count(words) == 3
+    # beside the signatures, on page one
+    assert html.index(words) < html.index("Prepared by:") < html.index('class="annex"')
+    data = note_data(consult)["blind_reentry"]
+    assert data == {
+        "standing": "not resolved",
+        "words": words,
+        "done": "1 Dec 2026 11:05",
+        "compared": list(entries.COMPARED),
+        "differences": ["Patient, weight", "Level 2, value"],
+        "left": ["Patient, weight", "Level 2, value"],
+    }
+    jsonschema.validate(note_data(consult), note_schema())
+
+
+def test_the_command_keeps_the_record_in_a_new_file_only(tmp_path: Path) -> None:
+    from tests.unit.test_cli import run
+
+    first, second, new = tmp_path / "a.json", tmp_path / "b.json", tmp_path / "new.json"
+    first.write_text(json.dumps(PLAIN))
+    second.write_text(json.dumps({**PLAIN, "comment": "typed again"}))
+    done = run("compare", str(first), str(second), "--keep", str(new))
+    assert done.returncode == 0, done.stderr
+    assert done.stderr == f"Written: {new}\n"
+    case = read_case_text(new.read_text())
+    assert entries.standing(case) == "done"
+    assert first.read_text() == json.dumps(PLAIN)
+    again = run("compare", str(first), str(second), "--keep", str(new))
+    assert (again.returncode, again.stdout) == (2, "")
+    assert again.stderr == (
+        "The input must be mended first:\n- --keep: new.json exists already. Allowed: a file that does not exist yet. "
+        "Give another name.\n"
+    )
+    same = run("compare", str(first), str(first), "--keep", str(tmp_path / "other.json"))
+    assert (same.returncode, same.stdout) == (2, "")
+    assert same.stderr == (
+        "The input must be mended first:\n- --keep: both entries are the same file. Allowed: two entries. Let a second "
+        "person type the case again.\n"
+    )
+    assert not (tmp_path / "other.json").exists()
