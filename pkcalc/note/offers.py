@@ -7,8 +7,9 @@ from typing import Any
 
 from pkcalc.dosing import Regimen
 from pkcalc.estimate.result import Band
-from pkcalc.forecast import Forecast
+from pkcalc.forecast import TIME_DRAWS, Forecast
 from pkcalc.plan import Candidate, Plan
+from pkcalc.plan.courses import DAY_DRAWS, SWING_DRAWS
 from pkcalc.plan.loading import Load
 from pkcalc.plan.nextlevel import Action, Draw, NextLevel
 from pkcalc.plan.pausing import Pause
@@ -62,7 +63,7 @@ def regimen_data(regimen: Regimen) -> dict[str, Any]:
 
 
 def candidate_data(c: Candidate) -> dict[str, Any]:
-    """One regimen with both lines. trough, peak and named days: null where only printed rows have them."""
+    """One regimen with both lines. trough, peak and named days: null only where there is no volume."""
     return {
         "words": c.words,
         "dispense": c.dispense,
@@ -212,6 +213,17 @@ def _next(n: NextLevel) -> dict[str, Any]:
     }
 
 
+def draws_data(plan: Plan) -> dict[str, int]:
+    """How many draws of the estimate the numbers of a candidate come from; times are told by fewer than levels."""
+    all_of_them = len(plan.setting.central.weights)
+    return {
+        "draws_of_steady_level": all_of_them,
+        "draws_of_days_to_90_percent": min(all_of_them, TIME_DRAWS),
+        "draws_of_level_on_days": min(all_of_them, DAY_DRAWS),
+        "draws_of_trough_and_peak": min(all_of_them, SWING_DRAWS),
+    }
+
+
 def plan_data(plan: Plan) -> dict[str, Any]:
     """The whole plan."""
     level = plan.today.level
@@ -230,6 +242,7 @@ def plan_data(plan: Plan) -> dict[str, Any]:
         "largest_active_mg_per_day": number(plan.setting.largest_mg_per_day),
         "limits": {"warn_chance": plan.setting.site.warn_chance, "stop_chance": plan.setting.site.stop_chance},
         "candidates": [candidate_data(c) for c in plan.every],
+        "draws": draws_data(plan),
         "by_expected_loss": {
             "weight_too_high": plan.setting.site.loss_too_high,
             "weight_too_low": plan.setting.site.loss_too_low,

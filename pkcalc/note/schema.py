@@ -241,6 +241,15 @@ _DEFINITIONS: dict[str, dict[str, Any]] = {
             "largest_active_mg_per_day": NUMBER,
             "limits": _object({"warn_chance": SHARE, "stop_chance": SHARE}),
             "candidates": _list(_ref("candidate")),
+            "draws": _object(
+                {
+                    "draws_of_steady_level": WHOLE,
+                    "draws_of_days_to_90_percent": WHOLE,
+                    "draws_of_level_on_days": WHOLE,
+                    "draws_of_trough_and_peak": WHOLE,
+                },
+                words="How many draws of the estimate each kind of number of a candidate comes from.",
+            ),
             "by_expected_loss": _or_null(
                 _object(
                     {

@@ -27,8 +27,8 @@ from pkcalc.plan.candidates import (
     by_loss,
     candidates,
     shown,
-    with_courses,
 )
+from pkcalc.plan.courses import with_courses
 from pkcalc.plan.present import (
     History,
     Today,
@@ -77,7 +77,7 @@ class Plan:
     """Everything that can be done from here.
 
     today: where the patient stands. every: all regimens of the shelf with the present and the pharmacist's own, by
-    daily dose. table: those worth printing, with trough, peak and named days. present, own: of them. ranked: offered
+    daily dose. table: those worth printing. present, own: of them. ranked: offered
     regimens by expected loss, only where asked for. lines: what must be said beside the table. no_load, no_next_level:
     why there is none. overlay: the present and the chosen regimen (or the pharmacist's first) laid over each other.
     """
@@ -162,11 +162,9 @@ def make(
         products = into_a_vein(shelf.products, profile)
     made = dispensable(profile, products, largest_active_mg_per_day=most, alternate_days=site.alternate_days)
     given = _given(case, profile, shelf)
-    every = candidates(made, given, setting)
+    every = with_courses(candidates(made, given, setting), setting)
     forms = course.forms if course is not None else tuple({x.form for r in case.proposed for x in r.intakes})
-    table = with_courses(shown(every, setting, forms=forms), setting)
-    worked_out = {id(c.regimen): c for c in table}
-    every = tuple(worked_out.get(id(c.regimen), c) for c in every)
+    table = shown(every, setting, forms=forms)
     present = next((c for c in every if c.present and not c.proposed), None)
     own = tuple(next(c for c in every if c.regimen is r and c.proposed) for r in case.proposed)
     next_on = own[0] if own else present

@@ -13,19 +13,17 @@ from itertools import pairwise
 import numpy as np
 from numpy.typing import NDArray
 
-from pkcalc import flow, formulas
-from pkcalc.dosing import Intake, Regimen, flow_repeated
+from pkcalc import formulas
+from pkcalc.dosing import Intake, Regimen
 from pkcalc.drugs.profile import Profile
 from pkcalc.estimate.result import Band, Estimate
 from pkcalc.forecast import (
     TIME_DRAWS,
     Forecast,
     Goal,
-    bands,
     draws_of,
     fewer_draws,
     forecast_rates,
-    levels_on_days,
 )
 from pkcalc.levels import LabScale
 from pkcalc.plan.shelf import Dispensable, dispense_words, regimen_words
@@ -34,10 +32,6 @@ from pkcalc.units import percent, percent_beside, show
 
 Floats = NDArray[np.float64]
 
-#: Days from the first dose of a new regimen for which the level is named.
-NAMED_DAYS = (3.0, 7.0, 14.0, 28.0)
-#: Draws used for the swing within a dosing interval.
-SWING_DRAWS = 256
 #: Clock times of a regimen whose times nobody has stated, for the course within a day only.
 HOURS = {1: (21.0,), 2: (9.0, 21.0), 3: (6.0, 14.0, 22.0), 4: (6.0, 12.0, 18.0, 24.0)}
 
@@ -51,7 +45,7 @@ class Candidate:
     above the critical one or of no steady state, at plateau or at the next feasible draw; danger_at_plateau,
     danger_at_draw: each alone (at the draw: None without a volume). change_percent: of the daily active dose against
     the present one. trough, peak: extremes of the level at plateau; on_days: days from the first dose and the level
-    then (both None where not worked out: no volume, or not among those shown).
+    then (all None without a volume).
     loss: expected loss, only where the order by loss is asked for.
     """
 
@@ -349,51 +343,6 @@ def _aim_rate(s: Setting) -> float:
             km_mg_per_L=point.km_mg_per_L,
         )
     )
-
-
-def with_courses(some: Sequence[Candidate], setting: Setting) -> tuple[Candidate, ...]:
-    """The same regimens with trough and peak at plateau and the level on named days; unchanged without a volume."""
-    if setting.central.volume_L is None or not some:
-        return tuple(some)
-    days = levels_on_days(setting.central, [c.rate_mg_per_day for c in some], NAMED_DAYS, setting.start_mg_per_L)
-    swings = swing(setting.central, [c.regimen for c in some], setting.profile)
-    return tuple(
-        replace(c, on_days=tuple(zip(NAMED_DAYS, d, strict=True)), trough=low, peak=high)
-        for c, d, (low, high) in zip(some, days, swings, strict=True)
-    )
-
-
-def swing(estimate: Estimate, regimens: Sequence[Regimen], profile: Profile) -> tuple[tuple[Band, Band], ...]:
-    """Trough and peak [mg/L] of each regimen at its plateau, with intervals, from a sample of the draws.
-
-    Regimens of one shape differ only in scale, and X(s D; Vmax, kappa) = s X(D; Vmax/s, kappa/s): each shape is run
-    once for all its regimens. Needs a volume.
-    """
-    few = fewer_draws(estimate, SWING_DRAWS).estimate
-    assert few.volume_L is not None
-    kappa = few.km_mg_per_L * few.volume_L
-    shapes: dict[flow.Repeated, list[tuple[int, float]]] = {}
-    for i, regimen in enumerate(regimens):
-        repeated = flow_repeated(regimen, profile)
-        size = sum(d.amount_mg for d in repeated.doses)
-        start = min(d.time_day for d in repeated.doses)
-        unit = flow.Repeated(
-            repeated.cycle_day,
-            tuple(
-                flow.Dose(round(d.time_day - start, 9), round(d.amount_mg / size, 9), d.duration_day, d.absorption)
-                for d in repeated.doses
-            ),
-        )
-        shapes.setdefault(unit, []).append((i, size))
-    found: dict[int, tuple[Band, Band]] = {}
-    for unit, members in shapes.items():
-        sizes = np.array([size for _, size in members])[:, None]
-        state = flow.periodic(unit, (few.vmax_mg_per_day / sizes).ravel(), (kappa / sizes).ravel())
-        shape = (len(members), len(kappa))
-        low = bands(state.trough_mg.reshape(shape) * sizes / few.volume_L, few.weights)
-        high = bands(state.peak_mg.reshape(shape) * sizes / few.volume_L, few.weights)
-        found |= {i: (low[k], high[k]) for k, (i, _) in enumerate(members)}
-    return tuple(found[i] for i in range(len(regimens)))
 
 
 def by_loss(every: Sequence[Candidate], setting: Setting) -> tuple[Candidate, ...]:

@@ -15,7 +15,8 @@ from pkcalc import formulas
 from pkcalc.dosing import Intake, Regimen
 from pkcalc.forecast import forecast_rates, levels_on_days, two_lines
 from pkcalc.plan import loading
-from pkcalc.plan.candidates import as_regimen, candidates, danger, swing
+from pkcalc.plan.candidates import as_regimen, candidates, danger
+from pkcalc.plan.courses import swing
 from pkcalc.plan.nextlevel import expected_spread, spread_now
 from pkcalc.plan.pausing import time_to_fall
 from pkcalc.plan.shelf import dispensable, dispense_words, made_from
@@ -128,7 +129,7 @@ def test_the_steady_level_lies_between_trough_and_peak(doses: list[tuple[float, 
     regimen = Regimen(tuple(Intake(form, h, mg) for h, mg in sorted(doses)))
     rate = regimen.active_mg_per_day(P)
     one = exact(vmax=rate * 1.6, km=5.0)
-    ((trough, peak),) = swing(one, [regimen], P)
+    ((trough, _, peak),) = swing(one, [regimen], P)
     steady = 5.0 * rate / (0.6 * rate)
     assert trough.median <= steady * (1 + 1e-6)
     assert peak.median >= steady * (1 - 1e-6)

@@ -89,7 +89,7 @@ def test_it_refuses(change: str) -> None:
 
 
 def test_every_key_with_a_number_carries_its_unit_or_is_a_share() -> None:
-    """A number whose key says no unit must be a share, a count, a year of the format or a plain coordinate."""
+    """A number whose key says no unit must be a share, a count (draws_of), a year of the format or a plain coordinate."""
     unitless = {
         "pkcalc_note", "level", "correlation", "rejected_share", "median", "low_5_percent", "high_95_percent",
         "result", "first", "second", "danger", "hour", "day", "days", "hours", "expected_loss", "weight_too_high",
@@ -106,7 +106,7 @@ def test_every_key_with_a_number_carries_its_unit_or_is_a_share() -> None:
             for v in node:
                 walk(v, key)
         elif isinstance(node, (int, float)) and not isinstance(node, bool):
-            assert key in unitless or key.startswith(("chance", "danger")) or key.endswith(units), key
+            assert key in unitless or key.startswith(("chance", "danger", "draws_of")) or key.endswith(units), key
 
     for name in ("clean-pair", "toxic-level", "ethanol-dialysis"):
         walk(data_of(name))

@@ -11,7 +11,7 @@ from pkcalc.errors import CaseError
 from pkcalc.note.offers import plan_data
 from pkcalc.plan.asked import with_settings
 from tests.unit.cases import PLAIN, plain
-from tests.unit.planning import exact, plan
+from tests.unit.planning import estimate, exact, plan
 
 
 def problems(*settings: str) -> list[str]:
@@ -118,11 +118,29 @@ def test_json_carries_every_candidate_and_no_infinity() -> None:
     assert mine["why_not"]
     present = next(c for c in data["candidates"] if c["present"])
     assert present["change_percent"] == 0
-    assert present["trough_mg_per_L"] is not None
+    for c in data["candidates"]:
+        assert c["trough_mg_per_L"] is not None
+        assert c["peak_mg_per_L"] is not None
+        assert [x["day"] for x in c["level_on_days"]] == [3, 7, 14, 28]
+    assert data["draws"] == {
+        "draws_of_steady_level": 8,
+        "draws_of_days_to_90_percent": 8,
+        "draws_of_level_on_days": 8,
+        "draws_of_trough_and_peak": 8,
+    }
     assert data["pause"]["until_level_mg_per_L"] == 20
     assert data["next_level"]["action"].startswith("Levels daily, ")
     assert len(data["next_level"]["curve"]) == 14
     assert data["largest_step"]["rule"].startswith("published step rule")
+
+
+def test_json_says_how_many_draws_stand_behind_each_kind_of_number() -> None:
+    assert plan_data(plan(est=estimate(n=2048)))["draws"] == {
+        "draws_of_steady_level": 2048,
+        "draws_of_days_to_90_percent": 512,
+        "draws_of_level_on_days": 256,
+        "draws_of_trough_and_peak": 128,
+    }
 
 
 def test_json_of_loads() -> None:

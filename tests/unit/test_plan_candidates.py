@@ -12,7 +12,7 @@ from pkcalc import plan as planning
 from pkcalc.dosing import Intake, Regimen
 from pkcalc.forecast import forecast_rate, two_lines
 from pkcalc.plan import Candidate
-from pkcalc.plan.candidates import as_regimen, by_loss, candidates, danger, shown, swing, with_courses
+from pkcalc.plan.candidates import as_regimen, by_loss, candidates, danger
 from pkcalc.plan.shelf import dispensable, oral
 from pkcalc.site import no_site
 from tests.unit.cases import PLAIN, plain
@@ -74,20 +74,9 @@ def test_a_merged_amount_keeps_the_present_words() -> None:
     assert "every 8 h" in same[0].words
 
 
-def test_the_named_days_and_the_swing() -> None:
-    found = plan()
-    for c in found.table:
-        assert c.trough is not None
-        assert c.peak is not None
-        assert c.on_days is not None
-        assert [d for d, _ in c.on_days] == [3.0, 7.0, 14.0, 28.0]
-        if c.danger < 0.05:  # elsewhere the sample of draws moves the median itself
-            assert c.trough.median < c.forecast.steady.median < c.peak.median
-
-
 def test_no_volume_no_times_and_it_is_said() -> None:
     found = plan(patient={"age": "45 years", "sex": "female"})
-    assert all(c.trough is None and c.on_days is None for c in found.table)
+    assert all(c.trough is None and c.peak is None and c.on_days is None for c in found.every)
     assert all(c.forecast.settle_days is None for c in found.every)
     assert found.loads == ()
     assert found.pause is None
@@ -95,21 +84,6 @@ def test_no_volume_no_times_and_it_is_said() -> None:
     assert found.overlay is None
     assert "Without a weight there is no volume, so no times, no course and no loads." in found.lines
     assert found.no_next_level == "No day can be named for the next level without a weight: there is no volume."
-
-
-def test_more_drug_more_swing_in_proportion_to_scale() -> None:
-    """One shape is run once for all its regimens; each must be what it would be alone."""
-    draws = estimate()
-    regimens = [
-        capsules(200),
-        capsules(300),
-        Regimen((Intake("suspension", 9.0, 125.0), Intake("suspension", 21.0, 125.0))),
-    ]
-    together = swing(draws, regimens, P)
-    for regimen, (low, high) in zip(regimens, together, strict=True):
-        ((alone_low, alone_high),) = swing(draws, [regimen], P)
-        assert low == alone_low
-        assert high == alone_high
 
 
 def test_doses_rise_through_the_day_in_the_engine_too() -> None:
@@ -339,19 +313,6 @@ def test_the_printed_rows_are_few_and_hold_present_and_offered() -> None:
     forms = {x.form for c in found.table for x in c.regimen.intakes}
     assert forms == {"extended-capsule"}
     assert sum(not c.offered for c in found.table) <= 4
-
-
-def test_printing_does_not_change_the_numbers() -> None:
-    s = setting()
-    made = candidates(
-        dispensable(P, oral(CAPSULES, P), largest_active_mg_per_day=552.0), [given(300.0, present=True)], s
-    )
-    rows = shown(made, s, forms=("extended-capsule",))
-    assert {c.words for c in with_courses(rows, s)} == {c.words for c in rows}
-    by_words = {c.words: c for c in made}
-    for c in with_courses(rows, s):
-        assert c.forecast == by_words[c.words].forecast
-        assert c.danger == by_words[c.words].danger
 
 
 def test_two_regimens_laid_over_each_other() -> None:

@@ -12,6 +12,7 @@ import pytest
 from pkcalc.dosing import Intake, Regimen
 from pkcalc.estimate.result import Band
 from pkcalc.plan import Today, nextlevel
+from pkcalc.plan.courses import swing
 from pkcalc.plan.nextlevel import Asked, Draw, action_line, expected_spread, feasible, next_level, spread_now
 from pkcalc.plan.present import clocked
 from pkcalc.record import Dose
@@ -263,9 +264,7 @@ def test_the_level_just_before_a_dose_comes_from_the_real_doses() -> None:
     days = [d for d, _ in feasible(one)]
     course = nextlevel._course(one, one.estimate, np.full(8, 7.2), days)
     assert course.shape == (8, 14)
-    from pkcalc.plan.candidates import swing
-
-    ((trough, peak),) = swing(one.estimate, [one.regimen], one.profile)
+    ((trough, _, peak),) = swing(one.estimate, [one.regimen], one.profile)
     assert course[0, -1] == pytest.approx(trough.median, rel=0.15)
     assert course[0, -1] < peak.median
 
