@@ -50,35 +50,6 @@ def _readable(text: str) -> str:
 Text = Annotated[str, StringConstraints(max_length=200, strip_whitespace=True), AfterValidator(_readable)]
 LongText = Annotated[str, StringConstraints(max_length=4000), AfterValidator(_readable)]
 
-#: The context questions, in the order they are asked. Each is yes, no or unknown; silence stands on the note
-#: as "not stated".
-QUESTIONS: dict[str, str] = {
-    "seizing_now": "Is the patient seizing now (status epilepticus)?",
-    "overdose": "Is an acute overdose of this drug suspected?",
-    "seizures_since_change": "Have there been seizures since the last change of dose?",
-    "toxic_signs": "Are there signs of toxicity (nystagmus, ataxia, drowsiness)?",
-    "recent_load": "Was any load or IV dose given in the last 72 h (emergency department, ambulance, other hospital)?",
-    "renal_failure": "Does the patient have end-stage renal failure or dialysis?",
-    "renal_reduced": "Is kidney function reduced, short of dialysis?",
-    "hepatic_failure": "Does the patient have hepatic failure?",
-    "valproate": "Is valproate being taken?",
-    "interacting_change": "Was an interacting drug started or stopped within the last 4 weeks?",
-    "pregnancy": "Is the patient pregnant?",
-    "delivery": "Has the patient given birth within the last 8 weeks?",
-    "tube_feed": "Is the patient tube fed?",
-    "tube_feed_change": "Were tube feeds started, stopped or changed since the dose was last changed?",
-    "form_change": "Was the product, brand or salt changed since the dose was last changed?",
-    "im_route": "Was any dose given into a muscle?",
-    "critical_illness": "Is the patient critically ill or injured (intensive care, trauma, burns)?",
-    "extracorporeal": "Is there renal replacement, plasma exchange or ECMO?",
-    "temperature_management": "Is there targeted temperature management, rewarming or barbiturate coma?",
-    "cyp2c9_reduced": "Is reduced CYP2C9 function known?",
-    "hla_b1502": "Is HLA-B*15:02 positive?",
-    "new_start": "Is this drug being started for the first time?",
-    "heart_block": "Is there heart block, bradycardia or serious heart disease?",
-    "adherence_doubtful": "Is it doubtful that the doses were taken as recorded?",
-}
-
 _FILE = ConfigDict(extra="forbid", frozen=True, strict=True, hide_input_in_errors=True)
 
 
@@ -167,7 +138,11 @@ class LevelFile(BaseModel):
     normalised_by: Text = Field("", description="Who normalised it, for kind normalised.")
     on_dose: int | None = Field(None, description="Line of the dosing record in force (1 for the first).")
     albumin: AlbuminFile | None = None
-    valproate_level: Text = ""
+    other_levels: dict[Text, Text] = Field(
+        default_factory=dict,
+        max_length=20,
+        description="Levels of other drugs in the same sample, by the drug's name, where the drug file asks for them.",
+    )
     sample: Literal["serum", "plasma", "gel tube", "unknown"] = "unknown"
     comment: LongText = ""
 
@@ -278,7 +253,7 @@ class CaseFile(BaseModel):
     patient: PatientFile = PatientFile()
     albumin: AlbuminFile | None = None
     context: dict[str, Answer | AnswerFile] = Field(
-        default_factory=dict, max_length=100, json_schema_extra={"propertyNames": {"enum": [*QUESTIONS]}}
+        default_factory=dict, max_length=100, description="Answers to the context questions of the drug."
     )
     doses: tuple[DoseFile, ...] = Field((), max_length=MAX_LINES_OF_RECORD)
     dialysis: tuple[DialysisFile, ...] = Field((), max_length=100)
@@ -382,12 +357,16 @@ class Level:
     normalised_by: str
     on_dose: int | None
     albumin: Albumin | None
-    valproate_mg_per_L: float | None
+    others_mg_per_L: tuple[tuple[str, float], ...]
     sample: str
 
     @property
     def reported_mg_per_L(self) -> float:
         return self.typed.value
+
+    def other_mg_per_L(self, drug: str) -> float | None:
+        """The level of another drug in the same sample, where it was given."""
+        return dict(self.others_mg_per_L).get(drug)
 
 
 @dataclass(frozen=True)
@@ -849,7 +828,7 @@ def check_case(file: CaseFile) -> Case:
     )
     dialysis = tuple(s for i, x in enumerate(file.dialysis) if (s := _session(i, x, check, profile)) is not None)
     albumin = _albumin(file.albumin, "Albumin", check)
-    context = _context(file, check)
+    context = _context(file, check, profile)
     if dialysis and _says(context, "extracorporeal", "no"):
         check.say(
             "Context, extracorporeal",
@@ -1036,12 +1015,13 @@ def _albumin(file: AlbuminFile | None, where: str, check: _Check) -> Albumin | N
     return Albumin(typed=typed, taken=taken, method=file.method, after_infusion=file.after_infusion)
 
 
-def _context(file: CaseFile, check: _Check) -> dict[str, Context]:
+def _context(file: CaseFile, check: _Check, profile: Profile) -> dict[str, Context]:
     found: dict[str, Context] = {}
     for key, given in file.context.items():
-        if key not in QUESTIONS:
+        if key not in profile.questions:
             where = place_in_words(("context", key))
-            check.say(where, "this question is not known", ", ".join(QUESTIONS), _nearest(key, QUESTIONS))
+            known = profile.questions
+            check.say(where, "this question is not known", ", ".join(known), _nearest(key, known))
         elif isinstance(given, str):
             found[key] = Context(answer=given)
         else:
@@ -1099,23 +1079,7 @@ def _level(i: int, file: LevelFile, check: _Check, profile: Profile, n_lines: in
     typed = check.attempt(_read_level, text, where, profile)
     drawn = _optional_time(file.drawn, f"{where}, drawn", check)
     albumin = _albumin(file.albumin, f"{where}, albumin", check)
-    valproate = None
-    if file.valproate_level:
-        read = check.attempt(
-            units.read, file.valproate_level, "level", f"{where}, valproate level", only=("mg/L", "mcg/mL")
-        )
-        if read:
-            valproate = read.value
-            _gate(
-                valproate,
-                1,
-                300,
-                f"{where}, valproate level",
-                file.valproate_level,
-                "mg/L",
-                "Check the number and its unit",
-                check,
-            )
+    others = _other_levels(file.other_levels, where, check, profile)
     if file.kind == "normalised" and not file.normalised_by:
         check.say(
             f"{where}, normalised by",
@@ -1153,9 +1117,28 @@ def _level(i: int, file: LevelFile, check: _Check, profile: Profile, n_lines: in
         normalised_by=file.normalised_by,
         on_dose=file.on_dose - 1 if file.on_dose is not None else None,
         albumin=albumin,
-        valproate_mg_per_L=valproate,
+        others_mg_per_L=others,
         sample=file.sample,
     )
+
+
+def _other_levels(
+    given: Mapping[str, str], where: str, check: _Check, profile: Profile
+) -> tuple[tuple[str, float], ...]:
+    """The levels of other drugs that the drug file asks for, in mg/L."""
+    found = []
+    for drug, text in given.items():
+        spot = f"{where}, other levels, {drug.replace('_', ' ')}"
+        known = profile.other_levels.get(drug)
+        if known is None:
+            allowed = ", ".join(profile.other_levels) or f"none with a level of {profile.name}"
+            check.say(spot, "no level of this drug is asked for", allowed, _nearest(drug, profile.other_levels))
+            continue
+        read = check.attempt(units.read, text, "level", spot, only=("mg/L", "mcg/mL"))
+        if read:
+            _gate(read.value, *known.gate_mg_per_L, spot, text, "mg/L", "Check the number and its unit", check)
+            found.append((drug, read.value))
+    return tuple(found)
 
 
 def _target(file: TargetFile | None, check: _Check, profile: Profile) -> Target | None:
@@ -1641,4 +1624,21 @@ def case_schema() -> dict[str, Any]:
     schema = CaseFile.model_json_schema(by_alias=True)
     schema["$schema"] = "https://json-schema.org/draft/2020-12/schema"
     schema["title"] = "pkcalc case file"
+    schema["properties"]["drug"]["enum"] = [*drug_names()]
+    schema["allOf"] = [_schema_of_drug(load_profile(name)) for name in drug_names()]
     return schema
+
+
+def _schema_of_drug(profile: Profile) -> dict[str, Any]:
+    """What a case of one drug may name: its context questions, and the other drugs whose levels it asks for."""
+    others = {"propertyNames": {"enum": [*profile.other_levels]}} if profile.other_levels else {"maxProperties": 0}
+    level = {"properties": {"other_levels": others}}
+    return {
+        "if": {"properties": {"drug": {"const": profile.id}}, "required": ["drug"]},
+        "then": {
+            "properties": {
+                "context": {"propertyNames": {"enum": [*profile.questions]}},
+                "levels": {"items": level},
+            }
+        },
+    }

@@ -181,9 +181,10 @@ def _answered_both(s: State, p: Mapping[str, Any]) -> list[Words]:
     return [{}] if s.case.answer(p["question"]) == s.case.answer(p["other"]) == "yes" else []
 
 
-def _start_without_hla(s: State, p: Mapping[str, Any]) -> list[Words]:
-    unknown = s.case.answer("hla_b1502") in ("unknown", "not stated")
-    return [{}] if unknown and s.case.answer("new_start") == "yes" else []
+def _answered_without(s: State, p: Mapping[str, Any]) -> list[Words]:
+    """Speaks where `question` is answered yes and the answer to `other` is not known."""
+    unknown = s.case.answer(p["other"]) in ("unknown", "not stated")
+    return [{}] if unknown and s.case.answer(p["question"]) == "yes" else []
 
 
 def _levels_before_change(s: State, p: Mapping[str, Any]) -> list[Words]:
@@ -282,7 +283,9 @@ def _total_under(s: State, p: Mapping[str, Any]) -> list[Words]:
 
 def _total_with_unknown(s: State, p: Mapping[str, Any]) -> list[Words]:
     totals = _totals(s)
-    unknown = [q.replace("_", " ") for q in p["questions"] if s.case.answer(q) in ("unknown", "not stated")]
+    displacers = [d.drug for d in s.profile.binding.displacements] if s.profile.binding is not None else []
+    asked = dict.fromkeys((*p["questions"], *displacers))
+    unknown = [q.replace("_", " ") for q in asked if s.case.answer(q) in ("unknown", "not stated")]
     return [{"levels": _names(totals), "unknown": ", ".join(unknown)}] if totals and unknown else []
 
 
@@ -564,6 +567,7 @@ PREDICATES: dict[str, Predicate] = {
     "always": _always,
     "answered": _answered,
     "answered_both": _answered_both,
+    "answered_without": _answered_without,
     "at_or_above_vmax": _at_or_above_vmax,
     "chance_of_negative_km_above": _chance_of_negative_km_above,
     "climbs": _climbs,
@@ -598,7 +602,6 @@ PREDICATES: dict[str, Predicate] = {
     "second_way_disagrees": _second_way_disagrees,
     "set_aside_for": _set_aside_for,
     "settling_unknown": _settling_unknown,
-    "start_without_hla": _start_without_hla,
     "timing_is": _timing_is,
     "total_under": _total_under,
     "total_with_unknown": _total_with_unknown,
@@ -609,7 +612,7 @@ PREDICATES: dict[str, Predicate] = {
     "younger_than": _younger_than,
 }
 
-_KNOWN = {"stage", "severity", "when", "text", "source", "blocks", "lifted_by"}
+_KNOWN = {"stage", "severity", "when", "text", "source", "blocks", "lifted_by", "first"}
 
 
 @dataclass(frozen=True)
@@ -625,6 +628,7 @@ class Rule:
     blocks: tuple[str, ...]
     lifted_by: str
     settings: Mapping[str, Any]
+    first: bool = False
 
 
 def parse_rules(table: Mapping[str, Any], file: str) -> tuple[Rule, ...]:
@@ -653,6 +657,7 @@ def parse_rules(table: Mapping[str, Any], file: str) -> tuple[Rule, ...]:
                 blocks,
                 entry.get("lifted_by", ""),
                 settings,
+                bool(entry.get("first", False)),
             )
         )
     return tuple(rules)
@@ -666,13 +671,18 @@ def common_rules() -> tuple[Rule, ...]:
 
 @cache
 def rules_of(profile_id: str) -> tuple[Rule, ...]:
-    """The rules of every drug, then those of one drug."""
+    """The rules of every drug, then those of one drug; before them those of its own that come first of all."""
     profile = load_profile(profile_id)
     own = parse_rules(profile.cautions, profile.file)
     twice = {r.id for r in common_rules()} & {r.id for r in own}
     if twice:
         raise DrugFileError(f"{profile.file}, caution {min(twice)}: it stands in cautions.toml too.")
-    return (*common_rules(), *own)
+    for rule in (*common_rules(), *own):
+        asked = [rule.settings[key] for key in ("question", "other") if key in rule.settings]
+        for question in (*asked, *rule.settings.get("questions", ())):
+            if question not in profile.questions:
+                raise DrugFileError(f"{profile.file}, caution {rule.id}: nobody asks the question {question}.")
+    return (*(r for r in own if r.first), *common_rules(), *(r for r in own if not r.first))
 
 
 def ask(stage: str, state: State) -> tuple[Caution, ...]:

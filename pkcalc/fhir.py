@@ -1303,9 +1303,10 @@ class _Reading:
                     f"No albumin within {self.profile.binding.albumin_oldest_h:.0f} h of it: "
                     "the latest one of the case would be used for it.",
                 )
-        same = [x for x in self.companions if x.moment == level.moment and x.kind == "valproate"]
-        if len(same) == 1:
-            row["valproate_level"] = same[0].value
+        for drug in self.profile.other_levels:
+            same = [x for x in self.companions if x.moment == level.moment and x.kind == drug]
+            if len(same) == 1:
+                row.setdefault("other_levels", {})[drug] = same[0].value
 
     def _nearest_albumin(self, moment: datetime) -> _Albumin:
         if not self.albumin_times:

@@ -342,8 +342,9 @@ def _possible(
             value = _normalised(total, albumin, coefficient)
             readings.append((value, f"coefficient {show_number(coefficient)}: {show(value, 'mg/L')}"))
     for d in binding.displacements:
-        if case.answer(d.drug) == "yes" and level.valproate_mg_per_L is not None:
-            free = d.free_mg_per_L(total, level.valproate_mg_per_L)
+        other = level.other_mg_per_L(d.drug)
+        if case.answer(d.drug) == "yes" and other is not None:
+            free = d.free_mg_per_L(total, other)
             value = free / binding.free_fraction
             readings.append((value, f"{d.words}: free {show(free, 'mg/L')}, normalised {show(value, 'mg/L')}"))
     if not readings:

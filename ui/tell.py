@@ -273,13 +273,13 @@ def candidates(consult: Consult) -> None:
         marks = ["not offered" if not s.offered else "present" if s.present else "" for s in rows]
         look.table(
             (*FORECAST_HEADS[:-1], "Remark"),
-            [forecast_row(s) for s in rows],
+            [forecast_row(s, consult) for s in rows],
             label="Doses around the present one. Median (90 % interval); nothing else changed.",
             marks=marks,
         )
         with st.expander("Danger of each, every dose taken", expanded=False, key="danger"):
-            look.table(DANGER_HEADS, [danger_row(s) for s in rows], label="Every dose taken", marks=marks)
-        _compare(rows)
+            look.table(DANGER_HEADS, [danger_row(s, consult) for s in rows], label="Every dose taken", marks=marks)
+        _compare(rows, consult)
     plan = consult.plan
     if plan is not None:
         look.lines([*plan.lines, *(f"{s.words}: {mark_of(s)}. {' '.join(s.why_not)}" for s in rows if s.why_not)])
@@ -293,14 +293,14 @@ def listed(consult: Consult) -> list[Shown]:
     return sorted(rows, key=lambda s: s.forecast.rate_mg_per_day)
 
 
-def _compare(rows: Sequence[Shown]) -> None:
+def _compare(rows: Sequence[Shown], consult: Consult) -> None:
     words = [s.words for s in rows]
     with st.expander("Compare two regimens", expanded=False, key="compare-two"):
         two = st.multiselect("Two regimens", words, key="two", max_selections=2, placeholder="choose two")
         if len(two) == 2 and set(two) <= set(words):
             first, second = (rows[words.index(w)] for w in two)
             heads = (*FORECAST_HEADS[1:-1], *DANGER_HEADS[1:])
-            columns = [(*forecast_row(s)[1:-1], *danger_row(s)[1:]) for s in (first, second)]
+            columns = [(*forecast_row(s, consult)[1:-1], *danger_row(s, consult)[1:]) for s in (first, second)]
             look.table(
                 ("", first.words, second.words),
                 list(zip(heads, *columns, strict=True)),
@@ -327,8 +327,8 @@ def acute(consult: Consult) -> None:
         look.lines(
             [
                 *load.order,
-                f"Level after it {level_words(load.after)}; {show(load.draw_after_h, 'h')} later "
-                f"{level_words(load.at_draw)}. Chance above the range {percent(load.above_high)}, above the critical "
+                f"Level after it {level_words(load.after, most)}; {show(load.draw_after_h, 'h')} later "
+                f"{level_words(load.at_draw, most)}. Chance above the range {percent(load.above_high)}, above the critical "
                 f"level {percent(load.above_critical)}.",
                 *load.notes,
                 *load.why_not,
@@ -341,9 +341,9 @@ def acute(consult: Consult) -> None:
         look.say("The level is too high: reduce in part, or pause", "answer")
         look.lines(
             [
-                pause.seizure_risk,
+                pause.risk,
                 pause.restart_line,
-                f"Level today {level_words(pause.now)}; give again at {back}. Without any "
+                f"Level today {level_words(pause.now, math.inf)}; give again at {back}. Without any "
                 f"dose that takes {days_words(pause.days)}.",
                 *pause.lines,
                 *(
@@ -358,7 +358,7 @@ def acute(consult: Consult) -> None:
         look.lines(
             [
                 f"Equal would be {show(switch.exact_labelled_mg, 'mg/day')} as labelled; steady level "
-                f"{level_words(switch.steady)}.",
+                f"{level_words(switch.steady, most)}.",
                 *switch.why_not,
                 *switch.lines,
             ]
@@ -370,7 +370,8 @@ def candidates_sentence(consult: Consult | None) -> str:
         return ""
     first = consult.proposed[0]
     offered = "" if first.offered else " (not offered)"
-    return f"{first.words}{offered}: total {level_words(first.forecast.total)}"
+    most = consult.scale.total(told_up_to(consult))
+    return f"{first.words}{offered}: total {level_words(first.forecast.total, most)}"
 
 
 # --- 6 and 7 ---------------------------------------------------------------------------------------------

@@ -7,7 +7,7 @@ patients.csv, one row per patient
   weight     "70 kg"; without it nothing can be forecast from the population
   age, sex, height, albumin ("29 g/L")   as in a case file; each may be empty
   population a named population of the drug; empty: the site's, else the drug's default
-  any question of the case file (renal_failure, valproate, ...), answered yes, no or unknown
+  any question of the case file (renal_failure, pregnancy, ...), answered yes, no or unknown
   group_...  subgroups of the department's own choice, such as group_ward; the report is split by each
 doses.csv    patient, and the columns of a CSV file of doses (see `spreadsheet`)
 levels.csv   patient, and the columns of a CSV file of levels
@@ -34,7 +34,8 @@ from typing import Any, BinaryIO
 import numpy as np
 from numpy.typing import NDArray
 
-from pkcalc.case import MAX_BYTES, QUESTIONS, Case, check_case, parse_case_text, read_case_text
+from pkcalc.case import MAX_BYTES, Case, check_case, parse_case_text, read_case_text
+from pkcalc.drugs.profile import every_question
 from pkcalc.errors import CaseError, Problem, as_typed
 from pkcalc.spreadsheet import DOSE_COLUMNS, LEVEL_COLUMNS, from_pair
 
@@ -226,7 +227,7 @@ def case_of(raw: Raw, drug: str) -> Case:
     try:
         file = from_pair(raw.doses, raw.levels, drug=drug, patient=patient)
         data: dict[str, Any] = file.model_dump(mode="json", by_alias=True, exclude_defaults=True)
-        context = {q: raw.row[q] for q in QUESTIONS if raw.row.get(q)}
+        context = {q: raw.row[q] for q in every_question() if raw.row.get(q)}
         if context:
             data["context"] = context
         if raw.row.get("albumin"):
@@ -327,7 +328,7 @@ def _header(line: bytes, name: str) -> tuple[tuple[str, ...], str]:
     except csv.Error:
         header = ()
     allowed = {
-        "patients": (*PATIENT_COLUMNS, *QUESTIONS),
+        "patients": (*PATIENT_COLUMNS, *every_question()),
         "doses": (KEY, *DOSE_COLUMNS),
         "levels": (KEY, *LEVEL_COLUMNS),
     }[name]

@@ -19,6 +19,7 @@ from importlib import resources
 from typing import Any, Literal, cast
 
 from pkcalc import formulas
+from pkcalc.drugs.questions import Question, common_questions, read_question
 from pkcalc.drugs.table import Fact, Table
 from pkcalc.errors import CaseError, DrugFileError, Problem
 from pkcalc.sources import Source, Status, all_sources
@@ -107,16 +108,24 @@ class Shelf:
 
 @dataclass(frozen=True)
 class Target:
-    """The target range and the critical level, on the working basis; free_* where a free level is used."""
+    """The target range and the critical level, on the working basis; free_* where a free level is used.
+
+    told_up_to_mg_per_L: a forecast level above it stands in words ("above ..."), not as a number.
+    """
 
     basis: str
     low_mg_per_L: float
     high_mg_per_L: float
     aim_mg_per_L: float
     critical_mg_per_L: float
+    told_up_to_mg_per_L: float
     free_low_mg_per_L: float | None
     free_high_mg_per_L: float | None
     free_critical_mg_per_L: float | None
+
+    def most_told(self, critical_mg_per_L: float) -> float:
+        """The highest forecast level told in numbers; never below the critical level in use, which a site may raise."""
+        return max(self.told_up_to_mg_per_L, critical_mg_per_L)
 
 
 @dataclass(frozen=True)
@@ -149,7 +158,7 @@ class Alternative:
 class Displacement:
     """A published free fraction under a displacing drug: intercept + slope x its level [mg/L].
 
-    drug: the displacing drug, which is also the context question that asks about it.
+    drug: the displacing drug, which is also the context question that asks about it and one of the other levels.
     """
 
     id: str
@@ -236,10 +245,14 @@ class IvLine:
 
 @dataclass(frozen=True)
 class Loading:
-    """Loads and top-ups: per kg, ceiling on a single load, caps, oral loads, IV order lines."""
+    """Loads and top-ups: per kg, ceiling on a single load, caps, oral loads, IV order lines.
+
+    status_*: the larger load of an emergency, and its words.
+    """
 
     mg_per_kg: tuple[float, float]
     status_mg_per_kg: tuple[float, float] | None
+    status_words: str
     largest_single_mg: float
     rate_caps: tuple[RateCap, ...]
     oral: OralLoad | None
@@ -322,6 +335,27 @@ class MedicationCode:
     code: str
     display: str
     form: str
+
+
+@dataclass(frozen=True)
+class OtherLevel:
+    """The level of another drug that is entered with a level of this one. gate_mg_per_L: others are slips."""
+
+    id: str
+    words: str
+    gate_mg_per_L: tuple[float, float]
+
+
+@dataclass(frozen=True)
+class Withdrawal:
+    """What pausing or stopping the drug can bring on, said wherever a pause is shown.
+
+    risk: a sentence. one_sign, signs: what it shows by, in the singular and the plural.
+    """
+
+    risk: str
+    one_sign: str
+    signs: str
 
 
 @dataclass(frozen=True)
@@ -545,8 +579,9 @@ def log_sd(cv: float) -> float:
 class Profile:
     """One drug: everything the calculations need, each number traceable through `facts`.
 
-    questions: the context questions that matter for this drug; empty where all do. density_g_per_mL: of a liquid
-    drug whose strengths are labelled in per cent.
+    questions: every context question that a case of this drug may answer; asked: those that matter, in order.
+    density_g_per_mL: of a liquid drug whose strengths are labelled in per cent. urgent: what never waits for a note
+    about this drug.
     """
 
     id: str
@@ -557,7 +592,9 @@ class Profile:
     authority: str
     time_unit: Literal["day", "h"]
     level_units: tuple[str, ...]
-    questions: tuple[str, ...]
+    questions: Mapping[str, Question]
+    asked: tuple[str, ...]
+    urgent: str
     density_g_per_mL: float | None
     molar_mass_g_per_mol: float
     forms: Mapping[str, Form]
@@ -567,6 +604,8 @@ class Profile:
     level_gates_mg_per_L: Mapping[str, tuple[float, float]]
     spread: Spread
     binding: Binding | None
+    other_levels: Mapping[str, OtherLevel]
+    withdrawal: Withdrawal | None
     populations: Mapping[str, Population]
     modifiers: Mapping[str, Modifier]
     weight_rule: WeightRule | None
@@ -651,6 +690,11 @@ def drug_names() -> tuple[str, ...]:
     return tuple(sorted(n[:-5] for n in names if n.endswith(".toml") and not n.startswith("_")))
 
 
+def every_question() -> tuple[str, ...]:
+    """The questions of any drug, and of each drug alone."""
+    return tuple(dict.fromkeys((*common_questions(), *(q for n in drug_names() for q in load_profile(n).questions))))
+
+
 @cache
 def load_profile(name: str) -> Profile:
     """The profile of one drug, checked. An unknown name is the user's slip; a bad file is a maintainer's."""
@@ -684,6 +728,7 @@ def parse_profile(text: str, file: str) -> Profile:
     if not populations:
         raise top.fail("population", "missing", "Add at least one population")
     scope = cast(Scope, drug.choice("scope", SCOPES))
+    questions, asked = _questions(drug.texts("questions", ()), top.each("question", read_question), drug)
     profile = Profile(
         id=drug.text("id"),
         name=drug.text("name"),
@@ -693,7 +738,9 @@ def parse_profile(text: str, file: str) -> Profile:
         authority=drug.text("authority"),
         time_unit=cast(Literal["day", "h"], drug.choice("time_unit", ("day", "h"))),
         level_units=drug.texts("level_units"),
-        questions=drug.texts("questions", ()),
+        questions=questions,
+        asked=asked,
+        urgent=drug.text("urgent", ""),
         density_g_per_mL=density,
         molar_mass_g_per_mol=molar_mass,
         youngest_years=youngest,
@@ -705,6 +752,8 @@ def parse_profile(text: str, file: str) -> Profile:
         level_gates_mg_per_L=_gates(top.table("level_gate")),
         spread=_spread(top.table("spread")),
         binding=_binding(top.table("binding")) if top.has("binding") else None,
+        other_levels=top.each("other_level", _other_level),
+        withdrawal=_withdrawal(top.table("withdrawal")) if top.has("withdrawal") else None,
         populations=populations,
         modifiers=modifiers,
         weight_rule=weight_rule,
@@ -734,6 +783,16 @@ def _consistent(profile: Profile, top: Table) -> None:
     for label in profile.level_units:
         if label not in FACTORS["level"]:
             raise top.fail("drug.level_units", f'"{label}" was found', "Use units of a level only")
+    for d in profile.binding.displacements if profile.binding is not None else ():
+        where = f"binding.displacement.{d.id}.drug"
+        if d.drug not in profile.other_levels:
+            raise top.fail(where, f'no level of "{d.drug}" is asked for', f"Add [other_level.{d.drug}]")
+        if d.drug not in profile.asked:
+            raise top.fail(where, f'no question asks about "{d.drug}"', f"Add [question.{d.drug}]")
+    for modifier in profile.modifiers.values():
+        if modifier.question and modifier.question not in profile.questions:
+            where = f"modifier.{modifier.id}.question"
+            raise top.fail(where, f'"{modifier.question}" is not a question', "Add it or mend its name")
     if not profile.plausible:
         raise top.fail("plausible", "missing", "Add the published ranges of Vmax per kg and Km")
     spans = sorted(p.ages_years for p in profile.populations.values() if p.default)
@@ -752,6 +811,33 @@ def _consistent(profile: Profile, top: Table) -> None:
             )
     if spans[0][0] > profile.youngest_years:
         raise top.fail("drug.youngest", "younger than any default population", "Make them meet")
+
+
+def _questions(
+    listed: tuple[str, ...], own: Mapping[str, Question], drug: Table
+) -> tuple[dict[str, Question], tuple[str, ...]]:
+    """Every question that may be answered, those that matter first, and the ids of those."""
+    known = {**common_questions(), **own}
+    asked = listed or tuple(known)
+    for name in asked:
+        if name not in known:
+            near = difflib.get_close_matches(name, known, n=1)
+            fix = f'Perhaps "{near[0]}" is meant' if near else f"Add [question.{name}]"
+            raise drug.fail("questions", f'"{name}" is not a question', fix)
+    for name in own:
+        if name not in asked:
+            raise drug.fail("questions", f'"{name}" has words but is not asked', "Add it to the list")
+    return {name: known[name] for name in (*asked, *(k for k in known if k not in asked))}, asked
+
+
+def _other_level(name: str, t: Table) -> OtherLevel:
+    return OtherLevel(name, t.text("words"), t.span("gate", "level"))
+
+
+def _withdrawal(t: Table) -> Withdrawal:
+    found = Withdrawal(t.text("risk"), t.text("one_sign"), t.text("signs"))
+    t.done()
+    return found
 
 
 def _form(name: str, t: Table) -> Form:
@@ -928,11 +1014,12 @@ def _population(name: str, t: Table, modifiers: Mapping[str, Modifier], weight_r
 def _target(t: Table) -> Target:
     low, high = t.span("range", "level")
     aim, critical = t.number("aim", "level"), t.number("critical", "level")
-    if not low <= aim <= high <= critical:
+    told_up_to = t.number("told_up_to", "level")
+    if not low <= aim <= high <= critical <= told_up_to:
         raise t.fail(
             "aim",
             "aim, range and critical level are out of order",
-            "They must rise: low, aim, high, critical",
+            "They must rise: low, aim, high, critical, told_up_to",
         )
     free = t.span("free_range", "level") if t.has("free_range") else None
     found = Target(
@@ -941,6 +1028,7 @@ def _target(t: Table) -> Target:
         high_mg_per_L=high,
         aim_mg_per_L=aim,
         critical_mg_per_L=critical,
+        told_up_to_mg_per_L=told_up_to,
         free_low_mg_per_L=free[0] if free else None,
         free_high_mg_per_L=free[1] if free else None,
         free_critical_mg_per_L=t.maybe("free_critical", "level"),
@@ -1067,6 +1155,7 @@ def _loading(t: Table, forms: Mapping[str, Form]) -> Loading:
     found = Loading(
         mg_per_kg=t.span("per_weight", "amount per weight"),
         status_mg_per_kg=t.span("status_per_weight", "amount per weight") if t.has("status_per_weight") else None,
+        status_words=t.text("status_words") if t.has("status_per_weight") else "",
         largest_single_mg=t.number("largest_single", "amount"),
         rate_caps=tuple(t.each("rate_cap", cap).values()),
         oral=oral,
@@ -1163,7 +1252,13 @@ def describe(profile: Profile) -> tuple[str, ...]:
         f"Also named: {', '.join(profile.names)}",
         f"Levels in {', '.join(profile.level_units)}; {profile.target.basis}; times in "
         + ("hours" if profile.time_unit == "h" else "days"),
-        "Context questions: " + (", ".join(q.replace("_", " ") for q in profile.questions) or "all"),
+        *((f"First: {profile.urgent}",) if profile.urgent else ()),
+        "",
+        "Context questions",
+        *(f"  {q}: {profile.questions[q].words}" for q in profile.asked),
+        *(("", "Levels of other drugs") if profile.other_levels else ()),
+        *(f"  {x.id}: {x.words}" for x in profile.other_levels.values()),
+        *(("", "On a pause", f"  {profile.withdrawal.risk}") if profile.withdrawal is not None else ()),
         "",
         "Forms",
         *(f"  {f.id}: {f.words}; {f.salt}, by {' or '.join(f.routes)}" for f in profile.forms.values()),

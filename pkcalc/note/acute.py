@@ -10,13 +10,10 @@ import numpy as np
 from pkcalc.clock import show_date, show_time
 from pkcalc.consult import Consult, Shown
 from pkcalc.levels import Observation
-from pkcalc.note.words import NOT_OFFERED, days_words, short_band
+from pkcalc.note.words import NOT_OFFERED, days_words, level_band, told_up_to
 from pkcalc.units import show, show_number
 
-SEIZURE_RISK = (
-    "Seizure risk first: holding or stopping an antiseizure drug can bring on seizures, status epilepticus among them. "
-    "Weigh that before holding; hold down to a stated level, never to zero."
-)
+WEIGH = "Weigh that before holding; hold down to a stated level, never to zero."
 #: A level older than this is not today's level where the record can be followed to now.
 FRESH = timedelta(hours=24)
 
@@ -128,17 +125,20 @@ def now_lines(consult: Consult) -> tuple[str, ...]:
         return ()
     plan = consult.plan
     present = plan.present.words if plan is not None and plan.present is not None else ""
+    drug = consult.profile.withdrawal
+    against = f"the risk of {drug.signs}" if drug is not None else "what the drug is given for"
+    risk = f"{drug.risk} {WEIGH}" if drug is not None else WEIGH
     if found.urgent:
         unchanged = f"Do not go on with {present} unchanged" if present else "Do not go on unchanged"
         lines = [
-            f"TOO HIGH: {found.text}. {unchanged}: hold the next dose, or reduce; the risk of seizures comes first.",
-            SEIZURE_RISK,
+            f"TOO HIGH: {found.text}. {unchanged}: hold the next dose, or reduce; {against} comes first.",
+            risk,
         ]
     else:
         lines = [
             f"Above the target: {found.text}. Look for signs of toxicity: with any of them hold the next dose, or "
-            "reduce; without them weigh a smaller dose against the risk of seizures.",
-            SEIZURE_RISK,
+            f"reduce; without them weigh a smaller dose against {against}.",
+            risk,
         ]
     lines += _restart(consult)
     if found.urgent:
@@ -166,7 +166,8 @@ def _restart(consult: Consult) -> list[str]:
         "decides, not the calendar."
     ]
     if pause.restarts:
-        said = "; ".join(f"{r.words}, steady level {short_band(r.steady)} mg/L" for r in pause.restarts)
+        most = told_up_to(consult)
+        said = "; ".join(f"{r.words}, steady level {level_band(r.steady, most)} mg/L" for r in pause.restarts)
         lines.append(f"To choose from for then (none is offered before the level is down): {said}.")
     offered = [r for r in pause.reductions if r.offered] or list(pause.reductions)
     quickest = min(offered, key=lambda r: r.days.median, default=None)
@@ -185,9 +186,12 @@ def daily_levels(consult: Consult) -> str:
     if found is not None and found.line.draw is None:
         return found.action
     start = moment(consult)
+    withdrawal = consult.profile.withdrawal
+    albumin = ", with albumin from the same sample" if consult.profile.binding is not None else ""
+    sign = f"{withdrawal.one_sign}, " if withdrawal is not None else ""
     first = f" from {show_date(start + timedelta(days=1))}" if start is not None else " from tomorrow"
     return (
-        f"Levels daily{first}, with albumin from the same sample, until the level is down to "
-        f"{with_reported(restart_level(consult), consult)}. Call at once for a level higher than the one before, a "
-        "seizure, or growing signs."
+        f"Levels daily{first}{albumin}, until the level is down to "
+        f"{with_reported(restart_level(consult), consult)}. Call at once for a level higher than the one before, "
+        f"{sign}or growing signs."
     )

@@ -22,14 +22,16 @@ from pkcalc.note.words import (
     Table,
     chances_words,
     days_words,
-    edge,
     forecast_row,
+    level_band,
+    level_edge,
     level_words,
     mark_of,
     regimen_words,
     sentence,
     short_band,
     signed_percent,
+    told_up_to,
 )
 from pkcalc.note.workings import REPRESENTATIVE, machine_only, workings
 from pkcalc.plan.loading import Load
@@ -74,16 +76,16 @@ def _patient(consult: Consult) -> Section:
             + (f" (method {albumin.method})" if albumin.method not in ("unknown", "other") else "")
         )
     lines = [sentence("; ".join(parts))]
-    asked = consult.profile.questions or tuple(QUESTIONS)
-    for key, words in QUESTIONS.items():
+    questions = consult.profile.questions
+    for key, question in questions.items():
         answer = case.context.get(key)
         if answer is None or answer.answer == "unknown":
             continue
         more = [answer.detail] if answer.detail else []
         if answer.since is not None:
             more.append(f"since {show_time(answer.since)}")
-        lines.append(f"{words} {answer.answer}" + (f" ({'; '.join(more)})" if more else ""))
-    unknown = [w for k, w in QUESTIONS.items() if k in asked and case.answer(k) in ("unknown", "not stated")]
+        lines.append(f"{question.words} {answer.answer}" + (f" ({'; '.join(more)})" if more else ""))
+    unknown = [questions[k].words for k in consult.profile.asked if case.answer(k) in ("unknown", "not stated")]
     if unknown:
         lines.append("Not stated or unknown: " + " ".join(unknown))
     if consult.prior is not None:
@@ -300,20 +302,20 @@ DANGER_HEADS = (
 )
 
 
-def danger_row(shown: Shown) -> tuple[str, ...]:
-    swing = (
-        f"{edge(shown.trough.median)} to {edge(shown.peak.median)}"
-        if shown.trough is not None and shown.peak is not None
-        else "not worked out"
-    )
+def danger_row(shown: Shown, consult: Consult) -> tuple[str, ...]:
+    most = told_up_to(consult)
+    swing = "not worked out"
+    if shown.trough is not None and shown.peak is not None:
+        ends = [level_edge(b.median, most) for b in (shown.trough, shown.peak)]
+        swing = " to ".join(dict.fromkeys(ends))
     days = (
-        "; ".join(f"day {show_number(d)}: {edge(b.median)}" for d, b in shown.on_days)
+        "; ".join(f"day {show_number(d)}: {level_edge(b.median, most)}" for d, b in shown.on_days)
         if shown.on_days
         else "not worked out"
     )
     return (
         shown.words if shown.offered else f"{shown.words} ({NOT_OFFERED})",
-        short_band(shown.taken.steady),
+        level_band(shown.taken.steady, most),
         percent(shown.taken.above_critical),
         percent(shown.danger),
         percent(shown.taken.no_steady_state),
@@ -326,6 +328,7 @@ def danger_row(shown: Shown) -> tuple[str, ...]:
 def _regimens(consult: Consult) -> list[Section]:
     sections: list[Section] = []
     plan = consult.plan
+    most = told_up_to(consult)
     chosen = chosen_candidate(consult)
     for shown in consult.proposed:
         if chosen is not None and shown.regimen == chosen.regimen:
@@ -352,14 +355,14 @@ def _regimens(consult: Consult) -> list[Section]:
                     "past intake carried on. "
                     "Chances hold against the target range. No change in other drugs, feeds or albumin.",
                 ),
-                Table(FORECAST_HEADS, tuple(forecast_row(s) for s in ordered)),
+                Table(FORECAST_HEADS, tuple(forecast_row(s, consult) for s in ordered)),
             )
         )
         sections.append(
             Section(
                 "Danger of each, every dose taken",
                 ("The chance of too high and every stop are computed for the regimen fully taken.",),
-                Table(DANGER_HEADS, tuple(danger_row(s) for s in ordered)),
+                Table(DANGER_HEADS, tuple(danger_row(s, consult) for s in ordered)),
             )
         )
     if plan is not None:
@@ -386,7 +389,7 @@ def _regimens(consult: Consult) -> list[Section]:
         if plan.overlay is not None and len(plan.overlay.courses) > 1:
             heads = ("Day", *(f"{words} (mg/L)" for words, _ in plan.overlay.courses))
             rows = tuple(
-                (show_number(d), *(short_band(course[i]) for _, course in plan.overlay.courses))
+                (show_number(d), *(level_band(course[i], most) for _, course in plan.overlay.courses))
                 for i, d in enumerate(plan.overlay.days)
             )
             sections.append(
@@ -403,8 +406,9 @@ def _regimens(consult: Consult) -> list[Section]:
                         f"Equal would be {show(switch.exact_labelled_mg, 'mg/day')} as labelled; as dispensed "
                         f"{show(switch.active_mg_per_day, 'mg/day', 4)} of active drug "
                         f"({signed_percent(switch.change_percent)} of the present).",
-                        f"Steady level {level_words(switch.steady)}; at the two ends of how much reaches the body "
-                        f"{edge(switch.steady_low_mg_per_L)} to {edge(switch.steady_high_mg_per_L)} mg/L.",
+                        f"Steady level {level_words(switch.steady, most)}; at the two ends of how much reaches the "
+                        f"body {level_edge(switch.steady_low_mg_per_L, most)} to "
+                        f"{level_edge(switch.steady_high_mg_per_L, most)} mg/L.",
                         *switch.lines,
                     ),
                 )
@@ -439,11 +443,11 @@ def _acute(consult: Consult) -> list[Section]:
     if plan.no_load:
         sections.append(Section("Load or top-up", tuple(plan.no_load)))
     if plan.pause is not None:
-        p = plan.pause
+        p, most = plan.pause, told_up_to(consult)
         lines = [
-            p.seizure_risk,
+            p.risk,
             p.restart_line,
-            f"Level today {level_words(p.now)}; give again at {show(p.to_mg_per_L, 'mg/L')}.",
+            f"Level today {level_words(p.now, np.inf)}; give again at {show(p.to_mg_per_L, 'mg/L')}.",
             f"Without any dose that takes {days_words(p.days)}"
             + (
                 f"; with what is still being absorbed {days_words(p.with_absorption)}."
@@ -456,7 +460,7 @@ def _acute(consult: Consult) -> list[Section]:
             lines.append(
                 f"{'' if r.offered else 'NOT OFFERED: '}Partial reduction to {r.words} "
                 f"({show_number(r.percent, 2)} % of the present dose): down to "
-                f"{show(p.to_mg_per_L, 'mg/L')} in {days_words(r.days)}; steady level {level_words(r.steady)}."
+                f"{show(p.to_mg_per_L, 'mg/L')} in {days_words(r.days)}; steady level {level_words(r.steady, most)}."
             )
         table = None
         if p.restarts:
@@ -475,10 +479,10 @@ def _acute(consult: Consult) -> list[Section]:
                 tuple(
                     (
                         r.words,
-                        short_band(r.steady),
-                        short_band(r.on_time),
-                        short_band(r.early),
-                        short_band(r.late),
+                        level_band(r.steady, most),
+                        level_band(r.on_time, most),
+                        level_band(r.early, most),
+                        level_band(r.late, most),
                         r.lowest_late_words,
                     )
                     for r in p.restarts
@@ -493,7 +497,7 @@ def _acute(consult: Consult) -> list[Section]:
 
 
 def _load(load: Load, consult: Consult) -> Section:
-    form = consult.profile.forms[load.form]
+    form, most = consult.profile.forms[load.form], told_up_to(consult)
     parts = "; ".join(
         f"{show(mg, form.amount_unit, 6)} " + (f"after {show_number(h)} h" if h else "at once") for h, mg in load.parts
     )
@@ -502,8 +506,8 @@ def _load(load: Load, consult: Consult) -> Section:
         f"By the formula {show(load.wanted_mg, form.amount_unit, 4)}; as ordered "
         f"{show(load.amount_mg, form.amount_unit, 6)} "
         f"({show(load.active_mg, 'mg', 4)} of active drug): {parts}.",
-        f"It adds {level_words(load.rise)}; level after it {level_words(load.after)}; when drawn "
-        f"{show(load.draw_after_h, 'h')} later {level_words(load.at_draw)}.",
+        f"It adds {level_words(load.rise, most)}; level after it {level_words(load.after, most)}; when drawn "
+        f"{show(load.draw_after_h, 'h')} later {level_words(load.at_draw, most)}.",
         f"Chance of a level above the range {percent(load.above_high)}, above the critical level "
         f"{percent(load.above_critical)}.",
     ]
@@ -512,7 +516,7 @@ def _load(load: Load, consult: Consult) -> Section:
     if load.followed:
         lines.append(
             f"With {load.maintenance} after it: "
-            + "; ".join(f"day {show_number(d)} {level_words(b)}" for d, b in load.followed)
+            + "; ".join(f"day {show_number(d)} {level_words(b, most)}" for d, b in load.followed)
             + "."
         )
     lines += list(load.notes)
@@ -531,13 +535,15 @@ def _next(consult: Consult) -> list[Section]:
     found = consult.plan.next_level if consult.plan is not None else None
     if found is None:
         return []
+    most = told_up_to(consult)
+    reported_most = (consult.scale.free if found.line.scale == "free" else consult.scale.total)(most)
     rows = tuple(
         (
             show_number(d.day, 3),
             show_time(d.moment) if d.moment is not None else "",
             f"{show_number(100 * d.spread, 2)} %",
-            short_band(d.expected),
-            short_band(d.reported),
+            level_band(d.expected, most),
+            level_band(d.reported, reported_most),
             "proposed" if d is found.chosen else "early safety level" if d is found.safety else "",
         )
         for d in found.draws
@@ -576,7 +582,7 @@ def _populations(consult: Consult) -> list[Section]:
             c.words + (" (used)" if c.used else ""),
             short_band(c.vmax),
             short_band(c.km),
-            short_band(c.steady),
+            level_band(c.steady, told_up_to(consult)),
             percent(c.danger),
         )
         for c in found
@@ -609,8 +615,19 @@ def _workings(consult: Consult) -> list[Section]:
         lines += [x for x in found.said if x]
     lines += machine_only(consult)
     if lines:
-        sections.append(Section("Workings", tuple(lines)))
+        sections.append(Section("Workings", (*lines, *_arithmetic_only(consult))))
     return sections
+
+
+def _arithmetic_only(consult: Consult) -> list[str]:
+    """Where a level that is told in words has to be calculated again to check it, that it is no forecast."""
+    shown, most = spoken_for(consult), told_up_to(consult)
+    if shown is None or consult.plan is None:
+        return []
+    medians = [f.steady.median for f in (shown.forecast, shown.taken)]
+    if not any(most < m < np.inf for m in medians):
+        return []
+    return [f"A level above {show(most, 'mg/L')} stands here as arithmetic to be checked, not as a level to expect."]
 
 
 def _second_way(consult: Consult) -> list[Section]:
@@ -630,6 +647,7 @@ def _second_way(consult: Consult) -> list[Section]:
                 "text as typed). It catches arithmetic, never transcription: for that the second "
                 "pharmacist types the case "
                 "again from the chart.",
+                *_arithmetic_only(consult),
             ),
             Table(heads, cells),
         )

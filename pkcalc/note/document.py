@@ -15,13 +15,14 @@ from pkcalc.note.words import (
     DEMONSTRATION,
     FORECAST_HEADS,
     NO_STEADY_STATE,
-    URGENT,
+    OVERDOSE,
     Section,
     Table,
     days_words,
     demonstration_words,
     forecast_row,
     level_words,
+    told_up_to,
 )
 
 __all__ = [
@@ -29,7 +30,7 @@ __all__ = [
     "DEMONSTRATION",
     "FORECAST_HEADS",
     "NO_STEADY_STATE",
-    "URGENT",
+    "OVERDOSE",
     "Document",
     "Section",
     "Table",
@@ -38,6 +39,7 @@ __all__ = [
     "estimate_lines",
     "forecast_row",
     "level_words",
+    "told_up_to",
 ]
 
 

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 import textwrap
 from collections.abc import Sequence
 
@@ -9,6 +10,7 @@ from pkcalc import __version__, entries
 from pkcalc import plan as planning
 from pkcalc.clock import show_time
 from pkcalc.consult import Consult, Shown
+from pkcalc.estimate.result import Band
 from pkcalc.note import hours
 from pkcalc.note.acute import daily_levels, is_offered, limited, now_lines, too_high, used_level
 from pkcalc.note.words import (
@@ -19,12 +21,12 @@ from pkcalc.note.words import (
     as_reported,
     days_words,
     demonstration_words,
-    edge,
     level_words,
     regimen_words,
     reports_free,
     same_lines,
     sentence,
+    told_up_to,
 )
 from pkcalc.plan.candidates import candidates
 from pkcalc.units import percent, percent_beside, show, show_number
@@ -67,19 +69,6 @@ def _basis(consult: Consult) -> str:
     return "total at normal binding" if consult.profile.binding is not None else consult.profile.target.basis
 
 
-_TOLD = (
-    ("seizing_now", "seizing now"),
-    ("seizures_since_change", "seizures since the last change of dose"),
-    ("toxic_signs", "signs of toxicity"),
-    ("recent_load", "load or IV dose in the last 72 h"),
-    ("renal_failure", "renal failure or dialysis"),
-    ("valproate", "valproate"),
-    ("pregnancy", "pregnant"),
-    ("tube_feed", "tube fed"),
-    ("adherence_doubtful", "doubtful adherence"),
-)
-
-
 def _state(consult: Consult) -> tuple[str, ...]:
     case, patient = consult.case, consult.case.patient
     parts = [
@@ -90,8 +79,12 @@ def _state(consult: Consult) -> tuple[str, ...]:
     ]
     if case.albumin is not None or consult.profile.binding is not None:
         parts.append(f"albumin {case.albumin.typed.text}" if case.albumin else "albumin not stated")
-    told = [f"{words} {case.answer(key)}" for key, words in _TOLD if case.answer(key) in ("yes", "no")]
-    asked = consult.profile.questions or tuple(QUESTIONS)
+    told = [
+        f"{q.short} {case.answer(q.id)}"
+        for q in consult.profile.questions.values()
+        if q.told and case.answer(q.id) in ("yes", "no")
+    ]
+    asked = consult.profile.asked
     missing = sum(case.answer(key) in ("unknown", "not stated") for key in asked)
     lines = [sentence("; ".join(parts))]
     if told:
@@ -155,7 +148,7 @@ def verdict(consult: Consult) -> tuple[str, ...]:
     if consult.chosen is not None and not consult.stopped:
         vmax, km = consult.chosen.summary["vmax_mg_per_day"], consult.chosen.summary["km_mg_per_L"]
         lines.append(
-            f"By {consult.chosen.method}: Vmax {hours.vmax_words(consult, vmax)} of active drug, Km {level_words(km)}."
+            f"By {consult.chosen.method}: Vmax {hours.vmax_words(consult, vmax)} of active drug, Km {level_words(km, math.inf)}."
         )
     return tuple(lines)
 
@@ -188,11 +181,11 @@ def forecast_lines(shown: Shown, consult: Consult) -> list[str]:
     f, t = shown.forecast, shown.taken
     lines = [f"Expected as reported ({consult.scale.words}): {as_reported(f, consult)}."]
     if f.total != f.steady:
-        lines.append(f"At normal binding: {level_words(f.steady)}.")
+        lines.append(f"At normal binding: {level_words(f.steady, told_up_to(consult))}.")
     if not same_lines(shown):
         lines.append(
             f"If every dose is taken: {as_reported(t, consult)}"
-            + (f"; at normal binding {level_words(t.steady)}." if t.total != t.steady else ".")
+            + (f"; at normal binding {level_words(t.steady, told_up_to(consult))}." if t.total != t.steady else ".")
         )
     lines.append(
         f"Every dose taken: {danger_words(shown, consult)}; above the target once settled {percent(t.above)}. Below "
@@ -299,7 +292,7 @@ def _loads(consult: Consult) -> tuple[str, ...]:
             lines.append(f"{NOT_OFFERED}: {' '.join(sentence(w) for w in load.why_not)}")
             lines.append(f"{NOT_OFFERED}, by calculation only: {order}")
         lines.append(
-            f"Expected after it {level_words(load.after)}"
+            f"Expected after it {level_words(load.after, told_up_to(consult))}"
             + (" at normal binding" if consult.profile.binding is not None else "")
             + f"; chance above the range {percent(load.above_high)}, above the critical level "
             f"{percent(load.above_critical)}."
@@ -319,12 +312,12 @@ def _load_draws(consult: Consult) -> list[str]:
     for load in plan.loads:
         if not load.offered:
             continue
-        b = load.at_draw
+        expected = Band(report(load.at_draw.median), report(load.at_draw.low), report(load.at_draw.high))
         since = "the end of the infusion" if load.minutes is not None else "the first part"
         lines.append(
             f"If the load is given, first: draw {show(load.draw_after_h, 'h')} after {since}; expected "
-            f"{show(report(b.median), 'mg/L')} (90 % interval {edge(report(b.low))} to {edge(report(b.high))}) as "
-            f"reported ({kind}); above {show(min(report(b.high), critical), 'mg/L')}: call."
+            f"{level_words(expected, report(told_up_to(consult)))} as reported ({kind}); above "
+            f"{show(min(expected.high, critical), 'mg/L')}: call."
         )
     return lines
 
@@ -412,7 +405,7 @@ def _pasted_loads(consult: Consult) -> list[str]:
     for load in plan.loads:
         order = sentence(load.order[0] if load.order else show_number(load.amount_mg))
         head = "Load" if load.offered else f"Load, {NOT_OFFERED}"
-        lines.append(f"{head}: {order} Level after it {level_words(load.after)}.")
+        lines.append(f"{head}: {order} Level after it {level_words(load.after, told_up_to(consult))}.")
     return [*lines, *plan.no_load]
 
 

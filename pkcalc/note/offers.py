@@ -117,7 +117,7 @@ def _load(load: Load) -> dict[str, Any]:
 
 def _pause(p: Pause) -> dict[str, Any]:
     return {
-        "seizure_risk": p.seizure_risk,
+        "withdrawal_risk": p.risk,
         "first": p.first,
         "restart": p.restart_line,
         "level_today_mg_per_L": band_data(p.now),

@@ -140,7 +140,7 @@ _DEFINITIONS: dict[str, dict[str, Any]] = {
     ),
     "pause": _object(
         {
-            "seizure_risk": TEXT,
+            "withdrawal_risk": TEXT,
             "first": TEXT,
             "restart": TEXT,
             "level_today_mg_per_L": BAND,

@@ -10,12 +10,10 @@ import numpy as np
 from pkcalc.consult import Consult, Shown
 from pkcalc.estimate.result import Band
 from pkcalc.forecast import Forecast
-from pkcalc.units import percent, show, show_number
+from pkcalc.units import percent, show_number, show_up_to
 
-URGENT = (
-    "Active status epilepticus is treated by the local protocol now and never waits for this note. An acute overdose "
-    "belongs to the poison centre."
-)
+#: After what the drug file says never waits for a note.
+OVERDOSE = "An acute overdose belongs to the poison centre."
 DEFERS = (
     "This note supports, and never replaces, the local protocol and the judgement of licensed pharmacists and "
     "physicians. Every number must be checked before it is used."
@@ -55,11 +53,40 @@ def demonstration_words(consult: Consult) -> str:
     return DEMONSTRATION if teaching or consult.case.demonstration is not None else ""
 
 
-def level_words(band: Band, unit: str = "mg/L") -> str:
-    """'15 mg/L (90 % interval 11 to 24)'; a bound without a steady state is said in words."""
+def told_up_to(consult: Consult) -> float:
+    """The highest forecast level [mg/L, working basis] that is told in numbers; beyond it stands 'above 60 mg/L'."""
+    return consult.profile.target.most_told(consult.goal.critical_mg_per_L)
+
+
+def level_words(band: Band, most: float, unit: str = "mg/L") -> str:
+    """'15 mg/L (90 % interval 11 to 24)'; a bound without a steady state, or above the most told, is said in words.
+
+    most: on the scale of the band.
+    """
     if not np.isfinite(band.median):
-        return NO_STEADY_STATE if not np.isfinite(band.low) else f"{NO_STEADY_STATE} (from {edge(band.low)} up)"
-    return f"{show(band.median, unit)} (90 % interval {edge(band.low)} to {edge(band.high)})"
+        return _no_steady_state(band, most)
+    low, high = level_edge(band.low, most), level_edge(band.high, most)
+    return f"{show_up_to(band.median, unit, most)} (90 % interval {low} to {high})"
+
+
+def level_edge(value: float, most: float) -> str:
+    """One number of a forecast level, whose unit stands elsewhere."""
+    return show_up_to(value, "", most) if np.isfinite(value) else NO_STEADY_STATE
+
+
+def level_band(band: Band, most: float) -> str:
+    """A forecast level for a table cell whose head has the unit."""
+    if not np.isfinite(band.median):
+        return _no_steady_state(band, most)
+    low, high = level_edge(band.low, most), level_edge(band.high, most)
+    return f"{level_edge(band.median, most)} ({low} to {high})"
+
+
+def _no_steady_state(band: Band, most: float) -> str:
+    if not np.isfinite(band.low):
+        return NO_STEADY_STATE
+    # "from above 60 up" would say it twice
+    return f"{NO_STEADY_STATE} ({level_edge(band.low, most) if band.low > most else f'from {edge(band.low)} up'})"
 
 
 def edge(value: float) -> str:
@@ -67,10 +94,8 @@ def edge(value: float) -> str:
 
 
 def short_band(band: Band) -> str:
-    """The same for a table cell whose head has the unit."""
-    if not np.isfinite(band.median):
-        return level_words(band)
-    return f"{show_number(band.median)} ({edge(band.low)} to {edge(band.high)})"
+    """Any other number with its interval (Vmax, Km, a level that was measured) for a table cell."""
+    return f"{edge(band.median)} ({edge(band.low)} to {edge(band.high)})"
 
 
 def days_words(band: Band | None) -> str:
@@ -89,9 +114,10 @@ def reports_free(consult: Consult) -> bool:
 
 def as_reported(forecast: Forecast, consult: Consult) -> str:
     """A forecast as the laboratory will report it: total, and free where free levels are used."""
-    text = f"total {level_words(forecast.total)}"
+    most = told_up_to(consult)
+    text = f"total {level_words(forecast.total, consult.scale.total(most))}"
     if reports_free(consult):
-        text += f"; free {level_words(forecast.free)}"
+        text += f"; free {level_words(forecast.free, consult.scale.free(most))}"
     return text
 
 
@@ -151,13 +177,13 @@ FORECAST_HEADS = (
 )
 
 
-def forecast_row(shown: Shown) -> tuple[str, ...]:
-    f = shown.forecast
+def forecast_row(shown: Shown, consult: Consult) -> tuple[str, ...]:
+    f, most = shown.forecast, told_up_to(consult)
     return (
         shown.words,
         show_number(f.rate_mg_per_day, 4),
-        short_band(f.steady),
-        short_band(f.total),
+        level_band(f.steady, most),
+        level_band(f.total, consult.scale.total(most)),
         percent(f.below),
         percent(f.within),
         percent(f.above),

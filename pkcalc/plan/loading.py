@@ -11,7 +11,7 @@ from itertools import product as every_pair
 import numpy as np
 
 from pkcalc import flow, formulas
-from pkcalc.case import QUESTIONS, Case
+from pkcalc.case import Case
 from pkcalc.clock import show_time
 from pkcalc.dosing import Intake, absorption_of, active_mg
 from pkcalc.drugs.profile import IvLine, OralLoad, Product, Profile, RateCap
@@ -304,7 +304,7 @@ def by_mouth(ward: Ward, products: Sequence[Product], aim_mg_per_L: float) -> Lo
         if "yes" in answers.values():
             why.append(f"No load by mouth in {excluded}.")
         elif any(a != "no" for a in answers.values()) or not answers:
-            asked = " ".join(QUESTIONS[q] for q, a in answers.items() if a != "no")
+            asked = " ".join(profile.questions[q].words for q, a in answers.items() if a != "no")
             why.append(f"No load by mouth before {excluded} is excluded. {asked}".strip())
     pieces = ", then ".join(
         f"{show_number(mg / unit.mg_per_unit, 6)} x {show(unit.mg_per_unit, form.amount_unit, 6)}"
@@ -482,7 +482,8 @@ def ceiling(ward: Ward, wanted_mg: float, unit: str) -> tuple[float, list[str]]:
         low, high = loading.mg_per_kg
         notes.append(
             f"That is {show(wanted_mg / weight, f'{unit}/kg')} by the formula; published loads are "
-            f"{show_number(low)} to {show(high, f'{unit}/kg')}, up to {show_number(highest)} in status epilepticus."
+            f"{show_number(low)} to {show(high, f'{unit}/kg')}"
+            + (f", up to {show_number(highest)} in {loading.status_words}." if loading.status_words else ".")
         )
         if highest * weight < min(most, wanted_mg):
             most = highest * weight

@@ -411,10 +411,12 @@ def action_line(draw: Draw, asked: Asked, *, rises: tuple[bool, bool] = (True, T
     else:
         limit = f"above {show(draw.reported.high, 'mg/L')} as reported ({scale} level) {above}: call."
     low = draw.reported.low
-    limit += f" Below {show(low, 'mg/L')} ({below}), or seizures at any level: call."
+    signs = asked.profile.withdrawal.signs if asked.profile.withdrawal is not None else ""
+    limit += f" Below {show(low, 'mg/L')} ({below}){f', or {signs} at any level' if signs else ''}: call."
     target = asked.reported(asked.goal.low_mg_per_L)
     if low < target and draw.reported.median < target:
-        limit += f" Below {show(target, 'mg/L')} it is below the target: ask about seizures the same day."
+        ask = f": ask about {signs} the same day" if signs else ""
+        limit += f" Below {show(target, 'mg/L')} it is below the target{ask}."
     words = f"{_when(draw, asked)}{', the load counted in' if asked.load else ''}; {limit}"
     return Action(
         draw=draw,
@@ -431,6 +433,7 @@ def daily_line(asked: Asked) -> Action:
     scale: Literal["total", "free"] = "free" if asked.free else "total"
     critical = asked.reported(asked.goal.critical_mg_per_L)
     until = asked.reported(asked.until_mg_per_L or asked.goal.high_mg_per_L)
+    signs = f", or {asked.profile.withdrawal.signs}" if asked.profile.withdrawal is not None else ""
     return Action(
         draw=None,
         scale=scale,
@@ -439,7 +442,7 @@ def daily_line(asked: Asked) -> Action:
         low_mg_per_L_reported=until,
         words=(
             f"Levels daily, the first within 24 h, until one is at or below {_not_above(until)} as reported ({scale} "
-            f"level). At or above {_not_above(critical)}, or not below the one before, or seizures: call."
+            f"level). At or above {_not_above(critical)}, or not below the one before{signs}: call."
         ),
     )
 

@@ -17,16 +17,18 @@ from pkcalc.plan.present import Floats, Today, is_toxic
 from pkcalc.record import Record
 from pkcalc.units import show, show_number
 
-SEIZURE_RISK = (
-    "Stopping or pausing an antiseizure drug can bring on seizures, status epilepticus among them. Weigh that first; "
-    "a partial reduction is the default, and a pause goes to a stated level in the upper range, never to zero."
+#: What follows the drug's own risk of a pause.
+WEIGH = (
+    "Weigh that first; a partial reduction is the default, and a pause goes to a stated level in the upper range, "
+    "never to zero."
 )
 #: The same where the level is at or above the critical one, or there are toxic signs.
-SEIZURE_RISK_TOXIC = (
-    "Stopping or pausing an antiseizure drug can bring on seizures, status epilepticus among them. Weigh that first. "
-    "Here the level is toxic or there are toxic signs: a pause to a stated level in the upper range comes first, never "
-    "to zero; a smaller dose alone takes longer."
+WEIGH_TOXIC = (
+    "Weigh that first. Here the level is toxic or there are toxic signs: a pause to a stated level in the upper range "
+    "comes first, never to zero; a smaller dose alone takes longer."
 )
+#: Where the drug file names no risk of its own.
+NO_RISK_STATED = "The drug file names no risk of a pause: weigh what the disease does without the drug."
 #: Where the site states no limit of quantification, levels below this share of the target's low end are not told apart.
 LOWEST_SHARE = 0.1
 #: Longest pause that is followed [day].
@@ -84,13 +86,14 @@ class Restart:
 class Pause:
     """What to do about a level that is too high.
 
-    seizure_risk: named first. now: today's level. to_mg_per_L: the level at which the drug is given again. days: until
-    then without any dose, per draw, by the closed form; with_absorption: the same with what is still being absorbed;
-    None where nothing is. reductions: partial reductions. restarts: regimens to go on with. lines: the rest in words.
+    risk: what a pause can bring on, named first. now: today's level. to_mg_per_L: the level at which the drug is given
+    again. days: until then without any dose, per draw, by the closed form; with_absorption: the same with what is still
+    being absorbed; None where nothing is. reductions: partial reductions. restarts: regimens to go on with. lines: the
+    rest in words.
     toxic: at or above the critical level, or toxic signs; first: what stands first then. restart_line: when to restart.
     """
 
-    seizure_risk: str
+    risk: str
     now: Band
     to_mg_per_L: float
     days: Band
@@ -165,10 +168,11 @@ def pause(case: Case, now: Today, setting: Setting, every: Sequence[Candidate]) 
     band = bands(days[None, :], few.weights)[0]
     toxic = is_toxic(now, goal) or case.answer("toxic_signs") == "yes"
     reductions = _reductions(every, setting, few, start, to, toxic=toxic)
+    drug = setting.profile
     if refused := next((r for r in reductions if not r.offered), None):
         lines.append(f"Why a reduction is marked not offered: {' '.join(refused.why_not)}")
     return Pause(
-        seizure_risk=SEIZURE_RISK_TOXIC if toxic else SEIZURE_RISK,
+        risk=f"{drug.withdrawal.risk if drug.withdrawal else NO_RISK_STATED} {WEIGH_TOXIC if toxic else WEIGH}",
         now=level,
         to_mg_per_L=to,
         days=band,

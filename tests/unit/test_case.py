@@ -19,6 +19,7 @@ from pkcalc.case import (
     read_case_text,
 )
 from pkcalc.demos import demonstration, demonstrations
+from pkcalc.drugs.profile import load_profile
 from pkcalc.errors import CaseError
 from tests.unit.cases import PLAIN, plain
 
@@ -42,6 +43,40 @@ def test_the_schema_is_a_schema_and_refuses_what_the_reader_refuses() -> None:
         assert not schema.is_valid(data)
         with pytest.raises(CaseError):
             read_case_text(json.dumps(data))
+
+
+def test_questions_and_other_levels_are_those_of_the_drug() -> None:
+    """What one drug's file adds, no case of another drug may hold: schema and reader agree."""
+    schema = jsonschema.Draft202012Validator(case_schema())
+    other = {**PLAIN["levels"][0], "other_levels": {"valproate": "60 mg/L"}}
+    fits = {**PLAIN, "levels": [other]}
+    assert schema.is_valid(fits)
+    level = read_case_text(json.dumps(fits)).levels[0]
+    assert (level.other_mg_per_L("valproate"), level.other_mg_per_L("warfarin")) == (60.0, None)
+    ethanol = json.loads(dump_case(demonstration("ethanol-first-hours")))
+    level = {"value": "92 mg/dL", "kind": "total", "other_levels": {"valproate": "60 mg/L"}}
+    for wrong, said in (
+        (
+            {**PLAIN, "levels": [{**other, "other_levels": {"warfarin": "1 mg/L"}}]},
+            "Level 1, other levels, warfarin (line 1): no level of this drug is asked for. Allowed: valproate. "
+            "Remove it.",
+        ),
+        (
+            {**ethanol, "levels": [level]},
+            "Level 1, other levels, valproate (line 1): no level of this drug is asked for. Allowed: none with a level "
+            "of ethanol as antidote. Remove it.",
+        ),
+        (
+            {**ethanol, "context": {"hla_b1502": "no"}},
+            "Context, hla b1502 (line 1): this question is not known. Allowed: "
+            + ", ".join(load_profile("ethanol").questions)
+            + ". Remove it.",
+        ),
+    ):
+        assert not schema.is_valid(wrong)
+        with pytest.raises(CaseError) as caught:
+            read_case_text(json.dumps(wrong))
+        assert [p.text for p in caught.value.problems] == [said]
 
 
 def test_there_is_no_field_for_a_name() -> None:

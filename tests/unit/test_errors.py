@@ -10,7 +10,7 @@ from typing import Any
 import pytest
 
 from pkcalc import case as case_module
-from pkcalc.case import QUESTIONS, CaseFile, read_case_text
+from pkcalc.case import CaseFile, read_case_text
 from pkcalc.drugs.profile import load_profile
 from pkcalc.errors import CaseError, DrugFileError
 from tests.unit.cases import plain
@@ -22,7 +22,7 @@ def full(messages: list[str]) -> list[str]:
         "<forms>": profile.forms,
         "<populations>": profile.populations,
         "<shelves>": profile.shelves,
-        "<questions>": QUESTIONS,
+        "<questions>": profile.questions,
         "<keys>": sorted(CaseFile.model_fields),
     }
     for mark, words in lists.items():
@@ -190,9 +190,18 @@ CHANGES: list[tuple[dict[str, Any], list[str]]] = [
         ],
     ),
     (
-        {"levels": [{"value": "8 mg/L", "kind": "total", "drawn": "2026-09-15 07:00", "valproate_level": "900 mg/L"}]},
+        {
+            "levels": [
+                {
+                    "value": "8 mg/L",
+                    "kind": "total",
+                    "drawn": "2026-09-15 07:00",
+                    "other_levels": {"valproate": "900 mg/L"},
+                }
+            ]
+        },
         [
-            "Level 1, valproate level (line 1): 900 mg/L was given. Allowed: 1 to 300 mg/L (both ends count). Check the number and its unit."
+            "Level 1, other levels, valproate (line 1): 900 mg/L was given. Allowed: 1 to 300 mg/L (both ends count). Check the number and its unit."
         ],
     ),
     (

@@ -440,7 +440,7 @@ def test_a_level_of_the_displacing_drug_goes_with_its_own_sample_only() -> None:
     same = level("o2", 60, code="4086-5", display="")
     other = level("o3", 70, code="4086-5", display="", effectiveDateTime="2026-11-12T07:00:00+01:00")
     found = of(given(), level(), same, other)
-    assert [x.valproate_level for x in found.file.levels] == ["60 mg/L"]
+    assert [x.other_levels for x in found.file.levels] == [{"valproate": "60 mg/L"}]
     assert "Answer the context questions" in line(found, 4)
 
 

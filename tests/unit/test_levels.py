@@ -195,7 +195,7 @@ def test_renal_failure_and_valproate_give_a_range_and_no_reading() -> None:
     # The 0.1 coefficient of the published renal form prints 25.6 mg/L; the 0.2 equation gives 15.2.
     assert f"{renal.high_mg_per_L:.1f}" == "25.6"
     assert renal.low_mg_per_L == pytest.approx(8.2 / 0.54)
-    (valproate,) = seen(levels=one("10 mg/L", valproate_level="80 mg/L"), context={"valproate": "yes"})
+    (valproate,) = seen(levels=one("10 mg/L", other_levels={"valproate": "80 mg/L"}), context={"valproate": "yes"})
     # Haidukewych 1989: free 1.75 mg/L; May 1991: free 1.30 mg/L.
     assert valproate.high_mg_per_L == pytest.approx(17.5)
     assert valproate.low_mg_per_L == pytest.approx(13.008)

@@ -18,7 +18,7 @@ from pkcalc.cli import cli
 from pkcalc.consult import Consult, run_consult
 from pkcalc.demos import demonstration
 from pkcalc.note.charts import Chart, charts, contours
-from pkcalc.note.document import DEMONSTRATION, URGENT, Document, compose
+from pkcalc.note.document import DEMONSTRATION, OVERDOSE, Document, compose
 from pkcalc.note.front import PASTE_LINES, PASTE_WIDTH
 from pkcalc.note.html import render_html
 from pkcalc.note.layout import first_sentence
@@ -106,7 +106,7 @@ def test_a_stop_leaves_page_one_without_a_forecast() -> None:
 def test_the_urgent_line_and_the_marks_stand_on_every_form_of_the_note() -> None:
     consult = demo("over-the-ceiling")
     for text in (render(compose(consult)), render_html(consult)):
-        assert " ".join(URGENT.split()) in " ".join(text.split())
+        assert f"{consult.profile.urgent} {OVERDOSE}" in " ".join(text.split())
         assert text.count(DEMONSTRATION) == 3  # first, last, and in the block to paste
 
 

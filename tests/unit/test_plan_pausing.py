@@ -34,7 +34,7 @@ def pause(est: Any = None, **changes: Any) -> Pause:
 
 def test_the_seizure_risk_is_named_first() -> None:
     high = pause(levels=[{**HIGH["levels"][0], "value": "25 mg/L"}])
-    assert high.seizure_risk == (
+    assert high.risk == (
         "Stopping or pausing an antiseizure drug can bring on seizures, status epilepticus among them. Weigh that "
         "first; a partial reduction is the default, and a pause goes to a stated level in the upper range, never to "
         "zero."
@@ -46,7 +46,7 @@ def test_the_seizure_risk_is_named_first() -> None:
 def test_a_pause_comes_first_for_a_toxic_level_or_toxic_signs(level: str, signs: str) -> None:
     found = pause(levels=[{**HIGH["levels"][0], "value": level}], context={"toxic_signs": signs})
     assert found.first == "pause"
-    assert found.seizure_risk == (
+    assert found.risk == (
         "Stopping or pausing an antiseizure drug can bring on seizures, status epilepticus among them. Weigh that "
         "first. Here the level is toxic or there are toxic signs: a pause to a stated level in the upper range comes "
         "first, never to zero; a smaller dose alone takes longer."

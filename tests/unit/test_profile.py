@@ -15,7 +15,6 @@ from hypothesis import strategies as st
 from scipy.integrate import solve_ivp
 
 from pkcalc import formulas
-from pkcalc.case import QUESTIONS
 from pkcalc.drugs.profile import (
     SCOPES,
     Population,
@@ -324,11 +323,9 @@ def test_no_modifier_narrows_a_wider_population() -> None:
 
 
 def test_every_question_of_a_modifier_is_one_the_case_asks() -> None:
-    from pkcalc.case import QUESTIONS
-
     for name in DRUGS:
         for modifier in load_profile(name).modifiers.values():
-            assert modifier.question in ("", *QUESTIONS)
+            assert modifier.question in ("", *load_profile(name).asked)
 
 
 def test_obesity_uses_other_weights_and_says_so() -> None:
@@ -533,7 +530,7 @@ def test_displacement_equations() -> None:
     assert binding is not None
     found = {d.words: d.free_mg_per_L(10.0, 80.0) for d in binding.displacements}
     assert found == pytest.approx({"Haidukewych 1989": 1.75, "May 1991": 1.3008})
-    assert {d.drug for d in binding.displacements} <= set(QUESTIONS)
+    assert {d.drug for d in binding.displacements} == set(drug().other_levels) <= set(drug().asked)
 
 
 @pytest.mark.parametrize(("level", "step"), [(0.5, 100), (6.99, 100), (7, 50), (11.99, 50), (12, 30), (40, 30)])
@@ -764,6 +761,16 @@ def test_a_wrong_entry_is_refused(old: str, new: str, message: str) -> None:
         ('form = "injection"\ngroup = "adult"', 'form = "syrup"\ngroup = "adult"', 'loading.rate_cap.injection-adult.form: "syrup" is not a form of this file. Name one of the forms above.'),
         ("ages = { value = [4, 7]", "ages = { value = [5, 7]", "population: the default populations leave a gap or overlap at 4 years. Make their ages meet."),
         ('value = "Never into a muscle: uptake is erratic and goes on for weeks."', 'value = ""', "form.injection.refused_route.intramuscular.value: missing or empty. Write the sentence."),
+        ('questions = ["seizing_now",', 'questions = ["seizing_noww",', 'drug.questions: "seizing_noww" is not a question. Perhaps "seizing_now" is meant.'),
+        ('questions = ["seizing_now",', 'questions = ["blood_group",', 'drug.questions: "blood_group" is not a question. Add [question.blood_group].'),
+        ('questions = ["seizing_now", ', "questions = [", 'drug.questions: "seizing_now" has words but is not asked. Add it to the list.'),
+        ('group = "first"', 'group = "last"', 'question.seizing_now.group: "last" was found. Write one of: first, reading, course, start.'),
+        ('question = "cyp2c9_reduced"', 'question = "cyp2d6"', 'modifier.cyp2c9-reduced.question: "cyp2d6" is not a question. Add it or mend its name.'),
+        ('words = "Is valproate being taken?"\n', "", "question.valproate.words: missing. Add it with its source."),
+        ("[other_level.valproate]", "[other_level.divalproex]", 'binding.displacement.haidukewych1989.drug: no level of "valproate" is asked for. Add [other_level.valproate].'),
+        ("gate = { value = [1, 300]", "gate = { value = [300, 1]", "other_level.valproate.gate.value: the first is larger than the second. Write the lower end first."),
+        ('one_sign = "a seizure"\n', "", "withdrawal.one_sign: missing. Add it with its source."),
+        ('status_words = "status epilepticus"\n', "", "loading.status_words: missing. Add it with its source."),
         ('value = ["phenobarbital", "valproate"]', "value = []", 'interactions.either.value: not a list of texts. Write ["...", "..."].'),
     ],
 )  # fmt: skip
