@@ -214,6 +214,8 @@ def _checked_twice(consult: Consult, state: State) -> Consult:
         prior=consult.prior,
         spread=record_spread(consult.case, consult.profile),
         plan=consult.plan,
+        projection=consult.projection,
+        goal=consult.goal,
     )
     wrong = tuple(r.words for r in rows if not r.agrees)
     if not wrong:

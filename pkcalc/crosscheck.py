@@ -231,42 +231,51 @@ class Course:
 
 
 def integrate(
-    record: Record, times_day: Sequence[float], nodes: Sequence[Node], *, first_order_per_day: float = 0.0
+    record: Record,
+    times_day: Sequence[float],
+    nodes: Sequence[Node],
+    *,
+    first_order_per_day: float = 0.0,
+    start_mg_per_L: float | None = None,
 ) -> Course:
     """dX/dt = r(t) - Vmax X / (Km V + X) - k X for every node at once, by scipy's LSODA; at the times asked for and
-    on an even grid before them. record: as taken. first_order_per_day: the population's parallel path."""
-    from scipy.integrate import solve_ivp
+    on an even grid before them. record: as taken. first_order_per_day: the population's parallel path.
+    start_mg_per_L: a level at the start of the record, in place of what it says was in the body."""
+    from scipy.integrate import odeint
 
     begin, doses = _all_doses(record)
     flow_in = _Input(doses)
-    vmax = np.array([n.vmax_mg_per_day for n in nodes])
-    constant = np.full(len(nodes), first_order_per_day)
-    volume = np.array([n.volume_L for n in nodes])
-    kappa = np.array([n.km_mg_per_L for n in nodes]) * volume
     last = max(times_day)
     count = max(2, int((last - begin) * _GRID_PER_DAY))
     grid = np.unique(np.concatenate([np.linspace(begin, last, count), np.array(times_day)]))
-    paths = [
-        (
-            p.start_day,
-            p.end_day,
-            p.rate_per_day if p.rate_per_day is not None else (p.clearance_L_per_day or 0.0) / volume,
-        )
-        for p in record.first_order
-    ]
     size = len(nodes)
+    # plain numbers: for a handful of nodes they are several times quicker than arrays
+    ways = [
+        (
+            n.vmax_mg_per_day,
+            n.km_mg_per_L * n.volume_L,
+            [
+                (p.start_day, p.end_day, p.rate_per_day)
+                if p.rate_per_day is not None
+                else (p.start_day, p.end_day, (p.clearance_L_per_day or 0.0) / n.volume_L)
+                for p in record.first_order
+            ],
+        )
+        for n in nodes
+    ]
 
-    def change(t: float, state: Floats) -> Floats:
-        x = state[:size]
-        k = constant
-        for start, end, rate in paths:
-            if start <= t < end:
-                k = k + rate
-        room = kappa + x
-        out = np.empty(2 * size)
-        out[:size] = flow_in.rate(t) - vmax * x / room - k * x
-        out[size:] = vmax * kappa / (room * room) + k
-        return out
+    def change(t: float, state: Floats) -> list[float]:
+        arriving = flow_in.rate(t)
+        amounts, fading = [], []
+        for x, (vmax, kappa, paths) in zip(state.tolist(), ways, strict=False):
+            k = first_order_per_day
+            for start, end, rate in paths:
+                if start <= t < end:
+                    k += rate
+            held = vmax / (kappa + x)
+            amounts.append(arriving - (held + k) * x)
+            fading.append(held * kappa / (kappa + x) + k)
+        return amounts + fading
 
     jumps = sorted(
         {begin, last}
@@ -278,11 +287,13 @@ def integrate(
             for t in (d.time_day, d.time_day + d.duration_day)
             if begin < t < last
         }
-        | {t for start, end, _ in paths for t in (start, end) if begin < t < last}
+        | {t for p in record.first_order for t in (p.start_day, p.end_day) if begin < t < last}
     )
     state = np.zeros(2 * size)
     if record.start_mg is not None and record.before is None:
         state[:size] = record.start_mg
+    if start_mg_per_L is not None:
+        state[:size] = [start_mg_per_L * n.volume_L for n in nodes]
     amount, gone = np.zeros((size, len(grid))), np.zeros((size, len(grid)))
     # no step may pass over the whole of a quickly absorbed dose
     widest = min(
@@ -293,19 +304,24 @@ def integrate(
         for d in flow_in.pushes:
             if d.time_day == a:
                 state[:size] += d.amount_mg
-        inside = np.flatnonzero((grid >= a) & (grid <= b)) if b == last else np.flatnonzero((grid >= a) & (grid < b))
-        found = solve_ivp(
+        first, end = np.searchsorted(grid, a), np.searchsorted(grid, b, "right" if b == last else "left")
+        times = np.concatenate([[a], grid[first:end], [b]])
+        found, told = odeint(
             change,
-            (a, b),
             state,
-            method="LSODA",
-            t_eval=np.append(grid[inside], b) if b not in grid[inside] else grid[inside],
-            rtol=1e-4,
-            atol=1e-2,
-            max_step=widest,
+            times,
+            tfirst=True,
+            tcrit=[b],
+            rtol=1e-6,
+            atol=1e-3,
+            hmax=widest,
+            mxstep=10**6,
+            full_output=True,
         )
-        amount[:, inside], gone[:, inside] = found.y[:size, : len(inside)], found.y[size:, : len(inside)]
-        state = found.y[:, -1].copy()
+        if told["message"] != "Integration successful.":
+            found[:] = np.nan
+        amount[:, first:end], gone[:, first:end] = found[1:-1, :size].T, found[1:-1, size:].T
+        state = found[-1].copy()
     return Course(grid, amount, gone)
 
 
@@ -364,7 +380,7 @@ def log_weights(
 ) -> Floats:
     """Log posterior density of each node's (log Vmax, log Km V), the volume summed out on a grid; up to a constant.
 
-    record: as taken on average, every doubtful dose written out. Only for at most one censored level.
+    record: as taken on average, every doubtful dose written out.
     """
     at = np.searchsorted(course.times_day, [x.time_day for x in levels])
     own = np.array(
@@ -379,7 +395,8 @@ def log_weights(
     observed = np.log([x.level_mg_per_L for x in levels])
     inverse = np.linalg.inv(population.cov)
     sd_volume = math.sqrt(population.cov[2, 2])
-    log_v = population.mean[2] + sd_volume * np.linspace(-7.5, 7.5, 601)
+    hidden = sum(x.censored is not None for x in levels)
+    log_v = population.mean[2] + sd_volume * np.linspace(-7.5, 7.5, 601 if hidden < 2 else 121)
     out = np.empty(len(nodes))
     for i, node in enumerate(nodes):
         shared = _shared_covariance(course, i, at, record, levels, belief)
@@ -402,9 +419,10 @@ def log_weights(
 
 
 def _log_normal(error: Floats, s: Floats, censored: Sequence[str | None]) -> Floats:
-    """Log density of the measured errors times the chance of the hidden one; error: shape (levels, points)."""
-    from scipy.special import log_ndtr
+    """Log density of the measured errors times the chance of the hidden ones; error: shape (levels, points).
 
+    s: covariance of the errors.
+    """
     seen = [j for j, c in enumerate(censored) if c is None]
     hidden = [j for j, c in enumerate(censored) if c is not None]
     value = np.zeros(error.shape[1])
@@ -412,15 +430,57 @@ def _log_normal(error: Floats, s: Floats, censored: Sequence[str | None]) -> Flo
         part = s[np.ix_(seen, seen)]
         e = error[seen]
         value = -0.5 * (np.sum(e * np.linalg.solve(part, e), axis=0) + np.linalg.slogdet(2 * math.pi * part)[1])
-    for j in hidden:
-        centre, left = np.zeros(error.shape[1]), s[j, j]
-        if seen:
-            gain = np.linalg.solve(s[np.ix_(seen, seen)], s[np.ix_(seen, [j])])[:, 0]
-            centre = gain @ error[seen]
-            left = s[j, j] - float(s[j, seen] @ gain)
-        sign = 1.0 if censored[j] == "below" else -1.0
-        value = value + log_ndtr(sign * (error[j] - centre) / math.sqrt(left))
-    return value
+    if not hidden:
+        return value
+    centre, left = np.zeros((len(hidden), error.shape[1])), s[np.ix_(hidden, hidden)]
+    if seen:
+        gain = np.linalg.solve(s[np.ix_(seen, seen)], s[np.ix_(seen, hidden)])
+        centre = gain.T @ error[seen]
+        left = left - s[np.ix_(hidden, seen)] @ gain
+    sign = np.array([1.0 if censored[j] == "below" else -1.0 for j in hidden])
+    bound = sign[:, None] * (error[hidden] - centre)
+    return value + log_chance_of_all(bound, left * np.outer(sign, sign))
+
+
+def log_chance_of_all(bound: Floats, cov: Floats) -> Floats:
+    """Log chance that every one of some errors lies under its bound; bound: shape (levels, points).
+
+    The chance of the first, times that of the second given where under its bound the first lies, and so on: an
+    integral over as many places as there are levels but one. Up to four levels it is done by the Gauss-Legendre rule
+    for each, beyond that on a lattice. The level that is hardest to keep under its bound goes first.
+    """
+    from scipy.special import log_ndtr, ndtr, ndtri
+
+    count = len(bound)
+    hardest = np.argsort(np.mean(bound, axis=1) / np.sqrt(np.diag(cov)))
+    bound, cov = bound[hardest], cov[np.ix_(hardest, hardest)]
+    root = np.linalg.cholesky(cov)
+    places, weights = _places(count - 1)
+    logged = np.broadcast_to(np.log(weights)[:, None], (len(weights), bound.shape[1])).copy()
+    before = np.zeros((count, len(weights), bound.shape[1]))
+    for j in range(count):
+        limit = (bound[j] - np.tensordot(root[j, :j], before[:j], 1)) / root[j, j]
+        logged += log_ndtr(limit)
+        if j + 1 < count:
+            before[j] = ndtri(np.clip(places[:, j, None] * ndtr(limit), 1e-300, 1 - 1e-16))
+    top = logged.max(axis=0)
+    return np.asarray(top + np.log(np.sum(np.exp(logged - top), axis=0)))
+
+
+def _places(dimensions: int) -> tuple[Floats, Floats]:
+    """Places in the unit cube and their weights, which sum to one."""
+    if dimensions == 0:
+        return np.zeros((1, 0)), np.ones(1)
+    if dimensions <= 3:
+        x, w = np.polynomial.legendre.leggauss((24, 14, 8)[dimensions - 1])
+        each = np.meshgrid(*[(x + 1) / 2] * dimensions, indexing="ij")
+        weights = np.meshgrid(*[w / 2] * dimensions, indexing="ij")
+        return np.stack([e.ravel() for e in each], axis=1), np.prod([e.ravel() for e in weights], axis=0)
+    # a Korobov lattice, folded so that the edges meet
+    count, step = 251, 76
+    powers = [pow(step, k, count) for k in range(dimensions)]
+    at = (np.outer(np.arange(count), powers) / count + 0.5 / count) % 1.0
+    return 1.0 - np.abs(2.0 * at - 1.0), np.full(count, 1.0 / count)
 
 
 def _shared_covariance(
@@ -536,6 +596,57 @@ def steady_rows(
         )
     )
     return tuple(rows)
+
+
+#: Levels below this are as good as none [mg/L]: no relative difference is looked at there.
+_NEXT_TO_NOTHING = 0.01
+
+
+def projected_rows(
+    words: str,
+    course: Course,
+    nodes: Sequence[Node],
+    *,
+    times_day: Sequence[float],
+    hours: Sequence[float],
+    first_mg_per_L: Floats,
+) -> tuple[Row, ...]:
+    """The hours to come on one way to go on: for every node the moment at which the two ways differ most.
+
+    course: integrated to times_day. first_mg_per_L: shape (nodes, moments).
+    """
+    rows = []
+    at = np.searchsorted(course.times_day, times_day)
+    for i, node in enumerate(nodes):
+        first, second = first_mg_per_L[i], course.amount_mg[i, at] / node.volume_L
+        apart = np.abs(np.log(np.maximum(first, _NEXT_TO_NOTHING) / np.maximum(second, _NEXT_TO_NOTHING)))
+        worst = int(np.argmax(np.where(np.isnan(apart), np.inf, apart)))
+        if max(first[worst], second[worst]) < _NEXT_TO_NOTHING:
+            continue
+        name = f"Level in {show(hours[worst], 'h')}, {words}, at {node.name} (worst of {len(hours)})"
+        rows.append(Row(name, float(first[worst]), float(second[worst]), "mg/L", LEVEL_TOLERANCE))
+    return tuple(rows)
+
+
+def shares_row(words: str, printed: float, values: Floats, weights: Floats) -> Row:
+    """A printed median, judged by the share of the draws up to it, as a plain sum."""
+    below = sum(w for v, w in zip(values.tolist(), weights.tolist(), strict=True) if v <= printed * (1 + 1e-9))
+    total = sum(weights.tolist())
+    # with few draws the median can only be as exact as the weight of one of them
+    allowed = max(MEDIAN_TOLERANCE, 100 * max(weights.tolist()) / total)
+    return Row(f"Draws up to the median of {words}", 50.0, 100 * below / total, "%", allowed, absolute=True)
+
+
+def chance_row(words: str, printed: float, above: float, values: Floats, weights: Floats) -> Row:
+    """A printed chance of a value above a limit, as a plain sum over the draws."""
+    hit = sum(w for v, w in zip(values.tolist(), weights.tolist(), strict=True) if v > above)
+    return Row(f"Chance of {words}", 100 * printed, 100 * hit / sum(weights.tolist()), "%", 0.2, absolute=True)
+
+
+def removed_mg_per_h(level_mg_per_L: float, node: Node, clearance_L_per_day: float) -> float:
+    """What leaves the body in an hour at a level: the saturable path and everything beside it."""
+    saturable = node.vmax_mg_per_day / (node.km_mg_per_L / level_mg_per_L + 1.0)
+    return (saturable + clearance_L_per_day * level_mg_per_L) / 24.0
 
 
 def days_on_the_way(rate_mg_per_day: float, start_mg_per_L: float, node: Node, fraction: float) -> float:
@@ -670,3 +781,34 @@ def text_rows(case: Case, profile: Profile) -> tuple[Row, ...]:
                 "mg/day",
             )
     return tuple(rows)
+
+
+def infusion_rows(case: Case, profile: Profile) -> tuple[Row, ...]:
+    """Single doses and running infusions in labelled mg, read again from the text; mL by the per cent on the label."""
+    rows: list[Row] = []
+    for course in case.courses:
+        file, where = course.typed, f"dose line {course.index + 1}"
+        if course.single is not None:
+            second = _labelled_mg(file.amount, file.product, profile)
+            _add(rows, f"Labelled amount of {where}", course.single.labelled_mg, second, "mg")
+        elif course.rate_mg_per_day is not None:
+            amount, _, per = file.rate.rpartition("/")
+            mg, hours = _labelled_mg(amount, file.product, profile), {"h": 1.0, "min": 1 / 60, "day": 24.0}.get(per)
+            second = None if mg is None or hours is None else mg / hours
+            _add(rows, f"Labelled rate of {where}", course.rate_mg_per_day / 24, second, "mg/h")
+    return tuple(rows)
+
+
+def _labelled_mg(text: str, product_id: str, profile: Profile) -> float | None:
+    match = _TYPED.fullmatch(text)
+    if match is None or match.group(2) != "mL":
+        return again(text, "amount", profile.molar_mass_g_per_mol)
+    product = profile.products.get(product_id)
+    if product is None or product.percent is None:
+        return None
+    # 1 % w/v is 10 mg/mL; 1 % v/v is as many times the density
+    mg_per_mL = (
+        1000 * product.percent * (1.0 if product.strength_basis == "w/v" else profile.density_g_per_mL or math.nan)
+    )
+    mL = again(f"{match.group(1)} mg", "amount", profile.molar_mass_g_per_mol)
+    return None if mL is None else mL * mg_per_mL

@@ -9,16 +9,19 @@ import numpy as np
 from pkcalc import crosscheck, formulas
 from pkcalc import plan as planning
 from pkcalc.case import Case
-from pkcalc.crosscheck import Node, Row
+from pkcalc.crosscheck import Floats, Node, Row
 from pkcalc.drugs.profile import Prior, Profile
 from pkcalc.estimate import intake, posterior
 from pkcalc.estimate import pair as two_level
 from pkcalc.estimate.error_model import LevelData, RecordSpread
 from pkcalc.estimate.pair import SteadyPair
 from pkcalc.estimate.result import Estimate
+from pkcalc.forecast import Goal
 from pkcalc.levels import Observation
+from pkcalc.plan.projection import Projection
 from pkcalc.record import Record
 from pkcalc.site import Site
+from pkcalc.units import show
 
 
 def compare(
@@ -35,9 +38,12 @@ def compare(
     prior: Prior | None,
     spread: RecordSpread,
     plan: planning.Plan | None,
+    projection: Projection | None,
+    goal: Goal | None,
 ) -> tuple[Row, ...]:
     """Every number of the consult that can be calculated a second way, both ways."""
-    rows = [*crosscheck.text_rows(case, profile), *crosscheck.binding_rows(observations, case, profile, site)]
+    rows = [*crosscheck.text_rows(case, profile), *crosscheck.infusion_rows(case, profile)]
+    rows += crosscheck.binding_rows(observations, case, profile, site)
     if pair is not None and pair.method == two_level.METHOD and len(pairs) == 2:
         rows += crosscheck.pair_rows(
             [p.rate_mg_per_day for p in pairs],
@@ -49,6 +55,8 @@ def compare(
         rows += _record_rows(estimate, record, levels, prior, spread)
     if plan is not None:
         rows += _plan_rows(plan)
+    if projection is not None and goal is not None:
+        rows += _projected_rows(projection, goal, 0.0 if prior is None else prior.first_order_per_day)
     return tuple(rows)
 
 
@@ -92,7 +100,7 @@ def _record_rows(
         as_taken, [x.time_day for x in levels], nodes, first_order_per_day=_own_path(record, prior)
     )
     rows = list(crosscheck.level_rows(at, course, nodes, levels))
-    if sum(x.censored is not None for x in levels) <= 1 and not isinstance(spread.doses_differing, tuple):
+    if not isinstance(spread.doses_differing, tuple):
         mean, cov = posterior.prior_moments(prior)
         belief = crosscheck.Belief(missed, intake.HABIT, spread.wrong_level_chance, spread.wrong_level_factor)
         written = posterior.written_out(as_taken)
@@ -151,3 +159,58 @@ def _plan_rows(plan: planning.Plan) -> list[Row]:
             )
         )
     return rows
+
+
+def _projected_rows(projection: Projection, goal: Goal, first_order_per_day: float) -> list[Row]:
+    """Every way to go on: levels to come at three draws, median and chance at the end; and the rates for the aim."""
+    rows: list[Row] = []
+    draws = projection.draws
+    volume, weights = draws.volume_L, draws.weights
+    assert volume is not None
+    for path in projection.paths:
+        f = path.followed
+        picked = _draws_at(f.levels_mg_per_L[:, -1], weights)
+        nodes = [
+            Node(name, float(draws.vmax_mg_per_day[i]), float(draws.km_mg_per_L[i]), float(volume[i]))
+            for name, i in picked
+        ]
+        course = crosscheck.integrate(f.record, f.times_day, nodes, start_mg_per_L=f.start_mg_per_L)
+        rows += crosscheck.projected_rows(
+            path.words,
+            course,
+            nodes,
+            times_day=f.times_day,
+            hours=[m.hours for m in path.moments],
+            first_mg_per_L=f.levels_mg_per_L[[i for _, i in picked]],
+        )
+        last, ends = path.moments[-1], f.levels_mg_per_L[:, -1]
+        where = f"the level in {show(last.hours, 'h')}, {path.words}"
+        if last.level.median > 0:
+            rows.append(crosscheck.shares_row(where, last.level.median, ends, weights))
+        words = f"a level above {show(goal.critical_mg_per_L, 'mg/L')} in {show(last.hours, 'h')}, {path.words}"
+        rows.append(crosscheck.chance_row(words, last.above_critical, goal.critical_mg_per_L, ends, weights))
+    for held in projection.holds:
+        removed = np.array(
+            [
+                crosscheck.removed_mg_per_h(
+                    goal.aim_mg_per_L, Node("", vmax, km, v), first_order_per_day * v + held.clearance_L_per_day
+                )
+                for vmax, km, v in zip(
+                    draws.vmax_mg_per_day.tolist(), draws.km_mg_per_L.tolist(), volume.tolist(), strict=True
+                )
+            ]
+        )
+        words = f"the rate that holds {show(goal.aim_mg_per_L, 'mg/L')} {held.words}"
+        rows.append(crosscheck.shares_row(words, held.mg.median, removed, weights))
+    return rows
+
+
+def _draws_at(values: Floats, weights: Floats) -> list[tuple[str, int]]:
+    """The draws at the 5 %, 50 % and 95 % points of something."""
+    order = np.argsort(values, kind="stable")
+    running = np.cumsum(weights[order]) / float(weights.sum())
+    found = []
+    for share in (0.05, 0.5, 0.95):
+        i = int(order[min(int(np.searchsorted(running, share)), len(order) - 1)])
+        found.append((f"the {100 * share:.0f} % draw", i))
+    return found

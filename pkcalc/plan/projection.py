@@ -53,6 +53,20 @@ class Moment:
 
 
 @dataclass(frozen=True)
+class Followed:
+    """What was followed to the moments of a path, draw by draw: for the second way, never printed.
+
+    record: with its parallel paths. start_mg_per_L: the measured level at its start; None where the record says what
+    was in the body. levels_mg_per_L: shape (draws, moments).
+    """
+
+    record: Record
+    start_mg_per_L: float | None
+    times_day: tuple[float, ...]
+    levels_mg_per_L: Floats
+
+
+@dataclass(frozen=True)
 class Path:
     """One way to go on.
 
@@ -70,15 +84,20 @@ class Path:
     no_steady_state: float
     climb_mg_per_L_per_h: float | None
     leaves: Moment | None
+    followed: Followed
 
 
 @dataclass(frozen=True)
 class Amount:
-    """An amount or a rate of active drug with its 90 % interval (mg, or mg/h), and of each product [mL or mL/h]."""
+    """An amount or a rate of active drug with its 90 % interval (mg, or mg/h), and of each product [mL or mL/h].
+
+    clearance_L_per_day: of the dialysis that a rate is for; 0 without.
+    """
 
     words: str
     mg: Band
     mL: tuple[tuple[Product, float], ...]
+    clearance_L_per_day: float = 0.0
 
 
 @dataclass(frozen=True)
@@ -89,6 +108,7 @@ class Projection:
     the level to the aim, None where it is not below the target or no dose may be offered. guideline_mg: published
     load for this weight. holds: rates that hold the aim, without and with dialysis; empty where no dose may be
     offered. next_level_h: when to draw next, with the reasons. choose: what must be chosen before mL can be told.
+    draws: the draws that were followed.
     """
 
     moment: datetime
@@ -102,6 +122,7 @@ class Projection:
     next_level_at: datetime
     next_why: tuple[str, ...]
     choose: str
+    draws: Estimate
 
 
 def project(
@@ -137,7 +158,7 @@ def project(
     walk = _Walk(case, profile, few, first_order_per_day, latest, moment)
     volume, k = few.volume_L, first_order_per_day
     assert volume is not None
-    now_draws = walk.levels(given_record(case, profile, moment), [0.0])[:, 0]
+    now_draws = walk.follow(given_record(case, profile, moment), [0.0]).levels_mg_per_L[:, 0]
     now = band(now_draws, few.weights)
 
     paths = [_path(_now_words(case, profile, moment), True, _running(case, profile, moment), walk, end, hours, goal, k)]
@@ -169,6 +190,7 @@ def project(
         next_level_at=moment + timedelta(hours=after),
         next_why=tuple(why),
         choose=choose if may_dose else "",
+        draws=few,
     )
 
 
@@ -196,7 +218,7 @@ class _Walk:
             self.start_day, self.start_mg_per_L = case.day(latest.level.drawn), latest.working_mg_per_L
             self.words = f"from {latest.name}, with the population's elimination since"
 
-    def levels(self, record: Record, hours: Sequence[float]) -> Floats:
+    def follow(self, record: Record, hours: Sequence[float]) -> Followed:
         """Level [mg/L] at each time from now, per draw."""
         assert self.few.volume_L is not None
         record = with_population_path(record, self.k)
@@ -207,14 +229,16 @@ class _Walk:
             record = replace(record, doses=kept, start_day=cut, before=None, start_mg=0.0)
             start = self.start_mg_per_L
         base = max(self.case.day(self.moment), record.start_day)
-        return flow.levels(
+        times = tuple(base + h / 24 for h in hours)
+        levels = flow.levels(
             record,
-            [base + h / 24 for h in hours],
+            times,
             self.few.vmax_mg_per_day,
             self.few.km_mg_per_L,
             self.few.volume_L,
             start_mg_per_L=start,
         )
+        return Followed(record, start, times, levels)
 
 
 def _after(dose: Dose, day: float) -> Dose:
@@ -244,7 +268,8 @@ def _path(
     else:
         rate = going_on
         record = given_record(case, profile, end)
-    levels = walk.levels(record, hours)
+    followed = walk.follow(record, hours)
+    levels = followed.levels_mg_per_L
     moments = tuple(
         Moment(
             hours=h,
@@ -279,6 +304,7 @@ def _path(
         no_steady_state=_share(np.isinf(steady), few),
         climb_mg_per_L_per_h=climb,
         leaves=next((m for m in moments if m.below + m.above > LEFT), None),
+        followed=followed,
     )
 
 
@@ -414,7 +440,8 @@ def _holds(
                 linear_clearance_L_per_day=first_order_per_day * volume + clearance,
             )
         )
-        found.append(_amount(words, band(rates / 24, few.weights), products))
+        held = _amount(words, band(rates / 24, few.weights), products)
+        found.append(replace(held, clearance_L_per_day=clearance))
     return tuple(found)
 
 

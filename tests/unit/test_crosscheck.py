@@ -12,12 +12,14 @@ from typing import Any
 import numpy as np
 import pytest
 
+from pkcalc import case as case_module
 from pkcalc import crosscheck, dosing, flow, forecast, formulas, units
 from pkcalc.case import check_case, parse_case_text
 from pkcalc.consult import Consult, run_consult
 from pkcalc.crosscheck import Node, Row
 from pkcalc.demos import demonstration, demonstrations
 from pkcalc.estimate import posterior
+from pkcalc.plan import projection
 from pkcalc.record import Absorption, Dose, FirstOrder, Record, Repeated
 from tests.unit.cases import PLAIN
 
@@ -479,3 +481,75 @@ def test_a_few_random_good_cases_are_not_stopped() -> None:
 @pytest.mark.slow
 def test_a_thousand_random_good_cases_are_not_stopped() -> None:
     check_many(1000, 2)
+
+
+# --- the hours to come ---------------------------------------------------------------------------------------
+
+
+def unmeasured(name: str) -> dict[str, Any]:
+    """A demonstration without its levels: nothing but the projection is calculated."""
+    data: dict[str, Any] = json.loads(demonstration(name).file.model_dump_json(by_alias=True, exclude_defaults=True))
+    return {**data, "levels": []}
+
+
+@pytest.mark.parametrize("name", ["theophylline-projection", "ethanol-dialysis", "voriconazole-teaching"])
+def test_the_hours_to_come_are_checked_where_nothing_else_is(name: str) -> None:
+    """Every way to go on has its levels at three draws, its median and its chance; the mL too are read again."""
+    consult = consult_of(unmeasured(name))
+    assert consult.projection is not None
+    rows = [r.quantity for r in consult.second_way]
+    for path in consult.projection.paths:
+        assert len([q for q in rows if q.startswith("Level in") and f", {path.words}, at the" in q]) == 3
+        assert len([q for q in rows if q.startswith("Draws up to") and q.endswith(path.words)]) == 1
+        assert len([q for q in rows if q.startswith("Chance of") and q.endswith(path.words)]) == 1
+    held = [q for q in rows if q.startswith("Draws up to the median of the rate that holds")]
+    assert len(held) == len(consult.projection.holds)
+    labelled = [q for q in rows if q.startswith("Labelled")]
+    assert len(labelled) == sum(c.regimen is None for c in consult.case.courses)
+    assert disagreeing(consult) == []
+
+
+@pytest.mark.parametrize("name", ["theophylline-projection", "ethanol-dialysis"])
+def test_a_broken_engine_stops_the_hours_to_come(name: str, monkeypatch: pytest.MonkeyPatch) -> None:
+    monkeypatch.setattr(flow, "amounts", scaled(flow.amounts, 1.03))
+    consult = consult_of(unmeasured(name))
+    assert disagreeing(consult)
+    assert all(q.startswith("Level in") for q in disagreeing(consult))
+    assert_no_number(consult)
+    assert consult.projection is None
+
+
+def test_dialysis_left_out_of_the_engine_is_noticed(monkeypatch: pytest.MonkeyPatch) -> None:
+    right = flow.levels
+
+    def without(record: Record, *given: Any, **named: Any) -> Any:
+        return right(replace(record, first_order=()), *given, **named)
+
+    monkeypatch.setattr(projection.flow, "levels", without)
+    consult = consult_of(unmeasured("ethanol-dialysis"))
+    assert disagreeing(consult)
+    assert_no_number(consult)
+
+
+@pytest.mark.parametrize(
+    ("where", "name", "factor", "demo", "row"),
+    [
+        (projection, "bands", None, "theophylline-projection", "Draws up to the median of the level in"),
+        (projection, "_share", 0.5, "voriconazole-teaching", "Chance of a level above 5.5 mg/L in"),
+        (formulas, "dose_rate_for_level", 1.02, "ethanol-dialysis", "Draws up to the median of the rate that holds"),
+        (case_module, "_in_mL", 100 / 78.9, "ethanol-dialysis", "Labelled "),
+    ],
+)
+def test_each_row_of_the_hours_to_come_notices_its_own_fault(
+    where: Any, name: str, factor: float | None, demo: str, row: str, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    """The last one is 10 % w/v taken for v/v."""
+    right = getattr(where, name)
+
+    def shifted(values: Any, weights: Any) -> Any:
+        return tuple(replace(b, median=1.05 * b.median) for b in right(values, weights))
+
+    monkeypatch.setattr(where, name, shifted if factor is None else scaled(right, factor))
+    consult = consult_of(unmeasured(demo))
+    assert [q for q in disagreeing(consult) if q.startswith(row)]
+    assert_no_number(consult)
