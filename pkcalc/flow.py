@@ -22,7 +22,7 @@ from numpy.typing import ArrayLike, NDArray
 
 from pkcalc import formulas
 from pkcalc.errors import CaseError, Problem
-from pkcalc.periodic import PeriodicState, periodic
+from pkcalc.periodic import PeriodicState, build_up, periodic
 from pkcalc.record import (
     SAME_MOMENT_DAY,
     Absorption,
@@ -58,6 +58,9 @@ __all__ = [
 
 Positions = NDArray[np.intp]
 
+#: Steps of one record to one set of times, kept by whoever asks for them again: by speed and fineness.
+Plans = dict[tuple[float, float], Plan]
+
 #: A draw starts from its plateau when the rest of the way left after the time on the earlier regimen is
 #: below this.
 UNSETTLED = {"everyday": 1e-3, "fine": 1e-5, "finest": 1e-7}
@@ -74,6 +77,7 @@ def amounts(
     start_mg: ArrayLike | None = None,
     typical_per_day: float | None = None,
     absorption_factor: ArrayLike = 1.0,
+    plans: Plans | None = None,
 ) -> Floats:
     """Amount in the body [mg] at each time, for every draw; shape (draws, times).
 
@@ -83,8 +87,9 @@ def amounts(
     (everyday), 4e-5 (fine), 2e-7 (finest). typical_per_day: 99 % point of Vmax/kappa, which sets the steps;
     of the draws themselves unless given (nodes of a grid are not equally likely). absorption_factor: per
     draw, by what the absorption rates of all forms are multiplied; draws with the same factor share a pass,
-    so give a few distinct values. Raises CaseError for times before the start and parameters that are not
-    positive.
+    so give a few distinct values. plans: an empty dict to begin with, filled and used again by calls with the
+    same record, times and accuracy and no absorption_factor. Raises CaseError for times before the start and
+    parameters that are not positive.
     """
     times = _times(record, times_day)
     vmax, kappa = _parameters(vmax_mg_per_day, kappa_mg)
@@ -97,7 +102,8 @@ def amounts(
         part = [rate[some] for rate in rates]
         given = None if start_mg is None else np.broadcast_to(np.asarray(start_mg, dtype=np.float64), vmax.shape)[some]
         start = _start(scaled, vmax[some], kappa[some], part, accuracy, given, typical_per_day)
-        out[some] = _walk(scaled, times, vmax[some], kappa[some], part, start, accuracy, typical_per_day)
+        kept = plans if one == 1.0 else None
+        out[some] = _walk(scaled, times, vmax[some], kappa[some], part, start, accuracy, typical_per_day, kept)
     return out
 
 
@@ -326,11 +332,12 @@ def _walk(
     start: Floats,
     accuracy: Accuracy,
     typical_per_day: float | None,
+    plans: Plans | None = None,
 ) -> Floats:
     out = np.empty((len(vmax), len(times)))
     for speed in speeds(_fastest(vmax, kappa, rates), typical_per_day):
         out[speed.positions] = _run_class(
-            record, times, vmax, kappa, rates, start, speed.positions, speed, speed.fineness(accuracy)
+            record, times, vmax, kappa, rates, start, speed.positions, speed, speed.fineness(accuracy), plans
         )
     return out
 
@@ -345,9 +352,15 @@ def _run_class(
     positions: Positions,
     speed: Speed,
     fineness: float,
+    plans: Plans | None = None,
 ) -> Floats:
     """Amounts of draws that share one plan, block by block so that memory does not grow with the draws."""
-    plan = _plan(record, speed, fineness, times)
+    key = (speed.fastest_per_day, fineness)
+    plan = plans.get(key) if plans is not None else None
+    if plan is None:
+        plan = _plan(record, speed, fineness, times)
+        if plans is not None:
+            plans[key] = plan
     out = np.empty((len(positions), len(times)))
     for begin in range(0, len(positions), BLOCK):
         some = positions[begin : begin + BLOCK]
@@ -436,23 +449,34 @@ def _start(
             typical_per_day=typical_per_day,
         ).start_mg
     if not settled.all():
-        rest = ~settled
         cycles = _cycles_before(record.before)
-        build_up = Record(
-            doses=regimen.cycles(-cycles, 0, 0.0),
-            start_day=-cycles * regimen.cycle_day,
-            first_order=(FirstOrder(rate_per_day=0.0),),
-        )
-        start[rest] = _walk(
-            build_up,
-            (0.0,),
+        rest = np.flatnonzero(~settled)
+        start[rest] = build_up(
+            regimen,
+            cycles,
             vmax[rest],
             kappa[rest],
-            (always[rest],),
-            np.zeros(int(rest.sum())),
-            accuracy,
-            typical_per_day,
-        )[:, 0]
+            first_order_per_day=always[rest],
+            accuracy=accuracy,
+            typical_per_day=typical_per_day,
+        )
+        rest = rest[np.isnan(start[rest])]
+        if rest.size:
+            every_cycle = Record(
+                doses=regimen.cycles(-cycles, 0, 0.0),
+                start_day=-cycles * regimen.cycle_day,
+                first_order=(FirstOrder(rate_per_day=0.0),),
+            )
+            start[rest] = _walk(
+                every_cycle,
+                (0.0,),
+                vmax[rest],
+                kappa[rest],
+                (always[rest],),
+                np.zeros(len(rest)),
+                accuracy,
+                typical_per_day,
+            )[:, 0]
     return start
 
 

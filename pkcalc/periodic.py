@@ -7,13 +7,15 @@ map of one cycle is increasing and convex, so Newton's method from below rises t
 
 from __future__ import annotations
 
+from collections.abc import Mapping
 from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import ArrayLike
 
+from pkcalc import formulas
 from pkcalc.record import FirstOrder, Repeated
-from pkcalc.stepping import BLOCK, Accuracy, Block, Floats, Plan, Speed, Step, march, plan_steps, speeds
+from pkcalc.stepping import BLOCK, Accuracy, Block, Floats, Plan, Speed, Step, march, plan_steps, run, speeds
 
 #: Newton's steps allowed; at most 7 are needed for R/Vmax < 0.99 (more with a first-order path, from a
 #: lower start).
@@ -119,6 +121,98 @@ def periodic(
     )
 
 
+#: Points of the state at which the map of one cycle is calculated, and the error of what lies between them
+#: that is let pass, as a share of the amount (else the cycles are followed one by one).
+MAP_POINTS: Mapping[Accuracy, int] = {"everyday": 9, "fine": 13, "finest": 19}
+MAP_ERROR: Mapping[Accuracy, float] = {"everyday": 1e-4, "fine": 2e-6, "finest": 1e-8}
+
+
+def build_up(
+    regimen: Repeated,
+    cycles: int,
+    vmax_mg_per_day: Floats,
+    kappa_mg: Floats,
+    *,
+    first_order_per_day: Floats,
+    accuracy: Accuracy,
+    typical_per_day: float | None = None,
+) -> Floats:
+    """Amount [mg] after a number of cycles that began with nothing in the body, shape (draws,).
+
+    The first cycles are followed step by step, until the gut repeats itself. From then on one map leads from
+    cycle to cycle; it is smooth in the state x, so it is calculated at a few points of s = x/(kappa + x)
+    (Chebyshev's) and interpolated. nan where the interpolation is not certain enough: those draws have to be
+    followed. vmax_mg_per_day, kappa_mg, first_order_per_day: shape (draws,).
+    """
+    found = np.full(vmax_mg_per_day.shape, np.nan)
+    first = min(cycles, regimen.cycles_still_absorbed())
+    for speed in speeds(vmax_mg_per_day / kappa_mg + first_order_per_day, typical_per_day):
+        begin_plan = plan_steps(
+            regimen.cycles(0, first, 0.0),
+            start_day=0.0,
+            times_day=(first * regimen.cycle_day,),
+            fastest_per_day=speed.fastest_per_day,
+            fineness=speed.fineness(accuracy),
+            stiff=speed.stiff,
+            first_order=(FirstOrder(rate_per_day=0.0),),
+        )
+        map_plan = cycle_plan(regimen, speed, accuracy)
+        for begin in range(0, len(speed.positions), BLOCK):
+            some = speed.positions[begin : begin + BLOCK]
+            vmax, kappa, k = vmax_mg_per_day[some], kappa_mg[some], first_order_per_day[some]
+            rates = (k if k.any() else 0.0,)
+            start = run(begin_plan, vmax, kappa, np.zeros(len(some)), rates)[:, 0]
+            if cycles > first:
+                start = _repeat(regimen, map_plan, cycles - first, vmax, kappa, k, start, accuracy)
+            found[some] = start
+    return found
+
+
+def _repeat(
+    regimen: Repeated, plan: Plan, times: int, vmax: Floats, kappa: Floats, k: Floats, start: Floats, accuracy: Accuracy
+) -> Floats:
+    """The amount after the cycle's map was applied a number of times; nan where it cannot be trusted."""
+    n, points = len(vmax), MAP_POINTS[accuracy]
+    steady = formulas.steady_state_level(
+        dose_rate_mg_per_day=regimen.rate_mg_per_day,
+        vmax_mg_per_day=vmax,
+        km_mg_per_L=kappa,
+        linear_clearance_L_per_day=k,
+    )
+    # a build-up from nothing passes neither its steady level by more than a cycle's drug nor what was given
+    per_cycle = regimen.rate_mg_per_day * regimen.cycle_day
+    most = np.minimum(steady + per_cycle, start + times * per_cycle)
+    low, high = start / (kappa + start), most / (kappa + most)
+    middle, half = 0.5 * (low + high), np.maximum(0.5 * (high - low), 1e-12)
+    angle = np.pi * (np.arange(points) + 0.5) / points
+    s = middle[:, None] + half[:, None] * np.cos(angle)
+    at = kappa[:, None] * s / (1.0 - s)
+    # points by points so that few draws still fill a block
+    each = np.empty(points * n)
+    of, states = np.tile(np.arange(n), points), at.T.ravel()
+    for begin in range(0, points * n, BLOCK):
+        some = of[begin : begin + BLOCK]
+        now = states[begin : begin + BLOCK]
+        each[begin : begin + BLOCK] = _cycle_end(plan, vmax[some], kappa[some], k[some], now) - now
+    gained = each.reshape(points, n).T
+    order = np.arange(points)
+    series = 2.0 / points * gained @ np.cos(np.outer(angle, order))
+    series[:, 0] *= 0.5
+    # what the last terms leave open in every cycle dies away like a difference in the amount, slowest at the top
+    fading = -np.expm1(-regimen.cycle_day * (vmax * kappa / (kappa + most) ** 2 + k))
+    error = (np.abs(series[:, -1]) + np.abs(series[:, -2])) * np.minimum(times, 1.0 / np.maximum(fading, 1e-12))
+    columns = [np.ascontiguousarray(c) for c in series.T]
+    x = start.copy()
+    for _ in range(times):
+        z = (x / (kappa + x) - middle) / half
+        z2 = 2.0 * z
+        after, now = np.zeros(n), columns[-1]
+        for c in columns[-2:0:-1]:
+            after, now = now, c + z2 * now - after
+        x = x + columns[0] + z * now - after
+    return np.where(error <= MAP_ERROR[accuracy] * x, x, np.nan)
+
+
 def _plateau_start(regimen: Repeated, plan: Plan, vmax: Floats, kappa: Floats, k: Floats) -> tuple[Floats, int]:
     """Amount at the beginning of the cycle [mg], and the Newton steps of the slowest draw."""
     dose, tau = regimen.rate_mg_per_day * regimen.cycle_day, regimen.cycle_day
@@ -152,6 +246,14 @@ def _mean_excess(plan: Plan, regimen: Repeated) -> float:
         area += step.h * (arrived + (4.0 * step.half + step.full) / 6.0)
         arrived += step.full
     return area / regimen.cycle_day - 0.5 * regimen.rate_mg_per_day * regimen.cycle_day
+
+
+def _cycle_end(plan: Plan, vmax: Floats, kappa: Floats, k: Floats, start: Floats) -> Floats:
+    """Amount one cycle later."""
+    end = start
+    for _, _, block in march(plan, vmax, kappa, start, (k if k.any() else 0.0,)):
+        end = block.w
+    return end * vmax
 
 
 def _cycle_map(plan: Plan, vmax: Floats, kappa: Floats, k: Floats, start: Floats) -> tuple[Floats, Floats]:

@@ -32,7 +32,7 @@ Accuracy = Literal["everyday", "fine", "finest"]
 AT_ONCE_DAY = 1e-6
 
 #: Draws per block: every array of a block then stays in the processor's second-level cache.
-BLOCK = 2048
+BLOCK = 4096
 
 
 class Step(NamedTuple):
@@ -62,16 +62,23 @@ class Plan:
 class _Stream:
     """Drug on its way by one route into one set of windows: an infusion (ka None), or a gut amount."""
 
-    __slots__ = ("gut", "ka", "rate", "running", "since", "windows")
+    __slots__ = ("dose", "gut", "ka", "rate", "running", "since", "windows")
 
     def __init__(self, ka: float | None, windows: tuple[int, ...]) -> None:
         self.ka, self.windows = ka, windows
         self.running, self.rate, self.gut, self.since = 0, 0.0, 0.0, -math.inf
+        self.dose = 0.0
 
     def change(self, rate: float, count: int) -> None:
         self.running += count
         # the last one to stop leaves exactly nothing behind, whatever the rounding of the sum
         self.rate = self.rate + rate if self.running else 0.0
+
+    def fading(self) -> float:
+        """Share of the last dose by which the gut still differs from its balance: what makes the input bend."""
+        assert self.ka is not None
+        off = abs(self.rate / self.ka - self.gut) if self.running else self.gut
+        return min(off / self.dose, 1.0) if self.dose else 1.0
 
     def deliver(self, h: float) -> tuple[float, float]:
         """Amounts reaching the blood in the first half and the whole of the next h days; moves the gut on."""
@@ -112,15 +119,17 @@ def plan_steps(
 ) -> Plan:
     """Cut a record into steps, the same for all draws.
 
-    A step is at most 0.25 / fastest_per_day and (0.5 / ka) e^(0.2 ka (time since the last dose)), both
-    divided by fineness, and ends at every change of input and every asked-for time. Where the input rate is
+    A step is at most 0.25 / fastest_per_day and (0.5 / ka) (b max(1, ka / (2 fastest_per_day)))^(1/5), both
+    divided by fineness, and ends at every change of input and every asked-for time. 1/b is the share of the
+    last dose by which the gut still differs from its balance: what a bend of the input costs in one step, of
+    the order of fastest h (ka h)^4 / b, is then the same everywhere. Where the input rate is
     constant and `exact` is allowed, the whole piece is one step. Of doses before the start only the rest
     counts. stiff: every step is taken by the closed form at its mean input rate, whatever the draw's speed. A
     fast draw follows the input of the moment, so the steps shrink towards the end of every piece; earlier
     ones are forgotten.
     """
     last = max([start_day, *times_day]) if end_day is None else end_day
-    events: dict[float, list[tuple[str, _Stream, float]]] = defaultdict(list)
+    events: dict[float, list[tuple[str, _Stream, float, float]]] = defaultdict(list)
     streams: dict[tuple[float | None, tuple[int, ...]], _Stream] = {}
     pushes: dict[float, list[tuple[float, tuple[int, ...]]]] = defaultdict(list)
     marks = {start_day, last, *times_day}
@@ -149,18 +158,18 @@ def plan_steps(
             amount = dose.amount_mg
             if begin < start_day:
                 amount *= math.exp(-stream.ka * (start_day - begin)) if stream.ka else 1.0
-            events[max(begin, start_day)].append(("gut", stream, amount))
+            events[max(begin, start_day)].append(("gut", stream, amount, dose.amount_mg))
         else:
             rate, end = dose.amount_mg / spread, begin + spread
             if begin < start_day and stream.ka:
                 shown = min(start_day - begin, spread)
                 rest = -rate * math.expm1(-stream.ka * shown) / stream.ka
                 rest *= math.exp(-stream.ka * max(start_day - end, 0.0))
-                events[start_day].append(("gut", stream, rest))
+                events[start_day].append(("gut", stream, rest, dose.amount_mg))
             if end > start_day:
-                events[max(begin, start_day)].append(("begin", stream, rate))
+                events[max(begin, start_day)].append(("begin", stream, rate, dose.amount_mg))
                 if end < last:
-                    events[end].append(("end", stream, -rate))
+                    events[end].append(("end", stream, -rate, dose.amount_mg))
     marks.update(events)
 
     moments = sorted(t for t in marks if start_day <= t <= last)
@@ -170,7 +179,7 @@ def plan_steps(
         if not points or moment - points[-1] > SAME_MOMENT_DAY:
             points.append(moment)
         same[moment] = points[-1]
-    at: dict[float, list[tuple[str, _Stream, float]]] = defaultdict(list)
+    at: dict[float, list[tuple[str, _Stream, float, float]]] = defaultdict(list)
     for moment, listed in events.items():
         at[same[moment]] += listed
     pushed: dict[float, list[tuple[float, tuple[int, ...]]]] = defaultdict(list)
@@ -191,7 +200,8 @@ def plan_steps(
     for index, begin in enumerate(points):
         if begin in asked:
             reached[len(steps)] = tuple(asked[begin])
-        for what, stream, amount in at.get(begin, ()):
+        for what, stream, amount, dose_mg in at.get(begin, ()):
+            stream.dose = dose_mg + (stream.dose if stream.since == begin else 0.0)
             stream.since = begin
             if what == "gut":
                 stream.gut += amount
@@ -221,8 +231,8 @@ def plan_steps(
                 limit = math.inf if stiff else longest
                 for s in absorbing:
                     assert s.ka is not None
-                    growth = math.exp(min(0.2 * s.ka * (moment - s.since), 30.0))
-                    limit = min(limit, 0.5 / (s.ka * fineness) * growth)
+                    gentle = max(1.0, 0.5 * s.ka / fastest_per_day) / max(s.fading(), 1e-30)
+                    limit = min(limit, 0.5 / (s.ka * fineness) * gentle**0.2)
                     if stiff and left > 1e-3 / (s.ka * fineness):
                         limit = min(limit, 0.5 * left)
                 pieces = math.ceil(left / limit * (1 - 1e-9))

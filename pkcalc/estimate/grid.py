@@ -1,15 +1,17 @@
 """A posterior of (log Vmax, log kappa) on a grid, with the log volume as a mixture of normals at every node.
 
 A coarse grid over the prior finds where the mass is; a second one, laid in the whitened frame of that mass,
-carries the answer. Summaries come from the nodes without sampling; equal-weight draws come from the nodes'
-conditional distributions along a Sobol sequence, so the same input gives the same bits.
+carries the answer. What changes slowly over a grid (the course of the amount) is calculated on fewer nodes and
+interpolated; what changes fast (the density) at every node. Summaries come from the nodes without sampling;
+equal-weight draws come from the nodes' conditional distributions along a Sobol sequence, so the same input
+gives the same bits.
 """
 
 from __future__ import annotations
 
 import math
 from collections.abc import Callable, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
@@ -65,8 +67,8 @@ class Nodes:
     cov: Floats
 
 
-#: Evaluates nodes given (log Vmax, log kappa) and a mask of those worth it; the others get no density.
-Density = Callable[[Floats, Floats, NDArray[np.bool_]], Nodes]
+#: Evaluates the n x n nodes of an axis (used along both) in a frame, z1 along rows, flattened.
+Density = Callable[[Frame, Floats], Nodes]
 
 
 @dataclass(frozen=True)
@@ -120,11 +122,33 @@ class Quadrature:
 def lay(frame: Frame, *, reach: float, n: int, density: Density) -> Quadrature:
     """A grid of n x n nodes on +-reach in a frame; its corners, a disc's worth away, are left out."""
     axis = np.linspace(-reach, reach, n)
+    a, k = square(frame, axis)
+    radius = np.hypot(*np.meshgrid(axis, axis, indexing="ij"))
+    nodes = density(frame, axis)
+    log_density = np.where(radius <= CORNER * reach, nodes.log_density.reshape(n, n), NOWHERE)
+    nodes = replace(nodes, log_density=log_density.ravel())
+    return Quadrature(frame, axis, a.reshape(n, n), k.reshape(n, n), log_density, radius, nodes)
+
+
+def square(frame: Frame, axis: Floats) -> tuple[Floats, Floats]:
+    """log Vmax and log kappa of the nodes of an axis used along both, flattened, z1 along rows."""
     z1, z2 = np.meshgrid(axis, axis, indexing="ij")
     a, k = frame.points(z1, z2)
-    radius = np.hypot(z1, z2)
-    nodes = density(a.ravel(), k.ravel(), (radius <= CORNER * reach).ravel())
-    return Quadrature(frame, axis, a, k, nodes.log_density.reshape(n, n), radius, nodes)
+    return a.ravel(), k.ravel()
+
+
+def refine(coarse: Floats, fine: Floats, values: Floats) -> Floats:
+    """Values at the nodes of a coarse axis (used along both) at those of a finer one, by cubic splines.
+
+    coarse: (c,); fine: (n,), within the coarse one's ends; values: (c * c, ...). Returns (n * n, ...).
+    """
+    from scipy.interpolate import CubicSpline
+
+    c, n, rest = len(coarse), len(fine), values.shape[1:]
+    along = CubicSpline(coarse, np.eye(c), axis=0)(fine)
+    rows = (along @ values.reshape(c, -1)).reshape(n, c, -1)
+    found: Floats = (along @ rows).reshape(n * n, *rest)
+    return found
 
 
 def scout(frame: Frame, density: Density, *, reach: float = 4.5, n: int = 36, tries: int = 8) -> Frame:

@@ -12,7 +12,7 @@ from __future__ import annotations
 
 import math
 from collections.abc import Mapping, Sequence
-from dataclasses import dataclass, replace
+from dataclasses import dataclass, field, replace
 
 import numpy as np
 from numpy.typing import NDArray
@@ -21,7 +21,6 @@ from pkcalc import flow
 from pkcalc.drugs.profile import Prior
 from pkcalc.errors import CannotEstimate, CaseError, Problem
 from pkcalc.estimate.error_model import (
-    CENSORED_POINTS,
     Components,
     LevelData,
     RecordSpread,
@@ -39,9 +38,11 @@ from pkcalc.estimate.grid import (
     draw,
     lay,
     mixture_quantiles,
+    refine,
     scout,
     settle,
     sobol,
+    square,
     vmax_marginal,
 )
 from pkcalc.estimate.intake import IntakePlan, intake_gain, plan_intake, taken_on_average
@@ -56,7 +57,9 @@ BEFORE_ANY_LEVEL = "before any level"
 
 #: Grids tried in turn: nodes per axis of the answer, and of its certificate.
 SIZES = ((48, 38), (72, 57), (108, 86), (160, 128))
-CERTIFICATE_REACH = 6.3
+
+#: Reach of the certificate's grid as a share of the answer's.
+CERTIFICATE_REACH = 0.875
 
 #: The certificate: largest relative difference of a 5, 50 or 95 % point, and absolute one of the chance of no
 #: steady state.
@@ -73,6 +76,9 @@ EXACTEST_LEVEL_SD = 0.003
 #: The engine steps at a quarter over this share of the 99 % point of Vmax / kappa: half a time constant for
 #: the fastest per cent of what is possible (errors of 1e-3), a fifth for the rest (1e-5).
 STEPS = 0.5
+
+#: As `STEPS`, while scouting: there the mass has only to be found.
+SCOUT_STEPS = 0.25
 
 #: How much of an earlier regimen is written out dose by dose, so that its last weeks may differ from the
 #: record.
@@ -163,6 +169,15 @@ class _Volume:
 #: A node whose prior cannot be made up for by any levels, this far under the best one, is left out.
 _HOPELESS = 16.0
 
+#: Nodes per axis at which courses are calculated, as a share of the nodes at which the density is: of an answer
+#: and its certificate (each with a table of its own, so that the second also certifies the interpolation of the
+#: first), and of a scouting grid.
+_TABLE_SHARE, _SCOUT_SHARE = 0.6, 0.6
+
+#: The fastest nodes are extrapolated from what the steps allow, along log kappa from a second point this far
+#: from the first; only where they carry more than this share of the mass are they followed themselves.
+_TWIN, _FAST_MASS = 0.2, 1e-3
+
 
 @dataclass(frozen=True)
 class _Model:
@@ -174,6 +189,7 @@ class _Model:
     intake: IntakePlan
     volume: _Volume
     typical_per_day: float
+    plans: flow.Plans = field(default_factory=dict)
 
     @property
     def own(self) -> Floats:
@@ -192,6 +208,7 @@ class _Model:
             kappa,
             volume_L=volume,
             typical_per_day=self.typical_per_day,
+            plans=self.plans,
         )
         amount = course[:, self.intake.level_at]
         if not np.all(amount > 0):
@@ -226,55 +243,107 @@ class _Model:
         found: Floats = log_amount - observed - log_volume[:, None]
         return found
 
-    def density(self, a: Floats, k: Floats, worth: NDArray[np.bool_], scouting: bool = False) -> Nodes:
-        """Log posterior density of the nodes (not normalised), their mixtures and courses.
+    def tables(self, frame: Frame, axes: Sequence[Floats], scouting: bool = False) -> list[_Table]:
+        """The courses at the nodes of some coarse axes of a frame, calculated in one pass.
 
-        The fastest nodes would cost many steps: they are first slowed down to what the steps allow, and followed
-        as they are only where neither their prior nor that first look leaves them hopeless.
+        The fastest nodes would cost many steps for next to no mass: their log amounts are extrapolated from
+        what the steps allow (at the plateau, where nearly all of that mass lies, they are linear in log kappa).
         """
+        points = [square(frame, axis) for axis in axes]
+        a, k = (np.concatenate([p[i] for p in points]) for i in (0, 1))
+        slowed = self.slowed(a, k)
+        twin = np.zeros(len(a), dtype=np.bool_) if scouting else slowed > k
+        amount, gain = self.courses(np.concatenate([a, a[twin]]), np.concatenate([slowed, slowed[twin] + _TWIN]))
+        beside = amount[len(a) :]
+        amount, shared = amount[: len(a)], covariance(np.zeros(len(self.levels)), gain[: len(a)], self.intake.variance)
+        amount[twin] += (beside - amount[twin]) * ((k - slowed)[twin] / _TWIN)[:, None]
+        ends = np.cumsum([0, *(len(axis) ** 2 for axis in axes)])
+        return [_Table(axis, amount[u:v], shared[u:v]) for axis, u, v in zip(axes, ends[:-1], ends[1:], strict=True)]
+
+    def slowed(self, a: Floats, k: Floats) -> Floats:
+        """log kappa, raised to what the engine takes in its first class of steps."""
+        found: Floats = np.maximum(k, a - math.log(4 * self.typical_per_day))
+        return found
+
+    def nodes(self, frame: Frame, axis: Floats, table: _Table, scouting: bool = False) -> Nodes:
+        """Density, mixture and course at every node of an axis, the course interpolated from a table.
+
+        Where the extrapolated fastest nodes do carry mass, they are followed themselves.
+        """
+        a, k = square(frame, axis)
+        found = self.weigh(a, k, refine(table.axis, axis, table.log_amount), refine(table.axis, axis, table.shared))
+        fast = self.slowed(a, k) > k
+        if scouting or not fast.any():
+            return found
+        best = float(np.max(found.log_density))
+        mass = np.exp(found.log_density - best)
+        if np.sum(mass[fast]) <= _FAST_MASS * np.sum(mass):
+            return found
+        u, v = square(frame, table.axis)
+        measured = [x.own_variance for x in self.levels if x.censored is None]
+        most = -0.5 * sum(math.log(2 * math.pi * x) for x in measured)
+        some = (self.slowed(u, v) > v) & (self.volume.log_density(u, v) + most > best - _HOPELESS)
+        if not some.any():
+            return found
+        amount, shared = table.log_amount.copy(), table.shared.copy()
+        amount[some], gain = self.courses(u[some], v[some])
+        shared[some] = covariance(np.zeros(len(self.levels)), gain, self.intake.variance)
+        return self.weigh(a, k, refine(table.axis, axis, amount), refine(table.axis, axis, shared))
+
+    def weigh(self, a: Floats, k: Floats, log_amount: Floats, shared: Floats) -> Nodes:
+        """Log posterior density of points (not normalised) with their mixtures, given the course there."""
         m = len(self.levels)
+        diagonal = np.arange(m)
+        # an interpolated covariance is kept one
+        shared[:, diagonal, diagonal] = np.maximum(shared[:, diagonal, diagonal], 0.0)
+        sd = np.sqrt(shared[:, diagonal, diagonal])
+        bound = sd[:, :, None] * sd[:, None, :]
+        cov = np.clip(shared, -bound, bound)
+        cov[:, diagonal, diagonal] += self.own
         prior = self.volume.log_density(a, k)
-        log_amount, cov = np.zeros((len(a), m)), np.broadcast_to(np.eye(m), (len(a), m, m)).copy()
-        log_density = np.full(len(a), NOWHERE)
-        count = (m + 1 if self.spread.wrong_level_chance > 0 else 1) * (
-            CENSORED_POINTS if any(x.censored for x in self.levels) else 1
-        )
-        parts = Components(
-            np.full((len(a), count), NOWHERE),
-            np.zeros((len(a), count)),
-            np.full((len(a), count), self.volume.variance),
-        )
-        measured = [v for v, x in zip(self.own, self.levels, strict=True) if x.censored is None]
-        most = -0.5 * sum(math.log(2 * math.pi * v) for v in measured)
-        # the engine takes this much in its first class of steps
-        slowed = np.maximum(k, a - math.log(4 * self.typical_per_day))
-
-        def follow(some: NDArray[np.bool_], kappa: Floats) -> None:
-            if not some.any():
-                return
-            x, gain = self.courses(a[some], kappa[some])
-            s = covariance(self.own, gain, self.intake.variance)
-            found = self.parts(self.residual(x, self.volume.log_volume(a[some], k[some])), s, range(m))
-            log_amount[some], cov[some] = x, s
-            parts.log_weight[some], parts.mean[some], parts.variance[some] = (
-                np.maximum(found.log_weight, NOWHERE),
-                found.mean,
-                found.variance,
-            )
-            log_density[some] = np.maximum(prior[some] + found.log_total, NOWHERE)
-
+        found = self.parts(self.residual(log_amount, self.volume.log_volume(a, k)), cov, range(m))
+        parts = Components(np.maximum(found.log_weight, NOWHERE), found.mean, found.variance)
         # ten standard deviations off in the population: nothing a level says can lead there
-        worth = worth & (prior > self.volume.log_density(*self.volume.centre[:, None])[0] - 50.0)
-        follow(worth, slowed)
-        best = float(np.max(log_density))
-        hopeless = (prior + most < best - _HOPELESS) | (log_density < best - 2 * _HOPELESS)
-        if not scouting:
-            follow(worth & (slowed > k) & ~hopeless, k)
+        possible = prior > self.volume.log_density(*self.volume.centre[:, None])[0] - 50.0
+        log_density = np.where(possible, np.maximum(prior + found.log_total, NOWHERE), NOWHERE)
         return Nodes(log_density, parts, log_amount, cov)
 
-    def scouting(self, a: Floats, k: Floats, worth: NDArray[np.bool_]) -> Nodes:
-        """As `density`, with the fastest nodes left slowed down: they only have to be found empty."""
-        return self.density(a, k, worth, scouting=True)
+    def scouting(self, frame: Frame, axis: Floats) -> Nodes:
+        """The density with coarser courses, the fastest nodes left slowed down: they only have to be found
+        empty."""
+        coarse = np.linspace(axis[0], axis[-1], math.ceil(_SCOUT_SHARE * len(axis)))
+        return self.nodes(frame, axis, self.tables(frame, [coarse], scouting=True)[0], scouting=True)
+
+
+@dataclass(frozen=True)
+class _Table:
+    """Courses at the nodes of a coarse axis: log amounts (c * c, m) and what intake adds to their covariance
+    (c * c, m, m)."""
+
+    axis: Floats
+    log_amount: Floats
+    shared: Floats
+
+
+class _Twofold:
+    """The density on the grid of the answer and on that of its certificate: two tables, one pass through the
+    record."""
+
+    def __init__(self, model: _Model, check: int) -> None:
+        self.model, self.check = model, check
+        self.kept: _Table | None = None
+
+    def answer(self, frame: Frame, axis: Floats) -> Nodes:
+        coarse = np.linspace(axis[0], axis[-1], math.ceil(_TABLE_SHARE * len(axis)))
+        reach = CERTIFICATE_REACH * axis[-1]
+        other = np.linspace(-reach, reach, math.ceil(_TABLE_SHARE * self.check))
+        table, self.kept = self.model.tables(frame, [coarse, other])
+        return self.model.nodes(frame, axis, table)
+
+    def certificate(self, frame: Frame, axis: Floats) -> Nodes:
+        """Of the frame that the last answer was laid in."""
+        assert self.kept is not None
+        return self.model.nodes(frame, axis, self.kept)
 
 
 def written_out(record: Record) -> Record:
@@ -307,14 +376,14 @@ def _model(record: Record, levels: Sequence[LevelData], prior: Prior, spread: Re
     full = with_population_path(taken_on_average(written_out(record), spread), prior.first_order_per_day)
     intake = plan_intake(full, [x.time_day for x in levels], spread)
     volume = _Volume.of(prior)
-    typical = _typical_per_day(volume.centre, volume.cov)
+    typical = _typical_per_day(volume.centre, volume.cov, SCOUT_STEPS)
     return _Model(full, tuple(levels), spread, intake, volume, typical)
 
 
-def _typical_per_day(mean: Floats, cov: Floats) -> float:
+def _typical_per_day(mean: Floats, cov: Floats, share: float) -> float:
     """What sets the engine's steps: a share of the 99 % point of Vmax / kappa, from moments of the logs."""
     drift = np.array([1.0, -1.0])
-    return STEPS * math.exp(float(drift @ mean) + 2.326 * math.sqrt(float(drift @ cov @ drift)))
+    return share * math.exp(float(drift @ mean) + 2.326 * math.sqrt(float(drift @ cov @ drift)))
 
 
 def _check(record: Record, levels: Sequence[LevelData]) -> None:
@@ -428,7 +497,7 @@ def _certified(model: _Model, prior: Prior, rates: Sequence[float]) -> tuple[Qua
     """The smallest grid whose answer a second, shifted grid repeats; the largest one, distrusted, if none
     does."""
     frame = scout(Frame.of(model.volume.centre, model.volume.cov), model.scouting)
-    model = replace(model, typical_per_day=_typical_per_day(frame.mean, frame.root @ frame.root.T))
+    model = replace(model, typical_per_day=_typical_per_day(frame.mean, frame.root @ frame.root.T, STEPS), plans={})
     smallest = math.sqrt(min(x.own_variance for x in model.levels))
     wide = (
         prior.vmax_log_sd > WIDEST_LOG_SD["vmax"]
@@ -437,14 +506,15 @@ def _certified(model: _Model, prior: Prior, rates: Sequence[float]) -> tuple[Qua
         or smallest < SMALLEST_LEVEL_SD
     )
     for n, check in SIZES[1:] if wide else SIZES:
-        q = settle(frame, model.density, n=n)
+        both = _Twofold(model, check)
+        q = settle(frame, both.answer, n=n)
         if np.max(q.log_density) <= 0.5 * NOWHERE or q.effective_nodes < FEWEST_NODES:
             contradiction = True
             frame = q.frame
             continue
         contradiction = False
         report = _report(model, q, rates)
-        second = lay(q.frame, reach=CERTIFICATE_REACH * q.axis[-1] / 7.2, n=check, density=model.density)
+        second = lay(q.frame, reach=CERTIFICATE_REACH * q.axis[-1], n=check, density=both.certificate)
         other = _report(model, second, rates)
         difference = max(
             abs(x / y - 1)
@@ -560,7 +630,8 @@ def at_points(
     """
     model = _model(record, levels, prior, spread)
     a, k = np.log(vmax_mg_per_day), np.log(km_mg_per_L) + np.log(volume_L)
-    found = model.density(a, k, np.ones(len(a), dtype=np.bool_))
+    log_amount, gain = model.courses(a, k)
+    found = model.weigh(a, k, log_amount, covariance(np.zeros(len(levels)), gain, model.intake.variance))
     return np.exp(found.log_amount) / volume_L[:, None], found.log_density
 
 

@@ -339,7 +339,7 @@ def test_plateau_near_vmax_joins_the_limit_formula_smoothly() -> None:
         assert math.isclose(values[0], values[1], rel_tol=3e-6)
     # and single doses agree with the limit of the closed form: Xss - D [1/(1 - e^(-ka tau)) - 1/(ka tau) - 1/2]
     one = Repeated(1.0, (Dose(0.0, 300.0, absorption=Absorption(10.0)),))
-    close = flow.periodic(one, 300.0 * (1 + 1e-5), kappa)
+    close = flow.periodic(one, 300.0 * (1 + 1e-5), kappa, accuracy="fine")
     steady = 300.0 * kappa / (300.0 * 1e-5)
     below = 300.0 * (1 / -math.expm1(-10.0) - 1 / 10.0 - 0.5)
     assert steady - close.start_mg[0] == pytest.approx(below, rel=1e-4)

@@ -31,7 +31,7 @@ def test_steps_cover_the_record_and_stop_at_every_asked_time() -> None:
 
 
 def test_step_rule() -> None:
-    """At most 0.25 over the fastest rate, and after a dose (0.5/ka) e^(0.2 ka (time since it))."""
+    """At most 0.25 over the fastest rate, and after a dose (0.5/ka) (e^(ka time since it) ka / (2 fastest))^(1/5)."""
     slow, fast = Absorption(4.0), Absorption(48.0)
     for fineness in (1.0, 4.0):
         cut = plan((Dose(0.0, 100.0, absorption=slow), Dose(0.5, 100.0, absorption=fast)), (1.0,), fineness=fineness)
@@ -39,7 +39,7 @@ def test_step_rule() -> None:
             begin = end - step.h
             allowed = 0.25 / 7.0
             if 0.5 <= begin < 0.5 + 37 / 48:
-                allowed = min(allowed, 0.5 / 48.0 * math.exp(0.2 * 48.0 * (begin - 0.5)))
+                allowed = min(allowed, 0.5 / 48.0 * (math.exp(48.0 * (begin - 0.5)) * 48.0 / 14.0) ** 0.2)
             assert step.h <= allowed / fineness * (1 + 1e-6)
 
 

@@ -284,11 +284,12 @@ def test_quantiles_of_a_mixture() -> None:
 
 def test_draws_of_a_normal_density_have_its_moments() -> None:
     from pkcalc.estimate.error_model import Components
-    from pkcalc.estimate.grid import Nodes
+    from pkcalc.estimate.grid import Nodes, square
 
     mean, cov = np.array([6.0, 5.0]), np.array([[0.04, 0.05], [0.05, 0.2]])
 
-    def density(a, k, worth):
+    def density(frame, axis):
+        a, k = square(frame, axis)
         off = np.stack([a, k]) - mean[:, None]
         value = -0.5 * np.sum(off * np.linalg.solve(cov, off), axis=0)
         one = np.zeros((len(a), 1))
