@@ -319,6 +319,11 @@ def show(value: float, label: str, digits: int = 3) -> str:
     return f"{text} {label}" if label else text
 
 
+def show_up_to(value: float, label: str, most: float) -> str:
+    """The same, and 'above 60 mg/L' for a value beyond the most that is told in numbers."""
+    return f"above {show(most, label)}" if value > most else show(value, label)
+
+
 def percent(share: float) -> str:
     """A chance in words that never read as impossible or certain."""
     if share <= 0:

@@ -5,7 +5,7 @@ from __future__ import annotations
 import base64
 from collections.abc import Callable, Sequence
 from html import escape
-from math import isfinite
+from math import inf, isfinite
 
 import streamlit as st
 from pkcalc_form import look
@@ -31,6 +31,7 @@ from pkcalc.note.words import (
     mark_of,
     regimen_words,
     short_band,
+    told_up_to,
 )
 from pkcalc.note.workings import workings
 from pkcalc.units import percent, show, show_number
@@ -317,7 +318,7 @@ def acute(consult: Consult) -> None:
                 look.lines(list(part.lines))
             else:
                 look.table(part.table.heads, list(part.table.rows), label=part.title)
-    plan = consult.plan
+    plan, most = consult.plan, told_up_to(consult)
     if plan is None:
         return
     for load in plan.loads:
@@ -328,8 +329,8 @@ def acute(consult: Consult) -> None:
             [
                 *load.order,
                 f"Level after it {level_words(load.after, most)}; {show(load.draw_after_h, 'h')} later "
-                f"{level_words(load.at_draw, most)}. Chance above the range {percent(load.above_high)}, above the critical "
-                f"level {percent(load.above_critical)}.",
+                f"{level_words(load.at_draw, most)}. Chance above the range {percent(load.above_high)}, above the "
+                f"critical level {percent(load.above_critical)}.",
                 *load.notes,
                 *load.why_not,
             ]
@@ -343,7 +344,7 @@ def acute(consult: Consult) -> None:
             [
                 pause.risk,
                 pause.restart_line,
-                f"Level today {level_words(pause.now, math.inf)}; give again at {back}. Without any "
+                f"Level today {level_words(pause.now, inf)}; give again at {back}. Without any "
                 f"dose that takes {days_words(pause.days)}.",
                 *pause.lines,
                 *(

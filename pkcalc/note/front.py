@@ -147,8 +147,9 @@ def verdict(consult: Consult) -> tuple[str, ...]:
             lines.append("Nobody can tell whether it is a steady level.")
     if consult.chosen is not None and not consult.stopped:
         vmax, km = consult.chosen.summary["vmax_mg_per_day"], consult.chosen.summary["km_mg_per_L"]
+        km_words = level_words(km, math.inf)
         lines.append(
-            f"By {consult.chosen.method}: Vmax {hours.vmax_words(consult, vmax)} of active drug, Km {level_words(km, math.inf)}."
+            f"By {consult.chosen.method}: Vmax {hours.vmax_words(consult, vmax)} of active drug, Km {km_words}."
         )
     return tuple(lines)
 

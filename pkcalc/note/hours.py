@@ -9,7 +9,17 @@ from pkcalc.clock import show_time
 from pkcalc.consult import Consult
 from pkcalc.estimate.result import Band
 from pkcalc.formulas import molar_level
-from pkcalc.note.words import NO_STEADY_STATE, Section, Table, edge, sentence, short_band
+from pkcalc.note.words import (
+    NO_STEADY_STATE,
+    Section,
+    Table,
+    edge,
+    level_band,
+    level_edge,
+    level_words,
+    sentence,
+    told_up_to,
+)
 from pkcalc.plan.projection import Amount, Path, Projection
 from pkcalc.units import FACTORS, MOLAR, percent, show, show_number
 
@@ -27,7 +37,7 @@ def level_in_words(consult: Consult, band: Band) -> str:
     """'1,070 mg/L (90 % interval 947 to 1,200), that is 107 mg/dL' where the laboratory reports in another unit."""
     if not math.isfinite(band.median):
         return NO_STEADY_STATE
-    text = f"{show(band.median, 'mg/L')} (90 % interval {edge(band.low)} to {edge(band.high)})"
+    text = level_words(band, math.inf)
     unit = laboratory_unit(consult)
     if unit == "mg/L":
         return text
@@ -82,7 +92,7 @@ def front_lines(consult: Consult, found: Projection) -> tuple[str, ...]:
 
 def _path_lines(consult: Consult, path: Path) -> list[str]:
     steps = path.moments[:FRONT_STEPS]
-    course = "; ".join(f"in {show(m.hours, 'h')} {short_band(m.level)}" for m in steps)
+    course = "; ".join(f"in {show(m.hours, 'h')} {level_band(m.level, told_up_to(consult))}" for m in steps)
     head = path.words[:1].upper() + path.words[1:]
     lines = [f"{head}: {course} mg/L."]
     leaves = path.leaves
@@ -98,7 +108,8 @@ def next_lines(consult: Consult, found: Projection) -> tuple[str, ...]:
     due = next((m for m in path.moments if m.hours >= found.next_level_h), path.moments[-1])
     when = f"At {show_time(found.next_level_at)} ({show(found.next_level_h, 'h')} from now)"
     if due.level.high > 0:
-        expected = f"{edge(due.level.low)} to {show(due.level.high, 'mg/L')}"
+        most = told_up_to(consult)
+        expected = f"{level_edge(due.level.low, most)} to {level_edge(due.level.high, most)} mg/L"
         when += f"; outside {expected} means another course than forecast: call"
     lines = [f"{when}."]
     usual = consult.profile.sampling.repeat_h
@@ -117,9 +128,8 @@ def paste_lines(consult: Consult, found: Projection) -> tuple[str, ...]:
     lines = [f"Level now: {level_in_words(consult, found.now)}."]
     for path in found.paths[:3]:
         first = path.moments[0]
-        lines.append(
-            f"{path.words[:1].upper()}{path.words[1:]}: in {show(first.hours, 'h')} {short_band(first.level)} mg/L."
-        )
+        level = level_band(first.level, told_up_to(consult))
+        lines.append(f"{path.words[:1].upper()}{path.words[1:]}: in {show(first.hours, 'h')} {level} mg/L.")
     for h in found.holds:
         volumes = "".join(f" = {show(v, 'mL/h')} of {p.words}" for p, v in h.mL[:2])
         lines.append(
@@ -144,7 +154,7 @@ def sections(consult: Consult) -> list[Section]:
             (
                 show_number(m.hours),
                 show_time(m.at),
-                short_band(m.level),
+                level_band(m.level, told_up_to(consult)),
                 percent(m.below),
                 percent(m.within),
                 percent(m.above),
@@ -154,7 +164,8 @@ def sections(consult: Consult) -> list[Section]:
         )
         lines = [f"{show(path.rate_mg_per_day / 24, 'mg/h')} of active drug on average."]
         if path.rate_mg_per_day > 0:
-            settled = short_band(path.steady) + (" mg/L" if math.isfinite(path.steady.median) else "")
+            unit = " mg/L" if math.isfinite(path.steady.median) else ""
+            settled = level_band(path.steady, told_up_to(consult)) + unit
             lines.append(
                 f"Without dialysis it would settle at {settled}; chance of no steady state "
                 f"{percent(path.no_steady_state)}."

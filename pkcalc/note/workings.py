@@ -18,7 +18,7 @@ from pkcalc.dosing import Intake
 from pkcalc.estimate.pair import METHOD as TWO_LEVELS
 from pkcalc.forecast import Forecast
 from pkcalc.note.front import spoken_for
-from pkcalc.note.words import same_lines
+from pkcalc.note.words import level_edge, same_lines, told_up_to
 from pkcalc.units import show, show_number
 
 Line = Literal["central", "every dose taken"]
@@ -351,14 +351,15 @@ def _representative(consult: Consult, line: Line, vmax: Number, km: Number) -> l
             continue
         level = printed(km.value * r.value / (vmax.value - r.value), "mg/L", 3)
         f = _line(s, line)
-        median = show(f.steady.median, "mg/L") if np.isfinite(f.steady.median) else "no steady state"
+        printed_as = level_edge(f.steady.median, told_up_to(consult))
+        unit = " mg/L" if np.isfinite(f.steady.median) else ""
         steps.append(
             Step(
                 name,
                 "Css = Km x R / (Vmax - R)",
                 f"{km} x {r} / ({vmax} - {r})",
                 level,
-                f"median printed: {median}",
+                f"median printed: {printed_as}{unit}",
             )
         )
         if consult.scale.total_factor != 1.0:

@@ -51,7 +51,7 @@ from pkcalc.plan.shelf import (
     shelf_in_use,
 )
 from pkcalc.site import DAYS, Site
-from pkcalc.units import percent, show
+from pkcalc.units import percent, show, show_up_to
 
 __all__ = [
     "Candidate",
@@ -371,7 +371,8 @@ def _lines(setting: Setting, shelf: ShelfInUse, share: float, taken_words: str) 
     if setting.step is not None:
         s = setting.step
         level = s.forecast.steady.median
-        to = f"{show(level, 'mg/L')}" if level != float("inf") else "no steady state"
+        told = setting.profile.target.most_told(setting.goal.critical_mg_per_L)
+        to = show_up_to(level, "mg/L", told) if level != float("inf") else "no steady state"
         lines.append(
             f"Largest step: {show(s.step_mg_per_day, 'mg/day')} of active drug ({s.words}), an upper bound, not "
             f"advice. In this patient it would lead to {to} (median, every dose taken), with a chance of "

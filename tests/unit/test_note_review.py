@@ -251,7 +251,7 @@ def test_each_chance_of_too_high_names_its_time() -> None:
     present = consult.plan.present if consult.plan is not None else None
     assert present is not None
     assert present.danger > present.taken.above_critical
-    row = dict(zip(DANGER_HEADS, danger_row(present), strict=True))
+    row = dict(zip(DANGER_HEADS, danger_row(present, consult), strict=True))
     settled = row["Above critical or no steady state, once settled"]
     draw = row["With the next feasible draw counted in"]
     assert settled != draw
