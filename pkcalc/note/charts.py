@@ -26,7 +26,7 @@ from pkcalc.dosing import active_mg
 from pkcalc.estimate.intake import taken_on_average
 from pkcalc.estimate.posterior import WHOLE_RECORD, with_population_path, written_out
 from pkcalc.forecast import fewer_draws
-from pkcalc.note.words import NOT_OFFERED, mark_of, short_words
+from pkcalc.note.words import NOT_OFFERED, level_edge, mark_of, short_words, told_up_to
 from pkcalc.units import percent, show, show_number
 
 Floats = NDArray[np.float64]
@@ -521,8 +521,9 @@ def regimens_chart(consult: Consult, shown: Sequence[Shown]) -> Chart | None:
             )
         t = s.taken
         said.append(
-            f"{name}: {show_number(s.forecast.steady.low)} to "
-            + (show(s.forecast.steady.high, "mg/L") if np.isfinite(s.forecast.steady.high) else "no steady state")
+            f"{name}: {level_edge(s.forecast.steady.low, told)} to "
+            + level_edge(s.forecast.steady.high, told)
+            + (" mg/L" if np.isfinite(s.forecast.steady.high) else "")
             + f", no steady state {percent(t.no_steady_state)}"
         )
     wrapped = {n: "|".join(textwrap.wrap(n, 44)) for n in order}
@@ -586,6 +587,7 @@ def regimens_chart(consult: Consult, shown: Sequence[Shown]) -> Chart | None:
         + "."
     )
     return finish(
+    told = told_up_to(consult)
         "regimens",
         "Regimens against the target, with the chance of no steady state",
         text,
