@@ -499,6 +499,7 @@ def regimens_chart(consult: Consult, shown: Sequence[Shown]) -> Chart | None:
     rows: list[dict[str, Any]] = []
     order: list[str] = []
     said: list[str] = []
+    told = told_up_to(consult)
     for s in unique.values():
         mark = mark_of(s).replace("not offered", NOT_OFFERED)
         name = f"{mark + ': ' if mark else ''}{short_words(s.words)}"
@@ -587,7 +588,6 @@ def regimens_chart(consult: Consult, shown: Sequence[Shown]) -> Chart | None:
         + "."
     )
     return finish(
-    told = told_up_to(consult)
         "regimens",
         "Regimens against the target, with the chance of no steady state",
         text,
