@@ -28,6 +28,9 @@ Levels. Each row is one reported level:
 Cells are parted by commas or by semicolons, whichever the first row uses; never by both. Numbers have a
 decimal point in either case. UTF-8 only. A cell that starts with = + - or @ is refused: a spreadsheet would run
 it as a formula.
+
+Rows of doses copied straight out of a spreadsheet (`pasted_doses`) are read in the same way, with tabs between the
+cells, and may go without column names where they hold single doses: time, amount and, where there is a third, form.
 """
 
 from __future__ import annotations
@@ -37,17 +40,18 @@ import difflib
 import io
 import json
 import re
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
 
-from pkcalc.case import CaseFile, check_case, parse_case_text
+from pkcalc.case import CaseFile, DoseFile, check_case, parse_case_text
 from pkcalc.errors import CaseError, Problem
 
 MAX_BYTES = 2_000_000
 MAX_ROWS = 5_000
 MAX_CELL = 200
+PASTED = "Pasted doses"
 
 DOSE_COLUMNS = (
     "form",
@@ -66,6 +70,7 @@ DOSE_COLUMNS = (
     "given_by",
 )
 LEVEL_COLUMNS = ("value", "unit", "kind", "drawn", "normalised_by", "albumin", "albumin_taken", "sample")
+SINGLE_COLUMNS = ("at", "amount", "form")
 NEEDED = {"doses": ("form",), "levels": ("value", "kind", "drawn")}
 
 WORDS = {
@@ -118,8 +123,54 @@ def from_pair(doses: bytes, levels: bytes, *, drug: str, patient: Mapping[str, s
         file = parse_case_text(json.dumps(data))
         check_case(file)
     except CaseError as error:
-        raise CaseError(_with_row(p, dose_rows, level_rows) for p in error.problems) from None
+        rows_of = {
+            "Dose line": ("CSV file of doses", [row.number for row in dose_rows]),
+            "Level": ("CSV file of levels", [row.number for row in level_rows]),
+        }
+        raise CaseError(_with_row(p, rows_of) for p in error.problems) from None
     return file
+
+
+@dataclass(frozen=True)
+class Pasted:
+    """Dose lines read from pasted rows, each with the row it came from, and everything that is wrong."""
+
+    doses: tuple[DoseFile, ...] = ()
+    rows: tuple[int, ...] = ()
+    problems: tuple[Problem, ...] = ()
+
+    def placed(self, problem: Problem, before: int) -> Problem:
+        """A problem of a case in which these lines stand after `before` others, with its pasted row."""
+        return _with_row(problem, {"Dose line": (PASTED, (0,) * before + self.rows)})
+
+
+def pasted_doses(text: str, *, form: str = "", most: int = MAX_ROWS) -> Pasted:
+    """Rows copied out of a spreadsheet -> dose lines.
+
+    The first row names the columns, in any order and in capitals or not. Where it holds a figure there are no names,
+    and the columns are time, amount and, where there is a third, form. form: for the rows that name none.
+    """
+    text = text.replace("\r\n", "\n").strip("\n")
+    first = text.split("\n", 1)[0]
+    mark = next((m for m in "\t;," if m in first), "\t")
+    problems: list[Problem] = []
+    header: list[str] | None = None
+    if any(c.isdigit() for c in first):
+        header = list(SINGLE_COLUMNS[: 3 if first.count(mark) > 1 else 2])
+    else:
+        names = mark.join(c.strip().casefold().replace(" ", "_") for c in first.split(mark))
+        text = names + text[len(first) :]
+    rows = _table(text, PASTED, mark, DOSE_COLUMNS, () if form else NEEDED["doses"], problems, header)
+    if len(rows) > most:
+        problems.append(Problem(PASTED, f"{len(rows):,} rows were given", f"at most {most:,}", "Paste fewer rows"))
+    if problems:
+        return Pasted(problems=tuple(problems))
+    data = {"pkcalc_case": 1, "drug": "", "doses": [{"form": form} | _dose(row) for row in rows]}
+    found = Pasted(rows=tuple(row.number for row in rows))
+    try:
+        return Pasted(parse_case_text(json.dumps(data)).doses, found.rows)
+    except CaseError as error:
+        return Pasted(problems=tuple(found.placed(p, 0) for p in error.problems))
 
 
 def _bytes(path: str | Path) -> bytes:
@@ -156,6 +207,12 @@ def _rows(data: bytes, name: str, columns: tuple[str, ...], problems: list[Probl
     text = _text(data, where, problems)
     if text is None:
         return []
+    mark = _mark(text, where, problems)
+    return _table(text, where, mark, columns, NEEDED[name], problems) if mark else []
+
+
+def _mark(text: str, where: str, problems: list[Problem]) -> str:
+    """What parts the cells of a file; "" where that is not clear, which goes to problems."""
     first = text.split("\n", 1)[0]
     marks = [m for m in ",;" if m in first]
     if len(marks) != 1 or "\t" in first:
@@ -168,20 +225,32 @@ def _rows(data: bytes, name: str, columns: tuple[str, ...], problems: list[Probl
                 "Export it as CSV, with the column names in the first row",
             )
         )
-        return []
-    reader = csv.reader(io.StringIO(text, newline=""), delimiter=marks[0], strict=True)
+        return ""
+    return marks[0]
+
+
+def _table(
+    text: str,
+    where: str,
+    mark: str,
+    columns: tuple[str, ...],
+    needed: tuple[str, ...],
+    problems: list[Problem],
+    header: list[str] | None = None,
+) -> list[_Row]:
+    """Column names, unless they are given as header, and the rows; what is wrong with them goes to problems."""
+    reader = csv.reader(io.StringIO(text, newline=""), delimiter=mark, strict=True)
     found_rows: list[_Row] = []
-    header: list[str] = []
     started = 1
     try:
         for cells in reader:
             number, started = started, reader.line_num + 1
-            if not header:
+            if header is None:
                 header = [c.strip() for c in cells]
-                if not _header(header, where, name, columns, problems):
+                if not _header(header, where, columns, needed, problems):
                     return []
             elif any(c.strip() for c in cells):
-                row = _row(cells, header, f"{where}, row {number}", number, problems)
+                row = _row(cells, header, f"{where}, row {number}", number, needed, problems)
                 if row is not None:
                     found_rows.append(row)
             if len(found_rows) > MAX_ROWS or len(problems) > MAX_ROWS:
@@ -242,7 +311,9 @@ def _text(data: bytes, where: str, problems: list[Problem]) -> str | None:
     return text.replace("\r\n", "\n")
 
 
-def _header(header: list[str], where: str, name: str, columns: tuple[str, ...], problems: list[Problem]) -> bool:
+def _header(
+    header: list[str], where: str, columns: tuple[str, ...], needed: tuple[str, ...], problems: list[Problem]
+) -> bool:
     before = len(problems)
     for column in dict.fromkeys(header):
         if column not in columns:
@@ -259,7 +330,7 @@ def _header(header: list[str], where: str, name: str, columns: tuple[str, ...], 
             problems.append(
                 Problem(f"{where}, row 1", f'the column "{column}" stands twice', "each column once", "Remove one")
             )
-    for column in NEEDED[name]:
+    for column in needed:
         if column not in header:
             problems.append(
                 Problem(f"{where}, row 1", f'the column "{column}" is missing', "it must be there", "Add it")
@@ -267,14 +338,16 @@ def _header(header: list[str], where: str, name: str, columns: tuple[str, ...], 
     return len(problems) == before
 
 
-def _row(cells: list[str], header: list[str], where: str, number: int, problems: list[Problem]) -> _Row | None:
+def _row(
+    cells: list[str], header: list[str], where: str, number: int, needed: tuple[str, ...], problems: list[Problem]
+) -> _Row | None:
     before = len(problems)
     if len(cells) != len(header):
         problems.append(
             Problem(
                 where,
-                f"it has {len(cells)} cells",
-                f"{len(header)}, as the row of column names has",
+                f"it has {len(cells)} cell{'s' if len(cells) != 1 else ''}",
+                f"{len(header)}, as the first row has",
                 "Put a cell that holds a comma or semicolon in quotation marks",
             )
         )
@@ -305,7 +378,7 @@ def _row(cells: list[str], header: list[str], where: str, number: int, problems:
             problems.append(
                 Problem(place, f'"{_clip(text)}" was given', ", ".join(WORDS[column]), "Choose one of them")
             )
-        elif not text and column in NEEDED["doses" if "form" in header else "levels"]:
+        elif not text and column in needed:
             problems.append(Problem(place, "nothing was given", "a value", "Fill it in"))
         elif text:
             found[column] = text
@@ -338,19 +411,20 @@ def _level(row: _Row) -> dict[str, Any]:
     return data
 
 
-def _with_row(problem: Problem, doses: list[_Row], levels: list[_Row]) -> Problem:
-    """The problem of a dose line or a level, with the row of the file it came from."""
+def _with_row(problem: Problem, rows_of: Mapping[str, tuple[str, Sequence[int]]]) -> Problem:
+    """The problem of a dose line or a level, with the row it came from (0: it came from none).
+
+    rows_of: by kind of line, where its rows stand and the row of each.
+    """
     match = re.match(r"(Dose line|Level) (\d+)(.*)", problem.where, re.DOTALL)
-    if match is None:
+    if match is None or match.group(1) not in rows_of:
         return problem
-    kind, number, rest = match.groups()
-    name, rows = ("doses", doses) if kind == "Dose line" else ("levels", levels)
-    return Problem(
-        f"CSV file of {name}, row {rows[int(number) - 1].number}{rest}",
-        problem.given,
-        problem.allowed,
-        problem.fix,
-    )
+    name, rows = rows_of[match.group(1)]
+    line = int(match.group(2))
+    row = rows[line - 1] if line <= len(rows) else 0
+    if not row:
+        return problem
+    return Problem(f"{name}, row {row}{match.group(3)}", problem.given, problem.allowed, problem.fix)
 
 
-__all__ = ["DOSE_COLUMNS", "LEVEL_COLUMNS", "from_pair", "load_pair"]
+__all__ = ["DOSE_COLUMNS", "LEVEL_COLUMNS", "Pasted", "from_pair", "load_pair", "pasted_doses"]

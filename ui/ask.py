@@ -11,43 +11,21 @@ from pkcalc_form import entry as fields
 from pkcalc_form import look
 from pkcalc_form.entry import Entry, text
 
-from pkcalc.case import QUESTIONS, Case
+from pkcalc.case import Case
 from pkcalc.clock import show_time
 from pkcalc.drugs.profile import Product, Profile, drug_names, load_profile
+from pkcalc.drugs.questions import GROUPS, Question, common_questions
 from pkcalc.errors import Problem
+from pkcalc.spreadsheet import DOSE_COLUMNS
 from pkcalc.units import show
 
 ANSWERS = ("yes", "no", "unknown")
-FIRST = ("seizing_now", "overdose", "seizures_since_change", "toxic_signs", "recent_load")
-GROUPS: tuple[tuple[str, tuple[str, ...]], ...] = (
-    (
-        "What can make a total level mislead",
-        (
-            "renal_failure",
-            "valproate",
-            "pregnancy",
-            "renal_reduced",
-            "hepatic_failure",
-            "critical_illness",
-            "delivery",
-        ),
-    ),
-    (
-        "What changes how the drug gets in or out",
-        (
-            "adherence_doubtful",
-            "interacting_change",
-            "tube_feed",
-            "tube_feed_change",
-            "form_change",
-            "im_route",
-            "extracorporeal",
-            "temperature_management",
-        ),
-    ),
-    ("Before a start or a load", ("new_start", "heart_block", "cyp2c9_reduced", "hla_b1502")),
-)
-WITH_DETAIL = ("interacting_change", "tube_feed_change", "form_change", "recent_load", "delivery")
+#: Titles of the groups in which the questions are asked; those of the first group stand before everything else.
+TITLES = {
+    "reading": "What can make a total level mislead",
+    "course": "What changes how the drug gets in or out",
+    "start": "Before a start or a load",
+}
 SOURCES = {
     "given": "given (seen in the administration record)",
     "ordered": "ordered only",
@@ -129,11 +107,19 @@ def number(
     _beside(asked, key)
 
 
-def question(asked: Asked, key: str) -> None:
+def questions(asked: Asked) -> list[Question]:
+    """The context questions that matter for the drug, in order; before a drug is chosen, those of any drug."""
+    if asked.profile is None:
+        return list(common_questions().values())
+    return [asked.profile.questions[q] for q in asked.profile.asked]
+
+
+def question(asked: Asked, found: Question) -> None:
     """One context question; silence stays 'not stated'."""
-    st.radio(QUESTIONS[key], ANSWERS, index=None, horizontal=True, key=f"ctx.{key}")
+    key = found.id
+    st.radio(found.words, ANSWERS, index=None, horizontal=True, key=f"ctx.{key}")
     _beside(asked, f"ctx.{key}")
-    if key not in WITH_DETAIL:
+    if not found.dated:
         return
     with st.container():
         if text(asked.values, f"ctx.{key}") == "yes":
@@ -149,8 +135,9 @@ def question(asked: Asked, key: str) -> None:
 
 def patient(asked: Asked) -> None:
     field(asked, "Why was the level drawn, and what is asked?", "question", most=200)
-    for key in FIRST:
-        question(asked, key)
+    for found in questions(asked):
+        if found.group == "first":
+            question(asked, found)
     one, two = st.columns(2, gap="medium")
     with one:
         number(asked, "Age", "age", fields.AGE_UNITS)
@@ -164,25 +151,21 @@ def patient(asked: Asked) -> None:
         choice(asked, "Albumin method", "albumin_method", ("BCG", "BCP", "other"))
         choice(asked, "Albumin after an albumin infusion?", "albumin_after_infusion", ANSWERS)
         field(asked, "Time of this consult", "now", help=DATES)
-    _group(asked, 0, expanded=True)
-    for place in range(1, len(GROUPS)):
-        _group(asked, place, expanded=False)
-    grouped = {*FIRST, *(q for _, group in GROUPS for q in group)}
-    for key in QUESTIONS:
-        if key not in grouped:
-            question(asked, key)
+    for place, group in enumerate(GROUPS[1:]):
+        _group(asked, place, group, expanded=place == 0)
 
 
-def _group(asked: Asked, place: int, *, expanded: bool) -> None:
-    title, group = GROUPS[place]
-    known = [q for q in group if q in QUESTIONS]
-    silent = sum(not text(asked.values, f"ctx.{q}") for q in known)
-    said = [f"{_SHORT.get(q, q.replace('_', ' '))}" for q in known if text(asked.values, f"ctx.{q}") == "yes"]
-    label = f"**{title}**: {', '.join(said) + '; ' if said else ''}"
+def _group(asked: Asked, place: int, group: str, *, expanded: bool) -> None:
+    known = [q for q in questions(asked) if q.group == group]
+    if not known:
+        return
+    silent = sum(not text(asked.values, f"ctx.{q.id}") for q in known)
+    said = [q.short for q in known if text(asked.values, f"ctx.{q.id}") == "yes"]
+    label = f"**{TITLES[group]}**: {', '.join(said) + '; ' if said else ''}"
     label += f"{silent} of {len(known)} not stated" if silent else "all answered"
     with st.expander(label, expanded=expanded, key=f"group-{place}"):
-        for key in known:
-            question(asked, key)
+        for found in known:
+            question(asked, found)
 
 
 def patient_sentence(asked: Asked) -> str:
@@ -191,34 +174,19 @@ def patient_sentence(asked: Asked) -> str:
     parts = [x for x in (p.age, p.sex if p.sex != "unknown" else "", p.weight) if x]
     if asked.entry.file.albumin:
         parts.append(f"albumin {asked.entry.file.albumin.value}")
-    for key, yes, no in (
-        ("seizing_now", "SEIZING NOW", ""),
-        ("overdose", "OVERDOSE SUSPECTED", ""),
-        ("seizures_since_change", "seizures since the last change", "no seizures since the last change"),
-        ("toxic_signs", "signs of toxicity", "no signs of toxicity"),
-    ):
-        answer = text(v, f"ctx.{key}")
-        parts += [x for x in ({"yes": yes, "no": no}.get(answer, ""),) if x]
-    parts += [_SHORT[q] for q in _SHORT if text(v, f"ctx.{q}") == "yes"]
+    every = questions(asked)
+    for q in every:
+        answer = text(v, f"ctx.{q.id}")
+        if answer == "yes":
+            parts.append(q.short)
+        elif answer == "no" and q.group == "first" and q.told:
+            parts.append(f"no {q.short}")
     if not parts:
         return ""
-    open_questions = sum(not text(v, f"ctx.{q}") for q in QUESTIONS)
+    open_questions = sum(not text(v, f"ctx.{q.id}") for q in every)
     if open_questions:
         parts.append(f"{open_questions} questions not stated")
     return "; ".join(parts)
-
-
-_SHORT = {
-    "renal_failure": "renal failure",
-    "valproate": "valproate",
-    "pregnancy": "pregnant",
-    "hepatic_failure": "hepatic failure",
-    "critical_illness": "critically ill",
-    "tube_feed": "tube fed",
-    "interacting_change": "an interacting drug changed",
-    "adherence_doubtful": "doses doubtful",
-    "recent_load": "a load within 72 h",
-}
 
 
 # --- 2 What was given? -----------------------------------------------------------------------------------
@@ -323,11 +291,20 @@ def doses(asked: Asked, echoes: Mapping[int, str]) -> None:
             wrong = any(asked.problems.get(f"dose.{row}.{name}") for name in hidden)
             _echo("Something under 'More about this line' needs mending." if wrong else None, "wrong")
     st.button("Add a dose line", key="add-dose", on_click=_add_row, args=("dose",))
-    with st.expander("Paste single doses from a spreadsheet", expanded=False, key="paste"):
+    _pasted(asked, forms, words)
+    _dialysis(asked)
+
+
+def _pasted(asked: Asked, forms: Sequence[str], words: Mapping[str, str]) -> None:
+    """A part of the administration record copied straight out of a spreadsheet."""
+    with st.expander("Paste doses from a spreadsheet", expanded=False, key="paste"):
         look.say(
-            "Columns: time, amount with unit, and the form unless one is chosen for all. One row for each dose given.",
+            "Single doses need no column names: time, amount with unit, and the form unless one is chosen for all. "
+            "With column names in the first row also repeated doses (every, from, until, missed with | between the "
+            "times) and infusions (over, or rate with from and until).",
             "hint",
         )
+        look.say(f"Columns, in any order: {', '.join(DOSE_COLUMNS)}.", "hint")
         choice(asked, "Form of all pasted doses", "pasted_form", forms, words)
         st.text_area("Pasted rows", key="pasted", max_chars=60_000, height=160)
         with st.container():
@@ -336,8 +313,55 @@ def doses(asked: Asked, echoes: Mapping[int, str]) -> None:
                 look.beside(problem.text, needed=False)
             if len(problems) > 6:
                 look.beside(f"and {len(problems) - 6} more like these.", needed=False)
-            if asked.entry.pasted and not problems:
-                look.say(f"{asked.entry.pasted} single doses read.", "echo")
+            if asked.entry.pasted.doses and not problems:
+                look.say(f"Read: {pasted_words(asked.entry)}.", "echo")
+
+
+def pasted_words(entry: Entry) -> str:
+    """How many pasted lines of each kind were read."""
+    lines = entry.pasted.doses
+    count = {
+        "single dose": sum(bool(d.at) for d in lines),
+        "repeated dose": sum(bool(d.every) for d in lines),
+        "infusion by rate": sum(bool(d.rate) for d in lines),
+        "missed dose": sum(len(d.missed) for d in lines),
+    }
+    return ", ".join(f"{n:,} {name}{'s' if n > 1 else ''}" for name, n in count.items() if n)
+
+
+def _dialysis(asked: Asked) -> None:
+    """Sessions that take the drug away while they run; asked for where the drug file knows a clearance."""
+    rows = asked.values.get("dialysis_rows", ())
+    if not asked.entry.file.dialysis and (asked.profile is None or asked.profile.dialysis is None):
+        return
+    said = dialysis_words(asked) or "none"
+    with st.expander(f"**Dialysis sessions**: {look.plain(said)}", expanded=bool(rows), key="dialysis"):
+        look.say(
+            "Dialysis takes the drug away while it runs; a session may lie ahead. Give the clearance of this drug, not "
+            "the blood flow; left empty, the drug file's value is taken and a warning says so.",
+            "hint",
+        )
+        for place, row in enumerate(rows, 1):
+            with st.container(border=True, key=f"dialysis-{row}"):
+                _row_head("dialysis", row, f"Dialysis session {place}", False)
+                left, middle, right = st.columns(3, gap="medium")
+                with left:
+                    field(asked, "Dialysis from (date and time)", f"dialysis.{row}.from", help=DATES)
+                with middle:
+                    field(asked, "Dialysis until; empty if it still runs", f"dialysis.{row}.until", help=DATES)
+                with right:
+                    number(asked, "Clearance by dialysis", f"dialysis.{row}.clearance", fields.CLEARANCE_UNITS)
+        st.button("Add a dialysis session", key="add-dialysis", on_click=_add_row, args=("dialysis",))
+
+
+def dialysis_words(asked: Asked) -> str:
+    """The sessions in one sentence."""
+    said = []
+    for session in asked.entry.file.dialysis:
+        clearance = f" at {session.clearance}" if session.clearance else ""
+        end = f" until {session.until}" if session.until else " on, still running"
+        said.append(f"from {session.from_ or 'an unknown time'}{end}{clearance}")
+    return "; ".join(said)
 
 
 def doses_sentence(asked: Asked, echoes: Mapping[int, str]) -> str:
@@ -345,8 +369,10 @@ def doses_sentence(asked: Asked, echoes: Mapping[int, str]) -> str:
     said = [text(asked.values, f"dose.{row}.said") for row in rows]
     parts = [s for s in said if s]
     out = ", then ".join(parts) if len(parts) <= 3 else f"{len(parts)} dose lines"
-    if asked.entry.pasted:
-        out += f"{'; ' if out else ''}{asked.entry.pasted} pasted single doses"
+    if asked.entry.pasted.doses:
+        out += f"{'; ' if out else ''}pasted: {pasted_words(asked.entry)}"
+    if asked.entry.file.dialysis:
+        out += f"{'; ' if out else ''}dialysis {dialysis_words(asked)}"
     return out
 
 
@@ -356,7 +382,8 @@ def doses_sentence(asked: Asked, echoes: Mapping[int, str]) -> str:
 def levels(asked: Asked, worth: Mapping[int, Sequence[str]]) -> None:
     rows = asked.values.get("level_rows", ())
     units = asked.profile.level_units if asked.profile else fields.LEVEL_UNITS
-    lines = [str(n) for n in range(1, len(asked.entry.file.doses) - asked.entry.pasted + 1)]
+    lines = [str(n) for n in range(1, len(asked.entry.file.doses) - len(asked.entry.pasted.doses) + 1)]
+    others = tuple(asked.profile.other_levels.values()) if asked.profile is not None else ()
     for place, row in enumerate(rows, 1):
         with st.container(border=True, key=f"level-{row}"):
             _row_head("level", row, f"Level {place}", len(rows) == 1)
@@ -392,11 +419,14 @@ def levels(asked: Asked, worth: Mapping[int, Sequence[str]]) -> None:
                         fields.ALBUMIN_UNITS,
                         unit_key=f"level.{row}.albumin_unit",
                     )
-                    field(asked, "Valproate level, with its unit", f"level.{row}.valproate")
+                    for other in others:
+                        label = f"{other.words[:1].upper()}{other.words[1:]} level of this sample, with its unit"
+                        field(asked, label, f"level.{row}.other.{other.id}")
                 with two:
                     choice(asked, "Tube", f"level.{row}.sample", ("serum", "plasma", "gel tube"))
                     field(asked, "If normalised: by whom", f"level.{row}.normalised_by")
-            wrong = any(asked.problems.get(f"level.{row}.{name}") for name in ("albumin", "valproate", "normalised_by"))
+            more = ("albumin", "normalised_by", *(f"other.{other.id}" for other in others))
+            wrong = any(asked.problems.get(f"level.{row}.{name}") for name in more)
             _echo("Something under 'More about this level' needs mending." if wrong else None, "wrong")
     st.button("Add a level", key="add-level", on_click=_add_row, args=("level",))
 
@@ -430,21 +460,64 @@ def goal(asked: Asked) -> None:
     shelves = {s.id: s.words for s in asked.profile.shelves.values()} if asked.profile else {}
     if shelves:
         choice(asked, "Shelf the regimens are made from", "shelf", tuple(shelves), shelves, empty="choose one")
+    with st.container():
+        _usable(asked)
+
+
+def _usable(asked: Asked) -> None:
+    """Which products of the shelf are usable in this consult; none chosen: all of them."""
+    profile, shelf, named = asked.profile, text(asked.values, "shelf"), asked.entry.file.plan.products
+    if profile is None or not (named or shelf in profile.shelves):
+        return
+    offered = [*(profile.shelves[shelf].products if shelf in profile.shelves else ())]
+    offered += [p for p in named if p not in offered]
+    st.multiselect(
+        "Products usable in this consult; none chosen: the whole shelf",
+        offered,
+        key="products",
+        placeholder="the whole shelf",
+        format_func=lambda p: profile.products[p].words if p in profile.products else p,
+    )
+    _beside(asked, "products")
 
 
 def more_plan(asked: Asked) -> None:
     """What not every consult needs: a start time, a load, a restart level, the order of the rows."""
     forms, words = form_words(asked.profile)
-    with st.expander("Load or top-up, pause, start of a new regimen", expanded=False, key="plan-more"):
+    with st.expander("Load or top-up, pause, start of a new regimen, limits of today", expanded=False, key="plan-more"):
         one, two = st.columns(2, gap="medium")
         with one:
             choice(asked, "Load or top-up with", "load_form", forms, words)
             field(asked, "Load up to this level, with its unit", "load_aim", most=40)
             field(asked, "Time of the load", "load_at", help=DATES)
+            choice(
+                asked,
+                "The target above is of the",
+                "target_kind",
+                tuple(TARGET_KINDS),
+                TARGET_KINDS,
+                empty="total level",
+            )
+            field(asked, "Why another target than usual", "target_reason")
         with two:
             field(asked, "Give again at this level, with its unit", "restart_level", most=40)
             field(asked, "First dose of a new regimen (date and time)", "plan_start", help=DATES)
+            field(
+                asked,
+                "Largest step from the present dose, with its unit",
+                "largest_step",
+                most=40,
+                help="Such as 50 mg/day. It narrows the steps of the protocol and never widens them.",
+            )
             st.checkbox("Also list by expected loss (it is no advice)", key="order_by_loss")
+        wrong = any(asked.problems.get(name) for name in MORE_PLAN)
+    _echo("Something under 'Load or top-up ...' needs mending." if wrong else None, "wrong")
+
+
+TARGET_KINDS = {"total": "total level", "free": "free level"}
+MORE_PLAN = (
+    "load_form", "load_aim", "load_at", "target_kind", "target_reason", "restart_level", "plan_start", "largest_step",
+)  # fmt: skip
 
 
 def chosen(asked: Asked) -> None:

@@ -11,7 +11,7 @@ from pathlib import Path
 from typing import Any
 
 import streamlit as st
-from pkcalc_form import ask, look, opening, tell
+from pkcalc_form import ask, look, opening, second, tell
 from pkcalc_form import entry as fields
 from pkcalc_form.ask import Asked
 from pkcalc_form.entry import Entry
@@ -83,8 +83,9 @@ def _page() -> None:
         return
     opening.forget_when_left_alone(settings.session_timeout_min)
     state = st.session_state
-    for kind in ("dose_rows", "level_rows", "own_rows"):
+    for kind in opening.ROWS:
         state.setdefault(kind, [1])
+    state.setdefault("dialysis_rows", [])
     if "drug" not in state and len(drug_names()) == 1:
         state["drug"] = drug_names()[0]
     values: Mapping[str, Any] = {str(k): v for k, v in state.items()}
@@ -109,6 +110,7 @@ def _page() -> None:
         ask.patient(asked)
     with _step(2, "What was given?", ask.doses_sentence(asked, echoes["dose"])):
         ask.doses(asked, echoes["dose"])
+        typed = st.empty()
     with _step(3, "What was measured?", ask.levels_sentence(asked)):
         ask.levels(asked, _worth(asked, settings))
 
@@ -143,7 +145,8 @@ def _page() -> None:
         ask.own_words(asked)
         _result(outcome, hidden, tell.note)
         _on_request(outcome, hidden, "Show the whole note with its annex", tell.whole_note)
-        opening.second_entry(outcome.case if not outcome.problems else None, settings)
+        with st.container(key="result-second"), _guarded():
+            second.section(outcome.case if not outcome.problems else None, settings)
     look.say(DEFERS, "defer")
     # from here on the browser may show the results: they belong to what was read
     state["runs"] = state.get("runs", 0) + 1
@@ -152,6 +155,7 @@ def _page() -> None:
         run=state["runs"],
         minutes=settings.session_timeout_min,
     )
+    _typed_picture(_typed_record(asked, echoes["dose"]), typed)
     if consult is not None and not hidden:
         _charts(consult, slots)
 
@@ -224,26 +228,74 @@ def _charts(consult: Consult, slots: list[tuple[Any, str]]) -> None:
             slot.html(f'<p class="pk-stopped" role="alert">{tell.STOPPED}</p>')
 
 
+def _typed_record(asked: Asked, read: Mapping[int, str]) -> Case | None:
+    """Doses, dialysis and levels as far as they can be read, whatever is still missing elsewhere."""
+    if asked.case is not None:
+        return asked.case
+    entry, file = asked.entry, asked.entry.file
+    if asked.profile is None:
+        return None
+
+    def sound(kind: str, lines: tuple[Any, ...]) -> tuple[Any, ...]:
+        wrong = {k.split(".")[1] for k in asked.problems if k.startswith(f"{kind}.")}
+        return tuple(x for row, x in zip(entry.rows[kind], lines, strict=False) if str(row) not in wrong)
+
+    doses = tuple(x for row, x in zip(entry.rows["dose"], file.doses, strict=False) if row in read)
+    if "pasted" not in asked.problems:
+        doses += entry.pasted.doses
+    levels = tuple(x.model_copy(update={"on_dose": None}) for x in sound("level", file.levels))
+    parts = {"doses": doses, "levels": levels, "dialysis": sound("dialysis", file.dialysis)}
+    alone = CaseFile(pkcalc_case=1, drug=asked.profile.id, demonstration=file.demonstration)
+    try:
+        return check_case(alone.model_copy(update=parts))
+    except CaseError:
+        return None
+
+
+def _typed_picture(case: Case | None, slot: Any) -> None:
+    """The record as typed, a lane for each kind of event."""
+    if case is None:
+        return
+    made: dict[str, Any] = st.session_state.setdefault("typed", {})
+    file = case.file
+    key = repr((file.drug, file.doses, file.levels, file.dialysis, file.now, file.demonstration is None))
+    try:
+        if key not in made:
+            found = charts.typed_chart(case, load_profile(case.drug))
+            made.clear()
+            made[key] = None if found is None else tell.picture(found)
+        if made[key] is not None:
+            with slot.container(key="result-chart-typed"):
+                st.html(made[key])
+    except Exception as error:
+        _report(error)
+        slot.html(f'<p class="pk-stopped" role="alert">{tell.STOPPED}</p>')
+
+
 # --- reading the fields ----------------------------------------------------------------------------------
 
 
 def check(entry: Entry) -> Outcome:
     """The fields read by the core: a checked case, or everything that is missing or contradictory."""
-    if not entry.file.doses and not entry.file.levels:
+    file = entry.file
+    asked = bool(file.proposed or file.plan.load)
+    if not (file.doses or file.levels or asked):
         return Outcome(problems=entry.problems)
     problems = list(entry.problems)
     try:
-        case = check_case(entry.file)
+        case = check_case(file)
     except CaseError as error:
         taken = {fields.field_of(p.where, entry) for p in problems}
-        problems += [p for p in error.problems if fields.field_of(p.where, entry) not in taken]
+        found = [entry.pasted.placed(p, len(entry.rows["dose"])) for p in error.problems]
+        problems += [p for p in found if fields.field_of(p.where, entry) not in taken]
         return Outcome(problems=tuple(problems))
     except Exception as error:
         _report(error)
         return Outcome(crashed=True)
-    if not case.levels:
-        problems.append(Problem("Levels", "no level was entered", "one or more", "Enter a level"))
-    if not case.courses:
+    if not (case.levels or asked):
+        fix = "Enter a level; before any level, ask for a load or a regimen of your own in section 5"
+        problems.append(Problem("Levels", "no level was entered", "one or more", fix))
+    if case.levels and not case.courses:
         problems.append(Problem("Doses", "no dose was entered", "one or more", "Enter a dose"))
     return Outcome(case=case, problems=tuple(problems))
 
@@ -278,7 +330,8 @@ def _numbers(file: CaseFile) -> str:
     chosen = file.chosen.model_copy(update={"words": ""}) if file.chosen else None
     if chosen is not None and chosen.regimen is None and not chosen.next_draw:
         chosen = None
-    return dump_case_file(file.model_copy(update={"question": "", "comment": "", "label": "", "chosen": chosen}))
+    words = {"question": "", "comment": "", "label": "", "chosen": chosen, "reentry": None}
+    return dump_case_file(file.model_copy(update=words))
 
 
 def _asked(values: Mapping[str, Any], entry: Entry, outcome: Outcome) -> Asked:

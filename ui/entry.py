@@ -14,11 +14,11 @@ from typing import Any
 from pkcalc_form.spoken import EXAMPLES, Said, say, take_apart
 
 from pkcalc.case import (
-    QUESTIONS,
     AlbuminFile,
     AnswerFile,
     CaseFile,
     ChosenFile,
+    DialysisFile,
     DoseFile,
     LevelFile,
     LoadFile,
@@ -27,7 +27,10 @@ from pkcalc.case import (
     ProposedFile,
     TargetFile,
 )
+from pkcalc.drugs.profile import Profile, drug_names, every_question, load_profile
+from pkcalc.drugs.questions import Question, common_questions
 from pkcalc.errors import Problem
+from pkcalc.spreadsheet import Pasted, pasted_doses
 from pkcalc.units import LABELS
 
 LEVEL_UNITS = tuple(label for label, (kind, _, _) in LABELS.items() if kind == "level")
@@ -36,14 +39,16 @@ WEIGHT_UNITS = ("kg", "lb")
 HEIGHT_UNITS = ("cm", "in")
 AGE_UNITS = ("years", "months", "weeks")
 KINDS = ("total", "free", "normalised")
+CLEARANCE_UNITS = ("mL/min", "L/h")
 MAX_PASTED = 1000
 
 DOSE_FIELDS = ("said", "form", "product", "from", "until", "for_about", "missed", "source", "confirmed", "given_by")
 LEVEL_FIELDS = (
     "value", "unit", "kind", "drawn", "on_dose", "sample", "normalised_by",
-    "albumin", "albumin_unit", "valproate",
+    "albumin", "albumin_unit",
 )  # fmt: skip
 OWN_FIELDS = ("said", "form")
+DIALYSIS_FIELDS = ("from", "until", "clearance")
 
 _NUMBER_UNIT = re.compile(r"^\s*([<>]?\s*[0-9][0-9.,]*)\s*(.*?)\s*$")
 
@@ -53,14 +58,15 @@ class Entry:
     """The case file that the fields make.
 
     rows: by kind, the row of fields behind each line of the file. problems: wording that could not be taken
-    apart. assumed: what was taken for granted about an own regimen, by its row. pasted: lines pasted.
+    apart. assumed: what was taken for granted about an own regimen, by its row. pasted: the pasted lines, which stand
+    after the typed ones.
     """
 
     file: CaseFile
     rows: Mapping[str, tuple[int, ...]]
     problems: tuple[Problem, ...] = ()
     assumed: Mapping[int, str] = field(default_factory=dict)
-    pasted: int = 0
+    pasted: Pasted = field(default_factory=Pasted)
 
 
 def text(values: Mapping[str, Any], key: str) -> str:
@@ -95,16 +101,18 @@ def case_of(values: Mapping[str, Any]) -> Entry:
     base: CaseFile | None = values.get("base")
     problems: list[Problem] = []
     doses, dose_rows = _doses(values, base, problems)
-    pasted = _pasted(values, problems)
+    pasted = _pasted(values)
+    problems += pasted.problems
+    dialysis, dialysis_rows = _dialysis(values)
     levels, level_rows = _levels(values, problems)
     own, own_rows, assumed = _own(values, base, problems)
     unit = text(values, "target_unit")
     low, high = (joined(text(values, key), unit) for key in ("target_low", "target_high"))
-    target = None
-    if low or high:
+    target, reason = None, text(values, "target_reason")
+    if low or high or reason or text(values, "target_kind") == "free":
         old = base.target if base and base.target else TargetFile(low="", high="")
         kind = text(values, "target_kind") or old.kind
-        target = old.model_copy(update={"low": low, "high": high, "kind": kind})
+        target = old.model_copy(update={"low": low, "high": high, "kind": kind, "reason": reason})
     fields: dict[str, Any] = {
         "drug": text(values, "drug"),
         "demonstration": values.get("demonstration"),
@@ -113,7 +121,8 @@ def case_of(values: Mapping[str, Any]) -> Entry:
         "patient": _patient(values, base),
         "albumin": _albumin(values, base.albumin if base else None),
         "context": _context(values, base),
-        "doses": (*doses, *pasted),
+        "doses": (*doses, *pasted.doses),
+        "dialysis": tuple(dialysis),
         "levels": tuple(levels),
         "target": target,
         "aim": joined(text(values, "aim"), unit),
@@ -125,10 +134,15 @@ def case_of(values: Mapping[str, Any]) -> Entry:
     }
     return Entry(
         file=(base or CaseFile(pkcalc_case=1, drug="")).model_copy(update=fields),
-        rows={"dose": tuple(dose_rows), "level": tuple(level_rows), "own": tuple(own_rows)},
+        rows={
+            "dose": tuple(dose_rows),
+            "level": tuple(level_rows),
+            "own": tuple(own_rows),
+            "dialysis": tuple(dialysis_rows),
+        },
         problems=tuple(problems),
         assumed=assumed,
-        pasted=len(pasted),
+        pasted=pasted,
     )
 
 
@@ -195,7 +209,8 @@ def _levels(values: Mapping[str, Any], problems: list[Problem]) -> tuple[list[Le
     levels: list[LevelFile] = []
     rows: list[int] = []
     for row in values.get("level_rows", ()):
-        if is_blank(values, "level", row, LEVEL_FIELDS):
+        others = {drug: text(values, f"level.{row}.other.{drug}") for drug in _others(values)}
+        if is_blank(values, "level", row, LEVEL_FIELDS) and not any(others.values()):
             continue
 
         def get(name: str, row: int = row) -> str:
@@ -220,7 +235,7 @@ def _levels(values: Mapping[str, Any], problems: list[Problem]) -> tuple[list[Le
                     "normalised_by": get("normalised_by"),
                     "on_dose": int(line) if line.isdigit() else None,
                     "albumin": sample.model_copy(update={"value": albumin}) if albumin else None,
-                    "valproate_level": get("valproate"),
+                    "other_levels": {drug: given for drug, given in others.items() if given},
                     "sample": get("sample") or "unknown",
                 }
             )
@@ -291,6 +306,8 @@ def _plan(values: Mapping[str, Any], base: CaseFile | None) -> PlanFile:
     return old.model_copy(
         update={
             "shelf": text(values, "shelf"),
+            "products": tuple(values.get("products") or ()),
+            "largest_step": text(values, "largest_step"),
             "order_by_loss": bool(values.get("order_by_loss")),
             "load": load,
             "restart_level": text(values, "restart_level"),
@@ -331,7 +348,8 @@ def _chosen(
 
 def _context(values: Mapping[str, Any], base: CaseFile | None) -> dict[str, Any]:
     found: dict[str, Any] = {}
-    order = [*(q for q in (base.context if base else ()) if q in QUESTIONS), *QUESTIONS]
+    known = _known_questions(values)
+    order = [*(q for q in (base.context if base else ()) if q in known), *known]
     for question in dict.fromkeys(order):
         answer = text(values, f"ctx.{question}")
         if not answer:
@@ -343,42 +361,46 @@ def _context(values: Mapping[str, Any], base: CaseFile | None) -> dict[str, Any]
             else answer
         )
     if base is not None:  # questions that the page does not ask
-        found |= {k: v for k, v in base.context.items() if k not in QUESTIONS}
+        found |= {k: v for k, v in base.context.items() if k not in known}
     return found
 
 
-def _pasted(values: Mapping[str, Any], problems: list[Problem]) -> list[DoseFile]:
-    """Rows pasted from a spreadsheet: time, amount with unit, form; parted by tabs or semicolons."""
-    lines: list[DoseFile] = []
-    rows = [x for x in str(values.get("pasted") or "").splitlines() if x.strip()]
-    if len(rows) > MAX_PASTED:
-        problems.append(
-            Problem(
-                "Pasted doses",
-                f"{len(rows):,} rows were given",
-                f"at most {MAX_PASTED:,}",
-                "Paste fewer rows",
-            )
-        )
-        return []
-    form_for_all = text(values, "pasted_form")
-    for number, row in enumerate(rows, 1):
-        cells = [c.strip() for c in re.split(r"\t|;", row)]
-        if number == 1 and not any(c.isdigit() for c in row):
-            continue  # a row of column heads
-        if len(cells) not in (2, 3) or len(row) > 200:
-            problems.append(
-                Problem(
-                    f"Pasted row {number}",
-                    f"{len(cells)} columns were found",
-                    "2 or 3: time, amount with unit, and the form unless one is chosen for all",
-                    "Copy just these columns from the spreadsheet",
-                )
-            )
+def _profile(values: Mapping[str, Any]) -> Profile | None:
+    name = text(values, "drug")
+    return load_profile(name) if name in drug_names() else None
+
+
+def _known_questions(values: Mapping[str, Any]) -> Mapping[str, Question]:
+    """The context questions of the drug chosen; of any drug before one is."""
+    profile = _profile(values)
+    return profile.questions if profile is not None else common_questions()
+
+
+def _others(values: Mapping[str, Any]) -> tuple[str, ...]:
+    """The other drugs whose levels the drug chosen asks for."""
+    profile = _profile(values)
+    return tuple(profile.other_levels) if profile is not None else ()
+
+
+def _pasted(values: Mapping[str, Any]) -> Pasted:
+    """Rows pasted from a spreadsheet, in the columns of a CSV file of doses."""
+    given = str(values.get("pasted") or "")
+    return pasted_doses(given, form=text(values, "pasted_form"), most=MAX_PASTED) if given.strip() else Pasted()
+
+
+def _dialysis(values: Mapping[str, Any]) -> tuple[list[DialysisFile], list[int]]:
+    sessions: list[DialysisFile] = []
+    rows: list[int] = []
+    for row in values.get("dialysis_rows", ()):
+        if is_blank(values, "dialysis", row, DIALYSIS_FIELDS):
             continue
-        form = cells[2] if len(cells) == 3 and cells[2] else form_for_all
-        lines.append(DoseFile(form=form, amount=cells[1], at=cells[0] or "?", source="given"))
-    return lines
+        at = f"dialysis.{row}."
+        old: DialysisFile = values.get(f"{at}base") or DialysisFile.model_construct(from_="")
+        clearance = joined(text(values, f"{at}clearance"), text(values, f"{at}clearance_unit"))
+        shape = {"from_": text(values, f"{at}from"), "until": text(values, f"{at}until"), "clearance": clearance}
+        sessions.append(old.model_copy(update=shape))
+        rows.append(row)
+    return sessions, rows
 
 
 # --- case file -> fields ---------------------------------------------------------------------------------
@@ -426,6 +448,11 @@ def fields_of(file: CaseFile) -> dict[str, Any]:
             at + "confirmed": _unless_unknown(dose.confirmed),
             at + "given_by": _unless_unknown(dose.given_by),
         }
+    values["dialysis_rows"] = list(range(1, len(file.dialysis) + 1))
+    for row, session in enumerate(file.dialysis, 1):
+        at = f"dialysis.{row}."
+        values |= {at + "base": session, at + "from": session.from_, at + "until": session.until}
+        _part(values, at + "clearance", session.clearance, CLEARANCE_UNITS)
     values["level_rows"] = list(range(1, len(file.levels) + 1))
     for row, level in enumerate(file.levels, 1):
         at = f"level.{row}."
@@ -437,8 +464,8 @@ def fields_of(file: CaseFile) -> dict[str, Any]:
             at + "normalised_by": level.normalised_by,
             at + "on_dose": str(level.on_dose) if level.on_dose is not None else None,
             at + "sample": _unless_unknown(level.sample),
-            at + "valproate": level.valproate_level,
         }
+        values |= {f"{at}other.{drug}": given for drug, given in level.other_levels.items()}
         if level.albumin is not None:
             _part(values, at + "albumin", level.albumin.value, ALBUMIN_UNITS)
     target_unit: str | None = None
@@ -451,6 +478,8 @@ def fields_of(file: CaseFile) -> dict[str, Any]:
     plan, chosen = file.plan, file.chosen
     values |= {
         "shelf": plan.shelf or None,
+        "products": list(plan.products),
+        "largest_step": plan.largest_step,
         "order_by_loss": plan.order_by_loss,
         "load_form": plan.load.form if plan.load else None,
         "load_aim": plan.load.aim if plan.load else "",
@@ -463,6 +492,7 @@ def fields_of(file: CaseFile) -> dict[str, Any]:
     }
     values["target_unit"] = target_unit
     values["target_kind"] = file.target.kind if file.target else None
+    values["target_reason"] = file.target.reason if file.target else ""
     values["own_rows"] = list(range(1, len(file.proposed) + 1))
     for row, own in enumerate(file.proposed, 1):
         values |= {f"own.{row}.base": own, f"own.{row}.said": say(own), f"own.{row}.form": own.form or None}
@@ -486,7 +516,7 @@ def _part(values: dict[str, Any], key: str, value: str, units: tuple[str, ...], 
 
 # --- problems -> fields ----------------------------------------------------------------------------------
 
-_ROW = re.compile(r"^(Dose line|Level|Proposed regimen) (\d+)(?:, (.*))?$", re.I)
+_ROW = re.compile(r"^(Dose line|Level|Proposed regimen|Dialysis session) (\d+)(?:, (.*))?$", re.I)
 _DOSE_PLACES = {
     "product": "product",
     "from": "from",
@@ -498,7 +528,6 @@ _DOSE_PLACES = {
 _LEVEL_PLACES = {
     "drawn": "drawn",
     "kind": "kind",
-    "valproate level": "valproate",
     "normalised by": "normalised_by",
     "on dose": "on_dose",
     "albumin": "albumin",
@@ -518,14 +547,16 @@ _PLACES = {
     "target, high": "target_high",
     "population": "population",
     "method": "method",
+    "target, kind": "target_kind",
     "plan, shelf": "shelf",
+    "plan, products": "products",
+    "plan, largest step": "largest_step",
     "plan, load, form": "load_form",
     "plan, load, aim": "load_aim",
     "plan, load, at": "load_at",
     "plan, restart level": "restart_level",
     "plan, start": "plan_start",
     "chosen, next draw": "next_draw",
-    "pasted doses": "pasted",
 }
 
 
@@ -536,22 +567,24 @@ def field_of(where: str, entry: Entry) -> str | None:
         return _PLACES[place.lower()]
     if place.lower().startswith("context, "):
         key = place[9:].split(",")[0].strip().replace(" ", "_")
-        return f"ctx.{key}" if key in QUESTIONS else None
+        return f"ctx.{key}" if key in every_question() else None
     if place.lower().startswith("chosen regimen"):
         return "chosen"
-    if place.lower().startswith("pasted row"):
+    if place.lower().startswith("pasted doses"):
         return "pasted"
     found = _ROW.match(place)
     if found is None:
         return None
     name, number, rest = found.group(1).lower(), int(found.group(2)), (found.group(3) or "").lower()
-    kind = {"dose line": "dose", "level": "level", "proposed regimen": "own"}[name]
+    kind = {"dose line": "dose", "level": "level", "proposed regimen": "own", "dialysis session": "dialysis"}[name]
     rows = entry.rows[kind]
-    if kind == "dose" and len(rows) < number <= len(rows) + entry.pasted:
-        return "pasted"
     if not 1 <= number <= len(rows):
         return None
     row = rows[number - 1]
+    if kind == "dialysis":
+        return f"dialysis.{row}.{rest if rest in DIALYSIS_FIELDS else 'from'}"
+    if kind == "level" and rest.startswith("other levels, "):
+        return f"level.{row}.other.{rest.removeprefix('other levels, ').split(',')[0].replace(' ', '_')}"
     if kind == "level":
         return f"level.{row}.{_LEVEL_PLACES.get(rest, 'value')}"
     if rest == "form" or rest.endswith(", form"):

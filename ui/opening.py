@@ -1,4 +1,4 @@
-"""Before and around a consult: who may see the page, opening and forgetting a case, the second entry."""
+"""Before a consult: who may see the page, opening and forgetting a case, an answer of one's own first."""
 
 from __future__ import annotations
 
@@ -9,16 +9,17 @@ import streamlit as st
 from pkcalc_form import entry as fields
 from pkcalc_form import look, tell
 
-from pkcalc.case import Case, CaseFile, check_case, dump_case_file, parse_case_text
+from pkcalc.case import CaseFile, parse_case_text
 from pkcalc.demos import demonstrations
 from pkcalc.errors import CaseError
-from pkcalc.reentry import compare
 from pkcalc.site import Site, load_site, no_site
 
 SITE = "PKCALC_SITE"
 NO_SIGN_IN = "PKCALC_WITHOUT_SIGN_IN"
 TOLD_TWICE = "yes, and told twice"
 LOOPBACK = ("127.0.0.1", "localhost", "::1")
+#: Rows of which one always stands on the page.
+ROWS = ("dose_rows", "level_rows", "own_rows")
 
 
 def clock() -> float:
@@ -97,7 +98,7 @@ def open_file(file: CaseFile, *keep: str) -> None:
     for key, value in fields.fields_of(file).items():
         st.session_state[key] = value
     st.session_state["opened"] = True
-    for kind in ("dose_rows", "level_rows", "own_rows"):
+    for kind in ROWS:
         if not st.session_state.get(kind):
             st.session_state[kind] = [1]
 
@@ -196,42 +197,3 @@ def committing(demonstration: bool) -> str:
             dose, level = state["committed"]
             look.say(f"You wrote: dose {dose}; expected level {level}. Compare below.", "echo")
     return ""
-
-
-# --- the second pharmacist -------------------------------------------------------------------------------
-
-
-def _start_second(text: str) -> None:
-    demonstration = st.session_state.get("demonstration")
-    forget()
-    st.session_state["first_entry"] = text
-    if demonstration is not None:
-        st.session_state["demonstration"] = demonstration
-
-
-def second_entry(case: Case | None, settings: Site) -> None:
-    """Blind re-entry: the first entry is put aside unseen, the case typed again, and both compared."""
-    with st.expander("Blind re-entry by the second pharmacist", expanded=False, key="second"):
-        first = st.session_state.get("first_entry")
-        if not first:
-            look.say(
-                "The second pharmacist types weight, doses, levels and dates again from the chart, without seeing this "
-                "entry. Every difference is then listed.",
-                "hint",
-            )
-            if case is not None:
-                st.button(
-                    "Put this entry aside and begin the second",
-                    key="begin-second",
-                    on_click=_start_second,
-                    args=(dump_case_file(case.file),),
-                )
-            return
-        if case is None:
-            look.say("The second entry is not complete yet.")
-            return
-        comparison = compare(check_case(parse_case_text(first)), case, settings, forecasts=False)
-        look.say(comparison.verdict, "answer")
-        look.lines([d.text for d in comparison.differences])
-        if comparison.same_value:
-            look.lines(["Written differently, the same value:", *(f"   {d.text}" for d in comparison.same_value)])

@@ -26,5 +26,5 @@ def real_charts() -> None:
 def no_charts(request: pytest.FixtureRequest, monkeypatch: pytest.MonkeyPatch) -> None:
     """Charts take longer to draw than everything else on the page together."""
     if "real_charts" not in request.fixturenames:
-        for name in ("record_chart", "plane_chart", "regimen_chart", "narrowing_chart"):
-            monkeypatch.setattr(consultation.charts, name, lambda _: None)
+        for name in ("record_chart", "plane_chart", "regimen_chart", "narrowing_chart", "typed_chart"):
+            monkeypatch.setattr(consultation.charts, name, lambda *_: None)

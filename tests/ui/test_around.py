@@ -4,6 +4,8 @@ from __future__ import annotations
 
 import ast
 import os
+import re
+from html import unescape
 from importlib.util import module_from_spec, spec_from_file_location
 from pathlib import Path
 from typing import Any
@@ -129,7 +131,7 @@ def test_commit_first_hides_every_answer_until_an_own_one_is_written() -> None:
     assert page.NUMBER_WITH_UNIT.search(text)
 
 
-def test_the_second_entry_is_blind_and_every_difference_is_listed() -> None:
+def test_the_second_entry_is_blind_until_it_is_complete_and_then_every_difference_is_listed() -> None:
     at = page.enter(page.start(), page.PAIR)
     at.button(key="begin-second").click().run()
     text = page.shown(at)
@@ -137,13 +139,46 @@ def test_the_second_entry_is_blind_and_every_difference_is_listed() -> None:
     assert "Second entry: type the case again from the chart" in text
     assert "350 mg daily" not in text
     page.enter(at, page.PAIR | {"dose.2.said": "330 mg daily"})
+    assert "(first)" not in page.shown(at)  # nothing of the first entry before the second is said to be complete
+    at.button(key="compare-now").click().run()
     text = page.shown(at)
     assert "The two entries differ in 1 field" in text
     assert "350 mg (first), 330 mg (second)" in text
+    assert re.search(r"This alone: .*becomes [\d.,]+ mg", text)
+    assert "Forecasts of the two entries:" in text
     page.enter(at, {"dose.2.said": "0.35 g daily"})
+    text = page.shown(at)
+    assert "The second entry was changed since it was compared: compare again." in text
+    assert "(first)" not in text
+    at.button(key="compare-now").click().run()
     text = page.shown(at)
     assert "The two entries agree in every field compared." in text
     assert "Written differently, the same value:" in text
+
+
+def test_the_comparison_goes_back_with_the_first_entry_and_stands_on_its_note() -> None:
+    at = page.enter(page.start(), page.PAIR)
+    at.button(key="begin-second").click().run()
+    page.enter(at, page.PAIR | {"level.2.value": "21"})
+    at.button(key="compare-now").click().run()
+    page.enter(at, {"level.2.value": "20"})
+    at.button(key="compare-now").click().run()
+    at.button(key="back-to-first").click().run()
+    assert at.text_input(key="level.2.value").value == "20"
+    text = page.shown(at)
+    assert re.search(r"Done on [^.]*, 1 difference, resolved\.", text)
+    page.enter(at, {"level.1.value": "8.5"})
+    assert "what was compared has changed since: repeat it." in page.shown(at)
+
+
+def test_a_second_entry_given_up_leaves_the_first_as_it_was() -> None:
+    at = page.enter(page.open_demonstration("clean-pair"), {"question": "Is there room?"})
+    at.button(key="begin-second").click().run()
+    assert any("pk-mark" in h.body for h in at.get("html"))  # a demonstration stays one for the second person
+    at.button(key="back-to-first").click().run()
+    assert at.text_input(key="question").value == "Is there room?"
+    assert "Second entry:" not in page.shown(at)
+    assert any("pk-mark" in h.body for h in at.get("html"))
 
 
 def test_200_pasted_rows_are_read_and_a_bad_one_is_named() -> None:
@@ -151,10 +186,102 @@ def test_200_pasted_rows_are_read_and_a_bad_one_is_named() -> None:
     at = page.start()
     page.enter(at, {"drug": "phenytoin"})
     page.enter(at, {"pasted": rows, "pasted_form": "suspension"})
-    assert "200 single doses read." in page.shown(at)
+    assert "Read: 200 single doses." in page.shown(at)
     page.enter(at, {"pasted": rows.replace("100 mg", "1OO mg", 1)})
-    assert any("Dose line 1, amount" in line for line in page.beside(at))
-    assert "200 single doses read." not in page.shown(at)
+    assert any("Pasted doses, row 1, amount" in line for line in page.beside(at))
+    assert "Read: " not in page.shown(at)
+
+
+PASTED = """at\tamount\tevery\tfrom\tuntil\tmissed\tover\tform
+\t300 mg\t24 h\t2026-02-01 21:00\t2026-03-20 21:00\t2026-03-03 21:00|2026-03-09 21:00\t\textended-capsule
+2026-03-21 09:00\t500 mg\t\t\t\t\t30 min\tinjection
+\t350 mg\t24 h\t2026-03-21 21:00\t\t\t\textended-capsule"""
+
+
+def test_repeats_missed_doses_and_infusions_are_pasted_and_count() -> None:
+    at = page.enter(page.start(), {"drug": "phenytoin", "now": "2026-04-20 10:00", "weight": "70 kg"})
+    values = {"level.1.value": "14 mg/L", "level.1.kind": "total", "level.1.drawn": "2026-04-20 08:00"}
+    page.enter(at, {"pasted": PASTED, **values})
+    text = page.shown(at)
+    assert "Read: 1 single dose, 2 repeated doses, 2 missed doses." in text
+    assert page.NUMBER_WITH_UNIT.search(text)
+    lines = at.session_state["kept"]
+    case = next(iter(lines.values())).case
+    assert [(len(c.missed), c.single is not None) for c in case.courses] == [(2, False), (0, True), (0, False)]
+    assert case.courses[1].single.over_h == 0.5
+    page.enter(at, {"pasted": PASTED.replace("30 min", "30 days")})
+    assert any("Pasted doses, row 3, over" in line for line in page.beside(at))
+    assert not page.NUMBER_WITH_UNIT.search(page.shown(at))
+
+
+def test_a_pasted_formula_is_refused() -> None:
+    at = page.enter(page.start(), {"drug": "phenytoin"})
+    page.enter(at, {"pasted": '2026-03-01 21:00\t=HYPERLINK("x")', "pasted_form": "suspension"})
+    assert any("A spreadsheet would run it as a formula" in line for line in page.beside(at))
+
+
+def test_dialysis_sessions_are_typed_on_the_page() -> None:
+    at = page.open_demonstration("ethanol-dialysis")
+    assert at.text_input(key="dialysis.1.clearance").value == "140"
+    page.enter(at, {"dialysis.1.clearance": "1400"})
+    assert any("Dialysis session 1, clearance" in line for line in page.beside(at))
+    assert "Rate that holds" not in page.shown(at)
+    page.enter(at, {"dialysis.1.clearance": ""})
+    text = page.shown(at)
+    assert "No clearance of the dialysis was given" in text
+    assert "Rate that holds 1,250 mg/L while dialysis runs" in text
+    at.button(key="dialysis.1.remove").click().run()
+    text = page.shown(at)
+    assert "while dialysis runs" not in text
+    assert "Rate that holds" in text
+    at.button(key="add-dialysis").click().run()
+    page.enter(at, {"dialysis.1.from": "2026-06-09 18:00", "dialysis.1.until": "2026-06-09 17:00"})
+    assert any("it ends (9 Jun 2026 17:00) before or when it starts" in line for line in page.beside(at))
+
+
+def test_no_dialysis_is_asked_for_where_the_drug_file_knows_none() -> None:
+    at = page.enter(page.start(), {"drug": "phenytoin"})
+    assert all(b.key != "add-dialysis" for b in at.button)
+
+
+def test_usable_products_narrow_the_shelf_of_this_consult() -> None:
+    at = page.enter(page.open_demonstration("clean-pair"), {"shelf": "united-states"})
+    choice = at.multiselect(key="products")
+    assert len(choice.options) > 4
+    before = next(t for t in page.tables(at) if "Doses around the present one" in t)
+    page.enter(at, {"products": ["extended-capsule-100"]})
+    text = page.shown(at)
+    assert "Restricted to " in text
+    assert next(t for t in page.tables(at) if "Doses around the present one" in t) != before
+    page.enter(at, {"shelf": "united-kingdom"})  # the product is not on the other shelf: said, not dropped unseen
+    assert any("Plan, products" in line for line in page.beside(at))
+
+
+def test_the_record_is_drawn_as_typed_before_any_level(real_charts: None) -> None:
+    values = {"drug": "phenytoin", "dose.1.said": "300 mg daily", "dose.1.from": "2026-03-01 21:00"}
+    at = page.enter(page.start(), values)
+    assert pictures(at) == []  # no form yet, so the line cannot be read
+    page.enter(at, {"dose.1.form": "sodium", "dose.1.missed": "2026-03-02 21:00"})
+    assert pictures(at) == ["The record as typed, 1 Mar 2026 to 5 Mar 2026: 3 doses, 1 missed dose."]
+    page.enter(at, {"weight": "-70"})  # wrong elsewhere: the record is still the record
+    assert len(pictures(at)) == 1
+    page.enter(at, {"dose.1.said": "300 mg"})
+    assert pictures(at) == []
+
+
+def pictures(at: Any) -> list[str]:
+    """The text alternatives of the pictures on the page."""
+    return [unescape(x) for h in at.get("html") for x in re.findall(r'alt="([^"]*)"', h.body)]
+
+
+def test_a_first_load_is_worked_out_before_any_level() -> None:
+    at = page.enter(page.start(), {"drug": "phenytoin", "weight": "70 kg", "age": "40 years"})
+    at = page.enter(at, {"now": "2026-03-01 10:00"})
+    assert "No numbers yet." in page.shown(at)
+    page.enter(at, {"load_form": "injection", "load_aim": "15 mg/L"})
+    text = page.shown(at)
+    assert "Load or top-up with" in text
+    assert "No numbers yet." not in text
 
 
 def test_a_level_says_what_it_is_worth_as_soon_as_it_is_typed() -> None:

@@ -29,11 +29,11 @@ FULL = """
   {"form": "suspension", "amount": "60 mg", "every": "12 h", "for_about": "3 months", "given_by": "carer"}],
  "levels": [
   {"value": "<2.5 mg/L", "kind": "total", "drawn": "2026-03-20 07:00", "sample": "gel tube", "comment": "and this"},
-  {"value": "12 mg/L", "kind": "normalised", "normalised_by": "laboratory", "on_dose": 3, "valproate_level": "60 mg/L",
+  {"value": "12 mg/L", "kind": "normalised", "normalised_by": "laboratory", "on_dose": 3, "other_levels": {"valproate": "60 mg/L"},
    "albumin": {"value": "30 g/L", "taken": "2026-03-20 07:00", "method": "BCP"}}],
- "target": {"low": "8 mg/L", "high": "12 mg/L", "reason": "elderly"}, "aim": "10 mg/L",
+ "target": {"low": "8 mg/L", "high": "12 mg/L", "kind": "free", "reason": "elderly"}, "aim": "10 mg/L",
  "proposed": [{"form": "suspension", "amount": "70 mg", "every": "12 h"}],
- "population": "teaching", "method": "whole record", "plan": {"largest_step": "30 mg/day"},
+ "population": "teaching", "method": "whole record", "plan": {"shelf": "united-states", "products": ["suspension-125"], "largest_step": "30 mg/day"},
  "chosen": {"words": "as now"}}
 """
 
@@ -137,11 +137,13 @@ def test_every_problem_of_a_field_finds_its_field() -> None:
         "level.1.drawn": "x",
         "level.2.normalised_by": "",
         "level.2.on_dose": "9",
-        "level.2.valproate": "x",
+        "level.2.other.valproate": "x",
         "level.2.albumin": "x",
         "target_low": "x",
         "aim": "x",
         "own.1.form": "x",
+        "largest_step": "x",
+        "products": ["x"],
         "population": "x",
         "ctx.interacting_change.since": "x",
     }
@@ -149,7 +151,7 @@ def test_every_problem_of_a_field_finds_its_field() -> None:
     with pytest.raises(CaseError) as caught:
         check_case(entry.file)
     places = {field_of(p.where, entry) for p in caught.value.problems}
-    wanted = {k for k, v in values.items() if v in ("x", "03/04/2026", "4,5 mg once", "9", "capsule")}
+    wanted = {k for k, v in values.items() if v in (["x"], "x", "03/04/2026", "4,5 mg once", "9", "capsule")}
     wanted = {"ctx.interacting_change" if k == "ctx.interacting_change.since" else k for k in wanted}
     assert wanted <= places | {"level.2.normalised_by"}
     assert "level.2.normalised_by" in places
@@ -161,17 +163,44 @@ def test_blank_rows_are_not_part_of_the_case() -> None:
     assert field_of("Dose line 1, amount", entry) == "dose.2.said"
 
 
-def test_pasted_rows_are_read_with_heads_tabs_and_a_form_for_all() -> None:
-    rows = "Time\tAmount\n2026-03-01 21:00\t300 mg\n2026-03-02 21:00\t300 mg\tsuspension\nbroken\n"
+def test_pasted_rows_without_names_are_single_doses() -> None:
+    rows = "2026-03-01 21:00\t300 mg\n2026-03-02 21:00\t300 mg\n"
     entry = case_of({"drug": "phenytoin", "pasted": rows, "pasted_form": "extended-capsule"})
     assert [(d.at, d.amount, d.form) for d in entry.file.doses] == [
         ("2026-03-01 21:00", "300 mg", "extended-capsule"),
-        ("2026-03-02 21:00", "300 mg", "suspension"),
+        ("2026-03-02 21:00", "300 mg", "extended-capsule"),
     ]
+    assert entry.problems == ()
+    own = case_of({"drug": "phenytoin", "pasted": "2026-03-02 21:00;300 mg;suspension", "pasted_form": "acid"})
+    assert [d.form for d in own.file.doses] == ["suspension"]
+
+
+def test_a_pasted_row_of_another_width_is_named() -> None:
+    rows = "2026-03-01 21:00\t300 mg\nbroken\n"
+    entry = case_of({"drug": "phenytoin", "pasted": rows, "pasted_form": "extended-capsule"})
+    assert entry.file.doses == ()
     assert [p.text for p in entry.problems] == [
-        "Pasted row 4: 1 columns were found. Allowed: 2 or 3: time, amount with unit, and the form unless one is "
-        "chosen for all. Copy just these columns from the spreadsheet."
+        "Pasted doses, row 2: it has 1 cell. Allowed: 2, as the first row has. Put a cell that holds a comma or "
+        "semicolon in quotation marks."
     ]
+
+
+def test_more_rows_than_the_page_takes_are_refused() -> None:
+    entry = case_of({"pasted": "2026-03-01 21:00\t300 mg\n" * 1001, "pasted_form": "acid"})
+    assert [p.text for p in entry.problems] == [
+        "Pasted doses: 1,001 rows were given. Allowed: at most 1,000. Paste fewer rows."
+    ]
+
+
+def test_the_problem_of_a_pasted_line_names_its_row_after_typed_lines() -> None:
+    values = {"drug": "phenytoin", "dose_rows": [1], "dose.1.said": "300 mg daily", "dose.1.form": "acid"}
+    rows = "At\tAmount\tEvery\tFrom\tForm\n\t300 mg\t24 h\t2026-03-01 21:00\tacid\n\t3OO mg\t24 h\t2026-03-09\tacid"
+    entry = case_of(values | {"pasted": rows})
+    with pytest.raises(CaseError) as caught:
+        check_case(entry.file)
+    found = [entry.pasted.placed(p, 1) for p in caught.value.problems]
+    assert {field_of(p.where, entry) for p in found} == {"pasted"}
+    assert [p.where for p in found] == ["Pasted doses, row 3, from", "Pasted doses, row 3, amount"]
 
 
 def test_an_unknown_question_of_a_case_is_kept() -> None:

@@ -58,7 +58,7 @@ def plain_labels(at: AppTest) -> str:
     return " ".join(e.label.replace("\\", "") for e in at.expander)
 
 
-def enter(at: AppTest, values: dict[str, str]) -> AppTest:
+def enter(at: AppTest, values: dict[str, Any]) -> AppTest:
     for kind in ("dose", "level"):
         wanted = max((int(k.split(".")[1]) for k in values if k.startswith(f"{kind}.")), default=1)
         while len(at.session_state[f"{kind}_rows"]) < wanted:
@@ -66,9 +66,11 @@ def enter(at: AppTest, values: dict[str, str]) -> AppTest:
     for key, value in values.items():
         if key.endswith("on_dose") or key == "dose.1.form":
             at.run()  # the choices follow from what was entered before
-        widgets: list[Any] = [*at.text_input, *at.selectbox, *at.radio, *at.text_area]
+        widgets: list[Any] = [*at.text_input, *at.selectbox, *at.radio, *at.text_area, *at.multiselect]
         widget = next(w for w in widgets if w.key == key)
-        if hasattr(widget, "select"):
+        if isinstance(value, list):
+            widget.set_value(value)
+        elif hasattr(widget, "select"):
             widget.select(value)
         elif hasattr(widget, "input"):
             widget.input(value)

@@ -112,7 +112,7 @@ def test_values_are_read_as_strictly_as_in_a_case_file_and_keep_their_row() -> N
         ("value,kind\n8 mg/L,total\n", 'CSV file of levels, row 1: the column "drawn" is missing. Allowed: it must be there. Add it.'),
         ("value,kind,drawn,value\n8,total,x,9\n", 'CSV file of levels, row 1: the column "value" stands twice. Allowed: each column once. Remove one.'),
         ("value,kind,drawn,Albumn\n8,total,x,\n", 'CSV file of levels, row 1: the column "Albumn" is not known. Allowed: value, unit, kind, drawn, normalised_by, albumin, albumin_taken, sample. Did you mean "albumin"?'),
-        ("value,kind,drawn\n8,5 mg/L,total,2026-12-01 07:00\n", "CSV file of levels, row 2: it has 4 cells. Allowed: 3, as the row of column names has. Put a cell that holds a comma or semicolon in quotation marks."),
+        ("value,kind,drawn\n8,5 mg/L,total,2026-12-01 07:00\n", "CSV file of levels, row 2: it has 4 cells. Allowed: 3, as the first row has. Put a cell that holds a comma or semicolon in quotation marks."),
         ('value,kind,drawn\n"8 mg/L,total,x\n', 'CSV file of levels, row 2: a quotation mark is not closed, or stands inside a cell. Allowed: cells such as 300 or "300 mg". Correct the quotation marks.'),
         ('value,kind,drawn\n8 mg/L,total,"' + "x" * 200_000 + '"\n', "CSV file of levels, row 2: a cell is far too long. Allowed: at most 200 characters. Shorten it."),
         ("value,kind,drawn\n8 mg/L,total," + "x" * 201 + "\n", "CSV file of levels, row 2, drawn: the text is too long or has more than one line. Allowed: at most 200 characters. Shorten it."),
