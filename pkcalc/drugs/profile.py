@@ -218,6 +218,26 @@ class RateCap:
 
 
 @dataclass(frozen=True)
+class LargeOral:
+    """Published peak times of large single amounts by mouth: the larger the amount, the later the peak."""
+
+    amounts_mg: tuple[float, ...]
+    peaks_h: tuple[float, ...]
+    words: str
+
+    def peak_h(self, amount_mg: float) -> float | None:
+        """Peak time of an amount taken at once, straight between the published ones and held at the last; None below
+        the first."""
+        if amount_mg < self.amounts_mg[0] * (1 - 1e-9):
+            return None
+        pairs = list(itertools.pairwise(zip(self.amounts_mg, self.peaks_h, strict=True)))
+        for (a, early), (b, late) in pairs:
+            if amount_mg <= b:
+                return early + (late - early) * max(amount_mg - a, 0.0) / (b - a)
+        return self.peaks_h[-1]
+
+
+@dataclass(frozen=True)
 class OralLoad:
     """A load by mouth: split parts, hours apart, and who must not have it."""
 
@@ -618,6 +638,7 @@ class Profile:
     interactions: Interactions
     codes: tuple[Code, ...]
     medications: tuple[MedicationCode, ...]
+    large_oral: LargeOral | None
     dialysis: Dialysis | None
     cautions: Mapping[str, Any]
     facts: Mapping[str, Fact]
@@ -764,6 +785,7 @@ def parse_profile(text: str, file: str) -> Profile:
         interactions=_interactions(top.table("interactions")),
         codes=tuple(top.each("code", _code).values()),
         medications=tuple(top.each("medication", lambda name, t: _medication(t, forms)).values()),
+        large_oral=_large_oral(top.table("large_oral")) if top.has("large_oral") else None,
         dialysis=_dialysis(top.table("dialysis")) if top.has("dialysis") else None,
         cautions=cast(Mapping[str, Any], top.data.get("caution", {}) if top.has("caution") else {}),
         facts=facts,
@@ -880,6 +902,21 @@ def _absorption(t: Table) -> Absorption:
         peak_h=t.span("peak", "interval"),
     )
     t.done()
+    return found
+
+
+def _large_oral(t: Table) -> LargeOral:
+    found = LargeOral(
+        amounts_mg=t.several("amounts", "amount"),
+        peaks_h=t.several("peaks", "interval"),
+        words=t.text("words"),
+    )
+    t.done()
+    for name, values in (("amounts", found.amounts_mg), ("peaks", found.peaks_h)):
+        if any(b <= a for a, b in itertools.pairwise(values)):
+            raise t.fail(name, "not rising", "List them from the smallest to the largest")
+    if len(found.amounts_mg) != len(found.peaks_h):
+        raise t.fail("peaks", "not one for each amount", "Give one peak time for each amount")
     return found
 
 

@@ -124,6 +124,10 @@ def _pause(p: Pause) -> dict[str, Any]:
         "until_level_mg_per_L": number(p.to_mg_per_L),
         "days": _days_band(p.days),
         "days_with_late_absorption": _days_band(p.with_absorption),
+        "swallowed_at_once": [
+            {"active_mg": number(x.amount_mg), "ago_h": number(x.hours_ago), "published_peak_h": number(x.peak_h)}
+            for x in p.large
+        ],
         "reductions": [
             {
                 "words": r.words,

@@ -147,6 +147,7 @@ _DEFINITIONS: dict[str, dict[str, Any]] = {
             "until_level_mg_per_L": NUMBER,
             "days": DAYS_BAND,
             "days_with_late_absorption": _or_null(DAYS_BAND),
+            "swallowed_at_once": _list(_object({"active_mg": NUMBER, "ago_h": NUMBER, "published_peak_h": NUMBER})),
             "reductions": _list(
                 _object(
                     {

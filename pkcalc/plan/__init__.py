@@ -36,6 +36,7 @@ from pkcalc.plan.present import (
     doses_missed,
     first_dose_hour,
     is_present,
+    large_words,
     latest_level,
     present_course,
     present_rate,
@@ -122,7 +123,7 @@ def make(
     share, taken_words = doses_missed(case, profile)
     lines = two_lines(estimate, share, counted=estimate.method in (WHOLE_RECORD, BEFORE_ANY_LEVEL))
     central, taken = lines.central, lines.taken
-    now = today(case, taken, observations, history)
+    now = today(case, profile, taken, observations, history)
     shelf = shelf_in_use(case, profile, site)
     rate = present_rate(case, profile)
     most = limits.largest_daily(case, profile, site)
@@ -261,6 +262,7 @@ def _asked(
         on = present
     if on is None:
         return None
+    notes += [large_words(x, setting.profile) for x in now.large]
     used = [o for o in observations if o.usable]
     free = [o for o in used if o.level.kind == "free"]
     latest = latest_level(free or used)

@@ -18,7 +18,7 @@ from pkcalc.drugs.profile import IvLine, OralLoad, Product, Profile, RateCap
 from pkcalc.estimate.result import Band, Estimate
 from pkcalc.forecast import TIME_DRAWS, Goal, bands, draws_of, fewer_draws
 from pkcalc.plan.limits import is_child
-from pkcalc.plan.present import Floats, Today, present_course
+from pkcalc.plan.present import Floats, Today, present_course, published_peaks
 from pkcalc.record import Dose, Record
 from pkcalc.site import Site
 from pkcalc.units import percent, show, show_number
@@ -285,7 +285,7 @@ def by_mouth(ward: Ward, products: Sequence[Product], aim_mg_per_L: float) -> Lo
     amount = sum(mg for _, mg in parts)
     few = fewer_draws(ward.estimate, TIME_DRAWS)
     start = start_draws(ward)
-    draw_h = profile.sampling.after_oral_load_h or oral.maintenance_after_h
+    draw_h, said = oral_draw(profile, oral, parts)
     doses = tuple(Dose(h / 24, mg * form.active_fraction, absorption=absorption_of(form)) for h, mg in parts)
     volume = few.estimate.volume_L
     assert volume is not None
@@ -321,11 +321,7 @@ def by_mouth(ward: Ward, products: Sequence[Product], aim_mg_per_L: float) -> Lo
         if usual_dose(ward) is not None
         else f"Maintenance begins {show_number(oral.maintenance_after_h)} h after the first part.",
     )
-    low, high = form.absorption.peak_h if form.absorption else (0.0, 0.0)
-    notes.append(
-        f"A single usual dose peaks at {show_number(low)} to {show_number(high)} h; larger amounts later, so the level "
-        "may still be rising when it is drawn."
-    )
+    notes.append(said)
     return _load(
         ward,
         product=unit,
@@ -342,6 +338,26 @@ def by_mouth(ward: Ward, products: Sequence[Product], aim_mg_per_L: float) -> Lo
         order=order,
         notes=notes,
         why=why,
+    )
+
+
+def oral_draw(profile: Profile, oral: OralLoad, parts: Sequence[tuple[float, float]]) -> tuple[float, str]:
+    """Hours from the first part of a load by mouth to its level, and why then.
+
+    The usual wait, and not before the published peak that the whole amount would have if it were taken at once with
+    the last part: so late can the parts together peak.
+    """
+    wait = profile.sampling.after_oral_load_h or oral.maintenance_after_h
+    amount, last = sum(mg for _, mg in parts), parts[-1][0]
+    published = profile.large_oral
+    peak = published.peak_h(amount) if published is not None else None
+    if published is None or peak is None:
+        return wait, f"The level is drawn {show(wait, 'h')} after the first part."
+    draw = max(wait, float(math.ceil(last + peak)))
+    late = f", counted from the last part {show(last + peak, 'h')} after the first" if last else ""
+    return draw, (
+        f"{published_peaks(published)} At once, {show(amount, 'mg', 4)} would peak after about {show(peak, 'h')}{late}"
+        f": the level is drawn {show(draw, 'h')} after the first part, and one drawn earlier is not the highest."
     )
 
 

@@ -13,7 +13,7 @@ from pkcalc.case import Case
 from pkcalc.estimate.result import Band, Estimate
 from pkcalc.forecast import TIME_DRAWS, bands, draws_of, fewer_draws
 from pkcalc.plan.candidates import Candidate, Setting
-from pkcalc.plan.present import Floats, Today, is_toxic
+from pkcalc.plan.present import Floats, Large, Today, is_toxic, large_words, published_peaks
 from pkcalc.record import Record
 from pkcalc.units import show, show_number
 
@@ -91,6 +91,7 @@ class Pause:
     being absorbed; None where nothing is. reductions: partial reductions. restarts: regimens to go on with. lines: the
     rest in words.
     toxic: at or above the critical level, or toxic signs; first: what stands first then. restart_line: when to restart.
+    large: amounts swallowed at once whose published peak is still to come; with_absorption counts them so late.
     """
 
     risk: str
@@ -103,6 +104,7 @@ class Pause:
     lines: tuple[str, ...]
     toxic: bool = False
     restart_line: str = ""
+    large: tuple[Large, ...] = ()
 
     @property
     def first(self) -> Literal["pause", "reduction"]:
@@ -142,23 +144,22 @@ def pause(case: Case, now: Today, setting: Setting, every: Sequence[Candidate]) 
             f"{show(total, 'mg')} of active drug was taken so lately that part of it is still to be absorbed; the "
             "pause counts it in."
         )
-    largest = (
-        setting.profile.loading.oral.largest_part_mg
-        if setting.profile.loading and setting.profile.loading.oral
-        else None
-    )
     form_peaks = [
         f.absorption.peak_h[1]
         for c in case.courses
         for name in c.forms
         if (f := setting.profile.forms[name]).absorption is not None
     ]
+    lines += [f"{large_words(x, setting.profile)} The pause counts that in." for x in now.large]
     if form_peaks:
-        more = f" of more than {show(largest, 'mg')}" if largest else ""
-        lines.append(
-            f"A usual dose peaks within {show_number(max(form_peaks))} h. After a large amount by mouth{more} at once "
-            "absorption goes on for a day or more: the level can stay up or rise although nothing is given."
-        )
+        usual = f"A usual dose peaks within {show_number(max(form_peaks))} h."
+        published = setting.profile.large_oral
+        if published is not None and not now.large:
+            usual += (
+                f" {published_peaks(published)} After such an amount at once the level can stay up or rise although "
+                "nothing is given."
+            )
+        lines.append(usual)
     present = next((c for c in every if c.present), None)
     if present is not None and np.isfinite(present.forecast.percent_per_percent):
         lines.append(
@@ -182,6 +183,7 @@ def pause(case: Case, now: Today, setting: Setting, every: Sequence[Candidate]) 
         lines=tuple(lines),
         toxic=toxic,
         restart_line=_restart_line(to, late or band, setting),
+        large=now.large,
     )
 
 

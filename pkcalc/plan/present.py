@@ -11,13 +11,14 @@ from numpy.typing import NDArray
 
 from pkcalc.case import Case, Course
 from pkcalc.dosing import Regimen
-from pkcalc.drugs.profile import Profile
+from pkcalc.drugs.profile import LargeOral, Profile
 from pkcalc.estimate.error_model import LevelData, RecordSpread
 from pkcalc.estimate.predict import predicted_levels
 from pkcalc.estimate.result import Band, Estimate
 from pkcalc.forecast import TIME_DRAWS, Goal, bands, fewer_draws
 from pkcalc.levels import Observation, adherence, free_partner
 from pkcalc.record import Dose, Record
+from pkcalc.units import show
 
 Floats = NDArray[np.float64]
 
@@ -44,13 +45,26 @@ def is_present(regimen: Regimen, case: Case, profile: Profile) -> bool:
 
 
 @dataclass(frozen=True)
+class Large:
+    """An amount of active drug swallowed at once, so large that its published peak comes later than a usual one's."""
+
+    hours_ago: float
+    amount_mg: float
+    peak_h: float
+
+    @property
+    def hours_to_peak(self) -> float:
+        return self.peak_h - self.hours_ago
+
+
+@dataclass(frozen=True)
 class Today:
     """Where the patient stands when the plan begins.
 
     moment: clock time, None in a case without one. level_mg_per_L: per draw of `fewer_draws`, working
     basis; None without any level. words: how it was found. still_absorbed: oral doses of which something may
-    still reach the blood, with
-    times in days from now (0 or before). measured_mg_per_L, measured_at: the latest level on
+    still reach the blood, with times in days from now (0 or before); large: those swallowed at once whose published
+    peak is still to come, taken to be released until it. measured_mg_per_L, measured_at: the latest level on
     the working basis, and when it was drawn (None: not stated).
     """
 
@@ -60,6 +74,7 @@ class Today:
     still_absorbed: tuple[Dose, ...]
     measured_mg_per_L: float | None
     measured_at: datetime | None = None
+    large: tuple[Large, ...] = ()
 
     @property
     def start_mg_per_L(self) -> Floats | float:
@@ -84,6 +99,7 @@ class History:
 
 def today(
     case: Case,
+    profile: Profile,
     estimate: Estimate,
     observations: Sequence[Observation],
     history: History | None,
@@ -112,12 +128,63 @@ def today(
         (day,),
         first_order_per_day=history.first_order_per_day,
     )
-    unabsorbed = tuple(
-        Dose(d.time_day - day, d.amount_mg, 0.0, d.absorption)
-        for d in record.doses
-        if d.absorption is not None and day - d.settled_after_day < d.time_day <= day
+    unabsorbed, large = uptake_to_come(record, day, profile)
+    return Today(moment, course[:, 0], "by the course of the record", unabsorbed, measured, drawn, large)
+
+
+#: Doses by mouth closer than this are taken for one amount swallowed at once.
+AT_ONCE = timedelta(hours=1)
+
+
+def uptake_to_come(record: Record, day: float, profile: Profile) -> tuple[tuple[Dose, ...], tuple[Large, ...]]:
+    """Oral doses of which something may still reach the blood on a day, in days from it; and the large ones of them.
+
+    A large amount at once is absorbed later than a usual dose. Where the drug file has peak times of large amounts,
+    one whose peak is later than any usual one of its forms is taken to be released until that peak.
+    """
+    swallowed = [d for d in record.doses if d.absorption is not None and d.time_day <= day]
+    together: list[list[Dose]] = []
+    for dose in sorted(swallowed, key=lambda d: d.time_day):
+        if together and dose.time_day - together[-1][0].time_day <= AT_ONCE / timedelta(days=1):
+            together[-1].append(dose)
+        else:
+            together.append([dose])
+    usual = max((f.absorption.peak_h[1] for f in profile.forms.values() if f.absorption is not None), default=0.0)
+    found: list[Dose] = []
+    large: list[Large] = []
+    for group in together:
+        amount = sum(d.amount_mg for d in group)
+        peak = profile.large_oral.peak_h(amount) if profile.large_oral is not None else None
+        ago = 24.0 * (day - group[0].time_day)
+        late = peak is not None and peak > usual
+        if late and peak is not None and ago < peak:
+            large.append(Large(ago, amount, peak))
+        for d in group:
+            how = d.absorption
+            assert how is not None
+            if late and peak is not None:
+                how = replace(how, release_day=max(how.release_day, peak / 24.0 - how.lag_day))
+            slowed = Dose(d.time_day - day, d.amount_mg, 0.0, how)
+            if -slowed.settled_after_day < slowed.time_day:
+                found.append(slowed)
+    return tuple(found), tuple(large)
+
+
+def large_words(large: Large, profile: Profile) -> str:
+    """What a large amount swallowed at once means for the level now, with what is published."""
+    assert profile.large_oral is not None
+    return (
+        f"{show(large.amount_mg, 'mg', 4)} of active drug was swallowed at once {show(large.hours_ago, 'h', 2)} ago. "
+        f"{published_peaks(profile.large_oral)} That puts the peak of this amount at about {show(large.peak_h, 'h')}: "
+        f"the level may stay up or rise for {show(large.hours_to_peak, 'h')} more although nothing is given, and a "
+        "level drawn before is not the highest."
     )
-    return Today(moment, course[:, 0], "by the course of the record", unabsorbed, measured, drawn)
+
+
+def published_peaks(large: LargeOral) -> str:
+    """The published peak times of large amounts in a sentence."""
+    said = [f"{show(h, 'h')} after {show(mg, 'mg')}" for mg, h in zip(large.amounts_mg, large.peaks_h, strict=True)]
+    return f"Published peaks of large single amounts: {', '.join(said)} ({large.words})."
 
 
 #: A measured level counts as today's for so long.

@@ -196,6 +196,28 @@ def test_a_load_by_mouth_is_split() -> None:
     assert load.at_draw.median < load.rise.median  # a day of elimination
 
 
+def test_the_level_after_a_load_by_mouth_waits_for_the_published_peak() -> None:
+    load = loads(levels=[], doses=[], plan=asked("extended-capsule", aim="20 mg/L"))["extended-capsule"]
+    assert load.notes[-1] == (
+        "Published peaks of large single amounts: 8.4 h after 400 mg, 13.2 h after 800 mg, 31.5 h after 1,600 mg "
+        "(volunteers, one single dose each; salt not stated). At once, 1,000 mg would peak after about 17.8 h, counted "
+        "from the last part 21.8 h after the first: the level is drawn 24 h after the first part, and one drawn "
+        "earlier is not the highest."
+    )
+    assert P.loading is not None
+    assert P.loading.oral is not None
+    assert P.large_oral is not None
+    # an amount whose peak is later moves the draw with it; without published peaks the usual wait is all there is
+    assert loading.oral_draw(P, P.loading.oral, ((0.0, 1600.0),))[0] == 32.0
+    assert loading.oral_draw(P, P.loading.oral, ((0.0, 800.0), (2.0, 800.0)))[0] == 34.0
+    assert loading.oral_draw(P, P.loading.oral, ((0.0, 300.0),)) == (
+        24.0,
+        "The level is drawn 24 h after the first part.",
+    )
+    unknown = replace(P, large_oral=None)
+    assert loading.oral_draw(unknown, P.loading.oral, ((0.0, 1600.0),))[0] == 24.0
+
+
 @pytest.mark.parametrize(
     ("amount", "parts"),
     [(100, (100,)), (400, (400,)), (500, (300, 200)), (870, (300, 300, 300)), (1000, (400, 300, 300)), (40, ())],

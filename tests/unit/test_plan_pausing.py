@@ -9,14 +9,16 @@ import numpy as np
 import pytest
 from scipy.integrate import solve_ivp
 
-from pkcalc import formulas
+from pkcalc import flow, formulas
+from pkcalc.dosing import absorption_of
 from pkcalc.estimate.result import Band
 from pkcalc.plan import Today, pausing, switching
 from pkcalc.plan.candidates import candidates
 from pkcalc.plan.pausing import Pause, still_absorbing, time_to_fall
+from pkcalc.plan.present import uptake_to_come
 from pkcalc.plan.shelf import dispensable
 from pkcalc.plan.switching import Switch
-from pkcalc.record import Absorption, Dose
+from pkcalc.record import Absorption, Dose, Record
 from tests.unit.cases import PLAIN, plain
 from tests.unit.planning import estimate, exact, plan, profile, setting
 
@@ -251,3 +253,127 @@ def test_uncertain_bioavailability_has_two_ends() -> None:
 def test_nothing_to_switch_from() -> None:
     assert switching.switches(plain(doses=[], levels=[]), setting(), ()) == ()
     assert profile().forms["suspension"].routes == ("oral", "feeding tube")
+
+
+# Large amounts swallowed at once
+
+PROMPT, SLOW = (absorption_of(profile().forms[f]) for f in ("prompt-capsule", "extended-capsule"))
+
+
+def swallowed(*doses: tuple[float, float, Absorption | None]) -> Record:
+    """Doses as (hours ago, active mg, uptake) before day 10."""
+    return Record(doses=tuple(Dose(10.0 - h / 24, mg, absorption=how) for h, mg, how in doses), start_day=0.0)
+
+
+def test_the_published_peak_of_a_large_amount() -> None:
+    published = profile().large_oral
+    assert published is not None
+    peaks = {mg: published.peak_h(mg) for mg in (399.0, 400.0, 600.0, 800.0, 1200.0, 1600.0, 4000.0)}
+    assert peaks == {
+        399.0: None,
+        400.0: 8.4,
+        600.0: pytest.approx(10.8),
+        800.0: 13.2,
+        1200.0: pytest.approx(22.35),
+        1600.0: 31.5,
+        4000.0: 31.5,
+    }
+
+
+@pytest.mark.parametrize(
+    ("doses", "large"),
+    [
+        (((10.0, 1600.0, PROMPT),), [(10.0, 1600.0, 31.5)]),
+        # three packets of capsules within the hour are one amount; an hour and a half later is another
+        (((10.0, 400.0, PROMPT), (9.7, 400.0, SLOW), (9.1, 400.0, PROMPT)), [(10.0, 1200.0, 22.35)]),
+        (((10.0, 600.0, PROMPT), (8.5, 600.0, PROMPT)), []),
+        # a usual peak comes as late
+        (((10.0, 400.0, SLOW),), []),
+        # its published peak is over
+        (((32.0, 1600.0, PROMPT),), []),
+    ],
+)
+def test_what_counts_as_a_large_amount_at_once(
+    doses: tuple[tuple[float, float, Absorption]], large: list[tuple[float, float, float]]
+) -> None:
+    _, found = uptake_to_come(swallowed(*doses), 10.0, profile())
+    assert [(x.hours_ago, x.amount_mg, x.peak_h) for x in found] == [pytest.approx(x) for x in large]
+
+
+def test_a_large_amount_is_released_until_its_published_peak() -> None:
+    """The engine's level then is highest near the published time, where a usual uptake would put it hours earlier."""
+    one = exact(vmax=450.0, km=5.0, volume=49.0)
+    for mg, peak in ((800.0, 13.2), (1600.0, 31.5)):
+        ((dose,), _) = uptake_to_come(swallowed((0.0, mg, PROMPT)), 10.0, profile())
+        hours = np.arange(0.5, 60.0, 0.5)
+        for how, low, high in ((dose, peak - 0.5, peak + 3.0), (replace(dose, absorption=PROMPT), 0.0, peak - 5.0)):
+            course = flow.levels(
+                Record(doses=(how,), start_day=0.0, start_mg=0.0),
+                hours / 24,
+                one.vmax_mg_per_day[:1],
+                one.km_mg_per_L[:1],
+                np.array([49.0]),
+                start_mg_per_L=np.array([0.0]),
+            )
+            assert low <= hours[int(np.argmax(course[0]))] <= high
+
+
+def test_a_usual_dose_is_taken_up_as_usual() -> None:
+    (found, large) = uptake_to_come(swallowed((10.0, 300.0, SLOW), (60.0, 300.0, SLOW)), 10.0, profile())
+    assert large == ()
+    assert [(round(24 * d.time_day, 9), d.absorption) for d in found] == [(-10.0, SLOW)]
+
+
+def test_the_pause_after_a_large_amount_is_longer_and_says_why() -> None:
+    s = setting(exact(vmax=405.0), present_mg_per_day=368.0)
+    doses, large = uptake_to_come(swallowed((5.0, 1600.0, SLOW)), 10.0, profile())
+    usual = Dose(-5.0 / 24, 1600.0, absorption=SLOW)
+    days = []
+    for absorbed, said in ((doses, large), ((usual,), ())):
+        now = Today(None, np.full(8, 34.0), "", absorbed, 34.0, large=said)
+        found = pausing.pause(plain(**HIGH), now, s, ())
+        assert found is not None
+        assert found.with_absorption is not None
+        days.append(found.with_absorption.median)
+        lines = [x for x in found.lines if "Published peaks" in x]
+        assert len(lines) == 1
+        if said:
+            assert found.large == large
+            assert lines[0] == (
+                "1,600 mg of active drug was swallowed at once 5 h ago. Published peaks of large single amounts: 8.4 h "
+                "after 400 mg, 13.2 h after 800 mg, 31.5 h after 1,600 mg (volunteers, one single dose each; salt not "
+                "stated). That puts the peak of this amount at about 31.5 h: the level may stay up or rise for 26.5 h "
+                "more although nothing is given, and a level drawn before is not the highest. The pause counts that in."
+            )
+        else:
+            assert lines[0].startswith("A usual dose peaks within 12 h. Published peaks of large single amounts: 8.4 h")
+            assert lines[0].endswith(
+                "After such an amount at once the level can stay up or rise although nothing is given."
+            )
+    assert days[0] > days[1]
+
+
+def test_the_whole_path_from_a_large_dose_in_the_record() -> None:
+    """1,600 mg at once by mistake last night on top of 300 mg daily: found in the record, told, and in JSON."""
+    from pkcalc.consult import run_consult
+    from pkcalc.note.data import note_data
+
+    case = plain(
+        now="2026-12-01 10:00",
+        doses=[
+            {**PLAIN["doses"][0], "from": "2026-10-01 21:00", "until": ""},
+            {"form": "prompt-capsule", "amount": "1600 mg", "at": "2026-12-01 00:00", "given_by": "nurse"},
+        ],
+        levels=[{"value": "28 mg/L", "kind": "total", "drawn": "2026-12-01 09:00"}],
+    )
+    consult = run_consult(case)
+    assert consult.plan is not None
+    (large,) = consult.plan.today.large
+    assert large.hours_ago == pytest.approx(10.0)
+    assert large.amount_mg == pytest.approx(1600 * 0.92)
+    data = note_data(consult)["plan"]
+    assert data["pause"]["swallowed_at_once"] == [
+        {"active_mg": 1472.0, "ago_h": 10.0, "published_peak_h": pytest.approx(large.peak_h, rel=1e-5)}
+    ]
+    assert any("swallowed at once 10 h ago" in x for x in data["pause"]["lines"])
+    assert any("swallowed at once 10 h ago" in x for x in data["next_level"]["why"])

@@ -728,6 +728,8 @@ OWN = 'source = "own", where = "x", status = "own synthesis", derivation = "x" }
         ("value = [10, 20]", "value = [20, 10]", "target.range.value: the first is larger than the second. Write the lower end first."),
         ("aim = { value = 15", "aim = { value = 25", "target.aim: aim, range and critical level are out of order. They must rise: low, aim, high, critical, told_up_to."),
         ("told_up_to = { value = 60", "told_up_to = { value = 25", "target.aim: aim, range and critical level are out of order. They must rise: low, aim, high, critical, told_up_to."),
+        ("amounts = { value = [400, 800]", "amounts = { value = [800, 400]", "large_oral.amounts: not rising. List them from the smallest to the largest."),
+        ("peaks = { value = [8, 13]", "peaks = { value = [8]", "large_oral.peaks: not one for each amount. Give one peak time for each amount."),
         ("salt_factor = { value = 1.0", "salt_factor = { value = 1.4", "form.infusion.salt_factor.value: outside what is possible. It must be from 0 to 1."),
         ("bioavailability_range = { value = [1.0, 1.0]", "bioavailability_range = { value = [0.5, 0.9]", "form.infusion.bioavailability: outside its own range. Mend one of the two."),
         ("correlation = { value = 0,", "correlation = { value = 1,", "population.adults.correlation.value: outside what is possible. It must be between -1 and 1, ends excluded."),
