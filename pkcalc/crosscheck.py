@@ -29,11 +29,13 @@ from pkcalc.units import show, show_number
 Floats = NDArray[np.float64]
 
 #: Largest relative difference of a level, and of what follows from one.
-LEVEL_TOLERANCE = 0.01
+LEVEL_TOLERANCE = 0.005
 #: Sums and roots that both ways can do exactly.
 EXACT_TOLERANCE = 1e-6
 #: Largest difference of a log ratio of two weights: the first way takes a dose as absorbed at its mean time.
-WEIGHT_TOLERANCE = 0.1
+WEIGHT_TOLERANCE = 0.05
+#: The same with three or more censored levels, whose joint chance the first way takes on 64 fixed places.
+JOINT_WEIGHT_TOLERANCE = 0.25
 #: How far from one half the share of draws up to a median may be [%].
 MEDIAN_TOLERANCE = 0.5
 #: Days of a record that are integrated; of a longer one the beginning is taken at the plateau it had by then.
@@ -395,18 +397,22 @@ def log_weights(
     observed = np.log([x.level_mg_per_L for x in levels])
     inverse = np.linalg.inv(population.cov)
     sd_volume = math.sqrt(population.cov[2, 2])
-    hidden = sum(x.censored is not None for x in levels)
-    log_v = population.mean[2] + sd_volume * np.linspace(-7.5, 7.5, 601 if hidden < 2 else 121)
+    # joint chances of several hidden levels cost much, so there the grid is no finer than the sharpest level asks for
+    several = sum(x.censored is not None for x in levels) > 1
+    points = min(601, max(61, math.ceil(30 * sd_volume / math.sqrt(own.min())))) if several else 601
+    log_v = population.mean[2] + sd_volume * np.linspace(-7.5, 7.5, points)
     out = np.empty(len(nodes))
     for i, node in enumerate(nodes):
         shared = _shared_covariance(course, i, at, record, levels, belief)
         a, kappa = math.log(node.vmax_mg_per_day), math.log(node.km_mg_per_L) + math.log(node.volume_L)
         off = np.stack([np.full_like(log_v, a), kappa - log_v, log_v]) - population.mean[:, None]
         prior = -0.5 * np.einsum("in,ij,jn->n", off, inverse, off)
-        error = observed[:, None] - (np.log(course.amount_mg[i, at])[:, None] - log_v[None, :])
+        likely = prior > prior.max() - 40.0
+        prior, volumes = prior[likely], log_v[likely]
+        error = observed[:, None] - (np.log(course.amount_mg[i, at])[:, None] - volumes[None, :])
         wrong = belief.wrong_chance
         shares = [1 - wrong] + [wrong] * len(levels) if wrong else [1.0]
-        total = np.zeros_like(log_v)
+        total = np.zeros_like(volumes)
         for part, share in enumerate(shares):
             s = shared + np.diag(own)
             if part:
@@ -477,7 +483,7 @@ def _places(dimensions: int) -> tuple[Floats, Floats]:
         weights = np.meshgrid(*[w / 2] * dimensions, indexing="ij")
         return np.stack([e.ravel() for e in each], axis=1), np.prod([e.ravel() for e in weights], axis=0)
     # a Korobov lattice, folded so that the edges meet
-    count, step = 251, 76
+    count, step = 509, 58
     powers = [pow(step, k, count) for k in range(dimensions)]
     at = (np.outer(np.arange(count), powers) / count + 0.5 / count) % 1.0
     return 1.0 - np.abs(2.0 * at - 1.0), np.full(count, 1.0 / count)
@@ -515,15 +521,19 @@ def _shared_covariance(
     return np.asarray(odds * gains @ gains.T + np.outer(habit, habit))
 
 
-def weight_rows(first: Floats, second: Floats, nodes: Sequence[Node]) -> tuple[Row, ...]:
+def weight_rows(
+    first: Floats, second: Floats, nodes: Sequence[Node], levels: Sequence[MeasuredLevel]
+) -> tuple[Row, ...]:
     """Log weight of every node against that of the first, both ways."""
+    hidden = sum(x.censored is not None for x in levels)
+    tolerance = WEIGHT_TOLERANCE if hidden < 3 else JOINT_WEIGHT_TOLERANCE
     return tuple(
         Row(
             f"Log of the weight at {nodes[i].name} over that at {nodes[0].name}",
             float(first[i] - first[0]),
             float(second[i] - second[0]),
             "",
-            WEIGHT_TOLERANCE,
+            tolerance,
             absolute=True,
         )
         for i in range(1, len(nodes))
@@ -793,8 +803,12 @@ def infusion_rows(case: Case, profile: Profile) -> tuple[Row, ...]:
             _add(rows, f"Labelled amount of {where}", course.single.labelled_mg, second, "mg")
         elif course.rate_mg_per_day is not None:
             amount, _, per = file.rate.rpartition("/")
+            kg = 1.0
+            if amount.endswith("/kg"):
+                amount = amount.removesuffix("/kg")
+                kg = again(case.file.patient.weight, "weight", profile.molar_mass_g_per_mol) or math.nan
             mg, hours = _labelled_mg(amount, file.product, profile), {"h": 1.0, "min": 1 / 60, "day": 24.0}.get(per)
-            second = None if mg is None or hours is None else mg / hours
+            second = None if mg is None or hours is None else mg * kg / hours
             _add(rows, f"Labelled rate of {where}", course.rate_mg_per_day / 24, second, "mg/h")
     return tuple(rows)
 

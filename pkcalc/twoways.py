@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
+from dataclasses import replace
 
 import numpy as np
 
@@ -18,7 +19,7 @@ from pkcalc.estimate.pair import SteadyPair
 from pkcalc.estimate.result import Estimate
 from pkcalc.forecast import Goal
 from pkcalc.levels import Observation
-from pkcalc.plan.projection import Projection
+from pkcalc.plan.projection import Plateaus, Projection
 from pkcalc.record import Record
 from pkcalc.site import Site
 from pkcalc.units import show
@@ -39,6 +40,7 @@ def compare(
     spread: RecordSpread,
     plan: planning.Plan | None,
     projection: Projection | None,
+    plateaus: Plateaus | None,
     goal: Goal | None,
 ) -> tuple[Row, ...]:
     """Every number of the consult that can be calculated a second way, both ways."""
@@ -57,7 +59,41 @@ def compare(
         rows += _plan_rows(plan)
     if projection is not None and goal is not None:
         rows += _projected_rows(projection, goal, 0.0 if prior is None else prior.first_order_per_day)
-    return tuple(rows)
+    if plateaus is not None and estimate is not None and goal is not None:
+        rows += _settle_rows(plateaus, estimate, goal)
+    return tuple(_told(r, profile) for r in rows)
+
+
+def _told(row: Row, profile: Profile) -> Row:
+    """A rate in the drug's own time unit; its tolerance is relative."""
+    if row.unit != "mg/day" or row.absolute:
+        return row
+    return replace(row, first=profile.rate(row.first), second=profile.rate(row.second), unit=profile.rate_unit)
+
+
+def _settle_rows(plateaus: Plateaus, estimate: Estimate, goal: Goal) -> list[Row]:
+    """Where each rate asked about would settle, and the rate for the aim."""
+    p = estimate.point
+    rows: list[Row] = []
+    for words, f in plateaus.settle:
+        rows += crosscheck.steady_rows(
+            words,
+            f.rate_mg_per_day,
+            Node("the point", p.vmax_mg_per_day, p.km_mg_per_L, p.volume_L or 1.0),
+            level_mg_per_L=f.point_mg_per_L,
+            median_mg_per_L=f.steady.median,
+            chance_above_critical=f.above_critical,
+            critical_mg_per_L=goal.critical_mg_per_L,
+            vmax_mg_per_day=estimate.vmax_mg_per_day,
+            km_mg_per_L=estimate.km_mg_per_L,
+            weights=estimate.weights,
+        )
+    for held in plateaus.holds:
+        pairs = zip(estimate.vmax_mg_per_day.tolist(), estimate.km_mg_per_L.tolist(), strict=True)
+        removed = [crosscheck.removed_mg_per_h(goal.aim_mg_per_L, Node("", v, k, 1.0), 0.0) for v, k in pairs]
+        words = f"the rate that holds {show(goal.aim_mg_per_L, 'mg/L')} {held.words}"
+        rows.append(crosscheck.shares_row(words, held.mg.median, np.array(removed), estimate.weights))
+    return rows
 
 
 def nodes_of(estimate: Estimate) -> tuple[Node, ...]:
@@ -105,7 +141,7 @@ def _record_rows(
         belief = crosscheck.Belief(missed, intake.HABIT, spread.wrong_level_chance, spread.wrong_level_factor)
         written = posterior.written_out(as_taken)
         second = crosscheck.log_weights(course, written, nodes, levels, crosscheck.Population(mean, cov), belief)
-        rows += crosscheck.weight_rows(log_weight, second, nodes)
+        rows += crosscheck.weight_rows(log_weight, second, nodes, levels)
     return rows
 
 

@@ -173,6 +173,38 @@ def test_wrong_influence_of_missed_doses_is_noticed(monkeypatch: pytest.MonkeyPa
     assert any("weight at" in q for q in disagreeing(consult))
 
 
+#: Two levels that the assay could not read, one that it could.
+HIDDEN = [
+    {"value": "<7 mg/L", "kind": "total", "drawn": "2026-11-18 07:00"},
+    {"value": "9 mg/L", "kind": "total", "drawn": "2026-11-22 07:00"},
+    {"value": ">10 mg/L", "kind": "total", "drawn": "2026-12-01 07:00"},
+]
+
+
+@pytest.mark.parametrize("values", [("<7 mg/L", "9 mg/L", ">10 mg/L"), ("<9 mg/L", "<12 mg/L", ">8 mg/L")])
+def test_weights_are_checked_with_several_levels_beyond_the_assay(values: tuple[str, ...]) -> None:
+    consult = consult_of(short(levels=[{**x, "value": v} for x, v in zip(HIDDEN, values, strict=True)]))
+    rows = [r for r in consult.second_way if "weight at" in r.quantity]
+    assert [r.quantity for r in rows] == [
+        "Log of the weight at the 5 % draw over that at the point",
+        "Log of the weight at the 95 % draw over that at the point",
+    ]
+    assert [r.words for r in consult.second_way if not r.agrees] == []
+    assert all(abs(r.first - r.second) < 0.05 for r in rows)
+
+
+def test_wrong_weights_of_several_levels_beyond_the_assay_are_noticed(monkeypatch: pytest.MonkeyPatch) -> None:
+    right = posterior.censored_parts
+
+    def narrower(residual: Any, cov: Any, *rest: Any) -> Any:
+        return right(residual, 0.5 * cov, *rest)
+
+    monkeypatch.setattr(posterior, "censored_parts", narrower)
+    consult = consult_of(short(levels=HIDDEN))
+    assert any("weight at" in q for q in disagreeing(consult))
+    assert_no_number(consult)
+
+
 def test_a_wrong_steady_level_is_noticed(monkeypatch: pytest.MonkeyPatch) -> None:
     monkeypatch.setattr(formulas, "steady_state_level", scaled(formulas.steady_state_level, 1.02))
     consult = consult_of(short(proposed=PROPOSED))
@@ -368,6 +400,21 @@ def test_an_earlier_regimen_against_the_engine() -> None:
     assert float(course.amount_mg[0, -1]) / 45.0 == pytest.approx(float(first[0, 0]), rel=5e-3)
 
 
+@pytest.mark.parametrize(("count", "close"), [(1, 1e-9), (2, 2e-3), (3, 1e-2), (4, 3e-2), (5, 6e-2)])
+def test_the_joint_chance_of_several_levels_against_scipy(count: int, close: float) -> None:
+    from scipy.stats import multivariate_normal
+
+    random_ = np.random.default_rng(count)
+    for _ in range(5):
+        shared = random_.normal(size=(count, 3)) * random_.choice([0.05, 0.15, 0.3])
+        cov = shared @ shared.T + np.diag(random_.uniform(0.02, 0.06, count))
+        bound = np.linalg.cholesky(cov) @ random_.normal(size=(count, 3))
+        found = crosscheck.log_chance_of_all(bound, cov)
+        for i in range(3):
+            right = multivariate_normal.cdf(bound[:, i], np.zeros(count), cov, abseps=1e-7, releps=1e-5)
+            assert found[i] == pytest.approx(math.log(right), abs=close)
+
+
 def median_row(median: float, vmax: list[float]) -> Row:
     rows = crosscheck.steady_rows(
         "a dose",
@@ -444,7 +491,11 @@ def random_case(random_: random.Random) -> dict[str, Any]:
     for day in sorted(random_.sample(range(5, start), min(random_.randint(1, 4), start - 5))):
         level = float(flow.levels(record, (day + 7 / 24,), vmax, km, volume)[0, 0])
         level *= math.exp(random_.gauss(0, 0.12))
-        levels.append({"value": f"{min(max(level, 1), 60):.1f} mg/L", "kind": "total", "drawn": _moment(day, 7)})
+        level = min(max(level, 1), 60)
+        # now and then the assay could only tell a limit
+        beyond = random_.random()
+        value = f"<{1.2 * level:.1f}" if beyond < 0.08 else f">{0.8 * level:.1f}" if beyond > 0.92 else f"{level:.1f}"
+        levels.append({"value": f"{value} mg/L", "kind": "total", "drawn": _moment(day, 7)})
     return {
         **json.loads(json.dumps(PLAIN)),
         "now": _moment(start, 10),
