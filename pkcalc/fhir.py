@@ -260,10 +260,14 @@ class PatientResource(BaseModel):
 
 
 class Condition(BaseModel):
-    """A diagnosis: listed, never read into an answer."""
+    """A diagnosis: listed with the questions it may bear on, never read into an answer."""
 
     model_config = _LAX
     code: Concept = Concept()
+    clinicalStatus: Concept | None = None
+    verificationStatus: Concept | None = None
+    onsetDateTime: str = ""
+    recordedDate: str = ""
 
 
 # --- the answer ------------------------------------------------------------------------------------------
@@ -1206,13 +1210,31 @@ class _Reading:
 
     def _condition(self, entry: _Entry) -> None:
         found = self._model(entry, Condition)
-        if found is not None:
-            self.say(
-                entry,
-                "not understood",
-                f'The diagnosis "{found.code.words}" is shown, not read: no such code could be checked.',
-                "Answer the context questions by hand.",
-            )
+        if found is None:
+            return
+        verified, clinical = _states(found.verificationStatus), _states(found.clinicalStatus)
+        wrong = [x for x in ("entered-in-error", "refuted") if x in verified]
+        if wrong:
+            self.say(entry, "left out", f'The diagnosis "{found.code.words}" is marked {wrong[0]}.')
+            return
+        told = [x for x in (*clinical, *verified) if x]
+        told += [f"since {_clip(found.onsetDateTime, 10)}"] if found.onsetDateTime else []
+        told += [f"recorded {_clip(found.recordedDate, 10)}"] if found.recordedDate else []
+        words = " ".join((found.code.text, *(c.display for c in found.code.coding))).casefold()
+        asked = [
+            self.profile.questions[q].words
+            for q, signs in _BEARS_ON.items()
+            if q in self.profile.questions and any(x in words for x in signs)
+        ]
+        state = f" ({_clip(', '.join(told))})" if told else ""
+        bears = f" It may bear on: {' '.join(asked)}" if asked else ""
+        self.say(
+            entry,
+            "not understood",
+            f'The diagnosis "{found.code.words}"{state} is shown, not read '
+            f"into an answer: no code of a diagnosis could be verified.{bears}",
+            "Answer the context questions by hand.",
+        )
 
     # the case
 
@@ -1424,6 +1446,33 @@ _OF_A_PATIENT = (
     "MedicationStatement",
     "Condition",
 )
+
+
+#: Words of a diagnosis that point to a context question. They only say which question to look at: whether the diagnosis
+#: still holds, and how severe it is, is not in a bundle.
+_BEARS_ON: Mapping[str, tuple[str, ...]] = {
+    "seizing_now": ("status epilepticus",),
+    "overdose": ("overdose", "poisoning"),
+    "renal_failure": ("end-stage", "end stage", "esrd", "dialysis", "renal failure", "kidney failure"),
+    "renal_reduced": ("kidney", "renal", "nephro"),
+    "hepatic_failure": ("hepat", "liver", "cirrhosis"),
+    "pregnancy": ("pregnan", "gestation"),
+    "delivery": ("postpartum", "puerper", "childbirth", "delivery"),
+    "tube_feed": ("tube fe", "gastrostomy", "enteral"),
+    "critical_illness": ("trauma", "burn", "sepsis", "septic", "critical"),
+    "extracorporeal": ("dialysis", "extracorporeal", "renal replacement", "plasma exchange"),
+    "heart_block": ("heart block", "atrioventricular block", "bradycardia", "heart failure"),
+    "adherence_doubtful": ("adherence", "compliance"),
+}
+
+
+def _states(concept: Concept | None) -> tuple[str, ...]:
+    """The codes of a status, as written."""
+    if concept is None:
+        return ()
+    return tuple(_clip(c.code, 20) for c in concept.coding if c.code) or (
+        (_clip(concept.text, 20),) if concept.text else ()
+    )
 
 
 # --- small readings --------------------------------------------------------------------------------------

@@ -15,9 +15,10 @@ from hypothesis import given as sampled
 from hypothesis import settings
 from hypothesis import strategies as st
 
+from pkcalc import fhir
 from pkcalc.case import check_case, dump_case_file, parse_case_text, read_case_text
 from pkcalc.consult import run_consult
-from pkcalc.drugs.profile import load_profile
+from pkcalc.drugs.profile import every_question, load_profile
 from pkcalc.errors import CaseError
 from pkcalc.fhir import Imported, from_bundle, load_bundle
 
@@ -229,6 +230,47 @@ def test_ordered_is_not_given_and_never_counted_twice() -> None:
     assert found.file.doses[2].daily[0].time == "21:00"
 
 
+def condition(text: str, **more: Any) -> dict[str, Any]:
+    return {
+        "resourceType": "Condition",
+        "id": "c",
+        "subject": {"reference": "Patient/p1"},
+        "code": {"text": text},
+        **more,
+    }
+
+
+def status(code: str) -> dict[str, Any]:
+    return {"coding": [{"system": "http://terminology.hl7.org/CodeSystem/condition-ver-status", "code": code}]}
+
+
+def test_a_diagnosis_is_never_an_answer_and_names_the_questions_it_bears_on() -> None:
+    told = {"clinicalStatus": status("resolved"), "verificationStatus": status("confirmed"), "onsetDateTime": "2019-03"}
+    found = of(level(), condition("End-stage renal failure on dialysis", **told))
+    assert line(found, 2) == (
+        'Entry 2, Condition: not understood. The diagnosis "End-stage renal failure on dialysis" (resolved, confirmed, '
+        "since 2019-03) is shown, not read into an answer: no code of a diagnosis could be verified. It may bear on: "
+        "Does the patient have end-stage renal failure or dialysis? Is kidney function reduced, short of dialysis? Is "
+        "there renal replacement, plasma exchange or ECMO? Answer the context questions by hand."
+    )
+    assert found.file.context == {}
+    coded = {"code": {"coding": [{"system": "urn:example", "code": "X1", "display": "Liver cirrhosis"}]}}
+    assert "It may bear on: Does the patient have hepatic failure? Answer" in line(
+        of(level(), condition("", **coded)), 2
+    )
+
+
+@pytest.mark.parametrize("code", ["entered-in-error", "refuted"])
+def test_a_diagnosis_that_was_taken_back_is_left_out_and_listed(code: str) -> None:
+    found = of(level(), condition("Cirrhosis of liver", verificationStatus=status(code)))
+    assert line(found, 2) == f'Entry 2, Condition: left out. The diagnosis "Cirrhosis of liver" is marked {code}.'
+
+
+def test_the_words_of_a_diagnosis_point_to_questions_that_exist() -> None:
+    known = set(every_question())
+    assert set(fhir._BEARS_ON) <= known
+
+
 def test_unknown_products_codes_and_resources_are_listed_with_what_to_do() -> None:
     found = read("orders")
     assert line(found, 3) == (
@@ -237,8 +279,8 @@ def test_unknown_products_codes_and_resources_are_listed_with_what_to_do() -> No
         "interactions."
     )
     assert line(found, 8) == (
-        'Entry 8, Condition: not understood. The diagnosis "Hypoalbuminaemia" is shown, not read: no such code '
-        "could be checked. Answer the context questions by hand."
+        'Entry 8, Condition: not understood. The diagnosis "Hypoalbuminaemia" is shown, not read into an answer: no '
+        "code of a diagnosis could be verified. Answer the context questions by hand."
     )
     assert line(found, 9) == (
         "Entry 9, AllergyIntolerance: not understood. This kind of resource is not read. "
