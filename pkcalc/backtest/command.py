@@ -4,12 +4,12 @@ from __future__ import annotations
 
 import sys
 import time
-from collections.abc import Iterator
+from collections.abc import Iterator, Sequence
 from contextlib import contextmanager
 from pathlib import Path
 
 from pkcalc.backtest.folder import open_folder
-from pkcalc.backtest.outlook import check_drug
+from pkcalc.backtest.outlook import CHOICES, check_drug
 from pkcalc.backtest.parts import Store
 from pkcalc.backtest.report import summary, write_reports
 from pkcalc.backtest.run import Told, plan_of, run, still_to_do
@@ -64,14 +64,16 @@ def backtest(
     out: Path | None,
     workers: int,
     cluster: str,
+    methods: Sequence[str] = (),
 ) -> tuple[int, str]:
-    """Run or continue a back-test; exit status and what stdout is told."""
+    """Run or continue a back-test; exit status and what stdout is told. methods: of `CHOICES`; none: all."""
     check_drug(drug)
     local: Site = no_site() if site is None else load_site(site)
     local.target(load_profile(drug))  # refuses a site file of another drug before any patient is read
     found_folder = open_folder(folder)
     results = out if out is not None else folder / RESULTS
-    plan = plan_of(found_folder, drug, local, local.sha256)
+    chosen = tuple(m for name, m in CHOICES.items() if name in methods or not methods)
+    plan = plan_of(found_folder, drug, local, local.sha256, chosen)
     progress = Progress()
     told: Told = progress.told
     with progress.shown():

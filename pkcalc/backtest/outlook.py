@@ -3,6 +3,10 @@
 For each level the record is cut at the draw and only earlier levels are used. The doses up to the draw are
 taken as known. What is forecast is the level as the laboratory would measure it, on the working basis (total
 at normal binding): the true level by the draws of the estimate, with the spread of a measured level on top.
+
+What one patient's forecasts share is calculated once: each estimate, the courses of the population's draws at
+all levels, and where the patient lies in the population, for which the draws that forecast the last level are
+weighed by what came (importance weights).
 """
 
 from __future__ import annotations
@@ -15,7 +19,7 @@ from dataclasses import dataclass, field, replace
 import numpy as np
 from numpy.typing import NDArray
 
-from pkcalc import formulas, steadiness
+from pkcalc import flow, formulas, steadiness
 from pkcalc.backtest.folder import Raw, case_of
 from pkcalc.case import Case
 from pkcalc.cautions import State
@@ -24,8 +28,9 @@ from pkcalc.drugs.profile import Prior, Profile, load_profile
 from pkcalc.errors import CannotEstimate, CaseError, DrugFileError, as_typed
 from pkcalc.estimate import posterior
 from pkcalc.estimate.error_model import LevelData, RecordSpread
+from pkcalc.estimate.intake import intake_gain, plan_intake, taken_on_average
 from pkcalc.estimate.pair import SteadyPair, VolumeSpread, from_steady_levels
-from pkcalc.estimate.predict import predicted_levels
+from pkcalc.estimate.predict import predicted_levels, volume_of
 from pkcalc.estimate.result import Estimate, weighted_quantile
 from pkcalc.given import given_record
 from pkcalc.levels import Observation, observe
@@ -37,7 +42,13 @@ Floats = NDArray[np.float64]
 PRIOR, ONE, TWO, WHOLE = "population only", "one level", "two-level formula", "whole record"
 METHODS = (PRIOR, ONE, TWO, WHOLE)
 
+#: What each is called where a person chooses among them.
+CHOICES = {"population": PRIOR, "one-level": ONE, "two-level": TWO, "whole-record": WHOLE}
+
 DRAWS = 1024
+
+#: With fewer effective draws than this the place in the population is estimated anew, not weighed.
+_EFFECTIVE_DRAWS = 100.0
 MOST_DOSES = 5_000
 MOST_LEVELS = 40
 _SEED = 20_261_201
@@ -105,7 +116,9 @@ class _Known:
     observations: tuple[Observation, ...]
     data: dict[int, LevelData]
     groups: str
+    methods: Sequence[str]
     estimates: dict[tuple[int, ...], Estimate | str] = field(default_factory=dict)
+    last: tuple[tuple[int, ...], Estimate, Floats] | None = None
 
     def row(self, kind: str, **more: object) -> Row:
         return replace(Row(self.raw.number, self.raw.key, kind, groups=self.groups), **more)  # type: ignore[arg-type]
@@ -124,10 +137,11 @@ class _Known:
         return self.estimates[key]
 
 
-def outlooks(raw: Raw, drug: str, site: Site) -> list[Row]:
-    """Every forecast of one patient, and what was left out with the reason. Never raises for bad data."""
+def outlooks(raw: Raw, drug: str, site: Site, methods: Sequence[str] = METHODS) -> list[Row]:
+    """Every forecast of one patient by these methods, and what was left out with the reason. Never raises for
+    bad data."""
     try:
-        return _outlooks(raw, drug, site)
+        return _outlooks(raw, drug, site, methods)
     except CaseError as error:
         detail = " ".join(p.text for p in error.problems[:3])
         more = len(error.problems) - 3
@@ -142,7 +156,7 @@ def _aside(raw: Raw, reason: str, detail: str) -> Row:
     return Row(raw.number, as_typed(raw.key), SET_ASIDE, reason=reason, detail=as_typed(detail, 600))
 
 
-def _outlooks(raw: Raw, drug: str, site: Site) -> list[Row]:
+def _outlooks(raw: Raw, drug: str, site: Site, methods: Sequence[str]) -> list[Row]:
     case = case_of(raw, drug)
     if case.drug != drug:
         return [_aside(raw, "another drug", f"The case is about {case.drug}.")]
@@ -169,11 +183,13 @@ def _outlooks(raw: Raw, drug: str, site: Site) -> list[Row]:
         observations,
         {x.index: x for x in level_data(state)},
         json.dumps(raw.groups, sort_keys=True, ensure_ascii=False) if raw.groups else "",
+        methods,
     )
     found: list[Row] = []
     days = {o.level.index: 0.0 if o.level.drawn is None else case.day(o.level.drawn) for o in observations}
     order = sorted(observations, key=lambda o: (days[o.level.index], o.level.index))
     learned: list[int] = []
+    held: list[tuple[Observation, LevelData, list[int]]] = []
     for o in order:
         reason = _left_out(known, o)
         if reason:
@@ -185,12 +201,42 @@ def _outlooks(raw: Raw, drug: str, site: Site) -> list[Row]:
             found.append(known.row(LEFT_OUT, level=o.level.index + 1, reason=f"after the first {MOST_LEVELS} levels"))
             continue
         at = known.data[o.level.index]
-        earlier = [i for i in learned if known.data[i].time_day < at.time_day]
-        found += _one_level(known, o, at, earlier)
+        held.append((o, at, [i for i in learned if known.data[i].time_day < at.time_day]))
         learned.append(o.level.index)
-    if learned:
+    at_first = _by_population(known, [at.time_day for _, at, _ in held]) if held else np.zeros((0, 0))
+    for n, (o, at, earlier) in enumerate(held):
+        found += _one_level(known, o, at, earlier, at_first[:, n])
+    if learned and WHOLE in methods:
         found += _against_population(known, learned)
     return found
+
+
+def _by_population(known: _Known, days: Sequence[float]) -> Floats:
+    """True level at each of these days by the draws of the population, in one pass; shape (draws, days).
+
+    As `predicted_levels` where no level is known, but no number drawn for one day depends on what was given
+    after it: doses are doubted in the order in which they were given.
+    """
+    estimate = known.estimate([])
+    assert isinstance(estimate, Estimate)
+    vmax, volume = estimate.vmax_mg_per_day, volume_of(estimate)
+    kappa = estimate.km_mg_per_L * volume
+    record = posterior.written_out(_until(known.record, max(days)))
+    full = posterior.with_population_path(taken_on_average(record, known.spread), known.prior.first_order_per_day)
+    plan = plan_intake(full, days, known.spread)
+    course = flow.amounts(
+        full, plan.sample_days, vmax, kappa, volume_L=volume, typical_per_day=_typical_per_day(estimate)
+    )
+    levels: Floats = course[:, plan.level_at] / volume[:, None]
+    if plan.groups:
+        chance = np.random.default_rng(_SEED + 1)
+        habit = chance.standard_normal(len(vmax))
+        odds = plan.variance[:-1]
+        taken = odds / (1 + odds) <= chance.random((len(odds), len(vmax))).T
+        change = np.column_stack([taken * (1 + odds) - 1, habit])
+        gain = intake_gain(plan, full, course, vmax, kappa, volume_L=volume)
+        levels = levels * np.exp(np.einsum("ntd,nd->nt", gain, change))
+    return levels
 
 
 def _left_out(known: _Known, o: Observation) -> str:
@@ -205,32 +251,62 @@ def _left_out(known: _Known, o: Observation) -> str:
     return ""
 
 
-def _one_level(known: _Known, o: Observation, at: LevelData, earlier: list[int]) -> list[Row]:
-    found = [_by_draws(known, PRIOR, o, at, [], len(earlier))]
-    if earlier:
-        latest = max(earlier, key=lambda i: (known.data[i].time_day, i))
-        one = _by_draws(known, ONE, o, at, [latest], len(earlier))
-        # from a single earlier level the two are the same calculation
-        whole = (
-            replace(one, method=WHOLE) if earlier == [latest] else _by_draws(known, WHOLE, o, at, earlier, len(earlier))
-        )
-        found += [one, _by_pair(known, o, at, earlier), whole]
+def _typical_per_day(estimate: Estimate) -> float:
+    """What sets the engine's steps, as within the estimates: errors of 1e-3 for the fastest per cent of the draws,
+    of 1e-5 for the rest; the very fastest, a draw or two, get no class of steps of their own."""
+    per_day = estimate.vmax_mg_per_day / (estimate.km_mg_per_L * volume_of(estimate))
+    return max(posterior.STEPS * float(np.quantile(per_day, 0.99)), 0.2501 * float(np.max(per_day)))
+
+
+def _one_level(known: _Known, o: Observation, at: LevelData, earlier: list[int], at_first: Floats) -> list[Row]:
+    """The rows of one level. at_first: the true level by the population's draws."""
+    found = []
+    if PRIOR in known.methods:
+        found.append(_by_draws(known, PRIOR, o, at, [], len(earlier), at_first))
+    if not earlier:
+        if WHOLE in known.methods:
+            known.last = ((o.level.index,), known.estimate([]), at_first)  # type: ignore[assignment]
+        return found
+    latest = max(earlier, key=lambda i: (known.data[i].time_day, i))
+    # from a single earlier level the two are the same calculation
+    same = earlier == [latest]
+    one = _by_draws(known, ONE, o, at, [latest], len(earlier)) if ONE in known.methods else None
+    if one is not None:
+        found.append(one)
+    if TWO in known.methods:
+        found.append(_by_pair(known, o, at, earlier))
+    if WHOLE in known.methods:
+        if same and one is not None:
+            found.append(replace(one, method=WHOLE))
+        else:
+            found.append(_by_draws(known, WHOLE, o, at, earlier, len(earlier)))
     return found
 
 
-def _by_draws(known: _Known, method: str, o: Observation, at: LevelData, which: list[int], earlier: int) -> Row:
+def _by_draws(
+    known: _Known,
+    method: str,
+    o: Observation,
+    at: LevelData,
+    which: list[int],
+    earlier: int,
+    true: Floats | None = None,
+) -> Row:
     estimate = known.estimate(which)
     head = {"level": o.level.index + 1, "method": method, "earlier": earlier, "population": known.prior.population}
     if isinstance(estimate, str):
         return known.row(NO_FORECAST, **head, reason="the estimate was refused or is not trusted", detail=estimate)
-    true = predicted_levels(
-        _until(known.record, at.time_day),
-        [known.data[i] for i in which],
-        known.spread,
-        estimate,
-        [at.time_day],
-        first_order_per_day=known.prior.first_order_per_day,
-    )[:, 0]
+    if true is None:
+        true = predicted_levels(
+            _until(known.record, at.time_day),
+            [known.data[i] for i in which],
+            known.spread,
+            estimate,
+            [at.time_day],
+            first_order_per_day=known.prior.first_order_per_day,
+            typical_per_day=_typical_per_day(estimate),
+        )[:, 0]
+        known.last = ((*which, o.level.index), estimate, true)
     if not np.all(np.isfinite(true)) or not np.all(true > 0):
         return known.row(NO_FORECAST, **head, reason="nothing had been absorbed yet by the record")
     measured = true * _measuring(at, known.spread, len(true))
@@ -310,15 +386,33 @@ def _latest_pair(known: _Known, pairs: Sequence[SteadyPair]) -> tuple[SteadyPair
     return (other[-1], last) if other else None
 
 
+def _placed(known: _Known, learned: list[int]) -> tuple[Estimate, Floats] | None:
+    """Draws and weights by all levels: those that forecast the last level, weighed by what came; a new estimate
+    where these are too few, or none."""
+    if known.last is not None and set(known.last[0]) == set(learned):
+        which, estimate, true = known.last
+        at = known.data[which[-1]]
+        if np.all(true > 0):
+            off = (math.log(at.level_mg_per_L) - np.log(true)) ** 2 / at.own_variance
+            chance, factor = known.spread.wrong_level_chance, known.spread.wrong_level_factor
+            usual, wrong = np.exp(-0.5 * off), np.exp(-0.5 * off / factor**2) / factor
+            weights = estimate.weights * ((1 - chance) * usual + chance * wrong)
+            total = float(np.sum(weights))
+            if total > 0 and total**2 >= _EFFECTIVE_DRAWS * float(np.sum(weights**2)):
+                return estimate, weights / total
+    found = known.estimate(learned)
+    return None if isinstance(found, str) else (found, found.weights)
+
+
 def _against_population(known: _Known, learned: list[int]) -> list[Row]:
     """Where this patient lies in the population by all levels, for the hint on the site's own population."""
-    estimate = known.estimate(learned)
-    if isinstance(estimate, str):
+    placed = _placed(known, learned)
+    if placed is None:
         return []
+    estimate, w = placed
     prior = known.prior
     a = np.log(estimate.vmax_mg_per_day / prior.vmax_mg_per_day)
     k = np.log(estimate.km_mg_per_L / prior.km_mg_per_L)
-    w = estimate.weights
     mean_a, mean_k = float(np.sum(w * a)), float(np.sum(w * k))
     return [
         known.row(

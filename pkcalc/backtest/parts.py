@@ -16,7 +16,7 @@ from importlib.util import find_spec
 from pathlib import Path
 from typing import Any
 
-from pkcalc.backtest.outlook import Row
+from pkcalc.backtest.outlook import METHODS, Row
 from pkcalc.errors import CaseError, Problem, as_typed
 
 #: Patients in one part.
@@ -38,6 +38,7 @@ class Plan:
     draws: int
     version: str
     results_date: str
+    methods: tuple[str, ...] = METHODS
     part: int = PART
 
     @property
@@ -106,7 +107,8 @@ def open_store(path: Path, plan: Plan) -> Store:
             earlier = json.loads(file.read_text(encoding="utf-8"))
         except ValueError:
             earlier = {}
-        differ = [f.name.replace("_", " ") for f in fields(Plan) if earlier.get(f.name) != getattr(plan, f.name)]
+        wanted = json.loads(json.dumps(asdict(plan)))
+        differ = [f.name.replace("_", " ") for f in fields(Plan) if earlier.get(f.name) != wanted[f.name]]
         if differ:
             raise CaseError(
                 Problem(

@@ -53,9 +53,14 @@ def hints(found: Findings) -> list[Hint]:
     return [h for h in made if h is not None]
 
 
-def verdict(found: Findings, suggested: Sequence[Hint]) -> list[str]:
-    """What the findings say about trusting the tool here, in sentences."""
+def verdict(found: Findings, suggested: Sequence[Hint], methods: Sequence[str] = METHODS) -> list[str]:
+    """What the findings say about trusting the tool here, in sentences. methods: those asked for."""
     whole = found.by_method.get(WHOLE)
+    if whole is None and WHOLE not in methods:
+        return [
+            "The whole record, by which the tool forecasts, was not among the methods asked for: how far its "
+            "forecasts can be trusted here is left open."
+        ]
     if whole is None:
         return ["No level could be forecast from an earlier one, so nothing can be said about this department."]
     if whole.sums.patients < FEWEST_PATIENTS:
@@ -116,6 +121,7 @@ def report_data(store: Store, folder: Folder, found: Findings, suggested: Sequen
         "results_date": plan.results_date,
         "site_sha256": plan.site,
         "input_sha256": plan.fingerprint,
+        "methods": list(plan.methods),
         "complete": not store.missing(),
         "patients": {
             "in_folder": plan.count,
@@ -126,7 +132,7 @@ def report_data(store: Store, folder: Folder, found: Findings, suggested: Sequen
         "rows_of_no_patient": {"count": folder.strays, "first": list(folder.strays_shown)},
         "levels_left_out": dict(sorted(found.left_out.items())),
         "no_forecast": [{"method": m, "reason": r, "levels": n} for (m, r), n in sorted(found.no_forecast.items())],
-        "verdict": verdict(found, suggested),
+        "verdict": verdict(found, suggested, plan.methods),
         "reading": READING,
         "caveats": list(CAVEATS),
         "by_method": {m: t.as_dict() for m, t in _ordered(found.by_method)},
@@ -334,7 +340,7 @@ def render_html(store: Store, folder: Folder, found: Findings, suggested: Sequen
         title=f"Back-test: {plan.drug}",
         synthetic=folder.synthetic,
         complete=not store.missing(),
-        verdict=verdict(found, suggested),
+        verdict=verdict(found, suggested, plan.methods),
         counts=_counts(store, folder, found),
         reading=READING,
         caveats=CAVEATS,
@@ -381,7 +387,7 @@ def summary(store: Store, folder: Folder, found: Findings, suggested: Sequence[H
             f"{m:<18}{s.rows:>8,}{s.mean(1).value:>7.2f} mg/L{t.median_absolute_error():>7.2f} mg/L"
             f"{100 * s.mean(6).value:>10.0f} %{100 * s.mean(8).value:>7.0f} %"
         )
-    return "\n".join([*lines, "", *verdict(found, suggested)]) + "\n"
+    return "\n".join([*lines, "", *verdict(found, suggested, store.plan.methods)]) + "\n"
 
 
 def _outside(rows: Iterable[Row]) -> Iterable[list[str]]:

@@ -17,7 +17,7 @@ from typing import Any
 
 from pkcalc import __version__
 from pkcalc.backtest.folder import Folder, Raw
-from pkcalc.backtest.outlook import DRAWS, Row, outlooks
+from pkcalc.backtest.outlook import DRAWS, METHODS, Row, outlooks
 from pkcalc.backtest.parts import Plan, Store, alone, open_store
 from pkcalc.consult import RESULTS_DATE
 from pkcalc.errors import CaseError, Problem, as_typed
@@ -48,9 +48,9 @@ class Outcome:
         return not self.store.missing()
 
 
-def plan_of(folder: Folder, drug: str, site: Site, site_hash: str = "") -> Plan:
+def plan_of(folder: Folder, drug: str, site: Site, site_hash: str = "", methods: tuple[str, ...] = METHODS) -> Plan:
     """The plan of a run: equal plans give equal results."""
-    return Plan(folder.count, folder.fingerprint, drug, site_hash, DRAWS, __version__, RESULTS_DATE)
+    return Plan(folder.count, folder.fingerprint, drug, site_hash, DRAWS, __version__, RESULTS_DATE, methods)
 
 
 def still_to_do(store: Store) -> int:
@@ -83,12 +83,12 @@ def run(
         try:
             if workers or cluster:
                 with _client(workers, cluster) as client:
-                    _spread(client, folder, store, plan.drug, site, told, lost)
+                    _spread(client, folder, store, site, told, lost)
             else:
                 for part in store.missing():
                     rows: list[Row] = []
                     for raw in folder.patients(*plan.span(part)):
-                        rows += outlooks(raw, plan.drug, site)
+                        rows += outlooks(raw, plan.drug, site, plan.methods)
                         told(1)
                     store.write(part, rows)
         except KeyboardInterrupt:
@@ -97,19 +97,20 @@ def run(
     return Outcome(store, before, done, interrupted, tuple(lost))
 
 
-def one_part(raws: Sequence[Raw], drug: str, site: Site) -> list[Row]:
+def one_part(raws: Sequence[Raw], drug: str, site: Site, methods: tuple[str, ...]) -> list[Row]:
     """The rows of one part; what a worker does."""
-    return [row for raw in raws for row in outlooks(raw, drug, site)]
+    return [row for raw in raws for row in outlooks(raw, drug, site, methods)]
 
 
-def _spread(client: Any, folder: Folder, store: Store, drug: str, site: Site, told: Told, lost: list[int]) -> None:
+def _spread(client: Any, folder: Folder, store: Store, site: Site, told: Told, lost: list[int]) -> None:
+    plan = store.plan
     from distributed import as_completed
 
     waiting = iter(store.missing())
 
     def send(part: int) -> Any:
-        raws = list(folder.patients(*store.plan.span(part)))
-        future = client.submit(one_part, raws, drug, site, key=f"pkcalc-part-{part}", pure=False)
+        raws = list(folder.patients(*plan.span(part)))
+        future = client.submit(one_part, raws, plan.drug, site, plan.methods, key=f"pkcalc-part-{part}", pure=False)
         parts[future.key] = part
         return future
 
@@ -120,7 +121,7 @@ def _spread(client: Any, folder: Folder, store: Store, drug: str, site: Site, to
         part = parts.pop(future.key)
         if future.status == "finished":
             store.write(part, future.result())
-            first, last = store.plan.span(part)
+            first, last = plan.span(part)
             told(last - first)
         else:
             lost.append(part)

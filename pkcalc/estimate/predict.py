@@ -47,20 +47,21 @@ def predicted_levels(
     *,
     following: Sequence[Dose] = (),
     first_order_per_day: float = 0.0,
+    typical_per_day: float | None = None,
 ) -> Floats:
     """True level [mg/L, working basis] at each time for every draw of the estimate; shape (draws, times).
 
     record, levels, spread: as given to `from_record`. following: doses planned after the record. The doses
     that follow are doubted as much as `spread` says for their days (give it as periods where dosing will be
     observed). times_day: at or after the record's start. first_order_per_day: the population's parallel path,
-    if any."""
+    if any. typical_per_day: what sets the engine's steps, as in `flow.amounts`."""
     whole = replace(record, doses=(*record.doses, *following))
     full = with_population_path(taken_on_average(written_out(whole), spread), first_order_per_day)
     days = [*(x.time_day for x in levels), *times_day]
     plan = plan_intake(full, days, spread)
     vmax, volume = estimate.vmax_mg_per_day, volume_of(estimate)
     kappa = estimate.km_mg_per_L * volume
-    course = flow.amounts(full, plan.sample_days, vmax, kappa, volume_L=volume)
+    course = flow.amounts(full, plan.sample_days, vmax, kappa, volume_L=volume, typical_per_day=typical_per_day)
     gain = intake_gain(plan, full, course, vmax, kappa, volume_L=volume)
     log_level = np.log(course[:, plan.level_at]) - np.log(volume)[:, None]
     m, n = len(levels), len(vmax)
