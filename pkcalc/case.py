@@ -174,6 +174,7 @@ class LoadFile(BaseModel):
 
     model_config = _FILE
     form: Text
+    route: Text = Field("", description="Only where it is not the form's usual one, so that it can be answered.")
     aim: Text = ""
     at: Text = ""
 
@@ -902,6 +903,9 @@ def check_case(file: CaseFile) -> Case:
     )
     if file.plan.load and file.plan.load.form not in profile.forms:
         check.say("Plan, load, form", f'"{file.plan.load.form}" was given', ", ".join(profile.forms), "Choose a form")
+    routes = sorted({r for f in profile.forms.values() for r in (*f.routes, *f.refused_routes)} - {"any"})
+    if file.plan.load and file.plan.load.route and file.plan.load.route not in routes:
+        check.say("Plan, load, route", f'"{file.plan.load.route}" was given', ", ".join(routes), "Choose a route")
     _check_zones(case, check)
     if not check.problems:
         _check_order(case, check)

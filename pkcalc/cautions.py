@@ -181,6 +181,14 @@ def _answered_both(s: State, p: Mapping[str, Any]) -> list[Words]:
     return [{}] if s.case.answer(p["question"]) == s.case.answer(p["other"]) == "yes" else []
 
 
+def _load_by_refused_route(s: State, p: Mapping[str, Any]) -> list[Words]:
+    load = s.case.file.plan.load
+    form = s.profile.forms.get(load.form) if load is not None else None
+    if load is None or form is None or load.route not in form.refused_routes:
+        return []
+    return [{"salt": form.salt, "route": load.route, "why": form.refused_routes[load.route]}]
+
+
 def _answered_without(s: State, p: Mapping[str, Any]) -> list[Words]:
     """Speaks where `question` is answered yes and the answer to `other` is not known."""
     unknown = s.case.answer(p["other"]) in ("unknown", "not stated")
@@ -567,6 +575,7 @@ PREDICATES: dict[str, Predicate] = {
     "always": _always,
     "answered": _answered,
     "answered_both": _answered_both,
+    "load_by_refused_route": _load_by_refused_route,
     "answered_without": _answered_without,
     "at_or_above_vmax": _at_or_above_vmax,
     "chance_of_negative_km_above": _chance_of_negative_km_above,

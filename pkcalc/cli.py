@@ -175,8 +175,8 @@ _site = click.option(
     "plan_settings",
     multiple=True,
     metavar="KEY=VALUE",
-    help="In place of the case's own: shelf, products, aim, largest-step, order-by-loss, load, load-aim, load-at, "
-    'restart-level, start. For example --plan shelf=united-states --plan "aim=15 mg/L".',
+    help="In place of the case's own: shelf, products, aim, largest-step, order-by-loss, load, load-route, load-aim, "
+    'load-at, restart-level, start. For example --plan shelf=united-states --plan "aim=15 mg/L".',
 )
 @_note_format
 @_out

@@ -239,8 +239,9 @@ class LargeOral:
 
 @dataclass(frozen=True)
 class OralLoad:
-    """A load by mouth: split parts, hours apart, and who must not have it."""
+    """A load by mouth: split parts, hours apart, and who must not have it. Amounts are of `form`, labelled."""
 
+    form: str
     total_mg: float
     parts_mg: tuple[float, ...]
     hours_apart: float
@@ -1178,6 +1179,7 @@ def _loading(t: Table, forms: Mapping[str, Form]) -> Loading:
     if t.has("oral"):
         o = t.table("oral")
         oral = OralLoad(
+            form=named(o),
             total_mg=o.number("total", "amount"),
             parts_mg=o.several("parts", "amount"),
             hours_apart=o.number("apart", "interval"),

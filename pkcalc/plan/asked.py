@@ -18,6 +18,7 @@ _PLACES: dict[str, tuple[str, ...]] = {
     "largest-step": ("plan", "largest_step"),
     "order-by-loss": ("plan", "order_by_loss"),
     "load": ("plan", "load", "form"),
+    "load-route": ("plan", "load", "route"),
     "load-aim": ("plan", "load", "aim"),
     "load-at": ("plan", "load", "at"),
     "restart-level": ("plan", "restart_level"),

@@ -14,11 +14,12 @@ from pkcalc import flow, formulas
 from pkcalc.case import Case
 from pkcalc.clock import show_time
 from pkcalc.dosing import Intake, absorption_of, active_mg
-from pkcalc.drugs.profile import IvLine, OralLoad, Product, Profile, RateCap
+from pkcalc.drugs.profile import Form, IvLine, OralLoad, Product, Profile, RateCap
 from pkcalc.estimate.result import Band, Estimate
 from pkcalc.forecast import TIME_DRAWS, Goal, bands, draws_of, fewer_draws
 from pkcalc.plan.limits import is_child
 from pkcalc.plan.present import Floats, Today, present_course, published_peaks
+from pkcalc.plan.shelf import MOST_ML_AT_ONCE
 from pkcalc.record import Dose, Record
 from pkcalc.site import Site
 from pkcalc.units import percent, show, show_number
@@ -27,6 +28,8 @@ from pkcalc.units import percent, show, show_number
 ELDERLY_YEARS = 65.0
 #: Whole vials are taken where that changes the amount by no more than this; else a measured volume.
 VIAL_ROUNDING = 0.05
+#: A route by which maintenance may be given, and no load.
+INTO_A_MUSCLE = "intramuscular"
 #: Days after a load for which the level with the maintenance dose is named.
 FOLLOWED_DAYS = (1.0, 3.0, 7.0, 14.0)
 #: Which answers mean that an exclusion of the drug file holds.
@@ -113,6 +116,20 @@ def loads(ward: Ward) -> tuple[tuple[Load, ...], tuple[str, ...]]:
     if ward.estimate.volume_L is None:
         return (), ("No load can be worked out without a weight: there is no volume.",)
     form = profile.forms[asked.form]
+    muscle = asked.route == INTO_A_MUSCLE or form.route == INTO_A_MUSCLE
+    if asked.route and asked.route not in form.routes and not muscle:
+        return (), (
+            f"No load of {form.words} by the {asked.route} route: this form is given by the {' or '.join(form.routes)} "
+            "route. Ask for a form that is given so, or leave the route out.",
+        )
+    if muscle:
+        return (), (
+            f"No load of {form.salt} into a muscle: how much is given so, in how many places and how much in each, is "
+            "not in the drug file, because no source of it was read. Ask for a load into a vein or by mouth; where "
+            "neither can "
+            f"be, follow the local protocol, and draw a level {show(profile.sampling.after_im_h, 'h')} after the dose, "
+            "not earlier.",
+        )
     mine = [profile.products[p] for p in ward.products if profile.products[p].form == asked.form]
     if not mine:
         return (), (f"No load of {form.words}: there is no such product on the shelf in use.",)
@@ -134,8 +151,9 @@ def loads(ward: Ward) -> tuple[tuple[Load, ...], tuple[str, ...]]:
     if _load_unit(mine, oral) is None:
         parts = ", ".join(show_number(mg) for mg in oral.parts_mg)
         return (), (
-            f"No load of {form.words}: the published load by mouth is in capsules or tablets whose size divides its "
-            f"parts ({parts} {form.amount_unit}); ask for such a form, or for one into a vein.",
+            f"No load of {form.words}: none on the shelf in use has a size that divides the parts of the published "
+            f"load by mouth ({parts} {form.amount_unit}), and none is a liquid of one strength; ask for another form, "
+            "or for one into a vein.",
         )
     made = by_mouth(ward, mine, aim)
     if made is None:
@@ -277,9 +295,24 @@ def by_mouth(ward: Ward, products: Sequence[Product], aim_mg_per_L: float) -> Lo
         )
     )
     most, notes = ceiling(ward, wanted, form.amount_unit)
-    if min(wanted, most) > oral.total_mg:
-        notes.append(f"Cut to {show(oral.total_mg, form.amount_unit, 6)}, the largest load by mouth.")
-    parts = split(min(wanted, most, oral.total_mg), unit.mg_per_unit, oral)
+    published = profile.forms[oral.form]
+    same_active = published.active_fraction / form.active_fraction
+    total = oral.total_mg * same_active
+    if min(wanted, most) > total:
+        notes.append(f"Cut to {show(total, form.amount_unit, 6)}, the largest load by mouth.")
+    if form.active_fraction != published.active_fraction:
+        notes.append(
+            f"The published load is of {published.words}: at most {show(oral.total_mg, published.amount_unit, 6)}, "
+            f"{show(oral.largest_part_mg, published.amount_unit, 6)} at a time. The same active drug is "
+            f"{show(total, form.amount_unit, 4)} of {form.words}, "
+            f"{show(oral.largest_part_mg * same_active, form.amount_unit, 4)} at a time, and is not exceeded."
+        )
+    at_once = oral.largest_part_mg * same_active
+    if unit.unit == "mL":
+        at_once = min(at_once, MOST_ML_AT_ONCE * unit.mg_per_unit)
+    parts = split(
+        min(wanted, most), unit.mg_per_unit * _step(unit), total_mg=total, at_once_mg=at_once, apart_h=oral.hours_apart
+    )
     if not parts:
         return None
     amount = sum(mg for _, mg in parts)
@@ -306,16 +339,21 @@ def by_mouth(ward: Ward, products: Sequence[Product], aim_mg_per_L: float) -> Lo
         elif any(a != "no" for a in answers.values()) or not answers:
             asked = " ".join(profile.questions[q].words for q, a in answers.items() if a != "no")
             why.append(f"No load by mouth before {excluded} is excluded. {asked}".strip())
+    if case.answer("tube_feed") == "yes":
+        why.append(
+            "Tube fed: nobody can tell how much of a load given down the tube would be absorbed. Load into a vein, or "
+            "ask the prescriber for another way."
+        )
     pieces = ", then ".join(
-        f"{show_number(mg / unit.mg_per_unit, 6)} x {show(unit.mg_per_unit, form.amount_unit, 6)}"
-        f" ({show(mg, form.amount_unit, 6)})"
-        + (f" after {show_number(h)} h" if h else "" if len(parts) == 1 else " at once")
+        _piece(mg, unit, form) + (f" after {show_number(h)} h" if h else "" if len(parts) == 1 else " at once")
         for h, mg in parts
     )
+    liquid = (f"{_sentence(unit.words)[:-1]}: {unit.strength_words}.",) if unit.unit == "mL" else ()
     order = (
         f"{show(amount, form.amount_unit, 6)} {form.words} by mouth"
         + (f" in {len(parts)} parts" if len(parts) > 1 else "")
         + f": {pieces}.",
+        *liquid,
         oral.setting,
         f"Maintenance goes on as well: {ward.maintenance_words}; the load does not replace it."
         if usual_dose(ward) is not None
@@ -617,27 +655,47 @@ def _sentence(text: str) -> str:
     return text[0].upper() + text[1:] + ("" if text.endswith(".") else ".")
 
 
+def _piece(mg: float, unit: Product, form: Form) -> str:
+    """'4 x 100 mg (400 mg)', '312.5 mg (12.5 mL)'."""
+    amount = show(mg, form.amount_unit, 6)
+    if unit.unit == "mL":
+        return f"{amount} ({show(mg / unit.mg_per_unit, 'mL', 6)})"
+    return f"{show_number(mg / unit.mg_per_unit, 6)} x {show(unit.mg_per_unit, form.amount_unit, 6)} ({amount})"
+
+
+def _step(unit: Product) -> float:
+    """Of a liquid what can be measured, of capsules and tablets whole ones."""
+    return unit.smallest_step if unit.unit == "mL" else 1.0
+
+
 def _load_unit(products: Sequence[Product], oral: OralLoad) -> Product | None:
-    """The largest solid size that divides every published part; None where there is none."""
+    """The largest solid size that divides every published part, else the only liquid; None where there is neither.
+
+    Of two strengths of a liquid none is chosen: mixing them up would be a slip of several times.
+    """
+    liquids = [p for p in products if p.unit == "mL"]
     fits = [
         p
         for p in products
         if p.unit != "mL" and all(abs(mg / p.mg_per_unit - round(mg / p.mg_per_unit)) < 1e-9 for mg in oral.parts_mg)
     ]
-    return max(fits, key=lambda p: p.mg_per_unit, default=None)
+    solid = max(fits, key=lambda p: p.mg_per_unit, default=None)
+    return solid or (liquids[0] if len(liquids) == 1 else None)
 
 
-def split(amount_mg: float, unit_mg: float, oral: OralLoad) -> tuple[tuple[float, float], ...]:
+def split(
+    amount_mg: float, unit_mg: float, *, total_mg: float, at_once_mg: float, apart_h: float
+) -> tuple[tuple[float, float], ...]:
     """Parts of an oral load as (hours from the first, mg): whole units, none above the largest part, the larger first.
 
-    The amount is rounded to the nearest whole unit; empty where that is none.
+    The amount is rounded to the nearest whole unit and never above the total; empty where that is none.
     """
-    units = round(amount_mg / unit_mg)
-    while units * unit_mg > oral.total_mg + 1e-9:
+    units = round(min(amount_mg, total_mg) / unit_mg)
+    while units * unit_mg > total_mg + 1e-9:
         units -= 1
-    per_part = int(oral.largest_part_mg / unit_mg + 1e-9)
+    per_part = int(at_once_mg / unit_mg + 1e-9)
     if units <= 0 or per_part <= 0:
         return ()
     count = math.ceil(units / per_part)
     even, extra = divmod(units, count)
-    return tuple((k * oral.hours_apart, (even + (1 if k < extra else 0)) * unit_mg) for k in range(count))
+    return tuple((k * apart_h, (even + (1 if k < extra else 0)) * unit_mg) for k in range(count))

@@ -180,7 +180,11 @@ def test_published_amounts_per_kg(amount: float, weight: float, printed: str) ->
 def test_published_load_by_mouth() -> None:
     assert P.loading is not None
     assert P.loading.oral is not None
-    assert loading.split(1000, 100, P.loading.oral) == ((0.0, 400.0), (2.0, 300.0), (4.0, 300.0))
+    assert loading.split(1000, 100, total_mg=1000, at_once_mg=400, apart_h=2.0) == (
+        (0.0, 400.0),
+        (2.0, 300.0),
+        (4.0, 300.0),
+    )
 
 
 # Drug information question of 14 March 2005, citing Winter (read): 400 mg/day of sodium salt is 368 mg of acid, given as

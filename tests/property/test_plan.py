@@ -181,7 +181,9 @@ def test_an_infusion_never_breaks_its_cap(amount: float, form: str, weight: floa
 def test_parts_of_an_oral_load_keep_every_rule(amount: float, unit: float) -> None:
     oral = P.loading.oral  # type: ignore[union-attr]
     assert oral is not None
-    parts = loading.split(amount, unit, oral)
+    parts = loading.split(
+        amount, unit, total_mg=oral.total_mg, at_once_mg=oral.largest_part_mg, apart_h=oral.hours_apart
+    )
     total = sum(mg for _, mg in parts)
     assert total <= oral.total_mg
     assert all(0 < mg <= oral.largest_part_mg for _, mg in parts)

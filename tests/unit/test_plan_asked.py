@@ -30,6 +30,7 @@ def test_settings_stand_in_for_those_of_the_case() -> None:
             "largest-step = 30 mg/day",
             "order-by-loss=yes",
             "load=injection",
+            "load-route=intravenous",
             "load-aim=18 mg/L",
             "load-at=2026-12-01 12:00",
             "restart-level=19 mg/L",
@@ -41,6 +42,7 @@ def test_settings_stand_in_for_those_of_the_case() -> None:
     assert asked.order_by_loss
     assert asked.load is not None
     assert asked.load.form == "injection"
+    assert asked.load.route == "intravenous"
     assert found.aim_mg_per_L == 14
     assert found.largest_step_mg_per_day == 30
     assert found.load_aim_mg_per_L == 18
@@ -50,7 +52,9 @@ def test_settings_stand_in_for_those_of_the_case() -> None:
 
 
 def test_every_refusal_in_words() -> None:
-    known = "shelf, products, aim, largest-step, order-by-loss, load, load-aim, load-at, restart-level, start"
+    known = (
+        "shelf, products, aim, largest-step, order-by-loss, load, load-route, load-aim, load-at, restart-level, start"
+    )
     assert problems("shelve=united-states") == [
         f'Plan: "shelve=united-states" was given. Allowed: a setting of {known}. Did you mean shelf?'
     ]

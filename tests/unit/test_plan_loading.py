@@ -9,9 +9,14 @@ import numpy as np
 import pytest
 
 from pkcalc import formulas
+from pkcalc.consult import run_consult
+from pkcalc.errors import CaseError
+from pkcalc.note.document import compose
+from pkcalc.note.text import render
 from pkcalc.plan import loading
 from pkcalc.plan.loading import Load
 from pkcalc.site import no_site
+from tests.unit import cases
 from tests.unit.cases import PLAIN
 from tests.unit.planning import estimate, exact, plan, profile
 
@@ -225,7 +230,7 @@ def test_the_level_after_a_load_by_mouth_waits_for_the_published_peak() -> None:
 def test_parts_of_an_oral_load(amount: float, parts: tuple[float, ...]) -> None:
     assert P.loading is not None
     assert P.loading.oral is not None
-    found = loading.split(amount, 100.0, P.loading.oral)
+    found = loading.split(amount, 100.0, total_mg=1000, at_once_mg=400, apart_h=2.0)
     assert tuple(mg for _, mg in found) == parts
     assert [h for h, _ in found] == [2.0 * k for k in range(len(parts))]
 
@@ -309,6 +314,122 @@ def test_loads_that_are_not_given_say_why() -> None:
     in_range = plan(None, exact(), **{**LOW, "levels": [{**LOW["levels"][0], "value": "12 mg/L"}]})
     assert in_range.loads == ()
     assert in_range.no_load == ()
+
+
+def test_no_load_into_a_muscle() -> None:
+    """Of the plain injection a stop, whatever else is asked; of the prodrug a refusal: no load so was read."""
+    asked_for = {"form": "injection", "route": "intramuscular"}
+    consult = run_consult(cases.plain(plan={"shelf": "united-states", "load": asked_for}))
+    (stop,) = [c for c in consult.cautions if c.id == "refused-route"]
+    assert stop.severity == "stop"
+    assert stop.text == (
+        "A load of phenytoin sodium by the intramuscular route was asked for. Never into a muscle: uptake is erratic "
+        "and goes on for weeks. Instead: into a vein, or by mouth where the patient can swallow; without a vein, "
+        "fosphenytoin by the local protocol (never for status epilepticus by this way)."
+    )
+    assert "loading" in consult.blocked
+    assert consult.plan is not None
+    assert consult.plan.loads == ()
+    assert stop.text in render(compose(consult)).replace("\n   ", " ")
+    into_vein = run_consult(cases.plain(plan={"shelf": "united-states", "load": {**asked_for, "route": ""}}))
+    assert "refused-route" not in {c.id for c in into_vein.cautions}
+    said = (
+        "No load of fosphenytoin into a muscle: how much is given so, in how many places and how much in each, is not "
+        "in the drug file, because no source of it was read. Ask for a load into a vein or by mouth; where neither can "
+        "be, follow the local protocol, and draw a level 4 h after the dose, not earlier.",
+    )
+    for load in (
+        {"form": "fosphenytoin-intramuscular"},
+        {"form": "fosphenytoin-injection", "route": "intramuscular"},
+        {"form": "fosphenytoin", "route": "intramuscular"},
+    ):
+        found = plan(None, exact(), **{**LOW, "plan": {"shelf": "united-states", "load": load}})
+        assert found.loads == ()
+        assert found.no_load == said
+    swallowed = {"form": "injection", "route": "oral"}
+    assert plan(None, exact(), **{**LOW, "plan": {"shelf": "united-states", "load": swallowed}}).no_load == (
+        "No load of injection into a vein (phenytoin sodium) by the oral route: this form is given by the intravenous "
+        "route. Ask for a form that is given so, or leave the route out.",
+    )
+
+
+def test_a_route_that_nothing_is_given_by() -> None:
+    with pytest.raises(CaseError) as refused:
+        cases.plain(plan={"load": {"form": "injection", "route": "im"}})
+    assert [p.text for p in refused.value.problems] == [
+        'Plan, load, route (line 1): "im" was given. Allowed: feeding tube, intramuscular, intravenous, oral. Choose a route.'
+    ]
+
+
+SUSPENSION_UK = {"shelf": "united-kingdom", "load": {"form": "suspension", "aim": "20 mg/L"}}
+
+
+def test_a_load_from_a_suspension_is_told_in_mL_with_its_concentration() -> None:
+    """1,000 mg of capsules are 920 mg of acid, 400 mg of them 368 mg: no part and no total is above that."""
+    load = loads(levels=[], doses=[], plan=asked("suspension", aim="20 mg/L"))["suspension"]
+    assert load.wanted_mg == pytest.approx(980.0)
+    assert load.amount_mg == 912.5
+    assert load.parts == ((0.0, 312.5), (2.0, 300.0), (4.0, 300.0))
+    assert load.active_mg == 912.5
+    assert load.order[:2] == (
+        "912.5 mg oral suspension (phenytoin acid) by mouth in 3 parts: 312.5 mg (12.5 mL) at once, then 300 mg (12 "
+        "mL) after 2 h, then 300 mg (12 mL) after 4 h.",
+        "Oral suspension, 125 mg in 5 mL: 125 mg of phenytoin (acid) in 5 mL, that is 25 mg in 1 mL.",
+    )
+    assert load.notes[1:3] == (
+        "Cut to 920 mg, the largest load by mouth.",
+        "The published load is of extended capsules (phenytoin sodium): at most 1,000 mg, 400 mg at a time. The same "
+        "active drug is 920 mg of oral suspension (phenytoin acid), 368 mg at a time, and is not exceeded.",
+    )
+    assert load.offered
+    weak = loads(levels=[], doses=[], plan=SUSPENSION_UK)["suspension"]
+    assert weak.order[1] == "Oral suspension, 30 mg in 5 mL: 30 mg of phenytoin (acid) in 5 mL, that is 6 mg in 1 mL."
+    assert weak.parts == ((0.0, 306.0), (2.0, 306.0), (4.0, 306.0))
+    assert "306 mg (51 mL) at once" in weak.order[0]
+
+
+@pytest.mark.parametrize("level", ["2 mg/L", "6 mg/L", "9 mg/L", "11 mg/L", "13 mg/L"])
+@pytest.mark.parametrize("shelf", ["united-states", "united-kingdom"])
+def test_every_part_of_a_suspension_load_can_be_measured(level: str, shelf: str) -> None:
+    changes = {
+        "levels": [{**LOW["levels"][0], "value": level}],
+        "plan": {"shelf": shelf, "load": {"form": "suspension"}},
+    }
+    for load in loads(**changes, doses=[{**LOW["doses"][0], "amount": "100 mg"}]).values():
+        product = P.products[load.product]
+        for _, mg in load.parts:
+            mL = mg / product.mg_per_unit
+            assert mL == pytest.approx(round(2 * mL) / 2)
+            assert 0 < mL <= 60
+            assert mg <= 368 + 1e-9
+        assert sum(mg for _, mg in load.parts) == load.amount_mg <= 920 + 1e-9
+        assert abs(load.amount_mg - min(load.wanted_mg, 920)) <= product.mg_per_unit * 0.5 + 1e-9
+
+
+def test_two_strengths_of_a_suspension_are_never_chosen_between() -> None:
+    both = [P.products["suspension-125"], P.products["suspension-30"]]
+    assert P.loading is not None
+    assert P.loading.oral is not None
+    assert loading._load_unit(both, P.loading.oral) is None
+    assert loading._load_unit(both[:1], P.loading.oral) is both[0]
+
+
+def test_chewable_tablets_keep_to_the_active_drug_of_the_published_load() -> None:
+    load = loads(levels=[], doses=[], plan=asked("chewable-tablet", aim="20 mg/L"))["chewable-tablet"]
+    assert load.parts == ((0.0, 300.0), (2.0, 300.0), (4.0, 300.0))
+    assert load.active_mg <= 920
+    assert "6 x 50 mg (300 mg) at once" in load.order[0]
+
+
+def test_no_load_down_a_tube_is_offered() -> None:
+    load = loads(levels=[], doses=[], context={"tube_feed": "yes"}, plan=asked("suspension", aim="20 mg/L"))[
+        "suspension"
+    ]
+    assert not load.offered
+    assert load.why_not == (
+        "Tube fed: nobody can tell how much of a load given down the tube would be absorbed. Load into a vein, or ask "
+        "the prescriber for another way.",
+    )
 
 
 def ward(level: float, measured: float, hours_ago: float = 3.0, **changes: Any) -> loading.Ward:

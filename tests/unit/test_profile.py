@@ -460,7 +460,9 @@ def test_only_extended_capsules_are_given_once_daily_by_mouth() -> None:
 
 def test_phenytoin_is_never_given_into_a_muscle() -> None:
     assert drug().forms["injection"].refused_routes == {
-        "intramuscular": "Never into a muscle: uptake is erratic and goes on for weeks."
+        "intramuscular": "Never into a muscle: uptake is erratic and goes on for weeks. Instead: into a vein, or by "
+        "mouth where the patient can swallow; without a vein, fosphenytoin by the local protocol (never for status "
+        "epilepticus by this way)."
     }
     assert {f.id for f in drug().forms.values() if "intramuscular" in f.routes} == {"fosphenytoin-intramuscular"}
 
@@ -758,12 +760,13 @@ def test_a_wrong_entry_is_refused(old: str, new: str, message: str) -> None:
         ('"chewable-50", "suspension-125", ', '"suspension-30", "suspension-125", ', "shelf.united-states.products: two strengths that must not be active together stand on one shelf. Take one of them out."),
         ("value = [400, 300, 300]", "value = [400, 300, 200]", "loading.oral.parts: the parts do not fit the total or the largest part. Mend the parts."),
         ("value = [400, 300, 300]", "value = [500, 300, 200]", "loading.oral.parts: the parts do not fit the total or the largest part. Mend the parts."),
+        ('[loading.oral]\nform = "extended-capsule"', '[loading.oral]\nform = "capsule"', 'loading.oral.form: "capsule" is not a form of this file. Name one of the forms above.'),
         ("value = [100, 50, 30]", "value = [100, 50]", "limits.step_sizes: one more step than edges is needed, edges rising. Mend the two lists."),
         ("value = [7, 12]", "value = [12, 7]", "limits.step_sizes: one more step than edges is needed, edges rising. Mend the two lists."),
         ('step_form = "sodium"', 'step_form = "salt"', 'limits.step_form: "salt" is not a form of this file. Name one of the forms above.'),
         ('form = "injection"\ngroup = "adult"', 'form = "syrup"\ngroup = "adult"', 'loading.rate_cap.injection-adult.form: "syrup" is not a form of this file. Name one of the forms above.'),
         ("ages = { value = [4, 7]", "ages = { value = [5, 7]", "population: the default populations leave a gap or overlap at 4 years. Make their ages meet."),
-        ('value = "Never into a muscle: uptake is erratic and goes on for weeks."', 'value = ""', "form.injection.refused_route.intramuscular.value: missing or empty. Write the sentence."),
+        ('value = "Never into a muscle: uptake is erratic and goes on for weeks. Instead: into a vein, or by mouth where the patient can swallow; without a vein, fosphenytoin by the local protocol (never for status epilepticus by this way)."', 'value = ""', "form.injection.refused_route.intramuscular.value: missing or empty. Write the sentence."),
         ('questions = ["seizing_now",', 'questions = ["seizing_noww",', 'drug.questions: "seizing_noww" is not a question. Perhaps "seizing_now" is meant.'),
         ('questions = ["seizing_now",', 'questions = ["blood_group",', 'drug.questions: "blood_group" is not a question. Add [question.blood_group].'),
         ('questions = ["seizing_now", ', "questions = [", 'drug.questions: "seizing_now" has words but is not asked. Add it to the list.'),

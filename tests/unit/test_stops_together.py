@@ -22,6 +22,7 @@ BRINGS: dict[str, dict[str, Any]] = {
     "overdose": {"context": {"overdose": "yes"}},
     "too-young": {"patient": {"age": "5 months", "weight": "60 kg"}},
     "hla-b1502": {"context": {"hla_b1502": "yes", "new_start": "yes"}},
+    "refused-route": {"plan": {"load": {"form": "injection", "route": "intramuscular"}}},
     "interacting-change": {"context": {"interacting_change": "yes"}},
     "tube-feed-change": {"context": {"tube_feed": "yes", "tube_feed_change": "yes"}},
     "renal-failure-total": {"context": {"renal_failure": "yes"}},
