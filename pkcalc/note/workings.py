@@ -7,12 +7,12 @@ printed (rounded) numbers and printed in turn. Where the programme's own number 
 from __future__ import annotations
 
 import math
-from collections.abc import Callable
 from dataclasses import dataclass
 from typing import Literal
 
 import numpy as np
 
+from pkcalc.case import Course
 from pkcalc.consult import Consult, Shown
 from pkcalc.dosing import Intake
 from pkcalc.estimate.pair import METHOD as TWO_LEVELS
@@ -121,12 +121,44 @@ def machine_only(consult: Consult) -> tuple[str, ...]:
             "along the course of "
             "all recorded doses. The one-level and two-level workings are checks beside it, not its derivation."
         )
+    if spoken_for(consult) is None:
+        return tuple(lines)
     lines.append(
         "The median level is not the level at the median Vmax and the median Km; the representative "
         "pair above is labelled "
         "so because it reproduces the printed central forecast, not because it is this patient's Vmax and Km."
     )
     return tuple(lines)
+
+
+def _rate(consult: Consult, mg_per_day: float, digits: int = 6) -> Number:
+    """A rate of active drug in the drug's own time unit."""
+    return printed(consult.profile.rate(mg_per_day), consult.profile.rate_unit, digits)
+
+
+def _infusion(course: Course, consult: Consult) -> Step:
+    """A running infusion, from mL or a rate per kg where it was typed so."""
+    profile = consult.profile
+    assert course.rate_mg_per_day is not None
+    form, product = profile.forms[course.rate_form], profile.products.get(course.typed.product)
+    salt, share = printed(form.salt_factor, "", 5), printed(form.bioavailability, "", 5)
+    labelled, weight = profile.rate(course.rate_mg_per_day), consult.case.patient.weight_kg
+    if course.typed.rate.endswith("/kg/h") and weight is not None:
+        per_kg, kg = printed(labelled / weight, "mg/kg/h", 6), printed(weight, "kg", 6)
+        what, numbers, value = "rate per kg x weight", f"{per_kg} x {kg}", per_kg.value * kg.value
+    elif product is None or not course.typed.rate.endswith("mL/h"):
+        given = printed(labelled, f"{form.amount_unit}/{profile.time_unit}", 6)
+        what, numbers, value = "rate", f"{given}", given.value
+    else:
+        per_mL = printed(product.mg_per_unit, f"{form.amount_unit}/mL", 6)
+        given = printed(labelled / product.mg_per_unit, f"mL/{profile.time_unit}", 6)
+        what, numbers, value = "volume rate x strength", f"{given} x {per_mL}", given.value * per_mL.value
+    return Step(
+        f"Dose line {course.index + 1}",
+        f"R = {what} x salt factor x share reaching the body",
+        f"{numbers} x {salt} x {share}",
+        printed(value * salt.value * share.value, profile.rate_unit, 6),
+    )
 
 
 def _rates(consult: Consult) -> list[Step]:
@@ -136,6 +168,8 @@ def _rates(consult: Consult) -> list[Step]:
             steps.append(
                 _rate_step(f"Dose line {course.index + 1}", course.regimen.intakes, course.regimen.cycle_h, consult)
             )
+        elif course.rate_mg_per_day is not None:
+            steps.append(_infusion(course, consult))
         elif course.single is not None:
             form = consult.profile.forms[course.single.form]
             amount = printed(course.single.labelled_mg, form.amount_unit, 6)
@@ -162,15 +196,18 @@ def _rate_step(what: str, intakes: tuple[Intake, ...], cycle_h: float, consult: 
         salt, share = printed(form.salt_factor, "", 5), printed(form.bioavailability, "", 5)
         parts.append(f"{amount} x {salt} x {share}")
         total += amount.value * salt.value * share.value
-    days = printed(cycle_h / 24.0, "day" if cycle_h <= 24.0 else "days", 6)
+    by_the_hour = consult.profile.time_unit == "h"
+    per = 1.0 if by_the_hour else 24.0
+    unit = "h" if by_the_hour else "day" if cycle_h <= 24.0 else "days"
+    time = printed(cycle_h / per, unit, 6)
     amounts = " + ".join(parts)
     if len(parts) > 1:
         amounts = f"({amounts})"
     return Step(
         what,
-        "R = amounts x salt factor x share reaching the body / days",
-        f"{amounts} / {days}",
-        printed(total / days.value, "mg/day", 6),
+        f"R = amounts x salt factor x share reaching the body / {'hours' if by_the_hour else 'days'}",
+        f"{amounts} / {time}",
+        printed(total / time.value, consult.profile.rate_unit, 6),
     )
 
 
@@ -192,7 +229,7 @@ def _levels(consult: Consult) -> list[Step]:
                     o.name,
                     "C = free / normal free fraction",
                     f"{reported} / {share}",
-                    printed(reported.value / share.value, "mg/L", 5),
+                    printed(reported.value / share.value, "mg/L", 6),
                 )
             )
             continue
@@ -207,7 +244,7 @@ def _levels(consult: Consult) -> list[Step]:
                 o.name,
                 f"C = total / ({k} x albumin + {c})",
                 f"{reported} / ({k} x {a} + {c})",
-                printed(reported.value / (k.value * a.value + c.value), "mg/L", 5),
+                printed(reported.value / (k.value * a.value + c.value), "mg/L", 6),
             )
         )
     return steps
@@ -223,10 +260,10 @@ def _population(consult: Consult) -> list[Step]:
     power = printed(
         population.exponent_below if weight < population.reference_weight_kg else population.exponent_above, "", 5
     )
-    base = printed(population.vmax_at_reference_mg_per_day, "mg/day", 6)
+    base = _rate(consult, population.vmax_at_reference_mg_per_day)
     steps = []
-    vmax = printed(base.value * (w.value / ref.value) ** power.value, "mg/day", 4)
-    if abs(vmax.value / prior.vmax_mg_per_day - 1) < 1e-3:
+    vmax = printed(base.value * (w.value / ref.value) ** power.value, consult.profile.rate_unit, 4)
+    if abs(vmax.value / consult.profile.rate(prior.vmax_mg_per_day) - 1) < 1e-3:
         steps.append(
             Step(
                 f"Vmax of {prior.words}",
@@ -251,8 +288,8 @@ def _two_levels(consult: Consult) -> list[Step]:
     steps = []
     rates, levels, ratios = [], [], []
     for p in (low, high):
-        r, c = printed(p.rate_mg_per_day, "mg/day", 6), printed(p.level_mg_per_L, "mg/L", 6)
-        ratio = printed(r.value / c.value, "L/day", 7)
+        r, c = _rate(consult, p.rate_mg_per_day), printed(p.level_mg_per_L, "mg/L", 6)
+        ratio = printed(r.value / c.value, f"L/{consult.profile.time_unit}", 7)
         rates.append(r)
         levels.append(c)
         ratios.append(ratio)
@@ -266,7 +303,7 @@ def _two_levels(consult: Consult) -> list[Step]:
             km,
         )
     )
-    vmax = printed(rates[0].value + km.value * ratios[0].value, "mg/day", 5)
+    vmax = printed(rates[0].value + km.value * ratios[0].value, consult.profile.rate_unit, 5)
     steps.append(Step("Vmax", "Vmax = R1 + Km x R1/C1", f"{rates[0]} + {km} x {ratios[0]}", vmax))
     sd = printed(low.log_sd, "", 4)
     same = abs(low.log_sd - high.log_sd) < 1e-12
@@ -304,14 +341,15 @@ def representative(consult: Consult, line: Line) -> tuple[tuple[Number, Number] 
         return None, (
             f"No representative pair ({line}): the median forecast of the regimen in question is no "
             "steady state, because "
-            f"its R = {show(target.rate_mg_per_day, 'mg/day', 5)} is at or above Vmax in at least "
+            f"its R = {consult.profile.show_rate(target.rate_mg_per_day, 5)} is at or above Vmax in at least "
             "half of the forecasts."
         )
-    goals = [(target.rate_mg_per_day, target.steady.median)]
+    own = consult.profile.rate
+    goals = [(own(target.rate_mg_per_day), target.steady.median)]
     present = consult.plan.present if consult.plan is not None else None
     both = False
     if present is not None and np.isfinite(_line(present, line).steady.median) and not shown.present:
-        r, c = present.rate_mg_per_day, _line(present, line).steady.median
+        r, c = own(present.rate_mg_per_day), _line(present, line).steady.median
         (r1, c1), (r2, c2) = sorted([(r, c), goals[0]])
         below = r1 / c1 - r2 / c2
         if r2 > r1 and below > 0:
@@ -323,7 +361,7 @@ def representative(consult: Consult, line: Line) -> tuple[tuple[Number, Number] 
         km = estimate.summary["km_mg_per_L"].median
         vmax = goals[0][0] * (km + goals[0][1]) / goals[0][1]
     for digits in range(4, _MOST_DIGITS + 1):
-        v, k = printed(vmax, "mg/day", digits), printed(km, "mg/L", digits)
+        v, k = printed(vmax, consult.profile.rate_unit, digits), printed(km, "mg/L", digits)
         if all(v.value > r and show_number(k.value * r / (v.value - r)) == show_number(c) for r, c in goals):
             words = (
                 "medians of the present regimen and of the one in question"
@@ -346,7 +384,7 @@ def _representative(consult: Consult, line: Line, vmax: Number, km: Number) -> l
         regimens.append(("Present regimen", present))
     regimens.append(("Present regimen" if shown.present else "Regimen in question", shown))
     for name, s in regimens:
-        r = printed(s.rate_mg_per_day, "mg/day", 6)
+        r = _rate(consult, s.rate_mg_per_day)
         if r.value >= vmax.value:
             continue
         level = printed(km.value * r.value / (vmax.value - r.value), "mg/L", 3)
@@ -385,7 +423,7 @@ def _representative(consult: Consult, line: Line, vmax: Number, km: Number) -> l
     if line == "central" and not same_lines(shown):
         return steps  # a dose rate is worked out only for doses that are all taken
     aim = printed(goal.aim_mg_per_L, "mg/L", 6)
-    rate = printed(vmax.value * aim.value / (km.value + aim.value), "mg/day", 4)
+    rate = printed(vmax.value * aim.value / (km.value + aim.value), consult.profile.rate_unit, 4)
     steps.append(Step("Dose rate for the aim", "R = Vmax x C / (Km + C)", f"{vmax} x {aim} / ({km} + {aim})", rate))
     for form_id in dict.fromkeys(x.form for x in shown.regimen.intakes):
         form = consult.profile.forms[form_id]
@@ -406,7 +444,7 @@ def _settling(consult: Consult, shown: Shown, vmax: Number, km: Number) -> list[
     estimate, plan = consult.chosen, consult.plan
     if estimate is None or "volume_L" not in estimate.summary or plan is None:
         return []
-    r = printed(shown.forecast.rate_mg_per_day, "mg/day", 6)
+    r = _rate(consult, shown.forecast.rate_mg_per_day)
     now = printed(plan.today.level.median if plan.today.level is not None else 0.0, "mg/L", 4)
     volume = printed(estimate.summary["volume_L"].median, "L", 4)
     gap = vmax.value - r.value
@@ -452,8 +490,8 @@ def _one_level(consult: Consult) -> list[Step]:
     km_value = consult.prior.km_mg_per_L if consult.prior is not None else consult.chosen.summary["km_mg_per_L"].median
     source = "the population's median" if consult.prior is not None else "the estimate's median"
     km = printed(km_value, "mg/L", 4)
-    r, c = printed(last.rate_mg_per_day, "mg/day", 6), printed(last.level_mg_per_L, "mg/L", 5)
-    vmax = printed(r.value * (km.value + c.value) / c.value, "mg/day", 5)
+    r, c = _rate(consult, last.rate_mg_per_day), printed(last.level_mg_per_L, "mg/L", 6)
+    vmax = printed(r.value * (km.value + c.value) / c.value, consult.profile.rate_unit, 5)
     steps = [
         Step(
             f"Vmax from {by_level[last.level].name}, Km held at {source}",
@@ -462,7 +500,7 @@ def _one_level(consult: Consult) -> list[Step]:
             vmax,
         )
     ]
-    wanted = printed(shown.forecast.rate_mg_per_day, "mg/day", 6)
+    wanted = _rate(consult, shown.forecast.rate_mg_per_day)
     if wanted.value < vmax.value and not shown.present:
         f = shown.forecast.steady
         inside = f.low <= km.value * wanted.value / (vmax.value - wanted.value) <= f.high
@@ -488,19 +526,14 @@ def _loads(consult: Consult) -> list[Step]:
         volume = printed(load.volume_L.median, "L", 6)
         aim = printed(load.aim_mg_per_L, "mg/L", 4)
         now = printed(load.from_mg_per_L, "mg/L", 4)
-        share = form.salt_factor * form.bioavailability
-        factor = printed(share, "", 5)
+        salt, share = printed(form.salt_factor, "", 5), printed(form.bioavailability, "", 5)
         steps.append(
             Step(
                 f"Amount of {form.words} by the formula",
                 "amount = V x (aim - level now) / (salt factor x share reaching the body)",
-                f"{volume} x ({aim} - {now}) / {factor}",
-                printed(volume.value * (aim.value - now.value) / factor.value, form.amount_unit, 4),
+                f"{volume} x ({aim} - {now}) / ({salt} x {share})",
+                printed(volume.value * (aim.value - now.value) / (salt.value * share.value), form.amount_unit, 4),
                 f"as ordered after rounding and limits: {show(load.amount_mg, form.amount_unit, 6)}",
             )
         )
     return steps
-
-
-#: For checks: the functions a reader's calculator needs beside + - x / and ^.
-FUNCTIONS: dict[str, Callable[[float], float]] = {"ln": math.log, "sqrt": math.sqrt}

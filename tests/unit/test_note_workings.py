@@ -6,21 +6,48 @@ import ast
 import math
 import operator
 import re
+import sys
 from collections.abc import Callable
+from dataclasses import dataclass, replace
 from functools import cache
+from pathlib import Path
+from typing import Any
 
 import pytest
 
 from pkcalc.consult import Consult, run_consult
-from pkcalc.demos import demonstration
+from pkcalc.demos import demonstration, demonstrations
 from pkcalc.note import populations
+from pkcalc.note import workings as module
 from pkcalc.note.document import Document, compose
 from pkcalc.note.front import spoken_for
-from pkcalc.note.workings import REPRESENTATIVE, machine_only, workings
+from pkcalc.note.workings import FULLY_TAKEN, REPRESENTATIVE, Step, machine_only, workings
 from pkcalc.units import show_number
 from tests.unit import cases
 
-NAMES = ("clean-pair", "low-albumin", "load-and-top-up", "change-of-salt", "over-the-ceiling", "toxic-level", "child")
+#: A line that no demonstration prints: free levels.
+EXTRA = {
+    "free levels": cases.plain(
+        levels=[
+            {"value": "0.8 mg/L", "kind": "free", "drawn": "2026-09-15 07:00"},
+            {"value": "2 mg/L", "kind": "free", "drawn": "2026-12-01 07:00"},
+        ],
+        proposed=[{"form": "extended-capsule", "amount": "330 mg", "every": "24 h"}],
+    ),
+}
+HEADINGS = [
+    f"{x}."
+    for x in (
+        *("Active drug", "Levels at normal binding", "Population at this patient", "Two levels"),
+        *(REPRESENTATIVE, FULLY_TAKEN, "One-level check, Km fixed", "Load"),
+    )
+]
+#: Between them they print every kind of line; the other demonstrations follow in the long part.
+QUICK = ("clean-pair", "low-albumin", "load-and-top-up", "ethanol-dialysis", *EXTRA)
+NAMES = (
+    *QUICK,
+    *(pytest.param(d.name, marks=pytest.mark.slow) for d in demonstrations() if d.name not in QUICK),
+)
 
 UNITS = [
     "mg",
@@ -34,6 +61,9 @@ UNITS = [
     "mg",
     "PE",
     "mg/h",
+    "mg/mL",
+    "mg/kg/h",
+    "g/h",
     "mL/h",
     "kg",
     "mg",
@@ -61,57 +91,229 @@ FUNCTIONS: dict[str, Callable[[float], float]] = {"ln": math.log, "sqrt": math.s
 
 def calculate(text: str) -> float:
     """A printed expression on a pocket calculator: units left away, x for times, ^ for powers."""
+    return evaluate(parsed(text))
+
+
+def parsed(text: str) -> ast.expr:
     plain = NUMBER.sub(lambda m: m.group(1).replace(",", ""), text)
-    plain = plain.replace(" x ", " * ").replace("^", "**")
+    return ast.parse(plain.replace(" x ", " * ").replace("^", "**"), mode="eval").body
 
-    def value(node: ast.expr) -> float:
-        if isinstance(node, ast.Constant) and isinstance(node.value, (int, float)):
-            return float(node.value)
-        if isinstance(node, ast.BinOp):
-            return OPERATORS[type(node.op)](value(node.left), value(node.right))
-        if isinstance(node, ast.UnaryOp) and isinstance(node.op, ast.USub):
-            return -value(node.operand)
-        if isinstance(node, ast.Call) and isinstance(node.func, ast.Name):
-            return FUNCTIONS[node.func.id](value(node.args[0]))
-        raise AssertionError(f"not a calculator's expression: {text}")
 
-    return value(ast.parse(plain, mode="eval").body)
+def evaluate(node: ast.expr) -> float:
+    if isinstance(node, ast.Constant) and isinstance(node.value, (int, float)):
+        return float(node.value)
+    if isinstance(node, ast.BinOp):
+        return OPERATORS[type(node.op)](evaluate(node.left), evaluate(node.right))
+    if isinstance(node, ast.UnaryOp) and isinstance(node.op, ast.USub):
+        return -evaluate(node.operand)
+    if isinstance(node, ast.Call) and isinstance(node.func, ast.Name):
+        return FUNCTIONS[node.func.id](evaluate(node.args[0]))
+    raise AssertionError(f"not a calculator's expression: {ast.unparse(node)}")
 
 
 @cache
 def consult_of(name: str) -> Consult:
-    return run_consult(demonstration(name))
+    return run_consult(EXTRA[name] if name in EXTRA else demonstration(name))
 
 
-def printed_steps(document: Document) -> list[tuple[str, str, str]]:
-    """(line, numbers, result) of every line of the workings with an equation in it."""
-    found = []
-    for section in document.sections:
-        if section.title == "Workings":
-            for line in section.lines:
-                parts = line.split(" = ")
-                if line.startswith("   ") and len(parts) >= 2:
-                    numbers = parts[-2].split(": ")[-1]
-                    found.append((line.strip(), numbers, parts[-1]))
+@cache
+def document_of(name: str) -> Document:
+    return compose(consult_of(name))
+
+
+@dataclass(frozen=True)
+class Printed:
+    """One line of the workings as it stands on paper: name of the result, equation in letters, numbers, result."""
+
+    line: str
+    group: str
+    name: str
+    equation: str
+    numbers: str
+    result: str
+
+    @property
+    def value(self) -> float:
+        return read(self.result)
+
+    @property
+    def holds(self) -> bool:
+        """The result is what the printed numbers give, to half of its last digit."""
+        digits = re.sub(r"[^\d.]", "", first_number(self.result))
+        allowed = 0.5 * 10.0 ** -len(digits.partition(".")[2])
+        return abs(calculate(self.numbers) - self.value) <= allowed * 1.000001
+
+
+def first_number(result: str) -> str:
+    found = re.match(r"(minus )?[\d,]+(?:\.\d+)?", result)
+    assert found is not None, result
+    return found.group()
+
+
+def read(result: str) -> float:
+    text = first_number(result)
+    return float(text.removeprefix("minus ").replace(",", "")) * (-1 if text.startswith("minus ") else 1)
+
+
+def printed_steps(document: Document) -> list[Printed]:
+    """Every line of the workings with an equation in it; any other line within a group is a fault."""
+    found, group = [], ""
+    lines = [x for section in document.sections if section.title == "Workings" for x in section.lines]
+    for line in lines:
+        if not line.startswith("   "):
+            group = line if line in HEADINGS else group
+            continue
+        what, rest = line.strip().split(": ", 1)
+        *name, equation, numbers, result = rest.split(" = ")
+        assert len(name) <= 1, line
+        found.append(Printed(line.strip(), group, name[0] if name else what, equation, numbers, result))
     return found
-
-
-def half_of_last_digit(text: str) -> float:
-    digits = text.replace(",", "")
-    return 0.5 * 10.0 ** -len(digits.partition(".")[2])
 
 
 @pytest.mark.parametrize("name", NAMES)
 def test_every_printed_result_follows_from_the_printed_numbers(name: str) -> None:
-    steps = printed_steps(compose(consult_of(name)))
-    assert len(steps) >= 4
-    for line, numbers, result in steps:
-        shown = re.match(r"(minus )?([\d,]+(?:\.\d+)?)", result)
-        assert shown is not None, line
-        ours = calculate(numbers)
-        value = float(shown.group(2).replace(",", "")) * (-1 if shown.group(1) else 1)
-        allowed = half_of_last_digit(shown.group(2))
-        assert abs(ours - value) <= allowed * 1.000001, line
+    steps = printed_steps(document_of(name))
+    assert steps or consult_of(name).stopped
+    for step in steps:
+        assert step.holds, step.line
+
+
+@pytest.mark.parametrize("name", NAMES)
+def test_every_equation_in_letters_is_the_one_that_is_worked(name: str) -> None:
+    """Each letter stands for one number within its line, and for the latest result of that name in its group."""
+    results: dict[tuple[str, str], float] = {}
+    for step in printed_steps(document_of(name)):
+        bound = letters_of(step.equation, step.numbers)
+        for letter, value in bound.items():
+            known = results.get((step.group, letter), value)
+            assert value == pytest.approx(known, rel=1e-12), f"{letter} in {step.line}"
+        results[step.group, step.name] = step.value
+
+
+def letters_of(equation: str, numbers: str) -> dict[str, float]:
+    """What each name of an equation stands for in its numbers; an AssertionError where the two are not one equation."""
+    names: list[str] = []
+
+    def hide(part: str) -> str:
+        bare = part.strip()
+        if not bare or bare in ("ln", "sqrt") or re.fullmatch(r"\d+(\.\d+)?", bare):
+            return part
+        if bare not in names:
+            names.append(bare)
+        return part.replace(bare, f"v{names.index(bare)}")
+
+    parts = re.split(r"( x | / | \+ | - |\^|\(|\))", equation)
+    tree = ast.parse("".join(x if i % 2 else hide(x) for i, x in enumerate(parts)).replace(" x ", " * ").replace("^", "**"), mode="eval").body  # fmt: skip
+    bound: dict[str, float] = {}
+    if equation.startswith("amounts x ") and numbers.startswith("("):
+        # several doses in one cycle: each is amount x salt factor x share, and the letters stand for many numbers
+        inside, _, days = numbers.rpartition(" / ")
+        for one in inside.strip("()").split(" + "):
+            letters_of(equation, f"{one} / {days}")
+        return {}
+
+    def match(letters: ast.expr, worked: ast.expr) -> None:
+        if isinstance(letters, ast.Name):
+            value, key = evaluate(worked), names[int(letters.id[1:])]
+            assert bound.setdefault(key, value) == value, f"{key} has two values in {numbers}"
+        elif isinstance(letters, ast.Constant) and isinstance(worked, ast.Constant):
+            assert letters.value == worked.value, f"{equation} is not {numbers}"
+        elif isinstance(letters, ast.BinOp) and isinstance(worked, ast.BinOp):
+            assert type(letters.op) is type(worked.op), f"{equation} is not {numbers}"
+            match(letters.left, worked.left)
+            match(letters.right, worked.right)
+        elif isinstance(letters, ast.Call) and isinstance(worked, ast.Call):
+            assert ast.dump(letters.func) == ast.dump(worked.func), f"{equation} is not {numbers}"
+            match(letters.args[0], worked.args[0])
+        else:
+            raise AssertionError(f"{equation} is not {numbers}")
+
+    match(tree, parsed(numbers))
+    return bound
+
+
+def is_worked(equation: str, numbers: str) -> bool:
+    try:
+        letters_of(equation, numbers)
+    except AssertionError:
+        return False
+    return True
+
+
+def other_digit(digit: str) -> str:
+    return "1" if digit == "9" else str(int(digit) + 1)
+
+
+@pytest.mark.parametrize("name", NAMES)
+def test_a_changed_digit_is_noticed_in_every_equation(name: str) -> None:
+    """Every digit of every result, and the leading digit of every number that enters it."""
+    for step in printed_steps(document_of(name)):
+        shown = first_number(step.result)
+        for i, sign in enumerate(shown):
+            if sign.isdigit():
+                changed = shown[:i] + other_digit(sign) + shown[i + 1 :]
+                assert not replace(step, result=changed).holds, f"{changed} in {step.line}"
+        for found in NUMBER.finditer(step.numbers):
+            i = found.start()
+            changed = step.numbers[:i] + other_digit(step.numbers[i]) + step.numbers[i + 1 :]
+            if calculate(changed) == calculate(step.numbers):
+                # a number that changes nothing: the exponent of a ratio of 1
+                assert step.numbers[i - 1] == "^", step.line
+                continue
+            assert not replace(step, numbers=changed).holds or not is_worked(step.equation, changed), (
+                f"{changed} in {step.line}"
+            )
+
+
+@pytest.mark.parametrize("name", NAMES)
+def test_numbers_in_the_remarks_stand_elsewhere_in_the_note(name: str) -> None:
+    document = document_of(name)
+    elsewhere = " ".join(
+        text
+        for s in (*document.front, *document.sections)
+        if s.title != "Workings"
+        for text in (*s.lines, *(cell for row in (s.table.rows if s.table else ()) for cell in row))
+    )
+    for step in printed_steps(document):
+        remark = step.result.partition(" (")[2]
+        for kind in ("median printed: ", "as ordered after rounding and limits: ", "median of all draws: "):
+            if remark.startswith(kind):
+                number = first_number(remark.removeprefix(kind).removeprefix("above "))
+                assert re.search(rf"(?<![\d.]){re.escape(number)}(?![\d])", elsewhere), step.line
+
+
+@pytest.mark.parametrize("name", NAMES)
+def test_the_pair_that_is_labelled_is_the_pair_that_is_worked(name: str) -> None:
+    lines = [x for s in document_of(name).sections if s.title == "Workings" for x in s.lines]
+    steps = printed_steps(document_of(name))
+    for line in lines:
+        said = re.match(
+            r"Representative pair, (central|every dose taken): Vmax (\S+) \S+ of active drug, Km (\S+) ", line
+        )
+        if said is not None:
+            group = REPRESENTATIVE if said.group(1) == "central" else FULLY_TAKEN
+            worked = [letters_of(s.equation, s.numbers) for s in steps if s.group == f"{group}."]
+            assert worked
+            for key, text in (("Vmax", said.group(2)), ("Km", said.group(3))):
+                values = {b[key] for b in worked if key in b}
+                assert values == {float(text.replace(",", ""))}, line
+
+
+def test_every_kind_of_line_is_met(monkeypatch: pytest.MonkeyPatch) -> None:
+    """Each place of the module that makes a line makes one in some note of this test."""
+    made: set[int] = set()
+
+    def recorded(*given: Any, **named: Any) -> Step:
+        made.add(sys._getframe(1).f_lineno)
+        return Step(*given, **named)
+
+    monkeypatch.setattr(module, "Step", recorded)
+    for name in QUICK:
+        module.workings(consult_of(name))
+    tree = ast.parse(Path(str(module.__file__)).read_text(encoding="utf-8"))
+    places = {n.lineno for n in ast.walk(tree) if isinstance(n, ast.Call) and getattr(n.func, "id", "") == "Step"}
+    assert len(places) >= 18
+    assert places - made == set()
 
 
 def test_the_calculator_itself() -> None:
