@@ -9,6 +9,7 @@ example worthless for it, so it fails unless the reason is written down.
 from __future__ import annotations
 
 import csv
+import json
 import re
 import tomllib
 from collections.abc import Callable, Mapping
@@ -315,6 +316,55 @@ def _population_hold(v: Values) -> Values:
     return {"rate_per_weight": per_weight, "mL_per_kg_h": per_weight / 24 / product.mg_per_unit}
 
 
+def _regimen(v: Values) -> Values:
+    """What the plan says of a regimen in a patient known exactly: steady level, as reported at an albumin, and the
+    time to 90 % of the way from nothing."""
+    from pkcalc.case import read_case_text
+    from pkcalc.dosing import Intake, Regimen
+    from pkcalc.estimate.result import Band, Estimate, Point
+    from pkcalc.forecast import Goal
+    from pkcalc.levels import lab_scale
+    from pkcalc.plan.candidates import Setting, candidates
+
+    profile, site, target = load_profile(v["drug"]), no_site(), load_profile(v["drug"]).target
+    vmax, km, volume = v["vmax"], v["km"], v["volume"]
+    exact = {"vmax_mg_per_day": vmax, "km_mg_per_L": km, "volume_L": volume}
+    estimate = Estimate(
+        method="given",
+        weights=np.ones(1),
+        point=Point(vmax, km, volume, "closed form"),
+        summary={name: Band(x, x, x) for name, x in exact.items()},
+        correlation=0.0,
+        volume_from="record",
+        vmax_mg_per_day=np.array([vmax]),
+        km_mg_per_L=np.array([km]),
+        volume_L=np.array([volume]),
+    )
+    written = {"pkcalc_case": 1, "drug": v["drug"], "albumin": {"value": f"{v['albumin']:.6g} g/L"}}
+    case = read_case_text(json.dumps(written))
+    setting = Setting(
+        profile=profile,
+        site=site,
+        goal=Goal(
+            target.low_mg_per_L, target.high_mg_per_L, target.critical_mg_per_L, target.aim_mg_per_L, "drug file"
+        ),
+        scale=lab_scale(case, profile, site, case.albumin),
+        central=estimate,
+        taken=estimate,
+        start_mg_per_L=0.0,
+        draw_days=3.0,
+        present_mg_per_day=None,
+        largest_mg_per_day=float("inf"),
+    )
+    regimen = Regimen((Intake(v["form"], 21.0, v["dose"]),))
+    (found,) = candidates((), [(regimen, "", "", False, True)], setting)
+    f = found.forecast
+    if not np.isfinite(f.steady.median):
+        raise CannotEstimate(found="No steady state.", why="The rate is at or above Vmax.", helps="A smaller dose.")
+    assert f.settle_days is not None
+    return {"steady": f.steady.median, "reported": f.total.median, "time": f.settle_days.median}
+
+
 def _straight_line(v: Values) -> Values:
     from pkcalc.estimate.lines import straight_line
 
@@ -492,6 +542,11 @@ CALLS: dict[str, Call] = {
         },
         {"rate_per_weight": "dose rate per weight", "mL_per_kg_h": "number"},
         _population_hold,
+    ),
+    "regimen_of_form": Call(
+        {"drug": "word", "form": "word", "dose": "amount", **_MM, "volume": "volume", "albumin": "albumin"},
+        {"steady": "level", "reported": "level", "time": "duration"},
+        _regimen,
     ),
     "molar_level": Call({"drug": "word", "level": "level"}, {"molar": "molar"}, _molar),
 }

@@ -11,8 +11,11 @@ import pytest
 from pkcalc import formulas
 from pkcalc.drugs.profile import load_profile
 from pkcalc.estimate import posterior
+from pkcalc.estimate.result import Band
 from pkcalc.forecast import forecast_rate
-from pkcalc.plan import loading
+from pkcalc.levels import lab_scale
+from pkcalc.note.words import days_words
+from pkcalc.plan import loading, projection
 from pkcalc.plan.shelf import dispensable, dispense_words
 from pkcalc.site import no_site
 from tests.unit.cases import plain
@@ -228,3 +231,50 @@ def test_what_the_step_rule_gives(level: float, step: float, percent: str) -> No
     seen = replace(draws, weights=likelihood / likelihood.sum())
     found = float(danger(setting(seen, start_mg_per_L=level), [276.0 + 0.92 * step])[0])
     assert f"{100 * found:.0f}" == percent
+
+
+# Rowland & Tozer, Eq. 16-10 p. 504 (notes read): t90 = Km V (2.303 Vmax - 0.9 R) / (Vmax - R)^2 at the same figures and
+# 50 L. SLIP: the notes' "about 6, 10, 17, 24 days" are not its values; 60-digit arithmetic gives 4.41, 7.43, 15.83 and
+# 27.33, which `pkcalc/evidence/doses.toml` (E1-plan) asks of the plan. Here the same as the note says it.
+
+
+@pytest.mark.parametrize(("rate", "printed"), [(300, "4.4"), (350, "7.4"), (400, "16"), (425, "27")])
+def test_published_times_to_90_percent(rate: float, printed: str) -> None:
+    found = forecast_rate(exact(vmax=500.0, km=4.0, volume=50.0), rate, GOAL, SCALE)
+    assert found.settle_days is not None
+    assert days_words(found.settle_days).startswith(f"{printed} days")
+
+
+# North West London Pathology (equation read): total / (0.1 + 0.02 albumin g/L): 14 mg/L at normal binding is 7 mg/L as
+# reported at 20 g/L. SLIP: the page calls the normalised total the free level, a tenth of it.
+
+
+def test_published_equation_on_the_laboratory_scale_of_a_regimen() -> None:
+    case = plain(albumin={"value": "20 g/L", "taken": "2026-12-01 06:00"})
+    scale = lab_scale(case, P, no_site(), case.albumin)
+    found = forecast_rate(exact(vmax=500.0, km=4.0), 500 * 14 / 18, GOAL, scale)
+    assert f"{found.steady.median:.1f}" == "14.0"
+    assert f"{found.total.median:.1f}" == "7.0"
+    assert f"{found.free.median:.1f}" == "1.4"  # never 14
+
+
+# Prescribing monograph copy (read): 0.83, 1.38, 1.96, 2.13, 2.68 and 3.26 mL/kg/h of "10 %" ethanol are equated to up to
+# 83, 138, 196, 213, 268 and 326 mg/kg/h. SLIP: that holds for 10 % w/v; of 10 % v/v the same amount is 21 % less.
+
+
+@pytest.mark.parametrize("mL", ["0.83", "1.38", "1.96", "2.13", "2.68", "3.26"])
+def test_published_rates_of_ten_per_cent_ethanol(mL: str) -> None:
+    ethanol = load_profile("ethanol")
+    by_weight, by_volume = (ethanol.products[f"infusion-10-{x}"] for x in ("wv", "vv"))
+    rate = float(mL) * 100 * 70
+    amount = projection._amount("", Band(rate, rate, rate), (by_weight, by_volume))
+    told = {p.id: value / 70 for p, value in amount.mL}
+    assert f"{told['infusion-10-wv']:.2f}" == mL
+    assert told["infusion-10-vv"] / told["infusion-10-wv"] == pytest.approx(100 / 78.9, rel=5e-4)
+    assert "w/v" in by_weight.strength_words
+    assert "v/v" in by_volume.strength_words
+
+
+# Not an example of the plan: the evaluation of seven one-level methods in 90 children (abstract read; mean absolute error
+# 28.7 and 30.3, root mean square 36.8 and 40.8 mg/day for the two best) prints no patient's doses and levels, so there
+# is nothing to run. Our counterpart, on synthetic patients, is `tests/bench/table_cohort.py`.
