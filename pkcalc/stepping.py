@@ -239,33 +239,34 @@ def plan_steps(
                 h = left / pieces if pieces <= 2 or limit == longest else limit
             moment = finish if h >= left else moment + h
             half = full = 0.0
-            shares: dict[int, list[float]] = {}
-            for amount, members in push:
-                for w in members:
-                    shares.setdefault(w, [0.0, 0.0, 0.0])[0] += amount
-            for s in active:
-                first, whole = s.deliver(h)
+            delivered = [(s, *s.deliver(h)) for s in active]
+            for _, first, whole in delivered:
                 half += first
                 full += whole
-                for w in s.windows if whole > negligible else ():
-                    share = shares.setdefault(w, [0.0, 0.0, 0.0])
-                    share[1] += first
-                    share[2] += whole
             constant = full / h if stiff or (exact and not absorbing) else None
+            parts = _by_window(push, delivered, negligible) if windows else ()
             steps.append(
-                Step(
-                    h,
-                    math.fsum(amount for amount, _ in push),
-                    half,
-                    full,
-                    constant,
-                    paths,
-                    tuple((w, a, b, c) for w, (a, b, c) in shares.items()),
-                )
+                Step(h, math.fsum(amount for amount, _ in push) if push else 0.0, half, full, constant, paths, parts)
             )
             ends.append(moment)
             push = ()
     return Plan(start_day, tuple(steps), reached, tuple(ends))
+
+
+def _by_window(
+    push: Sequence[tuple[float, tuple[int, ...]]], delivered: Sequence[tuple[_Stream, float, float]], negligible: float
+) -> tuple[tuple[int, float, float, float], ...]:
+    """What a step pushes and delivers, by the window in which it was swallowed or given."""
+    shares: dict[int, list[float]] = {}
+    for amount, members in push:
+        for w in members:
+            shares.setdefault(w, [0.0, 0.0, 0.0])[0] += amount
+    for stream, first, whole in delivered:
+        for w in stream.windows if whole > negligible else ():
+            share = shares.setdefault(w, [0.0, 0.0, 0.0])
+            share[1] += first
+            share[2] += whole
+    return tuple((w, a, b, c) for w, (a, b, c) in shares.items())
 
 
 #: How much finer than the everyday steps: largest error about 3e-3, 4e-5 and 2e-7 of the level.
