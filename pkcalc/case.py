@@ -105,7 +105,9 @@ class DoseFile(BaseModel):
     )
     at: Text = Field("", description="Clock time of a single dose; with amount.")
     over: Text = Field("", description='Infusion time, for example "30 min".')
-    rate: Text = Field("", description='A continuous infusion, for example "7 g/h" or, with product, "88 mL/h".')
+    rate: Text = Field(
+        "", description='A continuous infusion, for example "7 g/h", "110 mg/kg/h" or, with product, "88 mL/h".'
+    )
     from_: Text = Field("", alias="from", description="Clock time of the first dose.")
     until: Text = Field("", description="Clock time after which no dose was given; empty: still going on.")
     for_about: Text = Field("", description='Instead of from, where only the length is known: "3 months".')
@@ -328,6 +330,14 @@ class Course:
         if self.regimen is not None:
             return tuple(dict.fromkeys(x.form for x in self.regimen.intakes))
         return (self.single.form if self.single else self.rate_form,)
+
+    def active_mg_per_day(self, profile: Profile) -> float | None:
+        """Active drug per day of a repeated regimen or of an infusion; None for a single dose."""
+        if self.regimen is not None:
+            return self.regimen.active_mg_per_day(profile)
+        if self.rate_mg_per_day is None:
+            return None
+        return self.rate_mg_per_day * profile.forms[self.rate_form].active_fraction
 
     @property
     def counts_as_given(self) -> bool:
@@ -823,7 +833,11 @@ def check_case(file: CaseFile) -> Case:
         raise CaseError(check.problems)
     patient = _patient(file, check, profile)
     now = _optional_time(file.now, "Time of the consult", check)
-    courses = tuple(c for i, x in enumerate(file.doses) if (c := _course(i, x, check, profile)) is not None)
+    steady = {x.on_dose for x in file.levels}  # dose lines that a level names: their times may be unknown
+    weight = patient.weight_kg
+    courses = tuple(
+        c for i, x in enumerate(file.doses) if (c := _course(i, x, check, profile, weight, i + 1 in steady)) is not None
+    )
     levels = tuple(
         level for i, x in enumerate(file.levels) if (level := _level(i, x, check, profile, len(file.doses))) is not None
     )
@@ -847,11 +861,11 @@ def check_case(file: CaseFile) -> Case:
     proposed = tuple(
         r
         for i, x in enumerate(file.proposed)
-        if (r := _regimen(x, f"Proposed regimen {i + 1}", check, profile)) is not None
+        if (r := _regimen(x, f"Proposed regimen {i + 1}", check, profile, weight)) is not None
     )
     chosen = None
     if file.chosen is not None and file.chosen.regimen is not None:
-        chosen = _regimen(file.chosen.regimen, "Chosen regimen", check, profile)
+        chosen = _regimen(file.chosen.regimen, "Chosen regimen", check, profile, weight)
     if file.population and file.population not in profile.populations:
         check.say(
             "Population",
@@ -1298,14 +1312,26 @@ def _over_h(text: str, form: str, where: str, check: _Check, profile: Profile) -
 
 
 def _rate(
-    file: DoseFile | ProposedFile, form: str, where: str, hours: float, check: _Check, profile: Profile
+    file: DoseFile | ProposedFile,
+    form: str,
+    where: str,
+    hours: float,
+    check: _Check,
+    profile: Profile,
+    weight_kg: float | None,
 ) -> float | None:
-    """A continuous infusion in labelled mg/day."""
+    """A continuous infusion in labelled mg/day. hours: as long as it runs, where that is known."""
     known = profile.forms[form]
     only = ("mg PE/min", "mg PE/day") if known.amount_unit == "mg PE" else ("mg/h", "g/h", "mg/min", "mg/day", "g/day")
     if _is_in(file.rate, "mL/h"):
         hourly = _in_mL(file.rate, file.product, form, f"{where}, rate", check, profile)
         typed = None if hourly is None else Typed(file.rate, 24 * hourly, "mL/h")
+    elif _is_in(file.rate, "mg/kg/h") and profile.time_unit == "h":
+        per_kg = check.attempt(units.read, file.rate, "dose rate per weight", f"{where}, rate")
+        if per_kg is not None and weight_kg is None:
+            given = f"{file.rate} was given without a weight"
+            check.say(f"{where}, rate", given, "a rate per kg with a weight, or a rate in mg/h", "Give the weight")
+        typed = None if per_kg is None or weight_kg is None else Typed(file.rate, per_kg.value * weight_kg, "mg/kg/h")
     else:
         typed = check.attempt(units.read, file.rate, "dose rate", f"{where}, rate", only=only)
     if typed is None:
@@ -1320,17 +1346,22 @@ def _rate(
     return typed.value
 
 
-def _regimen(file: ProposedFile, where: str, check: _Check, profile: Profile) -> Regimen | None:
+def _regimen(
+    file: ProposedFile, where: str, check: _Check, profile: Profile, weight_kg: float | None
+) -> Regimen | None:
     if file.rate:
         if file.amount or file.every or file.daily:
             check.say(where, "a rate and doses were both given", "one of the two", "Remove one of them")
         form = _form(file.form, f"{where}, form", check, profile)
-        rate = _rate(file, form, where, 1.0, check, profile) if form else None
+        rate = _rate(file, form, where, 1.0, check, profile, weight_kg) if form else None
         return None if form is None or rate is None else continuous(form, rate)
     return _intakes(file.form, file.amount, file.every, file.daily, "", where, None, check, profile, file.product)
 
 
-def _course(i: int, file: DoseFile, check: _Check, profile: Profile) -> Course | None:
+def _course(
+    i: int, file: DoseFile, check: _Check, profile: Profile, weight_kg: float | None, named: bool
+) -> Course | None:
+    """One dose line. named: a level says that it was drawn on it, so a rate is known to have held without its times."""
     where = f"Dose line {i + 1}"
     before = len(check.problems)
     start = _optional_time(file.from_, f"{where}, from", check)
@@ -1368,16 +1399,17 @@ def _course(i: int, file: DoseFile, check: _Check, profile: Profile) -> Course |
         # only a drug that is followed by levels while it runs may still be running
         if profile.sampling.repeat_h is None and not (file.from_ and file.until):
             check.say(where, "an infusion was given without both ends", "from and until", "Add both clock times")
-        elif not file.from_:
+        elif not file.from_ and not (named and not file.until):
             check.say(
                 where,
                 "an infusion was given without its start",
                 "from, and until once it has ended",
                 "Add the clock time",
             )
-        elif form is not None and start is not None and (end is not None or not file.until):
-            hours = 24 * days_between(start, end) if end is not None and _comparable(start, end) else 1.0
-            rate = _rate(file, form, where, hours, check, profile)
+        elif form is not None and (start is not None or not file.from_) and (end is not None or not file.until):
+            known = start is not None and end is not None and _comparable(start, end)
+            hours = 24 * days_between(start, end) if known and start is not None and end is not None else 1.0
+            rate = _rate(file, form, where, hours, check, profile, weight_kg)
     else:
         regimen = _intakes(
             file.form, file.amount, file.every, file.daily, file.over, where, start, check, profile, file.product

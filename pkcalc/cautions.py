@@ -485,9 +485,9 @@ def _vmax_outside(s: State, p: Mapping[str, Any]) -> list[Words]:
     value = s.estimate.point.vmax_mg_per_day / weight
     if low <= value <= high:
         return []
-    per = 24 if s.profile.time_unit == "h" else 1
-    unit = "mg/kg/h" if per == 24 else "mg/kg/day"
-    words = {"value": show(value / per, unit), "low": show_number(low / per), "high": show(high / per, unit)}
+    unit = "mg/kg/h" if s.profile.time_unit == "h" else "mg/kg/day"
+    words = {"value": show(s.profile.rate(value), unit), "low": show_number(s.profile.rate(low))}
+    words["high"] = show(s.profile.rate(high), unit)
     return [{**words, "where": _published_in(s, "vmax", span)}]
 
 
@@ -555,8 +555,8 @@ def _at_or_above_vmax(s: State, p: Mapping[str, Any]) -> list[Words]:
     return [
         {
             "regimen": shown.words,
-            "rate": show(shown.forecast.rate_mg_per_day, "mg/day", 4),
-            "vmax": show(s.estimate.point.vmax_mg_per_day, "mg/day", 4),
+            "rate": s.profile.show_rate(shown.forecast.rate_mg_per_day, 4),
+            "vmax": s.profile.show_rate(s.estimate.point.vmax_mg_per_day, 4),
         }
         for shown in s.regimens
         if not np.isfinite(shown.forecast.point_mg_per_L)

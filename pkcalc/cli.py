@@ -19,6 +19,7 @@ if TYPE_CHECKING:
 
 FORMATS = ("text", "json")
 NOTE_FORMATS = (*FORMATS, "html", "pdf")
+FORECASTS = ("population", "one-level", "two-level", "whole-record")
 
 
 def main() -> None:
@@ -195,14 +196,22 @@ def note(
 @cli.command()
 @click.option("--drug", default="phenytoin", show_default=True, help="A drug of `pkcalc drugs`.")
 @click.option("--form", "forms", multiple=True, required=True, help="Salt or product: once, or once per dose.")
-@click.option("--dose", "doses", multiple=True, required=True, help='For example "300 mg/day"; repeat per pair.')
+@click.option(
+    "--dose",
+    "doses",
+    multiple=True,
+    required=True,
+    help='For example "300 mg/day", or "7 g/h" or "110 mg/kg/h" for a drug told by the hour; repeat per pair.',
+)
 @click.option("--level", "levels", multiple=True, required=True, help='For example "8 mg/L"; in the same order.')
 @click.option("--kind", type=click.Choice(["total", "free", "normalised"]), default="total", show_default=True)
 @click.option("--weight", default="", help='For example "70 kg".')
 @click.option("--age", default="", help='For example "45 years".')
 @click.option("--albumin", default="", help='For example "29 g/L".')
 @click.option("--aim", default="", help='Level aimed at, for example "15 mg/L".')
-@click.option("--propose", "proposed", multiple=True, help='A dose to preview, for example "330 mg/day".')
+@click.option("--propose", "proposed", multiple=True, help='A dose to preview, for example "330 mg/day" or "8 g/h".')
+@click.option("--product", default="", help="The liquid product that doses in mL/h are of.")
+@click.option("--population", default="", help="A named population of the drug, where one must be chosen.")
 @click.option("--shelf", default="", help="A generic country shelf of the drug, for a table of doses it can make.")
 @_format
 @_out
@@ -218,12 +227,17 @@ def pair(
     albumin: str,
     aim: str,
     proposed: tuple[str, ...],
+    product: str,
+    population: str,
     shelf: str,
     output_format: str,
     out: Path | None,
     site: Path | None,
 ) -> None:
-    """Vmax and Km from steady dose/level pairs typed on the command line."""
+    """Vmax and Km from steady dose/level pairs typed on the command line.
+
+    Results are told by the day, or by the hour for a drug told by the hour.
+    """
     case = case_of_pairs(
         drug=drug,
         forms=forms,
@@ -235,6 +249,8 @@ def pair(
         albumin=albumin,
         aim=aim,
         proposed=proposed,
+        product=product,
+        population=population,
         shelf=shelf,
     )
     if output_format == "text" and out is None:
@@ -254,6 +270,8 @@ def case_of_pairs(
     albumin: str = "",
     aim: str = "",
     proposed: tuple[str, ...] = (),
+    product: str = "",
+    population: str = "",
     shelf: str = "",
 ) -> Case:
     """Pairs as typed -> checked case, every problem at once."""
@@ -282,12 +300,14 @@ def case_of_pairs(
     if problems:
         raise CaseError(problems)
     per_dose = forms * len(doses) if len(forms) == 1 else forms
-    rows = []
-    for i, (dose, form) in enumerate(zip(doses, per_dose, strict=True)):
-        amount = _amount_of_rate(dose, f"Dose {i + 1}", problems)
-        rows.append(DoseFile(form=form, amount=amount, every="24 h"))
+    rows = tuple(
+        DoseFile(form=form, **_dose_fields(drug, form, product, dose, f"Dose {i + 1}", problems))
+        for i, (dose, form) in enumerate(zip(doses, per_dose, strict=True))
+    )
     wanted = tuple(
-        ProposedFile(form=per_dose[-1], amount=_amount_of_rate(p, f"Proposed dose {i + 1}", problems), every="24 h")
+        ProposedFile(
+            form=per_dose[-1], **_dose_fields(drug, per_dose[-1], product, p, f"Proposed dose {i + 1}", problems)
+        )
         for i, p in enumerate(proposed)
     )
     if problems:
@@ -298,13 +318,25 @@ def case_of_pairs(
             drug=drug,
             patient=PatientFile(weight=weight, age=age),
             albumin=AlbuminFile(value=albumin) if albumin else None,
-            doses=tuple(rows),
+            doses=rows,
             levels=tuple(LevelFile(value=v, kind=kind, on_dose=i + 1) for i, v in enumerate(levels)),
             aim=aim,
             proposed=wanted,
+            population=population,
             plan=PlanFile(shelf=shelf),
         )
     )
+
+
+def _dose_fields(drug: str, form: str, product: str, text: str, where: str, problems: list[Any]) -> dict[str, str]:
+    """A steady dose as typed: the rate of an infusion for a drug told by the hour, else the amount of one day."""
+    from pkcalc.drugs.profile import drug_names, load_profile
+
+    profile = load_profile(drug) if drug in drug_names() else None
+    known = profile.forms.get(form) if profile is not None and profile.time_unit == "h" else None
+    if known is not None and known.absorption is None:
+        return {"rate": text, "product": product}
+    return {"amount": _amount_of_rate(text, where, problems), "every": "24 h"}
 
 
 def _amount_of_rate(text: str, where: str, problems: list[Any]) -> str:
@@ -609,6 +641,13 @@ def selfcheck(output_format: str, save: Path | None) -> None:
 )
 @click.option("--cluster", default="", metavar="ADDRESS", help="A Dask scheduler, such as tcp://host:8786.")
 @click.option(
+    "--method",
+    "methods",
+    type=click.Choice(FORECASTS),
+    multiple=True,
+    help="Forecast by this alone, and quicker; may be given again. Default: by all four.",
+)
+@click.option(
     "--synthetic",
     type=click.IntRange(1, 1_000_000),
     help="First fill FOLDER, new or empty, with so many invented patients.",
@@ -621,6 +660,7 @@ def backtest(
     out: Path | None,
     workers: int,
     cluster: str,
+    methods: tuple[str, ...],
     synthetic: int | None,
     seed: int,
 ) -> None:
@@ -648,7 +688,9 @@ def backtest(
 
         write_department(folder, drug=drug, count=synthetic, seed=seed)
         click.echo(f"Written: {synthetic:,} invented patients in {folder}", err=True)
-    status, text = run_backtest(folder, drug=drug, site=site, out=out, workers=workers, cluster=cluster)
+    status, text = run_backtest(
+        folder, drug=drug, site=site, out=out, workers=workers, cluster=cluster, methods=methods
+    )
     click.echo(text, nl=False)
     if status:
         sys.exit(status)

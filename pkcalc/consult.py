@@ -24,7 +24,7 @@ from pkcalc.forecast import Goal, rate_for_level
 from pkcalc.given import given_record
 from pkcalc.levels import LabScale, Observation, adherence, everyday_cv, lab_scale, observe
 from pkcalc.plan import projection as projecting
-from pkcalc.plan.projection import Projection
+from pkcalc.plan.projection import Plateaus, Projection
 from pkcalc.record import Record
 from pkcalc.site import Site, load_site, no_site
 from pkcalc.steadiness import Settling
@@ -69,6 +69,7 @@ class Consult:
     table: tuple[Shown, ...]
     plan: planning.Plan | None
     projection: Projection | None
+    plateaus: Plateaus | None
     aim_rate: Band | None
     cautions: tuple[Caution, ...]
     blocked: frozenset[str]
@@ -104,8 +105,7 @@ def run_consult(case: Case, site: Site | str | Path | None = None) -> Consult:
     said = list(caution_engine.after_case(state))
 
     observations = observe(case, profile, local)
-    # the two-level method knows neither a parallel path nor dialysis: it stays with drugs in full scope
-    pairs = steadiness.steady_pairs(case, profile, observations) if profile.scope == "dosing" else ()
+    pairs = steadiness.steady_pairs(case, profile, observations) if _reads_pairs(case, profile) else ()
     state = replace(state, observations=observations, pairs=pairs)
     said += caution_engine.after_levels(state)
 
@@ -146,7 +146,15 @@ def run_consult(case: Case, site: Site | str | Path | None = None) -> Consult:
     assert state.goal is not None
     plan: planning.Plan | None = None
     projection: Projection | None = None
-    if profile.scope != "dosing":
+    plateaus: Plateaus | None = None
+    if profile.scope != "dosing" and chosen is not None and chosen.method == two_level.METHOD:
+        if "projection" not in stops:
+            plateaus = projecting.settle(
+                case, profile, local, estimate=chosen, goal=state.goal, scale=scale, stops=stops
+            )
+            shown = [ShownRegimen(words, forecast) for words, forecast in plateaus.settle]
+            said += caution_engine.after_plan(replace(state, regimens=shown))
+    elif profile.scope != "dosing":
         chosen, why, projection = _projected(state, chosen, why, prior, found.refusals, stops)
         said += caution_engine.after_plan(replace(state, estimate=chosen, projection=projection))
     elif chosen is not None and "projection" not in stops:
@@ -191,6 +199,7 @@ def run_consult(case: Case, site: Site | str | Path | None = None) -> Consult:
         table=table,
         plan=plan,
         projection=projection,
+        plateaus=plateaus,
         aim_rate=aim_rate,
         cautions=caution_engine.in_order(said),
         blocked=caution_engine.blocked(said),
@@ -215,6 +224,7 @@ def _checked_twice(consult: Consult, state: State) -> Consult:
         spread=record_spread(consult.case, consult.profile),
         plan=consult.plan,
         projection=consult.projection,
+        plateaus=consult.plateaus,
         goal=consult.goal,
     )
     wrong = tuple(r.words for r in rows if not r.agrees)
@@ -234,11 +244,38 @@ def _checked_twice(consult: Consult, state: State) -> Consult:
         table=(),
         plan=None,
         projection=None,
+        plateaus=None,
         aim_rate=None,
         cautions=caution_engine.in_order(said),
         blocked=caution_engine.blocked(said),
         second_way=rows,
     )
+
+
+def _declared_steady(case: Case) -> bool:
+    """True where levels without a time name the dose they were drawn on: then a person calls them steady."""
+    return bool(case.levels) and all(x.on_dose is not None and x.drawn is None for x in case.levels)
+
+
+def _reads_pairs(case: Case, profile: Profile) -> bool:
+    """Whether steady levels are read as pairs. Outside full dosing only two that were typed as such: the two-level
+    method knows neither a parallel path nor dialysis, and levels of a followed drug are not steady."""
+    if profile.scope == "dosing":
+        return True
+    return _declared_steady(case) and len(case.levels) == 2 and not _paths_beside(case, profile)
+
+
+def _paths_beside(case: Case, profile: Profile) -> bool:
+    return bool(case.dialysis) or any(p.first_order_per_day > 0 for p in profile.populations.values())
+
+
+def _why_no_pair_here(case: Case, profile: Profile) -> str:
+    if _paths_beside(case, profile):
+        return (
+            f"{profile.name[:1].upper()}{profile.name[1:]} leaves by a first-order path beside the saturable one; two "
+            "levels cannot tell the two apart."
+        )
+    return f"{len(case.levels)} levels were typed; for {profile.name} the method takes two, on two different doses."
 
 
 def _population_speaks(case: Case, profile: Profile, population: Estimate | None, stops: frozenset[str]) -> bool:
@@ -299,7 +336,9 @@ def _estimate(state: State, prior: Prior | None, population: Estimate | None, st
             refusals[posterior.WHOLE_RECORD] = str(refusal)
         except CaseError as refusal:
             refusals[posterior.WHOLE_RECORD] = " ".join(p.text for p in refusal.problems)
-    if profile.scope != "dosing":
+    if profile.scope != "dosing" and not pairs:
+        if _declared_steady(case):
+            refusals[two_level.METHOD] = _why_no_pair_here(case, profile)
         return _Estimates(by_method, refusals, record, (), (), (), None)
     settling = steadiness.settling(case, profile, observations, whole or population, pairs)
 
@@ -313,7 +352,9 @@ def _estimate(state: State, prior: Prior | None, population: Estimate | None, st
         try:
             if len(pairs) == 2:
                 # An unsettled pair is refused by its stop, which names the level; so it is solved here all the same.
-                by_method[two_level.METHOD] = two_level.from_steady_levels(*pairs, volume=volume)
+                by_method[two_level.METHOD] = two_level.from_steady_levels(
+                    *pairs, volume=volume, by_the_hour=profile.time_unit == "h"
+                )
                 own = steadiness.settling(case, profile, observations, by_method[two_level.METHOD], pairs)
             elif len(steady) >= lines.FEWEST:
                 gathered = lines.gather(steady)

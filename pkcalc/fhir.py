@@ -1221,11 +1221,7 @@ class _Reading:
         told += [f"since {_clip(found.onsetDateTime, 10)}"] if found.onsetDateTime else []
         told += [f"recorded {_clip(found.recordedDate, 10)}"] if found.recordedDate else []
         words = " ".join((found.code.text, *(c.display for c in found.code.coding))).casefold()
-        asked = [
-            self.profile.questions[q].words
-            for q, signs in _BEARS_ON.items()
-            if q in self.profile.questions and any(x in words for x in signs)
-        ]
+        asked = [q.words for q in self.profile.questions.values() if any(x in words for x in q.diagnoses)]
         state = f" ({_clip(', '.join(told))})" if told else ""
         bears = f" It may bear on: {' '.join(asked)}" if asked else ""
         self.say(
@@ -1446,24 +1442,6 @@ _OF_A_PATIENT = (
     "MedicationStatement",
     "Condition",
 )
-
-
-#: Words of a diagnosis that point to a context question. They only say which question to look at: whether the diagnosis
-#: still holds, and how severe it is, is not in a bundle.
-_BEARS_ON: Mapping[str, tuple[str, ...]] = {
-    "seizing_now": ("status epilepticus",),
-    "overdose": ("overdose", "poisoning"),
-    "renal_failure": ("end-stage", "end stage", "esrd", "dialysis", "renal failure", "kidney failure"),
-    "renal_reduced": ("kidney", "renal", "nephro"),
-    "hepatic_failure": ("hepat", "liver", "cirrhosis"),
-    "pregnancy": ("pregnan", "gestation"),
-    "delivery": ("postpartum", "puerper", "childbirth", "delivery"),
-    "tube_feed": ("tube fe", "gastrostomy", "enteral"),
-    "critical_illness": ("trauma", "burn", "sepsis", "septic", "critical"),
-    "extracorporeal": ("dialysis", "extracorporeal", "renal replacement", "plasma exchange"),
-    "heart_block": ("heart block", "atrioventricular block", "bradycardia", "heart failure"),
-    "adherence_doubtful": ("adherence", "compliance"),
-}
 
 
 def _states(concept: Concept | None) -> tuple[str, ...]:

@@ -59,12 +59,13 @@ def steady_pairs(case: Case, profile: Profile, observations: Sequence[Observatio
     pairs = []
     for o in observations:
         course = course_of(case, o)
-        if course is None or course.regimen is None or not o.usable or o.censored is not None:
+        rate = None if course is None else course.active_mg_per_day(profile)
+        if rate is None or not o.usable or o.censored is not None:
             continue
         pairs.append(
             SteadyPair(
                 level=o.level.index,
-                rate_mg_per_day=course.regimen.active_mg_per_day(profile),
+                rate_mg_per_day=rate,
                 level_mg_per_L=o.working_mg_per_L,
                 log_sd=o.log_sd,
                 kind="free" if o.level.kind == "free" else "total",

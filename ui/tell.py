@@ -12,20 +12,23 @@ from pkcalc_form import look
 
 from pkcalc.case import dump_case
 from pkcalc.consult import Consult, Shown
+from pkcalc.drugs.profile import Profile
 from pkcalc.errors import Caution
 from pkcalc.estimate.result import Band, Estimate
+from pkcalc.forecast import scaled
 from pkcalc.levels import Observation
 from pkcalc.note import hours
 from pkcalc.note.annex import DANGER_HEADS, danger_row, estimate_lines, populations_compared
 from pkcalc.note.charts import Chart
 from pkcalc.note.data import dumps, note_data
 from pkcalc.note.document import DEFERS, DEMONSTRATION, compose
-from pkcalc.note.front import forecast_lines, page_one, paste_block
+from pkcalc.note.front import basis_words, forecast_lines, page_one, paste_block
 from pkcalc.note.lessons import lesson
 from pkcalc.note.text import render
 from pkcalc.note.words import (
-    FORECAST_HEADS,
+    at_binding,
     days_words,
+    forecast_heads,
     forecast_row,
     level_words,
     mark_of,
@@ -97,7 +100,7 @@ def _interval(band: Band) -> str:
     return f"{show_number(band.low)} to {show_number(band.high)}"
 
 
-def estimates_table(estimates: Sequence[Estimate]) -> None:
+def estimates_table(estimates: Sequence[Estimate], profile: Profile) -> None:
     """Every method that answered, side by side."""
     rows = []
     for e in estimates:
@@ -107,8 +110,8 @@ def estimates_table(estimates: Sequence[Estimate]) -> None:
         rows.append(
             (
                 f"{e.method[0].upper()}{e.method[1:]}",
-                f"{show_number(e.point.vmax_mg_per_day, 4)} ({e.point.kind})",
-                _interval(vmax),
+                f"{show_number(profile.rate(e.point.vmax_mg_per_day), 4)} ({e.point.kind})",
+                _interval(scaled(vmax, profile.rate(1.0))),
                 f"{show_number(e.point.km_mg_per_L)} ({e.point.kind})",
                 _interval(km),
                 f"{show_number(volume.median)} ({_interval(volume)}), from the {e.volume_from}" if volume else "",
@@ -117,7 +120,7 @@ def estimates_table(estimates: Sequence[Estimate]) -> None:
     look.table(
         (
             "Method",
-            "Vmax (mg/day of active drug)",
+            f"Vmax ({profile.rate_unit} of active drug)",
             "90 % interval",
             "Km (mg/L)",
             "90 % interval",
@@ -161,14 +164,14 @@ def estimate(consult: Consult) -> None:
         look.say("No estimate is given; the reasons stand here and in the stops above.", "answer")
         return
     look.say(f"{estimate_sentence(consult)} ({chosen.point.kind}; method: {chosen.method}).", "answer")
-    estimates_table(list(consult.estimates.values()))
+    estimates_table(list(consult.estimates.values()), consult.profile)
     look.lines([x for x in (f"Chosen: {consult.chosen_why}.", consult.difference) if x])
     if consult.verdict is not None:
         look.say(consult.verdict.text)
     if chosen.fit:
         names = {o.level.index: o.name for o in consult.observations}
         look.table(
-            ("Level", "Measured, normal binding (mg/L)", "By the estimate (mg/L)"),
+            ("Level", f"Measured{at_binding(consult, ', normal binding')} (mg/L)", "By the estimate (mg/L)"),
             [(names.get(f.level, ""), show_number(f.observed_mg_per_L), short_band(f.predicted)) for f in chosen.fit],
             label="How the levels fit: median (90 % interval)",
         )
@@ -198,12 +201,12 @@ def populations(consult: Consult) -> None:
     for name, words, e in populations_compared(consult):
         vmax, km = e.summary["vmax_mg_per_day"], e.summary["km_mg_per_L"]
         used = " (used)" if consult.prior is not None and name == consult.prior.population else ""
-        rows.append((words + used, short_band(vmax), short_band(km)))
+        rows.append((words + used, short_band(scaled(vmax, consult.profile.rate(1.0))), short_band(km)))
     if len(rows) < 2:
         look.say("There is nothing to compare: this needs a weight and the whole record.")
         return
     look.table(
-        ("Population", "Vmax (mg/day of active drug)", "Km (mg/L)"),
+        ("Population", f"Vmax ({consult.profile.rate_unit} of active drug)", "Km (mg/L)"),
         rows,
         label="The same record and levels under each published population: median (90 % interval)",
     )
@@ -226,7 +229,7 @@ def goal_line(consult: Consult) -> str:
     goal = consult.goal
     return (
         f"Target {show_number(goal.low_mg_per_L)} to {show(goal.high_mg_per_L, 'mg/L')}, aim "
-        f"{show(goal.aim_mg_per_L, 'mg/L')} (total at normal binding; {goal.origin}); critical from "
+        f"{show(goal.aim_mg_per_L, 'mg/L')} ({basis_words(consult)}; {goal.origin}); critical from "
         f"{show(goal.critical_mg_per_L, 'mg/L')}."
     )
 
@@ -236,7 +239,7 @@ def regimen(shown: Shown, consult: Consult) -> None:
     f = shown.forecast
     mark = mark_of(shown)
     look.say(f"{regimen_words(shown)}{f' ({mark})' if mark else ''}", "answer")
-    said = [f"{show(f.rate_mg_per_day, 'mg/day', 4)} of active drug.", *forecast_lines(shown, consult)]
+    said = [f"{consult.profile.show_rate(f.rate_mg_per_day, 4)} of active drug.", *forecast_lines(shown, consult)]
     if isfinite(f.percent_per_percent):
         said.append(f"At this point 1 % more dose is {show_number(f.percent_per_percent, 2)} % more level.")
     said += [f"Not offered: {why}" for why in shown.why_not]
@@ -255,8 +258,8 @@ def candidates(consult: Consult) -> None:
     if consult.aim_rate is not None:
         rate = consult.aim_rate
         said = [
-            f"To hold {show(consult.goal.aim_mg_per_L, 'mg/L')} at normal binding: "
-            f"{show(rate.median, 'mg/day')} of active drug (90 % interval {_interval(rate)})."
+            f"To hold {show(consult.goal.aim_mg_per_L, 'mg/L')}{at_binding(consult, ' at normal binding')}: "
+            f"{consult.profile.show_rate(rate.median)} of active drug (90 % interval {_interval(rate)})."
         ]
         for form in dict.fromkeys(f for c in consult.case.courses for f in c.forms):
             known = consult.profile.forms[form]
@@ -273,7 +276,7 @@ def candidates(consult: Consult) -> None:
         rows.sort(key=ORDERS.get(order, ORDERS["daily dose"]))
         marks = ["not offered" if not s.offered else "present" if s.present else "" for s in rows]
         look.table(
-            (*FORECAST_HEADS[:-1], "Remark"),
+            (*forecast_heads(consult)[:-1], "Remark"),
             [forecast_row(s, consult) for s in rows],
             label="Doses around the present one. Median (90 % interval); nothing else changed.",
             marks=marks,
@@ -300,7 +303,7 @@ def _compare(rows: Sequence[Shown], consult: Consult) -> None:
         two = st.multiselect("Two regimens", words, key="two", max_selections=2, placeholder="choose two")
         if len(two) == 2 and set(two) <= set(words):
             first, second = (rows[words.index(w)] for w in two)
-            heads = (*FORECAST_HEADS[1:-1], *DANGER_HEADS[1:])
+            heads = (*forecast_heads(consult)[1:-1], *DANGER_HEADS[1:])
             columns = [(*forecast_row(s, consult)[1:-1], *danger_row(s, consult)[1:]) for s in (first, second)]
             look.table(
                 ("", first.words, second.words),
@@ -358,7 +361,7 @@ def acute(consult: Consult) -> None:
         look.say(f"Another form{': NOT OFFERED' if not switch.offered else ''}: {switch.words}", "answer")
         look.lines(
             [
-                f"Equal would be {show(switch.exact_labelled_mg, 'mg/day')} as labelled; steady level "
+                f"Equal would be {consult.profile.show_rate(switch.exact_labelled_mg)} as labelled; steady level "
                 f"{level_words(switch.steady, most)}.",
                 *switch.why_not,
                 *switch.lines,

@@ -23,7 +23,7 @@ from pkcalc.drugs.questions import Question, common_questions, read_question
 from pkcalc.drugs.table import Fact, Table
 from pkcalc.errors import CaseError, DrugFileError, Problem
 from pkcalc.sources import Source, Status, all_sources
-from pkcalc.units import FACTORS, show_number
+from pkcalc.units import FACTORS, show, show_number
 
 Scope = Literal["dosing", "dosing with expert sign-off", "projection only", "teaching only"]
 SCOPES: tuple[Scope, ...] = ("dosing", "dosing with expert sign-off", "projection only", "teaching only")
@@ -649,6 +649,19 @@ class Profile:
     @property
     def display(self) -> str:
         return self.name
+
+    @property
+    def rate_unit(self) -> str:
+        """The unit in which rates of active drug are told: by the hour or by the day."""
+        return "mg/h" if self.time_unit == "h" else "mg/day"
+
+    def rate(self, mg_per_day: float) -> float:
+        """A rate of active drug in the drug's own time unit."""
+        return mg_per_day / 24 if self.time_unit == "h" else mg_per_day
+
+    def show_rate(self, mg_per_day: float, digits: int = 3) -> str:
+        """'300 mg/day', or '7,000 mg/h' for a drug told by the hour."""
+        return show(self.rate(mg_per_day), self.rate_unit, digits)
 
     def fact(self, path: str) -> Fact:
         """Where one number came from: `fact("binding.free_fraction")`."""

@@ -21,7 +21,8 @@ class Question:
     """One context question; its answer is yes, no or unknown, and silence stands on the note as "not stated".
 
     words: as asked. short: in a sentence. group: where the form asks it. told: its answer stands on page one.
-    dated: a yes is asked for its date and what exactly.
+    dated: a yes is asked for its date and what exactly. diagnoses: words of a diagnosis that point to the question;
+    they never answer it, because whether it still holds and how severe it is stands elsewhere.
     """
 
     id: str
@@ -30,6 +31,7 @@ class Question:
     group: Group
     told: bool
     dated: bool
+    diagnoses: tuple[str, ...] = ()
 
 
 def read_question(name: str, t: Table) -> Question:
@@ -41,6 +43,7 @@ def read_question(name: str, t: Table) -> Question:
         group=cast(Group, t.choice("group", GROUPS)),
         told=t.switch("told"),
         dated=t.switch("dated"),
+        diagnoses=t.texts("diagnoses", ()),
     )
 
 

@@ -36,7 +36,12 @@ class VolumeSpread:
 
 
 def from_steady_levels(
-    first: SteadyPair, second: SteadyPair, *, volume: VolumeSpread | None = None, draws: int = DRAWS
+    first: SteadyPair,
+    second: SteadyPair,
+    *,
+    volume: VolumeSpread | None = None,
+    draws: int = DRAWS,
+    by_the_hour: bool = False,
 ) -> Estimate:
     """Estimate from two steady pairs; the order of the pairs does not matter.
 
@@ -46,7 +51,7 @@ def from_steady_levels(
     through which no saturable curve passes are counted in `rejected`, beside the exact chance of a negative
     Km in `diagnostics`. Raises CannotEstimate, in terms of doses and levels, where no saturable curve passes
     through the reported pair itself. Source: the rate law at steady state (Michaelis & Menten 1913; Ludden
-    1977 for its use with two dose/level pairs).
+    1977 for its use with two dose/level pairs). by_the_hour: a refusal tells the doses by the hour.
     """
     if {first.kind, second.kind} == {"free", "total"}:
         raise CannotEstimate(
@@ -55,7 +60,7 @@ def from_steady_levels(
             helps="Use two levels of the same kind, or give the albumin so that both are brought to one basis.",
         )
     low, high = sorted((first, second), key=lambda p: (p.rate_mg_per_day, p.level_mg_per_L))
-    refuse_impossible(low, high)
+    refuse_impossible(low, high, by_the_hour=by_the_hour)
     point = formulas.two_level(
         rate1_mg_per_day=low.rate_mg_per_day,
         level1_mg_per_L=low.level_mg_per_L,
@@ -128,7 +133,7 @@ def chance_of_negative_km(first: SteadyPair, second: SteadyPair) -> float:
     )
 
 
-def refuse_impossible(low: SteadyPair, high: SteadyPair) -> None:
+def refuse_impossible(low: SteadyPair, high: SteadyPair, *, by_the_hour: bool = False) -> None:
     """CannotEstimate with the physical reason where no saturable curve passes through the pair."""
     reason = formulas.pair_refusal(
         rate1_mg_per_day=low.rate_mg_per_day,
@@ -138,7 +143,8 @@ def refuse_impossible(low: SteadyPair, high: SteadyPair) -> None:
     )
     if reason is None:
         return
-    r1, r2 = (show(p.rate_mg_per_day, "mg/day", 4) for p in (low, high))
+    per, unit = (24.0, "mg/h") if by_the_hour else (1.0, "mg/day")
+    r1, r2 = (show(p.rate_mg_per_day / per, unit, 4) for p in (low, high))
     c1, c2 = (show(p.level_mg_per_L, "mg/L", 4) for p in (low, high))
     if reason == "same rate":
         raise CannotEstimate(

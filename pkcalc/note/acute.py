@@ -78,7 +78,7 @@ def too_high(consult: Consult) -> TooHigh | None:
     Drugs that are followed by the hour have their own words.
     """
     o, goal = used_level(consult), consult.goal
-    if o is None or consult.projection is not None:
+    if o is None or consult.projection is not None or consult.plateaus is not None:
         return None
     measured = o.working_mg_per_L if o.readable else o.low_mg_per_L
     least = "above " if o.censored == "above" else "" if o.readable else "at least "

@@ -11,17 +11,19 @@ from pkcalc.consult import Consult, Shown
 from pkcalc.dosing import active_mg
 from pkcalc.estimate.lines import LineFailure
 from pkcalc.estimate.result import Band, Estimate
+from pkcalc.forecast import scaled
 from pkcalc.note import hours, populations
 from pkcalc.note.acute import is_offered, limited, marked, too_high
 from pkcalc.note.front import chosen_candidate, forecast_lines, spoken_for
 from pkcalc.note.populations import populations_compared
 from pkcalc.note.words import (
-    FORECAST_HEADS,
     NOT_OFFERED,
     Section,
     Table,
+    at_binding,
     chances_words,
     days_words,
+    forecast_heads,
     forecast_row,
     level_band,
     level_edge,
@@ -35,6 +37,7 @@ from pkcalc.note.words import (
 )
 from pkcalc.note.workings import REPRESENTATIVE, machine_only, workings
 from pkcalc.plan.loading import Load
+from pkcalc.plan.switching import Switch
 from pkcalc.sources import source
 from pkcalc.units import percent, show, show_number
 
@@ -110,7 +113,7 @@ def _doses(consult: Consult) -> Section:
             )
             if course.end is not None:
                 when += f" until {show_time(course.end)}"
-            text = f"{course.regimen.words(profile)}, {when} = {show(rate, 'mg/day', 4)} as active drug"
+            text = f"{course.regimen.words(profile)}, {when} = {profile.show_rate(rate, 4)} as active drug"
             if course.missed:
                 text += "; missed " + ", ".join(show_time(m) for m in course.missed)
         elif course.single is not None and course.start is not None:
@@ -250,7 +253,7 @@ def _estimate(consult: Consult) -> list[Section]:
             if other is not consult.chosen:
                 p = other.point
                 lines.append(
-                    f"Beside it, {other.method}: Vmax {show(p.vmax_mg_per_day, 'mg/day', 4)}, Km "
+                    f"Beside it, {other.method}: Vmax {consult.profile.show_rate(p.vmax_mg_per_day, 4)}, Km "
                     f"{show(p.km_mg_per_L, 'mg/L')} ({p.kind})."
                 )
         if consult.difference:
@@ -274,7 +277,8 @@ def _estimate(consult: Consult) -> list[Section]:
             )
             for f in consult.chosen.fit
         )
-        heads = ("Level", "Measured, normal binding (mg/L)", "By the estimate (mg/L)", "Off in spreads")
+        measured = f"Measured{at_binding(consult, ', normal binding')} (mg/L)"
+        heads = ("Level", measured, "By the estimate (mg/L)", "Off in spreads")
         sections.append(Section("How the levels fit", (), Table(heads, rows)))
     if consult.line_results:
         rows_ = []
@@ -284,8 +288,10 @@ def _estimate(consult: Consult) -> list[Section]:
                 said.append(r.text)
             else:
                 p = r.point
-                rows_.append((r.method, show_number(p.vmax_mg_per_day, 4), show_number(p.km_mg_per_L)))
-        table = Table(("Method", "Vmax (mg/day)", "Km (mg/L)"), tuple(rows_)) if rows_ else None
+                vmax = consult.profile.rate(p.vmax_mg_per_day)
+                rows_.append((r.method, show_number(vmax, 4), show_number(p.km_mg_per_L)))
+        heads_ = ("Method", f"Vmax ({consult.profile.rate_unit})", "Km (mg/L)")
+        table = Table(heads_, tuple(rows_)) if rows_ else None
         sections.append(Section("The steady levels by several methods", tuple(said), table))
     return sections
 
@@ -336,7 +342,7 @@ def _regimens(consult: Consult) -> list[Section]:
         f, may = shown.forecast, is_offered(shown, consult)
         lines = [
             f"{regimen_words(shown) if may else f'{NOT_OFFERED}: {shown.words}'} = "
-            f"{show(f.rate_mg_per_day, 'mg/day', 4)} as active drug.",
+            f"{consult.profile.show_rate(f.rate_mg_per_day, 4)} as active drug.",
             *(sentence(f"Not offered: {w}") for w in shown.why_not),
             *forecast_lines(shown, consult),
             f"Central chances: {chances_words(f)}.",
@@ -355,7 +361,7 @@ def _regimens(consult: Consult) -> list[Section]:
                     "past intake carried on. "
                     "Chances hold against the target range. No change in other drugs, feeds or albumin.",
                 ),
-                Table(FORECAST_HEADS, tuple(forecast_row(s, consult) for s in ordered)),
+                Table(forecast_heads(consult), tuple(forecast_row(s, consult) for s in ordered)),
             )
         )
         sections.append(
@@ -379,10 +385,11 @@ def _regimens(consult: Consult) -> list[Section]:
                 "the JSON form of this note holds all."
             )
         if plan.ranked:
+            on_table = {c.words for c in (*plan.table, *plan.own)}
             notes.append(
-                "By expected loss, as asked for (too high weighs "
+                "Those of the table that may be offered by expected loss, smallest first, as asked for (too high weighs "
                 f"{show_number(consult.site.loss_too_high)}, too low {show_number(consult.site.loss_too_low)}): "
-                + "; ".join(c.words for c in plan.ranked[:5])
+                + "; ".join(c.words for c in plan.ranked if c.words in on_table)
                 + "."
             )
         sections.append(Section("About the regimens", tuple(notes)))
@@ -394,7 +401,9 @@ def _regimens(consult: Consult) -> list[Section]:
             )
             sections.append(
                 Section(
-                    "Level day by day, average over the day", ("Central line, at normal binding.",), Table(heads, rows)
+                    "Level day by day, average over the day",
+                    (f"Central line{at_binding(consult, ', at normal binding')}.",),
+                    Table(heads, rows),
                 )
             )
         for switch in plan.switches:
@@ -403,12 +412,10 @@ def _regimens(consult: Consult) -> list[Section]:
                     f"Another form{': NOT OFFERED' if not switch.offered else ''}: {switch.words}",
                     (
                         *(sentence(w) for w in switch.why_not),
-                        f"Equal would be {show(switch.exact_labelled_mg, 'mg/day')} as labelled; as dispensed "
-                        f"{show(switch.active_mg_per_day, 'mg/day', 4)} of active drug "
-                        f"({signed_percent(switch.change_percent)} of the present).",
-                        f"Steady level {level_words(switch.steady, most)}; at the two ends of how much reaches the "
-                        f"body {level_edge(switch.steady_low_mg_per_L, most)} to "
-                        f"{level_edge(switch.steady_high_mg_per_L, most)} mg/L.",
+                        f"Equal would be {consult.profile.show_rate(switch.exact_labelled_mg)} as labelled; as "
+                        f"dispensed {consult.profile.show_rate(switch.active_mg_per_day, 4)} of active drug "
+                        f"({_change_words(switch.change_percent)}).",
+                        f"Steady level {level_words(switch.steady, most)}{_two_ends(switch, most)}.",
                         *switch.lines,
                     ),
                 )
@@ -418,11 +425,12 @@ def _regimens(consult: Consult) -> list[Section]:
         # the estimate itself is one of the two lines; which one depends on whether it reckons with missed doses
         same = plan is not None and consult.chosen is not None and plan.setting.taken is plan.setting.central
         full = plan is not None and plan.setting.taken is consult.chosen
+        basis = "normal binding" if consult.profile.binding is not None else "steady level"
         line = "" if same else ", every dose taken" if full else ", past intake carried on"
         lines = [
-            f"To hold {show(consult.goal.aim_mg_per_L, 'mg/L')} (normal binding{line}): "
-            f"{show(rate.median, 'mg/day')} of active drug (90 % interval {show_number(rate.low)} to "
-            f"{show_number(rate.high)})."
+            f"To hold {show(consult.goal.aim_mg_per_L, 'mg/L')} ({basis}{line}): "
+            f"{consult.profile.show_rate(rate.median)} of active drug (90 % interval "
+            f"{show_number(consult.profile.rate(rate.low))} to {show_number(consult.profile.rate(rate.high))})."
         ]
         for form_id in dict.fromkeys(f for c in consult.case.courses for f in c.forms):
             form = consult.profile.forms[form_id]
@@ -433,6 +441,18 @@ def _regimens(consult: Consult) -> list[Section]:
             )
         sections.append(Section("Dose rate for the aim", tuple(lines)))
     return sections
+
+
+def _change_words(percent: float) -> str:
+    """'0.36 % less than now'."""
+    if abs(percent) < 0.05:
+        return "the same as now"
+    return f"{show(abs(percent), '%', 2)} {'more' if percent > 0 else 'less'} than now"
+
+
+def _two_ends(switch: Switch, most: float) -> str:
+    low, high = (level_edge(x, most) for x in (switch.steady_low_mg_per_L, switch.steady_high_mg_per_L))
+    return "" if low == high else f"; at the two ends of how much may reach the body {low} to {high} mg/L"
 
 
 def _acute(consult: Consult) -> list[Section]:
@@ -506,8 +526,14 @@ def _load(load: Load, consult: Consult) -> Section:
         f"By the formula {show(load.wanted_mg, form.amount_unit, 4)}; as ordered "
         f"{show(load.amount_mg, form.amount_unit, 6)} "
         f"({show(load.active_mg, 'mg', 4)} of active drug): {parts}.",
-        f"It adds {level_words(load.rise, most)}; level after it {level_words(load.after, most)}; when drawn "
-        f"{show(load.draw_after_h, 'h')} later {level_words(load.at_draw, most)}.",
+        f"It adds {level_words(load.rise, most)}; "
+        + (
+            f"level after it {level_words(load.after, most)}; when drawn {show(load.draw_after_h, 'h')} later "
+            f"{level_words(load.at_draw, most)}."
+            if load.minutes is not None
+            else f"level when drawn, {show(load.draw_after_h, 'h')} after the first part, "
+            f"{level_words(load.at_draw, most)}."
+        ),
         f"Chance of a level above the range {percent(load.above_high)}, above the critical level "
         f"{percent(load.above_critical)}.",
     ]
@@ -552,7 +578,7 @@ def _next(consult: Consult) -> list[Section]:
         "Day",
         "Drawn",
         "Spread left",
-        "Expected, normal binding (mg/L)",
+        f"Expected{at_binding(consult, ', normal binding')} (mg/L)",
         "As reported (mg/L)",
         "",
     )
@@ -580,7 +606,7 @@ def _populations(consult: Consult) -> list[Section]:
     rows = tuple(
         (
             c.words + (" (used)" if c.used else ""),
-            short_band(c.vmax),
+            short_band(scaled(c.vmax, consult.profile.rate(1.0))),
             short_band(c.km),
             level_band(c.steady, told_up_to(consult)),
             percent(c.danger),
@@ -589,15 +615,15 @@ def _populations(consult: Consult) -> list[Section]:
     )
     heads = (
         "Population",
-        "Vmax (mg/day)",
+        f"Vmax ({consult.profile.rate_unit})",
         "Km (mg/L)",
         "Steady level, central (mg/L)",
         "Every dose taken, once settled: above critical or no steady state",
     )
     said = (
         "What the same record and levels say under other published populations, for "
-        f"{marked(shown, consult) if shown else ''}, at normal binding. Where these rows differ much, "
-        "the population matters more than the levels.",
+        f"{marked(shown, consult) if shown else ''}{at_binding(consult, ', at normal binding')}. Where these rows "
+        "differ much, the population matters more than the levels.",
     )
     return [Section("Populations compared", said, Table(heads, rows))]
 

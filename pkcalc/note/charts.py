@@ -20,13 +20,15 @@ from numpy.typing import NDArray
 
 from pkcalc import flow
 from pkcalc.case import Case
+from pkcalc.case import Course as Line
 from pkcalc.clock import show_date
 from pkcalc.consult import Consult, Shown, record_spread
 from pkcalc.dosing import active_mg
+from pkcalc.drugs.profile import Profile
 from pkcalc.estimate.intake import taken_on_average
 from pkcalc.estimate.posterior import WHOLE_RECORD, with_population_path, written_out
 from pkcalc.forecast import fewer_draws
-from pkcalc.note.words import NOT_OFFERED, level_edge, mark_of, short_words, told_up_to
+from pkcalc.note.words import NOT_OFFERED, at_binding, level_edge, mark_of, short_words, told_up_to
 from pkcalc.units import percent, show, show_number
 
 Floats = NDArray[np.float64]
@@ -73,7 +75,7 @@ def finish(name: str, title: str, text: str, layers: Sequence[Any], case: Case, 
     if case.demonstration is not None:
         found.append(
             alt.Chart(alt.InlineData([{"mark": MARK}]))
-            .mark_text(fontSize=34, opacity=0.16, angle=340, color=BLACK, fontWeight="bold")
+            .mark_text(fontSize=min(34, round(height / 4)), opacity=0.16, angle=340, color=BLACK, fontWeight="bold")
             .encode(text="mark:N", x=alt.value(width / 2), y=alt.value(height / 2))
         )
         title = f"{title} - demonstration, not a patient"
@@ -180,27 +182,13 @@ def record_chart(consult: Consult) -> Chart | None:
                 "kind": kind,
             }
         )
-    ticks: list[dict[str, Any]] = []
-    missed: list[dict[str, Any]] = []
-    for c in given:
-        assert c.start is not None
-        if c.regimen is not None:
-            for moment, intake in c.regimen.doses_from(c.start, min(c.end or last, last)):
-                gone = any(abs(moment - m) <= timedelta(minutes=1) for m in c.missed)
-                row = {"when": _stamp(moment), "amount": active_mg(intake, consult.profile)}
-                (missed if gone else ticks).append(row)
-        elif c.single is not None:
-            ticks.append({"when": _stamp(c.start), "amount": active_mg(c.single, consult.profile)})
+    ticks, missed = _doses(given, consult.profile, last)
     seen = [p["high"] for p in points] + ([] if fitted is None else [float(np.quantile(fitted.high, 0.98))])
     top = 1.08 * max([goal.high_mg_per_L, *seen])
     floor = -0.07 * top
-    when = alt.X(
-        "when:T",
-        title="Date",
-        scale=alt.Scale(type="utc"),
-        axis=alt.Axis(format="%-d %b %Y", labelOverlap=True, tickCount=6),
-    )
-    level_title = "Level at normal binding (mg/L)"
+    when = _when(case.origin, last)
+    bound = at_binding(consult, " at normal binding")
+    level_title = f"Level{bound} (mg/L)"
     y = _y("level", level_title, floor, top)
     layers: list[Any] = [
         _zone(goal.low_mg_per_L, min(goal.high_mg_per_L, top), floor, top, level_title),
@@ -266,7 +254,7 @@ def record_chart(consult: Consult) -> Chart | None:
     )
     text = (
         f"Level over time from {show_date(case.origin)} to {show_date(last)}: {len(ticks)} doses as ticks along the "
-        f"bottom{f', {len(missed)} missed doses as crosses' if missed else ''}; measured levels at normal binding with "
+        f"bottom{f', {len(missed)} missed doses as crosses' if missed else ''}; measured levels{bound} with "
         f"their 90 % spread: {said}; target {show_number(goal.low_mg_per_L)} to {show(goal.high_mg_per_L, 'mg/L')} "
         "shaded"
     )
@@ -276,6 +264,106 @@ def record_chart(consult: Consult) -> Chart | None:
             f"{show(float(fitted.high[-1]), 'mg/L')}"
         )
     return finish("record", "The record: doses, levels and the fitted 90 % band", text + ".", layers, case)
+
+
+def _doses(
+    courses: Sequence[Line], profile: Profile, last: datetime
+) -> tuple[list[dict[str, Any]], list[dict[str, Any]]]:
+    """When each dose of dated lines was given, and when one was missed; infusions by rate are not doses."""
+    ticks: list[dict[str, Any]] = []
+    missed: list[dict[str, Any]] = []
+    for c in courses:
+        if c.start is None:
+            continue
+        if c.regimen is not None:
+            for moment, intake in c.regimen.doses_from(c.start, min(c.end or last, last)):
+                gone = any(abs(moment - m) <= timedelta(minutes=1) for m in c.missed)
+                row = {"when": _stamp(moment), "amount": active_mg(intake, profile)}
+                (missed if gone else ticks).append(row)
+        elif c.single is not None:
+            ticks.append({"when": _stamp(c.start), "amount": active_mg(c.single, profile)})
+    return ticks, missed
+
+
+def _when(first: datetime, last: datetime, pad: int = 0) -> alt.X:
+    """The axis of time: dates, with the hour where the record is short."""
+    hours = last - first < timedelta(days=4)
+    return alt.X(
+        "when:T",
+        title="Date and time" if hours else "Date",
+        scale=alt.Scale(type="utc", padding=pad) if pad else alt.Scale(type="utc"),
+        axis=alt.Axis(format="%-d %b %H:%M" if hours else "%-d %b %Y", labelOverlap=True, tickCount=6),
+    )
+
+
+def typed_chart(case: Case, profile: Profile) -> Chart | None:
+    """The record as typed, before anything is calculated: one lane each for doses, missed doses, infusions, dialysis
+    and levels drawn. None where no line has a date."""
+    dated = [c for c in case.courses if c.start is not None]
+    if not dated or case.origin is None:
+        return None
+    ends = [m for c in dated for m in (c.start, c.end) if m is not None]
+    ends += [x.drawn for x in case.levels if x.drawn is not None] + [
+        m for s in case.dialysis for m in (s.start, s.end) if m
+    ]
+    last = max([*ends, *([case.now] if case.now is not None else [])])
+    if any(c.end is None and c.regimen is not None for c in dated) and case.now is None:
+        # a line that goes on is followed for a while beyond the last date there is
+        last += timedelta(hours=4 * max(c.regimen.cycle_h for c in dated if c.regimen is not None))
+    given = [c for c in dated if c.counts_as_given]
+    ticks, missed = _doses(given, profile, last)
+    left_out, _ = _doses([c for c in dated if not c.counts_as_given], profile, last)
+    draws = [{"when": _stamp(x.drawn)} for x in case.levels if x.drawn is not None]
+    runs = [(c.start, c.end) for c in given if c.rate_mg_per_day is not None and c.start is not None]
+    spans = {
+        "infusion": [{"when": _stamp(a), "end": _stamp(b or last)} for a, b in runs],
+        "dialysis": [{"when": _stamp(s.start), "end": _stamp(s.end or last)} for s in case.dialysis],
+    }
+    points = {"dose": ticks, "missed": missed, "not counted": left_out, "level drawn": draws}
+    order = ("dose", "missed", "not counted", "infusion", "dialysis", "level drawn")
+    lanes = [name for name in order if points.get(name) or spans.get(name)]
+    if not lanes:
+        return None
+    when = _when(case.origin, last, pad=8)
+    y = alt.Y("lane:N", sort=lanes, title=None, scale=alt.Scale(domain=lanes))
+    layers: list[Any] = []
+    for name in lanes:
+        if name in spans:
+            rows = _data([{**r, "lane": name} for r in spans[name]])
+            layers.append(
+                alt.Chart(rows)
+                .mark_bar(color=BLUE if name == "infusion" else ORANGE, height=9)
+                .encode(x=when, x2="end:T", y=y)
+            )
+            continue
+        base = alt.Chart(_data([{**r, "lane": name} for r in points[name]]))
+        if name == "dose":
+            layers.append(base.mark_tick(color=BLACK, orient="vertical", size=14, thickness=1).encode(x=when, y=y))
+        elif name == "missed":
+            mark = base.mark_point(shape="cross", color=RED, size=55, angle=45, strokeWidth=1.8)
+            layers.append(mark.encode(x=when, y=y))
+        else:
+            shape, fill = ("diamond", RED) if name == "level drawn" else ("circle", "white")
+            mark = base.mark_point(shape=shape, filled=True, fill=fill, stroke=BLACK, size=55, opacity=1)
+            layers.append(mark.encode(x=when, y=y))
+    counted = {
+        "dose": len(ticks),
+        "missed dose": len(missed),
+        "dose that does not count as given": len(left_out),
+        "infusion by rate": len(runs),
+        "dialysis session": len(case.dialysis),
+        "level drawn": len(draws),
+    }
+    plural = {"level drawn": "levels drawn", "dose that does not count as given": "doses that do not count as given"}
+    plural["infusion by rate"] = "infusions by rate"
+    said = [f"{n} {name if n == 1 else plural.get(name, name + 's')}" for name, n in counted.items() if n]
+    text = f"The record as typed, {show_date(case.origin)} to {show_date(last)}: {', '.join(said)}."
+    undated = len(case.courses) - len(dated)
+    if undated:
+        text += (
+            f" {undated} line{'s' if undated > 1 else ''} without a start {'are' if undated > 1 else 'is'} not shown."
+        )
+    return finish("typed", "The record as typed", text, layers, case, height=26 * len(lanes) + 8)
 
 
 def _zone(low: float, high: float, floor: float, top: float, title: str) -> Any:
@@ -387,14 +475,15 @@ def plane_chart(consult: Consult) -> Chart | None:
     if estimate is None or "projection" in consult.blocked:
         return None
     km, vmax = estimate.summary["km_mg_per_L"], estimate.summary["vmax_mg_per_day"]
-    found = contours(estimate.km_mg_per_L, estimate.vmax_mg_per_day, estimate.weights)
+    own = consult.profile.rate  # in the drug's own time unit
+    found = contours(estimate.km_mg_per_L, own(1.0) * estimate.vmax_mg_per_day, estimate.weights)
     spots = [p for path in found[0.9] for p in path]
     right = 1.1 * max(p[0] for p in spots)
-    rates = [s.forecast.rate_mg_per_day for s in (*consult.proposed, *[t for t in consult.table if t.present])]
+    rates = [own(s.forecast.rate_mg_per_day) for s in (*consult.proposed, *[t for t in consult.table if t.present])]
     low = 0.94 * min([p[1] for p in spots] + rates)
     high = 1.05 * max(p[1] for p in spots)
     x = alt.X("km:Q", title="Km (mg/L)", scale=alt.Scale(domain=[0, right], nice=False), axis=alt.Axis(format=",~r"))
-    y = _y("vmax", "Vmax of active drug (mg/day)", low, high)
+    y = _y("vmax", f"Vmax of active drug ({consult.profile.rate_unit})", low, high)
     layers: list[Any] = []
     for share, width, fill in ((0.9, 1.0, 0.35), (0.5, 2.0, 0.6)):
         rows = [
@@ -411,15 +500,16 @@ def plane_chart(consult: Consult) -> Chart | None:
     lines = []
     for i, p in enumerate(consult.pairs):
         # the line is cut where it leaves the picture, so that its name stays in sight
-        slope = p.rate_mg_per_day / p.level_mg_per_L
-        ends = ((low - p.rate_mg_per_day) / slope, (high - p.rate_mg_per_day) / slope)
+        rate = own(p.rate_mg_per_day)
+        slope = rate / p.level_mg_per_L
+        ends = ((low - rate) / slope, (high - rate) / slope)
         first, last = max(0.0, ends[0]), min(right, ends[1])
         if last > first:
             for order, k in enumerate((first, last)):
                 lines.append(
                     {
                         "km": k,
-                        "vmax": p.rate_mg_per_day + slope * k,
+                        "vmax": rate + slope * k,
                         "name": names[p.level],
                         "dash": i % 4,
                         "order": order,
@@ -448,26 +538,27 @@ def plane_chart(consult: Consult) -> Chart | None:
     said_rates: list[str] = []
     seen: set[float] = set()
     for s in (*[t for t in consult.table if t.present], *consult.proposed):
-        rate = s.forecast.rate_mg_per_day
+        rate = own(s.forecast.rate_mg_per_day)
         if round(rate, 3) in seen:
             continue
         seen.add(round(rate, 3))
         word = "present dose" if s.present else "proposed dose"
-        said_rates.append(f"{word}, {show(rate, 'mg/day', 4)}: no steady state below")
+        said_rates.append(f"{word}, {show(rate, consult.profile.rate_unit, 4)}: no steady state below")
         row = {"km": right, "vmax": rate, "name": said_rates[-1]}
         base = alt.Chart(_data([row]))
         layers.append(base.mark_rule(color=RED, strokeDash=[5, 3] if s.present else [1, 2]).encode(y=y))
         layers.append(base.mark_text(align="right", dx=-4, dy=-6, fontSize=10).encode(x=x, y=y, text="name:N"))
     point = estimate.point
     layers.append(
-        alt.Chart(_data([{"km": point.km_mg_per_L, "vmax": point.vmax_mg_per_day}]))
+        alt.Chart(_data([{"km": point.km_mg_per_L, "vmax": own(point.vmax_mg_per_day)}]))
         .mark_point(shape="diamond", filled=True, color=BLACK, size=90, opacity=1)
         .encode(x=x, y=y)
     )
     text = (
         f"Plane of Km and Vmax ({estimate.method}). The regions that hold 50 % and 90 % of the possible pairs; Vmax "
-        f"{show_number(vmax.low)} to {show(vmax.high, 'mg/day')}, Km {show_number(km.low)} to {show(km.high, 'mg/L')} "
-        f"(90 % intervals); diamond: {point.kind}, Vmax {show(point.vmax_mg_per_day, 'mg/day')}, Km "
+        f"{show_number(own(vmax.low))} to {consult.profile.show_rate(vmax.high)}, Km {show_number(km.low)} to "
+        f"{show(km.high, 'mg/L')} (90 % intervals); diamond: {point.kind}, Vmax "
+        f"{consult.profile.show_rate(point.vmax_mg_per_day)}, Km "
         f"{show(point.km_mg_per_L, 'mg/L')}. "
         + (f"One line for each of {len(consult.pairs)} steady levels. " if lines else "")
         + ("Horizontal lines: " + "; ".join(said_rates) + "." if said_rates else "")
@@ -538,7 +629,7 @@ def regimens_chart(consult: Consult, shown: Sequence[Shown]) -> Chart | None:
         axis=alt.Axis(labelLimit=330, labelFontSize=10, labelExpr="split(datum.label, '|')"),
     )
     offset = alt.YOffset("line:N", sort=["central", "every dose taken"])
-    title = "Steady level at normal binding (mg/L)"
+    title = f"Steady level{at_binding(consult, ' at normal binding')} (mg/L)"
 
     def x(field: str) -> alt.X:
         return alt.X(

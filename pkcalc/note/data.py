@@ -114,6 +114,7 @@ def note_data(consult: Consult) -> dict[str, Any]:
         "refusals": dict(consult.refusals),
         "chosen": {"method": consult.chosen.method, "why": consult.chosen_why} if consult.chosen else None,
         "projection": hours.data(consult),
+        "plateaus": hours.plateaus_data(consult),
         "proposed": [shown_data(s) for s in consult.proposed],
         "table": [shown_data(s) for s in consult.table],
         "plan": plan_data(consult.plan) if consult.plan is not None else None,

@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import math
-import textwrap
 from collections.abc import Sequence
 
 from pkcalc import __version__, entries
@@ -16,7 +15,6 @@ from pkcalc.note.acute import daily_levels, is_offered, limited, now_lines, too_
 from pkcalc.note.words import (
     NOT_OFFERED,
     NOW,
-    VALID_UNTIL,
     Section,
     as_reported,
     days_words,
@@ -27,7 +25,10 @@ from pkcalc.note.words import (
     same_lines,
     sentence,
     told_up_to,
+    valid_in_short,
+    valid_until,
 )
+from pkcalc.note.wrapping import wrapped
 from pkcalc.plan.candidates import candidates
 from pkcalc.units import percent, percent_beside, show, show_number
 
@@ -45,7 +46,7 @@ def page_one(consult: Consult) -> tuple[Section, ...]:
         Section("Chosen regimen", _chosen(consult)),
         Section("Load or top-up", _loads(consult)),
         Section("Next level", _next_level(consult)),
-        Section("Valid until", (VALID_UNTIL, "Ordered instead, and why: ________________________________________")),
+        Section("Valid until", (valid_until(consult), f"Ordered instead, and why: {'_' * 40}")),
     )
     return tuple(p for p in parts if p.lines)
 
@@ -58,14 +59,16 @@ def _question(consult: Consult) -> tuple[str, ...]:
     if case.question:
         lines.append(sentence(case.question))
     lines.append(
-        f"Target {show_number(goal.low_mg_per_L)} to {show_number(goal.high_mg_per_L)} mg/L, aim "
-        f"{show(goal.aim_mg_per_L, 'mg/L')} ({_basis(consult)}; {goal.origin}); critical from "
-        f"{show(goal.critical_mg_per_L, 'mg/L')}."
+        f"Target {show_number(goal.low_mg_per_L)} to {show_number(goal.high_mg_per_L)} mg/L"
+        f"{hours.also(consult, goal.low_mg_per_L, goal.high_mg_per_L)}, aim "
+        f"{show(goal.aim_mg_per_L, 'mg/L')}{hours.also(consult, goal.aim_mg_per_L)} ({basis_words(consult)}; "
+        f"{goal.origin}); critical from {show(goal.critical_mg_per_L, 'mg/L')}"
+        f"{hours.also(consult, goal.critical_mg_per_L)}."
     )
     return tuple(lines)
 
 
-def _basis(consult: Consult) -> str:
+def basis_words(consult: Consult) -> str:
     return "total at normal binding" if consult.profile.binding is not None else consult.profile.target.basis
 
 
@@ -216,7 +219,7 @@ def order_sentence(shown: Shown, consult: Consult) -> str:
     if shown.change_percent is not None and not shown.present:
         way = "more" if shown.change_percent > 0 else "less"
         change = f", {show_number(abs(shown.change_percent), 2)} % {way} than now"
-    rate = f" = {show(shown.rate_mg_per_day, 'mg/day', 4)} as active drug{change}."
+    rate = f" = {consult.profile.show_rate(shown.rate_mg_per_day, 4)} as active drug{change}."
     if not is_offered(shown, consult):
         return f"{NOT_OFFERED}: {name}: {shown.words}{rate}"
     start = consult.case.plan_start
@@ -248,6 +251,8 @@ def _chosen(consult: Consult) -> tuple[str, ...]:
     lines: list[str] = []
     if consult.projection is not None:
         lines += hours.front_lines(consult, consult.projection)
+    elif consult.plateaus is not None and not consult.stopped:
+        lines += hours.plateau_lines(consult, consult.plateaus)
     elif consult.stopped or consult.plan is None:
         lines.append(consult.refusals.get("projection") or "No regimen can be forecast: see the stops.")
         if case.chosen is not None:
@@ -327,6 +332,8 @@ def _next_level(consult: Consult) -> tuple[str, ...]:
     plan, case = consult.plan, consult.case
     if consult.projection is not None:
         return hours.next_lines(consult, consult.projection)
+    if consult.plateaus is not None:
+        return hours.next_without_times(consult)
     high = too_high(consult)
     if high is not None and high.urgent:
         planned = [f"Planned by the pharmacist: {show_time(case.next_draw)}."] if case.next_draw is not None else []
@@ -385,7 +392,7 @@ def _pasted_regimen(shown: Shown, consult: Consult) -> list[str]:
     )
     offered = is_offered(shown, consult)
     words = regimen_words(shown) if offered else shown.words
-    rate = show(shown.rate_mg_per_day, "mg/day", 4)
+    rate = consult.profile.show_rate(shown.rate_mg_per_day, 4)
     lines = [f"{label}{'' if offered else f', {NOT_OFFERED}'}: {words} = {rate} active drug."]
     if not same_lines(shown):
         lines.append(f"Expected as reported, every dose taken: {as_reported(shown.taken, consult)}.")
@@ -412,14 +419,14 @@ def _pasted_loads(consult: Consult) -> list[str]:
 
 def _whole(body: Sequence[str], room: int) -> list[str]:
     """What fits, cut between statements: half a line to act on would be worse than none."""
-    wrapped = [textwrap.wrap(text, PASTE_WIDTH) for text in body]
-    if sum(map(len, wrapped)) <= room:
-        return [line for text in wrapped for line in text]
+    parts = [wrapped(text, PASTE_WIDTH) for text in body]
+    if sum(map(len, parts)) <= room:
+        return [line for part in parts for line in part]
     lines: list[str] = []
-    for text in wrapped:
-        if len(lines) + len(text) > room - 1:
+    for part in parts:
+        if len(lines) + len(part) > room - 1:
             break
-        lines += text
+        lines += part
     return [*lines, "[cut here: read the full note]"]
 
 
@@ -455,6 +462,8 @@ def paste_block(consult: Consult) -> tuple[str, ...]:
     body += following if before else []
     if consult.projection is not None:
         body += hours.paste_lines(consult, consult.projection)
+    elif consult.plateaus is not None and not consult.stopped:
+        body += hours.plateau_lines(consult, consult.plateaus)
     elif consult.stopped or shown is None:
         body.append("No forecast was given." if consult.stopped else "No regimen to forecast.")
     else:
@@ -462,9 +471,9 @@ def paste_block(consult: Consult) -> tuple[str, ...]:
     body += _pasted_loads(consult)
     body += [] if before else following
     last = [
-        "Valid until the next level or any change of dose, feed, other drug or albumin.",
+        valid_in_short(consult),
         f"{entries.standing_words(consult.case)} Read the full note; check every number.",
     ]
-    room = PASTE_LINES - len(lines) - sum(len(textwrap.wrap(x, PASTE_WIDTH)) for x in last)
-    lines += _whole(body, room) + [w for text in last for w in textwrap.wrap(text, PASTE_WIDTH)]
+    room = PASTE_LINES - len(lines) - sum(len(wrapped(x, PASTE_WIDTH)) for x in last)
+    lines += _whole(body, room) + [w for text in last for w in wrapped(text, PASTE_WIDTH)]
     return tuple(line.encode("ascii", "replace").decode("ascii") for line in lines)

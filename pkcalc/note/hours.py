@@ -8,9 +8,11 @@ from typing import Any
 from pkcalc.clock import show_time
 from pkcalc.consult import Consult
 from pkcalc.estimate.result import Band
+from pkcalc.forecast import scaled
 from pkcalc.formulas import molar_level
 from pkcalc.note.words import (
     NO_STEADY_STATE,
+    NOT_OFFERED,
     Section,
     Table,
     edge,
@@ -20,7 +22,7 @@ from pkcalc.note.words import (
     sentence,
     told_up_to,
 )
-from pkcalc.plan.projection import Amount, Path, Projection
+from pkcalc.plan.projection import Amount, Path, Plateaus, Projection
 from pkcalc.units import FACTORS, MOLAR, percent, show, show_number
 
 #: Levels are told in these steps on page one; all of them stand in the annex.
@@ -44,6 +46,26 @@ def level_in_words(consult: Consult, band: Band) -> str:
     return f"{text}, that is {show(_converted(consult, band.median, unit), unit)}"
 
 
+def also(consult: Consult, *levels_mg_per_L: float) -> str:
+    """' (100 to 150 mg/dL)' behind a level or a range where the laboratory reports in another unit; else nothing."""
+    unit = laboratory_unit(consult)
+    if unit in ("mg/L", "mcg/mL"):
+        return ""
+    return f" ({' to '.join(show_number(_converted(consult, x, unit)) for x in levels_mg_per_L)} {unit})"
+
+
+def _converted_band(consult: Consult, band: Band, unit: str) -> str:
+    """A forecast level in the laboratory's unit for a table cell."""
+    most = _converted(consult, told_up_to(consult), unit)
+    return level_band(scaled(band, _converted(consult, 1.0, unit)), most)
+
+
+def _other_unit(consult: Consult) -> str:
+    """The laboratory's unit where it is not the one in which everything is calculated, else nothing."""
+    unit = laboratory_unit(consult)
+    return "" if unit in ("mg/L", "mcg/mL") else unit
+
+
 def _converted(consult: Consult, level_mg_per_L: float, unit: str) -> float:
     if unit in MOLAR:
         mass = consult.profile.molar_mass_g_per_mol
@@ -53,9 +75,12 @@ def _converted(consult: Consult, level_mg_per_L: float, unit: str) -> float:
 
 
 def vmax_words(consult: Consult, band: Band) -> str:
-    """Vmax per hour where the drug is followed by the hour, else per day."""
-    per, unit = (24.0, "mg/h") if consult.profile.time_unit == "h" else (1.0, "mg/day")
-    return f"{show(band.median / per, unit)} (90 % interval {edge(band.low / per)} to {edge(band.high / per)})"
+    """Vmax in the drug's own time unit; by the hour also per kg, as guidelines tell it."""
+    own, weight = consult.profile.rate, consult.case.patient.weight_kg
+    text = f"{consult.profile.show_rate(band.median)} (90 % interval {edge(own(band.low))} to {edge(own(band.high))})"
+    if consult.profile.time_unit == "h" and weight is not None:
+        text += f", that is {show(own(band.median) / weight, 'mg/kg/h')},"
+    return text
 
 
 def _amount(consult: Consult, amount: Amount, unit: str) -> str:
@@ -95,6 +120,10 @@ def _path_lines(consult: Consult, path: Path) -> list[str]:
     course = "; ".join(f"in {show(m.hours, 'h')} {level_band(m.level, told_up_to(consult))}" for m in steps)
     head = path.words[:1].upper() + path.words[1:]
     lines = [f"{head}: {course} mg/L."]
+    unit = _other_unit(consult)
+    if unit:
+        told = "; ".join(_converted_band(consult, m.level, unit) for m in steps)
+        lines.append(f"   As the laboratory reports it: {told} {unit}.")
     leaves = path.leaves
     if leaves is not None:
         side = "below" if leaves.below >= leaves.above else "above"
@@ -104,23 +133,59 @@ def _path_lines(consult: Consult, path: Path) -> list[str]:
 
 def next_lines(consult: Consult, found: Projection) -> tuple[str, ...]:
     """When the next level is due, why, and from which level on somebody must call."""
-    path = found.paths[-1] if len(found.paths) > 1 else found.paths[0]
-    due = next((m for m in path.moments if m.hours >= found.next_level_h), path.moments[-1])
-    when = f"At {show_time(found.next_level_at)} ({show(found.next_level_h, 'h')} from now)"
-    if due.level.high > 0:
-        most = told_up_to(consult)
-        expected = f"{level_edge(due.level.low, most)} to {level_edge(due.level.high, most)} mg/L"
-        when += f"; outside {expected} means another course than forecast: call"
-    lines = [f"{when}."]
+    lines = [f"At {show_time(found.next_level_at)} ({show(found.next_level_h, 'h')} from now)."]
+    most = told_up_to(consult)
+    for path in found.paths:
+        due = next((m for m in path.moments if m.hours >= found.next_level_h), path.moments[-1])
+        if due.level.high > 0:
+            expected = f"{level_edge(due.level.low, most)} to {level_edge(due.level.high, most)} mg/L"
+            expected += also(consult, due.level.low, min(due.level.high, most))
+            lines.append(f"Call where it lies outside {expected}, {_going_on(path)}: another course than forecast.")
     usual = consult.profile.sampling.repeat_h
     if found.next_why and usual is not None and usual[0] < usual[1]:
         lines.append(sentence(f"The earlier of the two usual times, because {'; '.join(found.next_why)}"))
-    lines.append(
-        f"This holds for the way to go on named last: {path.words}. A change of rate needs a level of its own."
-    )
+    lines.append("A change of rate needs a level of its own.")
     if consult.case.dialysis:
         lines.append("A level within an hour after dialysis starts and after it stops.")
     return tuple(lines)
+
+
+def _going_on(path: Path) -> str:
+    return path.words if path.present else f"on {path.words}"
+
+
+def plateau_lines(consult: Consult, found: Plateaus) -> tuple[str, ...]:
+    """Page one where steady levels were typed without times: where rates would settle, and what holds the aim."""
+    lines = []
+    for words, f in found.settle:
+        stops = [c for c in consult.cautions if c.severity == "stop" and c.values.get("regimen") == words]
+        mark = f"{NOT_OFFERED}: " if stops else ""
+        limit = f"{show(consult.goal.critical_mg_per_L, 'mg/L')}{also(consult, consult.goal.critical_mg_per_L)}"
+        level = level_words(f.steady, told_up_to(consult))
+        if math.isfinite(f.steady.median):
+            level += also(consult, f.steady.median)
+        lines.append(
+            f"{mark}{words} = {consult.profile.show_rate(f.rate_mg_per_day, 4)} as active drug: once settled {level}; "
+            f"below the target {percent(f.below)}, above it {percent(f.above)}; above {limit} or no steady state "
+            f"{percent(f.above_critical)}."
+        )
+    aim = show(consult.goal.aim_mg_per_L, "mg/L")
+    lines += [sentence(f"Rate that holds {aim} {h.words}: {_amount(consult, h, 'mg/h')}") for h in found.holds]
+    if found.holds:
+        lines.append(f"No rate is ordered by this note: it needs the agreement of {consult.profile.authority}.")
+    else:
+        lines.append(f"No regimen is offered: {consult.profile.scope}.")
+    lines.append("The levels were taken as steady on the word of the person who typed them; no times can be told.")
+    return tuple(lines)
+
+
+def next_without_times(consult: Consult) -> tuple[str, ...]:
+    """When to draw where no times were given."""
+    usual = consult.profile.sampling.repeat_h
+    if usual is None:
+        return ("No times were given: draw as the local protocol says.",)
+    often = show_number(usual[0]) + (f" to {show_number(usual[1])}" if usual[1] > usual[0] else "")
+    return (f"No times were given: while it runs a level every {often} h, and after each change of rate.",)
 
 
 def paste_lines(consult: Consult, found: Projection) -> tuple[str, ...]:
@@ -140,7 +205,10 @@ def paste_lines(consult: Consult, found: Projection) -> tuple[str, ...]:
     return tuple(lines)
 
 
-HEADS = ("From now (h)", "Time", "Level (mg/L)", "Below", "Within", "Above", "Above critical")
+def _heads(consult: Consult) -> tuple[str, ...]:
+    unit = _other_unit(consult)
+    levels = ("Level (mg/L)", f"Level ({unit})") if unit else ("Level (mg/L)",)
+    return ("From now (h)", "Time", *levels, "Below", "Within", "Above", "Above critical")
 
 
 def sections(consult: Consult) -> list[Section]:
@@ -155,6 +223,7 @@ def sections(consult: Consult) -> list[Section]:
                 show_number(m.hours),
                 show_time(m.at),
                 level_band(m.level, told_up_to(consult)),
+                *((_converted_band(consult, m.level, _other_unit(consult)),) if _other_unit(consult) else ()),
                 percent(m.below),
                 percent(m.within),
                 percent(m.above),
@@ -166,13 +235,13 @@ def sections(consult: Consult) -> list[Section]:
         if path.rate_mg_per_day > 0:
             unit = " mg/L" if math.isfinite(path.steady.median) else ""
             settled = level_band(path.steady, told_up_to(consult)) + unit
+            it = "Without dialysis it" if consult.profile.dialysis is not None else "It"
             lines.append(
-                f"Without dialysis it would settle at {settled}; chance of no steady state "
-                f"{percent(path.no_steady_state)}."
+                f"{it} would settle at {settled}; chance of no steady state {percent(path.no_steady_state)}."
                 if math.isfinite(path.steady.median)
-                else f"Without dialysis it has {NO_STEADY_STATE}: the level climbs for as long as it runs."
+                else f"{it} has {NO_STEADY_STATE}: the level climbs for as long as it runs."
             )
-        out.append(Section(path.words[:1].upper() + path.words[1:], tuple(lines), Table(HEADS, rows)))
+        out.append(Section(path.words[:1].upper() + path.words[1:], tuple(lines), Table(_heads(consult), rows)))
     if consult.chosen is not None and found.holds:
         p, aim = consult.chosen.point, consult.goal.aim_mg_per_L
         vmax, km = show_number(p.vmax_mg_per_day / 24, 4), show_number(p.km_mg_per_L, 4)
@@ -181,14 +250,52 @@ def sections(consult: Consult) -> list[Section]:
             Section(
                 "By hand",
                 (
-                    f"Rate for the aim without dialysis: Vmax x aim / (Km + aim) = {vmax} x {show_number(aim)} / "
+                    f"Rate for the aim {found.holds[0].words}: Vmax x aim / (Km + aim) = {vmax} x {show_number(aim)} / "
                     f"({km} + {show_number(aim)}) = {show(by_hand, 'mg/h', 4)} ({p.kind}; the median over all draws "
                     "stands on page one).",
-                    "While dialysis runs add its clearance x aim.",
+                    *(("While dialysis runs add its clearance x aim.",) if consult.profile.dialysis else ()),
                 ),
             )
         )
     return out
+
+
+def _band_data(b: Band) -> dict[str, Any]:
+    return {"median": _number(b.median), "low_5_percent": _number(b.low), "high_95_percent": _number(b.high)}
+
+
+def _amount_data(a: Amount, unit: str, volume: str) -> dict[str, Any]:
+    return {
+        "for": a.words,
+        f"active_{unit}": _band_data(a.mg),
+        "products": [
+            {"product": p.id, "strength": p.strength_words, "basis": p.strength_basis, volume: _number(v)}
+            for p, v in a.mL
+        ],
+    }
+
+
+def plateaus_data(consult: Consult) -> dict[str, Any] | None:
+    """Where rates would settle, as plain data for JSON."""
+    found = consult.plateaus
+    if found is None:
+        return None
+    return {
+        "settle": [
+            {
+                "words": words,
+                "active_mg_per_h": _number(f.rate_mg_per_day / 24),
+                "steady_level_mg_per_L": _band_data(f.steady),
+                "chance_below": f.below,
+                "chance_within": f.within,
+                "chance_above": f.above,
+                "chance_above_critical": f.above_critical,
+                "chance_no_steady_state": f.no_steady_state,
+            }
+            for words, f in found.settle
+        ],
+        "rates_for_aim": [_amount_data(h, "mg_per_h", "mL_per_h") for h in found.holds],
+    }
 
 
 def data(consult: Consult) -> dict[str, Any] | None:
@@ -196,19 +303,7 @@ def data(consult: Consult) -> dict[str, Any] | None:
     found = consult.projection
     if found is None:
         return None
-
-    def band(b: Band) -> dict[str, Any]:
-        return {"median": _number(b.median), "low_5_percent": _number(b.low), "high_95_percent": _number(b.high)}
-
-    def amount(a: Amount, unit: str, volume: str) -> dict[str, Any]:
-        return {
-            "for": a.words,
-            f"active_{unit}": band(a.mg),
-            "products": [
-                {"product": p.id, "strength": p.strength_words, "basis": p.strength_basis, volume: _number(v)}
-                for p, v in a.mL
-            ],
-        }
+    band, amount = _band_data, _amount_data
 
     return {
         "time": show_time(found.moment),

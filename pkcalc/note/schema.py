@@ -340,6 +340,26 @@ _DEFINITIONS: dict[str, dict[str, Any]] = {
         },
         words="The hours to come, for drugs that are followed from level to level.",
     ),
+    "plateaus": _object(
+        {
+            "settle": _list(
+                _object(
+                    {
+                        "words": TEXT,
+                        "active_mg_per_h": NUMBER,
+                        "steady_level_mg_per_L": BAND,
+                        "chance_below": SHARE,
+                        "chance_within": SHARE,
+                        "chance_above": SHARE,
+                        "chance_above_critical": SHARE,
+                        "chance_no_steady_state": SHARE,
+                    }
+                )
+            ),
+            "rates_for_aim": _list(_ref("amount")),
+        },
+        words="Where rates would settle by two steady levels without times, for drugs told by the hour.",
+    ),
     "section": _object(
         {
             "title": TEXT,
@@ -402,6 +422,7 @@ _NOTE = _object(
         "refusals": {"type": "object", "additionalProperties": TEXT},
         "chosen": _or_null(_object({"method": TEXT, "why": TEXT})),
         "projection": _or_null(_ref("projection")),
+        "plateaus": _or_null(_ref("plateaus")),
         "proposed": _list(_ref("shown")),
         "table": _list(_ref("shown")),
         "plan": _or_null(_ref("plan")),

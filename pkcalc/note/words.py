@@ -23,11 +23,6 @@ NO_STEADY_STATE = "no steady state"
 NOT_OFFERED = "NOT OFFERED"
 #: Title of the part that stands before everything else where a level is too high.
 NOW = "What to do now"
-VALID_UNTIL = (
-    "Valid until the next level, or until any change of dose, form, tube feed, other drug, albumin "
-    "or kidney or liver "
-    "function, whichever comes first."
-)
 
 
 @dataclass(frozen=True)
@@ -45,6 +40,32 @@ class Section:
     title: str
     lines: tuple[str, ...] = ()
     table: Table | None = None
+
+
+def _changes(consult: Consult, short: bool) -> str:
+    """What may change so that a note does not hold any longer."""
+    profile = consult.profile
+    listed = [
+        ("dose", True),
+        ("form", not short),
+        ("feed" if short else "tube feed", "tube_feed" in profile.asked),
+        ("other drug", True),
+        ("albumin", profile.binding is not None),
+        ("dialysis", profile.dialysis is not None),
+        ("kidney or liver function", not short),
+    ]
+    *first, last = (words for words, told in listed if told)
+    return f"{', '.join(first)} or {last}"
+
+
+def valid_until(consult: Consult) -> str:
+    """How long a note holds."""
+    return f"Valid until the next level, or until any change of {_changes(consult, False)}, whichever comes first."
+
+
+def valid_in_short(consult: Consult) -> str:
+    """The same in one line for the block to paste."""
+    return f"Valid until the next level or any change of {_changes(consult, True)}."
 
 
 def demonstration_words(consult: Consult) -> str:
@@ -162,11 +183,24 @@ def mark_of(shown: Shown) -> str:
     return ", ".join(marks)
 
 
-FORECAST_HEADS = (
-    "Regimen",
-    "Active drug (mg/day)",
-    "Steady level, normal binding (mg/L)",
-    "As the laboratory reports total (mg/L)",
+def at_binding(consult: Consult, words: str) -> str:
+    """Words such as ' at normal binding' behind a level: only for drugs whose levels are put on it."""
+    return words if consult.profile.binding is not None else ""
+
+
+def forecast_heads(consult: Consult) -> tuple[str, ...]:
+    """Heads of `forecast_row`. Without binding the laboratory's scale is the only one and stands once."""
+    bound = consult.profile.binding is not None
+    levels = ("Steady level, normal binding (mg/L)", "As the laboratory reports total (mg/L)")
+    return (
+        "Regimen",
+        f"Active drug ({consult.profile.rate_unit})",
+        *(levels if bound else ("Steady level (mg/L)",)),
+        *_CHANCES,
+    )
+
+
+_CHANCES = (
     "Below",
     "Within",
     "Above",
@@ -181,9 +215,9 @@ def forecast_row(shown: Shown, consult: Consult) -> tuple[str, ...]:
     f, most = shown.forecast, told_up_to(consult)
     return (
         shown.words,
-        show_number(f.rate_mg_per_day, 4),
+        show_number(consult.profile.rate(f.rate_mg_per_day), 4),
         level_band(f.steady, most),
-        level_band(f.total, consult.scale.total(most)),
+        *((level_band(f.total, consult.scale.total(most)),) if consult.profile.binding is not None else ()),
         percent(f.below),
         percent(f.within),
         percent(f.above),

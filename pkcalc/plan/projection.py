@@ -22,9 +22,9 @@ from pkcalc.drugs.profile import Product, Profile
 from pkcalc.errors import CannotEstimate
 from pkcalc.estimate.posterior import with_population_path
 from pkcalc.estimate.result import Band, Estimate, band
-from pkcalc.forecast import TIME_DRAWS, Goal, bands, fewer_draws
+from pkcalc.forecast import TIME_DRAWS, Forecast, Goal, bands, fewer_draws, forecast_rates, rate_for_level
 from pkcalc.given import given_record
-from pkcalc.levels import Observation
+from pkcalc.levels import LabScale, Observation
 from pkcalc.record import Dose, Record
 from pkcalc.site import Site
 from pkcalc.units import percent, show
@@ -98,6 +98,17 @@ class Amount:
     mg: Band
     mL: tuple[tuple[Product, float], ...]
     clearance_L_per_day: float = 0.0
+
+
+@dataclass(frozen=True)
+class Plateaus:
+    """What two steady levels say without times: where a rate would settle, and the rates that hold the aim.
+
+    settle: the rates asked about, in words, with the forecast of their steady level. holds: as of a projection.
+    """
+
+    settle: tuple[tuple[str, Forecast], ...]
+    holds: tuple[Amount, ...]
 
 
 @dataclass(frozen=True)
@@ -177,7 +188,8 @@ def project(
     if profile.loading is not None and weight is not None:
         low, high = profile.loading.mg_per_kg
         guideline = (low * weight, high * weight)
-    after, why = _next(case, profile, paths[-1] if len(paths) > 1 else paths[0], moment, step_h)
+    # the earliest that any way to go on asks for
+    after, why = min((_next(case, profile, p, moment, step_h) for p in paths), key=lambda found: found[0])
     return Projection(
         moment=moment,
         now=now,
@@ -192,6 +204,31 @@ def project(
         choose=choose if may_dose else "",
         draws=few,
     )
+
+
+def settle(
+    case: Case,
+    profile: Profile,
+    site: Site,
+    *,
+    estimate: Estimate,
+    goal: Goal,
+    scale: LabScale,
+    stops: frozenset[str] = frozenset(),
+) -> Plateaus:
+    """Steady levels on the rates asked about, and the rates for the aim; for an estimate of steady levels alone.
+
+    The estimate has no parallel path. stops: "regimens" among them takes the rates for the aim away.
+    """
+    asked = _asked_about(case, profile)
+    rates = [regimen.active_mg_per_day(profile) for regimen, _ in asked]
+    found = forecast_rates(estimate, rates, goal, scale) if rates else ()
+    may_dose = "regimens" not in stops and profile.scope in ("dosing", "dosing with expert sign-off")
+    aim = rate_for_level(estimate, goal.aim_mg_per_L)
+    products, _ = _products(case, profile, site)
+    hourly = Band(aim.median / 24, aim.low / 24, aim.high / 24)
+    holds = (_amount("without dialysis" if profile.dialysis else "steadily", hourly, products),) if may_dose else ()
+    return Plateaus(tuple((words, f) for (_, words), f in zip(asked, found, strict=True)), holds)
 
 
 # the course ------------------------------------------------------------------------------------------------
