@@ -93,7 +93,7 @@ def number(
     asked: Asked, label: str, key: str, units: Sequence[str], *, unit_key: str = "", unit_label: str = ""
 ) -> None:
     """A number as text with its unit chosen beside it; the unit may also be typed with the number."""
-    left, right = st.columns([3, 2], vertical_alignment="top", wrap=False)
+    left, right = st.columns([5, 4], gap="xsmall", vertical_alignment="bottom", wrap=False)
     with left:
         st.text_input(label, key=key, max_chars=40, autocomplete="off")
     with right:
@@ -350,7 +350,13 @@ def _dialysis(asked: Asked) -> None:
                 with middle:
                     field(asked, "Dialysis until; empty if it still runs", f"dialysis.{row}.until", help=DATES)
                 with right:
-                    number(asked, "Clearance by dialysis", f"dialysis.{row}.clearance", fields.CLEARANCE_UNITS)
+                    number(
+                        asked,
+                        "Clearance by dialysis",
+                        f"dialysis.{row}.clearance",
+                        fields.CLEARANCE_UNITS,
+                        unit_label="Unit of clearance",
+                    )
         st.button("Add a dialysis session", key="add-dialysis", on_click=_add_row, args=("dialysis",))
 
 
@@ -580,7 +586,7 @@ def course_echo(case: Case, profile: Profile) -> str:
     when = f", since {show_time(course.start)}" if course.start else ""
     if course.regimen is not None:
         said = course.regimen.words(profile)
-        rate = f" = {show(course.regimen.active_mg_per_day(profile), 'mg/day', 4)} of active drug"
+        rate = f" = {profile.show_rate(course.regimen.active_mg_per_day(profile), 4)} of active drug"
     elif course.single is not None:
         form = profile.forms[course.single.form]
         said, rate = f"{show(course.single.labelled_mg, form.amount_unit, 6)} {form.words} once", ""
@@ -595,5 +601,6 @@ def course_echo(case: Case, profile: Profile) -> str:
 def own_echo(case: Case, profile: Profile) -> str:
     """A regimen of one's own said back in words."""
     regimen = case.proposed[0]
-    rate = show(regimen.active_mg_per_day(profile), "mg/day", 4)
-    return f"Read as {regimen.words(profile)} = {rate} of active drug."
+    typed = case.file.proposed[0].rate
+    said = f"{typed} {profile.forms[regimen.intakes[0].form].words}" if typed else regimen.words(profile)
+    return f"Read as {said} = {profile.show_rate(regimen.active_mg_per_day(profile), 4)} of active drug."

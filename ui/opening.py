@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import os
 import time
+from importlib.util import find_spec
 
 import streamlit as st
 from pkcalc_form import entry as fields
@@ -52,6 +53,12 @@ def may_be_seen() -> bool:
     if sign_in_is_set_up():
         if getattr(st.user, "is_logged_in", False):
             return True
+        if find_spec("authlib") is None or find_spec("httpx") is None:
+            look.say(
+                "Sign-in is set up, but the program it needs is not installed (see SERVING.md): the page stays closed.",
+                "stopped",
+            )
+            return False
         look.say("Sign in with your hospital account to use this page.")
         st.button("Sign in", on_click=st.login, key="sign-in")
         return False
@@ -127,6 +134,12 @@ def _open_upload() -> None:
     open_file(file, "first_entry")
 
 
+def _sign_out() -> None:
+    """The case is forgotten before the account is."""
+    forget()
+    st.logout()
+
+
 def opening() -> None:
     """Title, what comes first, and the ways to begin."""
     st.html("<h1>pkcalc: from levels to the next dose, where elimination saturates</h1>")
@@ -157,6 +170,8 @@ def opening() -> None:
         for text in st.session_state.get("upload_problems", ()):
             look.beside(text, needed=False)
         st.button("Start afresh: forget everything on this page", key="forget", on_click=forget)
+        if sign_in_is_set_up():
+            st.button("Sign out: forget everything on this page", key="sign-out", on_click=_sign_out)
     with st.container():
         minutes = st.session_state.pop("left_alone", None)
         if minutes is not None:

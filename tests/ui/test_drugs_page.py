@@ -11,7 +11,7 @@ def test_an_hourly_drug_shows_the_hours_to_come_and_who_must_agree() -> None:
         "Rate that holds 1,250 mg/L while dialysis runs",
         "mL/h of ethanol 10 % v/v for infusion",
         "needs the agreement of a toxicologist or the poison centre",
-        "means another course than forecast: call",
+        "another course than forecast",
         "205 mL/h ethanol 10 % v/v for infusion",
     ):
         assert words in said, words
