@@ -134,12 +134,17 @@ def _path_lines(consult: Consult, path: Path) -> list[str]:
 def next_lines(consult: Consult, found: Projection) -> tuple[str, ...]:
     """When the next level is due, why, and from which level on somebody must call."""
     lines = [f"At {show_time(found.next_level_at)} ({show(found.next_level_h, 'h')} from now)."]
-    most = told_up_to(consult)
+    most = min(told_up_to(consult), consult.goal.critical_mg_per_L)
+    low, critical = consult.goal.low_mg_per_L, consult.goal.critical_mg_per_L
+    lines.append(
+        f"Call at once below {show(low, 'mg/L')}{also(consult, low)} or at or above {show(critical, 'mg/L')}"
+        f"{also(consult, critical)}, whatever was forecast."
+    )
     for path in found.paths:
         due = next((m for m in path.moments if m.hours >= found.next_level_h), path.moments[-1])
         if due.level.high > 0:
-            expected = f"{level_edge(due.level.low, most)} to {level_edge(due.level.high, most)} mg/L"
-            expected += also(consult, due.level.low, min(due.level.high, most))
+            ends = (min(due.level.low, most), min(due.level.high, most))
+            expected = f"{edge(ends[0])} to {edge(ends[1])} mg/L{also(consult, *ends)}"
             lines.append(f"Call where it lies outside {expected}, {_going_on(path)}: another course than forecast.")
     usual = consult.profile.sampling.repeat_h
     if found.next_why and usual is not None and usual[0] < usual[1]:
