@@ -8,6 +8,7 @@ from __future__ import annotations
 
 import re
 from dataclasses import dataclass
+from decimal import ROUND_HALF_UP, Decimal
 from functools import cache
 from typing import Any
 
@@ -287,25 +288,16 @@ def to_canonical(quantity: Any, kind: str, name: str) -> Any:
 
 
 def show_number(value: float, digits: int = 3) -> str:
-    """A number for screen and paper: `digits` significant digits, leading zero, no trailing zero, comma from
-    1,000, never an exponent."""
+    """A number for screen and paper: `digits` significant digits, halves away from zero as on paper, leading zero, no
+    trailing zero, comma from 1,000, never an exponent."""
     if value != value or value in (float("inf"), float("-inf")):
         raise ValueError("only finite numbers are shown")
-    if value == 0:
+    # the number as it is written, not the binary fraction behind it: 1.005 is a half, and 0.1 x 3 is 0.3
+    written = Decimal(f"{value:.15g}")
+    if written == 0:
         return "0"
-    text = f"{value:.{digits}g}"
-    rounded = float(text)
-    exponent = len(str(int(abs(rounded)))) if abs(rounded) >= 1 else 0
-    decimals = max(0, digits - exponent) if exponent else _decimals_below_one(rounded, digits)
-    out = f"{rounded:,.{decimals}f}"
-    if "." in out:
-        out = out.rstrip("0").rstrip(".")
-    return "0" if out in ("-0", "") else out
-
-
-def _decimals_below_one(value: float, digits: int) -> int:
-    _, exponent = f"{abs(value):.{digits - 1}e}".split("e")
-    return digits - 1 - int(exponent)
+    out = f"{written.quantize(Decimal(1).scaleb(written.adjusted() + 1 - digits), ROUND_HALF_UP):,f}"
+    return out.rstrip("0").rstrip(".") if "." in out else out
 
 
 def show_dose(value: float) -> str:

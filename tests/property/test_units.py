@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import re
 from datetime import datetime, timedelta, timezone
+from decimal import ROUND_HALF_UP, Decimal
 
 import pytest
 from hypothesis import given
@@ -32,6 +33,14 @@ def test_shown_numbers_are_safe_and_close(value: float, digits: int) -> None:
     text = units.show_number(value, digits)
     assert re.fullmatch(r"-?(0|[1-9]\d{0,2}(,\d{3})*)(\.\d*[1-9])?", text)
     assert float(text.replace(",", "")) == pytest.approx(value, rel=0.51 * 10 ** (1 - digits), abs=1e-300)
+
+
+@given(st.decimals("0.0001", "99999", places=4), st.integers(1, 6))
+def test_halves_are_rounded_as_on_paper(written: Decimal, digits: int) -> None:
+    """Against the decimal itself, rounded half up at the last digit shown."""
+    last = Decimal(1).scaleb(written.adjusted() + 1 - digits)
+    expected = written.quantize(last, ROUND_HALF_UP)
+    assert Decimal(units.show_number(float(written), digits).replace(",", "")) == expected
 
 
 @given(st.decimals("0.001", "99999", places=3))

@@ -217,6 +217,19 @@ def test_the_factor_of_every_label_is_that_of_its_unit(label: str) -> None:
         (0, 3, "0"),
         (-0.0, 3, "0"),
         (-2.5, 3, "-2.5"),
+        # halves go up, as on paper: also those that a binary fraction keeps a little below
+        (2.5, 1, "3"),
+        (0.125, 2, "0.13"),
+        (112.5, 3, "113"),
+        (1.005, 3, "1.01"),
+        (2.675, 3, "2.68"),
+        (0.045, 1, "0.05"),
+        (-0.125, 2, "-0.13"),
+        (9.995, 3, "10"),
+        (1250, 2, "1,300"),
+        (12.5 * 0.1, 2, "1.3"),
+        (2.4999999, 1, "2"),
+        (0.1249999, 2, "0.12"),
     ],
 )
 def test_numbers_as_shown(value: float, digits: int, text: str) -> None:
