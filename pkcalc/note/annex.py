@@ -387,8 +387,8 @@ def _regimens(consult: Consult) -> list[Section]:
         if plan.ranked:
             on_table = {c.words for c in (*plan.table, *plan.own)}
             notes.append(
-                "Those of the table that may be offered by expected loss, smallest first, as asked for (too high weighs "
-                f"{show_number(consult.site.loss_too_high)}, too low {show_number(consult.site.loss_too_low)}): "
+                "Those of the table that may be offered, by expected loss, smallest first, as asked for (too high "
+                f"weighs {show_number(consult.site.loss_too_high)}, too low {show_number(consult.site.loss_too_low)}): "
                 + "; ".join(c.words for c in plan.ranked if c.words in on_table)
                 + "."
             )

@@ -181,7 +181,7 @@ def make(
         own=own,
         ranked=by_loss(every, setting) if case.file.plan.order_by_loss else (),
         step=step,
-        lines=_lines(setting, shelf, share, taken_words),
+        lines=_lines(setting, shelf, share, taken_words, high=limits.is_high(now, goal)),
         loads=given_loads,
         no_load=no_load,
         pause=pausing.pause(case, now, setting, every),
@@ -356,7 +356,10 @@ def _hours(case: Case) -> dict[int, tuple[float, ...]]:
     return hours
 
 
-def _lines(setting: Setting, shelf: ShelfInUse, share: float, taken_words: str) -> tuple[str, ...]:
+def _lines(
+    setting: Setting, shelf: ShelfInUse, share: float, taken_words: str, *, high: bool = False
+) -> tuple[str, ...]:
+    """high: the level today is above the target, so that no step up is told."""
     lines = list(shelf.sentences)
     if setting.central.method == BEFORE_ANY_LEVEL:
         lines.append(
@@ -370,7 +373,7 @@ def _lines(setting: Setting, shelf: ShelfInUse, share: float, taken_words: str) 
         )
     else:
         lines.append("Every dose is taken as recorded, now and in the past, so both lines are the same.")
-    if setting.step is not None:
+    if setting.step is not None and not high:
         s = setting.step
         level = s.forecast.steady.median
         told = setting.profile.target.most_told(setting.goal.critical_mg_per_L)

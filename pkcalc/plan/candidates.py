@@ -32,6 +32,8 @@ from pkcalc.units import percent, percent_beside, show
 
 Floats = NDArray[np.float64]
 
+#: Regimens taken more often a day than this are printed only where the patient takes one, or nothing else is there.
+MOST_TIMES_SHOWN = 2
 #: Clock times of a regimen whose times nobody has stated, for the course within a day only.
 HOURS = {1: (21.0,), 2: (9.0, 21.0), 3: (6.0, 14.0, 22.0), 4: (6.0, 12.0, 18.0, 24.0)}
 
@@ -46,7 +48,7 @@ class Candidate:
     danger_at_draw: each alone (at the draw: None without a volume). change_percent: of the daily active dose against
     the present one. trough, peak: extremes of the level at plateau; on_days: days from the first dose and the level
     then (all None without a volume).
-    loss: expected loss, only where the order by loss is asked for.
+    loss: expected loss, only where the order by loss is asked for. units_a_day: capsules and tablets.
     """
 
     regimen: Regimen
@@ -66,6 +68,7 @@ class Candidate:
     on_days: tuple[tuple[float, Band], ...] | None = None
     loss: float | None = None
     products: tuple[str, ...] = ()
+    units_a_day: float = 0.0
     danger_at_draw: float | None = None
 
     @property
@@ -75,6 +78,10 @@ class Candidate:
     @property
     def rate_mg_per_day(self) -> float:
         return self.forecast.rate_mg_per_day
+
+    @property
+    def dose_times(self) -> int:
+        return len({x.hour for x in self.regimen.intakes})
 
 
 @dataclass(frozen=True)
@@ -143,8 +150,8 @@ def candidates(
     one, or an own one that can be dispensed, takes the place of a made one with the same active amount.
     """
     profile = setting.profile
-    rows: list[tuple[Regimen, str, str, bool, bool, float, tuple[str, ...]]] = [
-        (r, words, dispense, present, proposed, r.active_mg_per_day(profile), ())
+    rows: list[tuple[Regimen, str, str, bool, bool, float, tuple[str, ...], float]] = [
+        (r, words, dispense, present, proposed, r.active_mg_per_day(profile), (), 0.0)
         for r, words, dispense, present, proposed in given
     ]
     taken_up = [row[5] for row in rows if row[3] or (row[4] and row[2])]
@@ -154,7 +161,7 @@ def candidates(
             continue
         regimen = as_regimen(m, profile, setting.hours)
         words = regimen_words(m, profile), dispense_words(m, profile)
-        rows.append((regimen, *words, False, False, rate, m.products))
+        rows.append((regimen, *words, False, False, rate, m.products, m.units_a_day(profile)))
     if not rows:
         return ()
     rates = [row[5] for row in rows]
@@ -181,6 +188,7 @@ def candidates(
                 present=row[3],
                 proposed=row[4],
                 products=row[6],
+                units_a_day=row[7],
                 danger_at_draw=None if at_draw is None else float(at_draw[i]),
             ),
             setting,
@@ -308,6 +316,8 @@ def shown(
     same = [c for c in rest if all(x.form in forms for x in c.regimen.intakes)]
     single = [c for c in rest if len({x.form for x in c.regimen.intakes}) == 1]
     rest = same or single or rest
+    most_times = max([MOST_TIMES_SHOWN, *(c.dose_times for c in must)])
+    rest = [c for c in rest if c.dose_times <= most_times] or rest
     centre = setting.present_mg_per_day
     aim = _aim_rate(setting)
     centre = aim if centre is None else centre
@@ -324,14 +334,13 @@ def shown(
         for a, b in pairwise(edges):
             near = [c for c in rest if a <= c.rate_mg_per_day < b or (b == edges[-1] and c.rate_mg_per_day == b)]
             if near:
-                kept.append(min(near, key=_plainness))
+                kept.append(min(near, key=plainness))
         rest = kept
     return tuple(sorted((*must, *rest), key=lambda c: (c.rate_mg_per_day, not c.present, c.proposed)))
 
 
-def _plainness(c: Candidate) -> tuple[float, ...]:
-    doses = len({x.hour for x in c.regimen.intakes})
-    return (doses, len(c.products), len({x.labelled_mg for x in c.regimen.intakes}), len(c.dispense))
+def plainness(c: Candidate) -> tuple[float, ...]:
+    return (c.dose_times, len(c.products), c.units_a_day, len({x.labelled_mg for x in c.regimen.intakes}))
 
 
 def _aim_rate(s: Setting) -> float:

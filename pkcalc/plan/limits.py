@@ -8,7 +8,7 @@ from pkcalc.estimate.result import Estimate
 from pkcalc.forecast import Goal, forecast_rate
 from pkcalc.levels import LabScale
 from pkcalc.plan.candidates import StepLimit
-from pkcalc.plan.present import Today, adherence_in_doubt
+from pkcalc.plan.present import FRESH, Today, adherence_in_doubt
 from pkcalc.site import Site
 from pkcalc.units import show
 
@@ -71,8 +71,19 @@ def step_limit(
     return StepLimit(active, judged, words, forecast)
 
 
+def is_high(now: Today, goal: Goal) -> bool:
+    """True where today's level is above the target: by the record, or by a level drawn within a day."""
+    if now.level is not None and now.level.median > goal.high_mg_per_L:
+        return True
+    if now.measured_mg_per_L is None or now.measured_at is None or now.moment is None:
+        return False
+    return now.measured_mg_per_L > goal.high_mg_per_L and now.moment - now.measured_at <= FRESH
+
+
 def why_no_increase(case: Case, goal: Goal, now: Today) -> str:
     """Why the dose must not be raised now; "" where it may be."""
+    if is_high(now, goal):
+        return f"The level today is above {show(goal.high_mg_per_L, 'mg/L')}, the top of the target: no increase."
     low = now.measured_mg_per_L is not None and now.measured_mg_per_L < goal.low_mg_per_L
     if low and adherence_in_doubt(case):
         answer = case.answer("adherence_doubtful")

@@ -141,7 +141,7 @@ def loads(ward: Ward) -> tuple[tuple[Load, ...], tuple[str, ...]]:
     if usual is not None and wanted_active(ward, aim) < usual * (1 - 1e-9):
         return (), (
             f"No load: {show(wanted_active(ward, aim), 'mg')} of active drug would do, which is less than one usual "
-            f"dose ({show(usual, 'mg', 4)} of active drug). Maintenance goes on: {ward.maintenance_words}.",
+            f"dose ({show(usual, 'mg', 4)} of active drug). Maintenance alone: {ward.maintenance_words}.",
         )
     if asked.form in profile.loading.iv_lines:
         return (into_vein(ward, mine[0], aim),), ()
@@ -357,7 +357,7 @@ def by_mouth(ward: Ward, products: Sequence[Product], aim_mg_per_L: float) -> Lo
         oral.setting,
         f"Maintenance goes on as well: {ward.maintenance_words}; the load does not replace it."
         if usual_dose(ward) is not None
-        else f"Maintenance begins {show_number(oral.maintenance_after_h)} h after the first part.",
+        else _maintenance_begins(ward, oral),
     )
     notes.append(said)
     return _load(
@@ -653,6 +653,19 @@ def iv_order(
 
 def _sentence(text: str) -> str:
     return text[0].upper() + text[1:] + ("" if text.endswith(".") else ".")
+
+
+def _maintenance_begins(ward: Ward, oral: OralLoad) -> str:
+    """When maintenance begins after a load by mouth, and that a planned start before it must move."""
+    wait, begun = timedelta(hours=oral.maintenance_after_h), ward.case.load_at or ward.now.moment
+    text = f"Maintenance begins {show_number(oral.maintenance_after_h)} h after the first part"
+    if begun is None:
+        return f"{text}."
+    text += f" (from {show_time(begun + wait)})"
+    planned = ward.case.plan_start
+    if planned is not None and planned < begun + wait:
+        return f"{text}: not at {show_time(planned)} as planned, but with the first dose due after that."
+    return f"{text}."
 
 
 def _piece(mg: float, unit: Product, form: Form) -> str:

@@ -25,7 +25,7 @@ from pkcalc.drugs.profile import Profile
 from pkcalc.estimate.result import Band, Estimate
 from pkcalc.forecast import TIME_DRAWS, Goal, bands, draws_of, fewer_draws
 from pkcalc.levels import LabScale
-from pkcalc.plan.present import Floats, Today, is_toxic
+from pkcalc.plan.present import LOWEST_SHARE, Floats, Today, is_toxic
 from pkcalc.record import Dose
 from pkcalc.site import DAYS, Site
 from pkcalc.units import show, show_number
@@ -172,6 +172,12 @@ class Asked:
     load: tuple[Dose, ...] = ()
     load_asked: tuple[Dose, ...] = ()
     notes: tuple[str, ...] = ()
+
+    @property
+    def lowest_told(self) -> float:
+        """A level as reported below this cannot be told apart from nothing, so no line is drawn there."""
+        own = self.site.quantification_limit_mg_per_L
+        return LOWEST_SHARE * self.reported(self.goal.low_mg_per_L) if own is None else own
 
     def reported(self, level_mg_per_L: float) -> float:
         """A level on the working basis as the laboratory reports it, free or total."""
@@ -412,8 +418,12 @@ def action_line(draw: Draw, asked: Asked, *, rises: tuple[bool, bool] = (True, T
         limit = f"above {show(draw.reported.high, 'mg/L')} as reported ({scale} level) {above}: call."
     low = draw.reported.low
     signs = asked.profile.withdrawal.signs if asked.profile.withdrawal is not None else ""
-    limit += f" Below {show(low, 'mg/L')} ({below}){f', or {signs} at any level' if signs else ''}: call."
     target = asked.reported(asked.goal.low_mg_per_L)
+    at_any = f"{signs} at any level" if signs else ""
+    if low >= asked.lowest_told:
+        limit += f" Below {show(low, 'mg/L')} ({below}){f', or {at_any}' if at_any else ''}: call."
+    elif at_any:
+        limit += f" {at_any[0].upper()}{at_any[1:]}: call."
     if low < target and draw.reported.median < target:
         ask = f": ask about {signs} the same day" if signs else ""
         limit += f" Below {show(target, 'mg/L')} it is below the target{ask}."
@@ -423,7 +433,7 @@ def action_line(draw: Draw, asked: Asked, *, rises: tuple[bool, bool] = (True, T
         scale=scale,
         high_mg_per_L_reported=min(draw.reported.high, critical),
         high_from="critical" if capped else "forecast",
-        low_mg_per_L_reported=low,
+        low_mg_per_L_reported=low if low >= asked.lowest_told else None,
         words=words,
     )
 

@@ -12,8 +12,8 @@ from pkcalc import flow, formulas
 from pkcalc.case import Case
 from pkcalc.estimate.result import Band, Estimate
 from pkcalc.forecast import TIME_DRAWS, bands, draws_of, fewer_draws
-from pkcalc.plan.candidates import Candidate, Setting
-from pkcalc.plan.present import Floats, Large, Today, is_toxic, large_words, published_peaks
+from pkcalc.plan.candidates import Candidate, Setting, plainness
+from pkcalc.plan.present import LOWEST_SHARE, Floats, Large, Today, is_toxic, large_words, published_peaks
 from pkcalc.record import Record
 from pkcalc.units import show, show_number
 
@@ -29,8 +29,6 @@ WEIGH_TOXIC = (
 )
 #: Where the drug file names no risk of its own.
 NO_RISK_STATED = "The drug file names no risk of a pause: weigh what the disease does without the drug."
-#: Where the site states no limit of quantification, levels below this share of the target's low end are not told apart.
-LOWEST_SHARE = 0.1
 #: Longest pause that is followed [day].
 LONGEST_DAYS = 60.0
 #: Reductions and restart regimens shown.
@@ -299,15 +297,15 @@ def _reductions(
 
 def _spread_out(fits: Sequence[Candidate]) -> list[Candidate]:
     """A few of them, evenly over the range of doses, the simplest in each part."""
+    if not fits:
+        return []
     low, high = fits[0].rate_mg_per_day, fits[-1].rate_mg_per_day
     edges = np.linspace(low, high, MOST_SHOWN + 1)
     kept: list[Candidate] = []
     for k in range(MOST_SHOWN):
         part = [c for c in fits if edges[k] - 1e-9 <= c.rate_mg_per_day <= edges[k + 1] + 1e-9 and c not in kept]
         if part:
-            kept.append(
-                min(part, key=lambda c: (len({x.hour for x in c.regimen.intakes}), len(c.products), len(c.dispense)))
-            )
+            kept.append(min(part, key=plainness))
     return kept
 
 
@@ -317,7 +315,7 @@ def _restarts(
     """Regimens to go on with, each with an early, a timely and a late restart.
 
     Their plateau lies in the range on both lines and its chance of too high below the stop; today's level, which keeps
-    them from being offered now, has come down by then.
+    them from being offered now, has come down by then. The pharmacist's own are among them where they fit.
     """
     goal, limit = setting.goal, setting.site.stop_chance
     if setting.refused:
@@ -327,21 +325,22 @@ def _restarts(
         for c in every
         if c.taken.above_critical <= limit
         and c.rate_mg_per_day <= min(setting.largest_mg_per_day, setting.present_mg_per_day or np.inf)
-        and not c.proposed
         and c.forecast.steady.median >= goal.low_mg_per_L
         and c.taken.steady.median <= goal.high_mg_per_L
     ]
+    own = [c for c in fits if c.proposed]
     if not fits or not np.isfinite(pause_days.high):
         return ()
     early, planned, late = 0.5 * pause_days.median, pause_days.median, pause_days.high + LATE_DAYS
     day = late + 1.0
     lowest = bands(_restarted(few, start, late, late, 0.0)[None, :], few.weights)[0]
     found = []
-    for c in _spread_out(fits):
+    others = _spread_out([c for c in fits if not c.proposed])
+    for c in sorted((*own, *others), key=lambda c: c.rate_mg_per_day):
         levels = [_restarted(few, start, at, day, c.rate_mg_per_day) for at in (early, planned, late)]
         found.append(
             Restart(
-                words=c.dispense or c.words,
+                words=f"{c.dispense or c.words}{' (proposed)' if c.proposed else ''}",
                 steady=c.forecast.steady,
                 day=day,
                 early=bands(levels[0][None, :], few.weights)[0],

@@ -187,6 +187,8 @@ def published_peaks(large: LargeOral) -> str:
     return f"Published peaks of large single amounts: {', '.join(said)} ({large.words})."
 
 
+#: Where the site states no limit of quantification, levels below this share of the target's low end are not told apart.
+LOWEST_SHARE = 0.1
 #: A measured level counts as today's for so long.
 FRESH = timedelta(hours=24)
 

@@ -71,6 +71,11 @@ class Dispensable:
     def times_a_day(self) -> int:
         return len(self.doses) // self.days
 
+    def units_a_day(self, profile: Profile) -> float:
+        """Capsules and tablets; a liquid counts none."""
+        counted = [p.units for dose in self.doses for p in dose if profile.products[p.product].unit != "mL"]
+        return sum(counted) / self.days
+
     def forms(self, profile: Profile) -> tuple[str, ...]:
         return tuple(dict.fromkeys(profile.products[p].form for p in self.products))
 

@@ -6,7 +6,7 @@ from collections.abc import Sequence
 from dataclasses import dataclass
 
 from pkcalc.case import Case
-from pkcalc.drugs.profile import Profile
+from pkcalc.drugs.profile import Form, Profile
 from pkcalc.estimate.result import Band
 from pkcalc.forecast import forecast_rate
 from pkcalc.plan.candidates import Setting, as_regimen, candidates
@@ -68,15 +68,9 @@ def switches(case: Case, setting: Setting, products: Sequence[str]) -> tuple[Swi
 def _switch(made: Dispensable, form_id: str, from_forms: Sequence[str], now: float, setting: Setting) -> Switch:
     profile, form = setting.profile, setting.profile.forms[form_id]
     forecast = forecast_rate(setting.central, made.active_mg_per_day, setting.goal, setting.scale)
-    low, high = form.bioavailability_range
     ends = [
-        forecast_rate(
-            setting.central,
-            made.active_mg_per_day * share / form.bioavailability,
-            setting.goal,
-            setting.scale,
-        ).steady.median
-        for share in (low, high)
+        forecast_rate(setting.central, made.active_mg_per_day * share, setting.goal, setting.scale).steady.median
+        for share in _shares(form, [profile.forms[f] for f in from_forms])
     ]
     words = dispense_words(made, profile)
     row = (as_regimen(made, profile, setting.hours), words, words, False, False)
@@ -95,6 +89,21 @@ def _switch(made: Dispensable, form_id: str, from_forms: Sequence[str], now: flo
         offered=judged.offered,
         why_not=judged.why_not,
     )
+
+
+def _shares(form: Form, before: Sequence[Form]) -> tuple[float, float]:
+    """How much of the new form may reach the body, of what the estimate takes for it: least and most.
+
+    The estimate takes the present form at its nominal share. Where the route changes, the share of the present form is
+    uncertain too: what less of it was absorbed comes on top when the new one is absorbed whole.
+    """
+    low, high = (share / form.bioavailability for share in form.bioavailability_range)
+    other = [f for f in before if f.route != form.route]
+    if not other:
+        return low, high
+    least = min(f.bioavailability_range[0] / f.bioavailability for f in other)
+    most = max(f.bioavailability_range[1] / f.bioavailability for f in other)
+    return low / most, high / least
 
 
 def _lines(made: Dispensable, form_id: str, from_forms: Sequence[str], profile: Profile) -> tuple[str, ...]:
@@ -121,6 +130,13 @@ def _lines(made: Dispensable, form_id: str, from_forms: Sequence[str], profile: 
             f"How much reaches the body is uncertain ({show(100 * low, '%')} to {show(100 * high, '%')}): measure "
             "again after the change."
         )
+    for given in (profile.forms[f] for f in from_forms):
+        least, most = given.bioavailability_range
+        if given.route != form.route and least < most:
+            lines.append(
+                f"Of {given.words} {show(100 * least, '%')} to {show(100 * most, '%')} may have reached the body until "
+                "now: the same amount of this form can give a higher level. Measure within days of the change."
+            )
     if TUBE in form.routes:
         lines.append(
             "Down a feeding tube with running feeds much less may be absorbed: hold feeds around the dose, the same "

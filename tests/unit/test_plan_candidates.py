@@ -118,7 +118,7 @@ def test_a_level_still_too_high_at_the_next_draw_counts() -> None:
     assert found.danger == 1.0
     assert found.why_not == (
         "The level is high today: at the next feasible draw, in 3 days, the chance of a level above 30 mg/L is still "
-        "100 %, above the limit of 10 %.",
+        "more than 99 %, above the limit of 10 %.",
     )
     assert float(danger(replace(s, draw_days=30.0), [184.0])[0]) == 0.0
 
@@ -145,7 +145,7 @@ def test_every_reason_why_not_in_full() -> None:
     )
     assert one(490.0, s).why_not == (
         "A stop on the data blocks regimens.",
-        "Taken in full, the chance of a level above 30 mg/L or of no steady state once settled is 100 %, above the "
+        "Taken in full, the chance of a level above 30 mg/L or of no steady state once settled is more than 99 %, above the "
         "limit of 10 %.",
         "450.8 mg/day of active drug is above the largest daily dose of 400 mg/day.",
         "Observe dosing first.",
@@ -313,6 +313,19 @@ def test_the_printed_rows_are_few_and_hold_present_and_offered() -> None:
     forms = {x.form for c in found.table for x in c.regimen.intakes}
     assert forms == {"extended-capsule"}
     assert sum(not c.offered for c in found.table) <= 4
+
+
+def test_rows_of_three_doses_a_day_are_printed_only_beside_one_that_is_taken_so() -> None:
+    twice = plan(doses=[{**PLAIN["doses"][0], "until": ""}], levels=[PLAIN["levels"][0]])
+    assert max(c.dose_times for c in twice.every) >= 3
+    assert max(c.dose_times for c in twice.table) <= 2
+    three = plan(
+        doses=[{**PLAIN["doses"][0], "amount": "", "every": "", "until": "", "daily": [
+            {"time": t, "amount": "100 mg"} for t in ("06:00", "14:00", "22:00")
+        ]}],
+        levels=[PLAIN["levels"][0]],
+    )  # fmt: skip
+    assert max(c.dose_times for c in three.table) == 3
 
 
 def test_two_regimens_laid_over_each_other() -> None:

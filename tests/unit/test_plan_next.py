@@ -269,6 +269,20 @@ def test_the_level_just_before_a_dose_comes_from_the_real_doses() -> None:
     assert course[0, -1] < peak.median
 
 
+def test_no_line_is_drawn_where_a_level_cannot_be_told_from_nothing() -> None:
+    """A lower bound of 0.6 mg/L says nothing that "below the target" does not say; seizures still call."""
+    draw = Draw(10.0, MONDAY, 0.3, Band(4.8, 0.67, 15.5), Band(4.5, 0.6, 15.5))
+    line = action_line(draw, asked())
+    assert line.low_mg_per_L_reported is None
+    assert line.words == (
+        "On 6 Apr before the 10:00 dose; above 15.5 mg/L as reported (total level) means rising faster than forecast: "
+        "call. Seizures at any level: call. Below 10 mg/L it is below the target: ask about seizures the same day."
+    )
+    own = action_line(draw, asked(site=replace(no_site(), quantification_limit_mg_per_L=0.5)))
+    assert own.low_mg_per_L_reported == 0.6
+    assert "Below 0.6 mg/L (rising slower than forecast), or seizures at any level: call." in own.words
+
+
 def test_times_that_nobody_stated_are_not_named() -> None:
     every_8 = Regimen((Intake("extended-capsule", 0.0, 100.0),), cycle_h=8.0)
     timed, known = clocked(every_8, plain(doses=[], levels=[]))

@@ -13,7 +13,7 @@ from pkcalc import flow, formulas
 from pkcalc.dosing import absorption_of
 from pkcalc.estimate.result import Band
 from pkcalc.plan import Today, pausing, switching
-from pkcalc.plan.candidates import candidates
+from pkcalc.plan.candidates import candidates, plainness
 from pkcalc.plan.pausing import Pause, still_absorbing, time_to_fall
 from pkcalc.plan.present import uptake_to_come
 from pkcalc.plan.shelf import dispensable
@@ -238,7 +238,11 @@ def test_what_is_said_of_a_change_of_form() -> None:
         "Down a feeding tube with running feeds much less may be absorbed: hold feeds around the dose, the same way "
         "every day, and measure again after any change of feeds.",
     )
-    assert found["fosphenytoin-injection"].lines[-1] == "Amounts change from mg to mg PE: write the unit out."
+    assert found["fosphenytoin-injection"].lines[-2:] == (
+        "Amounts change from mg to mg PE: write the unit out.",
+        "Of extended capsules (phenytoin sodium) 85 % to 100 % may have reached the body until now: the same amount of "
+        "this form can give a higher level. Measure within days of the change.",
+    )
 
 
 def test_uncertain_bioavailability_has_two_ends() -> None:
@@ -246,13 +250,48 @@ def test_uncertain_bioavailability_has_two_ends() -> None:
     assert suspension.steady_low_mg_per_L < suspension.steady_high_mg_per_L == suspension.steady.median
     low = formulas.steady_state_level(dose_rate_mg_per_day=0.85 * 375.0, vmax_mg_per_day=500.0, km_mg_per_L=5.0)
     assert suspension.steady_low_mg_per_L == pytest.approx(float(low))
+
+
+def test_from_mouth_to_vein_the_level_may_rise_at_the_same_active_amount() -> None:
+    """What was not absorbed by mouth arrives: 368 mg into a vein act like 368 / 0.85 mg by mouth."""
     vein = switches()["injection"]
-    assert vein.steady_low_mg_per_L == vein.steady_high_mg_per_L
+    assert vein.steady_low_mg_per_L == vein.steady.median
+    high = formulas.steady_state_level(dose_rate_mg_per_day=368.0 / 0.85, vmax_mg_per_day=500.0, km_mg_per_L=5.0)
+    assert vein.steady_high_mg_per_L == pytest.approx(float(high))
+    back = switches(
+        doses=[{**PLAIN["doses"][0], "form": "injection", "amount": "200 mg", "every": "12 h", "until": ""}]
+    )
+    capsules = back["extended-capsule"]
+    assert capsules.steady_low_mg_per_L < capsules.steady_high_mg_per_L == capsules.steady.median
+    assert not any("until now" in x for x in capsules.lines)
 
 
 def test_nothing_to_switch_from() -> None:
     assert switching.switches(plain(doses=[], levels=[]), setting(), ()) == ()
     assert profile().forms["suspension"].routes == ("oral", "feeding tube")
+
+
+def test_the_own_regimen_is_among_the_restarts_where_it_fits() -> None:
+    own = {"form": "extended-capsule", "amount": "330 mg", "every": "24 h"}
+    found = pause(exact(vmax=440.0), proposed=[own, {**own, "amount": "200 mg"}])
+    assert found.restarts
+    mine = [r for r in found.restarts if r.words.endswith("(proposed)")]
+    # 5 x 303.6 / (440 - 303.6) = 11.1 mg/L fits the range; 184 mg/day would end at 3.6 mg/L and does not
+    assert [r.words for r in mine] == ["1 capsule of 30 mg and 1 capsule of 300 mg daily (proposed)"]
+    assert mine[0].steady.median == pytest.approx(11.13, abs=0.01)
+    assert len(found.restarts) <= pausing.MOST_SHOWN + 1
+
+
+def test_of_neighbours_the_one_with_fewer_capsules_is_shown() -> None:
+    """330 mg as 300 and 30 mg rather than 320 mg as 200 mg and four of 30 mg."""
+    s = setting(exact(vmax=440.0))
+    capsules = [p for p in profile().shelves["united-states"].products if "capsule" in p]
+    every = candidates(dispensable(profile(), capsules, largest_active_mg_per_day=552.0), (), s)
+    by_mg = {round(c.rate_mg_per_day / 0.92): c for c in every}
+    assert by_mg[320].units_a_day == 5
+    assert by_mg[330].units_a_day == 2
+    assert [c.units_a_day for c in pausing._spread_out([by_mg[320], by_mg[330]])][-1] == 2
+    assert plainness(by_mg[330]) < plainness(by_mg[320])
 
 
 # Large amounts swallowed at once

@@ -36,7 +36,7 @@ def test_a_load_smaller_than_one_usual_dose_is_refused() -> None:
     assert found.loads == ()
     assert found.no_load == (
         "No load: 98 mg of active drug would do, which is less than one usual dose (276 mg of active drug). "
-        "Maintenance goes on: 300 mg extended capsules (phenytoin sodium) daily.",
+        "Maintenance alone: 300 mg extended capsules (phenytoin sodium) daily.",
     )
 
 
@@ -47,16 +47,39 @@ def test_on_maintenance_a_load_by_mouth_does_not_replace_it() -> None:
         in load.order
     )
     (first,) = low(doses=[], levels=[], plan=asked("extended-capsule")).loads
-    assert "Maintenance begins 24 h after the first part." in first.order
+    assert "Maintenance begins 24 h after the first part (from 2 Dec 2026 10:00)." in first.order
+    planned = {**asked("extended-capsule"), "start": "2026-12-01 21:00"}
+    (soon,) = low(doses=[], levels=[], plan=planned).loads
+    assert (
+        "Maintenance begins 24 h after the first part (from 2 Dec 2026 21:00): not at 1 Dec 2026 21:00 as planned, but "
+        "with the first dose due after that."
+    ) in soon.order
 
 
-def test_a_load_of_suspension_says_why_there_is_none() -> None:
-    found = low(plan=asked("suspension"))
+def test_a_load_of_a_size_that_does_not_fit_says_why_there_is_none() -> None:
+    found = low(plan={**asked("extended-capsule"), "products": ["extended-capsule-30"]})
     assert found.loads == ()
     assert found.no_load == (
-        "No load of oral suspension (phenytoin acid): the published load by mouth is in capsules or tablets whose size "
-        "divides its parts (400, 300, 300 mg); ask for such a form, or for one into a vein.",
+        "No load of extended capsules (phenytoin sodium): none on the shelf in use has a size that divides the parts "
+        "of the published load by mouth (400, 300, 300 mg), and none is a liquid of one strength; ask for another "
+        "form, or for one into a vein.",
     )
+
+
+def test_no_increase_while_the_level_is_above_the_target() -> None:
+    """21 mg/L and plenty of room by the estimate: still no step up, and none is told."""
+    high = low(est=exact(vmax=900.0), levels=[{"value": "21 mg/L", "kind": "total", "drawn": "2026-12-01 07:00"}])
+    said = "The level today is above 20 mg/L, the top of the target: no increase."
+    assert said in high.lines
+    assert not any(x.startswith("Largest step") for x in high.lines)
+    assert high.present is not None
+    more = [c for c in high.every if c.rate_mg_per_day > high.present.rate_mg_per_day]
+    assert more
+    assert all(not c.offered and said in c.why_not for c in more)
+    assert high.present.offered
+    within = low(est=exact(vmax=900.0), levels=[{"value": "19 mg/L", "kind": "total", "drawn": "2026-12-01 07:00"}])
+    assert said not in within.lines
+    assert any(x.startswith("Largest step") for x in within.lines)
 
 
 def test_a_childs_own_cap_is_not_called_faster_than_that_of_heart_disease() -> None:
@@ -106,13 +129,13 @@ def test_each_chance_of_too_high_has_its_time() -> None:
     assert (c.danger_at_plateau, c.danger_at_draw, c.danger) == (0.0, 1.0, 1.0)
     assert c.why_not == (
         "The level is high today: at the next feasible draw, in 1 days, the chance of a level above 30 mg/L is still "
-        "100 %, above the limit of 10 %.",
+        "more than 99 %, above the limit of 10 %.",
     )
     rising = setting(exact(vmax=270.0), start_mg_per_L=np.full(8, 8.0), draw_days=3.0)
     (c,) = candidates([], given, rising)
     assert (c.danger_at_plateau, c.danger_at_draw, c.danger) == (1.0, 0.0, 1.0)
     assert c.why_not[0] == (
-        "Taken in full, the chance of a level above 30 mg/L or of no steady state once settled is 100 %, above the limit "
+        "Taken in full, the chance of a level above 30 mg/L or of no steady state once settled is more than 99 %, above the limit "
         "of 10 %."
     )
     (c,) = candidates([], given, setting(exact(volume=None)))
