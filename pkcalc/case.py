@@ -1607,23 +1607,21 @@ def _check_missed(course: Course, check: _Check) -> None:
 # --- looking over a checked case -----------------------------------------------------------------------
 
 
-def overlapping_lines(case: Case) -> tuple[tuple[int, int], ...]:
-    """Pairs of dose lines (0 for the first) that repeat the same form at the same time: perhaps one line entered twice.
+def overlapping_lines(case: Case) -> tuple[int, ...]:
+    """Dose lines (0 for the first) that go on at the same time as another: perhaps one was stopped, or entered twice.
 
-    Only lines that count as given and have a start. The same line may be in several pairs.
+    Regimens and infusions that count as given. Lines without a start, of which only the length is known, run together.
     """
-    lines = sorted(
-        (c for c in case.courses if c.regimen is not None and c.start is not None and c.counts_as_given),
-        key=lambda c: (c.start, c.index),
-    )
-    pairs: list[tuple[int, int]] = []
+    lines = [c for c in case.courses if c.counts_as_given and c.single is None]
+    open_ended = [c.index for c in lines if c.start is None and c.for_about_days is not None]
+    hits = set(open_ended) if len(open_ended) > 1 else set()
     running: list[Course] = []
-    for course in lines:
-        assert course.start is not None
-        running = [c for c in running if c.end is None or c.end > course.start]
-        pairs += [(c.index, course.index) for c in running if set(c.forms) & set(course.forms)]
+    for start, course in sorted(((c.start, c) for c in lines if c.start is not None), key=lambda x: (x[0], x[1].index)):
+        running = [c for c in running if c.end is None or c.end > start]
+        if running:
+            hits |= {course.index, *(c.index for c in running)}
         running.append(course)
-    return tuple(sorted((min(p), max(p)) for p in pairs))
+    return tuple(sorted(hits))
 
 
 _MONTH = "jan|feb|mar|apr|may|jun|jul|aug|sep|oct|nov|dec"

@@ -17,7 +17,7 @@ from typing import Any
 
 import numpy as np
 
-from pkcalc.case import Albumin, Case, label_looks_like_identifier
+from pkcalc.case import Albumin, Case, label_looks_like_identifier, overlapping_lines
 from pkcalc.clock import show_date, show_time
 from pkcalc.drugs.profile import Profile, load_profile
 from pkcalc.errors import BLOCKABLE, Caution, DrugFileError
@@ -221,20 +221,31 @@ def _levels_before_change(s: State, p: Mapping[str, Any]) -> list[Words]:
 
 
 def _overlapping(s: State, p: Mapping[str, Any]) -> list[Words]:
-    """Repeated lines in force at the same time."""
-    lines = [c for c in s.case.courses if c.regimen is not None and c.counts_as_given]
-    hits: set[int] = set()
-    for i, a in enumerate(lines):
-        for b in lines[i + 1 :]:
-            if a.start is None or b.start is None:
-                # Without starts only open-ended lines by length can be said to run together.
-                if a.for_about_days is not None and b.for_about_days is not None:
-                    hits |= {a.index, b.index}
-                continue
-            if (a.end is None or b.start < a.end) and (b.end is None or a.start < b.end):
-                hits |= {a.index, b.index}
-    names = [f"dose line {i + 1}" for i in sorted(hits)]
+    """Repeated lines and infusions in force at the same time."""
+    names = [f"dose line {i + 1}" for i in overlapping_lines(s.case)]
     return [{"lines": ", ".join(names).capitalize()}] if names else []
+
+
+def _offset_changes(s: State, p: Mapping[str, Any]) -> list[Words]:
+    """Regimens by the clock that run over a change of the offset, as far as the times of the case show one."""
+    moments = [x.drawn for x in s.case.levels] + [s.case.now] + [m for c in s.case.courses for m in (c.start, c.end)]
+    found: dict[tuple[str, str, str], list[str]] = {}
+    for c in s.case.courses:
+        if c.regimen is None or not c.regimen.by_clock or c.start is None or not c.counts_as_given:
+            continue
+        first = c.start.utcoffset()
+        for m in moments:
+            if m is None or first is None or m <= c.start or (c.end is not None and m > c.end):
+                continue
+            later = m.utcoffset()
+            if later is not None and later != first:
+                off = show(abs(later - first) / timedelta(hours=1), "h")
+                found.setdefault((f"{c.start:%z}", f"{m:%z}", off), []).append(f"dose line {c.index + 1}")
+                break
+    return [
+        {"lines": ", ".join(lines).capitalize(), "first": first, "later": later, "off": off}
+        for (first, later, off), lines in found.items()
+    ]
 
 
 def _load_not_in_record(s: State, p: Mapping[str, Any]) -> list[Words]:
@@ -602,6 +613,7 @@ PREDICATES: dict[str, Predicate] = {
     "levels_old": _levels_old,
     "not_settled": _not_settled,
     "not_trusted": _not_trusted,
+    "offset_changes": _offset_changes,
     "nothing_measured": _nothing_measured,
     "overlapping": _overlapping,
     "pair_refused": _pair_refused,

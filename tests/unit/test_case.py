@@ -188,10 +188,24 @@ def test_overlapping_lines() -> None:
     ended = {**first, "until": "2026-09-01 12:00"}
     later = {**first, "from": "2026-09-01 21:00"}
     assert overlapping_lines(plain(doses=[ended, later])) == ()
-    assert overlapping_lines(plain(doses=[first, later])) == ((0, 1),)
-    assert overlapping_lines(plain(doses=[later, first, first])) == ((0, 1), (0, 2), (1, 2))
-    assert overlapping_lines(plain(doses=[first, {**later, "form": "suspension"}])) == ()
+    assert overlapping_lines(plain(doses=[first, later])) == (0, 1)
+    assert overlapping_lines(plain(doses=[later, first, first])) == (0, 1, 2)
+    assert overlapping_lines(plain(doses=[first, {**later, "form": "suspension"}])) == (0, 1)
     assert overlapping_lines(plain(doses=[first, {**later, "source": "ordered"}])) == ()
+    about = {"form": "extended-capsule", "amount": "300 mg", "every": "24 h", "for_about": "3 months"}
+    assert overlapping_lines(plain(doses=[about, {**about, "amount": "100 mg"}], levels=[])) == (0, 1)
+
+
+def test_an_infusion_left_running_beside_the_new_rate_is_found() -> None:
+    """A rate changed by a second line while the first has no end: both would be added up."""
+    data = json.loads(dump_case(demonstration("ethanol-first-hours")))
+    rate = data["doses"][1]
+    changed = {**rate, "rate": "120 mL/h", "from": "2026-06-02 12:00"}
+    assert overlapping_lines(read_case_text(json.dumps(data))) == ()
+    both = {**data, "doses": [*data["doses"], changed]}
+    assert overlapping_lines(read_case_text(json.dumps(both))) == (1, 2)
+    ended = {**data, "doses": [data["doses"][0], {**rate, "until": "2026-06-02 12:00"}, changed]}
+    assert overlapping_lines(read_case_text(json.dumps(ended))) == ()
 
 
 def test_a_newer_version_is_refused_before_anything_else() -> None:

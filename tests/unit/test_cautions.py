@@ -263,3 +263,29 @@ def test_implausible_parameters_are_warned_about() -> None:
     assert "range over patients). Check doses taken" in vmax.text
     usual = said(run_consult(plain(method="two levels", patient={"age": "45 years", "weight": "60 kg"})))
     assert not {"vmax-out-of-range", "km-out-of-range"} & usual
+
+
+def test_a_change_of_the_offset_within_a_regimen_by_the_clock_is_told() -> None:
+    """Summer time ends on 25 Oct 2026: the doses keep +0200 and then stand an hour off the clock on the wall."""
+    line = {
+        "form": "extended-capsule",
+        "daily": [{"time": "21:00", "amount": "300 mg"}],
+        "from": "2026-10-01 21:00+02:00",
+    }
+    changes = {
+        "doses": [line],
+        "levels": [{"value": "10 mg/L", "kind": "total", "drawn": "2026-11-10 08:00+01:00"}],
+        "now": "2026-11-10 12:00+01:00",
+        "albumin": None,
+    }
+    found = [c for c in run_consult(plain(**changes)).cautions if c.id == "offset-changes"]
+    assert [c.text for c in found] == [
+        "Dose line 1: the doses keep the offset of the first one (+0200), but later times of this record carry +0100. "
+        "From that change of the clock on they are followed 1 h away from the clock on the wall; a line of its own from "
+        "the change on mends it."
+    ]
+    ended = {**line, "until": "2026-10-25 02:00+02:00"}
+    after = {**line, "from": "2026-10-25 21:00+01:00"}
+    assert "offset-changes" not in said(run_consult(plain(**{**changes, "doses": [ended, after]})))
+    interval = {"form": "extended-capsule", "amount": "300 mg", "every": "24 h", "from": "2026-10-01 21:00+02:00"}
+    assert "offset-changes" not in said(run_consult(plain(**{**changes, "doses": [interval]})))
