@@ -169,7 +169,7 @@ def make(
     present = next((c for c in every if c.present and not c.proposed), None)
     own = tuple(next(c for c in every if c.regimen is r and c.proposed) for r in case.proposed)
     next_on = own[0] if own else present
-    given_loads, no_load = _loads(case, setting, now, shelf, next_on, stops, prior)
+    given_loads, no_load = _loads(case, setting, now, shelf, _follows(own, present), stops, prior)
     asked = _asked(case, setting, now, observations, next_on, present, given_loads)
     level = None if asked is None or "next level" in stops else nextlevel.next_level(asked)
     return Plan(
@@ -193,6 +193,12 @@ def make(
     )
 
 
+def _follows(own: tuple[Candidate, ...], present: Candidate | None) -> Candidate | None:
+    """What is given after a load: the pharmacist's first that may be offered, else the present one, else the first."""
+    named = [*own, *([present] if present is not None else [])]
+    return next((c for c in named if c.offered), named[0] if named else None)
+
+
 def _loads(
     case: Case,
     setting: Setting,
@@ -213,10 +219,16 @@ def _loads(
         now=now,
         products=shelf.products,
         maintenance_mg_per_day=follows.rate_mg_per_day if follows is not None else 0.0,
-        maintenance_words=follows.words if follows is not None else "no maintenance dose",
+        maintenance_words=_maintenance_words(follows),
         volume_words=_volume_words(case, setting, prior),
     )
     return loading.loads(ward)
+
+
+def _maintenance_words(follows: Candidate | None) -> str:
+    if follows is None:
+        return "no maintenance dose"
+    return follows.words if follows.offered else f"{follows.words} (NOT OFFERED)"
 
 
 def _volume_words(case: Case, setting: Setting, prior: Prior | None) -> str:

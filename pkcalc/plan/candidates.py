@@ -32,8 +32,9 @@ from pkcalc.units import percent, percent_beside, show
 
 Floats = NDArray[np.float64]
 
-#: Regimens taken more often a day than this are printed only where the patient takes one, or nothing else is there.
-MOST_TIMES_SHOWN = 2
+#: Regimens taken more often a day than this are printed only where the patient takes one, or where without them fewer
+#: than so many would be left.
+MOST_TIMES_SHOWN, FEWEST_SHOWN = 2, 5
 #: Clock times of a regimen whose times nobody has stated, for the course within a day only.
 HOURS = {1: (21.0,), 2: (9.0, 21.0), 3: (6.0, 14.0, 22.0), 4: (6.0, 12.0, 18.0, 24.0)}
 
@@ -316,8 +317,6 @@ def shown(
     same = [c for c in rest if all(x.form in forms for x in c.regimen.intakes)]
     single = [c for c in rest if len({x.form for x in c.regimen.intakes}) == 1]
     rest = same or single or rest
-    most_times = max([MOST_TIMES_SHOWN, *(c.dose_times for c in must)])
-    rest = [c for c in rest if c.dose_times <= most_times] or rest
     centre = setting.present_mg_per_day
     aim = _aim_rate(setting)
     centre = aim if centre is None else centre
@@ -326,6 +325,9 @@ def shown(
     # beyond the largest offered dose a few more, so that the limit is seen, not a long list of refusals
     high = min(high, 1.12 * max(*offered, centre)) if offered else high
     rest = [c for c in rest if low <= c.rate_mg_per_day <= high]
+    most_times = max([MOST_TIMES_SHOWN, *(c.dose_times for c in must)])
+    seldom = [c for c in rest if c.dose_times <= most_times]
+    rest = seldom if len(seldom) >= FEWEST_SHOWN else rest
     room = max(most - len(must), 0)
     if len(rest) > room and room:
         # one regimen, the simplest, for each of as many neighbourhoods as there is room; nearer steps near the centre

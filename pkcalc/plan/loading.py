@@ -271,7 +271,10 @@ def into_vein(ward: Ward, product: Product, aim_mg_per_L: float) -> Load:
         end=end,
         drawn=drawn,
         draw_after_h=draw_h,
-        order=iv_order(product, amount, minutes, caps, line, profile),
+        order=(
+            *iv_order(product, amount, minutes, slowest(caps, case.patient.weight_kg), line, profile),
+            *((_goes_on(ward),) if usual_dose(ward) is not None else ()),
+        ),
         notes=notes,
         why=why,
     )
@@ -355,9 +358,7 @@ def by_mouth(ward: Ward, products: Sequence[Product], aim_mg_per_L: float) -> Lo
         + f": {pieces}.",
         *liquid,
         oral.setting,
-        f"Maintenance goes on as well: {ward.maintenance_words}; the load does not replace it."
-        if usual_dose(ward) is not None
-        else _maintenance_begins(ward, oral),
+        _goes_on(ward) if usual_dose(ward) is not None else _maintenance_begins(ward, oral),
     )
     notes.append(said)
     return _load(
@@ -614,6 +615,14 @@ def rate_mg_per_min(caps: Sequence[RateCap], weight_kg: float | None) -> float:
     return min(flat + scaled)
 
 
+def slowest(caps: Sequence[RateCap], weight_kg: float | None) -> tuple[RateCap, ...]:
+    """Those of the caps that set the rate: an order names no faster one beside it."""
+    if not caps:
+        return ()
+    rate = rate_mg_per_min(caps, weight_kg)
+    return tuple(c for c in caps if rate_mg_per_min([c], weight_kg) <= rate * (1 + 1e-9))
+
+
 def infusion_minutes(amount_mg: float, caps: Sequence[RateCap], weight_kg: float | None) -> float:
     """The shortest infusion time at the cap, rounded up to whole minutes."""
     return float(math.ceil(amount_mg / rate_mg_per_min(caps, weight_kg) - 1e-9))
@@ -653,6 +662,10 @@ def iv_order(
 
 def _sentence(text: str) -> str:
     return text[0].upper() + text[1:] + ("" if text.endswith(".") else ".")
+
+
+def _goes_on(ward: Ward) -> str:
+    return f"Maintenance goes on as well: {ward.maintenance_words}; the load does not replace it."
 
 
 def _maintenance_begins(ward: Ward, oral: OralLoad) -> str:

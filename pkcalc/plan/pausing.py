@@ -126,7 +126,9 @@ def pause(case: Case, now: Today, setting: Setting, every: Sequence[Candidate]) 
     if level.median <= goal.high_mg_per_L and case.restart_level_mg_per_L is None:
         return None
     forms = {f for c in case.courses for f in c.forms}
-    every = [c for c in every if all(x.form in forms for x in c.regimen.intakes)] or list(every)
+    same = [c for c in every if all(x.form in forms for x in c.regimen.intakes)]
+    if any(not (c.present or c.proposed) for c in same):
+        every = same
     few = fewer_draws(estimate, TIME_DRAWS).estimate
     start = draws_of(now.start_mg_per_L, fewer_draws(estimate, TIME_DRAWS))
     days = time_to_fall(few, start, to)

@@ -137,7 +137,8 @@ def test_the_infusion_time_by_age_and_risk(
         plan=asked(form, aim="20 mg/L"),
     )[form]
     assert load.minutes == minutes
-    assert words in load.order[0]
+    # the cap that sets the rate, and no faster one beside it
+    assert load.order[0].endswith(f"over at least {minutes} min ({words}).")
 
 
 def test_a_child_has_the_slower_of_the_two_limits() -> None:
@@ -288,6 +289,26 @@ def test_what_follows_with_the_maintenance_dose() -> None:
         volume_L=49.0,
     )
     assert load.followed[0][1].median == pytest.approx(float(exactly))
+
+
+def test_maintenance_beside_a_load_is_one_that_may_be_given() -> None:
+    """The pharmacist's own that may be offered, else the present dose; one that is not offered bears its mark."""
+    far = {"form": "extended-capsule", "amount": "500 mg", "every": "24 h"}
+    near = {**far, "amount": "330 mg"}
+    present = "300 mg extended capsules (phenytoin sodium) daily"
+    goes_on = "Maintenance goes on as well: {}; the load does not replace it."
+    for proposed, words in (
+        ([far, near], "330 mg extended capsules (phenytoin sodium) daily"),
+        ([far], present),
+        ([], present),
+    ):
+        load = loads(proposed=proposed)["injection"]
+        assert load.maintenance == words
+        assert goes_on.format(words) in load.order
+    neither = loads(est=exact(vmax=290.0, volume=49.0), proposed=[far])["injection"]
+    assert neither.maintenance == "500 mg extended capsules (phenytoin sodium) daily (NOT OFFERED)"
+    fresh = loads(levels=[], doses=[])["injection"]
+    assert not any("Maintenance" in x for x in fresh.order)
 
 
 def test_the_rise_has_an_interval() -> None:

@@ -416,3 +416,12 @@ def test_the_whole_path_from_a_large_dose_in_the_record() -> None:
     ]
     assert any("swallowed at once 10 h ago" in x for x in data["pause"]["lines"])
     assert any("swallowed at once 10 h ago" in x for x in data["next_level"]["why"])
+
+
+def test_where_the_shelf_has_not_the_present_form_another_one_is_restarted_with() -> None:
+    own = {"form": "extended-capsule", "amount": "330 mg", "every": "24 h"}
+    found = pause(exact(vmax=440.0), proposed=[own], plan={"shelf": "united-kingdom"})
+    words = [r.words for r in found.restarts]
+    assert sum(w.endswith("(proposed)") for w in words) == 1
+    assert len(words) > 1
+    assert found.reductions
