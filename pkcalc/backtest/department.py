@@ -76,7 +76,7 @@ def write_department(
         people.writerow(["patient", "weight", "age", "sex", "group_ward"])
         doses.writerow(["patient", "form", "amount", "unit", "every", "from", "until", "given_by"])
         levels.writerow(["patient", "value", "unit", "kind", "drawn"])
-        for one in patients(ward, prior, count=count, seed=seed):
+        for one in patients(ward, prior, count=count, seed=seed, target=False):
             chance = np.random.default_rng((seed, one.number, 7))
             wrong = int(chance.integers(_WRONG_ROWS)) if chance.random() < entry.wrong else -1
             key = f"synthetic-{one.number:06d}"
@@ -145,11 +145,16 @@ def _level_rows(
         (math.log1p(ward.assay_cv**2) + math.log1p(ward.day_cv**2)) * (profile.spread.wrong_level_factor**2 - 1)
     )
     molar_mass = profile.molar_mass_g_per_mol
+    low, high = profile.level_gate_mg_per_L("total")
     for n, (day, measured) in enumerate(zip(one.level_days, one.level_mg_per_L, strict=True)):
         off = chance.standard_normal() if chance.random() < share else 0.0
         level = measured * math.exp(more_sd * off)
         value, unit = f"{level:.4g}", "mg/L"
-        if chance.random() < entry.other_unit:
+        other = chance.random() < entry.other_unit
+        if not low <= float(value) <= high:
+            # beyond what a laboratory measures it reports the limit
+            value = f"<{low:g}" if level < low else f">{high:g}"
+        elif other:
             value, unit = (value, "mcg/mL") if chance.random() < 0.5 else (f"{1000 * level / molar_mass:.4g}", "umol/L")
         if wrong == 3 and n == 0:
             value = "see chart"

@@ -2,8 +2,9 @@
 
 Each patient's mean and covariance of (log Vmax, log Km), with what the population said taken out, is taken as
 a measurement of where that patient lies; the mean shift and the spreads are those that make all of them
-together most likely (maximum likelihood of a normal population; intervals from the curvature at the top). The
-correlation of the two stays the population's own: few levels per patient say next to nothing about it."""
+together most likely (maximum likelihood of a normal population; intervals from the curvature at the top). Only
+patients with two or more levels are placed. The correlation of the two stays the population's own: few levels per
+patient say next to nothing about it."""
 
 from __future__ import annotations
 
@@ -18,6 +19,10 @@ from pkcalc.backtest.accuracy import FEWEST_PATIENTS, Share
 from pkcalc.backtest.outlook import Row
 
 Floats = NDArray[np.float64]
+
+#: Logs of the spreads that are looked through; at an end, and where an interval would reach further than the last
+#: either way (a factor of 12), there is no interval to tell.
+_LEAST, _MOST, _WIDEST = -5.0, 1.0, 2.5
 
 
 @dataclass(frozen=True)
@@ -70,7 +75,7 @@ def refit(population: str, rows: Sequence[Row]) -> Hint | None:
         return -_log_likelihood(x, rho, told, gained)
 
     start = np.array([0.0, 0.0, math.log(sd_v), math.log(sd_k)])
-    found = minimize(loss, start, method="L-BFGS-B", bounds=[(-2, 2), (-2, 2), (-5, 1), (-5, 1)])
+    found = minimize(loss, start, method="L-BFGS-B", bounds=[(-2, 2), (-2, 2), (_LEAST, _MOST), (_LEAST, _MOST)])
     curvature = _curvature(loss, found.x)
     try:
         variance = np.diag(np.linalg.inv(curvature))
@@ -81,6 +86,8 @@ def refit(population: str, rows: Sequence[Row]) -> Hint | None:
 
     def ratio(i: int) -> Share:
         half = 1.959964 * math.sqrt(variance[i])
+        if half > _WIDEST or (i >= 2 and not _LEAST < found.x[i] < _MOST):
+            return Share(math.exp(found.x[i]), None, None)
         return Share(*(math.exp(v) for v in (found.x[i], found.x[i] - half, found.x[i] + half)))
 
     return Hint(

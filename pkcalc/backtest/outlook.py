@@ -47,6 +47,10 @@ CHOICES = {"population": PRIOR, "one-level": ONE, "two-level": TWO, "whole-recor
 
 DRAWS = 1024
 
+#: A patient with fewer levels is not placed in the population: one level cannot tell Vmax from Km, and what little it
+#: says of them together has no normal shape.
+FEWEST_PLACED = 2
+
 #: With fewer effective draws than this the place in the population is estimated anew, not weighed.
 _EFFECTIVE_DRAWS = 100.0
 MOST_DOSES = 5_000
@@ -206,7 +210,7 @@ def _outlooks(raw: Raw, drug: str, site: Site, methods: Sequence[str]) -> list[R
     at_first = _by_population(known, [at.time_day for _, at, _ in held]) if held else np.zeros((0, 0))
     for n, (o, at, earlier) in enumerate(held):
         found += _one_level(known, o, at, earlier, at_first[:, n])
-    if learned and WHOLE in methods:
+    if len(learned) >= FEWEST_PLACED and WHOLE in methods:
         found += _against_population(known, learned)
     return found
 
@@ -264,8 +268,6 @@ def _one_level(known: _Known, o: Observation, at: LevelData, earlier: list[int],
     if PRIOR in known.methods:
         found.append(_by_draws(known, PRIOR, o, at, [], len(earlier), at_first))
     if not earlier:
-        if WHOLE in known.methods:
-            known.last = ((o.level.index,), known.estimate([]), at_first)  # type: ignore[assignment]
         return found
     latest = max(earlier, key=lambda i: (known.data[i].time_day, i))
     # from a single earlier level the two are the same calculation

@@ -52,8 +52,8 @@ class SyntheticPatient:
 
     record: doses as recorded, of all periods but the last. level_days, level_mg_per_L: as measured;
     true_mg_per_L: what they were. following: doses as planned for the last period. target_day: its end;
-    target_mg_per_L: the true level then, with doses missed as before. rates_mg_per_day: of every period, the
-    last one included."""
+    target_mg_per_L: the true level then, with doses missed as before; both None where the last period was not
+    lived through. rates_mg_per_day: of every period, the last one included."""
 
     number: int
     vmax_mg_per_day: float
@@ -64,8 +64,8 @@ class SyntheticPatient:
     level_mg_per_L: tuple[float, ...]
     true_mg_per_L: tuple[float, ...]
     following: tuple[Dose, ...]
-    target_day: float
-    target_mg_per_L: float
+    target_day: float | None
+    target_mg_per_L: float | None
     rates_mg_per_day: tuple[float, ...]
 
 
@@ -80,14 +80,17 @@ def next_rate(rate_mg_per_day: float, level_mg_per_L: float) -> float:
     return max(rate_mg_per_day + change, _LEAST_MG_PER_DAY)
 
 
-def patients(ward: Ward, prior: Prior, *, count: int, seed: int, first: int = 0) -> Iterator[SyntheticPatient]:
-    """Patients first .. first + count - 1 of a department; each depends on the seed and its own number
-    only."""
+def patients(
+    ward: Ward, prior: Prior, *, count: int, seed: int, first: int = 0, target: bool = True
+) -> Iterator[SyntheticPatient]:
+    """Patients first .. first + count - 1 of a department; each depends on the seed and its own number only.
+
+    target: whether the last period, after the last level, is lived through; the records are the same."""
     for number in range(first, first + count):
-        yield _patient(ward, prior, number, np.random.default_rng((seed, number)))
+        yield _patient(ward, prior, number, np.random.default_rng((seed, number)), target)
 
 
-def _patient(ward: Ward, prior: Prior, number: int, chance: np.random.Generator) -> SyntheticPatient:
+def _patient(ward: Ward, prior: Prior, number: int, chance: np.random.Generator, target: bool) -> SyntheticPatient:
     z = chance.standard_normal(3)
     z[1] = prior.correlation * z[0] + np.sqrt(1 - prior.correlation**2) * z[1]
     vmax = prior.vmax_mg_per_day * ward.vmax_factor * float(np.exp(prior.vmax_log_sd * z[0]))
@@ -104,6 +107,8 @@ def _patient(ward: Ward, prior: Prior, number: int, chance: np.random.Generator)
     following: list[Dose] = []
     for period in range(ward.levels + 1):
         rates.append(rate)
+        if period == ward.levels and not target:
+            break
         length = int(chance.integers(ward.days_per_dose[0], ward.days_per_dose[1] + 1))
         if period == ward.levels:
             length = ward.days_per_dose[1]
@@ -141,7 +146,7 @@ def _patient(ward: Ward, prior: Prior, number: int, chance: np.random.Generator)
         level_mg_per_L=tuple(measured),
         true_mg_per_L=tuple(true),
         following=tuple(following),
-        target_day=begin + length,
-        target_mg_per_L=level,
+        target_day=begin + length if target else None,
+        target_mg_per_L=level if target else None,
         rates_mg_per_day=tuple(rates),
     )
