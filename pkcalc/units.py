@@ -318,11 +318,9 @@ def show_up_to(value: float, label: str, most: float) -> str:
 
 def percent(share: float) -> str:
     """A chance in words that never read as impossible or certain."""
-    if share <= 0:
-        return "0 %"
     if share < 0.01:
         return "less than 1 %"
-    if 0.99 < share < 1:
+    if share > 0.99:
         return "more than 99 %"
     return f"{show_number(100 * share, 2)} %"
 

@@ -13,6 +13,7 @@ from pkcalc.note.charts import Chart, charts
 from pkcalc.note.document import compose
 from pkcalc.note.layout import document_data
 from pkcalc.note.lessons import lesson
+from pkcalc.note.wrapping import together
 
 
 def chart_data(chart: Chart) -> dict[str, str]:
@@ -23,9 +24,19 @@ def chart_data(chart: Chart) -> dict[str, str]:
     }
 
 
+def _together(data: Any) -> Any:
+    """Every text within, with numbers and units kept on one line."""
+    if isinstance(data, str):
+        return together(data)
+    if isinstance(data, dict):
+        return {k: _together(v) for k, v in data.items()}
+    return [_together(x) for x in data] if isinstance(data, list) else data
+
+
 def render_html(consult: Consult) -> str:
     """Consult -> one HTML document."""
-    data: dict[str, Any] = document_data(compose(consult))
+    document = compose(consult)
+    data: dict[str, Any] = _together(document_data(document)) | {"paste": "\n".join(document.paste)}
     data["charts"] = [chart_data(c) for c in charts(consult)]
     teaching = lesson(consult)
     data["teaching"] = None

@@ -15,6 +15,7 @@ from pkcalc.note.charts import Chart, charts
 from pkcalc.note.document import compose
 from pkcalc.note.layout import Detail, document_data, section_data, with_first_cautions
 from pkcalc.note.lessons import lesson
+from pkcalc.note.wrapping import NUMBER_WITH_UNIT
 
 #: How much of each warning page one tells, and the sizes tried in turn with it (points), so that it is one page:
 #: whole as long as it can be read well.
@@ -34,7 +35,7 @@ def render_pdf(consult: Consult) -> bytes:
     """Consult -> PDF with page one on one page and everything else behind it. The same consult gives the same bytes."""
     document = compose(consult)
     data: dict[str, Any] = document_data(document)
-    inputs: dict[str, str] = {}
+    inputs: dict[str, str] = {"unbroken": NUMBER_WITH_UNIT}
     data["charts"] = _charts(charts(consult), inputs, 92)
     teaching = lesson(consult)
     data["teaching"] = None

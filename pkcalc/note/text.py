@@ -2,11 +2,10 @@
 
 from __future__ import annotations
 
-import textwrap
-
 from pkcalc.errors import Caution
 from pkcalc.note.document import Document, Section, Table
 from pkcalc.note.words import NOW
+from pkcalc.note.wrapping import wrapped
 
 WIDTH = 100
 _NAMES = {"stop": "STOP", "warn": "WARNING", "note": "NOTE"}
@@ -18,7 +17,7 @@ def render(document: Document) -> str:
     if document.demonstration:
         out += ["*" * WIDTH, document.demonstration.center(WIDTH).rstrip(), "*" * WIDTH, ""]
     out += [document.title, "=" * len(document.title), ""]
-    out += [*textwrap.wrap(document.urgent, WIDTH), ""]
+    out += [*wrapped(document.urgent, WIDTH), ""]
     for section in document.front:
         out += _section(section) if section.title == NOW else []
     for caution in document.cautions:
@@ -32,7 +31,7 @@ def render(document: Document) -> str:
         out += _section(section)
     out += ["To paste into a record", "----------------------", *document.paste, ""]
     for line in document.footer:
-        out += textwrap.wrap(line, WIDTH)
+        out += wrapped(line, WIDTH)
     if document.demonstration:
         out += ["", "*" * WIDTH, document.demonstration.center(WIDTH).rstrip(), "*" * WIDTH]
     return "\n".join(out) + "\n"
@@ -42,12 +41,8 @@ def _section(section: Section) -> list[str]:
     out = [section.title, "-" * len(section.title)]
     for line in section.lines:
         inside = line.startswith("   ")
-        out += textwrap.wrap(
-            line.strip(),
-            WIDTH,
-            initial_indent="   " if inside else "",
-            subsequent_indent="      " if inside else "   ",
-        )
+        first, rest = ("   ", "      ") if inside else ("", "   ")
+        out += wrapped(line.strip(), WIDTH, first=first, rest=rest)
     if section.table is not None:
         out += table_lines(section.table)
     out.append("")
@@ -61,7 +56,7 @@ def caution_lines(caution: Caution) -> list[str]:
         text += f" No result for: {', '.join(caution.blocks)}."
     if caution.lifted_by:
         text += f" Lifted by: {caution.lifted_by}."
-    return textwrap.wrap(text, WIDTH, subsequent_indent="   ")
+    return wrapped(text, WIDTH, rest="   ")
 
 
 def table_lines(table: Table) -> list[str]:
@@ -71,7 +66,7 @@ def table_lines(table: Table) -> list[str]:
         max([len(r[i]) for r in table.rows] + [max((len(w) for w in table.heads[i].split()), default=1)])
         for i in columns
     ]
-    heads = [textwrap.wrap(table.heads[i], widths[i]) or [""] for i in columns]
+    heads = [wrapped(table.heads[i], widths[i]) or [""] for i in columns]
     depth = max(len(h) for h in heads)
     lines = []
     for k in range(depth):

@@ -119,14 +119,24 @@ def short_band(band: Band) -> str:
     return f"{edge(band.median)} ({edge(band.low)} to {edge(band.high)})"
 
 
+#: A year and more: so near the ceiling nothing else stays as it is for so long.
+MOST_DAYS = 400.0
+
+
 def days_words(band: Band | None) -> str:
-    """Days with their interval, or why there are none."""
+    """Days with their interval, or why there are none; beyond MOST_DAYS the number means nothing and is not told."""
     if band is None:
         return "not known without a weight"
     if not np.isfinite(band.median):
         return "never settles"
-    high = show_number(band.high, 2) if np.isfinite(band.high) else "never"
-    return f"{show_number(band.median, 2)} days ({show_number(band.low, 2)} to {high})"
+    low, median, high = (_told_days(x) for x in (band.low, band.median, band.high))
+    return f"{median} days ({low} to {high})"
+
+
+def _told_days(days: float) -> str:
+    if not np.isfinite(days):
+        return "never"
+    return show_number(days, 2) if days <= MOST_DAYS else f"above {show_number(MOST_DAYS)}"
 
 
 def reports_free(consult: Consult) -> bool:

@@ -7,16 +7,18 @@ import io
 import json
 import re
 from functools import cache
+from itertools import pairwise
 from pathlib import Path
+from statistics import median
 
 import numpy as np
 import pytest
 from click.testing import CliRunner, Result
-from pypdf import PdfReader
+from pypdf import PageObject, PdfReader
 
 from pkcalc.cli import cli
 from pkcalc.consult import Consult, run_consult
-from pkcalc.demos import demonstration
+from pkcalc.demos import demonstration, demonstrations
 from pkcalc.note.charts import Chart, charts, contours
 from pkcalc.note.document import DEMONSTRATION, OVERDOSE, Document, compose
 from pkcalc.note.front import PASTE_LINES, PASTE_WIDTH
@@ -24,6 +26,7 @@ from pkcalc.note.html import render_html
 from pkcalc.note.layout import first_sentence
 from pkcalc.note.pdf import render_pdf
 from pkcalc.note.text import render
+from pkcalc.note.wrapping import wrapped
 from tests.unit import cases
 
 SHELF = {"shelf": "united-states"}
@@ -127,7 +130,7 @@ def test_a_long_paste_block_is_cut_and_says_so() -> None:
     block = compose(run_consult(cases.plain(proposed=many))).paste
     assert PASTE_LINES - 5 < len(block) <= PASTE_LINES  # cut between statements, never inside one
     assert "[cut here: read the full note]" in block
-    assert block[-1] == "Not a substitute for the full note; check every number."
+    assert block[-1] == "Blind re-entry: not done. Read the full note; check every number."
 
 
 def test_what_was_forecast_then_is_set_beside_what_came() -> None:
@@ -157,7 +160,67 @@ def pdf(name: str) -> PdfReader:
     return PdfReader(io.BytesIO(render_pdf(demo(name))))
 
 
-@pytest.mark.parametrize("name", ["clean-pair", "tube-feed", "ethanol-dialysis"])
+PAGES = ("clean-pair", "tube-feed", "load-and-top-up")
+EVERY = (*PAGES, *(pytest.param(d.name, marks=pytest.mark.slow) for d in demonstrations() if d.name not in PAGES))
+
+
+def heights(page: PageObject) -> dict[float, str]:
+    """The lines of a page down its left side: height of each and its text."""
+    found: dict[float, str] = {}
+
+    def see(text: str, cm: list[float], tm: list[float], *_: object) -> None:
+        if text.strip() and text.strip() != "DEMONSTRATION" and tm[4] * cm[0] + cm[4] < 300:
+            at = round(tm[5] * cm[3] + cm[5], 1)
+            found[at] = found.get(at, "") + text.strip()
+
+    page.extract_text(visitor_text=see)
+    return found
+
+
+@pytest.mark.parametrize("name", EVERY)
+def test_no_line_of_page_one_lies_over_another(name: str) -> None:
+    lines = heights(pdf(name).pages[0])
+    assert len(lines) > 30
+    down = sorted(lines, reverse=True)
+    usual = median(above - below for above, below in pairwise(down))
+    for above, below in pairwise(down):
+        assert above - below > 0.7 * usual, (lines[above], lines[below])
+
+
+@pytest.mark.parametrize("name", EVERY)
+def test_no_heading_ends_a_page(name: str) -> None:
+    titles = {s.title for s in compose(demo(name)).sections} | {"Charts", "Cautions in full", "To paste into a record"}
+    for page in pdf(name).pages:
+        lines = heights(page)
+        body = [lines[y] for y in sorted(lines, reverse=True) if not lines[y].startswith("pkcalc ")]
+        assert body[-1] not in titles
+
+
+UNIT_FIRST = re.compile(r"(?:%|mg|mg/L|mg/day|mg/h|mL|mL/h|g/L|kg|h|days|day|L/day|PE)(?![\w/])")
+
+
+@pytest.mark.parametrize("name", EVERY)
+def test_no_number_is_parted_from_its_unit(name: str) -> None:
+    document = compose(demo(name))
+    printed = render(document).splitlines()
+    pages = [line for p in pdf(name).pages for line in (p.extract_text() or "").splitlines()]
+    for lines in (printed, list(document.paste), pages):
+        for above, below in pairwise(lines):
+            if re.search(r"\d\)?$", above.strip()) and UNIT_FIRST.match(below.strip()):
+                # two cells of a table stand in lines of their own
+                assert lines is pages, (above, below)
+                assert not re.search(r"[a-z] [\d.,]+$", above.strip()), (above, below)
+
+
+def test_a_unit_stays_with_its_number() -> None:
+    text = "of no steady state is 10 % and 300 mg PE daily, 8.42 (6.74 to 10.3) mg/L in 36 h"
+    for width in range(12, 60):
+        lines = wrapped(text, width)
+        assert " ".join(lines) == text
+        assert not any(UNIT_FIRST.match(line) for line in lines), lines
+
+
+@pytest.mark.parametrize("name", EVERY)
 def test_page_one_of_the_pdf_is_one_page(name: str) -> None:
     pages = [p.extract_text() or "" for p in pdf(name).pages]
     front = " ".join(pages[0].split())
