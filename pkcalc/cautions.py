@@ -164,7 +164,9 @@ def _younger_than(s: State, p: Mapping[str, Any]) -> list[Words]:
     if age is None or age >= limit:
         return []
     limit_words = show(limit * 12, "months") if limit < 2 else show(limit, "years")
-    return [{"age": s.case.patient.typed["age"], "limit": limit_words}]
+    fact = s.profile.fact("drug.youngest")
+    reason = fact.derivation or f"{fact.where[:1].upper()}{fact.where[1:]}."
+    return [{"age": s.case.patient.typed["age"], "limit": limit_words, "drug": s.profile.name, "reason": reason}]
 
 
 def _unconfirmed_lines(s: State, p: Mapping[str, Any]) -> list[Words]:

@@ -6,7 +6,7 @@ import json
 
 import pytest
 
-from pkcalc.case import Case
+from pkcalc.case import Case, read_case_text
 from pkcalc.cautions import rules_of
 from pkcalc.consult import run_consult
 from pkcalc.demos import demonstrations
@@ -103,3 +103,43 @@ def test_cautions_of_a_drug_read_and_cite(name: str) -> None:
     for rule in rules_of(name):
         assert rule.source in all_sources(), rule.id
         assert rule.text.strip().endswith((".", "}")), rule.id
+
+
+#: What a case says below the youngest age of each drug: every profile must stand here.
+TOO_YOUNG = {
+    "ethanol": (
+        "Age 17 years: under 18 years this tool does not calculate for ethanol as antidote. Children need other doses "
+        "and lose glucose faster; no population of children was read."
+    ),
+    "phenytoin": (
+        "Age 5 months: under 6 months this tool does not calculate for phenytoin. Half-life changes tenfold within "
+        "weeks of birth, so no fixed population is defensible; the youngest published band starts at 6 months."
+    ),
+    "salicylate": (
+        "Age 17 years: under 18 years this tool does not calculate for salicylate. No values of children were read."
+    ),
+    "theophylline": (
+        "Age 17 years: under 18 years this tool does not calculate for theophylline. 15 % of children or more show "
+        "saturation (see the cautions), but no Vmax and Km of children was read."
+    ),
+    "voriconazole": (
+        "Age 17 years: under 18 years this tool does not calculate for voriconazole. Children absorb 45 to 66 % and "
+        "eliminate differently."
+    ),
+}
+
+
+@pytest.mark.parametrize("name", drug_names())
+def test_below_the_youngest_age_nothing_is_calculated_and_why_is_said(name: str) -> None:
+    youngest = load_profile(name).youngest_years
+    entry = next(d for d in demonstrations() if json.loads(d.text)["drug"] == name)
+    data = json.loads(entry.text)
+    age = "5 months" if youngest < 1 else f"{youngest - 1:.0f} years"
+    weight = "7 kg" if youngest < 1 else "50 kg"
+    consult = run_consult(read_case_text(json.dumps({**data, "patient": {"age": age, "weight": weight}})))
+    assert consult.stopped
+    assert (consult.chosen, consult.projection, consult.plan, consult.plateaus) == (None, None, None, None)
+    said = [c.text for c in consult.cautions if c.id == "too-young"]
+    assert said == [TOO_YOUNG[name]]
+    at_the_limit = {**data, "patient": {"age": f"{youngest:g} years", "weight": weight}}
+    assert "too-young" not in {c.id for c in run_consult(read_case_text(json.dumps(at_the_limit))).cautions}
