@@ -70,6 +70,7 @@ class Site:
     rate_caps_mg_per_kg_min: Mapping[tuple[str, str], float]
     shelf: str
     products: tuple[str, ...]
+    added_products: tuple[str, ...]
     alternate_days: bool
     population: str
     warn_chance: float
@@ -202,6 +203,7 @@ def no_site() -> Site:
         rate_caps_mg_per_kg_min={},
         shelf="",
         products=(),
+        added_products=(),
         alternate_days=False,
         population="",
         warn_chance=_default("chance.warn"),
@@ -436,9 +438,15 @@ def _settings(r: _Reader, name: str, protocol: str, sha256: str) -> Site:
     shelf = r.choice("products", "shelf", tuple(profile.shelves), "no shelf")
     on_shelf = profile.shelves[shelf].products if shelf else tuple(profile.products)
     products = r.several("products", "only", on_shelf, "the whole shelf")
-    groups = [profile.products[p].exclusive_group for p in products if profile.products[p].exclusive_group]
+    others = tuple(p for p in profile.products if not shelf or p not in on_shelf)
+    added = r.several("products", "add", others, "nothing more")
+    if added and not shelf:
+        r.say("products", "add", "products without a shelf were given", "a shelf first", "Name the shelf above it")
+    stocked = (*(products or (on_shelf if shelf else ())), *added)
+    groups = [profile.products[p].exclusive_group for p in stocked if profile.products[p].exclusive_group]
     if len(groups) != len(set(groups)):
-        r.say("products", "only", "two strengths of the same liquid", "one of them", "Take one of them out")
+        key = "add" if added else "only"
+        r.say("products", key, "two strengths of the same liquid", "one of them", "Take one of them out")
     warn = r.quantity("chance", "warn", "share", (0.001, 0.5), show(base.warn_chance * 100, "%"))
     stop = r.quantity("chance", "stop", "share", (0.001, 0.5), show(base.stop_chance * 100, "%"))
     warn, stop = warn or base.warn_chance, stop or base.stop_chance
@@ -485,6 +493,7 @@ def _settings(r: _Reader, name: str, protocol: str, sha256: str) -> Site:
         rate_caps_mg_per_kg_min=scaled,
         shelf=shelf,
         products=products,
+        added_products=added,
         alternate_days=r.switch("products", "alternate_days", False),
         population=r.choice("population", "name", tuple(profile.populations), "default"),
         warn_chance=warn,

@@ -83,8 +83,8 @@ class Dispensable:
 def shelf_in_use(case: Case, profile: Profile, site: Site) -> ShelfInUse:
     """The shelf of the case, else of the site file; none is preselected. Only what may be swallowed or infused here.
 
-    Products named in the case restrict it; those of the site file restrict the site's own shelf. While tube feeds
-    run, only forms that may go down a feeding tube or into a vein are left.
+    Products named in the case restrict it; those of the site file restrict the site's own shelf, or are added to it.
+    While tube feeds run, only forms that may go down a feeding tube or into a vein are left.
     """
     plan = case.file.plan
     chosen = plan.shelf or site.shelf
@@ -99,11 +99,16 @@ def shelf_in_use(case: Case, profile: Profile, site: Site) -> ShelfInUse:
             ),
         )
     shelf = profile.shelves[chosen]
-    wanted = plan.products or (site.products if chosen == site.shelf else ())
+    own = chosen == site.shelf
+    wanted = plan.products or (site.products if own else ())
     products = [p for p in shelf.products if not wanted or p in wanted]
     sentences = []
     if wanted:
         sentences.append("Restricted to " + ", ".join(profile.products[p].words for p in products) + ".")
+    if own and site.added_products and not plan.products:
+        products += site.added_products
+        added = ", ".join(profile.products[p].words for p in site.added_products)
+        sentences.append(f"Added by {site.file}: {added}.")
     if case.answer("tube_feed") == "yes":
         whole = [p for p in products if not _fits_tube(profile.forms[profile.products[p].form])]
         if whole:

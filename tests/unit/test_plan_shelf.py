@@ -172,6 +172,17 @@ def test_the_site_chooses_and_restricts() -> None:
     assert other.products == US
 
 
+def test_the_site_adds_to_its_own_shelf() -> None:
+    site = replace(no_site(), file="ours.toml", shelf="united-kingdom", products=("prompt-capsule-50",))
+    site = replace(site, added_products=("extended-capsule-30",))
+    found = shelf_in_use(plain(), P, site)
+    assert found.products == ("prompt-capsule-50", "extended-capsule-30")
+    assert found.sentences == ("Restricted to 50 mg capsule.", "Added by ours.toml: 30 mg extended capsule.")
+    assert shelf_in_use(plain(plan={"shelf": "united-states"}), P, site).products == US
+    only = shelf_in_use(plain(plan={"shelf": "united-kingdom", "products": ["chewable-50"]}), P, site)
+    assert only.products == ("chewable-50",)
+
+
 def test_capsules_do_not_go_down_a_tube() -> None:
     found = shelf_in_use(plain(plan={"shelf": "united-states"}, context={"tube_feed": "yes"}), P, no_site())
     assert found.products == ("suspension-125", "injection-50", "fosphenytoin-50")

@@ -138,6 +138,18 @@ def test_every_setting_of_a_full_file_arrives() -> None:
     assert (site.name, site.protocol) == ("Example drug-level service", "Phenytoin protocol 3, Feb 2026")
 
 
+def test_products_are_added_to_the_shelf_of_the_site() -> None:
+    text = HEAD + '[products]\nshelf = "united-kingdom"\nadd = ["extended-capsule-30", "extended-capsule-100"]\n'
+    site = parse_site(text, "site.toml")
+    assert site.added_products == ("extended-capsule-30", "extended-capsule-100")
+    assert [x.text for x in site.settings][-1] == (
+        "products add: extended-capsule-30, extended-capsule-100 (local setting, instead of nothing more)"
+    )
+    # one strength of a liquid in place of the other: the shelf is restricted first
+    swapped = HEAD + ('[products]\nshelf = "united-states"\nonly = ["extended-capsule-100"]\nadd = ["suspension-30"]\n')
+    assert parse_site(swapped, "site.toml").added_products == ("suspension-30",)
+
+
 def test_every_local_setting_is_named_with_what_it_replaces() -> None:
     texts = [s.text for s in parse_site(FULL, "site.toml").settings]
     assert texts == [
@@ -327,6 +339,27 @@ def test_a_setting_is_frozen() -> None:
             [
                 "site.toml, products.only: two strengths of the same liquid. Allowed: one of them. Take one of them "
                 "out."
+            ],
+        ),
+        (
+            HEAD + '[products]\nshelf = "united-states"\nadd = ["suspension-30"]\n',
+            [
+                "site.toml, products.add: two strengths of the same liquid. Allowed: one of them. Take one of them out."
+            ],
+        ),
+        (
+            HEAD + '[products]\nadd = ["suspension-30"]\n',
+            [
+                "site.toml, products.add: products without a shelf were given. Allowed: a shelf first. Name the shelf "
+                "above it."
+            ],
+        ),
+        (
+            HEAD + '[products]\nshelf = "united-kingdom"\nadd = ["chewable-50"]\n',
+            [
+                'site.toml, products.add: "chewable-50" was given. Allowed: extended-capsule-30, extended-capsule-100, '
+                "extended-capsule-200, extended-capsule-300, suspension-125, fosphenytoin-50. Choose from these, each "
+                "once."
             ],
         ),
         (
