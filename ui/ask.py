@@ -134,6 +134,9 @@ def question(asked: Asked, found: Question) -> None:
 
 
 def patient(asked: Asked) -> None:
+    names = drug_names()
+    if len(names) > 1:  # the questions below follow from it
+        choice(asked, "Drug", "drug", names, drug_words())
     field(asked, "Why was the level drawn, and what is asked?", "question", most=200)
     for found in questions(asked):
         if found.group == "first":
@@ -171,7 +174,8 @@ def _group(asked: Asked, place: int, group: str, *, expanded: bool) -> None:
 def patient_sentence(asked: Asked) -> str:
     v = asked.values
     p = asked.entry.file.patient
-    parts = [x for x in (p.age, p.sex if p.sex != "unknown" else "", p.weight) if x]
+    drug = asked.profile.name if asked.profile is not None else ""
+    parts = [x for x in (drug, p.age, p.sex if p.sex != "unknown" else "", p.weight) if x]
     if asked.entry.file.albumin:
         parts.append(f"albumin {asked.entry.file.albumin.value}")
     every = questions(asked)
@@ -234,9 +238,6 @@ def drug_words() -> dict[str, str]:
 
 
 def doses(asked: Asked, echoes: Mapping[int, str]) -> None:
-    names = drug_names()
-    if len(names) > 1:
-        choice(asked, "Drug", "drug", names, drug_words())
     forms, words = form_words(asked.profile)
     look.say(
         "Each dose as said aloud: 300 mg daily · 150 mg every 12 h · 300 mg at 21:00 · "

@@ -4,6 +4,8 @@ from __future__ import annotations
 
 import os
 import time
+from collections.abc import Mapping
+from functools import cache
 from importlib.util import find_spec
 
 import streamlit as st
@@ -11,7 +13,7 @@ from pkcalc_form import entry as fields
 from pkcalc_form import look, tell
 
 from pkcalc.case import CaseFile, parse_case_text
-from pkcalc.demos import demonstrations
+from pkcalc.demos import Demonstration, demonstrations
 from pkcalc.errors import CaseError
 from pkcalc.site import Site, load_site, no_site
 
@@ -112,10 +114,10 @@ def open_file(file: CaseFile, *keep: str) -> None:
 
 def _open_demonstration() -> None:
     name, commit = st.session_state.get("demo_name"), bool(st.session_state.get("commit_first"))
-    for demo in demonstrations():
-        if demo.name == name:
-            open_file(parse_case_text(demo.text))
-            st.session_state["committing"] = commit
+    demo = _demos().get(str(name))
+    if demo is not None:
+        open_file(parse_case_text(demo.text))
+        st.session_state["committing"] = commit
 
 
 def _upload_key() -> str:
@@ -140,6 +142,12 @@ def _sign_out() -> None:
     st.logout()
 
 
+@cache
+def _demos() -> Mapping[str, Demonstration]:
+    """The invented cases; nothing of a patient, so every session may share them."""
+    return {d.name: d for d in demonstrations()}
+
+
 def opening() -> None:
     """Title, what comes first, and the ways to begin."""
     st.html("<h1>pkcalc: from levels to the next dose, where elimination saturates</h1>")
@@ -154,7 +162,7 @@ def opening() -> None:
         st.container(key="tools"),
         st.expander("Open a demonstration or a case file, or start afresh", key="tools-fold"),
     ):
-        names = {d.name: d for d in demonstrations()}
+        names = _demos()
         left, right = st.columns([3, 1], vertical_alignment="bottom")
         left.selectbox(
             "Demonstration (invented, not a patient)",

@@ -87,6 +87,27 @@ def browser() -> Iterator[Browser]:
         found.close()
 
 
+#: A consult on one level as a pharmacist types it: units with their numbers, dates as read from the chart.
+ONE_LEVEL = (
+    ("choose", "Drug", "phenytoin"),
+    ("answer", "Have there been seizures since the last change of dose?", "no"),
+    ("answer", "Are there signs of toxicity", "no"),
+    ("type", "Age", "45 years"),
+    ("type", "Weight", "70 kg"),
+    ("type", "Albumin", "42 g/L"),
+    ("type", "Time of this consult", "2026-03-30 10:00"),
+    ("type", "Dose, with its unit", "300 mg daily"),
+    ("choose", "Product form and salt", "phenytoin sodium"),
+    ("type", "First dose", "2026-02-02 21:00"),
+    ("choose", "Who gives the doses?", "nurse"),
+    ("type", "Level as reported", "9 mg/L"),
+    ("choose", "What was measured?", "total"),
+    ("type", "Drawn", "2026-03-30 08:00"),
+    ("type", "Your own regimen 1", "330 mg daily"),
+    ("choose", "Product form and salt of regimen 1", "phenytoin sodium"),
+)
+
+
 class Visit:
     """One person at one browser: what they type, choose and see."""
 
@@ -100,6 +121,7 @@ class Visit:
         self.context.set_default_timeout(25_000)
         self.context.route("**/*", self._only_here)
         self.address = address
+        self.before = -1  # the run of the page that a press was made on
         self.page = self.context.new_page()
         self.page.goto(address)
         self.ready()
@@ -116,13 +138,20 @@ class Visit:
         self.page.get_by_label("Why was the level drawn").wait_for(timeout=40_000)
 
     def settle(self) -> None:
-        """Wait until the server has answered and the page stands still."""
-        self.page.wait_for_timeout(120)
+        """Wait until the server has answered what was done last, and the page stands still."""
         self.page.wait_for_function(
-            """() => { const a = document.querySelector('[data-testid="stApp"]');
-                return a && a.getAttribute('data-test-script-state') === 'notRunning'
-                    && !document.body.classList.contains('pk-typing'); }"""
+            """before => { const a = document.querySelector('[data-testid="stApp"]');
+                const mark = document.querySelector('.pk-read');
+                return a && mark && a.getAttribute('data-test-script-state') === 'notRunning'
+                    && Number(mark.getAttribute('data-run')) > before
+                    && !document.body.classList.contains('pk-typing'); }""",
+            arg=self.before,
         )
+        self.before = -1
+
+    def acts(self) -> None:
+        """What comes next makes the server run anew."""
+        self.before = int(self.page.locator(".pk-read").get_attribute("data-run") or -1)
 
     def type(self, label: str, value: str, place: int = 0) -> None:
         field = self.page.get_by_label(label, exact=True).nth(place)
@@ -146,15 +175,20 @@ class Visit:
         raise AssertionError(f"{option} cannot be chosen for {label}")
 
     def press(self, name: str, place: int = 0) -> None:
+        self.settle()
+        self.acts()
         self.page.get_by_role("button", name=name).nth(place).click()
+        self.settle()
 
-    def open_case(self, text: str) -> None:
-        """Open a case file from the page."""
-        self.page.get_by_text("Open a demonstration or a case file").click()
+    def open_case(self, text: str, *, stopped: bool = False) -> None:
+        """Open a case file from the page; stopped: one that gives no result yet."""
+        self.unfold("Open a demonstration or a case file")
+        self.acts()
         file = {"name": "case.json", "mimeType": "application/json", "buffer": text.encode()}
         self.page.locator("input[type=file]").set_input_files(file)
-        self.page.get_by_text(re.compile(r"Case [0-9a-f]{12}")).first.wait_for()
         self.settle()
+        if not stopped:
+            self.page.get_by_text(re.compile(r"Case [0-9a-f]{12}")).first.wait_for()
 
     def unfold(self, title: str) -> None:
         """Open a folded question."""
@@ -168,7 +202,7 @@ class Visit:
         return " ".join(self.page.locator("[data-testid=stMain]").inner_text().split())
 
     def open_demonstration(self, title: str) -> None:
-        self.page.get_by_text("Open a demonstration or a case file").click()
+        self.unfold("Open a demonstration or a case file")
         self.choose("Demonstration", title)
         self.press("Open it")
         self.page.get_by_text("DEMONSTRATION - invented").first.wait_for()
@@ -179,7 +213,6 @@ class Visit:
         self.choose("Drug", "phenytoin")
         self.press("Add a dose line")
         self.press("Add a level")
-        self.page.get_by_text("Level 2", exact=True).wait_for()
         for place, (dose, level) in enumerate((("300 mg daily", first), ("350 mg daily", second))):
             self.type("Dose, with its unit and how often", dose, place)
             self.choose("Product form and salt", form, place)
@@ -188,6 +221,71 @@ class Visit:
             self.choose("What was measured?", "total", place)
             self.choose("Dose line in force", f"dose line {place + 1}", place)
         self.settle()
+
+    def unfold_all(self) -> None:
+        """Open every folded part of the page, those within others too."""
+        for _ in range(5):
+            shut = self.page.evaluate(
+                """() => { const found = document.querySelectorAll('[data-testid="stMain"] details:not([open]) > summary');
+                    found.forEach(x => x.click()); return found.length; }"""
+            )
+            self.settle()
+            if not shut:
+                return
+
+    # --- the keyboard alone ---
+
+    def tab_to(self, name: str, most: int = 200) -> None:
+        """Press Tab until the field or button of this name has the keyboard."""
+        for _ in range(most):
+            self.page.keyboard.press("Tab")
+            here = self.page.evaluate(
+                """() => { const e = document.activeElement; if (!e) return '';
+                    const label = e.labels && e.labels.length ? e.labels[0].innerText : '';
+                    const group = e.closest('[role="radiogroup"]');
+                    return [e.getAttribute('aria-label') || '', label, e.tagName === 'BUTTON' ? e.innerText : '',
+                        group ? group.getAttribute('aria-label') || '' : ''].join('|'); }"""
+            )
+            if name in here:
+                return
+        raise AssertionError(f"{name} cannot be reached with the keyboard")
+
+    def key_in(self, name: str, value: str) -> None:
+        self.tab_to(name)
+        self.page.keyboard.type(value)
+
+    def key_choose(self, name: str, letters: str) -> None:
+        """Type the first letters of an option and take it with Enter."""
+        self.tab_to(name)
+        self.settle()
+        self.page.keyboard.type(letters)
+        option = self.page.get_by_role("option")
+        try:
+            option.first.wait_for(timeout=3_000)
+        except PlaywrightTimeout:  # an answer of the server closed the list
+            self.page.keyboard.type(letters)
+            option.first.wait_for()
+        self.page.keyboard.press("Enter")
+        self.settle()
+
+    def key_answer(self, question: str, answer: str) -> None:
+        """A question of three answers: the first by the space bar, the others by the arrow."""
+        self.tab_to(question)
+        self.page.keyboard.press("Space")
+        for _ in range(("yes", "no", "unknown").index(answer)):
+            self.page.keyboard.press("ArrowRight")
+        self.settle()
+
+    def one_level_consult(self) -> int:
+        """A consult on one level, from an empty page to the danger of a regimen of one's own; by keyboard alone.
+        Returns how many entries it took: each text, choice or answer is one."""
+        done = 0
+        for what, name, value in ONE_LEVEL:
+            {"type": self.key_in, "choose": self.key_choose, "answer": self.key_answer}[what](name, value)
+            done += 1
+        self.page.keyboard.press("Tab")
+        self.settle()
+        return done
 
     def shoot(self, name: str, height: int = 4500) -> Path:
         """A picture of the whole page: the page scrolls inside its own box, so the window is made tall."""
