@@ -299,6 +299,11 @@ class _Model:
         sd = np.sqrt(shared[:, diagonal, diagonal])
         bound = sd[:, :, None] * sd[:, None, :]
         cov = np.clip(shared, -bound, bound)
+        if m > 2:
+            # with three levels or more that is not enough: whatever would vary less than nothing is taken out
+            sizes, ways = np.linalg.eigh(cov)
+            odd = sizes[:, 0] < 0.0
+            cov[odd] = (ways[odd] * np.maximum(sizes[odd], 0.0)[:, None, :]) @ ways[odd].transpose(0, 2, 1)
         cov[:, diagonal, diagonal] += self.own
         prior = self.volume.log_density(a, k)
         found = self.parts(self.residual(log_amount, self.volume.log_volume(a, k)), cov, range(m))
