@@ -2,7 +2,8 @@
 cohort.
 
 Levels of one patient are not independent, so every interval is of a ratio of sums over patients (the variance
-between patients counts, after Liang & Zeger 1986). Medians are read from counts in cells 1 % wide."""
+between patients counts, after Liang & Zeger 1986); that of a share is a score interval (Wilson 1927) of so many
+levels as would have this variance if they were independent. Medians are read from counts in cells 1 % wide."""
 
 from __future__ import annotations
 
@@ -40,8 +41,13 @@ RANK_CELLS = 40
 EARLIER_SHOWN = 5
 
 _CELLS = np.exp(np.arange(math.log(1e-3), math.log(1e3), 0.01))
-#: Columns of a tally: rows, error, absolute error, its square, log ratio, within 20 and 30 %, inside 50 and 90 %.
-_ROWS, _ERROR, _ABSOLUTE, _SQUARE, _LOG, _IN20, _IN30, _IN50, _IN90 = range(9)
+#: Columns of a tally: rows, error, absolute error, its square, log ratio, within 20 and 30 %, inside 50 and 90 %, came
+#: higher than forecast.
+ROWS, ERROR, ABSOLUTE, SQUARE, LOG, IN20, IN30, IN50, IN90, HIGHER = range(10)
+_COLUMNS = 10
+
+#: Columns of a comparison: rows, absolute error of the second method less that of the first, second nearer.
+DIFFERENCE, NEARER = 1, 2
 
 
 @dataclass(frozen=True)
@@ -68,27 +74,46 @@ class Sums:
 
     @property
     def rows(self) -> int:
-        return round(float(self.total[_ROWS]))
+        return round(float(self.total[ROWS]))
 
     def mean(self, column: int) -> Share:
         """Mean of a column over rows, with an interval that counts patients, not rows."""
-        n, g = float(self.total[_ROWS]), self.patients
+        n, g = float(self.total[ROWS]), self.patients
         value = float(self.total[column]) / n
         if g < FEWEST_PATIENTS:
             return Share(value, None, None)
+        half = self._student() * math.sqrt(self._variance(column, value))
+        return Share(value, value - half, value + half)
+
+    def share(self, column: int) -> Share:
+        """As `mean`, of a column of noughts and ones: an interval within 0 and 1, also where all agree."""
+        value = float(self.total[column]) / float(self.total[ROWS])
+        if self.patients < FEWEST_PATIENTS:
+            return Share(value, None, None)
+        variance = self._variance(column, value)
+        # all alike: nothing is seen of how a patient's levels go together, so patients are counted
+        n = min(value * (1 - value) / variance, self.total[ROWS]) if variance > 0 else float(self.patients)
+        z2 = self._student() ** 2 / n
+        centre = (value + z2 / 2) / (1 + z2)
+        half = math.sqrt(z2 * value * (1 - value) + z2**2 / 4) / (1 + z2)
+        return Share(value, max(centre - half, 0.0), min(centre + half, 1.0))
+
+    def _variance(self, column: int, value: float) -> float:
+        q, g = self.products, self.patients
+        between = float(q[column, column] - 2 * value * q[column, ROWS] + value**2 * q[ROWS, ROWS])
+        return max(between, 0.0) * g / (g - 1) / float(self.total[ROWS]) ** 2
+
+    def _student(self) -> float:
         from scipy.special import stdtrit
 
-        q = self.products
-        between = float(q[column, column] - 2 * value * q[column, _ROWS] + value**2 * q[_ROWS, _ROWS])
-        half = float(stdtrit(g - 1, 0.975)) * math.sqrt(max(between, 0.0) * g / (g - 1)) / n
-        return Share(value, value - half, value + half)
+        return float(stdtrit(self.patients - 1, 0.975))
 
 
 class Tally:
     """The accuracy of one method in one subgroup."""
 
     def __init__(self) -> None:
-        self.sums = Sums(9)
+        self.sums = Sums(_COLUMNS)
         self.cells = np.zeros(len(_CELLS) + 1, dtype=np.int64)
         self.ranks = np.zeros(RANK_CELLS, dtype=np.int64)
 
@@ -114,15 +139,16 @@ class Tally:
         return {
             "levels": s.rows,
             "patients": s.patients,
-            "mean_error_mg_per_L": _share(s.mean(_ERROR)),
-            "mean_absolute_error_mg_per_L": _share(s.mean(_ABSOLUTE)),
+            "mean_error_mg_per_L": _share(s.mean(ERROR)),
+            "mean_absolute_error_mg_per_L": _share(s.mean(ABSOLUTE)),
             "median_absolute_error_mg_per_L": self.median_absolute_error(),
-            "root_mean_square_error_mg_per_L": math.sqrt(s.mean(_SQUARE).value),
-            "mean_log_ratio": _share(s.mean(_LOG)),
-            "within_20_percent": _share(s.mean(_IN20)),
-            "within_30_percent": _share(s.mean(_IN30)),
-            "inside_50_percent_interval": _share(s.mean(_IN50)),
-            "inside_90_percent_interval": _share(s.mean(_IN90)),
+            "root_mean_square_error_mg_per_L": math.sqrt(s.mean(SQUARE).value),
+            "mean_log_ratio": _share(s.mean(LOG)),
+            "within_20_percent": _share(s.share(IN20)),
+            "within_30_percent": _share(s.share(IN30)),
+            "inside_50_percent_interval": _share(s.share(IN50)),
+            "inside_90_percent_interval": _share(s.share(IN90)),
+            "came_higher_than_forecast": _share(s.share(HIGHER)),
         }
 
 
@@ -155,6 +181,7 @@ def _columns(r: Row) -> list[float]:
         float(abs(error) <= 0.3 * seen),
         inside(r.low_50_mg_per_L, r.high_50_mg_per_L),
         inside(r.low_90_mg_per_L, r.high_90_mg_per_L),
+        float(seen > said) + 0.5 * float(seen == said),
     ]
 
 

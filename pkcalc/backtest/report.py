@@ -7,13 +7,32 @@ from __future__ import annotations
 import base64
 import csv
 import json
+import re
 from collections.abc import Iterable, Sequence
 from importlib import resources
 from itertools import islice
 from pathlib import Path
 from typing import Any
 
-from pkcalc.backtest.accuracy import FEWEST_PATIENTS, Bands, Findings, Share, Sums, Tally, gather
+from pkcalc.backtest.accuracy import (
+    ABSOLUTE,
+    DIFFERENCE,
+    ERROR,
+    FEWEST_PATIENTS,
+    HIGHER,
+    IN20,
+    IN30,
+    IN50,
+    IN90,
+    NEARER,
+    SQUARE,
+    Bands,
+    Findings,
+    Share,
+    Sums,
+    Tally,
+    gather,
+)
 from pkcalc.backtest.folder import Folder
 from pkcalc.backtest.hint import Hint, refit
 from pkcalc.backtest.outlook import LEFT_OUT, METHODS, NO_FORECAST, PRIOR, SET_ASIDE, TWO, WHOLE, Row
@@ -29,9 +48,12 @@ PRIVACY = (
 )
 READING = (
     "Levels are on the working basis (total at normal binding, mg/L). Error is forecast minus what came; within 20 % "
-    "and 30 % are of what came. Intervals in brackets are 95 % intervals that count patients, not levels."
+    "and 30 % are of what came. Intervals in brackets are 95 % intervals that count patients, not levels; figures of "
+    f"fewer than {FEWEST_PATIENTS} patients stand without one."
 )
 CAVEATS = (
+    "A forecast is a median: half of the levels should come higher. As levels spread further upwards than downwards, "
+    "the mean error of sound forecasts lies a little below 0.",
     "The dose that followed a level was chosen because of that level, so past patients are not a random sample of "
     "future ones.",
     "Doses up to each draw are taken from the record, as if they had been known when the forecast was made.",
@@ -69,7 +91,7 @@ def verdict(found: Findings, suggested: Sequence[Hint], methods: Sequence[str] =
             f"{FEWEST_PATIENTS} nothing can be said about this department."
         ]
     said = []
-    inside = whole.sums.mean(8)
+    inside = whole.sums.share(IN90)
     assert inside.low is not None
     assert inside.high is not None
     words = f"{_percent(inside)} of the levels fell inside the 90 % interval of the whole record"
@@ -79,13 +101,16 @@ def verdict(found: Findings, suggested: Sequence[Hint], methods: Sequence[str] =
         said.append(f"{words}: the intervals are wider than they need to be here, which is the safe side.")
     else:
         said.append(f"{words}, which agrees with 90 %.")
-    error = whole.sums.mean(1)
-    words = f"The mean error of the whole record is {_mg(error)}"
-    if error.low is not None and error.high is not None and not error.low <= 0 <= error.high:
-        side = "low, which is the unsafe side" if error.value < 0 else "high"
-        said.append(f"{words}: its forecasts err {side}.")
+    higher = whole.sums.share(HIGHER)
+    assert higher.low is not None
+    assert higher.high is not None
+    words = f"{_percent(higher)} of the levels came higher than the whole record forecast"
+    if higher.low > 0.5:
+        said.append(f"{words}: its forecasts err low, which is the unsafe side.")
+    elif higher.high < 0.5:
+        said.append(f"{words}: its forecasts err high.")
     else:
-        said.append(f"{words}: no error to one side is seen.")
+        said.append(f"{words}, which agrees with half: no error to one side is seen.")
     for other, name in ((PRIOR, "the population alone"), (TWO, "the two-level formula")):
         sums = found.against.get((other, WHOLE))
         if sums is not None and sums.patients >= FEWEST_PATIENTS:
@@ -100,7 +125,7 @@ def verdict(found: Findings, suggested: Sequence[Hint], methods: Sequence[str] =
 
 
 def _compared(sums: Sums, name: str) -> str:
-    d = sums.mean(1)
+    d = sums.mean(DIFFERENCE)
     better = "smaller" if d.value < 0 else "larger"
     sure = d.low is not None and d.high is not None and not d.low <= 0 <= d.high
     tail = "" if sure else "; the interval holds no difference, too"
@@ -150,8 +175,8 @@ def report_data(store: Store, folder: Folder, found: Findings, suggested: Sequen
                 "second": b,
                 "levels": s.rows,
                 "patients": s.patients,
-                "absolute_error_second_minus_first_mg_per_L": _share(s.mean(1)),
-                "share_second_nearer": _share(s.mean(2)),
+                "absolute_error_second_minus_first_mg_per_L": _share(s.mean(DIFFERENCE)),
+                "share_second_nearer": _share(s.share(NEARER)),
             }
             for (a, b), s in sorted(found.against.items(), key=lambda x: [METHODS.index(m) for m in x[0]])
         ],
@@ -209,7 +234,7 @@ def _range(s: Share, form: str, factor: float = 1.0) -> str:
 def _percent(s: Share) -> str:
     if s.low is None or s.high is None:
         return f"{100 * s.value:.0f} %"
-    return f"{100 * s.value:.0f} % ({100 * max(s.low, 0.0):.0f} to {100 * min(s.high, 1.0):.0f} %)"
+    return f"{100 * s.value:.0f} % ({100 * s.low:.0f} to {100 * s.high:.0f} %)"
 
 
 def _mg(s: Share) -> str:
@@ -228,6 +253,7 @@ HEADS = (
     "Within 30 %",
     "Inside 50 % interval",
     "Inside 90 % interval",
+    "Came higher",
 )
 
 
@@ -236,11 +262,11 @@ def _cells(tally: Tally) -> list[str]:
     return [
         f"{s.rows:,}",
         f"{s.patients:,}",
-        _range(s.mean(1), ".2f"),
-        _range(s.mean(2), ".2f"),
+        _range(s.mean(ERROR), ".2f"),
+        _range(s.mean(ABSOLUTE), ".2f"),
         f"{tally.median_absolute_error():.2f}",
-        f"{s.mean(3).value ** 0.5:.2f}",
-        *(_percent(s.mean(i)) for i in (5, 6, 7, 8)),
+        f"{s.mean(SQUARE).value ** 0.5:.2f}",
+        *(_percent(s.share(i)) for i in (IN20, IN30, IN50, IN90, HIGHER)),
     ]
 
 
@@ -268,11 +294,12 @@ def render_html(store: Store, folder: Folder, found: Findings, suggested: Sequen
                 "First",
                 "Second",
                 "Levels",
+                "Patients",
                 "Absolute error, second minus first, mg/L",
                 "Second nearer",
             ),
             "rows": [
-                [a, b, f"{s.rows:,}", _range(s.mean(1), ".2f"), _percent(s.mean(2))]
+                [a, b, f"{s.rows:,}", f"{s.patients:,}", _range(s.mean(DIFFERENCE), ".2f"), _percent(s.share(NEARER))]
                 for (a, b), s in sorted(found.against.items(), key=lambda x: [METHODS.index(m) for m in x[0]])
             ],
         }
@@ -334,6 +361,8 @@ def render_html(store: Store, folder: Folder, found: Findings, suggested: Sequen
             "rows": listed,
         }
     )
+    for s in sections:
+        s["rows"] = [[_laid(cell) for cell in row] for row in s["rows"]]
     text = resources.files("pkcalc.note.templates").joinpath("backtest.html.j2").read_text(encoding="utf-8")
     environment = Environment(autoescape=True, undefined=StrictUndefined)
     return environment.from_string(text).render(
@@ -352,6 +381,11 @@ def render_html(store: Store, folder: Folder, found: Findings, suggested: Sequen
         sections=sections,
         versions=f"pkcalc {plan.version}, results of {plan.results_date}; input {plan.fingerprint[:12]}",
     )
+
+
+def _laid(cell: str) -> str:
+    """A cell whose interval stands below its value, and whose numbers stay with their unit."""
+    return re.sub(r"(?<=\d) (?=%)", "\N{NO-BREAK SPACE}", re.sub(r"(?<=[\d%]) \((?=-?\d)", "\n(", cell))
 
 
 def _in_order(by: str, table: dict[str, Any], found: Findings) -> list[str]:
@@ -380,12 +414,16 @@ def summary(store: Store, folder: Folder, found: Findings, suggested: Sequence[H
     """A few lines for the terminal."""
     lines = ["SYNTHETIC PATIENTS, not a department's own."] if folder.synthetic else []
     lines += _counts(store, folder, found)
-    lines += ["", f"{'':<18}{'levels':>8}{'mean error':>12}{'median abs.':>12}{'within 30 %':>12}{'in 90 %':>9}"]
+    lines += [
+        "",
+        f"{'':<18}{'levels':>8}{'mean error':>12}{'median abs.':>12}{'within 30 %':>12}{'in 90 %':>9}{'higher':>10}",
+    ]
     for m, t in _ordered(found.by_method):
         s = t.sums
         lines.append(
-            f"{m:<18}{s.rows:>8,}{s.mean(1).value:>7.2f} mg/L{t.median_absolute_error():>7.2f} mg/L"
-            f"{100 * s.mean(6).value:>10.0f} %{100 * s.mean(8).value:>7.0f} %"
+            f"{m:<18}{s.rows:>8,}{s.mean(ERROR).value:>7.2f} mg/L{t.median_absolute_error():>7.2f} mg/L"
+            f"{100 * s.share(IN30).value:>10.0f} %{100 * s.share(IN90).value:>7.0f} %"
+            f"{100 * s.share(HIGHER).value:>8.0f} %"
         )
     return "\n".join([*lines, "", *verdict(found, suggested, store.plan.methods)]) + "\n"
 

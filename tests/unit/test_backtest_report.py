@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import json
 import math
+from dataclasses import replace
 from pathlib import Path
 
 import numpy as np
@@ -11,11 +12,22 @@ import pytest
 from click.testing import CliRunner
 from scipy import stats
 
-from pkcalc.backtest.accuracy import FEWEST_PATIENTS, Bands, Findings, gather
+from pkcalc.backtest.accuracy import ERROR, FEWEST_PATIENTS, HIGHER, IN90, Bands, Findings, gather
 from pkcalc.backtest.hint import refit
-from pkcalc.backtest.outlook import FORECAST, LEFT_OUT, PATIENT, PRIOR, SET_ASIDE, TWO, WHOLE, Row
+from pkcalc.backtest.outlook import (
+    CHOICES,
+    FORECAST,
+    LEFT_OUT,
+    METHODS,
+    PATIENT,
+    PRIOR,
+    SET_ASIDE,
+    TWO,
+    WHOLE,
+    Row,
+)
 from pkcalc.backtest.report import verdict
-from pkcalc.cli import cli
+from pkcalc.cli import FORECASTS, cli
 
 BANDS = Bands(10, 20, 30)
 
@@ -124,6 +136,34 @@ def test_the_largest_misses_are_listed() -> None:
     assert got == [math.log(30), *far[:19]]
 
 
+def test_the_interval_of_a_share_is_wilson_s_and_stays_within_0_and_1() -> None:
+    """One level each; Student's quantile in place of the normal one."""
+    rows = [r for r in cohort(60, seed=2) if r.method == WHOLE]
+    sums = gather(rows, BANDS, count=60).by_method[WHOLE].sums
+    p, n, t = sums.mean(IN90).value, 60, stats.t.ppf(0.975, 59)
+    # the variance between 60 patients is that of 59 independent levels
+    n -= 1
+    edges = np.roots([1 + t**2 / n, -(2 * p + t**2 / n), p**2])
+    got = sums.share(IN90)
+    assert (got.low, got.high) == (pytest.approx(min(edges), rel=1e-9), pytest.approx(max(edges), rel=1e-9))
+    every = gather([row(n, 1, WHOLE, 10.0, 11.0) for n in range(30)], BANDS, count=30).by_method[WHOLE].sums
+    inside = every.share(IN90)
+    assert (inside.value, inside.high) == (1.0, 1.0)
+    assert inside.low == pytest.approx(1 / (1 + stats.t.ppf(0.975, 29) ** 2 / 30), rel=1e-9)
+
+
+def test_sound_forecasts_of_a_skewed_level_are_not_said_to_err_low() -> None:
+    """Medians of a log normal level: the mean error is below 0, and half of the levels come higher."""
+    chance = np.random.default_rng(21)
+    rows = [row(n, 2, WHOLE, 15.0, float(15 * np.exp(chance.normal(0, 0.6)))) for n in range(400)]
+    sums = gather(rows, BANDS, count=400).by_method[WHOLE].sums
+    error = sums.mean(ERROR)
+    assert error.high is not None
+    assert error.high < 0
+    assert sums.share(HIGHER).value == pytest.approx(0.5, abs=0.06)
+    assert said(rows, 400)[1].endswith(", which agrees with half: no error to one side is seen.")
+
+
 def said(rows: list[Row], count: int) -> list[str]:
     return verdict(gather(rows, BANDS, count=count), [])
 
@@ -145,9 +185,12 @@ def test_the_verdict_is_in_words() -> None:
     wide = said(cohort(300, seed=10, spread=0.05), 300)
     assert wide[0].endswith(": the intervals are wider than they need to be here, which is the safe side.")
     low = said(cohort(300, seed=11, bias=0.8), 300)
-    assert low[1].endswith(" mg/L: its forecasts err low, which is the unsafe side.")
+    assert low[1].endswith(
+        " of the levels came higher than the whole record forecast: its forecasts err low, which is the unsafe side."
+    )
     high = said(cohort(300, seed=11, bias=1.3), 300)
-    assert high[1].endswith(" mg/L: its forecasts err high.")
+    assert high[1].endswith(" of the levels came higher than the whole record forecast: its forecasts err high.")
+    assert fair[1].endswith(", which agrees with half: no error to one side is seen.")
 
 
 def placed(count: int, shift: tuple[float, float], spread: tuple[float, float], seed: int) -> list[Row]:
@@ -267,3 +310,36 @@ def test_one_way_to_spread_the_work(tmp_path: Path) -> None:
     got = CliRunner().invoke(cli, ["backtest", str(tmp_path), "--workers", "2", "--cluster", "tcp://127.0.0.1:1"])
     assert got.exit_code == 2
     assert "Error: Give --workers or --cluster, not both" in got.output
+
+
+def test_only_the_methods_asked_for_are_run(tmp_path: Path) -> None:
+    folder = str(tmp_path / "new")
+    got = CliRunner().invoke(cli, ["backtest", folder, "--synthetic", "3", "--method", "population"])
+    assert got.exit_code == 0, got.output
+    report = json.loads((tmp_path / "new" / "pkcalc-backtest" / "report.json").read_text())
+    assert report["methods"] == [PRIOR]
+    assert list(report["by_method"]) == [PRIOR]
+    assert report["population_hint"] == []
+    assert report["verdict"] == [
+        "The whole record, by which the tool forecasts, was not among the methods asked for: how far its forecasts can "
+        "be trusted here is left open."
+    ]
+    other = CliRunner().invoke(cli, ["backtest", folder])
+    assert str(other.exception) == (
+        "Folder of results pkcalc-backtest: it holds another run (methods differ). Allowed: a new folder, or the one of "
+        "the same run. Give another folder with --out, or delete that one."
+    )
+
+
+def test_the_names_of_the_methods_are_those_of_the_command() -> None:
+    assert tuple(CHOICES) == FORECASTS
+    assert tuple(CHOICES.values()) == METHODS
+
+
+def test_a_spread_that_the_patients_say_nothing_of_has_no_interval() -> None:
+    """All patients alike within their errors: the most likely spread is none, and no interval is told for it."""
+    rows = [replace(r, log_vmax=0.0, log_km=0.0) for r in placed(40, (0, 0), (0.25, 0.45), seed=8)]
+    hint = refit("default", rows)
+    assert hint is not None
+    assert (hint.km_log_sd.low, hint.km_log_sd.high) == (None, None)
+    assert hint.off == ()

@@ -76,8 +76,8 @@ def test_a_shifted_population_is_noticed_and_an_unshifted_one_is_not(
 
 @pytest.mark.slow
 def test_intervals_hold_methods_rank_and_nothing_is_suggested(tmp_path: Path) -> None:
-    """130 patients, 30 to 60 days on each of three doses, so that pairs of steady levels exist."""
-    seen = found_in(tmp_path, count=130, seed=2027, levels=3, days=(30, 60))
+    """105 patients, 30 to 60 days on each of three doses, so that pairs of steady levels exist."""
+    seen = found_in(tmp_path, count=105, seed=2027, levels=3, days=(30, 60))
     whole = seen.by_method[WHOLE].sums
     assert whole.rows >= 200
     for method in (PRIOR, ONE, WHOLE):
