@@ -42,7 +42,7 @@ def test_a_pair_gives_vmax_and_km_with_status_0() -> None:
     done = run(*PAIR, "--weight", "70 kg", "--aim", "15 mg/L", "--propose", "330 mg/day")
     assert done.returncode == 0, done.stderr
     assert done.stdout.startswith("Drug: phenytoin. Levels read as total.")
-    assert "Vmax 362.2 mg/day of active drug, Km 2.5 mg/L (closed form)." in done.stdout
+    assert "Vmax 362.3 mg/day of active drug, Km 2.5 mg/L (closed form)." in done.stdout
     assert "Css = Km x R / (Vmax - R)" in done.stdout
     assert done.stderr == ""
 
