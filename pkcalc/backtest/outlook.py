@@ -228,7 +228,7 @@ def _by_population(known: _Known, days: Sequence[float]) -> Floats:
     record = posterior.written_out(_until(known.record, max(days)))
     full = posterior.with_population_path(taken_on_average(record, known.spread), known.prior.first_order_per_day)
     plan = plan_intake(full, days, known.spread)
-    course = flow.amounts(
+    course, faded = flow.fading(
         full, plan.sample_days, vmax, kappa, volume_L=volume, typical_per_day=_typical_per_day(estimate)
     )
     levels: Floats = course[:, plan.level_at] / volume[:, None]
@@ -238,7 +238,7 @@ def _by_population(known: _Known, days: Sequence[float]) -> Floats:
         odds = plan.variance[:-1]
         taken = odds / (1 + odds) <= chance.random((len(odds), len(vmax))).T
         change = np.column_stack([taken * (1 + odds) - 1, habit])
-        gain = intake_gain(plan, full, course, vmax, kappa, volume_L=volume)
+        gain = intake_gain(plan, course, faded, vmax, kappa)
         levels = levels * np.exp(np.einsum("ntd,nd->nt", gain, change))
     return levels
 

@@ -362,6 +362,7 @@ def render_html(store: Store, folder: Folder, found: Findings, suggested: Sequen
         }
     )
     for s in sections:
+        s["heads"] = [_laid(head) for head in s["heads"]]
         s["rows"] = [[_laid(cell) for cell in row] for row in s["rows"]]
     text = resources.files("pkcalc.note.templates").joinpath("backtest.html.j2").read_text(encoding="utf-8")
     environment = Environment(autoescape=True, undefined=StrictUndefined)
@@ -385,7 +386,10 @@ def render_html(store: Store, folder: Folder, found: Findings, suggested: Sequen
 
 def _laid(cell: str) -> str:
     """A cell whose interval stands below its value, and whose numbers stay with their unit."""
-    return re.sub(r"(?<=\d) (?=%)", "\N{NO-BREAK SPACE}", re.sub(r"(?<=[\d%]) \((?=-?\d)", "\n(", cell))
+    together = re.sub(r"(?<=\d) (?=%)", "\N{NO-BREAK SPACE}", cell)
+    return re.sub(
+        r" (\(-?[\d,.]+) to (-?[\d,.]+.?%?\))(?=$| )", "\n\\1\N{NO-BREAK SPACE}to\N{NO-BREAK SPACE}\\2", together
+    )
 
 
 def _in_order(by: str, table: dict[str, Any], found: Findings) -> list[str]:

@@ -6,7 +6,6 @@ import os
 import signal
 import subprocess
 import sys
-import time
 from dataclasses import asdict, replace
 from pathlib import Path
 
@@ -324,6 +323,9 @@ def test_a_cluster_with_a_worker_killed_gives_the_same_bits(small: tuple[Folder,
         outcome = run(
             found, tmp_path / "r", plan=plan(found, 1), site=SITE, cluster=cluster.scheduler_address, told=kill
         )
+        # it is dead and gone: another process has taken its place
+        client.wait_for_workers(2, timeout=60)
+        assert pids[0] not in client.run(os.getpid).values()
     assert killed
     assert outcome.complete
     assert not outcome.lost
@@ -341,23 +343,20 @@ def test_two_local_workers_give_the_same_files(small: tuple[Folder, Path], tmp_p
 
 @pytest.mark.slow
 def test_a_run_killed_in_the_middle_goes_on(small: tuple[Folder, Path], tmp_path: Path) -> None:
-    """kill -9 of the program after its first part; the second try gives the bits of an undisturbed run."""
+    """kill -9 of the program within its second part; the second try gives the bits of an undisturbed run."""
     found, results = small
     code = (
-        "import sys\nfrom pathlib import Path\nfrom dataclasses import replace\n"
+        "import os, signal, sys\nfrom pathlib import Path\nfrom dataclasses import replace\n"
         "from pkcalc.backtest.folder import open_folder\nfrom pkcalc.backtest.run import plan_of, run\n"
         "from pkcalc.site import no_site\nf = open_folder(sys.argv[1])\n"
         "p = replace(plan_of(f, 'phenytoin', no_site()), part=2)\n"
-        "run(f, Path(sys.argv[2]), plan=p, site=no_site())\n"
+        "seen = []\n"
+        "def told(_):\n    seen.append(1)\n    if len(seen) == 3:\n        os.kill(os.getpid(), signal.SIGKILL)\n"
+        "run(f, Path(sys.argv[2]), plan=p, site=no_site(), told=told)\n"
     )
-    child = subprocess.Popen([sys.executable, "-c", code, str(found.path), str(tmp_path / "r")])
-    first = tmp_path / "r" / "parts" / "part-000000.parquet"
-    end = time.monotonic() + 120
-    while not first.is_file() and child.poll() is None and time.monotonic() < end:
-        time.sleep(0.02)
-    child.kill()
-    child.wait()
-    assert first.is_file()
+    child = subprocess.run([sys.executable, "-c", code, str(found.path), str(tmp_path / "r")])
+    assert child.returncode == -signal.SIGKILL
+    assert list(files(tmp_path / "r")) == ["part-000000.parquet"]
     outcome = run(found, tmp_path / "r", plan=plan(found), site=SITE)
-    assert outcome.continued >= 2
+    assert (outcome.continued, outcome.done) == (2, 3)
     assert {k: v for k, v in files(tmp_path / "r").items() if not k.endswith("half")} == files(results)
