@@ -13,7 +13,8 @@ from pkcalc.estimate.lines import LineFailure
 from pkcalc.estimate.result import Band, Estimate
 from pkcalc.forecast import scaled
 from pkcalc.note import hours, populations
-from pkcalc.note.acute import is_offered, limited, marked, too_high
+from pkcalc.note.acute import is_offered, limited, marked, too_high, with_reported
+from pkcalc.note.followup import follow_up_section
 from pkcalc.note.front import chosen_candidate, forecast_lines, spoken_for
 from pkcalc.note.populations import populations_compared
 from pkcalc.note.words import (
@@ -29,7 +30,9 @@ from pkcalc.note.words import (
     level_edge,
     level_words,
     mark_of,
+    on_both_scales,
     regimen_words,
+    scale_line,
     sentence,
     short_band,
     signed_percent,
@@ -367,7 +370,14 @@ def _regimens(consult: Consult) -> list[Section]:
         sections.append(
             Section(
                 "Danger of each, every dose taken",
-                ("The chance of too high and every stop are computed for the regimen fully taken.",),
+                tuple(
+                    x
+                    for x in (
+                        "The chance of too high and every stop are computed for the regimen fully taken.",
+                        scale_line(consult),
+                    )
+                    if x
+                ),
                 Table(DANGER_HEADS, tuple(danger_row(s, consult) for s in ordered)),
             )
         )
@@ -402,7 +412,11 @@ def _regimens(consult: Consult) -> list[Section]:
             sections.append(
                 Section(
                     "Level day by day, average over the day",
-                    (f"Central line{at_binding(consult, ', at normal binding')}.",),
+                    tuple(
+                        x
+                        for x in (f"Central line{at_binding(consult, ', at normal binding')}.", scale_line(consult))
+                        if x
+                    ),
                     Table(heads, rows),
                 )
             )
@@ -415,7 +429,7 @@ def _regimens(consult: Consult) -> list[Section]:
                         f"Equal would be {consult.profile.show_rate(switch.exact_labelled_mg)} as labelled; as "
                         f"dispensed {consult.profile.show_rate(switch.active_mg_per_day, 4)} of active drug "
                         f"({_change_words(switch.change_percent)}).",
-                        f"Steady level {level_words(switch.steady, most)}{_two_ends(switch, most)}.",
+                        f"Steady level {on_both_scales(switch.steady, consult)}{_two_ends(switch, most)}.",
                         *switch.lines,
                     ),
                 )
@@ -467,7 +481,8 @@ def _acute(consult: Consult) -> list[Section]:
         lines = [
             p.risk,
             p.restart_line,
-            f"Level today {level_words(p.now, np.inf)}; give again at {show(p.to_mg_per_L, 'mg/L')}.",
+            f"Level today {level_words(p.now, np.inf)}{at_binding(consult, ' at normal binding')}; give again at "
+            f"{with_reported(p.to_mg_per_L, consult)}.",
             f"Without any dose that takes {days_words(p.days)}"
             + (
                 f"; with what is still being absorbed {days_words(p.with_absorption)}."
@@ -475,12 +490,14 @@ def _acute(consult: Consult) -> list[Section]:
                 else "."
             ),
             *p.lines,
+            *(x for x in (scale_line(consult),) if x),
         ]
         for r in p.reductions:
             lines.append(
                 f"{'' if r.offered else 'NOT OFFERED: '}Partial reduction to {r.words} "
                 f"({show_number(r.percent, 2)} % of the present dose): down to "
-                f"{show(p.to_mg_per_L, 'mg/L')} in {days_words(r.days)}; steady level {level_words(r.steady, most)}."
+                f"{show(p.to_mg_per_L, 'mg/L')} in {days_words(r.days)}; steady level "
+                f"{on_both_scales(r.steady, consult)}."
             )
         table = None
         if p.restarts:
@@ -528,11 +545,11 @@ def _load(load: Load, consult: Consult) -> Section:
         f"({show(load.active_mg, 'mg', 4)} of active drug): {parts}.",
         f"It adds {level_words(load.rise, most)}; "
         + (
-            f"level after it {level_words(load.after, most)}; when drawn {show(load.draw_after_h, 'h')} later "
-            f"{level_words(load.at_draw, most)}."
+            f"level after it {on_both_scales(load.after, consult)}; when drawn {show(load.draw_after_h, 'h')} later "
+            f"{on_both_scales(load.at_draw, consult)}."
             if load.minutes is not None
             else f"level when drawn, {show(load.draw_after_h, 'h')} after the first part, "
-            f"{level_words(load.at_draw, most)}."
+            f"{on_both_scales(load.at_draw, consult)}."
         ),
         f"Chance of a level above the range {percent(load.above_high)}, above the critical level "
         f"{percent(load.above_critical)}.",
@@ -542,7 +559,7 @@ def _load(load: Load, consult: Consult) -> Section:
     if load.followed:
         lines.append(
             f"With {load.maintenance} after it: "
-            + "; ".join(f"day {show_number(d)} {level_words(b, most)}" for d, b in load.followed)
+            + "; ".join(f"day {show_number(d)} {on_both_scales(b, consult)}" for d, b in load.followed)
             + "."
         )
     lines += list(load.notes)

@@ -20,6 +20,7 @@ from pkcalc.note.words import (
     days_words,
     demonstration_words,
     level_words,
+    on_both_scales,
     regimen_words,
     reports_free,
     same_lines,
@@ -298,9 +299,8 @@ def _loads(consult: Consult) -> tuple[str, ...]:
             lines.append(f"{NOT_OFFERED}: {' '.join(sentence(w) for w in load.why_not)}")
             lines.append(f"{NOT_OFFERED}, by calculation only: {order}")
         lines.append(
-            f"Expected after it {level_words(load.after, told_up_to(consult))}"
-            + (" at normal binding" if consult.profile.binding is not None else "")
-            + f"; chance above the range {percent(load.above_high)}, above the critical level "
+            f"Expected after it {on_both_scales(load.after, consult)}"
+            f"; chance above the range {percent(load.above_high)}, above the critical level "
             f"{percent(load.above_critical)}."
         )
     return (*lines, *plan.no_load)
@@ -413,7 +413,7 @@ def _pasted_loads(consult: Consult) -> list[str]:
     for load in plan.loads:
         order = sentence(load.order[0] if load.order else show_number(load.amount_mg))
         head = "Load" if load.offered else f"Load, {NOT_OFFERED}"
-        lines.append(f"{head}: {order} Level after it {level_words(load.after, told_up_to(consult))}.")
+        lines.append(f"{head}: {order} Level after it {on_both_scales(load.after, consult)}.")
     return [*lines, *plan.no_load]
 
 

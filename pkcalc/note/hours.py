@@ -17,7 +17,6 @@ from pkcalc.note.words import (
     Table,
     edge,
     level_band,
-    level_edge,
     level_words,
     sentence,
     told_up_to,

@@ -9,8 +9,8 @@ import numpy as np
 
 from pkcalc.consult import Consult, Shown
 from pkcalc.estimate.result import Band
-from pkcalc.forecast import Forecast
-from pkcalc.units import percent, show_number, show_up_to
+from pkcalc.forecast import Forecast, scaled
+from pkcalc.units import percent, show, show_number, show_up_to
 
 #: After what the drug file says never waits for a note.
 OVERDOSE = "An acute overdose belongs to the poison centre."
@@ -150,6 +150,33 @@ def as_reported(forecast: Forecast, consult: Consult) -> str:
     if reports_free(consult):
         text += f"; free {level_words(forecast.free, consult.scale.free(most))}"
     return text
+
+
+def _reported_scale(consult: Consult) -> tuple[str, float] | None:
+    """What the laboratory reports and how much of the level at normal binding that is; None where it is the same."""
+    if reports_free(consult):
+        return "free", consult.scale.free_fraction
+    factor = consult.scale.total_factor
+    return None if abs(factor - 1) < 0.005 else ("total", factor)
+
+
+def on_both_scales(band: Band, consult: Consult) -> str:
+    """A forecast level at normal binding and, where the laboratory reports another number, as it will report it."""
+    most, other = told_up_to(consult), _reported_scale(consult)
+    text = level_words(band, most)
+    if other is None:
+        return text
+    kind, factor = other
+    return f"{text} at normal binding, {kind} {level_band(scaled(band, factor), most * factor)} as reported"
+
+
+def scale_line(consult: Consult) -> str:
+    """What stands above a table of levels at normal binding where the laboratory reports another number; else ""."""
+    other, high = _reported_scale(consult), consult.goal.high_mg_per_L
+    if other is None:
+        return ""
+    kind, factor = other
+    return f"Levels at normal binding: {show(high, 'mg/L')} here is {kind} {show(high * factor, 'mg/L')} as reported."
 
 
 def same_lines(shown: Shown) -> bool:

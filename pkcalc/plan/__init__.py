@@ -80,7 +80,7 @@ class Plan:
     today: where the patient stands. every: all regimens of the shelf with the present and the pharmacist's own, by
     daily dose. table: those worth printing. present, own: of them. ranked: offered
     regimens by expected loss, only where asked for. lines: what must be said beside the table. no_load, no_next_level:
-    why there is none. overlay: the present and the chosen regimen (or the pharmacist's first) laid over each other.
+    why there is none. overlay: the present regimen and the pharmacist's own laid over each other.
     """
 
     shelf: ShelfInUse
@@ -188,7 +188,7 @@ def make(
         switches=() if setting.refused else switching.switches(case, setting, shelf.products),
         next_level=level,
         no_next_level="" if level is not None else _why_no_next_level(setting, asked, stops),
-        overlay=overlaying.overlay([c for c in (present, next_on) if c is not None][: 2 if own else 1], setting),
+        overlay=overlaying.overlay(_laid_over(own, present), setting),
         setting=setting,
     )
 
@@ -223,6 +223,15 @@ def _loads(
         volume_words=_volume_words(case, setting, prior),
     )
     return loading.loads(ward)
+
+
+def _laid_over(own: tuple[Candidate, ...], present: Candidate | None) -> list[Candidate]:
+    """The present regimen and the pharmacist's own, those of one daily dose once."""
+    found: list[Candidate] = []
+    for c in (*([present] if present is not None else []), *own):
+        if all(abs(c.rate_mg_per_day - x.rate_mg_per_day) > 1e-6 * c.rate_mg_per_day for x in found):
+            found.append(c)
+    return found[: overlaying.MOST]
 
 
 def _maintenance_words(follows: Candidate | None) -> str:

@@ -9,6 +9,8 @@ from pkcalc.estimate.result import Band
 from pkcalc.forecast import levels_on_days
 from pkcalc.plan.candidates import Candidate, Setting
 
+#: Regimens laid over each other at most: the present one and two of the pharmacist's own.
+MOST = 3
 #: Days of the courses laid over each other.
 DAYS = (0.0, 1.0, 2.0, 3.0, 4.0, 5.0, 6.0, 7.0, 10.0, 14.0, 21.0, 28.0, 42.0, 56.0)
 

@@ -23,7 +23,7 @@ from pkcalc.note.front import order_sentence, page_one, paste_block, spoken_for
 from pkcalc.note.html import render_html
 from pkcalc.note.pdf import render_pdf
 from pkcalc.note.text import render
-from pkcalc.note.words import level_band, level_edge, level_words, short_band, told_up_to
+from pkcalc.note.words import level_band, level_edge, level_words, on_both_scales, short_band, told_up_to
 from pkcalc.units import show_up_to
 
 INF = math.inf
@@ -173,3 +173,23 @@ def test_a_site_that_raises_the_critical_level_raises_what_is_told() -> None:
     target = over().profile.target
     assert target.most_told(30.0) == 60.0
     assert target.most_told(70.0) == 70.0
+
+
+def test_every_forecast_of_a_table_says_what_the_laboratory_will_report() -> None:
+    """At albumin 29 g/L 20 mg/L at normal binding is reported as 13.6: said above each table of such levels."""
+    said = "Levels at normal binding: 20 mg/L here is total 13.6 mg/L as reported."
+    sections = {s.title: s for s in compose(low_albumin()).sections}
+    for title in ("Danger of each, every dose taken", "Level day by day, average over the day"):
+        assert said in sections[title].lines
+    switch = next(s for title, s in sections.items() if title.startswith("Another form"))
+    assert any(re.search(r"^Steady level .* at normal binding, total .* as reported", x) for x in switch.lines)
+    plain = {s.title: s for s in compose(over()).sections}
+    assert not any("here is total" in x for s in plain.values() for x in s.lines)
+
+
+def test_a_level_on_both_scales() -> None:
+    band = Band(16.3, 12.1, 90.0)
+    assert on_both_scales(band, over()) == "16.3 mg/L (90 % interval 12.1 to above 60)"
+    assert on_both_scales(band, low_albumin()) == (
+        "16.3 mg/L (90 % interval 12.1 to above 60) at normal binding, total 11.1 (8.23 to above 40.8) as reported"
+    )

@@ -328,6 +328,13 @@ def test_rows_of_three_doses_a_day_are_printed_only_beside_one_that_is_taken_so(
     assert max(c.dose_times for c in three.table) == 3
 
 
+def test_two_own_regimens_are_laid_over_each_other_with_the_present_one() -> None:
+    own = [{"form": "extended-capsule", "amount": f"{mg} mg", "every": "24 h"} for mg in (330, 350, 310, 290)]
+    found = plan(proposed=own).overlay  # the present dose is 350 mg
+    assert found is not None
+    assert [words.split(" mg")[0] for words, _ in found.courses] == ["350", "330", "310"]
+
+
 def test_two_regimens_laid_over_each_other() -> None:
     found = plan(proposed=[{"form": "extended-capsule", "amount": "330 mg", "every": "24 h"}]).overlay
     assert found is not None
