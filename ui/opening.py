@@ -81,13 +81,13 @@ def forget(*keep: str) -> None:
     """Everything typed, opened and found, but for what is named.
 
     The place for files gets a new name: a file still lying in the old one would be read again with the next
-    change, over what was edited since.
+    change, over what was edited since. The count of runs goes on: the browser knows a newer run by it.
     """
     kept = {key: st.session_state[key] for key in keep if key in st.session_state}
-    turn = st.session_state.get("turn", 0)
+    turn, runs = st.session_state.get("turn", 0), st.session_state.get("runs", 0)
     for key in list(st.session_state):
         del st.session_state[key]
-    st.session_state["turn"] = turn + 1
+    st.session_state["turn"], st.session_state["runs"] = turn + 1, runs
     for key, value in kept.items():
         st.session_state[key] = value
 

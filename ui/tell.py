@@ -22,7 +22,7 @@ from pkcalc.note.annex import DANGER_HEADS, danger_row, estimate_lines, populati
 from pkcalc.note.charts import Chart
 from pkcalc.note.data import dumps, note_data
 from pkcalc.note.document import DEFERS, DEMONSTRATION, compose
-from pkcalc.note.front import basis_words, forecast_lines, page_one, paste_block
+from pkcalc.note.front import basis_words, forecast_lines, next_level, page_one, paste_block
 from pkcalc.note.lessons import lesson
 from pkcalc.note.text import render
 from pkcalc.note.words import (
@@ -164,7 +164,8 @@ def estimate(consult: Consult) -> None:
         look.say("No estimate is given; the reasons stand here and in the stops above.", "answer")
         return
     look.say(f"{estimate_sentence(consult)} ({chosen.point.kind}; method: {chosen.method}).", "answer")
-    estimates_table(list(consult.estimates.values()), consult.profile)
+    if consult.estimates:
+        estimates_table(list(consult.estimates.values()), consult.profile)
     look.lines([x for x in (f"Chosen: {consult.chosen_why}.", consult.difference) if x])
     if consult.verdict is not None:
         look.say(consult.verdict.text)
@@ -179,7 +180,7 @@ def estimate(consult: Consult) -> None:
         spread = consult.observations[0].spread
         look.say(
             f"Spread of a level taken as {show_number(100 * spread.total_cv)} % in all ({spread.basis}), of "
-            f"which the assay is {show_number(100 * spread.assay_cv)} %.",
+            f"which the assay is {show_number(100 * spread.assay_cv)} %. Both are set in the service's own settings file.",
             "hint",
         )
 
@@ -218,7 +219,7 @@ def estimate_sentence(consult: Consult | None) -> str:
     if consult.chosen is None:
         return "no estimate"
     point = consult.chosen.point
-    vmax, km = show(point.vmax_mg_per_day, "mg/day", 4), show(point.km_mg_per_L, "mg/L")
+    vmax, km = consult.profile.show_rate(point.vmax_mg_per_day, 4), show(point.km_mg_per_L, "mg/L")
     return f"Vmax {vmax} of active drug, Km {km}"
 
 
@@ -382,37 +383,22 @@ def candidates_sentence(consult: Consult | None) -> str:
 
 
 def next_look(consult: Consult) -> None:
-    if consult.projection is not None:
-        first, *rest = hours.next_lines(consult, consult.projection)
-        look.say(first, "answer")
-        look.lines(rest)
-        return
-    plan = consult.plan
-    if plan is None or plan.next_level is None:
-        look.say(plan.no_next_level if plan is not None and plan.no_next_level else NO_NEXT)
-        return
-    found = plan.next_level
-    look.say(found.action, "answer")
-    if found.safety_action:
-        look.say(f"Early safety level: {found.safety_action}", "answer")
-    look.lines(
-        [
-            f"For {found.regimen_words}.",
-            f"90 % of the way to the steady level takes {days_words(found.settled_days)}.",
-            *found.why,
-        ]
-    )
-
-
-NO_NEXT = "There is no estimate from which to tell when a level would say something."
+    first, *rest = next_level(consult)
+    look.say(first, "answer")
+    look.lines(rest)
+    found = consult.plan.next_level if consult.plan is not None else None
+    if found is not None and any(found.action in said for said in (first, *rest)):
+        look.lines(
+            [
+                f"For {found.regimen_words}.",
+                f"90 % of the way to the steady level takes {days_words(found.settled_days)}.",
+                *found.why,
+            ]
+        )
 
 
 def next_sentence(consult: Consult | None) -> str:
-    if consult is not None and consult.projection is not None:
-        return hours.next_lines(consult, consult.projection)[0]
-    if consult is None or consult.plan is None or consult.plan.next_level is None:
-        return ""
-    return consult.plan.next_level.action
+    return "" if consult is None else next_level(consult)[0]
 
 
 def picture(found: Chart) -> str:

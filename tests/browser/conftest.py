@@ -240,7 +240,7 @@ class Visit:
         for _ in range(most):
             self.page.keyboard.press("Tab")
             here = self.page.evaluate(
-                """() => { const e = document.activeElement; if (!e) return '';
+                """() => { const e = document.activeElement; if (!e || e.closest('.stTooltipIcon')) return '';
                     const label = e.labels && e.labels.length ? e.labels[0].innerText : '';
                     const group = e.closest('[role="radiogroup"]');
                     return [e.getAttribute('aria-label') || '', label, e.tagName === 'BUTTON' ? e.innerText : '',
