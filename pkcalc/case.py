@@ -212,6 +212,7 @@ class EarlierForecastFile(BaseModel):
     median: Text
     low: Text
     high: Text
+    regimen: Text = Field("", description="The regimen it was forecast for, in words.")
     version: Text = ""
 
 
@@ -404,6 +405,7 @@ class EarlierForecast:
     low_mg_per_L: float
     high_mg_per_L: float
     version: str
+    regimen: str = ""
 
 
 @dataclass(frozen=True)
@@ -1503,7 +1505,7 @@ def _earlier(i: int, file: EarlierForecastFile, check: _Check, profile: Profile)
     if not low <= median <= high:
         check.say(where, "low, median and high are not in order", "low to high", "Check the three numbers")
         return None
-    return EarlierForecast(drawn, file.kind, median, low, high, file.version)
+    return EarlierForecast(drawn, file.kind, median, low, high, file.version, file.regimen)
 
 
 def _reentry(file: ReentryFile, check: _Check) -> Reentry | None:

@@ -117,7 +117,7 @@ def cli() -> None:
     """
 
 
-def _write(case: Case, output_format: str, out: Path | None, site: Path | None) -> None:
+def _write(case: Case, output_format: str, out: Path | None, site: Path | None, keep: Path | None = None) -> None:
     from pkcalc.consult import run_consult
 
     if output_format == "pdf" and out is None:
@@ -132,6 +132,10 @@ def _write(case: Case, output_format: str, out: Path | None, site: Path | None) 
         else:
             out.write_text(note, encoding="utf-8")
         click.echo(f"Written: {out}", err=True)
+    if keep is not None:
+        from pkcalc.note.followup import with_forecasts
+
+        _write_new(keep, with_forecasts(consult))
     if consult.stopped:
         if output_format != "json" or out is not None:
             click.echo("Stopped: see the stops at the top of the note for the reason.", err=True)
@@ -179,18 +183,32 @@ _site = click.option(
     help="In place of the case's own: shelf, products, aim, largest-step, order-by-loss, load, load-route, load-aim, "
     'load-at, restart-level, start. For example --plan shelf=united-states --plan "aim=15 mg/L".',
 )
+@click.option(
+    "--keep",
+    type=click.Path(path_type=Path, dir_okay=False),
+    metavar="NEW",
+    help="Write the case with the levels that the note forecasts to this new file: add a level to it later, and its "
+    "note says whether what came lay inside. A file that exists is never overwritten.",
+)
 @_note_format
 @_out
 @_site
 def note(
-    case_file: Path, plan_settings: tuple[str, ...], output_format: str, out: Path | None, site: Path | None
+    case_file: Path,
+    plan_settings: tuple[str, ...],
+    keep: Path | None,
+    output_format: str,
+    out: Path | None,
+    site: Path | None,
 ) -> None:
     """A case file in, a consult note out."""
     from pkcalc.case import load_case
     from pkcalc.plan.asked import with_settings
 
     case = load_case(case_file)
-    _write(with_settings(case, plan_settings) if plan_settings else case, output_format, out, site)
+    if keep is not None:
+        _refuse_existing(keep)
+    _write(with_settings(case, plan_settings) if plan_settings else case, output_format, out, site, keep)
 
 
 @cli.command()
@@ -584,6 +602,12 @@ def _refuse_to_keep(first: Path, second: Path, new: Path) -> None:
                 "--keep", "both entries are the same file", "two entries", "Let a second person type the case again"
             )
         )
+    _refuse_existing(new)
+
+
+def _refuse_existing(new: Path) -> None:
+    from pkcalc.errors import CaseError, Problem
+
     if new.exists():
         raise CaseError(
             Problem("--keep", f"{new.name} exists already", "a file that does not exist yet", "Give another name")

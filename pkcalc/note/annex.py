@@ -5,12 +5,11 @@ from __future__ import annotations
 import numpy as np
 
 from pkcalc import entries
-from pkcalc.case import EarlierForecast
 from pkcalc.clock import show_time
 from pkcalc.consult import Consult, Shown
 from pkcalc.dosing import active_mg
 from pkcalc.estimate.lines import LineFailure
-from pkcalc.estimate.result import Band, Estimate
+from pkcalc.estimate.result import Estimate
 from pkcalc.forecast import scaled
 from pkcalc.note import hours, populations
 from pkcalc.note.acute import is_offered, limited, marked, too_high, with_reported
@@ -54,7 +53,7 @@ def annex(consult: Consult) -> tuple[Section, ...]:
         _patient(consult),
         _doses(consult),
         _levels(consult),
-        *_then_and_now(consult),
+        *follow_up_section(consult),
         *_estimate(consult),
         *(_acute(consult) if pressing else ()),
         *_regimens(consult),
@@ -171,36 +170,6 @@ def _levels(consult: Consult) -> Section:
             f"assay is {show_number(100 * spread.assay_cv)} %."
         )
     return Section("What was measured", tuple(lines))
-
-
-def _then_and_now(consult: Consult) -> list[Section]:
-    """What an earlier note forecast, beside what came."""
-    rows = []
-    for then in consult.case.earlier:
-        came = next(
-            (
-                o
-                for o in consult.observations
-                if o.level.drawn == then.drawn and (then.kind == o.level.kind or then.kind == "normalised")
-            ),
-            None,
-        )
-        if came is None:
-            rows.append((show_time(then.drawn), then.kind, _then(then), "no such level in this case", ""))
-            continue
-        value = came.working_mg_per_L if then.kind == "normalised" else came.level.reported_mg_per_L
-        inside = then.low_mg_per_L <= value <= then.high_mg_per_L
-        verdict = "inside" if inside else "above" if value > then.high_mg_per_L else "below"
-        rows.append((show_time(then.drawn), then.kind, _then(then), show_number(value), verdict))
-    if not rows:
-        return []
-    heads = ("Drawn", "Kind", "Forecast then (mg/L)", "Came (mg/L)", "Inside its 90 % interval")
-    return [Section("What was forecast then, and what came", (), Table(heads, tuple(rows)))]
-
-
-def _then(then: EarlierForecast) -> str:
-    band = Band(then.median_mg_per_L, then.low_mg_per_L, then.high_mg_per_L)
-    return short_band(band)
 
 
 def estimate_lines(estimate: Estimate, time_unit: str = "day") -> list[str]:

@@ -14,6 +14,7 @@ from pkcalc.estimate.result import Estimate
 from pkcalc.forecast import Forecast
 from pkcalc.note import hours, populations
 from pkcalc.note.annex import sources_used
+from pkcalc.note.followup import follow_up
 from pkcalc.note.front import page_one, paste_block, spoken_for
 from pkcalc.note.offers import band_data, number, plan_data, regimen_data
 from pkcalc.note.words import DEFERS, Section, demonstration_words
@@ -131,6 +132,21 @@ def note_data(consult: Consult) -> dict[str, Any]:
                 "agrees": r.agrees,
             }
             for r in consult.second_way
+        ],
+        "follow_up": [
+            {
+                "level": r.came.level.index + 1,
+                "forecast_for": show_time(r.then.drawn),
+                "regimen": r.then.regimen,
+                "kind": r.then.kind,
+                "median_mg_per_L": r.then.median_mg_per_L,
+                "low_5_percent_mg_per_L": r.then.low_mg_per_L,
+                "high_95_percent_mg_per_L": r.then.high_mg_per_L,
+                "came_mg_per_L": number(r.value_mg_per_L),
+                "censored": r.came.censored,
+                "interval": r.verdict,
+            }
+            for r in follow_up(consult)
         ],
         "blind_reentry": _reentry(case),
         "local_settings": [

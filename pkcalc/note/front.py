@@ -12,6 +12,7 @@ from pkcalc.consult import Consult, Shown
 from pkcalc.estimate.result import Band
 from pkcalc.note import hours
 from pkcalc.note.acute import daily_levels, is_offered, limited, now_lines, too_high, used_level
+from pkcalc.note.followup import follow_up_sentence
 from pkcalc.note.words import (
     NOT_OFFERED,
     NOW,
@@ -46,7 +47,7 @@ def page_one(consult: Consult) -> tuple[Section, ...]:
         Section("Verdict on the level", verdict(consult)),
         Section("Chosen regimen", _chosen(consult)),
         Section("Load or top-up", _loads(consult)),
-        Section("Next level", _next_level(consult)),
+        Section("Next level", next_level(consult)),
         Section("Valid until", (valid_until(consult), f"Ordered instead, and why: {'_' * 40}")),
     )
     return tuple(p for p in parts if p.lines)
@@ -149,6 +150,9 @@ def verdict(consult: Consult) -> tuple[str, ...]:
             lines.append("It must not be read as a steady level: it was drawn before 90 % of the way to its plateau.")
         else:
             lines.append("Nobody can tell whether it is a steady level.")
+    then = follow_up_sentence(consult, o)
+    if then:
+        lines.append(then)
     if consult.chosen is not None and not consult.stopped:
         vmax, km = consult.chosen.summary["vmax_mg_per_day"], consult.chosen.summary["km_mg_per_L"]
         km_words = level_words(km, math.inf)
@@ -328,7 +332,8 @@ def _load_draws(consult: Consult) -> list[str]:
     return lines
 
 
-def _next_level(consult: Consult) -> tuple[str, ...]:
+def next_level(consult: Consult) -> tuple[str, ...]:
+    """When the next level is due and what it would mean; where nothing may be planned, why."""
     plan, case = consult.plan, consult.case
     if consult.projection is not None:
         return hours.next_lines(consult, consult.projection)
@@ -449,7 +454,7 @@ def paste_block(consult: Consult) -> tuple[str, ...]:
         body.append(f"{warnings} warning{'s' if warnings > 1 else ''}: see the full note.")
     if used_level(consult) is not None and not urgent:
         body.append(verdict(consult)[0])
-    planned = _next_level(consult)
+    planned = next_level(consult)
     # the lines to act on, the longest wait last, since the block is cut at its end
     ours = [x for x in planned if "call" in x.lower()] or [x for x in planned if not x.startswith("Planned by")]
     ours = sorted(ours or planned, key=lambda x: x.startswith("If the load is given:"))

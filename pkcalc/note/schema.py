@@ -7,6 +7,7 @@ from typing import Any, get_args
 from pkcalc.case import COMPARED, case_schema
 from pkcalc.entries import Standing
 from pkcalc.note.data import NOTE_VERSION
+from pkcalc.note.followup import Verdict
 
 TEXT: dict[str, Any] = {"type": "string"}
 NUMBER: dict[str, Any] = {"type": "number"}
@@ -476,6 +477,23 @@ _NOTE = _object(
                     "tolerance": TEXT,
                     "agrees": YES_NO,
                 }
+            )
+        ),
+        "follow_up": _list(
+            _object(
+                {
+                    "level": WHOLE,
+                    "forecast_for": TEXT,
+                    "regimen": TEXT,
+                    "kind": {"enum": ["total", "free", "normalised"]},
+                    "median_mg_per_L": NUMBER,
+                    "low_5_percent_mg_per_L": NUMBER,
+                    "high_95_percent_mg_per_L": NUMBER,
+                    "came_mg_per_L": NUMBER,
+                    "censored": {"enum": ["below", "above", None]},
+                    "interval": {"enum": [*get_args(Verdict)]},
+                },
+                words="A level that came, beside what an earlier note forecast for its time (90 % interval).",
             )
         ),
         "blind_reentry": _object(
