@@ -525,12 +525,23 @@ def from_fhir(bundle: Path, drug: str, products: tuple[str, ...], output_format:
         click.echo(f"Written: {out}", err=True)
 
 
+def _print_columns(context: click.Context, _: click.Parameter, asked: bool) -> None:
+    if asked:
+        from pkcalc.spreadsheet import COLUMNS
+
+        click.echo(COLUMNS, nl=False)
+        context.exit()
+
+
 @cli.command("from-csv")
 @click.argument("doses", metavar="DOSES", type=click.Path(path_type=Path, exists=True, dir_okay=False))
 @click.argument("levels", metavar="LEVELS", type=click.Path(path_type=Path, exists=True, dir_okay=False))
 @click.option("--drug", default="phenytoin", show_default=True, help="A drug of `pkcalc drugs`.")
 @click.option("--weight", default="", help='For example "70 kg".')
 @click.option("--age", default="", help='For example "45 years".')
+@click.option(
+    "--columns", is_flag=True, is_eager=True, expose_value=False, callback=_print_columns, help="List the columns."
+)
 @_format
 @_out
 def from_csv(doses: Path, levels: Path, drug: str, weight: str, age: str, output_format: str, out: Path | None) -> None:

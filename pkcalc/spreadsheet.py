@@ -1,5 +1,28 @@
 """A pair of CSV files, doses and levels, into a case file; every problem with its row.
 
+What the columns are stands in `COLUMNS`, which `pkcalc from-csv --columns` prints.
+
+Rows of doses copied straight out of a spreadsheet (`pasted_doses`) are read in the same way, with tabs between the
+cells, and may go without column names where they hold single doses: time, amount and, where there is a third, form.
+"""
+
+from __future__ import annotations
+
+import csv
+import difflib
+import io
+import json
+import re
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass
+from pathlib import Path
+from typing import Any
+
+from pkcalc.case import CaseFile, DoseFile, check_case, parse_case_text
+from pkcalc.errors import CaseError, Problem
+
+#: The two files, for a person.
+COLUMNS = """\
 Both files have a first row of column names, in any order; names not listed below are refused.
 
 Doses. Each row is one dose (`at`), a repeated dose (`every`, `from`, `until`) or an infusion (`rate`, `from`,
@@ -28,25 +51,7 @@ Levels. Each row is one reported level:
 Cells are parted by commas or by semicolons, whichever the first row uses; never by both. Numbers have a
 decimal point in either case. UTF-8 only. A cell that starts with = + - or @ is refused: a spreadsheet would run
 it as a formula.
-
-Rows of doses copied straight out of a spreadsheet (`pasted_doses`) are read in the same way, with tabs between the
-cells, and may go without column names where they hold single doses: time, amount and, where there is a third, form.
 """
-
-from __future__ import annotations
-
-import csv
-import difflib
-import io
-import json
-import re
-from collections.abc import Mapping, Sequence
-from dataclasses import dataclass
-from pathlib import Path
-from typing import Any
-
-from pkcalc.case import CaseFile, DoseFile, check_case, parse_case_text
-from pkcalc.errors import CaseError, Problem
 
 MAX_BYTES = 2_000_000
 MAX_ROWS = 5_000

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+import re
 from pathlib import Path
 from typing import Any
 
@@ -135,12 +136,6 @@ def test_a_cell_of_several_lines_is_refused_and_the_rows_after_it_keep_their_num
     assert found[1].startswith('CSV file of levels, row 4, drawn: "=1" was given.')
 
 
-def test_the_columns_are_documented() -> None:
-    text = spreadsheet.__doc__ or ""
-    for column in {*DOSE_COLUMNS, *LEVEL_COLUMNS}:
-        assert f"  {column} " in text or f"{column}:" in text or f"{column} " in text, column
-
-
 @given(
     rows=st.lists(
         st.tuples(st.integers(1, 1600), st.integers(1, 12), st.integers(1, 28), st.integers(0, 23)),
@@ -185,3 +180,15 @@ def test_the_command(tmp_path: Path) -> None:
     assert done.returncode == 2
     data: dict[str, Any] = json.loads(done.stdout)
     assert [p["where"] for p in data["problems"]] == ["CSV file of levels, row 3, value"]
+
+
+def test_every_column_is_documented_and_the_command_prints_it() -> None:
+    from tests.unit.test_cli import run
+
+    done = run("from-csv", "--columns")
+    assert (done.returncode, done.stderr) == (0, "")
+    assert done.stdout == spreadsheet.COLUMNS
+    doses, levels = spreadsheet.COLUMNS.split("Levels. Each row")
+    for known, text in ((spreadsheet.DOSE_COLUMNS, doses), (spreadsheet.LEVEL_COLUMNS, levels)):
+        for column in known:
+            assert re.search(rf"(?m)(?:^  |; ){column}[: ]", text), column
