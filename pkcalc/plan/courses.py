@@ -31,14 +31,15 @@ NAMED_DAYS = (3.0, 7.0, 14.0, 28.0)
 #: Draws used for the level on named days, and for the swing within a dosing interval.
 DAY_DRAWS, SWING_DRAWS = 256, 128
 #: Regimens per block: their arrays then stay in the processor's cache.
-BLOCK = 16
+BLOCK = 32
 #: Draws faster than this per day (Km next to nothing) are followed as if they were this fast: their level is of the
 #: order of Km either way.
 FASTEST_PER_DAY = 250.0
 #: (Vmax tau - D)/kappa below which a plateau lies so high that the limit formula tells it.
 NEAR_VMAX = 1e-3
-#: Passes over one cycle to its plateau, and the relative change at which it is reached.
-MOST_PASSES, REACHED = 12, 1e-5
+#: Passes over one cycle to its plateau, and the relative change at which it is reached: the error after a step of
+#: Newton's method is of the order of its square.
+MOST_PASSES, REACHED = 12, 1e-3
 
 
 def with_courses(some: Sequence[Candidate], setting: Setting) -> tuple[Candidate, ...]:

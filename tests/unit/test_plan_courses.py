@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from itertools import pairwise
+
 import numpy as np
 import pytest
 
@@ -50,6 +52,14 @@ def test_many_at_once_are_what_each_is_alone() -> None:
     together = swing(draws, list(REGIMENS.values()), P)
     for regimen, found in zip(REGIMENS.values(), together, strict=True):
         assert swing(draws, [regimen], P) == (found,)
+
+
+def test_more_of_the_same_never_lowers_trough_or_peak() -> None:
+    regimens = [Regimen((Intake("extended-capsule", 21.0, mg),)) for mg in (30.0, 100.0, 260.0, 300.0, 330.0, 400.0)]
+    found = swing(estimate(), regimens, P)
+    for less, more in pairwise(found):
+        for a, b in zip(less, more, strict=True):
+            assert (a.low, a.median, a.high) < (b.low, b.median, b.high)
 
 
 def test_no_plateau_no_trough() -> None:
