@@ -435,7 +435,8 @@ def _change_words(percent: float) -> str:
 
 def _two_ends(switch: Switch, most: float) -> str:
     low, high = (level_edge(x, most) for x in (switch.steady_low_mg_per_L, switch.steady_high_mg_per_L))
-    return "" if low == high else f"; at the two ends of how much may reach the body {low} to {high} mg/L"
+    unit = " mg/L" if np.isfinite(switch.steady_high_mg_per_L) else ""
+    return "" if low == high else f"; at the two ends of how much may reach the body {low} to {high}{unit}"
 
 
 def _acute(consult: Consult) -> list[Section]:
