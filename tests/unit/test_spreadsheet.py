@@ -14,7 +14,7 @@ from hypothesis import strategies as st
 from pkcalc import spreadsheet
 from pkcalc.case import check_case, read_case_text
 from pkcalc.errors import CaseError
-from pkcalc.spreadsheet import DOSE_COLUMNS, LEVEL_COLUMNS, from_pair, load_pair
+from pkcalc.spreadsheet import from_pair, load_pair
 
 DOSES = """form,amount,unit,every,from,until,given_by
 extended-capsule,300,mg,24 h,2026-08-20 21:00,2026-09-15 12:00,nurse
