@@ -87,7 +87,7 @@ def verdict(found: Findings, suggested: Sequence[Hint], methods: Sequence[str] =
         return ["No level could be forecast from an earlier one, so nothing can be said about this department."]
     if whole.sums.patients < FEWEST_PATIENTS:
         return [
-            f"{whole.sums.patients} patients had a level forecast from an earlier one; with fewer than "
+            f"{_count(whole.sums.patients, 'patient')} had a level forecast from an earlier one; with fewer than "
             f"{FEWEST_PATIENTS} nothing can be said about this department."
         ]
     said = []
@@ -397,20 +397,24 @@ def _in_order(by: str, table: dict[str, Any], found: Findings) -> list[str]:
     return sorted(table, key=lambda v: (names.index(v), v) if by.startswith("level ") else (0, v))
 
 
+def _count(n: int, what: str) -> str:
+    return f"{n:,} {what}" if n == 1 else f"{n:,} {what}s"
+
+
 def _counts(store: Store, folder: Folder, found: Findings) -> list[str]:
     plan = store.plan
     said = [
-        f"{plan.count:,} patients in the folder, {found.patients:,} read, {found.forecast_patients:,} with a "
+        f"{_count(plan.count, 'patient')} in the folder, {found.patients:,} read, {found.forecast_patients:,} with a "
         f"forecast, {sum(found.set_aside.values()):,} set aside."
     ]
     if folder.strays:
         where = "; ".join(folder.strays_shown[:5])
         said.append(
-            f"{folder.strays:,} runs of rows belong to no patient of patients.csv and were not used ({where}). If they "
-            "belong to somebody, that patient's record is not whole."
+            f"{_count(folder.strays, 'run')} of rows without a patient in patients.csv: not used ({where}). If they are "
+            "somebody's, that patient's record is not whole."
         )
     if store.missing():
-        said.append(f"{len(store.missing()):,} parts are missing: this report is not of the whole folder.")
+        said.append(f"Missing: {_count(len(store.missing()), 'part')}. This report is not of the whole folder.")
     return said
 
 
