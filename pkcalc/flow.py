@@ -48,6 +48,7 @@ __all__ = [
     "amounts",
     "days_to_fraction",
     "duplicates",
+    "fading",
     "first_crossing",
     "levels",
     "periodic",
@@ -105,6 +106,30 @@ def amounts(
         kept = plans if one == 1.0 else None
         out[some] = _walk(scaled, times, vmax[some], kappa[some], part, start, accuracy, typical_per_day, kept)
     return out
+
+
+def fading(
+    record: Record,
+    times_day: ArrayLike,
+    vmax_mg_per_day: ArrayLike,
+    kappa_mg: ArrayLike,
+    *,
+    volume_L: ArrayLike | None = None,
+    typical_per_day: float | None = None,
+    plans: Plans | None = None,
+) -> tuple[Floats, Floats]:
+    """As `amounts`, and how far a small difference in the amount has died away since the record's start.
+
+        F(t) = integral of [Vmax kappa / (kappa + X)^2 + k],     dX(t)/dX(s) = exp(F(s) - F(t))
+
+    Both of shape (draws, times).
+    """
+    times = _times(record, times_day)
+    vmax, kappa = _parameters(vmax_mg_per_day, kappa_mg)
+    rates = _path_rates(record, volume_L, vmax)
+    start = _start(record, vmax, kappa, rates, "everyday", None, typical_per_day)
+    faded = np.empty((len(vmax), len(times)))
+    return _walk(record, times, vmax, kappa, rates, start, "everyday", typical_per_day, plans, faded), faded
 
 
 def levels(
@@ -333,12 +358,17 @@ def _walk(
     accuracy: Accuracy,
     typical_per_day: float | None,
     plans: Plans | None = None,
+    faded: Floats | None = None,
 ) -> Floats:
     out = np.empty((len(vmax), len(times)))
     for speed in speeds(_fastest(vmax, kappa, rates), typical_per_day):
-        out[speed.positions] = _run_class(
-            record, times, vmax, kappa, rates, start, speed.positions, speed, speed.fineness(accuracy), plans
+        some = speed.positions
+        part = None if faded is None else np.empty((len(some), len(times)))
+        out[some] = _run_class(
+            record, times, vmax, kappa, rates, start, some, speed, speed.fineness(accuracy), plans, part
         )
+        if faded is not None:
+            faded[some] = part
     return out
 
 
@@ -353,6 +383,7 @@ def _run_class(
     speed: Speed,
     fineness: float,
     plans: Plans | None = None,
+    faded: Floats | None = None,
 ) -> Floats:
     """Amounts of draws that share one plan, block by block so that memory does not grow with the draws."""
     key = (speed.fastest_per_day, fineness)
@@ -364,7 +395,14 @@ def _run_class(
     out = np.empty((len(positions), len(times)))
     for begin in range(0, len(positions), BLOCK):
         some = positions[begin : begin + BLOCK]
-        out[begin : begin + BLOCK] = run(plan, vmax[some], kappa[some], start[some], [r[some] for r in rates])
+        out[begin : begin + BLOCK] = run(
+            plan,
+            vmax[some],
+            kappa[some],
+            start[some],
+            [r[some] for r in rates],
+            faded=None if faded is None else faded[begin : begin + BLOCK],
+        )
     return out
 
 

@@ -480,12 +480,29 @@ class Block:
             with np.errstate(divide="ignore"):
                 exact: Floats = np.minimum(-np.log(self.tangent(step)), 700.0)
             return exact
-        d1, d2, d3, d4 = self.stage_slopes(step)
-        total: Floats = d2 + d3
+        if self.k is not None:
+            d1, d2, d3, d4 = self.stage_slopes(step)
+            total: Floats = d2 + d3
+            total += total
+            total += d1
+            total += d4
+            total *= 1.0 / 6.0
+            return total
+        # as `stage_slopes`, summed as they come: every step of every course of an estimate passes here
+        self.slopes_of = None
+        total, square = self.slopes[0], self.slopes[1]
+        np.subtract(1.0, self.u2, out=total)
+        total *= total
+        np.subtract(1.0, self.u3, out=square)
+        square *= square
+        total += square
         total += total
-        total += d1
-        total += d4
-        total *= 1.0 / 6.0
+        for u in (self.u1, self.u4):
+            np.subtract(1.0, u, out=square)
+            square *= square
+            total += square
+        total *= step.h / 6.0
+        total /= self.big_k
         return total
 
     def carry(self, change: Floats, step: Step, push: float, half: float, full: float) -> Floats:
@@ -575,13 +592,23 @@ def run(
     kappa_mg: Floats,
     start_mg: Floats,
     path_rates: Sequence[Floats | float] = (),
+    *,
+    faded: Floats | None = None,
 ) -> Floats:
-    """Amounts [mg], shape (draws, asked-for times), of one block of draws."""
+    """Amounts [mg], shape (draws, asked-for times), of one block of draws.
+
+    faded: filled, where given (same shape), with the integral of the slope of the elimination since the start:
+    a small difference in the amount has shrunk by e to the minus of it."""
     count = sum(len(positions) for positions in plan.reached.values())
     out = np.empty((len(vmax_mg_per_day), count))
-    for number, _, block in march(plan, vmax_mg_per_day, kappa_mg, start_mg, path_rates):
+    total = np.zeros(len(vmax_mg_per_day))
+    for number, step, block in march(plan, vmax_mg_per_day, kappa_mg, start_mg, path_rates):
+        if faded is not None and step is not None:
+            total += block.total_slope(step)
         if number in plan.reached:
             amounts = block.w * vmax_mg_per_day
             for position in plan.reached[number]:
                 out[:, position] = amounts
+                if faded is not None:
+                    faded[:, position] = total
     return out

@@ -238,7 +238,7 @@ def _by_population(known: _Known, days: Sequence[float]) -> Floats:
         odds = plan.variance[:-1]
         taken = odds / (1 + odds) <= chance.random((len(odds), len(vmax))).T
         change = np.column_stack([taken * (1 + odds) - 1, habit])
-        gain = intake_gain(plan, course, faded, vmax, kappa)
+        gain = intake_gain(plan, course, faded)
         levels = levels * np.exp(np.einsum("ntd,nd->nt", gain, change))
     return levels
 

@@ -201,7 +201,7 @@ class _Model:
         groups)."""
         vmax, kappa = np.exp(a), np.exp(k)
         volume = np.exp(self.volume.log_volume(a, k))
-        course = flow.amounts(
+        course, faded = flow.fading(
             self.record,
             self.intake.sample_days,
             vmax,
@@ -222,7 +222,7 @@ class _Model:
                     "Add the earlier doses (a load, another hospital), or check the time of the draw",
                 )
             )
-        return np.log(amount), intake_gain(self.intake, self.record, course, vmax, kappa, volume_L=volume)
+        return np.log(amount), intake_gain(self.intake, course, faded)
 
     def parts(self, residual: Floats, cov: Floats, which: Sequence[int]) -> Components:
         """The log volume as a mixture at every node, given some of the levels, with the likelihood in its
@@ -255,10 +255,10 @@ class _Model:
         twin = np.zeros(len(a), dtype=np.bool_) if scouting else slowed > k
         amount, gain = self.courses(np.concatenate([a, a[twin]]), np.concatenate([slowed, slowed[twin] + _TWIN]))
         beside = amount[len(a) :]
-        amount, shared = amount[: len(a)], covariance(np.zeros(len(self.levels)), gain[: len(a)], self.intake.variance)
+        amount, root = amount[: len(a)], self.shared_root(gain[: len(a)])
         amount[twin] += (beside - amount[twin]) * ((k - slowed)[twin] / _TWIN)[:, None]
         ends = np.cumsum([0, *(len(axis) ** 2 for axis in axes)])
-        return [_Table(axis, amount[u:v], shared[u:v]) for axis, u, v in zip(axes, ends[:-1], ends[1:], strict=True)]
+        return [_Table(axis, amount[u:v], root[u:v]) for axis, u, v in zip(axes, ends[:-1], ends[1:], strict=True)]
 
     def slowed(self, a: Floats, k: Floats) -> Floats:
         """log kappa, raised to what the engine takes in its first class of steps."""
@@ -271,7 +271,7 @@ class _Model:
         Where the extrapolated fastest nodes do carry mass, they are followed themselves.
         """
         a, k = square(frame, axis)
-        found = self.weigh(a, k, refine(table.axis, axis, table.log_amount), refine(table.axis, axis, table.shared))
+        found = self.between(frame, axis, table)
         fast = self.slowed(a, k) > k
         if scouting or not fast.any():
             return found
@@ -285,25 +285,35 @@ class _Model:
         some = (self.slowed(u, v) > v) & (self.volume.log_density(u, v) + most > best - _HOPELESS)
         if not some.any():
             return found
-        amount, shared = table.log_amount.copy(), table.shared.copy()
+        amount, root = table.log_amount.copy(), table.shared_root.copy()
         amount[some], gain = self.courses(u[some], v[some])
-        shared[some] = covariance(np.zeros(len(self.levels)), gain, self.intake.variance)
-        return self.weigh(a, k, refine(table.axis, axis, amount), refine(table.axis, axis, shared))
+        root[some] = self.shared_root(gain)
+        return self.between(frame, axis, _Table(table.axis, amount, root))
+
+    def between(self, frame: Frame, axis: Floats, table: _Table) -> Nodes:
+        """The nodes of an axis by the courses of a table."""
+        root = refine(table.axis, axis, table.shared_root)
+        return self.weigh(
+            *square(frame, axis), refine(table.axis, axis, table.log_amount), root @ root.transpose(0, 2, 1)
+        )
+
+    def shared(self, gain: Floats) -> Floats:
+        """What intake adds to the covariance of the log levels, shape (nodes, m, m)."""
+        return covariance(np.zeros(len(self.levels)), gain, self.intake.variance)
+
+    def shared_root(self, gain: Floats) -> Floats:
+        """A lower triangular root of `shared`: interpolated, it still stands for a covariance."""
+        shared = self.shared(gain)
+        diagonal = np.arange(len(self.levels))
+        shared[:, diagonal, diagonal] += 1e-10 * np.max(shared[:, diagonal, diagonal], axis=1)[:, None] + 1e-14
+        found: Floats = np.asarray(np.linalg.cholesky(shared), dtype=np.float64)
+        return found
 
     def weigh(self, a: Floats, k: Floats, log_amount: Floats, shared: Floats) -> Nodes:
         """Log posterior density of points (not normalised) with their mixtures, given the course there."""
         m = len(self.levels)
         diagonal = np.arange(m)
-        # an interpolated covariance is kept one
-        shared[:, diagonal, diagonal] = np.maximum(shared[:, diagonal, diagonal], 0.0)
-        sd = np.sqrt(shared[:, diagonal, diagonal])
-        bound = sd[:, :, None] * sd[:, None, :]
-        cov = np.clip(shared, -bound, bound)
-        if m > 2:
-            # with three levels or more that is not enough: whatever would vary less than nothing is taken out
-            sizes, ways = np.linalg.eigh(cov)
-            odd = sizes[:, 0] < 0.0
-            cov[odd] = (ways[odd] * np.maximum(sizes[odd], 0.0)[:, None, :]) @ ways[odd].transpose(0, 2, 1)
+        cov = shared.copy()
         cov[:, diagonal, diagonal] += self.own
         prior = self.volume.log_density(a, k)
         found = self.parts(self.residual(log_amount, self.volume.log_volume(a, k)), cov, range(m))
@@ -322,12 +332,12 @@ class _Model:
 
 @dataclass(frozen=True)
 class _Table:
-    """Courses at the nodes of a coarse axis: log amounts (c * c, m) and what intake adds to their covariance
-    (c * c, m, m)."""
+    """Courses at the nodes of a coarse axis: log amounts (c * c, m) and the root of what intake adds to their
+    covariance (c * c, m, m)."""
 
     axis: Floats
     log_amount: Floats
-    shared: Floats
+    shared_root: Floats
 
 
 class _Twofold:
@@ -445,7 +455,9 @@ def from_record(
         estimate = prior_only(prior, n)
         chances = {r: _normal_chance(prior, r) for r in rates_mg_per_day}
         return replace(estimate, diagnostics={**estimate.diagnostics, "no_steady_state": chances})
-    model = _model(record, levels, prior, spread)
+    # the order in which levels are given must not change a bit of the answer
+    order = sorted(range(len(levels)), key=lambda j: (levels[j].time_day, levels[j].level_mg_per_L))
+    model = _model(record, [levels[j] for j in order], prior, spread)
     answer, report = _certified(model, prior, rates_mg_per_day)
     a, k, u = draw(answer, n)
     log_volume = model.volume.log_volume(a, k) + u
@@ -469,7 +481,7 @@ def from_record(
         summary=bands,
         correlation=log_correlation(vmax, km, weights),
         volume_from="record" if learned else "population",
-        fit=_fit(model, answer),
+        fit=tuple(x for _, x in sorted(zip(order, _fit(model, answer), strict=True), key=lambda pair: pair[0])),
         diagnostics={
             "population": prior.population,
             "levels": len(levels),
@@ -636,7 +648,7 @@ def at_points(
     model = _model(record, levels, prior, spread)
     a, k = np.log(vmax_mg_per_day), np.log(km_mg_per_L) + np.log(volume_L)
     log_amount, gain = model.courses(a, k)
-    found = model.weigh(a, k, log_amount, covariance(np.zeros(len(levels)), gain, model.intake.variance))
+    found = model.weigh(a, k, log_amount, model.shared(gain))
     return np.exp(found.log_amount) / volume_L[:, None], found.log_density
 
 

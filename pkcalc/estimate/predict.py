@@ -61,13 +61,13 @@ def predicted_levels(
     plan = plan_intake(full, days, spread)
     vmax, volume = estimate.vmax_mg_per_day, volume_of(estimate)
     kappa = estimate.km_mg_per_L * volume
-    course = flow.amounts(full, plan.sample_days, vmax, kappa, volume_L=volume, typical_per_day=typical_per_day)
-    gain = intake_gain(plan, full, course, vmax, kappa, volume_L=volume)
+    course, faded = flow.fading(full, plan.sample_days, vmax, kappa, volume_L=volume, typical_per_day=typical_per_day)
+    gain = intake_gain(plan, course, faded)
     log_level = np.log(course[:, plan.level_at]) - np.log(volume)[:, None]
     m, n = len(levels), len(vmax)
     noise = np.random.default_rng(_SEED)
     # doses after the last level: taken or not, drawn one by one; the levels say nothing of them but the habit
-    told = np.any(plan.absorbed[:m] > 0, axis=0)
+    told = np.any(plan.absorbed[:m] > 0, axis=(0, 2))
     to_come = np.zeros(plan.groups, dtype=bool)
     if plan.groups == len(told) + 1:
         to_come[:-1] = ~told

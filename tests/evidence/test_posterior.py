@@ -13,6 +13,7 @@ from dataclasses import dataclass
 
 import numpy as np
 import pytest
+from scipy.optimize import brentq
 
 from pkcalc import flow
 from pkcalc.estimate.error_model import LevelData, RecordSpread
@@ -149,24 +150,29 @@ def plain_grid(case: Simulated, spread: RecordSpread, rate: float, n: int = 110,
     w = np.exp(value - value.max())
     w /= w.sum()
 
-    def quantiles(axis_values: np.ndarray, weights: np.ndarray) -> np.ndarray:
-        """Of a smooth marginal, from its histogram on a regular axis: cumulated at the bins' edges."""
-        edges = np.linspace(axis_values.min(), axis_values.max() + 1e-12, 400)
-        mass, _ = np.histogram(axis_values, edges, weights=weights)
-        return np.interp([0.05, 0.5, 0.95], np.concatenate([[0.0], np.cumsum(mass)]), edges)
-
     per_node = w.sum(axis=1)
     by_a = per_node.reshape(n, n).sum(axis=1)
     edges = np.concatenate([[a[0] - 0.5 * (a[1] - a[0])], a + 0.5 * (a[1] - a[0])])
     cumulative = np.concatenate([[0.0], np.cumsum(by_a)])
     vmax = np.interp([0.05, 0.5, 0.95], cumulative, edges)
     none = float(np.interp(math.log(rate), edges, cumulative))
-    km_values = (k[:, None] - volume_axis).ravel()
-    km = quantiles(km_values, w.ravel())
     by_l = w.sum(axis=0)
     step = volume_axis[1] - volume_axis[0]
     l_edges = np.concatenate([[volume_axis[0] - 0.5 * step], volume_axis + 0.5 * step])
     volume = np.interp([0.05, 0.5, 0.95], np.concatenate([[0.0], np.cumsum(by_l)]), l_edges)
+
+    # log Km = k - l is below t where l lies above k - t: at every node from its own cumulated volumes
+    up_to = np.concatenate([np.zeros((len(k), 1)), np.cumsum(w, axis=1)], axis=1)
+    row = np.arange(len(k))
+
+    def below(t: float) -> float:
+        place = np.clip((k - t - l_edges[0]) / step, 0.0, len(volume_axis))
+        cell = np.minimum(place.astype(int), len(volume_axis) - 1)
+        part = place - cell
+        return 1.0 - float(np.sum(up_to[row, cell] * (1 - part) + up_to[row, cell + 1] * part))
+
+    ends = float(k.min() - volume_axis[-1]), float(k.max() - volume_axis[0])
+    km = [brentq(lambda t, p=p: below(t) - p, *ends) for p in (0.05, 0.5, 0.95)]
     return np.exp(np.array([vmax, km, volume])), none
 
 

@@ -105,8 +105,8 @@ def test_more_doubt_never_makes_a_level_more_certain(ward, vmax: float, kappa: f
     before = np.diag(own)
     for share in (0.02, 0.1, 0.3):
         plan = plan_intake(record, days, RecordSpread(share))
-        course = flow.amounts(record, plan.sample_days, [vmax], [kappa])
-        gain = intake_gain(plan, record, course, np.array([vmax]), np.array([kappa]))
+        course, faded = flow.fading(record, plan.sample_days, [vmax], [kappa])
+        gain = intake_gain(plan, course, faded)
         assert np.all(gain >= 0)
         s = covariance(own, gain, plan.variance)[0]
         assert np.linalg.eigvalsh(s - before).min() > -1e-9

@@ -132,7 +132,14 @@ def assert_no_number(consult: Consult) -> None:
 
 
 def test_a_broken_engine_stops_the_consult(monkeypatch: pytest.MonkeyPatch) -> None:
+    right = flow.fading
+
+    def broken(*given, **named):
+        amounts, faded = right(*given, **named)
+        return 1.03 * amounts, faded
+
     monkeypatch.setattr(flow, "amounts", scaled(flow.amounts, 1.03))
+    monkeypatch.setattr(flow, "fading", broken)
     consult = consult_of(short(proposed=PROPOSED))
     assert len([q for q in disagreeing(consult) if "by the record at" in q]) == 3
     assert_no_number(consult)

@@ -157,14 +157,14 @@ def test_sensitivity_to_each_dose_agrees_with_the_engine(absorption: Absorption,
     days = [5.3, 13.95]
     plan = plan_intake(record, days, SPREAD)
     vmax, kappa = np.array([330.0, 455.0, 700.0]), np.array([120.0, 245.0, 500.0])
-    course = flow.amounts(record, plan.sample_days, vmax, kappa)
-    ours = intake_gain(plan, record, course, vmax, kappa)
+    course, faded = flow.fading(record, plan.sample_days, vmax, kappa)
+    ours = intake_gain(plan, course, faded)
     windows = [(d.time_day, d.time_day + 0.5) for d in record.doses if d.time_day < 13.95]
     engine = flow.sensitivity(record, days, windows, vmax, kappa)
-    # each level's whole sensitivity, and its spread (what the estimate uses), to about a per cent
+    # each level's whole sensitivity, and its spread (what the estimate uses), to less than half a per cent
     single, habit = ours[:, :, :-1], ours[:, :, -1]
-    assert single.sum(axis=2) == pytest.approx(engine.sum(axis=2), rel=0.015)
-    assert np.sqrt((single**2).sum(axis=2)) == pytest.approx(np.sqrt((engine**2).sum(axis=2)), rel=0.015)
+    assert single.sum(axis=2) == pytest.approx(engine.sum(axis=2), rel=0.004)
+    assert np.sqrt((single**2).sum(axis=2)) == pytest.approx(np.sqrt((engine**2).sum(axis=2)), rel=0.004)
     assert habit == pytest.approx(single.sum(axis=2) * 0.5 * 0.05 / 0.95)
 
 
@@ -178,8 +178,8 @@ def test_a_session_given_as_a_clearance_is_the_same_as_its_rate() -> None:
         record = Record(doses=doses, first_order=(path,))
         plan = plan_intake(record, [5.5], SPREAD)
         vmax, kappa, volume = np.array([455.0]), np.array([245.0]), np.array([49.0])
-        course = flow.amounts(record, plan.sample_days, vmax, kappa, volume_L=volume)
-        gains.append(intake_gain(plan, record, course, vmax, kappa, volume_L=volume))
+        course, faded = flow.fading(record, plan.sample_days, vmax, kappa, volume_L=volume)
+        gains.append(intake_gain(plan, course, faded))
     assert gains[1] == pytest.approx(gains[0])
 
 
@@ -220,8 +220,8 @@ def test_spread_is_that_of_simulated_missed_doses(rate: float, per_day: int, day
         found.append(math.log(flow.amounts(record, [days], 455.0, 245.0)[0, 0]))
     record = taken_on_average(Record(doses=tuple(planned)), SPREAD)
     plan = plan_intake(record, [float(days)], SPREAD)
-    course = flow.amounts(record, plan.sample_days, 455.0, 245.0)
-    gain = intake_gain(plan, record, course, np.array([455.0]), np.array([245.0]))[:, :, :-1]
+    course, faded = flow.fading(record, plan.sample_days, 455.0, 245.0)
+    gain = intake_gain(plan, course, faded)[:, :, :-1]
     sd = math.sqrt(covariance(np.zeros(1), gain, plan.variance[:-1])[0, 0, 0])
     mean = math.log(course[0, plan.level_at[0]])
     # the standard error of a standard deviation from 150 is 6 %, more for a skewed one
