@@ -67,7 +67,22 @@ def _question(consult: Consult) -> tuple[str, ...]:
         f"{goal.origin}); critical from {show(goal.critical_mg_per_L, 'mg/L')}"
         f"{hours.also(consult, goal.critical_mg_per_L)}."
     )
-    return tuple(lines)
+    return (*lines, *_goal_as_reported(consult))
+
+
+def _goal_as_reported(consult: Consult) -> list[str]:
+    """Target, aim and critical level as the laboratory will report them, where that is another number."""
+    goal, scale = consult.goal, consult.scale
+    if consult.profile.binding is None:
+        return []
+    ways = [(scale.words, scale.total)] if scale.total_factor != 1.0 else []
+    ways += [("free level", scale.free)] if reports_free(consult) else []
+    return [
+        f"As reported ({words}): target {show_number(report(goal.low_mg_per_L))} to "
+        f"{show(report(goal.high_mg_per_L), 'mg/L')}, aim {show(report(goal.aim_mg_per_L), 'mg/L')}, critical from "
+        f"{show(report(goal.critical_mg_per_L), 'mg/L')}."
+        for words, report in ways
+    ]
 
 
 def basis_words(consult: Consult) -> str:

@@ -148,6 +148,20 @@ def test_what_was_forecast_then_is_set_beside_what_came() -> None:
     assert [r[-2:] for r in section.table.rows] == [("8", "inside"), ("20", "above")]
 
 
+def test_the_target_stands_on_the_laboratory_s_scale_too() -> None:
+    question = parts(compose(demo("low-albumin")))["Question"]
+    assert (
+        "As reported (total as the laboratory reports it at albumin 24 g/L): target 5.8 to 11.6 mg/L, aim 8.7 mg/L, "
+        "critical from 17.4 mg/L."
+    ) in question
+    assert "As reported" not in parts(compose(demo("clean-pair")))["Question"]
+    free = [
+        {**x, "kind": "free", "value": v} for x, v in zip(cases.PLAIN["levels"], ("0.8 mg/L", "2 mg/L"), strict=True)
+    ]
+    question = parts(compose(run_consult(cases.plain(levels=free))))["Question"]
+    assert "As reported (free level): target 1 to 2 mg/L, aim 1.5 mg/L, critical from 3 mg/L." in question
+
+
 # --- PDF -----------------------------------------------------------------------------------------------------
 
 
