@@ -410,8 +410,8 @@ def _counts(store: Store, folder: Folder, found: Findings) -> list[str]:
     if folder.strays:
         where = "; ".join(folder.strays_shown[:5])
         said.append(
-            f"{_count(folder.strays, 'run')} of rows without a patient in patients.csv: not used ({where}). If they are "
-            "somebody's, that patient's record is not whole."
+            f"{_count(folder.strays, 'run')} of rows without a patient in patients.csv: not used ({where}). If these "
+            "are somebody's, that patient's record is not whole."
         )
     if store.missing():
         said.append(f"Missing: {_count(len(store.missing()), 'part')}. This report is not of the whole folder.")
