@@ -7,6 +7,7 @@ from collections.abc import Sequence
 
 from pkcalc import __version__, entries
 from pkcalc import plan as planning
+from pkcalc.cautions import rules_of
 from pkcalc.clock import show_time
 from pkcalc.consult import Consult, Shown
 from pkcalc.estimate.result import Band
@@ -377,9 +378,12 @@ def next_level(consult: Consult) -> tuple[str, ...]:
     lines.append(f"If no load is given: {found.action}" if loaded else found.action)
     if found.safety is not None:
         lines.append(f"Early safety level: {found.safety_action}")
+    # a drug whose levels a gel lowers has a caution for it
+    gel = any(rule.when == "gel_tube" for rule in rules_of(consult.profile.id))
+    tube = " into a tube without gel" if gel else ""
     free = " together with a free level" if any(o.level.kind == "free" for o in consult.observations) else ""
     lines.append(
-        f"Draw just before the dose{free}, with albumin from the same sample; state the time of the last dose."
+        f"Draw just before the dose{tube}{free}, with albumin from the same sample; state the time of the last dose."
     )
     lines.append(f"These forecasts hold for {found.regimen_words}, with feeds and other drugs as now.")
     return tuple(lines)

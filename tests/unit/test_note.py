@@ -90,6 +90,13 @@ def test_the_next_level_has_an_action_line() -> None:
     assert "means rising faster than forecast: call." in text
 
 
+def test_the_next_level_names_the_tube_and_the_albumin() -> None:
+    assert (
+        "Draw just before the dose into a tube without gel, with albumin from the same sample; state the time of the "
+        "last dose."
+    ) in parts(compose(demo("clean-pair")))["Next level"]
+
+
 def test_until_when_it_holds_and_what_was_ordered_instead() -> None:
     text = parts(compose(chosen()))["Valid until"]
     assert "Valid until the next level" in text
