@@ -46,7 +46,10 @@ class Switch:
 
 
 def switches(case: Case, setting: Setting, products: Sequence[str]) -> tuple[Switch, ...]:
-    """For every other form of the shelf, the regimen nearest to the present active amount."""
+    """For every other form of the shelf, the regimen nearest to the present active amount.
+
+    Not above it where more of the new form may reach the body, as from mouth to vein.
+    """
     course = present_course(case)
     now = setting.present_mg_per_day
     if course is None or course.regimen is None or now is None:
@@ -58,6 +61,9 @@ def switches(case: Case, setting: Setting, products: Sequence[str]) -> tuple[Swi
             continue
         mine = [p for p in products if profile.products[p].form == form]
         made = dispensable(profile, mine, largest_active_mg_per_day=now * (1 + NEAR))
+        if _shares(profile.forms[form], [profile.forms[f] for f in course.forms])[1] > 1 + 1e-9:
+            # more of the new form may arrive than the estimate takes: rounded up it would come on top of that
+            made = tuple(m for m in made if m.active_mg_per_day <= now * (1 + 1e-9))
         if made:
             nearest = min(made, key=lambda m: abs(m.active_mg_per_day - now))
             if abs(nearest.active_mg_per_day - now) <= NEAR * now:

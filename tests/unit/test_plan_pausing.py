@@ -266,6 +266,16 @@ def test_from_mouth_to_vein_the_level_may_rise_at_the_same_active_amount() -> No
     assert not any("until now" in x for x in capsules.lines)
 
 
+def test_from_mouth_to_vein_an_amount_is_never_rounded_up() -> None:
+    """330 mg a day: 350 mg would be nearer than 300 mg in 25 mg steps twice a day, and more than now."""
+    found = switches(doses=[{**PLAIN["doses"][0], "amount": "330 mg", "until": ""}])
+    for form in ("injection", "fosphenytoin-injection"):
+        assert found[form].change_percent == pytest.approx(100 * (300 / 330 - 1))
+    assert found["suspension"].active_mg_per_day == pytest.approx(300.0)
+    up = switches(doses=[{**PLAIN["doses"][0], "form": "injection", "amount": "175 mg", "every": "12 h", "until": ""}])
+    assert up["suspension"].change_percent > 0
+
+
 def test_nothing_to_switch_from() -> None:
     assert switching.switches(plain(doses=[], levels=[]), setting(), ()) == ()
     assert profile().forms["suspension"].routes == ("oral", "feeding tube")
