@@ -299,6 +299,24 @@ def test_the_pair_that_is_labelled_is_the_pair_that_is_worked(name: str) -> None
                 assert values == {float(text.replace(",", ""))}, line
 
 
+@pytest.mark.parametrize("name", ["ethanol-dialysis", pytest.param("ethanol-first-hours", marks=pytest.mark.slow)])
+def test_the_rate_by_hand_of_a_drug_told_by_the_hour(name: str) -> None:
+    (section,) = [s for s in document_of(name).sections if s.title == "By hand"]
+    what, rest = section.lines[0].split(": ", 1)
+    equation, numbers, result = rest.split(" = ")
+    step = Printed(section.lines[0], "", what, equation, numbers, result)
+    assert step.holds
+    point = consult_of(name).chosen
+    assert point is not None
+    bound = letters_of(equation, numbers)
+    assert bound["Vmax"] == pytest.approx(point.point.vmax_mg_per_day / 24, rel=5e-4)
+    assert bound["Km"] == pytest.approx(point.point.km_mg_per_L, rel=5e-4)
+    assert bound["aim"] == consult_of(name).goal.aim_mg_per_L
+    for found in NUMBER.finditer(numbers):
+        changed = numbers[: found.start()] + other_digit(numbers[found.start()]) + numbers[found.start() + 1 :]
+        assert not replace(step, numbers=changed).holds or not is_worked(equation, changed)
+
+
 def test_every_kind_of_line_is_met(monkeypatch: pytest.MonkeyPatch) -> None:
     """Each place of the module that makes a line makes one in some note of this test."""
     made: set[int] = set()
