@@ -4,8 +4,9 @@
         [--coverage 120] [--baseline 2]
 
 Four parts; each is left out by a 0, or by no number after --cohort.
-Speed: one synthetic department calculated by this process, then by one and by two Dask workers; estimates from levels
-are counted in a second pass over some of it.
+Speed: one synthetic department calculated by this process, then by one and by two Dask workers (processor time with the
+start of these processes, patients per second without it); estimates from levels are counted in a second pass over some
+of it.
 Cohort: departments of short synthetic records (one level, 4 to 10 days after the first dose), each level forecast
 from the population alone: processor time per patient and the largest memory of the process that ran it, from reading
 the tables to the written report. `--cohort 100000` is the large run: about half an hour of one processor.
@@ -59,9 +60,15 @@ def speed(base: Path, count: int) -> None:
     print("| run | patients/s | processor s per patient | ratio of patients/s |\n|---|---|---|---|")
     first = 0.0
     for name, workers in (("this process", 0), ("one worker", 1), ("two workers", 2)):
-        begin, used = time.perf_counter(), _used()
-        run(folder, base / f"r{workers}", plan=plan, site=SITE, workers=workers)
-        rate = count / (time.perf_counter() - begin)
+        used = _used()
+        done: list[tuple[float, int]] = []
+
+        def told(patients: int, done: list[tuple[float, int]] = done) -> None:
+            done.append((time.perf_counter(), patients))
+
+        run(folder, base / f"r{workers}", plan=plan, site=SITE, workers=workers, told=told)
+        # from the first that was done to the last: without the start of a cluster
+        rate = sum(n for _, n in done[1:]) / (done[-1][0] - done[0][0])
         first = first or rate
         print(f"| {name} | {rate:.2f} | {(_used() - used) / count:.2f} | {rate / first:.2f} |", flush=True)
     same = all(
