@@ -6,7 +6,7 @@ from dataclasses import dataclass
 
 from pkcalc import __version__
 from pkcalc.consult import Consult
-from pkcalc.entries import standing_words
+from pkcalc.entries import standing, standing_words
 from pkcalc.errors import Caution
 from pkcalc.note.annex import annex, estimate_lines
 from pkcalc.note.front import page_one, paste_block
@@ -55,6 +55,7 @@ class Document:
     sections: tuple[Section, ...]
     paste: tuple[str, ...]
     reentry: str
+    reentry_open: bool
     signatures: tuple[str, ...]
     defers: str
     versions: str
@@ -76,6 +77,7 @@ def compose(consult: Consult) -> Document:
         sections=annex(consult),
         paste=paste_block(consult),
         reentry=standing_words(case),
+        reentry_open=standing(case) in ("not resolved", "void"),
         signatures=(
             "Prepared by: ______________________    Time: ______________",
             "Independently checked by: _________________    Time: ______________",

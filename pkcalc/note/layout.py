@@ -84,6 +84,7 @@ def document_data(document: Document) -> dict[str, Any]:
         "sections": [section_data(s) for s in document.sections],
         "paste": "\n".join(document.paste),
         "reentry": document.reentry,
+        "reentry_open": document.reentry_open,
         "signatures": list(document.signatures),
         "defers": document.defers,
         "versions": document.versions,

@@ -490,6 +490,7 @@ def test_every_form_of_the_note_says_whether_it_was_done(noted: tuple[Case, Cons
     assert text.count(words) == 3  # annex, block to paste, beside the signatures
     html = " ".join(render_html(consult).split())
     assert html.count(words) == 3
+    assert f'<p class="urgent">{words}</p>' in html
     # beside the signatures, on page one
     assert html.index(words) < html.index("Prepared by:") < html.index('class="annex"')
     data = note_data(consult)["blind_reentry"]
