@@ -140,7 +140,9 @@ def test_safe_display_of_a_second_entry_of_a_follow_up_and_of_imports() -> None:
 @pytest.mark.slow
 def test_safe_display_of_the_self_check() -> None:
     text = record_text(accept())
-    assert [f for f in faults(text) if "exponent" not in f and "thousand" not in f] == []
+    # what a source printed stands there with the source's own digits
+    its_own = ("a trailing zero on an amount", "a thousand without its comma", "an exponent")
+    assert [f for f in faults(text) if not f.startswith(its_own)] == []
 
 
 @pytest.mark.parametrize(
