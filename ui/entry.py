@@ -514,6 +514,38 @@ def _part(values: dict[str, Any], key: str, value: str, units: tuple[str, ...], 
     values[unit_key or f"{key}_unit"] = unit
 
 
+#: Fields that hold a choice; every other field of a case holds text.
+_CHOICES = re.compile(
+    r"(?:drug|sex|weight_basis|population|method|albumin_method|albumin_after_infusion|target_kind|shelf|load_form"
+    r"|chosen|pasted_form|demo_name|[a-z_.0-9]*_unit|ctx\.[a-z0-9_]+"
+    r"|(?:dose|level|own)\.\d+\.(?:form|product|source|confirmed|given_by|unit|kind|on_dose|sample))"
+)
+_TEXTS = re.compile(
+    r"(?:question|now|age|weight|height|albumin|albumin_taken|target_low|target_high|target_reason|aim|load_aim|load_at"
+    r"|restart_level|plan_start|largest_step|own_words|next_draw|pasted|my_dose|my_level|ctx\.[a-z0-9_]+\.(?:since|detail)"
+    r"|(?:dose|level|own|dialysis)\.\d+\.(?:said|from|until|for_about|missed|value|drawn|normalised_by|albumin"
+    r"|clearance|other\.\w+))"
+)
+
+
+def emptied(values: Mapping[str, Any]) -> dict[str, Any]:
+    """The fields that hold something, each with nothing in it.
+
+    A browser keeps what stands in a field until it is told otherwise, also where the server has forgotten it.
+    """
+    found: dict[str, Any] = {}
+    for key in values:
+        if _CHOICES.fullmatch(key):
+            found[key] = None
+        elif _TEXTS.fullmatch(key):
+            found[key] = ""
+        elif key in ("products", "two"):
+            found[key] = []
+        elif key == "order_by_loss" or key.startswith("ask-"):
+            found[key] = False
+    return found
+
+
 # --- problems -> fields ----------------------------------------------------------------------------------
 
 _ROW = re.compile(r"^(Dose line|Level|Proposed regimen|Dialysis session) (\d+)(?:, (.*))?$", re.I)

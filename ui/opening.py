@@ -84,10 +84,13 @@ def forget(*keep: str) -> None:
     change, over what was edited since. The count of runs goes on: the browser knows a newer run by it.
     """
     kept = {key: st.session_state[key] for key in keep if key in st.session_state}
+    emptied = fields.emptied({str(key): None for key in st.session_state})
     turn, runs = st.session_state.get("turn", 0), st.session_state.get("runs", 0)
     for key in list(st.session_state):
         del st.session_state[key]
     st.session_state["turn"], st.session_state["runs"] = turn + 1, runs
+    for key, nothing in emptied.items():
+        st.session_state[key] = nothing
     for key, value in kept.items():
         st.session_state[key] = value
 

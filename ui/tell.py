@@ -180,7 +180,8 @@ def estimate(consult: Consult) -> None:
         spread = consult.observations[0].spread
         look.say(
             f"Spread of a level taken as {show_number(100 * spread.total_cv)} % in all ({spread.basis}), of "
-            f"which the assay is {show_number(100 * spread.assay_cv)} %. Both are set in the service's own settings file.",
+            f"which the assay is {show_number(100 * spread.assay_cv)} %. Both are set in the service's own "
+            "settings file.",
             "hint",
         )
 

@@ -1,7 +1,9 @@
 """From a change to the new number, in a real browser: `python tests/bench/bench_form.py [ROUNDS]`.
 
 Prints the wall time from leaving a field to the new answer on the page, beside the same consult run in this process
-just before, so that the ratio holds on a slow and on a busy machine alike.
+just before, so that the ratio holds on a slow and on a busy machine alike; the same for a value that was there before
+and for words alone, which work nothing out anew; and the time of a whole consult on one level by keyboard alone, typed
+without a pause for thought.
 """
 
 from __future__ import annotations
@@ -57,12 +59,33 @@ def main(rounds: int) -> None:
                     arg=old,
                 )
                 page.append(time.perf_counter() - begin)
+            again, words = [], []
+            for n in range(rounds):
+                again.append(changed(visit, field, f"{12 + (n + 1) % min(rounds, 5) / 10:g}"))
+                question = visit.page.get_by_label("Your own words on the note")
+                words.append(changed(visit, question, f"words {n}"))
             print(f"change to new number, median of {rounds}: {statistics.median(page):.2f} s on the page")
             print(f"the consult alone:                     {statistics.median(alone):.2f} s in this process")
+            print(f"a value that was there before:         {statistics.median(again):.2f} s on the page")
+            print(f"words alone:                           {statistics.median(words):.2f} s on the page")
+            start = time.perf_counter()
+            entries = tools.Visit(browser, address, 1440, 1000, False).one_level_consult()
+            print(
+                f"one level, {entries} entries by keyboard:    {time.perf_counter() - start:.1f} s, typed without a pause"
+            )
             print(f"ratio {statistics.median(page) / statistics.median(alone):.2f}")
             browser.close()
         finally:
             server.terminate()
+
+
+def changed(visit: Any, field: Any, value: str) -> float:
+    """Seconds from leaving a field to a page that has read it and stands still."""
+    field.fill(value)
+    begin = time.perf_counter()
+    field.press("Tab")
+    visit.settle()
+    return time.perf_counter() - begin
 
 
 def demonstration_text() -> str:

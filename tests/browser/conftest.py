@@ -192,9 +192,9 @@ class Visit:
 
     def unfold(self, title: str) -> None:
         """Open a folded question."""
-        fold = self.page.locator("details").filter(has=self.page.locator("summary").filter(has_text=title)).first
-        if fold.get_attribute("open") is None:
-            fold.locator("summary").first.click()
+        summary = self.page.locator("summary").filter(has_text=title).first
+        if summary.evaluate("e => !e.parentElement.open"):
+            summary.click()
         self.settle()
 
     def text(self) -> str:

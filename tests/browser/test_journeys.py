@@ -90,7 +90,7 @@ def test_a_second_person_types_the_case_again_and_the_note_says_so(visit: Visito
     v.open_case(PAIR)
     v.unfold("Blind re-entry by the second pharmacist")
     v.press("Put this entry aside and begin the second")
-    assert "350 mg" not in v.text()
+    assert entered(v) == []
     v.enter_pair("8", "21")
     v.press("The second entry is complete: compare the two")
     v.page.get_by_text("Forecasts of the two entries:").wait_for()
@@ -161,7 +161,7 @@ def test_typing_fast_and_changing_one_s_mind_ends_with_the_last_value(pair: Any)
 
 def test_very_long_and_hostile_text_stays_text_within_the_page(pair: Any) -> None:
     pair.unfold("How is the patient?")
-    pair.type("Why was the level drawn, and what is asked?", "<img src=x onerror=alert(1)>" + "W" * 400)
+    pair.type("Why was the level drawn, and what is asked?", "<img src=x onerror=alert(1)>" + "W" * 150)
     pair.page.get_by_label("Your own words on the note").fill("=HYPERLINK(1) " + "long words " * 300)
     pair.page.keyboard.press("Tab")
     text = pair.text()
@@ -247,6 +247,36 @@ def test_reload_and_back_forget_and_ask_first(visit: Visitor) -> None:
     text = v.text()
     assert "No numbers yet." in text
     assert not ANSWER.search(text)
+
+
+def entered(visitor: Any) -> list[str]:
+    """Everything that stands in a field of the page, in the browser."""
+    return [
+        x for x in visitor.page.locator("input[type=text], textarea").evaluate_all("all => all.map(e => e.value)") if x
+    ]
+
+
+def test_forgetting_and_the_second_entry_leave_no_field_filled(pair: Any) -> None:
+    pair.unfold("How is the patient?")
+    pair.type("Weight", "70 kg")
+    pair.page.locator(".st-key-ctx-overdose").get_by_text("no", exact=True).click()
+    pair.settle()
+    assert "300 mg daily" in entered(pair)
+    pair.unfold("Blind re-entry by the second pharmacist")
+    pair.press("Put this entry aside and begin the second")
+    assert entered(pair) == []
+    assert pair.page.locator("input[type=radio]:checked").count() == 0
+    pair.press("Leave the second entry and go back to the first")
+    assert "300 mg daily" in entered(pair)
+    assert ANSWER.search(pair.text())
+    pair.unfold("Open a demonstration or a case file")
+    pair.press("Start afresh")
+    assert entered(pair) == []
+    assert pair.page.locator("input[type=radio]:checked").count() == 0
+    assert not ANSWER.search(pair.text())
+    pair.type("Why was the level drawn, and what is asked?", "x")  # the browser sends all its fields again
+    assert "No numbers yet." in pair.text()
+    assert entered(pair) == ["x"]
 
 
 @pytest.mark.slow

@@ -3,10 +3,10 @@
 from __future__ import annotations
 
 import pytest
-from pkcalc_form.entry import case_of, field_of, fields_of, joined, parted
+from pkcalc_form.entry import case_of, emptied, field_of, fields_of, joined, parted
 from pkcalc_form.spoken import take_apart
 
-from pkcalc.case import CaseFile, check_case, dump_case_file, parse_case_text
+from pkcalc.case import CaseFile, DialysisFile, check_case, dump_case_file, parse_case_text
 from pkcalc.demos import demonstrations
 from pkcalc.errors import CaseError
 
@@ -155,6 +155,16 @@ def test_every_problem_of_a_field_finds_its_field() -> None:
     wanted = {"ctx.interacting_change" if k == "ctx.interacting_change.since" else k for k in wanted}
     assert wanted <= places | {"level.2.normalised_by"}
     assert "level.2.normalised_by" in places
+
+
+def test_every_field_of_a_case_can_be_emptied() -> None:
+    file = parse_case_text(FULL).model_copy(update={"dialysis": (DialysisFile.model_validate({"from": "2026-03-01"}),)})
+    values = fields_of(file)
+    plain = {k for k in values if not k.endswith((".base", "_rows")) and k not in ("base", "demonstration")}
+    assert set(emptied(values)) == plain
+    left = case_of(values | emptied(values) | {"base": None, "demonstration": None, "dialysis.1.base": None}).file
+    assert (left.doses, left.levels, left.dialysis, left.proposed) == ((), (), (), ())
+    assert left == CaseFile(pkcalc_case=1, drug="")
 
 
 def test_blank_rows_are_not_part_of_the_case() -> None:
