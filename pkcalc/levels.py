@@ -357,9 +357,12 @@ def _possible(
 
 
 def everyday_cv(profile: Profile, site: Site, assay_cv: float) -> float:
-    """What is left of the total spread under observed dosing once the assay is taken out of it."""
-    total = site.level_total_cv("observed") or profile.spread.total_cv["observed"]
-    return math.sqrt(max(total**2 - assay_cv**2, 0.0))
+    """What is left of a level's own spread, intake apart, once the assay is taken out of it.
+
+    A hospital that states its own total under observed dosing has measured just that.
+    """
+    own = site.level_total_cv("observed") or profile.spread.own_cv
+    return math.sqrt(max(own**2 - assay_cv**2, 0.0))
 
 
 def lab_scale(

@@ -132,6 +132,8 @@ class Target:
 class Spread:
     """Spread of a level. total_cv and intake_share by who gives the doses: observed, outpatient, doubtful.
 
+    own_cv: what assay, everyday variation and the moment of the draw make of a level, intake apart; the total under
+    observed dosing where the file does not say.
     intake_share: share of doses that differ from the record. wrong_level_chance: chance that a level is
     simply wrong (its spread is then multiplied by wrong_level_factor).
     """
@@ -139,6 +141,7 @@ class Spread:
     assay_cv: float
     assay_cv_range: tuple[float, float]
     total_cv: Mapping[str, float]
+    own_cv: float
     intake_share: Mapping[str, float]
     wrong_level_chance: float
     wrong_level_factor: float
@@ -1102,10 +1105,12 @@ _GIVERS = ("observed", "outpatient", "doubtful")
 
 def _spread(t: Table) -> Spread:
     total, intake = t.table("total_cv"), t.table("intake_share")
+    by_giver = {key: total.share(key) for key in _GIVERS}
     found = Spread(
         assay_cv=t.share("assay_cv"),
         assay_cv_range=t.span("assay_cv_range", "share"),
-        total_cv={key: total.share(key) for key in _GIVERS},
+        total_cv=by_giver,
+        own_cv=t.share("own_cv") if t.has("own_cv") else by_giver["observed"],
         intake_share={key: intake.share(key, zero=True) for key in _GIVERS},
         wrong_level_chance=t.share("wrong_level_chance"),
         wrong_level_factor=t.number("wrong_level_factor", "ratio", low=1.0),

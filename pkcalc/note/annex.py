@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+import math
+
 import numpy as np
 
 from pkcalc import entries
@@ -9,8 +11,10 @@ from pkcalc.clock import show_time
 from pkcalc.consult import Consult, Shown
 from pkcalc.dosing import active_mg
 from pkcalc.estimate.lines import LineFailure
+from pkcalc.estimate.posterior import WHOLE_RECORD
 from pkcalc.estimate.result import Estimate
 from pkcalc.forecast import scaled
+from pkcalc.levels import everyday_cv
 from pkcalc.note import hours, populations
 from pkcalc.note.acute import is_offered, limited, marked, too_high, with_reported
 from pkcalc.note.followup import follow_up_section
@@ -169,6 +173,12 @@ def _levels(consult: Consult) -> Section:
             f"({spread.basis}), of which the "
             f"assay is {show_number(100 * spread.assay_cv)} %."
         )
+        if WHOLE_RECORD in consult.estimates:
+            own = math.hypot(spread.assay_cv, everyday_cv(consult.profile, consult.site, spread.assay_cv))
+            lines.append(
+                "The whole record reckons doses missed unseen one by one and takes "
+                f"{show_number(100 * own, 2)} % for assay, day and moment of the draw."
+            )
     return Section("What was measured", tuple(lines))
 
 

@@ -2,13 +2,15 @@
 
 from __future__ import annotations
 
+import math
+from dataclasses import replace
 from typing import Any
 
 import pytest
 
 from pkcalc.consult import run_consult
 from pkcalc.drugs.profile import load_profile
-from pkcalc.levels import Observation, measured_free_fraction, observe, timing
+from pkcalc.levels import Observation, everyday_cv, measured_free_fraction, observe, timing
 from pkcalc.site import no_site
 from pkcalc.steadiness import steady_pairs
 from tests.unit.cases import PLAIN, levels, plain
@@ -227,3 +229,17 @@ def test_pregnancy_gives_no_single_reading_of_a_total() -> None:
     assert (o.low_mg_per_L, o.high_mg_per_L) == (9.4, 18.8)
     (free,) = seen(levels=one("0.94 mg/L", "free"), context={"pregnancy": "yes"})
     assert free.readable
+
+
+def test_everyday_variation_is_the_own_spread_without_the_assay() -> None:
+    assert everyday_cv(PROFILE, no_site(), 0.1) == pytest.approx(math.sqrt(PROFILE.spread.own_cv**2 - 0.01))
+    # a coarser assay leaves nothing over
+    assert everyday_cv(PROFILE, no_site(), 0.5) == 0.0
+    # a file that does not say takes the total under observed dosing
+    other = load_profile("theophylline")
+    assert other.spread.own_cv == other.spread.total_cv["observed"]
+
+
+def test_the_hospital_s_own_total_under_observed_dosing_wins() -> None:
+    site = replace(no_site(), total_cv={"observed": 0.2})
+    assert everyday_cv(PROFILE, site, 0.1) == pytest.approx(math.sqrt(0.03))
