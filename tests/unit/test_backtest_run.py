@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 import os
 import signal
 import subprocess
@@ -21,6 +22,7 @@ from pkcalc.backtest.outlook import (
     METHODS,
     NO_FORECAST,
     ONE,
+    PATIENT,
     PRIOR,
     SET_ASIDE,
     TWO,
@@ -134,6 +136,27 @@ def test_the_pair_gives_the_steady_level_of_the_formula(three: list[Row], tmp_pa
     km = (r2 - r1) / (r1 / 5 - r2 / 8)
     vmax = r1 + km * r1 / 5
     assert pair.forecast_mg_per_L == pytest.approx(km * r3 / (vmax - r3), rel=1e-9)
+
+
+def test_a_patient_with_one_level_is_not_placed_in_the_population(three: list[Row], tmp_path: Path) -> None:
+    """One level cannot tell Vmax from Km; placed all the same, such patients made the hint see a shift that was none."""
+    one = rows_of(tmp_path / "d", levels=ONE_LEVELS.splitlines()[0] + "\n")
+    assert [r.kind for r in one] == [FORECAST]
+    assert [r.earlier for r in three if r.kind == PATIENT] == [3]
+
+
+def test_the_place_in_the_population_by_weighing_is_that_of_a_new_estimate(
+    three: list[Row], tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    """The draws that forecast the last level, weighed by what came, against an estimate from all levels."""
+    monkeypatch.setattr("pkcalc.backtest.outlook._EFFECTIVE_DRAWS", math.inf)
+    anew = rows_of(tmp_path / "d")
+    a, b = (next(r for r in rows if r.kind == PATIENT) for rows in (three, anew))
+    assert a != b
+    for mean, variance in (("log_vmax", "var_vmax"), ("log_km", "var_km")):
+        spread = math.sqrt(getattr(b, variance))
+        assert getattr(a, mean) == pytest.approx(getattr(b, mean), abs=0.15 * spread)
+        assert math.sqrt(getattr(a, variance)) == pytest.approx(spread, rel=0.15)
 
 
 def test_nothing_that_came_later_moves_a_forecast(three: list[Row], tmp_path: Path) -> None:
