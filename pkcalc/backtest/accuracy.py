@@ -92,7 +92,7 @@ class Sums:
             return Share(value, None, None)
         variance = self._variance(column, value)
         # all alike: nothing is seen of how a patient's levels go together, so patients are counted
-        n = min(value * (1 - value) / variance, self.total[ROWS]) if variance > 0 else float(self.patients)
+        n = min(value * (1 - value) / variance, float(self.total[ROWS])) if variance > 0 else float(self.patients)
         z2 = self._student() ** 2 / n
         centre = (value + z2 / 2) / (1 + z2)
         half = math.sqrt(z2 * value * (1 - value) + z2**2 / 4) / (1 + z2)

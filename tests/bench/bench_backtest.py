@@ -34,6 +34,7 @@ from pathlib import Path
 
 import numpy as np
 
+from pkcalc.backtest.accuracy import ABSOLUTE, DIFFERENCE, IN50, IN90
 from pkcalc.backtest.department import Errors, ward_of, write_department
 from pkcalc.backtest.folder import open_folder
 from pkcalc.backtest.outlook import METHODS, PRIOR, outlooks
@@ -145,7 +146,7 @@ def one(path: Path) -> None:
     used = time.process_time() - begin
     memory = resource.getrusage(resource.RUSAGE_SELF).ru_maxrss / 1024
     tally = found.by_method[PRIOR]
-    print(json.dumps([used, memory, tally.sums.rows, tally.sums.mean(8).value]))
+    print(json.dumps([used, memory, tally.sums.rows, tally.sums.share(IN90).value]))
 
 
 def coverage(base: Path, count: int) -> None:
@@ -163,18 +164,18 @@ def coverage(base: Path, count: int) -> None:
         found = findings(outcome.store, SITE)
         for method in METHODS:
             tally = found.by_method[method]
-            inner, outer = tally.sums.mean(7), tally.sums.mean(8)
+            inner, outer = tally.sums.share(IN50), tally.sums.share(IN90)
             reach = "too few patients"
             if outer.low is not None and outer.high is not None:
                 reach = f"{100 * outer.low:.1f} to {100 * outer.high:.1f}"
             print(
                 f"| {name} | {method} | {tally.sums.rows} | {100 * inner.value:.1f} | "
                 f"{100 * outer.value:.1f} ({reach}) | "
-                f"{tally.sums.mean(2).value:.2f}, {tally.median_absolute_error():.2f} |",
+                f"{tally.sums.mean(ABSOLUTE).value:.2f}, {tally.median_absolute_error():.2f} |",
                 flush=True,
             )
         for (a, b), sums in found.against.items():
-            d = sums.mean(1)
+            d = sums.mean(DIFFERENCE)
             said.append(
                 f"{name}: {b} less {a}, mean absolute error on the same {sums.rows} levels: {d.value:.2f} "
                 f"({d.low or math.nan:.2f} to {d.high or math.nan:.2f}) mg/L."

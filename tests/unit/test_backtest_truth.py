@@ -7,7 +7,7 @@ from pathlib import Path
 
 import pytest
 
-from pkcalc.backtest.accuracy import Findings, Share, Sums
+from pkcalc.backtest.accuracy import DIFFERENCE, HIGHER, IN50, IN90, Findings, Share, Sums
 from pkcalc.backtest.department import Errors, ward_of, write_department
 from pkcalc.backtest.folder import open_folder
 from pkcalc.backtest.outlook import METHODS, ONE, PRIOR, TWO, WHOLE
@@ -47,7 +47,7 @@ def agrees(share: Share, stated: float) -> bool:
 
 def nearer(sums: Sums) -> bool:
     """The second method's mean absolute error on the same levels is smaller, beyond its interval."""
-    difference = sums.mean(1)
+    difference = sums.mean(DIFFERENCE)
     return difference.high is not None and difference.high < 0
 
 
@@ -57,8 +57,8 @@ def test_intervals_from_the_population_hold_what_they_state(tmp_path: Path) -> N
     sums = seen.by_method[PRIOR].sums
     assert sums.rows >= 140
     assert set(seen.by_method) == {PRIOR}
-    assert agrees(sums.mean(8), 0.9)
-    assert agrees(sums.mean(7), 0.5)
+    assert agrees(sums.share(IN90), 0.9)
+    assert agrees(sums.share(IN50), 0.5)
 
 
 @pytest.mark.parametrize(("vmax_factor", "off"), [(1.0, False), (0.7, True)])
@@ -82,14 +82,17 @@ def test_intervals_hold_methods_rank_and_nothing_is_suggested(tmp_path: Path) ->
     assert whole.rows >= 200
     for method in (PRIOR, ONE, WHOLE):
         sums = seen.by_method[method].sums
-        assert agrees(sums.mean(8), 0.9), method
-        assert agrees(sums.mean(7), 0.5), method
+        assert agrees(sums.share(IN90), 0.9), method
+        assert agrees(sums.share(IN50), 0.5), method
+    assert agrees(whole.share(HIGHER), 0.5)
+    # on the same levels: the population alone is furthest off, then the two-level formula; one level more is worth
+    # less than the first, but never a loss
     assert seen.by_method[TWO].sums.rows >= 40
     assert nearer(seen.against[(PRIOR, ONE)])
     assert nearer(seen.against[(PRIOR, TWO)])
     assert nearer(seen.against[(PRIOR, WHOLE)])
-    assert nearer(seen.against[(TWO, WHOLE)])
-    # one level more is worth less than the first, but never a loss
-    assert seen.against[(ONE, WHOLE)].mean(1).value < 0
+    assert seen.against[(TWO, WHOLE)].mean(DIFFERENCE).value < 0
+    assert seen.against[(ONE, TWO)].mean(DIFFERENCE).value > 0
+    assert seen.against[(ONE, WHOLE)].mean(DIFFERENCE).value < 0
     (hint,) = hints(seen)
     assert hint.off == ()
