@@ -5,6 +5,7 @@ For teaching only: the sizes of the events are made up.
 
 from __future__ import annotations
 
+import math
 from collections.abc import Mapping
 from dataclasses import dataclass
 from typing import Literal
@@ -14,7 +15,7 @@ import numpy as np
 from pkcalc import formulas
 from pkcalc.estimate.lines import DIRECT_LINEAR
 from pkcalc.estimate.teaching import LEVEL_AGAINST_DOSE, PICTURES, Trace, at_dose, true_line
-from pkcalc.units import show, show_number
+from pkcalc.units import show, show_number, show_up_to
 
 _MOST_TIMES = 5.0
 
@@ -126,13 +127,15 @@ class EventEffect:
 
 @dataclass(frozen=True)
 class Patient:
-    """The patient of the lesson: what the events act on. All above 0; volume_L None where none is known."""
+    """The patient of the lesson: what the events act on. All above 0; volume_L None where none is known; a steady
+    level above told_up_to_mg_per_L is told in words."""
 
     vmax_mg_per_day: float
     km_mg_per_L: float
     dose_rate_mg_per_day: float
     aim_mg_per_L: float
     volume_L: float | None = None
+    told_up_to_mg_per_L: float = math.inf
 
 
 def clinic_events(patient: Patient, sizes: Sizes | None = None) -> tuple[EventEffect, ...]:
@@ -184,16 +187,19 @@ def _holds(level: float, vmax: float, km: float) -> float:
     return float(formulas.dose_rate_for_level(level_mg_per_L=level, vmax_mg_per_day=vmax, km_mg_per_L=km))
 
 
-def _level_words(level: float | None) -> str:
-    return "no steady level: the dose is more than the body can remove" if level is None else show(level, "mg/L")
+def _level_words(patient: Patient, level: float | None) -> str:
+    if level is None:
+        return "no steady level: the dose is more than the body can remove"
+    return show_up_to(level, "mg/L", patient.told_up_to_mg_per_L)
 
 
 def _effect_words(patient: Patient, before: float | None, after: float | None, dose_after: float) -> str:
     dose_before = _holds(patient.aim_mg_per_L, patient.vmax_mg_per_day, patient.km_mg_per_L)
     return (
         f"On {show(patient.dose_rate_mg_per_day, 'mg/day')} the steady level goes from "
-        f"{_level_words(before)} to {_level_words(after)}. To hold {show(patient.aim_mg_per_L, 'mg/L')} it "
-        f"now takes {show(dose_after, 'mg/day')} instead of {show(dose_before, 'mg/day')}."
+        f"{_level_words(patient, before)} to {_level_words(patient, after)}. "
+        f"To hold {show(patient.aim_mg_per_L, 'mg/L')} it now takes "
+        f"{show(dose_after, 'mg/day')} instead of {show(dose_before, 'mg/day')}."
     )
 
 
@@ -303,7 +309,7 @@ def _missed(patient: Patient, missed_days: float, restarted_days: float, volume_
         f"more than {show_number(_MOST_TIMES)} times the present dose, which is no answer"
         if wrong > _MOST_TIMES * rate
         else f"{show(wrong, 'mg/day')}, and on that the patient would come to "
-        f"{_level_words(_settles_at(wrong, vmax, km))}"
+        f"{_level_words(patient, _settles_at(wrong, vmax, km))}"
     )
     return EventEffect(
         name="missed week" if missed_days == 7 else "missed doses",

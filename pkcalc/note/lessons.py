@@ -12,7 +12,7 @@ from pkcalc.estimate import lines
 from pkcalc.estimate.events import Patient, clinic_events
 from pkcalc.estimate.teaching import BANNER, Picture, pictures
 from pkcalc.note.charts import BLACK, BLUE, GREY, ORANGE, RED, Chart, finish
-from pkcalc.note.words import Section
+from pkcalc.note.words import Section, told_up_to
 
 #: How each layer of a picture is drawn: mark, colour, width or size, dash.
 _LOOK = {
@@ -115,6 +115,7 @@ def _events(consult: Consult) -> tuple[Section, ...]:
         dose_rate_mg_per_day=rate,
         aim_mg_per_L=consult.goal.aim_mg_per_L,
         volume_L=estimate.summary["volume_L"].median,
+        told_up_to_mg_per_L=told_up_to(consult),
     )
     return tuple(
         Section(

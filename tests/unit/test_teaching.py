@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+from dataclasses import replace
 
 import numpy as np
 import pytest
@@ -317,3 +318,13 @@ def test_the_true_curve_passes_through_half_of_vmax_at_km():
     curve = true_line(LEVEL_AGAINST_DOSE, vmax=450, km=5, layer="before", beside_km=5)
     assert np.interp(5.0, curve.y, curve.x) == pytest.approx(225, rel=1e-3)
     assert max(curve.x) < 450
+
+
+def test_a_steady_level_beyond_what_is_told_in_numbers_stands_in_words() -> None:
+    # 300 mg/day is at 10 mg/L (Vmax 450, Km 5); with Vmax x 0.75 it would settle at 40 mg/L
+    inhibitor = next(e for e in clinic_events(PATIENT) if e.name == "inhibitor started")
+    assert inhibitor.level_after_mg_per_L == pytest.approx(40.0)
+    assert "from 10 mg/L to 40 mg/L." in inhibitor.text
+    capped = replace(PATIENT, told_up_to_mg_per_L=30.0)
+    inhibitor = next(e for e in clinic_events(capped) if e.name == "inhibitor started")
+    assert "from 10 mg/L to above 30 mg/L." in inhibitor.text
