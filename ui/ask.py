@@ -184,7 +184,7 @@ def patient_sentence(asked: Asked) -> str:
         if answer == "yes":
             parts.append(q.short)
         elif answer == "no" and q.group == "first" and q.told:
-            parts.append(f"no {q.short}")
+            parts.append(f"{q.short}: no")
     if not parts:
         return ""
     open_questions = sum(not text(v, f"ctx.{q.id}") for q in every)

@@ -71,7 +71,8 @@ def test_a_consult_on_one_level_by_keyboard_alone_takes_few_entries(visit: Visit
     )
     assert "330 mg phenytoin sodium daily" in text
     assert re.search(r"Every dose taken: chance above 30 mg/L or of no steady state", text)
-    assert re.search(r"6 · When do we look again\? On \d+ Apr 2026|6 · When do we look again\? On \d+ \w{3}", text)
+    # nobody said that the doses were taken, so more is not offered; the page says what the note says
+    assert "6 · When do we look again? No draw is planned on 330 mg phenytoin sodium daily (NOT OFFERED)." in text
     assert grave(v) == []
 
 
@@ -206,12 +207,9 @@ def test_the_printed_page_holds_cautions_and_results_and_no_control(visit: Visit
     assert ANSWER.search(paper)
     assert "Doses around the present one" in paper
     assert "Next level" in paper
-    for control in ("Add a dose line", "Add a level", "Note as PDF", "Start afresh", "Which regimen do you choose?"):
-        assert control in v.page.locator("body").inner_text() or control == "Start afresh" or "Add" in control
+    for control in ("Which regimen do you choose?", "Note as PDF", "Add another regimen of your own", "Start afresh"):
+        assert v.page.get_by_text(control).count()
         assert control not in paper
-    v.page.locator(".st-key-step-4 .pk-chart").first.wait_for()
-    log = "".join(v.page.locator(".pk-scroll").evaluate_all("all => all.map(e => e.scrollWidth > 5000 ? 'wide' : '')"))
-    assert log == ""
 
 
 def test_two_browsers_at_once_never_mix(visit: Visitor, pair: Any) -> None:
