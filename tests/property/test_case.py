@@ -22,6 +22,7 @@ from pkcalc.case import (
     ChosenFile,
     ClockDoseFile,
     DoseFile,
+    EarlierForecastFile,
     LevelFile,
     PatientFile,
     PlanFile,
@@ -100,6 +101,16 @@ REENTRIES = st.builds(
     before(30),
     st.booleans(),
 )
+FORECASTS = st.builds(
+    EarlierForecastFile,
+    drawn=before(60),
+    kind=st.sampled_from(["total", "free", "normalised"]),
+    median=st.just("10.5 mg/L"),
+    low=st.just("8 mg/L"),
+    high=st.sampled_from(["10.5 mg/L", "25 mcg/mL"]),
+    regimen=WORDS,
+    version=st.sampled_from(["", "0.1.0"]),
+)
 CASES = st.builds(
     CaseFile,
     pkcalc_case=st.just(1),
@@ -128,6 +139,7 @@ CASES = st.builds(
     proposed=st.lists(st.builds(ProposedFile, form=ORAL, daily=daily()), max_size=2).map(tuple),
     plan=st.builds(PlanFile, shelf=st.sampled_from(["", *PROFILE.shelves]), order_by_loss=st.booleans()),
     chosen=st.none() | st.builds(ChosenFile, words=WORDS),
+    forecast_then=st.lists(FORECASTS, max_size=3).map(tuple),
     reentry=st.none() | REENTRIES,
 )
 
