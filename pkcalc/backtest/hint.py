@@ -24,6 +24,9 @@ Floats = NDArray[np.float64]
 #: either way (a factor of 12), there is no interval to tell.
 _LEAST, _MOST, _WIDEST = -5.0, 1.0, 2.5
 
+#: Normal quantile of a chance of 2.5 % over that of 5 %, both ends counted: two questions are asked (Bonferroni).
+_TOGETHER = 2.241403 / 1.959964
+
 
 @dataclass(frozen=True)
 class Hint:
@@ -44,12 +47,14 @@ class Hint:
 
     @property
     def off(self) -> tuple[str, ...]:
-        """Of the two means, those whose interval does not hold 1."""
-        return tuple(name for name, s in (("Vmax", self.vmax_ratio), ("Km", self.km_ratio)) if _outside(s, 1.0))
+        """Of the two means, those whose interval does not hold 1, widened so that both hold together 19 times in 20."""
+        return tuple(name for name, s in (("Vmax", self.vmax_ratio), ("Km", self.km_ratio)) if _off(s))
 
 
-def _outside(share: Share, value: float) -> bool:
-    return share.low is not None and share.high is not None and not share.low <= value <= share.high
+def _off(ratio: Share) -> bool:
+    if ratio.low is None or ratio.high is None:
+        return False
+    return abs(math.log(ratio.value)) > _TOGETHER * 0.5 * math.log(ratio.high / ratio.low)
 
 
 def refit(population: str, rows: Sequence[Row]) -> Hint | None:
@@ -70,6 +75,7 @@ def refit(population: str, rows: Sequence[Row]) -> Hint | None:
     gained = _at_least_nothing(precision - prior_precision)
 
     from scipy.optimize import minimize
+    from scipy.special import stdtrit
 
     def loss(x: Floats) -> float:
         return -_log_likelihood(x, rho, told, gained)
@@ -85,7 +91,7 @@ def refit(population: str, rows: Sequence[Row]) -> Hint | None:
         return None
 
     def ratio(i: int) -> Share:
-        half = 1.959964 * math.sqrt(variance[i])
+        half = float(stdtrit(len(same) - 1, 0.975)) * math.sqrt(variance[i])
         if half > _WIDEST or (i >= 2 and not _LEAST < found.x[i] < _MOST):
             return Share(math.exp(found.x[i]), None, None)
         return Share(*(math.exp(v) for v in (found.x[i], found.x[i] - half, found.x[i] + half)))

@@ -356,7 +356,7 @@ def render_html(store: Store, folder: Folder, found: Findings, suggested: Sequen
     listed = list(islice(_outside(store.rows()), LIST_SHOWN))
     sections.append(
         {
-            "title": f"The first {len(listed)} patients and levels left out (all of them stand in left-out.csv)",
+            "title": f"Patients and levels left out, one by one (the first {LIST_SHOWN} here, all in left-out.csv)",
             "heads": ("Patient", "Level", "What", "Reason", "In words"),
             "rows": listed,
         }

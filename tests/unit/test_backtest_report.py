@@ -12,8 +12,8 @@ import pytest
 from click.testing import CliRunner
 from scipy import stats
 
-from pkcalc.backtest.accuracy import ERROR, FEWEST_PATIENTS, HIGHER, IN90, Bands, Findings, gather
-from pkcalc.backtest.hint import refit
+from pkcalc.backtest.accuracy import ERROR, FEWEST_PATIENTS, HIGHER, IN90, Bands, Findings, Share, gather
+from pkcalc.backtest.hint import Hint, refit
 from pkcalc.backtest.outlook import (
     CHOICES,
     FORECAST,
@@ -343,3 +343,11 @@ def test_a_spread_that_the_patients_say_nothing_of_has_no_interval() -> None:
     assert hint is not None
     assert (hint.km_log_sd.low, hint.km_log_sd.high) == (None, None)
     assert hint.off == ()
+
+
+def test_two_means_are_asked_about_so_each_has_to_lie_further_off() -> None:
+    """An interval that just leaves 1 out is what chance gives one time in ten when two are looked at."""
+    fine, none = Share(1.0, 0.9, 1.1), Share(1.1, None, None)
+    near, far = Share(1.1, 1.002, 1.1**2 / 1.002), Share(1.1, 1.05, 1.1**2 / 1.05)
+    for vmax, off in ((fine, ()), (none, ()), (near, ()), (far, ("Vmax",))):
+        assert Hint("default", 40, vmax, fine, fine, fine, 0.25, 0.45).off == off
