@@ -112,6 +112,7 @@ def run_consult(case: Case, site: Site | str | Path | None = None) -> Consult:
     found = _estimate(state, prior, population, caution_engine.blocked(said))
     pair_estimate = found.by_method.get(two_level.METHOD)
     chosen, why = _choose(found.by_method, case)
+    found = _without_distrusted_company(found, chosen)
     state = replace(
         state,
         settling=found.settling,
@@ -465,6 +466,15 @@ def _goal(case: Case, profile: Profile, site: Site) -> Goal:
         low, high, origin = target.low_mg_per_L / fraction, target.high_mg_per_L / fraction, target.origin
         aim = (low + high) / 2
     return Goal(low, high, site.critical(profile), case.aim_mg_per_L or aim, origin)
+
+
+def _without_distrusted_company(found: _Estimates, chosen: Estimate | None) -> _Estimates:
+    """Where the whole record answers, another method that distrusts itself is refused alone and takes nothing along."""
+    if chosen is None or chosen.method != posterior.WHOLE_RECORD or not chosen.trusted:
+        return found
+    aside = {name: e.distrust for name, e in found.by_method.items() if not e.trusted}
+    kept = {name: e for name, e in found.by_method.items() if e.trusted}
+    return replace(found, by_method=kept, refusals={**found.refusals, **aside})
 
 
 def _choose(estimates: Mapping[str, Estimate], case: Case) -> tuple[Estimate | None, str]:

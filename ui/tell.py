@@ -10,10 +10,10 @@ from math import inf, isfinite
 import streamlit as st
 from pkcalc_form import look
 
-from pkcalc.case import dump_case
+from pkcalc.case import dump_case, dump_case_file
 from pkcalc.consult import Consult, Shown
 from pkcalc.drugs.profile import Profile
-from pkcalc.errors import Caution
+from pkcalc.errors import CaseError, Caution
 from pkcalc.estimate.result import Band, Estimate
 from pkcalc.forecast import scaled
 from pkcalc.levels import Observation
@@ -451,13 +451,23 @@ def note(consult: Consult) -> None:
             )
         st.download_button(
             "Case file",
-            data=lambda: dump_case(consult.case),
+            data=lambda: _case(consult),
             file_name=f"{name}-case.json",
             mime="application/json",
             on_click="ignore",
             key="get-case",
         )
     look.say(DEFERS, "hint")
+
+
+def _case(consult: Consult) -> str:
+    """The case with what this note forecasts, for a later look at what came; without it where there is none."""
+    from pkcalc.note.followup import with_forecasts
+
+    try:
+        return dump_case_file(with_forecasts(consult))
+    except CaseError:
+        return dump_case(consult.case)
 
 
 def _html(consult: Consult) -> str:

@@ -162,6 +162,30 @@ def test_an_estimate_without_its_certificate_is_stopped(monkeypatch: pytest.Monk
     assert stop.text == "The estimate cannot be trusted here: two grids differ by 3 %."
 
 
+def test_a_method_beside_the_whole_record_that_distrusts_itself_takes_nothing_along(
+    monkeypatch: pytest.MonkeyPatch,
+) -> None:
+    from dataclasses import replace
+
+    from pkcalc.estimate import pair
+
+    honest = pair.from_steady_levels
+
+    def doubtful(*args: object, **kwargs: object) -> object:
+        return replace(honest(*args, **kwargs), trusted=False, distrust="the pair says little.")  # type: ignore[arg-type]
+
+    monkeypatch.setattr("pkcalc.consult.two_level.from_steady_levels", doubtful)
+    consult = run_consult(plain())
+    assert consult.chosen is consult.estimates["whole record"]
+    assert set(consult.estimates) == {"whole record"}
+    assert consult.refusals["two levels"] == "the pair says little."
+    assert "estimate-not-trusted" not in {c.id for c in consult.cautions}
+    # asked for by name, it is what the numbers would stand on: then nothing is told
+    asked = run_consult(plain(method="two levels"))
+    assert asked.chosen is None
+    assert "estimate-not-trusted" in {c.id for c in asked.cautions}
+
+
 def test_the_methods_stand_side_by_side() -> None:
     consult = run_consult(plain())
     assert set(consult.estimates) == {"whole record", "two levels"}

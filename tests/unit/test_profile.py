@@ -793,7 +793,7 @@ def test_broken_toml_is_refused() -> None:
 
 def test_dropping_any_sourced_entry_is_noticed() -> None:
     """Every line that holds a number of the template is needed, or optional on purpose."""
-    optional = {"after_iv", "repeat", "first_order", "first_order_cv"}
+    optional = {"after_iv", "repeat", "first_order", "first_order_cv", "own_cv"}
     lines = TEMPLATE.splitlines()
     for i, line in enumerate(lines):
         name = line.split(" ")[0]

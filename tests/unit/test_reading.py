@@ -47,7 +47,7 @@ def test_narrowing_is_a_share_and_a_sentence() -> None:
     assert found.share == pytest.approx(1 - width[0] / width[1])
     assert found.sentence == (
         "By the population alone, 15 mg/L takes 211 to 521 mg/day of active drug (90 % interval); the levels narrow "
-        "this by 62 %, to 251 to 354 mg/day."
+        "this by 62 %, to 251 to 355 mg/day."
     )
 
 
