@@ -12,10 +12,10 @@ from pkcalc_form import look
 from pkcalc_form.entry import Entry, text
 
 from pkcalc.case import Case
-from pkcalc.clock import show_time
+from pkcalc.clock import read_time, show_time
 from pkcalc.drugs.profile import Product, Profile, drug_names, load_profile
 from pkcalc.drugs.questions import GROUPS, Question, common_questions
-from pkcalc.errors import Problem
+from pkcalc.errors import CaseError, Problem
 from pkcalc.spreadsheet import DOSE_COLUMNS
 from pkcalc.units import show
 
@@ -445,8 +445,16 @@ def levels_sentence(asked: Asked) -> str:
     parts = []
     for level in asked.entry.file.levels:
         if level.value:
-            parts.append(f"{level.value} {level.kind}" + (f", {level.drawn}" if level.drawn else ""))
+            parts.append(f"{level.value} {level.kind}" + (f", {_as_shown(level.drawn)}" if level.drawn else ""))
     return " and ".join(parts) if len(parts) <= 3 else f"{len(parts)} levels"
+
+
+def _as_shown(typed: str) -> str:
+    """A moment as typed, in the one way that moments are shown; as typed while it cannot be read."""
+    try:
+        return show_time(read_time(typed, "Time of the draw"))
+    except CaseError:
+        return typed
 
 
 # --- 5 What could be given next? -------------------------------------------------------------------------
