@@ -451,16 +451,25 @@ def note(consult: Consult) -> None:
             )
         st.download_button(
             "Case file",
-            data=lambda: _case(consult),
+            data=lambda: dump_case(consult.case),
             file_name=f"{name}-case.json",
             mime="application/json",
             on_click="ignore",
             key="get-case",
         )
+        st.download_button(
+            "Case file for follow-up",
+            data=lambda: _with_forecasts(consult),
+            file_name=f"{name}-follow-up-case.json",
+            mime="application/json",
+            on_click="ignore",
+            key="get-follow-up",
+            help="The case with the levels this note forecasts: opened later with a new level, it shows what came.",
+        )
     look.say(DEFERS, "hint")
 
 
-def _case(consult: Consult) -> str:
+def _with_forecasts(consult: Consult) -> str:
     """The case with what this note forecasts, for a later look at what came; without it where there is none."""
     from pkcalc.note.followup import with_forecasts
 

@@ -93,7 +93,7 @@ def main() -> None:
     usual = RecordSpread(0.05, 0.05)
     clean = replace(usual, doses_differing=0.0, wrong_level_chance=0.0)
     followed = 0
-    original = flow.amounts
+    original = flow.fading
 
     def counted(record, times, vmax, kappa, **rest):
         nonlocal followed
@@ -105,10 +105,10 @@ def main() -> None:
     for count, days in CASES:
         record, levels = everyday(count, days, prior)
         spent, estimate = timed(lambda r=record, x=levels: from_record(r, x, prior, usual))
-        flow.amounts = counted
+        flow.fading = counted
         followed = 0
         from_record(record, levels, prior, usual)
-        flow.amounts = original
+        flow.fading = original
         coming, _ = timed(lambda r=record, x=levels, e=estimate, d=days: predicted_levels(r, x, usual, e, [d + 0.2]))
         row = f"| {count}, {days} | {1000 * spent:.0f} | {followed:,} | {1000 * coming:.0f} "
         if not chosen.no_chain:

@@ -355,9 +355,10 @@ def test_every_format_is_downloaded_and_the_case_opens_again(visit: Visitor, tmp
     v = visit()
     v.open_demonstration("Two steady levels on two doses")
     got = {}
-    for name in ("Note as text", "Note as HTML", "Note as PDF", "Note as JSON", "Case file"):
+    kinds = ("Note as text", "Note as HTML", "Note as PDF", "Note as JSON", "Case file", "Case file for follow-up")
+    for name in kinds:
         with v.page.expect_download() as download:
-            v.page.get_by_role("button", name=name).first.click()
+            v.page.get_by_role("button", name=name, exact=True).click()
         path = tmp_path / download.value.suggested_filename
         download.value.save_as(path)
         assert path.name.startswith("demonstration-")
@@ -368,6 +369,9 @@ def test_every_format_is_downloaded_and_the_case_opens_again(visit: Visitor, tmp
     assert json.loads(got["Note as JSON"].read_text(encoding="utf-8"))["outcome"] == "done"
     case = got["Case file"]
     assert load_case(case).hash == demonstration("clean-pair").hash
+    later = load_case(got["Case file for follow-up"]).file
+    assert later.forecast_then
+    assert later.model_copy(update={"forecast_then": ()}) == load_case(case).file
     other = visit()
     other.open_case(case.read_text(encoding="utf-8"))
     text = other.text()
