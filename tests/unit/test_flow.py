@@ -9,7 +9,7 @@ from dataclasses import replace
 import numpy as np
 import pytest
 
-from pkcalc import flow, formulas
+from pkcalc import flow, formulas, periodic
 from pkcalc.errors import CaseError
 from pkcalc.flow import Absorption, Before, Dose, FirstOrder, Record, Repeated
 
@@ -427,3 +427,42 @@ def test_all_problems_of_a_record_are_reported_at_once() -> None:
         "Dose 3, amount",
         "Dose 3, infusion time",
     ]
+
+
+@pytest.mark.parametrize(("accuracy", "within"), [("everyday", 2e-5), ("fine", 5e-7)])
+@pytest.mark.parametrize("k", [0.0, 0.1])
+def test_the_map_of_one_cycle_builds_up_as_dose_after_dose(accuracy: flow.Accuracy, within: float, k: float) -> None:
+    """Two unequal doses a day for 90 days, from draws that settle to draws that never do."""
+    regimen = Repeated(1.0, (Dose(0.25, 100.0, absorption=PROMPT), Dose(0.875, 200.0, absorption=PROMPT)))
+    vmax, kappa = (x.ravel() for x in np.meshgrid([250.0, 299.0, 320.0, 380.0], [90.0, 245.0, 700.0]))
+    path = (FirstOrder(rate_per_day=k),) if k else ()
+    found = periodic.build_up(
+        regimen, 90, vmax, kappa, first_order_per_day=np.full(vmax.shape, k), accuracy=accuracy, typical_per_day=8.0
+    )
+    followed = flow.amounts(
+        Record(regimen.cycles(0, 90, 0.0), first_order=path),
+        [90.0],
+        vmax,
+        kappa,
+        accuracy=accuracy,
+        typical_per_day=8.0,
+    )[:, 0]
+    certain = np.isfinite(found)
+    assert certain.sum() >= 8
+    assert found[certain] == pytest.approx(followed[certain], rel=within)
+
+
+def test_differences_die_away_as_the_engine_says() -> None:
+    record = Record(tuple(Dose(d + 0.5, 300.0, absorption=PROMPT) for d in range(10)))
+    vmax, kappa = np.array([330.0, 450.0, 700.0]), np.array([120.0, 245.0, 500.0])
+    times = [4.0, 9.9]
+    course, faded = flow.fading(record, times, vmax, kappa)
+    assert course == pytest.approx(flow.amounts(record, times, vmax, kappa))
+    # a little more at day 4, followed to day 9.9
+    more = [
+        flow.amounts(replace(record, start_day=4.0, start_mg=float(x)), [9.9], v, q)[0, 0]
+        for start, v, q in zip(course[:, 0], vmax, kappa, strict=True)
+        for x in (start, start + 1.0)
+    ]
+    shrunk = np.array(more[1::2]) - np.array(more[::2])
+    assert np.exp(faded[:, 0] - faded[:, 1]) == pytest.approx(shrunk, rel=5e-3)
