@@ -28,7 +28,7 @@ from pkcalc.drugs.profile import Prior, Profile, load_profile
 from pkcalc.errors import CannotEstimate, CaseError, DrugFileError, as_typed
 from pkcalc.estimate import posterior
 from pkcalc.estimate.error_model import LevelData, RecordSpread
-from pkcalc.estimate.intake import intake_gain, plan_intake, taken_on_average
+from pkcalc.estimate.intake import intake_gain, plan_intake
 from pkcalc.estimate.pair import SteadyPair, VolumeSpread, from_steady_levels
 from pkcalc.estimate.predict import predicted_levels, volume_of
 from pkcalc.estimate.result import Estimate, weighted_quantile
@@ -225,8 +225,7 @@ def _by_population(known: _Known, days: Sequence[float]) -> Floats:
     assert isinstance(estimate, Estimate)
     vmax, volume = estimate.vmax_mg_per_day, volume_of(estimate)
     kappa = estimate.km_mg_per_L * volume
-    record = posterior.written_out(_until(known.record, max(days)))
-    full = posterior.with_population_path(taken_on_average(record, known.spread), known.prior.first_order_per_day)
+    full = posterior.as_reckoned(_until(known.record, max(days)), known.spread, known.prior.first_order_per_day)
     plan = plan_intake(full, days, known.spread)
     course, faded = flow.fading(
         full, plan.sample_days, vmax, kappa, volume_L=volume, typical_per_day=_typical_per_day(estimate)

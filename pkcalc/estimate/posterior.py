@@ -386,9 +386,15 @@ def with_population_path(record: Record, first_order_per_day: float) -> Record:
     return replace(record, first_order=(*record.first_order, FirstOrder(rate_per_day=first_order_per_day)))
 
 
+def as_reckoned(record: Record, spread: RecordSpread, first_order_per_day: float) -> Record:
+    """The record that the engine follows: its last weeks written out, every doubtful dose at what was taken of it on
+    average, with the population's parallel path."""
+    return with_population_path(taken_on_average(written_out(record), spread), first_order_per_day)
+
+
 def _model(record: Record, levels: Sequence[LevelData], prior: Prior, spread: RecordSpread) -> _Model:
     _check(record, levels)
-    full = with_population_path(taken_on_average(written_out(record), spread), prior.first_order_per_day)
+    full = as_reckoned(record, spread, prior.first_order_per_day)
     intake = plan_intake(full, [x.time_day for x in levels], spread)
     volume = _Volume.of(prior)
     typical = _typical_per_day(volume.centre, volume.cov, SCOUT_STEPS)

@@ -16,8 +16,8 @@ from numpy.typing import NDArray
 from pkcalc import flow
 from pkcalc.errors import CannotEstimate
 from pkcalc.estimate.error_model import LevelData, RecordSpread, covariance
-from pkcalc.estimate.intake import intake_gain, plan_intake, taken_on_average
-from pkcalc.estimate.posterior import with_population_path, written_out
+from pkcalc.estimate.intake import intake_gain, plan_intake
+from pkcalc.estimate.posterior import as_reckoned
 from pkcalc.estimate.result import Estimate
 from pkcalc.record import Dose, Record
 
@@ -56,7 +56,7 @@ def predicted_levels(
     observed). times_day: at or after the record's start. first_order_per_day: the population's parallel path,
     if any. typical_per_day: what sets the engine's steps, as in `flow.amounts`."""
     whole = replace(record, doses=(*record.doses, *following))
-    full = with_population_path(taken_on_average(written_out(whole), spread), first_order_per_day)
+    full = as_reckoned(whole, spread, first_order_per_day)
     days = [*(x.time_day for x in levels), *times_day]
     plan = plan_intake(full, days, spread)
     vmax, volume = estimate.vmax_mg_per_day, volume_of(estimate)

@@ -25,8 +25,7 @@ from pkcalc.clock import show_date
 from pkcalc.consult import Consult, Shown, record_spread
 from pkcalc.dosing import active_mg
 from pkcalc.drugs.profile import Profile
-from pkcalc.estimate.intake import taken_on_average
-from pkcalc.estimate.posterior import WHOLE_RECORD, with_population_path, written_out
+from pkcalc.estimate.posterior import WHOLE_RECORD, as_reckoned
 from pkcalc.forecast import fewer_draws
 from pkcalc.note.words import NOT_OFFERED, at_binding, level_edge, mark_of, short_words, told_up_to
 from pkcalc.units import percent, show, show_number
@@ -132,7 +131,7 @@ def course(consult: Consult) -> Course | None:
     if estimate is None or record is None or estimate.volume_L is None or consult.prior is None:
         return None
     spread = record_spread(consult.case, consult.profile)
-    full = with_population_path(taken_on_average(written_out(record), spread), consult.prior.first_order_per_day)
+    full = as_reckoned(record, spread, consult.prior.first_order_per_day)
     last = max(
         [consult.case.day(o.level.drawn) for o in consult.observations if o.level.drawn is not None]
         + ([consult.case.day(consult.case.now)] if consult.case.now is not None else [])
